@@ -1,0 +1,1 @@
+"""One module per question: features in, frozen result out."""

@@ -1,0 +1,1 @@
+"""Published methods that have never heard of files, sensors or pages."""

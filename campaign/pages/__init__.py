@@ -1,0 +1,1 @@
+"""Results to what a reader sees: figures, tables and the numbers of sentences."""

@@ -1,0 +1,1 @@
+"""Manifest of hashes and calibration records: what lets a reviewer check the report."""

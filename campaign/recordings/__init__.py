@@ -1,0 +1,1 @@
+"""Files to recordings in canonical units, every file accounted for."""

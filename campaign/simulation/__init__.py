@@ -1,0 +1,1 @@
+"""Synthetic campaigns with known truth, for the demonstration and for rehearsals."""
