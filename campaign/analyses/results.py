@@ -1,0 +1,50 @@
+"""Everything that one run of the report found out, as one value: what pages are made from."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+if TYPE_CHECKING:
+    from campaign.analyses.calibration import Calibration
+    from campaign.analyses.calibration_effort import CalibrationEffort
+    from campaign.analyses.findings import Findings
+    from campaign.analyses.limits import Limits
+    from campaign.analyses.residuals import Residuals
+    from campaign.analyses.variance import Variance
+    from campaign.notices import Notice
+    from campaign.recordings.description import Description
+    from campaign.recordings.intake import Intake
+    from campaign.trials.readings import Readings
+
+
+@dataclass(frozen=True)
+class CampaignResults:
+    """The results of a campaign, from the files read to the findings.
+
+    Attributes
+    ----------
+    description
+        ``campaign.toml``, checked.
+    intake
+        Every file of the folder with its fate, the trials, the registers and the counts.
+    readings
+        Plateaus of all staircases; empty where there are none.
+    calibration, variance, residuals, calibration_effort
+        The analyses; ``None`` where the campaign holds no reading that they could start from.
+    limits, findings
+        Limits judged, and the facts of page 0; always there.
+    notices
+        All notices of reading and of analyses, sorted.
+    """
+
+    description: Description
+    intake: Intake
+    readings: Readings
+    calibration: Calibration | None
+    variance: Variance | None
+    residuals: Residuals | None
+    calibration_effort: CalibrationEffort | None
+    limits: Limits
+    findings: Findings
+    notices: tuple[Notice, ...]
