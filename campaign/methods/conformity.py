@@ -29,7 +29,7 @@ class Prediction:
     estimate
         Mean of the group means, in the unit of the values.
     standard_deviation
-        Standard deviation of a new member of a new group about that estimate, the mean's uncertainty included.
+        Standard deviation of a new member of a new group about the estimate, the mean's uncertainty included.
     degrees_of_freedom
         Satterthwaite's, at least 1.
     groups
@@ -61,7 +61,7 @@ def conformity_of_estimate(
 def conformity_of_spread(spread: float, degrees_of_freedom: float, limit: float) -> float:
     """Return the probability that a standard deviation (or a multiple of one) is at most *limit*.
 
-    The variance follows ν s²/χ²(ν), the posterior of a normal sample under the usual reference prior; *spread*
+    The variance follows ν s²/χ²(ν), the posterior of a normal sample under the usual prior; *spread*
     and *limit* are in one unit. NaN where unknown.
 
     Source: JCGM 106:2012, 7.1, with the distribution behind GUM E.4.3.
@@ -106,7 +106,7 @@ def predict_new_member(values: FloatArray, groups: npt.NDArray[np.int64]) -> Pre
     -------
     Prediction or None
         From the one-way random analysis of variance: the new member's variance is
-        MS_between (1 + 1/k)/n₀ + MS_within (1 − 1/n₀) for k groups of n₀ members on (harmonic) average. With
+        MS_between (1 + 1/k)/n₀ + MS_within (1 − 1/n₀) for k groups of n₀ members on harmonic average. With
         one member a group the groups alone carry it; with one group its members do. ``None`` below two values.
 
     Source: Searle, Casella & McCulloch, *Variance Components* (1992), ch. 3; Satterthwaite (1946).
