@@ -106,8 +106,9 @@ def predict_new_member(values: FloatArray, groups: npt.NDArray[np.int64]) -> Pre
     -------
     Prediction or None
         From the one-way random analysis of variance: the new member's variance is
-        MS_between (1 + 1/k)/n₀ + MS_within (1 − 1/n₀) for k groups of n₀ members (harmonic mean). With
-        With one member a group the groups alone carry it; with one group its members do. ``None`` below two values.
+        MS_between (1 + 1/k)/n₀ + MS_within (1 − 1/n₀) for k groups of n₀ members (harmonic mean).
+        With one member a group the groups alone carry it; with one group its members do. ``None`` below two
+        values.
 
     Source: Searle, Casella & McCulloch, *Variance Components* (1992), ch. 3; Satterthwaite (1946).
     """
