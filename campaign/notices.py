@@ -89,3 +89,59 @@ def sort_notices(notices: Iterable[Notice]) -> tuple[Notice, ...]:
             key=lambda n: (WEIGHTS.index(n.weight), n.file or "", n.line or 0, n.column or 0, n.code, n.what),
         )
     )
+
+
+NOTICE_CODES: dict[str, str] = {
+    # Bytes, encodings and line ends of one file
+    "bom": "the file starts with a byte order mark; the mark is taken off, the first name is kept whole",
+    "utf-16": "the file is UTF-16; it is decoded",
+    "encoding": "the file is not UTF-8; it is decoded by the named encoding, and the first such character is shown",
+    "crlf": "lines end in carriage return and line feed throughout",
+    "cr": "lines end in carriage returns alone throughout",
+    "mixed-eol": "the line end changes within the file",
+    "no-final-newline": "the last line has no line end but is complete: it is kept",
+    "empty": "the file has no bytes",
+    "binary": "the file is not text: an archive, an image, or other binary content",
+    "nul": "a line holds NUL bytes (overwritten or never written): the line is dropped",
+    # Layout of one file
+    "dialect": "separator or decimal sign other than comma and point were found out from the first lines",
+    "preamble": "lines before the header that carry no comment sign; they are kept as preamble",
+    "preamble-conflict": "the preamble gives one key twice with different values",
+    "header-in-comment": "the header stands in the last comment line",
+    "units-row": "a row below the header gives the units",
+    "no-header": "no line names the columns and the description does not give them by position",
+    "no-rows": "the file holds no row that can be read",
+    "trailing-delimiter": "rows end in a separator; the empty last field is taken off, nothing shifts",
+    "spacer-column": "a column with neither name nor values",
+    "blank-line": "a line without any value is passed over",
+    "comment-line": "a comment stands between the rows; it is passed over and shown",
+    "repeated-header": "the header occurs again between the rows (the logger was restarted); the line is passed over",
+    "footer": "lines of text after the last row; they are passed over and shown",
+    "ragged": "a row with too many or too few fields is dropped: nothing says which field is whose",
+    "truncated": "the last line is cut short and is dropped",
+    "quote": "a quotation mark is never closed, or text follows a closed one",
+    "field-length": "a field is far too long to be a number",
+    # Columns
+    "missing-column": "neither a time nor a reference, or no signal, can be found among the columns",
+    "duplicate-column": "two columns claim to be the same quantity of the same sensor",
+    "extra-column": "a column that neither the description nor the usual headers account for; it is not read",
+    "column-not-found": "the description names a position that the file does not have",
+    "several-clocks": "more than one time column; the first is used",
+    "clock-unit": "times under a header in milliseconds look like seconds since 1970",
+    "unit": "a unit is missing, not an accepted symbol, or of the wrong kind for the quantity",
+    "unit-overruled": "the description states another unit than the header or units row; the description holds",
+    "converted": "columns are converted to canonical units",
+    "mixed-identity": "a column that names module, sensor or run does not hold one value throughout",
+    # Values
+    "number": "a field is not a plain decimal number in the file's own dialect; it is never guessed",
+    "missing-token": "empty fields or words for 'no value': missing, counted",
+    "overrange": "the instrument's word for a value beyond its range: missing, counted apart (not at random)",
+    "non-finite": "infinity is not a measurement: missing, counted",
+    "sentinel": "a value beyond anything physical stands for 'no value': missing, counted",
+    "suspect-sentinel": "a value far from all others that instruments use for 'no value': kept as read",
+    "time-order": "time runs backwards; the order of the file is kept",
+    "time-resolution": "a time repeats with other values: the clock is coarser than the sampling",
+    "duplicate-row": "a row repeats the one before in every value; it is kept",
+    "stuck": "the signal repeats to the last digit while the reference moves",
+}
+"""Meaning of every notice code, one plain line each; the manual and the Recordings page are written from it."""
