@@ -17,8 +17,14 @@ import pandas as pd
 from scipy import stats
 from statsmodels.stats.multitest import multipletests
 
-from campaign.analyses.limits import Limits, expanded_uncertainty
+from campaign.analyses.limits import Limits
 from campaign.analyses.scope import Scope, describe_scope
+from campaign.analyses.sensor_figures import (
+    expanded_uncertainty,
+    principal_lines,
+    principal_records,
+    principal_run_lines,
+)
 from campaign.recordings.description import Description
 
 if TYPE_CHECKING:
@@ -360,8 +366,7 @@ def _accuracy_findings(
 def _record_figures(calibration: Calibration, readings: int) -> pd.DataFrame:
     rows = [
         {"generation": r.generation, "module": r.module, "sensor": r.sensor, "value": _largest(r, readings)}
-        for r in calibration.records
-        if r.branch == "both"
+        for r in principal_records(calibration.records)
     ]
     return pd.DataFrame(rows, columns=["generation", "module", "sensor", "value"])
 
@@ -425,7 +430,7 @@ def _column_facts(
 
 
 def _line_values(calibration: Calibration, column: str) -> pd.DataFrame:
-    lines = calibration.sensor_lines[calibration.sensor_lines["branch"] == "both"]
+    lines = principal_lines(calibration.sensor_lines)
     return lines[["generation", "module", "sensor"]].assign(value=lines[column].astype(float))
 
 
@@ -441,14 +446,14 @@ def _loop_facts(
 
 def _zero_returns(calibration: Calibration) -> pd.DataFrame:
     """Mean absolute zero return of each sensor's runs in %FSO."""
-    runs = calibration.run_lines[calibration.run_lines["branch"] == "both"]
+    runs = principal_run_lines(calibration)
     keys = ["generation", "module", "sensor"]
     values = runs.assign(value=runs["zero_return_percent_fso"].abs()).groupby(keys)["value"].mean()
     return values.reset_index()
 
 
 def _bend_facts(calibration: Calibration) -> tuple[BendFinding, ...]:
-    lines = calibration.sensor_lines[calibration.sensor_lines["branch"] == "both"]
+    lines = principal_lines(calibration.sensor_lines)
     tested = lines.dropna(subset=["lack_of_fit_p"])
     return tuple(
         _bend_of(str(generation), rows) for generation, rows in tested.groupby("generation", sort=True)
