@@ -5,6 +5,7 @@ A *plan* says what is run, a *truth* what is true; both are frozen values. From 
 everything). The same three arguments give the same bytes.
 """
 
+from campaign.simulation.folder import FolderHoldsOther, write_campaign
 from campaign.simulation.plan import (
     Batch,
     Generation,
@@ -16,6 +17,8 @@ from campaign.simulation.plan import (
     regular_plan,
 )
 from campaign.simulation.readings import sensor_register, simulate_readings
+from campaign.simulation.recordings import simulate_recordings
+from campaign.simulation.schedule import Schedule
 from campaign.simulation.truth import (
     Components,
     GenerationTruth,
@@ -31,6 +34,7 @@ from campaign.simulation.truth import (
 __all__ = [
     "Batch",
     "Components",
+    "FolderHoldsOther",
     "Generation",
     "GenerationTruth",
     "LineSpread",
@@ -39,6 +43,7 @@ __all__ = [
     "Plan",
     "RunKey",
     "SampleNoise",
+    "Schedule",
     "Settling",
     "SignalLaw",
     "StaircasePlan",
@@ -48,4 +53,6 @@ __all__ = [
     "regular_plan",
     "sensor_register",
     "simulate_readings",
+    "simulate_recordings",
+    "write_campaign",
 ]

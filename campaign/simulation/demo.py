@@ -1,0 +1,235 @@
+"""The demonstration: an invented campaign with a few faults in it, and the truth written beside it."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from datetime import date
+from importlib.resources import files
+
+import numpy as np
+
+from campaign.simulation.plan import Batch, Generation, Place, Plan, RunKey, StaircasePlan, panel_places
+from campaign.simulation.recording_text import (
+    MARKED,
+    PLAIN,
+    SEMICOLON,
+    Dialect,
+    SyntheticRecording,
+    recording_bytes,
+)
+from campaign.simulation.recordings import simulate_recordings
+from campaign.simulation.registers import csv_text, modules_text, sensors_text, sessions_text
+from campaign.simulation.schedule import Schedule
+from campaign.simulation.staircase import step_timing
+from campaign.simulation.truth import (
+    Components,
+    GenerationTruth,
+    LineSpread,
+    LoopWidth,
+    SampleNoise,
+    Settling,
+    SignalLaw,
+    StandTruth,
+    Truth,
+)
+from campaign.simulation.truth_text import truth_text
+
+SEED = 20250203
+
+NODES = {"A": (0.0, 0.0), "B": (96.0, 0.0), "C": (88.0, 62.0), "D": (10.0, 58.0)}
+EDGES = (("A", "B"), ("B", "C"), ("C", "D"), ("D", "A"), ("A", "C"), ("B", "D"))
+
+DEAD = ("M04", "CD")
+DEAD_RUN = "trials/M04/M04_CD_cal_r1_s1.csv"
+MISLABELLED = "trials/M03/M03_AB_cal_r2_s2.csv"
+MISLABELLED_IS = "trials/M03/M03_AC_cal_r2_s2.csv"
+DUPLICATED = "trials/M08/M08_CD_cal_r3_s1.csv"
+DUPLICATE = "trials/M08/M08_CD_cal_r4_s1.csv"
+UNSETTLED = "trials/M02/M02_AC_cal_r2_s1.csv"
+UNSETTLED_PLATEAU = 5
+UNSETTLED_CREEP_PF = 0.9
+KNOCKED = "trials/M09/M09_DA_cal_r3_s2.csv"
+
+SCHEDULE = Schedule(date(2025, 2, 3))
+
+TEXTS = {
+    "campaign.toml": "description.toml",
+    "notes/the-stand.md": "notes/the-stand.md",
+    "notes/the-second-process.md": "notes/the-second-process.md",
+    "notes/panel.svg": "notes/panel.svg",
+}
+"""Files of the folder that are written by hand: where they go, and their names beside this module."""
+
+
+def demo_plan() -> Plan:
+    """Return the design: 2 generations of 2 batches of 3 panels, 6 sensors, 2 mountings, 3 runs."""
+    dead = frozenset(
+        RunKey(*DEAD, session, repetition)
+        for session in ("1", "2")
+        for repetition in (1, 2, 3)
+        if (session, repetition) != ("1", 1)
+    )
+    return Plan(
+        generations=(
+            Generation(
+                "hand-poured", (Batch("P1", ("M01", "M02", "M03")), Batch("P2", ("M04", "M05", "M06")))
+            ),
+            Generation(
+                "blade-cast", (Batch("B1", ("M07", "M08", "M09")), Batch("B2", ("M10", "M11", "M12")))
+            ),
+        ),
+        places=demo_places(),
+        sessions=("1", "2"),
+        repetitions=3,
+        staircase=StaircasePlan(descending=True),
+        omitted=dead,
+    )
+
+
+def demo_places() -> tuple[Place, ...]:
+    """Return the six places of the panel: four edges and two diagonals."""
+    return panel_places(NODES, EDGES)
+
+
+def demo_truth() -> Truth:
+    """Return what is true: the blade makes sensors more alike, the clamps stay as they were."""
+    noise = SampleNoise(white=0.020, slow=0.030, slow_correlation=0.85)
+    settling = Settling(share=0.04, time_s=1.6)
+    poured = GenerationTruth(
+        law=SignalLaw(parasitic=9.0, per_mm=0.72),
+        components=Components(
+            batch=LineSpread(0.50, 0.9, 0.5),
+            module=LineSpread(0.90, 1.5, 0.5),
+            sensor=LineSpread(1.60, 2.6, 0.6),
+            session=LineSpread(0.30, 0.5, 0.2),
+            repetition=LineSpread(0.18, 0.4, -0.2),
+            sensor_by_level=0.22,
+            residual=0.15,
+        ),
+        loop=LoopWidth(0.70, 0.20),
+        noise=noise,
+        settling=settling,
+    )
+    blade = GenerationTruth(
+        law=SignalLaw(parasitic=9.0, per_mm=0.90),
+        components=Components(
+            batch=LineSpread(0.30, 0.6, 0.5),
+            module=LineSpread(0.40, 0.8, 0.5),
+            sensor=LineSpread(0.80, 1.5, 0.6),
+            session=LineSpread(0.32, 0.5, 0.2),
+            repetition=LineSpread(0.16, 0.35, -0.2),
+            sensor_by_level=0.16,
+            residual=0.14,
+        ),
+        loop=LoopWidth(0.42, 0.12),
+        noise=noise,
+        settling=settling,
+    )
+    stand = StandTruth(
+        scale=0.0003,
+        zero_mm=0.03,
+        rest_length_mm=0.12,
+        build_mm=0.35,
+        length_noise_mm=0.004,
+        temperature_c=22.5,
+        temperature_sd_c=0.8,
+        signal_per_kelvin=0.03,
+    )
+    return Truth((poured, blade), stand)
+
+
+def demo_files() -> dict[str, bytes]:
+    """Return every file of the demonstration by its path from the campaign folder."""
+    plan, truth = demo_plan(), demo_truth()
+    written = {path: _text(name) for path, name in TEXTS.items()}
+    registers = {
+        "modules.csv": modules_text(plan, _MATERIALS),
+        "sensors.csv": sensors_text(plan, truth, SEED, {DEAD: ("failed before testing", _TORN)}),
+        "sessions.csv": sessions_text(plan, truth, SEED, SCHEDULE, "invented bench", "edge clamps, set anew"),
+        "trials.csv": csv_text(
+            ["file", "use", "reason"], [[KNOCKED, "no", "the table was knocked during the run (invented)"]]
+        ),
+        "TRUTH.md": truth_text(plan, truth, SEED, faults=_FAULTS),
+    }
+    return written | {path: text.encode() for path, text in registers.items()} | _recording_files(plan, truth)
+
+
+_TORN = "torn when the panel left its plate (invented)"
+_MATERIALS = {
+    "hand-poured": {
+        "materials": "silicone that does not exist; brushed carbon electrodes (invented)",
+        "cure": "24 h at 23 °C (invented)",
+        "geometry": "panel",
+    },
+    "blade-cast": {
+        "materials": "silicone that does not exist; brushed carbon electrodes (invented)",
+        "cure": "24 h at 23 °C (invented)",
+        "geometry": "panel",
+    },
+}
+_FAULTS = {
+    "dead sensor": f"{' '.join(DEAD)}: `{DEAD_RUN}` shows the cable, then the instrument's overflow",
+    "mislabelled file": f"`{MISLABELLED}` is a run of sensor AC, as its first lines say",
+    "duplicated file": f"`{DUPLICATE}` has the bytes of `{DUPLICATED}`",
+    "unsettled plateau": f"plateau {UNSETTLED_PLATEAU + 1} of `{UNSETTLED}` creeps {UNSETTLED_CREEP_PF} pF",
+    "left out by request": f"`{KNOCKED}`, in trials.csv",
+}
+
+
+def _text(name: str) -> bytes:
+    return files("campaign.simulation").joinpath("demo_texts").joinpath(name).read_bytes()
+
+
+def _recording_files(plan: Plan, truth: Truth) -> dict[str, bytes]:
+    recordings = {r.file: r for r in simulate_recordings(plan, truth, SEED, SCHEDULE)}
+    spoiled = {r.file: r for r in _with_faults(recordings.values(), plan, truth)}
+    data = {path: recording_bytes(recording, _dialect(path)) for path, recording in spoiled.items()}
+    return data | {DUPLICATE: data[DUPLICATED]}
+
+
+def _dialect(path: str) -> Dialect:
+    """Two stand computers were set up differently on two days."""
+    if path.startswith("trials/M05/") and path.endswith("_r3_s2.csv"):
+        return SEMICOLON
+    if path.startswith("trials/M10/") and path.endswith("_r1_s1.csv"):
+        return MARKED
+    return PLAIN
+
+
+def _with_faults(
+    recordings: Iterable[SyntheticRecording], plan: Plan, truth: Truth
+) -> Iterable[SyntheticRecording]:
+    by_path = {recording.file: recording for recording in recordings}
+    for path, recording in by_path.items():
+        if path == DEAD_RUN:
+            yield _dead(recording, truth)
+        elif path == MISLABELLED:
+            yield _cut_short(by_path[MISLABELLED_IS]).renamed(path)
+        elif path == UNSETTLED:
+            yield _crept(recording, plan)
+        else:
+            yield recording
+
+
+def _dead(recording: SyntheticRecording, truth: Truth) -> SyntheticRecording:
+    """A torn electrode: the cable's capacitance and its noise, later the instrument's overflow."""
+    signal = recording.values("capacitance_pF")
+    noise = 0.02 * np.random.default_rng([SEED, 1]).standard_normal(len(signal))
+    flat = truth.of(0).law.parasitic + noise
+    flat[len(flat) // 3 :] = np.nan
+    return recording.with_values("capacitance_pF", flat)
+
+
+def _cut_short(recording: SyntheticRecording) -> SyntheticRecording:
+    """The same sensor run once more and stopped early, so that the bytes differ from its own file."""
+    signal = recording.values("capacitance_pF") + 0.05
+    return recording.with_values("capacitance_pF", signal).shortened(len(signal) - 24)
+
+
+def _crept(recording: SyntheticRecording, plan: Plan) -> SyntheticRecording:
+    """A clamp that gives way during one plateau: the signal falls although the stage stands still."""
+    timing = step_timing(plan.staircase)
+    here = (timing.plateau == UNSETTLED_PLATEAU) & (timing.since_step_s >= 0)
+    fall = np.where(here, timing.since_step_s / plan.staircase.dwell_s, 0.0)
+    signal = recording.values("capacitance_pF") - UNSETTLED_CREEP_PF * fall
+    return recording.with_values("capacitance_pF", signal)

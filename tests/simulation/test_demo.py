@@ -1,0 +1,125 @@
+"""The demonstration: what the command makes is what lies in the repository, and says that it is invented."""
+
+from __future__ import annotations
+
+import hashlib
+import subprocess
+import sys
+import tomllib
+from pathlib import Path
+
+import pandas as pd
+import pytest
+
+from campaign.simulation import demo
+from campaign.simulation.__main__ import main
+from campaign.simulation.demo import demo_files, demo_plan, demo_truth
+
+FOLDER = Path(__file__).parents[2] / "demo_campaign"
+
+
+@pytest.fixture(scope="module")
+def made() -> dict[str, bytes]:
+    return demo_files()
+
+
+def _digest(files: dict[str, bytes]) -> dict[str, str]:
+    return {path: hashlib.sha256(data).hexdigest() for path, data in files.items()}
+
+
+def test_the_folder_in_the_repository_is_what_the_command_makes(made: dict[str, bytes]) -> None:
+    there = {p.relative_to(FOLDER).as_posix(): p.read_bytes() for p in FOLDER.rglob("*") if p.is_file()}
+    assert _digest(there) == _digest(made)
+
+
+def test_another_process_with_another_hash_seed_makes_the_same_bytes(
+    made: dict[str, bytes], tmp_path: Path
+) -> None:
+    into = tmp_path / "demo"
+    command = [sys.executable, "-m", "campaign.simulation", "--into", str(into)]
+    done = subprocess.run(
+        command, cwd=FOLDER.parent, env={"PYTHONHASHSEED": "7"}, capture_output=True, text=True, check=True
+    )
+    assert f"{len(made)} files" in done.stdout
+    assert _digest(
+        {p.relative_to(into).as_posix(): p.read_bytes() for p in into.rglob("*") if p.is_file()}
+    ) == (_digest(made))
+
+
+def test_the_command_leaves_a_folder_with_other_files_alone(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    (tmp_path / "thesis.txt").write_text("mine")
+    assert main(["--into", str(tmp_path)]) == 2
+    assert "thesis.txt" in capsys.readouterr().err
+    assert [path.name for path in tmp_path.iterdir()] == ["thesis.txt"]
+
+
+def test_it_is_small_enough(made: dict[str, bytes]) -> None:
+    assert sum(map(len, made.values())) < 12e6
+
+
+def test_every_file_says_that_it_is_invented(made: dict[str, bytes]) -> None:
+    assert [path for path, data in made.items() if b"invented" not in data.lower()] == []
+    description = tomllib.loads(made["campaign.toml"].decode())["campaign"]
+    assert "invented" in description["title"]
+    assert "Invented" in description["description"]
+    assert description["authors"][0]["name"] == "Invented Author"
+    for page in ("notes/the-stand.md", "notes/the-second-process.md"):
+        assert "(invented)" in made[page].decode().splitlines()[0]
+
+
+def test_the_description_says_of_the_plan_what_the_plan_says(made: dict[str, bytes]) -> None:
+    description = tomllib.loads(made["campaign.toml"].decode())
+    nodes = {name: tuple(map(float, at)) for name, at in description["geometry"]["panel"]["nodes"].items()}
+    assert nodes == demo.NODES
+    assert description["range"]["strain"] == max(demo_plan().staircase.levels)
+    assert description["campaign"]["first_day"] == demo.SCHEDULE.first_day
+    assert description["campaign"]["last_day"] == demo.SCHEDULE.last_day(demo_plan())
+    stand = demo_truth().stand
+    assert float(description["reference"]["length"]["scale"]) == stand.scale
+    assert description["reference"]["length"]["zero"] == f"{stand.zero_mm:g} mm"
+
+
+def test_the_faults_are_there(made: dict[str, bytes]) -> None:
+    assert made[demo.DUPLICATE] == made[demo.DUPLICATED]
+    assert b"# sensor: AC" in made[demo.MISLABELLED]
+    assert made[demo.MISLABELLED] != made[demo.MISLABELLED_IS]
+    assert made[demo.DEAD_RUN].count(b"OVER") > 100
+    sensors = pd.read_csv(FOLDER / "sensors.csv")
+    assert sensors.dropna(subset="fate")[["module", "sensor"]].to_numpy().tolist() == [list(demo.DEAD)]
+    assert [path for path in made if path.startswith("trials/M04/M04_CD")] == [demo.DEAD_RUN]
+    assert demo.KNOCKED in made["trials.csv"].decode()
+    truth = made["TRUTH.md"].decode()
+    for path in (demo.DEAD_RUN, demo.MISLABELLED, demo.DUPLICATE, demo.UNSETTLED, demo.KNOCKED):
+        assert path in truth
+        assert path in made
+
+
+def test_the_unsettled_plateau_falls_while_the_stage_stands(made: dict[str, bytes]) -> None:
+    lines = made[demo.UNSETTLED].decode().splitlines()
+    start = next(number for number, line in enumerate(lines) if line.startswith("time_s"))
+    table = pd.DataFrame(
+        [[float(field) for field in line.split(",")] for line in lines[start + 1 :]],
+        columns=lines[start].split(","),
+    )
+    begin = demo.UNSETTLED_PLATEAU * 14.0
+    held = table[(table["time_s"] > begin + 1) & (table["time_s"] < begin + 12)]
+    assert held["stage_mm"].max() - held["stage_mm"].min() < 0.04
+    assert held["capacitance_pF"].iloc[0] - held["capacitance_pF"].iloc[-1] > 0.5
+
+
+def test_rest_signals_follow_the_lengths_of_the_places(made: dict[str, bytes]) -> None:
+    lengths = {place.position: place.rest_length_mm for place in demo_plan().places}
+    first = {
+        sensor: float(made[f"trials/M07/M07_{sensor}_cal_r1_s1.csv"].decode().splitlines()[5].split(",")[2])
+        for sensor in lengths
+    }
+    assert sorted(lengths, key=lengths.__getitem__) == sorted(first, key=first.__getitem__)
+    assert all(40.0 < value < 115.0 for value in first.values())
+
+
+def test_truth_page_gives_the_strain_equivalents_of_the_components(made: dict[str, bytes]) -> None:
+    """Hand-poured sensors: 1.6 pF over a mean slope of 60.82 pF is 2.63 % at zero strain."""
+    row = next(line for line in made["TRUTH.md"].decode().splitlines() if line.startswith("| sensor | 1.6 "))
+    assert [cell.strip() for cell in row.split("|")[5:8]] == ["2.63", "3.22", "3.90"]
