@@ -128,7 +128,7 @@ def _close(found: np.ndarray, expected: np.ndarray) -> None:
 
 
 def test_moments_of_a_large_campaign_give_the_inner_components_back(lines: np.ndarray) -> None:
-    """Classical moments: interactions by sweeping the means of a balanced layout (sensor × run in a module)."""
+    """Classical moments: sweeping the means of a balanced layout (sensor × run in a module)."""
     runs = lines - lines.mean(axis=4, keepdims=True)
     own = runs - runs.mean(axis=2, keepdims=True)
     _close(_covariance(own, 360 * 3 * 3 * 2), SPREAD.repetition.covariance)
