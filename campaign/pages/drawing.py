@@ -1,0 +1,140 @@
+"""A figure made ready to be drawn: limits of every axis fixed, numbers rounded, limits on size checked."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable
+from dataclasses import replace
+from typing import Any
+
+import numpy as np
+
+from campaign.pages import figures
+from campaign.pages.figures import Figure, Layout, Trace
+from campaign.pages.thinning import rounded
+
+MARGINS = {"l": 64, "r": 24, "t": 28, "b": 52}
+
+
+def ready(figure: Figure) -> Figure:
+    """Return *figure* with margins, axis ranges and rounded numbers, as both drawings need it.
+
+    Raises
+    ------
+    ValueError
+        Where the figure draws more markers or points of lines than a page bears.
+    """
+    _check_size(figure)
+    layout: Layout = {**figure.layout, "margin": {**MARGINS, **figure.layout.get("margin", {})}}
+    for key in axis_names(layout):
+        layout[key] = _with_range(key, layout, figure.traces)
+    layout["annotations"] = [_on_its_axes(note, layout) for note in layout.get("annotations", ())]
+    traces = tuple(_rounded_trace(trace, layout) for trace in figure.traces)
+    return replace(figure, traces=traces, layout=layout)
+
+
+def axis_names(layout: Layout) -> list[str]:
+    """Return the axes of a layout in the order in which they were given: ``xaxis``, ``yaxis2``, …."""
+    return [key for key in layout if key.startswith(("xaxis", "yaxis"))]
+
+
+def axis_of(trace: Trace, letter: str) -> str:
+    """Return the name of the axis (``xaxis``, ``yaxis3``) that a trace is drawn on."""
+    return f"{letter}axis{str(trace.get(f'{letter}axis', letter))[1:]}"
+
+
+def _check_size(figure: Figure) -> None:
+    if figures.marker_count(figure) > figures.LARGEST_NUMBER_OF_MARKERS:
+        raise ValueError(f"figure {figure.name} draws {figures.marker_count(figure)} markers")
+    if figures.line_point_count(figure) > figures.LARGEST_NUMBER_OF_LINE_POINTS:
+        raise ValueError(f"figure {figure.name} draws {figures.line_point_count(figure)} points of lines")
+
+
+def _with_range(key: str, layout: Layout, traces: Iterable[Trace]) -> Layout:
+    axis: Layout = layout[key]
+    if "range" in axis:
+        return axis
+    group = _matching(key, layout)
+    values = [v for trace in traces for v in _extent(trace, key[0]) if axis_of(trace, key[0]) in group]
+    logarithmic = axis.get("type") == "log"
+    ends = _fitted([math.log10(v) for v in values if v > 0] if logarithmic else values)
+    reverse = axis.get("autorange") == "reversed"
+    kept = {k: v for k, v in axis.items() if k != "autorange"}
+    return {**kept, "range": ends[::-1] if reverse else ends}
+
+
+def _on_its_axes(note: Layout, layout: Layout) -> Layout:
+    """Return a label placed as the library wants it: by exponents where an axis is logarithmic."""
+    made = dict(note)
+    for letter in ("x", "y"):
+        axis = layout.get(f"{letter}axis{note.get(f'{letter}ref', letter)[1:]}", {})
+        if axis.get("type") == "log" and note[letter] > 0:
+            made[letter] = math.log10(note[letter])
+    return made
+
+
+def _matching(key: str, layout: Layout) -> set[str]:
+    """Return the axes that share limits with *key*."""
+    leader = layout[key].get("matches", key[0] + key[5:])
+    return {
+        k
+        for k in axis_names(layout)
+        if k[0] == key[0] and (k[0] + k[5:] == leader or layout[k].get("matches") == leader)
+    }
+
+
+def _extent(trace: Trace, letter: str) -> list[float]:
+    """Return every finite place that a trace reaches along x or y, error bars and bars' feet included."""
+    if letter not in trace:
+        return []
+    centre = np.asarray(trace[letter], dtype=float)
+    parts = [centre]
+    error = trace.get(f"error_{letter}")
+    if error:
+        up = np.asarray(error["array"], dtype=float)
+        parts += [centre + up, centre - np.asarray(error.get("arrayminus", up), dtype=float)]
+    if trace["type"] == "bar":
+        parts += _bar_extent(trace, letter, centre)
+    joined = np.concatenate(parts)
+    return [float(v) for v in joined[np.isfinite(joined)]]
+
+
+def _bar_extent(trace: Trace, letter: str, centre: Any) -> list[Any]:
+    along = "y" if trace.get("orientation") == "h" else "x"
+    if letter == along:
+        half = float(trace.get("width", 0.8)) / 2.0
+        return [centre - half, centre + half]
+    base = np.broadcast_to(np.asarray(trace.get("base", 0.0), dtype=float), centre.shape)
+    return [base, base + centre]
+
+
+def _fitted(values: list[float]) -> list[float]:
+    if not values:
+        return [0.0, 1.0]
+    low, high = min(values), max(values)
+    if low == high:
+        reach = abs(low) * 0.1 or 1.0
+        return [low - reach, high + reach]
+    return [low - 0.05 * (high - low), high + 0.05 * (high - low)]
+
+
+def _rounded_trace(trace: Trace, layout: Layout) -> Trace:
+    made = dict(trace)
+    for letter in ("x", "y"):
+        axis = layout.get(axis_of(trace, letter))
+        if axis is None or letter not in trace:
+            continue
+        made[letter] = _rounded_values(trace[letter], axis)
+        error = trace.get(f"error_{letter}")
+        if error:
+            sides = {k: _rounded_values(error[k], axis) for k in ("array", "arrayminus") if k in error}
+            made[f"error_{letter}"] = {**error, **sides}
+    return made
+
+
+def _rounded_values(values: list[float], axis: Layout) -> list[float | None]:
+    array = np.asarray(values, dtype=float)
+    if axis.get("type") == "log":
+        return [float(f"{v:.5g}") if math.isfinite(v) else None for v in array]
+    low, high = axis["range"]
+    return [v if math.isfinite(v) else None for v in rounded(array, abs(high - low)).tolist()]

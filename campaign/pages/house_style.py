@@ -1,0 +1,46 @@
+"""The plot library's template in the house style; no colour of the library's own."""
+
+from __future__ import annotations
+
+from typing import Any
+
+from campaign.pages import palette
+
+FONT = "'Gill Sans Nova', 'Optima', Candara, 'Noto Sans', 'Source Sans 3', 'Segoe UI', system-ui, sans-serif"
+
+_AXIS: dict[str, Any] = {
+    "showline": True,
+    "linecolor": palette.SOFT,
+    "linewidth": 1,
+    "gridcolor": palette.RULE,
+    "gridwidth": 1,
+    "zeroline": False,
+    "ticks": "",
+    "tickfont": {"size": 12, "color": palette.SOFT},
+    "title": {"font": {"size": 13, "color": palette.INK}},
+    "automargin": False,
+}
+
+HOUSE_TEMPLATE: dict[str, Any] = {
+    "layout": {
+        "font": {"family": FONT, "size": 12, "color": palette.INK},
+        "paper_bgcolor": palette.PAPER,
+        "plot_bgcolor": palette.PAPER,
+        "colorway": [style.colour for style in palette.GENERATION_STYLES],
+        "showlegend": False,
+        "hovermode": "closest",
+        "dragmode": "zoom",
+        "bargap": 0,
+        "barmode": "overlay",
+        "xaxis": _AXIS,
+        "yaxis": {**_AXIS, "showline": False},
+        "hoverlabel": {
+            "bgcolor": palette.SHEET,
+            "bordercolor": palette.SOFT,
+            "font": {"color": palette.INK, "size": 13},
+            "align": "left",
+        },
+        "separators": ".\u202f",
+    }
+}
+"""Template of every live figure; the dark scheme swaps its colours as it is applied."""

@@ -1,0 +1,206 @@
+"""Pages to the files of a site: one jinja2 environment, every value escaped, an undefined name an error.
+
+:func:`render_site` is pure: pages and tables in, the bytes of every file out. Writing them is
+:func:`campaign.pages.output.write_folder`.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import orjson
+import pandas as pd
+from jinja2 import Environment, FileSystemLoader, StrictUndefined
+from markupsafe import Markup
+
+from campaign.pages import numbers, slugs
+from campaign.pages.assets import asset_files
+from campaign.pages.drawing import ready
+from campaign.pages.figures import Figure
+from campaign.pages.page import Page, SiteFrame
+from campaign.pages.static_figure import static_svg
+from campaign.pages.tables import Cell, Table, csv_bytes, schema_bytes, shown_cells, shown_marks
+
+
+@dataclass(frozen=True)
+class PlacedFigure:
+    """A figure with its number on its page, its static picture and the address of its data."""
+
+    figure: Figure
+    number: str
+    anchor: str
+    svg: Markup
+    csv: str
+
+
+@dataclass(frozen=True)
+class PlacedTable:
+    """A table with its number on its page, and the rows that the page shows."""
+
+    table: Table
+    number: str
+    anchor: str
+    rows: list[tuple[tuple[str, str], list[Cell]]]
+    csv: str
+
+
+def templates_folder() -> Path:
+    """Return where the templates are: inside the package if installed with it, else in the checkout."""
+    package = Path(__file__).resolve().parents[1]
+    inside = package / "site_templates"
+    return inside if inside.is_dir() else package.parent / "site_templates"
+
+
+def environment(further: Sequence[Path] = ()) -> Environment:
+    """Return the one environment of the site, with the functions of ``numbers`` by their names.
+
+    *further* folders are looked in for templates that the site's own folder does not have.
+    """
+    made = Environment(
+        loader=FileSystemLoader([templates_folder(), *further]),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
+        keep_trailing_newline=True,
+    )
+    made.globals.update({name: getattr(numbers, name) for name in _NUMBER_FUNCTIONS})
+    made.globals.update({name: getattr(slugs, name) for name in _LINK_FUNCTIONS})
+    return made
+
+
+_NUMBER_FUNCTIONS = (
+    "measured",
+    "interval",
+    "limits",
+    "span",
+    "significant",
+    "fixed",
+    "whole",
+    "count",
+    "probability",
+    "percent",
+    "NOT_IDENTIFIABLE",
+)
+_LINK_FUNCTIONS = ("module_href", "sensor_href", "trial_href", "trial_anchor")
+
+
+def render_site(
+    frame: SiteFrame,
+    pages: Sequence[Page],
+    tables: Sequence[Table] = (),
+    files: Mapping[str, bytes] | None = None,
+    plot_library: Path | None = None,
+    further_templates: Sequence[Path] = (),
+) -> dict[str, bytes]:
+    """Return every file of the site by its address, sorted.
+
+    Parameters
+    ----------
+    frame
+        What every page shares.
+    pages
+        Every page; their slugs must differ, also where case is ignored.
+    tables
+        Tables that are files of the site beside those that pages show.
+    files
+        Further files by address (calibration records, pictures of notes).
+    plot_library
+        A build of the plot library to use instead of the one that plotly carries.
+    further_templates
+        Folders with templates of pages that are not the site's own.
+
+    Raises
+    ------
+    ValueError
+        Where two pages or two different tables would be one file.
+    """
+    _check_slugs(pages)
+    jinja = environment(further_templates)
+    written: dict[str, bytes] = dict(files or {})
+    written |= table_files([*tables, *(t for page in pages for t in page.tables)])
+    for page in pages:
+        figures = {f.name: ready(f) for f in page.figures}
+        written[page.file] = _page_html(jinja, frame, page, pages, figures).encode("utf-8")
+        written[f"data/{page.slug}.js"] = data_script(page, figures)
+        for figure in page.figures:
+            if figure.data is not None:
+                written[_figure_csv(page, figure)] = csv_bytes(figure.data)
+    written |= asset_files(templates_folder(), plot_library)
+    return dict(sorted(written.items()))
+
+
+def table_files(tables: Iterable[Table]) -> dict[str, bytes]:
+    """Return ``tables/NAME.csv`` of every table that is a file, and ``tables/schema.json``."""
+    frames: dict[str, pd.DataFrame] = {}
+    for table in tables:
+        if table.source is not None:
+            continue
+        if table.name in frames and not frames[table.name].equals(table.frame):
+            raise ValueError(f"two different tables are named {table.name}")
+        frames[table.name] = table.frame
+    made = {f"tables/{name}.csv": csv_bytes(frame, name) for name, frame in frames.items()}
+    return made | {"tables/schema.json": schema_bytes(frames)}
+
+
+def data_script(page: Page, figures: Mapping[str, Figure]) -> bytes:
+    """Return ``data/SLUG.js``: a classic script that hands the page's figures and values on."""
+    drawn = {
+        name: {"traces": figure.traces, "layout": figure.layout, "height": figure.height}
+        for name, figure in figures.items()
+    }
+    content = orjson.dumps(
+        {"slug": page.slug, "figures": drawn, "values": dict(page.data)},
+        option=orjson.OPT_SERIALIZE_NUMPY | orjson.OPT_SORT_KEYS,
+    )
+    return b"window.campaignPage = " + content + b";\n"
+
+
+def _page_html(
+    jinja: Environment, frame: SiteFrame, page: Page, pages: Sequence[Page], figures: Mapping[str, Figure]
+) -> str:
+    strip = sorted((p for p in pages if p.number is not None), key=lambda p: (p.number or 0, p.slug))
+    context: dict[str, Any] = dict(page.context)
+    context |= {
+        "page": page,
+        "site": frame,
+        "strip": strip,
+        "figures": {f.name: _placed_figure(page, i, figures[f.name]) for i, f in enumerate(page.figures, 1)},
+        "tables": {t.name: _placed_table(page, i, t) for i, t in enumerate(page.tables, 1)},
+    }
+    return jinja.get_template(page.template).render(context)
+
+
+def _placed_figure(page: Page, index: int, figure: Figure) -> PlacedFigure:
+    csv = f"tables/{figure.table}.csv" if figure.data is None and figure.table else _figure_csv(page, figure)
+    return PlacedFigure(
+        figure,
+        _numbered(page, index),
+        f"figure-{figure.name}",
+        Markup(static_svg(figure)),
+        csv,
+    )
+
+
+def _placed_table(page: Page, index: int, table: Table) -> PlacedTable:
+    rows = list(zip(shown_marks(table), shown_cells(table), strict=True))
+    return PlacedTable(table, _numbered(page, index), f"table-{table.name}", rows, table.file)
+
+
+def _numbered(page: Page, index: int) -> str:
+    return str(index) if page.number is None else f"{page.number}.{index}"
+
+
+def _figure_csv(page: Page, figure: Figure) -> str:
+    return f"figures/{page.slug}_{figure.name}.csv"
+
+
+def _check_slugs(pages: Sequence[Page]) -> None:
+    seen: set[str] = set()
+    for page in pages:
+        if page.slug.casefold() in seen:
+            raise ValueError(f"two pages are named {page.slug}")
+        seen.add(page.slug.casefold())
