@@ -38,6 +38,9 @@ QUANTITIES: tuple[str, ...] = (*QUANTITY_FAMILIES, "ignore")
 SAME_KEYS: tuple[str, ...] = (*(key for key in KEYS if key != "ignore"), "position", "started", "channel")
 """Keys of ``[recordings.same]``."""
 
+TIMESTAMP_UNITS = frozenset({"timestamp", "datetime", "iso8601", "iso 8601"})
+"""What may stand as the unit of a time column that holds dates with times of day."""
+
 SHARE_OF_FULL_SCALE = ("share of full scale",)
 REFERENCE_FAMILIES = ("strain", "length")
 LIMIT_FAMILIES: dict[str, tuple[str, ...]] = {
@@ -143,8 +146,8 @@ class Description:
 
     ``limits`` maps the limit's name (``linearity``, ``hysteresis``, ``repeatability``, ``drift_1h``,
     ``strain_error``, ``pressure_error``, ``node_error``) to (value, unit). ``kinds`` maps the lab's own
-    word to our kind. ``same`` holds ``[recordings.same]``. ``use`` holds ``[use]`` as written. ``range_strain`` and
-    ``range_elongation_mm`` are NaN where not given. ``plan`` and ``earlier`` are kept as read.
+    word to our kind. ``same`` holds ``[recordings.same]``. ``use`` holds ``[use]`` as written. ``range_strain``
+    and ``range_elongation_mm`` are NaN where not given. ``plan`` and ``earlier`` are kept as read.
     ``text`` is the file as it stands (for provenance). ``notices`` are remarks on the file that do not stop.
     """
 
@@ -450,7 +453,7 @@ def _check_column(table: CheckedTable, rule: ColumnRule, quantity: str | None) -
         return
     if quantity == "ignore":
         return
-    if quantity == "time" and rule.unit == "timestamp":
+    if quantity == "time" and rule.unit.casefold() in TIMESTAMP_UNITS:
         return
     try:
         find_unit(rule.unit, QUANTITY_FAMILIES[quantity])

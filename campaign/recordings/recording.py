@@ -98,6 +98,8 @@ class Recording:
         ``# key: value`` lines before the table, keys in lower case.
     line_numbers
         Shape (rows,), line of the file that each row came from, for notices.
+    constants
+        Texts of columns that say the same in every row (``module``, ``sensor``, ``kind``, …), by lower-case header.
     """
 
     file: str
@@ -107,6 +109,7 @@ class Recording:
     channels: tuple[Channel, ...]
     preamble: dict[str, str] = field(default_factory=dict)
     line_numbers: npt.NDArray[np.int64] | None = None
+    constants: dict[str, str] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)

@@ -1,8 +1,8 @@
 """The registers of a campaign: ``modules.csv``, ``sensors.csv``, ``sessions.csv`` and ``trials.csv``.
 
 A register is one CSV table with one row a thing. Free columns are kept. A register whose columns cannot be
-told apart stops the campaign, for what it would have said cannot be known; a single broken row is left out, with
-a notice, and what it names is not guessed.
+told apart stops the campaign, for what it would have said cannot be known; a single broken row is left out,
+with a notice, and what it names is not guessed.
 """
 
 from __future__ import annotations
