@@ -1,0 +1,167 @@
+"""Means of autocorrelated samples, many stretches at once, with pooled autocorrelation.
+
+The variance of a mean of n autocorrelated samples is γ₀ τ / n with τ the integrated autocorrelation time.
+Here τ comes from the initial positive sequence (C. J. Geyer, Practical Markov chain Monte Carlo,
+Statistical Science 7 (1992) 473–483) of autocovariances pooled over the stretches, corrected for the bias
+that subtracting each stretch's own mean causes.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+FloatArray = npt.NDArray[np.float64]
+IntArray = npt.NDArray[np.int64]
+
+SHORT_STRETCH = 8
+"""Stretches with fewer samples take the pooled variance: their own has too few degrees of freedom."""
+
+FIXED_POINT_STEPS = 30
+
+
+@dataclass(frozen=True)
+class StretchMeans:
+    """Means of stretches of autocorrelated samples.
+
+    Attributes
+    ----------
+    means, standard_errors, effective_counts
+        Shape (stretches,): mean, its standard error (unit of the samples) and count after autocorrelation.
+    slopes, slope_standard_errors
+        Shape (stretches,): least-squares slope against time and its standard error (unit of the samples a
+        second); NaN for stretches of fewer than 3 samples.
+    autocorrelation_time
+        Pooled integrated autocorrelation time, in samples, at least 1 (1 for independent samples).
+    """
+
+    means: FloatArray
+    standard_errors: FloatArray
+    effective_counts: FloatArray
+    slopes: FloatArray
+    slope_standard_errors: FloatArray
+    autocorrelation_time: float
+
+
+def stretch_means(
+    values: FloatArray, times: FloatArray, counts: IntArray, *, resolution: float = 0.0
+) -> StretchMeans:
+    """Reduce consecutive stretches of samples to means with standard errors.
+
+    Parameters
+    ----------
+    values, times
+        Shape (samples,): the samples of all stretches one after another, and when they were taken (s).
+    counts
+        Shape (stretches,): samples of each stretch, each at least 1; they add up to the number of samples.
+    resolution
+        Step of the display in the unit of the samples; a standard error is never below resolution/√12
+        (GUM F.2.2.1). 0 where it is not known.
+
+    Returns
+    -------
+    StretchMeans
+        The effective count of a stretch is never more than the number of times its value changed, plus one: a
+        slow instrument that is logged fast repeats its last value, and a repeated value is one observation.
+    """
+    codes = np.repeat(np.arange(len(counts)), counts)
+    means = np.bincount(codes, values) / counts
+    residuals = values - means[codes]
+    times_centred = times - (np.bincount(codes, times) / counts)[codes]
+    squares: FloatArray = np.bincount(codes, residuals**2)
+
+    factors = _variance_factors(_pooled_correlation(residuals, counts, removed=1), counts)
+    factors = np.clip(factors, 1.0, counts.astype(float))
+    updates = np.asarray(1.0 + np.bincount(codes, _changes(values, codes), minlength=len(counts)))
+    effective: FloatArray = np.asarray(np.minimum(counts / factors, updates), dtype=np.float64)
+    variances = _own_variances(squares, counts, effective)
+    floor = resolution / np.sqrt(12.0)
+    errors = np.maximum(np.sqrt(variances / effective), floor)
+
+    slopes, slope_errors = _slopes(residuals, times_centred, codes, counts)
+    return StretchMeans(means, errors, effective, slopes, slope_errors, float(np.max(factors, initial=1.0)))
+
+
+def _changes(values: FloatArray, codes: IntArray) -> FloatArray:
+    """1 where a sample differs from the one before it in the same stretch, else 0."""
+    changed = np.zeros(len(values))
+    changed[1:] = (values[1:] != values[:-1]) & (codes[1:] == codes[:-1])
+    return changed
+
+
+def _own_variances(squares: FloatArray, counts: IntArray, effective: FloatArray) -> FloatArray:
+    """Variance of the samples of each stretch, mean estimated; pooled for short stretches."""
+    degrees = counts * (1.0 - 1.0 / np.maximum(effective, 1.0 + 1e-9))
+    pooled = float(np.sum(squares) / max(float(np.sum(degrees)), 1e-300)) if np.any(squares > 0) else 0.0
+    own = np.divide(squares, degrees, out=np.full(len(counts), pooled), where=degrees > 0.5)
+    return np.where((counts < SHORT_STRETCH) | (effective < 2.0), pooled, own)
+
+
+def _slopes(
+    residuals: FloatArray, times: FloatArray, codes: IntArray, counts: IntArray
+) -> tuple[FloatArray, FloatArray]:
+    """Least-squares slopes with standard errors that respect the autocorrelation about the line."""
+    spread = np.bincount(codes, times**2)
+    usable = (spread > 0) & (counts >= 3)
+    nan = np.full(len(counts), np.nan)
+    slopes = np.divide(np.bincount(codes, times * residuals), spread, out=nan.copy(), where=usable)
+    about_line = residuals - np.nan_to_num(slopes)[codes] * times
+    correlation = _pooled_correlation(about_line, counts, removed=2)
+    factors = np.clip(_variance_factors(correlation, counts), 1.0, counts.astype(float))
+    degrees = np.maximum(counts - 2.0 * factors, 1.0)
+    variance = np.bincount(codes, about_line**2) / degrees
+    errors = np.sqrt(np.divide(variance * factors, spread, out=nan.copy(), where=usable))
+    return slopes, errors
+
+
+def _pooled_correlation(residuals: FloatArray, counts: IntArray, removed: int) -> FloatArray:
+    """Autocorrelations at lags 0, 1, … up to the end of the initial positive sequence.
+
+    ``removed`` is the number of coefficients fitted to each stretch before (1: mean, 2: line). Each lowers
+    every autocovariance by about the variance of the mean, which is put back by fixed-point iteration.
+    """
+    longest = int(counts.max(initial=0))
+    last_lag = int(np.median(counts)) // 2 if len(counts) else 0
+    if last_lag < 1 or not np.any(residuals):
+        return np.ones(1)
+    sums = _lagged_sums(residuals, counts, longest)[: last_lag + 1]
+    pairs_each = np.clip(counts[:, None] - np.arange(last_lag + 1)[None, :], 0, None).astype(float)
+    pairs = pairs_each.sum(axis=0)
+    covariance = sums / pairs
+    kept = _initial_positive(covariance)
+    for _ in range(FIXED_POINT_STEPS):
+        factors = _variance_factors(kept / kept[0], counts)
+        of_means = np.clip(kept[0] * factors / counts, 0.0, kept[0])
+        corrected = (sums + removed * (of_means @ pairs_each)) / pairs
+        kept_next = _initial_positive(corrected)
+        if len(kept_next) == len(kept) and np.allclose(kept_next, kept, rtol=1e-6, atol=0.0):
+            break
+        kept = kept_next
+    return np.asarray(kept / kept[0])
+
+
+def _lagged_sums(residuals: FloatArray, counts: IntArray, longest: int) -> FloatArray:
+    """Σ over stretches of Σ_t r_t r_(t+k), for k from 0, by the Fourier transform of padded rows."""
+    rows = np.zeros((len(counts), longest))
+    rows[np.arange(longest)[None, :] < counts[:, None]] = residuals
+    size = 1 << (2 * longest - 1).bit_length()
+    power = np.sum(np.abs(np.fft.rfft(rows, size, axis=1)) ** 2, axis=0)
+    return np.asarray(np.fft.irfft(power, size)[:longest])
+
+
+def _initial_positive(covariance: FloatArray) -> FloatArray:
+    """Lags up to the first pair (γ_2m + γ_2m+1) that is not positive; lag 0 always."""
+    even = covariance[: 2 * (len(covariance) // 2)]
+    pair_sums = even[0::2] + even[1::2]
+    stops = np.flatnonzero(pair_sums <= 0)
+    pairs = int(stops[0]) if len(stops) else len(pair_sums)
+    return covariance[: max(2 * pairs, 1)]
+
+
+def _variance_factors(correlation: FloatArray, counts: IntArray) -> FloatArray:
+    """Variance of the mean times n/γ₀ for each stretch: 1 + 2 Σ (1 − k/n) ρ_k."""
+    lags = np.arange(1, len(correlation))
+    weights = np.clip(1.0 - lags[None, :] / counts[:, None], 0.0, None)
+    return np.asarray(1.0 + 2.0 * weights @ correlation[1:])
