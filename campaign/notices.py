@@ -92,6 +92,14 @@ def sort_notices(notices: Iterable[Notice]) -> tuple[Notice, ...]:
 
 
 NOTICE_CODES: dict[str, str] = {
+    # Trials and readings
+    "reference-not-known": "no length, elongation or strain is known in a staircase: no readings",
+    "no-plateaus": "no stretches of constant reference in a log: it gives no readings",
+    "too-few-readings": "fewer than two usable plateaus or rows: no readings are taken",
+    "missing-values": "rows without a reference or a signal are left out, counted",
+    "plateau-without-signal": "a plateau holds no signal at all and gives no reading",
+    "not-settled": "the signal still moves over the averaged part of a plateau; the reading is kept and marked",
+    "reference-not-common": "a trial does not have the reference quantity that the campaign is analysed in",
     # Bytes, encodings and line ends of one file
     "bom": "the file starts with a byte order mark; the mark is taken off, the first name is kept whole",
     "utf-16": "the file is UTF-16; it is decoded",

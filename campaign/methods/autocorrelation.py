@@ -70,7 +70,7 @@ def stretch_means(
     means = np.bincount(codes, values) / counts
     residuals = values - means[codes]
     times_centred = times - (np.bincount(codes, times) / counts)[codes]
-    squares: FloatArray = np.bincount(codes, residuals**2)
+    squares = np.asarray(np.bincount(codes, residuals**2), dtype=np.float64)
 
     factors = _variance_factors(_pooled_correlation(residuals, counts, removed=1), counts)
     factors = np.clip(factors, 1.0, counts.astype(float))
