@@ -1,0 +1,555 @@
+"""Page 1, Calibration: what line each sensor follows, and how well."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Hashable, Iterable, Sequence
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+from campaign.analyses.calibration import Calibration
+from campaign.analyses.findings import Finding
+from campaign.analyses.results import CampaignResults
+from campaign.analyses.sensor_figures import principal_lines
+from campaign.pages import numbers, palette, slugs
+from campaign.pages.figures import (
+    Figure,
+    Layout,
+    Trace,
+    axis,
+    intervals,
+    label,
+    layout,
+    level_line,
+    line,
+    panel,
+    points,
+    small_multiples,
+)
+from campaign.pages.page import Page
+from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
+from campaign.pages.tables import Column, Table
+from campaign.recordings.recording import ReferenceQuantity
+
+MERITS = ("linearity", "hysteresis", "repeatability")
+"""Figures of merit that stand side by side, in order."""
+
+LAWS = ((1, "λ: free to narrow"), (2, "λ²: width kept"), (4, "λ⁴: stretched both ways"))
+"""Stretch exponents of ideal parallel plates on an incompressible dielectric."""
+
+MOST_MODULES = 48
+"""Modules that the small multiples show; the other figures and the table always hold all of them."""
+
+
+def calibration_page(results: CampaignResults) -> Page | None:
+    """Return page 1, or ``None`` where no staircase was read."""
+    calibration = results.calibration
+    if calibration is None or calibration.sensor_lines.empty:
+        return None
+    where = sensor_axis(calibration.sensor_lines)
+    figures = [
+        lines_figure(calibration, where),
+        merits_figure(results, where),
+        bend_figure(results, where),
+        level_hysteresis_figure(calibration, where),
+        *stretch_figures(calibration, where),
+    ]
+    return Page(
+        slug="calibration",
+        number=1,
+        title="Calibration",
+        template="calibration.html",
+        context={
+            "calibration": calibration,
+            "reference": calibration.reference,
+            "facts": {finding.kind: finding for finding in results.findings.findings},
+            "limits": results.limits,
+            "shown_modules": min(len(where.modules), MOST_MODULES),
+            "all_modules": len(where.modules),
+        },
+        figures=tuple(figure for figure in figures if figure is not None),
+        tables=(sensor_lines_table(calibration),),
+        description="The line of every sensor, its linearity, hysteresis and repeatability, each with its "
+        "interval.",
+    )
+
+
+def x_title(reference: ReferenceQuantity) -> str:
+    """Return the words on an axis of the reference quantity, without the unit."""
+    return {"strain": "Strain", "elongation": "Elongation", "length": "Length"}[reference.name]
+
+
+def signal_unit(calibration: Calibration) -> str:
+    """Return the unit of the signals, or ``various`` where sensors differ in it."""
+    units = sorted(set(calibration.sensor_lines["unit"].astype(str)))
+    return units[0] if len(units) == 1 else "various"
+
+
+def lines_figure(calibration: Calibration, where: SensorAxis) -> Figure:
+    """Return the lines of all sensors, one panel a module, with the mean reading of every level."""
+    reference, unit = calibration.reference, signal_unit(calibration)
+    modules = where.modules[:MOST_MODULES]
+    lines = principal_lines(calibration.sensor_lines)
+    means = _level_means(calibration)
+    traces: list[Trace] = []
+    labels: list[Layout] = []
+    marks = len(means) <= 1800
+    for index, (generation, module) in enumerate(modules):
+        own = lines[(lines["generation"] == generation) & (lines["module"] == module)]
+        spots = means[(means["generation"] == generation) & (means["module"] == module)]
+        traces += _module_lines(own, spots if marks else spots.iloc[:0], where, panel(index), reference)
+        labels += _end_labels(own, panel(index), reference) if len(modules) <= 12 else []
+    columns = 1 if len(modules) == 1 else 2 if len(modules) <= 4 else 4 if len(modules) > 12 else 3
+    rows = math.ceil(len(modules) / columns)
+    return Figure(
+        name="lines",
+        caption=_lines_caption(lines, reference, len(where.modules)),
+        alternative=f"Small multiples, one panel a module: signal against {x_title(reference).lower()}, "
+        f"one straight "
+        "line a sensor through the mean readings of its levels.",
+        traces=tuple(traces),
+        layout=small_multiples(
+            [_panel_name(g, m, where) for g, m in modules],
+            axis(x_title(reference), reference.shown_unit),
+            axis("Signal", unit),
+            columns=columns,
+            gap=(0.04, 0.30 / max(rows, 1) if rows > 1 else 0.1),
+            annotations=labels,
+        ),
+        table="sensor_lines",
+        note="Open marks are the mean readings of a level over runs, the turning reading left out; the "
+        "line is the "
+        "mean of the runs' own lines. Every mark leads to its sensor.",
+        height=90 + 190 * rows if rows > 1 else 420,
+    )
+
+
+def _panel_name(generation: str, module: str, where: SensorAxis) -> str:
+    return module if len(where.generations) == 1 else f"{module} · {generation}"
+
+
+def _level_means(calibration: Calibration) -> pd.DataFrame:
+    rows = calibration.readings
+    rows = rows[rows["used"] & (rows["direction"] != "turning")]
+    keys = ["generation", "module", "sensor"]
+    rows = rows.assign(_place=rows["nominal_level"].fillna(rows["x"].round(4)))
+    return rows.groupby([*keys, "_place"], sort=True)[["x", "signal"]].mean().reset_index()
+
+
+def _module_lines(
+    lines: pd.DataFrame, means: pd.DataFrame, where: SensorAxis, axes: str, reference: ReferenceQuantity
+) -> Iterable[Trace]:
+    for row in lines.to_dict("records"):
+        style = where.style(str(row["generation"]))
+        module, sensor = str(row["module"]), str(row["sensor"])
+        ends = np.array([row["strain_low"], row["strain_high"]])
+        href = slugs.sensor_href(module, sensor)
+        shared = {"module": module, "sensor": sensor, "axes": axes}
+        yield line(
+            ends * reference.shown_factor,
+            row["intercept"] + row["slope"] * ends,
+            colour=style.colour,
+            dash=style.dash,
+            width=1.3,
+            **shared,
+        )
+        own = means[means["sensor"] == row["sensor"]]
+        if len(own):
+            text = _line_sentence(row, reference)
+            yield points(
+                own["x"] * reference.shown_factor,
+                own["signal"],
+                style=style,
+                size=4,
+                open_marker=True,
+                text=[text] * len(own),
+                links=[href] * len(own),
+                **shared,
+            )
+
+
+def _line_sentence(row: dict[Hashable, Any], reference: ReferenceQuantity) -> str:
+    slope = row["slope"] / reference.shown_factor
+    spread = math.sqrt(row["var_slope"]) / reference.shown_factor
+    per = f"{row['unit']} per {reference.shown_unit}"
+    value = numbers.measured(slope, spread, per, missing=numbers.significant(slope, 4, per))
+    return f"{row['module']} {row['sensor']}: slope {value} (standard uncertainty)"
+
+
+def _end_labels(lines: pd.DataFrame, axes: str, reference: ReferenceQuantity) -> list[Layout]:
+    """Sensors' ids at the ends of their lines, dropped where two would overlap."""
+    ends = sorted(
+        (float(r["intercept"] + r["slope"] * r["strain_high"]), float(r["strain_high"]), str(r["sensor"]))
+        for r in lines.to_dict("records")
+    )
+    reach = (ends[-1][0] - ends[0][0]) or 1.0
+    made: list[Layout] = []
+    last = -math.inf
+    for height, right, sensor in ends:
+        if height - last < 0.09 * reach and made:
+            continue
+        made.append(
+            label(
+                sensor,
+                right * reference.shown_factor,
+                height,
+                axes=axes,
+                colour=palette.SOFT,
+                size=10,
+                shift=(3, 0),
+            )
+        )
+        last = height
+    return made
+
+
+def _lines_caption(lines: pd.DataFrame, reference: ReferenceQuantity, modules: int) -> str:
+    r_squared = lines["r_squared"].dropna()
+    of = f"{numbers.count(len(lines), 'sensor')} of {numbers.count(modules, 'module')}"
+    if r_squared.empty:
+        return f"The lines of {of} against {x_title(reference).lower()}."
+    return (
+        f"Straight lines of {of} against {x_title(reference).lower()}; the least straight has "
+        f"R² = {numbers.fixed(float(r_squared.min()), 4)}."
+    )
+
+
+def merits_figure(results: CampaignResults, where: SensorAxis) -> Figure | None:
+    """Return linearity, hysteresis and repeatability of every sensor side by side, with intervals, limits."""
+    figures = results.limits.figures
+    shown = [name for name in MERITS if name in set(figures["figure"])]
+    if not shown:
+        return None
+    traces: list[Trace] = []
+    shapes: list[Layout] = []
+    for index, name in enumerate(shown):
+        rows = figures[figures["figure"] == name].dropna(subset=["estimate"])
+        rows = _clipped_for_drawing(rows)
+        sentences = [merit_sentence(name, row) for row in rows.to_dict("records")]
+        traces += interval_traces(rows, where, sentences, axes=panel(index))
+        limit = results.description.limits.get(name)
+        if limit is not None:
+            shapes.append(
+                level_line(limit[0], upright=True, colour=palette.ATTENTION, dash="dash", axes=panel(index))
+            )
+    made = small_multiples(
+        [f"{name.capitalize()}" for name in shown],
+        axis("", "%FSO"),
+        where.axis(),
+        columns=len(shown),
+        shapes=shapes,
+    )
+    for index, name in enumerate(shown):
+        key = f"xaxis{panel(index)}"
+        made[key] = {k: v for k, v in made[key].items() if k != "matches"} | {
+            "title": {"text": f"{name.capitalize()} / %FSO"},
+            "rangemode": "tozero",
+        }
+    return Figure(
+        name="merits",
+        caption=_merits_caption(results, shown),
+        alternative="Dots with 95 % intervals, one a sensor, ordered by module: "
+        + ", ".join(shown)
+        + " in per cent of full-scale output.",
+        traces=tuple(traces),
+        layout=made,
+        data=figures.drop(columns="kind"),
+        note="%FSO is per cent of the full-scale output of the sensor's own line. Bars are 95 % intervals; "
+        "a bar cut "
+        "at the edge goes on. A dashed upright is the campaign's limit.",
+        height=where.height,
+    )
+
+
+def _clipped_for_drawing(rows: pd.DataFrame) -> pd.DataFrame:
+    """Cut bars at three times the largest estimate, so that two runs' wide limits leave the dots readable."""
+    edge = 3 * rows["estimate"].abs().max()
+    return rows.assign(low=rows["low"].clip(-edge, edge), high=rows["high"].clip(-edge, edge))
+
+
+def merit_sentence(name: str, row: dict[Hashable, Any]) -> str:
+    """Return a sentence about one figure of one sensor, with its interval."""
+    value = numbers.interval(row["estimate"], row["low"], row["high"], str(row["unit"]))
+    return f"{row['module']} {row['sensor']}: {name} {value}"
+
+
+def _merits_caption(results: CampaignResults, shown: Sequence[str]) -> str:
+    figures = results.limits.figures
+    parts = []
+    for name in shown:
+        rows = figures[figures["figure"] == name].dropna(subset=["estimate"])
+        if len(rows):
+            worst = rows.iloc[int(rows["estimate"].to_numpy(float).argmax())]
+            parts.append(
+                f"{name} reaches {numbers.significant(float(worst['estimate']), 2, '%FSO')} "
+                f"({worst['module']} {worst['sensor']})"
+            )
+    return _sentence(parts)
+
+
+def _sentence(parts: Sequence[str]) -> str:
+    text = "; ".join(parts) or "no figure could be estimated"
+    return f"{text[:1].upper()}{text[1:]}."
+
+
+def bend_figure(results: CampaignResults, where: SensorAxis) -> Figure | None:
+    """Return how far every sensor's readings bend away from its straight line, with intervals."""
+    figures = results.limits.figures
+    rows = figures[figures["figure"] == "bend"].dropna(subset=["estimate"])
+    if rows.empty:
+        return None
+    apart = rows[(rows["low"] > 0) | (rows["high"] < 0)]
+    clipped = _clipped_for_drawing(rows)
+    return Figure(
+        name="lack-of-fit",
+        caption=f"The bend of {len(apart)} of {numbers.count(len(rows), 'sensor')} differs from zero; the "
+        f"largest is "
+        f"{numbers.significant(float(rows['estimate'].abs().max()), 2, '%FSO')}.",
+        alternative="Dots with 95 % intervals, one a sensor: departure of the fitted parabola from its "
+        "chord at mid "
+        "range, in per cent of full-scale output, with an upright at zero.",
+        traces=tuple(
+            interval_traces(clipped, where, [merit_sentence("bend", r) for r in clipped.to_dict("records")])
+        ),
+        layout=layout(
+            axis("Bend at mid range", "%FSO"),
+            where.axis(),
+            shapes=[level_line(0, upright=True, colour=palette.INK)],
+        ),
+        data=rows.drop(columns="kind"),
+        note="A bend is the quadratic term over half the range squared. A bend below zero: the signal "
+        "rises steeply "
+        "first and less at the end. Each interval stands alone; the lack-of-fit test beside it is corrected.",
+        height=where.height,
+    )
+
+
+def level_hysteresis_figure(calibration: Calibration, where: SensorAxis) -> Figure | None:
+    """Return the signed difference between branches at each level, one panel a module."""
+    levels = calibration.level_hysteresis.dropna(subset=["difference"])
+    if levels.empty:
+        return None
+    reference = calibration.reference
+    scale = (
+        (levels["percent_fso"] / levels["difference"].where(levels["difference"] != 0))
+        .groupby([levels[k] for k in ("generation", "module", "sensor")])
+        .transform("median")
+    )
+    levels = levels.assign(low=levels["low"] * scale, high=levels["high"] * scale)
+    low, high = levels[["low", "high"]].min(axis=1), levels[["low", "high"]].max(axis=1)
+    levels = levels.assign(low=low, high=high)
+    present = set(zip(levels["generation"], levels["module"], strict=True))
+    modules = [m for m in where.modules if m in present][:MOST_MODULES]
+    traces = [
+        t for i, m in enumerate(modules) for t in _hysteresis_traces(levels, m, where, panel(i), reference)
+    ]
+    columns = 1 if len(modules) == 1 else 2 if len(modules) <= 4 else 4 if len(modules) > 12 else 3
+    rows = math.ceil(len(modules) / columns)
+    return Figure(
+        name="hysteresis",
+        caption=_hysteresis_caption(levels),
+        alternative="Small multiples, one panel a module: rising minus falling signal at each common "
+        "level, in per "
+        "cent of full-scale output, one line a sensor with simultaneous 95 % intervals.",
+        traces=tuple(traces),
+        layout=small_multiples(
+            [_panel_name(g, m, where) for g, m in modules],
+            axis(x_title(reference), reference.shown_unit),
+            axis("Rising − falling", "%FSO"),
+            columns=columns,
+            gap=(0.04, 0.30 / max(rows, 1) if rows > 1 else 0.1),
+            shapes=[level_line(0, colour=palette.INK, axes=panel(i)) for i in range(len(modules))],
+        ),
+        data=levels,
+        note="Intervals hold together over all levels of a sensor. Below zero: at the same length the "
+        "signal was "
+        "lower while stretching than while releasing.",
+        height=90 + 170 * rows if rows > 1 else 420,
+    )
+
+
+def _hysteresis_traces(
+    levels: pd.DataFrame, module: tuple[str, str], where: SensorAxis, axes: str, reference: ReferenceQuantity
+) -> Iterable[Trace]:
+    own = levels[(levels["generation"] == module[0]) & (levels["module"] == module[1])]
+    for sensor, rows in own.groupby("sensor", sort=True):
+        href = slugs.sensor_href(module[1], str(sensor))
+        text = [
+            f"{module[1]} {sensor} at "
+            f"{numbers.significant(x * reference.shown_factor, 3, reference.shown_unit)}: "
+            f"{numbers.interval(e, a, b, '%FSO')}"
+            for x, e, a, b in zip(
+                rows["nominal_level"], rows["percent_fso"], rows["low"], rows["high"], strict=True
+            )
+        ]
+        yield intervals(
+            rows["percent_fso"],
+            rows["low"],
+            rows["high"],
+            rows["nominal_level"] * reference.shown_factor,
+            across=False,
+            style=where.style(module[0]),
+            size=4,
+            text=text,
+            links=[href] * len(rows),
+            module=module[1],
+            sensor=str(sensor),
+            axes=axes,
+        )
+
+
+def _hysteresis_caption(levels: pd.DataFrame) -> str:
+    apart = levels[(levels["low"] > 0) | (levels["high"] < 0)]
+    keys = ["generation", "module", "sensor"]
+    found, tested = len(apart.drop_duplicates(keys)), len(levels.drop_duplicates(keys))
+    return (
+        f"The two branches differ at some level in {found} of {numbers.count(tested, 'sensor')}; the widest "
+        f"difference is {numbers.significant(float(levels['percent_fso'].abs().max()), 2, '%FSO')}."
+    )
+
+
+def stretch_figures(calibration: Calibration, where: SensorAxis) -> list[Figure]:
+    """Return relative signal against stretch with the laws drawn, and every sensor's exponent."""
+    lines = principal_lines(calibration.sensor_lines).dropna(subset=["stretch_exponent"])
+    if calibration.reference.name != "strain" or lines.empty:
+        return []
+    return [_stretch_curves(calibration, lines, where), _exponents(lines, where)]
+
+
+def _stretch_curves(calibration: Calibration, lines: pd.DataFrame, where: SensorAxis) -> Figure:
+    means = _level_means(calibration).merge(lines[["generation", "module", "sensor", "zero_signal"]])
+    means = means.assign(stretch=1 + means["x"], relative=means["signal"] / means["zero_signal"])
+    far = float(means["stretch"].max())
+    stretch = np.linspace(1.0, far, 40)
+    high = float(means["relative"].max())
+    traces = [
+        line(
+            stretch[stretch**p <= 1.15 * high],
+            (stretch**p)[stretch**p <= 1.15 * high],
+            colour=palette.SOFT,
+            dash="dot",
+        )
+        for p, _ in LAWS
+    ]
+    thin = means if len(means) <= 1900 else means.iloc[:: math.ceil(len(means) / 1900)]
+    for (generation, module), rows in thin.groupby(["generation", "module"], sort=True):
+        traces.append(
+            points(
+                rows["stretch"],
+                rows["relative"],
+                style=where.style(str(generation)),
+                size=4,
+                open_marker=True,
+                text=[f"{m} {s}" for m, s in zip(rows["module"], rows["sensor"], strict=True)],
+                links=[
+                    slugs.sensor_href(str(m), str(s))
+                    for m, s in zip(rows["module"], rows["sensor"], strict=True)
+                ],
+                module=str(module),
+            )
+        )
+    return Figure(
+        name="stretch",
+        caption="Signal relative to the unstretched one grows with stretch "
+        f"as its power {numbers.significant(float(lines['stretch_exponent'].median()), 3)} in the median "
+        f"sensor.",
+        alternative="Relative signal against stretch λ, one mark a sensor and level, with the laws λ, λ² "
+        "and λ⁴ dotted.",
+        traces=tuple(traces),
+        layout=layout(
+            axis("Stretch λ = 1 + ε"),
+            axis("Signal / signal at zero strain"),
+            annotations=_law_labels(far, high),
+        ),
+        data=means,
+        note="Dotted: parallel plates on an incompressible dielectric, free to narrow (λ), width kept "
+        "(λ²), stretched "
+        "both ways (λ⁴). Cable capacitance that was not taken off lowers the exponent.",
+        height=400,
+    )
+
+
+def _law_labels(far: float, high: float) -> list[Layout]:
+    made = []
+    for power, words in LAWS:
+        end = min(far, (1.15 * high) ** (1 / power))
+        made.append(
+            label(words, end, end**power, colour=palette.SOFT, anchor="right", shift=(-8, 8), size=12)
+        )
+    return made
+
+
+def _exponents(lines: pd.DataFrame, where: SensorAxis) -> Figure:
+    rows = lines.rename(
+        columns={
+            "stretch_exponent": "estimate",
+            "stretch_exponent_low": "low",
+            "stretch_exponent_high": "high",
+        }
+    ).assign(unit="")
+    sentences = [merit_sentence("stretch exponent", row) for row in rows.to_dict("records")]
+    far = float(rows[["estimate", "high"]].max().max())
+    laws = [law for law in LAWS if law[0] <= max(far * 1.2, 1.0)]
+    return Figure(
+        name="exponents",
+        caption=f"Exponents lie between {numbers.significant(float(rows['estimate'].min()), 3)} and "
+        f"{numbers.significant(float(rows['estimate'].max()), 3)}.",
+        alternative="Dots with 95 % intervals, one a sensor: exponent p of signal ∝ λ^p, with uprights at "
+        "1, 2 and 4.",
+        traces=tuple(interval_traces(rows, where, sentences)),
+        layout=layout(
+            axis("Stretch exponent p"),
+            where.axis(),
+            shapes=[level_line(p, upright=True) for p, _ in laws],
+        ),
+        table="sensor_lines",
+        note="Without blank trials the exponent is a lower bound, and no mechanism is inferred from it.",
+        height=where.height,
+    )
+
+
+def sensor_lines_table(calibration: Calibration) -> Table:
+    """Return the table of all lines, one row a sensor and branch."""
+    reference = calibration.reference
+    lines = calibration.sensor_lines
+    frame = lines.assign(
+        _se_slope=np.sqrt(lines["var_slope"]),
+        _se_intercept=np.sqrt(lines["var_intercept"]),
+        _href=[
+            slugs.sensor_href(str(m), str(s)) for m, s in zip(lines["module"], lines["sensor"], strict=True)
+        ],
+    )
+    unit = signal_unit(calibration)
+    per = f"{unit} per {reference.shown_unit}"
+    factor = 1 / reference.shown_factor
+    columns = [
+        Column("module", "Module", kind="text"),
+        Column("sensor", "Sensor", kind="text", href="_href"),
+        Column("branch", "Branch", kind="text"),
+        Column("runs", "Runs", kind="integer"),
+        Column("intercept", "Signal at zero", unit, uncertainty="_se_intercept"),
+        Column("slope", "Slope", per, factor=factor, uncertainty="_se_slope"),
+        Column("gauge_factor", "Gauge factor", digits=3),
+        Column("linearity_least_squares_percent_fso", "Linearity", "%FSO", digits=2),
+        Column("lack_of_fit_p", "Lack of fit, p", kind="probability"),
+        Column("hysteresis_percent_fso", "Hysteresis", "%FSO", digits=2, missing="one branch"),
+        Column("repeatability_percent_fso", "Repeatability", "%FSO", digits=2, missing="one run"),
+        Column(
+            "strain_residual_sd", "Residual SD", reference.shown_unit, digits=2, factor=reference.shown_factor
+        ),
+    ]
+    return Table(
+        name="sensor_lines",
+        caption="Every line with the standard uncertainties of its signal at zero and its slope.",
+        frame=frame,
+        columns=tuple(columns),
+        note="The file holds all columns: covariances, degrees of freedom, the four linearities, the "
+        "stretch exponent.",
+    )
+
+
+def facts_of(findings: Iterable[Finding], kind: str) -> tuple[object, ...]:
+    """Return the facts of one kind of finding, empty where there is none."""
+    return next((finding.facts for finding in findings if finding.kind == kind), ())

@@ -1,0 +1,95 @@
+"""Where modules and sensors stand on the axes of figures: in one order all over the site."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import pandas as pd
+
+from campaign.pages import palette, slugs
+from campaign.pages.figures import Layout, Trace, axis, intervals
+
+_MODULE = ["generation", "module"]
+_SENSOR = ["generation", "module", "sensor"]
+
+
+@dataclass(frozen=True)
+class SensorAxis:
+    """Modules as rows, their sensors fanned out within the row.
+
+    Attributes
+    ----------
+    generations
+        In order of name: the order of colours.
+    modules
+        (generation, module), in order; row *i* stands at height *i*.
+    places
+        Height of each (generation, module, sensor).
+    """
+
+    generations: tuple[str, ...]
+    modules: tuple[tuple[str, str], ...]
+    places: dict[tuple[str, str, str], float]
+
+    @property
+    def height(self) -> int:
+        """Height in px that keeps neighbouring sensors apart."""
+        return max(240, 90 + 13 * len(self.places) + 8 * len(self.modules))
+
+    def heights(self, rows: pd.DataFrame) -> list[float]:
+        """Return the height of each row's sensor."""
+        return [self.places[key] for key in rows[_SENSOR].itertuples(index=False, name=None)]
+
+    def axis(self) -> Layout:
+        """Return the y axis: one tick a module, the first module on top."""
+        ticks = [(float(i), module) for i, (_, module) in enumerate(self.modules)]
+        return axis("Module", ticks=ticks, low=-0.6, high=len(self.modules) - 0.4, reverse=True)
+
+    def style(self, generation: str) -> palette.GenerationStyle:
+        """Return the marks of *generation*."""
+        return palette.generation_style(generation, self.generations)
+
+
+def sensor_axis(rows: pd.DataFrame) -> SensorAxis:
+    """Return the axis for the sensors in *rows* (columns generation, module, sensor), sorted."""
+    sensors = sorted(set(rows[_SENSOR].astype(str).itertuples(index=False, name=None)))
+    modules = tuple(sorted({(g, m) for g, m, _ in sensors}))
+    places: dict[tuple[str, str, str], float] = {}
+    for height, module in enumerate(modules):
+        own = [key for key in sensors if key[:2] == module]
+        step = 0.72 / max(len(own) - 1, 1)
+        for index, key in enumerate(own):
+            places[key] = height + (index - (len(own) - 1) / 2) * step
+    return SensorAxis(tuple(sorted({g for g, _ in modules})), modules, places)
+
+
+def sensor_links(rows: pd.DataFrame) -> list[str]:
+    """Return the address of each row's sensor page."""
+    return [slugs.sensor_href(str(m), str(s)) for m, s in zip(rows["module"], rows["sensor"], strict=True)]
+
+
+def interval_traces(
+    rows: pd.DataFrame, where: SensorAxis, sentences: Sequence[str], *, factor: float = 1.0, axes: str = ""
+) -> list[Trace]:
+    """Return one trace a sensor's module: estimates with intervals at the sensors' heights, each a link.
+
+    *rows* has columns generation, module, sensor, estimate, low, high; *sentences* one hover text a row;
+    values are multiplied by *factor*.
+    """
+    rows = rows.assign(_text=list(sentences))
+    return [
+        intervals(
+            part["estimate"] * factor,
+            part["low"] * factor,
+            part["high"] * factor,
+            where.heights(part),
+            style=where.style(str(generation)),
+            name=str(module),
+            text=part["_text"].tolist(),
+            links=sensor_links(part),
+            module=str(module),
+            axes=axes,
+        )
+        for (generation, module), part in rows.groupby(_MODULE, sort=True)
+    ]

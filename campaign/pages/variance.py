@@ -1,0 +1,478 @@
+"""Page 2, Variance: where the spread comes from."""
+
+from __future__ import annotations
+
+from collections.abc import Hashable, Iterable, Mapping
+from typing import Any
+
+import pandas as pd
+
+from campaign.analyses.results import CampaignResults
+from campaign.analyses.variance import Variance
+from campaign.pages import numbers, palette, slugs
+from campaign.pages.figures import (
+    Figure,
+    Layout,
+    Trace,
+    axis,
+    bars,
+    intervals,
+    label,
+    layout,
+    level_line,
+    panel,
+    small_multiples,
+)
+from campaign.pages.page import Page
+from campaign.pages.tables import Column, Table
+from campaign.recordings.recording import ReferenceQuantity
+
+LEVELS: Mapping[str, str] = {
+    "batch": "batches",
+    "module": "modules",
+    "sensor": "sensors of a module",
+    "session": "mountings",
+    "repetition": "runs",
+    "run": "runs",
+    "sensor_by_level": "a sensor's own shape",
+    "sensor_by_direction": "a sensor's own loop",
+    "residual": "readings of a run",
+    "total": "all together",
+}
+"""What each level of nesting is called on pages; other names have their underscores opened."""
+
+PLACES: Mapping[str, str] = {"zero": "at zero", "mid": "at mid range", "full": "at full scale"}
+"""Places of the range, in order."""
+
+
+def level_words(level: str) -> str:
+    """Return what a level of nesting is called: ``runs`` for ``repetition``."""
+    return LEVELS.get(level, level.replace("_", " "))
+
+
+def variance_page(results: CampaignResults) -> Page | None:
+    """Return page 2, or ``None`` where no variance could be analysed."""
+    variance = results.variance
+    if variance is None or variance.variance_in_strain.empty:
+        return None
+    figures = [
+        components_figure(variance),
+        shares_figure(variance),
+        caterpillar_figure(variance, "module"),
+        caterpillar_figure(variance, "sensor"),
+    ]
+    return Page(
+        slug="variance",
+        number=2,
+        title="Variance",
+        template="variance.html",
+        context={
+            "variance": variance,
+            "reference": variance.reference,
+            "spread": next((f for f in results.findings.findings if f.kind == "spread"), None),
+            "level_words": level_words,
+            "generations": generations_of(variance.variance_in_strain),
+            "reasons": _reasons(variance),
+        },
+        figures=tuple(figure for figure in figures if figure is not None),
+        tables=tuple(_tables(variance)),
+        description="How much of the spread lies between batches, modules, sensors, mountings and runs.",
+    )
+
+
+def generations_of(frame: pd.DataFrame) -> tuple[str, ...]:
+    """Return the generations of a table in order, the pooled fit ``all`` left out unless it stands alone."""
+    names = sorted(set(frame["generation"].astype(str)))
+    apart = tuple(name for name in names if name != "all")
+    return apart or tuple(names)
+
+
+def _reasons(variance: Variance) -> list[dict[str, object]]:
+    """Labels of the identifiability ladder that a reader must know: everything that is not resolved."""
+    table = variance.identifiability
+    rows = table[table["label"] != "resolved"].drop_duplicates(["generation", "component"])
+    return [{str(k): v for k, v in row.items()} for row in rows.to_dict("records")]
+
+
+def _levels_in_order(frame: pd.DataFrame) -> list[str]:
+    order = list(LEVELS)
+    found = list(dict.fromkeys(frame["level"].astype(str)))
+    return sorted(found, key=lambda name: order.index(name) if name in order else len(order) - 2)
+
+
+def components_figure(variance: Variance) -> Figure:
+    """Return every component as strain-equivalent SD with its interval, at zero, mid and full scale."""
+    table = variance.variance_in_strain.dropna(subset=["strain_sd"])
+    generations = generations_of(table)
+    table = table[table["generation"].isin(generations)]
+    levels = _levels_in_order(table)
+    places = [place for place in PLACES if place in set(table["place"])]
+    factor, unit = variance.reference.shown_factor, variance.reference.shown_unit
+    edge = 3 * float(table["strain_sd"].max())
+    traces: list[Trace] = []
+    for index, place in enumerate(places):
+        for order, generation in enumerate(generations):
+            rows = table[(table["place"] == place) & (table["generation"] == generation)]
+            shift = (order - (len(generations) - 1) / 2) * min(0.24, 0.7 / len(generations))
+            traces.append(
+                _component_trace(
+                    rows, levels, shift, generation, generations, factor, unit, edge, panel(index)
+                )
+            )
+    ticks = [(float(i), level_words(level)) for i, level in enumerate(levels)]
+    made = small_multiples(
+        [PLACES[place] for place in places],
+        axis("SD", unit, low=0, high=_upper_end(table, edge) * factor),
+        axis("", ticks=ticks, low=-0.6, high=len(levels) - 0.4, reverse=True),
+        columns=len(places),
+        annotations=_generation_key(generations),
+    )
+    return Figure(
+        name="components",
+        caption=_components_caption(table, variance.reference),
+        alternative="Dots with 95 % intervals: strain-equivalent standard deviation of each level of "
+        "nesting, panels "
+        "for zero, mid range and full scale, generations apart.",
+        traces=tuple(traces),
+        layout=made | {"margin": {"l": 150, "t": 46}},
+        table="variance_in_strain",
+        note="Intervals are profile-likelihood 95 % limits. One that starts at zero is not distinguishable "
+        "from zero; "
+        "one cut at the edge goes on.",
+        height=150 + 44 * len(levels),
+    )
+
+
+def _upper_end(table: pd.DataFrame, edge: float) -> float:
+    tops = pd.concat([table["strain_sd"], table["high"].clip(upper=edge)]).dropna()
+    return float(tops.max()) * 1.06 or 1.0
+
+
+def _component_trace(
+    rows: pd.DataFrame,
+    levels: list[str],
+    shift: float,
+    generation: str,
+    generations: tuple[str, ...],
+    factor: float,
+    unit: str,
+    edge: float,
+    axes: str,
+) -> Trace:
+    text = [
+        f"{generation}, {level_words(str(r['level']))}: {_sd_words(r, factor, unit)}"
+        for r in rows.to_dict("records")
+    ]
+    return intervals(
+        rows["strain_sd"] * factor,
+        rows["low"] * factor,
+        rows["high"].clip(upper=edge) * factor,
+        [levels.index(str(level)) + shift for level in rows["level"]],
+        style=palette.generation_style(generation, generations),
+        name=generation,
+        text=text,
+        axes=axes,
+    )
+
+
+def _sd_words(row: Mapping[Hashable, Any], factor: float, unit: str) -> str:
+    return numbers.interval(row["strain_sd"] * factor, row["low"] * factor, row["high"] * factor, unit)
+
+
+def _generation_key(generations: tuple[str, ...]) -> list[Layout]:
+    """Direct labels that tell generations apart, above the first panel; none for a single generation."""
+    if len(generations) < 2:
+        return []
+    return [
+        label(
+            f"{_MARKS.get(palette.generation_style(g, generations).symbol, '●')} {g}",
+            0.98,
+            1.0,
+            colour=palette.generation_style(g, generations).colour,
+            anchor="right",
+            shift=(0, -12 - 17 * i),
+            paper=True,
+        )
+        for i, g in enumerate(generations)
+    ]
+
+
+_MARKS = {"circle": "●", "square": "■", "diamond": "◆", "triangle-up": "▲", "x": "✕"}
+
+
+def _components_caption(table: pd.DataFrame, reference: ReferenceQuantity) -> str:
+    mid = table[(table["place"] == "mid") & ~table["level"].isin(["total"])]
+    if mid.empty:
+        return "Components of the spread as strain-equivalent standard deviations."
+    parts = []
+    for generation, rows in mid.groupby("generation", sort=True):
+        top = rows.iloc[int(rows["strain_sd"].to_numpy(float).argmax())]
+        value = _sd_words(top.to_dict(), reference.shown_factor, reference.shown_unit)
+        parts.append(f"{generation}: {level_words(str(top['level']))} with {value}")
+    return f"The largest component at mid range. {'; '.join(parts)}."
+
+
+def shares_figure(variance: Variance) -> Figure | None:
+    """Return the shares of the variance at mid range as one bar a generation."""
+    table = variance.variance_in_strain
+    table = table[(table["place"] == "mid") & (table["level"] != "total")].dropna(subset=["share"])
+    generations = generations_of(table) if len(table) else ()
+    table = table[table["generation"].isin(generations)]
+    if table.empty:
+        return None
+    levels = _levels_in_order(table)
+    traces: list[Trace] = []
+    labels: list[Layout] = []
+    for row_index, generation in enumerate(generations):
+        start = 0.0
+        for level in levels:
+            share = float(
+                table.loc[(table["generation"] == generation) & (table["level"] == level), "share"].sum()
+            )
+            colour = palette.RAMP[(1 + 2 * levels.index(level)) % len(palette.RAMP)]
+            text = f"{generation}: {numbers.percent(share)} of the variance between {level_words(level)}"
+            traces.append(
+                bars(
+                    [row_index],
+                    [share * 100],
+                    across=True,
+                    base=[start * 100],
+                    colour=colour,
+                    width=0.42,
+                    text=[text],
+                )
+            )
+            if share >= 0.08:
+                labels.append(_share_label(level, share, start, row_index))
+            start += share
+    ticks = [(float(i), g) for i, g in enumerate(generations)]
+    return Figure(
+        name="shares",
+        caption=_shares_caption(table, generations),
+        alternative="One bar a generation, divided by the share of each level in the variance at mid range.",
+        traces=tuple(traces),
+        layout=layout(
+            axis("Share of the variance at mid range", "%", low=0, high=100),
+            axis("", ticks=ticks, low=-0.6, high=len(generations) - 0.4, reverse=True, grid=False),
+            annotations=labels,
+            margin={"l": 110},
+        ),
+        table="variance_in_strain",
+        note="Shares are of variances, not of SDs. A level that the design resolves badly has no share "
+        "here; its "
+        "limits stand in the figure above.",
+        height=110 + 76 * len(generations),
+    )
+
+
+def _share_label(level: str, share: float, start: float, height: float) -> Layout:
+    return label(
+        f"{level_words(level)} {numbers.percent(share)}",
+        (start + share / 2) * 100,
+        height + 0.38,
+        anchor="center",
+        shift=(0, 0),
+        size=11,
+        colour=palette.INK,
+    )
+
+
+def _shares_caption(table: pd.DataFrame, generations: Iterable[str]) -> str:
+    parts = []
+    for generation in generations:
+        rows = table[table["generation"] == generation].sort_values("share", ascending=False, kind="stable")
+        words = [
+            f"{numbers.percent(float(r['share']))} {level_words(str(r['level']))}"
+            for _, r in rows.head(3).iterrows()
+        ]
+        parts.append(f"{generation}: {', '.join(words)}")
+    return f"Shares of the variance at mid range. {'; '.join(parts)}."
+
+
+def caterpillar_figure(variance: Variance, level: str) -> Figure | None:
+    """Return the effects of modules or sensors, sorted, each with its interval, one panel a term."""
+    rows = variance.effects
+    rows = rows[(rows["level"] == level) & rows["generation"].isin(generations_of(rows) if len(rows) else ())]
+    rows = rows.dropna(subset=["estimate"])
+    if rows.empty or len(rows.drop_duplicates(["module", "sensor"])) < 2:
+        return None
+    terms = list(dict.fromkeys(rows["term"].astype(str)))[:2]
+    generations = generations_of(rows)
+    traces = [
+        trace
+        for i, term in enumerate(terms)
+        for trace in _caterpillar(rows, term, level, generations, panel(i))
+    ]
+    units = {term: str(rows.loc[rows["term"] == term, "unit"].iloc[0]) for term in terms}
+    number = int(rows.groupby("term")["module"].size().max())
+    made = small_multiples(
+        [f"{term}" for term in terms],
+        axis("Rank", low=-1, high=number, grid=False),
+        axis("Effect"),
+        columns=len(terms),
+        gap=(0.12, 0.1),
+        shapes=[level_line(0, colour=palette.INK, axes=panel(i)) for i in range(len(terms))],
+    )
+    for index, term in enumerate(terms):
+        key = f"yaxis{panel(index)}"
+        made[key] = {k: v for k, v in made[key].items() if k not in ("matches", "showticklabels")} | {
+            "title": {"text": f"Effect on {term} / {units[term]}"}
+        }
+    return Figure(
+        name=f"{level}-effects",
+        caption=_caterpillar_caption(rows, level, terms),
+        alternative=f"Effects of {level_words(level)} in order of size with 95 % intervals, panels for "
+        + " and ".join(terms)
+        + ", with a line at zero.",
+        traces=tuple(traces),
+        layout=made,
+        data=rows,
+        note="Best predictions by the model: drawn towards zero the less the data say of a "
+        f"{'module' if level == 'module' else 'sensor'}. Each mark leads to its page.",
+        height=360,
+    )
+
+
+def _caterpillar(
+    rows: pd.DataFrame, term: str, level: str, generations: tuple[str, ...], axes: str
+) -> Iterable[Trace]:
+    own = rows[rows["term"] == term].sort_values("estimate", kind="stable").reset_index(drop=True)
+    for generation, part in own.groupby("generation", sort=True):
+        names = [
+            f"{m} {s}".strip() if level == "sensor" else str(m)
+            for m, s in zip(part["module"], part["sensor"], strict=True)
+        ]
+        text = [
+            f"{name}: {numbers.interval(float(e), float(a), float(b), str(u))}"
+            for name, e, a, b, u in zip(
+                names, part["estimate"], part["low"], part["high"], part["unit"], strict=True
+            )
+        ]
+        yield intervals(
+            part["estimate"],
+            part["low"],
+            part["high"],
+            part.index.to_numpy(float),
+            across=False,
+            style=palette.generation_style(str(generation), generations),
+            size=5,
+            name=str(generation),
+            text=text,
+            links=[
+                slugs.sensor_href(str(m), str(s)) if level == "sensor" else slugs.module_href(str(m))
+                for m, s in zip(part["module"], part["sensor"], strict=True)
+            ],
+            axes=axes,
+        )
+
+
+def _caterpillar_caption(rows: pd.DataFrame, level: str, terms: list[str]) -> str:
+    parts = []
+    for term in terms:
+        own = rows[rows["term"] == term]
+        apart = int(((own["low"] > 0) | (own["high"] < 0)).sum())
+        parts.append(f"{apart} of {len(own)} in the {term}")
+    words = "modules" if level == "module" else "sensors"
+    return f"{words.capitalize()} whose interval excludes the mean: {', '.join(parts)}."
+
+
+def _tables(variance: Variance) -> Iterable[Table]:
+    factor, unit = variance.reference.shown_factor, variance.reference.shown_unit
+    generation = Column("generation", "Generation", kind="text")
+    yield Table(
+        "variance_in_strain",
+        "Every component as strain-equivalent SD with its 95 % interval.",
+        _with_words(variance.variance_in_strain, "level"),
+        (
+            generation,
+            Column("_level", "Between", kind="text"),
+            Column("place", "Place", kind="text"),
+            Column("strain_sd", "SD", unit, factor=factor, interval=("low", "high")),
+            Column("share", "Share", kind="percent", missing="withheld"),
+        ),
+    )
+    yield Table(
+        "variance_components",
+        "The components in units of the signal, with intervals and tests.",
+        _with_words(variance.variance_components, "level"),
+        (
+            generation,
+            Column("_level", "Between", kind="text"),
+            Column("term", "Term", kind="text"),
+            Column("estimate", "SD", interval=("low", "high")),
+            Column("unit", "Unit", kind="text"),
+            Column("p", "p", kind="probability", missing="not tested"),
+            Column("test", "Test", kind="text"),
+            Column("label", "The design says", kind="text"),
+        ),
+    )
+    yield from _precision_and_tests(variance, generation, factor, unit)
+    yield Table(
+        "fixed_effects",
+        "The mean line of each generation.",
+        variance.fixed_effects,
+        (
+            generation,
+            Column("term", "Coefficient", kind="text"),
+            Column("estimate", "Estimate", interval=("low", "high")),
+            Column("df", "Degrees of freedom", digits=3),
+        ),
+        shown_rows=60,
+    )
+
+
+def _precision_and_tests(variance: Variance, generation: Column, factor: float, unit: str) -> Iterable[Table]:
+    if len(variance.precision):
+        yield Table(
+            "precision",
+            "Precision of measurement, and variation of the product, apart.",
+            variance.precision,
+            (
+                generation,
+                Column("figure", "Figure", kind="text"),
+                Column("strain_sd", "SD at mid range", unit, factor=factor, interval=("low", "high")),
+            ),
+        )
+    if len(variance.tests):
+        yield Table(
+            "component_tests",
+            "Is a component there at all? Corrected by Holm over the components of a generation.",
+            _with_words(variance.tests, "component"),
+            (
+                generation,
+                Column("_component", "Between", kind="text"),
+                Column("test", "Test", kind="text"),
+                Column("p", "p", kind="probability"),
+                Column("p_adjusted", "p, corrected", kind="probability"),
+            ),
+        )
+    yield Table(
+        "identifiability",
+        "What the design can tell apart, counted before fitting.",
+        _with_words(variance.identifiability, "component"),
+        (
+            generation,
+            Column("_component", "Between", kind="text"),
+            Column("degrees_of_freedom", "Degrees of freedom", kind="integer"),
+            Column("label", "Label", kind="text"),
+            Column("reason", "Why", kind="text"),
+        ),
+    )
+    yield Table(
+        "certificate",
+        "The evidence that each fit ended at its optimum.",
+        variance.certificate,
+        (
+            generation,
+            Column("criterion", "−2 log restricted likelihood", digits=8),
+            Column("difference", "Log-likelihood, ours less statsmodels’", digits=2, missing="not compared"),
+            Column("smallest_cone_eigenvalue", "Smallest eigenvalue", digits=2, missing="none"),
+            Column("evaluations", "Evaluations", kind="integer"),
+            Column("restarts", "Restarts", kind="integer"),
+            Column("singular", "On the boundary", kind="text"),
+        ),
+    )
+
+
+def _with_words(frame: pd.DataFrame, column: str) -> pd.DataFrame:
+    return frame.assign(**{f"_{column}": [level_words(str(v)) for v in frame[column]]})
