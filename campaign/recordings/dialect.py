@@ -1,0 +1,634 @@
+"""What a file's bytes are: encoding, line ends, separator, decimal sign, preamble, header and units row.
+
+Found out file by file from the first lines, and pinned by the description where it says so. Nothing here
+reads a value.
+"""
+
+from __future__ import annotations
+
+import re
+from collections import Counter
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+
+from campaign.notices import Notice
+from campaign.recordings.description import Description
+from campaign.units import SPELLINGS, looks_like_timestamp, nearest_spelling, unit_of_cell
+
+SEPARATORS: tuple[str, ...] = (",", ";", "\t", " ")
+"""Separators that are looked for, in falling order of preference."""
+
+SAMPLE_ROWS = 40
+"""Lines of the table that separator and decimal sign are found out from."""
+
+HEAD_BYTES = 1 << 16
+"""Bytes at the start of a file in which the header must stand, unless the description gives its line."""
+
+_MAGIC: tuple[tuple[bytes, str], ...] = (
+    (b"\x1f\x8b", "a gzip archive"),
+    (b"PK\x03\x04", "a zip archive or a spreadsheet workbook"),
+    (b"BZh", "a bzip2 archive"),
+    (b"\xfd7zXZ\x00", "an xz archive"),
+    (b"7z\xbc\xaf\x27\x1c", "a 7-Zip archive"),
+    (b"\x28\xb5\x2f\xfd", "a Zstandard archive"),
+    (b"\xd0\xcf\x11\xe0", "an old spreadsheet or office file"),
+    (b"%PDF", "a PDF document"),
+    (b"\x89PNG", "a PNG picture"),
+    (b"\xff\xd8\xff", "a JPEG picture"),
+    (b"\x89HDF", "an HDF5 file"),
+    (b"SQLite format 3", "an SQLite database"),
+    (b"PAR1", "a Parquet table"),
+    (b"TDSm", "a TDMS recording"),
+    (b"MATLAB 5.0", "a MATLAB data file"),
+)
+_LOOSE_NUMBER = re.compile(
+    r"[+-]?(?:[0-9]{1,3}(?:[.,][0-9]{3})+(?:[.,][0-9]*)?|[0-9]+(?:[.,][0-9]*)?|[.,][0-9]+)(?:[eE][+-]?[0-9]+)?(?<!,)"
+)
+_CONTROL = bytes(b for b in range(32) if b not in b"\t\n\r\x00\x1a\x0c")
+_COMMENT = "#"
+
+
+class UnclosedQuote(Exception):  # noqa: N818 - a finding about the file, not an error of the program
+    """A quotation mark is not closed on its line, or text follows the closing one; ``column`` from 1."""
+
+    def __init__(self, column: int) -> None:
+        self.column = column
+        super().__init__(f"column {column}")
+
+
+@dataclass(frozen=True)
+class PlainText:
+    """A file's bytes as UTF-8 with line feeds, and the remarks that getting there took.
+
+    Attributes
+    ----------
+    data
+        UTF-8, no byte order mark, lines ended by a line feed.
+    notices
+        Without a file name; one of weight ``"set aside"`` means that the file cannot be read as text.
+    """
+
+    data: bytes
+    notices: tuple[Notice, ...] = ()
+
+    @property
+    def readable(self) -> bool:
+        """Whether there is text to go on with."""
+        return all(notice.weight == "noted" for notice in self.notices)
+
+
+@dataclass(frozen=True)
+class Layout:
+    """Where the table of a file stands and how its lines are cut into fields.
+
+    Attributes
+    ----------
+    separator, decimal
+        One character each.
+    header
+        Names of the columns as they stand; ``None`` where the file has none.
+    header_line
+        Line of the header, from 1; without a header, the first line of the table.
+    units
+        Cells of the units row, or ``None``.
+    fields
+        Fields that a complete row has, the empty one after a trailing separator not counted.
+    trailing_separator
+        Whether every row ends in a separator.
+    first_row_line
+        Line of the first row, from 1.
+    body_start
+        Offset of that line in the text's bytes.
+    preamble
+        ``key: value`` lines before the table, keys in lower case.
+    sample
+        Fields of the first rows as they stand.
+    notices
+        Remarks, without a file name; one of weight ``"set aside"`` ends the reading of the file.
+    """
+
+    separator: str
+    decimal: str
+    header: tuple[str, ...] | None
+    header_line: int
+    units: tuple[str, ...] | None
+    fields: int
+    trailing_separator: bool
+    first_row_line: int
+    body_start: int
+    preamble: dict[str, str]
+    sample: tuple[tuple[str, ...], ...] = ()
+    notices: tuple[Notice, ...] = ()
+
+    @property
+    def readable(self) -> bool:
+        """Whether there is a table to go on with."""
+        return all(notice.weight == "noted" for notice in self.notices)
+
+
+def shown(text: str, longest: int = 60) -> str:
+    """Return text from a file as a notice may show it: control characters escaped, cut to *longest*."""
+    cut = text if len(text) <= longest else text[:longest] + "…"
+    return "".join(c if c.isprintable() else ascii(c)[1:-1] for c in cut)
+
+
+# ---------------------------------------------------------------- bytes → text
+
+
+def plain_text(data: bytes, encoding: str | None = None) -> PlainText:
+    """Return the bytes of a file as UTF-8 with line feeds, with a remark on all that had to be changed.
+
+    Parameters
+    ----------
+    data
+        The file's bytes.
+    encoding
+        Pinned by the description; ``None``: found out (byte order mark, UTF-8, GBK, else CP1252).
+    """
+    if not data:
+        return PlainText(
+            b"", (_set_aside("empty", 1, None, "the file has no bytes", "export the recording again"),)
+        )
+    binary = _binary_kind(data)
+    if binary is not None:
+        remedy = "unpack or export it as text; if it is no recording, leave it out of [recordings] files"
+        return PlainText(b"", (_set_aside("binary", 1, 1, f"the file is {binary}", remedy),))
+    decoded = _decoded(data, encoding)
+    return _with_line_feeds(decoded) if decoded.readable else decoded
+
+
+def _set_aside(code: str, line: int | None, column: int | None, what: str, remedy: str) -> Notice:
+    return Notice(code, "set aside", None, line, column, what, "the file is not used", remedy)
+
+
+def _noted(code: str, line: int | None, column: int | None, what: str, done: str, remedy: str = "") -> Notice:
+    return Notice(code, "noted", None, line, column, what, done, remedy)
+
+
+def _binary_kind(data: bytes) -> str | None:
+    for magic, words in _MAGIC:
+        if data.startswith(magic):
+            return words
+    if data[:2] in (b"\xff\xfe", b"\xfe\xff") or _looks_like_utf16(data):
+        return None
+    head = data[:4096]
+    control = len(head) - len(head.translate(None, _CONTROL))
+    first_line = head.partition(b"\n")[0]
+    if control > max(2, len(head) // 100) or (b"\x00" in first_line and not first_line.strip(b"\x00 \r")):
+        return "binary, not text"
+    return None
+
+
+def _looks_like_utf16(data: bytes) -> bool:
+    """Whether every second byte at the start is NUL: UTF-16 of plain letters without a byte order mark."""
+    head = data[:512]
+    return (
+        len(head) >= 4
+        and min(head[::2].count(0), head[1::2].count(0)) == 0
+        and head.count(0) >= len(head) * 0.4
+    )
+
+
+def _decoded(data: bytes, encoding: str | None) -> PlainText:
+    if encoding is not None:
+        return _decoded_as_pinned(data, encoding)
+    if data.startswith(b"\xef\xbb\xbf"):
+        note = _noted("bom", 1, None, "the file starts with a UTF-8 byte order mark", "the mark is taken off")
+        rest = _decoded(data[3:], None)
+        return PlainText(rest.data, (note, *rest.notices))
+    if data[:2] in (b"\xff\xfe", b"\xfe\xff") or _looks_like_utf16(data):
+        return _decoded_utf16(data)
+    if data.isascii():
+        return PlainText(data)
+    try:
+        data.decode("utf-8")
+    except UnicodeDecodeError as error:
+        return _decoded_otherwise(data, error.start)
+    return PlainText(data)
+
+
+def _decoded_as_pinned(data: bytes, encoding: str) -> PlainText:
+    for mark in (b"\xef\xbb\xbf",):
+        data = data.removeprefix(mark)
+    try:
+        text = data.decode(encoding)
+    except LookupError:
+        what = f"the description names the encoding '{encoding}', which is not known"
+        return PlainText(b"", (_set_aside("encoding", None, None, what, 'such as encoding = "utf-16"'),))
+    except UnicodeDecodeError as error:
+        line = data.count(b"\n", 0, error.start) + 1
+        what = f"the file is not {encoding}, which the description pins"
+        return PlainText(
+            b"", (_set_aside("encoding", line, None, what, "leave encoding out of [recordings]"),)
+        )
+    return PlainText(text.removeprefix("\ufeff").encode())
+
+
+def _decoded_utf16(data: bytes) -> PlainText:
+    marked = data[:2] in (b"\xff\xfe", b"\xfe\xff")
+    codec = "utf-16" if marked else ("utf-16-le" if data[1:2] == b"\x00" else "utf-16-be")
+    try:
+        text = data.decode(codec)
+    except UnicodeDecodeError:
+        text = data.decode(codec, errors="replace")
+    what = "the file is UTF-16" + ("" if marked else " without a byte order mark")
+    return PlainText(text.encode(), (_noted("utf-16", 1, None, what, "decoded"),))
+
+
+def _decoded_otherwise(data: bytes, start: int) -> PlainText:
+    codec, words = ("gbk", "GBK") if _looks_like_gbk(data) else ("cp1252", "Windows-1252")
+    text = data.decode(codec, errors="replace")
+    line = data.count(b"\n", 0, start) + 1
+    column = len(data[data.rfind(b"\n", 0, start) + 1 : start].decode("utf-8", errors="replace")) + 1
+    what = (
+        f"the file is not UTF-8; its first other character is read as '{_character_at(text, line, column)}'"
+    )
+    done = f"decoded as {words}"
+    note = _noted("encoding", line, column, what, done, "if that is wrong, pin encoding in [recordings]")
+    return PlainText(text.encode(), (note,))
+
+
+def _character_at(text: str, line: int, column: int) -> str:
+    wanted = text.split("\n", line)[line - 1]
+    return shown(wanted[column - 1 : column])
+
+
+def _looks_like_gbk(data: bytes) -> bool:
+    """Whether all bytes above 127 pair into GB 2312 characters, most of them of its common part.
+
+    Accented letters of European texts stand alone as a rule, and their pairs fall into the rare second level.
+    """
+    runs = re.findall(rb"[\x80-\xff]+", data[: 1 << 20])
+    if any(len(run) % 2 for run in runs):
+        return False
+    pairs = [run[i : i + 2] for run in runs for i in range(0, len(run), 2)]
+    if not all(0xA1 <= pair[0] <= 0xF7 and pair[1] >= 0xA1 for pair in pairs):
+        return False
+    common = sum(0xB0 <= pair[0] <= 0xD7 or pair[0] <= 0xA9 for pair in pairs)
+    return bool(common * 2 > len(pairs))
+
+
+def _with_line_feeds(text: PlainText) -> PlainText:
+    """Return the text with every line end a line feed, and a remark where the file used another."""
+    data = text.data
+    if b"\r" not in data:
+        return text
+    both, feeds = data.count(b"\r\n"), data.count(b"\n")
+    lone = data.count(b"\r") - both
+    plain = data.replace(b"\r\n", b"\n").replace(b"\r", b"\n")
+    if both == feeds and lone == 0:
+        note = _noted("crlf", None, None, "lines end in carriage return and line feed", "read as line ends")
+    elif feeds == 0:
+        note = _noted("cr", None, None, "lines end in carriage returns", "read as line ends")
+    else:
+        line = _first_changed_line(data)
+        note = _noted(
+            "mixed-eol", line, None, "the line end changes within the file", "every kind ends a line"
+        )
+    return PlainText(plain, (*text.notices, note))
+
+
+def _first_changed_line(data: bytes) -> int:
+    ends = re.finditer(rb"\r\n|\r|\n", data)
+    first = next(ends)[0]
+    return next((number for number, end in enumerate(ends, start=2) if end[0] != first), 1)
+
+
+# ---------------------------------------------------------------- text → layout
+
+
+def split_fields(line: str, separator: str) -> list[str]:
+    """Cut a line into fields; quoted fields may hold the separator, a doubled quotation mark stands for one.
+
+    Raises
+    ------
+    UnclosedQuote
+        When a quotation mark is not closed on the line, or text follows the closing one.
+    """
+    if separator == " ":
+        return line.split()
+    if '"' not in line:
+        return line.split(separator)
+    return list(_quoted_fields(line, separator))
+
+
+def _quoted_fields(line: str, separator: str) -> list[str]:
+    fields: list[str] = []
+    start = 0
+    while True:
+        if line.startswith('"', start):
+            field, end = _quoted_field(line, start, separator, len(fields) + 1)
+        else:
+            found = line.find(separator, start)
+            end = len(line) if found < 0 else found
+            field = line[start:end]
+        fields.append(field)
+        if end >= len(line):
+            return fields
+        start = end + 1
+
+
+def _quoted_field(line: str, start: int, separator: str, column: int) -> tuple[str, int]:
+    at = start + 1
+    while True:
+        close = line.find('"', at)
+        if close < 0:
+            raise UnclosedQuote(column)
+        if not line.startswith('"', close + 1):
+            break
+        at = close + 2
+    end = close + 1
+    if end < len(line) and not line.startswith(separator, end):
+        raise UnclosedQuote(column)
+    return line[start + 1 : close].replace('""', '"'), end
+
+
+def _split_leniently(line: str, separator: str) -> list[str]:
+    try:
+        return split_fields(line, separator)
+    except UnclosedQuote:
+        return line.split(separator)
+
+
+def is_numeric_field(text: str) -> bool:
+    """Return whether a field looks like a number in some dialect, marks of thousands and all, or a timestamp."""
+    stripped = text.strip(" \t")
+    return len(stripped) < 200 and (
+        _LOOSE_NUMBER.fullmatch(stripped) is not None or looks_like_timestamp(stripped)
+    )
+
+
+@dataclass(frozen=True)
+class _Guess:
+    """How the sample lines look when cut by one separator."""
+
+    separator: str
+    rows: list[list[str]]
+    fields: int
+    score: float
+
+
+def find_layout(text: bytes, description: Description, *, by_position: bool) -> Layout:
+    """Find out where the table stands and how it is cut.
+
+    Parameters
+    ----------
+    text
+        UTF-8 with line feeds, from :func:`plain_text`.
+    description
+        Its ``separator``, ``decimal`` and ``header_row`` are kept to where given.
+    by_position
+        Whether the description names columns of this file by position, so that a header may be wanting.
+    """
+    lines = _head_lines(text, description.header_row)
+    table = [i for i, line in enumerate(lines) if line.strip() and not line.lstrip().startswith(_COMMENT)]
+    if description.header_row is not None:
+        table = [i for i in table if i >= description.header_row - 1]
+    guess = _best_guess([lines[i] for i in table[: SAMPLE_ROWS + 20]], description.separator)
+    layout = replace(_arranged(lines, table, guess, description, by_position), sample=_sample(guess))
+    layout = replace(layout, decimal=description.decimal or _decimal_sign(guess, text, layout))
+    start = _offset_of_line(text, layout.first_row_line)
+    return replace(
+        layout, body_start=start, notices=(*layout.notices, *_dialect_notices(layout, description))
+    )
+
+
+def _sample(guess: _Guess) -> tuple[tuple[str, ...], ...]:
+    return tuple(tuple(row) for row in guess.rows if _is_row(row))
+
+
+def _head_lines(text: bytes, header_row: int | None) -> list[str]:
+    if header_row is None:
+        head = text[:HEAD_BYTES]
+        cut = head.rfind(b"\n") + 1 if len(text) > HEAD_BYTES else len(head)
+        return (head[:cut] if cut else head).decode(errors="replace").removesuffix("\n").split("\n")
+    return [line.decode(errors="replace") for line in text.split(b"\n", header_row + SAMPLE_ROWS)[:-1]]
+
+
+def _offset_of_line(text: bytes, line: int) -> int:
+    at = 0
+    for _ in range(line - 1):
+        found = text.find(b"\n", at)
+        if found < 0:
+            return len(text)
+        at = found + 1
+    return at
+
+
+def _best_guess(sample: Sequence[str], pinned: str | None) -> _Guess:
+    """Cut the sample by every separator and return the cut with the most numbers in rows of equal length."""
+    guesses = [_guess(sample, separator) for separator in ((pinned,) if pinned else SEPARATORS)]
+    return max(guesses, key=lambda g: (g.score, g.fields))
+
+
+def _guess(sample: Sequence[str], separator: str) -> _Guess:
+    rows = [_split_leniently(line, separator) for line in sample]
+    numeric = [row for row in rows if _is_row(row)]
+    if not numeric:
+        widest = max((len(row) for row in rows), default=0)
+        return _Guess(separator, rows, widest, -1.0 + 0.001 * widest)
+    fields = Counter(len(row) for row in numeric).most_common(1)[0][0]
+    regular = [row for row in numeric if len(row) == fields]
+    share = sum(_numeric_share(row) for row in regular) / max(1, len(numeric))
+    named = any(len(row) - fields in (-1, 0, 1) and not _is_row(row) for row in rows)
+    return _Guess(separator, rows, fields, share + (0.5 if named else 0.0) + (0.25 if fields > 1 else 0.0))
+
+
+def _is_row(row: Sequence[str]) -> bool:
+    """Whether a cut line looks like a row of values: some number in it, and numbers are not the exception."""
+    filled = [field for field in row if field.strip()]
+    return any(map(is_numeric_field, filled)) and 3 * sum(map(is_numeric_field, filled)) >= len(filled)
+
+
+def _numeric_share(row: Sequence[str]) -> float:
+    filled = [field for field in row if field.strip()]
+    return sum(map(is_numeric_field, filled)) / len(filled)
+
+
+def _decimal_sign(guess: _Guess, text: bytes, layout: Layout) -> str:
+    """Return the decimal sign of most of the sample's numbers; where all are whole, of the rest of the file."""
+    numbers = [f.strip() for row in guess.rows if _is_row(row) for f in row if is_numeric_field(f)]
+    commas = sum(field.count(",") == 1 and "." not in field for field in numbers)
+    points = sum(field.count(".") == 1 and "," not in field for field in numbers)
+    if commas or points:
+        return "," if commas > points else "."
+    body = text[_offset_of_line(text, layout.first_row_line) :]
+    only_commas = re.search(rb"[0-9],[0-9]", body) is not None and re.search(rb"[0-9]\.[0-9]", body) is None
+    return "," if layout.separator != "," and only_commas else "."
+
+
+def _arranged(
+    lines: Sequence[str], table: Sequence[int], guess: _Guess, description: Description, by_position: bool
+) -> Layout:
+    """Find header, units row and first row among the lines of the table."""
+    rows = dict(zip(table, (_split_leniently(lines[i], guess.separator) for i in table[: SAMPLE_ROWS + 20])))
+    first = next((i for i, row in rows.items() if _is_row(row) and len(row) == guess.fields), None)
+    if first is None:
+        first = next((i for i, row in rows.items() if _is_row(row)), None)
+    names = _header_place(rows, first, guess, description.header_row)
+    bare = Layout(guess.separator, ".", None, 1, None, guess.fields, False, 1, 0, {})
+    if names is None:
+        return _without_header(lines, first, rows, bare, by_position)
+    header_at, units_at = names
+    below = units_at if units_at is not None else header_at
+    start = next((i for i in table if i > below), len(lines))
+    layout = replace(
+        bare,
+        header=tuple(rows[header_at]),
+        header_line=header_at + 1,
+        units=tuple(map(unit_of_cell, rows[units_at])) if units_at is not None else None,
+        first_row_line=below + 2,
+    )
+    layout = _with_trailing(layout, [row for i, row in rows.items() if i >= start and _is_row(row)])
+    layout = _with_preamble(layout, lines, header_at)
+    if units_at is None:
+        return layout
+    note = _noted(
+        "units-row", units_at + 1, None, "a row below the header gives the units", "units taken from it"
+    )
+    return replace(layout, notices=(*layout.notices, note))
+
+
+def _header_place(
+    rows: dict[int, list[str]], first: int | None, guess: _Guess, header_row: int | None
+) -> tuple[int, int | None] | None:
+    """Return the indices of header and units row (or ``None``) among the lines before the first row."""
+    above = [i for i in rows if first is None or i < first]
+    if header_row is not None:
+        header = header_row - 1
+        if header not in rows:
+            return None
+        units = next((i for i in above if i > header and _is_units_row(rows[i])), None)
+        return header, units
+    allowed = (guess.fields - 1, guess.fields, guess.fields + 1) if guess.fields > 1 else (1,)
+    candidates = [i for i in above if len(rows[i]) in allowed and not any(map(is_numeric_field, rows[i]))]
+    if not candidates:
+        return None
+    last = candidates[-1]
+    if len(candidates) > 1 and _is_units_row(rows[last]):
+        return candidates[-2], last
+    return last, None
+
+
+def _is_units_row(row: Sequence[str]) -> bool:
+    cells = [unit_of_cell(cell) for cell in row if cell.strip()]
+    known = [cell in SPELLINGS or nearest_spelling(cell) is not None for cell in cells]
+    return bool(known) and sum(known) * 2 > len(known)
+
+
+def _without_header(
+    lines: Sequence[str], first: int | None, rows: dict[int, list[str]], bare: Layout, by_position: bool
+) -> Layout:
+    """Lay out a file whose table has no line of names: in a comment, by position, or not at all."""
+    if first is None:
+        code, what = ("no-header", "the file holds no table, only comments or words")
+        notice = _set_aside(code, max(1, len(lines)), None, what, "export the recording again")
+        return replace(_with_preamble(bare, lines, len(lines)), notices=(notice,))
+    comments = [i for i in range(first) if lines[i].lstrip().startswith(_COMMENT)]
+    named = comments[-1] if comments else None
+    if named is not None:
+        names = _split_leniently(lines[named].lstrip().lstrip(_COMMENT).strip(), bare.separator)
+        if len(names) > 1 and len(names) == bare.fields and not any(map(is_numeric_field, names)):
+            layout = replace(bare, header=tuple(names), header_line=named + 1, first_row_line=first + 1)
+            layout = _with_preamble(layout, lines, named)
+            note = _noted(
+                "header-in-comment",
+                named + 1,
+                None,
+                "the last comment line names the columns",
+                "taken as the header",
+            )
+            return replace(_with_trailing(layout, list(rows.values())), notices=(note, *layout.notices))
+    layout = replace(bare, header_line=first + 1, first_row_line=first + 1)
+    layout = _with_trailing(_with_preamble(layout, lines, first), [r for r in rows.values() if _is_row(r)])
+    if by_position:
+        return layout
+    notice = _set_aside(
+        "no-header",
+        first + 1,
+        None,
+        "the first line of the table holds numbers, no names",
+        "name the columns by position: [[columns]] position = 1, quantity = …",
+    )
+    return replace(layout, notices=(*layout.notices, notice))
+
+
+def _with_trailing(layout: Layout, rows: Sequence[Sequence[str]]) -> Layout:
+    """Settle how many fields a row has, and take the empty field after a trailing separator off."""
+    header = layout.header
+    regular = Counter(len(row) for row in rows).most_common(1)[0][0] if rows else layout.fields
+    ends_empty = bool(rows) and all(not row[-1].strip() for row in rows if len(row) == regular)
+    if header is None:
+        trailing = ends_empty and regular > 1
+        return _trailing_noted(replace(layout, fields=regular - trailing), trailing, layout.first_row_line)
+    unnamed_end = len(header) > 1 and not header[-1].strip()
+    if unnamed_end and (ends_empty or not rows or regular == len(header) - 1):
+        kept = tuple(header[:-1])
+        trailing = bool(rows) and regular == len(header)
+        return _trailing_noted(
+            replace(layout, header=kept, fields=len(kept)), trailing, layout.header_line, True
+        )
+    trailing = ends_empty and regular == len(header) + 1
+    return _trailing_noted(replace(layout, fields=len(header)), trailing, layout.first_row_line)
+
+
+def _trailing_noted(layout: Layout, trailing: bool, line: int, header_too: bool = False) -> Layout:
+    if not trailing and not header_too:
+        return layout
+    what = "the header ends in a separator" if header_too and not trailing else "rows end in a separator"
+    done = "the empty last field is taken off; no column moves"
+    note = _noted("trailing-delimiter", line, layout.fields + 1, what, done)
+    return replace(layout, trailing_separator=trailing, notices=(*layout.notices, note))
+
+
+def _with_preamble(layout: Layout, lines: Sequence[str], end: int) -> Layout:
+    """Read ``key: value`` lines before line index *end*."""
+    preamble: dict[str, str] = {}
+    notices: list[Notice] = []
+    bare = [i for i in range(end) if lines[i].strip() and not lines[i].lstrip().startswith(_COMMENT)]
+    for i in range(end):
+        key, value = _key_and_value(lines[i], layout.separator)
+        if key and preamble.setdefault(key, value) != value:
+            what = f"the preamble gives '{shown(key)}' twice: '{shown(preamble[key])}' and '{shown(value)}'"
+            notices.append(
+                _noted("preamble-conflict", i + 1, None, what, "the first is kept", "correct the preamble")
+            )
+    if bare:
+        what = (
+            f"{len(bare)} lines before the header carry no comment sign"
+            if len(bare) > 1
+            else ("a line before the header carries no comment sign")
+        )
+        note = _noted("preamble", bare[0] + 1, None, f"{what}: '{shown(lines[bare[0]])}'", "kept as preamble")
+        notices.append(replace(note, count=len(bare)))
+    return replace(layout, preamble=preamble, notices=(*layout.notices, *notices))
+
+
+def _key_and_value(line: str, separator: str) -> tuple[str, str]:
+    text = line.strip().lstrip(_COMMENT).strip()
+    marks = [mark for mark in (":", "=", separator) if mark.strip() and mark in text]
+    if not marks:
+        return "", ""
+    mark = min(marks, key=text.index)
+    key, _, value = text.partition(mark)
+    return key.strip().strip('"').casefold(), value.strip().strip(separator).strip().strip('"')
+
+
+_SEPARATOR_WORDS = {",": "comma", ";": "semicolon", "\t": "tab", " ": "blanks"}
+
+
+def _dialect_notices(layout: Layout, description: Description) -> tuple[Notice, ...]:
+    """Remark on a separator or decimal sign that was found out and is not the usual one."""
+    unusual = layout.separator != "," and description.separator is None
+    comma = layout.decimal == "," and description.decimal is None
+    if not layout.readable or not (unusual or comma):
+        return ()
+    line = layout.header_line if unusual else layout.first_row_line
+    parts = (
+        [f"fields are separated by {_SEPARATOR_WORDS.get(layout.separator, layout.separator)}"]
+        if unusual
+        else []
+    )
+    parts += ["the decimal sign is a comma"] if comma else []
+    remedy = "if that is wrong, pin separator and decimal in [recordings]"
+    return (_noted("dialect", line, None, " and ".join(parts), "read so", remedy),)

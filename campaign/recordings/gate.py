@@ -1,0 +1,130 @@
+"""The gate: checks on the bytes of a table that decide which lines a fast reader may have.
+
+A line is *plain* when it has the right number of separators, nothing but the characters of numbers between them,
+no empty field and no field too long for a number. What such a line means is the same for every reader; every
+other line goes the careful road.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from campaign.recordings.dialect import Layout
+from campaign.recordings.line_parser import LONGEST_NUMBER
+
+_NUMERIC = b"0123456789+-eE"
+
+
+@dataclass(frozen=True)
+class Gated:
+    """What the gate let through of one table.
+
+    Attributes
+    ----------
+    plain
+        The plain lines, with comma, point and line feed as separator, decimal sign and line end.
+    plain_lines
+        Indices of these lines within the table, from 0, rising.
+    other_lines
+        Indices of the lines that go the careful road, rising.
+    """
+
+    plain: bytes
+    plain_lines: npt.NDArray[np.int64]
+    other_lines: npt.NDArray[np.int64]
+
+
+def pass_gate(body: bytes, layout: Layout) -> Gated:
+    """Part the lines of a table, all ended by a line feed, into plain ones and others.
+
+    Parameters
+    ----------
+    body
+        The table's lines, from the first row on, each with its line feed.
+    layout
+        Separator, decimal sign and number of fields.
+    """
+    lines = body.count(b"\n")
+    everything = np.arange(lines, dtype=np.int64)
+    none = everything[:0]
+    if not _has_gate(layout) or not lines:
+        return Gated(b"", none, everything)
+    if _is_plain_throughout(body, layout, lines):
+        return Gated(_normalised(body, layout), everything, none)
+    mask, lengths = _plain_mask(body, layout)
+    if 2 * np.count_nonzero(mask) < lines:
+        return Gated(b"", none, everything)
+    kept = np.frombuffer(body, np.uint8)[np.repeat(mask, lengths)].tobytes()
+    return Gated(_normalised(kept, layout), everything[mask], everything[~mask])
+
+
+def _has_gate(layout: Layout) -> bool:
+    return layout.separator in {",", ";", "\t", " "} and layout.separator != layout.decimal
+
+
+def _numeric(layout: Layout) -> bytes:
+    return _NUMERIC + layout.decimal.encode()
+
+
+def _is_plain_throughout(body: bytes, layout: Layout, lines: int) -> bool:
+    """Whether nothing but separators and line feeds is left when the characters of numbers are taken away."""
+    separator = layout.separator.encode()
+    ends = layout.fields - (0 if layout.trailing_separator else 1)
+    left = body.translate(None, _numeric(layout))
+    if left != (separator * ends + b"\n") * lines:
+        return False
+    if layout.trailing_separator and body.count(separator + b"\n") != lines:
+        return False
+    marks = np.flatnonzero(np.isin(np.frombuffer(body, np.uint8), np.frombuffer(separator + b"\n", np.uint8)))
+    return bool(_fields_fit(np.diff(marks, prepend=-1) - 1, layout).all())
+
+
+def _fields_fit(lengths: npt.NDArray[np.int64], layout: Layout) -> npt.NDArray[np.bool_]:
+    """Whether each field's length is that of a number; the empty one after a trailing separator fits too."""
+    fit = (lengths > 0) & (lengths <= LONGEST_NUMBER)
+    if layout.trailing_separator:
+        fit[layout.fields :: layout.fields + 1] = True
+    return fit
+
+
+def _plain_mask(body: bytes, layout: Layout) -> tuple[npt.NDArray[np.bool_], npt.NDArray[np.int64]]:
+    """Return, for every line, whether it is plain, and its length with the line feed."""
+    data = np.frombuffer(body, np.uint8)
+    ends = np.flatnonzero(data == 10)
+    starts = np.concatenate(([0], ends[:-1] + 1))
+    separator = ord(layout.separator)
+    is_separator = data == separator
+    allowed = np.zeros(256, np.bool_)
+    allowed[list(_numeric(layout) + layout.separator.encode() + b"\n")] = True
+    before = np.concatenate(([10], data[:-1]))
+    mark, mark_before = is_separator | (data == 10), (before == separator) | (before == 10)
+    empty = mark & mark_before
+    if layout.trailing_separator:
+        empty &= ~((data == 10) & (before == separator))
+    bad = ~allowed[data] | empty
+    counts = np.add.reduceat(is_separator.astype(np.int64), starts)
+    expected = layout.fields - (0 if layout.trailing_separator else 1)
+    plain = (counts == expected) & ~np.logical_or.reduceat(bad, starts)
+    if layout.trailing_separator:
+        plain &= (ends > starts) & (data[np.maximum(ends - 1, 0)] == separator)
+    plain &= _longest_field(mark, starts) <= LONGEST_NUMBER
+    return plain, ends - starts + 1
+
+
+def _longest_field(mark: npt.NDArray[np.bool_], starts: npt.NDArray[np.int64]) -> npt.NDArray[np.int64]:
+    """Return the length of the longest field of every line."""
+    marks = np.flatnonzero(mark)
+    lengths = np.diff(marks, prepend=-1) - 1
+    first = np.searchsorted(marks, starts)
+    return np.maximum.reduceat(lengths, first)
+
+
+def _normalised(body: bytes, layout: Layout) -> bytes:
+    """Return plain lines with comma and point, without trailing separators."""
+    if layout.separator != "," or layout.decimal != ".":
+        swap = bytes.maketrans((layout.separator + layout.decimal).encode(), b",.")
+        body = body.translate(swap)
+    return body.replace(b",\n", b"\n") if layout.trailing_separator else body
