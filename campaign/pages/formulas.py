@@ -1,0 +1,78 @@
+"""The formulas of the Method page, LaTeX here and MathML in the site (no script sets them)."""
+
+from __future__ import annotations
+
+from functools import cache
+
+from latex2mathml.converter import convert
+from markupsafe import Markup
+
+FORMULAS: dict[str, str] = {
+    "strain": r"\varepsilon=\frac{L-L_0}{L_0},\qquad \lambda=\frac{L}{L_0}=1+\varepsilon",
+    "full_scale_output": r"\text{FSO}=\left|\hat y(\varepsilon_{\text{full}})-\hat y(0)\right|=|b|\,\varepsilon_{\text{full}}",
+    "strain_equivalent": r"\Delta\varepsilon=\frac{\Delta y}{\beta_1(\varepsilon)}",
+    "reading_mean": r"\bar y=\frac{1}{n}\sum_{t=1}^{n}y_t",
+    "standard_error": r"u(\bar y)=\max\left(s\sqrt{\frac{\tau}{n}},\ \frac{\delta}{\sqrt{12}}\right),"
+    r"\qquad \tau=1+2\sum_{k=1}^{K}\left(1-\frac{k}{n}\right)\rho_k,\qquad n_{\text{eff}}=\frac{n}{\tau}",
+    "positive_sequence": r"\rho_{2j}+\rho_{2j+1}>0\quad\text{for every}\ j\le J,\qquad K=2J+1",
+    "run_line": r"y_i=a_r+b_r\,(x_i-\bar x)+e_i,\qquad r=1,\dots,R",
+    "sensor_line": r"\hat\theta=\frac{1}{R}\sum_{r=1}^{R}\hat\theta_r,\qquad "
+    r"\operatorname{Cov}(\hat\theta)=\frac{1}{R(R-1)}\sum_{r=1}^{R}"
+    r"(\hat\theta_r-\hat\theta)(\hat\theta_r-\hat\theta)^{\top},\qquad \hat\theta_r=(a_r,b_r)^{\top}",
+    "gauge_factor": r"\text{GF}=\frac{1}{C_0}\frac{\text{d}C}{\text{d}\varepsilon}=\frac{b}{a}",
+    "gauge_factor_uncertainty": r"\frac{u^2(\text{GF})}{\text{GF}^2}=\frac{u^2(b)}{b^2}+\frac{u^2(a)}{a^2}"
+    r"-\frac{2\,u(a,b)}{a\,b}",
+    "linearity": r"\text{linearity}=100\ \%\cdot\frac{\max_i\left|y_i-\hat y_{\text{line}}(x_i)\right|}{\text{FSO}}",
+    "lack_of_fit": r"F=\frac{\text{MS}(\text{level})}{\text{MS}(\text{level}\times\text{run})}",
+    "quadratic": r"y=a+b\,x+q\,(x-\bar x)^2+e",
+    "repeatability": r"s_r=\sqrt{\frac{\sum_{k}\sum_{r}(y_{kr}-\bar y_{k})^2}{\sum_{k}(R_k-1)}}",
+    "hysteresis": r"h_k=\overline{y^{\text{rising}}_k-y^{\text{falling}}_k},\qquad "
+    r"h_k\pm c\,u(h_k)\quad\text{for all levels}\ k\ \text{together}",
+    "inverse": r"\hat x=\frac{y-a}{b}",
+    "inverse_limits": r"(y-a-b\,x)^2=t^2\left[V_a+2xV_{ab}+x^2V_b+\left(v_0+2xc+x^2v_1\right)"
+    r"+s_{\text{lof}}^2+w^2+\frac{\sigma^2}{m}\right]",
+    "inverse_exists": r"g=\frac{t^2\,(V_b+v_1)}{b^2}<1",
+    "reference_covariance": r"\text{Cov}(x_i,x_j)=(1+\varepsilon_i)(1+\varepsilon_j)\left[u_{\text{scale}}^2+"
+    r"\frac{u_{L_0}^2}{L_0^2}\right]+\frac{u_{\text{zero}}^2}{L_0^2}+\dots,\qquad "
+    r"\frac{\partial\varepsilon}{\partial L_0}=-\frac{1+\varepsilon}{L_0}",
+    "plates": r"C=\epsilon_0\epsilon_r\frac{l\,w}{t},\qquad l\,w\,t=l_0w_0t_0",
+    "plates_uniaxial": r"l=\lambda l_0,\ w=\lambda^{-1/2}w_0,\ t=\lambda^{-1/2}t_0"
+    r"\quad\Rightarrow\quad C=\lambda\,C_0",
+    "plates_width_kept": r"l=\lambda l_0,\ w=w_0,\ t=\lambda^{-1}t_0\quad\Rightarrow\quad C=\lambda^{2}C_0",
+    "plates_biaxial": r"l=\lambda l_0,\ w=\lambda w_0,\ t=\lambda^{-2}t_0\quad\Rightarrow\quad C=\lambda^{4}C_0",
+    "stretch_exponent": r"\frac{C}{C_0}=\lambda^{p},\qquad p=\frac{\text{d}\ln C}{\text{d}\ln\lambda}",
+    "parasitic": r"C=C_p+C_s\lambda^{p_s}\quad\Rightarrow\quad p\approx p_s\,\frac{C_s}{C_s+C_p}"
+    r"\ \text{near}\ \lambda=1",
+    "nested": r"y=(\beta_{0}+m_0+s_0+q_0+r_0)+(\beta_{1}+m_1+s_1+q_1+r_1)\,\varepsilon+d_{k}+e",
+    "nested_covariance": r"(m_0,m_1)^{\top}\sim\text{N}(0,\Sigma_{\text{module}}),\quad "
+    r"(s_0,s_1)^{\top}\sim\text{N}(0,\Sigma_{\text{sensor}}),\quad\dots,\quad e\sim\text{N}(0,\sigma^2)",
+    "restricted_likelihood": r"-2\,\ell_{\text{R}}=\log|V|+\log|X^{\top}V^{-1}X|"
+    r"+(y-X\hat\beta)^{\top}V^{-1}(y-X\hat\beta)+(N-p)\log 2\pi",
+    "profiled": r"\hat\sigma^2=\frac{(y-X\hat\beta)^{\top}V_{\theta}^{-1}(y-X\hat\beta)}{N-p},"
+    r"\qquad V=\sigma^2V_{\theta},\quad \Sigma=\sigma^2\theta\theta^{\top},\quad\theta_{kk}\ge 0",
+    "component_in_strain": r"s_{\varepsilon}(\varepsilon)=\frac{\sqrt{\Sigma_{00}+2\,\Sigma_{01}\,\varepsilon"
+    r"+\Sigma_{11}\,\varepsilon^2}}{|\beta_1|}",
+    "share": r"\text{share}=\frac{s_{\varepsilon,\text{level}}^2}{\sum_{\text{levels}}s_{\varepsilon}^2}",
+    "profile_interval": r"\left\{\sigma:\ D(\sigma)-D(\hat\sigma)\le\chi^2_{1;\,0.95}=3.841\right\},"
+    r"\qquad D(\sigma)=\min_{\text{all others}}\left(-2\,\ell_{\text{R}}\right)",
+    "new_sensor": r"\hat y(x)\pm t_{\nu;\,0.975}\sqrt{u^2(\hat y(x))+\sum_{\text{levels}}z^{\top}\Sigma z"
+    r"+\sigma^2},\qquad z=(1,x)^{\top}",
+    "satterthwaite": r"\nu=\frac{2\,\hat v^2}{\text{Var}(\hat v)}",
+    "effort_predicted": r"s_{\varepsilon}^2=\frac{1}{\beta_1^2}\left(z^{\top}\Sigma_{\text{not calibrated}}\,z"
+    r"+u^2(\text{line})+s_{\text{lof}}^2+w^2+\sigma^2\right)",
+    "conformity": r"p_c=P\left(\eta\le L\right)=F_{\nu}\left(\frac{L-\hat\eta}{u(\hat\eta)}\right)",
+    "autocorrelation": r"r_1=\frac{\sum_{i}e_i\,e_{i+1}}{\sum_{i}e_i^2}",
+    "cook": r"D_i=\frac{e_i^2}{p\,s^2}\,\frac{h_{ii}}{(1-h_{ii})^2}",
+}
+"""Formulas by name; a template writes ``{{ formulas.gauge_factor }}``."""
+
+
+@cache
+def mathml(latex: str) -> Markup:
+    """Return a displayed formula as MathML; it carries no style attribute, which the content policy forbids."""
+    return Markup(convert(latex, display="block"))  # noqa: S704 - the formulas are our own
+
+
+def rendered_formulas() -> dict[str, Markup]:
+    """Return every formula of :data:`FORMULAS` as MathML, by name."""
+    return {name: mathml(latex) for name, latex in FORMULAS.items()}
