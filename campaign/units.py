@@ -1,10 +1,11 @@
-"""Units: accepted spellings, exact factors to canonical units, and plausible ranges; the only place that converts.
+"""Units: accepted spellings, exact factors, plausible ranges; the only place that converts.
 
 Spellings are exact, upper and lower case included, because ``mPa`` and ``MPa`` are nine decades apart. Every
 factor is a ratio of whole numbers, so that a converted value is within two roundings of the exact one.
 
 Sources: The International System of Units (SI Brochure, 9th edition, 2019), table 8 and section 2.3.4;
-NIST SP 811 (2008), appendix B.8, for inch, pound-force, gram-force and pounds per square inch, all exact by definition.
+NIST SP 811 (2008), appendix B.8, for inch, pound-force, gram-force and pounds per square inch,
+all exact by definition.
 """
 
 from __future__ import annotations

@@ -1,7 +1,7 @@
 """Which column of a file is which quantity of whose sensor, in which unit.
 
-Rules of ``[[columns]]`` are tried in file order, those by position before those by header; what no rule claims
-is recognised by the usual headers, and what neither knows is not read, with a notice.
+Rules of ``[[columns]]`` are tried in file order, those by position before those by header. What no rule
+claims is recognised by the usual headers, and what neither knows is not read, with a notice.
 """
 
 from __future__ import annotations
@@ -436,7 +436,8 @@ class _Planner:
         for column in self.columns:
             first = seen.setdefault(column.owner, column)
             if first is not column:
-                what = f"{self.called(column)} and {self.called(first)} (column {first.position}) both give {column.quantity}"
+                both = f"{self.called(column)} and {self.called(first)} (column {first.position})"
+                what = f"{both} both give {column.quantity}"
                 remedy = 'name the right one in [[columns]] and give the other quantity = "ignore"'
                 self.set_aside("duplicate-column", column.position, what, remedy)
 
@@ -454,7 +455,7 @@ class _Planner:
             self.set_aside("missing-column", None, what, "say in [[columns]] which column is which quantity")
 
     def rules_allow(self) -> bool:
-        """Whether nothing worse has been said yet: a column with a bad unit is wanting for that reason alone."""
+        """Whether nothing worse has been said yet: a column without its unit is not also missing."""
         return all(notice.weight == "noted" for notice in self.notices)
 
     def remark(self) -> None:

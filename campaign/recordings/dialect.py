@@ -42,7 +42,8 @@ _MAGIC: tuple[tuple[bytes, str], ...] = (
     (b"MATLAB 5.0", "a MATLAB data file"),
 )
 _LOOSE_NUMBER = re.compile(
-    r"[+-]?(?:[0-9]{1,3}(?:[.,][0-9]{3})+(?:[.,][0-9]*)?|[0-9]+(?:[.,][0-9]*)?|[.,][0-9]+)(?:[eE][+-]?[0-9]+)?(?<!,)"
+    r"[+-]?(?:[0-9]{1,3}(?:[.,][0-9]{3})+(?:[.,][0-9]*)?|[0-9]+(?:[.,][0-9]*)?|[.,][0-9]+)"
+    r"(?:[eE][+-]?[0-9]+)?(?<!,)"
 )
 _CONTROL = bytes(b for b in range(32) if b not in b"\t\n\r\x00\x1a\x0c")
 _COMMENT = "#"
@@ -351,7 +352,7 @@ def _split_leniently(line: str, separator: str) -> list[str]:
 
 
 def is_numeric_field(text: str) -> bool:
-    """Return whether a field looks like a number in some dialect, marks of thousands and all, or a timestamp."""
+    """Return whether a field looks like a number, in any dialect, or a timestamp."""
     stripped = text.strip(" \t")
     return len(stripped) < 200 and (
         _LOOSE_NUMBER.fullmatch(stripped) is not None or looks_like_timestamp(stripped)
@@ -446,7 +447,7 @@ def _numeric_share(row: Sequence[str]) -> float:
 
 
 def _decimal_sign(guess: _Guess, text: bytes, layout: Layout) -> str:
-    """Return the decimal sign of most of the sample's numbers; where all are whole, of the rest of the file."""
+    """Return the decimal sign of most of the sample's numbers; all whole: of the rest of the file."""
     numbers = [f.strip() for row in guess.rows if _is_row(row) for f in row if is_numeric_field(f)]
     commas = sum(field.count(",") == 1 and "." not in field for field in numbers)
     points = sum(field.count(".") == 1 and "," not in field for field in numbers)

@@ -1,7 +1,7 @@
 """The fast road: plain lines of many files, joined and read at once by pandas' C parser.
 
-Reading joined batches of 2 to 4 MB is more than twice as fast as reading file by file. Numbers come out as the
-nearest doubles, to the last bit (pandas from 3.1 on; the tests hold it to that).
+Reading joined batches of 2 to 4 MB is more than twice as fast as reading file by file. Numbers come out as
+the nearest doubles, to the last bit (pandas from 3.1 on; the tests hold it to that).
 """
 
 from __future__ import annotations

@@ -1,8 +1,8 @@
 """The gate: checks on the bytes of a table that decide which lines a fast reader may have.
 
-A line is *plain* when it has the right number of separators, nothing but the characters of numbers between them,
-no empty field and no field too long for a number. What such a line means is the same for every reader; every
-other line goes the careful road.
+A line is *plain* when it has the right number of separators, nothing but the characters of numbers between
+them, no empty field and no field too long for a number. What such a line means is the same for every reader;
+every other line goes the careful road.
 """
 
 from __future__ import annotations

@@ -17,17 +17,24 @@ from campaign.units import UnitError, parse_timestamp
 LONGEST_NUMBER = 64
 """Characters of the longest field that is still taken for a number."""
 
-MISSING_WORDS = frozenset(
-    ["nan", "-nan", "+nan", "null", "none", "na", "n/a", "#n/a", "#na", "nil", "missing", "-", "--", "---", "----", "-----", "?", "*", "***", ".", "1.#qnan", "1.#ind", "-1.#ind", "1.#nan"]
+
+def _words(text: str) -> frozenset[str]:
+    return frozenset(text.split())
+
+
+MISSING_WORDS = _words(
+    "nan -nan +nan null none na n/a #n/a #na nil missing - -- --- ---- ----- ? * *** . 1.#qnan "
+    "1.#ind -1.#ind 1.#nan"
 )
 """Words for 'no value', beside the empty field (lower case)."""
 
-OVERRANGE_WORDS = frozenset(
-    ["over", "+over", "-over", "overload", "overflow", "overrange", "over-range", "ovld", "ovl", "ovf", "ovrng", "ofl", "ol", "+ol", "-ol", "o.l", "oor", "under", "-under", "underflow", "underrange", "sat", "saturated"]
+OVERRANGE_WORDS = _words(
+    "over +over -over overload overflow overrange over-range ovld ovl ovf ovrng ofl ol +ol -ol "
+    "o.l oor under -under underflow underrange sat saturated"
 )
 """Instruments' words for a value beyond the range (lower case)."""
 
-INFINITE_WORDS = frozenset(["inf", "+inf", "-inf", "infinity", "+infinity", "-infinity", "1.#inf", "-1.#inf", "∞", "+∞", "-∞"])
+INFINITE_WORDS = _words("inf +inf -inf infinity +infinity -infinity 1.#inf -1.#inf ∞ +∞ -∞")
 """Words for infinity (lower case)."""
 
 DIRECTION_WORDS: dict[str, float] = {
@@ -84,7 +91,7 @@ class ParsedLines:
     line_numbers
         Line of every row.
     rows
-        One list a row, one float a column that is read as a number (NaN where missing), in the order of the plan.
+        One list a row, one float a column read as a number (NaN where missing), in the order of the plan.
     texts
         One list a row, one text a column that is read as text, in the order of the plan.
     remarks
@@ -124,8 +131,8 @@ def parse_lines(
     Returns
     -------
     ParsedLines
-        Every line is a row or has a remark that says why not. After a quotation mark that is not closed nothing is
-        read any more.
+        Every line is a row or has a remark that says why not. After a quotation mark that is not closed
+        nothing is read any more.
     """
     reader = _LineReader(layout, columns, ending)
     footer = _footer_start(lines, layout, columns, ending.last_line)
@@ -267,10 +274,10 @@ class _LineReader:
         lengths = [_digits(field, mark) for field in above if field is not None and is_numeric_field(field)]
         if not lengths:
             return True
-        longest = tuple(map(max, zip(*lengths)))
+        longest = [max(length[part] for length in lengths) for part in range(3)]
         mine = _digits(last, mark)
         parts = slice(1, 3) if longest[1] or longest[2] else slice(0, 1)
-        return is_numeric_field(last) and all(m >= n for m, n in zip(mine[parts], longest[parts]))
+        return is_numeric_field(last) and all(m >= n for m, n in zip(list(mine)[parts], longest[parts]))
 
     def last_field(self, text: str) -> str | None:
         try:

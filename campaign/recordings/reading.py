@@ -1,7 +1,7 @@
 """Bytes in, values out: recordings read in batches, every line and field accounted for.
 
-Nothing here opens a file, writes one or keeps anything: :func:`read_recordings` can be called in any order, in any
-process, and again.
+Nothing here opens a file, writes one or keeps anything: :func:`read_recordings` can be called in any order,
+in any process, and again.
 """
 
 from __future__ import annotations
@@ -123,7 +123,7 @@ def _prepared(item: RecordingBytes, description: Description, careful: bool) -> 
         return _outcome(item, sha256, notices)
     body, ending = _body(text.data, layout)
     if not body.strip():
-        empty = Remark("no-rows", layout.header_line, None, "= below the header")
+        empty = Remark("no-rows", layout.header_line, None, words=" below the header")
         return _outcome(item, sha256, (*notices, *gather_remarks([empty])))
     plan = plan_columns(layout, description.columns, item.file)
     notices = (*notices, *plan.notices)
@@ -178,7 +178,7 @@ def _gated(body: bytes, layout: Layout, plan: TablePlan, careful: bool) -> Gated
 
 @dataclass(frozen=True)
 class _Rows:
-    """Rows of one file in file order, in the units of the file, columns as planned (identity columns left out)."""
+    """Rows of one file in file order, in the units of the file; identity columns left out."""
 
     values: FloatArray
     lines: LineNumbers
@@ -212,7 +212,7 @@ def _finished(table: _Table, plain: FloatArray | None) -> ReadOutcome:
 
 
 def _joined(table: _Table, plain: FloatArray | None) -> _Rows:
-    """Return the rows of both roads in file order; lines that the fast reader finds odd go the careful road, too."""
+    """Return the rows of both roads in file order; lines that the fast reader finds odd are read again."""
     columns = [column for column in table.plan.columns if column.content != "identity"]
     places = [column.position - 1 for column in columns]
     fast_lines = table.gated.plain_lines
@@ -246,7 +246,8 @@ def _parsed(table: _Table, indices: LineNumbers) -> ParsedLines:
 
 def _series(columns: Sequence[ColumnPlan], rows: _Rows) -> tuple[list[FloatArray], list[Remark]]:
     """Return every column in its canonical unit, with remarks on what the values give away."""
-    series, remarks = [], []
+    series: list[FloatArray] = []
+    remarks: list[Remark] = []
     for index, column in enumerate(columns):
         values, found = without_sentinels(column, rows.values[:, index], rows.lines)
         series.append(np.ascontiguousarray(values))
@@ -271,7 +272,7 @@ def _constants(columns: Sequence[ColumnPlan], rows: _Rows) -> tuple[dict[str, st
             constants[column.quantity] = values[0]
         elif values:
             remarks.append(
-                Remark("mixed-identity", int(rows.lines[0]), column.position, "=" + ", ".join(values[:4]))
+                Remark("mixed-identity", int(rows.lines[0]), column.position, ", ".join(values[:4]))
             )
     return constants, remarks
 

@@ -1,4 +1,4 @@
-"""Occurrences met while reading a file, and the notices they are gathered into: one a code, file and column."""
+"""Occurrences met while reading a file, and the notices they are gathered into."""
 
 from __future__ import annotations
 
@@ -20,7 +20,9 @@ class Remark:
     line, column
         From 1; ``None`` where no place is meant.
     text
-        What stands there, as it may be shown, or further words for the notice.
+        What stands there in the file.
+    words
+        What to say instead of showing the text.
     count
         How many occurrences it already stands for.
     """
@@ -30,6 +32,7 @@ class Remark:
     column: int | None = None
     text: str = ""
     count: int = 1
+    words: str = ""
 
 
 @dataclass(frozen=True)
@@ -50,10 +53,21 @@ _DROPPED = "dropped, counted"
 _MISSING = "taken as missing, counted"
 
 _WORDINGS: dict[str, _Wording] = {
-    "nul": _Wording("noted", "a line holds NUL bytes", "{n} lines hold NUL bytes", _DROPPED, "see whether the disk was full"),
-    "blank-line": _Wording("noted", "a line without values", "{n} lines without values", "passed over", shows=0),
+    "nul": _Wording(
+        "noted",
+        "a line holds NUL bytes",
+        "{n} lines hold NUL bytes",
+        _DROPPED,
+        "see whether the disk was full",
+    ),
+    "blank-line": _Wording(
+        "noted", "a line without values", "{n} lines without values", "passed over", shows=0
+    ),
     "comment-line": _Wording(
-        "noted", "a comment between the rows: {texts}", "{n} comments between the rows: {texts}", "passed over"
+        "noted",
+        "a comment between the rows: {texts}",
+        "{n} comments between the rows: {texts}",
+        "passed over",
     ),
     "repeated-header": _Wording(
         "noted",
@@ -63,8 +77,11 @@ _WORDINGS: dict[str, _Wording] = {
         shows=0,
     ),
     "footer": _Wording(
-        "noted", "a line of words after the last row: {texts}", "{n} lines of words after the last row: {texts}",
-        "passed over", shows=10,
+        "noted",
+        "a line of words after the last row: {texts}",
+        "{n} lines of words after the last row: {texts}",
+        "passed over",
+        shows=10,
     ),
     "ragged": _Wording(
         "noted",
@@ -75,7 +92,10 @@ _WORDINGS: dict[str, _Wording] = {
         shows=1,
     ),
     "truncated": _Wording(
-        "noted", "the last line is cut short: {texts}", "{n} lines are cut short: {texts}", _DROPPED,
+        "noted",
+        "the last line is cut short: {texts}",
+        "{n} lines are cut short: {texts}",
+        _DROPPED,
         "export the recording again",
     ),
     "no-final-newline": _Wording(
@@ -90,8 +110,13 @@ _WORDINGS: dict[str, _Wording] = {
         shows=0,
     ),
     "field-length": _Wording(
-        "set aside", "a field is far too long for a number: {texts}", "{n} fields far too long for numbers: {texts}",
-        _SET_ASIDE, "export the recording again", True, 1,
+        "set aside",
+        "a field is far too long for a number: {texts}",
+        "{n} fields far too long for numbers: {texts}",
+        _SET_ASIDE,
+        "export the recording again",
+        True,
+        1,
     ),
     "number": _Wording(
         "set aside",
@@ -114,8 +139,12 @@ _WORDINGS: dict[str, _Wording] = {
         True,
     ),
     "non-finite": _Wording(
-        "noted", "infinity is not a measurement: {texts}", "{n} infinities are not measurements: {texts}", _MISSING,
-        "", True,
+        "noted",
+        "infinity is not a measurement: {texts}",
+        "{n} infinities are not measurements: {texts}",
+        _MISSING,
+        "",
+        True,
     ),
     "sentinel": _Wording(
         "noted",
@@ -152,8 +181,13 @@ _WORDINGS: dict[str, _Wording] = {
         0,
     ),
     "duplicate-row": _Wording(
-        "noted", "a row repeats the one before in every value", "{n} rows repeat the one before in every value", "kept",
-        "", False, 0,
+        "noted",
+        "a row repeats the one before in every value",
+        "{n} rows repeat the one before in every value",
+        "kept",
+        "",
+        False,
+        0,
     ),
     "stuck": _Wording(
         "noted",
@@ -182,8 +216,15 @@ _WORDINGS: dict[str, _Wording] = {
         True,
         1,
     ),
-    "no-rows": _Wording("set aside", "no row can be read{texts}", "", _SET_ASIDE, "record or export it again", shows=1),
-}  # fmt: skip
+    "no-rows": _Wording(
+        "set aside",
+        "no row can be read{texts}",
+        "",
+        _SET_ASIDE,
+        "record or export it again",
+        shows=1,
+    ),
+}
 
 
 def gather_remarks(remarks: Iterable[Remark]) -> tuple[Notice, ...]:
@@ -205,10 +246,8 @@ def _place(remark: Remark) -> tuple[int, int]:
 def _notice(group: list[Remark]) -> Notice:
     first, wording = group[0], _WORDINGS[group[0].code]
     count = sum(remark.count for remark in group)
-    texts = list(dict.fromkeys(remark.text for remark in group))
-    listed = ", ".join(map(shown_quoted, texts[: wording.shows])) + (
-        ", …" if len(texts) > wording.shows > 1 else ""
-    )
+    texts = list(dict.fromkeys(remark.words or shown_quoted(remark.text) for remark in group))
+    listed = ", ".join(texts[: wording.shows]) + (", …" if len(texts) > wording.shows > 1 else "")
     pattern = wording.one if count == 1 or not wording.many else wording.many
     what = pattern.format(n=count, texts=listed)
     return Notice(
@@ -217,7 +256,5 @@ def _notice(group: list[Remark]) -> Notice:
 
 
 def shown_quoted(text: str) -> str:
-    """Return text from a file in quotation marks; an empty field in words; words of our own (``=…``) as they are."""
-    if text.startswith("="):
-        return text[1:]
+    """Return text from a file in quotation marks, an empty field in words."""
     return f"'{shown(text)}'" if text.strip() else "an empty field"

@@ -1,4 +1,4 @@
-"""What the values of one file give away: sentinels, clocks that turn back, rows twice, a signal that is stuck."""
+"""What the values of one file give away: sentinels, clocks that turn back, rows twice, a stuck signal."""
 
 from __future__ import annotations
 
@@ -17,10 +17,12 @@ SUSPECT_VALUES = np.array(
     sorted(
         sign * value
         for sign in (-1.0, 1.0)
-        for value in (99.0, 999.0, 9999.0, 99999.0, 999999.0, 9999999.0, 999.9, 9999.9, 32767.0, 32768.0, 65535.0,
-                      2147483647.0, 2147483648.0, 4294967295.0)
+        for value in (
+            *(99.0, 999.0, 9999.0, 99999.0, 999999.0, 9999999.0, 999.9, 9999.9),
+            *(32767.0, 32768.0, 65535.0, 2147483647.0, 2147483648.0, 4294967295.0),
+        )
     )
-)  # fmt: skip
+)
 """Values that instruments and loggers use for 'no value'."""
 
 ISOLATION = 5.0
@@ -81,9 +83,9 @@ def _declared_missing(column: ColumnPlan, raw: FloatArray) -> npt.NDArray[np.boo
 
 
 def _at_first(
-    where: npt.NDArray[np.bool_], lines: LineNumbers, code: str, column: int | None, text: str = ""
+    where: npt.NDArray[np.bool_], lines: LineNumbers, code: str, column: int | None, words: str = ""
 ) -> Remark:
-    return Remark(code, int(lines[np.argmax(where)]), column, text, int(np.count_nonzero(where)))
+    return Remark(code, int(lines[np.argmax(where)]), column, "", int(np.count_nonzero(where)), words)
 
 
 def _suspects(column: ColumnPlan, raw: FloatArray, lines: LineNumbers) -> list[Remark]:
@@ -111,13 +113,13 @@ def check_clock(column: ColumnPlan, time: FloatArray, raw: FloatArray, lines: Li
     back = steps < 0
     if back.any():
         first = int(np.argmax(back))
-        text = f"={time[kept][first]:.10g} s, then {time[kept][first + 1]:.10g} s"
-        remarks.append(_at_first(back, at, "time-order", column.position, text))
+        text = f"{time[kept][first]:.10g} s, then {time[kept][first + 1]:.10g} s"
+        remarks.append(_at_first(back, at, "time-order", column.position, words=text))
     low, high = EPOCH_SECONDS
     shorter_than_seconds = column.unit is not None and column.unit.scale.factor < 1
     if shorter_than_seconds and kept.any() and low < np.nanmin(raw) and np.nanmax(raw) < high:
-        text = f"={column.unit.spelling}" if column.unit is not None else ""
-        remarks.append(Remark("clock-unit", int(lines[0]), column.position, text))
+        text = f"{column.unit.spelling}" if column.unit is not None else ""
+        remarks.append(Remark("clock-unit", int(lines[0]), column.position, words=text))
     return remarks
 
 
@@ -170,8 +172,8 @@ def check_stuck(
             continue
         covered = np.fmax.reduce(meanwhile) - np.fmin.reduce(meanwhile)
         if covered >= STUCK_SHARE * whole:
-            text = f"={stop - start} rows at {signal[start]:.10g}"
-            remarks.append(Remark("stuck", int(lines[start]), column.position, text, stop - start))
+            text = f"{stop - start} rows at {signal[start]:.10g}"
+            remarks.append(Remark("stuck", int(lines[start]), column.position, "", stop - start, text))
     return remarks
 
 
