@@ -1,0 +1,20 @@
+"""Nested mixed models: readings in trials in sensors in modules, each level with its own random line.
+
+    y = X β + Σ Z u + e,   u ~ N(0, Σ) for every unit of the effect's level,   e ~ N(0, σ²)
+
+by profiled restricted maximum likelihood, for any number of nested levels, any number of random columns at a
+level, and effects with independent copies (runs that all sensors of a module share; a sensor's deviation at
+each nominal level). This module is the door; the steps have a module each:
+
+    nested_design         the model as stated, its check, well-scaled columns
+    nested_compression    rows become cross-products per innermost unit
+    nested_criterion      the criterion by elimination from inside outwards, and its gradient backwards
+    nested_start          analysis-of-variance moments
+    nested_optimiser      L-BFGS-B, Newton polish, certificate on the cone
+    nested_fit            the fit as a value
+"""
+
+from campaign.methods.nested_design import NestedModel, RandomTerm
+from campaign.methods.nested_fit import NestedModelFit, fit_nested_model
+
+__all__ = ["NestedModel", "NestedModelFit", "RandomTerm", "fit_nested_model"]
