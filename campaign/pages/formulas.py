@@ -9,7 +9,8 @@ from markupsafe import Markup
 
 FORMULAS: dict[str, str] = {
     "strain": r"\varepsilon=\frac{L-L_0}{L_0},\qquad \lambda=\frac{L}{L_0}=1+\varepsilon",
-    "full_scale_output": r"\text{FSO}=\left|\hat y(\varepsilon_{\text{full}})-\hat y(0)\right|=|b|\,\varepsilon_{\text{full}}",
+    "full_scale_output": r"\text{FSO}=\left|\hat y(\varepsilon_{\text{full}})-\hat y(0)\right|"
+    r"=|b|\,\varepsilon_{\text{full}}",
     "strain_equivalent": r"\Delta\varepsilon=\frac{\Delta y}{\beta_1(\varepsilon)}",
     "reading_mean": r"\bar y=\frac{1}{n}\sum_{t=1}^{n}y_t",
     "standard_error": r"u(\bar y)=\max\left(s\sqrt{\frac{\tau}{n}},\ \frac{\delta}{\sqrt{12}}\right),"
@@ -22,7 +23,8 @@ FORMULAS: dict[str, str] = {
     "gauge_factor": r"\text{GF}=\frac{1}{C_0}\frac{\text{d}C}{\text{d}\varepsilon}=\frac{b}{a}",
     "gauge_factor_uncertainty": r"\frac{u^2(\text{GF})}{\text{GF}^2}=\frac{u^2(b)}{b^2}+\frac{u^2(a)}{a^2}"
     r"-\frac{2\,u(a,b)}{a\,b}",
-    "linearity": r"\text{linearity}=100\ \%\cdot\frac{\max_i\left|y_i-\hat y_{\text{line}}(x_i)\right|}{\text{FSO}}",
+    "linearity": r"\text{linearity}=100\ \%\cdot"
+    r"\frac{\max_i\left|y_i-\hat y_{\text{line}}(x_i)\right|}{\text{FSO}}",
     "lack_of_fit": r"F=\frac{\text{MS}(\text{level})}{\text{MS}(\text{level}\times\text{run})}",
     "quadratic": r"y=a+b\,x+q\,(x-\bar x)^2+e",
     "repeatability": r"s_r=\sqrt{\frac{\sum_{k}\sum_{r}(y_{kr}-\bar y_{k})^2}{\sum_{k}(R_k-1)}}",
@@ -39,7 +41,8 @@ FORMULAS: dict[str, str] = {
     "plates_uniaxial": r"l=\lambda l_0,\ w=\lambda^{-1/2}w_0,\ t=\lambda^{-1/2}t_0"
     r"\quad\Rightarrow\quad C=\lambda\,C_0",
     "plates_width_kept": r"l=\lambda l_0,\ w=w_0,\ t=\lambda^{-1}t_0\quad\Rightarrow\quad C=\lambda^{2}C_0",
-    "plates_biaxial": r"l=\lambda l_0,\ w=\lambda w_0,\ t=\lambda^{-2}t_0\quad\Rightarrow\quad C=\lambda^{4}C_0",
+    "plates_biaxial": r"l=\lambda l_0,\ w=\lambda w_0,\ t=\lambda^{-2}t_0"
+    r"\quad\Rightarrow\quad C=\lambda^{4}C_0",
     "stretch_exponent": r"\frac{C}{C_0}=\lambda^{p},\qquad p=\frac{\text{d}\ln C}{\text{d}\ln\lambda}",
     "parasitic": r"C=C_p+C_s\lambda^{p_s}\quad\Rightarrow\quad p\approx p_s\,\frac{C_s}{C_s+C_p}"
     r"\ \text{near}\ \lambda=1",
@@ -58,7 +61,8 @@ FORMULAS: dict[str, str] = {
     "new_sensor": r"\hat y(x)\pm t_{\nu;\,0.975}\sqrt{u^2(\hat y(x))+\sum_{\text{levels}}z^{\top}\Sigma z"
     r"+\sigma^2},\qquad z=(1,x)^{\top}",
     "satterthwaite": r"\nu=\frac{2\,\hat v^2}{\text{Var}(\hat v)}",
-    "effort_predicted": r"s_{\varepsilon}^2=\frac{1}{\beta_1^2}\left(z^{\top}\Sigma_{\text{not calibrated}}\,z"
+    "effort_predicted": r"s_{\varepsilon}^2=\frac{1}{\beta_1^2}"
+    r"\left(z^{\top}\Sigma_{\text{not calibrated}}\,z"
     r"+u^2(\text{line})+s_{\text{lof}}^2+w^2+\sigma^2\right)",
     "conformity": r"p_c=P\left(\eta\le L\right)=F_{\nu}\left(\frac{L-\hat\eta}{u(\hat\eta)}\right)",
     "autocorrelation": r"r_1=\frac{\sum_{i}e_i\,e_{i+1}}{\sum_{i}e_i^2}",
@@ -69,8 +73,8 @@ FORMULAS: dict[str, str] = {
 
 @cache
 def mathml(latex: str) -> Markup:
-    """Return a displayed formula as MathML; it carries no style attribute, which the content policy forbids."""
-    return Markup(convert(latex, display="block"))  # noqa: S704 - the formulas are our own
+    """Return a displayed formula as MathML, without the style attributes that the content policy forbids."""
+    return Markup(convert(latex, display="block"))
 
 
 def rendered_formulas() -> dict[str, Markup]:

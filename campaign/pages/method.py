@@ -55,24 +55,27 @@ def versions() -> Mapping[str, str]:
 
 
 def measured_ranges(scope: Scope) -> dict[str, str]:
-    """Return what was measured as rounded words: range, temperature, runs, mountings; empty where not recorded."""
+    """Return range, temperature, runs and mountings as rounded words, empty where not recorded."""
     shown = scope.reference
     factor = shown.shown_factor
     x = scope.x
     return {
         "range": numbers.span(x.low * factor, x.high * factor, shown.shown_unit) if x is not None else "",
-        "temperature": _span(scope.temperature_c, "°C"),
-        "runs": _span(scope.runs),
-        "mountings": _span(scope.mountings),
+        "temperature": _temperatures(scope.temperature_c),
+        "runs": _counts(scope.runs),
+        "mountings": _counts(scope.mountings),
     }
 
 
-def _span(span: Span | None, unit: str = "") -> str:
+def _temperatures(span: Span | None) -> str:
+    return "" if span is None else numbers.span(span.low, span.high, "°C")
+
+
+def _counts(span: Span | None) -> str:
     if span is None:
         return ""
-    if span.low == span.high:
-        return numbers.significant(span.low, 3, unit)
-    return numbers.span(span.low, span.high, unit)
+    ends = (numbers.whole(span.low), numbers.whole(span.high))
+    return ends[0] if ends[0] == ends[1] else "–".join(ends)
 
 
 def coverage_table(file: Path) -> Table | None:

@@ -1,0 +1,123 @@
+"""The Method page: its formulas render, its addresses are there, and links from other pages find them."""
+
+from __future__ import annotations
+
+import re
+from pathlib import Path
+
+import pytest
+
+from campaign.analyses.scope import Scope, Span
+from campaign.pages.formulas import FORMULAS, rendered_formulas
+from campaign.pages.method import coverage_table, measured_ranges, versions
+from campaign.pages.page import Page, SiteFrame
+from campaign.pages.render import render_site, templates_folder
+from campaign.recordings.recording import STRAIN
+
+TEMPLATES = templates_folder()
+PACKAGE = Path(__file__).parents[2] / "campaign"
+
+
+def _scope(**changes: object) -> Scope:
+    values: dict[str, object] = {
+        "title": "Invented",
+        "simulated": True,
+        "stands": (),
+        "reference": STRAIN,
+        "x": Span(0.0, 0.4),
+        "temperature_c": Span(21.0, 24.0),
+        "humidity_percent": None,
+        "rest_length_mm": None,
+        "generations": 2,
+        "modules": 12,
+        "sensors": 71,
+        "batches": 4,
+        "mountings": Span(2.0, 2.0),
+        "runs": Span(5.0, 6.0),
+        "first_day": "2025-02-03",
+        "last_day": "2025-02-26",
+        "set_aside": (),
+        "failed_before_testing": (),
+        "trials_set_aside": 0,
+        "not_analysed": (),
+        "not_measured": (),
+    }
+    return Scope(**(values | changes))  # type: ignore[arg-type]
+
+
+def _html(scope: Scope, stated: bool = True) -> str:
+    page = Page(
+        slug="method",
+        number=13,
+        title="Method",
+        template="method.html",
+        context={
+            "formulas": rendered_formulas(),
+            "versions": versions(),
+            "scope": scope,
+            "reference": scope.reference,
+            "reference_stated": stated,
+            **measured_ranges(scope),
+        },
+    )
+    return render_site(SiteFrame("Invented", ()), [page])["method.html"].decode()
+
+
+@pytest.fixture(scope="module")
+def html() -> str:
+    return _html(_scope())
+
+
+def test_every_formula_is_shown_once_or_more_and_obeys_the_content_policy(html: str) -> None:
+    used = set(re.findall(r"formulas\.(\w+)", "".join(p.read_text() for p in TEMPLATES.rglob("*.html"))))
+    assert used == set(FORMULAS)
+    assert html.count("<math") >= len(FORMULAS)
+    assert "style=" not in html
+    assert "\\" not in "".join(rendered_formulas().values())
+
+
+def test_every_definition_has_an_address_of_its_own_and_a_source(html: str) -> None:
+    ids = re.findall(r'\bid="([^"]+)"', html)
+    assert len(ids) == len(set(ids))
+    definitions = re.findall(r'<section class="definition" id="([^"]+)">(.*?)</section>', html, re.DOTALL)
+    assert len(definitions) > 30
+    without = [name for name, words in definitions if "Source:" not in words]
+    assert without == ["coverage"]
+
+
+def test_links_to_definitions_find_them(html: str) -> None:
+    texts = [p.read_text() for p in (*TEMPLATES.rglob("*.html"), *PACKAGE.rglob("*.py"))]
+    wanted = {anchor for text in texts for anchor in re.findall(r"method\.html#([\w-]+)", text)}
+    assert sorted(wanted - set(re.findall(r'\bid="([^"]+)"', html))) == []
+
+
+def test_text_for_a_paper_carries_the_numbers_of_the_campaign(html: str) -> None:
+    words = re.sub(r"\s+", " ", re.sub(r"<[^>]+>", "", html))
+    assert "71 sensors of 12 modules from 4 batches of 2 generations" in words
+    assert "0–40 % strain" in words
+    assert "5–6 runs a sensor in 2 mountings a module" in words
+    assert "between 2025-02-03 and 2025-02-26" in words
+    assert "carried as covariances" in words
+    assert "invented" in words
+
+
+def test_text_for_a_paper_says_nothing_that_was_not_recorded() -> None:
+    bare = _scope(
+        temperature_c=None, mountings=None, batches=0, generations=1, first_day="", x=None, runs=None
+    )
+    words = re.sub(r"\s+", " ", re.sub(r"<[^>]+>", "", _html(bare, stated=False)))
+    paper = words[words.index("Measurements.") : words.index("Software.")]
+    assert "71 sensors of 12 modules were stretched in steps on a stand." in paper
+    assert "taken as exact" in paper
+    for absent in ("batch", "session", "None", "nan", "°C", "between 2"):
+        assert absent not in paper
+
+
+def test_coverage_table_shows_what_its_file_says(tmp_path: Path) -> None:
+    file = tmp_path / "coverage.csv"
+    file.write_text("figure,campaigns,coverage\nmodule SD,500,0.952\n")
+    table = coverage_table(file)
+    assert table is not None
+    assert table.frame.to_numpy().tolist() == [["module SD", 500, 0.952]]
+    assert [column.kind for column in table.columns] == ["text", "integer", "number"]
+    assert coverage_table(tmp_path / "absent.csv") is None
