@@ -1,0 +1,435 @@
+"""One page a module: its sensors' lines and figures, its effects, and the trials that sensors share."""
+
+from __future__ import annotations
+
+from collections.abc import Hashable
+from dataclasses import dataclass, replace
+from typing import Any
+
+import pandas as pd
+
+from campaign.analyses.results import CampaignResults
+from campaign.analyses.sensor_figures import principal_lines
+from campaign.pages import numbers, palette, slugs
+from campaign.pages.calibration import x_title
+from campaign.pages.figures import (
+    Figure,
+    Layout,
+    Trace,
+    axis,
+    intervals,
+    label,
+    layout,
+    level_line,
+    line,
+    points,
+)
+from campaign.pages.page import Page
+from campaign.pages.sensor import FIGURE_ORDER, sensor_keys
+from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
+from campaign.pages.tables import Column, Table
+from campaign.recordings.recording import ReferenceQuantity
+
+_MOST_TRIAL_PLOTS = 16
+
+
+@dataclass(frozen=True)
+class SharedTrial:
+    """A trial that carried several sensors of the module, as a section of its page."""
+
+    trial: str
+    anchor: str
+    kind: str
+    started: str
+    session: str
+    repetition: str
+    fate: str
+    sensors: tuple[str, ...]
+    figure: str
+
+
+def module_pages(results: CampaignResults) -> list[Page]:
+    """Return the page of every module that a trial names, neighbours linked in order."""
+    keys = sorted({(generation, module) for generation, module, _ in sensor_keys(results)})
+    links = [(module, slugs.module_href(module)) for _, module in keys]
+    return [
+        replace(
+            _module_page(results, *key),
+            previous=links[i - 1] if i else None,
+            following=links[i + 1] if i + 1 < len(links) else None,
+        )
+        for i, key in enumerate(keys)
+    ]
+
+
+def _module_page(results: CampaignResults, generation: str, module: str) -> Page:
+    sensors = [sensor for _, m, sensor in sensor_keys(results) if m == module]
+    lines = _lines_of(results, module)
+    shared, plots = shared_trials(results, module, lines)
+    figures: list[Figure | None] = []
+    if results.calibration is not None and len(lines):
+        reference = results.calibration.reference
+        where = sensor_axis(lines)
+        figures = [
+            module_lines_figure(results, lines, reference),
+            module_merits_figure(results, module),
+            module_effects_figure(results, module, where),
+        ]
+    return Page(
+        slug=slugs.module_slug(module),
+        number=None,
+        title=module,
+        template="module.html",
+        context={
+            "generation": generation,
+            "module": module,
+            "sensors": [
+                (sensor, slugs.sensor_href(module, sensor), _state(results, module, sensor))
+                for sensor in sensors
+            ],
+            "register": _register_of(results, module),
+            "batch": _batch_of(results, module),
+            "mountings": _mountings_of(results, module),
+            "shared": shared,
+            "trials": _trials_of(results, module),
+            "reference": results.readings.reference,
+        },
+        figures=(*(figure for figure in figures if figure is not None), *plots),
+        tables=tuple(_tables(results, module, lines)),
+        description=f"Lines, figures of merit, effects and trials of module {module}.",
+    )
+
+
+def _in_module(frame: pd.DataFrame, module: str) -> pd.DataFrame:
+    return frame[frame["module"].astype(str) == module]
+
+
+def _lines_of(results: CampaignResults, module: str) -> pd.DataFrame:
+    if results.calibration is None:
+        return pd.DataFrame()
+    return principal_lines(_in_module(results.calibration.sensor_lines, module))
+
+
+def _state(results: CampaignResults, module: str, sensor: str) -> str:
+    """One of: used, set aside, not analysed."""
+    trials = _in_module(results.intake.trials, module)
+    own = trials[trials["sensor"].astype(str) == sensor]
+    table = results.readings.table
+    if len(table) and bool(
+        table.loc[(table["module"] == module) & (table["sensor"] == sensor), "used"].any()
+    ):
+        return "used"
+    return (
+        "set aside"
+        if not (own["fate"] == "used").any() or own["kind"].eq("staircase").any()
+        else "not analysed"
+    )
+
+
+def _batch_of(results: CampaignResults, module: str) -> str:
+    batches = sorted(
+        {str(b) for b in _in_module(results.intake.trials, module)["batch"] if str(b) not in ("", "nan")}
+    )
+    return ", ".join(batches)
+
+
+def _mountings_of(results: CampaignResults, module: str) -> list[str]:
+    return sorted(
+        {str(s) for s in _in_module(results.intake.trials, module)["session"] if str(s) not in ("", "nan")}
+    )
+
+
+def _register_of(results: CampaignResults, module: str) -> list[tuple[str, str]]:
+    register = results.intake.modules
+    if register is None or "module" not in register:
+        return []
+    rows = _in_module(register, module)
+    if rows.empty:
+        return []
+    row = rows.iloc[0]
+    kept = [c for c in register.columns if c not in ("module", "generation", "batch")]
+    return [(str(c).replace("_", " "), str(row[c])) for c in kept if str(row[c]) not in ("", "nan", "None")]
+
+
+def _trials_of(results: CampaignResults, module: str) -> list[dict[Hashable, Any]]:
+    """Trials of single sensors, each with the address of its section."""
+    rows = _in_module(results.intake.trials, module)
+    rows = rows[rows["sensor"].astype(str) != ""].drop_duplicates(["file", "sensor"])
+    return [
+        {**row, "href": slugs.trial_href(module, str(row["sensor"]), str(row["file"]))}
+        for row in rows.sort_values(["sensor", "started", "file"], kind="stable").to_dict("records")
+    ]
+
+
+def module_lines_figure(
+    results: CampaignResults, lines: pd.DataFrame, reference: ReferenceQuantity
+) -> Figure:
+    """Return the lines of the module's sensors with all readings used."""
+    factor = reference.shown_factor
+    unit = str(lines["unit"].iloc[0])
+    readings = _used_readings(results, str(lines["module"].iloc[0]))
+    traces: list[Trace] = []
+    labels: list[Layout] = []
+    for index, row in enumerate(lines.to_dict("records")):
+        style = palette.GENERATION_STYLES[index % len(palette.GENERATION_STYLES)]
+        module, sensor = str(row["module"]), str(row["sensor"])
+        ends = pd.Series([row["strain_low"], row["strain_high"]], dtype=float)
+        fitted = row["intercept"] + row["slope"] * ends
+        traces.append(
+            line(ends * factor, fitted, colour=style.colour, dash=style.dash, module=module, sensor=sensor)
+        )
+        own = readings[readings["sensor"] == sensor].iloc[:300]
+        traces.append(
+            points(
+                own["x"] * factor,
+                own["signal"],
+                style=style,
+                size=4,
+                open_marker=True,
+                text=[
+                    f"{module} {sensor}, run {r}, reading {o}"
+                    for r, o in zip(own["repetition"], own["order"], strict=True)
+                ],
+                links=[slugs.trial_href(module, sensor, str(t)) for t in own["trial"]],
+                module=module,
+                sensor=sensor,
+            )
+        )
+        labels.append(label(sensor, float(ends.iloc[1]) * factor, float(fitted.iloc[1]), colour=style.colour))
+    return Figure(
+        name="lines",
+        caption=f"The lines of {numbers.count(len(lines), 'sensor')} of {lines['module'].iloc[0]} with the "
+        f"readings of all runs.",
+        alternative=f"Signal against {x_title(reference).lower()}, one line a sensor with its readings.",
+        traces=tuple(traces),
+        layout=layout(
+            axis(x_title(reference), reference.shown_unit),
+            axis("Signal", unit),
+            annotations=labels,
+            margin={"r": 56},
+        ),
+        data=readings[
+            ["sensor", "session", "repetition", "trial", "order", "direction", "x", "signal", "unit"]
+        ],
+        note="Every point leads to its trial.",
+        height=400,
+    )
+
+
+def _used_readings(results: CampaignResults, module: str) -> pd.DataFrame:
+    rows = _in_module(results.readings.table, module)
+    return rows[rows["used"]]
+
+
+def module_merits_figure(results: CampaignResults, module: str) -> Figure | None:
+    """Return the figures of merit in %FSO of the module's sensors among all the campaign's sensors."""
+    names = [n for n in FIGURE_ORDER if n not in ("bend", "strain_error")]
+    figures = results.limits.figures
+    figures = figures[figures["figure"].isin(names)].dropna(subset=["estimate"])
+    own = _in_module(figures, module)
+    if own.empty:
+        return None
+    order = [n for n in names if n in set(own["figure"])]
+    sensors = sorted(own["sensor"].unique())
+    traces: list[Trace] = []
+    for index, sensor in enumerate(sensors):
+        rows = own[own["sensor"] == sensor]
+        edge = 3 * float(figures["estimate"].max())
+        style = palette.GENERATION_STYLES[index % len(palette.GENERATION_STYLES)]
+        shift = (index - (len(sensors) - 1) / 2) * min(0.13, 0.75 / len(sensors))
+        traces.append(
+            intervals(
+                rows["estimate"],
+                rows["low"],
+                rows["high"].clip(upper=edge),
+                [order.index(str(f)) + shift for f in rows["figure"]],
+                style=style,
+                text=[
+                    f"{module} {sensor}: {r['figure']} "
+                    f"{numbers.interval(r['estimate'], r['low'], r['high'], '%FSO')}"
+                    for r in rows.to_dict("records")
+                ],
+                links=[slugs.sensor_href(module, str(sensor))] * len(rows),
+                module=module,
+                sensor=str(sensor),
+            )
+        )
+    for index, name in enumerate(order):
+        middle = float(figures.loc[figures["figure"] == name, "estimate"].median())
+        traces.append(line([middle, middle], [index - 0.45, index + 0.45], colour=palette.SOFT, dash="dot"))
+    worst = own.iloc[int(own["estimate"].to_numpy(float).argmax())]
+    return Figure(
+        name="merits",
+        caption=f"The largest figure of the module is the {worst['figure']} of {worst['sensor']}: "
+        f"{numbers.interval(worst['estimate'], worst['low'], worst['high'], '%FSO')}.",
+        alternative="Dots with 95 % intervals for each sensor: " + ", ".join(order) + " in per cent of "
+        "full-scale output.",
+        traces=tuple(traces),
+        layout=layout(
+            axis("Per cent of full-scale output", "%FSO"),
+            axis(
+                "",
+                ticks=[(float(i), n) for i, n in enumerate(order)],
+                low=-0.6,
+                high=len(order) - 0.4,
+                reverse=True,
+            ),
+            margin={"l": 110},
+        ),
+        data=own,
+        note="Dotted uprights are the medians of all sensors of the campaign. Colours are those of the "
+        "lines above.",
+        height=120 + 40 * len(order) + 14 * len(sensors) * len(order),
+    )
+
+
+def module_effects_figure(results: CampaignResults, module: str, where: SensorAxis) -> Figure | None:
+    """Return the effects of the module's sensors on the slope, with intervals."""
+    if results.variance is None:
+        return None
+    rows = results.variance.effects
+    rows = _in_module(rows[(rows["level"] == "sensor")], module).dropna(subset=["estimate"])
+    rows = rows[rows["generation"] != "all"] if (rows["generation"] != "all").any() else rows
+    rows = rows[rows["term"] == "slope"] if (rows["term"] == "slope").any() else rows
+    known = set(where.places)
+    rows = rows[
+        [key in known for key in rows[["generation", "module", "sensor"]].itertuples(index=False, name=None)]
+    ]
+    if rows.empty:
+        return None
+    unit, term = str(rows["unit"].iloc[0]), str(rows["term"].iloc[0])
+    text = [
+        f"{module} {r['sensor']}: {numbers.interval(r['estimate'], r['low'], r['high'], unit)}"
+        for r in rows.to_dict("records")
+    ]
+    ticks = [(where.places[key], key[2]) for key in where.places]
+    return Figure(
+        name="effects",
+        caption=f"Effects of the sensors on the {term}, about the module's own mean.",
+        alternative=f"Dots with 95 % intervals, one a sensor: effect on the {term}, with an upright at zero.",
+        traces=tuple(interval_traces(rows, where, text)),
+        layout=layout(
+            axis(f"Effect on the {term}", unit),
+            axis("", ticks=ticks, low=-0.6, high=0.6, reverse=True),
+            shapes=[level_line(0, upright=True, colour=palette.INK)],
+        ),
+        data=rows,
+        note="Predicted by the nested model: drawn towards zero the less the data say.",
+        height=110 + 30 * len(ticks),
+    )
+
+
+def shared_trials(
+    results: CampaignResults, module: str, lines: pd.DataFrame
+) -> tuple[list[SharedTrial], list[Figure]]:
+    """Return the trials that carried several of the module's sensors, and their little plots."""
+    trials = _in_module(results.intake.trials, module)
+    trials = trials[trials["sensor"].astype(str) != ""]
+    counts = trials.groupby("file")["sensor"].nunique()
+    wide = trials[trials["file"].isin(counts[counts > 1].index)]
+    sections: list[SharedTrial] = []
+    plots: list[Figure] = []
+    first = wide.sort_values(["started", "file"], kind="stable").drop_duplicates("file")
+    for index, row in enumerate(first.to_dict("records"), 1):
+        own = wide[wide["file"] == row["file"]]
+        plot = None
+        if index <= _MOST_TRIAL_PLOTS and len(lines):
+            plot = shared_trial_plot(results, module, str(row["file"]), lines, index)
+        if plot is not None:
+            plots.append(plot)
+        sections.append(
+            SharedTrial(
+                trial=str(row["file"]),
+                anchor=slugs.trial_anchor(str(row["file"])),
+                kind=str(row["kind"]),
+                started=str(row["started"]).replace("T", " ") if str(row["started"]) != "nan" else "",
+                session=str(row["session"]) if str(row["session"]) != "nan" else "",
+                repetition=str(row["repetition"]),
+                fate=str(row["fate"]),
+                sensors=tuple(sorted(own["sensor"].astype(str).unique())),
+                figure="" if plot is None else plot.name,
+            )
+        )
+    return sections, plots
+
+
+def shared_trial_plot(
+    results: CampaignResults, module: str, file: str, lines: pd.DataFrame, index: int
+) -> Figure | None:
+    """Return departures of all sensors of one shared run from their own lines."""
+    rows = _in_module(results.readings.table, module)
+    rows = rows[rows["trial"] == file].merge(
+        lines[["sensor", "intercept", "slope"]], on="sensor", suffixes=("", "_line")
+    )
+    if rows.empty:
+        return None
+    reference = results.readings.reference
+    factor = reference.shown_factor
+    rows["departure"] = (
+        (rows["signal"] - rows["intercept"] - rows["slope"] * rows["x"]) / rows["slope"] * factor
+    )
+    traces = []
+    for place, (sensor, own) in enumerate(rows.groupby("sensor", sort=True)):
+        style = palette.GENERATION_STYLES[place % len(palette.GENERATION_STYLES)]
+        path = own.sort_values(["repetition", "order"])
+        traces.append(
+            line(
+                path["x"] * factor,
+                path["departure"],
+                colour=style.colour,
+                dash=style.dash,
+                width=1.2,
+                module=module,
+                sensor=str(sensor),
+            )
+        )
+    return Figure(
+        name=f"trial-{index}",
+        caption=f"All sensors of the run move together by "
+        f"{numbers.significant(abs(float(rows['departure'].mean())), 2, reference.shown_unit)} on average.",
+        alternative=f"Departure of each sensor from its own line against {x_title(reference).lower()}.",
+        traces=tuple(traces),
+        layout=layout(
+            axis(x_title(reference), reference.shown_unit),
+            axis("Departure", reference.shown_unit),
+            shapes=[level_line(0, colour=palette.INK)],
+        ),
+        data=rows[["sensor", "session", "repetition", "order", "direction", "x", "signal", "departure"]],
+        height=210,
+    )
+
+
+def _tables(results: CampaignResults, module: str, lines: pd.DataFrame) -> list[Table]:
+    if lines.empty:
+        return []
+    reference = results.readings.reference
+    unit = str(lines["unit"].iloc[0])
+    frame = lines.assign(
+        _se_slope=lines["var_slope"] ** 0.5,
+        _href=[slugs.sensor_href(module, str(s)) for s in lines["sensor"]],
+    )
+    factor = 1 / reference.shown_factor
+    return [
+        Table(
+            name="module_lines",
+            caption="The lines of the module's sensors.",
+            frame=frame,
+            columns=(
+                Column("sensor", "Sensor", kind="text", href="_href"),
+                Column("position", "Position", kind="text"),
+                Column("runs", "Runs", kind="integer"),
+                Column(
+                    "slope",
+                    "Slope",
+                    f"{unit} per {reference.shown_unit}",
+                    factor=factor,
+                    uncertainty="_se_slope",
+                ),
+                Column("gauge_factor", "Gauge factor", digits=3),
+                Column("linearity_least_squares_percent_fso", "Linearity", "%FSO", digits=2),
+                Column("hysteresis_percent_fso", "Hysteresis", "%FSO", digits=2, missing="one branch"),
+                Column("repeatability_percent_fso", "Repeatability", "%FSO", digits=2, missing="one run"),
+            ),
+            source="sensor_lines",
+        )
+    ]
