@@ -1,4 +1,4 @@
-"""The skin map: every module as its outline, every sensor as an edge where it sits, coloured by a chosen figure.
+"""The skin map: modules as outlines, sensors as edges where they sit, coloured by a chosen figure.
 
 It is the overview, the way in (an edge leads to its sensor, an outline to its module) and, small, the 'you
 are here' of their pages. Without geometry a module is a row of bars. Values stand beside the edges as text,
@@ -68,7 +68,7 @@ class MapFigure:
 
 @dataclass(frozen=True)
 class Scale:
-    """What the legend of one figure says: its title, unit, and the texts of both ends (empty for verdicts)."""
+    """What the legend of one figure says: title, unit, the texts of both ends (empty for verdicts)."""
 
     key: str
     title: str
@@ -110,7 +110,7 @@ class MapTile:
 
 @dataclass(frozen=True)
 class SkinMap:
-    """The whole map: tiles by generation, scales, the key of the figure first shown, and the script's data."""
+    """The whole map: tiles by generation, scales, the scale first shown, and the script's data."""
 
     groups: tuple[tuple[str, tuple[MapTile, ...]], ...]
     scales: tuple[Scale, ...]
@@ -297,7 +297,7 @@ def _outline(nodes: Sequence[Point], sensors: Sequence[MapSensor]) -> str:
 
 
 def convex_hull(points: Sequence[Point]) -> list[Point]:
-    """Return the corners of the smallest convex outline around *points*, in order around it (monotone chain)."""
+    """Return the corners of the convex outline of *points*, in order around it (monotone chain)."""
     ordered = sorted(set(points))
     if len(ordered) < 3:
         return ordered
