@@ -1,7 +1,7 @@
-"""Who says which trial a recording is: registers, preamble, name, constant columns and description, in that order.
+"""Who says which trial a recording is: registers, preamble, name, constant columns, description, in order.
 
-Nothing is guessed. Where two of them disagree, or none says what is needed, the recording is set aside and the
-notice shows what each one says.
+Nothing is guessed. Where two of them disagree, or none says what is needed, the recording is set aside and
+the notice shows what each one says.
 """
 
 from __future__ import annotations
@@ -34,6 +34,12 @@ CARRIED_KEYS = ("started", "channel", "position")
 
 SOLE_GENERATION = "generation 1"
 """Name of the generation where the campaign names none."""
+
+BY_REQUEST = "left-out-by-request"
+"""Code of the notice on a recording with ``use = no``: it never changes the exit status."""
+
+SET_ASIDE_BY_THE_LAB = frozenset({BY_REQUEST, "module-set-aside", "sensor-set-aside"})
+"""Codes of notices on what is sound but set aside by a register: it can be put back, to compare."""
 
 NO = frozenset({"no", "n", "false", "0", "non", "nein"})
 YES = frozenset({"", "yes", "y", "true", "1", "oui", "ja"})
@@ -74,8 +80,6 @@ class Identification:
         Conditions that the name states (``length``, ``pressure``, …), as written.
     notices
         Remarks; one of weight ``"set aside"`` means that the recording is not used.
-    by_request
-        Whether it is left out because ``trials.csv`` says ``use = no``.
     """
 
     file: str
@@ -83,17 +87,16 @@ class Identification:
     sources: dict[str, str] = field(default_factory=dict)
     set_points: dict[str, str] = field(default_factory=dict)
     notices: tuple[Notice, ...] = ()
-    by_request: bool = False
 
     @property
-    def set_aside(self) -> bool:
-        """Whether the recording is not used."""
-        return any(notice.weight == "set aside" for notice in self.notices)
+    def reasons(self) -> tuple[str, ...]:
+        """Codes of the notices that set the recording aside."""
+        return tuple(notice.code for notice in self.notices if notice.weight == "set aside")
 
     @property
     def settled(self) -> bool:
-        """Whether it is known which trial it is, though it may be left out by request."""
-        return not self.set_aside or self.by_request
+        """Whether it is known which trial it is, though the lab itself may have set it aside."""
+        return set(self.reasons) <= SET_ASIDE_BY_THE_LAB
 
 
 @dataclass(frozen=True)
@@ -109,7 +112,7 @@ class NamingRules:
     kinds
         Word in lower case → our kind: ours and the lab's own.
     generations_are_named
-        Whether registers, patterns or description name generations: then a recording without one is set aside.
+        Whether registers, patterns or description name generations: one without is then set aside.
     """
 
     description: Description
@@ -170,12 +173,7 @@ def identify(recording: Recording, rules: NamingRules) -> Identification:
     notices += _add_module(file, values, sources, rules)
     notices += _check_needed(file, values, name, rules)
     set_points = {key: name.values[key] for key in SET_POINTS if key in name.values}
-    by_request = {n.code for n in notices if n.weight == "set aside"} == {BY_REQUEST}
-    return Identification(file, values, sources, set_points, tuple(notices), by_request)
-
-
-BY_REQUEST = "left-out-by-request"
-"""Code of the notice on a recording with ``use = no``: it never changes the exit status."""
+    return Identification(file, values, sources, set_points, tuple(notices))
 
 
 def _statements(

@@ -1,4 +1,4 @@
-"""The values that reading hands on: recordings in canonical units, and trials, one sensor's share of a recording."""
+"""The values that reading hands on: recordings in canonical units; trials, one sensor's share of a recording."""
 
 from __future__ import annotations
 
@@ -99,7 +99,7 @@ class Recording:
     line_numbers
         Shape (rows,), line of the file that each row came from, for notices.
     constants
-        Texts of columns that say the same in every row (``module``, ``sensor``, ``kind``, …), by lower-case header.
+        Texts of columns that say the same in every row (``module``, ``kind``, …), by lower-case header.
     """
 
     file: str
@@ -141,9 +141,9 @@ class TrialIdentity:
 class Trial:
     """One sensor's share of one run: identity and series in canonical units.
 
-    Every array has shape (rows,), float64, NaN where missing; ``None`` where not recorded. ``reference`` says in
-    which of ``length_mm``, ``elongation_mm`` or ``strain`` the stand's value was recorded; the others are derived
-    from the rest length where it is known.
+    Every array has shape (rows,), float64, NaN where missing; ``None`` where not recorded. ``reference`` says
+    in which of ``length_mm``, ``elongation_mm`` or ``strain`` the stand's value was recorded; the others are
+    derived from the rest length where it is known.
     """
 
     identity: TrialIdentity

@@ -1,0 +1,473 @@
+"""From a campaign folder to trials: every recording read once, reduced at once, and accounted for.
+
+Values are not kept: a trial is handed to the caller's function while its recording is in memory, and only what
+that function returns stays.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import os
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+from typing import TypeVar
+
+import pandas as pd
+
+from campaign.notices import Notice, sort_notices
+from campaign.recordings.checks import (
+    Counts,
+    NothingUsable,
+    ReadFile,
+    check_assumptions,
+    check_claims,
+    check_copies,
+    check_generations,
+    check_ids,
+    check_trial_rows,
+    nothing_usable,
+)
+from campaign.recordings.description import Description
+from campaign.recordings.folder import LARGEST_RECORDING_BYTES, Survey, SurveyedFile, survey_folder
+from campaign.recordings.identity import (
+    BY_REQUEST,
+    SET_ASIDE_BY_THE_LAB,
+    SOLE_GENERATION,
+    Identification,
+    NamingRules,
+    identify,
+    naming_rules,
+)
+from campaign.recordings.reading import ReadOutcome, RecordingBytes, read_recordings
+from campaign.recordings.recording import Recording, Trial, TrialIdentity
+from campaign.recordings.register import KNOWN_COLUMNS, Register, rest_length_mm
+from campaign.recordings.sensor_share import Shares, TrialKey, key_of_trial, trials_of_recording
+from campaign.units import UnitError
+
+T = TypeVar("T")
+
+Progress = Callable[[str, int, int], None]
+"""Called with what is being done, how much of it is done and how much there is."""
+
+BATCH_BYTES = 4_000_000
+"""Bytes of recordings that are read together."""
+
+BATCH_FILES = 500
+"""Recordings that are read together at most."""
+
+RECORDING_COLUMNS = ("file", "sha256", "bytes", "kind", "fate", "rows", "notices")
+TRIAL_COLUMNS = (
+    "file",
+    "kind",
+    "generation",
+    "batch",
+    "module",
+    "sensor",
+    "repetition",
+    "session",
+    "started",
+    "fate",
+)
+NOTICE_COLUMNS = ("code", "weight", "file", "line", "column", "what", "done", "remedy")
+
+
+@dataclass(frozen=True)
+class Intake:
+    """What was read, and what became of every file.
+
+    Attributes
+    ----------
+    description
+        ``campaign.toml``, checked.
+    recordings
+        One row a file, sorted by path: file, sha256 (empty where it was not opened), bytes, kind (empty where not
+        known), fate (``used``, ``set aside``, ``not a recording``), rows, notices (how many).
+    trials
+        One row a trial (file × sensor × repetition): file, kind, generation, batch, module, sensor, repetition,
+        session, started, fate (``used``, ``set aside``).
+    notices
+        All remarks on the input, heaviest first.
+    modules, sensors, sessions
+        The registers with all their columns as text, one row also for what is used but not listed. ``sensors`` has
+        rest_length_mm and rest_length_uncertainty_mm besides (float, NaN where not known); ``modules`` holds
+        the generation and batch that were settled.
+    identities
+        By key (file, sensor, repetition), the identity of every trial that was built.
+    used
+        Keys of the trials that are used.
+    put_back
+        Keys of sound trials that a register sets aside (``use = no``, the fate of a sensor or module).
+    counts
+        Files by fate; they add up.
+    other_campaigns
+        Folders inside that are campaigns of their own.
+    set_aside_unasked
+        How many notices set something aside without ``use = no`` having asked for it.
+    """
+
+    description: Description
+    recordings: pd.DataFrame
+    trials: pd.DataFrame
+    notices: tuple[Notice, ...]
+    modules: pd.DataFrame
+    sensors: pd.DataFrame
+    sessions: pd.DataFrame
+    identities: dict[TrialKey, TrialIdentity]
+    used: frozenset[TrialKey]
+    put_back: frozenset[TrialKey]
+    counts: Counts
+    other_campaigns: tuple[str, ...] = ()
+    set_aside_unasked: int = 0
+
+    @property
+    def used_identities(self) -> tuple[TrialIdentity, ...]:
+        """Identities of the trials that are used, in reading order."""
+        return tuple(identity for key, identity in self.identities.items() if key in self.used)
+
+    @property
+    def file_hashes(self) -> dict[str, str]:
+        """SHA-256 by file, of the files that were opened."""
+        opened = self.recordings[self.recordings["sha256"] != ""]
+        return dict(zip(opened["file"], opened["sha256"], strict=True))
+
+
+def run_intake(
+    folder: Path,
+    reduce: Callable[[Trial], T],
+    output: Path | None = None,
+    progress: Progress | None = None,
+    *,
+    keep_put_back: bool = False,
+) -> tuple[Intake, dict[TrialKey, T]]:
+    """Read a campaign folder once, reducing each trial while its recording is in memory.
+
+    Parameters
+    ----------
+    folder
+        The campaign folder.
+    reduce
+        Makes of a trial what is to be kept of it; it is not called for trials known to be set aside.
+    output
+        Where a report is written to; its files are not counted.
+    progress
+        Told how many bytes are read.
+    keep_put_back
+        Whether the results of sound trials that a register sets aside are kept too; their keys are in
+        ``Intake.put_back``, never in ``Intake.used``.
+
+    Returns
+    -------
+    tuple of Intake and dict
+        The intake, and the results by trial in reading order.
+
+    Raises
+    ------
+    CampaignStops
+        Where the folder cannot be read; :class:`campaign.recordings.checks.NothingUsable` where no trial can be used.
+    """
+    survey = survey_folder(folder, output)
+    rules = naming_rules(survey.description, survey.registers)
+    results: dict[TrialKey, T] = {}
+    read: list[ReadFile] = []
+    for outcome in read_campaign_files(survey, progress=progress):
+        file, trials = _take(outcome, rules)
+        read.append(file)
+        for trial in trials:
+            key = key_of_trial(trial.identity)
+            if set(file.reasons(key)) <= SET_ASIDE_BY_THE_LAB:
+                results[key] = reduce(trial)
+    intake = settle(survey, rules, read)
+    if (fault := nothing_usable(intake.counts)) is not None:
+        raise NothingUsable([fault], intake)
+    kept = intake.used | intake.put_back if keep_put_back else intake.used
+    return intake, {key: result for key, result in results.items() if key in kept}
+
+
+def inspect_folder(folder: Path, output: Path | None = None, progress: Progress | None = None) -> Intake:
+    """Read and check a campaign folder, keeping no values (see :func:`run_intake`)."""
+    return run_intake(folder, lambda _: None, output, progress)[0]
+
+
+def read_campaign_files(survey: Survey, *, progress: Progress | None = None) -> Iterator[ReadOutcome]:
+    """Read the recordings of a survey, some megabytes at a time.
+
+    Parameters
+    ----------
+    survey
+        From :func:`campaign.recordings.folder.survey_folder`.
+    progress
+        Told how many bytes are read.
+
+    Yields
+    ------
+    ReadOutcome
+        One a recording, in the order of their paths; a file that cannot be opened yields one, too.
+    """
+    total = sum(file.size_bytes for file in survey.recordings)
+    done = 0
+    for batch in batches(survey.recordings):
+        opened = [(file, *open_recording(file)) for file in batch]
+        items = [RecordingBytes(file.file, data) for file, data, _ in opened if data is not None]
+        outcomes = {outcome.file: outcome for outcome in read_recordings(items, survey.description)}
+        for file, _, fault in opened:
+            yield outcomes[file.file] if fault is None else _unread(file, fault)
+        done += sum(file.size_bytes for file in batch)
+        if progress is not None:
+            progress("reading", done, total)
+
+
+def batches(files: Sequence[SurveyedFile]) -> Iterator[list[SurveyedFile]]:
+    """Yield files in order, :data:`BATCH_BYTES` or :data:`BATCH_FILES` at a time, whichever comes first."""
+    batch: list[SurveyedFile] = []
+    size = 0
+    for file in files:
+        batch.append(file)
+        size += file.size_bytes
+        if size >= BATCH_BYTES or len(batch) >= BATCH_FILES:
+            yield batch
+            batch, size = [], 0
+    if batch:
+        yield batch
+
+
+def open_recording(file: SurveyedFile) -> tuple[bytes | None, Notice | None]:
+    """Return the bytes of a file, or the notice that says why there are none.
+
+    A file that changed after the folder was surveyed, or while it is read, is not taken: half a log is no log.
+    """
+    try:
+        with file.location.open("rb") as stream:
+            data = stream.read()
+            after = os.fstat(stream.fileno())
+    except FileNotFoundError:
+        return None, _not_read(file, "vanished", "the file was gone when it was to be read", "run again")
+    except OSError as fault:
+        what = f"the file cannot be opened ({fault.strerror})"
+        return None, _not_read(file, "unreadable-file", what, "make it readable")
+    if (after.st_size, after.st_mtime_ns) != (file.size_bytes, file.modified_ns) or len(
+        data
+    ) != file.size_bytes:
+        what = f"the file changed while the folder was read ({file.size_bytes} bytes, then {after.st_size})"
+        return None, _not_read(file, "changed-while-read", what, "run again when nothing is being logged")
+    return data, None
+
+
+def _unread(file: SurveyedFile, fault: Notice) -> ReadOutcome:
+    return ReadOutcome(file.file, "", file.size_bytes, None, (fault,))
+
+
+def _not_read(file: SurveyedFile, code: str, what: str, remedy: str) -> Notice:
+    return Notice(code, "set aside", file.file, None, None, what, "not read", remedy)
+
+
+def _take(outcome: ReadOutcome, rules: NamingRules) -> tuple[ReadFile, tuple[Trial, ...]]:
+    """Identify one recording and build its trials; what is returned first holds no values."""
+    file = ReadFile(outcome.file, outcome.sha256, outcome.size_bytes, notices=outcome.notices)
+    if outcome.recording is None:
+        return file, ()
+    identification = _with_sole_generation(identify(outcome.recording, rules), rules)
+    shares = _shares(outcome.recording, identification, rules)
+    identities = tuple(trial.identity for trial in shares.trials)
+    reasons = {
+        key_of_trial(i): (*identification.reasons, *shares.set_aside.get(key_of_trial(i), ()))
+        for i in identities
+    }
+    read = replace(
+        file,
+        rows=outcome.recording.rows,
+        identification=identification,
+        trials=identities,
+        set_aside=reasons,
+        notices=(*outcome.notices, *identification.notices, *shares.notices),
+        repetition_assumed=shares.repetition_assumed,
+    )
+    return read, shares.trials
+
+
+def _with_sole_generation(identification: Identification, rules: NamingRules) -> Identification:
+    if rules.generations_are_named or "generation" in identification.values:
+        return identification
+    return replace(identification, values=identification.values | {"generation": SOLE_GENERATION})
+
+
+def _shares(recording: Recording, identification: Identification, rules: NamingRules) -> Shares:
+    if not identification.settled:
+        return Shares((), {}, ())
+    return trials_of_recording(recording, identification, rules)
+
+
+def settle(survey: Survey, rules: NamingRules, read: Sequence[ReadFile]) -> Intake:
+    """Decide what becomes of every file and trial, once all have been read.
+
+    Parameters
+    ----------
+    survey
+        The folder.
+    rules
+        From :func:`campaign.recordings.identity.naming_rules`.
+    read
+        What was kept of each recording, sorted by path.
+
+    Returns
+    -------
+    Intake
+        With counts that add up.
+    """
+    copies = check_copies(read)
+    rivals = check_claims(read, copies)
+    of_no_generation = check_generations((t for f in read for t in f.trials), rules.generations_are_named)
+    reasons = {
+        key: _reasons(file, key, copies, rivals, of_no_generation)
+        for file in read
+        for key in map(key_of_trial, file.trials)
+    }
+    identities = {key_of_trial(trial): trial for file in read for trial in file.trials}
+    used = frozenset(key for key, codes in reasons.items() if not codes)
+    put_back = frozenset(
+        key for key, codes in reasons.items() if codes and set(codes) <= SET_ASIDE_BY_THE_LAB
+    )
+    across = (*copies.values(), *rivals.values(), *of_no_generation.values())
+    used_identities = [identity for key, identity in identities.items() if key in used]
+    notices = sort_notices(
+        dict.fromkeys(
+            (
+                *survey.notices,
+                *(notice for file in read for notice in file.notices),
+                *across,
+                *check_ids(identities.values()),
+                *check_trial_rows(survey),
+                *check_assumptions(survey, read, used_identities),
+            )
+        )
+    )
+    recordings = _recordings_table(survey, read, used, notices)
+    return Intake(
+        description=survey.description,
+        recordings=recordings,
+        trials=_trials_table(identities, used),
+        notices=notices,
+        modules=_modules_table(survey.registers.modules, used_identities),
+        sensors=_sensors_table(survey.registers.sensors, used_identities),
+        sessions=_register_table(survey.registers.sessions, _session_rows(survey, used_identities)),
+        identities=identities,
+        used=used,
+        put_back=put_back,
+        counts=_count(recordings, identities, used),
+        other_campaigns=survey.other_campaigns,
+        set_aside_unasked=sum(n.weight == "set aside" and n.code != BY_REQUEST for n in notices),
+    )
+
+
+def _reasons(
+    file: ReadFile, key: TrialKey, copies: Mapping[str, Notice], *across: Mapping[TrialKey, Notice]
+) -> tuple[str, ...]:
+    """Codes of all reasons for which a trial is set aside; none: it is used."""
+    copied = [copies[file.file].code] if file.file in copies else []
+    return (*file.reasons(key), *copied, *(notices[key].code for notices in across if key in notices))
+
+
+def _recordings_table(
+    survey: Survey, read: Sequence[ReadFile], used: frozenset[TrialKey], notices: Iterable[Notice]
+) -> pd.DataFrame:
+    by_file = {file.file: file for file in read}
+    remarks: dict[str, int] = {}
+    for notice in notices:
+        if notice.file is not None:
+            remarks[notice.file] = remarks.get(notice.file, 0) + 1
+    rows = []
+    for file in survey.files:
+        known = by_file.get(file.file)
+        if known is None:
+            sha256, kind, count = _hash(file) if file.list == "not a recording" else "", "", 0
+            fate: str = file.list
+        else:
+            sha256, kind, count = known.sha256, known.kind, known.rows
+            fate = "used" if any(key_of_trial(trial) in used for trial in known.trials) else "set aside"
+        rows.append((file.file, sha256, file.size_bytes, kind, fate, count, remarks.get(file.file, 0)))
+    return pd.DataFrame(rows, columns=list(RECORDING_COLUMNS))
+
+
+def _hash(file: SurveyedFile) -> str:
+    """Return the hash of a file that is no recording; empty where it cannot be opened or is no ordinary file."""
+    if file.what in ("link", "no ordinary file", "gone") or file.size_bytes > LARGEST_RECORDING_BYTES:
+        return ""
+    try:
+        with file.location.open("rb") as stream:
+            return hashlib.file_digest(stream, "sha256").hexdigest()
+    except OSError:
+        return ""
+
+
+def _trials_table(identities: dict[TrialKey, TrialIdentity], used: frozenset[TrialKey]) -> pd.DataFrame:
+    rows = [
+        (*(getattr(trial, name) for name in TRIAL_COLUMNS[:-1]), "used" if key in used else "set aside")
+        for key, trial in identities.items()
+    ]
+    return pd.DataFrame(rows, columns=list(TRIAL_COLUMNS))
+
+
+def notices_table(notices: Iterable[Notice]) -> pd.DataFrame:
+    """Return notices as a table: code, weight, file, line, column, what, done, remedy (line, column: Int64)."""
+    rows = [tuple(getattr(notice, name) for name in NOTICE_COLUMNS) for notice in notices]
+    table = pd.DataFrame(rows, columns=list(NOTICE_COLUMNS), dtype=object)
+    return table.astype({"line": "Int64", "column": "Int64"}).assign(file=table["file"].fillna(""))
+
+
+def _register_table(register: Register, extra: Iterable[dict[str, str]]) -> pd.DataFrame:
+    """Return a register as text columns, its known ones first, then its free ones, and rows that it lacks."""
+    free = [column for column in register.columns if column and column not in KNOWN_COLUMNS[register.name]]
+    columns = [*KNOWN_COLUMNS[register.name], *free]
+    rows = [row.values for row in register.rows] + list(extra)
+    return pd.DataFrame([[row.get(c, "") for c in columns] for row in rows], columns=columns, dtype=object)
+
+
+def _modules_table(register: Register, used: Sequence[TrialIdentity]) -> pd.DataFrame:
+    listed = {row.get("module") for row in register.rows}
+    settled = {trial.module: trial for trial in used}
+    table = _register_table(register, [{"module": m} for m in sorted(settled) if m not in listed])
+    for column in ("generation", "batch"):
+        known = {module: getattr(trial, column) for module, trial in settled.items()}
+        table[column] = [known.get(m) or said for m, said in zip(table["module"], table[column], strict=True)]
+    return table
+
+
+def _sensors_table(register: Register, used: Sequence[TrialIdentity]) -> pd.DataFrame:
+    listed = {(row.get("module"), row.get("sensor")) for row in register.rows}
+    unlisted = sorted({(trial.module, trial.sensor) for trial in used} - listed)
+    table = _register_table(register, [{"module": module, "sensor": sensor} for module, sensor in unlisted])
+    for column in ("rest_length", "rest_length_uncertainty"):
+        lengths = [_length(register, index, column) for index in range(len(table))]
+        table[f"{column}_mm"] = pd.Series(lengths, dtype="float64")
+    return table
+
+
+def _length(register: Register, index: int, column: str) -> float:
+    try:
+        return rest_length_mm(register.rows[index] if index < len(register.rows) else None, column)
+    except UnitError:
+        return float("nan")
+
+
+def _session_rows(survey: Survey, used: Sequence[TrialIdentity]) -> list[dict[str, str]]:
+    listed = {(row.get("session"), row.get("module")) for row in survey.registers.sessions.rows}
+    seen = sorted({(trial.session, trial.module) for trial in used if trial.session})
+    return [
+        {"session": session, "module": module}
+        for session, module in seen
+        if (session, module) not in listed and (session, "") not in listed
+    ]
+
+
+def _count(
+    recordings: pd.DataFrame, identities: dict[TrialKey, TrialIdentity], used: frozenset[TrialKey]
+) -> Counts:
+    fates = recordings["fate"].value_counts()
+    return Counts(
+        files=len(recordings),
+        used=int(fates.get("used", 0)),
+        set_aside=int(fates.get("set aside", 0)),
+        not_recordings=int(fates.get("not a recording", 0)),
+        trials=len(identities),
+        trials_used=len(used),
+    )
