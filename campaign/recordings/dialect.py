@@ -18,11 +18,15 @@ from campaign.units import SPELLINGS, looks_like_timestamp, nearest_spelling, un
 SEPARATORS: tuple[str, ...] = (",", ";", "\t", " ")
 """Separators that are looked for, in falling order of preference."""
 
-SAMPLE_ROWS = 40
-"""Lines of the table that separator and decimal sign are found out from."""
+SAMPLE_LINES = 32
+"""Lines, comments not counted, that separator, decimal sign and header are found out from; more where none of
+them holds numbers."""
 
-HEAD_BYTES = 1 << 16
-"""Bytes at the start of a file in which the header must stand, unless the description gives its line."""
+HEAD_BYTES = (1 << 13, 1 << 18)
+"""Bytes at the start of a file in which header and first rows are looked for: the first, and the second where
+that holds less than :data:`ENOUGH_ROWS` rows."""
+
+ENOUGH_ROWS = 8
 
 _MAGIC: tuple[tuple[bytes, str], ...] = (
     (b"\x1f\x8b", "a gzip archive"),
@@ -354,9 +358,34 @@ def _split_leniently(line: str, separator: str) -> list[str]:
 def is_numeric_field(text: str) -> bool:
     """Return whether a field looks like a number, in any dialect, or a timestamp."""
     stripped = text.strip(" \t")
-    return len(stripped) < 200 and (
-        _LOOSE_NUMBER.fullmatch(stripped) is not None or looks_like_timestamp(stripped)
+    if len(stripped) > 200:
+        return False
+    return _LOOSE_NUMBER.fullmatch(stripped) is not None or (
+        ":" in stripped and looks_like_timestamp(stripped)
     )
+
+
+@dataclass(frozen=True)
+class _Cut:
+    """One line cut into fields, with how many of them are filled and how many look like numbers."""
+
+    fields: list[str]
+    filled: int
+    numbers: int
+
+    def __len__(self) -> int:
+        return len(self.fields)
+
+    @property
+    def is_row(self) -> bool:
+        """Whether it looks like a row of values: some number in it, and numbers are not the exception."""
+        return self.numbers > 0 and 3 * self.numbers >= self.filled
+
+
+def _cut(line: str, separator: str) -> _Cut:
+    fields = _split_leniently(line, separator)
+    filled = sum(not field.isspace() and field != "" for field in fields)
+    return _Cut(fields, filled, sum(map(is_numeric_field, fields)))
 
 
 @dataclass(frozen=True)
@@ -364,7 +393,7 @@ class _Guess:
     """How the sample lines look when cut by one separator."""
 
     separator: str
-    rows: list[list[str]]
+    rows: list[_Cut]
     fields: int
     score: float
 
@@ -381,11 +410,7 @@ def find_layout(text: bytes, description: Description, *, by_position: bool) -> 
     by_position
         Whether the description names columns of this file by position, so that a header may be wanting.
     """
-    lines = _head_lines(text, description.header_row)
-    table = [i for i, line in enumerate(lines) if line.strip() and not line.lstrip().startswith(_COMMENT)]
-    if description.header_row is not None:
-        table = [i for i in table if i >= description.header_row - 1]
-    guess = _best_guess([lines[i] for i in table[: SAMPLE_ROWS + 20]], description.separator)
+    lines, table, guess = _looked_over(text, description)
     layout = replace(_arranged(lines, table, guess, description, by_position), sample=_sample(guess))
     layout = replace(layout, decimal=description.decimal or _decimal_sign(guess, text, layout))
     start = _offset_of_line(text, layout.first_row_line)
@@ -395,15 +420,34 @@ def find_layout(text: bytes, description: Description, *, by_position: bool) -> 
 
 
 def _sample(guess: _Guess) -> tuple[tuple[str, ...], ...]:
-    return tuple(tuple(row) for row in guess.rows if _is_row(row))
+    return tuple(tuple(row.fields) for row in guess.rows if row.is_row)
 
 
-def _head_lines(text: bytes, header_row: int | None) -> list[str]:
-    if header_row is None:
-        head = text[:HEAD_BYTES]
-        cut = head.rfind(b"\n") + 1 if len(text) > HEAD_BYTES else len(head)
-        return (head[:cut] if cut else head).decode(errors="replace").removesuffix("\n").split("\n")
-    return [line.decode(errors="replace") for line in text.split(b"\n", header_row + SAMPLE_ROWS)[:-1]]
+def _looked_over(text: bytes, description: Description) -> tuple[list[str], list[int], _Guess]:
+    """Return the lines at the start, the indices of those that are no comments, and how they are best cut."""
+    for size in HEAD_BYTES:
+        lines = _head_lines(text, size, description.header_row)
+        first = (description.header_row or 1) - 1
+        table = [i for i in range(first, len(lines)) if _is_of_table(lines[i])]
+        guess = _best_guess([lines[i] for i in table[:SAMPLE_LINES]], description.separator)
+        if len(table) > SAMPLE_LINES and not any(row.is_row for row in guess.rows):
+            guess = _best_guess([lines[i] for i in table], description.separator)
+        if sum(row.is_row for row in guess.rows) >= ENOUGH_ROWS:
+            break
+    return lines, table, guess
+
+
+def _is_of_table(line: str) -> bool:
+    return bool(line.strip()) and not line.lstrip().startswith(_COMMENT)
+
+
+def _head_lines(text: bytes, size: int, header_row: int | None) -> list[str]:
+    if header_row is not None:
+        lines = text.split(b"\n", header_row + SAMPLE_LINES)
+        return [line.decode(errors="replace") for line in lines[: header_row + SAMPLE_LINES]]
+    head = text[:size]
+    cut = head.rfind(b"\n") + 1 if len(text) > size else len(head)
+    return (head[:cut] if cut else head).decode(errors="replace").removesuffix("\n").split("\n")
 
 
 def _offset_of_line(text: bytes, line: int) -> int:
@@ -418,37 +462,26 @@ def _offset_of_line(text: bytes, line: int) -> int:
 
 def _best_guess(sample: Sequence[str], pinned: str | None) -> _Guess:
     """Cut the sample by every separator and return the cut with the most numbers in rows of equal length."""
-    guesses = [_guess(sample, separator) for separator in ((pinned,) if pinned else SEPARATORS)]
+    present = [separator for separator in SEPARATORS if any(separator in line for line in sample)]
+    guesses = [_guess(sample, separator) for separator in ([pinned] if pinned else present or SEPARATORS[:1])]
     return max(guesses, key=lambda g: (g.score, g.fields))
 
 
 def _guess(sample: Sequence[str], separator: str) -> _Guess:
-    rows = [_split_leniently(line, separator) for line in sample]
-    numeric = [row for row in rows if _is_row(row)]
+    rows = [_cut(line, separator) for line in sample]
+    numeric = [row for row in rows if row.is_row]
     if not numeric:
-        widest = max((len(row) for row in rows), default=0)
+        widest = max(map(len, rows), default=0)
         return _Guess(separator, rows, widest, -1.0 + 0.001 * widest)
-    fields = Counter(len(row) for row in numeric).most_common(1)[0][0]
-    regular = [row for row in numeric if len(row) == fields]
-    share = sum(_numeric_share(row) for row in regular) / max(1, len(numeric))
-    named = any(len(row) - fields in (-1, 0, 1) and not _is_row(row) for row in rows)
+    fields = Counter(map(len, numeric)).most_common(1)[0][0]
+    share = sum(row.numbers / row.filled for row in numeric if len(row) == fields) / len(numeric)
+    named = any(len(row) - fields in (-1, 0, 1) and not row.is_row for row in rows)
     return _Guess(separator, rows, fields, share + (0.5 if named else 0.0) + (0.25 if fields > 1 else 0.0))
-
-
-def _is_row(row: Sequence[str]) -> bool:
-    """Whether a cut line looks like a row of values: some number in it, and numbers are not the exception."""
-    filled = [field for field in row if field.strip()]
-    return any(map(is_numeric_field, filled)) and 3 * sum(map(is_numeric_field, filled)) >= len(filled)
-
-
-def _numeric_share(row: Sequence[str]) -> float:
-    filled = [field for field in row if field.strip()]
-    return sum(map(is_numeric_field, filled)) / len(filled)
 
 
 def _decimal_sign(guess: _Guess, text: bytes, layout: Layout) -> str:
     """Return the decimal sign of most of the sample's numbers; all whole: of the rest of the file."""
-    numbers = [f.strip() for row in guess.rows if _is_row(row) for f in row if is_numeric_field(f)]
+    numbers = [f.strip() for row in guess.rows if row.is_row for f in row.fields if is_numeric_field(f)]
     commas = sum(field.count(",") == 1 and "." not in field for field in numbers)
     points = sum(field.count(".") == 1 and "," not in field for field in numbers)
     if commas or points:
@@ -462,10 +495,8 @@ def _arranged(
     lines: Sequence[str], table: Sequence[int], guess: _Guess, description: Description, by_position: bool
 ) -> Layout:
     """Find header, units row and first row among the lines of the table."""
-    rows = dict(zip(table, (_split_leniently(lines[i], guess.separator) for i in table[: SAMPLE_ROWS + 20])))
-    first = next((i for i, row in rows.items() if _is_row(row) and len(row) == guess.fields), None)
-    if first is None:
-        first = next((i for i, row in rows.items() if _is_row(row)), None)
+    rows = dict(zip(table, guess.rows))
+    first = next((i for i, row in rows.items() if row.is_row and len(row) == guess.fields), None)
     names = _header_place(rows, first, guess, description.header_row)
     bare = Layout(guess.separator, ".", None, 1, None, guess.fields, False, 1, 0, {})
     if names is None:
@@ -475,12 +506,12 @@ def _arranged(
     start = next((i for i in table if i > below), len(lines))
     layout = replace(
         bare,
-        header=tuple(rows[header_at]),
+        header=tuple(rows[header_at].fields),
         header_line=header_at + 1,
-        units=tuple(map(unit_of_cell, rows[units_at])) if units_at is not None else None,
+        units=tuple(map(unit_of_cell, rows[units_at].fields)) if units_at is not None else None,
         first_row_line=below + 2,
     )
-    layout = _with_trailing(layout, [row for i, row in rows.items() if i >= start and _is_row(row)])
+    layout = _with_trailing(layout, [row for i, row in rows.items() if i >= start and row.is_row])
     layout = _with_preamble(layout, lines, header_at)
     if units_at is None:
         return layout
@@ -491,7 +522,7 @@ def _arranged(
 
 
 def _header_place(
-    rows: dict[int, list[str]], first: int | None, guess: _Guess, header_row: int | None
+    rows: dict[int, _Cut], first: int | None, guess: _Guess, header_row: int | None
 ) -> tuple[int, int | None] | None:
     """Return the indices of header and units row (or ``None``) among the lines before the first row."""
     above = [i for i in rows if first is None or i < first]
@@ -499,14 +530,14 @@ def _header_place(
         header = header_row - 1
         if header not in rows:
             return None
-        units = next((i for i in above if i > header and _is_units_row(rows[i])), None)
+        units = next((i for i in above if i > header and _is_units_row(rows[i].fields)), None)
         return header, units
     allowed = (guess.fields - 1, guess.fields, guess.fields + 1) if guess.fields > 1 else (1,)
-    candidates = [i for i in above if len(rows[i]) in allowed and not any(map(is_numeric_field, rows[i]))]
+    candidates = [i for i in above if len(rows[i]) in allowed and not rows[i].numbers]
     if not candidates:
         return None
     last = candidates[-1]
-    if len(candidates) > 1 and _is_units_row(rows[last]):
+    if len(candidates) > 1 and _is_units_row(rows[last].fields):
         return candidates[-2], last
     return last, None
 
@@ -518,7 +549,7 @@ def _is_units_row(row: Sequence[str]) -> bool:
 
 
 def _without_header(
-    lines: Sequence[str], first: int | None, rows: dict[int, list[str]], bare: Layout, by_position: bool
+    lines: Sequence[str], first: int | None, rows: dict[int, _Cut], bare: Layout, by_position: bool
 ) -> Layout:
     """Lay out a file whose table has no line of names: in a comment, by position, or not at all."""
     if first is None:
@@ -541,7 +572,7 @@ def _without_header(
             )
             return replace(_with_trailing(layout, list(rows.values())), notices=(note, *layout.notices))
     layout = replace(bare, header_line=first + 1, first_row_line=first + 1)
-    layout = _with_trailing(_with_preamble(layout, lines, first), [r for r in rows.values() if _is_row(r)])
+    layout = _with_trailing(_with_preamble(layout, lines, first), [r for r in rows.values() if r.is_row])
     if by_position:
         return layout
     notice = _set_aside(
@@ -554,11 +585,11 @@ def _without_header(
     return replace(layout, notices=(*layout.notices, notice))
 
 
-def _with_trailing(layout: Layout, rows: Sequence[Sequence[str]]) -> Layout:
+def _with_trailing(layout: Layout, rows: Sequence[_Cut]) -> Layout:
     """Settle how many fields a row has, and take the empty field after a trailing separator off."""
     header = layout.header
     regular = Counter(len(row) for row in rows).most_common(1)[0][0] if rows else layout.fields
-    ends_empty = bool(rows) and all(not row[-1].strip() for row in rows if len(row) == regular)
+    ends_empty = bool(rows) and all(not row.fields[-1].strip() for row in rows if len(row) == regular)
     if header is None:
         trailing = ends_empty and regular > 1
         return _trailing_noted(replace(layout, fields=regular - trailing), trailing, layout.first_row_line)

@@ -47,18 +47,22 @@ def pass_gate(body: bytes, layout: Layout) -> Gated:
     layout
         Separator, decimal sign and number of fields.
     """
-    lines = body.count(b"\n")
-    everything = np.arange(lines, dtype=np.int64)
-    none = everything[:0]
-    if not _has_gate(layout) or not lines:
-        return Gated(b"", none, everything)
-    if _is_plain_throughout(body, layout, lines):
-        return Gated(_normalised(body, layout), everything, none)
+    if not body or not _has_gate(layout):
+        return _all_careful(body.count(b"\n"))
+    if _is_plain_throughout(body, layout):
+        lines = np.arange(body.count(b"\n"), dtype=np.int64)
+        return Gated(_normalised(body, layout), lines, lines[:0])
     mask, lengths = _plain_mask(body, layout)
-    if 2 * np.count_nonzero(mask) < lines:
-        return Gated(b"", none, everything)
+    if 2 * np.count_nonzero(mask) < len(mask):
+        return _all_careful(len(mask))
+    everything = np.arange(len(mask), dtype=np.int64)
     kept = np.frombuffer(body, np.uint8)[np.repeat(mask, lengths)].tobytes()
     return Gated(_normalised(kept, layout), everything[mask], everything[~mask])
+
+
+def _all_careful(lines: int) -> Gated:
+    everything = np.arange(lines, dtype=np.int64)
+    return Gated(b"", everything[:0], everything)
 
 
 def _has_gate(layout: Layout) -> bool:
@@ -69,25 +73,35 @@ def _numeric(layout: Layout) -> bytes:
     return _NUMERIC + layout.decimal.encode()
 
 
-def _is_plain_throughout(body: bytes, layout: Layout, lines: int) -> bool:
+def _is_plain_throughout(body: bytes, layout: Layout) -> bool:
     """Whether nothing but separators and line feeds is left when the characters of numbers are taken away."""
     separator = layout.separator.encode()
     ends = layout.fields - (0 if layout.trailing_separator else 1)
     left = body.translate(None, _numeric(layout))
+    lines = len(left) // (ends + 1)
     if left != (separator * ends + b"\n") * lines:
         return False
     if layout.trailing_separator and body.count(separator + b"\n") != lines:
         return False
-    marks = np.flatnonzero(np.isin(np.frombuffer(body, np.uint8), np.frombuffer(separator + b"\n", np.uint8)))
-    return bool(_fields_fit(np.diff(marks, prepend=-1) - 1, layout).all())
+    return _fields_fit(body, layout)
 
 
-def _fields_fit(lengths: npt.NDArray[np.int64], layout: Layout) -> npt.NDArray[np.bool_]:
-    """Whether each field's length is that of a number; the empty one after a trailing separator fits too."""
-    fit = (lengths > 0) & (lengths <= LONGEST_NUMBER)
+def _fields_fit(body: bytes, layout: Layout) -> bool:
+    """Whether every field has the length of a number, at least one character.
+
+    In short lines no field can be too long; only tables with longer ones are looked at field by field.
+    """
+    data = np.frombuffer(body, np.uint8)
+    ends = data == 10
+    separators = data == ord(layout.separator)
+    marks = ends | separators
+    touching = marks[1:] & marks[:-1]
     if layout.trailing_separator:
-        fit[layout.fields :: layout.fields + 1] = True
-    return fit
+        touching &= ~(ends[1:] & separators[:-1])
+    if marks[0] or touching.any():
+        return False
+    longest = np.diff(np.flatnonzero(ends), prepend=-1).max()
+    return bool(longest <= LONGEST_NUMBER or _plain_mask(body, layout)[0].all())
 
 
 def _plain_mask(body: bytes, layout: Layout) -> tuple[npt.NDArray[np.bool_], npt.NDArray[np.int64]]:

@@ -129,7 +129,7 @@ def _prepared(item: RecordingBytes, description: Description, careful: bool) -> 
     notices = (*notices, *plan.notices)
     if not plan.readable:
         return _outcome(item, sha256, notices, plan)
-    gated = _gated(body, layout, plan, careful)
+    gated = _gated(body, layout, plan, ending, careful)
     return _Table(item, sha256, layout, plan, notices, body, ending, gated)
 
 
@@ -159,10 +159,10 @@ def _body(text: bytes, layout: Layout) -> tuple[bytes, Ending]:
     return body, Ending(last, False, tuple(above))
 
 
-def _gated(body: bytes, layout: Layout, plan: TablePlan, careful: bool) -> Gated:
+def _gated(body: bytes, layout: Layout, plan: TablePlan, ending: Ending, careful: bool) -> Gated:
     """Part the lines; an unterminated last line always goes the careful road."""
     whole = body[: body.rfind(b"\n") + 1]
-    lines = body.count(b"\n")
+    lines = ending.last_line - layout.first_row_line + (1 if ending.terminated else 0)
     if careful or not all(column.is_plain for column in plan.columns):
         everything = np.arange(lines, dtype=np.int64)
         gated = Gated(b"", everything[:0], everything)

@@ -13,14 +13,12 @@ from campaign.recordings.remarks import Remark
 FloatArray = npt.NDArray[np.float64]
 LineNumbers = npt.NDArray[np.int64]
 
-SUSPECT_VALUES = np.array(
-    sorted(
-        sign * value
-        for sign in (-1.0, 1.0)
-        for value in (
-            *(99.0, 999.0, 9999.0, 99999.0, 999999.0, 9999999.0, 999.9, 9999.9),
-            *(32767.0, 32768.0, 65535.0, 2147483647.0, 2147483648.0, 4294967295.0),
-        )
+SUSPECT_VALUES = frozenset(
+    sign * value
+    for sign in (-1.0, 1.0)
+    for value in (
+        *(99.0, 999.0, 9999.0, 99999.0, 999999.0, 9999999.0, 999.9, 9999.9),
+        *(32767.0, 32768.0, 65535.0, 2147483647.0, 2147483648.0, 4294967295.0),
     )
 )
 """Values that instruments and loggers use for 'no value'."""
@@ -92,9 +90,8 @@ def _suspects(column: ColumnPlan, raw: FloatArray, lines: LineNumbers) -> list[R
     """Remark on usual 'no value' numbers that lie far outside the other values of the column."""
     if len(raw) < 3:
         return []
-    ends = np.array([np.fmin.reduce(raw), np.fmax.reduce(raw)])
     found = []
-    for value in np.unique(ends[np.isin(ends, SUSPECT_VALUES)]):
+    for value in {float(np.fmin.reduce(raw)), float(np.fmax.reduce(raw))} & SUSPECT_VALUES:
         where = raw == value
         others = raw[~where & ~np.isnan(raw)]
         if len(others) < 2:
