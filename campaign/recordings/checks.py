@@ -11,8 +11,11 @@ from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 
 from campaign.notices import CampaignStops, Notice
+from campaign.recordings.description import DESCRIPTION_FILE
+from campaign.recordings.file_glob import matches_glob
 from campaign.recordings.folder import Survey
-from campaign.recordings.identity import SET_ASIDE_BY_THE_LAB, SOLE_GENERATION, Identification
+from campaign.recordings.identity import SOLE_GENERATION, Identification
+from campaign.recordings.name_pattern import NamePattern, distinct_readings, text_to_match
 from campaign.recordings.recording import TrialIdentity
 from campaign.recordings.register import remark_on_id, shown
 from campaign.recordings.sensor_share import TrialKey, key_of_trial
@@ -39,6 +42,8 @@ class ReadFile:
         Remarks on this file.
     repetition_assumed
         Whether nobody numbers its repetition.
+    left_alone, rules_used
+        Headers that the description leaves alone, and indices of its column rules that were used.
     """
 
     file: str
@@ -50,6 +55,8 @@ class ReadFile:
     set_aside: Mapping[TrialKey, tuple[str, ...]] | None = None
     notices: tuple[Notice, ...] = ()
     repetition_assumed: bool = False
+    left_alone: tuple[str, ...] = ()
+    rules_used: frozenset[int] = frozenset()
 
     @property
     def kind(self) -> str:
@@ -222,38 +229,28 @@ def _of_row(code: str, line: int, what: str, remedy: str) -> Notice:
 def check_assumptions(
     survey: Survey, files: Sequence[ReadFile], used: Sequence[TrialIdentity]
 ) -> list[Notice]:
-    """Say once a campaign what was taken as read: generation, repetitions, rest lengths that are not known."""
+    """Say once a campaign what was taken as read: generation, repetitions, unknown rest lengths."""
     notices = []
     if used and all(trial.generation == SOLE_GENERATION for trial in used) and not _names_generation(survey):
         what = "no generation is named anywhere"
         done, remedy = f"all modules are '{SOLE_GENERATION}'", "name it in modules.csv"
-        notices.append(Notice("generation-assumed", "noted", None, None, None, what, done, remedy))
+        notices.append(_assumed("generation-assumed", what, done, remedy))
     assumed = [file.file for file in files if file.repetition_assumed and file.trials]
     if assumed:
         what = f"{len(assumed)} recordings number no repetition, the first: {assumed[0]}"
         remedy = "number repetitions in the name, trials.csv or a header"
-        place = None
-        notices.append(
-            Notice(
-                "repetition-assumed",
-                "noted",
-                None,
-                place,
-                None,
-                what,
-                "taken as repetition 1",
-                remedy,
-                len(assumed),
-            )
-        )
+        notices.append(_assumed("repetition-assumed", what, "taken as repetition 1", remedy, len(assumed)))
     unknown = sorted({(t.module, t.sensor) for t in used if t.rest_length_mm != t.rest_length_mm})
     if unknown:
-        what = f"the rest length of {len(unknown)} sensors is not known, the first: {shown(' '.join(unknown[0]))}"
+        first = shown(" ".join(unknown[0]))
+        what = f"the rest length of {len(unknown)} sensors is not known, the first: {first}"
         done, remedy = "none is invented: no strain is derived for them", "add rest_length to sensors.csv"
-        notices.append(
-            Notice("rest-length-unknown", "noted", None, None, None, what, done, remedy, len(unknown))
-        )
+        notices.append(_assumed("rest-length-unknown", what, done, remedy, len(unknown)))
     return notices
+
+
+def _assumed(code: str, what: str, done: str, remedy: str, count: int = 1) -> Notice:
+    return Notice(code, "noted", None, None, None, what, done, remedy, count)
 
 
 def _names_generation(survey: Survey) -> bool:
@@ -263,12 +260,30 @@ def _names_generation(survey: Survey) -> bool:
     }
 
 
-def unasked(reasons: Iterable[str]) -> bool:
-    """Whether something is set aside for a reason other than the lab's own word."""
-    return any(reason not in SET_ASIDE_BY_THE_LAB for reason in reasons)
+def check_rules(survey: Survey, patterns: Sequence[NamePattern], files: Sequence[ReadFile]) -> list[Notice]:
+    """Note patterns and ``[[columns]]`` tables of the description that match nothing."""
+    found: list[tuple[str, str]] = []
+    names = [file.file for file in survey.recordings]
+    for pattern in survey.description.files:
+        if not any(matches_glob(file.file, pattern) for file in survey.files):
+            found.append(("files-match-nothing", f"[recordings] files '{pattern}' matches no file"))
+    for compiled in patterns:
+        if not any(distinct_readings(compiled, text_to_match(compiled, name), None) for name in names):
+            what = f"[recordings] name '{compiled.text}' matches none of {len(names)} recordings"
+            found.append(("name-matches-nothing", what))
+    used = frozenset().union(*(file.rules_used for file in files))
+    for index, rule in enumerate(survey.description.columns):
+        if index not in used and any(file.rows for file in files):
+            column = f"header '{rule.header}'" if rule.header is not None else f"position {rule.position}"
+            found.append(("columns-match-nothing", f"[[columns]] {index + 1}, {column}, matches no column"))
+    remedy = "mend it, or take it out"
+    return [
+        Notice(code, "noted", DESCRIPTION_FILE, None, None, what, "nothing is read by it", remedy)
+        for code, what in found
+    ]
 
 
-class NothingUsable(CampaignStops):  # noqa: N818 - as its parent
+class NothingUsable(CampaignStops):
     """No recording of the campaign can be used.
 
     Attributes

@@ -1,13 +1,14 @@
 """From a campaign folder to trials: every recording read once, reduced at once, and accounted for.
 
-Values are not kept: a trial is handed to the caller's function while its recording is in memory, and only what
-that function returns stays.
+Values are not kept: a trial is handed to the caller's function while its recording is in memory, and only
+what that function returns stays.
 """
 
 from __future__ import annotations
 
 import hashlib
 import os
+from collections import Counter
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -25,6 +26,7 @@ from campaign.recordings.checks import (
     check_copies,
     check_generations,
     check_ids,
+    check_rules,
     check_trial_rows,
     nothing_usable,
 )
@@ -81,17 +83,17 @@ class Intake:
     description
         ``campaign.toml``, checked.
     recordings
-        One row a file, sorted by path: file, sha256 (empty where it was not opened), bytes, kind (empty where not
-        known), fate (``used``, ``set aside``, ``not a recording``), rows, notices (how many).
+        One row a file, sorted by path: file, sha256 (empty where it was not opened), bytes, kind (empty
+        where not known), fate (``used``, ``set aside``, ``not a recording``), rows, notices (how many).
     trials
-        One row a trial (file × sensor × repetition): file, kind, generation, batch, module, sensor, repetition,
-        session, started, fate (``used``, ``set aside``).
+        One row a trial (file × sensor × repetition): file, kind, generation, batch, module, sensor,
+        repetition, session, started, fate (``used``, ``set aside``).
     notices
         All remarks on the input, heaviest first.
     modules, sensors, sessions
-        The registers with all their columns as text, one row also for what is used but not listed. ``sensors`` has
-        rest_length_mm and rest_length_uncertainty_mm besides (float, NaN where not known); ``modules`` holds
-        the generation and batch that were settled.
+        The registers with all their columns as text, one row also for what is used but not listed.
+        ``sensors`` has rest_length_mm and rest_length_uncertainty_mm besides (float, NaN where not known);
+        ``modules`` holds the generation and batch that were settled.
     identities
         By key (file, sensor, repetition), the identity of every trial that was built.
     used
@@ -102,6 +104,8 @@ class Intake:
         Files by fate; they add up.
     other_campaigns
         Folders inside that are campaigns of their own.
+    left_alone
+        Headers of columns that the description says to leave alone, with the number of files that have them.
     set_aside_unasked
         How many notices set something aside without ``use = no`` having asked for it.
     """
@@ -118,6 +122,7 @@ class Intake:
     put_back: frozenset[TrialKey]
     counts: Counts
     other_campaigns: tuple[str, ...] = ()
+    left_alone: tuple[tuple[str, int], ...] = ()
     set_aside_unasked: int = 0
 
     @property
@@ -164,7 +169,8 @@ def run_intake(
     Raises
     ------
     CampaignStops
-        Where the folder cannot be read; :class:`campaign.recordings.checks.NothingUsable` where no trial can be used.
+        Where the folder cannot be read; :class:`campaign.recordings.checks.NothingUsable` where no trial can
+        be used.
     """
     survey = survey_folder(folder, output)
     rules = naming_rules(survey.description, survey.registers)
@@ -234,7 +240,7 @@ def batches(files: Sequence[SurveyedFile]) -> Iterator[list[SurveyedFile]]:
 def open_recording(file: SurveyedFile) -> tuple[bytes | None, Notice | None]:
     """Return the bytes of a file, or the notice that says why there are none.
 
-    A file that changed after the folder was surveyed, or while it is read, is not taken: half a log is no log.
+    A file that changed after the folder was surveyed, or while it is read, is not taken.
     """
     try:
         with file.location.open("rb") as stream:
@@ -263,7 +269,14 @@ def _not_read(file: SurveyedFile, code: str, what: str, remedy: str) -> Notice:
 
 def _take(outcome: ReadOutcome, rules: NamingRules) -> tuple[ReadFile, tuple[Trial, ...]]:
     """Identify one recording and build its trials; what is returned first holds no values."""
-    file = ReadFile(outcome.file, outcome.sha256, outcome.size_bytes, notices=outcome.notices)
+    file = ReadFile(
+        outcome.file,
+        outcome.sha256,
+        outcome.size_bytes,
+        notices=outcome.notices,
+        left_alone=outcome.left_alone,
+        rules_used=outcome.rules_used,
+    )
     if outcome.recording is None:
         return file, ()
     identification = _with_sole_generation(identify(outcome.recording, rules), rules)
@@ -338,6 +351,7 @@ def settle(survey: Survey, rules: NamingRules, read: Sequence[ReadFile]) -> Inta
                 *check_ids(identities.values()),
                 *check_trial_rows(survey),
                 *check_assumptions(survey, read, used_identities),
+                *check_rules(survey, rules.patterns, read),
             )
         )
     )
@@ -355,6 +369,7 @@ def settle(survey: Survey, rules: NamingRules, read: Sequence[ReadFile]) -> Inta
         put_back=put_back,
         counts=_count(recordings, identities, used),
         other_campaigns=survey.other_campaigns,
+        left_alone=tuple(sorted(Counter(header for file in read for header in file.left_alone).items())),
         set_aside_unasked=sum(n.weight == "set aside" and n.code != BY_REQUEST for n in notices),
     )
 
@@ -389,7 +404,7 @@ def _recordings_table(
 
 
 def _hash(file: SurveyedFile) -> str:
-    """Return the hash of a file that is no recording; empty where it cannot be opened or is no ordinary file."""
+    """Return the hash of a file that is no recording; empty where it cannot be opened."""
     if file.what in ("link", "no ordinary file", "gone") or file.size_bytes > LARGEST_RECORDING_BYTES:
         return ""
     try:
@@ -408,7 +423,7 @@ def _trials_table(identities: dict[TrialKey, TrialIdentity], used: frozenset[Tri
 
 
 def notices_table(notices: Iterable[Notice]) -> pd.DataFrame:
-    """Return notices as a table: code, weight, file, line, column, what, done, remedy (line, column: Int64)."""
+    """Return notices as a table: code, weight, file, line, column, what, done, remedy."""
     rows = [tuple(getattr(notice, name) for name in NOTICE_COLUMNS) for notice in notices]
     table = pd.DataFrame(rows, columns=list(NOTICE_COLUMNS), dtype=object)
     return table.astype({"line": "Int64", "column": "Int64"}).assign(file=table["file"].fillna(""))

@@ -1,4 +1,4 @@
-"""The values that reading hands on: recordings in canonical units; trials, one sensor's share of a recording."""
+"""What reading hands on: recordings in canonical units, and trials, one sensor's share of a recording."""
 
 from __future__ import annotations
 
