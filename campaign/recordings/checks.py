@@ -237,13 +237,13 @@ def check_assumptions(
         notices.append(_assumed("generation-assumed", what, done, remedy))
     assumed = [file.file for file in files if file.repetition_assumed and file.trials]
     if assumed:
-        what = f"{len(assumed)} recordings number no repetition, the first: {assumed[0]}"
+        what = f"recordings that number no repetition: {len(assumed)}, the first {assumed[0]}"
         remedy = "number repetitions in the name, trials.csv or a header"
         notices.append(_assumed("repetition-assumed", what, "taken as repetition 1", remedy, len(assumed)))
     unknown = sorted({(t.module, t.sensor) for t in used if t.rest_length_mm != t.rest_length_mm})
     if unknown:
         first = shown(" ".join(unknown[0]))
-        what = f"the rest length of {len(unknown)} sensors is not known, the first: {first}"
+        what = f"rest lengths that are not known: {len(unknown)}, the first of {first}"
         done, remedy = "none is invented: no strain is derived for them", "add rest_length to sensors.csv"
         notices.append(_assumed("rest-length-unknown", what, done, remedy, len(unknown)))
     return notices

@@ -148,7 +148,8 @@ class Description:
     ``strain_error``, ``pressure_error``, ``node_error``) to (value, unit). ``kinds`` maps the lab's own
     word to our kind. ``same`` holds ``[recordings.same]``. ``use`` holds ``[use]`` as written.
     ``range_strain`` and ``range_elongation_mm`` are NaN where not given. ``plan`` and ``earlier`` are
-    kept as read. ``text`` is the file as it stands (for provenance). ``notices`` are remarks on the file that do not stop.
+    kept as read. ``text`` is the file as it stands (for provenance). ``notices`` are remarks that do not
+    stop.
     """
 
     title: str
