@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 FloatArray = NDArray[np.float64]
 
 _LARGE = 150
-"""Multiplications a matrix from which BLAS beats the vector loop (measured; its exact place hardly matters)."""
+"""Multiplications a matrix from which BLAS beats the vector loop (measured; the place hardly matters)."""
 
 
 def _stack_first(a: FloatArray) -> FloatArray:

@@ -45,6 +45,8 @@ class Transfer:
         Parent of each child of `children`.
     source, target
         Slot of the child and slot of the parent, pairwise; the last pair is the response.
+    scale
+        (pairs, children) what the child's slot is multiplied by to be the parent's; None: by one.
     """
 
     children: IntArray | None
@@ -53,6 +55,11 @@ class Transfer:
     parent_of_child: IntArray
     source: IntArray
     target: IntArray
+    scale: FloatArray | None
+
+    def scale_of_slots(self) -> FloatArray:
+        """`scale`, or ones that broadcast to it."""
+        return np.ones((len(self.source), 1)) if self.scale is None else self.scale
 
 
 @dataclass(frozen=True)
@@ -172,14 +179,14 @@ class _Column:
     depth: int
     """Depth of the level it is random at; −1 for a fixed column."""
     active: list[NDArrayBool] = field(default_factory=list)
-    sums: list[FloatArray] = field(default_factory=list)
     slot: list[int] = field(default_factory=list)
+    factor: list[FloatArray] = field(default_factory=list)
+    """Per level, innermost first: where it is active, its slot, and the slot's multiple in each unit."""
 
 
 @dataclass
 class _Slot:
     vector: FloatArray
-    sums: FloatArray
     active: NDArrayBool
     own: bool
     members: list[_Column]
@@ -360,52 +367,76 @@ def _find_steps(
 
 
 def _find_slots(own: list[_Column], others: list[_Column], of_row: IntArray, starts: IntArray) -> list[_Slot]:
-    """The distinct columns of a level: a column joins the slot that equals it in every unit where it is active."""
+    """The distinct columns of a level: a column joins a slot that it is a multiple of in each active unit."""
     slots: list[_Slot] = []
     for number, column in enumerate(own + others):
         is_own = number < len(own)
         active = np.logical_or.reduceat(column.vector != 0.0, starts)
-        sums = np.add.reduceat(column.vector, starts)
-        place = _matching_slot(slots, column, active, sums, of_row, is_own)
-        if place is None and not is_own:
-            place = _free_slot(slots, column, active, sums)
+        factor = np.ones(len(starts))
+        if is_own:
+            place = next((k for k, s in enumerate(slots) if _same_vector(s.vector, column.vector)), None)
+        else:
+            place, factor = _multiple_of_slot(slots, column.vector, active, of_row, starts)
+            if place is None:
+                place = _free_slot(slots, column, active)
         if place is None:
             place = len(slots)
-            slots.append(_Slot(column.vector, sums, active, is_own, []))
+            slots.append(_Slot(column.vector, active, is_own, []))
         slots[place].members.append(column)
         column.active.append(active)
-        column.sums.append(sums)
         column.slot.append(place)
+        column.factor.append(factor)
     return slots
 
 
-def _matching_slot(
-    slots: list[_Slot],
-    column: _Column,
-    active: NDArrayBool,
-    sums: FloatArray,
-    of_row: IntArray,
-    is_own: bool,
-) -> int | None:
+def _same_vector(a: FloatArray, b: FloatArray) -> bool:
+    return a is b or np.array_equal(a, b)
+
+
+def _multiple_of_slot(
+    slots: list[_Slot], vector: FloatArray, active: NDArrayBool, of_row: IntArray, starts: IntArray
+) -> tuple[int | None, FloatArray]:
+    """The slot of which `vector` is a multiple in every active unit, and the multiples (units,)."""
+    factor = np.ones(len(starts))
+    if not active.any():
+        return (0 if slots else None), factor
+    same = next((k for k, s in enumerate(slots) if s.vector is vector), None)
+    if same is not None:
+        return same, factor
+    rows = slice(None) if active.all() else np.flatnonzero(active[of_row])
+    counts = np.diff(np.append(starts, len(vector)))[active]
+    begins = np.cumsum(counts) - counts
+    mine = vector[rows]
     for place, slot in enumerate(slots):
-        if slot.vector is column.vector:
-            return place
-        if is_own and not np.array_equal(active, slot.active):
-            continue
-        if not np.array_equal(sums, np.where(active, slot.sums, 0.0)):
-            continue
-        if np.array_equal(column.vector, np.where(active[of_row], slot.vector, 0.0)):
-            return place
-    return None
+        found = _multiples(mine, slot.vector[rows], begins, counts)
+        if found is not None:
+            factor[active] = found
+            return place, factor
+    return None, factor
 
 
-def _free_slot(slots: list[_Slot], column: _Column, active: NDArrayBool, sums: FloatArray) -> int | None:
+def _multiples(a: FloatArray, b: FloatArray, begins: IntArray, counts: IntArray) -> FloatArray | None:
+    """What b must be multiplied by in each unit to be a; None where a is no multiple of b."""
+    first = slice(0, counts[0])
+    product, squares = a[first] @ b[first], (a[first] @ a[first]) * (b[first] @ b[first])
+    if abs(product * product - squares) > 1e-10 * squares or squares == 0.0:
+        return None
+    squares = np.add.reduceat(b * b, begins)
+    if (squares == 0.0).any():
+        return None
+    factor = np.add.reduceat(a * b, begins) / squares
+    near = np.rint(factor)
+    factor = np.where(np.abs(factor - near) < 1e-12, near, factor)
+    if np.abs(a - np.repeat(factor, counts) * b).max() > 1e-13 * np.abs(a).max():
+        return None
+    return np.asarray(factor)
+
+
+def _free_slot(slots: list[_Slot], column: _Column, active: NDArrayBool) -> int | None:
     """A slot whose columns are zero in every unit where this one is not; the column moves in."""
     for place, slot in enumerate(slots):
         if not slot.own and not (slot.active & active).any():
-            slots[place] = _Slot(
-                slot.vector + column.vector, slot.sums + sums, slot.active | active, False, slot.members
-            )
+            slots[place] = _Slot(slot.vector + column.vector, slot.active | active, False, slot.members)
             return place
     return None
 
@@ -429,13 +460,18 @@ def _blocks(
 def _transfers(
     level: _Units, parents: list[list[_Column]], inward: int, response: int, last: bool
 ) -> tuple[Transfer, ...]:
+    """What each unit hands to its parent: slots that hold members of the parent's slots, and multiples."""
     source = np.full((level.count, len(parents) + 1), -1, dtype=np.int64)
+    scale = np.ones((level.count, len(parents) + 1))
     source[:, -1] = response
+    parent = np.zeros(level.count, dtype=np.int64) if last else level.parent
     for target, members in enumerate(parents):
         for column in members:
-            source[column.active[inward], target] = column.slot[inward]
-    parent = np.zeros(level.count, dtype=np.int64) if last else level.parent
-    return tuple(_transfer(children, row, parent) for children, row in _kinds(source))
+            active = column.active[inward]
+            source[active, target] = column.slot[inward]
+            above = 1.0 if last else column.factor[inward + 1][parent[active]]
+            scale[active, target] = column.factor[inward][active] / above
+    return tuple(_transfer(children, row, scale, parent) for children, row in _kinds(source))
 
 
 def _kinds(source: IntArray) -> list[tuple[IntArray | None, IntArray]]:
@@ -447,11 +483,20 @@ def _kinds(source: IntArray) -> list[tuple[IntArray | None, IntArray]]:
     return [(np.flatnonzero(kind == k), source[row]) for k, row in enumerate(first)]
 
 
-def _transfer(children: IntArray | None, source: IntArray, parent: IntArray) -> Transfer:
+def _transfer(children: IntArray | None, source: IntArray, scale: FloatArray, parent: IntArray) -> Transfer:
     parent_of_child = parent if children is None else parent[children]
     starts = np.flatnonzero(np.concatenate([[True], parent_of_child[1:] != parent_of_child[:-1]]))
     target = np.flatnonzero(source >= 0)
-    return Transfer(children, starts, parent_of_child[starts], parent_of_child, source[target], target)
+    mine = (scale if children is None else scale[children])[:, target].T
+    return Transfer(
+        children=children,
+        starts=starts,
+        parents=parent_of_child[starts],
+        parent_of_child=parent_of_child,
+        source=source[target],
+        target=target,
+        scale=None if (mine == 1.0).all() else np.ascontiguousarray(mine),
+    )
 
 
 def _cross_products(bases: FloatArray, residual: FloatArray, starts: IntArray) -> FloatArray:

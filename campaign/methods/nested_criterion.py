@@ -179,9 +179,13 @@ def _hand_over(step: Step, after: FloatArray, replicates: int) -> FloatArray:
 def _picked(split: FloatArray, transfer: Transfer) -> FloatArray:
     if transfer.children is not None:
         split = split[:, :, :, transfer.children]
-    if len(transfer.source) == len(split) and (transfer.source == np.arange(len(split))).all():
-        return split
-    return split[transfer.source[:, None], transfer.source[None, :]]
+    if len(transfer.source) != len(split) or (transfer.source != np.arange(len(split))).any():
+        split = split[transfer.source[:, None], transfer.source[None, :]]
+    return split if transfer.scale is None else split * _squared_scale(transfer.scale)
+
+
+def _squared_scale(scale: FloatArray) -> FloatArray:
+    return (scale[:, None] * scale[None, :])[:, :, None, :]
 
 
 def value_of(
@@ -263,6 +267,8 @@ def _take_back(step: Step, adjoint: FloatArray, slots: int, replicates: int) -> 
     for transfer in step.transfers:
         rows, target = transfer.parent_of_child, transfer.target
         given = parents[np.ix_(target, target, np.arange(replicates), rows)]
+        if transfer.scale is not None:
+            given = given * _squared_scale(transfer.scale)
         received = _gathered(_gathered(given, transfer.source, slots).swapaxes(0, 1), transfer.source, slots)
         if transfer.children is None:
             out += received

@@ -1,4 +1,4 @@
-"""A nested mixed model as the user states it, its check at the door, and its rotation to well-scaled columns."""
+"""A nested mixed model as the user states it, the check at the door, and well-scaled columns."""
 
 from __future__ import annotations
 

@@ -12,9 +12,32 @@ each nominal level). This module is the door; the steps have a module each:
     nested_start          analysis-of-variance moments
     nested_optimiser      L-BFGS-B, Newton polish, certificate on the cone
     nested_fit            the fit as a value
+    nested_effects        predicted effects and residuals
+    nested_inference      Satterthwaite's degrees of freedom
+    nested_certificate    the same model in statsmodels
 """
 
+from campaign.methods.nested_certificate import as_statsmodels, statsmodels_log_likelihood
 from campaign.methods.nested_design import NestedModel, RandomTerm
+from campaign.methods.nested_effects import (
+    RandomEffects,
+    conditional_residuals,
+    marginal_residuals,
+    random_effects,
+)
 from campaign.methods.nested_fit import NestedModelFit, fit_nested_model
+from campaign.methods.nested_inference import satterthwaite
 
-__all__ = ["NestedModel", "NestedModelFit", "RandomTerm", "fit_nested_model"]
+__all__ = [
+    "NestedModel",
+    "NestedModelFit",
+    "RandomEffects",
+    "RandomTerm",
+    "as_statsmodels",
+    "conditional_residuals",
+    "fit_nested_model",
+    "marginal_residuals",
+    "random_effects",
+    "satterthwaite",
+    "statsmodels_log_likelihood",
+]

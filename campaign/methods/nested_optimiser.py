@@ -161,7 +161,7 @@ def _quasi_newton(search: _Search, start: FloatArray) -> FloatArray:
 def _parameter_scales(
     layout: Layout, vector: FloatArray, gradient: Gradient, compression: Compression
 ) -> FloatArray:
-    """Square roots of a rough second derivative: with respect to Ψ it is I²/U for U units of information I."""
+    """Square roots of a rough second derivative, with respect to Ψ I²/U for U units of information I."""
     units = _unit_counts(compression)
     factors = layout.factors(vector[:, None])
     out = np.empty(len(vector))

@@ -1,0 +1,117 @@
+"""Degrees of freedom for contrasts of the fixed part and for the variance of a new unit's value."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+
+import numpy as np
+
+from campaign.methods.nested_criterion import eliminate, value_of
+from campaign.methods.nested_design import FloatArray
+from campaign.methods.nested_fit import NestedModelFit
+from campaign.methods.nested_parameters import evaluate
+
+
+def satterthwaite(
+    fit: NestedModelFit, contrast: FloatArray, extra: Mapping[str, FloatArray] | None = None
+) -> tuple[float, float]:
+    """Variance of a contrast (plus that of new random effects) and its degrees of freedom.
+
+    Parameters
+    ----------
+    fit
+        The fitted model.
+    contrast
+        (p,) weights of the fixed coefficients.
+    extra
+        Name of a random effect → its direction v (d,): v'Σv is added, as for the value of a new sensor.
+        'residual' adds σ² times the square of its single weight.
+
+    Returns
+    -------
+    tuple
+        Variance V and degrees of freedom 2 V²/Var(V).
+
+    Notes
+    -----
+    V = σ² h(θ). With σ² profiled, Var(V) = 2 V²/(N − p) + 2 ∇V'H⁻¹∇V, where H is the second derivative of the
+    profiled criterion and ∇V that of V along the profile.
+
+    References
+    ----------
+    Satterthwaite (1946), Biometrics Bulletin 2, 110; Giesbrecht & Burns (1985), Biometrics 41, 477.
+    """
+    degrees = fit.compression.rows - (fit.compression.fixed if fit.restricted else 0)
+    weights = np.linalg.solve(fit.compression.columns.fixed_basis.T, np.asarray(contrast, dtype=float))
+    directions = _scaled_directions(fit, extra or {})
+    free = [n for n in range(len(fit.vector)) if not _in_zero_column(fit, n)]
+    places, widths = _star(fit, free)
+    variances = _variances(fit, places, weights, directions)
+    variance = float(variances[0])
+    if not variance > 0.0:
+        return variance, float(degrees)
+    spread = 2.0 * variance**2 / degrees
+    if free:
+        slope = (variances[1::2] - variances[2::2]) / (2.0 * widths)
+        _, gradients, _ = evaluate(fit.compression, fit.layout, places[:, 1:], restricted=fit.restricted)
+        hessian = (gradients[free, 0::2] - gradients[free, 1::2]) / (2.0 * widths)
+        spread += 2.0 * _quadratic((hessian + hessian.T) / 2.0, slope)
+    return variance, 2.0 * variance**2 / spread
+
+
+def _scaled_directions(fit: NestedModelFit, extra: Mapping[str, FloatArray]) -> dict[int, FloatArray]:
+    """Term number (−1 for the residual) → direction in scaled columns."""
+    names = [term.name for term in fit.model.terms]
+    out = {}
+    for name, direction in extra.items():
+        vector = np.atleast_1d(np.asarray(direction, dtype=float))
+        if name == "residual":
+            out[-1] = vector
+        else:
+            number = names.index(fit.model.term(name).name)
+            out[number] = np.linalg.solve(fit.compression.columns.term_bases[number].T, vector)
+    return out
+
+
+def _in_zero_column(fit: NestedModelFit, parameter: int) -> bool:
+    diagonal = set(fit.layout.diagonal())
+    return any(fit.vector[n] == 0.0 for n in fit.layout.column_of(parameter) if n in diagonal)
+
+
+def _star(fit: NestedModelFit, free: list[int]) -> tuple[FloatArray, FloatArray]:
+    """The estimate, then each free parameter a little above and a little below it."""
+    largest = float(np.abs(fit.vector).max()) if len(fit.vector) else 1.0
+    widths = 1e-4 * np.maximum(np.abs(fit.vector[free]), 1e-2 * largest)
+    places = np.repeat(fit.vector[:, None], 1 + 2 * len(free), axis=1)
+    for k, n in enumerate(free):
+        places[n, 1 + 2 * k] += widths[k]
+        places[n, 2 + 2 * k] -= widths[k]
+    return places, widths
+
+
+def _variances(
+    fit: NestedModelFit, places: FloatArray, weights: FloatArray, directions: dict[int, FloatArray]
+) -> FloatArray:
+    """V along the profile at each place, (R,)."""
+    compression = fit.compression
+    factors = fit.layout.factors(places)
+    value = value_of(
+        compression, eliminate(compression, compression.products, factors), restricted=fit.restricted
+    )
+    relative = np.einsum("i,rij,j->r", weights, value.unscaled_covariance, weights)
+    for number, direction in directions.items():
+        if number < 0:
+            relative = relative + direction[0] ** 2
+        else:
+            relative = relative + (np.einsum("i,ikr->kr", direction, factors[number]) ** 2).sum(axis=0)
+    degrees = compression.rows - (compression.fixed if fit.restricted else 0)
+    return np.asarray(value.residual_square / degrees * relative)
+
+
+def _quadratic(hessian: FloatArray, slope: FloatArray) -> float:
+    """Quadratic form slope' hessian⁻¹ slope over the directions in which the criterion is curved."""
+    size = np.sqrt(np.maximum(np.diag(hessian), 1e-12 * np.abs(hessian).max()))
+    values, vectors = np.linalg.eigh(hessian / np.outer(size, size))
+    kept = values > 1e-8 * values.max()
+    along = vectors[:, kept].T @ (slope / size)
+    return float((along**2 / values[kept]).sum())
