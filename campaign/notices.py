@@ -120,7 +120,7 @@ NOTICE_CODES: dict[str, str] = {
     "register-quotes": "the quotation marks of a register do not pair up",
     "register-column-missing": "a register lacks a column that it needs",
     "register-column-twice": "a register has two columns of one name",
-    "register-column-unknown": "a column of a register looks like a slip of a known one; it is kept as a free column",
+    "register-column-unknown": "a column of a register looks like a slip of a known one; it is kept as it is",
     "register-row-ragged": "a row of a register has too many or too few fields; it is not used",
     "register-row-nameless": "a row of a register does not name its thing; it is not used",
     "register-row-repeated": "two rows of a register say the same of one thing; read once",

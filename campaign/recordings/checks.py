@@ -10,7 +10,7 @@ from collections import defaultdict
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 
-from campaign.notices import CampaignStops, Notice
+from campaign.notices import Notice
 from campaign.recordings.description import DESCRIPTION_FILE
 from campaign.recordings.file_glob import matches_glob
 from campaign.recordings.folder import Survey
@@ -281,20 +281,6 @@ def check_rules(survey: Survey, patterns: Sequence[NamePattern], files: Sequence
         Notice(code, "noted", DESCRIPTION_FILE, None, None, what, "nothing is read by it", remedy)
         for code, what in found
     ]
-
-
-class NothingUsable(CampaignStops):
-    """No recording of the campaign can be used.
-
-    Attributes
-    ----------
-    intake
-        The whole intake, so that every notice can be shown.
-    """
-
-    def __init__(self, notices: Iterable[Notice], intake: object) -> None:
-        super().__init__(notices)
-        self.intake = intake
 
 
 def nothing_usable(counts: Counts) -> Notice | None:

@@ -16,10 +16,9 @@ from typing import TypeVar
 
 import pandas as pd
 
-from campaign.notices import Notice, sort_notices
+from campaign.notices import CampaignStops, Notice, sort_notices
 from campaign.recordings.checks import (
     Counts,
-    NothingUsable,
     ReadFile,
     check_assumptions,
     check_claims,
@@ -137,6 +136,20 @@ class Intake:
         return dict(zip(opened["file"], opened["sha256"], strict=True))
 
 
+class NothingUsable(CampaignStops):
+    """No recording of the campaign can be used.
+
+    Attributes
+    ----------
+    intake
+        The whole intake, so that every notice can be shown.
+    """
+
+    def __init__(self, fault: Notice, intake: Intake) -> None:
+        super().__init__([fault])
+        self.intake = replace(intake, notices=sort_notices([fault, *intake.notices]))
+
+
 def run_intake(
     folder: Path,
     reduce: Callable[[Trial], T],
@@ -169,8 +182,7 @@ def run_intake(
     Raises
     ------
     CampaignStops
-        Where the folder cannot be read; :class:`campaign.recordings.checks.NothingUsable` where no trial can
-        be used.
+        Where the folder cannot be read; :class:`NothingUsable` where no trial can be used.
     """
     survey = survey_folder(folder, output)
     rules = naming_rules(survey.description, survey.registers)
@@ -185,7 +197,7 @@ def run_intake(
                 results[key] = reduce(trial)
     intake = settle(survey, rules, read)
     if (fault := nothing_usable(intake.counts)) is not None:
-        raise NothingUsable([fault], intake)
+        raise NothingUsable(fault, intake)
     kept = intake.used | intake.put_back if keep_put_back else intake.used
     return intake, {key: result for key, result in results.items() if key in kept}
 

@@ -1,0 +1,181 @@
+"""The command line: arguments in, exit status out.
+
+Everything heavy is imported inside the commands, so that ``--help`` answers at once.
+"""
+
+from __future__ import annotations
+
+import argparse
+import os
+import shutil
+import sys
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
+from pathlib import Path
+
+from campaign import __version__
+from campaign.notices import CampaignStops
+
+DONE, SET_ASIDE, STOPPED, INTERRUPTED = 0, 1, 2, 130
+"""Exit statuses: done; something is set aside and that counts; nothing written; stopped by hand."""
+
+Progress = Callable[[str, int, int], None]
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run one command and return its exit status.
+
+    Parameters
+    ----------
+    arguments
+        Words after the program's name; those of the process where ``None``.
+
+    Returns
+    -------
+    int
+        0 done, 1 something was set aside and ``--fail-on-set-aside`` was given, 2 nothing written.
+    """
+    _show_every_character()
+    options = _parser().parse_args(arguments)
+    try:
+        status: int = options.run(options)
+        sys.stdout.flush()
+    except CampaignStops as stops:
+        _say_stops(stops)
+        return STOPPED
+    except BrokenPipeError:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return DONE
+    except KeyboardInterrupt:
+        print("stopped by hand; nothing is written", file=sys.stderr)
+        return INTERRUPTED
+    except OSError as fault:
+        print(
+            f"{fault.filename or 'the disk'}: {fault.strerror or fault}; nothing is written", file=sys.stderr
+        )
+        return STOPPED
+    return status
+
+
+def _parser() -> argparse.ArgumentParser:
+    parser = argparse.ArgumentParser(
+        prog="campaign",
+        description="Turns a folder of strain sensor recordings into an offline site of evidence.",
+        epilog="exit status: 0 done; 1 something is set aside, with --fail-on-set-aside; 2 nothing written",
+    )
+    parser.add_argument("--version", action="version", version=f"campaign {__version__}")
+    commands = parser.add_subparsers(required=True, metavar="COMMAND")
+
+    report = commands.add_parser("report", help="read a campaign folder and write its site")
+    report.add_argument("folder", metavar="FOLDER", type=Path, help="the campaign folder")
+    report.add_argument(
+        "--into", metavar="SITE", type=Path, help="folder to write the site to (FOLDER_report beside FOLDER)"
+    )
+    report.add_argument(
+        "--fail-on-set-aside",
+        action="store_true",
+        help="end with status 1 where anything is set aside unasked",
+    )
+    report.set_defaults(run=_report)
+
+    inspect = commands.add_parser("inspect", help="read and check a campaign folder, and say what is found")
+    inspect.add_argument("folder", metavar="FOLDER", type=Path, help="the campaign folder")
+    inspect.add_argument(
+        "--tables",
+        metavar="DIR",
+        type=Path,
+        help="also write recordings.csv, trials.csv and notices.csv to DIR",
+    )
+    inspect.set_defaults(run=_inspect)
+
+    begin = commands.add_parser("begin", help="look at a tree of recordings and write a first campaign.toml")
+    begin.add_argument("folder", metavar="FOLDER", type=Path, help="the folder that holds the recordings")
+    begin.set_defaults(run=_begin)
+    return parser
+
+
+def _report(options: argparse.Namespace) -> int:
+    from campaign.pipeline import report
+
+    with _progress_bar() as progress:
+        return report(options.folder, options.into, options.fail_on_set_aside, progress)
+
+
+def _inspect(options: argparse.Namespace) -> int:
+    from campaign.recordings.inspection import (
+        check_tables_folder,
+        inspection_lines,
+        print_lines,
+        write_tables,
+    )
+    from campaign.recordings.intake import NothingUsable, inspect_folder
+
+    if options.tables is not None:
+        check_tables_folder(options.tables)
+    status = DONE
+    try:
+        with _progress_bar() as progress:
+            intake = inspect_folder(options.folder, options.tables, progress)
+    except NothingUsable as stops:
+        intake, status = stops.intake, STOPPED
+    if options.tables is not None:
+        write_tables(intake, options.tables)
+    sys.stdout.write(print_lines(inspection_lines(intake, _width())))
+    return status
+
+
+def _begin(options: argparse.Namespace) -> int:
+    from campaign.recordings.beginning import write_first_description
+
+    path = write_first_description(options.folder)
+    print(f"{path} is written. Every guess in it is marked; look them through, then run:")
+    print(f"  campaign inspect {options.folder}")
+    return DONE
+
+
+def _say_stops(stops: CampaignStops) -> None:
+    """Name every fault that stops the campaign and, where recordings were read, what became of them."""
+    from campaign.recordings.inspection import inspection_lines, notice_lines, print_lines
+
+    intake = getattr(stops, "intake", None)
+    lines = (
+        inspection_lines(intake, _width()) if intake is not None else notice_lines(stops.notices, _width())
+    )
+    sys.stderr.write(print_lines(lines).lstrip("\n"))
+
+
+def _width() -> int:
+    return min(max(shutil.get_terminal_size((100, 24)).columns, 60), 110)
+
+
+def _show_every_character() -> None:
+    """Spell out what the terminal cannot show, rather than fail on it."""
+    for stream in (sys.stdout, sys.stderr):
+        reconfigure = getattr(stream, "reconfigure", None)
+        if reconfigure is not None:
+            reconfigure(errors="backslashreplace")
+
+
+@contextmanager
+def _progress_bar() -> Iterator[Progress]:
+    """Show what is being done, on the error stream and only where that is a terminal."""
+    from tqdm import tqdm
+
+    bars: list[tqdm] = []  # type: ignore[type-arg, unused-ignore]
+
+    def progress(what: str, done: int, total: int) -> None:
+        if not bars or bars[-1].desc != what:
+            if bars:
+                bars[-1].close()
+            bars.append(
+                tqdm(desc=what, total=total, disable=None, leave=False, unit_scale=True, file=sys.stderr)
+            )
+            bars[-1].desc = what
+        bars[-1].total = total
+        bars[-1].update(done - bars[-1].n)
+
+    try:
+        yield progress
+    finally:
+        if bars:
+            bars[-1].close()
