@@ -33,6 +33,9 @@ class StretchMeans:
     slopes, slope_standard_errors
         Shape (stretches,): least-squares slope against time and its standard error (unit of the samples a
         second); NaN for stretches of fewer than 3 samples.
+    slope_degrees_of_freedom
+        Shape (stretches,): degrees of freedom behind the slopes' standard errors, at least 1. A drift does
+        not lower them: the autocorrelation is taken about the lines.
     autocorrelation_time
         Pooled integrated autocorrelation time, in samples, at least 1 (1 for independent samples).
     """
@@ -42,6 +45,7 @@ class StretchMeans:
     effective_counts: FloatArray
     slopes: FloatArray
     slope_standard_errors: FloatArray
+    slope_degrees_of_freedom: FloatArray
     autocorrelation_time: float
 
 
@@ -80,8 +84,9 @@ def stretch_means(
     floor = resolution / np.sqrt(12.0)
     errors = np.maximum(np.sqrt(variances / effective), floor)
 
-    slopes, slope_errors = _slopes(residuals, times_centred, codes, counts)
-    return StretchMeans(means, errors, effective, slopes, slope_errors, float(np.max(factors, initial=1.0)))
+    slopes, slope_errors, degrees = _slopes(residuals, times_centred, codes, counts)
+    longest_time = float(np.max(factors, initial=1.0))
+    return StretchMeans(means, errors, effective, slopes, slope_errors, degrees, longest_time)
 
 
 def _changes(values: FloatArray, codes: IntArray) -> FloatArray:
@@ -101,8 +106,8 @@ def _own_variances(squares: FloatArray, counts: IntArray, effective: FloatArray)
 
 def _slopes(
     residuals: FloatArray, times: FloatArray, codes: IntArray, counts: IntArray
-) -> tuple[FloatArray, FloatArray]:
-    """Least-squares slopes with standard errors that respect the autocorrelation about the line."""
+) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Least-squares slopes, standard errors by the autocorrelation about the lines, degrees of freedom."""
     spread = np.bincount(codes, times**2)
     usable = (spread > 0) & (counts >= 3)
     nan = np.full(len(counts), np.nan)
@@ -110,17 +115,17 @@ def _slopes(
     about_line = residuals - np.nan_to_num(slopes)[codes] * times
     correlation = _pooled_correlation(about_line, counts, removed=2)
     factors = np.clip(_variance_factors(correlation, counts), 1.0, counts.astype(float))
-    degrees = np.maximum(counts - 2.0 * factors, 1.0)
-    variance = np.bincount(codes, about_line**2) / degrees
+    variance = np.bincount(codes, about_line**2) / np.maximum(counts - 2.0 * factors, 1.0)
     errors = np.sqrt(np.divide(variance * factors, spread, out=nan.copy(), where=usable))
-    return slopes, errors
+    return slopes, errors, np.maximum(counts / factors - 2.0, 1.0)
 
 
 def _pooled_correlation(residuals: FloatArray, counts: IntArray, removed: int) -> FloatArray:
     """Autocorrelations at lags 0, 1, … up to the end of the initial positive sequence.
 
     ``removed`` is the number of coefficients fitted to each stretch before (1: mean, 2: line). Each lowers
-    every autocovariance by about the variance of the mean, which is put back by fixed-point iteration.
+    every autocovariance by about the variance of the mean, which is put back by fixed-point iteration. About
+    lines the lags are those of the uncorrected sequence: what is put back would lengthen it without end.
     """
     longest = int(counts.max(initial=0))
     last_lag = int(np.median(counts)) // 2 if len(counts) else 0
@@ -135,7 +140,7 @@ def _pooled_correlation(residuals: FloatArray, counts: IntArray, removed: int) -
         factors = _variance_factors(kept / kept[0], counts)
         of_means = np.clip(kept[0] * factors / counts, 0.0, kept[0])
         corrected = (sums + removed * (of_means @ pairs_each)) / pairs
-        kept_next = _initial_positive(corrected)
+        kept_next = _initial_positive(corrected) if removed == 1 else corrected[: len(kept)]
         if len(kept_next) == len(kept) and np.allclose(kept_next, kept, rtol=1e-6, atol=0.0):
             break
         kept = kept_next

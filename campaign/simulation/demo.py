@@ -94,7 +94,7 @@ def demo_places() -> tuple[Place, ...]:
 
 def demo_truth() -> Truth:
     """Return what is true: the blade makes sensors more alike, the clamps stay as they were."""
-    noise = SampleNoise(white=0.020, slow=0.030, slow_correlation=0.85)
+    noise = SampleNoise(white=0.030, slow=0.010, slow_correlation=0.5)
     settling = Settling(share=0.04, time_s=1.6)
     poured = GenerationTruth(
         law=SignalLaw(parasitic=9.0, per_mm=0.72),

@@ -383,8 +383,7 @@ def _settled(means: StretchMeans) -> BoolArray:
     """False where the slope over the averaged part is significant (Bonferroni over the plateaus)."""
     with np.errstate(divide="ignore", invalid="ignore"):
         ratio = np.abs(means.slopes / means.slope_standard_errors)
-    degrees = np.maximum(means.effective_counts - 2.0, 1.0)
-    p = np.asarray(2.0 * stats.t.sf(ratio, degrees))
+    p = np.asarray(2.0 * stats.t.sf(ratio, means.slope_degrees_of_freedom))
     return np.asarray(~(p < SETTLED_RISK / len(p)))
 
 
