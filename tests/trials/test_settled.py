@@ -1,4 +1,4 @@
-"""A plateau that drifts is found although its drift looks like slow noise; settled ones are seldom accused."""
+"""A drifting plateau is found although its drift looks like slow noise; settled ones are seldom accused."""
 
 from __future__ import annotations
 
