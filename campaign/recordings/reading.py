@@ -190,6 +190,8 @@ def _finished(table: _Table, plain: FloatArray | None) -> ReadOutcome:
     """Join both roads, judge the values, and hand over the recording."""
     rows = _joined(table, plain)
     remarks = list(rows.remarks)
+    if any(remark.code == "quote" for remark in remarks):
+        return _outcome(table.item, table.sha256, (*table.notices, *gather_remarks(remarks)), table.plan)
     if not len(rows.lines):
         remarks.append(Remark("no-rows", table.layout.header_line, None))
     columns = [column for column in table.plan.columns if column.content != "identity"]
