@@ -12,6 +12,8 @@ from pathlib import Path
 
 import pytest
 
+from campaign import cli
+from campaign.cli import main
 from campaign.notices import NOTICE_CODES
 
 ROOT = Path(__file__).parents[1]
@@ -43,6 +45,29 @@ def notice_table() -> str:
 def test_every_notice_code_is_in_the_manual_with_its_meaning() -> None:
     written = DEVELOPERS[DEVELOPERS.index(START) + len(START) : DEVELOPERS.index(END)].strip()
     assert written == notice_table(), "refresh with: python tests/test_documents.py"
+
+
+def _help(capsys: pytest.CaptureFixture[str], *words: str) -> str:
+    with pytest.raises(SystemExit) as end:
+        main([*words, "--help"])
+    assert end.value.code == 0
+    return capsys.readouterr().out
+
+
+def test_every_command_and_option_is_in_the_readme(capsys: pytest.CaptureFixture[str]) -> None:
+    commands = re.findall(r"^    ([a-z]+)  ", _help(capsys), re.MULTILINE)
+    assert {"report", "inspect", "begin"} <= set(commands)
+    for command in commands:
+        words = _help(capsys, command)
+        assert f"`campaign {command} FOLDER`" in README
+        for option in set(re.findall(r"--[a-z][a-z-]+", words)) - {"--help"}:
+            assert f"`{option}" in README, f"{command} {option}"
+    assert "`campaign --version`" in README
+
+
+def test_every_exit_status_is_in_the_readme() -> None:
+    for status in (cli.DONE, cli.SET_ASIDE, cli.STOPPED, cli.INTERRUPTED):
+        assert re.search(rf"^\| {status} \|", README, re.MULTILINE)
 
 
 def _sources() -> dict[str, Path]:
