@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import re
 from functools import cache
+from html import unescape
 
 from latex2mathml.converter import convert
 from markupsafe import Markup
@@ -71,10 +73,19 @@ FORMULAS: dict[str, str] = {
 """Formulas by name; a template writes ``{{ formulas.gauge_factor }}``."""
 
 
+WIDE = 24
+"""Signs of a formula above which it may not fit a narrow screen."""
+
+
 @cache
 def mathml(latex: str) -> Markup:
-    """Return a displayed formula as MathML, without the style attributes that the content policy forbids."""
-    return Markup(convert(latex, display="block"))
+    """Return a displayed formula as MathML, without the style attributes that the content policy forbids.
+
+    A formula too wide for a narrow screen can be reached by keyboard, so that it can be scrolled.
+    """
+    made = convert(latex, display="block")
+    wide = len(unescape(re.sub(r"<[^>]+>", "", made))) > WIDE
+    return Markup(made.replace("<math ", '<math tabindex="0" ', 1) if wide else made)
 
 
 def rendered_formulas() -> dict[str, Markup]:
