@@ -266,8 +266,8 @@ def common_quadratic(
     Parameters
     ----------
     x, y, run
-        Shape (readings,); ``run`` codes from 0 (branches of a run are told apart if they are to have own
-        lines).
+        Shape (readings,); ``run`` codes from 0, one for each own line; those of fewer than three
+        readings are left out.
     confidence
         Of the interval.
 
@@ -276,12 +276,16 @@ def common_quadratic(
     tuple of float
         Estimate, lower and upper limit, in units of y per unit of x squared; NaN where not identifiable.
     """
+    held = np.bincount(run)[run] >= 3
+    if not held.any():
+        return float("nan"), float("nan"), float("nan")
+    x, y, run = x[held], y[held], np.unique(run[held], return_inverse=True)[1].astype(np.int64)
     groups = int(run.max()) + 1
     square = (x - x.mean()) ** 2
     own_square = _residuals(x, square, run, groups)
     own_y = _residuals(x, y, run, groups)
     spread = float(own_square @ own_square)
-    degrees = len(x) - 2 * len(np.unique(run)) - 1
+    degrees = len(x) - 2 * groups - 1
     if degrees < 1 or not spread > 1e-12 * float(square @ square):
         return float("nan"), float("nan"), float("nan")
     estimate = float(own_square @ own_y) / spread

@@ -16,7 +16,7 @@ from campaign.methods.calibration_line import Polynomial, t_quantile
 
 FloatArray = npt.NDArray[np.float64]
 
-READ = "read"
+INSIDE_CALIBRATION = "inside calibration"
 NO_INTERVAL = "no interval"
 OUTSIDE_CALIBRATION = "outside calibration"
 
@@ -39,8 +39,8 @@ class ReadingModel:
         Half the loop width, where the direction of approach is not known; else 0.
     residual_variance
         Variance of one reading about its run.
-    t_line, t_reading
-        Quantiles (two-sided 95 % as a rule) for the terms from between runs and for the others.
+    t
+        Quantile of Student's t (two-sided 95 % as a rule).
     """
 
     intercept: float
@@ -54,8 +54,7 @@ class ReadingModel:
     lack_of_fit_variance: float = 0.0
     direction_half_width: float = 0.0
     residual_variance: float = 0.0
-    t_line: float = 1.959963984540054
-    t_reading: float = 1.959963984540054
+    t: float = 1.959963984540054
 
 
 @dataclass(frozen=True)
@@ -95,16 +94,20 @@ def inverse_limits(
     y = np.asarray(signal, dtype=np.float64)
     a, b = model.intercept, model.slope
     estimate = np.asarray((y - a) / b)
-    line, reading = np.square(model.t_line), np.square(model.t_reading)
+    t_squared = np.square(model.t)
     run0, run01, run1 = model.run_var_intercept, model.run_cov, model.run_var_slope
     if hold_run_variance:
         run0 = run0 + 2.0 * estimate * run01 + estimate**2 * run1  # type: ignore[assignment]
         run01 = run1 = 0.0
-    fixed = model.lack_of_fit_variance + np.square(model.direction_half_width)
-    fixed = fixed + np.asarray(model.residual_variance) / readings
-    constant = line * (model.var_intercept + run0) + reading * fixed
-    linear = line * (model.cov_intercept_slope + run01)
-    quadratic = line * (model.var_slope + run1)
+    constant = t_squared * (
+        model.var_intercept
+        + run0
+        + model.lack_of_fit_variance
+        + np.square(model.direction_half_width)
+        + np.asarray(model.residual_variance) / readings
+    )
+    linear = t_squared * (model.cov_intercept_slope + run01)
+    quadratic = t_squared * (model.var_slope + run1)
     leading = np.asarray(np.square(b) - quadratic)
     half_linear = (y - a) * b + linear
     discriminant = half_linear**2 - leading * ((y - a) ** 2 - constant)
@@ -133,7 +136,7 @@ def read_reference(
     if not signal_low <= signal <= signal_high:
         return InverseReading(float("nan"), float("nan"), float("nan"), OUTSIDE_CALIBRATION)
     estimate, low, high = (float(value) for value in inverse_limits(model, signal, readings))
-    return InverseReading(estimate, low, high, READ if np.isfinite(low) else NO_INTERVAL)
+    return InverseReading(estimate, low, high, INSIDE_CALIBRATION if np.isfinite(low) else NO_INTERVAL)
 
 
 def fieller_interval(
@@ -174,11 +177,10 @@ def fieller_interval(
         float(scaled[1, 1]),
         float(scaled[0, 1]),
         residual_variance=0.0 if mean_response else variance,
-        t_line=t,
-        t_reading=t,
+        t=t,
     )
     estimate, low, high = (float(value) for value in inverse_limits(model, mean, len(signals)))
-    return InverseReading(estimate, low, high, READ if np.isfinite(low) else NO_INTERVAL)
+    return InverseReading(estimate, low, high, INSIDE_CALIBRATION if np.isfinite(low) else NO_INTERVAL)
 
 
 def reading_uncertainty(line: Polynomial, signal: float) -> float:

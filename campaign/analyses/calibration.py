@@ -1,0 +1,269 @@
+"""Calibration: what line each sensor follows and how well, with runs as the unit of evidence.
+
+The line of a sensor is that of its runs' lines together; its covariance and degrees of freedom come from
+between runs, its own where they are many and pooled over the sensors of the generation where they are few.
+The ordinary least-squares line is given for comparison and never carries an interval.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field
+
+import pandas as pd
+
+from campaign.analyses.calibration_influence import influence_of_readings, ordinary_lines, outlying_notices
+from campaign.analyses.calibration_labels import (
+    SharedReference,
+    campaign_labels,
+    record_conditions,
+    shared_reference,
+)
+from campaign.analyses.calibration_lines import BranchLine, branch_lines, run_lines_frame
+from campaign.analyses.calibration_spread import hysteresis_frame, repeatability_frame
+from campaign.analyses.sensor_lines import sensor_lines_frame
+from campaign.analyses.used_readings import used_readings
+from campaign.methods.calibration_line import t_quantile
+from campaign.methods.inverse_reading import ReadingModel
+from campaign.notices import Notice
+from campaign.recordings.description import Description
+from campaign.recordings.recording import ReferenceQuantity
+from campaign.trials.readings import SENSOR_KEYS, Readings
+
+
+@dataclass(frozen=True)
+class CalibrationRecord:
+    """The line of one sensor and branch with all that a reading by it needs, for export.
+
+    Signals are in ``unit``, x in ``reference_unit``. NaN where unknown: with one run there is no run-to-run
+    error and so no interval.
+
+    Attributes
+    ----------
+    intercept, slope, var_intercept, var_slope, cov_intercept_slope
+        The line and its covariance, reference uncertainty included.
+    run_var_intercept, run_var_slope, run_cov
+        Covariance of a new run's line about it: its variance at x is v₀ + 2 x c + x² v₁.
+    residual_variance, lack_of_fit_variance, direction_half_width
+        Of one reading about its run; of a level about the line in every run; half the loop width (both
+        branches).
+    degrees_of_freedom, t_quantile_975
+        Effective degrees of freedom of what averaging does not reduce, at mid range (Welch–Satterthwaite).
+    variance_source
+        ``"this sensor's runs"``, ``"pooled over sensors"`` or ``"run-to-run error unknown"``.
+    signal_low, signal_high, x_low, x_high, zero_signal
+        Calibrated range, and the line's signal at x = 0.
+    """
+
+    generation: str
+    module: str
+    sensor: str
+    branch: str
+    unit: str
+    reference_name: str
+    reference_unit: str
+    intercept: float
+    slope: float
+    var_intercept: float
+    var_slope: float
+    cov_intercept_slope: float
+    run_var_intercept: float
+    run_var_slope: float
+    run_cov: float
+    residual_variance: float
+    lack_of_fit_variance: float
+    direction_half_width: float
+    degrees_of_freedom: float
+    t_quantile_975: float
+    variance_source: str
+    signal_low: float
+    signal_high: float
+    x_low: float
+    x_high: float
+    zero_signal: float
+    rest_length_mm: float
+    rest_length_uncertainty_mm: float
+    runs: int
+    conditions: dict[str, str]
+    date: str
+    files: tuple[str, ...]
+    sha256: tuple[str, ...]
+
+    @property
+    def reading_model(self) -> ReadingModel:
+        """The record as the model that reads a reference from a signal."""
+        return ReadingModel(
+            self.intercept,
+            self.slope,
+            self.var_intercept,
+            self.var_slope,
+            self.cov_intercept_slope,
+            self.run_var_intercept,
+            self.run_var_slope,
+            self.run_cov,
+            self.lack_of_fit_variance,
+            self.direction_half_width,
+            self.residual_variance,
+            self.t_quantile_975,
+        )
+
+
+@dataclass(frozen=True)
+class Calibration:
+    """What the staircases of a campaign say about its sensors' lines.
+
+    Attributes
+    ----------
+    reference
+        What x is.
+    readings
+        The table of readings with fitted, residual (signal units), studentised, leverage and cooks_distance
+        by the line that stands for the sensor (both branches, else the only one); NaN where not used.
+    sensor_lines
+        One row a sensor and branch (rising, falling, both): columns of the table ``sensor_lines`` of the
+        site, and full_scale_output (signal units), full_scale (what it covers), gauge_factor_low,
+        gauge_factor_high, gauge_factor_label, hysteresis_null_percent_fso (95 % quantile of the largest
+        difference were there none), hysteresis_p, run_to_run_sd (strain-equivalent at mid range, units of x).
+    run_lines
+        generation, module, sensor, position, session, repetition, trial, branch, intercept, slope,
+        residual_sd, readings, x_low, x_high, zero_return (signal), zero_return_percent_fso.
+    level_hysteresis
+        generation, module, sensor, nominal_level, difference (rising − falling, signal), low, high
+        (simultaneous 95 %), percent_fso, runs, label (empty or 'not distinguishable from the stand').
+    repeatability
+        generation, module, sensor, direction, nominal_level, runs, sd, range (signal), sd_percent_fso.
+    ordinary_lines
+        Least squares over all readings, for comparison only: module, sensor, branch, intercept, slope,
+        se_intercept, se_slope.
+    records
+        One a sensor and branch.
+    shared_reference
+        What uncertainty of the reference was carried.
+    labels
+        What the whole campaign's lines must be read with, by short name.
+    notices
+        Outlying readings, sensors without a line.
+    """
+
+    reference: ReferenceQuantity
+    readings: pd.DataFrame
+    sensor_lines: pd.DataFrame
+    run_lines: pd.DataFrame
+    level_hysteresis: pd.DataFrame
+    repeatability: pd.DataFrame
+    ordinary_lines: pd.DataFrame
+    records: tuple[CalibrationRecord, ...]
+    shared_reference: SharedReference
+    labels: dict[str, str] = field(default_factory=dict)
+    notices: tuple[Notice, ...] = ()
+
+
+def analyse_calibration(
+    readings: Readings, description: Description, sensors: pd.DataFrame, file_hashes: Mapping[str, str]
+) -> Calibration:
+    """Calibrate every sensor whose readings are used.
+
+    Parameters
+    ----------
+    readings
+        Plateaus of all staircases.
+    description
+        Rated range and uncertainties of the reference.
+    sensors
+        Register of sensors: module, sensor and, where known, rest_length_mm and rest_length_uncertainty_mm.
+    file_hashes
+        SHA-256 of each recording by its path, for the records.
+
+    Returns
+    -------
+    Calibration
+        With empty tables where no sensor has a line.
+    """
+    used = used_readings(readings, sensors)
+    lines = branch_lines(used, readings.reference, description)
+    hysteresis = hysteresis_frame(used, lines, description)
+    repeatability = repeatability_frame(used, lines)
+    frame = sensor_lines_frame(used, lines, readings.reference)
+    table = influence_of_readings(readings.table, used, lines)
+    return Calibration(
+        readings.reference,
+        table,
+        frame,
+        run_lines_frame(used, lines),
+        hysteresis,
+        repeatability,
+        ordinary_lines(used, lines),
+        tuple(_record(line, used, readings.reference, description, file_hashes) for line in lines),
+        shared_reference(used, description, readings.reference),
+        campaign_labels(used, lines, description, readings.reference),
+        (*_without_line(used, lines), *outlying_notices(table)),
+    )
+
+
+def _record(
+    line: BranchLine,
+    used: pd.DataFrame,
+    reference: ReferenceQuantity,
+    description: Description,
+    file_hashes: Mapping[str, str],
+) -> CalibrationRecord:
+    """The calibration record of one line."""
+    rows = used.loc[line.rows]
+    files = tuple(sorted(set(rows["trial"].astype(str))))
+    low, high = float(rows["x"].min()), float(rows["x"].max())
+    ends = sorted([line.intercept + line.slope * low, line.intercept + line.slope * high])
+    dates = sorted(str(started)[:10] for started in rows["started"] if started)
+    return CalibrationRecord(
+        line.generation,
+        line.module,
+        line.sensor,
+        line.branch,
+        line.unit,
+        reference.name,
+        reference.unit,
+        line.intercept,
+        line.slope,
+        float(line.covariance[0, 0]),
+        float(line.covariance[1, 1]),
+        float(line.covariance[0, 1]),
+        float(line.run_covariance[0, 0]),
+        float(line.run_covariance[1, 1]),
+        float(line.run_covariance[0, 1]),
+        line.residual_variance,
+        line.lack_of_fit_variance,
+        line.direction_half_width,
+        line.effective_degrees,
+        t_quantile(0.975, line.effective_degrees) if line.effective_degrees > 0 else float("nan"),
+        line.variance_source,
+        ends[0],
+        ends[1],
+        low,
+        high,
+        line.intercept if reference.name != "length" else float("nan"),
+        float(rows["rest_length_mm"].iloc[0]),
+        float(rows["rest_length_uncertainty_mm"].iloc[0]),
+        line.runs,
+        record_conditions(rows, line, reference),
+        dates[-1] if dates else (description.last_day or description.date),
+        files,
+        tuple(file_hashes.get(file, "") for file in files),
+    )
+
+
+def _without_line(used: pd.DataFrame, lines: tuple[BranchLine, ...]) -> tuple[Notice, ...]:
+    """A notice for every sensor that has readings but no line."""
+    have = {line.key for line in lines}
+    return tuple(
+        Notice(
+            "no-line",
+            "noted",
+            str(rows["trial"].iloc[0]),
+            None,
+            None,
+            f"sensor {key[2]} of module {key[1]}: {len(rows)} readings, too few levels in any run",
+            "no line is fitted to them",
+            "measure it at more levels",
+        )
+        for key, rows in used.groupby(SENSOR_KEYS, sort=True)
+        if tuple(map(str, key)) not in have
+    )
