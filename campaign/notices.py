@@ -128,6 +128,8 @@ NOTICE_CODES: dict[str, str] = {
     "register-file-missing": "trials.csv names a file that is not in the folder",
     "register-file-unnamed": "trials.csv names a file that is no recording by [recordings] files",
     "rest-length-unreadable": "a rest length is no positive length; it is taken as unknown",
+    "description-there": "campaign begin finds a campaign.toml already; it never overwrites one",
+    "folder-taken": "a folder for tables holds other things; nothing is overwritten",
     # Folder
     "no-recordings": "no file of the folder is named as a recording",
     "no-usable-trial": "every recording is set aside",
