@@ -69,7 +69,7 @@ def _mixed_model(fit: NestedModelFit, response: FloatArray) -> tuple[Any, float]
             names.append(term.name)
             matrices.append(columns)
     if not names:
-        names, matrices = ["none"], [[np.zeros((len(groups), 1))]]
+        names, matrices = ["none"], [[np.zeros((n, 1)) for n in np.unique(groups, return_counts=True)[1]]]
     labels = [[[str(k) for k in range(m.shape[1])] for m in mine] for mine in matrices]
     model = MixedLM(response / unit, fit.model.fixed, groups, exog_vc=VCSpec(names, labels, matrices))
     model.reml, model.cov_pen, model.fe_pen = fit.restricted, None, None

@@ -12,11 +12,15 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 
 import numpy as np
-from numpy.typing import NDArray
 
-from campaign.methods.nested_design import FloatArray, IntArray, NestedModel, ScaledColumns, scale_columns
-
-NDArrayBool = NDArray[np.bool_]
+from campaign.methods.nested_design import (
+    BoolArray,
+    FloatArray,
+    IntArray,
+    NestedModel,
+    ScaledColumns,
+    scale_columns,
+)
 
 
 @dataclass(frozen=True)
@@ -178,7 +182,7 @@ class _Column:
     vector: FloatArray
     depth: int
     """Depth of the level it is random at; −1 for a fixed column."""
-    active: list[NDArrayBool] = field(default_factory=list)
+    active: list[BoolArray] = field(default_factory=list)
     slot: list[int] = field(default_factory=list)
     factor: list[FloatArray] = field(default_factory=list)
     """Per level, innermost first: where it is active, its slot, and the slot's multiple in each unit."""
@@ -187,7 +191,7 @@ class _Column:
 @dataclass
 class _Slot:
     vector: FloatArray
-    active: NDArrayBool
+    active: BoolArray
     own: bool
     members: list[_Column]
 
@@ -394,7 +398,7 @@ def _same_vector(a: FloatArray, b: FloatArray) -> bool:
 
 
 def _multiple_of_slot(
-    slots: list[_Slot], vector: FloatArray, active: NDArrayBool, of_row: IntArray, starts: IntArray
+    slots: list[_Slot], vector: FloatArray, active: BoolArray, of_row: IntArray, starts: IntArray
 ) -> tuple[int | None, FloatArray]:
     """The slot of which `vector` is a multiple in every active unit, and the multiples (units,)."""
     factor = np.ones(len(starts))
@@ -432,7 +436,7 @@ def _multiples(a: FloatArray, b: FloatArray, begins: IntArray, counts: IntArray)
     return np.asarray(factor)
 
 
-def _free_slot(slots: list[_Slot], column: _Column, active: NDArrayBool) -> int | None:
+def _free_slot(slots: list[_Slot], column: _Column, active: BoolArray) -> int | None:
     """A slot whose columns are zero in every unit where this one is not; the column moves in."""
     for place, slot in enumerate(slots):
         if not slot.own and not (slot.active & active).any():

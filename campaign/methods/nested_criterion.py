@@ -21,7 +21,7 @@ import numpy as np
 
 from campaign.methods.batched_algebra import inverse_cholesky, product, product_transposed, transposed_product
 from campaign.methods.nested_compression import Compression, Step, Transfer
-from campaign.methods.nested_design import FloatArray
+from campaign.methods.nested_design import BoolArray, FloatArray
 
 Factors = list[FloatArray]
 """For each random effect its relative factor θ (d, d, R), R replicates of the whole model."""
@@ -211,6 +211,7 @@ def value_of(
     p = compression.fixed
     root = eliminated.root.transpose(2, 0, 1)
     square, cross = root[:, :p, :p], root[:, :p, p]
+    square, unusable = _usable(square)
     lower = np.linalg.cholesky(square)
     inverse_lower = np.linalg.inv(lower)
     inverse = inverse_lower.transpose(0, 2, 1) @ inverse_lower
@@ -223,7 +224,21 @@ def value_of(
     )
     if restricted:
         criterion = criterion + 2.0 * np.log(np.diagonal(lower, axis1=1, axis2=2)).sum(axis=1)
+    criterion = np.where(unusable, np.inf, criterion)
     return Value(criterion, residual_square, coefficients.T, inverse)
+
+
+def _usable(square: FloatArray) -> tuple[FloatArray, BoolArray]:
+    """X'V⁻¹X with the unit matrix where rounding has left it indefinite, and where that was."""
+    p = square.shape[1]
+    diagonal = np.diagonal(square, axis1=1, axis2=2)
+    unusable = np.asarray(~(np.isfinite(square).all(axis=(1, 2)) & (diagonal > 0.0).all(axis=1)))
+    try:
+        np.linalg.cholesky(square)
+    except np.linalg.LinAlgError:
+        finite = np.where(unusable[:, None, None], np.eye(p), square)
+        unusable |= np.linalg.eigvalsh(finite)[:, 0] <= 0.0
+    return np.where(unusable[:, None, None], np.eye(p), square) if unusable.any() else square, unusable
 
 
 def gradient_of(

@@ -13,6 +13,7 @@ each nominal level). This module is the door; the steps have a module each:
     nested_optimiser      L-BFGS-B, Newton polish, certificate on the cone
     nested_fit            the fit as a value
     nested_effects        predicted effects and residuals
+    nested_intervals      profile intervals of SDs, totals, ratios and shares
     nested_inference      Satterthwaite's degrees of freedom
     nested_certificate    the same model in statsmodels
 """
@@ -27,8 +28,17 @@ from campaign.methods.nested_effects import (
 )
 from campaign.methods.nested_fit import NestedModelFit, fit_nested_model
 from campaign.methods.nested_inference import satterthwaite
+from campaign.methods.nested_intervals import (
+    Interval,
+    profile_interval,
+    profile_intervals,
+    profile_ratio,
+    profile_share,
+    profile_total,
+)
 
 __all__ = [
+    "Interval",
     "NestedModel",
     "NestedModelFit",
     "RandomEffects",
@@ -37,6 +47,11 @@ __all__ = [
     "conditional_residuals",
     "fit_nested_model",
     "marginal_residuals",
+    "profile_interval",
+    "profile_intervals",
+    "profile_ratio",
+    "profile_share",
+    "profile_total",
     "random_effects",
     "satterthwaite",
     "statsmodels_log_likelihood",

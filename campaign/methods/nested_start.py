@@ -27,6 +27,8 @@ def moment_covariances(compression: Compression) -> tuple[list[FloatArray], list
         readings add to one unit's coefficients; the residual variance.
     """
     sizes = [basis.shape[0] for basis in compression.columns.term_bases]
+    if not sizes:
+        return [], [], 1.0
     zero = [np.zeros((d, d, 1)) for d in sizes]
     levels = eliminate(compression, compression.products, zero).levels
     found: list[FloatArray] = [np.zeros((d, d)) for d in sizes]
