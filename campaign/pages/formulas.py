@@ -37,7 +37,8 @@ FORMULAS: dict[str, str] = {
     r"+s_{\text{lof}}^2+w^2+\frac{\sigma^2}{m}\right]",
     "inverse_exists": r"g=\frac{t^2\,(V_b+v_1)}{b^2}<1",
     "reference_covariance": r"\text{Cov}(x_i,x_j)=(1+\varepsilon_i)(1+\varepsilon_j)\left[u_{\text{scale}}^2+"
-    r"\frac{u_{L_0}^2}{L_0^2}\right]+\frac{u_{\text{zero}}^2}{L_0^2}+\dots,\qquad "
+    r"\frac{u_{L_0}^2}{L_0^2}\right]+\frac{u_{\text{zero}}^2}{L_0^2}"
+    r"+d_i\,d_j\,\frac{u_{\text{backlash}}^2}{4L_0^2},\qquad "
     r"\frac{\partial\varepsilon}{\partial L_0}=-\frac{1+\varepsilon}{L_0}",
     "plates": r"C=\epsilon_0\epsilon_r\frac{l\,w}{t},\qquad l\,w\,t=l_0w_0t_0",
     "plates_uniaxial": r"l=\lambda l_0,\ w=\lambda^{-1/2}w_0,\ t=\lambda^{-1/2}t_0"
@@ -63,9 +64,8 @@ FORMULAS: dict[str, str] = {
     "new_sensor": r"\hat y(x)\pm t_{\nu;\,0.975}\sqrt{u^2(\hat y(x))+\sum_{\text{levels}}z^{\top}\Sigma z"
     r"+\sigma^2},\qquad z=(1,x)^{\top}",
     "satterthwaite": r"\nu=\frac{2\,\hat v^2}{\text{Var}(\hat v)}",
-    "effort_predicted": r"s_{\varepsilon}^2=\frac{1}{\beta_1^2}"
-    r"\left(z^{\top}\Sigma_{\text{not calibrated}}\,z"
-    r"+u^2(\text{line})+s_{\text{lof}}^2+w^2+\sigma^2\right)",
+    "effort": r"s_{\varepsilon}=\sqrt{\frac{1}{N}\sum_{i}(\hat x_i-x_i)^2},\qquad "
+    r"\hat x_i=\frac{y_i-a}{b}\ \text{with the line of the effort}",
     "conformity": r"p_c=P\left(\eta\le L\right)=F_{\nu}\left(\frac{L-\hat\eta}{u(\hat\eta)}\right)",
     "autocorrelation": r"r_1=\frac{\sum_{i}e_i\,e_{i+1}}{\sum_{i}e_i^2}",
     "cook": r"D_i=\frac{e_i^2}{p\,s^2}\,\frac{h_{ii}}{(1-h_{ii})^2}",

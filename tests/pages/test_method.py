@@ -87,7 +87,9 @@ def test_every_definition_has_an_address_of_its_own_and_a_source(html: str) -> N
 
 def test_links_to_definitions_find_them(html: str) -> None:
     texts = [p.read_text() for p in (*TEMPLATES.rglob("*.html"), *PACKAGE.rglob("*.py"))]
-    wanted = {anchor for text in texts for anchor in re.findall(r"method\.html#([\w-]+)", text)}
+    link = re.compile(r"method\.html#([\w-]+)|\bterm\(\s*[\"']([\w-]+)")
+    wanted = {anchor for text in texts for pair in link.findall(text) for anchor in pair if anchor}
+    assert {"linearity", "versions"} <= wanted
     assert sorted(wanted - set(re.findall(r'\bid="([^"]+)"', html))) == []
 
 
