@@ -69,6 +69,8 @@ def find_line(text: str, path: Sequence[str], key: str | None, index: int = 0) -
     for number, line in enumerate(text.splitlines(), start=1):
         if header := _HEADER.match(line):
             current = _parts(header.group(2))
+            if key is not None and current[: len(wanted) + 1] == (*wanted, key):
+                return number
             if current == wanted:
                 seen += 1
                 head = number if seen == index or header.group(1) == "[" else head
