@@ -110,6 +110,7 @@ class SpreadSource:
     """One component's strain-equivalent SD at one place; ``share`` is of the variance, NaN if not stated."""
 
     level: str
+    called: str
     sd: float
     low: float
     high: float
@@ -120,8 +121,8 @@ class SpreadSource:
 class SpreadFinding:
     """Where the spread of one generation comes from at mid range, largest first.
 
-    ``more_than`` names the levels that the first one exceeds with intervals that do not overlap; empty
-    where no such claim can be made.
+    ``more_than`` holds what the levels are called that the first one exceeds, the interval of the ratio
+    excluding 1; empty where no such claim can be made.
     """
 
     generation: str
@@ -380,22 +381,29 @@ def _spread_findings(variance: Variance) -> list[Finding]:
     table = variance.variance_in_strain
     table = table[(table["place"] == "mid") & (table["generation"] != "all")]
     facts = tuple(
-        SpreadFinding(str(generation), "mid", *_sources(rows))
+        SpreadFinding(str(generation), "mid", *_sources(rows, variance.comparisons))
         for generation, rows in table.groupby("generation", sort=True)
     )
     return [Finding("spread", facts)] if facts else []
 
 
-def _sources(rows: pd.DataFrame) -> tuple[tuple[SpreadSource, ...], tuple[str, ...]]:
-    parts = rows[~rows["level"].isin(["total", "all"])].dropna(subset=["strain_sd"])
+def _sources(
+    rows: pd.DataFrame, comparisons: pd.DataFrame
+) -> tuple[tuple[SpreadSource, ...], tuple[str, ...]]:
+    parts = rows[rows["level"] != "total"].dropna(subset=["strain_sd"])
     ranked = parts.sort_values("strain_sd", ascending=False, kind="stable")
     sources = tuple(
-        SpreadSource(str(r["level"]), *(float(r[k]) for k in ("strain_sd", "low", "high", "share")))
+        SpreadSource(
+            str(r["level"]), str(r["called"]), *(float(r[k]) for k in ("strain_sd", "low", "high", "share"))
+        )
         for _, r in ranked.iterrows()
     )
-    if not sources or math.isnan(sources[0].low):
-        return sources, ()
-    return sources, tuple(s.level for s in sources[1:] if s.high < sources[0].low)
+    if not sources:
+        return (), ()
+    own = comparisons[comparisons["generation"] == rows["generation"].iloc[0]]
+    own = own[(own["first"] == sources[0].level) & own["differs"].astype(bool)]
+    exceeded = set(own["second"])
+    return sources, tuple(s.called for s in sources[1:] if s.level in exceeded)
 
 
 def _line_findings(calibration: Calibration, limits: Limits, put_back: Calibration | None) -> list[Finding]:

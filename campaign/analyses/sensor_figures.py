@@ -42,7 +42,7 @@ def sensor_figures(calibration: Calibration, description: Description) -> pd.Dat
     calibration
         Lines, run lines, level differences and records.
     description
-        Rated range and direction in use.
+        Direction in use.
 
     Returns
     -------
@@ -52,8 +52,8 @@ def sensor_figures(calibration: Calibration, description: Description) -> pd.Dat
         of a standard deviation); limits are NaN where one run leaves the uncertainty unknown.
     """
     parts = {
-        "linearity": linearity_figures(calibration, description),
-        "bend": bend_figures(calibration, description),
+        "linearity": linearity_figures(calibration),
+        "bend": bend_figures(calibration),
         "hysteresis": hysteresis_figures(calibration),
         "repeatability": repeatability_figures(calibration),
         "strain_error": strain_error_figures(calibration, description),
@@ -68,7 +68,7 @@ def sensor_figures(calibration: Calibration, description: Description) -> pd.Dat
     return table.assign(low=low, high=high)[list(FIGURE_COLUMNS)]
 
 
-def linearity_figures(calibration: Calibration, description: Description) -> pd.DataFrame:
+def linearity_figures(calibration: Calibration) -> pd.DataFrame:
     """Return each sensor's least-squares linearity in %FSO with its standard uncertainty.
 
     The uncertainty is that of the mean over runs at one level: the mean square of level × run about the
@@ -77,8 +77,7 @@ def linearity_figures(calibration: Calibration, description: Description) -> pd.
     lines = principal_lines(calibration.sensor_lines)
     scatter = _level_by_run(calibration)
     table = lines.merge(scatter, on=_SENSOR, how="left")
-    full_scale = [_full_scale(row, description) for _, row in table.iterrows()]
-    uncertainty = np.sqrt(table["mean_square"] / table["runs"]) / np.array(full_scale) * 100
+    uncertainty = np.sqrt(table["mean_square"] / table["runs"]) / table["full_scale_output"] * 100
     figures = table[_SENSOR].assign(
         estimate=table["linearity_least_squares_percent_fso"],
         standard_uncertainty=uncertainty.where(table["runs"] > 1),
@@ -87,14 +86,13 @@ def linearity_figures(calibration: Calibration, description: Description) -> pd.
     return figures.assign(kind="estimate")
 
 
-def bend_figures(calibration: Calibration, description: Description) -> pd.DataFrame:
+def bend_figures(calibration: Calibration) -> pd.DataFrame:
     """Return each sensor's bend in %FSO: how far the quadratic term departs from its chord at mid range.
 
     The signed sagitta of the fitted parabola over the measured range, q (Δx/2)², with the interval of q.
     """
     lines = principal_lines(calibration.sensor_lines)
-    full_scale = np.array([_full_scale(row, description) for _, row in lines.iterrows()])
-    scale = ((lines["strain_high"] - lines["strain_low"]) / 2) ** 2 / full_scale * 100
+    scale = ((lines["strain_high"] - lines["strain_low"]) / 2) ** 2 / lines["full_scale_output"] * 100
     half_width = (lines["quadratic_high"] - lines["quadratic_low"]) / 2
     return lines[_SENSOR].assign(
         estimate=lines["quadratic"] * scale,
@@ -210,17 +208,6 @@ def _record_error(record: CalibrationRecord) -> dict[str, object]:
 
 def _no_figures() -> pd.DataFrame:
     return pd.DataFrame(columns=[*_SENSOR, "estimate", "standard_uncertainty", "degrees_of_freedom", "kind"])
-
-
-def _full_scale(line: pd.Series, description: Description) -> float:
-    """Signal over the rated range of the own line, or over the measured range where that is shorter."""
-    rated = (
-        description.range_strain
-        if math.isfinite(description.range_strain)
-        else description.range_elongation_mm
-    )
-    reach = rated if line["strain_high"] >= rated * (1 - 1e-9) else line["strain_high"] - line["strain_low"]
-    return abs(float(line["slope"] * reach))
 
 
 def _level_by_run(calibration: Calibration) -> pd.DataFrame:

@@ -10,7 +10,6 @@ import numpy as np
 import pandas as pd
 
 from campaign.analyses.calibration import Calibration
-from campaign.analyses.findings import Finding
 from campaign.analyses.results import CampaignResults
 from campaign.analyses.sensor_figures import principal_lines
 from campaign.pages import numbers, palette, slugs
@@ -64,8 +63,7 @@ def calibration_page(results: CampaignResults) -> Page | None:
         context={
             "calibration": calibration,
             "reference": calibration.reference,
-            "facts": {finding.kind: finding for finding in results.findings.findings},
-            "limits": results.limits,
+            "sources": sorted(set(calibration.sensor_lines["variance_source"].astype(str))),
             "shown_modules": min(len(where.modules), MOST_MODULES),
             "all_modules": len(where.modules),
         },
@@ -548,8 +546,3 @@ def sensor_lines_table(calibration: Calibration) -> Table:
         note="The file holds all columns: covariances, degrees of freedom, the four linearities, the "
         "stretch exponent.",
     )
-
-
-def facts_of(findings: Iterable[Finding], kind: str) -> tuple[object, ...]:
-    """Return the facts of one kind of finding, empty where there is none."""
-    return next((finding.facts for finding in findings if finding.kind == kind), ())

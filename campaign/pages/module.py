@@ -27,6 +27,7 @@ from campaign.pages.figures import (
 from campaign.pages.page import Page
 from campaign.pages.sensor import FIGURE_ORDER, sensor_keys
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
+from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import ReferenceQuantity
 
@@ -48,13 +49,13 @@ class SharedTrial:
     figure: str
 
 
-def module_pages(results: CampaignResults) -> list[Page]:
+def module_pages(results: CampaignResults, mapped: SkinMap) -> list[Page]:
     """Return the page of every module that a trial names, neighbours linked in order."""
     keys = sorted({(generation, module) for generation, module, _ in sensor_keys(results)})
     links = [(module, slugs.module_href(module)) for _, module in keys]
     return [
         replace(
-            _module_page(results, *key),
+            _module_page(results, mapped, *key),
             previous=links[i - 1] if i else None,
             following=links[i + 1] if i + 1 < len(links) else None,
         )
@@ -62,7 +63,7 @@ def module_pages(results: CampaignResults) -> list[Page]:
     ]
 
 
-def _module_page(results: CampaignResults, generation: str, module: str) -> Page:
+def _module_page(results: CampaignResults, mapped: SkinMap, generation: str, module: str) -> Page:
     sensors = [sensor for _, m, sensor in sensor_keys(results) if m == module]
     lines = _lines_of(results, module)
     shared, plots = shared_trials(results, module, lines)
@@ -83,6 +84,7 @@ def _module_page(results: CampaignResults, generation: str, module: str) -> Page
         context={
             "generation": generation,
             "module": module,
+            "map": mapped,
             "sensors": [
                 (sensor, slugs.sensor_href(module, sensor), _state(results, module, sensor))
                 for sensor in sensors

@@ -66,13 +66,27 @@ def residuals_page(results: CampaignResults) -> Page | None:
             "banded": banded,
             "readings": len(rows),
             "largest_shown": LARGEST_SHOWN,
-            "sd": float(rows[VALUE].std()) * reference.shown_factor,
+            "autocorrelation": _autocorrelation(residuals),
         },
         figures=tuple(figure for figure in figures if figure is not None),
         tables=(largest_table(rows, reference),),
         description="What the model leaves over, against strain, order and module; every point leads to "
         "its trial.",
     )
+
+
+def _autocorrelation(residuals: Residuals) -> list[dict[str, object]]:
+    """Pooled lag-1 autocorrelation of each generation, and whether it is clear of zero."""
+    table = residuals.pooled_autocorrelation.dropna(subset=["autocorrelation", "standard_error"])
+    return [
+        {
+            "generation": str(row["generation"]),
+            "value": float(row["autocorrelation"]),
+            "error": float(row["standard_error"]),
+            "clear": abs(row["autocorrelation"]) > 2 * row["standard_error"],
+        }
+        for row in table.to_dict("records")
+    ]
 
 
 def _largest(rows: pd.DataFrame) -> pd.DataFrame:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Hashable, Iterable
+from collections.abc import Hashable, Iterable, Mapping
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -29,11 +29,30 @@ from campaign.pages.figures import (
     points,
 )
 from campaign.pages.page import Page
+from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import ReferenceQuantity
 
 FIGURE_ORDER = ("linearity", "bend", "hysteresis", "repeatability", "strain_error")
 """Figures of merit on a sensor's page, in order."""
+
+MERIT_WORDS: Mapping[str, str] = {
+    "linearity": "linearity (least squares)",
+    "bend": "bend at mid range",
+    "hysteresis": "hysteresis of the staircase",
+    "repeatability": "repeatability SD",
+    "strain_error": "expanded uncertainty of a reading",
+}
+"""What figures of merit are called in lists."""
+
+MERIT_ANCHORS: Mapping[str, str] = {
+    "linearity": "linearity",
+    "bend": "lack-of-fit",
+    "hysteresis": "hysteresis",
+    "repeatability": "repeatability",
+    "strain_error": "inverse-reading",
+}
+"""Where the Method page defines each."""
 
 _MOST_RUN_PLOTS = 24
 _RUN_STYLES = palette.GENERATION_STYLES
@@ -70,10 +89,10 @@ class TrialSection:
     shared_with: tuple[str, ...]
 
 
-def sensor_pages(results: CampaignResults) -> list[Page]:
+def sensor_pages(results: CampaignResults, mapped: SkinMap) -> list[Page]:
     """Return the page of every sensor that a trial or a register names, neighbours linked in order."""
     keys = sensor_keys(results)
-    pages = [_sensor_page(results, *key) for key in keys]
+    pages = [_sensor_page(results, mapped, *key) for key in keys]
     links = [(f"{module} {sensor}", slugs.sensor_href(module, sensor)) for _, module, sensor in keys]
     return [
         replace(
@@ -97,7 +116,9 @@ def sensor_keys(results: CampaignResults) -> list[tuple[str, str, str]]:
     return sorted((generation, module, sensor) for (module, sensor), generation in best.items())
 
 
-def _sensor_page(results: CampaignResults, generation: str, module: str, sensor: str) -> Page:
+def _sensor_page(
+    results: CampaignResults, mapped: SkinMap, generation: str, module: str, sensor: str
+) -> Page:
     who = {"generation": generation, "module": module, "sensor": sensor}
     rows = _readings_of(results, module, sensor)
     records = _records_of(results, module, sensor)
@@ -119,9 +140,16 @@ def _sensor_page(results: CampaignResults, generation: str, module: str, sensor:
         template="sensor.html",
         context={
             **who,
+            "map": mapped,
             "line": line_row,
             "reference": results.readings.reference,
             "merits": _merits_of(results, module, sensor),
+            "merit_words": MERIT_WORDS,
+            "merit_anchors": MERIT_ANCHORS,
+            "run_unit": ""
+            if line_row is None
+            else f"{line_row['unit']} per {results.readings.reference.shown_unit}",
+            "example_signal": _example_signal(records),
             "records": [(record, record_href(record)) for record in records],
             "accuracy": _accuracy_of(records),
             "averaged": AVERAGED,
@@ -133,7 +161,7 @@ def _sensor_page(results: CampaignResults, generation: str, module: str, sensor:
         },
         figures=(*figures, *plots),
         tables=tuple(tables),
-        data={"calculator": calculator_data(records)} if records else {},
+        data={"calculator": calculator_data(records, _recorded(rows))} if records else {},
         description=f"Readings, line, figures of merit and trials of sensor {sensor} of module {module}.",
         above=((module, slugs.module_href(module)),),
     )
@@ -169,9 +197,31 @@ def _ordinary_of(results: CampaignResults, module: str, sensor: str) -> dict[Has
 
 
 def _merits_of(results: CampaignResults, module: str, sensor: str) -> list[dict[Hashable, Any]]:
+    """Figures of merit in order, each with the factor and unit that pages show it in."""
+    reference = results.readings.reference
     rows = _of(results.limits.figures, module, sensor).dropna(subset=["estimate"])
-    order = {name: i for i, name in enumerate(FIGURE_ORDER)}
-    return sorted(rows.to_dict("records"), key=lambda row: order.get(str(row["figure"]), len(order)))
+    in_reference = rows["figure"] == "strain_error"
+    rows = rows.assign(
+        factor=in_reference.map({True: reference.shown_factor, False: 1.0}),
+        shown_unit=in_reference.map({True: reference.shown_unit, False: "%FSO"}),
+    )
+    return sorted(rows.to_dict("records"), key=lambda row: FIGURE_ORDER.index(str(row["figure"])))
+
+
+def _recorded(rows: pd.DataFrame) -> str:
+    """What the stand recorded for the sensor: length, elongation or strain."""
+    kinds = rows["reference"].dropna().astype(str) if "reference" in rows else pd.Series(dtype=str)
+    return str(kinds.iloc[0]) if len(kinds) else "length"
+
+
+def _example_signal(records: list[CalibrationRecord]) -> str:
+    """A signal from the middle of the calibrated range, for the calculator to start from."""
+    if not records:
+        return ""
+    record = principal_records(records)[0]
+    middle = (record.signal_low + record.signal_high) / 2
+    decimals = max(0, 2 - int(np.floor(np.log10(max(record.signal_high - record.signal_low, 1e-12)))))
+    return f"{middle:.{decimals}f}"
 
 
 def _accuracy_of(records: list[CalibrationRecord]) -> tuple[float, float] | None:

@@ -27,27 +27,50 @@ from campaign.pages.page import Page
 from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import ReferenceQuantity
 
-LEVELS: Mapping[str, str] = {
+LEVELS = (
+    *("batch", "module", "mounting", "run", "sensor", "session", "repetition", "sensor_by_level"),
+    *("sensor_by_direction", "residual", "total"),
+)
+"""Levels of nesting in the order in which figures show them."""
+
+_WORDS: Mapping[str, str] = {
     "batch": "batches",
     "module": "modules",
+    "mounting": "mountings",
+    "run": "runs",
+    "run shared by the sensors of a module": "runs that a module’s sensors share",
     "sensor": "sensors of a module",
     "session": "mountings",
+    "sensor × session": "a sensor’s own part of a mounting",
     "repetition": "runs",
-    "run": "runs",
-    "sensor_by_level": "a sensor's own shape",
-    "sensor_by_direction": "a sensor's own loop",
+    "sensor × run": "a sensor’s own part of a run",
+    "sensor × level": "a sensor’s own shape",
+    "sensor_by_level": "a sensor’s own shape",
+    "sensor × direction": "a sensor’s own loop",
+    "sensor_by_direction": "a sensor’s own loop",
     "residual": "readings of a run",
     "total": "all together",
 }
-"""What each level of nesting is called on pages; other names have their underscores opened."""
+"""What each component is called on pages."""
+
+TERMS = ("strain at mid", "slope", "intercept")
+"""Terms of effects, the most telling first."""
+
+COVARIATE_UNITS: Mapping[str, str] = {
+    "temperature": "°C",
+    "temperature_c": "°C",
+    "humidity": "%RH",
+    "humidity_percent": "%RH",
+}
+"""Units of the surroundings that the model may hold."""
 
 PLACES: Mapping[str, str] = {"zero": "at zero", "mid": "at mid range", "full": "at full scale"}
 """Places of the range, in order."""
 
 
-def level_words(level: str) -> str:
-    """Return what a level of nesting is called: ``runs`` for ``repetition``."""
-    return LEVELS.get(level, level.replace("_", " "))
+def level_words(called: str) -> str:
+    """Return what a component is called on pages: ``modules and mountings`` for ``module + mounting``."""
+    return " and ".join(_WORDS.get(part, part.replace("_", " ")) for part in called.split(" + "))
 
 
 def variance_page(results: CampaignResults) -> Page | None:
@@ -71,8 +94,9 @@ def variance_page(results: CampaignResults) -> Page | None:
             "reference": variance.reference,
             "spread": next((f for f in results.findings.findings if f.kind == "spread"), None),
             "level_words": level_words,
+            "pooled": any(fit.generation == "all" for fit in variance.fits) and len(variance.fits) > 1,
+            "covariate_units": COVARIATE_UNITS,
             "generations": generations_of(variance.variance_in_strain),
-            "reasons": _reasons(variance),
         },
         figures=tuple(figure for figure in figures if figure is not None),
         tables=tuple(_tables(variance)),
@@ -87,17 +111,17 @@ def generations_of(frame: pd.DataFrame) -> tuple[str, ...]:
     return apart or tuple(names)
 
 
-def _reasons(variance: Variance) -> list[dict[str, object]]:
-    """Labels of the identifiability ladder that a reader must know: everything that is not resolved."""
-    table = variance.identifiability
-    rows = table[table["label"] != "resolved"].drop_duplicates(["generation", "component"])
-    return [{str(k): v for k, v in row.items()} for row in rows.to_dict("records")]
-
-
 def _levels_in_order(frame: pd.DataFrame) -> list[str]:
-    order = list(LEVELS)
     found = list(dict.fromkeys(frame["level"].astype(str)))
-    return sorted(found, key=lambda name: order.index(name) if name in order else len(order) - 2)
+    return sorted(found, key=lambda name: LEVELS.index(name) if name in LEVELS else len(LEVELS))
+
+
+def _called(frame: pd.DataFrame) -> dict[str, str]:
+    """Words of each level; where generations differ in them, those of the first."""
+    words: dict[str, str] = {}
+    for level, called in zip(frame["level"].astype(str), frame["called"].astype(str), strict=True):
+        words.setdefault(level, level_words(called))
+    return words
 
 
 def components_figure(variance: Variance) -> Figure:
@@ -119,7 +143,8 @@ def components_figure(variance: Variance) -> Figure:
                     rows, levels, shift, generation, generations, factor, unit, edge, panel(index)
                 )
             )
-    ticks = [(float(i), level_words(level)) for i, level in enumerate(levels)]
+    words = _called(table)
+    ticks = [(float(i), words[level]) for i, level in enumerate(levels)]
     made = small_multiples(
         [PLACES[place] for place in places],
         axis("SD", unit, low=0, high=_upper_end(table, edge) * factor),
@@ -160,7 +185,7 @@ def _component_trace(
     axes: str,
 ) -> Trace:
     text = [
-        f"{generation}, {level_words(str(r['level']))}: {_sd_words(r, factor, unit)}"
+        f"{generation}, {level_words(str(r['called']))}: {_sd_words(r, factor, unit)}"
         for r in rows.to_dict("records")
     ]
     return intervals(
@@ -208,7 +233,7 @@ def _components_caption(table: pd.DataFrame, reference: ReferenceQuantity) -> st
     for generation, rows in mid.groupby("generation", sort=True):
         top = rows.iloc[int(rows["strain_sd"].to_numpy(float).argmax())]
         value = _sd_words(top.to_dict(), reference.shown_factor, reference.shown_unit)
-        parts.append(f"{generation}: {level_words(str(top['level']))} with {value}")
+        parts.append(f"{generation}: {level_words(str(top['called']))} with {value}")
     return f"The largest component at mid range. {'; '.join(parts)}."
 
 
@@ -220,7 +245,7 @@ def shares_figure(variance: Variance) -> Figure | None:
     table = table[table["generation"].isin(generations)]
     if table.empty:
         return None
-    levels = _levels_in_order(table)
+    levels, words = _levels_in_order(table), _called(table)
     traces: list[Trace] = []
     labels: list[Layout] = []
     for row_index, generation in enumerate(generations):
@@ -230,7 +255,7 @@ def shares_figure(variance: Variance) -> Figure | None:
                 table.loc[(table["generation"] == generation) & (table["level"] == level), "share"].sum()
             )
             colour = palette.RAMP[(1 + 2 * levels.index(level)) % len(palette.RAMP)]
-            text = f"{generation}: {numbers.percent(share)} of the variance between {level_words(level)}"
+            text = f"{generation}: {numbers.percent(share)} of the variance: {words[level]}"
             traces.append(
                 bars(
                     [row_index],
@@ -243,7 +268,7 @@ def shares_figure(variance: Variance) -> Figure | None:
                 )
             )
             if share >= 0.08:
-                labels.append(_share_label(level, share, start, row_index))
+                labels.append(_share_label(words[level], share, start, row_index))
             start += share
     ticks = [(float(i), g) for i, g in enumerate(generations)]
     return Figure(
@@ -265,9 +290,9 @@ def shares_figure(variance: Variance) -> Figure | None:
     )
 
 
-def _share_label(level: str, share: float, start: float, height: float) -> Layout:
+def _share_label(words: str, share: float, start: float, height: float) -> Layout:
     return label(
-        f"{level_words(level)} {numbers.percent(share)}",
+        f"{words} {numbers.percent(share)}",
         (start + share / 2) * 100,
         height + 0.38,
         anchor="center",
@@ -282,7 +307,7 @@ def _shares_caption(table: pd.DataFrame, generations: Iterable[str]) -> str:
     for generation in generations:
         rows = table[table["generation"] == generation].sort_values("share", ascending=False, kind="stable")
         words = [
-            f"{numbers.percent(float(r['share']))} {level_words(str(r['level']))}"
+            f"{numbers.percent(float(r['share']))} {level_words(str(r['called']))}"
             for _, r in rows.head(3).iterrows()
         ]
         parts.append(f"{generation}: {', '.join(words)}")
@@ -293,10 +318,10 @@ def caterpillar_figure(variance: Variance, level: str) -> Figure | None:
     """Return the effects of modules or sensors, sorted, each with its interval, one panel a term."""
     rows = variance.effects
     rows = rows[(rows["level"] == level) & rows["generation"].isin(generations_of(rows) if len(rows) else ())]
-    rows = rows.dropna(subset=["estimate"])
+    rows = in_shown_units(rows.dropna(subset=["estimate"]))
     if rows.empty or len(rows.drop_duplicates(["module", "sensor"])) < 2:
         return None
-    terms = list(dict.fromkeys(rows["term"].astype(str)))[:2]
+    terms = [term for term in TERMS if term in set(rows["term"])][:2]
     generations = generations_of(rows)
     traces = [
         trace
@@ -321,7 +346,7 @@ def caterpillar_figure(variance: Variance, level: str) -> Figure | None:
     return Figure(
         name=f"{level}-effects",
         caption=_caterpillar_caption(rows, level, terms),
-        alternative=f"Effects of {level_words(level)} in order of size with 95 % intervals, panels for "
+        alternative=f"Effects of {level}s in order of size with 95 % intervals, panels for "
         + " and ".join(terms)
         + ", with a line at zero.",
         traces=tuple(traces),
@@ -331,6 +356,14 @@ def caterpillar_figure(variance: Variance, level: str) -> Figure | None:
         f"{'module' if level == 'module' else 'sensor'}. Each mark leads to its page.",
         height=360,
     )
+
+
+def in_shown_units(rows: pd.DataFrame) -> pd.DataFrame:
+    """Return effects with those in strain turned into per cent, as pages show them."""
+    is_strain = rows["unit"] == "mm/mm"
+    factor = is_strain.map({True: 100.0, False: 1.0})
+    limits = {key: rows[key] * factor for key in ("estimate", "low", "high")}
+    return rows.assign(**limits, unit=rows["unit"].where(~is_strain, "%"))
 
 
 def _caterpillar(
@@ -382,22 +415,29 @@ def _tables(variance: Variance) -> Iterable[Table]:
     yield Table(
         "variance_in_strain",
         "Every component as strain-equivalent SD with its 95 % interval.",
-        _with_words(variance.variance_in_strain, "level"),
+        _shares_in_percent(_with_words(variance.variance_in_strain)),
         (
             generation,
-            Column("_level", "Between", kind="text"),
+            Column("_words", "Component", kind="text"),
             Column("place", "Place", kind="text"),
             Column("strain_sd", "SD", unit, factor=factor, interval=("low", "high")),
-            Column("share", "Share", kind="percent", missing="withheld"),
+            Column(
+                "_share",
+                "Share of the variance",
+                "%",
+                interval=("_share_low", "_share_high"),
+                missing="withheld",
+            ),
+            Column("label", "The design says", kind="text"),
         ),
     )
     yield Table(
         "variance_components",
         "The components in units of the signal, with intervals and tests.",
-        _with_words(variance.variance_components, "level"),
+        _with_words(variance.variance_components),
         (
             generation,
-            Column("_level", "Between", kind="text"),
+            Column("_words", "Component", kind="text"),
             Column("term", "Term", kind="text"),
             Column("estimate", "SD", interval=("low", "high")),
             Column("unit", "Unit", kind="text"),
@@ -431,6 +471,7 @@ def _precision_and_tests(variance: Variance, generation: Column, factor: float, 
                 generation,
                 Column("figure", "Figure", kind="text"),
                 Column("strain_sd", "SD at mid range", unit, factor=factor, interval=("low", "high")),
+                Column("label", "The design says", kind="text"),
             ),
         )
     if len(variance.tests):
@@ -440,7 +481,7 @@ def _precision_and_tests(variance: Variance, generation: Column, factor: float, 
             _with_words(variance.tests, "component"),
             (
                 generation,
-                Column("_component", "Between", kind="text"),
+                Column("_words", "Component", kind="text"),
                 Column("test", "Test", kind="text"),
                 Column("p", "p", kind="probability"),
                 Column("p_adjusted", "p, corrected", kind="probability"),
@@ -449,17 +490,17 @@ def _precision_and_tests(variance: Variance, generation: Column, factor: float, 
     yield Table(
         "identifiability",
         "What the design can tell apart, counted before fitting.",
-        _with_words(variance.identifiability, "component"),
+        _with_words(variance.identifiability),
         (
             generation,
-            Column("_component", "Between", kind="text"),
+            Column("_words", "Component", kind="text"),
             Column("degrees_of_freedom", "Degrees of freedom", kind="integer"),
             Column("label", "Label", kind="text"),
             Column("reason", "Why", kind="text"),
         ),
     )
     yield Table(
-        "certificate",
+        "fit_certificates",
         "The evidence that each fit ended at its optimum.",
         variance.certificate,
         (
@@ -474,5 +515,13 @@ def _precision_and_tests(variance: Variance, generation: Column, factor: float, 
     )
 
 
-def _with_words(frame: pd.DataFrame, column: str) -> pd.DataFrame:
-    return frame.assign(**{f"_{column}": [level_words(str(v)) for v in frame[column]]})
+def _shares_in_percent(frame: pd.DataFrame) -> pd.DataFrame:
+    return frame.assign(
+        _share=frame["share"] * 100,
+        _share_low=frame["share_low"] * 100,
+        _share_high=frame["share_high"] * 100,
+    )
+
+
+def _with_words(frame: pd.DataFrame, column: str = "called") -> pd.DataFrame:
+    return frame.assign(_words=[level_words(str(v)) for v in frame[column]])

@@ -64,17 +64,17 @@
     return intervalText([answer.x * factor, answer.low * factor, answer.high * factor], unit);
   }
 
-  function lengthIn(record, answer) {
-    if (record.reference_name === "length") return answerIn(record, answer);
-    if (record.rest_length_mm === null) return "rest length not known";
-    const scale = record.reference_name === "strain" ? record.rest_length_mm : 1;
-    return intervalText([answer.x, answer.low, answer.high].map((x) => record.rest_length_mm + scale * x), "mm");
-  }
-
-  function words(record, answer, kind) {
+  function words(record, answer) {
     if (answer.status === "no signal") return "—";
     if (answer.status !== "inside calibration") return answer.status;
-    return kind === "length" ? lengthIn(record, answer) : answerIn(record, answer);
+    return answerIn(record, answer);
+  }
+
+  /* Lengths have a model of their own: in them the rest length cancels. */
+  function lengthWords(record, signal, m) {
+    if (record.length === null) return "rest length not known";
+    const answer = inverseReading(record.length, signal, m);
+    return words({ reference_name: "length" }, answer);
   }
 
   function update() {
@@ -83,8 +83,8 @@
     const m = Math.max(1, Math.floor(Number(number.value) || 1));
     for (const [name, readings] of [["one", 1], ["mean", m]]) {
       const answer = inverseReading(record, signal, readings);
-      show(name + "-x", words(record, answer, "x"));
-      show(name + "-length", words(record, answer, "length"));
+      show(name + "-x", words(record, answer));
+      show(name + "-length", lengthWords(record, signal, readings));
     }
     show("range", record.signal_low.toPrecision(5) + " to " + record.signal_high.toPrecision(5) + "\u202f" + record.unit);
   }

@@ -1,0 +1,112 @@
+"""Page 0, Findings: what was found, most important first, and where to look."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+
+from campaign.analyses.findings import AVERAGED
+from campaign.analyses.limits import Limits
+from campaign.analyses.results import CampaignResults
+from campaign.pages.calibration_effort import effort_words
+from campaign.pages.page import Page
+from campaign.pages.skin_map import SkinMap
+from campaign.pages.tables import Column, Table
+from campaign.pages.variance import level_words
+
+VERDICT_WORDS: Mapping[str, str] = {
+    "met": "met in this campaign",
+    "not met": "not met",
+    "not decided": "not decided",
+    "": "",
+}
+"""What stands in the margin of a finding."""
+
+KIND_WORDS: Mapping[str, str] = {
+    "staircase": "staircases",
+    "cyclic": "cycles of stretch and release",
+    "hold": "holds at one length",
+    "pressure": "sweeps of actuator pressure",
+    "layout": "known shapes of the module",
+    "offaxis": "stretch across the sensor",
+    "thermal": "sweeps of temperature",
+    "endurance": "endurance",
+    "contact": "loads on the skin",
+    "proximity": "bodies nearby",
+    "bend": "bending at constant length",
+    "blank": "channels without a sensor",
+}
+"""What kinds of trial are called in sentences."""
+
+
+def findings_page(results: CampaignResults, mapped: SkinMap) -> Page:
+    """Return page 0 with the skin map; it is part of every site, also where nothing could be analysed."""
+    tables = (limits_table(results.limits),) if len(results.limits.table) else ()
+    return Page(
+        slug="index",
+        number=0,
+        title="Findings",
+        template="index.html",
+        context={
+            "scope": results.findings.scope,
+            "findings": results.findings.findings,
+            "limits": results.limits,
+            "new_sensor_limits": results.limits.of_new_sensors().to_dict("records"),
+            "counts": results.intake.counts,
+            "verdict_words": VERDICT_WORDS,
+            "kind_words": KIND_WORDS,
+            "effort_words": effort_words,
+            "level_words": level_words,
+            "averaged": AVERAGED,
+            "reference": results.findings.scope.reference,
+            "direction": results.description.use.get("direction", ""),
+            "labels": {} if results.calibration is None else results.calibration.labels,
+            "variance": results.variance,
+            "map": mapped,
+            "has": _pages_there(results),
+        },
+        tables=tables,
+        data={"skin_map": mapped.data},
+        description="What was found, in sentences with numbers and intervals, most important first.",
+    )
+
+
+def _pages_there(results: CampaignResults) -> dict[str, bool]:
+    return {
+        "calibration": results.calibration is not None and not results.calibration.sensor_lines.empty,
+        "variance": results.variance is not None and not results.variance.variance_in_strain.empty,
+        "residuals": results.residuals is not None and not results.residuals.table.empty,
+        "calibration_effort": results.calibration_effort is not None
+        and not results.calibration_effort.table.empty,
+    }
+
+
+def limits_table(limits: Limits) -> Table:
+    """Return the verdicts on every limit: new sensors of each generation first, then every sensor."""
+    frame = limits.table.assign(_new=limits.table["sensor"] != "").sort_values("_new", kind="stable")
+    shown = frame.assign(
+        _limit=[str(v).replace("_", " ") for v in frame["limit"]],
+        _factor=[
+            100.0 if u in ("mm/mm", "1", "") and n == "strain_error" else 1.0
+            for u, n in zip(frame["unit"], frame["limit"], strict=True)
+        ],
+    )
+    scaled = {f"_{key}": shown[key] * shown["_factor"] for key in ("value", "estimate", "low", "high")}
+    shown = shown.assign(
+        **scaled, _unit=["%" if f > 1 else u for f, u in zip(shown["_factor"], shown["unit"], strict=True)]
+    )
+    return Table(
+        name="limits",
+        caption="Every limit, judged for a new sensor of each generation and for every sensor measured.",
+        frame=shown,
+        columns=(
+            Column("_limit", "Limit", kind="text"),
+            Column("subject", "Judged for", kind="text"),
+            Column("_value", "At most", digits=3),
+            Column("_unit", "Unit", kind="text"),
+            Column("_estimate", "Found", interval=("_low", "_high")),
+            Column("probability", "Probability that it is kept", kind="percent", missing="unknown"),
+            Column("verdict", "Verdict", kind="text"),
+        ),
+        shown_rows=60,
+        note="Met from a probability of 95 % on, not met from 5 % down, between them not decided.",
+    )
