@@ -11,6 +11,7 @@ all exact by definition.
 from __future__ import annotations
 
 import re
+import unicodedata
 from collections.abc import Mapping
 from dataclasses import dataclass
 from datetime import UTC, datetime
@@ -204,11 +205,11 @@ FAMILIES: dict[str, Family] = {
             "Ω",
             (-1e15, 1e15),
             {
-                "1": "Ω Ω ohm Ohm ohms",
-                "1/1000": "mΩ mΩ mohm mOhm",
-                "1000": "kΩ kΩ kohm kOhm",
-                "1000000": "MΩ MΩ Mohm MOhm",
-                "1000000000": "GΩ GΩ Gohm GOhm",
+                "1": "Ω ohm Ohm ohms",
+                "1/1000": "mΩ mohm mOhm",
+                "1000": "kΩ kohm kOhm",
+                "1000000": "MΩ Mohm MOhm",
+                "1000000000": "GΩ Gohm GOhm",
             },
         ),
         _family(
@@ -366,7 +367,7 @@ def find_unit(spelling: str, families: tuple[str, ...]) -> Unit:
     UnitError
         When no family knows the spelling (with a hint where only case differs), or only others do.
     """
-    text = spelling.strip()
+    text = unicodedata.normalize("NFC", spelling.strip())
     for name in families:
         if text in FAMILIES[name].scales:
             return Unit(text, FAMILIES[name])
@@ -392,7 +393,7 @@ def split_header(header: str) -> HeaderParts:
     Without brackets, slash or comma a unit is only believed where it is an accepted spelling, or one but for
     upper and lower case (``capacitance_pf``: the caller refuses it with a hint).
     """
-    text = header.strip()
+    text = unicodedata.normalize("NFC", header.strip())
     bracketed = _BRACKETED.fullmatch(text)
     if bracketed and bracketed[1]:
         inside = next(part for part in bracketed.groups()[1:] if part is not None).strip()

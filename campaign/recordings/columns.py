@@ -321,19 +321,17 @@ class _Planner:
         return True
 
     def unit_in_file(self, position: int, rule: ColumnRule | None) -> str | None:
-        """Return the unit that units row or header state, as text."""
-        cell = (
-            self.layout.units[position - 1].strip()
-            if self.layout.units and position <= len(self.layout.units)
-            else ""
-        )
+        """Return the unit that units row or header state, as text.
+
+        Of a rule with placeholders its own header is taken: ``C_{sensor}`` makes no farad of the sensor F.
+        """
+        units = self.layout.units or ()
+        cell = units[position - 1].strip() if position <= len(units) else ""
         header = self.header(position)
         if rule is not None and rule.header is not None and re.search(r"[{*]", rule.header):
-            header = rule.header
-        stated = split_header(header).unit if header else None
-        if stated is not None and re.search(r"[{*]", stated):
-            stated = None
-        return cell or stated
+            header = re.sub(r"\{\w+\}|\*", "·", rule.header)
+        stated = split_header(header).unit if header.strip() else None
+        return cell or (stated if stated != "·" else None)
 
     def take_by_name(self, position: int, served: set[str]) -> None:
         header = self.header(position)
