@@ -12,7 +12,12 @@ from dataclasses import dataclass, field
 
 import pandas as pd
 
-from campaign.analyses.calibration_influence import influence_of_readings, ordinary_lines, outlying_notices
+from campaign.analyses.calibration_influence import (
+    influence_of_readings,
+    ordinary_fits,
+    ordinary_lines,
+    outlying_notices,
+)
 from campaign.analyses.calibration_labels import (
     SharedReference,
     campaign_labels,
@@ -22,7 +27,7 @@ from campaign.analyses.calibration_labels import (
 from campaign.analyses.calibration_lines import BranchLine, branch_lines, run_lines_frame
 from campaign.analyses.calibration_spread import hysteresis_frame, repeatability_frame
 from campaign.analyses.sensor_lines import sensor_lines_frame
-from campaign.analyses.used_readings import used_readings
+from campaign.analyses.used_readings import REST, UsedReadings, used_readings
 from campaign.methods.calibration_line import t_quantile
 from campaign.methods.inverse_reading import ReadingModel
 from campaign.notices import Notice
@@ -179,40 +184,40 @@ def analyse_calibration(
     Calibration
         With empty tables where no sensor has a line.
     """
+    reference = readings.reference
     used = used_readings(readings, sensors)
-    lines = branch_lines(used, readings.reference, description)
-    hysteresis = hysteresis_frame(used, lines, description)
-    repeatability = repeatability_frame(used, lines)
-    frame = sensor_lines_frame(used, lines, readings.reference)
-    table = influence_of_readings(readings.table, used, lines)
+    lines = branch_lines(used, reference, description)
+    fits = ordinary_fits(used, lines)
+    table = influence_of_readings(readings.table, used, lines, fits)
     return Calibration(
-        readings.reference,
+        reference,
         table,
-        frame,
+        sensor_lines_frame(used, lines, reference),
         run_lines_frame(used, lines),
-        hysteresis,
-        repeatability,
-        ordinary_lines(used, lines),
-        tuple(_record(line, used, readings.reference, description, file_hashes) for line in lines),
-        shared_reference(used, description, readings.reference),
-        campaign_labels(used, lines, description, readings.reference),
+        hysteresis_frame(used, lines, reference, description),
+        repeatability_frame(lines),
+        ordinary_lines(used, lines, fits),
+        tuple(_record(line, used, reference, description, file_hashes) for line in lines),
+        shared_reference(used, description, reference),
+        campaign_labels(used, lines, description, reference),
         (*_without_line(used, lines), *outlying_notices(table)),
     )
 
 
 def _record(
     line: BranchLine,
-    used: pd.DataFrame,
+    used: UsedReadings,
     reference: ReferenceQuantity,
     description: Description,
     file_hashes: Mapping[str, str],
 ) -> CalibrationRecord:
     """The calibration record of one line."""
-    rows = used.loc[line.rows]
-    files = tuple(sorted(set(rows["trial"].astype(str))))
-    low, high = float(rows["x"].min()), float(rows["x"].max())
+    files = tuple(sorted(set(map(str, used.table["trial"].to_numpy()[line.rows]))))
+    x = used.x[line.rows]
+    low, high = float(x.min()), float(x.max())
     ends = sorted([line.intercept + line.slope * low, line.intercept + line.slope * high])
-    dates = sorted(str(started)[:10] for started in rows["started"] if started)
+    rest, rest_uncertainty = (float(used.column(name, line.rows[:1])[0]) for name in REST)
+    dates = sorted({str(started)[:10] for started in used.table["started"].to_numpy()[line.rows] if started})
     return CalibrationRecord(
         line.generation,
         line.module,
@@ -240,17 +245,17 @@ def _record(
         low,
         high,
         line.intercept if reference.name != "length" else float("nan"),
-        float(rows["rest_length_mm"].iloc[0]),
-        float(rows["rest_length_uncertainty_mm"].iloc[0]),
+        rest,
+        rest_uncertainty,
         line.runs,
-        record_conditions(rows, line, reference),
+        record_conditions(used, line, reference),
         dates[-1] if dates else (description.last_day or description.date),
         files,
         tuple(file_hashes.get(file, "") for file in files),
     )
 
 
-def _without_line(used: pd.DataFrame, lines: tuple[BranchLine, ...]) -> tuple[Notice, ...]:
+def _without_line(used: UsedReadings, lines: tuple[BranchLine, ...]) -> tuple[Notice, ...]:
     """A notice for every sensor that has readings but no line."""
     have = {line.key for line in lines}
     return tuple(
@@ -264,6 +269,6 @@ def _without_line(used: pd.DataFrame, lines: tuple[BranchLine, ...]) -> tuple[No
             "no line is fitted to them",
             "measure it at more levels",
         )
-        for key, rows in used.groupby(SENSOR_KEYS, sort=True)
+        for key, rows in used.table.groupby(SENSOR_KEYS, sort=True)
         if tuple(map(str, key)) not in have
     )

@@ -9,6 +9,7 @@ from statsmodels.regression.linear_model import OLS, RegressionResults
 from statsmodels.stats.outliers_influence import OLSInfluence
 
 from campaign.analyses.calibration_lines import BranchLine, line_of_sensor
+from campaign.analyses.used_readings import UsedReadings
 from campaign.methods.calibration_line import t_quantile
 from campaign.notices import Notice
 from campaign.trials.readings import SENSOR_KEYS
@@ -21,67 +22,60 @@ OUTLYING_RISK = 0.05
 """Risk, over all readings of a sensor, of marking one that is not outlying (Bonferroni)."""
 
 
-def ordinary_lines(used: pd.DataFrame, lines: tuple[BranchLine, ...]) -> pd.DataFrame:
+def ordinary_fits(used: UsedReadings, lines: tuple[BranchLine, ...]) -> tuple[RegressionResults, ...]:
+    """Return the least-squares fit over all readings of each line, x centred so that no digits are lost."""
+    fits = []
+    for line in lines:
+        x = used.x[line.rows]
+        design = np.column_stack([np.ones(len(x)), x - x.mean()])
+        fits.append(OLS(used.signal[line.rows], design).fit())
+    return tuple(fits)
+
+
+def ordinary_lines(
+    used: UsedReadings, lines: tuple[BranchLine, ...], fits: tuple[RegressionResults, ...]
+) -> pd.DataFrame:
     """Return least-squares lines over all readings of each sensor and branch, as if all were independent."""
     records = []
-    for line in lines:
-        rows = used.loc[line.rows]
-        centre = float(rows["x"].mean())
-        fit = _ordinary(rows, centre)
-        back = np.array([[1.0, -centre], [0.0, 1.0]])
-        errors = np.sqrt(np.diag(back @ fit.cov_params() @ back.T))
-        intercept, slope = back @ fit.params
-        records.append(
-            {
-                **dict(zip(SENSOR_KEYS, line.key, strict=True)),
-                "branch": line.branch,
-                "intercept": intercept,
-                "slope": slope,
-                "se_intercept": errors[0],
-                "se_slope": errors[1],
-            }
-        )
+    for line, fit in zip(lines, fits, strict=True):
+        back = np.array([[1.0, -float(used.x[line.rows].mean())], [0.0, 1.0]])
+        covariance = fit.cov_params() if fit.df_resid > 0 else np.full((2, 2), np.nan)
+        errors = np.sqrt(np.diag(back @ covariance @ back.T))
+        records.append((*line.key, line.branch, *(back @ fit.params), *errors))
     columns = [*SENSOR_KEYS, "branch", "intercept", "slope", "se_intercept", "se_slope"]
     return pd.DataFrame(records, columns=columns)
 
 
-def _ordinary(rows: pd.DataFrame, centre: float) -> RegressionResults:
-    """Ordinary least squares on x centred, so that no digits are lost."""
-    x = rows["x"].to_numpy(float) - centre
-    return OLS(rows["signal"].to_numpy(float), np.column_stack([np.ones(len(x)), x])).fit()
-
-
 def influence_of_readings(
-    table: pd.DataFrame, used: pd.DataFrame, lines: tuple[BranchLine, ...]
+    table: pd.DataFrame,
+    used: UsedReadings,
+    lines: tuple[BranchLine, ...],
+    fits: tuple[RegressionResults, ...],
 ) -> pd.DataFrame:
     """Return *table* with fitted, residual, studentised, leverage and cooks_distance; NaN where not used.
 
     Fitted values and residuals are by the line that stands for the sensor. Leverage, externally studentised
     residuals and Cook's distance are those of the ordinary line over the same readings.
     """
-    result = table.assign(**dict.fromkeys(INFLUENCE_COLUMNS, np.nan))
-    parts = [_influence(used.loc[line.rows], line) for line in line_of_sensor(lines).values()]
-    if parts:
-        found = pd.concat(parts)
-        result.loc[found.index, list(INFLUENCE_COLUMNS)] = found
-    return result
+    found = np.full((len(used.x), len(INFLUENCE_COLUMNS)), np.nan)
+    standing = set(map(id, line_of_sensor(lines).values()))
+    for line, fit in zip(lines, fits, strict=True):
+        if id(line) in standing:
+            fitted = line.intercept + line.slope * used.x[line.rows]
+            found[line.rows, 0], found[line.rows, 1] = fitted, used.signal[line.rows] - fitted
+            found[line.rows, 2:] = _influence(fit)
+    influence = pd.DataFrame(found, index=used.table.index, columns=list(INFLUENCE_COLUMNS))
+    return table.join(influence.reindex(table.index))
 
 
-def _influence(rows: pd.DataFrame, line: BranchLine) -> pd.DataFrame:
-    fitted = line.intercept + line.slope * rows["x"].to_numpy(float)
-    residual = rows["signal"].to_numpy(float) - fitted
-    frame = pd.DataFrame(np.nan, index=rows.index, columns=list(INFLUENCE_COLUMNS))
-    frame["fitted"], frame["residual"] = fitted, residual
-    degrees = len(rows) - 3
-    fit = _ordinary(rows, float(rows["x"].mean()))
+def _influence(fit: RegressionResults) -> FloatArray:
+    """Externally studentised residuals, leverages and Cook's distances, shape (readings, 3)."""
+    degrees = int(fit.df_resid) - 1
     if degrees < 1 or fit.mse_resid <= 0.0:
-        return frame
+        return np.full((int(fit.nobs), 3), np.nan)
     influence = OLSInfluence(fit)
-    internal = influence.resid_studentized_internal
-    frame["leverage"] = influence.hat_matrix_diag
-    frame["studentised"] = externally_studentised(internal, degrees)
-    frame["cooks_distance"] = influence.cooks_distance[0]
-    return frame
+    studentised = externally_studentised(influence.resid_studentized_internal, degrees)
+    return np.column_stack([studentised, influence.hat_matrix_diag, influence.cooks_distance[0]])
 
 
 def externally_studentised(internal: FloatArray, degrees: int) -> FloatArray:

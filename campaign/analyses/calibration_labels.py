@@ -5,11 +5,15 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 import numpy as np
-import pandas as pd
+import numpy.typing as npt
 
 from campaign.analyses.calibration_lines import POOLED, UNKNOWN, BranchLine
+from campaign.analyses.used_readings import UsedReadings
 from campaign.recordings.description import Description
 from campaign.recordings.recording import ReferenceQuantity
+
+FloatArray = npt.NDArray[np.float64]
+IntArray = npt.NDArray[np.int64]
 
 CONFOUNDED_SHARE = 0.5
 """Level and time count as confounded where more than this share of the runs only ever moves one way."""
@@ -46,11 +50,11 @@ class SharedReference:
 
 
 def shared_reference(
-    used: pd.DataFrame, description: Description, reference: ReferenceQuantity
+    used: UsedReadings, description: Description, reference: ReferenceQuantity
 ) -> SharedReference:
     """Return what uncertainty of the reference was carried."""
     stand = description.length_reference
-    sensors = used.drop_duplicates("sensor_code")
+    sensors = used.table.iloc[np.unique(used.sensor, return_index=True)[1]]
     matters = (sensors["rest_length_uncertainty_mm"] > 0) & (reference.name == "strain")
     uncertain = sensors[matters]
     relative = uncertain["rest_length_uncertainty_mm"] / uncertain["rest_length_mm"]
@@ -69,7 +73,7 @@ def shared_reference(
 
 
 def campaign_labels(
-    used: pd.DataFrame,
+    used: UsedReadings,
     lines: tuple[BranchLine, ...],
     description: Description,
     reference: ReferenceQuantity,
@@ -81,7 +85,7 @@ def campaign_labels(
     if not lines:
         return {}
     labels = {"full_scale": _full_scale_label(lines, description, reference)}
-    confounded = time_confounded(used)
+    confounded = time_confounded(used, np.arange(len(used.run_minutes)))
     if confounded:
         labels["time_confounded"] = confounded
     if not shared_reference(used, description, reference).stated:
@@ -100,23 +104,18 @@ def campaign_labels(
     return labels
 
 
-def time_confounded(rows: pd.DataFrame) -> str:
+def time_confounded(used: UsedReadings, runs: IntArray) -> str:
     """Return 'includes creep over the run (n min)' where level and time run together in most runs, else ''.
 
-    They separate only with descending, repeated or randomly ordered levels.
+    ``runs`` are codes of runs. Level and time separate only with descending, repeated or randomly ordered
+    levels.
     """
-    ordered = rows.sort_values(["run", "order"])
-    step = ordered.groupby("run")["x"].diff()
-    span = ordered.groupby("run")["x"].transform(lambda x: x.max() - x.min())
-    back = step * np.sign(step.groupby(ordered["run"]).transform("sum")) < -0.02 * span
-    one_way = ~back.groupby(ordered["run"]).any()
-    if one_way.mean() <= CONFOUNDED_SHARE:
+    if np.mean(used.one_way_runs[runs]) <= CONFOUNDED_SHARE:
         return ""
-    ends = ordered.groupby("run")["time_s"].agg(lambda t: t.max() - t.min())
-    minutes = float(np.nanmedian(ends)) / 60.0 if ends.notna().any() else float("nan")
-    if not np.isfinite(minutes) or minutes <= 0:
+    known = used.run_minutes[runs][used.run_minutes[runs] > 0]
+    if len(known) == 0:
         return "includes creep over the run (time not recorded)"
-    return f"includes creep over the run ({minutes:.2g} min)"
+    return f"includes creep over the run ({np.median(known):.2g} min)"
 
 
 def _full_scale_label(
@@ -136,31 +135,31 @@ def _full_scale_label(
     )
 
 
-def record_conditions(rows: pd.DataFrame, line: BranchLine, reference: ReferenceQuantity) -> dict[str, str]:
+def record_conditions(used: UsedReadings, line: BranchLine, reference: ReferenceQuantity) -> dict[str, str]:
     """Return the conditions that a calibration record holds in: range, approach, runs, climate, pressure."""
-    low, high = float(rows["x"].min()), float(rows["x"].max())
-    factor, unit = reference.shown_factor, reference.shown_unit
+    x = used.x[line.rows] * reference.shown_factor
     approach = {"rising": "from below only", "falling": "from above only", "both": "from either side"}
-    mountings = rows["session"].astype(str).nunique()
+    mountings = len(set(used.table["session"].to_numpy()[line.rows]))
     conditions = {
-        "range": f"{low * factor:.4g} to {high * factor:.4g} {unit}",
+        "range": f"{x.min():.4g} to {x.max():.4g} {reference.shown_unit}",
         "approach": approach[line.branch],
         "runs": f"{line.runs} in {mountings} mounting{'s' if mountings > 1 else ''}",
-        "temperature": _span(rows["temperature_c"], "°C"),
-        "humidity": _span(rows["humidity_percent"], "%RH"),
-        "pressure": _span(rows["pressure_kpa"], "kPa"),
-        "dwell": _span(rows["dwell_s"], "s") if "dwell_s" in rows else "not recorded",
         "rate": "quasi-static, held at each level",
         "conditioning": "not recorded",
     }
-    creep = time_confounded(rows)
+    columns = {"temperature_c": "°C", "humidity_percent": "%RH", "pressure_kpa": "kPa", "dwell_s": "s"}
+    for column, unit in columns.items():
+        known = column in used.table
+        span = _span(used.column(column, line.rows), unit) if known else "not recorded"
+        conditions[column.partition("_")[0]] = span
+    creep = time_confounded(used, line.run_codes)
     return conditions | ({"time": creep} if creep else {})
 
 
-def _span(values: pd.Series, unit: str) -> str:
+def _span(values: FloatArray, unit: str) -> str:
     """Range of the known values, or 'not recorded'."""
-    known = values.astype(float).dropna()
-    if known.empty:
+    known = values[np.isfinite(values)]
+    if len(known) == 0:
         return "not recorded"
     low, high = f"{known.min():.4g}", f"{known.max():.4g}"
     return f"{low} {unit}" if low == high else f"{low} to {high} {unit}"

@@ -9,6 +9,8 @@ import numpy.typing as npt
 import pandas as pd
 from scipy import special
 
+from campaign.analyses.level_cells import LevelCells, level_cells
+from campaign.analyses.used_readings import FALLING, RISING, TURNING, UsedReadings
 from campaign.methods.calibration_line import (
     GroupLines,
     LackOfFit,
@@ -39,7 +41,8 @@ ENOUGH_OWN_DEGREES = 10
 HETEROGENEITY_RISK = 0.001
 """A sensor whose runs scatter more than the pool's by an F test at this risk keeps its own covariance."""
 
-DIRECTION_SIGNS = {"rising": 1.0, "falling": -1.0, "turning": 0.0}
+DIRECTION_SIGNS = np.array([1.0, -1.0, 0.0])
+"""Of rising, falling and turning."""
 
 REACHED_SHARE = 0.98
 """The rated range counts as reached from this share of it on."""
@@ -54,7 +57,9 @@ class BranchLine:
     generation, module, sensor, position, branch, unit
         Whose line it is.
     rows
-        Index labels of its readings in the table of used readings.
+        Places of its readings among the used readings.
+    cells
+        The readings gathered by direction, level and run.
     run_codes, run_lines
         Codes of the runs in that table, and their own lines, in the same order.
     intercept, slope
@@ -88,7 +93,8 @@ class BranchLine:
     position: str
     branch: str
     unit: str
-    rows: pd.Index
+    rows: IntArray
+    cells: LevelCells
     run_codes: IntArray
     run_lines: GroupLines
     intercept: float
@@ -128,7 +134,7 @@ class BranchLine:
 class _RunFits:
     """Runs of one sensor and branch before pooling; coefficients are at the sensor's mean x, and slope."""
 
-    rows: pd.DataFrame
+    rows: IntArray
     span: tuple[float, float]
     run_codes: IntArray
     lines: GroupLines
@@ -156,20 +162,23 @@ class _Pool:
 
 
 def branch_lines(
-    used: pd.DataFrame, reference: ReferenceQuantity, description: Description
+    used: UsedReadings, reference: ReferenceQuantity, description: Description
 ) -> tuple[BranchLine, ...]:
     """Return the lines of all sensors, sorted; for each sensor both branches, rising, falling."""
-    fits: dict[tuple[str, str, str, str], _RunFits] = {}
-    for key, rows in used.groupby(SENSOR_KEYS, sort=True):
-        generation, module, sensor = map(str, key)
-        span = float(rows["x"].min()), float(rows["x"].max())
-        for branch, part in _branches(rows).items():
-            fit = _fit_runs(part, branch, span)
+    fits: dict[tuple[int, str], _RunFits] = {}
+    order = np.argsort(used.sensor, kind="stable")
+    bounds = np.flatnonzero(np.diff(used.sensor[order])) + 1
+    for rows in np.split(order, bounds) if len(order) else []:
+        span = float(used.x[rows].min()), float(used.x[rows].max())
+        for branch, part in _branches(rows, used.direction[rows]).items():
+            fit = _fit_runs(used, part, branch, span)
             if fit is not None:
-                fits[generation, module, sensor, branch] = fit
-    pools = _pools(fits)
+                fits[int(used.sensor[rows[0]]), branch] = fit
+    generations = {key: used.text("generation", int(fit.rows[0])) for key, fit in fits.items()}
+    pools = _pools(fits, generations)
     return tuple(
-        _branch_line(key, fit, pools[key[0], key[3]], reference, description) for key, fit in fits.items()
+        _branch_line(used, key[1], fit, pools[generations[key], key[1]], reference, description)
+        for key, fit in fits.items()
     )
 
 
@@ -181,39 +190,37 @@ def line_of_sensor(lines: tuple[BranchLine, ...]) -> dict[tuple[str, str, str], 
     return chosen
 
 
-def run_lines_frame(used: pd.DataFrame, lines: tuple[BranchLine, ...]) -> pd.DataFrame:
+def run_lines_frame(used: UsedReadings, lines: tuple[BranchLine, ...]) -> pd.DataFrame:
     """Return one row a run and branch; columns as in ``Calibration.run_lines``."""
-    first = used.drop_duplicates("run").set_index("run")
-    returns = {
-        code: zero_return(rows["x"].to_numpy(float), rows["signal"].to_numpy(float))
-        for code, rows in used.sort_values("order").groupby("run")
-    }
-    spans = {branch: _spans(used, branch) for branch in ("both", "rising", "falling")}
+    names = [*SENSOR_KEYS, "position", *RUN_KEYS[3:]]
+    first = np.unique(used.run, return_index=True)[1]
+    identity = {name: used.table[name].to_numpy()[first] for name in names}
+    returns = _zero_returns(used)
     records = [
         {
-            **{name: first.at[code, name] for name in [*SENSOR_KEYS, "position", *RUN_KEYS[3:]]},
+            **{name: values[code] for name, values in identity.items()},
             "branch": line.branch,
             "intercept": line.run_lines.intercepts[place],
             "slope": line.run_lines.slopes[place],
             "residual_sd": _residual_sd(line.run_lines, place),
             "readings": int(line.run_lines.counts[place]),
-            "x_low": spans[line.branch].at[code, "min"],
-            "x_high": spans[line.branch].at[code, "max"],
+            "x_low": float(used.x[line.rows[used.run[line.rows] == code]].min()),
+            "x_high": float(used.x[line.rows[used.run[line.rows] == code]].max()),
             "zero_return": returns[code],
             "zero_return_percent_fso": 100.0 * returns[code] / line.full_scale_output,
         }
         for line in lines
-        for place, code in enumerate(line.run_codes)
+        for place, code in enumerate(line.run_codes.tolist())
     ]
-    columns = [*SENSOR_KEYS, "position", *RUN_KEYS[3:], "branch", "intercept", "slope", "residual_sd"]
-    columns += ["readings", "x_low", "x_high", "zero_return", "zero_return_percent_fso"]
-    return pd.DataFrame(records, columns=columns)
+    columns = [*names, "branch", "intercept", "slope", "residual_sd", "readings", "x_low", "x_high"]
+    return pd.DataFrame(records, columns=[*columns, "zero_return", "zero_return_percent_fso"])
 
 
-def _spans(used: pd.DataFrame, branch: str) -> pd.DataFrame:
-    """Lowest and highest x of each run's readings in the branch, indexed by run code."""
-    rows = used if branch == "both" else used[used["direction"] == branch]
-    return rows.groupby("run")["x"].agg(["min", "max"])
+def _zero_returns(used: UsedReadings) -> list[float]:
+    """Zero return of every run, by its code."""
+    order = np.lexsort((used.table["order"].to_numpy(), used.run))
+    bounds = np.flatnonzero(np.diff(used.run[order])) + 1
+    return [zero_return(used.x[rows], used.signal[rows]) for rows in np.split(order, bounds)]
 
 
 def _residual_sd(lines: GroupLines, place: int) -> float:
@@ -221,30 +228,26 @@ def _residual_sd(lines: GroupLines, place: int) -> float:
     return float(np.sqrt(lines.residual_sums_of_squares[place] / degrees)) if degrees > 0 else float("nan")
 
 
-def _branches(rows: pd.DataFrame) -> dict[str, pd.DataFrame]:
+def _branches(rows: IntArray, direction: IntArray) -> dict[str, IntArray]:
     """Readings by branch, the one that stands for the sensor first: both, unless all are of one."""
-    parts = {branch: rows[rows["direction"] == branch] for branch in ("rising", "falling")}
+    parts = {"rising": rows[direction == RISING], "falling": rows[direction == FALLING]}
     whole = {branch: part for branch, part in parts.items() if len(part) == len(rows)}
     return whole or {"both": rows, **parts}
 
 
-def _fit_runs(rows: pd.DataFrame, branch: str, span: tuple[float, float]) -> _RunFits | None:
+def _fit_runs(used: UsedReadings, rows: IntArray, branch: str, span: tuple[float, float]) -> _RunFits | None:
     """Lines of the runs of one sensor and branch; None where no run has enough levels for one."""
-    if rows.empty:
+    rows = _rows_of_fitted_runs(used, rows, 2 if branch == "both" else 3)
+    if len(rows) == 0:
         return None
-    fewest = 2 if branch == "both" else 3
-    held = rows.groupby("run")["x"].transform("size") >= fewest
-    spread = rows.groupby("run")["x"].transform(lambda x: x.max() - x.min()) > 0
-    rows = rows[held & spread]
-    if rows.empty:
-        return None
-    codes, run = np.unique(rows["run"].to_numpy(), return_inverse=True)
-    x, y = rows["x"].to_numpy(float), rows["signal"].to_numpy(float)
+    codes, run = _codes(used.run[rows])
+    x, y = used.x[rows], used.signal[rows]
     lines = fit_lines(x, y, run, len(codes))
     degrees = float(np.sum(lines.counts - 2))
     own = float(np.sum(lines.residual_sums_of_squares)) / degrees if degrees > 0 else float("nan")
-    lack = _lack_of_fit(rows, x, y, run)
-    noise, noise_degrees = _noise(rows, x, y, run, lack, own, degrees)
+    direction = _sides(used.direction[rows])
+    lack = _lack_of_fit(x, y, used.level[rows], direction, run)
+    noise, noise_degrees = _noise(x, y, direction, run, lack)
     centre = float(x.mean())
     within = noise * np.stack([_inverse_design(lines, place, centre) for place in range(len(codes))])
     coefficients = np.column_stack([lines.values(centre), lines.slopes])
@@ -263,6 +266,19 @@ def _fit_runs(rows: pd.DataFrame, branch: str, span: tuple[float, float]) -> _Ru
     )
 
 
+def _codes(values: IntArray) -> tuple[IntArray, IntArray]:
+    """Distinct values and the place of each value among them."""
+    distinct, place = np.unique(values, return_inverse=True)
+    return distinct, place.astype(np.int64)
+
+
+def _rows_of_fitted_runs(used: UsedReadings, rows: IntArray, fewest: int) -> IntArray:
+    """Rows of the runs with at least *fewest* readings and more than one x."""
+    codes, run = _codes(used.run[rows])
+    lines = fit_lines(used.x[rows], used.signal[rows], run, len(codes))
+    return rows[((lines.counts >= fewest) & np.isfinite(lines.slopes))[run]]
+
+
 def _inverse_design(lines: GroupLines, place: int, centre: float) -> FloatArray:
     """(X'X)⁻¹ of one run for (value at *centre*, slope)."""
     count, sxx = float(lines.counts[place]), float(lines.x_sums_of_squares[place])
@@ -270,54 +286,51 @@ def _inverse_design(lines: GroupLines, place: int, centre: float) -> FloatArray:
     return np.array([[1.0 / count + gap**2 / sxx, gap / sxx], [gap / sxx, 1.0 / sxx]])
 
 
-def _direction_codes(rows: pd.DataFrame) -> IntArray:
-    """Branch of every reading, −1 for turning; all one where most turn (levels in random order)."""
-    direction = rows["direction"].to_numpy()
-    codes = np.select([direction == "rising", direction == "falling"], [0, 1], -1)
-    return np.zeros(len(rows), dtype=np.int64) if np.mean(codes == -1) > 0.5 else codes.astype(np.int64)
+def _sides(direction: IntArray) -> IntArray:
+    """Directions; all one where most readings turn, as where levels come in random order."""
+    return np.zeros_like(direction) if np.mean(direction == TURNING) > 0.5 else direction
 
 
-def _lack_of_fit(rows: pd.DataFrame, x: FloatArray, y: FloatArray, run: IntArray) -> LackOfFit | None:
+def _lack_of_fit(
+    x: FloatArray, y: FloatArray, level: FloatArray, direction: IntArray, run: IntArray
+) -> LackOfFit | None:
     """Level against level × run within directions, each run and direction with its own line."""
-    direction = _direction_codes(rows)
-    level = rows["level"].to_numpy(float)
     parts = []
-    for code in (0, 1):
-        chosen = (direction == code) & np.isfinite(level)
-        if not chosen.any():
+    for side in (RISING, FALLING):
+        chosen = np.flatnonzero((direction == side) & np.isfinite(level))
+        if len(chosen) == 0:
             continue
-        runs, own_run = np.unique(run[chosen], return_inverse=True)
+        runs, own_run = _codes(run[chosen])
         lines = fit_lines(x[chosen], y[chosen], own_run, len(runs))
-        kept = np.isfinite(lines.slopes)[own_run]
         dx = x[chosen] - lines.x_means[own_run]
         residual = y[chosen] - lines.y_means[own_run] - lines.slopes[own_run] * dx
-        codes = np.unique(level[chosen][kept], return_inverse=True)[1]
-        part = lack_of_fit_of_runs(residual[kept], own_run[kept], codes)
+        kept = np.isfinite(residual)
+        part = lack_of_fit_of_runs(residual[kept], own_run[kept], _codes_of_levels(level[chosen][kept]))
         parts += [part] if part is not None else []
     return pooled_lack_of_fit(parts, float(len(np.unique(run))))
 
 
+def _codes_of_levels(level: FloatArray) -> IntArray:
+    return np.unique(level, return_inverse=True)[1].astype(np.int64)
+
+
 def _noise(
-    rows: pd.DataFrame,
-    x: FloatArray,
-    y: FloatArray,
-    run: IntArray,
-    lack: LackOfFit | None,
-    own: float,
-    own_degrees: float,
+    x: FloatArray, y: FloatArray, direction: IntArray, run: IntArray, lack: LackOfFit | None
 ) -> tuple[float, float]:
     """Variance of a reading about its run, by level × run or else about branch lines; its degrees."""
     if lack is not None and lack.mean_square_error > 0:
         return lack.mean_square_error, float(lack.second_degrees)
-    direction = _direction_codes(rows)
-    kept = direction >= 0
-    codes, group = np.unique(run[kept] * 2 + direction[kept], return_inverse=True)
-    lines = fit_lines(x[kept], y[kept], group, len(codes))
-    fitted = np.isfinite(lines.slopes)
-    degrees = float(np.sum((lines.counts - 2)[fitted]))
-    if degrees > 0:
-        return max(float(np.sum(lines.residual_sums_of_squares[fitted])) / degrees, _smallest(y)), degrees
-    return (own, own_degrees) if own_degrees > 0 and own > 0 else (_smallest(y), 1.0)
+    sided = direction != TURNING
+    for group in (run[sided] * 2 + direction[sided], run):
+        inside = sided if len(group) < len(x) else np.ones(len(x), dtype=bool)
+        codes, own = _codes(group)
+        lines = fit_lines(x[inside], y[inside], own, len(codes))
+        fitted = np.isfinite(lines.slopes)
+        degrees = float(np.sum((lines.counts - 2)[fitted]))
+        if degrees > 0:
+            squares = float(np.sum(lines.residual_sums_of_squares[fitted]))
+            return max(squares / degrees, _smallest(y)), degrees
+    return _smallest(y), 1.0
 
 
 def _smallest(y: FloatArray) -> float:
@@ -325,11 +338,13 @@ def _smallest(y: FloatArray) -> float:
     return float((1e-12 * max(float(np.max(np.abs(y))), 1e-300)) ** 2)
 
 
-def _pools(fits: dict[tuple[str, str, str, str], _RunFits]) -> dict[tuple[str, str], _Pool]:
+def _pools(
+    fits: dict[tuple[int, str], _RunFits], generations: dict[tuple[int, str], str]
+) -> dict[tuple[str, str], _Pool]:
     """Observed scatter of runs, less noise within, pooled over sensors, by generation and branch."""
     gathered: dict[tuple[str, str], list[_RunFits]] = {}
     for key, fit in fits.items():
-        gathered.setdefault((key[0], key[3]), []).append(fit)
+        gathered.setdefault((generations[key], key[1]), []).append(fit)
     pools = {}
     for name, members in gathered.items():
         several = [fit for fit in members if fit.degrees > 0]
@@ -366,7 +381,8 @@ def _scatters_more(fit: _RunFits, observed: FloatArray, pool: _Pool) -> bool:
 
 
 def _branch_line(
-    key: tuple[str, str, str, str],
+    used: UsedReadings,
+    branch: str,
     fit: _RunFits,
     pool: _Pool,
     reference: ReferenceQuantity,
@@ -380,15 +396,22 @@ def _branch_line(
     slope = float(coefficients[1])
     known = source != UNKNOWN
     fit_covariance = covariance if known else np.full((2, 2), np.nan)
-    shared = _shared_covariance(fit.rows, slope, reference, description)
-    hysteresis = _hysteresis(fit, slope) if key[3] == "both" else None
+    shared = _shared_covariance(used, fit.rows, slope, reference, description)
+    rows = fit.rows
+    cells = level_cells(
+        used.x[rows], used.signal[rows], used.level[rows], used.direction[rows], used.run[rows], slope
+    )
+    hysteresis = _hysteresis(cells, fit) if branch == "both" else None
     full_scale_output, full_scale = _full_scale(fit.span, slope, reference, description)
     line = BranchLine(
-        *key[:3],
-        str(fit.rows["position"].iloc[0]),
-        key[3],
-        str(fit.rows["unit"].iloc[0]),
-        fit.rows.index,
+        used.text("generation", int(rows[0])),
+        used.text("module", int(rows[0])),
+        used.text("sensor", int(rows[0])),
+        used.text("position", int(rows[0])),
+        branch,
+        used.text("unit", int(rows[0])),
+        rows,
+        cells,
         fit.run_codes,
         fit.lines,
         float(coefficients[0]),
@@ -424,40 +447,25 @@ def _effective_degrees(line: BranchLine, fit: _RunFits) -> float:
     return total**2 / spent if spent > 0 else line.degrees_of_freedom
 
 
-def _hysteresis(fit: _RunFits, slope: float) -> StepHysteresis | None:
+def _hysteresis(cells: LevelCells, fit: _RunFits) -> StepHysteresis | None:
     """Rising minus falling at each level that both branches visit in a run."""
-    differences = level_differences(fit.rows, slope)
-    if differences.empty:
+    levels, differences = cells.differences()
+    if len(levels) == 0:
         return None
-    return step_hysteresis(
-        differences.to_numpy(float), noise_variance=2.0 * fit.noise, noise_degrees=fit.noise_degrees
-    )
-
-
-def level_differences(rows: pd.DataFrame, slope: float) -> pd.DataFrame:
-    """Return rising minus falling signals, one row a run and one column a level visited both ways.
-
-    Signals are moved along the line from the x that was reached to the nominal level.
-    """
-    cells = run_cells(rows, slope)[0].set_index(["direction", "run", "level"])["signal"]
-    if not {"rising", "falling"} <= set(cells.index.get_level_values("direction")):
-        return pd.DataFrame()
-    difference = (cells["rising"] - cells["falling"]).dropna()
-    return difference.unstack("level") if len(difference) else pd.DataFrame()
+    return step_hysteresis(differences, noise_variance=2.0 * fit.noise, noise_degrees=fit.noise_degrees)
 
 
 def _shared_covariance(
-    rows: pd.DataFrame, slope: float, reference: ReferenceQuantity, description: Description
+    used: UsedReadings, rows: IntArray, slope: float, reference: ReferenceQuantity, description: Description
 ) -> FloatArray:
     """What the uncertainty of the reference adds to the covariance of intercept and slope."""
     stated = description.length_reference
-    x = rows["x"].to_numpy(float)
-    rest = float(rows["rest_length_mm"].iloc[0])
-    recorded = str(rows["reference"].iloc[0])
-    elongation = rows["elongation_mm"].to_numpy(float)
+    x = used.x[rows]
+    rest = float(used.column("rest_length_mm", rows[:1])[0])
+    recorded = used.text("reference", int(rows[0]))
+    elongation, length = used.column("elongation_mm", rows), used.column("length_mm", rows)
     if reference.name == "strain" and not np.isfinite(elongation).all():
         elongation = x * rest
-    length = rows["length_mm"].to_numpy(float)
     travel = length if recorded == "length" else elongation
     if (reference.name == "strain" and not np.isfinite(rest)) or not np.isfinite(travel).all():
         return np.zeros((2, 2))
@@ -467,12 +475,12 @@ def _shared_covariance(
         length_mm=length,
         elongation_mm=elongation,
         rest_length_mm=rest,
-        direction=rows["direction"].map(DIRECTION_SIGNS).to_numpy(np.float64),
-        session=np.unique(rows["session"].astype(str), return_inverse=True)[1].astype(np.int64),
+        direction=DIRECTION_SIGNS[used.direction[rows]],
+        session=pd.factorize(used.table["session"].to_numpy()[rows])[0].astype(np.int64),
         scale_relative=stated.scale_relative,
         zero_mm=stated.zero_mm,
         backlash_mm=stated.backlash_mm,
-        rest_length_uncertainty_mm=float(rows["rest_length_uncertainty_mm"].iloc[0]),
+        rest_length_uncertainty_mm=float(used.column("rest_length_uncertainty_mm", rows[:1])[0]),
     )
     return covariance_of_line(sources, x, slope)
 
@@ -487,16 +495,3 @@ def _full_scale(
     if rated > 0 and reach >= REACHED_SHARE * rated:
         return abs(slope) * rated, "rated"
     return abs(slope) * (high - low), "measured"
-
-
-def run_cells(rows: pd.DataFrame, slope: float) -> tuple[pd.DataFrame, IntArray]:
-    """Return one row a direction, level and run, and the code of its direction and level.
-
-    Signals (column ``signal``) are moved along the line from the x that was reached to the nominal level;
-    rows without a common level are left out.
-    """
-    rows = rows[np.isfinite(rows["level"])]
-    moved = rows.assign(signal=rows["signal"] - slope * (rows["x"] - rows["level"]))
-    cells = moved.groupby(["direction", "level", "run"], sort=True)["signal"].mean().reset_index()
-    codes = cells.groupby(["direction", "level"], sort=True).ngroup()
-    return cells, np.asarray(codes, dtype=np.int64)

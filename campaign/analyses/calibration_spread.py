@@ -5,9 +5,11 @@ from __future__ import annotations
 import numpy as np
 import pandas as pd
 
-from campaign.analyses.calibration_lines import BranchLine, level_differences, line_of_sensor, run_cells
+from campaign.analyses.calibration_lines import BranchLine, line_of_sensor
+from campaign.analyses.used_readings import DIRECTIONS, UsedReadings
 from campaign.methods.repeatability import repeatability
 from campaign.recordings.description import Description
+from campaign.recordings.recording import ReferenceQuantity
 from campaign.trials.readings import SENSOR_KEYS
 
 NOT_FROM_STAND = "not distinguishable from the stand"
@@ -18,21 +20,20 @@ REPEATABILITY_COLUMNS = [*SENSOR_KEYS, "direction", "nominal_level", "runs", "sd
 
 
 def hysteresis_frame(
-    used: pd.DataFrame, lines: tuple[BranchLine, ...], description: Description
+    used: UsedReadings, lines: tuple[BranchLine, ...], reference: ReferenceQuantity, description: Description
 ) -> pd.DataFrame:
     """Return rising minus falling at every common level of every sensor, with simultaneous limits."""
     parts = []
     for line in lines:
-        if line.branch != "both" or line.hysteresis is None:
-            continue
-        rows = used.loc[line.rows]
         found = line.hysteresis
-        stand = _backlash_in_signal(line, rows, description)
+        if found is None:
+            continue
+        stand = _backlash_in_signal(used, line, reference, description)
         parts.append(
             pd.DataFrame(
                 {
                     **dict(zip(SENSOR_KEYS, line.key, strict=True)),
-                    "nominal_level": level_differences(rows, line.slope).columns.to_numpy(float),
+                    "nominal_level": line.cells.differences()[0],
                     "difference": found.differences,
                     "low": found.low,
                     "high": found.high,
@@ -45,33 +46,33 @@ def hysteresis_frame(
     return pd.concat(parts, ignore_index=True) if parts else pd.DataFrame(columns=HYSTERESIS_COLUMNS)
 
 
-def _backlash_in_signal(line: BranchLine, rows: pd.DataFrame, description: Description) -> float:
+def _backlash_in_signal(
+    used: UsedReadings, line: BranchLine, reference: ReferenceQuantity, description: Description
+) -> float:
     """Expanded (95 %) backlash of the stand as a signal difference; −1 where it is not stated."""
-    backlash = description.length_reference.backlash_mm
-    rest = float(rows["rest_length_mm"].iloc[0])
-    strain = np.allclose(rows["x"], rows["strain"], equal_nan=False)
-    per_mm = 1.0 / rest if strain else 1.0
-    return 1.96 * backlash * per_mm * abs(line.slope) if backlash * per_mm > 0 else -1.0
+    rest = float(used.column("rest_length_mm", line.rows[:1])[0]) if reference.name == "strain" else 1.0
+    backlash = 1.96 * description.length_reference.backlash_mm / rest * abs(line.slope)
+    return backlash if backlash > 0 else -1.0
 
 
-def repeatability_frame(used: pd.DataFrame, lines: tuple[BranchLine, ...]) -> pd.DataFrame:
+def repeatability_frame(lines: tuple[BranchLine, ...]) -> pd.DataFrame:
     """Return SD and range over runs at every level and direction of every sensor.
 
     Signals are moved along the sensor's line from the x that was reached to the nominal level.
     """
     parts = []
     for line in line_of_sensor(lines).values():
-        cells, codes = run_cells(used.loc[line.rows], line.slope)
-        if cells.empty:
+        cells = line.cells
+        if cells.cells == 0:
             continue
-        found = repeatability(cells["signal"].to_numpy(float), codes, int(codes.max()) + 1)
-        names = cells.drop_duplicates(["direction", "level"])
+        found = repeatability(cells.signal, cells.cell, cells.cells)
+        first = np.unique(cells.cell, return_index=True)[1]
         parts.append(
             pd.DataFrame(
                 {
                     **dict(zip(SENSOR_KEYS, line.key, strict=True)),
-                    "direction": names["direction"].to_numpy(),
-                    "nominal_level": names["level"].to_numpy(float),
+                    "direction": np.array(DIRECTIONS, dtype=object)[cells.direction[first]],
+                    "nominal_level": cells.level[first],
                     "runs": found.counts,
                     "sd": found.standard_deviations,
                     "range": np.where(found.counts > 1, found.ranges, np.nan),

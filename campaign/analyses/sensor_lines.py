@@ -8,7 +8,8 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
-from campaign.analyses.calibration_lines import BranchLine, run_cells
+from campaign.analyses.calibration_lines import BranchLine
+from campaign.analyses.used_readings import TURNING, UsedReadings
 from campaign.methods.calibration_line import common_quadratic, fit_polynomial, t_quantile
 from campaign.methods.linearity import linearity
 from campaign.methods.repeatability import repeatability
@@ -76,7 +77,7 @@ SENSOR_LINE_COLUMNS = [
 
 
 def sensor_lines_frame(
-    used: pd.DataFrame,
+    used: UsedReadings,
     lines: tuple[BranchLine, ...],
     reference: ReferenceQuantity,
 ) -> pd.DataFrame:
@@ -84,23 +85,22 @@ def sensor_lines_frame(
     exponents = _stretch_exponents(used, lines, reference)
     records = []
     for line in lines:
-        rows = used.loc[line.rows]
         records.append(
             {
-                **_line_figures(line, rows, reference),
-                **_fit_figures(line, rows),
-                **_gauge_factor(line, rows, reference),
-                **_linearity_figures(line, rows),
+                **_line_figures(line, used, reference),
+                **_fit_figures(line, used),
+                **_gauge_factor(line, used.x[line.rows], reference),
+                **_linearity_figures(line),
                 **_hysteresis_figures(line),
-                "repeatability_percent_fso": _repeatability_percent(line, rows),
+                "repeatability_percent_fso": _repeatability_percent(line),
                 **exponents[line.key, line.branch],
             }
         )
     return pd.DataFrame(records, columns=SENSOR_LINE_COLUMNS)
 
 
-def _line_figures(line: BranchLine, rows: pd.DataFrame, reference: ReferenceQuantity) -> dict[str, object]:
-    x = rows["x"].to_numpy(float)
+def _line_figures(line: BranchLine, used: UsedReadings, reference: ReferenceQuantity) -> dict[str, object]:
+    x = used.x[line.rows]
     middle = 0.5 * float(x.min() + x.max())
     return {
         "generation": line.generation,
@@ -109,11 +109,11 @@ def _line_figures(line: BranchLine, rows: pd.DataFrame, reference: ReferenceQuan
         "position": line.position,
         "branch": line.branch,
         "runs": line.runs,
-        "readings": len(rows),
+        "readings": len(x),
         "strain_low": float(x.min()),
         "strain_high": float(x.max()),
-        "rest_length_mm": float(rows["rest_length_mm"].iloc[0]),
-        "rest_length_uncertainty_mm": float(rows["rest_length_uncertainty_mm"].iloc[0]),
+        "rest_length_mm": float(used.column("rest_length_mm", line.rows[:1])[0]),
+        "rest_length_uncertainty_mm": float(used.column("rest_length_uncertainty_mm", line.rows[:1])[0]),
         "intercept": line.intercept,
         "slope": line.slope,
         "var_intercept": float(line.covariance[0, 0]),
@@ -131,12 +131,12 @@ def _line_figures(line: BranchLine, rows: pd.DataFrame, reference: ReferenceQuan
     }
 
 
-def _fit_figures(line: BranchLine, rows: pd.DataFrame) -> dict[str, object]:
+def _fit_figures(line: BranchLine, used: UsedReadings) -> dict[str, object]:
     """Lack of fit, the quadratic term, and R² of the ordinary line."""
-    x, y = rows["x"].to_numpy(float), rows["signal"].to_numpy(float)
-    side = rows["direction"].map({"rising": 0, "falling": 1, "turning": 2}).to_numpy()
-    side = np.zeros_like(side) if np.mean(side == 2) > 0.5 else side
-    group = np.unique(rows["run"].to_numpy() * 3 + side, return_inverse=True)[1]
+    x, y = used.x[line.rows], used.signal[line.rows]
+    side = used.direction[line.rows]
+    side = np.zeros_like(side) if np.mean(side == TURNING) > 0.5 else side
+    group = np.unique(used.run[line.rows] * 3 + side, return_inverse=True)[1].astype(np.int64)
     estimate, low, high = common_quadratic(x, y, group)
     lack = line.lack_of_fit
     return {
@@ -151,7 +151,7 @@ def _fit_figures(line: BranchLine, rows: pd.DataFrame) -> dict[str, object]:
     }
 
 
-def _gauge_factor(line: BranchLine, rows: pd.DataFrame, reference: ReferenceQuantity) -> dict[str, object]:
+def _gauge_factor(line: BranchLine, x: FloatArray, reference: ReferenceQuantity) -> dict[str, object]:
     """Slope over zero-strain signal, with an interval by the law of propagation from their covariance."""
     nan = float("nan")
     if reference.name != "strain" or line.intercept == 0.0:
@@ -162,7 +162,6 @@ def _gauge_factor(line: BranchLine, rows: pd.DataFrame, reference: ReferenceQuan
     variance = float(gradient @ line.covariance @ gradient)
     degrees = line.degrees_of_freedom
     half = t_quantile(0.975, degrees) * np.sqrt(variance) if degrees > 0 else nan
-    x = rows["x"].to_numpy(float)
     outside = min(abs(float(x.min())), abs(float(x.max()))) if x.min() * x.max() > 0 else 0.0
     label = EXTRAPOLATED if outside > 0.02 * float(np.ptp(x)) else ""
     return dict(zip(_GAUGE_FACTOR, (factor, factor - half, factor + half, label), strict=True))
@@ -178,13 +177,14 @@ _LINEARITY = {
 }
 
 
-def _linearity_figures(line: BranchLine, rows: pd.DataFrame) -> dict[str, float]:
+def _linearity_figures(line: BranchLine) -> dict[str, float]:
     """Linearity of the mean curve: signals at nominal levels, averaged over runs, then over directions."""
-    cells, _ = run_cells(rows, line.slope)
-    curve = cells.groupby(["level", "direction"])["signal"].mean().groupby("level").mean()
+    if line.cells.cells == 0:
+        return dict.fromkeys(_LINEARITY.values(), float("nan"))
+    levels, curve = line.cells.mean_curve()
     if len(curve) < 3:
         return dict.fromkeys(_LINEARITY.values(), float("nan"))
-    found = linearity(curve.index.to_numpy(float), curve.to_numpy(float), line.full_scale_output)
+    found = linearity(levels, curve, line.full_scale_output)
     return {_LINEARITY[name]: value for name, value in asdict(found).items()}
 
 
@@ -200,26 +200,24 @@ def _hysteresis_figures(line: BranchLine) -> dict[str, float]:
     }
 
 
-def _repeatability_percent(line: BranchLine, rows: pd.DataFrame) -> float:
+def _repeatability_percent(line: BranchLine) -> float:
     """SD over runs at one level and direction, pooled over both, in per cent of full-scale output."""
-    cells, codes = run_cells(rows, line.slope)
-    if cells.empty:
+    if line.cells.cells == 0:
         return float("nan")
-    pooled = repeatability(cells["signal"].to_numpy(float), codes, int(codes.max()) + 1).pooled_sd
+    pooled = repeatability(line.cells.signal, line.cells.cell, line.cells.cells).pooled_sd
     return 100.0 * pooled / line.full_scale_output
 
 
 def _stretch_exponents(
-    used: pd.DataFrame, lines: tuple[BranchLine, ...], reference: ReferenceQuantity
+    used: UsedReadings, lines: tuple[BranchLine, ...], reference: ReferenceQuantity
 ) -> dict[tuple[tuple[str, str, str], str], dict[str, float]]:
     """Mean exponent of each sensor's runs; the SD between runs is pooled over its generation."""
     found: dict[tuple[tuple[str, str, str], str], FloatArray] = {}
     for line in lines:
-        rows = used.loc[line.rows]
-        strain, signal = rows["x"].to_numpy(float), rows["signal"].to_numpy(float)
+        strain, signal = used.x[line.rows], used.signal[line.rows]
         usable = reference.name == "strain" and line.unit in CAPACITANCE_UNITS
         if usable and strain.min() > -1.0 and signal.min() > 0.0:
-            run = np.unique(rows["run"].to_numpy(), return_inverse=True)[1]
+            run = np.unique(used.run[line.rows], return_inverse=True)[1].astype(np.int64)
             found[line.key, line.branch] = run_exponents(strain, signal, run, line.runs).exponents
     pooled: dict[tuple[str, str], tuple[float, int]] = {}
     for (key, branch), values in found.items():

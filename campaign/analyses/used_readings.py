@@ -1,6 +1,8 @@
-"""The readings that analyses use, with levels and rest lengths beside the table of readings."""
+"""The readings that analyses use, with levels and rest lengths beside the table, and as plain arrays."""
 
 from __future__ import annotations
+
+from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
@@ -9,12 +11,60 @@ import pandas as pd
 from campaign.trials.readings import RUN_KEYS, SENSOR_KEYS, Readings
 
 FloatArray = npt.NDArray[np.float64]
+IntArray = npt.NDArray[np.int64]
+BoolArray = npt.NDArray[np.bool_]
 
 REST = ("rest_length_mm", "rest_length_uncertainty_mm")
 
+RISING, FALLING, TURNING = 0, 1, 2
+DIRECTIONS = ("rising", "falling", "turning")
+"""Names of the codes of directions."""
 
-def used_readings(readings: Readings, sensors: pd.DataFrame) -> pd.DataFrame:
-    """Return the used readings that have a reference and a signal, index kept.
+
+@dataclass(frozen=True)
+class UsedReadings:
+    """The used readings that have a reference and a signal, in the order of the table of readings.
+
+    Attributes
+    ----------
+    table
+        Columns of the table of readings, and ``rest_length_mm``, ``rest_length_uncertainty_mm``,
+        ``reference`` (what the stand recorded); index as in the table of readings.
+    x, signal
+        Shape (readings,).
+    level
+        Nominal level, of the campaign or else of the sensor; NaN where neither is common.
+    direction
+        Codes: rising, falling, turning.
+    run, sensor
+        Codes from 0, in sorted order of ``RUN_KEYS`` and ``SENSOR_KEYS``.
+    one_way_runs
+        Shape (runs,): whether the run only ever moves one way (level and time are not told apart).
+    run_minutes
+        Shape (runs,): minutes between the first and the last reading; NaN where time is not recorded.
+    """
+
+    table: pd.DataFrame
+    x: FloatArray
+    signal: FloatArray
+    level: FloatArray
+    direction: IntArray
+    run: IntArray
+    sensor: IntArray
+    one_way_runs: BoolArray
+    run_minutes: FloatArray
+
+    def column(self, name: str, rows: IntArray) -> FloatArray:
+        """Values of a numeric column of the table at the places *rows*."""
+        return np.asarray(self.table[name].to_numpy(dtype=np.float64)[rows])
+
+    def text(self, name: str, row: int) -> str:
+        """Text of a column of the table at one place."""
+        return str(self.table[name].iat[row])
+
+
+def used_readings(readings: Readings, sensors: pd.DataFrame) -> UsedReadings:
+    """Return the readings that analyses use.
 
     Parameters
     ----------
@@ -22,25 +72,44 @@ def used_readings(readings: Readings, sensors: pd.DataFrame) -> pd.DataFrame:
         All readings.
     sensors
         Register of sensors: module, sensor and, where known, rest_length_mm and rest_length_uncertainty_mm.
-
-    Returns
-    -------
-    pandas.DataFrame
-        Columns of the table of readings, and: ``level`` (nominal level, of the campaign or else of the
-        sensor, NaN where neither is common), ``rest_length_mm``, ``rest_length_uncertainty_mm``,
-        ``reference`` (what the stand recorded), ``run`` and ``sensor_code`` (codes from 0), ``weight`` (1).
     """
     table = readings.usable
-    table = table[np.isfinite(table["x"].astype(float)) & np.isfinite(table["signal"].astype(float))].copy()
+    known = np.isfinite(table["x"].astype(float)) & np.isfinite(table["signal"].astype(float))
+    table = table[known].copy()
     own = table["sensor_level"] if "sensor_level" in table else pd.Series(np.nan, table.index)
-    table["level"] = table["nominal_level"].astype(float).fillna(own.astype(float))
+    level = table["nominal_level"].astype(float).fillna(own.astype(float))
     if "reference" not in table:
-        table["reference"] = "elongation" if readings.reference.name != "length" else "length"
+        table["reference"] = "length" if readings.reference.name == "length" else "elongation"
     for column in REST:
         table[column] = _rest(table, sensors, column)
-    table["run"] = table.groupby(RUN_KEYS, sort=True).ngroup()
-    table["sensor_code"] = table.groupby(SENSOR_KEYS, sort=True).ngroup()
-    return table
+    run = np.asarray(table.groupby(RUN_KEYS, sort=True).ngroup(), dtype=np.int64)
+    one_way, minutes = _course_of_runs(table, run)
+    return UsedReadings(
+        table,
+        np.asarray(table["x"], dtype=np.float64),
+        np.asarray(table["signal"], dtype=np.float64),
+        np.asarray(level, dtype=np.float64),
+        np.asarray(pd.Index(DIRECTIONS).get_indexer(pd.Index(table["direction"])), dtype=np.int64),
+        run,
+        np.asarray(table.groupby(SENSOR_KEYS, sort=True).ngroup(), dtype=np.int64),
+        one_way,
+        minutes,
+    )
+
+
+def _course_of_runs(table: pd.DataFrame, run: IntArray) -> tuple[BoolArray, FloatArray]:
+    """Whether each run only ever moves one way, and how many minutes it takes."""
+    course = pd.DataFrame({"run": run, "order": table["order"].to_numpy(), "x": table["x"].to_numpy(float)})
+    course["time"] = table["time_s"].to_numpy(float)
+    course = course.sort_values(["run", "order"])
+    runs = course.groupby("run")
+    x = runs["x"].agg(["first", "last", "min", "max"])
+    along = np.sign((x["last"] - x["first"]).to_numpy())[course["run"]]
+    span = (x["max"] - x["min"]).to_numpy()[course["run"]]
+    back = runs["x"].diff() * along < -0.02 * span
+    one_way = ~back.groupby(course["run"]).any() & (x["last"] != x["first"])
+    minutes = (runs["time"].max() - runs["time"].min()) / 60.0
+    return np.asarray(one_way, dtype=bool), np.asarray(minutes, dtype=np.float64)
 
 
 def _rest(table: pd.DataFrame, sensors: pd.DataFrame, column: str) -> FloatArray:
@@ -49,10 +118,8 @@ def _rest(table: pd.DataFrame, sensors: pd.DataFrame, column: str) -> FloatArray
     register = next((name for name in (column, column.removesuffix("_mm")) if name in sensors), None)
     if register is not None and len(sensors):
         known = sensors.drop_duplicates(["module", "sensor"]).set_index(["module", "sensor"])[register]
-        listed = known.reindex(pd.MultiIndex.from_frame(table[["module", "sensor"]])).to_numpy()
-        own = np.where(
-            np.isfinite(own), own, pd.to_numeric(pd.Series(listed), errors="coerce").to_numpy(float)
-        )
+        listed = pd.Series(known.reindex(pd.MultiIndex.from_frame(table[["module", "sensor"]])).to_numpy())
+        own = np.where(np.isfinite(own), own, pd.to_numeric(listed, errors="coerce").to_numpy(float))
     if column == REST[0]:
         own = np.where(np.isfinite(own), own, (table["length_mm"] - table["elongation_mm"]).to_numpy(float))
     return np.asarray(own, dtype=np.float64)
