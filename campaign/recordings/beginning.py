@@ -14,7 +14,8 @@ import numpy as np
 from campaign.notices import CampaignStops, Notice
 from campaign.recordings.columns import ColumnPlan, TablePlan, plan_columns
 from campaign.recordings.description import DESCRIPTION_FILE, KINDS, Description
-from campaign.recordings.dialect import Layout, find_layout, plain_text
+from campaign.recordings.dialect import Layout, find_layout
+from campaign.recordings.encoding import plain_text
 from campaign.recordings.folder import list_files
 from campaign.recordings.name_guess import NameGuess, guess_pattern, kind_of_word
 from campaign.recordings.name_pattern import compile_pattern, read_name

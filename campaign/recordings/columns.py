@@ -14,8 +14,9 @@ from functools import lru_cache
 
 from campaign.notices import Notice
 from campaign.recordings.description import ColumnRule
-from campaign.recordings.dialect import Layout, shown
+from campaign.recordings.dialect import Layout
 from campaign.recordings.file_glob import matches_glob
+from campaign.recordings.remarks import shown
 from campaign.units import (
     FAMILIES,
     QUANTITY_FAMILIES,
@@ -287,11 +288,10 @@ class _Planner:
     def note(
         self, code: str, column: int | None, what: str, done: str, remedy: str = "", count: int = 1
     ) -> None:
-        self.notices.append(Notice(code, "noted", None, self.line, column, what, done, remedy, count))
+        self.notices.append(noted(code, self.line, column, what, done, remedy, count))
 
     def set_aside(self, code: str, column: int | None, what: str, remedy: str) -> None:
-        done = "the file is not used"
-        self.notices.append(Notice(code, "set aside", None, self.line, column, what, done, remedy))
+        self.notices.append(set_aside(code, self.line, column, what, remedy))
 
     def take_by_rule(self, position: int) -> bool:
         header = self.header(position)

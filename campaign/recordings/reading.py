@@ -16,7 +16,8 @@ import numpy.typing as npt
 from campaign.notices import Notice
 from campaign.recordings.columns import ColumnPlan, TablePlan, plan_columns, rules_of_file
 from campaign.recordings.description import Description
-from campaign.recordings.dialect import Layout, find_layout, plain_text
+from campaign.recordings.dialect import Layout, find_layout
+from campaign.recordings.encoding import plain_text
 from campaign.recordings.fast_reader import PlainTable, read_plain
 from campaign.recordings.gate import Gated, pass_gate
 from campaign.recordings.line_parser import NEIGHBOURS, Ending, NumberedLine, ParsedLines, parse_lines

@@ -6,7 +6,6 @@ from collections.abc import Iterable
 from dataclasses import dataclass
 
 from campaign.notices import Notice, Weight
-from campaign.recordings.dialect import shown
 
 
 @dataclass(frozen=True)
@@ -48,7 +47,9 @@ class _Wording:
     shows: int = 3
 
 
-_SET_ASIDE = "the file is not used"
+SET_ASIDE = "the file is not used"
+"""What is done about a notice that sets a file aside."""
+
 _DROPPED = "dropped, counted"
 _MISSING = "taken as missing, counted"
 
@@ -105,7 +106,7 @@ _WORDINGS: dict[str, _Wording] = {
         "set aside",
         "a quotation mark is not closed on its line, or text follows it",
         "{n} lines with a quotation mark that is not closed, or text after it",
-        _SET_ASIDE,
+        SET_ASIDE,
         "close the quotation mark; a field must not go over a line's end",
         shows=0,
     ),
@@ -113,7 +114,7 @@ _WORDINGS: dict[str, _Wording] = {
         "set aside",
         "a field is far too long for a number: {texts}",
         "{n} fields far too long for numbers: {texts}",
-        _SET_ASIDE,
+        SET_ASIDE,
         "export the recording again",
         True,
         1,
@@ -122,7 +123,7 @@ _WORDINGS: dict[str, _Wording] = {
         "set aside",
         "not a plain decimal number: {texts}",
         "{n} fields are not plain decimal numbers: {texts}",
-        _SET_ASIDE,
+        SET_ASIDE,
         'correct it; if it stands for no value, name it in missing = ["…"] of its [[columns]]; '
         "marks of thousands and timestamps must be declared there",
         True,
@@ -211,7 +212,7 @@ _WORDINGS: dict[str, _Wording] = {
         "set aside",
         "the column that should name one trial holds several values: {texts}",
         "columns that should name one trial hold several values: {texts}",
-        _SET_ASIDE,
+        SET_ASIDE,
         'split the file, or give the column quantity = "ignore"',
         True,
         1,
@@ -220,11 +221,29 @@ _WORDINGS: dict[str, _Wording] = {
         "set aside",
         "no row can be read{texts}",
         "",
-        _SET_ASIDE,
+        SET_ASIDE,
         "record or export it again",
         shows=1,
     ),
 }
+
+
+def shown(text: str, longest: int = 60) -> str:
+    """Return text from a file as a notice may show it: control characters escaped, cut to *longest*."""
+    cut = text if len(text) <= longest else text[:longest] + "…"
+    return "".join(c if c.isprintable() else ascii(c)[1:-1] for c in cut)
+
+
+def set_aside(code: str, line: int | None, column: int | None, what: str, remedy: str) -> Notice:
+    """Return the notice that sets a file aside, without the file's name."""
+    return Notice(code, "set aside", None, line, column, what, SET_ASIDE, remedy)
+
+
+def noted(
+    code: str, line: int | None, column: int | None, what: str, done: str, remedy: str = "", count: int = 1
+) -> Notice:
+    """Return a notice of weight "noted", without the file's name."""
+    return Notice(code, "noted", None, line, column, what, done, remedy, count)
 
 
 def gather_remarks(remarks: Iterable[Remark]) -> tuple[Notice, ...]:

@@ -12,10 +12,10 @@ from campaign.recordings.dialect import (
     UnclosedQuote,
     find_layout,
     is_numeric_field,
-    plain_text,
-    shown,
     split_fields,
 )
+from campaign.recordings.encoding import plain_text
+from campaign.recordings.remarks import shown
 
 HEADER = "time_s,length_mm,capacitance_pF"
 ROWS = "".join(f"{i / 100:.2f},{40 + i / 10:.2f},{80 + i / 7:.3f}\n" for i in range(12))

@@ -1,4 +1,4 @@
-"""The careful road: plain numbers are read, words are missing, the rest is remarked on, nothing is guessed."""
+"""The careful road: plain numbers are read, words are missing, the rest is remarked on: no guesses."""
 
 from __future__ import annotations
 
