@@ -345,8 +345,8 @@ def _check_header(name: str, line: int, header: Sequence[str]) -> list[Notice]:
             what = f"{count} columns are named '{column}'"
             notices.append(_notice("register-column-twice", "stops", file, line, what, "keep one of them"))
     for column in filter(None, header):
-        near = nearest(column, KNOWN_COLUMNS[name]) if column not in KNOWN_COLUMNS[name] else None
-        if near is not None and near not in header and _is_slip(column, near):
+        near = nearest(column, KNOWN_COLUMNS[name], 0.8) if column not in KNOWN_COLUMNS[name] else None
+        if near is not None and near not in (*header, *REGISTERS[name]):
             what = f"the column '{column}' is not known; did you mean '{near}'?"
             notices.append(
                 _notice("register-column-unknown", "noted", file, line, what, f"rename it to '{near}'")
@@ -357,10 +357,6 @@ def _check_header(name: str, line: int, header: Sequence[str]) -> list[Notice]:
 def _missing_column(column: str, header: Sequence[str]) -> tuple[str, str]:
     near = nearest(column, [h for h in header if h])
     return f"there is no column '{column}'", f"rename '{near}'?" if near else f"add a column '{column}'"
-
-
-def _is_slip(column: str, near: str) -> bool:
-    return abs(len(column) - len(near)) <= 2 and column[:1] == near[:1]
 
 
 def _check_widths(

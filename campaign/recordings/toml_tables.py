@@ -13,7 +13,7 @@ from campaign.notices import Notice
 _HEADER = re.compile(r"\s*(\[\[?)\s*([^\[\]]+?)\s*\]")
 
 
-def nearest(word: str, known: Iterable[str]) -> str | None:
+def nearest(word: str, known: Iterable[str], likeness: float = 0.5) -> str | None:
     """Return the known word that looks most like *word*, or ``None`` where none comes near.
 
     Parameters
@@ -22,9 +22,11 @@ def nearest(word: str, known: Iterable[str]) -> str | None:
         What was written.
     known
         What could have been meant.
+    likeness
+        Least likeness, between 0 (anything) and 1 (the same).
     """
     by_lower_case = {k.lower(): k for k in known}
-    found = difflib.get_close_matches(word.lower(), by_lower_case, n=1, cutoff=0.5)
+    found = difflib.get_close_matches(word.lower(), by_lower_case, n=1, cutoff=likeness)
     return by_lower_case[found[0]] if found else None
 
 

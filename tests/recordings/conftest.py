@@ -27,7 +27,7 @@ def staircase_text(shift: float = 0.0, rest_mm: float = 60.0) -> str:
 CampaignMaker = Callable[..., Path]
 
 
-@pytest.fixture()
+@pytest.fixture
 def make_campaign(tmp_path: Path) -> CampaignMaker:
     """Return a function that writes a campaign folder and returns its path."""
 
@@ -49,13 +49,13 @@ def make_campaign(tmp_path: Path) -> CampaignMaker:
     return make
 
 
-@pytest.fixture()
+@pytest.fixture
 def staircase() -> Callable[..., str]:
     """Return the function that writes a staircase table."""
     return staircase_text
 
 
-@pytest.fixture()
+@pytest.fixture
 def minimal() -> str:
     """Return the text of a minimal description."""
     return MINIMAL

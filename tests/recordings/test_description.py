@@ -1,4 +1,4 @@
-"""``campaign.toml``: every key of the format is taken and checked, every fault named at once with its place."""
+"""``campaign.toml``: every key of the format is taken and checked, every fault named with its place."""
 
 from __future__ import annotations
 
@@ -26,7 +26,10 @@ authors     = [{ name = "A. Author", affiliation = "Somewhere", orcid = "0000-00
 
 [recordings]
 files = ["trials/**/*.csv", "more/*.txt"]
-name  = ["{module}_{sensor}_{kind}_r{repetition}", "{module}/{ignore}_{length}_{pressure}_{rate}_{temperature}"]
+name  = [
+  "{module}_{sensor}_{kind}_r{repetition}",
+  "{module}/{ignore}_{length}_{pressure}_{rate}_{temperature}",
+]
 separator = ";"
 decimal = ","
 encoding = "utf-16"
@@ -73,9 +76,16 @@ quantity = "time"
 unit     = "timestamp"
 
 [reference]
-length = { scale = "0.05 %", zero = "50 µm", backlash = "0.02 mm", random = "0.01 mm", certificate = "K 12", calibrated = 2025-11-03 }
 signal = { gain = 0.001, offset = "10 fF", resolution = "0.001 pF" }
 node   = "0.1 mm"
+
+[reference.length]
+scale = "0.05 %"
+zero = "50 µm"
+backlash = "0.02 mm"
+random = "0.01 mm"
+certificate = "K 12"
+calibrated = 2025-11-03
 
 [readout]
 instrument      = "meter"
@@ -137,6 +147,9 @@ levels = [0, 10, 20.5]
 module = "2 %"
 sensor = 0.01
 """
+
+
+TIME_COLUMN = "[[columns]]\nheader = 'a'\nquantity = 'time'\n"
 
 
 def faults_of(text: str) -> tuple[Notice, ...]:
@@ -237,7 +250,7 @@ def test_what_is_not_given_is_not_a_number_never_zero() -> None:
         ("format = 1\n[campaign]\ntitel = 'x'\n", 3, "titel", "title"),
         ("format = 1\n[recordings]\nfile = '*.csv'\n", 3, "file", "files"),
         ("format = 1\n[recordings.same]\nmodul = 'x'\n", 3, "modul", "module"),
-        ("format = 1\n\n[[columns]]\nheader='a'\nquantity='time'\n[[columns]]\nheader='b'\nquantity='time'\nunits='s'\n", 9, "units", "unit"),
+        (f"format = 1\n\n{TIME_COLUMN}{TIME_COLUMN}units='s'\n", 9, "units", "unit"),
         ("format = 1\n[reference]\nlength = { zeros = '1 mm' }\n", 3, "zeros", "zero"),
         ("format = 1\n[limits]\nlineraity = '1 %FSO'\n", 3, "lineraity", "linearity"),
         ("format = 1\n[geometry.p]\nnodes = {A=[0,0]}\ndatums = []\n", 4, "datums", "datum"),
@@ -400,7 +413,7 @@ def test_every_key_of_the_format_is_known_at_its_place(everything: Description) 
     for path, key, begins in [
         ((), "format", "format"),
         (("reference",), "node", "node"),
-        (("reference", "length"), "zero", "length"),
+        (("reference", "length"), "zero", "zero"),
         (("limits", "margins"), "linearity", "linearity"),
         (("geometry", "panel"), "datum", "datum"),
     ]:
