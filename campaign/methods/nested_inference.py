@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 
 import numpy as np
 
@@ -41,22 +41,44 @@ def satterthwaite(
     ----------
     Satterthwaite (1946), Biometrics Bulletin 2, 110; Giesbrecht & Burns (1985), Biometrics 41, 477.
     """
+    return satterthwaite_each(fit, [(contrast, extra or {})])[0]
+
+
+def satterthwaite_each(
+    fit: NestedModelFit, requests: Sequence[tuple[FloatArray, Mapping[str, FloatArray]]]
+) -> list[tuple[float, float]]:
+    """Return what :func:`satterthwaite` does for many contrasts, with one look at the criterion's curvature.
+
+    Parameters
+    ----------
+    fit
+        The fitted model.
+    requests
+        Pairs of contrast and extra effects, as there.
+    """
     degrees = fit.compression.rows - (fit.compression.fixed if fit.restricted else 0)
-    weights = np.linalg.solve(fit.compression.columns.fixed_basis.T, np.asarray(contrast, dtype=float))
-    directions = _scaled_directions(fit, extra or {})
     free = [n for n in range(len(fit.vector)) if not _in_zero_column(fit, n)]
     places, widths = _star(fit, free)
-    variances = _variances(fit, places, weights, directions)
-    variance = float(variances[0])
-    if not variance > 0.0:
-        return variance, float(degrees)
-    spread = 2.0 * variance**2 / degrees
-    if free:
-        slope = (variances[1::2] - variances[2::2]) / (2.0 * widths)
-        _, gradients, _ = evaluate(fit.compression, fit.layout, places[:, 1:], restricted=fit.restricted)
-        hessian = (gradients[free, 0::2] - gradients[free, 1::2]) / (2.0 * widths)
-        spread += 2.0 * _quadratic((hessian + hessian.T) / 2.0, slope)
-    return variance, 2.0 * variance**2 / spread
+    variances = _variances(fit, places, requests)
+    hessian = _curvature(fit, places, widths, free) if free else None
+    found = []
+    for row in variances:
+        variance = float(row[0])
+        if not variance > 0.0:
+            found.append((variance, float(degrees)))
+            continue
+        spread = 2.0 * variance**2 / degrees
+        if hessian is not None:
+            spread += 2.0 * _quadratic(hessian, (row[1::2] - row[2::2]) / (2.0 * widths))
+        found.append((variance, 2.0 * variance**2 / spread))
+    return found
+
+
+def _curvature(fit: NestedModelFit, places: FloatArray, widths: FloatArray, free: list[int]) -> FloatArray:
+    """Second derivatives of the profiled criterion from gradients on the star, (free, free)."""
+    _, gradients, _ = evaluate(fit.compression, fit.layout, places[:, 1:], restricted=fit.restricted)
+    hessian = (gradients[free, 0::2] - gradients[free, 1::2]) / (2.0 * widths)
+    return np.asarray((hessian + hessian.T) / 2.0)
 
 
 def _scaled_directions(fit: NestedModelFit, extra: Mapping[str, FloatArray]) -> dict[int, FloatArray]:
@@ -90,20 +112,25 @@ def _star(fit: NestedModelFit, free: list[int]) -> tuple[FloatArray, FloatArray]
 
 
 def _variances(
-    fit: NestedModelFit, places: FloatArray, weights: FloatArray, directions: dict[int, FloatArray]
+    fit: NestedModelFit,
+    places: FloatArray,
+    requests: Sequence[tuple[FloatArray, Mapping[str, FloatArray]]],
 ) -> FloatArray:
-    """V along the profile at each place, (R,)."""
+    """V of each request along the profile at each place, (requests, R)."""
     compression = fit.compression
     factors = fit.layout.factors(places)
     value = value_of(
         compression, eliminate(compression, compression.products, factors), restricted=fit.restricted
     )
-    relative = np.einsum("i,rij,j->r", weights, value.unscaled_covariance, weights)
-    for number, direction in directions.items():
-        if number < 0:
-            relative = relative + direction[0] ** 2
-        else:
-            relative = relative + (np.einsum("i,ikr->kr", direction, factors[number]) ** 2).sum(axis=0)
+    contrasts = np.array([contrast for contrast, _ in requests], dtype=float)
+    weights = np.linalg.solve(compression.columns.fixed_basis.T, contrasts.T).T
+    relative = np.einsum("ki,rij,kj->kr", weights, value.unscaled_covariance, weights, optimize=True)
+    for k, (_, extra) in enumerate(requests):
+        for number, direction in _scaled_directions(fit, extra).items():
+            if number < 0:
+                relative[k] += direction[0] ** 2
+            else:
+                relative[k] += (np.einsum("i,ikr->kr", direction, factors[number]) ** 2).sum(axis=0)
     degrees = compression.rows - (compression.fixed if fit.restricted else 0)
     return np.asarray(value.residual_square / degrees * relative)
 

@@ -14,10 +14,19 @@ each nominal level). This module is the door; the steps have a module each:
     nested_fit            the fit as a value
     nested_effects        predicted effects and residuals
     nested_intervals      profile intervals of SDs, totals, ratios and shares
+    nested_bootstrap      refits of drawn responses, tests of a component
     nested_inference      Satterthwaite's degrees of freedom
     nested_certificate    the same model in statsmodels
 """
 
+from campaign.methods.nested_bootstrap import (
+    ComponentTest,
+    Refits,
+    bootstrap_refits,
+    refit,
+    simulate_responses,
+    test_component,
+)
 from campaign.methods.nested_certificate import as_statsmodels, statsmodels_log_likelihood
 from campaign.methods.nested_design import NestedModel, RandomTerm
 from campaign.methods.nested_effects import (
@@ -27,7 +36,7 @@ from campaign.methods.nested_effects import (
     random_effects,
 )
 from campaign.methods.nested_fit import NestedModelFit, fit_nested_model
-from campaign.methods.nested_inference import satterthwaite
+from campaign.methods.nested_inference import satterthwaite, satterthwaite_each
 from campaign.methods.nested_intervals import (
     Interval,
     profile_interval,
@@ -38,12 +47,15 @@ from campaign.methods.nested_intervals import (
 )
 
 __all__ = [
+    "ComponentTest",
     "Interval",
     "NestedModel",
     "NestedModelFit",
     "RandomEffects",
     "RandomTerm",
+    "Refits",
     "as_statsmodels",
+    "bootstrap_refits",
     "conditional_residuals",
     "fit_nested_model",
     "marginal_residuals",
@@ -53,6 +65,10 @@ __all__ = [
     "profile_share",
     "profile_total",
     "random_effects",
+    "refit",
     "satterthwaite",
+    "satterthwaite_each",
+    "simulate_responses",
     "statsmodels_log_likelihood",
+    "test_component",
 ]
