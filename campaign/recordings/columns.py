@@ -16,7 +16,7 @@ from campaign.notices import Notice
 from campaign.recordings.description import ColumnRule
 from campaign.recordings.dialect import Layout
 from campaign.recordings.file_glob import matches_glob
-from campaign.recordings.remarks import shown
+from campaign.recordings.remarks import noted, set_aside, shown
 from campaign.units import (
     FAMILIES,
     QUANTITY_FAMILIES,
