@@ -22,7 +22,16 @@ from campaign.pages.drawing import ready
 from campaign.pages.figures import Figure
 from campaign.pages.page import Page, SiteFrame
 from campaign.pages.static_figure import static_svg
-from campaign.pages.tables import Cell, Table, csv_bytes, schema_bytes, shown_cells, shown_marks
+from campaign.pages.tables import (
+    Cell,
+    Table,
+    csv_bytes,
+    in_reference,
+    schema_bytes,
+    shown_cells,
+    shown_marks,
+)
+from campaign.recordings.recording import STRAIN, ReferenceQuantity
 
 
 @dataclass(frozen=True)
@@ -95,6 +104,7 @@ def render_site(
     files: Mapping[str, bytes] | None = None,
     plot_library: Path | None = None,
     further_templates: Sequence[Path] = (),
+    reference: ReferenceQuantity = STRAIN,
 ) -> dict[str, bytes]:
     """Return every file of the site by its address, sorted.
 
@@ -112,6 +122,8 @@ def render_site(
         A build of the plot library to use instead of the one that plotly carries.
     further_templates
         Folders with templates of pages that are not the site's own.
+    reference
+        What signals are calibrated against: where it is a length, ``strain…`` columns of files are renamed.
 
     Raises
     ------
@@ -121,19 +133,19 @@ def render_site(
     _check_slugs(pages)
     jinja = environment(further_templates)
     written: dict[str, bytes] = dict(files or {})
-    written |= table_files([*tables, *(t for page in pages for t in page.tables)])
+    written |= table_files([*tables, *(t for page in pages for t in page.tables)], reference)
     for page in pages:
         figures = {f.name: ready(f) for f in page.figures}
         written[page.file] = _page_html(jinja, frame, page, pages, figures).encode("utf-8")
         written[f"data/{page.slug}.js"] = data_script(page, figures)
         for figure in page.figures:
             if figure.data is not None:
-                written[_figure_csv(page, figure)] = csv_bytes(figure.data)
+                written[_figure_csv(page, figure)] = csv_bytes(in_reference(figure.data, reference))
     written |= asset_files(templates_folder(), plot_library)
     return dict(sorted(written.items()))
 
 
-def table_files(tables: Iterable[Table]) -> dict[str, bytes]:
+def table_files(tables: Iterable[Table], reference: ReferenceQuantity = STRAIN) -> dict[str, bytes]:
     """Return ``tables/NAME.csv`` of every table that is a file, and ``tables/schema.json``."""
     frames: dict[str, pd.DataFrame] = {}
     for table in tables:
@@ -142,6 +154,7 @@ def table_files(tables: Iterable[Table]) -> dict[str, bytes]:
         if table.name in frames and not frames[table.name].equals(table.frame):
             raise ValueError(f"two different tables are named {table.name}")
         frames[table.name] = table.frame
+    frames = {name: in_reference(frame, reference) for name, frame in frames.items()}
     made = {f"tables/{name}.csv": csv_bytes(frame, name) for name, frame in frames.items()}
     return made | {"tables/schema.json": schema_bytes(frames)}
 

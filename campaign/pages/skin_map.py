@@ -27,9 +27,9 @@ ATTENTION_STEP = len(palette.RAMP)
 NO_VALUE = -1
 
 VERDICT_STEPS: dict[str, tuple[int, str]] = {
-    "within limit": (2, "in"),
+    "met": (2, "met"),
     "not decided": (5, "?"),
-    "over limit": (ATTENTION_STEP, "over"),
+    "not met": (ATTENTION_STEP, "not"),
 }
 """Step and short text of each verdict."""
 

@@ -1,0 +1,100 @@
+"""The skin map of a campaign: which sensors there are, where they sit, and what edges can be coloured by."""
+
+from __future__ import annotations
+
+from collections.abc import Hashable, Mapping
+from typing import Any
+
+import pandas as pd
+
+from campaign.analyses.results import CampaignResults
+from campaign.pages.skin_map import MapFigure, MapSensor, Point, SkinMap, skin_map
+from campaign.recordings.description import Geometry
+
+OFFERED: tuple[tuple[str, str, str], ...] = (
+    ("gauge_factor", "gauge factor", ""),
+    ("hysteresis_percent_fso", "hysteresis of the staircase", "%FSO"),
+    ("strain_residual_sd", "residual SD as strain", "%"),
+    ("linearity_independent_percent_fso", "linearity", "%FSO"),
+    ("repeatability_percent_fso", "repeatability", "%FSO"),
+    ("r_squared", "R²", ""),
+)
+"""Columns of the table of lines that a reader may pick, with their words and units."""
+
+FIRST_SHOWN = "hysteresis_percent_fso"
+
+
+def campaign_map(results: CampaignResults) -> SkinMap:
+    """Return the skin map of all sensors that a register or a trial names."""
+    figures = [*_line_figures(results), *_verdict_figures(results)]
+    return skin_map(map_sensors(results), figures, chosen=FIRST_SHOWN)
+
+
+def map_sensors(results: CampaignResults) -> list[MapSensor]:
+    """Return every sensor with the places of its ends where register and geometry give them.
+
+    A sensor is set aside on the map where no trial of it is used.
+    """
+    intake = results.intake
+    modules = {str(row["module"]): row for row in intake.modules.to_dict("records")}
+    used = {(i.module, i.sensor) for i in intake.used_identities}
+    made = []
+    for row in intake.sensors.to_dict("records"):
+        module, sensor = str(row["module"]), str(row["sensor"])
+        details = modules.get(module, {})
+        ends = _ends(row, _geometry(details, results.description.geometries))
+        generation = str(details.get("generation", ""))
+        made.append(MapSensor(generation, module, sensor, ends, (module, sensor) not in used))
+    return made
+
+
+def _geometry(module: Mapping[Hashable, Any], geometries: Mapping[str, Geometry]) -> Geometry | None:
+    """Return a module's geometry: the one that its register names, else the only one there is."""
+    named = str(module.get("geometry", "") or "")
+    if named:
+        return geometries.get(named)
+    return next(iter(geometries.values())) if len(geometries) == 1 else None
+
+
+def _ends(sensor: Mapping[Hashable, Any], geometry: Geometry | None) -> tuple[Point, Point] | None:
+    if geometry is None:
+        return None
+    start, end = (geometry.nodes.get(str(sensor.get(key, ""))) for key in ("from", "to"))
+    return None if start is None or end is None or start == end else (start, end)
+
+
+def _line_figures(results: CampaignResults) -> list[MapFigure]:
+    if results.calibration is None:
+        return []
+    reference = results.calibration.reference
+    lines = results.calibration.sensor_lines
+    both = lines[lines["branch"] == "both"]
+    made = []
+    for key, title, unit in OFFERED:
+        if key not in both or not pd.to_numeric(both[key], errors="coerce").notna().any():
+            continue
+        in_reference = key == "strain_residual_sd"
+        factor = reference.shown_factor if in_reference else 1.0
+        words = title if reference.name == "strain" else title.replace("strain", reference.name)
+        shown_unit = reference.shown_unit if in_reference else unit
+        made.append(MapFigure(key, words, shown_unit, _by_sensor(both, key, factor)))
+    return made
+
+
+def _by_sensor(rows: pd.DataFrame, key: str, factor: float) -> dict[tuple[str, str], float]:
+    values = pd.to_numeric(rows[key], errors="coerce") * factor
+    names = zip(rows["module"].astype(str), rows["sensor"].astype(str), strict=True)
+    return dict(zip(names, values.tolist(), strict=True))
+
+
+def _verdict_figures(results: CampaignResults) -> list[MapFigure]:
+    """Return one figure a limit that was judged for sensors."""
+    rows = results.limits.of_sensors()
+    made = []
+    for limit in dict.fromkeys(rows["limit"].astype(str)):
+        own = rows[rows["limit"] == limit]
+        names = zip(own["module"].astype(str), own["sensor"].astype(str), strict=True)
+        verdicts = dict(zip(names, own["verdict"].astype(str), strict=True))
+        words = f"verdict on {limit.replace('_', ' ')}"
+        made.append(MapFigure(f"verdict_{limit}", words, "", {}, verdicts))
+    return made

@@ -1,0 +1,155 @@
+"""Page 14, Provenance: files and hashes, downloads, how to cite, how to verify."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass, fields
+
+import pandas as pd
+
+from campaign.analyses.results import CampaignResults
+from campaign.pages import slugs
+from campaign.pages.calculator import record_href
+from campaign.pages.page import Page
+from campaign.pages.tables import Column, Table
+from campaign.recordings.description import Description
+
+CAMPAIGN_CHECKSUMS = "provenance/campaign_files.sha256"
+SITE_CHECKSUMS = "provenance/site_files.sha256"
+SHOWN_FILES = 120
+
+
+@dataclass(frozen=True)
+class Citation:
+    """What is needed to cite the campaign: a sentence, the same for BibTeX, and what was not given."""
+
+    sentence: str
+    bibtex: str
+    missing: tuple[str, ...]
+
+
+@dataclass(frozen=True)
+class Download:
+    """One file to take away: its address, what it holds, its rows and columns."""
+
+    address: str
+    words: str
+    rows: int
+    columns: int
+
+
+def provenance_page(results: CampaignResults, tables: Sequence[Table]) -> Page:
+    """Return page 14; *tables* are all that the site writes as files."""
+    records = records_table(results)
+    written = {t.name: t for t in (*tables, *((records,) if records else ())) if t.source is None}
+    files = files_table(results.intake.recordings)
+    return Page(
+        slug="provenance",
+        number=14,
+        title="Provenance",
+        template="provenance.html",
+        context={
+            "description": results.description,
+            "citation": citation(results.description),
+            "downloads": [_download(written[name]) for name in sorted(written)],
+            "hashed_files": int((results.intake.recordings["sha256"].astype(str) != "").sum()),
+            "campaign_checksums": CAMPAIGN_CHECKSUMS,
+            "site_checksums": SITE_CHECKSUMS,
+        },
+        tables=(files, *((records,) if records else ())),
+        description="Files and their hashes, downloads, how to cite and how to verify.",
+    )
+
+
+def files_table(recordings: pd.DataFrame) -> Table:
+    """Return the files with their hashes."""
+    return Table(
+        name="files",
+        caption="Files of the campaign that were opened, with the SHA-256 of their bytes.",
+        frame=recordings[recordings["sha256"].astype(str) != ""],
+        columns=(
+            Column("file", "File", kind="code"),
+            Column("bytes", "Size", "B", kind="integer", missing=""),
+            Column("fate", "Fate", kind="text"),
+            Column("sha256", "SHA-256", kind="code"),
+        ),
+        shown_rows=SHOWN_FILES,
+        source="recordings",
+    )
+
+
+def records_table(results: CampaignResults) -> Table | None:
+    """Return the calibration records as a table, ``None`` where there are none."""
+    if results.calibration is None or not results.calibration.records:
+        return None
+    records = results.calibration.records
+    rows = [
+        {field.name: _flat(getattr(record, field.name)) for field in fields(record)} for record in records
+    ]
+    frame = pd.DataFrame(rows)
+    frame["_record"] = [record_href(record) for record in records]
+    frame["_words"] = "JSON"
+    frame["_href"] = [slugs.sensor_href(record.module, record.sensor) for record in records]
+    return Table(
+        name="calibration_records",
+        caption="Calibration records: a line, its covariance and its conditions, one a sensor and branch.",
+        frame=frame,
+        columns=(
+            Column("generation", "Generation", kind="text"),
+            Column("module", "Module", kind="text"),
+            Column("sensor", "Sensor", kind="text", href="_href"),
+            Column("branch", "Branch", kind="text"),
+            Column("runs", "Runs", kind="integer"),
+            Column("variance_source", "Variance of a run from", kind="text"),
+            Column("_words", "Record", kind="text", href="_record"),
+        ),
+        shown_rows=SHOWN_FILES,
+    )
+
+
+def citation(description: Description) -> Citation:
+    """Return how to cite the campaign from what its description says; no date is ever taken from a clock."""
+    day = description.date or description.last_day or description.first_day
+    year = day[:4] if re.match(r"\d{4}", day) else ""
+    names = [author.name for author in description.authors if author.name]
+    who = "; ".join(names) or "Authors not given"
+    invented = " Invented data." if description.simulated else ""
+    licence = f" Licence: {description.licence}." if description.licence else ""
+    sentence = (
+        f"{who} ({year or 'no date given'}). {description.title} [recordings and report].{invented}{licence}"
+    )
+    lacking = {"authors": names, "date": year, "licence": description.licence}
+    return Citation(
+        sentence,
+        _bibtex(description, names, year),
+        tuple(word for word, given in lacking.items() if not given),
+    )
+
+
+def _bibtex(description: Description, names: Iterable[str], year: str) -> str:
+    given = {
+        "author": " and ".join(names),
+        "title": description.title,
+        "year": year,
+        "note": "Recordings and report" + (", invented data" if description.simulated else ""),
+    }
+    lines = [f"  {key} = {{{_braced(value)}}}," for key, value in given.items() if value]
+    return "\n".join([f"@misc{{campaign{year},", *lines, "}"])
+
+
+def _braced(text: str) -> str:
+    """Return *text* for BibTeX: characters with a meaning of their own are set apart."""
+    return re.sub(r"([#$%&_{}])", r"\\\1", text.replace("\\", "/"))
+
+
+def _download(table: Table) -> Download:
+    columns = [c for c in table.frame.columns if not str(c).startswith("_")]
+    return Download(table.file, table.caption, len(table.frame), len(columns))
+
+
+def _flat(value: object) -> object:
+    """Return a record's field as one cell: several texts are joined by ``; ``."""
+    if isinstance(value, dict):
+        return "; ".join(f"{key}: {value[key]}" for key in sorted(value))
+    return "; ".join(str(v) for v in value) if isinstance(value, (tuple, list)) else value

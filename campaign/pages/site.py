@@ -1,0 +1,92 @@
+"""The whole site, page by page: results in, the bytes of every file out."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+from campaign import __version__
+from campaign.analyses.results import CampaignResults
+from campaign.pages import numbers
+from campaign.pages.calculator import record_files
+from campaign.pages.calibration import calibration_page
+from campaign.pages.calibration_effort import calibration_effort_page
+from campaign.pages.campaign_map import campaign_map
+from campaign.pages.findings import findings_page
+from campaign.pages.method import method_page
+from campaign.pages.module import module_pages
+from campaign.pages.notes import Notes
+from campaign.pages.page import Page, SiteFrame
+from campaign.pages.provenance import provenance_page
+from campaign.pages.recordings import recordings_page
+from campaign.pages.render import render_site
+from campaign.pages.residuals import residuals_page
+from campaign.pages.sensor import sensor_pages
+from campaign.pages.site_tables import site_tables
+from campaign.pages.variance import variance_page
+
+
+def build_site(
+    results: CampaignResults, notes: Notes | None = None, plot_library: Path | None = None
+) -> dict[str, bytes]:
+    """Return every file of the campaign's site by its address.
+
+    Parameters
+    ----------
+    results
+        What one run of the report found out.
+    notes
+        The campaign's notes (:func:`campaign.pages.notes.make_notes`).
+    plot_library
+        The build of the plot library that the description names, else the one that plotly carries.
+
+    Raises
+    ------
+    CampaignStops
+        Where *plot_library* is not what it should be.
+    """
+    notes = notes or Notes()
+    pages = site_pages(results, notes)
+    records = results.calibration.records if results.calibration is not None else ()
+    return render_site(
+        site_frame(results),
+        pages,
+        site_tables(results, pages),
+        files={**(notes.files or {}), **record_files(records)},
+        plot_library=plot_library,
+        reference=results.readings.reference,
+    )
+
+
+def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
+    """Return all pages in the order of the strip, then those of modules, sensors and notes.
+
+    A page appears only for what was measured.
+    """
+    mapped = campaign_map(results)
+    measured = (
+        calibration_page(results),
+        variance_page(results),
+        residuals_page(results),
+        calibration_effort_page(results),
+    )
+    pages = [findings_page(results, mapped), *(page for page in measured if page is not None)]
+    pages += [recordings_page(results), method_page(results)]
+    pages += [*module_pages(results, mapped), *sensor_pages(results, mapped), *notes.pages]
+    tables = [table for page in pages for table in page.tables] + site_tables(results, pages)
+    return [*pages, provenance_page(results, tables)]
+
+
+def site_frame(results: CampaignResults) -> SiteFrame:
+    """Return what every page shares: title, the line above it, whether the data are invented."""
+    scope, counts = results.findings.scope, results.intake.counts
+    parts = (
+        numbers.count(scope.modules, "module"),
+        numbers.count(scope.sensors, "sensor"),
+        numbers.count(counts.trials_used, "trial"),
+    )
+    return SiteFrame(
+        title=results.description.title,
+        summary=("Characterisation campaign", *parts),
+        invented=results.description.simulated,
+        version=__version__,
+    )
