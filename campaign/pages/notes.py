@@ -26,56 +26,16 @@ FOLDER = "notes"
 LARGEST_FILE_BYTES = 5_000_000
 PICTURES = (".png", ".jpg", ".jpeg", ".gif", ".webp", ".svg")
 
-_TAGS = frozenset(
-    [
-        "a",
-        "abbr",
-        "b",
-        "blockquote",
-        "br",
-        "caption",
-        "code",
-        "dd",
-        "del",
-        "div",
-        "dl",
-        "dt",
-        "em",
-        "figcaption",
-        "figure",
-        "h1",
-        "h2",
-        "h3",
-        "h4",
-        "h5",
-        "h6",
-        "hr",
-        "i",
-        "img",
-        "ins",
-        "kbd",
-        "li",
-        "ol",
-        "p",
-        "pre",
-        "s",
-        "samp",
-        "section",
-        "small",
-        "span",
-        "strong",
-        "sub",
-        "sup",
-        "table",
-        "tbody",
-        "td",
-        "tfoot",
-        "th",
-        "thead",
-        "tr",
-        "ul",
-        "var",
-    ]
+
+def _words(text: str) -> frozenset[str]:
+    return frozenset(text.split())
+
+
+_TAGS = _words(
+    """
+    a abbr b blockquote br caption code dd del div dl dt em figcaption figure h1 h2 h3 h4 h5 h6 hr i img
+    ins kbd li ol p pre s samp section small span strong sub sup table tbody td tfoot th thead tr ul var
+    """
 )
 _ATTRIBUTES = {
     "a": {"href", "title", "id"},
@@ -96,86 +56,20 @@ _PICTURE_STARTS: dict[str, tuple[bytes, ...]] = {
     ".webp": (b"RIFF",),
 }
 _SVG = "{http://www.w3.org/2000/svg}"
-_SVG_ELEMENTS = frozenset(
-    [
-        "svg",
-        "g",
-        "path",
-        "rect",
-        "circle",
-        "ellipse",
-        "line",
-        "polyline",
-        "polygon",
-        "text",
-        "tspan",
-        "title",
-        "desc",
-        "defs",
-        "linearGradient",
-        "radialGradient",
-        "stop",
-        "clipPath",
-    ]
+_SVG_ELEMENTS = _words(
+    """
+    svg g path rect circle ellipse line polyline polygon text tspan title desc defs linearGradient
+    radialGradient stop clipPath
+    """
 )
-_SVG_ATTRIBUTES = frozenset(
-    [
-        "aria-label",
-        "class",
-        "clip-path",
-        "color",
-        "cx",
-        "cy",
-        "d",
-        "dominant-baseline",
-        "dx",
-        "dy",
-        "fill",
-        "fill-opacity",
-        "fill-rule",
-        "font-family",
-        "font-size",
-        "font-style",
-        "font-weight",
-        "fx",
-        "fy",
-        "gradientTransform",
-        "gradientUnits",
-        "height",
-        "id",
-        "letter-spacing",
-        "offset",
-        "opacity",
-        "points",
-        "preserveAspectRatio",
-        "r",
-        "role",
-        "rotate",
-        "rx",
-        "ry",
-        "stop-color",
-        "stop-",
-        "opacity",
-        "stroke",
-        "stroke-dasharray",
-        "stroke-linecap",
-        "stroke-linejoin",
-        "stroke-opacity",
-        "stroke-width",
-        "text-",
-        "anchor",
-        "textLength",
-        "transform",
-        "version",
-        "viewBox",
-        "width",
-        "x",
-        "x1",
-        "x2",
-        "y",
-        "y1",
-        "y2",
-    ]
+_SVG_ATTRIBUTES = _words(
+    """
+    aria-label class clip-path color cx cy d dominant-baseline dx dy fill fill-opacity fill-rule font-
+    family font-size font-style font-weight fx fy gradientTransform gradientUnits height id letter-
+    spacing offset opacity points preserveAspectRatio r role rotate rx ry stop-color stop- opacity
+    stroke stroke-dasharray stroke-linecap stroke-linejoin stroke-opacity stroke-width text- anchor
+    textLength transform version viewBox width x x1 x2 y y1 y2
+    """
 )
 
 
