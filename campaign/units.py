@@ -16,6 +16,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from datetime import UTC, datetime
 from fractions import Fraction
+from functools import lru_cache
 
 import numpy as np
 import numpy.typing as npt
@@ -387,6 +388,7 @@ def canonical_unit(spelling: str, quantity: str) -> str:
     return find_unit(spelling, QUANTITY_FAMILIES[quantity]).family.canonical
 
 
+@lru_cache(maxsize=4096)
 def split_header(header: str) -> HeaderParts:
     """Take a header apart into name and unit: ``time_s``, ``length [mm]``, ``p / kPa``, ``d, mm``, ``C1 pF``.
 

@@ -10,6 +10,7 @@ import re
 from collections import Counter
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from itertools import islice
 
 from campaign.notices import Notice
 from campaign.recordings.description import Description
@@ -19,19 +20,19 @@ from campaign.units import SPELLINGS, looks_like_timestamp, nearest_spelling, un
 SEPARATORS: tuple[str, ...] = (",", ";", "\t", " ")
 """Separators that are looked for, in falling order of preference."""
 
-SAMPLE_LINES = 32
+SAMPLE_LINES = 24
 """Lines, comments not counted, that separator, decimal sign and header are found out from; more where none of
 them holds numbers."""
 
-HEAD_BYTES = (1 << 13, 1 << 18)
+HEAD_BYTES = (1 << 12, 1 << 18)
 """Bytes at the start of a file in which header and first rows are looked for: the first, and the second where
 that holds less than :data:`ENOUGH_ROWS` rows."""
 
 ENOUGH_ROWS = 8
 
 _LOOSE_NUMBER = re.compile(
-    r"[+-]?(?:[0-9]{1,3}(?:[.,][0-9]{3})+(?:[.,][0-9]*)?|[0-9]+(?:[.,][0-9]*)?|[.,][0-9]+)"
-    r"(?:[eE][+-]?[0-9]+)?(?<!,)"
+    r"[ \t]*[+-]?(?:[0-9]{1,3}(?:[.,][0-9]{3})+(?:[.,][0-9]*)?|[0-9]+(?:[.,][0-9]*)?|[.,][0-9]+)"
+    r"(?:[eE][+-]?[0-9]+)?(?<!,)[ \t]*"
 )
 _COMMENT = "#"
 
@@ -148,21 +149,16 @@ def _split_leniently(line: str, separator: str) -> list[str]:
 
 def is_numeric_field(text: str) -> bool:
     """Return whether a field looks like a number, in any dialect, or a timestamp."""
-    stripped = text.strip(" \t")
-    if len(stripped) > 200:
-        return False
-    return _LOOSE_NUMBER.fullmatch(stripped) is not None or (
-        ":" in stripped and looks_like_timestamp(stripped)
-    )
+    return _LOOSE_NUMBER.fullmatch(text) is not None or (":" in text and looks_like_timestamp(text))
 
 
 @dataclass(frozen=True)
 class _Cut:
-    """One line cut into fields, with how many of them are filled and how many look like numbers."""
+    """One line cut into fields, how many of them are filled, and those that look like numbers."""
 
     fields: list[str]
     filled: int
-    numbers: int
+    numbers: list[str]
 
     def __len__(self) -> int:
         return len(self.fields)
@@ -170,13 +166,15 @@ class _Cut:
     @property
     def is_row(self) -> bool:
         """Whether it looks like a row of values: some number in it, and numbers are not the exception."""
-        return self.numbers > 0 and 3 * self.numbers >= self.filled
+        return bool(self.numbers) and 3 * len(self.numbers) >= self.filled
 
 
 def _cut(line: str, separator: str) -> _Cut:
     fields = _split_leniently(line, separator)
-    filled = sum(not field.isspace() and field != "" for field in fields)
-    return _Cut(fields, filled, sum(map(is_numeric_field, fields)))
+    numbers = [field for field in fields if is_numeric_field(field)]
+    if len(numbers) == len(fields):
+        return _Cut(fields, len(fields), numbers)
+    return _Cut(fields, sum(not field.isspace() and field != "" for field in fields), numbers)
 
 
 @dataclass(frozen=True)
@@ -218,18 +216,20 @@ def _looked_over(text: bytes, description: Description) -> tuple[list[str], list
     """Return the lines at the start, the indices of those that are no comments, and how they are best cut."""
     for size in HEAD_BYTES:
         lines = _head_lines(text, size, description.header_row)
-        first = (description.header_row or 1) - 1
-        table = [i for i in range(first, len(lines)) if _is_of_table(lines[i])]
-        guess = _best_guess([lines[i] for i in table[:SAMPLE_LINES]], description.separator)
-        if len(table) > SAMPLE_LINES and not any(row.is_row for row in guess.rows):
+        of_table = (i for i in range((description.header_row or 1) - 1, len(lines)) if _is_of_table(lines[i]))
+        table = list(islice(of_table, SAMPLE_LINES))
+        guess = _best_guess([lines[i] for i in table], description.separator)
+        if not any(row.is_row for row in guess.rows):
+            table += of_table
             guess = _best_guess([lines[i] for i in table], description.separator)
-        if sum(row.is_row for row in guess.rows) >= ENOUGH_ROWS:
+        if len(text) <= size or sum(row.is_row for row in guess.rows) >= ENOUGH_ROWS:
             break
     return lines, table, guess
 
 
 def _is_of_table(line: str) -> bool:
-    return bool(line.strip()) and not line.lstrip().startswith(_COMMENT)
+    text = line.lstrip()
+    return bool(text) and not text.startswith(_COMMENT)
 
 
 def _head_lines(text: bytes, size: int, header_row: int | None) -> list[str]:
@@ -265,16 +265,17 @@ def _guess(sample: Sequence[str], separator: str) -> _Guess:
         widest = max(map(len, rows), default=0)
         return _Guess(separator, rows, widest, -1.0 + 0.001 * widest)
     fields = Counter(map(len, numeric)).most_common(1)[0][0]
-    share = sum(row.numbers / row.filled for row in numeric if len(row) == fields) / len(numeric)
+    share = sum(len(row.numbers) / row.filled for row in numeric if len(row) == fields) / len(numeric)
     named = any(len(row) - fields in (-1, 0, 1) and not row.is_row for row in rows)
     return _Guess(separator, rows, fields, share + (0.5 if named else 0.0) + (0.25 if fields > 1 else 0.0))
 
 
 def _decimal_sign(guess: _Guess, text: bytes, layout: Layout) -> str:
     """Return the decimal sign of most of the sample's numbers; all whole: of the rest of the file."""
-    numbers = [f.strip() for row in guess.rows if row.is_row for f in row.fields if is_numeric_field(f)]
-    commas = sum(field.count(",") == 1 and "." not in field for field in numbers)
-    points = sum(field.count(".") == 1 and "," not in field for field in numbers)
+    numbers = [number for row in guess.rows if row.is_row for number in row.numbers]
+    with_comma, with_point = ([n for n in numbers if mark in n] for mark in ",.")
+    commas = sum(n.count(",") == 1 and "." not in n for n in with_comma)
+    points = sum(n.count(".") == 1 and "," not in n for n in with_point)
     if commas or points:
         return "," if commas > points else "."
     body = text[_offset_of_line(text, layout.first_row_line) :]

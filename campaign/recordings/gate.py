@@ -119,7 +119,7 @@ def _plain_mask(body: bytes, layout: Layout) -> tuple[npt.NDArray[np.bool_], npt
     if layout.trailing_separator:
         empty &= ~((data == 10) & (before == separator))
     bad = ~allowed[data] | empty
-    counts = np.add.reduceat(is_separator.astype(np.int64), starts)
+    counts = np.add.reduceat(is_separator, starts, dtype=np.int64)
     expected = layout.fields - (0 if layout.trailing_separator else 1)
     plain = (counts == expected) & ~np.logical_or.reduceat(bad, starts)
     if layout.trailing_separator:

@@ -242,9 +242,16 @@ def _joined(table: _Table, plain: FloatArray | None) -> _Rows:
 def _parsed(table: _Table, indices: LineNumbers) -> ParsedLines:
     if not len(indices):
         return ParsedLines()
-    texts = table.body.split(b"\n")
-    lines = [NumberedLine(table.line(int(i)), texts[i].decode()) for i in indices]
+    lines = [NumberedLine(table.line(i), text) for i, text in _texts(table.body, indices)]
     return parse_lines(lines, table.layout, table.plan.columns, table.ending)
+
+
+def _texts(body: bytes, indices: LineNumbers) -> list[tuple[int, str]]:
+    """Return (index, text) of some of the lines of a table."""
+    ends = np.append(np.flatnonzero(np.frombuffer(body, np.uint8) == ord("\n")), len(body))
+    starts = np.append(0, ends[:-1] + 1)
+    places = zip(indices.tolist(), starts[indices].tolist(), ends[indices].tolist())
+    return [(index, body[start:end].decode()) for index, start, end in places]
 
 
 def _series(columns: Sequence[ColumnPlan], rows: _Rows) -> tuple[list[FloatArray], list[Remark]]:
