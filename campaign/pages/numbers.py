@@ -141,7 +141,7 @@ def _last_place(value: float, digits: int) -> int:
     """Return the power of ten of the last of *digits* significant digits, after rounding carried over."""
     if value == 0:
         return 0
-    number = Decimal(repr(abs(value)))
+    number = Decimal(repr(abs(float(value))))
     place = number.adjusted() - digits + 1
     rounded = number.quantize(Decimal(1).scaleb(place), rounding=ROUND_HALF_EVEN)
     return rounded.adjusted() - digits + 1
@@ -156,7 +156,7 @@ def _shared_power(largest: float, place: int) -> int:
     """Return the power of ten to set apart: 0 for numbers that read well as they are."""
     if largest == 0:
         return 0
-    exponent = Decimal(repr(largest)).adjusted()
+    exponent = Decimal(repr(float(largest))).adjusted()
     return exponent if exponent >= 6 or exponent < -3 or place > 3 else 0
 
 
