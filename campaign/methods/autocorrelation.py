@@ -134,16 +134,17 @@ def _pooled_correlation(residuals: FloatArray, counts: IntArray, removed: int) -
     sums = _lagged_sums(residuals, counts, longest)[: last_lag + 1]
     pairs_each = np.clip(counts[:, None] - np.arange(last_lag + 1)[None, :], 0, None).astype(float)
     pairs = pairs_each.sum(axis=0)
-    covariance = sums / pairs
-    kept = _initial_positive(covariance)
+    shares = pairs_each[:, 1:] / counts[:, None]
+    kept = _initial_positive(sums / pairs)
     for _ in range(FIXED_POINT_STEPS):
-        factors = _variance_factors(kept / kept[0], counts)
-        of_means = np.clip(kept[0] * factors / counts, 0.0, kept[0])
+        factors = 1.0 + 2.0 * shares[:, : len(kept) - 1] @ (kept[1:] / kept[0])
+        of_means = kept[0] * np.minimum(np.maximum(factors / counts, 0.0), 1.0)
         corrected = (sums + removed * (of_means @ pairs_each)) / pairs
-        kept_next = _initial_positive(corrected) if removed == 1 else corrected[: len(kept)]
-        if len(kept_next) == len(kept) and np.allclose(kept_next, kept, rtol=1e-6, atol=0.0):
+        after = _initial_positive(corrected) if removed == 1 else corrected[: len(kept)]
+        close = len(after) == len(kept) and abs(after[0] - kept[0]) <= 1e-5 * kept[0]
+        kept = after
+        if close:
             break
-        kept = kept_next
     return np.asarray(kept / kept[0])
 
 

@@ -96,13 +96,37 @@ COMMON_READINGS = 0.8
 _COLUMN_OF = {STRAIN: "strain", ELONGATION: "elongation_mm", LENGTH: "length_mm"}
 
 
-def collect_readings(parts: Sequence[pd.DataFrame], set_aside: Collection[tuple[str, str]] = ()) -> Readings:
+@dataclass(frozen=True)
+class ReadingPart:
+    """The readings of one trial, before they are put together with those of the others.
+
+    Attributes
+    ----------
+    columns
+        By the names of ``READING_COLUMNS`` and ``READING_EXTRA_COLUMNS`` without x, nominal_level,
+        sensor_level and largest_x_before, which come when all trials are known: an array of shape
+        (readings,) or one value for all. ``largest_before`` is the place, in the trial, of the reading with
+        the largest reference before each.
+    count
+        Number of readings.
+    """
+
+    columns: dict[str, object]
+    count: int
+
+    @property
+    def frame(self) -> pd.DataFrame:
+        """The readings as a table, one row each."""
+        return pd.DataFrame(self.columns, index=range(self.count))
+
+
+def collect_readings(parts: Sequence[ReadingPart], set_aside: Collection[tuple[str, str]] = ()) -> Readings:
     """Put the readings of all trials together: one reference quantity, nominal levels, which are used.
 
     Parameters
     ----------
     parts
-        One frame a trial, the ``readings`` of its ``StaircaseFeatures``; empty frames are passed over.
+        One a trial, the ``readings`` of its ``StaircaseFeatures``; empty ones are passed over.
     set_aside
         (module, sensor) of sensors that are set aside: their readings stay in the table and are not used.
 
@@ -113,12 +137,12 @@ def collect_readings(parts: Sequence[pd.DataFrame], set_aside: Collection[tuple[
         known for all; where none is, the one known for most, and the readings without it are not used (a
         notice says so).
     """
-    kept = [part for part in parts if len(part)]
+    kept = [part for part in parts if part.count]
     if not kept:
         return Readings(pd.DataFrame(columns=[*READING_COLUMNS, *READING_EXTRA_COLUMNS]), STRAIN)
-    table = pd.concat(kept, ignore_index=True)
+    table = _joined(kept)
     sensors = pd.MultiIndex.from_frame(table[["module", "sensor"]])
-    table["used"] &= ~sensors.isin(list(set_aside)) if len(set_aside) else True
+    table["used"] = ~sensors.isin(list(set_aside)) if len(set_aside) else True
     reference = _common_reference(table)
     table["x"] = table[_COLUMN_OF[reference]]
     table["largest_x_before"] = _x_of_largest(table)
@@ -128,6 +152,19 @@ def collect_readings(parts: Sequence[pd.DataFrame], set_aside: Collection[tuple[
     table = table.sort_values([*RUN_KEYS, "order"], kind="stable", ignore_index=True)
     table["nominal_level"], table["sensor_level"] = _nominal_levels(table)
     return Readings(table[[*READING_COLUMNS, *READING_EXTRA_COLUMNS]], reference, notices)
+
+
+def _joined(parts: Sequence[ReadingPart]) -> pd.DataFrame:
+    """All parts as one table, column by column: a frame a trial would cost more than reading it."""
+    counts = np.array([part.count for part in parts])
+    whole = {}
+    for name in parts[0].columns:
+        values = [part.columns[name] for part in parts]
+        if any(isinstance(value, np.ndarray) for value in values):
+            whole[name] = np.concatenate([np.broadcast_to(v, n) for v, n in zip(values, counts)])  # type: ignore[call-overload]
+        else:
+            whole[name] = np.repeat(np.array(values), counts)
+    return pd.DataFrame(whole)
 
 
 def _common_reference(table: pd.DataFrame) -> ReferenceQuantity:

@@ -9,13 +9,12 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
-import pandas as pd
 from scipy import ndimage, stats
 
 from campaign.methods.autocorrelation import StretchMeans, stretch_means
 from campaign.notices import Notice
 from campaign.recordings.recording import Trial
-from campaign.trials.readings import READING_COLUMNS, READING_EXTRA_COLUMNS
+from campaign.trials.readings import ReadingPart
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
@@ -24,7 +23,7 @@ BoolArray = npt.NDArray[np.bool_]
 SETTLING_SHARE = 1.0 / 3.0
 """Share of every dwell that is left out at its beginning, while the sensor settles."""
 
-SETTLED_RISK = 0.01
+SETTLED_RISK = 0.001
 """Risk, per trial and shared by its plateaus, of calling a settled plateau not settled."""
 
 SMALLEST_BAND = 0.0025
@@ -47,8 +46,7 @@ class StaircaseFeatures:
     Attributes
     ----------
     readings
-        One row a reading, columns of ``READING_COLUMNS`` and ``READING_EXTRA_COLUMNS``; ``x`` and
-        ``nominal_level`` are NaN until the readings of all trials are put together.
+        The trial's readings, in the order taken.
     notices
         What a reader should know about the trial.
     zero_return
@@ -57,7 +55,7 @@ class StaircaseFeatures:
         Integrated autocorrelation time of the samples of a plateau, in samples; NaN for tables.
     """
 
-    readings: pd.DataFrame
+    readings: ReadingPart
     notices: tuple[Notice, ...]
     zero_return: float
     autocorrelation_time: float
@@ -179,7 +177,7 @@ def _readings_of_table(trial: Trial, reference: FloatArray) -> StaircaseFeatures
         "settled": True,
     }
     return StaircaseFeatures(
-        _reading_frame(trial, columns, len(kept)),
+        _reading_part(trial, columns, len(kept)),
         notices,
         zero_return(levels, trial.signal[kept]),
         float("nan"),
@@ -246,7 +244,7 @@ def _readings_of_log(trial: Trial, reference: FloatArray) -> StaircaseFeatures:
         "settled": settled,
     }
     return StaircaseFeatures(
-        _reading_frame(trial, columns, len(counts)),
+        _reading_part(trial, columns, len(counts)),
         notices,
         zero_return(levels, means.means),
         means.autocorrelation_time,
@@ -469,10 +467,10 @@ def _means_of_channels(trial: Trial, rows: IntArray, counts: IntArray) -> dict[s
     }
 
 
-def _reading_frame(trial: Trial, columns: dict[str, object], count: int) -> pd.DataFrame:
-    """The table of one trial's readings with its identity; x comes when all trials are known."""
+def _reading_part(trial: Trial, columns: dict[str, object], count: int) -> ReadingPart:
+    """The readings of one trial with its identity."""
     identity = trial.identity
-    frame = {
+    whose: dict[str, object] = {
         "generation": identity.generation,
         "batch": identity.batch,
         "module": identity.module,
@@ -488,16 +486,8 @@ def _reading_frame(trial: Trial, columns: dict[str, object], count: int) -> pd.D
         "rest_length_mm": identity.rest_length_mm,
         "rest_length_uncertainty_mm": identity.rest_length_uncertainty_mm,
         "order": np.arange(1, count + 1),
-        "nominal_level": np.nan,
-        "sensor_level": np.nan,
-        "x": np.nan,
-        "largest_x_before": np.nan,
-        "used": True,
-        **columns,
     }
-    return pd.DataFrame(frame, index=range(count))[
-        [*READING_COLUMNS, *READING_EXTRA_COLUMNS, "largest_before"]
-    ]
+    return ReadingPart(whose | columns, count)
 
 
 def _nothing(
@@ -505,8 +495,7 @@ def _nothing(
 ) -> StaircaseFeatures:
     """No readings, and the notice that says why."""
     notice = Notice(code, "noted", trial.file, None, None, what, "no readings are taken from it", remedy)
-    empty = pd.DataFrame(columns=[*READING_COLUMNS, *READING_EXTRA_COLUMNS, "largest_before"])
-    return StaircaseFeatures(empty, (*before, notice), float("nan"), float("nan"))
+    return StaircaseFeatures(ReadingPart({}, 0), (*before, notice), float("nan"), float("nan"))
 
 
 def _missing_notice(

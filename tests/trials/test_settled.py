@@ -49,13 +49,15 @@ def _trial(seed: int, fall: float) -> Trial:
 
 def test_a_clear_drift_is_always_found_and_only_there() -> None:
     for seed in range(20):
-        settled = readings_of_staircase(_trial(seed, 0.9)).readings["settled"].tolist()
+        settled = readings_of_staircase(_trial(seed, 0.9)).readings.frame["settled"].tolist()
         assert settled[4] is False
         assert sum(settled) >= 7
 
 
 def test_settled_trials_are_seldom_noted() -> None:
-    noted = [not readings_of_staircase(_trial(seed, 0.0)).readings["settled"].all() for seed in range(100)]
+    noted = [
+        not readings_of_staircase(_trial(seed, 0.0)).readings.frame["settled"].all() for seed in range(100)
+    ]
     assert np.mean(noted) <= 0.06
 
 
