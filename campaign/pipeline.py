@@ -1,0 +1,174 @@
+"""The whole flow, top to bottom: folder, recordings, trials, analyses, pages, site."""
+
+from __future__ import annotations
+
+import sys
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+import pandas as pd
+
+from campaign.analyses.calibration import Calibration, analyse_calibration
+from campaign.analyses.calibration_effort import analyse_calibration_effort
+from campaign.analyses.findings import collect_findings
+from campaign.analyses.limits import judge_limits
+from campaign.analyses.residuals import analyse_residuals
+from campaign.analyses.results import CampaignResults
+from campaign.analyses.variance import analyse_variance
+from campaign.notices import Notice, sort_notices
+from campaign.pages.notes import make_notes, read_note_files
+from campaign.pages.output import check_ours, write_folder
+from campaign.pages.site import build_site
+from campaign.provenance.manifest import with_manifests
+from campaign.recordings.inspection import inspection_lines, print_lines
+from campaign.recordings.intake import Intake, Progress, run_intake
+from campaign.recordings.recording import Trial
+from campaign.recordings.sensor_share import TrialKey
+from campaign.trials.readings import Readings, collect_readings
+from campaign.trials.staircase import StaircaseFeatures, readings_of_staircase
+
+DONE, SET_ASIDE = 0, 1
+
+
+@dataclass(frozen=True)
+class CampaignRead:
+    """A campaign folder after its files were read once: no recording is held any more.
+
+    Attributes
+    ----------
+    intake
+        Every file with its fate; notices of the trial stage included.
+    readings
+        Plateaus of the staircases that are used.
+    readings_with_put_back
+        The same with those that the registers set aside; ``None`` where there are none.
+    """
+
+    intake: Intake
+    readings: Readings
+    readings_with_put_back: Readings | None
+
+
+def report(folder: Path, into: Path | None, fail_on_set_aside: bool, progress: Progress | None = None) -> int:
+    """Read the campaign in *folder*, analyse it, and write its site whole or not at all.
+
+    Parameters
+    ----------
+    folder
+        The campaign folder; nothing in it is altered.
+    into
+        Folder of the site; ``FOLDER_report`` beside the campaign where ``None``.
+    fail_on_set_aside
+        Whether the status is 1 where anything was set aside unasked.
+    progress
+        Told what is being done and how far it is.
+
+    Returns
+    -------
+    int
+        Exit status: 0 done, 1 done with something set aside.
+
+    Raises
+    ------
+    CampaignStops
+        Where the campaign cannot be read or the output folder is not ours; nothing is written then.
+    """
+    tell = progress or _silent
+    site = into if into is not None else beside(folder)
+    check_ours(site)
+    read = read_campaign(folder, site, tell)
+    results = analyse(read, tell)
+    notes = make_notes(read_note_files(folder))
+    results = replace(results, notices=sort_notices([*results.notices, *notes.notices]))
+    tell("pages", 0, 1)
+    library = results.description.plot_library
+    files = build_site(results, notes, folder / library if library is not None else None)
+    write_folder(with_manifests(files, read.intake.file_hashes), site)
+    tell("pages", 1, 1)
+    sys.stdout.write(print_lines(inspection_lines(replace(read.intake, notices=results.notices))))
+    print(f"\n{len(files)} files written; open {site / 'index.html'}")
+    return SET_ASIDE if fail_on_set_aside and read.intake.set_aside_unasked else DONE
+
+
+def beside(folder: Path) -> Path:
+    """Return where a report of *folder* is written unless said otherwise: FOLDER_report beside it."""
+    whole = folder.resolve()
+    return whole.with_name(f"{whole.name}_report")
+
+
+def read_campaign(folder: Path, output: Path | None = None, progress: Progress | None = None) -> CampaignRead:
+    """Read every recording of *folder* once and keep what its trials are reduced to.
+
+    Raises
+    ------
+    CampaignStops
+        Where the folder cannot be read or no trial can be used.
+    """
+    intake, features = run_intake(folder, reduce_trial, output, progress, keep_put_back=True)
+    staircases = {key: found for key, found in features.items() if found is not None}
+    notices = [notice for key in staircases if key in intake.used for notice in staircases[key].notices]
+    readings = _readings({key: staircases[key] for key in staircases if key in intake.used})
+    put_back = _readings(staircases) if intake.put_back & set(staircases) else None
+    return CampaignRead(with_notices(intake, [*notices, *readings.notices]), readings, put_back)
+
+
+def reduce_trial(trial: Trial) -> StaircaseFeatures | None:
+    """Return what is kept of a trial; ``None`` for kinds that are accounted for but not analysed yet."""
+    return readings_of_staircase(trial) if trial.identity.kind == "staircase" else None
+
+
+def _readings(features: Mapping[TrialKey, StaircaseFeatures]) -> Readings:
+    return collect_readings([found.readings for found in features.values()])
+
+
+def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignResults:
+    """Run every analysis that the readings allow, each fit once."""
+    tell = progress or _silent
+    intake, description = read.intake, read.intake.description
+    calibration = put_back = variance = residuals = effort = None
+    if len(read.readings.usable):
+        tell("analyses", 0, 4)
+        calibration = _calibrate(read.readings, intake)
+        put_back = _calibrate(read.readings_with_put_back, intake) if read.readings_with_put_back else None
+        tell("analyses", 1, 4)
+        variance = analyse_variance(calibration, description)
+        tell("analyses", 2, 4)
+        residuals = analyse_residuals(calibration, variance)
+        effort = analyse_calibration_effort(calibration, variance, description)
+        tell("analyses", 3, 4)
+    limits = judge_limits(description, calibration)
+    findings = collect_findings(
+        description, intake, calibration, variance, residuals, effort, limits, put_back
+    )
+    analyses = (calibration, variance, residuals, effort)
+    notices = [notice for analysis in analyses if analysis is not None for notice in analysis.notices]
+    tell("analyses", 4, 4)
+    return CampaignResults(
+        description=description,
+        intake=intake,
+        readings=read.readings,
+        calibration=calibration,
+        variance=variance,
+        residuals=residuals,
+        calibration_effort=effort,
+        limits=limits,
+        findings=findings,
+        notices=sort_notices([*intake.notices, *notices]),
+    )
+
+
+def _calibrate(readings: Readings, intake: Intake) -> Calibration:
+    return analyse_calibration(readings, intake.description, intake.sensors, intake.file_hashes)
+
+
+def with_notices(intake: Intake, notices: list[Notice]) -> Intake:
+    """Return *intake* with the notices of a later stage added, counted on the recordings they are about."""
+    recordings: pd.DataFrame = intake.recordings.copy()
+    more = pd.Series([notice.file for notice in notices], dtype="object").value_counts()
+    recordings["notices"] += recordings["file"].map(more).fillna(0).astype("int64")
+    return replace(intake, recordings=recordings, notices=sort_notices([*intake.notices, *notices]))
+
+
+def _silent(_what: str, _done: int, _total: int) -> None:
+    """Tell nobody."""
