@@ -224,6 +224,8 @@ def read_campaign_files(survey: Survey, *, progress: Progress | None = None) -> 
     """
     total = sum(file.size_bytes for file in survey.recordings)
     done = 0
+    tell = progress or _silent
+    tell("reading", done, total)
     for batch in batches(survey.recordings):
         opened = [(file, *open_recording(file)) for file in batch]
         items = [RecordingBytes(file.file, data) for file, data, _ in opened if data is not None]
@@ -231,8 +233,11 @@ def read_campaign_files(survey: Survey, *, progress: Progress | None = None) -> 
         for file, _, fault in opened:
             yield outcomes[file.file] if fault is None else _unread(file, fault)
         done += sum(file.size_bytes for file in batch)
-        if progress is not None:
-            progress("reading", done, total)
+        tell("reading", done, total)
+
+
+def _silent(what: str, done: int, total: int) -> None:
+    """Say nothing of progress."""
 
 
 def batches(files: Sequence[SurveyedFile]) -> Iterator[list[SurveyedFile]]:

@@ -123,7 +123,7 @@ def test_trials_are_reduced_while_streaming(make_campaign: CampaignMaker, stairc
     assert results == {(ONE, "AB", 1): 127.0, (TWO, "AB", 2): 128.0}
     assert set(results) == intake.used
     size = sum(intake.recordings.set_index("file").loc[[ONE, TWO], "bytes"])
-    assert seen == [("reading", size, size)]
+    assert seen == [("reading", 0, size), ("reading", size, size)]
 
 
 def test_only_results_of_used_trials_are_kept(
@@ -151,7 +151,7 @@ def test_many_files_in_one_folder_are_read_in_batches(make_campaign: CampaignMak
     assert intake.counts.used == many
     assert results["trials/M1199_AB_staircase_r1.csv", "AB", 1] == 121199
     assert intake.counts.add_up
-    assert len(said) == 3
+    assert len(said) == 4
 
 
 # ---------------------------------------------------------------- across recordings
