@@ -21,6 +21,7 @@ import pandas as pd
 from scipy.sparse import coo_matrix
 from scipy.sparse.csgraph import connected_components
 
+FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
 Label = Literal["resolved", "weak", "very weak", "not distinguishable from zero", "not identified"]
 
@@ -46,6 +47,8 @@ class Units:
         A position of a generation, the same in all its modules.
     level, direction
         Level of the reference value (equal values share a code) and branch.
+    branch
+        −1/2 for rising, +1/2 for falling, 0 for turning readings (these belong to neither branch).
     batches_known
         Whether every module has a batch recorded.
     shared
@@ -63,6 +66,7 @@ class Units:
     place: IntArray
     level: IntArray
     direction: IntArray
+    branch: FloatArray
     batches_known: bool
     shared: bool
 
@@ -156,6 +160,9 @@ class Component:
     line: bool
 
 
+_BRANCH = {"rising": -0.5, "falling": 0.5}
+
+
 def code_units(readings: pd.DataFrame) -> Units:
     """Return the codes of the units of *readings*.
 
@@ -183,6 +190,7 @@ def code_units(readings: pd.DataFrame) -> Units:
         place=_codes(readings, ["generation", "position"]),
         level=_level_codes(readings),
         direction=_codes(readings, ["direction"]),
+        branch=np.asarray(readings["direction"].map(_BRANCH).fillna(0.0), dtype=np.float64),
         batches_known=known,
         shared=_mostly_shared(shared_run, sensor_code),
     )
@@ -193,12 +201,13 @@ def _codes(readings: pd.DataFrame, columns: list[str]) -> IntArray:
 
 
 def _level_codes(readings: pd.DataFrame) -> IntArray:
-    """Codes of nominal levels; where there are none, of values that agree to 0.1 % of their range."""
+    """Codes of nominal levels, else of the sensor's own, else of values rounded to 0.1 % of their range."""
+    for column in ("nominal_level", "sensor_level"):
+        if column in readings and readings[column].notna().all():
+            return np.unique(readings[column].to_numpy(float), return_inverse=True)[1].astype(np.int64)
     x = readings["x"].to_numpy(float)
-    level = readings["nominal_level"].to_numpy(float)
-    if np.isnan(level).any():
-        step = np.ptp(x) * 1e-3 if len(x) else 0.0
-        level = np.round(x / step) if step > 0 else np.zeros_like(x)
+    step = np.ptp(x) * 1e-3
+    level = np.round(x / step) if step > 0 else np.zeros_like(x)
     return np.unique(level, return_inverse=True)[1].astype(np.int64)
 
 

@@ -1,0 +1,444 @@
+"""How much calibration is enough? The error of a strain reading against the effort of calibrating.
+
+Every effort is a procedure: which readings make the line, which are read with it. The procedure is carried
+out on the campaign itself, leaving out in turn what it is then tried on, and on campaigns drawn from the
+fitted model: their errors are what the model predicts. Observed and predicted errors of the same procedure
+must agree, or the model is wrong (Stone, J. Roy. Statist. Soc. B 36 (1974) 111, for leaving out; Davison &
+Hinkley, *Bootstrap Methods and their Application*, 1997, 4.2, for comparing with draws from a model).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING
+
+import numpy as np
+import numpy.typing as npt
+import pandas as pd
+from scipy import stats
+
+from campaign.analyses.run_settling import number_runs
+from campaign.analyses.variance import Variance
+from campaign.analyses.variance_fit import GenerationFit
+from campaign.methods.component_tests import group_sums
+from campaign.methods.identifiability import Units, code_units
+from campaign.methods.nested_simulation import simulate_deviations
+from campaign.notices import Notice
+from campaign.recordings.description import Description
+
+if TYPE_CHECKING:
+    from campaign.analyses.calibration import Calibration
+
+FloatArray = npt.NDArray[np.float64]
+IntArray = npt.NDArray[np.int64]
+BoolArray = npt.NDArray[np.bool_]
+
+DRAWN = 400
+"""Campaigns drawn from the fitted model."""
+
+FAMILY_LEVEL = 0.05
+"""Probability that any effort of a sound model is said to disagree (Bonferroni, a generation)."""
+
+EFFORT_COLUMNS = (
+    *("generation", "effort", "strain_sd_predicted", "strain_sd_left_out", "strain_expanded", "factor"),
+    *("low", "high", "df", "left_out_by", "ratio", "ratio_low", "ratio_high", "agrees", "label"),
+)
+LEFT_OUT_COLUMNS = (
+    "generation",
+    "effort",
+    "left_out_by",
+    "strain_sd_predicted",
+    "strain_sd_left_out",
+    "ratio",
+)
+
+SAME_MOUNTING = "same mounting"
+NOTHING_LEFT = "nothing to leave out"
+
+
+@dataclass(frozen=True)
+class CalibrationEffort:
+    """Errors of strain readings by calibration effort.
+
+    Attributes
+    ----------
+    table
+        One row a generation and effort, least work first, columns of :data:`EFFORT_COLUMNS`: SDs and expanded
+        uncertainties in units of x; ``low`` and ``high`` limit the predicted SD; ``factor`` divides it by
+        that of a sensor's own line; ``left_out_by`` is what was left out in turn; ``ratio`` is left-out over
+        predicted SD, and ``agrees`` whether it lies between ``ratio_low`` and ``ratio_high``, where a sound
+        model keeps the ratios of all efforts of a generation in 95 of 100 campaigns.
+    left_out
+        The same for everything that can be left out, columns of :data:`LEFT_OUT_COLUMNS`.
+    x_low, x_high
+        The range that all sensors share, in units of x; all errors are over it.
+    drawn
+        Campaigns that were drawn from the model.
+    notices
+        What a reader must know.
+    """
+
+    table: pd.DataFrame
+    left_out: pd.DataFrame
+    x_low: float
+    x_high: float
+    drawn: int
+    notices: tuple[Notice, ...] = ()
+
+
+@dataclass(frozen=True)
+class Effort:
+    """A procedure: which unit has a line of its own, and whether the zero is taken anew."""
+
+    name: str
+    line_of: str
+    rezero: str = ""
+
+
+EFFORTS = (
+    Effort("all", "campaign"),
+    Effort("generation", "generation"),
+    Effort("generation_rezero_additive", "generation", "additive"),
+    Effort("generation_rezero_ratio", "generation", "ratio"),
+    Effort("position", "place"),
+    Effort("module", "module"),
+    Effort("sensor", "sensor"),
+    Effort("rezero_additive", "sensor", "additive"),
+    Effort("rezero_ratio", "sensor", "ratio"),
+)
+"""Procedures, least work first; re-zeroing costs one reading a mounting."""
+
+_LEFT_OUT = {
+    "campaign": ("module", "sensor", "session", "repetition", "batch"),
+    "generation": ("module", "sensor", "session", "repetition", "batch"),
+    "place": ("module", "session", "repetition", "batch"),
+    "module": ("sensor", "session", "repetition"),
+    "sensor": ("session", "repetition"),
+}
+"""What can be left out of the readings that make a line; the first that the design allows is shown."""
+
+
+@dataclass(frozen=True)
+class Trials:
+    """Signals of the campaign and of drawn campaigns, ready for procedures.
+
+    Attributes
+    ----------
+    x
+        Shape (readings,).
+    signals
+        Shape (readings, 1 + drawn): as observed, then as drawn.
+    codes
+        Unit name → code, shape (readings,).
+    zero_row
+        Shape (readings,): row of the zero reading of the same mounting (of the same run where mountings do
+        not repeat), −1 where there is none.
+    generation
+        Shape (readings,), names.
+    """
+
+    x: FloatArray
+    signals: FloatArray
+    codes: dict[str, IntArray]
+    zero_row: IntArray
+    generation: npt.NDArray[np.object_]
+
+
+def analyse_calibration_effort(
+    calibration: Calibration, variance: Variance, description: Description
+) -> CalibrationEffort:
+    """Compare calibration efforts by the model and by leaving out.
+
+    Parameters
+    ----------
+    calibration
+        Not read beyond what *variance* was fitted to; kept so that all analyses are called alike.
+    variance
+        The fits.
+    description
+        Not read: errors are over the range common to all sensors, whatever range is rated.
+
+    Returns
+    -------
+    CalibrationEffort
+        An empty table with a notice where nothing was fitted.
+    """
+    del calibration, description
+    return effort_of_fits(variance.by_generation, variance.seed)
+
+
+def effort_of_fits(fits: tuple[GenerationFit, ...], seed: int) -> CalibrationEffort:
+    """Compare calibration efforts over the readings of *fits*, one a generation.
+
+    Parameters
+    ----------
+    fits
+        Fits of single generations.
+    seed
+        Seed of the drawn campaigns.
+    """
+    if not fits:
+        notice = _notice(
+            "effort-not-compared", "no components of spread were fitted", "efforts are not compared"
+        )
+        return CalibrationEffort(
+            _empty(EFFORT_COLUMNS), _empty(LEFT_OUT_COLUMNS), np.nan, np.nan, 0, (notice,)
+        )
+    readings = pd.concat([fit.model.readings for fit in fits])
+    low, high = common_range(readings)
+    trials = _trials(fits, readings, np.random.default_rng([seed % 2**63, 1]))
+    inside = (trials.x >= low) & (trials.x <= high)
+    efforts = _possible_efforts(fits, trials)
+    table = pd.DataFrame(list(_rows(efforts, trials, inside)), columns=list(EFFORT_COLUMNS))
+    table = _with_agreement(_with_factor(table))
+    left_out = pd.DataFrame(list(_left_out_rows(efforts, trials, inside)), columns=list(LEFT_OUT_COLUMNS))
+    return CalibrationEffort(table, left_out, low, high, DRAWN, tuple(_disagreements(table)))
+
+
+def _empty(columns: tuple[str, ...]) -> pd.DataFrame:
+    return pd.DataFrame(columns=list(columns))
+
+
+def _notice(code: str, what: str, done: str, remedy: str = "") -> Notice:
+    return Notice(code, "noted", None, None, None, what, done, remedy)
+
+
+def common_range(readings: pd.DataFrame) -> tuple[float, float]:
+    """Return the range of x that all sensors were read over; the whole range where they share none."""
+    grouped = readings.groupby(["generation", "module", "sensor"])["x"]
+    step = 1e-3 * float(np.ptp(readings["x"].to_numpy(float)))
+    low, high = float(grouped.min().max()), float(grouped.max().min())
+    if high - low <= step:
+        low, high = float(readings["x"].min()), float(readings["x"].max())
+    return low - step, high + step
+
+
+def _trials(
+    fits: tuple[GenerationFit, ...], readings: pd.DataFrame, generator: np.random.Generator
+) -> Trials:
+    units = code_units(readings)
+    drawn = [_drawn_signals(fit, generator) for fit in fits]
+    observed = readings["signal"].to_numpy(float)[:, np.newaxis]
+    codes = {
+        "campaign": np.zeros(len(readings), dtype=np.int64),
+        "generation": units.generation,
+        "batch": units.batch,
+        "place": units.place,
+        "module": units.module,
+        "sensor": units.sensor,
+        "session": units.session,
+        "repetition": units.run,
+    }
+    if not units.batches_known:
+        del codes["batch"]
+    return Trials(
+        x=readings["x"].to_numpy(float),
+        signals=np.hstack([observed, np.vstack(drawn)]),
+        codes=codes,
+        zero_row=_zero_rows(readings, units, fits[0].places["zero"]),
+        generation=readings["generation"].to_numpy(object),
+    )
+
+
+def _drawn_signals(fit: GenerationFit, generator: np.random.Generator) -> FloatArray:
+    """Signals of campaigns drawn from the fit, shape (readings, drawn)."""
+    mean = fit.model.response - fit.marginal
+    deviations = simulate_deviations(
+        fit.model.model, fit.fit.covariances, fit.residual_variance, DRAWN, generator
+    )
+    return np.asarray(mean[:, np.newaxis] + deviations)
+
+
+def _zero_rows(readings: pd.DataFrame, units: Units, zero: float) -> IntArray:
+    """Row of the first reading at zero of the mounting of each reading, or of its run where none repeats."""
+    mounted = units.session if len(np.unique(units.session)) > len(np.unique(units.sensor)) else units.run
+    near = np.abs(readings["x"].to_numpy(float) - zero) <= 0.02 * float(np.ptp(readings["x"].to_numpy(float)))
+    rows = np.flatnonzero(near)
+    order = readings["order"].to_numpy(np.int64)
+    rows = rows[np.lexsort((order[rows], number_runs(readings)[rows], mounted[rows]))]
+    first = np.full(int(mounted.max()) + 1, -1, dtype=np.int64)
+    first[mounted[rows[::-1]]] = rows[::-1]
+    return first[mounted]
+
+
+def _possible_efforts(fits: tuple[GenerationFit, ...], trials: Trials) -> tuple[Effort, ...]:
+    """The efforts that this design tells apart."""
+    count = {name: len(np.unique(code)) for name, code in trials.codes.items()}
+    positions = any(fit.model.counts.position_terms > 0 for fit in fits)
+    differs = {
+        "campaign": count["generation"] > 1,
+        "generation": count["sensor"] > count["generation"],
+        "place": positions,
+        "module": count["module"] > count["generation"] and count["sensor"] > count["module"],
+        "sensor": True,
+    }
+    zeros = bool((trials.zero_row >= 0).all()) and not _is_flat(trials.x)
+    return tuple(e for e in EFFORTS if differs[e.line_of] and (zeros or not e.rezero))
+
+
+def _is_flat(x: FloatArray) -> bool:
+    return bool(np.ptp(x) == 0)
+
+
+def _rows(efforts: tuple[Effort, ...], trials: Trials, inside: BoolArray) -> Iterator[dict[str, object]]:
+    names = sorted(set(trials.generation))
+    for effort in efforts:
+        by = _first_possible(effort, trials)
+        squares = None if by is None else _squared_errors(effort, by, trials)
+        for name in names:
+            rows = inside & (trials.generation == name)
+            yield {
+                "generation": name,
+                "effort": effort.name,
+                "left_out_by": by or "",
+                "label": _label(effort, by),
+                **_summary(squares, rows),
+            }
+
+
+def _label(effort: Effort, by: str | None) -> str:
+    if by is None:
+        return NOTHING_LEFT
+    return SAME_MOUNTING if effort.line_of == "sensor" and by == "repetition" else ""
+
+
+def _first_possible(effort: Effort, trials: Trials) -> str | None:
+    """The first unit that can be left out so that something remains for every line."""
+    return next((by for by in _LEFT_OUT[effort.line_of] if _is_possible(effort, by, trials)), None)
+
+
+def _is_possible(effort: Effort, by: str, trials: Trials) -> bool:
+    if by not in trials.codes:
+        return False
+    pairs = np.unique(np.column_stack([trials.codes[effort.line_of], trials.codes[by]]), axis=0)[:, 0]
+    parts = np.unique(pairs, return_counts=True)[1]
+    return bool(np.mean(parts >= 2) > 0.5)
+
+
+def _squared_errors(effort: Effort, by: str, trials: Trials) -> FloatArray:
+    """Squared errors of reading every row by a line made without its unit of *by*, (readings, 1 + drawn).
+
+    NaN where nothing remains to make a line from, and for the zero readings themselves.
+    """
+    signals, zeros = trials.signals, trials.zero_row
+    used = np.ones(len(trials.x), dtype=bool)
+    if effort.rezero:
+        used = zeros != np.arange(len(zeros))
+    if effort.rezero == "ratio":
+        signals = signals / signals[zeros]
+    lines, cell = _lines_without(trials.codes[effort.line_of], trials.codes[by], trials.x, signals, used)
+    intercept, slope = lines[cell, 0], lines[cell, 1]
+    if effort.rezero == "additive":
+        errors = (signals - signals[zeros]) / slope + (trials.x[zeros] - trials.x)[:, np.newaxis]
+    else:
+        errors = (signals - intercept) / slope - trials.x[:, np.newaxis]
+    errors[~used] = np.nan
+    return np.asarray(errors**2)
+
+
+def _lines_without(
+    group: IntArray, left_out: IntArray, x: FloatArray, signals: FloatArray, used: BoolArray
+) -> tuple[FloatArray, IntArray]:
+    """Least-squares lines of each group without each of its left-out units.
+
+    Returns
+    -------
+    tuple
+        Lines, shape (cells, 2, campaigns), NaN where fewer than two values of x remain; cell of every
+        reading.
+    """
+    pairs, cell = np.unique(np.column_stack([group, left_out]), axis=0, return_inverse=True)
+    cell = cell.ravel()
+    centre = float(x.mean())
+    design = np.column_stack([np.ones_like(x), x - centre]) * used[:, np.newaxis]
+    gram = group_sums(design[:, :, None] * design[:, None, :], cell)
+    cross = np.stack([group_sums(design[:, k, None] * signals, cell) for k in range(2)], axis=1)
+    whole = np.unique(pairs[:, 0], return_inverse=True)[1].ravel()
+    gram = group_sums(gram, whole)[whole] - gram
+    cross = group_sums(cross, whole)[whole] - cross
+    determinant = gram[:, 0, 0] * gram[:, 1, 1] - gram[:, 0, 1] ** 2
+    sound = determinant > 1e-9 * np.maximum(gram[:, 0, 0], 1.0) ** 2 * max(float(np.var(x)), 1e-300)
+    lines = np.full(cross.shape, np.nan)
+    lines[sound] = np.linalg.solve(gram[sound], cross[sound])
+    lines[:, 0] -= lines[:, 1] * centre
+    return lines, cell
+
+
+def _summary(squares: FloatArray | None, rows: BoolArray) -> dict[str, float]:
+    """Observed and predicted SD of one generation, limits and degrees of freedom of the predicted one."""
+    nothing = dict.fromkeys(
+        ("strain_sd_predicted", "strain_sd_left_out", "strain_expanded", "low", "high", "df", "ratio"), np.nan
+    )
+    if squares is None:
+        return nothing
+    own = squares[rows]
+    own = own[np.isfinite(own).all(axis=1)]
+    if not len(own):
+        return nothing
+    mean_squares = own.mean(axis=0)
+    observed, drawn = float(mean_squares[0]), mean_squares[1:]
+    predicted, spread = float(drawn.mean()), float(drawn.var(ddof=1))
+    freedom = 2 * predicted**2 / spread if spread > 0 else np.inf
+    sd = float(np.sqrt(predicted))
+    low, high = (float(np.sqrt(freedom / stats.chi2.ppf(q, freedom))) for q in (0.975, 0.025))
+    return {
+        "strain_sd_predicted": sd,
+        "strain_sd_left_out": float(np.sqrt(observed)),
+        "strain_expanded": float(stats.t.ppf(0.975, freedom)) * sd,
+        "low": sd * low,
+        "high": sd * high,
+        "df": freedom,
+        "ratio": float(np.sqrt(observed / predicted)) if predicted > 0 else np.nan,
+    }
+
+
+def _with_factor(table: pd.DataFrame) -> pd.DataFrame:
+    own = table[table["effort"] == "sensor"].set_index("generation")["strain_sd_predicted"]
+    return table.assign(factor=table["strain_sd_predicted"] / table["generation"].map(own))
+
+
+def _with_agreement(table: pd.DataFrame) -> pd.DataFrame:
+    """Whether the ratio of left-out to predicted SD is one that the model itself gives.
+
+    The logarithm of a mean square with ν degrees of freedom has a variance of about 2/ν; the limits hold for
+    all efforts of a generation together.
+    """
+    count = table.groupby("generation")["effort"].transform("size")
+    reach = stats.norm.ppf(1 - FAMILY_LEVEL / (2 * count.to_numpy(float)))
+    factor = np.exp(reach * np.sqrt(0.5 / table["df"].to_numpy(float)))
+    inside = (table["ratio"] >= 1 / factor) & (table["ratio"] <= factor)
+    known = table["ratio"].notna()
+    return table.assign(
+        ratio_low=1 / factor, ratio_high=factor, agrees=inside.astype(object).where(known, None)
+    )
+
+
+def _disagreements(table: pd.DataFrame) -> Iterator[Notice]:
+    for name, rows in table[table["agrees"].eq(False)].groupby("generation", sort=True):
+        efforts = ", ".join(rows["effort"])
+        yield _notice(
+            "model-is-wrong",
+            f"{name}: errors found by leaving out are not those that the model predicts ({efforts})",
+            "both are shown; do not rely on the predicted ones",
+            "look at the residuals: what repeats there is missing from the model",
+        )
+
+
+def _left_out_rows(
+    efforts: tuple[Effort, ...], trials: Trials, inside: BoolArray
+) -> Iterator[dict[str, object]]:
+    """Observed and predicted SD for everything that can be left out."""
+    observed_only = replace(trials, signals=trials.signals[:, : 1 + DRAWN // 4])
+    for effort in efforts:
+        for by in _LEFT_OUT[effort.line_of]:
+            if effort.rezero or not _is_possible(effort, by, trials):
+                continue
+            squares = _squared_errors(effort, by, observed_only)
+            for name in sorted(set(trials.generation)):
+                found = _summary(squares, inside & (trials.generation == name))
+                yield {"generation": name, "effort": effort.name, "left_out_by": by, **_only(found)}
+
+
+def _only(found: dict[str, float]) -> dict[str, float]:
+    return {key: found[key] for key in ("strain_sd_predicted", "strain_sd_left_out", "ratio")}
