@@ -80,6 +80,7 @@ _USUAL_NAMES: dict[str, tuple[str, ...]] = {
     "Cp": ("signal",),
     "Cs": ("signal",),
     "inductance": ("signal",),
+    "voltage": ("signal",),
     "counts": ("signal",),
     "resistance": ("resistance",),
     "R": ("resistance",),
@@ -328,6 +329,8 @@ class _Planner:
         units = self.layout.units or ()
         cell = units[position - 1].strip() if position <= len(units) else ""
         header = self.header(position)
+        if not cell and header.strip().casefold() in FAMILIES["counts"].scales:
+            return "counts"
         if rule is not None and rule.header is not None and re.search(r"[{*]", rule.header):
             header = re.sub(r"\{\w+\}|\*", "·", rule.header)
         stated = split_header(header).unit if header.strip() else None

@@ -80,7 +80,7 @@ def _binary_kind(data: bytes) -> str | None:
     head = data[:4096]
     control = len(head) - len(head.translate(None, _CONTROL))
     first_line = head.partition(b"\n")[0]
-    if control > max(2, len(head) // 100) or (b"\x00" in first_line and not first_line.strip(b"\x00 \r")):
+    if control > max(8, len(head) // 50) or (b"\x00" in first_line and not first_line.strip(b"\x00 \r")):
         return "binary, not text"
     return None
 

@@ -124,7 +124,7 @@ def _prepared(item: RecordingBytes, description: Description, careful: bool) -> 
         return _outcome(item, sha256, notices)
     body, ending = _body(text.data, layout)
     if not body.strip():
-        empty = Remark("no-rows", layout.header_line, None, words=" below the header")
+        empty = Remark("no-rows", layout.header_line, None, words="below the header")
         return _outcome(item, sha256, (*notices, *gather_remarks([empty])))
     plan = plan_columns(layout, description.columns, item.file)
     notices = (*notices, *plan.notices)
@@ -194,7 +194,7 @@ def _finished(table: _Table, plain: FloatArray | None) -> ReadOutcome:
     if any(remark.code == "quote" for remark in remarks):
         return _outcome(table.item, table.sha256, (*table.notices, *gather_remarks(remarks)), table.plan)
     if not len(rows.lines):
-        remarks.append(Remark("no-rows", table.layout.header_line, None))
+        remarks.append(Remark("no-rows", table.layout.header_line, None, words="of those below the header"))
     columns = [column for column in table.plan.columns if column.content != "identity"]
     series, found = _series(columns, rows) if len(rows.lines) else ([], [])
     constants, mixed = _constants(table.plan.columns, rows)

@@ -219,7 +219,7 @@ _WORDINGS: dict[str, _Wording] = {
     ),
     "no-rows": _Wording(
         "set aside",
-        "no row can be read{texts}",
+        "no row can be read {texts}",
         "",
         SET_ASIDE,
         "record or export it again",
