@@ -32,7 +32,7 @@ SMALLEST_BAND = 0.0025
 MOTION_SHARE = 0.002
 """Differences smaller than this share of the span of the reference are not motion."""
 
-SMALLEST_REST_SHARE = 0.11
+SMALLEST_REST_SHARE = 1.0 / 6.0
 """A log that rests for less than this share of its samples is no staircase (a sine rests at its ends too)."""
 
 SHORTEST_PLATEAU = 3
@@ -422,11 +422,11 @@ def _reference_values(trial: Trial) -> FloatArray | None:
 
 
 def _level_tolerance(levels: FloatArray) -> float:
-    """Levels closer than this are one: a fifth of the typical step, or 1 % of the span if more."""
-    moves = np.abs(np.diff(levels))
+    """Levels closer than this are one: 1 % of the span, or a fifth of the typical step if that is less."""
     span = float(np.ptp(levels)) if len(levels) else 0.0
-    steps = moves[moves > 0.01 * span]
-    return max(0.2 * float(np.median(steps)) if len(steps) else 0.0, 0.01 * span)
+    moves = np.abs(np.diff(levels))
+    steps = moves[moves > 0.002 * span]
+    return min(0.01 * span, 0.2 * float(np.median(steps)) if len(steps) else 0.0)
 
 
 def _carried_forward(values: FloatArray) -> FloatArray:
