@@ -259,7 +259,7 @@ def _shifted(cleaned: str) -> str:
 def _as_neighbours(pages: Iterable[Page]) -> tuple[Page, ...]:
     listed = list(pages)
     links = [(page.title, page.file) for page in listed]
-    before, after = [None, *links[:-1]], [*links[1:], None]
+    before, after = [None, *links][: len(links)], [*links, None][1:]
     return tuple(
         replace(page, previous=b, following=a) for page, b, a in zip(listed, before, after, strict=True)
     )
