@@ -18,6 +18,7 @@ from markupsafe import Markup
 
 from campaign.pages import numbers, slugs
 from campaign.pages.assets import asset_files
+from campaign.pages.definitions import definitions_of
 from campaign.pages.drawing import ready
 from campaign.pages.figures import Figure
 from campaign.pages.page import Page, SiteFrame
@@ -78,6 +79,7 @@ def environment(further: Sequence[Path] = ()) -> Environment:
     )
     made.globals.update({name: getattr(numbers, name) for name in _NUMBER_FUNCTIONS})
     made.globals.update({name: getattr(slugs, name) for name in _LINK_FUNCTIONS})
+    made.globals["definitions_of"] = definitions_of
     return made
 
 

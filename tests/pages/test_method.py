@@ -5,13 +5,16 @@ from __future__ import annotations
 import re
 from pathlib import Path
 
+import pandas as pd
 import pytest
 
 from campaign.analyses.scope import Scope, Span
+from campaign.pages.definitions import DEFINITIONS, definitions_of
 from campaign.pages.formulas import FORMULAS, rendered_formulas
 from campaign.pages.method import coverage_table, measured_ranges, versions
 from campaign.pages.page import Page, SiteFrame
 from campaign.pages.render import render_site, templates_folder
+from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import STRAIN
 
 TEMPLATES = templates_folder()
@@ -90,7 +93,16 @@ def test_links_to_definitions_find_them(html: str) -> None:
     link = re.compile(r"method\.html#([\w-]+)|\bterm\(\s*[\"']([\w-]+)")
     wanted = {anchor for text in texts for pair in link.findall(text) for anchor in pair if anchor}
     assert {"linearity", "versions"} <= wanted
+    wanted |= {anchor for anchor, _ in DEFINITIONS.values()}
     assert sorted(wanted - set(re.findall(r'\bid="([^"]+)"', html))) == []
+
+
+def test_columns_that_a_table_shows_are_explained_below_it() -> None:
+    frame = pd.DataFrame({"module": ["M01"], "hysteresis_percent_fso": [1.0], "strain_sd": [0.01]})
+    shown = Table("sensor_lines", "Lines.", frame, (Column("module", "Module"), Column("strain_sd", "SD")))
+    words = [word for word, _ in definitions_of(shown)]
+    assert words == ["strain-equivalent", "component as a strain", "intervals of SDs"]
+    assert definitions_of(Table("t", "T.", frame, (Column("module", "Module"),))) == []
 
 
 def test_text_for_a_paper_carries_the_numbers_of_the_campaign(html: str) -> None:

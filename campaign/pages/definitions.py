@@ -1,0 +1,52 @@
+"""Which definition of the Method page says what a column means."""
+
+from __future__ import annotations
+
+from campaign.pages.tables import Table
+
+DEFINITIONS: dict[str, tuple[str, str]] = {
+    "reading": ("reading", "signal count order time_since_motion_s"),
+    "standard error": ("standard-error", "standard_error effective_count"),
+    "settled": ("settled", "settled"),
+    "strain": ("strain", "strain length_mm rest_length_mm nominal_level"),
+    "line": ("line", "intercept slope var_intercept runs df variance_source"),
+    "branches": ("branches", "branch direction"),
+    "gauge factor": ("gauge-factor", "gauge_factor"),
+    "residual SD and R²": ("residual-sd", "residual_sd r_squared strain_residual_sd"),
+    "lack of fit": ("lack-of-fit", "lack_of_fit_f lack_of_fit_p quadratic"),
+    "linearity": (
+        "linearity",
+        "linearity_least_squares_percent_fso linearity_terminal_percent_fso "
+        "linearity_zero_based_percent_fso linearity_independent_percent_fso",
+    ),
+    "hysteresis": ("hysteresis", "hysteresis_percent_fso difference"),
+    "repeatability": ("repeatability", "repeatability_percent_fso sd_percent_fso"),
+    "stretch exponent": ("stretch-exponent", "stretch_exponent"),
+    "%FSO": ("full-scale-output", "percent_fso zero_return_percent_fso hysteresis_percent_fso"),
+    "zero return": ("zero-return", "zero_return zero_return_percent_fso"),
+    "leverage and Cook’s distance": ("influence", "studentised leverage cooks_distance"),
+    "strain-equivalent": ("strain-equivalent", "strain_sd strain_residual_sd"),
+    "component as a strain": ("component-in-strain", "strain_sd share"),
+    "intervals of SDs": ("intervals", "strain_sd"),
+    "labels": ("identifiability", "label degrees_of_freedom"),
+    "REML and its check": ("restricted-likelihood", "criterion smallest_cone_eigenvalue"),
+    "kinds of precision": ("precision", "figure"),
+    "tests of components": ("component-tests", "statistic p_adjusted"),
+    "calibration effort": (
+        "calibration-effort",
+        "strain_sd_predicted strain_sd_left_out strain_expanded factor",
+    ),
+    "verdicts": ("limits", "verdict probability"),
+}
+"""Words of a link → (address on the Method page, columns that it explains)."""
+
+
+def definitions_of(table: Table) -> list[tuple[str, str]]:
+    """Return the definitions that explain the columns a table shows, as (words, address)."""
+    shown = {column.key.removesuffix("_mm") for column in table.columns}
+    shown |= {column.key for column in table.columns}
+    return [
+        (words, f"method.html#{anchor}")
+        for words, (anchor, keys) in DEFINITIONS.items()
+        if not shown.isdisjoint(keys.split())
+    ]
