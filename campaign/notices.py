@@ -112,6 +112,7 @@ NOTICE_CODES: dict[str, str] = {
     "reference-one-value": "[reference] gives one value alone; it is taken as the random part",
     "files-match-nothing": "a pattern of [recordings] files matches no file",
     "name-matches-nothing": "a pattern of [recordings] name matches no recording",
+    "left-alone": "columns that the description says to leave alone; nobody reads them",
     "columns-match-nothing": "a [[columns]] table matches no column of any recording",
     "unreadable-register": "a register cannot be opened",
     "register-not-text": "a register holds NUL characters",

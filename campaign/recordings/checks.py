@@ -261,7 +261,7 @@ def _names_generation(survey: Survey) -> bool:
 
 
 def check_rules(survey: Survey, patterns: Sequence[NamePattern], files: Sequence[ReadFile]) -> list[Notice]:
-    """Note patterns and ``[[columns]]`` tables of the description that match nothing."""
+    """Note patterns and column tables of the description that match nothing, and columns left alone."""
     found: list[tuple[str, str]] = []
     names = [file.file for file in survey.recordings]
     for pattern in survey.description.files:
@@ -271,16 +271,21 @@ def check_rules(survey: Survey, patterns: Sequence[NamePattern], files: Sequence
         if not any(distinct_readings(compiled, text_to_match(compiled, name), None) for name in names):
             what = f"[recordings] name '{compiled.text}' matches none of {len(names)} recordings"
             found.append(("name-matches-nothing", what))
+    left_alone = dict.fromkeys(header for file in files for header in file.left_alone)
     used = frozenset().union(*(file.rules_used for file in files))
     for index, rule in enumerate(survey.description.columns):
         if index not in used and any(file.rows for file in files):
             column = f"header '{rule.header}'" if rule.header is not None else f"position {rule.position}"
             found.append(("columns-match-nothing", f"[[columns]] {index + 1}, {column}, matches no column"))
     remedy = "mend it, or take it out"
-    return [
+    notices = [
         Notice(code, "noted", DESCRIPTION_FILE, None, None, what, "nothing is read by it", remedy)
         for code, what in found
     ]
+    if left_alone:
+        what = "columns to be left alone: " + ", ".join(f"'{shown(header)}'" for header in left_alone)
+        notices.append(_assumed("left-alone", what, "not read, as the description says", "", len(left_alone)))
+    return notices
 
 
 def nothing_usable(counts: Counts) -> Notice | None:

@@ -273,6 +273,31 @@ def test_patterns_and_tables_that_match_nothing_are_noted(
     assert {"files-match-nothing", "name-matches-nothing", "columns-match-nothing"} <= set(codes(intake))
 
 
+def test_a_pattern_that_matches_everything_sets_aside_what_is_no_recording(
+    make_campaign: CampaignMaker, staircase: StaircaseMaker, minimal: str
+) -> None:
+    files = {ONE: staircase(), "photo.jpg": b"\xff\xd8\xff\xe0" * 20, "notes/a.md": "# Words\n\nand more.\n"}
+    intake = inspect_folder(make_campaign(files, minimal.replace("trials/**/*.csv", "**")))
+    assert fates(intake) == {
+        ONE: "used",
+        "campaign.toml": "not a recording",
+        "notes/a.md": "set aside",
+        "photo.jpg": "set aside",
+    }
+    assert intake.counts.add_up
+
+
+def test_a_name_pattern_that_matches_everything_makes_every_name_a_module(
+    make_campaign: CampaignMaker, staircase: StaircaseMaker
+) -> None:
+    description = (
+        "format = 1\n[recordings]\nfiles = '*.csv'\nname = '{module}'\n"
+        "same = { sensor = 'AB', kind = 'staircase', repetition = 1 }\n"
+    )
+    intake = inspect_folder(make_campaign({"a.csv": staircase(), "b c.csv": staircase(1)}, description))
+    assert intake.trials["module"].tolist() == ["a", "b c"]
+
+
 def test_columns_left_alone_are_listed(
     make_campaign: CampaignMaker, staircase: StaircaseMaker, minimal: str
 ) -> None:
@@ -281,6 +306,7 @@ def test_columns_left_alone_are_listed(
         make_campaign({ONE: text}, minimal + "[[columns]]\nheader = 'model *'\nquantity = 'ignore'\n")
     )
     assert intake.left_alone == (("model a", 1), ("model b", 1))
+    assert of_code(intake, "left-alone") == [(None, "columns to be left alone: 'model a', 'model b'")]
 
 
 # ---------------------------------------------------------------- hostile and real folders
