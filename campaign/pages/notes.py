@@ -64,11 +64,11 @@ _SVG_ELEMENTS = _words(
 )
 _SVG_ATTRIBUTES = _words(
     """
-    aria-label class clip-path color cx cy d dominant-baseline dx dy fill fill-opacity fill-rule font-
-    family font-size font-style font-weight fx fy gradientTransform gradientUnits height id letter-
-    spacing offset opacity points preserveAspectRatio r role rotate rx ry stop-color stop- opacity
-    stroke stroke-dasharray stroke-linecap stroke-linejoin stroke-opacity stroke-width text- anchor
-    textLength transform version viewBox width x x1 x2 y y1 y2
+    aria-label class clip-path color cx cy d dominant-baseline dx dy fill fill-opacity fill-rule
+    font-family font-size font-style font-weight fx fy gradientTransform gradientUnits height id
+    letter-spacing offset opacity points preserveAspectRatio r role rotate rx ry stop-color
+    stop-opacity stroke stroke-dasharray stroke-linecap stroke-linejoin stroke-opacity stroke-width
+    text-anchor textLength transform version viewBox width x x1 x2 y y1 y2
     """
 )
 

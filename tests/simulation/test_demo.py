@@ -11,6 +11,7 @@ from pathlib import Path
 import pandas as pd
 import pytest
 
+from campaign.pages.notes import make_notes, read_note_files
 from campaign.simulation import demo
 from campaign.simulation.__main__ import main
 from campaign.simulation.demo import demo_files, demo_plan, demo_truth
@@ -123,3 +124,10 @@ def test_truth_page_gives_the_strain_equivalents_of_the_components(made: dict[st
     """Hand-poured sensors: 1.6 pF over a mean slope of 60.82 pF is 2.63 % at zero strain."""
     row = next(line for line in made["TRUTH.md"].decode().splitlines() if line.startswith("| sensor | 1.6 "))
     assert [cell.strip() for cell in row.split("|")[5:8]] == ["2.63", "3.22", "3.90"]
+
+
+def test_the_notes_are_shown_whole_with_their_picture() -> None:
+    notes = make_notes(read_note_files(FOLDER))
+    assert [page.title for page in notes.pages] == ["The second process (invented)", "The stand (invented)"]
+    assert notes.notices == ()
+    assert len(notes.files or {}) == 1
