@@ -15,7 +15,7 @@ import pytest
 
 from campaign import __version__
 from campaign.cli import main
-from campaign.recordings.description import load_description
+from campaign.recordings.description_file import load_description
 from campaign.recordings.intake import NOTICE_COLUMNS, RECORDING_COLUMNS, TRIAL_COLUMNS
 from campaign.recordings.name_guess import guess_pattern, kind_of_word
 

@@ -12,7 +12,8 @@ from pathlib import Path
 from typing import Literal
 
 from campaign.notices import CampaignStops, Notice
-from campaign.recordings.description import DESCRIPTION_FILE, Description, load_description
+from campaign.recordings.description import DESCRIPTION_FILE, Description
+from campaign.recordings.description_file import load_description
 from campaign.recordings.file_glob import glob_expression, matches_glob
 from campaign.recordings.register import REGISTERS, Registers, read_registers, shown
 

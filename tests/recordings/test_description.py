@@ -8,7 +8,8 @@ from pathlib import Path
 import pytest
 
 from campaign.notices import CampaignStops, Notice
-from campaign.recordings.description import Description, load_description, read_description
+from campaign.recordings.description import Description
+from campaign.recordings.description_file import load_description, read_description
 from campaign.recordings.toml_tables import find_line, nearest
 
 EVERY_KEY = """\

@@ -8,7 +8,8 @@ from collections.abc import Mapping
 import numpy as np
 import pytest
 
-from campaign.recordings.description import Description, read_description
+from campaign.recordings.description import Description
+from campaign.recordings.description_file import read_description
 from campaign.recordings.identity import BY_REQUEST, Identification, identify, naming_rules
 from campaign.recordings.recording import Channel, Recording
 from campaign.recordings.register import Registers, read_register

@@ -7,7 +7,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from campaign.recordings.description import load_description
+from campaign.recordings.description_file import load_description
 from campaign.recordings.reading import ReadOutcome, RecordingBytes, read_recordings
 from campaign.recordings.recording import Channel
 
