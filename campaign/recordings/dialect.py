@@ -20,13 +20,9 @@ from campaign.units import SPELLINGS, looks_like_timestamp, nearest_spelling, un
 SEPARATORS: tuple[str, ...] = (",", ";", "\t", " ")
 """Separators that are looked for, in falling order of preference."""
 
-SAMPLE_LINES = 24
-"""Lines, comments not counted, that separator, decimal sign and header are found out from; more where none of
-them holds numbers."""
-
-HEAD_BYTES = (1 << 12, 1 << 18)
-"""Bytes at the start of a file in which header and first rows are looked for: the first, and the second where
-that holds less than :data:`ENOUGH_ROWS` rows."""
+HEADS: tuple[tuple[int, int], ...] = ((1 << 12, 14), (1 << 14, 120), (1 << 18, 4000))
+"""Bytes at the start of a file, and lines of them that are no comments, that the layout is found out from: the
+first, and each further one where the one before holds less than :data:`ENOUGH_ROWS` rows."""
 
 ENOUGH_ROWS = 8
 
@@ -214,14 +210,11 @@ def _sample(guess: _Guess) -> tuple[tuple[str, ...], ...]:
 
 def _looked_over(text: bytes, description: Description) -> tuple[list[str], list[int], _Guess]:
     """Return the lines at the start, the indices of those that are no comments, and how they are best cut."""
-    for size in HEAD_BYTES:
-        lines = _head_lines(text, size, description.header_row)
+    for size, most in HEADS:
+        lines = _head_lines(text, size, most, description.header_row)
         of_table = (i for i in range((description.header_row or 1) - 1, len(lines)) if _is_of_table(lines[i]))
-        table = list(islice(of_table, SAMPLE_LINES))
+        table = list(islice(of_table, most))
         guess = _best_guess([lines[i] for i in table], description.separator)
-        if not any(row.is_row for row in guess.rows):
-            table += of_table
-            guess = _best_guess([lines[i] for i in table], description.separator)
         if len(text) <= size or sum(row.is_row for row in guess.rows) >= ENOUGH_ROWS:
             break
     return lines, table, guess
@@ -232,10 +225,10 @@ def _is_of_table(line: str) -> bool:
     return bool(text) and not text.startswith(_COMMENT)
 
 
-def _head_lines(text: bytes, size: int, header_row: int | None) -> list[str]:
+def _head_lines(text: bytes, size: int, most: int, header_row: int | None) -> list[str]:
     if header_row is not None:
-        lines = text.split(b"\n", header_row + SAMPLE_LINES)
-        return [line.decode(errors="replace") for line in lines[: header_row + SAMPLE_LINES]]
+        lines = text.split(b"\n", header_row + most)
+        return [line.decode(errors="replace") for line in lines[: header_row + most]]
     head = text[:size]
     cut = head.rfind(b"\n") + 1 if len(text) > size else len(head)
     return (head[:cut] if cut else head).decode(errors="replace").removesuffix("\n").split("\n")
