@@ -21,7 +21,7 @@ SEPARATORS: tuple[str, ...] = (",", ";", "\t", " ")
 """Separators that are looked for, in falling order of preference."""
 
 HEADS: tuple[tuple[int, int], ...] = ((1 << 12, 14), (1 << 14, 120), (1 << 18, 4000))
-"""Bytes at the start of a file, and lines of them that are no comments, that the layout is found out from: the
+"""Bytes at the start of a file, and lines of them that are no comments, to find the layout out from: the
 first, and each further one where the one before holds less than :data:`ENOUGH_ROWS` rows."""
 
 ENOUGH_ROWS = 8

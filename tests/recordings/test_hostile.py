@@ -5,6 +5,7 @@ from __future__ import annotations
 import csv
 import json
 import math
+import pickle
 from pathlib import Path
 
 import pytest
@@ -116,3 +117,13 @@ def test_all_files_at_once_read_as_each_alone():
         alone = read(name)
         assert outcome.notices == alone.notices
         assert (outcome.recording is None) == (alone.recording is None)
+
+
+def test_outcomes_travel_between_processes():
+    outcome = read("21_over_token.csv")
+    travelled = pickle.loads(pickle.dumps(outcome))
+    assert travelled.notices == outcome.notices
+    assert travelled.recording.preamble == outcome.recording.preamble
+    for there, here in zip(travelled.recording.channels, outcome.recording.channels, strict=True):
+        assert (there.quantity, there.unit, there.position) == (here.quantity, here.unit, here.position)
+        assert there.values.tolist() == pytest.approx(here.values.tolist(), nan_ok=True, rel=0, abs=0)
