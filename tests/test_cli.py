@@ -16,7 +16,7 @@ import pytest
 from campaign import __version__
 from campaign.cli import main
 from campaign.recordings.description_file import load_description
-from campaign.recordings.intake import NOTICE_COLUMNS, RECORDING_COLUMNS, TRIAL_COLUMNS
+from campaign.recordings.intake_tables import NOTICE_COLUMNS, RECORDING_COLUMNS, TRIAL_COLUMNS
 from campaign.recordings.name_guess import guess_pattern, kind_of_word
 
 CAMPAIGNS = Path(__file__).parent / "campaigns"

@@ -17,7 +17,7 @@ from campaign.recordings.folder import Survey
 from campaign.recordings.identity import SOLE_GENERATION, Identification
 from campaign.recordings.name_pattern import NamePattern, distinct_readings, text_to_match
 from campaign.recordings.recording import TrialIdentity
-from campaign.recordings.register import remark_on_id, shown
+from campaign.recordings.register import plain_path, remark_on_id, shown
 from campaign.recordings.sensor_share import TrialKey, key_of_trial
 from campaign.recordings.toml_tables import suggestion
 
@@ -204,11 +204,11 @@ def check_ids(trials: Iterable[TrialIdentity]) -> list[Notice]:
 
 def check_trial_rows(survey: Survey) -> list[Notice]:
     """Note rows of ``trials.csv`` for files that are not there, or that are not named as recordings."""
-    by_name = {unicodedata.normalize("NFC", file.file): file for file in survey.files}
+    by_name = {plain_path(file.file): file for file in survey.files}
     named = tuple(name for name, file in by_name.items() if file.list != "not a recording")
     notices = []
     for row in survey.registers.trials.rows:
-        name = unicodedata.normalize("NFC", row.get("file").replace("\\", "/"))
+        name = plain_path(row.get("file"))
         file = by_name.get(name)
         if file is None:
             what = f"the row names '{shown(row.get('file'))}', which is not in the folder"

@@ -28,6 +28,7 @@ from campaign.recordings.description import (
 )
 from campaign.recordings.file_glob import glob_expression, leaves_the_folder
 from campaign.recordings.name_pattern import KEYS, PatternError, compile_pattern
+from campaign.recordings.register import shown
 from campaign.recordings.toml_tables import CheckedTable, FaultList, suggestion
 from campaign.units import QUANTITY_FAMILIES, UnitError, find_unit, parse_quantity
 
@@ -57,7 +58,7 @@ def load_description(folder: Path) -> Description:
         data = (folder / DESCRIPTION_FILE).read_bytes()
     except OSError as fault:
         raise CampaignStops([_description_missing(folder, fault)]) from fault
-    return read_description(data, folder.resolve().name)
+    return read_description(data, shown(folder.resolve().name))
 
 
 def _description_missing(folder: Path, fault: OSError) -> Notice:

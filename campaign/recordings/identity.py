@@ -6,7 +6,6 @@ the notice shows what each one says.
 
 from __future__ import annotations
 
-import unicodedata
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 
@@ -20,6 +19,7 @@ from campaign.recordings.register import (
     ID_COLUMNS,
     RegisterRow,
     Registers,
+    plain_path,
     refusal_of_id,
     shown,
     tidy_id,
@@ -163,7 +163,7 @@ def identify(recording: Recording, rules: NamingRules) -> Identification:
     """
     file = recording.file
     name = read_name(file, rules.patterns, tuple(rules.kinds))
-    row = rules.trial_rows.get((unicodedata.normalize("NFC", file),))
+    row = rules.trial_rows.get((plain_path(file),))
     statements = tuple(_statements(recording, name, row, rules))
     values, sources, notices = _settle(file, statements)
     notices += _check_name(file, name)
@@ -237,7 +237,7 @@ def _check_name(file: str, name: NameReading) -> list[Notice]:
 
 
 def _check_row(file: str, row: RegisterRow | None, rules: NamingRules) -> list[Notice]:
-    reason = rules.registers.trials.refused.get((unicodedata.normalize("NFC", file),))
+    reason = rules.registers.trials.refused.get((plain_path(file),))
     if reason is not None:
         return [
             Notice("register-row-conflict", "set aside", file, None, None, reason, "not used", "keep one row")

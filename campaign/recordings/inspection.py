@@ -10,7 +10,8 @@ from collections.abc import Iterable, Iterator, Sequence
 from pathlib import Path
 
 from campaign.notices import CampaignStops, Notice, Weight
-from campaign.recordings.intake import Intake, notices_table
+from campaign.recordings.intake import Intake
+from campaign.recordings.intake_tables import notices_table
 
 TABLE_NAMES = ("recordings", "trials", "notices")
 """Tables that :func:`write_tables` writes, as NAME.csv."""

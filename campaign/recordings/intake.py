@@ -6,10 +6,9 @@ what that function returns stays.
 
 from __future__ import annotations
 
-import hashlib
 import os
 from collections import Counter
-from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TypeVar
@@ -30,7 +29,7 @@ from campaign.recordings.checks import (
     nothing_usable,
 )
 from campaign.recordings.description import Description
-from campaign.recordings.folder import LARGEST_RECORDING_BYTES, Survey, SurveyedFile, survey_folder
+from campaign.recordings.folder import Survey, SurveyedFile, survey_folder
 from campaign.recordings.identity import (
     BY_REQUEST,
     SET_ASIDE_BY_THE_LAB,
@@ -40,11 +39,16 @@ from campaign.recordings.identity import (
     identify,
     naming_rules,
 )
+from campaign.recordings.intake_tables import (
+    modules_table,
+    recordings_table,
+    sensors_table,
+    sessions_table,
+    trials_table,
+)
 from campaign.recordings.reading import ReadOutcome, RecordingBytes, read_recordings
 from campaign.recordings.recording import Recording, Trial, TrialIdentity
-from campaign.recordings.register import KNOWN_COLUMNS, Register, rest_length_mm
 from campaign.recordings.sensor_share import Shares, TrialKey, key_of_trial, trials_of_recording
-from campaign.units import UnitError
 
 T = TypeVar("T")
 
@@ -56,21 +60,6 @@ BATCH_BYTES = 4_000_000
 
 BATCH_FILES = 500
 """Recordings that are read together at most."""
-
-RECORDING_COLUMNS = ("file", "sha256", "bytes", "kind", "fate", "rows", "notices")
-TRIAL_COLUMNS = (
-    "file",
-    "kind",
-    "generation",
-    "batch",
-    "module",
-    "sensor",
-    "repetition",
-    "session",
-    "started",
-    "fate",
-)
-NOTICE_COLUMNS = ("code", "weight", "file", "line", "column", "what", "done", "remedy")
 
 
 @dataclass(frozen=True)
@@ -372,15 +361,15 @@ def settle(survey: Survey, rules: NamingRules, read: Sequence[ReadFile]) -> Inta
             )
         )
     )
-    recordings = _recordings_table(survey, read, used, notices)
+    recordings = recordings_table(survey, read, used, notices)
     return Intake(
         description=survey.description,
         recordings=recordings,
-        trials=_trials_table(identities, used),
+        trials=trials_table(identities, used),
         notices=notices,
-        modules=_modules_table(survey.registers.modules, used_identities),
-        sensors=_sensors_table(survey.registers.sensors, used_identities),
-        sessions=_register_table(survey.registers.sessions, _session_rows(survey, used_identities)),
+        modules=modules_table(survey.registers.modules, used_identities),
+        sensors=sensors_table(survey.registers.sensors, used_identities),
+        sessions=sessions_table(survey.registers.sessions, used_identities),
         identities=identities,
         used=used,
         put_back=put_back,
@@ -397,98 +386,6 @@ def _reasons(
     """Codes of all reasons for which a trial is set aside; none: it is used."""
     copied = [copies[file.file].code] if file.file in copies else []
     return (*file.reasons(key), *copied, *(notices[key].code for notices in across if key in notices))
-
-
-def _recordings_table(
-    survey: Survey, read: Sequence[ReadFile], used: frozenset[TrialKey], notices: Iterable[Notice]
-) -> pd.DataFrame:
-    by_file = {file.file: file for file in read}
-    remarks: dict[str, int] = {}
-    for notice in notices:
-        if notice.file is not None:
-            remarks[notice.file] = remarks.get(notice.file, 0) + 1
-    rows = []
-    for file in survey.files:
-        known = by_file.get(file.file)
-        if known is None:
-            sha256, kind, count = _hash(file) if file.list == "not a recording" else "", "", 0
-            fate: str = file.list
-        else:
-            sha256, kind, count = known.sha256, known.kind, known.rows
-            fate = "used" if any(key_of_trial(trial) in used for trial in known.trials) else "set aside"
-        rows.append((file.file, sha256, file.size_bytes, kind, fate, count, remarks.get(file.file, 0)))
-    return pd.DataFrame(rows, columns=list(RECORDING_COLUMNS))
-
-
-def _hash(file: SurveyedFile) -> str:
-    """Return the hash of a file that is no recording; empty where it cannot be opened."""
-    if file.what in ("link", "no ordinary file", "gone") or file.size_bytes > LARGEST_RECORDING_BYTES:
-        return ""
-    try:
-        with file.location.open("rb") as stream:
-            return hashlib.file_digest(stream, "sha256").hexdigest()
-    except OSError:
-        return ""
-
-
-def _trials_table(identities: dict[TrialKey, TrialIdentity], used: frozenset[TrialKey]) -> pd.DataFrame:
-    rows = [
-        (*(getattr(trial, name) for name in TRIAL_COLUMNS[:-1]), "used" if key in used else "set aside")
-        for key, trial in identities.items()
-    ]
-    return pd.DataFrame(rows, columns=list(TRIAL_COLUMNS))
-
-
-def notices_table(notices: Iterable[Notice]) -> pd.DataFrame:
-    """Return notices as a table: code, weight, file, line, column, what, done, remedy."""
-    rows = [tuple(getattr(notice, name) for name in NOTICE_COLUMNS) for notice in notices]
-    table = pd.DataFrame(rows, columns=list(NOTICE_COLUMNS), dtype=object)
-    return table.astype({"line": "Int64", "column": "Int64"}).assign(file=table["file"].fillna(""))
-
-
-def _register_table(register: Register, extra: Iterable[dict[str, str]]) -> pd.DataFrame:
-    """Return a register as text columns, its known ones first, then its free ones, and rows that it lacks."""
-    free = [column for column in register.columns if column and column not in KNOWN_COLUMNS[register.name]]
-    columns = [*KNOWN_COLUMNS[register.name], *free]
-    rows = [row.values for row in register.rows] + list(extra)
-    return pd.DataFrame([[row.get(c, "") for c in columns] for row in rows], columns=columns, dtype=object)
-
-
-def _modules_table(register: Register, used: Sequence[TrialIdentity]) -> pd.DataFrame:
-    listed = {row.get("module") for row in register.rows}
-    settled = {trial.module: trial for trial in used}
-    table = _register_table(register, [{"module": m} for m in sorted(settled) if m not in listed])
-    for column in ("generation", "batch"):
-        known = {module: getattr(trial, column) for module, trial in settled.items()}
-        table[column] = [known.get(m) or said for m, said in zip(table["module"], table[column], strict=True)]
-    return table
-
-
-def _sensors_table(register: Register, used: Sequence[TrialIdentity]) -> pd.DataFrame:
-    listed = {(row.get("module"), row.get("sensor")) for row in register.rows}
-    unlisted = sorted({(trial.module, trial.sensor) for trial in used} - listed)
-    table = _register_table(register, [{"module": module, "sensor": sensor} for module, sensor in unlisted])
-    for column in ("rest_length", "rest_length_uncertainty"):
-        lengths = [_length(register, index, column) for index in range(len(table))]
-        table[f"{column}_mm"] = pd.Series(lengths, dtype="float64")
-    return table
-
-
-def _length(register: Register, index: int, column: str) -> float:
-    try:
-        return rest_length_mm(register.rows[index] if index < len(register.rows) else None, column)
-    except UnitError:
-        return float("nan")
-
-
-def _session_rows(survey: Survey, used: Sequence[TrialIdentity]) -> list[dict[str, str]]:
-    listed = {(row.get("session"), row.get("module")) for row in survey.registers.sessions.rows}
-    seen = sorted({(trial.session, trial.module) for trial in used if trial.session})
-    return [
-        {"session": session, "module": module}
-        for session, module in seen
-        if (session, module) not in listed and (session, "") not in listed
-    ]
 
 
 def _count(

@@ -80,7 +80,8 @@ LONG_ID = 64
 """Characters above which an id is noted as long."""
 
 FATE_SET_ASIDE = re.compile(
-    r"set.aside|dead|before.test|not.tested|unusable|broken|torn|short|open.circuit|excluded|discarded|scrap",
+    r"set.aside|\bdead\b|before.test|not.tested|unusable|broken|torn|short.?(?:ed|circuit)|open.circuit"
+    r"|excluded|discarded|scrapped",
     re.IGNORECASE,
 )
 """Words of a ``fate`` column that leave a module or sensor out of use; ``failed`` alone (later) does not."""
@@ -195,15 +196,16 @@ class Registers:
         return (self.modules, self.sensors, self.sessions, self.trials)
 
 
+def plain_path(text: str) -> str:
+    """Return a path from the campaign folder in the one form in which paths are compared."""
+    return unicodedata.normalize("NFC", text.replace("\\", "/")).removeprefix("./")
+
+
 def key_of(name: str, values: Mapping[str, str]) -> tuple[str, ...]:
     """Return what names a row of register *name*: its required columns, and the module of a session."""
     columns = ("session", "module") if name == "sessions" else REGISTERS[name]
     key = tuple(values.get(column, "") for column in columns)
-    return (
-        tuple(unicodedata.normalize("NFC", part.replace("\\", "/")) for part in key)
-        if name == "trials"
-        else key
-    )
+    return (plain_path(key[0]),) if name == "trials" else key
 
 
 def read_registers(folder: Path) -> Registers:

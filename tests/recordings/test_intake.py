@@ -12,17 +12,8 @@ import numpy as np
 import pytest
 
 from campaign.notices import NOTICE_CODES
-from campaign.recordings.intake import (
-    BATCH_FILES,
-    NOTICE_COLUMNS,
-    RECORDING_COLUMNS,
-    TRIAL_COLUMNS,
-    Intake,
-    NothingUsable,
-    inspect_folder,
-    notices_table,
-    run_intake,
-)
+from campaign.recordings.intake import BATCH_FILES, Intake, NothingUsable, inspect_folder, run_intake
+from campaign.recordings.intake_tables import NOTICE_COLUMNS, RECORDING_COLUMNS, TRIAL_COLUMNS, notices_table
 from campaign.recordings.recording import Trial
 
 CampaignMaker = Callable[..., Path]

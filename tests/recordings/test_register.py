@@ -10,6 +10,7 @@ from hypothesis import strategies as st
 
 from campaign.notices import Notice
 from campaign.recordings.register import (
+    FATE_SET_ASIDE,
     Register,
     key_of,
     read_register,
@@ -193,7 +194,25 @@ def test_a_session_may_be_named_alike_in_two_modules() -> None:
 
 
 def test_paths_of_trials_are_compared_in_one_form() -> None:
-    assert key_of("trials", {"file": "trials\\e\u0301.csv"}) == ("trials/\u00e9.csv",)
+    assert key_of("trials", {"file": ".\\trials\\e\u0301.csv"}) == ("trials/\u00e9.csv",)
+
+
+@pytest.mark.parametrize(
+    ("fate", "aside"),
+    [
+        ("", False),
+        ("ok", False),
+        ("failed", False),
+        ("tested, short dwell", False),
+        ("failed before testing", True),
+        ("set aside", True),
+        ("dead", True),
+        ("shorted", True),
+        ("Broken lead", True),
+    ],
+)
+def test_fates_that_leave_a_sensor_out(fate: str, aside: bool) -> None:
+    assert (FATE_SET_ASIDE.search(fate) is not None) == aside
 
 
 @given(st.binary(max_size=300))
