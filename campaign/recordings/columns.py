@@ -26,6 +26,7 @@ from campaign.units import (
     UnitError,
     find_unit,
     looks_like_timestamp,
+    nearest_spelling,
     split_header,
 )
 
@@ -348,7 +349,7 @@ class _Planner:
             self.columns.append(ColumnPlan(position, header, header.strip().casefold(), content="identity"))
             return
         quantities = usual_quantities(split_header(header))
-        if not quantities or served & set(quantities):
+        if not quantities or served & set(quantities) or not _may_be_a_unit(split_header(header), quantities):
             self.extra.append((position, header))
             return
         unit = self.unit_in_file(position, None)
@@ -479,6 +480,13 @@ class _Planner:
         for column in moved:
             what = f"the description adds {column.offset_mm:g} mm to {self.called(column)}"
             self.note("converted", column.position, what, "added")
+
+
+def _may_be_a_unit(parts: HeaderParts, quantities: tuple[str, ...]) -> bool:
+    """Whether an unmarked end of a header is a unit of the quantity: the end of ``pressure_min`` is none."""
+    if parts.unit is None or parts.marked:
+        return True
+    return any(nearest_spelling(parts.unit, QUANTITY_FAMILIES[quantity]) for quantity in quantities)
 
 
 def _takes(quantity: str, unit: str) -> bool:

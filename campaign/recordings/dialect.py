@@ -30,6 +30,10 @@ _LOOSE_NUMBER = re.compile(
     r"[ \t]*[+-]?(?:[0-9]{1,3}(?:[.,][0-9]{3})+(?:[.,][0-9]*)?|[0-9]+(?:[.,][0-9]*)?|[.,][0-9]+)"
     r"(?:[eE][+-]?[0-9]+)?(?<!,)[ \t]*"
 )
+_PROVES_DECIMAL_COMMA = re.compile(
+    rb"(?<![0-9])0+,[0-9]|[0-9],[0-9]{1,2}(?![0-9])|[0-9],[0-9]{4}|[0-9]{4},[0-9]"
+)
+"""A number whose comma cannot group thousands: 0,5 or 12,34 or 0,1234 or 1234,567."""
 _COMMENT = "#"
 
 
@@ -198,10 +202,8 @@ def find_layout(text: bytes, description: Description, *, by_position: bool) -> 
     lines, table, guess = _looked_over(text, description)
     layout = replace(_arranged(lines, table, guess, description, by_position), sample=_sample(guess))
     layout = replace(layout, decimal=description.decimal or _decimal_sign(guess, text, layout))
-    start = _offset_of_line(text, layout.first_row_line)
-    return replace(
-        layout, body_start=start, notices=(*layout.notices, *_dialect_notices(layout, description))
-    )
+    layout = replace(layout, body_start=_offset_of_line(text, layout.first_row_line))
+    return replace(layout, notices=(*layout.notices, *_dialect_notices(layout, description, text)))
 
 
 def _sample(guess: _Guess) -> tuple[tuple[str, ...], ...]:
@@ -212,7 +214,10 @@ def _looked_over(text: bytes, description: Description) -> tuple[list[str], list
     """Return the lines at the start, the indices of those that are no comments, and how they are best cut."""
     for size, most in HEADS:
         lines = _head_lines(text, size, most, description.header_row)
-        of_table = (i for i in range((description.header_row or 1) - 1, len(lines)) if _is_of_table(lines[i]))
+        pinned = (description.header_row or 0) - 1
+        if 0 <= pinned < len(lines):
+            lines[pinned] = _uncommented(lines[pinned])
+        of_table = (i for i in range(max(pinned, 0), len(lines)) if _is_of_table(lines[i]))
         table = list(islice(of_table, most))
         guess = _best_guess([lines[i] for i in table], description.separator)
         if len(text) <= size or sum(row.is_row for row in guess.rows) >= ENOUGH_ROWS:
@@ -284,6 +289,12 @@ def _arranged(
     first = next((i for i, row in rows.items() if row.is_row and len(row) == guess.fields), None)
     names = _header_place(rows, first, guess, description.header_row)
     bare = Layout(guess.separator, ".", None, 1, None, guess.fields, False, 1, 0, {})
+    if names is None and description.header_row is not None:
+        what = f"line {description.header_row}, which the description pins as the header, is empty or missing"
+        notice = set_aside(
+            "no-header", description.header_row, None, what, "correct header_row in [recordings]"
+        )
+        return replace(bare, notices=(notice,))
     if names is None:
         return _without_header(lines, first, rows, bare, by_position)
     header_at, units_at = names
@@ -341,33 +352,37 @@ def _without_header(
         code, what = ("no-header", "the file holds no table, only comments or words")
         notice = set_aside(code, max(1, len(lines)), None, what, "export the recording again")
         return replace(_with_preamble(bare, lines, len(lines)), notices=(notice,))
-    comments = [i for i in range(first) if lines[i].lstrip().startswith(_COMMENT)]
-    named = comments[-1] if comments else None
+    named = _named_in_comment(lines, first, bare)
     if named is not None:
-        names = _split_leniently(lines[named].lstrip().lstrip(_COMMENT).strip(), bare.separator)
-        if len(names) > 1 and len(names) == bare.fields and not any(map(is_numeric_field, names)):
-            layout = replace(bare, header=tuple(names), header_line=named + 1, first_row_line=first + 1)
-            layout = _with_preamble(layout, lines, named)
-            note = noted(
-                "header-in-comment",
-                named + 1,
-                None,
-                "the last comment line names the columns",
-                "taken as the header",
-            )
-            return replace(_with_trailing(layout, list(rows.values())), notices=(note, *layout.notices))
+        return _with_trailing(named, list(rows.values()))
     layout = replace(bare, header_line=first + 1, first_row_line=first + 1)
     layout = _with_trailing(_with_preamble(layout, lines, first), [r for r in rows.values() if r.is_row])
     if by_position:
         return layout
-    notice = set_aside(
-        "no-header",
-        first + 1,
-        None,
-        "the first line of the table holds numbers, no names",
-        "name the columns by position: [[columns]] position = 1, quantity = …",
+    what = "the first line of the table holds numbers, no names"
+    remedy = "name the columns by position: [[columns]] position = 1, quantity = …"
+    return replace(layout, notices=(*layout.notices, set_aside("no-header", first + 1, None, what, remedy)))
+
+
+def _named_in_comment(lines: Sequence[str], first: int, bare: Layout) -> Layout | None:
+    """Return the layout whose header is the last comment before the first row, if that names columns."""
+    comments = [i for i in range(first) if lines[i].lstrip().startswith(_COMMENT)]
+    if not comments:
+        return None
+    names = _split_leniently(_uncommented(lines[comments[-1]]), bare.separator)
+    if len(names) < 2 or len(names) != bare.fields or any(map(is_numeric_field, names)):
+        return None
+    line = comments[-1] + 1
+    layout = replace(bare, header=tuple(names), header_line=line, first_row_line=first + 1)
+    layout = _with_preamble(layout, lines, comments[-1])
+    note = noted(
+        "header-in-comment", line, None, "the last comment line names the columns", "taken as the header"
     )
-    return replace(layout, notices=(*layout.notices, notice))
+    return replace(layout, notices=(note, *layout.notices))
+
+
+def _uncommented(line: str) -> str:
+    return line.strip().lstrip(_COMMENT).strip()
 
 
 def _with_trailing(layout: Layout, rows: Sequence[_Cut]) -> Layout:
@@ -422,7 +437,7 @@ def _with_preamble(layout: Layout, lines: Sequence[str], end: int) -> Layout:
 
 
 def _key_and_value(line: str, separator: str) -> tuple[str, str]:
-    text = line.strip().lstrip(_COMMENT).strip()
+    text = _uncommented(line)
     marks = [mark for mark in (":", "=", separator) if mark.strip() and mark in text]
     if not marks:
         return "", ""
@@ -434,18 +449,18 @@ def _key_and_value(line: str, separator: str) -> tuple[str, str]:
 _SEPARATOR_WORDS = {",": "comma", ";": "semicolon", "\t": "tab", " ": "blanks"}
 
 
-def _dialect_notices(layout: Layout, description: Description) -> tuple[Notice, ...]:
+def _dialect_notices(layout: Layout, description: Description, text: bytes) -> tuple[Notice, ...]:
     """Remark on a separator or decimal sign that was found out and is not the usual one."""
     unusual = layout.separator != "," and description.separator is None
     comma = layout.decimal == "," and description.decimal is None
     if not layout.readable or not (unusual or comma):
         return ()
+    if comma and _PROVES_DECIMAL_COMMA.search(text, layout.body_start) is None:
+        what = "every comma in a number may mark the decimals or group thousands (1,234)"
+        remedy = 'say decimal = "," in [recordings], or thousands = "," in [[columns]]'
+        return (set_aside("dialect", layout.first_row_line, None, what, remedy),)
     line = layout.header_line if unusual else layout.first_row_line
-    parts = (
-        [f"fields are separated by {_SEPARATOR_WORDS.get(layout.separator, layout.separator)}"]
-        if unusual
-        else []
-    )
+    parts = [f"fields are separated by {_SEPARATOR_WORDS[layout.separator]}"] if unusual else []
     parts += ["the decimal sign is a comma"] if comma else []
     remedy = "if that is wrong, pin separator and decimal in [recordings]"
     return (noted("dialect", line, None, " and ".join(parts), "read so", remedy),)

@@ -164,12 +164,18 @@ def test_units_rows_serve_rules_and_usual_names():
 
 
 @pytest.mark.parametrize(
-    "header", ["time,capacitance_pF", "time_s,capacitance", "time_kPa,C (pF)", "time_s,C [furlong]"]
+    "header", ["time,capacitance_pF", "time_s,capacitance", "time [kPa],C (pF)", "time_s,C [furlong]"]
 )
 def test_a_missing_or_wrong_unit_sets_aside(header):
     table = plan(header)
     assert not table.readable
     assert {n.code for n in table.notices} == {"unit"}
+
+
+def test_an_unmarked_end_that_is_no_unit_of_the_quantity_makes_another_name():
+    table = plan("time_s,C (pF),pressure_min,force_max,p_MIN")
+    assert codes(table) == [("extra-column", 3)]
+    assert table.notices[0].count == 3
 
 
 def test_timestamps_need_no_unit_and_may_be_declared():

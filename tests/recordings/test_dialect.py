@@ -143,6 +143,25 @@ def test_whole_numbers_leave_the_decimal_sign_to_the_rest_of_the_file():
     assert layout_of("time_s;capacitance_pF\n" + "".join(f"{i};80\n" for i in range(50))).decimal == "."
 
 
+def test_commas_that_may_group_thousands_are_not_guessed():
+    grouped = "time_s;length_mm;capacitance_pF\n" + "".join(
+        f"{i};{40 + i},125;{80 + i},250\n" for i in range(9)
+    )
+    [notice] = layout_of(grouped).notices
+    assert (notice.code, notice.weight, notice.line) == ("dialect", "set aside", 2)
+    assert layout_of(grouped, decimal=",").decimal == ","
+    for proof in ("0,125", "1,25", "1,1250", "1234,125"):
+        assert layout_of(grouped + f"9;49,125;{proof}\n").readable
+
+
+def test_a_pinned_header_may_be_a_comment_and_must_be_there():
+    text = "# unit: mm\n# " + HEADER + "\n# logged by hand\n" + ROWS
+    layout = layout_of(text, header_row=2)
+    assert (layout.header, layout.first_row_line) == (tuple(HEADER.split(",")), 3)
+    [notice] = layout_of(HEADER + "\n" + ROWS, header_row=90).notices
+    assert (notice.code, notice.line) == ("no-header", 90)
+
+
 def test_what_the_description_pins_is_kept_to_without_a_remark():
     text = (HEADER + "\n" + ROWS).replace(",", ";").replace(".", ",")
     layout = layout_of(text, separator=";", decimal=",")
