@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import sys
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -40,9 +40,9 @@ class CampaignRead:
     intake
         Every file with its fate; notices of the trial stage included.
     readings
-        Plateaus of the staircases that are used.
+        Plateaus of the staircases; those that the registers set aside are there and marked as not used.
     readings_with_put_back
-        The same with those that the registers set aside; ``None`` where there are none.
+        The same with those that the registers set aside marked as used; ``None`` where there are none.
     """
 
     intake: Intake
@@ -108,8 +108,9 @@ def read_campaign(folder: Path, output: Path | None = None, progress: Progress |
     intake, features = run_intake(folder, reduce_trial, output, progress, keep_put_back=True)
     staircases = {key: found for key, found in features.items() if found is not None}
     notices = [notice for key in staircases if key in intake.used for notice in staircases[key].notices]
-    readings = _readings({key: staircases[key] for key in staircases if key in intake.used})
-    put_back = _readings(staircases) if intake.put_back & set(staircases) else None
+    aside = intake.put_back & staircases.keys()
+    readings = _readings(staircases, aside)
+    put_back = _readings(staircases) if aside else None
     return CampaignRead(with_notices(intake, [*notices, *readings.notices]), readings, put_back)
 
 
@@ -118,8 +119,16 @@ def reduce_trial(trial: Trial) -> StaircaseFeatures | None:
     return readings_of_staircase(trial) if trial.identity.kind == "staircase" else None
 
 
-def _readings(features: Mapping[TrialKey, StaircaseFeatures]) -> Readings:
-    return collect_readings([found.readings for found in features.values()])
+def _readings(
+    features: Mapping[TrialKey, StaircaseFeatures], aside: Collection[TrialKey] = frozenset()
+) -> Readings:
+    """Put readings together; those of trials *aside* stay in the table and are not used."""
+    return collect_readings(
+        [
+            found.readings.assign(used=False) if key in aside else found.readings
+            for key, found in features.items()
+        ]
+    )
 
 
 def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignResults:
