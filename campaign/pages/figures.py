@@ -28,7 +28,7 @@ Layout = dict[str, Any]
 
 LARGEST_NUMBER_OF_MARKERS = 2000
 LARGEST_NUMBER_OF_LINE_POINTS = 10_000
-WIDTH = 760
+WIDTH = 864
 """Width in px that static pictures are drawn for."""
 
 

@@ -17,7 +17,7 @@ _AXIS: dict[str, Any] = {
     "zeroline": False,
     "ticks": "",
     "tickfont": {"size": 12, "color": palette.SOFT},
-    "title": {"font": {"size": 13, "color": palette.INK}},
+    "title": {"font": {"size": 13, "color": palette.INK}, "standoff": 12},
     "automargin": False,
 }
 

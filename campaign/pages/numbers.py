@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from decimal import ROUND_HALF_EVEN, Decimal
+from decimal import ROUND_HALF_EVEN, Context, Decimal
 
 NOT_IDENTIFIABLE = "not identifiable from this design"
 """What stands where the design supports no number."""
@@ -18,6 +18,7 @@ NARROW_SPACE = "\u202f"
 MINUS = "\u2212"
 FIGURE_SPACE = "\u2007"
 PUNCTUATION_SPACE = "\u2008"
+_EVERY_DIGIT = Context(prec=700)
 _SUPERSCRIPTS = str.maketrans("0123456789-", "⁰¹²³⁴⁵⁶⁷⁸⁹⁻")
 
 
@@ -33,7 +34,9 @@ def measured(value: float, uncertainty: float, unit: str = "", *, missing: str =
     """
     if not (math.isfinite(value) and math.isfinite(uncertainty)):
         return missing
-    place = _last_place(uncertainty, 2) if uncertainty > 0 else _last_place(value, 6)
+    if uncertainty == 0:
+        return _with_unit(f"{_trimmed(significant(value, 6))} ± 0", unit)
+    place = _last_place(uncertainty, 2)
     power = _shared_power(max(abs(value), uncertainty), place)
     first, second = (_at_place(number, place, power) for number in (value, uncertainty))
     if power:
@@ -68,12 +71,31 @@ def limits(low: float, high: float, unit: str = "", *, missing: str = NOT_IDENTI
 
 
 def span(low: float, high: float, unit: str = "", *, digits: int = 3, missing: str = "not recorded") -> str:
-    """Return ``0–40 %``: the range that something covers, each end to *digits* significant digits."""
+    """Return ``0–40 %``: the range that something covers, to *digits* digits of its width."""
     if not (math.isfinite(low) and math.isfinite(high)):
         return missing
-    ends = [_trimmed(significant(v, digits)) for v in (low, high)]
+    place = _last_place(high - low, digits) if high != low else _last_place(high, digits)
+    power = _shared_power(max(abs(low), abs(high)), place)
+    ends = [_trimmed(_at_place(v, place, power)) for v in (low, high)]
     joint = " to " if ends[0].startswith(MINUS) or ends[1].startswith(MINUS) else "–"
-    return _with_unit(ends[0] if ends[0] == ends[1] else joint.join(ends), unit)
+    return _with_unit((ends[0] if ends[0] == ends[1] else joint.join(ends)) + _times_power(power), unit)
+
+
+def covered(low: float, high: float, unit: str = "", *, missing: str = "not recorded") -> str:
+    """Return ``0–40 %``: a range that was visited, each end to a hundredth of its width."""
+    if not (math.isfinite(low) and math.isfinite(high)):
+        return missing
+    if high == low:
+        return significant(low, 3, unit)
+    first, last = (rounded_to(end, high - low) for end in (low, high))
+    return span(first, last, unit, digits=6)
+
+
+def rounded_to(value: float, scale: float) -> float:
+    """Return *value* rounded to two places below *scale*'s leading digit: noise about zero becomes zero."""
+    if not (math.isfinite(value) and scale > 0):
+        return value
+    return round(float(value), 2 - math.floor(math.log10(scale))) + 0.0
 
 
 def significant(value: float, digits: int = 3, unit: str = "", *, missing: str = NOT_IDENTIFIABLE) -> str:
@@ -141,10 +163,13 @@ def _last_place(value: float, digits: int) -> int:
     """Return the power of ten of the last of *digits* significant digits, after rounding carried over."""
     if value == 0:
         return 0
-    number = Decimal(repr(abs(float(value))))
-    place = number.adjusted() - digits + 1
-    rounded = number.quantize(Decimal(1).scaleb(place), rounding=ROUND_HALF_EVEN)
-    return rounded.adjusted() - digits + 1
+    place = Decimal(repr(abs(float(value)))).adjusted() - digits + 1
+    return _rounded(abs(value), place).adjusted() - digits + 1
+
+
+def _rounded(value: float, place: int) -> Decimal:
+    """Return *value*, in its shortest decimal form, rounded to the power of ten *place*, halves to even."""
+    return Decimal(repr(float(value))).quantize(Decimal(1).scaleb(place), ROUND_HALF_EVEN, _EVERY_DIGIT)
 
 
 def _place_of_interval(estimate: float, low: float, high: float) -> int:
@@ -163,9 +188,8 @@ def _shared_power(largest: float, place: int) -> int:
 def _at_place(value: float, place: int, power: int) -> str:
     if math.isinf(value):
         return "∞" if value > 0 else f"{MINUS}∞"
-    number = Decimal(repr(float(value))).quantize(Decimal(1).scaleb(place), rounding=ROUND_HALF_EVEN)
-    number = number.scaleb(-power)
-    sign = MINUS if number < 0 else ""
+    number = _rounded(value, place).scaleb(-power, _EVERY_DIGIT)
+    sign = MINUS if number < 0 else ""  # a zero that came from a small negative number has no sign
     return sign + _grouped(f"{abs(number):f}")
 
 

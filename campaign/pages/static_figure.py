@@ -108,8 +108,8 @@ def _place(value: float | None, axis: Layout, start: float, end: float) -> float
 
 
 def _axes(panel: Panel) -> str:
-    x_ticks = _ticks(panel.x_axis, abs(panel.right - panel.left) / 110)
-    y_ticks = _ticks(panel.y_axis, abs(panel.bottom - panel.top) / 60)
+    x_ticks = _ticks(panel.x_axis, abs(panel.right - panel.left) / 90)
+    y_ticks = _ticks(panel.y_axis, abs(panel.bottom - panel.top) / 42)
     xs = [(_from_axis(v, panel.x_axis, panel.left, panel.right), text) for v, text in x_ticks]
     ys = [(_from_axis(v, panel.y_axis, panel.bottom, panel.top), text) for v, text in y_ticks]
     grid = [
@@ -152,7 +152,7 @@ def _ticks(axis: Layout, about: float) -> list[tuple[float, str]]:
         return [(p, t) for p, t in zip(places, texts, strict=True) if low - 1e-9 <= p <= high + 1e-9]
     if axis.get("type") == "log":
         return logarithmic_ticks(low, high)
-    return linear_ticks(low, high, max(2, round(about)))
+    return linear_ticks(low, high, max(3, round(about)))
 
 
 def _from_axis(value: float, axis: Layout, start: float, end: float) -> float:
