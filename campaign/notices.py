@@ -182,6 +182,8 @@ NOTICE_CODES: dict[str, str] = {
     "missing-values": "rows without a reference or a signal are left out, counted",
     "plateau-without-signal": "a plateau holds no signal at all and gives no reading",
     "not-settled": "the signal still moves over the averaged part of a plateau; the reading is kept and marked",
+    "no-line": "a sensor has readings at too few levels in every run: no line is fitted",
+    "outlying-reading": "a reading lies further from its sensor's line than chance allows; it is kept",
     "reference-not-common": "a trial does not have the reference quantity that the campaign is analysed in",
     # Bytes, encodings and line ends of one file
     "bom": "the file starts with a byte order mark; the mark is taken off, the first name is kept whole",

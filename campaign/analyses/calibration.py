@@ -8,7 +8,7 @@ The ordinary least-squares line is given for comparison and never carries an int
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import pandas as pd
 
@@ -24,8 +24,13 @@ from campaign.analyses.calibration_labels import (
     record_conditions,
     shared_reference,
 )
-from campaign.analyses.calibration_lines import BranchLine, branch_lines, run_lines_frame
+from campaign.analyses.calibration_lines import (
+    BranchLine,
+    branch_lines,
+    run_lines_frame,
+)
 from campaign.analyses.calibration_spread import hysteresis_frame, repeatability_frame
+from campaign.analyses.length_lines import LengthLine, length_line
 from campaign.analyses.sensor_lines import sensor_lines_frame
 from campaign.analyses.used_readings import REST, UsedReadings, used_readings
 from campaign.methods.calibration_line import t_quantile
@@ -58,6 +63,10 @@ class CalibrationRecord:
         ``"this sensor's runs"``, ``"pooled over sensors"`` or ``"run-to-run error unknown"``.
     signal_low, signal_high, x_low, x_high, zero_signal
         Calibrated range, and the line's signal at x = 0.
+    length_line
+        The fields from ``intercept`` to ``run_cov`` of the line against length in mm, by the same names;
+        empty where the rest length is not known. Put in place of those of the record they read lengths: the
+        rest length cancels where lengths are recorded, so a length is never the strain multiplied.
     """
 
     generation: str
@@ -93,6 +102,7 @@ class CalibrationRecord:
     date: str
     files: tuple[str, ...]
     sha256: tuple[str, ...]
+    length_line: dict[str, float] = field(default_factory=dict)
 
     @property
     def reading_model(self) -> ReadingModel:
@@ -111,6 +121,11 @@ class CalibrationRecord:
             self.residual_variance,
             self.t_quantile_975,
         )
+
+    @property
+    def length_model(self) -> ReadingModel | None:
+        """The model that reads a length in mm from a signal; None where the rest length is not known."""
+        return replace(self, **self.length_line).reading_model if self.length_line else None  # type: ignore[arg-type]
 
 
 @dataclass(frozen=True)
@@ -238,7 +253,7 @@ def _record(
         line.lack_of_fit_variance,
         line.direction_half_width,
         line.effective_degrees,
-        t_quantile(0.975, line.effective_degrees) if line.effective_degrees > 0 else float("nan"),
+        _quantile(line.effective_degrees),
         line.variance_source,
         ends[0],
         ends[1],
@@ -252,7 +267,31 @@ def _record(
         dates[-1] if dates else (description.last_day or description.date),
         files,
         tuple(file_hashes.get(file, "") for file in files),
+        _length_fields(length_line(used, line, reference, description)),
     )
+
+
+def _quantile(degrees: float) -> float:
+    """The two-sided 95 % quantile of Student's t; NaN without degrees of freedom."""
+    return t_quantile(0.975, degrees) if degrees > 0 else float("nan")
+
+
+def _length_fields(line: LengthLine | None) -> dict[str, float]:
+    """The line against length by the names of the record's fields."""
+    if line is None:
+        return {}
+    return {
+        "intercept": float(line.coefficients[0]),
+        "slope": float(line.coefficients[1]),
+        "var_intercept": float(line.covariance[0, 0]),
+        "var_slope": float(line.covariance[1, 1]),
+        "cov_intercept_slope": float(line.covariance[0, 1]),
+        "run_var_intercept": float(line.run_covariance[0, 0]),
+        "run_var_slope": float(line.run_covariance[1, 1]),
+        "run_cov": float(line.run_covariance[0, 1]),
+        "degrees_of_freedom": line.effective_degrees,
+        "t_quantile_975": _quantile(line.effective_degrees),
+    }
 
 
 def _without_line(used: UsedReadings, lines: tuple[BranchLine, ...]) -> tuple[Notice, ...]:

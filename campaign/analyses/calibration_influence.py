@@ -18,6 +18,9 @@ FloatArray = npt.NDArray[np.float64]
 
 INFLUENCE_COLUMNS = ("fitted", "residual", "studentised", "leverage", "cooks_distance")
 
+EXACT_SHARE = 1e-12
+"""Residuals below this share of the signal are rounding: exact data have no outlying readings."""
+
 OUTLYING_RISK = 0.05
 """Risk, over all readings of a sensor, of marking one that is not outlying (Bonferroni)."""
 
@@ -71,7 +74,8 @@ def influence_of_readings(
 def _influence(fit: RegressionResults) -> FloatArray:
     """Externally studentised residuals, leverages and Cook's distances, shape (readings, 3)."""
     degrees = int(fit.df_resid) - 1
-    if degrees < 1 or fit.mse_resid <= 0.0:
+    rounding = (EXACT_SHARE * float(np.max(np.abs(fit.model.endog)))) ** 2
+    if degrees < 1 or fit.mse_resid <= rounding:
         return np.full((int(fit.nobs), 3), np.nan)
     influence = OLSInfluence(fit)
     studentised = externally_studentised(influence.resid_studentized_internal, degrees)
@@ -85,7 +89,7 @@ def externally_studentised(internal: FloatArray, degrees: int) -> FloatArray:
     Regression (1982), section 2.2).
     """
     left = degrees + 1.0 - internal**2
-    external = np.full(len(internal), np.inf) * np.sign(internal)
+    external = np.copysign(np.inf, internal)
     return np.asarray(
         np.divide(internal * np.sqrt(degrees), np.sqrt(np.abs(left)), out=external, where=left > 0)
     )

@@ -10,6 +10,7 @@ import pandas as pd
 from scipy import special
 
 from campaign.analyses.level_cells import LevelCells, level_cells
+from campaign.analyses.reference_covariance import shared_covariance
 from campaign.analyses.used_readings import FALLING, RISING, TURNING, UsedReadings
 from campaign.methods.calibration_line import (
     GroupLines,
@@ -21,7 +22,6 @@ from campaign.methods.calibration_line import (
     run_covariance,
     scatter_of_runs,
 )
-from campaign.methods.reference_uncertainty import covariance_of_line, shared_sources
 from campaign.methods.step_hysteresis import StepHysteresis, step_hysteresis
 from campaign.recordings.description import Description
 from campaign.recordings.recording import ReferenceQuantity
@@ -40,9 +40,6 @@ ENOUGH_OWN_DEGREES = 10
 
 HETEROGENEITY_RISK = 0.001
 """A sensor whose runs scatter more than the pool's by an F test at this risk keeps its own covariance."""
-
-DIRECTION_SIGNS = np.array([1.0, -1.0, 0.0])
-"""Of rising, falling and turning."""
 
 REACHED_SHARE = 0.98
 """The rated range counts as reached from this share of it on."""
@@ -67,8 +64,8 @@ class BranchLine:
     covariance, run_covariance
         Shape (2, 2): of (intercept, slope), reference uncertainty included, and of a new run's line about
         it; NaN with one run and nothing to pool with.
-    fit_covariance
-        Shape (2, 2): ``covariance`` before the uncertainty of the reference is added.
+    fit_covariance, fit_variance
+        ``covariance`` before the uncertainty of the reference is added, and what it makes at the mean x.
     residual_sd
         SD within runs about the runs' own lines.
     residual_variance, lack_of_fit_variance
@@ -101,6 +98,7 @@ class BranchLine:
     slope: float
     covariance: FloatArray
     fit_covariance: FloatArray
+    fit_variance: float
     run_covariance: FloatArray
     residual_sd: float
     residual_variance: float
@@ -396,8 +394,8 @@ def _branch_line(
     slope = float(coefficients[1])
     known = source != UNKNOWN
     fit_covariance = covariance if known else np.full((2, 2), np.nan)
-    shared = _shared_covariance(used, fit.rows, slope, reference, description)
     rows = fit.rows
+    shared = shared_covariance(used, rows, reference.name, used.x[rows], slope, description)
     cells = level_cells(
         used.x[rows], used.signal[rows], used.level[rows], used.direction[rows], used.run[rows], slope
     )
@@ -418,6 +416,7 @@ def _branch_line(
         slope,
         fit_covariance + shared,
         fit_covariance,
+        float(combined.covariance[0, 0]) if known else float("nan"),
         back @ between @ back.T,
         fit.residual_sd,
         fit.noise,
@@ -431,16 +430,23 @@ def _branch_line(
         full_scale_output,
         full_scale,
     )
-    return replace(line, effective_degrees=_effective_degrees(line, fit)) if known else line
+    degrees = effective_degrees(line, fit.centre, line.covariance, line.run_covariance)
+    return replace(line, effective_degrees=degrees)
 
 
-def _effective_degrees(line: BranchLine, fit: _RunFits) -> float:
-    """Welch–Satterthwaite degrees of freedom, at the mean x, of all terms that averaging readings leaves."""
-    place = np.array([1.0, fit.centre])
-    of_runs = float(place @ (line.fit_covariance + line.run_covariance) @ place)
+def effective_degrees(
+    line: BranchLine, x: float, covariance: FloatArray, run_covariance: FloatArray
+) -> float:
+    """Return the Welch–Satterthwaite degrees of freedom at *x* of all terms that averaging readings leaves.
+
+    ``covariance`` and ``run_covariance`` are those of the line in the units of *x*, reference uncertainty
+    (of no limited degrees of freedom) included. NaN where nothing is known of runs.
+    """
+    place = np.array([1.0, x])
+    of_reference = float(place @ covariance @ place) - line.fit_variance
+    of_runs = line.fit_variance + float(place @ run_covariance @ place)
     lack = line.lack_of_fit_variance
-    total = float(place @ (line.covariance + line.run_covariance) @ place) + lack
-    total += line.direction_half_width**2
+    total = of_runs + of_reference + lack + line.direction_half_width**2
     spent = of_runs**2 / line.degrees_of_freedom
     if line.lack_of_fit is not None:
         spent += lack**2 / line.lack_of_fit.first_degrees
@@ -453,36 +459,6 @@ def _hysteresis(cells: LevelCells, fit: _RunFits) -> StepHysteresis | None:
     if len(levels) == 0:
         return None
     return step_hysteresis(differences, noise_variance=2.0 * fit.noise, noise_degrees=fit.noise_degrees)
-
-
-def _shared_covariance(
-    used: UsedReadings, rows: IntArray, slope: float, reference: ReferenceQuantity, description: Description
-) -> FloatArray:
-    """What the uncertainty of the reference adds to the covariance of intercept and slope."""
-    stated = description.length_reference
-    x = used.x[rows]
-    rest = float(used.column("rest_length_mm", rows[:1])[0])
-    recorded = used.text("reference", int(rows[0]))
-    elongation, length = used.column("elongation_mm", rows), used.column("length_mm", rows)
-    if reference.name == "strain" and not np.isfinite(elongation).all():
-        elongation = x * rest
-    travel = length if recorded == "length" else elongation
-    if (reference.name == "strain" and not np.isfinite(rest)) or not np.isfinite(travel).all():
-        return np.zeros((2, 2))
-    sources = shared_sources(
-        recorded=recorded,
-        x_is_strain=reference.name == "strain",
-        length_mm=length,
-        elongation_mm=elongation,
-        rest_length_mm=rest,
-        direction=DIRECTION_SIGNS[used.direction[rows]],
-        session=pd.factorize(used.table["session"].to_numpy()[rows])[0].astype(np.int64),
-        scale_relative=stated.scale_relative,
-        zero_mm=stated.zero_mm,
-        backlash_mm=stated.backlash_mm,
-        rest_length_uncertainty_mm=float(used.column("rest_length_uncertainty_mm", rows[:1])[0]),
-    )
-    return covariance_of_line(sources, x, slope)
 
 
 def _full_scale(

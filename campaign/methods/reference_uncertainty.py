@@ -36,8 +36,8 @@ class SharedSource:
 
 def shared_sources(
     *,
+    quantity: str,
     recorded: str,
-    x_is_strain: bool,
     length_mm: FloatArray,
     elongation_mm: FloatArray,
     rest_length_mm: float,
@@ -52,14 +52,14 @@ def shared_sources(
 
     Parameters
     ----------
+    quantity
+        What x is: ``"strain"``, ``"elongation"`` or ``"length"``.
     recorded
-        What the stand records: ``"length"``, ``"elongation"`` or ``"strain"``.
-    x_is_strain
-        Whether x is strain (else a length in mm).
+        What the stand records: the same three.
     length_mm, elongation_mm
         Shape (readings,), NaN where unknown; the recorded one (for strain: elongation) must be known.
     rest_length_mm
-        Needed where x is strain.
+        Needed where x is strain, or strain was recorded.
     direction
         Shape (readings,): +1 approached from below, −1 from above, 0 at the turn.
     session
@@ -70,10 +70,10 @@ def shared_sources(
     Returns
     -------
     tuple of SharedSource
-        Only the sources that are stated. dε/dL₀ is −(1 + ε)/L₀ where lengths are recorded and −ε/L₀ where
-        elongations are; none where strain is.
+        Only the sources that are stated and act. dε/dL₀ is −(1 + ε)/L₀ where lengths are recorded and −ε/L₀
+        where elongations are; x that is itself recorded does not depend on the rest length.
     """
-    per_mm = 1.0 / rest_length_mm if x_is_strain else 1.0
+    per_mm = 1.0 / rest_length_mm if quantity == "strain" else 1.0
     travel = length_mm if recorded == "length" else elongation_mm
     sources = []
     if scale_relative > 0:
@@ -82,12 +82,21 @@ def shared_sources(
         codes = np.unique(session, return_inverse=True)[1]
         indicators = (codes[:, None] == np.arange(codes.max() + 1)[None, :]).astype(np.float64)
         sources.append(SharedSource("zero", zero_mm * per_mm * indicators))
-    if rest_length_uncertainty_mm > 0 and x_is_strain and recorded != "strain":
-        lever = -travel / rest_length_mm**2
+    if rest_length_uncertainty_mm > 0 and quantity != recorded:
+        lever = _per_rest_length(quantity, recorded, travel, rest_length_mm)
         sources.append(SharedSource("rest length", (rest_length_uncertainty_mm * lever)[:, None]))
     if backlash_mm > 0:
         sources.append(SharedSource("backlash", (0.5 * backlash_mm * per_mm * direction)[:, None]))
     return tuple(sources)
+
+
+def _per_rest_length(quantity: str, recorded: str, travel: FloatArray, rest: float) -> FloatArray:
+    """Change of x per mm of rest length with what was recorded held fixed, shape (readings,)."""
+    if quantity == "strain":
+        return -travel / rest**2
+    if recorded == "strain":
+        return travel / rest + (quantity == "length")
+    return np.full(len(travel), 1.0 if quantity == "length" else -1.0)
 
 
 def covariance_between_readings(sources: Sequence[SharedSource]) -> FloatArray:

@@ -81,7 +81,7 @@ def sources(**stated):
     )
     return shared_sources(
         recorded=stated.pop("recorded", "length"),
-        x_is_strain=True,
+        quantity="strain",
         length_mm=REST * (1 + STRAIN),
         elongation_mm=REST * STRAIN,
         rest_length_mm=REST,
@@ -117,7 +117,7 @@ def test_repetition_does_not_reduce_a_shared_error():
     once = covariance_of_line(sources(**stated), STRAIN, 80.0)
     found = shared_sources(
         recorded="length",
-        x_is_strain=True,
+        quantity="strain",
         length_mm=np.tile(REST * (1 + STRAIN), 5),
         elongation_mm=np.tile(REST * STRAIN, 5),
         rest_length_mm=REST,
