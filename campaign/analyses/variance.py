@@ -362,8 +362,10 @@ def _fit_all(
 
 
 def _limits_at(model: VarianceModel, what: str) -> tuple[str, ...]:
-    """Where limits are found: everywhere for a generation's signal, else at mid range."""
-    return (*PLACES, "slope") if what == SIGNAL and model.generation != "all" else ("mid",)
+    """Where limits are found: everywhere for a generation's signal, at mid range for its ratio and for all."""
+    if model.generation == "all":
+        return ("mid",) if what == SIGNAL else ()
+    return (*PLACES, "slope") if what == SIGNAL else ("mid",)
 
 
 def _fallback_notice(fit: GenerationFit, what: str) -> Notice:
