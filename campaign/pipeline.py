@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import sys
-from collections.abc import Collection, Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
 from pathlib import Path
 
@@ -108,9 +108,9 @@ def read_campaign(folder: Path, output: Path | None = None, progress: Progress |
     intake, features = run_intake(folder, reduce_trial, output, progress, keep_put_back=True)
     staircases = {key: found for key, found in features.items() if found is not None}
     notices = [notice for key in staircases if key in intake.used for notice in staircases[key].notices]
-    aside = intake.put_back & staircases.keys()
-    readings = _readings(staircases, aside)
-    put_back = _readings(staircases) if aside else None
+    sensors_aside = sensors_set_aside(intake)
+    readings = _readings(intake, staircases, lambda key: key in intake.used, sensors_aside)
+    put_back = _readings(intake, staircases, lambda _: True) if intake.put_back & staircases.keys() else None
     return CampaignRead(with_notices(intake, [*notices, *readings.notices]), readings, put_back)
 
 
@@ -119,16 +119,30 @@ def reduce_trial(trial: Trial) -> StaircaseFeatures | None:
     return readings_of_staircase(trial) if trial.identity.kind == "staircase" else None
 
 
+def sensors_set_aside(intake: Intake) -> frozenset[tuple[str, str]]:
+    """Return (module, sensor) of the sensors of which no trial is used although sound ones were read."""
+    used = {_sensor(intake, key) for key in intake.used}
+    return frozenset(_sensor(intake, key) for key in intake.put_back) - used
+
+
+def _sensor(intake: Intake, key: TrialKey) -> tuple[str, str]:
+    identity = intake.identities[key]
+    return identity.module, identity.sensor
+
+
 def _readings(
-    features: Mapping[TrialKey, StaircaseFeatures], aside: Collection[TrialKey] = frozenset()
+    intake: Intake,
+    staircases: Mapping[TrialKey, StaircaseFeatures],
+    wanted: Callable[[TrialKey], bool],
+    sensors_aside: frozenset[tuple[str, str]] = frozenset(),
 ) -> Readings:
-    """Put readings together; those of trials *aside* stay in the table and are not used."""
-    return collect_readings(
-        [
-            found.readings.assign(used=False) if key in aside else found.readings
-            for key, found in features.items()
-        ]
-    )
+    """Put the readings of wanted trials together; those of sensors aside stay in the table and are not used."""
+    parts = [
+        found.readings
+        for key, found in staircases.items()
+        if wanted(key) or _sensor(intake, key) in sensors_aside
+    ]
+    return collect_readings(parts, sensors_aside)
 
 
 def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignResults:
