@@ -1,7 +1,7 @@
 """How long the command line takes to answer, beside an interpreter that does nothing.
 
-Run ``python benchmarks/command_line.py``: the shortest of some cold starts of each, and their ratio. The shortest
-is taken because other work on the machine only ever adds to it.
+Run ``python benchmarks/command_line.py``: the shortest of some cold starts of each, and their ratio.
+The shortest is taken because other work on the machine only ever adds to it.
 """
 
 from __future__ import annotations
