@@ -37,6 +37,9 @@ if TYPE_CHECKING:
 ENOUGH_FACTOR = 1.1
 """Without a limit an effort counts as enough up to this multiple of the SD with a sensor's own line."""
 
+OWN_LINE = ("sensor", "rezero_additive", "rezero_ratio")
+"""Efforts that calibrate each sensor."""
+
 AVERAGED = 10
 """Readings of one run in the mean that is quoted beside a single reading."""
 
@@ -92,6 +95,7 @@ class Effort:
 class EnoughFinding:
     """Which calibration effort is enough for one generation.
 
+    ``sparing`` is the best of all efforts that spare calibrating each sensor, ``None`` where there is none;
     ``enough`` is the least effort whose expanded uncertainty keeps ``limit`` (NaN: no limit; then the least
     effort within :data:`ENOUGH_FACTOR` of a sensor's own line); ``None`` where not even the own line keeps
     it.
@@ -100,7 +104,7 @@ class EnoughFinding:
     generation: str
     limit: float
     enough: Effort | None
-    least: Effort
+    sparing: Effort | None
     own: Effort
     efforts: tuple[Effort, ...]
 
@@ -315,7 +319,7 @@ def _effort_findings(effort: CalibrationEffort, limits: Limits) -> list[Finding]
         for generation, rows in effort.table.groupby("generation", sort=True)
         if (fact := choose_effort(str(generation), rows, limit)) is not None
     )
-    return [Finding("enough", facts, _verdict(limits, "strain_error"), "strain_error")] if facts else []
+    return [Finding("enough", facts)] if facts else []
 
 
 def choose_effort(generation: str, rows: pd.DataFrame, limit: float) -> EnoughFinding | None:
@@ -326,7 +330,9 @@ def choose_effort(generation: str, rows: pd.DataFrame, limit: float) -> EnoughFi
     if own is None:
         return None
     kept = [e for e in known if _is_enough(e, own, limit)]
-    return EnoughFinding(generation, limit, kept[0] if kept else None, known[0], own, efforts)
+    sparing = [e for e in known if e.effort not in OWN_LINE]
+    best = min(sparing, key=lambda e: e.strain_sd) if sparing else None
+    return EnoughFinding(generation, limit, kept[0] if kept else None, best, own, efforts)
 
 
 def _is_enough(effort: Effort, own: Effort, limit: float) -> bool:

@@ -129,7 +129,7 @@ def describe_scope(description: Description, intake: Intake, calibration: Calibr
         simulated=description.simulated,
         stands=_names(intake.sessions, "stand"),
         reference=calibration.reference if calibration is not None else STRAIN,
-        x=_span(rows, "x"),
+        x=_visited(rows),
         temperature_c=_span(rows, "temperature_c"),
         humidity_percent=_span(rows, "humidity_percent"),
         rest_length_mm=_rest_lengths(calibration),
@@ -158,6 +158,12 @@ def _used_readings(calibration: Calibration | None) -> pd.DataFrame:
 def _span(rows: pd.DataFrame, column: str) -> Span | None:
     values = rows[column].dropna() if column in rows else pd.Series(dtype=float)
     return Span(float(values.min()), float(values.max())) if len(values) else None
+
+
+def _visited(rows: pd.DataFrame) -> Span | None:
+    """Range of the nominal levels where all readings have one, else of what was recorded."""
+    nominal = "nominal_level" in rows and len(rows) > 0 and bool(rows["nominal_level"].notna().all())
+    return _span(rows, "nominal_level" if nominal else "x")
 
 
 def _rest_lengths(calibration: Calibration | None) -> Span | None:

@@ -13,7 +13,6 @@ from dataclasses import fields
 import orjson
 
 from campaign.analyses.calibration import CalibrationRecord
-from campaign.analyses.length_reading import length_model
 from campaign.pages import slugs
 
 CAUTION = (
@@ -57,23 +56,10 @@ def record_files(records: Iterable[CalibrationRecord]) -> dict[str, bytes]:
     }
 
 
-def calculator_data(records: Iterable[CalibrationRecord], recorded: str) -> dict[str, object]:
-    """Return what the calculator's script reads: the records of one sensor, both branches first.
-
-    *recorded* is what the stand recorded (length, elongation or strain): lengths are read by a model of their
-    own, ``length`` of each record, which is ``None`` where the rest length is not known.
-    """
+def calculator_data(records: Iterable[CalibrationRecord]) -> dict[str, object]:
+    """Return what the calculator's script reads: the records of one sensor, both branches first."""
     ordered = sorted(records, key=lambda record: BRANCHES.index(record.branch))
-    return {"records": [{**record_fields(r), "length": _length_fields(r, recorded)} for r in ordered]}
-
-
-def _length_fields(record: CalibrationRecord, recorded: str) -> dict[str, object] | None:
-    model = length_model(record, recorded)
-    if model is None:
-        return None
-    values = {field.name: _plain(float(getattr(model, field.name))) for field in fields(model)}
-    range_of_signal = {"signal_low": _plain(record.signal_low), "signal_high": _plain(record.signal_high)}
-    return {**values, **range_of_signal, "t_quantile_975": values["t"]}
+    return {"records": [record_fields(record) for record in ordered]}
 
 
 def _plain(value: object) -> object:

@@ -18,6 +18,7 @@ from campaign.pages.figures import (
     Layout,
     Trace,
     axis,
+    band,
     intervals,
     label,
     layout,
@@ -37,6 +38,9 @@ MERITS = ("linearity", "hysteresis", "repeatability")
 
 LAWS = ((1, "λ: free to narrow"), (2, "λ²: width kept"), (4, "λ⁴: stretched both ways"))
 """Stretch exponents of ideal parallel plates on an incompressible dielectric."""
+
+FEW_SENSORS = 24
+"""Up to so many sensors mean readings are drawn with their lines."""
 
 MOST_MODULES = 48
 """Modules that the small multiples show; the other figures and the table always hold all of them."""
@@ -86,42 +90,44 @@ def signal_unit(calibration: Calibration) -> str:
 
 
 def lines_figure(calibration: Calibration, where: SensorAxis) -> Figure:
-    """Return the lines of all sensors, one panel a module, with the mean reading of every level."""
+    """Return the lines of all sensors, one panel a module; in small campaigns with the mean readings."""
     reference, unit = calibration.reference, signal_unit(calibration)
     modules = where.modules[:MOST_MODULES]
     lines = principal_lines(calibration.sensor_lines)
-    means = _level_means(calibration)
+    means = _level_means(calibration) if len(lines) <= FEW_SENSORS else None
     traces: list[Trace] = []
     labels: list[Layout] = []
-    marks = len(means) <= 1800
     for index, (generation, module) in enumerate(modules):
         own = lines[(lines["generation"] == generation) & (lines["module"] == module)]
-        spots = means[(means["generation"] == generation) & (means["module"] == module)]
-        traces += _module_lines(own, spots if marks else spots.iloc[:0], where, panel(index), reference)
+        traces += _module_lines(own, means, where, panel(index), reference)
         labels += _end_labels(own, panel(index), reference) if len(modules) <= 12 else []
-    columns = 1 if len(modules) == 1 else 2 if len(modules) <= 4 else 4 if len(modules) > 12 else 3
-    rows = math.ceil(len(modules) / columns)
+    marked = "Open marks are the mean readings of a level over runs. " if means is not None else ""
+    columns, rows = panel_grid(len(modules))
     return Figure(
         name="lines",
         caption=_lines_caption(lines, reference, len(where.modules)),
-        alternative=f"Small multiples, one panel a module: signal against {x_title(reference).lower()}, "
-        f"one straight "
-        "line a sensor through the mean readings of its levels.",
+        alternative=f"Small multiples, one panel a module: signal against {x_title(reference).lower()}, one "
+        "straight line a sensor.",
         traces=tuple(traces),
         layout=small_multiples(
             [_panel_name(g, m, where) for g, m in modules],
             axis(x_title(reference), reference.shown_unit),
             axis("Signal", unit),
             columns=columns,
-            gap=(0.04, 0.30 / max(rows, 1) if rows > 1 else 0.1),
+            gap=(0.04, 0.30 / rows if rows > 1 else 0.1),
             annotations=labels,
         ),
         table="sensor_lines",
-        note="Open marks are the mean readings of a level over runs, the turning reading left out; the "
-        "line is the "
-        "mean of the runs' own lines. Every mark leads to its sensor.",
+        note=f"{marked}A line is the mean of the lines of its sensor’s runs. Its ends lead to the sensor’s "
+        f"page.",
         height=90 + 190 * rows if rows > 1 else 420,
     )
+
+
+def panel_grid(panels: int) -> tuple[int, int]:
+    """Return columns and rows for so many panels."""
+    columns = 1 if panels == 1 else 2 if panels <= 4 else 4 if panels > 12 else 3
+    return columns, math.ceil(panels / columns)
 
 
 def _panel_name(generation: str, module: str, where: SensorAxis) -> str:
@@ -137,34 +143,43 @@ def _level_means(calibration: Calibration) -> pd.DataFrame:
 
 
 def _module_lines(
-    lines: pd.DataFrame, means: pd.DataFrame, where: SensorAxis, axes: str, reference: ReferenceQuantity
+    lines: pd.DataFrame,
+    means: pd.DataFrame | None,
+    where: SensorAxis,
+    axes: str,
+    reference: ReferenceQuantity,
 ) -> Iterable[Trace]:
     for row in lines.to_dict("records"):
         style = where.style(str(row["generation"]))
         module, sensor = str(row["module"]), str(row["sensor"])
         ends = np.array([row["strain_low"], row["strain_high"]])
-        href = slugs.sensor_href(module, sensor)
-        shared = {"module": module, "sensor": sensor, "axes": axes}
+        sentence = [_line_sentence(row, reference)] * 2
+        links = [slugs.sensor_href(module, sensor)] * 2
         yield line(
             ends * reference.shown_factor,
             row["intercept"] + row["slope"] * ends,
             colour=style.colour,
             dash=style.dash,
             width=1.3,
-            **shared,
+            text=sentence,
+            links=links,
+            module=module,
+            sensor=sensor,
+            axes=axes,
         )
-        own = means[means["sensor"] == row["sensor"]]
-        if len(own):
-            text = _line_sentence(row, reference)
+        if means is not None:
+            own = means[(means["module"] == module) & (means["sensor"] == sensor)]
             yield points(
                 own["x"] * reference.shown_factor,
                 own["signal"],
                 style=style,
                 size=4,
                 open_marker=True,
-                text=[text] * len(own),
-                links=[href] * len(own),
-                **shared,
+                text=sentence[:1] * len(own),
+                links=links[:1] * len(own),
+                module=module,
+                sensor=sensor,
+                axes=axes,
             )
 
 
@@ -326,76 +341,81 @@ def bend_figure(results: CampaignResults, where: SensorAxis) -> Figure | None:
 
 def level_hysteresis_figure(calibration: Calibration, where: SensorAxis) -> Figure | None:
     """Return the signed difference between branches at each level, one panel a module."""
-    levels = calibration.level_hysteresis.dropna(subset=["difference"])
+    levels = hysteresis_in_percent(calibration)
     if levels.empty:
         return None
     reference = calibration.reference
-    scale = (
-        (levels["percent_fso"] / levels["difference"].where(levels["difference"] != 0))
-        .groupby([levels[k] for k in ("generation", "module", "sensor")])
-        .transform("median")
-    )
-    levels = levels.assign(low=levels["low"] * scale, high=levels["high"] * scale)
-    low, high = levels[["low", "high"]].min(axis=1), levels[["low", "high"]].max(axis=1)
-    levels = levels.assign(low=low, high=high)
     present = set(zip(levels["generation"], levels["module"], strict=True))
     modules = [m for m in where.modules if m in present][:MOST_MODULES]
     traces = [
         t for i, m in enumerate(modules) for t in _hysteresis_traces(levels, m, where, panel(i), reference)
     ]
-    columns = 1 if len(modules) == 1 else 2 if len(modules) <= 4 else 4 if len(modules) > 12 else 3
-    rows = math.ceil(len(modules) / columns)
+    columns, rows = panel_grid(len(modules))
     return Figure(
         name="hysteresis",
         caption=_hysteresis_caption(levels),
         alternative="Small multiples, one panel a module: rising minus falling signal at each common "
-        "level, in per "
-        "cent of full-scale output, one line a sensor with simultaneous 95 % intervals.",
+        "level, in "
+        "per cent of full-scale output: median and extremes of the sensors.",
         traces=tuple(traces),
         layout=small_multiples(
             [_panel_name(g, m, where) for g, m in modules],
             axis(x_title(reference), reference.shown_unit),
             axis("Rising − falling", "%FSO"),
             columns=columns,
-            gap=(0.04, 0.30 / max(rows, 1) if rows > 1 else 0.1),
+            gap=(0.04, 0.30 / rows if rows > 1 else 0.1),
             shapes=[level_line(0, colour=palette.INK, axes=panel(i)) for i in range(len(modules))],
         ),
         data=levels,
-        note="Intervals hold together over all levels of a sensor. Below zero: at the same length the "
-        "signal was "
-        "lower while stretching than while releasing.",
+        note="The line is the median of a module’s sensors, the band their extremes; each sensor’s own "
+        "differences "
+        "with simultaneous intervals stand on its page. Below zero: at the same length the signal was lower "
+        "while stretching than while releasing.",
         height=90 + 170 * rows if rows > 1 else 420,
     )
 
 
+def hysteresis_in_percent(calibration: Calibration) -> pd.DataFrame:
+    """Return the level differences with their limits in per cent of full-scale output too (low, high)."""
+    levels = calibration.level_hysteresis.dropna(subset=["difference"])
+    keys = ["generation", "module", "sensor"]
+    outputs = principal_lines(calibration.sensor_lines)[[*keys, "full_scale_output"]]
+    levels = levels.merge(outputs, on=keys)
+    scale = 100 / levels["full_scale_output"]
+    return levels.assign(low=levels["low"] * scale, high=levels["high"] * scale)
+
+
 def _hysteresis_traces(
-    levels: pd.DataFrame, module: tuple[str, str], where: SensorAxis, axes: str, reference: ReferenceQuantity
+    levels: pd.DataFrame,
+    module: tuple[str, str],
+    where: SensorAxis,
+    axes: str,
+    reference: ReferenceQuantity,
 ) -> Iterable[Trace]:
     own = levels[(levels["generation"] == module[0]) & (levels["module"] == module[1])]
-    for sensor, rows in own.groupby("sensor", sort=True):
-        href = slugs.sensor_href(module[1], str(sensor))
-        text = [
-            f"{module[1]} {sensor} at "
-            f"{numbers.significant(x * reference.shown_factor, 3, reference.shown_unit)}: "
-            f"{numbers.interval(e, a, b, '%FSO')}"
-            for x, e, a, b in zip(
-                rows["nominal_level"], rows["percent_fso"], rows["low"], rows["high"], strict=True
-            )
-        ]
-        yield intervals(
-            rows["percent_fso"],
-            rows["low"],
-            rows["high"],
-            rows["nominal_level"] * reference.shown_factor,
-            across=False,
-            style=where.style(module[0]),
-            size=4,
-            text=text,
-            links=[href] * len(rows),
-            module=module[1],
-            sensor=str(sensor),
-            axes=axes,
-        )
+    grouped = own.groupby("nominal_level", sort=True)["percent_fso"]
+    style = where.style(module[0])
+    x = grouped.median().index.to_numpy(float) * reference.shown_factor
+    middle, low, high = grouped.median(), grouped.min(), grouped.max()
+    yield band(x, low, high, colour=style.colour, axes=axes, meta={"module": module[1], "sensor": ""})
+    yield intervals(
+        middle,
+        low,
+        high,
+        x,
+        across=False,
+        style=style,
+        size=4,
+        text=[
+            f"{module[1]} at {numbers.significant(a, 3, reference.shown_unit)}: sensors from "
+            f"{numbers.span(b, c, '%FSO', digits=2)}"
+            for a, b, c in zip(x.tolist(), low, high, strict=True)
+        ],
+        links=[slugs.module_href(module[1])] * len(x),
+        module=module[1],
+        axes=axes,
+    )
+    yield line(x, middle, colour=style.colour, dash=style.dash, axes=axes, module=module[1])
 
 
 def _hysteresis_caption(levels: pd.DataFrame) -> str:
@@ -417,44 +437,23 @@ def stretch_figures(calibration: Calibration, where: SensorAxis) -> list[Figure]
 
 
 def _stretch_curves(calibration: Calibration, lines: pd.DataFrame, where: SensorAxis) -> Figure:
-    means = _level_means(calibration).merge(lines[["generation", "module", "sensor", "zero_signal"]])
+    keys = ["generation", "module", "sensor"]
+    means = _level_means(calibration).merge(lines[[*keys, "zero_signal"]], on=keys)
     means = means.assign(stretch=1 + means["x"], relative=means["signal"] / means["zero_signal"])
-    far = float(means["stretch"].max())
+    far, high = float(means["stretch"].max()), float(means["relative"].max())
     stretch = np.linspace(1.0, far, 40)
-    high = float(means["relative"].max())
-    traces = [
-        line(
-            stretch[stretch**p <= 1.15 * high],
-            (stretch**p)[stretch**p <= 1.15 * high],
-            colour=palette.SOFT,
-            dash="dot",
-        )
-        for p, _ in LAWS
-    ]
-    thin = means if len(means) <= 1900 else means.iloc[:: math.ceil(len(means) / 1900)]
-    for (generation, module), rows in thin.groupby(["generation", "module"], sort=True):
-        traces.append(
-            points(
-                rows["stretch"],
-                rows["relative"],
-                style=where.style(str(generation)),
-                size=4,
-                open_marker=True,
-                text=[f"{m} {s}" for m, s in zip(rows["module"], rows["sensor"], strict=True)],
-                links=[
-                    slugs.sensor_href(str(m), str(s))
-                    for m, s in zip(rows["module"], rows["sensor"], strict=True)
-                ],
-                module=str(module),
-            )
-        )
+    traces: list[Trace] = []
+    for power, _ in LAWS:
+        inside = stretch**power <= 1.15 * high
+        traces.append(line(stretch[inside], stretch[inside] ** power, colour=palette.SOFT, dash="dot"))
+    for (generation, module), rows in means.groupby(["generation", "module"], sort=True):
+        traces.append(_module_stretch(str(generation), str(module), rows, where))
     return Figure(
         name="stretch",
-        caption="Signal relative to the unstretched one grows with stretch "
-        f"as its power {numbers.significant(float(lines['stretch_exponent'].median()), 3)} in the median "
-        f"sensor.",
-        alternative="Relative signal against stretch λ, one mark a sensor and level, with the laws λ, λ² "
-        "and λ⁴ dotted.",
+        caption="Signal relative to the unstretched one grows with stretch as its power "
+        f"{numbers.significant(float(lines['stretch_exponent'].median()), 3)} in the median sensor.",
+        alternative="Relative signal against stretch λ, one mark a module and level, bars over its sensors, "
+        "with the laws λ, λ² and λ⁴ dotted.",
         traces=tuple(traces),
         layout=layout(
             axis("Stretch λ = 1 + ε"),
@@ -462,10 +461,29 @@ def _stretch_curves(calibration: Calibration, lines: pd.DataFrame, where: Sensor
             annotations=_law_labels(far, high),
         ),
         data=means,
-        note="Dotted: parallel plates on an incompressible dielectric, free to narrow (λ), width kept "
-        "(λ²), stretched "
-        "both ways (λ⁴). Cable capacitance that was not taken off lowers the exponent.",
+        note="Marks are the medians of a module’s sensors, bars their extremes. Dotted: parallel plates on "
+        "an "
+        "incompressible dielectric, free to narrow (λ), width kept (λ²), stretched both ways (λ⁴). Cable "
+        "capacitance that was not taken off lowers the exponent.",
         height=400,
+    )
+
+
+def _module_stretch(generation: str, module: str, rows: pd.DataFrame, where: SensorAxis) -> Trace:
+    grouped = rows.groupby("_place", sort=True)
+    relative = grouped["relative"]
+    return intervals(
+        relative.median(),
+        relative.min(),
+        relative.max(),
+        grouped["stretch"].mean(),
+        across=False,
+        style=where.style(generation),
+        size=5,
+        open_marker=True,
+        text=[f"{module}: {numbers.fixed(v, 3)} of its unstretched signal" for v in relative.median()],
+        links=[slugs.module_href(module)] * relative.ngroups,
+        module=module,
     )
 
 
@@ -511,7 +529,7 @@ def _exponents(lines: pd.DataFrame, where: SensorAxis) -> Figure:
 def sensor_lines_table(calibration: Calibration) -> Table:
     """Return the table of all lines, one row a sensor and branch."""
     reference = calibration.reference
-    lines = calibration.sensor_lines
+    lines = principal_lines(calibration.sensor_lines)
     frame = lines.assign(
         _se_slope=np.sqrt(lines["var_slope"]),
         _se_intercept=np.sqrt(lines["var_intercept"]),
@@ -540,9 +558,13 @@ def sensor_lines_table(calibration: Calibration) -> Table:
     ]
     return Table(
         name="sensor_lines",
-        caption="Every line with the standard uncertainties of its signal at zero and its slope.",
+        caption="The line that stands for each sensor, with the standard uncertainties of its signal at "
+        "zero and its slope.",
+        source="sensor_lines",
+        shown_rows=80,
         frame=frame,
         columns=tuple(columns),
-        note="The file holds all columns: covariances, degrees of freedom, the four linearities, the "
-        "stretch exponent.",
+        note="The file holds rising and falling lines as well, and all columns: covariances, degrees of "
+        "freedom, "
+        "the four linearities, the stretch exponent.",
     )

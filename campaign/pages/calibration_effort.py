@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 
+import numpy as np
 import pandas as pd
 
 from campaign.analyses.calibration_effort import CalibrationEffort
@@ -29,14 +30,14 @@ from campaign.recordings.recording import ReferenceQuantity
 
 EFFORTS: Mapping[str, str] = {
     "all": "one line for all",
-    "generation": "one line a generation",
-    "generation_rezero_additive": "one line a generation, zero taken anew",
-    "generation_rezero_ratio": "one line a generation, signal divided by its zero",
-    "position": "one line a position",
-    "module": "one line a module",
-    "sensor": "one line a sensor",
-    "rezero_additive": "a sensor’s line, zero taken anew",
-    "rezero_ratio": "a sensor’s line, signal divided by its zero",
+    "generation": "a generation’s line",
+    "generation_rezero_additive": "a generation’s line, zero anew",
+    "generation_rezero_ratio": "a generation’s line, signal ÷ zero",
+    "position": "a position’s line",
+    "module": "a module’s line",
+    "sensor": "a sensor’s own line",
+    "rezero_additive": "own line, zero anew",
+    "rezero_ratio": "own line, signal ÷ zero",
 }
 """What each effort is called; other names have their underscores opened."""
 
@@ -98,17 +99,20 @@ def effort_figure(effort: CalibrationEffort, reference: ReferenceQuantity) -> Fi
         rows = table[table["generation"] == generation]
         traces += _effort_traces(rows, generation, generations, efforts, reference, panel(index))
     ticks = [(float(i), effort_words(name)) for i, name in enumerate(efforts)]
+    ends = _ends(table)
     made = small_multiples(
         list(generations),
         axis(
             "SD of a strain reading" if reference.name == "strain" else "SD of a reading",
             reference.shown_unit,
-            low=0,
-            high=_far_end(table) * reference.shown_factor,
+            low=ends[0] * reference.shown_factor,
+            high=ends[1] * reference.shown_factor,
+            logarithmic=True,
+            ticks=_ticks(*(end * reference.shown_factor for end in ends)),
         ),
         axis("", ticks=ticks, low=-0.6, high=len(efforts) - 0.4, reverse=True),
         columns=min(len(generations), 3),
-        annotations=_key(table, generations, efforts, reference),
+        annotations=_key(),
     )
     return Figure(
         name="effort",
@@ -117,7 +121,7 @@ def effort_figure(effort: CalibrationEffort, reference: ReferenceQuantity) -> Fi
         "(filled) "
         "and as found by leaving out (open), generations apart.",
         traces=tuple(traces),
-        layout=made | {"margin": {"l": 220, "t": 46}},
+        layout=made | {"margin": {"l": 232, "t": 46}},
         table="calibration_effort",
         note="Filled: predicted by the model, with its 95 % interval where there is one. Open: found on "
         "data left out "
@@ -126,11 +130,18 @@ def effort_figure(effort: CalibrationEffort, reference: ReferenceQuantity) -> Fi
     )
 
 
-def _far_end(table: pd.DataFrame) -> float:
-    columns = ["strain_sd_predicted", "strain_sd_left_out"]
-    top = float(table[columns].max().max())
-    high = table["high"].clip(upper=2.5 * top) if "high" in table else pd.Series(dtype=float)
-    return 1.08 * max([top, *high.dropna().tolist()]) or 1.0
+def _ends(table: pd.DataFrame) -> tuple[float, float]:
+    """Ends of the logarithmic axis."""
+    values = table[["strain_sd_predicted", "strain_sd_left_out"]].to_numpy(float)
+    values = values[np.isfinite(values) & (values > 0)]
+    return (float(values.min()) / 1.5, float(values.max()) * 1.7) if values.size else (1e-4, 1.0)
+
+
+def _ticks(low: float, high: float) -> list[tuple[float, str]]:
+    """Ticks at 1, 2 and 5 of every power of ten between the ends."""
+    powers = range(math.floor(math.log10(low)), math.ceil(math.log10(high)) + 1)
+    places = [digit * 10.0**power for power in powers for digit in (1, 2, 5)]
+    return [(place, f"{place:g}") for place in places if low <= place <= high]
 
 
 def _effort_traces(
@@ -186,60 +197,51 @@ def _effort_bars(
     ]
 
 
-def _key(
-    table: pd.DataFrame, generations: tuple[str, ...], efforts: list[str], reference: ReferenceQuantity
-) -> list[Layout]:
-    """Direct labels of the two marks, in the first panel at its widest row."""
-    rows = table[(table["generation"] == generations[0])].dropna(
-        subset=["strain_sd_predicted", "strain_sd_left_out"]
-    )
-    if rows.empty:
-        return []
-    row = rows.iloc[-1]
-    height = float(efforts.index(str(row["effort"])))
-    factor = reference.shown_factor
+def _key() -> list[Layout]:
+    """Direct labels of the two marks, above the first panel."""
     return [
         label(
-            "predicted",
-            float(row["strain_sd_predicted"]) * factor,
-            height - 0.12,
+            "● predicted   ○ left out",
+            1.0,
+            1.0,
             colour=palette.SOFT,
-            shift=(9, -3),
-            size=11,
-        ),
-        label(
-            "left out",
-            float(row["strain_sd_left_out"]) * factor,
-            height + 0.12,
-            colour=palette.SOFT,
-            shift=(9, 4),
-            size=11,
-        ),
+            anchor="right",
+            shift=(0, 10),
+            size=12,
+            paper=True,
+        )
     ]
 
 
 def _effort_caption(table: pd.DataFrame, generations: tuple[str, ...]) -> str:
     parts = []
     for generation in generations:
-        rows = table[table["generation"] == generation].dropna(subset=["factor"])
+        rows = table[(table["generation"] == generation) & ~table["effort"].isin(_OWN)].dropna(
+            subset=["factor"]
+        )
         if rows.empty:
             continue
-        worst = rows.iloc[int(rows["factor"].to_numpy(float).argmax())]
+        best = rows.iloc[int(rows["factor"].to_numpy(float).argmin())]
         parts.append(
-            f"{generation}: {effort_words(str(worst['effort']))} errs "
-            f"{numbers.significant(float(worst['factor']), 2)} times as much as a sensor’s own line"
+            f"{generation}: of all that spares calibrating each sensor, "
+            f"{effort_words(str(best['effort']))} errs "
+            f"least, {numbers.significant(float(best['factor']), 2)} times a sensor’s own line"
         )
     return f"{'; '.join(parts)}." if parts else "The error of a reading against calibration effort."
+
+
+_OWN = ("sensor", "rezero_additive", "rezero_ratio")
 
 
 def effort_table(effort: CalibrationEffort, reference: ReferenceQuantity) -> Table:
     """Return the table that says how many calibration runs can be dropped."""
     factor, unit = reference.shown_factor, reference.shown_unit
-    table = effort.table.assign(_effort=[effort_words(str(e)) for e in effort.table["effort"]])
-    predicted = Column("strain_sd_predicted", "SD, predicted", unit, factor=factor, digits=2)
+    table = effort.table.sort_values("generation", kind="stable").reset_index(drop=True)
+    table = table.assign(_effort=[effort_words(str(e)) for e in table["effort"]])
+    predicted = Column("strain_sd_predicted", "SD predicted", unit, factor=factor, digits=2)
     if {"low", "high"} <= set(table.columns):
         predicted = Column(
-            "strain_sd_predicted", "SD, predicted", unit, factor=factor, interval=("low", "high")
+            "strain_sd_predicted", "SD predicted", unit, factor=factor, interval=("low", "high")
         )
     columns = [
         Column("generation", "Generation", kind="text"),
@@ -247,20 +249,20 @@ def effort_table(effort: CalibrationEffort, reference: ReferenceQuantity) -> Tab
         predicted,
         Column(
             "strain_sd_left_out",
-            "SD, left out",
+            "left out",
             unit,
             factor=factor,
             digits=2,
-            missing="not found by leaving out",
+            missing="–",
         ),
-        Column("strain_expanded", "95 % of readings within ±", unit, factor=factor, digits=2),
-        Column("factor", "Times a sensor’s own line", digits=3),
+        Column("strain_expanded", "95 % within ±", unit, factor=factor, digits=2),
+        Column("factor", "× own line", digits=3),
     ]
     if "agrees" in table:
         table = table.assign(_agrees=["" if pd.isna(v) else "yes" if v else "no" for v in table["agrees"]])
         columns.append(Column("_agrees", "Agree", kind="text"))
     if "left_out_by" in table:
-        columns.append(Column("left_out_by", "Left out", kind="text"))
+        columns.append(Column("left_out_by", "left out by", kind="text"))
     return Table(
         name="calibration_effort",
         caption="What each calibration effort buys: the error of one reading anywhere in the range common "

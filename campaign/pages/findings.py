@@ -9,9 +9,11 @@ from campaign.analyses.limits import Limits
 from campaign.analyses.results import CampaignResults
 from campaign.pages.calibration_effort import effort_words
 from campaign.pages.page import Page
+from campaign.pages.sensor import limits_as_shown
 from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
 from campaign.pages.variance import level_words
+from campaign.recordings.recording import ReferenceQuantity
 
 VERDICT_WORDS: Mapping[str, str] = {
     "met": "met in this campaign",
@@ -40,7 +42,7 @@ KIND_WORDS: Mapping[str, str] = {
 
 def findings_page(results: CampaignResults, mapped: SkinMap) -> Page:
     """Return page 0 with the skin map; it is part of every site, also where nothing could be analysed."""
-    tables = (limits_table(results.limits),) if len(results.limits.table) else ()
+    tables = (limits_table(results.limits, results.readings.reference),) if len(results.limits.table) else ()
     return Page(
         slug="index",
         number=0,
@@ -80,24 +82,15 @@ def _pages_there(results: CampaignResults) -> dict[str, bool]:
     }
 
 
-def limits_table(limits: Limits) -> Table:
-    """Return the verdicts on every limit: new sensors of each generation first, then every sensor."""
-    frame = limits.table.assign(_new=limits.table["sensor"] != "").sort_values("_new", kind="stable")
-    shown = frame.assign(
-        _limit=[str(v).replace("_", " ") for v in frame["limit"]],
-        _factor=[
-            100.0 if u in ("mm/mm", "1", "") and n == "strain_error" else 1.0
-            for u, n in zip(frame["unit"], frame["limit"], strict=True)
-        ],
-    )
-    scaled = {f"_{key}": shown[key] * shown["_factor"] for key in ("value", "estimate", "low", "high")}
-    shown = shown.assign(
-        **scaled, _unit=["%" if f > 1 else u for f, u in zip(shown["_factor"], shown["unit"], strict=True)]
-    )
+def limits_table(limits: Limits, reference: ReferenceQuantity) -> Table:
+    """Return the verdicts on every limit: new sensors of each generation first, then sensors, worst first."""
+    rank = limits.table["verdict"].map({"not met": 0, "not decided": 1, "met": 2})
+    frame = limits.table.assign(_new=limits.table["sensor"] != "", _rank=rank)
+    frame = frame.sort_values(["_new", "_rank", "probability"], kind="stable")
     return Table(
         name="limits",
-        caption="Every limit, judged for a new sensor of each generation and for every sensor measured.",
-        frame=shown,
+        caption="Every limit, judged for a new sensor of each generation and for every sensor, worst first.",
+        frame=limits_as_shown(frame, reference),
         columns=(
             Column("_limit", "Limit", kind="text"),
             Column("subject", "Judged for", kind="text"),
@@ -107,6 +100,7 @@ def limits_table(limits: Limits) -> Table:
             Column("probability", "Probability that it is kept", kind="percent", missing="unknown"),
             Column("verdict", "Verdict", kind="text"),
         ),
-        shown_rows=60,
+        shown_rows=30,
+        source="limits",
         note="Met from a probability of 95 % on, not met from 5 % down, between them not decided.",
     )

@@ -29,6 +29,7 @@ from campaign.pages.sensor import FIGURE_ORDER, sensor_keys
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
 from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
+from campaign.pages.variance import TERMS, in_shown_units
 from campaign.recordings.recording import ReferenceQuantity
 
 _MOST_TRIAL_PLOTS = 16
@@ -292,14 +293,15 @@ def module_effects_figure(results: CampaignResults, module: str, where: SensorAx
     rows = results.variance.effects
     rows = _in_module(rows[(rows["level"] == "sensor")], module).dropna(subset=["estimate"])
     rows = rows[rows["generation"] != "all"] if (rows["generation"] != "all").any() else rows
-    rows = rows[rows["term"] == "slope"] if (rows["term"] == "slope").any() else rows
+    term = next((name for name in TERMS if (rows["term"] == name).any()), "")
+    rows = in_shown_units(rows[rows["term"] == term])
     known = set(where.places)
     rows = rows[
         [key in known for key in rows[["generation", "module", "sensor"]].itertuples(index=False, name=None)]
     ]
     if rows.empty:
         return None
-    unit, term = str(rows["unit"].iloc[0]), str(rows["term"].iloc[0])
+    unit = str(rows["unit"].iloc[0])
     text = [
         f"{module} {r['sensor']}: {numbers.interval(r['estimate'], r['low'], r['high'], unit)}"
         for r in rows.to_dict("records")

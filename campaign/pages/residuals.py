@@ -32,6 +32,9 @@ from campaign.recordings.recording import ReferenceQuantity
 LARGEST_SHOWN = 200
 """Points drawn beside the bands where there are more readings than a figure bears."""
 
+END_SHOWN = 100
+"""Points of either end of the normal quantiles that are drawn whole; the middle is thinned to as many."""
+
 VALUE = "conditional_strain"
 """Column that every figure draws: the conditional residual as strain."""
 
@@ -83,7 +86,7 @@ def _autocorrelation(residuals: Residuals) -> list[dict[str, object]]:
             "generation": str(row["generation"]),
             "value": float(row["autocorrelation"]),
             "error": float(row["standard_error"]),
-            "clear": abs(row["autocorrelation"]) > 2 * row["standard_error"],
+            "distinct": abs(row["autocorrelation"]) > 2 * row["standard_error"],
         }
         for row in table.to_dict("records")
     ]
@@ -99,9 +102,16 @@ def residual_sentences(rows: pd.DataFrame, reference: ReferenceQuantity) -> list
     factor, unit = reference.shown_factor, reference.shown_unit
     return [
         f"{r['module']} {r['sensor']}, run {r['repetition']}, reading {r['order']}, {r['direction']} at "
-        f"{numbers.significant(r['x'] * factor, 3, unit)}: {numbers.significant(r[VALUE] * factor, 2, unit)}"
-        for r in rows.to_dict("records")
+        f"{numbers.significant(place * factor, 3, unit)}: {numbers.significant(r[VALUE] * factor, 2, unit)}"
+        for r, place in zip(rows.to_dict("records"), shown_places(rows), strict=True)
     ]
+
+
+def shown_places(rows: pd.DataFrame) -> list[float]:
+    """Return where each reading was taken: its nominal level, else what was recorded, noise rounded off."""
+    width = float(rows["x"].max() - rows["x"].min())
+    places = rows["nominal_level"].fillna(rows["x"])
+    return [numbers.rounded_to(float(place), width) for place in places]
 
 
 def residual_links(rows: pd.DataFrame) -> list[str]:
@@ -208,13 +218,9 @@ def against_order(
 ) -> Figure:
     """Return residuals against the order of readings in the run."""
     bands = _bands(rows, "order", reference) if banded else []
-    means = rows.groupby("order")[VALUE].mean() * reference.shown_factor
-    place = int(means.abs().to_numpy().argmax())
     return Figure(
         name="against-order",
-        caption=f"Averaged over runs, the largest departure in the order of readings is "
-        f"{numbers.significant(float(means.iloc[place]), 2, reference.shown_unit)}, at reading "
-        f"{means.index[place]}.",
+        caption=_order_caption(rows, reference),
         alternative="Residuals against the order of the reading in its run, with a line at zero.",
         traces=tuple(bands + _marks(drawn, "order", where, reference)),
         layout=layout(
@@ -224,6 +230,16 @@ def against_order(
         note=_note(banded) + " A slope here is drift or creep within the run.",
         height=340,
     )
+
+
+def _order_caption(rows: pd.DataFrame, reference: ReferenceQuantity) -> str:
+    means = rows.groupby("order")[VALUE].mean()
+    place = int(means.abs().to_numpy().argmax())
+    largest = float(means.iloc[place])
+    if abs(largest) < 0.01 * float(rows[VALUE].std()):
+        return "Averaged over runs, nothing is left over at any place in the order of readings."
+    value = numbers.significant(largest * reference.shown_factor, 2, reference.shown_unit)
+    return f"Averaged over runs, the largest departure is {value}, at reading {means.index[place]}."
 
 
 def by_module(
@@ -340,11 +356,11 @@ def normal_quantiles(residuals: Residuals, where: SensorAxis) -> Figure | None:
 def _thinned_quantiles(table: pd.DataFrame) -> pd.DataFrame:
     """Both ends whole, the crowded middle thinned evenly, below the number of markers a figure bears."""
     ordered = table.sort_values("theoretical", kind="stable").reset_index(drop=True)
-    if len(ordered) <= LARGEST_NUMBER_OF_MARKERS:
+    if len(ordered) <= 4 * END_SHOWN:
         return ordered
-    middle = ordered.iloc[LARGEST_SHOWN:-LARGEST_SHOWN]
-    step = math.ceil(len(middle) / 1000)
-    return pd.concat([ordered.iloc[:LARGEST_SHOWN], middle.iloc[::step], ordered.iloc[-LARGEST_SHOWN:]])
+    middle = ordered.iloc[END_SHOWN:-END_SHOWN]
+    step = math.ceil(len(middle) / END_SHOWN)
+    return pd.concat([ordered.iloc[:END_SHOWN], middle.iloc[::step], ordered.iloc[-END_SHOWN:]])
 
 
 def _with_generation(rows: pd.DataFrame, table: pd.DataFrame) -> pd.DataFrame:
@@ -491,7 +507,7 @@ def largest_table(rows: pd.DataFrame, reference: ReferenceQuantity) -> Table:
     """Return the twenty largest residuals, each leading to its trial."""
     order = rows[VALUE].abs().sort_values(ascending=False, kind="stable").index[:20]
     frame = rows.loc[order]
-    frame = frame.assign(_href=residual_links(frame))
+    frame = frame.assign(_href=residual_links(frame), _place=shown_places(frame))
     factor, unit = reference.shown_factor, reference.shown_unit
     return Table(
         name="largest_residuals",
@@ -503,7 +519,7 @@ def largest_table(rows: pd.DataFrame, reference: ReferenceQuantity) -> Table:
             Column("repetition", "Run", kind="integer"),
             Column("order", "Reading", kind="integer"),
             Column("direction", "Direction", kind="text"),
-            Column("x", x_title(reference), unit, digits=3, factor=factor),
+            Column("_place", x_title(reference), unit, digits=3, factor=factor),
             Column(VALUE, "Residual", unit, digits=2, factor=factor),
             Column("trial", "Trial", kind="code", href="_href"),
         ),

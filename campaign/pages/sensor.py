@@ -15,13 +15,14 @@ from campaign.analyses.results import CampaignResults
 from campaign.analyses.sensor_figures import expanded_uncertainty, principal_lines, principal_records
 from campaign.pages import numbers, palette, slugs
 from campaign.pages.calculator import calculator_data, record_href
-from campaign.pages.calibration import x_title
+from campaign.pages.calibration import hysteresis_in_percent, x_title
 from campaign.pages.figures import (
     Figure,
     Layout,
     Trace,
     axis,
     band,
+    intervals,
     label,
     layout,
     level_line,
@@ -132,6 +133,8 @@ def _sensor_page(
             line_figure(rows, line_row, record, reference),
             residual_figure(rows, line_row, record, reference),
         ]
+        loops = hysteresis_figure(results, module, sensor)
+        figures += [loops] if loops is not None else []
     tables = [*_runs_table(results, module, sensor), *_limits_table(results, module, sensor)]
     return Page(
         slug=slugs.sensor_slug(module, sensor),
@@ -161,7 +164,7 @@ def _sensor_page(
         },
         figures=(*figures, *plots),
         tables=tuple(tables),
-        data={"calculator": calculator_data(records, _recorded(rows))} if records else {},
+        data={"calculator": calculator_data(records)} if records else {},
         description=f"Readings, line, figures of merit and trials of sensor {sensor} of module {module}.",
         above=((module, slugs.module_href(module)),),
     )
@@ -208,12 +211,6 @@ def _merits_of(results: CampaignResults, module: str, sensor: str) -> list[dict[
     return sorted(rows.to_dict("records"), key=lambda row: FIGURE_ORDER.index(str(row["figure"])))
 
 
-def _recorded(rows: pd.DataFrame) -> str:
-    """What the stand recorded for the sensor: length, elongation or strain."""
-    kinds = rows["reference"].dropna().astype(str) if "reference" in rows else pd.Series(dtype=str)
-    return str(kinds.iloc[0]) if len(kinds) else "length"
-
-
 def _example_signal(records: list[CalibrationRecord]) -> str:
     """A signal from the middle of the calibrated range, for the calculator to start from."""
     if not records:
@@ -235,16 +232,34 @@ def _accuracy_of(records: list[CalibrationRecord]) -> tuple[float, float] | None
 
 
 def _register_of(results: CampaignResults, module: str, sensor: str) -> list[tuple[str, str]]:
-    """What the registers say of the sensor, in their own words, the ids left out."""
+    """What the register says of the sensor: place and rest length, then its free columns."""
     register = results.intake.sensors
-    if register is None or not {"module", "sensor"} <= set(register.columns):
-        return []
-    rows = _of(register, module, sensor)
+    rows = (
+        _of(register, module, sensor) if {"module", "sensor"} <= set(register.columns) else register.iloc[:0]
+    )
     if rows.empty:
         return []
-    row = rows.iloc[0]
-    kept = [c for c in register.columns if c not in ("module", "sensor")]
-    return [(str(c).replace("_", " "), str(row[c])) for c in kept if str(row[c]) not in ("", "nan", "None")]
+    row = {str(k): _text(v) for k, v in rows.iloc[0].items()}
+    facts = [("Position", row.get("position", ""))]
+    if row.get("from") and row.get("to"):
+        facts.append(("Between nodes", f"{row['from']} and {row['to']}"))
+    facts.append(("Rest length", _rest_length(rows.iloc[0], row.get("rest_length_method", ""))))
+    others = [(k.replace("_", " ").capitalize(), v) for k, v in row.items() if k not in _KNOWN]
+    return [(name, value) for name, value in (*facts, *others) if value not in ("", "nan", "None")]
+
+
+_KNOWN = (
+    *("module", "sensor", "position", "from", "to", "rest_length", "rest_length_uncertainty"),
+    *("rest_length_mm", "rest_length_uncertainty_mm", "rest_length_method"),
+)
+
+
+def _rest_length(row: pd.Series, method: str) -> str:
+    length, spread = (float(row.get(f"rest_length{k}_mm", float("nan"))) for k in ("", "_uncertainty"))
+    if not np.isfinite(length):
+        return "not known"
+    words = numbers.measured(length, spread, "mm", missing=numbers.significant(length, 4, "mm"))
+    return f"{words} ({method})" if method else words
 
 
 def line_figure(
@@ -393,6 +408,42 @@ def residual_figure(
     )
 
 
+def hysteresis_figure(results: CampaignResults, module: str, sensor: str) -> Figure | None:
+    """Return the difference of the branches level by level with simultaneous intervals."""
+    if results.calibration is None:
+        return None
+    levels = _of(hysteresis_in_percent(results.calibration), module, sensor)
+    if levels.empty:
+        return None
+    reference = results.calibration.reference
+    x = levels["nominal_level"] * reference.shown_factor
+    text = [
+        f"At {numbers.significant(place, 3, reference.shown_unit)}: "
+        f"{numbers.interval(r['percent_fso'], r['low'], r['high'], '%FSO')}"
+        for place, r in zip(x.tolist(), levels.to_dict("records"), strict=True)
+    ]
+    apart = int(((levels["low"] > 0) | (levels["high"] < 0)).sum())
+    return Figure(
+        name="hysteresis",
+        caption=f"The branches differ by up to "
+        f"{numbers.significant(float(levels['percent_fso'].abs().max()), 2, '%FSO')}, told from zero at "
+        f"{apart} of "
+        f"{numbers.count(len(levels), 'level')}.",
+        alternative="Rising minus falling signal at each level in per cent of full-scale output, with "
+        "simultaneous "
+        "95 % intervals.",
+        traces=(intervals(levels["percent_fso"], levels["low"], levels["high"], x, across=False, text=text),),
+        layout=layout(
+            axis(x_title(reference), reference.shown_unit),
+            axis("Rising − falling", "%FSO"),
+            shapes=[level_line(0, colour=palette.INK)],
+        ),
+        data=levels,
+        note="The intervals hold together over all levels.",
+        height=260,
+    )
+
+
 def trial_sections(
     results: CampaignResults,
     module: str,
@@ -495,35 +546,32 @@ def run_plot(
 
 
 def _runs_table(results: CampaignResults, module: str, sensor: str) -> list[Table]:
-    calibration = results.calibration
-    if calibration is None:
+    calibration, line_row = results.calibration, _line_of(results, module, sensor)
+    if calibration is None or line_row is None:
         return []
     runs = _of(calibration.run_lines, module, sensor)
-    if runs.empty:
-        return []
-    reference = calibration.reference
-    unit = str(_line_of(results, module, sensor)["unit"])  # type: ignore[index]
+    runs = runs[runs["branch"] == line_row["branch"]]
+    reference, unit = calibration.reference, str(line_row["unit"])
     frame = runs.assign(_href=[f"#{slugs.trial_anchor(str(t))}" for t in runs["trial"]])
     factor = 1 / reference.shown_factor
     columns = [
         Column("session", "Mounting", kind="text"),
-        Column("repetition", "Run", kind="integer"),
-        Column("branch", "Branch", kind="text"),
+        Column("repetition", "Run", kind="text", href="_href"),
         Column("intercept", "Signal at zero", unit, digits=5),
-        Column("slope", "Slope", f"{unit} per {reference.shown_unit}", digits=5, factor=factor),
+        Column("slope", "Slope", f"{unit} per {reference.shown_unit}", digits=4, factor=factor),
         Column("residual_sd", "Residual SD", unit, digits=2, missing="unknown"),
         Column("zero_return_percent_fso", "Zero return", "%FSO", digits=2, missing="not measured"),
-        Column("trial", "Trial", kind="code", href="_href"),
     ]
-    if not runs["session"].astype(str).str.len().any():
-        columns = columns[1:]
+    mounted = bool(runs["session"].astype(str).str.len().any())
     return [
         Table(
             name="runs",
             caption="Every run has its own zero and slope; the line above is their mean.",
             frame=frame,
-            columns=tuple(columns),
+            columns=tuple(columns if mounted else columns[1:]),
             source="run_lines",
+            note="The runs’ scatter carries the interval: Signal at zero and slope of one run have none of "
+            "their own.",
         )
     ]
 
@@ -533,7 +581,7 @@ def _limits_table(results: CampaignResults, module: str, sensor: str) -> list[Ta
     rows = _of(rows, module, sensor)
     if rows.empty:
         return []
-    frame = rows.assign(_limit=[str(v).replace("_", " ") for v in rows["limit"]])
+    frame = limits_as_shown(rows, results.readings.reference)
     return [
         Table(
             name="sensor_limits",
@@ -541,12 +589,24 @@ def _limits_table(results: CampaignResults, module: str, sensor: str) -> list[Ta
             frame=frame,
             columns=(
                 Column("_limit", "Limit", kind="text"),
-                Column("value", "At most", digits=3),
-                Column("unit", "Unit", kind="text"),
-                Column("estimate", "Found", interval=("low", "high")),
+                Column("_value", "At most", digits=3),
+                Column("_unit", "Unit", kind="text"),
+                Column("_estimate", "Found", interval=("_low", "_high")),
                 Column("probability", "Probability that it is kept", kind="percent", missing="unknown"),
                 Column("verdict", "Verdict", kind="text"),
             ),
             source="limits",
         )
     ]
+
+
+def limits_as_shown(rows: pd.DataFrame, reference: ReferenceQuantity) -> pd.DataFrame:
+    """Return verdicts with hidden columns in shown units: strain errors in per cent, others as they are."""
+    in_reference = rows["limit"] == "strain_error"
+    factor = in_reference.map({True: reference.shown_factor, False: 1.0})
+    scaled = {f"_{key}": rows[key] * factor for key in ("value", "estimate", "low", "high")}
+    return rows.assign(
+        **scaled,
+        _limit=rows["limit"].str.replace("_", " "),
+        _unit=rows["unit"].where(~in_reference, reference.shown_unit),
+    )

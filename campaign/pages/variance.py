@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Hashable, Iterable, Mapping
 from typing import Any
 
@@ -20,6 +21,7 @@ from campaign.pages.figures import (
     label,
     layout,
     level_line,
+    line,
     panel,
     small_multiples,
 )
@@ -126,99 +128,123 @@ def _called(frame: pd.DataFrame) -> dict[str, str]:
 
 def components_figure(variance: Variance) -> Figure:
     """Return every component as strain-equivalent SD with its interval, at zero, mid and full scale."""
-    table = variance.variance_in_strain.dropna(subset=["strain_sd"])
+    table = variance.variance_in_strain
     generations = generations_of(table)
     table = table[table["generation"].isin(generations)]
-    levels = _levels_in_order(table)
+    levels, words = _levels_in_order(table), _called(table)
     places = [place for place in PLACES if place in set(table["place"])]
+    edges = _edges(table)
     factor, unit = variance.reference.shown_factor, variance.reference.shown_unit
-    edge = 3 * float(table["strain_sd"].max())
     traces: list[Trace] = []
     for index, place in enumerate(places):
         for order, generation in enumerate(generations):
             rows = table[(table["place"] == place) & (table["generation"] == generation)]
             shift = (order - (len(generations) - 1) / 2) * min(0.24, 0.7 / len(generations))
-            traces.append(
-                _component_trace(
-                    rows, levels, shift, generation, generations, factor, unit, edge, panel(index)
-                )
-            )
-    words = _called(table)
+            heights = [levels.index(str(level)) + shift for level in rows["level"]]
+            style = palette.generation_style(generation, generations)
+            traces += _component_traces(rows, heights, style, edges, factor, unit, panel(index))
     ticks = [(float(i), words[level]) for i, level in enumerate(levels)]
     made = small_multiples(
         [PLACES[place] for place in places],
-        axis("SD", unit, low=0, high=_upper_end(table, edge) * factor),
+        axis("SD", unit, low=edges[0] * factor, high=edges[1] * factor, logarithmic=True),
         axis("", ticks=ticks, low=-0.6, high=len(levels) - 0.4, reverse=True),
         columns=len(places),
-        annotations=_generation_key(generations),
+        annotations=_generation_key(generations, len(places)),
     )
     return Figure(
         name="components",
         caption=_components_caption(table, variance.reference),
-        alternative="Dots with 95 % intervals: strain-equivalent standard deviation of each level of "
-        "nesting, panels "
-        "for zero, mid range and full scale, generations apart.",
+        alternative="Dots with 95 % intervals on a logarithmic axis: strain-equivalent standard deviation "
+        "of each "
+        "level of nesting, panels for zero, mid range and full scale, generations apart.",
         traces=tuple(traces),
-        layout=made | {"margin": {"l": 150, "t": 46}},
+        layout=made | {"margin": {"l": 176, "t": 46}},
         table="variance_in_strain",
-        note="Intervals are profile-likelihood 95 % limits. One that starts at zero is not distinguishable "
-        "from zero; "
-        "one cut at the edge goes on.",
-        height=150 + 44 * len(levels),
+        note="Logarithmic. Bars are 95 % limits by profile likelihood; one that runs out on the left is not "
+        "distinguishable from zero, one that runs out on the right goes on. A thin line without a dot: the "
+        "design gives limits only.",
+        height=150 + 46 * len(levels),
     )
 
 
-def _upper_end(table: pd.DataFrame, edge: float) -> float:
-    tops = pd.concat([table["strain_sd"], table["high"].clip(upper=edge)]).dropna()
-    return float(tops.max()) * 1.06 or 1.0
+def _edges(table: pd.DataFrame) -> tuple[float, float]:
+    """Ends of the logarithmic axis: below the smallest estimate, and where limits beyond are cut."""
+    estimates = table["strain_sd"].dropna()
+    positive = estimates[estimates > 0]
+    if positive.empty:
+        return 1e-5, 1.0
+    return float(positive.min()) / 2.5, float(positive.max()) * 2.5
 
 
-def _component_trace(
+def _component_traces(
     rows: pd.DataFrame,
-    levels: list[str],
-    shift: float,
-    generation: str,
-    generations: tuple[str, ...],
+    heights: list[float],
+    style: palette.GenerationStyle,
+    edges: tuple[float, float],
     factor: float,
     unit: str,
-    edge: float,
     axes: str,
-) -> Trace:
-    text = [
-        f"{generation}, {level_words(str(r['called']))}: {_sd_words(r, factor, unit)}"
-        for r in rows.to_dict("records")
+) -> list[Trace]:
+    """Dots with bars, and for components with limits only a thin line up to the upper one."""
+    rows = rows.assign(_height=heights)
+    low = rows["low"].clip(*edges).fillna(rows["strain_sd"])
+    high = rows["high"].clip(*edges).fillna(rows["strain_sd"])
+    rows = rows.assign(_low=low, _high=high)
+    stated = rows[rows["strain_sd"] > edges[0]]
+    limits_only = rows[~(rows["strain_sd"] > edges[0]) & rows["high"].notna()]
+    made = [
+        line(
+            [r["_low"] * factor, r["_high"] * factor],
+            [r["_height"]] * 2,
+            colour=style.colour,
+            dash="dot",
+            width=1,
+            text=[_component_sentence(r, factor, unit)] * 2,
+            axes=axes,
+        )
+        for r in limits_only.to_dict("records")
     ]
-    return intervals(
-        rows["strain_sd"] * factor,
-        rows["low"] * factor,
-        rows["high"].clip(upper=edge) * factor,
-        [levels.index(str(level)) + shift for level in rows["level"]],
-        style=palette.generation_style(generation, generations),
-        name=generation,
-        text=text,
+    dots = intervals(
+        stated["strain_sd"] * factor,
+        stated["_low"] * factor,
+        stated["_high"] * factor,
+        stated["_height"],
+        style=style,
+        text=[_component_sentence(r, factor, unit) for r in stated.to_dict("records")],
         axes=axes,
     )
+    return [*made, dots]
 
 
-def _sd_words(row: Mapping[Hashable, Any], factor: float, unit: str) -> str:
-    return numbers.interval(row["strain_sd"] * factor, row["low"] * factor, row["high"] * factor, unit)
+def _component_sentence(row: Mapping[Hashable, Any], factor: float, unit: str) -> str:
+    return f"{row['generation']}, {level_words(str(row['called']))}: {_sd_words(row, factor, unit)}"
 
 
-def _generation_key(generations: tuple[str, ...]) -> list[Layout]:
-    """Direct labels that tell generations apart, above the first panel; none for a single generation."""
+def _sd_words(row: Mapping[Hashable, Any], factor: float, unit: str = "") -> str:
+    """An SD with its interval; its upper limit alone where the design gives no more."""
+    estimate, low, high = (float(row[key]) * factor for key in ("strain_sd", "low", "high"))
+    if math.isnan(estimate) and math.isfinite(high):
+        return f"at most {numbers.significant(high, 2, unit)}"
+    return numbers.interval(estimate, low, high, unit)
+
+
+def _generation_key(generations: tuple[str, ...], panels: int) -> list[Layout]:
+    """Direct labels that tell generations apart, above the last panel; none for a single generation."""
     if len(generations) < 2:
         return []
+    styles = [palette.generation_style(g, generations) for g in generations]
     return [
         label(
-            f"{_MARKS.get(palette.generation_style(g, generations).symbol, '●')} {g}",
-            0.98,
+            f"{_MARKS.get(style.symbol, '●')} {generation}",
             1.0,
-            colour=palette.generation_style(g, generations).colour,
+            1.0,
+            colour=style.colour,
             anchor="right",
-            shift=(0, -12 - 17 * i),
+            axes=panel(panels - 1),
+            shift=(-110 * (len(generations) - 1 - i), 26),
             paper=True,
         )
-        for i, g in enumerate(generations)
+        for i, (generation, style) in enumerate(zip(generations, styles, strict=True))
     ]
 
 
@@ -413,23 +439,20 @@ def _tables(variance: Variance) -> Iterable[Table]:
     factor, unit = variance.reference.shown_factor, variance.reference.shown_unit
     generation = Column("generation", "Generation", kind="text")
     yield Table(
-        "variance_in_strain",
-        "Every component as strain-equivalent SD with its 95 % interval.",
-        _shares_in_percent(_with_words(variance.variance_in_strain)),
+        "components_in_strain",
+        f"Every component as strain-equivalent SD in {unit}, with its 95 % interval."
+        if unit == "%"
+        else f"Every component as SD in {unit}, with its 95 % interval.",
+        _side_by_side(variance.variance_in_strain, factor),
         (
             generation,
-            Column("_words", "Component", kind="text"),
-            Column("place", "Place", kind="text"),
-            Column("strain_sd", "SD", unit, factor=factor, interval=("low", "high")),
-            Column(
-                "_share",
-                "Share of the variance",
-                "%",
-                interval=("_share_low", "_share_high"),
-                missing="withheld",
-            ),
+            Column("words", "Component", kind="text"),
+            *(Column(place, f"SD {words}", unit, kind="text") for place, words in PLACES.items()),
+            Column("share", "Share of the variance at mid range", "%", kind="text"),
             Column("label", "The design says", kind="text"),
         ),
+        source="variance_in_strain",
+        note="Shares are of variances. Where only limits are stated, shares are withheld.",
     )
     yield Table(
         "variance_components",
@@ -515,12 +538,29 @@ def _precision_and_tests(variance: Variance, generation: Column, factor: float, 
     )
 
 
-def _shares_in_percent(frame: pd.DataFrame) -> pd.DataFrame:
-    return frame.assign(
-        _share=frame["share"] * 100,
-        _share_low=frame["share_low"] * 100,
-        _share_high=frame["share_high"] * 100,
-    )
+def _side_by_side(table: pd.DataFrame, factor: float) -> pd.DataFrame:
+    """Return one row a generation and component: its SD at each place, its share, its label."""
+    made = []
+    for (generation, level), rows in table.groupby(["generation", "level"], sort=False):
+        by_place = {str(r["place"]): r for r in rows.to_dict("records")}
+        middle = by_place.get("mid", next(iter(by_place.values())))
+        sds = {place: _sd_words(by_place[place], factor) if place in by_place else "" for place in PLACES}
+        made.append(
+            {
+                "generation": generation,
+                "words": level_words(str(middle["called"])),
+                **sds,
+                "share": "" if level == "total" else _share_words(middle),
+                "label": "" if pd.isna(middle["label"]) else str(middle["label"]),
+            }
+        )
+    return pd.DataFrame(made, columns=["generation", "words", *PLACES, "share", "label"])
+
+
+def _share_words(row: Mapping[Hashable, Any]) -> str:
+    if pd.isna(row["share"]):
+        return "withheld"
+    return numbers.interval(row["share"] * 100, row["share_low"] * 100, row["share_high"] * 100)
 
 
 def _with_words(frame: pd.DataFrame, column: str = "called") -> pd.DataFrame:

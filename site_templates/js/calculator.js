@@ -70,10 +70,11 @@
     return answerIn(record, answer);
   }
 
-  /* Lengths have a model of their own: in them the rest length cancels. */
+  /* Lengths have a line of their own, in which the rest length cancels. */
   function lengthWords(record, signal, m) {
-    if (record.length === null) return "rest length not known";
-    const answer = inverseReading(record.length, signal, m);
+    const line = record.length_line;
+    if (!line || line.slope === undefined) return "rest length not known";
+    const answer = inverseReading(Object.assign({}, record, line), signal, m);
     return words({ reference_name: "length" }, answer);
   }
 
