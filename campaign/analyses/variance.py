@@ -362,7 +362,7 @@ def _fit_all(
 
 
 def _limits_at(model: VarianceModel, what: str) -> tuple[str, ...]:
-    """Where limits are found: everywhere for a generation's signal, at mid range for its ratio and for all."""
+    """Where limits are found: everywhere for a generation's signal, at mid range for its ratio, for all."""
     if model.generation == "all":
         return ("mid",) if what == SIGNAL else ()
     return (*PLACES, "slope") if what == SIGNAL else ("mid",)

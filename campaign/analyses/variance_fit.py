@@ -33,9 +33,6 @@ PLACES = ("zero", "mid", "full")
 EVERYWHERE = "everywhere"
 """Place of a component that is the same along the range."""
 
-PRECISION = 0.002
-"""How near the root of a profile comes to 1.96; more would cost time and change no digit that is shown."""
-
 NAN = float("nan")
 
 
@@ -191,7 +188,7 @@ def _intervals(
     requests = list(_requests(model, places))
     stated = (*limits_at, EVERYWHERE) if limits_at and fit.method == "REML" else ()
     wanted = [request for request in requests if request[1] in stated]
-    found = profile_intervals(fit, [(name, weights) for name, _, weights in wanted], precision=PRECISION)
+    found = profile_intervals(fit, [(name, weights) for name, _, weights in wanted])
     limits = {(name, place): i for (name, place, _), i in zip(wanted, found, strict=True)}
     intervals = {}
     for name, place, weights in requests:

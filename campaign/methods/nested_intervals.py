@@ -1,10 +1,11 @@
 """Profile intervals of standard deviations, of totals and of ratios, of a nested fit.
 
-All numbers of the model are written as absolute factors Λ (in units of σ̂) and log σ. The SD of an effect in a direction
-v is |Λ'v|; scaling what Λ has along v gives it any length while everything else stays free, and the same holds for a
-set of SDs whose squares add up to a total, and for a ratio of two such lengths. The profile is the criterion minimised
-under that condition. Its interval holds the lengths whose profile lies less than a quantile of χ² with one degree of
-freedom above the minimum; a lower limit is exactly zero where the profile at zero stays below that.
+All numbers of the model are written as absolute factors Λ (in units of σ̂) and log σ. The SD of an effect in
+a direction v is |Λ'v|; scaling what Λ has along v gives it any length while everything else stays free, and
+the same holds for a set of SDs whose squares add up to a total, and for a ratio of two such lengths. The
+profile is the criterion minimised under that condition. Its interval holds the lengths whose profile lies
+less than a quantile of χ² with one degree of freedom above the minimum; a lower limit is exactly zero where
+the profile at zero stays below that.
 """
 
 from __future__ import annotations
@@ -24,8 +25,9 @@ from campaign.methods.nested_parameters import Layout, replicates_at_once
 RESIDUAL = "residual"
 """Name under which the residual SD is asked for."""
 
-FULL_PRECISION = 1e-5
-"""How near the root of the profile comes to that of the quantile, unless less is asked for."""
+_PRECISION = 1e-3
+"""How near the root of the profile must be to that of the quantile before a last Newton step, whose error is of the
+order of the square of this."""
 
 
 @dataclass(frozen=True)
@@ -80,7 +82,6 @@ def profile_intervals(
     fit: NestedModelFit,
     requests: Sequence[tuple[str, FloatArray | Sequence[float]]],
     level: float = 0.95,
-    precision: float = FULL_PRECISION,
 ) -> list[Interval]:
     """Profile intervals of many SDs at once.
 
@@ -92,12 +93,9 @@ def profile_intervals(
         (name, direction) each, as in :func:`profile_interval`.
     level
         Coverage.
-    precision
-        How near the root of the profile comes to that of the quantile (1.96): with 0.002 coverage is right to
-        0.0002 and a limit to a thousandth of the interval, for a third of the work less.
     """
     targets = [_Target((_part(fit, name, direction),)) for name, direction in requests]
-    return _profile(fit, targets, level, precision)
+    return _profile(fit, targets, level)
 
 
 def profile_total(
@@ -299,7 +297,7 @@ class _Profiles:
     def _to_free(
         self, vectors: FloatArray, which: IntArray, state: _Scaled, outer: Factors, outer_sigma: FloatArray
     ) -> tuple[FloatArray, FloatArray]:
-        """Gradient with respect to free vectors, and to the length, from that with respect to scaled factors."""
+        """Gradient with respect to free vectors, and to the length, from that to scaled factors."""
         sigma = np.exp(vectors[-1])
         residual = self.top.residual[which]
         tops = [v[:, which] for v in self.top.directions]
@@ -330,8 +328,8 @@ def _square(direction: FloatArray) -> FloatArray:
 class _Limit:
     """One limit while it is sought.
 
-    `inside` and `outside` are lengths whose profile lies below and above the cutoff; `outside` is NaN as long as none
-    is known. `vector` and `inverse` are the last minimum and the inverse second derivative there.
+    `inside` and `outside` are lengths whose profile lies below and above the cutoff; `outside` is NaN as long
+    as none is known. `vector` and `inverse` are the last minimum and the inverse second derivative there.
     """
 
     member: int
@@ -362,7 +360,9 @@ def _profile(fit: NestedModelFit, targets: Sequence[_Target], level: float) -> l
         swapped = [target.swapped if k in infinite else target for k, target in enumerate(targets)]
         found = _profile(fit, swapped, level)
         return [
-            Interval(np.inf, 1.0 / interval.high if interval.high else np.inf, np.inf) if k in infinite else interval
+            Interval(np.inf, 1.0 / interval.high if interval.high else np.inf, np.inf)
+            if k in infinite
+            else interval
             for k, interval in enumerate(found)
         ]
     limits = _limits(profiles, float(np.sqrt(stats.chi2.ppf(level, 1))), _least(fit))
@@ -436,7 +436,7 @@ def _first_limits(profiles: _Profiles, cutoff: float) -> list[tuple[_Limit, _Lim
         tangent = inverse - np.outer(response, response) / spread
         base = max(float(estimate), float(lengths[m]))
         for_zero = profiles.top.residual[m] == 0.0
-        down = estimate * np.exp(-reach / max(estimate, 1e-300)) if estimate > 0.0 else 0.0
+        down = float(estimate) * np.exp(-reach / max(estimate, 1e-300)) if estimate > 0.0 else 0.0
         if for_zero and down < 0.2 * estimate:
             down = 0.0
         up = base * np.exp(min(reach / base, 1.0))
@@ -472,7 +472,7 @@ def _length_gradient(profiles: _Profiles, start: FloatArray, m: int) -> FloatArr
 
 
 def _advance(limit: _Limit, root: float, slope: float, cutoff: float) -> None:
-    """Take in the root of the profile at the current length and its slope; choose the next length, or end."""
+    """Take in the root of the profile at the current length and its slope; choose the next, or end."""
     length = limit.length
     if length == 0.0 and root <= cutoff:
         limit.limit = 0.0
@@ -482,7 +482,7 @@ def _advance(limit: _Limit, root: float, slope: float, cutoff: float) -> None:
     else:
         limit.outside = length
     step = _newton(length, root, slope, cutoff)
-    if abs(root - cutoff) < 2e-3 and not np.isnan(step):
+    if abs(root - cutoff) < _PRECISION and not np.isnan(step):
         limit.limit = step
     elif limit.looks > 40:
         limit.limit = np.inf if np.isnan(limit.outside) and limit.upper else length
@@ -491,7 +491,7 @@ def _advance(limit: _Limit, root: float, slope: float, cutoff: float) -> None:
 
 
 def _newton(length: float, root: float, slope: float, cutoff: float) -> float:
-    """Where the root of the profile would reach the cutoff, were it straight over log length; NaN if it is flat."""
+    """Where the root would reach the cutoff, were it straight over log length; NaN if it is flat."""
     if length == 0.0 or slope == 0.0 or root < 1e-6:
         return float("nan")
     return float(length * np.exp(np.clip((cutoff - root) / (slope * length), -30.0, 30.0)))
