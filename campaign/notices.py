@@ -126,6 +126,7 @@ NOTICE_CODES: dict[str, str] = {
     "register-row-nameless": "a row of a register does not name its thing; it is not used",
     "register-row-repeated": "two rows of a register say the same of one thing; read once",
     "register-row-conflict": "two rows of a register say different things of one thing; neither is believed",
+    "register-row-refused": "what a register says of a trial's file, module or sensor cannot be believed",
     "register-file-missing": "trials.csv names a file that is not in the folder",
     "register-file-unnamed": "trials.csv names a file that is no recording by [recordings] files",
     "rest-length-unreadable": "a rest length is no positive length; it is taken as unknown",

@@ -239,9 +239,7 @@ def _check_name(file: str, name: NameReading) -> list[Notice]:
 def _check_row(file: str, row: RegisterRow | None, rules: NamingRules) -> list[Notice]:
     reason = rules.registers.trials.refused.get((plain_path(file),))
     if reason is not None:
-        return [
-            Notice("register-row-conflict", "set aside", file, None, None, reason, "not used", "keep one row")
-        ]
+        return [_aside(file, "register-row-refused", reason, "mend the row")]
     if row is None or row.get("use").lower() in YES:
         return []
     if row.get("use").lower() not in NO:
@@ -305,7 +303,7 @@ def _add_module(
     if module is None:
         return []
     if (reason := rules.registers.modules.refused.get((module,))) is not None:
-        return [_aside(file, "register-row-conflict", reason)]
+        return [_aside(file, "register-row-refused", reason)]
     row = rules.module_rows.get((module,))
     if row is None:
         return _unknown_module(file, module, rules)
@@ -345,7 +343,7 @@ def _unknown_module(file: str, module: str, rules: NamingRules) -> list[Notice]:
 def fate_of_sensor(file: str, module: str, sensor: str, rules: NamingRules) -> Notice | None:
     """Return the notice that ``sensors.csv`` sets a sensor aside, or ``None``."""
     if (reason := rules.registers.sensors.refused.get((module, sensor))) is not None:
-        return _aside(file, "register-row-conflict", reason)
+        return _aside(file, "register-row-refused", reason)
     row = rules.sensor_rows.get((module, sensor))
     if row is None or not FATE_SET_ASIDE.search(row.get("fate")):
         return None
@@ -368,7 +366,8 @@ def _check_needed(
         what = f"nobody says the {' and the '.join(missing)} of this recording{hint}"
         remedy = "name it in trials.csv, a preamble line, the file's name or [recordings.same]"
         return [Notice("identity-missing", "set aside", file, None, None, what, "not used", remedy)]
-    if "generation" not in values and rules.generations_are_named:
+    disbelieved = (values["module"],) in rules.registers.modules.refused
+    if "generation" not in values and rules.generations_are_named and not disbelieved:
         what = f"nobody says the generation of module '{shown(values['module'])}', though others have one"
         remedy = "add it to modules.csv"
         return [Notice("generation-missing", "set aside", file, None, None, what, "not used", remedy)]

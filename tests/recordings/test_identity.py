@@ -194,7 +194,7 @@ def test_use_yes_changes_nothing(use: str) -> None:
 
 def test_two_rows_for_one_file_set_it_aside() -> None:
     known = registers(trials="file,session\nM01_AB_staircase_r1.csv,1\nM01_AB_staircase_r1.csv,2\n")
-    assert codes(settle(recording(), describe(), known)) == ["register-row-conflict"]
+    assert codes(settle(recording(), describe(), known)) == ["register-row-refused"]
 
 
 def test_modules_give_generation_and_batch() -> None:
@@ -217,7 +217,7 @@ def test_a_module_without_generation_is_set_aside_where_others_have_one() -> Non
 
 def test_a_module_that_its_register_contradicts_is_set_aside() -> None:
     known = registers(modules="module,generation\nM01,first\nM01,second\n")
-    assert "register-row-conflict" in codes(settle(recording(), describe(), known))
+    assert "register-row-refused" in codes(settle(recording(), describe(), known))
 
 
 def test_a_module_set_aside_by_its_fate_can_be_put_back() -> None:

@@ -230,6 +230,16 @@ def test_some_recordings_naming_a_generation_sets_the_others_aside(
     assert "generation-missing" in codes(intake)
 
 
+def test_an_id_that_a_register_refuses_sets_its_trials_aside_once(
+    make_campaign: CampaignMaker, staircase: StaircaseMaker
+) -> None:
+    modules = "module,generation\nM01,=first\nM02,second\n"
+    files = {ONE: staircase(), "trials/M02_AB_staircase_r1.csv": staircase(1), "modules.csv": modules}
+    intake = inspect_folder(make_campaign(files))
+    assert fates(intake)[ONE] == "set aside"
+    assert [n.code for n in intake.notices if n.file == ONE] == ["register-row-refused"]
+
+
 def test_ids_that_differ_in_case_only_are_kept_apart_and_noted(
     make_campaign: CampaignMaker, staircase: StaircaseMaker
 ) -> None:
