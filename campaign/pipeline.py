@@ -136,7 +136,7 @@ def _readings(
     wanted: Callable[[TrialKey], bool],
     sensors_aside: frozenset[tuple[str, str]] = frozenset(),
 ) -> Readings:
-    """Put the readings of wanted trials together; those of sensors aside stay in the table and are not used."""
+    """Put the readings of wanted trials together; those of sensors aside are in it, marked as not used."""
     parts = [
         found.readings
         for key, found in staircases.items()
