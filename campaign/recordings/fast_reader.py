@@ -36,7 +36,7 @@ class PlainTable:
 
 
 def read_plain(tables: Sequence[PlainTable]) -> list[npt.NDArray[np.float64] | None]:
-    """Read plain tables; returns arrays of shape (rows, fields) in the given order.
+    """Read plain tables; returns arrays of shape (rows, fields) in the given order, NaN for empty fields.
 
     ``None`` stands for a table that the reader refuses (``1.2.3`` is made of the characters of numbers, too):
     such a table goes the careful road whole.
@@ -84,6 +84,7 @@ def _parse(data: bytes, fields: int) -> npt.NDArray[np.float64] | None:
             index_col=False,
             engine="c",
             keep_default_na=False,
+            na_values=[""],
             skip_blank_lines=False,
             low_memory=False,
         )

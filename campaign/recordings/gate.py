@@ -1,12 +1,13 @@
 """The gate: checks on the bytes of a table that decide which lines a fast reader may have.
 
 A line is *plain* when it has the right number of separators, nothing but the characters of numbers between
-them, no empty field and no field too long for a number. What such a line means is the same for every reader;
-every other line goes the careful road.
+them, no field too long for a number and at least one that is not empty. What such a line means is the same
+for every reader; every other line goes the careful road. Quotation marks around a number are taken off first.
 """
 
 from __future__ import annotations
 
+import re
 from dataclasses import dataclass
 
 import numpy as np
@@ -49,6 +50,7 @@ def pass_gate(body: bytes, layout: Layout) -> Gated:
     """
     if not body or not _has_gate(layout):
         return _all_careful(body.count(b"\n"))
+    body = _unquoted(body, layout)
     if _is_plain_throughout(body, layout):
         lines = np.arange(body.count(b"\n"), dtype=np.int64)
         return Gated(_normalised(body, layout), lines, lines[:0])
@@ -58,6 +60,14 @@ def pass_gate(body: bytes, layout: Layout) -> Gated:
     everything = np.arange(len(mask), dtype=np.int64)
     kept = np.frombuffer(body, np.uint8)[np.repeat(mask, lengths)].tobytes()
     return Gated(_normalised(kept, layout), everything[mask], everything[~mask])
+
+
+def _unquoted(body: bytes, layout: Layout) -> bytes:
+    """Return the table without the quotation marks of fields that hold nothing but characters of numbers."""
+    if b'"' not in body or layout.separator == " ":
+        return body
+    mark, numeric = re.escape(layout.separator.encode()), re.escape(_numeric(layout))
+    return re.sub(rb'(?<![^%b\n])"([%b]+)"(?![^%b\n])' % (mark, numeric, mark), rb"\1", body)
 
 
 def _all_careful(lines: int) -> Gated:
@@ -87,9 +97,9 @@ def _is_plain_throughout(body: bytes, layout: Layout) -> bool:
 
 
 def _fields_fit(body: bytes, layout: Layout) -> bool:
-    """Whether every field has the length of a number, at least one character.
+    """Whether every field has the length of a number and none is empty.
 
-    In short lines no field can be too long; only tables with longer ones are looked at field by field.
+    In short lines no field can be too long; tables with longer ones are looked at line by line.
     """
     data = np.frombuffer(body, np.uint8)
     ends = data == 10
@@ -101,7 +111,7 @@ def _fields_fit(body: bytes, layout: Layout) -> bool:
     if marks[0] or touching.any():
         return False
     longest = np.diff(np.flatnonzero(ends), prepend=-1).max()
-    return bool(longest <= LONGEST_NUMBER or _plain_mask(body, layout)[0].all())
+    return bool(longest <= LONGEST_NUMBER)
 
 
 def _plain_mask(body: bytes, layout: Layout) -> tuple[npt.NDArray[np.bool_], npt.NDArray[np.int64]]:
@@ -113,18 +123,17 @@ def _plain_mask(body: bytes, layout: Layout) -> tuple[npt.NDArray[np.bool_], npt
     is_separator = data == separator
     allowed = np.zeros(256, np.bool_)
     allowed[list(_numeric(layout) + layout.separator.encode() + b"\n")] = True
-    before = np.concatenate(([10], data[:-1]))
-    mark, mark_before = is_separator | (data == 10), (before == separator) | (before == 10)
-    empty = mark & mark_before
-    if layout.trailing_separator:
-        empty &= ~((data == 10) & (before == separator))
-    bad = ~allowed[data] | empty
+    marks = is_separator | (data == 10)
+    bad = ~allowed[data]
+    if layout.separator == " ":
+        bad[1:] |= marks[1:] & marks[:-1]
+        bad[0] |= marks[0]
     counts = np.add.reduceat(is_separator, starts, dtype=np.int64)
     expected = layout.fields - (0 if layout.trailing_separator else 1)
-    plain = (counts == expected) & ~np.logical_or.reduceat(bad, starts)
+    plain = (counts == expected) & (ends - starts > expected) & ~np.logical_or.reduceat(bad, starts)
     if layout.trailing_separator:
-        plain &= (ends > starts) & (data[np.maximum(ends - 1, 0)] == separator)
-    plain &= _longest_field(mark, starts) <= LONGEST_NUMBER
+        plain &= data[np.maximum(ends - 1, 0)] == separator
+    plain &= _longest_field(marks, starts) <= LONGEST_NUMBER
     return plain, ends - starts + 1
 
 

@@ -141,7 +141,9 @@ def _outcome(
     plan: TablePlan | None = None,
     recording: Recording | None = None,
 ) -> ReadOutcome:
-    placed = sorted((notice.at(item.file) for notice in notices), key=lambda n: (n.line or 0, n.column or 0))
+    placed = sorted(
+        (notice.at(item.file) for notice in notices), key=lambda n: (n.line or 0, n.column or 0, n.code)
+    )
     left_alone, rules_used = (
         (plan.left_alone, plan.rules_used) if plan is not None else ((), frozenset[int]())
     )
@@ -223,20 +225,37 @@ def _joined(table: _Table, plain: FloatArray | None) -> _Rows:
         plain, fast_lines = np.empty((0, table.layout.fields)), fast_lines[:0]
         careful_lines = np.union1d(table.gated.plain_lines, table.gated.other_lines)
     else:
-        finite = np.isfinite(plain).all(axis=1)
+        finite = ~np.isinf(plain).any(axis=1)
         careful_lines = table.gated.other_lines
         if not finite.all():
             careful_lines = np.union1d(careful_lines, fast_lines[~finite])
             plain, fast_lines = plain[finite], fast_lines[finite]
     parsed = _parsed(table, careful_lines)
-    fast = plain[:, places]
     lines = fast_lines + table.layout.first_row_line
+    before = lines < _unclosed_line(parsed)
+    fast, lines = plain[before][:, places], lines[before]
+    remarks = (*parsed.remarks, *_empty_fields(fast, lines, columns))
     if not parsed.line_numbers:
-        return _Rows(fast, lines, (), tuple(parsed.remarks))
+        return _Rows(fast, lines, (), remarks)
     values = np.concatenate([fast, parsed.values(len(columns))])
     lines = np.concatenate([lines, np.array(parsed.line_numbers, dtype=np.int64)])
     order = np.argsort(lines, kind="stable")
-    return _Rows(values[order], lines[order], tuple(map(tuple, parsed.texts)), tuple(parsed.remarks))
+    return _Rows(values[order], lines[order], tuple(map(tuple, parsed.texts)), remarks)
+
+
+def _unclosed_line(parsed: ParsedLines) -> float:
+    """Return the line whose quotation mark is not closed: what follows it counts for nothing."""
+    return min((r.line or 0 for r in parsed.remarks if r.code == "quote"), default=np.inf)
+
+
+def _empty_fields(values: FloatArray, lines: LineNumbers, columns: Sequence[ColumnPlan]) -> list[Remark]:
+    """Remark on what the fast reader found empty, one remark a column."""
+    remarks = []
+    for index in np.flatnonzero(np.isnan(values).any(axis=0)):
+        empty = np.isnan(values[:, index])
+        first = int(lines[np.argmax(empty)])
+        remarks.append(Remark("missing-token", first, columns[int(index)].position, "", int(empty.sum())))
+    return remarks
 
 
 def _parsed(table: _Table, indices: LineNumbers) -> ParsedLines:

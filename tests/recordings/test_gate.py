@@ -30,9 +30,9 @@ def test_plain_tables_go_through_whole_and_in_one_dialect():
     [
         b"1,2",
         b"1,2,3,4",
-        b"1,,3",
-        b",2,3",
-        b"1,2,",
+        b",,",
+        b'"",2,"3""',
+        b'1,"2,3"',
         b"1,2,x",
         b'1,2,"3"',
         b"1,2,3 ",
@@ -50,10 +50,18 @@ def test_other_lines_are_held_back_and_only_they(line, place):
     assert gated.plain == b"1,2,3\n4,5,6\n7,8,9\n"
 
 
+def test_empty_fields_and_quoted_numbers_are_plain():
+    gated = pass_gate(b'1,,3\n,2,\n"4","-5.5",6\n"",8,9\n', layout())
+    assert gated.other_lines.tolist() == [3]
+    assert gated.plain == b"1,,3\n,2,\n4,-5.5,6\n"
+    [read] = read_plain([PlainTable(gated.plain, 3, 3)])
+    assert np.array_equal(read, [[1, np.nan, 3], [np.nan, 2, np.nan], [4, -5.5, 6]], equal_nan=True)
+
+
 def test_trailing_separators_are_part_of_a_plain_line():
     gated = pass_gate(b"1,2,3,\n4,5,6,\n7,8,9\n1,2,,\n1,2,3,\n", layout(trailing=True))
-    assert gated.other_lines.tolist() == [2, 3]
-    assert gated.plain == b"1,2,3\n4,5,6\n1,2,3\n"
+    assert gated.other_lines.tolist() == [2]
+    assert gated.plain == b"1,2,3\n4,5,6\n1,2,\n1,2,3\n"
     assert pass_gate(b"1,2,3,\n4,5,6,\n", layout(trailing=True)).plain == b"1,2,3\n4,5,6\n"
 
 

@@ -42,6 +42,8 @@ def healthy(rng: random.Random) -> tuple[bytes, Description]:
     separator, decimal = rng.choice(
         [(",", "."), (";", ","), ("\t", "."), (" ", "."), (";", "."), ("\t", ",")]
     )
+    sparse = 0.4 if separator != " " and rng.random() < 0.15 else 0.0
+    quoted = separator != " " and rng.random() < 0.15
     lines = []
     for i in range(rows):
         values = (
@@ -51,7 +53,8 @@ def healthy(rng: random.Random) -> tuple[bytes, Description]:
             rng.gauss(0, 0.3),
             rng.gauss(0, 1),
         )
-        lines.append(separator.join(f"{v:.4f}" for v in values).replace(".", decimal))
+        fields = ["" if rng.random() < sparse else f"{v:.4f}".replace(".", decimal) for v in values]
+        lines.append(separator.join(f'"{field}"' if quoted and field else field for field in fields))
     trailing = separator if separator != " " and rng.random() < 0.15 else ""
     positions = rng.random() < 0.15
     header = separator.join(("time_s", "stretch_mm", "capacitance_pF", "pressure_kPa", "force_N"))
