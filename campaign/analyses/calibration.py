@@ -33,6 +33,7 @@ from campaign.analyses.calibration_spread import hysteresis_frame, repeatability
 from campaign.analyses.length_lines import LengthLine, length_line
 from campaign.analyses.sensor_lines import sensor_lines_frame
 from campaign.analyses.used_readings import REST, UsedReadings, used_readings
+from campaign.analyses.weighted_readings import with_weights
 from campaign.methods.calibration_line import t_quantile
 from campaign.methods.inverse_reading import ReadingModel
 from campaign.notices import Notice
@@ -200,7 +201,7 @@ def analyse_calibration(
         With empty tables where no sensor has a line.
     """
     reference = readings.reference
-    used = used_readings(readings, sensors)
+    used = with_weights(used_readings(readings, sensors))
     lines = branch_lines(used, reference, description)
     fits = ordinary_fits(used, lines)
     table = influence_of_readings(readings.table, used, lines, fits)

@@ -9,6 +9,7 @@ import numpy.typing as npt
 
 from campaign.analyses.calibration_lines import POOLED, UNKNOWN, BranchLine
 from campaign.analyses.used_readings import UsedReadings
+from campaign.analyses.weighted_readings import STATED_GAIN
 from campaign.recordings.description import Description
 from campaign.recordings.recording import ReferenceQuantity
 
@@ -80,11 +81,17 @@ def campaign_labels(
 ) -> dict[str, str]:
     """Return labels by short name; only those that apply.
 
-    ``time_confounded``, ``full_scale``, ``reference``, ``stretch_exponent``, ``gauge_factor``, ``runs``.
+    ``time_confounded``, ``full_scale``, ``reference``, ``stretch_exponent``, ``gauge_factor``, ``runs``,
+    ``variance_source``, ``weights`` (readings are unweighted where it is missing).
     """
     if not lines:
         return {}
     labels = {"full_scale": _full_scale_label(lines, description, reference)}
+    if used.weighting_gain >= STATED_GAIN:
+        labels["weights"] = (
+            "readings weighted by their scatter, which lowers the standard error of the slope within "
+            f"a run by {100 * used.weighting_gain:.0f} %"
+        )
     confounded = time_confounded(used, np.arange(len(used.run_minutes)))
     if confounded:
         labels["time_confounded"] = confounded

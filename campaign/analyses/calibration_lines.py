@@ -240,7 +240,7 @@ def _fit_runs(used: UsedReadings, rows: IntArray, branch: str, span: tuple[float
         return None
     codes, run = _codes(used.run[rows])
     x, y = used.x[rows], used.signal[rows]
-    lines = fit_lines(x, y, run, len(codes))
+    lines = fit_lines(x, y, run, len(codes), used.weights[rows])
     degrees = float(np.sum(lines.counts - 2))
     own = float(np.sum(lines.residual_sums_of_squares)) / degrees if degrees > 0 else float("nan")
     direction = _sides(used.direction[rows])
@@ -279,9 +279,9 @@ def _rows_of_fitted_runs(used: UsedReadings, rows: IntArray, fewest: int) -> Int
 
 def _inverse_design(lines: GroupLines, place: int, centre: float) -> FloatArray:
     """(X'X)⁻¹ of one run for (value at *centre*, slope)."""
-    count, sxx = float(lines.counts[place]), float(lines.x_sums_of_squares[place])
+    mass, sxx = float(lines.masses[place]), float(lines.x_sums_of_squares[place])
     gap = centre - float(lines.x_means[place])
-    return np.array([[1.0 / count + gap**2 / sxx, gap / sxx], [gap / sxx, 1.0 / sxx]])
+    return np.array([[1.0 / mass + gap**2 / sxx, gap / sxx], [gap / sxx, 1.0 / sxx]])
 
 
 def _sides(direction: IntArray) -> IntArray:

@@ -42,6 +42,10 @@ class UsedReadings:
         Shape (runs,): whether the run only ever moves one way (level and time are not told apart).
     run_minutes
         Shape (runs,): minutes between the first and the last reading; NaN where time is not recorded.
+    weights
+        Shape (readings,): weights of the readings in the lines of runs, all 1 unless weighting matters.
+    weighting_gain
+        Share by which weighting lowers (or would lower) the standard error of the slope within a run.
     """
 
     table: pd.DataFrame
@@ -53,6 +57,8 @@ class UsedReadings:
     sensor: IntArray
     one_way_runs: BoolArray
     run_minutes: FloatArray
+    weights: FloatArray
+    weighting_gain: float = 0.0
 
     def column(self, name: str, rows: IntArray) -> FloatArray:
         """Values of a numeric column of the table at the places *rows*."""
@@ -94,6 +100,7 @@ def used_readings(readings: Readings, sensors: pd.DataFrame) -> UsedReadings:
         np.asarray(table.groupby(SENSOR_KEYS, sort=True).ngroup(), dtype=np.int64),
         one_way,
         minutes,
+        np.ones(len(table)),
     )
 
 

@@ -219,11 +219,12 @@ def _lack_of_fit(lack: float, first: int, error: float, second: int, count_a_lev
 class GroupLines:
     """Least-squares lines of many groups of readings (runs), about each group's own mean x.
 
-    All attributes have shape (groups,): count, mean of x and y, sum of squares of x, slope, and the
-    residual sum of squares. Groups without two distinct x have a slope of NaN.
+    All attributes have shape (groups,): count, sum of weights, mean of x and y, sum of squares of x, slope,
+    and the residual sum of squares. Groups without two distinct x have a slope of NaN.
     """
 
     counts: IntArray
+    masses: FloatArray
     x_means: FloatArray
     y_means: FloatArray
     x_sums_of_squares: FloatArray
@@ -240,22 +241,35 @@ class GroupLines:
         return np.asarray(self.y_means + self.slopes * (x - self.x_means))
 
 
-def fit_lines(x: FloatArray, y: FloatArray, group: IntArray, groups: int) -> GroupLines:
+def fit_lines(
+    x: FloatArray, y: FloatArray, group: IntArray, groups: int, weights: FloatArray | None = None
+) -> GroupLines:
     """Fit a least-squares line to every group of readings at once.
 
-    ``x``, ``y`` and ``group`` (codes from 0 to groups − 1) have shape (readings,).
+    Parameters
+    ----------
+    x, y, group
+        Shape (readings,); ``group`` codes from 0 to groups − 1.
+    groups
+        Number of groups.
+    weights
+        Shape (readings,), inverse to the variances of the readings; None: all 1. Means, sums of squares and
+        residual sums of squares are then weighted.
     """
+    w = np.ones(len(x)) if weights is None else weights
     counts = np.bincount(group, minlength=groups)
-    divisor = np.maximum(counts, 1)
-    x_means = np.bincount(group, x, minlength=groups) / divisor
-    y_means = np.bincount(group, y, minlength=groups) / divisor
+    mass = np.asarray(np.bincount(group, w, minlength=groups), dtype=np.float64)
+    divisor = np.where(mass > 0, mass, 1.0)
+    x_means = np.bincount(group, w * x, minlength=groups) / divisor
+    y_means = np.bincount(group, w * y, minlength=groups) / divisor
     dx, dy = x - x_means[group], y - y_means[group]
-    sxx = np.asarray(np.bincount(group, dx**2, minlength=groups), dtype=np.float64)
-    sxy = np.bincount(group, dx * dy, minlength=groups)
+    sxx = np.asarray(np.bincount(group, w * dx**2, minlength=groups), dtype=np.float64)
+    sxy = np.bincount(group, w * dx * dy, minlength=groups)
     usable = sxx > 1e-24 * np.maximum(x_means**2, 1e-300)
     slopes = np.divide(sxy, sxx, out=np.full(groups, np.nan), where=usable)
-    rss = np.asarray(np.bincount(group, (dy - slopes[group] * dx) ** 2, minlength=groups), dtype=np.float64)
-    return GroupLines(counts.astype(np.int64), x_means, y_means, sxx, slopes, rss)
+    residuals = dy - slopes[group] * dx
+    rss = np.asarray(np.bincount(group, w * residuals**2, minlength=groups), dtype=np.float64)
+    return GroupLines(counts.astype(np.int64), mass, x_means, y_means, sxx, slopes, rss)
 
 
 def common_quadratic(

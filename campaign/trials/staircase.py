@@ -9,11 +9,12 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
-from scipy import ndimage, stats
+from scipy import stats
 
 from campaign.methods.autocorrelation import StretchMeans, stretch_means
 from campaign.notices import Notice
 from campaign.recordings.recording import Trial
+from campaign.trials.plateaus import SHORTEST_PLATEAU, expand, find_plateaus
 from campaign.trials.readings import ReadingPart
 
 FloatArray = npt.NDArray[np.float64]
@@ -25,18 +26,6 @@ SETTLING_SHARE = 1.0 / 3.0
 
 SETTLED_RISK = 0.001
 """Risk, per trial and shared by its plateaus, of calling a settled plateau not settled."""
-
-SMALLEST_BAND = 0.0025
-"""Half-width of 'constant' as a share of the span of the reference, where its noise is smaller still."""
-
-MOTION_SHARE = 0.002
-"""Differences smaller than this share of the span of the reference are not motion."""
-
-SMALLEST_REST_SHARE = 1.0 / 6.0
-"""A log that rests for less than this share of its samples is no staircase (a sine rests at its ends too)."""
-
-SHORTEST_PLATEAU = 3
-"""Fewest samples that make a plateau."""
 
 
 @dataclass(frozen=True)
@@ -112,42 +101,6 @@ def plateau_directions(levels: FloatArray) -> npt.NDArray[np.str_]:
     after = np.where(after == 0.0, before, after)
     names = np.where(before >= 0.0, "rising", "falling")
     return np.asarray(np.where(before * after < 0.0, "turning", names))
-
-
-def find_plateaus(reference: FloatArray) -> tuple[IntArray, IntArray]:
-    """Find the stretches of constant reference in a log, in the order of its rows.
-
-    Parameters
-    ----------
-    reference
-        Shape (samples,), finite, any unit; noise, ramps, unequal dwells, up and down are all allowed.
-
-    Returns
-    -------
-    starts, stops
-        Shape (plateaus,): first sample and one past the last of each. Empty where there are none.
-
-    Notes
-    -----
-    Motion is told from rest by differences of neighbouring means over *h* samples, with the smallest *h*
-    for which the slower motions of the log stand clear of the reference noise. (The noise is taken from
-    second differences, which a steady ramp does not enter.) Rests at one level with only a flicker between
-    them are one plateau, and the edges lost to averaging are given back where the reference is already, or
-    still, at the level.
-    """
-    none = np.empty(0, dtype=np.int64)
-    span = float(np.ptp(reference)) if len(reference) else 0.0
-    noise = _reference_noise(reference)
-    if len(reference) < 2 * SHORTEST_PLATEAU or span <= 8.0 * noise:
-        return none, none
-    band = max(4.0 * noise, SMALLEST_BAND * span)
-    starts, stops = _rests(reference, noise, span)
-    starts, stops = _joined(reference, *_long_enough(starts, stops), band)
-    if len(starts) == 0:
-        return none, none
-    starts, stops = _long_enough(*_widened(reference, starts, stops, band))
-    rests = float(np.sum(stops - starts)) / len(reference)
-    return (starts, stops) if rests >= SMALLEST_REST_SHARE else (none, none)
 
 
 # --- tables
@@ -273,108 +226,11 @@ def _averaged_rows(
     lengths = stops - starts
     first = starts + np.ceil(lengths * SETTLING_SHARE).astype(np.int64)
     last = stops - (lengths >= 2 * SHORTEST_PLATEAU)
-    places, plateau = _expand(first, np.maximum(last, first + 1))
+    places, plateau = expand(first, np.maximum(last, first + 1))
     chosen = rows[places]
     finite = np.isfinite(trial.signal[chosen])
     counts = np.bincount(plateau[finite], minlength=len(starts)).astype(np.int64)
     return chosen[finite], counts[counts > 0], np.flatnonzero(counts)
-
-
-def _expand(starts: IntArray, stops: IntArray) -> tuple[IntArray, IntArray]:
-    """All whole numbers of the half-open intervals, one after another, with the interval each belongs to."""
-    lengths = stops - starts
-    owner = np.repeat(np.arange(len(starts)), lengths)
-    offsets = np.arange(int(lengths.sum())) - np.repeat(np.cumsum(lengths) - lengths, lengths)
-    return starts[owner] + offsets, owner
-
-
-def _reference_noise(reference: FloatArray) -> float:
-    """Standard deviation of the reference noise, robust, from second differences; 0 for a set-point."""
-    if len(reference) < 4:
-        return 0.0
-    second = np.diff(reference, n=2)
-    return float(np.median(np.abs(second)) / (0.6745 * np.sqrt(6.0)))
-
-
-def _rests(reference: FloatArray, noise: float, span: float) -> tuple[IntArray, IntArray]:
-    """Stretches without motion, at the finest averaging that tells motion from noise; none if none does."""
-    width = 1
-    while width <= max(len(reference) // 20, 1):
-        motion = _motion(reference, width)
-        noise_left = noise * np.sqrt(2.0 / width)
-        still = max(4.0 * noise_left, MOTION_SHARE * span)
-        moving = motion[motion > still]
-        if len(moving) and np.quantile(moving, 0.25) > 1.5 * still:
-            return _stretches(motion <= still)
-        width *= 2
-    return _stretches(np.zeros(len(reference), dtype=bool))
-
-
-def _motion(reference: FloatArray, width: int) -> FloatArray:
-    """Absolute difference of the means of the *width* samples before each sample and from it on."""
-    sums = np.concatenate([[0.0], np.cumsum(reference - reference.mean())])
-    places = np.arange(len(reference))
-    low, high = np.maximum(places - width, 0), np.minimum(places + width, len(reference))
-    before = (sums[places] - sums[low]) / np.maximum(places - low, 1)
-    after = (sums[high] - sums[places]) / (high - places)
-    difference = np.abs(after - before)
-    difference[0] = difference[1]
-    return np.asarray(difference)
-
-
-def _stretches(mask: BoolArray) -> tuple[IntArray, IntArray]:
-    """Starts and ends (one past the last) of the stretches where *mask* holds."""
-    edges = np.diff(np.concatenate([[0], mask.astype(np.int8), [0]]))
-    return np.flatnonzero(edges == 1), np.flatnonzero(edges == -1)
-
-
-def _typical_length(lengths: IntArray) -> int:
-    """Length such that half of all samples lie in stretches no longer."""
-    ordered = np.sort(lengths)
-    return int(ordered[np.searchsorted(np.cumsum(ordered), lengths.sum() / 2.0)])
-
-
-def _long_enough(starts: IntArray, stops: IntArray) -> tuple[IntArray, IntArray]:
-    """Stretches of at least the shortest plateau and a tenth of the typical length."""
-    lengths = stops - starts
-    if len(lengths) == 0:
-        return starts, stops
-    kept = lengths >= max(SHORTEST_PLATEAU, 0.1 * _typical_length(lengths))
-    return starts[kept], stops[kept]
-
-
-def _medians(values: FloatArray, starts: IntArray, stops: IntArray) -> FloatArray:
-    """Median of the values of each stretch."""
-    places, owner = _expand(starts, stops)
-    return np.asarray(ndimage.median(values[places], labels=owner, index=np.arange(len(starts))))
-
-
-def _joined(values: FloatArray, starts: IntArray, stops: IntArray, band: float) -> tuple[IntArray, IntArray]:
-    """Neighbouring stretches at one level made one, unless the reference was away for a while."""
-    if len(starts) < 2:
-        return starts, stops
-    medians = _medians(values, starts, stops)
-    gaps = starts[1:] - stops[:-1]
-    shorter = np.minimum((stops - starts)[1:], (stops - starts)[:-1])
-    apart = (np.abs(np.diff(medians)) > band) | (gaps > np.maximum(SHORTEST_PLATEAU, shorter))
-    first = np.concatenate([[True], apart])
-    last = np.concatenate([apart, [True]])
-    return starts[first], stops[last]
-
-
-def _widened(values: FloatArray, starts: IntArray, stops: IntArray, band: float) -> tuple[IntArray, IntArray]:
-    """Edges moved outwards over samples in the band about the level, up to the first that is not."""
-    medians = _medians(values, starts, stops)
-    place = np.arange(len(values))
-    after = np.searchsorted(starts, place, side="right") - 1
-    before = np.minimum(np.searchsorted(stops, place, side="right"), len(starts) - 1)
-    left = (np.abs(values - medians[np.maximum(after, 0)]) > band) & (place >= stops[np.maximum(after, 0)])
-    not_yet = (np.abs(values - medians[before]) > band) & (place < starts[before])
-    outside = np.concatenate([np.flatnonzero(left), [len(values)]])
-    new_stops = np.minimum(outside[np.searchsorted(outside, stops)], np.append(starts[1:], len(values)))
-    inside = np.concatenate([[-1], np.flatnonzero(not_yet)])
-    new_starts = np.maximum(inside[np.searchsorted(inside, starts) - 1] + 1, np.append(0, new_stops[:-1]))
-    return new_starts, new_stops
 
 
 def _settled(means: StretchMeans) -> BoolArray:

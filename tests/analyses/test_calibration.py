@@ -414,3 +414,23 @@ def test_a_length_from_a_recorded_elongation_needs_the_rest_length():
     assert float(high - low) > 2 * 1.9 * 0.8
     unknown = table.assign(x=table["elongation_mm"], length_mm=np.nan, strain=np.nan)
     assert calibrate(Readings(unknown, ELONGATION)).records[0].length_model is None
+
+
+def test_readings_are_weighted_only_where_it_matters():
+    even = calibrate(simulated(modules=4, sensors=4, repetitions=4, levels=9))
+    assert "weights" not in even.labels
+    uneven = replace(SPREAD, residual=0.05, residual_growth=12.0)
+    weighted = calibrate(simulated(uneven, modules=4, sensors=4, repetitions=4, levels=9))
+    assert weighted.labels["weights"].startswith("readings weighted by their scatter")
+    # the weighted slopes of the runs scatter less than the ordinary ones about the known spread of runs
+    runs = weighted.run_lines.merge(
+        weighted.readings, on=["module", "sensor", "session", "repetition", "trial"]
+    )
+    ordinary = runs.groupby(["module", "sensor", "repetition"]).apply(
+        lambda rows: np.polyfit(rows["x"], rows["signal"], 1)[0], include_groups=False
+    )
+    own = weighted.run_lines.set_index(["module", "sensor", "repetition"])["slope"]
+    assert (
+        own.groupby(["module", "sensor"]).std().mean()
+        < 0.9 * ordinary.groupby(["module", "sensor"]).std().mean()
+    )

@@ -12,8 +12,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from campaign.recordings.recording import Trial, TrialIdentity
+from campaign.trials.plateaus import find_plateaus
 from campaign.trials.staircase import (
-    find_plateaus,
     plateau_directions,
     readings_of_staircase,
     zero_return,
