@@ -10,8 +10,10 @@ import numpy.typing as npt
 from campaign.analyses.calibration_lines import POOLED, UNKNOWN, BranchLine
 from campaign.analyses.used_readings import UsedReadings
 from campaign.analyses.weighted_readings import STATED_GAIN
+from campaign.methods.electrode_resistance import Model, capacitance_seen, omega_rc_of_error
 from campaign.recordings.description import Description
 from campaign.recordings.recording import ReferenceQuantity
+from campaign.units import parse_quantity
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
@@ -82,7 +84,7 @@ def campaign_labels(
     """Return labels by short name; only those that apply.
 
     ``time_confounded``, ``full_scale``, ``reference``, ``stretch_exponent``, ``gauge_factor``, ``runs``,
-    ``variance_source``, ``weights`` (readings are unweighted where it is missing).
+    ``variance_source``, ``electrode_resistance``, ``weights`` (readings are unweighted where it is missing).
     """
     if not lines:
         return {}
@@ -98,10 +100,13 @@ def campaign_labels(
     if not shared_reference(used, description, reference).stated:
         labels["reference"] = "reference taken as exact; uncertainty is a lower bound"
     if reference.name == "strain":
-        labels["stretch_exponent"] = "a lower bound if cable capacitance was not removed"
+        labels["stretch_exponent"] = _exponent_label(description)
     else:
         labels["gauge_factor"] = "not identifiable: rest lengths are not known"
         labels["stretch_exponent"] = "not identifiable: rest lengths are not known"
+    resistance = electrode_resistance_label(used, description)
+    if resistance:
+        labels["electrode_resistance"] = resistance
     unknown = {line.key for line in lines if line.variance_source == UNKNOWN}
     if unknown:
         count = len({line.key for line in lines})
@@ -109,6 +114,33 @@ def campaign_labels(
     if any(line.variance_source == POOLED for line in lines):
         labels["variance_source"] = "run-to-run covariance pooled over the sensors of a generation"
     return labels
+
+
+def _exponent_label(description: Description) -> str:
+    """What the stretch exponent must be read with: whether the cable's capacitance was taken off."""
+    if description.readout.get("open_correction", "").lower() == "true":
+        return "cable capacitance removed by the instrument's open correction, as far as that goes"
+    return "a lower bound if cable capacitance was not removed"
+
+
+def electrode_resistance_label(used: UsedReadings, description: Description) -> str:
+    """Return by how much the electrodes' resistance lowers the capacitance shown; '' where it cannot be told.
+
+    The distributed line of ``methods.electrode_resistance`` with the stated resistance and frequency, and the
+    largest signal of the campaign in pF.
+    """
+    resistance, frequency = description.electrode_resistance_ohm, description.readout.get("frequency", "")
+    capacitances = used.signal[(used.table["unit"] == "pF").to_numpy()]
+    if not (resistance > 0 and frequency and len(capacitances) and capacitances.max() > 0):
+        return ""
+    model: Model = "series" if description.readout.get("model") == "series" else "parallel"
+    hertz = parse_quantity(frequency, ("frequency",)).value
+    omega_rc = 2.0 * np.pi * hertz * resistance * float(capacitances.max()) * 1e-12
+    error = 1.0 - float(capacitance_seen(omega_rc, model))
+    return (
+        f"electrode resistance lowers the largest capacitance shown by {100.0 * error:.2g} % "
+        f"(ωRC {omega_rc:.2g}, {model} model; 1 % at {omega_rc_of_error(0.01, model):.2g})"
+    )
 
 
 def time_confounded(used: UsedReadings, runs: IntArray) -> str:

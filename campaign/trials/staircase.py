@@ -9,7 +9,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
-from scipy import stats
+from scipy import special
 
 from campaign.methods.autocorrelation import StretchMeans, stretch_means
 from campaign.notices import Notice
@@ -237,7 +237,7 @@ def _settled(means: StretchMeans) -> BoolArray:
     """False where the slope over the averaged part is significant (Bonferroni over the plateaus)."""
     with np.errstate(divide="ignore", invalid="ignore"):
         ratio = np.abs(means.slopes / means.slope_standard_errors)
-    p = np.asarray(2.0 * stats.t.sf(ratio, means.slope_degrees_of_freedom))
+    p = 2.0 * special.stdtr(means.slope_degrees_of_freedom, -ratio)
     return np.asarray(~(p < SETTLED_RISK / len(p)))
 
 

@@ -434,3 +434,16 @@ def test_readings_are_weighted_only_where_it_matters():
         own.groupby(["module", "sensor"]).std().mean()
         < 0.9 * ordinary.groupby(["module", "sensor"]).std().mean()
     )
+
+
+def test_electrode_resistance_is_judged_where_it_is_stated():
+    readings = simulated(modules=1, sensors=1)
+    largest = readings.table["signal"].max() * 1e-12
+    resistance = 0.2755614150 / (2 * np.pi * 100e3 * largest)
+    stated = replace(RATED, electrode_resistance_ohm=resistance, readout={"frequency": "100 kHz"})
+    label = calibrate(readings, stated).labels["electrode_resistance"]
+    assert label.startswith("electrode resistance lowers the largest capacitance shown by 1 %")
+    assert "parallel model" in label
+    assert "electrode_resistance" not in calibrate(readings).labels
+    corrected = replace(RATED, readout={"open_correction": "true"})
+    assert "open correction" in calibrate(readings, corrected).labels["stretch_exponent"]
