@@ -13,7 +13,7 @@ from dataclasses import dataclass, field, replace
 from functools import lru_cache
 
 from campaign.notices import Notice
-from campaign.recordings.description import ColumnRule
+from campaign.recordings.description import TIMESTAMP_UNITS, ColumnRule
 from campaign.recordings.dialect import Layout
 from campaign.recordings.file_glob import matches_glob
 from campaign.recordings.remarks import noted, set_aside, shown
@@ -42,9 +42,6 @@ IDENTITY_COLUMNS = frozenset(
     {"module", "sensor", "kind", "repetition", "session", "generation", "batch", "channel", "started"}
 )
 """Headers of constant columns that say which trial it is."""
-
-TIMESTAMP_UNITS = frozenset({"timestamp", "datetime", "iso8601", "iso 8601"})
-"""What the description may give as the unit of a time column that holds dates with times of day."""
 
 _USUAL_NAMES: dict[str, tuple[str, ...]] = {
     "time": ("time",),
