@@ -33,7 +33,8 @@ def product(a: FloatArray, b: FloatArray) -> FloatArray:
     FloatArray
         (i, k, B).
     """
-    if a.shape[0] * a.shape[1] * b.shape[1] < _LARGE:
+    size = a.shape[0] * a.shape[1] * b.shape[1]
+    if size < _LARGE or (a.shape[1] <= 2 and b.shape[2] >= 50):
         return np.asarray(np.einsum("ijn,jkn->ikn", a, b))
     return np.asarray(np.matmul(_stack_first(a), _stack_first(b)).transpose(1, 2, 0))
 

@@ -51,6 +51,10 @@ class Transfer:
         Slot of the child and slot of the parent, pairwise; the last pair is the response.
     scale
         (pairs, children) what the child's slot is multiplied by to be the parent's; None: by one.
+    children_each
+        Number of children where every parent here has the same, else 0.
+    every_parent
+        Whether `parents` are all units of the outer level.
     """
 
     children: IntArray | None
@@ -60,6 +64,8 @@ class Transfer:
     source: IntArray
     target: IntArray
     scale: FloatArray | None
+    children_each: int
+    every_parent: bool
 
     def scale_of_slots(self) -> FloatArray:
         """`scale`, or ones that broadcast to it."""
@@ -362,7 +368,7 @@ def _find_steps(
                 units=levels[depth].count,
                 random=places,
                 blocks=blocks,
-                transfers=_transfers(levels[depth], parents, inward, len(slots), last),
+                transfers=_transfers(levels[depth], parents, inward, slots, last),
                 parent_units=1 if last else levels[depth - 1].count,
                 parent_slots=len(parents) + 1,
             )
@@ -462,12 +468,12 @@ def _blocks(
 
 
 def _transfers(
-    level: _Units, parents: list[list[_Column]], inward: int, response: int, last: bool
+    level: _Units, parents: list[list[_Column]], inward: int, slots: list[_Slot], last: bool
 ) -> tuple[Transfer, ...]:
     """What each unit hands to its parent: slots that hold members of the parent's slots, and multiples."""
     source = np.full((level.count, len(parents) + 1), -1, dtype=np.int64)
     scale = np.ones((level.count, len(parents) + 1))
-    source[:, -1] = response
+    source[:, -1] = len(slots)
     parent = np.zeros(level.count, dtype=np.int64) if last else level.parent
     for target, members in enumerate(parents):
         for column in members:
@@ -475,7 +481,16 @@ def _transfers(
             source[active, target] = column.slot[inward]
             above = 1.0 if last else column.factor[inward + 1][parent[active]]
             scale[active, target] = column.factor[inward][active] / above
-    return tuple(_transfer(children, row, scale, parent) for children, row in _kinds(source))
+        _hand_zeros(source[:, target], members, inward, slots)
+    above_units = 1 if last else int(level.parent.max()) + 1
+    return tuple(_transfer(children, row, scale, parent, above_units) for children, row in _kinds(source))
+
+
+def _hand_zeros(source: IntArray, members: list[_Column], inward: int, slots: list[_Slot]) -> None:
+    """Where no member is active, hand over a member's slot that is zero there: fewer kinds of units."""
+    for column in members:
+        place = column.slot[inward]
+        source[(source < 0) & ~slots[place].active] = place
 
 
 def _kinds(source: IntArray) -> list[tuple[IntArray | None, IntArray]]:
@@ -487,9 +502,12 @@ def _kinds(source: IntArray) -> list[tuple[IntArray | None, IntArray]]:
     return [(np.flatnonzero(kind == k), source[row]) for k, row in enumerate(first)]
 
 
-def _transfer(children: IntArray | None, source: IntArray, scale: FloatArray, parent: IntArray) -> Transfer:
+def _transfer(
+    children: IntArray | None, source: IntArray, scale: FloatArray, parent: IntArray, parents: int
+) -> Transfer:
     parent_of_child = parent if children is None else parent[children]
     starts = np.flatnonzero(np.concatenate([[True], parent_of_child[1:] != parent_of_child[:-1]]))
+    counts = np.diff(np.append(starts, len(parent_of_child)))
     target = np.flatnonzero(source >= 0)
     mine = (scale if children is None else scale[children])[:, target].T
     return Transfer(
@@ -500,6 +518,8 @@ def _transfer(children: IntArray | None, source: IntArray, scale: FloatArray, pa
         source=source[target],
         target=target,
         scale=None if (mine == 1.0).all() else np.ascontiguousarray(mine),
+        children_each=int(counts[0]) if (counts == counts[0]).all() else 0,
+        every_parent=len(starts) == parents,
     )
 
 

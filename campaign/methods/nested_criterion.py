@@ -21,7 +21,7 @@ import numpy as np
 
 from campaign.methods.batched_algebra import inverse_cholesky, product, product_transposed, transposed_product
 from campaign.methods.nested_compression import Compression, Step, Transfer
-from campaign.methods.nested_design import BoolArray, FloatArray
+from campaign.methods.nested_design import BoolArray, FloatArray, IntArray
 
 Factors = list[FloatArray]
 """For each random effect its relative factor θ (d, d, R), R replicates of the whole model."""
@@ -165,23 +165,42 @@ def _hand_over(step: Step, after: FloatArray, replicates: int) -> FloatArray:
     split = after.reshape(after.shape[0], after.shape[1], replicates, step.units)
     if len(step.transfers) == 1 and len(step.transfers[0].source) == step.parent_slots:
         only = step.transfers[0]
-        return np.add.reduceat(_picked(split, only), only.starts, axis=3).reshape(
-            step.parent_slots, step.parent_slots, -1
-        )
+        return _summed(_picked(split, only), only).reshape(step.parent_slots, step.parent_slots, -1)
     out = np.zeros((step.parent_slots, step.parent_slots, replicates, step.parent_units))
     for transfer in step.transfers:
-        added = np.add.reduceat(_picked(split, transfer), transfer.starts, axis=3)
-        target = transfer.target
-        out[np.ix_(target, target, np.arange(replicates), transfer.parents)] += added
+        added = _summed(_picked(split, transfer), transfer)
+        if not transfer.every_parent:
+            spread = np.zeros((*added.shape[:3], step.parent_units))
+            spread[..., transfer.parents] = added
+            added = spread
+        out[np.ix_(transfer.target, transfer.target)] += added
     return out.reshape(step.parent_slots, step.parent_slots, -1)
 
 
 def _picked(split: FloatArray, transfer: Transfer) -> FloatArray:
+    """The children of a transfer with the slots they hand over, (k, k, R, children)."""
     if transfer.children is not None:
-        split = split[:, :, :, transfer.children]
-    if len(transfer.source) != len(split) or (transfer.source != np.arange(len(split))).any():
+        split = split[..., transfer.children]
+    if not _in_order(transfer.source, len(split)):
         split = split[transfer.source[:, None], transfer.source[None, :]]
     return split if transfer.scale is None else split * _squared_scale(transfer.scale)
+
+
+def _in_order(source: IntArray, slots: int) -> bool:
+    return len(source) == slots and bool((source == np.arange(slots)).all())
+
+
+def _summed(block: FloatArray, transfer: Transfer) -> FloatArray:
+    """Sum over the children of each parent, (k, k, R, parents)."""
+    each = transfer.children_each
+    if each == 1:
+        return block
+    if 1 < each <= 8:
+        total = block[..., 0::each] + block[..., 1::each]
+        for k in range(2, each):
+            total += block[..., k::each]
+        return total
+    return np.add.reduceat(block, transfer.starts, axis=3)
 
 
 def _squared_scale(scale: FloatArray) -> FloatArray:
@@ -280,25 +299,28 @@ def _take_back(step: Step, adjoint: FloatArray, slots: int, replicates: int) -> 
     parents = adjoint.reshape(step.parent_slots, step.parent_slots, replicates, step.parent_units)
     out = np.zeros((slots, slots, replicates, step.units))
     for transfer in step.transfers:
-        rows, target = transfer.parent_of_child, transfer.target
-        given = parents[np.ix_(target, target, np.arange(replicates), rows)]
+        given = parents
+        if not _in_order(transfer.target, step.parent_slots):
+            given = parents[np.ix_(transfer.target, transfer.target)]
+        if not (transfer.every_parent and transfer.children_each == 1):
+            given = given[..., transfer.parent_of_child]
         if transfer.scale is not None:
             given = given * _squared_scale(transfer.scale)
         received = _gathered(_gathered(given, transfer.source, slots).swapaxes(0, 1), transfer.source, slots)
-        if transfer.children is None:
-            out += received
-        else:
-            out[:, :, :, transfer.children] += received
+        if transfer.children is None and len(step.transfers) == 1:
+            return received.reshape(slots, slots, -1)
+        out[..., slice(None) if transfer.children is None else transfer.children] += received
     return out.reshape(slots, slots, -1)
 
 
-def _gathered(
-    given: FloatArray, source: np.ndarray[tuple[int], np.dtype[np.int64]], slots: int
-) -> FloatArray:
+def _gathered(given: FloatArray, source: IntArray, slots: int) -> FloatArray:
     """Add up along the first axis what belongs to the same slot."""
-    if len(source) == slots and (source == np.arange(slots)).all():
+    if _in_order(source, slots):
         return given
     out = np.zeros((slots, *given.shape[1:]))
+    if len(np.unique(source)) == len(source):
+        out[source] = given
+        return out
     for k, slot in enumerate(source):
         out[slot] += given[k]
     return out
@@ -326,6 +348,9 @@ def _before_level(step: Step, level: Elimination, adjoint: FloatArray) -> FloatA
     for k, slot in enumerate(step.random):
         out[:, slot] -= moved[:, k]
         out[slot, :] -= moved[:, k]
+    if len(np.unique(step.random)) == len(step.random):
+        out[np.ix_(step.random, step.random)] += corner
+        return out
     for i, a in enumerate(step.random):
         for j, b in enumerate(step.random):
             out[a, b] += corner[i, j]

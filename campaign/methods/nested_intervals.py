@@ -26,8 +26,7 @@ RESIDUAL = "residual"
 """Name under which the residual SD is asked for."""
 
 _PRECISION = 1e-3
-"""How near the root of the profile must be to that of the quantile before a last Newton step, whose error is of the
-order of the square of this."""
+"""How near the profile's root must come to the quantile's before a last Newton step ends the search."""
 
 
 @dataclass(frozen=True)
@@ -410,7 +409,7 @@ def _limits(profiles: _Profiles, cutoff: float, least: float) -> list[tuple[_Lim
             profiles.objective(length, which),
             np.column_stack([limit.vector for limit in running]),
             np.stack([limit.inverse for limit in running], axis=2),
-            tolerance=1e-7,
+            tolerance=1e-5,
             longest=longest,
         )
         value, _, slope = profiles.evaluate(minima.x, length, which)
@@ -428,24 +427,23 @@ def _first_limits(profiles: _Profiles, cutoff: float) -> list[tuple[_Limit, _Lim
     inverse = inverse_curvature(hessian[:, :, None])[:, :, 0]
     lengths = profiles.length_of(start[:, None], np.arange(profiles.count))
     pairs = []
-    for m, estimate in enumerate(profiles.estimate):
+    for m, estimate in enumerate(profiles.estimate.tolist()):
         normal = _length_gradient(profiles, start, m)
         response = inverse @ normal
-        spread = float(max(normal @ response, 1e-300))
-        reach = cutoff * np.sqrt(2.0 * spread)
+        spread = max(float(normal @ response), 1e-300)
+        reach = cutoff * float(np.sqrt(2.0 * spread))
         tangent = inverse - np.outer(response, response) / spread
-        base = max(float(estimate), float(lengths[m]))
+        lifted = float(lengths[m])
+        base = max(estimate, lifted)
         for_zero = profiles.top.residual[m] == 0.0
-        down = float(estimate) * np.exp(-reach / max(estimate, 1e-300)) if estimate > 0.0 else 0.0
+        down = float(estimate * np.exp(-reach / estimate)) if estimate > 0.0 else 0.0
         if for_zero and down < 0.2 * estimate:
             down = 0.0
-        up = base * np.exp(min(reach / base, 1.0))
+        up = float(base * np.exp(min(reach / base, 1.0)))
         pair = []
         for upper, length in ((False, down), (True, up)):
-            moved = start + response / spread * float(np.clip(length - lengths[m], -0.5 * base, 0.5 * base))
-            pair.append(
-                _Limit(m, upper, float(estimate), float(estimate), float(length), moved, tangent, for_zero)
-            )
+            moved = start + response / spread * float(np.clip(length - lifted, -0.5 * base, 0.5 * base))
+            pair.append(_Limit(m, upper, estimate, estimate, length, moved, tangent, for_zero))
         if estimate == 0.0:
             pair[0].limit = 0.0
         pairs.append((pair[0], pair[1]))
@@ -491,7 +489,7 @@ def _advance(limit: _Limit, root: float, slope: float, cutoff: float) -> None:
 
 
 def _newton(length: float, root: float, slope: float, cutoff: float) -> float:
-    """Where the root would reach the cutoff, were it straight over log length; NaN if it is flat."""
+    """Length at which the root would reach the cutoff, were it straight over log length."""
     if length == 0.0 or slope == 0.0 or root < 1e-6:
         return float("nan")
     return float(length * np.exp(np.clip((cutoff - root) / (slope * length), -30.0, 30.0)))
@@ -510,7 +508,7 @@ def _kept_between(limit: _Limit, wanted: float) -> float:
 
 
 def _further(limit: _Limit, wanted: float) -> float:
-    """The wanted length, neither too near nor too far from the last one; zero where a lower limit goes there."""
+    """The wanted length, neither too near nor too far from the last; zero where a lower limit goes there."""
     length = limit.length
     if limit.upper:
         return float(np.clip(wanted, 1.1 * length, 4.0 * length)) if wanted > length else 2.0 * length
