@@ -49,7 +49,7 @@ def library_bytes(plot_library: Path | None = None) -> bytes:
         version.
     """
     if plot_library is None:
-        return _wrapped(_carried_library()).encode("utf-8")
+        return _wrapped_carried_library()
     try:
         text = plot_library.read_text(encoding="utf-8")
     except (OSError, UnicodeDecodeError) as fault:
@@ -102,6 +102,11 @@ def _carried_library() -> str:
     from plotly.offline import get_plotlyjs
 
     return str(get_plotlyjs())
+
+
+@cache
+def _wrapped_carried_library() -> bytes:
+    return _wrapped(_carried_library()).encode("utf-8")
 
 
 def _version(text: str) -> str | None:

@@ -88,6 +88,7 @@ _NUMBER_FUNCTIONS = (
     "interval",
     "limits",
     "span",
+    "covered",
     "significant",
     "fixed",
     "whole",

@@ -16,18 +16,18 @@ def thinned(
     """Return at most *most* points of a curve with the same envelope.
 
     The curve, shape (n,) each, is cut into buckets of equally many points (the last is padded with its own
-    last point); of each the lowest and the highest y are kept, in their order. Short curves come back as they
+    last point); of each the lowest and the highest y are kept, in their order, and both ends. Short curves come back as they
     are.
     """
     if len(x) <= most:
         return x, y
-    buckets = most // 2
+    buckets = most // 2 - 1
     size = -(-len(x) // buckets)
     padded = np.minimum(np.arange(buckets * size), len(x) - 1).reshape(buckets, size)
     values = np.where(np.isnan(y), 0.0, y)[padded]
     rows = np.arange(buckets)
     extremes = np.stack([padded[rows, values.argmin(axis=1)], padded[rows, values.argmax(axis=1)]], axis=1)
-    kept = np.unique(np.concatenate([extremes.ravel(), [0, len(x) - 1]]))[:most]
+    kept = np.unique(np.concatenate([extremes.ravel(), [0, len(x) - 1]]))
     return x[kept], y[kept]
 
 
