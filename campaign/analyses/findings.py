@@ -386,11 +386,12 @@ def _largest(record: CalibrationRecord, readings: int) -> float:
 def _spread_findings(variance: Variance) -> list[Finding]:
     table = variance.variance_in_strain
     table = table[(table["place"] == "mid") & (table["generation"] != "all")]
-    facts = tuple(
+    facts = [
         SpreadFinding(str(generation), "mid", *_sources(rows, variance.comparisons))
         for generation, rows in table.groupby("generation", sort=True)
-    )
-    return [Finding("spread", facts)] if facts else []
+    ]
+    known = tuple(fact for fact in facts if fact.sources)
+    return [Finding("spread", known)] if known else []
 
 
 def _sources(
