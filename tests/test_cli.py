@@ -301,3 +301,43 @@ def test_words_of_kinds_are_guessed() -> None:
     assert kind_of_word("Calibration") == "staircase"
     assert kind_of_word("creep") == "hold"
     assert kind_of_word("zebra") is None
+
+
+# ---------------------------------------------------------------- report
+
+
+def test_report_statuses_follow_what_is_set_aside(folder: Path, tmp_path: Path) -> None:
+    site = tmp_path / "site"
+    assert main(["report", str(folder), "--into", str(site), "--fail-on-set-aside"]) == 0
+    assert (site / "index.html").is_file()
+    third = folder / "trials" / "M01_AB_staircase_r3.csv"
+    third.write_text("")
+    assert main(["report", str(folder), "--into", str(site)]) == 0
+    assert main(["report", str(folder), "--into", str(site), "--fail-on-set-aside"]) == 1
+    third.write_text(TABLE.replace("101", "103"))
+    (folder / "trials.csv").write_text("file,use,reason\ntrials/M01_AB_staircase_r3.csv,no,slipped\n")
+    assert main(["report", str(folder), "--into", str(site), "--fail-on-set-aside"]) == 0
+
+
+def test_a_site_inside_the_folder_is_not_counted_as_its_files(folder: Path) -> None:
+    for _ in range(2):
+        assert main(["report", str(folder), "--into", str(folder / "site")]) == 0
+        files = [row["file"] for row in rows_of(folder / "site" / "tables" / "recordings.csv")]
+        assert files == ["campaign.toml", "trials/M01_AB_staircase_r1.csv", "trials/M01_AB_staircase_r2.csv"]
+
+
+def test_report_never_writes_into_a_folder_of_somebody_else(
+    folder: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    other = tmp_path / "thesis"
+    other.mkdir()
+    (other / "chapter.txt").write_text("words")
+    for place in (other, folder):
+        assert main(["report", str(folder), "--into", str(place)]) == 2
+    assert "Traceback" not in capsys.readouterr().err
+    assert [path.name for path in other.iterdir()] == ["chapter.txt"]
+
+
+def test_a_report_goes_beside_its_folder(folder: Path) -> None:
+    assert main(["report", str(folder)]) == 0
+    assert (folder.parent / "panels_report" / "index.html").is_file()

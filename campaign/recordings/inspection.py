@@ -75,7 +75,7 @@ def _code_lines(code: str, notices: Sequence[Notice], width: int) -> Iterator[st
         place = f"{notice.where}: " if notice.where else ""
         yield from _wrapped(f"{place}{notice.what}; {notice.done}.", "    ", width)
     if len(notices) > shown:
-        yield f"    and {len(notices) - shown} more; --tables writes them all"
+        yield f"    and {len(notices) - shown} more in notices.csv"
     for remedy in dict.fromkeys(notice.remedy for notice in notices[:shown] if notice.remedy):
         yield from _wrapped(f"to mend: {remedy}", "      ", width)
 
