@@ -2,9 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
-from typing import Any
 
 import pandas as pd
 
@@ -43,7 +42,7 @@ def recordings_page(results: CampaignResults) -> Page:
             "other_campaigns": intake.other_campaigns,
         },
         tables=(
-            notices_table(results.notices),
+            notice_groups_table(results.notices),
             set_aside_table(intake.recordings, results.notices),
             recordings_table(intake.recordings),
             trials_table(intake.trials),
@@ -80,22 +79,35 @@ def notices_frame(notices: Iterable[Notice]) -> pd.DataFrame:
 
 
 def notices_table(notices: Iterable[Notice]) -> Table:
-    """Return the table of all notices, heaviest first."""
-    frame = notices_frame(notices)
-    places = zip(frame["file"], frame["line"], frame["column"], strict=True)
+    """Return the table of all notices, heaviest first; it is a file of the site."""
     return Table(
-        name="notices",
+        name="notices", caption="Every notice about the input.", frame=notices_frame(notices), columns=()
+    )
+
+
+def notice_groups_table(notices: Iterable[Notice]) -> Table:
+    """Return the notices as the page shows them: those that say the same of several files are one row."""
+    groups: dict[tuple[str, ...], list[str]] = {}
+    for notice in notices:
+        said = (notice.weight, notice.what, notice.done, notice.remedy)
+        groups.setdefault(said, []).append(notice.where)
+    rows = [(*said, places[0], _others(places)) for said, places in groups.items()]
+    frame = pd.DataFrame(rows, columns=["weight", "what", "done", "remedy", "first", "others"], dtype=object)
+    return Table(
+        name="notice_groups",
         caption="Everything that was noted about the input, heaviest first.",
-        frame=frame.assign(_place=[_place(*place) for place in places]),
+        frame=frame,
         columns=(
             Column("weight", "Weight", kind="text"),
-            Column("_place", "Where", kind="code"),
+            Column("first", "Where", kind="code"),
+            Column("others", "And", kind="text"),
             Column("what", "What was found", kind="text"),
             Column("done", "What was done", kind="text"),
             Column("remedy", "What would mend it", kind="text"),
         ),
         note="‘Stops’ ends a report, ‘set aside’ means not used, ‘noted’ means used, with something that a "
         "reader should know.",
+        source="notices",
     )
 
 
@@ -160,9 +172,7 @@ def trials_table(trials: pd.DataFrame) -> Table:
     )
 
 
-def _place(file: str, line: Any, column: Any) -> str:
-    parts = [file] if file else []
-    parts += [
-        f"{word} {number}" for word, number in (("line", line), ("column", column)) if not pd.isna(number)
-    ]
-    return ", ".join(parts)
+def _others(places: Sequence[str]) -> str:
+    """Return how many more places say the same, in words."""
+    more = len(places) - 1
+    return f"{more} more {'place' if more == 1 else 'places'}" if more else ""

@@ -72,7 +72,7 @@ def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
     pages = [findings_page(results, mapped), *(page for page in measured if page is not None)]
     pages += [recordings_page(results), method_page(results)]
     pages += [*module_pages(results, mapped), *sensor_pages(results, mapped), *notes.pages]
-    tables = [table for page in pages for table in page.tables] + site_tables(results, pages)
+    tables = [*(table for page in pages for table in page.tables), *site_tables(results, pages)]
     return [*pages, provenance_page(results, tables)]
 
 

@@ -8,6 +8,7 @@ import pandas as pd
 
 from campaign.analyses.results import CampaignResults
 from campaign.pages.page import Page
+from campaign.pages.recordings import notices_table
 from campaign.pages.tables import Table
 
 CAPTIONS: dict[str, str] = {
@@ -36,11 +37,12 @@ def site_tables(results: CampaignResults, pages: Iterable[Page]) -> list[Table]:
     """Return the tables of :data:`CAPTIONS` that exist and that no page of *pages* holds whole."""
     held = {table.name for page in pages for table in page.tables if table.source is None}
     frames = _frames(results)
-    return [
+    whole = [
         Table(name=name, caption=caption, frame=frames[name], columns=())
         for name, caption in CAPTIONS.items()
         if name in frames and name not in held
     ]
+    return [notices_table(results.notices), *whole]
 
 
 def _frames(results: CampaignResults) -> dict[str, pd.DataFrame]:

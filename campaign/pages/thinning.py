@@ -16,8 +16,8 @@ def thinned(
     """Return at most *most* points of a curve with the same envelope.
 
     The curve, shape (n,) each, is cut into buckets of equally many points (the last is padded with its own
-    last point); of each the lowest and the highest y are kept, in their order, and both ends. Short curves come back as they
-    are.
+    last point); of each the lowest and the highest y are kept, in their order, and both ends. Short curves
+    come back as they are.
     """
     if len(x) <= most:
         return x, y

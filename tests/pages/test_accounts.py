@@ -1,4 +1,4 @@
-"""Recordings and Provenance: counts, reasons, hashes that the usual program checks, citations without a clock."""
+"""Recordings and Provenance: counts, reasons, hashes that the usual program checks, citations."""
 
 from __future__ import annotations
 
@@ -11,7 +11,13 @@ import pytest
 
 from campaign.notices import Notice
 from campaign.pages.provenance import CAMPAIGN_CHECKSUMS, SITE_CHECKSUMS, citation
-from campaign.pages.recordings import kind_counts, notices_table, set_aside_table, weight_counts
+from campaign.pages.recordings import (
+    kind_counts,
+    notice_groups_table,
+    notices_table,
+    set_aside_table,
+    weight_counts,
+)
 from campaign.pages.tables import csv_bytes, shown_cells
 from campaign.provenance.manifest import checksum_list, with_manifests
 from campaign.recordings.description import Author, Description
@@ -52,10 +58,23 @@ def test_every_recording_set_aside_has_its_reason() -> None:
 
 def test_notices_say_where_and_are_a_file_with_the_promised_columns() -> None:
     table = notices_table(NOTICES)
-    assert [row[1].text for row in shown_cells(table)] == ["b.csv", "a.csv, line 14, column 3", "c.csv"]
     lines = csv_bytes(table.frame, "notices").decode("utf-8").splitlines()
     assert lines[0] == "code,weight,file,line,column,what,done,remedy,count"
     assert lines[2] == "gap,noted,a.csv,14,3,3 empty cells,left out,,3"
+
+
+def test_notices_that_say_the_same_are_one_row_of_the_page() -> None:
+    comma = [
+        Notice("dialect", "noted", f"{name}.csv", 5, None, "a decimal comma", "read so") for name in "xyz"
+    ]
+    rows = shown_cells(notice_groups_table((*NOTICES, *comma)))
+    assert [(row[1].text, row[2].text) for row in rows] == [
+        ("b.csv", ""),
+        ("a.csv, line 14, column 3", ""),
+        ("c.csv", ""),
+        ("x.csv, line 5", "2 more places"),
+    ]
+    assert notice_groups_table(()).frame.empty
 
 
 def test_without_notices_the_file_has_its_header() -> None:
