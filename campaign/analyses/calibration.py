@@ -54,7 +54,7 @@ class CalibrationRecord:
     intercept, slope, var_intercept, var_slope, cov_intercept_slope
         The line and its covariance, reference uncertainty included.
     run_var_intercept, run_var_slope, run_cov
-        Covariance of a new run's line about it: its variance at x is v₀ + 2 x c + x² v₁.
+        Covariance of the line of a run in a new mounting about it: its variance at x is v₀ + 2 x c + x² v₁.
     residual_variance, lack_of_fit_variance, direction_half_width
         Of one reading about its run; of a level about the line in every run; half the loop width (both
         branches).
@@ -144,7 +144,8 @@ class Calibration:
         One row a sensor and branch (rising, falling, both): columns of the table ``sensor_lines`` of the
         site, and full_scale_output (signal units), full_scale (what it covers), gauge_factor_low,
         gauge_factor_high, gauge_factor_label, hysteresis_null_percent_fso (95 % quantile of the largest
-        difference were there none), hysteresis_p, run_to_run_sd (strain-equivalent at mid range, units of x).
+        difference were there none), hysteresis_p, repeatability_df, run_to_run_sd (strain-equivalent at mid
+        range, units of x), repeatability_df.
     run_lines
         generation, module, sensor, position, session, repetition, trial, branch, intercept, slope,
         residual_sd, readings, x_low, x_high, zero_return (signal), zero_return_percent_fso.

@@ -19,8 +19,13 @@ from campaign.methods.calibration_line import (
     lack_of_fit_of_runs,
     line_of_runs,
     pooled_lack_of_fit,
-    run_covariance,
-    scatter_of_runs,
+)
+from campaign.methods.run_spread import (
+    RunScatter,
+    RunSpread,
+    line_of_mountings,
+    scatter_in_mountings,
+    spread_of_runs,
 )
 from campaign.methods.step_hysteresis import StepHysteresis, step_hysteresis
 from campaign.recordings.description import Description
@@ -77,7 +82,7 @@ class BranchLine:
     direction_half_width
         Half the root-mean-square loop width for both branches, else 0.
     degrees_of_freedom, effective_degrees
-        Between runs; and of everything that averaging does not reduce, at mid range.
+        Between runs (and mountings); and of everything that averaging does not reduce, at mid range.
     variance_source
         Where the covariance between runs is from.
     full_scale_output, full_scale
@@ -135,6 +140,7 @@ class _RunFits:
     rows: IntArray
     span: tuple[float, float]
     run_codes: IntArray
+    mounting: IntArray
     lines: GroupLines
     centre: float
     coefficients: FloatArray
@@ -149,13 +155,17 @@ class _RunFits:
         """Degrees of freedom between runs."""
         return len(self.run_codes) - 1
 
+    @property
+    def scatter(self) -> RunScatter:
+        """Scatter of its runs, within and between mountings."""
+        return scatter_in_mountings(self.coefficients, self.within, self.mounting)
+
 
 @dataclass(frozen=True)
 class _Pool:
     """Scatter of runs over the sensors of one generation and branch, in the basis of each sensor's mean x."""
 
-    covariance: FloatArray
-    degrees: int
+    scatter: RunScatter | None
     sensors: int
 
 
@@ -227,9 +237,14 @@ def _residual_sd(lines: GroupLines, place: int) -> float:
 
 
 def _branches(rows: IntArray, direction: IntArray) -> dict[str, IntArray]:
-    """Readings by branch, the one that stands for the sensor first: both, unless all are of one."""
+    """Readings by branch, the one that stands for the sensor first: both, unless all are of one.
+
+    Where most readings turn, as with levels in random order, there are no branches.
+    """
     parts = {"rising": rows[direction == RISING], "falling": rows[direction == FALLING]}
     whole = {branch: part for branch, part in parts.items() if len(part) == len(rows)}
+    if np.mean(direction == TURNING) > 0.5:
+        return {"both": rows}
     return whole or {"both": rows, **parts}
 
 
@@ -253,6 +268,7 @@ def _fit_runs(used: UsedReadings, rows: IntArray, branch: str, span: tuple[float
         rows,
         span,
         codes,
+        used.mounting[rows[np.unique(run, return_index=True)[1]]],
         lines,
         centre,
         coefficients,
@@ -345,37 +361,30 @@ def _pools(
         gathered.setdefault((generations[key], key[1]), []).append(fit)
     pools = {}
     for name, members in gathered.items():
-        several = [fit for fit in members if fit.degrees > 0]
-        degrees = sum(fit.degrees for fit in several)
-        covariance = np.full((2, 2), np.nan)
-        if degrees:
-            observed = np.sum([scatter_of_runs(fit.coefficients) for fit in several], axis=0)
-            within = np.sum([fit.degrees * fit.within.mean(axis=0) for fit in several], axis=0)
-            covariance = run_covariance(observed / degrees, within / degrees)
-        pools[name] = _Pool(covariance, degrees, len(several))
+        several = [fit.scatter for fit in members if fit.degrees > 0]
+        pools[name] = _Pool(sum(several[1:], several[0]) if several else None, len(several))
     return pools
 
 
-def _run_covariance_of(fit: _RunFits, pool: _Pool) -> tuple[FloatArray, float, str]:
-    """Covariance of true run lines for one sensor, its degrees of freedom and where it is from."""
-    if fit.degrees == 0:
-        return np.full((2, 2), np.nan), float("nan"), UNKNOWN
-    observed = scatter_of_runs(fit.coefficients) / fit.degrees
-    own = run_covariance(observed, fit.within.mean(axis=0))
-    if fit.degrees >= ENOUGH_OWN_DEGREES or pool.sensors < 2 or _scatters_more(fit, observed, pool):
-        return own, float(fit.degrees), OWN_RUNS
-    return pool.covariance, float(pool.degrees), POOLED
+def _spread_of(fit: _RunFits, pool: _Pool) -> tuple[RunSpread, str]:
+    """Spread of true run lines for one sensor and where it is from; NaN where it is unknown."""
+    if fit.degrees == 0 or pool.scatter is None:
+        return RunSpread(np.full((2, 2), np.nan), np.full((2, 2), np.nan), float("nan")), UNKNOWN
+    own = fit.scatter
+    if fit.degrees >= ENOUGH_OWN_DEGREES or pool.sensors < 2 or _scatters_more(own, pool.scatter):
+        return spread_of_runs(own), OWN_RUNS
+    return spread_of_runs(pool.scatter), POOLED
 
 
-def _scatters_more(fit: _RunFits, observed: FloatArray, pool: _Pool) -> bool:
+def _scatters_more(own: RunScatter, pool: RunScatter) -> bool:
     """Whether this sensor's runs scatter more at its mean x than the other sensors' do, beyond chance."""
-    expected = pool.covariance + fit.within.mean(axis=0)
-    total = pool.degrees * expected[0, 0] - fit.degrees * observed[0, 0]
-    rest = pool.degrees - fit.degrees
-    if rest < 1 or total <= 0:
+    squares = float(own.between[0, 0] + own.within[0, 0])
+    others = float(pool.between[0, 0] + pool.within[0, 0]) - squares
+    rest = pool.degrees - own.degrees
+    if rest < 1 or others <= 0:
         return False
-    ratio = observed[0, 0] / (total / rest)
-    return bool(special.fdtrc(fit.degrees, rest, ratio) < HETEROGENEITY_RISK)
+    ratio = squares / own.degrees / (others / rest)
+    return bool(special.fdtrc(own.degrees, rest, ratio) < HETEROGENEITY_RISK)
 
 
 def _branch_line(
@@ -387,18 +396,19 @@ def _branch_line(
     description: Description,
 ) -> BranchLine:
     """The sensor's line from its runs, with all that a reading by it needs."""
-    between, degrees, source = _run_covariance_of(fit, pool)
-    combined = line_of_runs(fit.coefficients, fit.within, np.nan_to_num(between), fit.centre)
-    coefficients, covariance, _ = combined.raw
-    back = np.array([[1.0, -fit.centre], [0.0, 1.0]])
-    slope = float(coefficients[1])
+    spread, source = _spread_of(fit, pool)
     known = source != UNKNOWN
+    combined = (
+        line_of_mountings(fit.coefficients, fit.within, fit.mounting, spread, fit.centre)
+        if known
+        else line_of_runs(fit.coefficients, fit.within, np.zeros((2, 2)), fit.centre)
+    )
+    coefficients, covariance, run_covariance = combined.raw
+    slope = float(coefficients[1])
     fit_covariance = covariance if known else np.full((2, 2), np.nan)
     rows = fit.rows
     shared = shared_covariance(used, rows, reference.name, used.x[rows], slope, description)
-    cells = level_cells(
-        used.x[rows], used.signal[rows], used.level[rows], used.direction[rows], used.run[rows], slope
-    )
+    cells = level_cells(used, rows, slope)
     hysteresis = _hysteresis(cells, fit) if branch == "both" else None
     full_scale_output, full_scale = _full_scale(fit.span, slope, reference, description)
     line = BranchLine(
@@ -417,14 +427,14 @@ def _branch_line(
         fit_covariance + shared,
         fit_covariance,
         float(combined.covariance[0, 0]) if known else float("nan"),
-        back @ between @ back.T,
+        run_covariance if known else np.full((2, 2), np.nan),
         fit.residual_sd,
         fit.noise,
         fit.lack.variance if fit.lack is not None else 0.0,
         fit.lack,
         hysteresis,
         0.5 * float(np.sqrt(hysteresis.mean_square_width)) if hysteresis is not None else 0.0,
-        degrees,
+        spread.degrees_of_freedom,
         float("nan"),
         source,
         full_scale_output,

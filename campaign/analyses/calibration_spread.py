@@ -56,7 +56,7 @@ def _backlash_in_signal(
 
 
 def repeatability_frame(lines: tuple[BranchLine, ...]) -> pd.DataFrame:
-    """Return SD and range over runs at every level and direction of every sensor.
+    """Return SD and range over the runs of a mounting at every level and direction of every sensor.
 
     Signals are moved along the sensor's line from the x that was reached to the nominal level.
     """
@@ -65,7 +65,7 @@ def repeatability_frame(lines: tuple[BranchLine, ...]) -> pd.DataFrame:
         cells = line.cells
         if cells.cells == 0:
             continue
-        found = repeatability(cells.signal, cells.cell, cells.cells)
+        found = repeatability(cells.signal, cells.cell, cells.mounting)
         first = np.unique(cells.cell, return_index=True)[1]
         parts.append(
             pd.DataFrame(
@@ -75,7 +75,7 @@ def repeatability_frame(lines: tuple[BranchLine, ...]) -> pd.DataFrame:
                     "nominal_level": cells.level[first],
                     "runs": found.counts,
                     "sd": found.standard_deviations,
-                    "range": np.where(found.counts > 1, found.ranges, np.nan),
+                    "range": found.ranges,
                     "sd_percent_fso": 100.0 * found.standard_deviations / line.full_scale_output,
                 }
             )

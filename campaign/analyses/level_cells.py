@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from campaign.analyses.used_readings import FALLING, RISING
+from campaign.analyses.used_readings import FALLING, RISING, UsedReadings
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
@@ -24,6 +24,7 @@ class LevelCells:
     direction: IntArray
     level: FloatArray
     run: IntArray
+    mounting: IntArray
     signal: FloatArray
     cell: IntArray
 
@@ -52,10 +53,10 @@ class LevelCells:
         return levels[known.any(axis=0)], difference[known.any(axis=1)][:, known.any(axis=0)]
 
 
-def level_cells(
-    x: FloatArray, signal: FloatArray, level: FloatArray, direction: IntArray, run: IntArray, slope: float
-) -> LevelCells:
-    """Gather readings of one sensor (arrays of shape (readings,)); those without a level are left out."""
+def level_cells(used: UsedReadings, rows: IntArray, slope: float) -> LevelCells:
+    """Gather the readings of one sensor at the places *rows*; those without a level are left out."""
+    x, signal, level = used.x[rows], used.signal[rows], used.level[rows]
+    direction, run = used.direction[rows], used.run[rows]
     known = np.isfinite(level)
     levels, place = np.unique(level[known], return_inverse=True)
     runs, row = np.unique(run[known], return_inverse=True)
@@ -69,6 +70,7 @@ def level_cells(
         (of_level // max(len(levels), 1)).astype(np.int64),
         levels[of_level % max(len(levels), 1)] if len(keys) else np.empty(0),
         runs[keys % len(runs)] if len(keys) else np.empty(0, dtype=np.int64),
+        used.mounting[rows][known][np.unique(entry, return_index=True)[1]],
         means,
         cell.astype(np.int64),
     )

@@ -72,6 +72,7 @@ SENSOR_LINE_COLUMNS = [
     "hysteresis_null_percent_fso",
     "hysteresis_p",
     "run_to_run_sd",
+    "repeatability_df",
 ]
 """Columns of the table, in order; strain stands for x where the reference is a length."""
 
@@ -92,7 +93,7 @@ def sensor_lines_frame(
                 **_gauge_factor(line, used.x[line.rows], reference),
                 **_linearity_figures(line),
                 **_hysteresis_figures(line),
-                "repeatability_percent_fso": _repeatability_percent(line),
+                **_repeatability_figures(line),
                 **exponents[line.key, line.branch],
             }
         )
@@ -200,12 +201,19 @@ def _hysteresis_figures(line: BranchLine) -> dict[str, float]:
     }
 
 
-def _repeatability_percent(line: BranchLine) -> float:
-    """SD over runs at one level and direction, pooled over both, in per cent of full-scale output."""
+def _repeatability_figures(line: BranchLine) -> dict[str, float]:
+    """SD over the runs of a mounting at one level and direction, pooled over all, in per cent of full scale.
+
+    The readings of a run share its zero and slope, so the degrees of freedom are those of the runs.
+    """
     if line.cells.cells == 0:
-        return float("nan")
-    pooled = repeatability(line.cells.signal, line.cells.cell, line.cells.cells).pooled_sd
-    return 100.0 * pooled / line.full_scale_output
+        return {"repeatability_percent_fso": float("nan"), "repeatability_df": 0.0}
+    found = repeatability(line.cells.signal, line.cells.cell, line.cells.mounting)
+    runs, mountings = len(np.unique(line.cells.run)), len(np.unique(line.cells.mounting))
+    return {
+        "repeatability_percent_fso": 100.0 * found.pooled_sd / line.full_scale_output,
+        "repeatability_df": float(runs - mountings),
+    }
 
 
 def _stretch_exponents(

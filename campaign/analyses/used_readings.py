@@ -36,8 +36,8 @@ class UsedReadings:
         Nominal level, of the campaign or else of the sensor; NaN where neither is common.
     direction
         Codes: rising, falling, turning.
-    run, sensor
-        Codes from 0, in sorted order of ``RUN_KEYS`` and ``SENSOR_KEYS``.
+    run, sensor, mounting
+        Codes from 0, in sorted order of ``RUN_KEYS``, ``SENSOR_KEYS`` and module with session.
     one_way_runs
         Shape (runs,): whether the run only ever moves one way (level and time are not told apart).
     run_minutes
@@ -55,6 +55,7 @@ class UsedReadings:
     direction: IntArray
     run: IntArray
     sensor: IntArray
+    mounting: IntArray
     one_way_runs: BoolArray
     run_minutes: FloatArray
     weights: FloatArray
@@ -98,6 +99,7 @@ def used_readings(readings: Readings, sensors: pd.DataFrame) -> UsedReadings:
         np.asarray(pd.Index(DIRECTIONS).get_indexer(pd.Index(table["direction"])), dtype=np.int64),
         run,
         np.asarray(table.groupby(SENSOR_KEYS, sort=True).ngroup(), dtype=np.int64),
+        np.asarray(table.groupby([*SENSOR_KEYS[:2], "session"], sort=True).ngroup(), dtype=np.int64),
         one_way,
         minutes,
         np.ones(len(table)),

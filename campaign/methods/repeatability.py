@@ -17,34 +17,62 @@ IntArray = npt.NDArray[np.int64]
 
 @dataclass(frozen=True)
 class Repeatability:
-    """Spread of each cell (level and direction): all of shape (cells,), signal units; SD is NaN with one run.
+    """Spread of each cell (level and direction), shape (cells,), in signal units.
 
-    ``pooled_sd`` pools the variances of all cells by their degrees of freedom (NaN where nothing is
-    repeated).
+    Attributes
+    ----------
+    counts
+        Runs in the cell.
+    degrees_of_freedom
+        Of its standard deviation: runs less mountings.
+    standard_deviations
+        Over the runs of one mounting, pooled over mountings; NaN where no mounting repeats the cell.
+    ranges
+        Largest less smallest within one mounting, the largest of all mountings; NaN likewise.
+    pooled_sd, pooled_degrees
+        Variances of all cells pooled by their degrees of freedom; the SD is NaN where nothing is repeated.
     """
 
     counts: IntArray
-    means: FloatArray
+    degrees_of_freedom: IntArray
     standard_deviations: FloatArray
     ranges: FloatArray
     pooled_sd: float
-    degrees_of_freedom: int
+    pooled_degrees: int
 
 
-def repeatability(signals: FloatArray, cell: IntArray, cells: int) -> Repeatability:
+def repeatability(signals: FloatArray, cell: IntArray, mounting: IntArray) -> Repeatability:
     """Return the spread of readings in each cell.
 
-    ``signals`` and ``cell`` (codes from 0 to cells − 1, each present) have shape (readings,), one reading a
-    run.
+    Parameters
+    ----------
+    signals
+        Shape (readings,): one reading a run and cell.
+    cell
+        Shape (readings,): codes from 0, each present.
+    mounting
+        Shape (readings,): code of the mounting; repeatability is the spread within one.
     """
-    counts = np.bincount(cell, minlength=cells)
-    means = np.bincount(cell, signals, minlength=cells) / counts
-    squares = np.bincount(cell, (signals - means[cell]) ** 2, minlength=cells)
-    deviations = np.sqrt(np.divide(squares, counts - 1, out=np.full(cells, np.nan), where=counts > 1))
-    order = np.lexsort((signals, cell))
+    cells = int(cell.max()) + 1
+    group = np.unique(cell * (int(mounting.max()) + 1) + mounting, return_inverse=True)[1]
+    counts = np.bincount(group)
+    means = np.bincount(group, signals) / counts
+    order = np.lexsort((signals, group))
     first = np.concatenate([[0], np.cumsum(counts)[:-1]])
+    of_group = cell[order][first]
     ordered = signals[order]
-    ranges = ordered[first + counts - 1] - ordered[first]
-    degrees = int(np.sum(counts - 1))
-    pooled = float(np.sqrt(squares.sum() / degrees)) if degrees > 0 else float("nan")
-    return Repeatability(counts.astype(np.int64), means, deviations, ranges, pooled, degrees)
+    ranges = np.full(cells, np.nan)
+    repeated = counts > 1
+    np.fmax.at(ranges, of_group[repeated], (ordered[first + counts - 1] - ordered[first])[repeated])
+    squares = np.bincount(cell, (signals - means[group]) ** 2, minlength=cells)
+    degrees = np.bincount(of_group, counts - 1, minlength=cells).astype(np.int64)
+    variances = np.divide(squares, degrees, out=np.full(cells, np.nan), where=degrees > 0)
+    every = int(degrees.sum())
+    return Repeatability(
+        np.bincount(cell, minlength=cells).astype(np.int64),
+        degrees,
+        np.sqrt(variances),
+        ranges,
+        float(np.sqrt(squares.sum() / every)) if every > 0 else float("nan"),
+        every,
+    )

@@ -124,12 +124,12 @@ def test_run_to_run_covariance_is_recovered():
 
 
 def test_new_runs_are_covered_through_the_records():
-    """95 % intervals by the records, one reading and a mean of ten in a new run; 40 campaigns of 12."""
+    """95 % intervals by the records, one reading and a mean of ten in a new run; 25 campaigns of 12."""
     rng = np.random.default_rng(77)
     design = {"modules": 4, "sensors": 3, "repetitions": 3, "levels": 9}
     quiet = Components(sensor=SPREAD.sensor, residual=0.0)
     hits = []
-    for seed in range(40):
+    for seed in range(25):
         truth = (
             calibrate(simulated(quiet, seed=seed, **design)).sensor_lines[["intercept", "slope"]].to_numpy()
         )
@@ -447,3 +447,44 @@ def test_electrode_resistance_is_judged_where_it_is_stated():
     assert "electrode_resistance" not in calibrate(readings).labels
     corrected = replace(RATED, readout={"open_correction": "true"})
     assert "open correction" in calibrate(readings, corrected).labels["stretch_exponent"]
+
+
+def test_a_new_mounting_is_covered_where_mountings_repeat():
+    """A session moves a line more than a run does: readings after remounting must still be covered."""
+    rng = np.random.default_rng(78)
+    components = replace(SPREAD, session=LineSpread(0.5, 0.8), repetition=LineSpread(0.2, 0.3))
+    quiet = Components(sensor=SPREAD.sensor, residual=0.0)
+    design = {"modules": 5, "sensors": 3, "sessions": 2, "repetitions": 3, "levels": 8}
+    hits = []
+    for seed in range(16):
+        truth = (
+            calibrate(simulated(quiet, seed=seed, **design)).sensor_lines[["intercept", "slope"]].to_numpy()
+        )
+        records = calibrate(simulated(components, seed=seed, **design)).records
+        for record, true in zip(records, truth, strict=True):
+            strain = rng.uniform(0.05, 0.35)
+            new = true + components.session.factor @ rng.normal(0.0, 1.0, 2)
+            new = new + components.repetition.factor @ rng.normal(0.0, 1.0, 2)
+            signal = new[0] + new[1] * strain + rng.normal(0.0, 0.15 / np.sqrt(10))
+            _, low, high = inverse_limits(record.reading_model, signal, 10)
+            hits.append(low <= strain <= high)
+    assert 0.92 <= np.mean(hits) <= 0.98
+
+
+def test_levels_in_random_order_have_no_branches():
+    order = np.array([0.0, 0.4, 0.1, 0.3, 0.15, 0.35, 0.05, 0.25])
+    parts = []
+    rng = np.random.default_rng(12)
+    for repetition in (1, 2, 3):
+        identity = TrialIdentity(
+            f"{repetition}.csv", "staircase", "one", "", "M", "S", "S", repetition, "", "", "", 50.0, 0.0
+        )
+        trial = Trial(
+            identity, 80 + 70 * order + rng.normal(0.0, 0.1, 8), "pF", elongation_mm=50 * order,
+            length_mm=50 * (1 + order), strain=order,
+        )  # fmt: skip
+        parts.append(readings_of_staircase(trial).readings)
+    calibration = calibrate(collect_readings(parts))
+    assert calibration.sensor_lines["branch"].tolist() == ["both"]
+    assert "time_confounded" not in calibration.labels
+    assert calibration.records[0].direction_half_width == 0.0

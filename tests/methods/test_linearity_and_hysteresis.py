@@ -115,13 +115,22 @@ def test_the_width_is_not_raised_by_noise():
 
 def test_repeatability_of_two_cells():
     signals, cell = np.array([1.0, 1.2, 1.4, 5.0, 5.0, 5.6]), np.array([0, 0, 0, 1, 1, 1])
-    found = repeatability(signals, cell, 2)
+    found = repeatability(signals, cell, np.zeros(6, dtype=np.int64))
     assert found.standard_deviations == pytest.approx([0.2, np.std([5.0, 5.0, 5.6], ddof=1)])
     assert found.ranges == pytest.approx([0.4, 0.6])
     assert found.pooled_sd == pytest.approx(np.sqrt((0.04 + 0.12) / 2))
-    alone = repeatability(np.array([3.0]), np.array([0]), 1)
-    assert np.isnan(alone.standard_deviations[0])
-    assert np.isnan(alone.pooled_sd)
+    alone = repeatability(np.array([3.0]), np.array([0]), np.array([0]))
+    assert np.isnan([alone.standard_deviations[0], alone.ranges[0], alone.pooled_sd]).all()
+
+
+def test_repeatability_is_within_one_mounting():
+    signals = np.array([1.0, 1.2, 7.0, 7.4])
+    found = repeatability(signals, np.zeros(4, dtype=np.int64), np.array([4, 4, 9, 9]))
+    assert found.standard_deviations == pytest.approx([np.sqrt((0.02 + 0.08) / 2)])
+    assert found.ranges == pytest.approx([0.4])
+    assert (found.counts[0], found.degrees_of_freedom[0]) == (4, 2)
+    apart = repeatability(signals, np.zeros(4, dtype=np.int64), np.arange(4))
+    assert np.isnan(apart.standard_deviations[0])
 
 
 def test_a_difference_without_repeats_uses_the_noise_that_is_known():
