@@ -14,7 +14,7 @@ from campaign.pages.formulas import FORMULAS, rendered_formulas
 from campaign.pages.method import coverage_table, measured_ranges, versions
 from campaign.pages.page import Page, SiteFrame
 from campaign.pages.render import render_site, templates_folder
-from campaign.pages.tables import Column, Table
+from campaign.pages.tables import Column, Table, shown_cells
 from campaign.recordings.recording import STRAIN
 
 TEMPLATES = templates_folder()
@@ -129,9 +129,18 @@ def test_text_for_a_paper_says_nothing_that_was_not_recorded() -> None:
 
 def test_coverage_table_shows_what_its_file_says(tmp_path: Path) -> None:
     file = tmp_path / "coverage.csv"
-    file.write_text("figure,campaigns,coverage\nmodule SD,500,0.952\n")
+    file.write_text(
+        "quantity,nominal,covered,simulations,low,high\nmodule SD at mid,0.95,0.952,500,0.929,0.969\n"
+    )
     table = coverage_table(file)
     assert table is not None
-    assert table.frame.to_numpy().tolist() == [["module SD", 500, 0.952]]
-    assert [column.kind for column in table.columns] == ["text", "integer", "number"]
+    cells = [cell.text.replace("\u2007", "").strip() for cell in shown_cells(table)[0]]
+    assert cells == ["module SD at mid", "95\u202f%", "95.2 [92.9, 96.9]", "500"]
     assert coverage_table(tmp_path / "absent.csv") is None
+
+
+def test_coverage_on_the_page_is_that_of_the_benchmark() -> None:
+    benchmark = Path(__file__).parents[2] / "benchmarks" / "coverage.csv"
+    assert benchmark.read_bytes() == (TEMPLATES / "method" / "coverage.csv").read_bytes()
+    covered = pd.read_csv(benchmark)
+    assert (covered["simulations"] >= 500).all()
