@@ -18,10 +18,12 @@ FORMULAS: dict[str, str] = {
     "standard_error": r"u(\bar y)=\max\left(s\sqrt{\frac{\tau}{n}},\ \frac{\delta}{\sqrt{12}}\right),"
     r"\qquad \tau=1+2\sum_{k=1}^{K}\left(1-\frac{k}{n}\right)\rho_k,\qquad n_{\text{eff}}=\frac{n}{\tau}",
     "positive_sequence": r"\rho_{2j}+\rho_{2j+1}>0\quad\text{for every}\ j\le J,\qquad K=2J+1",
-    "run_line": r"y_i=a_r+b_r\,(x_i-\bar x)+e_i,\qquad r=1,\dots,R",
-    "sensor_line": r"\hat\theta=\frac{1}{R}\sum_{r=1}^{R}\hat\theta_r,\qquad "
-    r"\operatorname{Cov}(\hat\theta)=\frac{1}{R(R-1)}\sum_{r=1}^{R}"
-    r"(\hat\theta_r-\hat\theta)(\hat\theta_r-\hat\theta)^{\top},\qquad \hat\theta_r=(a_r,b_r)^{\top}",
+    "run_line": r"y_i=a_r+b_r\,(x_i-\bar x)+e_i,\qquad \hat\theta_{sr}=(a_r,b_r)^{\top}",
+    "sensor_line": r"\hat\theta=\frac{1}{S}\sum_{s=1}^{S}\hat\theta_s,\qquad "
+    r"\hat\theta_s=\frac{1}{R_s}\sum_{r=1}^{R_s}\hat\theta_{sr},\qquad "
+    r"\operatorname{Cov}(\hat\theta)=\frac{1}{S}\left(\Sigma_{\text{mounting}}+"
+    r"\frac{\Sigma_{\text{run}}+\Sigma_{\text{noise}}}{R_s}\right)",
+    "weights": r"w_i\propto\frac{1}{\tau^2(x_i)+u^2(\bar y_i)},\qquad \tau^2(x)=\exp(\alpha+\beta x)",
     "gauge_factor": r"\text{GF}=\frac{1}{C_0}\frac{\text{d}C}{\text{d}\varepsilon}=\frac{b}{a}",
     "gauge_factor_uncertainty": r"\frac{u^2(\text{GF})}{\text{GF}^2}=\frac{u^2(b)}{b^2}+\frac{u^2(a)}{a^2}"
     r"-\frac{2\,u(a,b)}{a\,b}",
