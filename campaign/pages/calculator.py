@@ -64,7 +64,7 @@ def calculator_data(records: Iterable[CalibrationRecord]) -> dict[str, object]:
 
 def _plain(value: object) -> object:
     if isinstance(value, float):
-        return value if math.isfinite(value) else None
+        return float(value) if math.isfinite(value) else None
     if isinstance(value, Mapping):
         return {str(k): _plain(v) for k, v in sorted(value.items())}
     if isinstance(value, (tuple, list)):
