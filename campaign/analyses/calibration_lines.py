@@ -460,7 +460,7 @@ def effective_degrees(
     spent = of_runs**2 / line.degrees_of_freedom
     if line.lack_of_fit is not None:
         spent += lack**2 / line.lack_of_fit.first_degrees
-    return total**2 / spent if spent > 0 else line.degrees_of_freedom
+    return float(total**2 / spent) if spent > 0 else line.degrees_of_freedom
 
 
 def _hysteresis(cells: LevelCells, fit: _RunFits) -> StepHysteresis | None:
