@@ -182,10 +182,13 @@ def branch_lines(
             fit = _fit_runs(used, part, branch, span)
             if fit is not None:
                 fits[int(used.sensor[rows[0]]), branch] = fit
-    generations = {key: used.text("generation", int(fit.rows[0])) for key, fit in fits.items()}
-    pools = _pools(fits, generations)
+    alike = {
+        key: (used.text("generation", int(fit.rows[0])), used.text("unit", int(fit.rows[0])), key[1])
+        for key, fit in fits.items()
+    }
+    pools = _pools(fits, alike)
     return tuple(
-        _branch_line(used, key[1], fit, pools[generations[key], key[1]], reference, description)
+        _branch_line(used, key[1], fit, pools[alike[key]], reference, description)
         for key, fit in fits.items()
     )
 
@@ -353,12 +356,12 @@ def _smallest(y: FloatArray) -> float:
 
 
 def _pools(
-    fits: dict[tuple[int, str], _RunFits], generations: dict[tuple[int, str], str]
-) -> dict[tuple[str, str], _Pool]:
-    """Observed scatter of runs, less noise within, pooled over sensors, by generation and branch."""
-    gathered: dict[tuple[str, str], list[_RunFits]] = {}
+    fits: dict[tuple[int, str], _RunFits], alike: dict[tuple[int, str], tuple[str, str, str]]
+) -> dict[tuple[str, str, str], _Pool]:
+    """Scatter of runs pooled over sensors that are alike: of one generation, unit and branch."""
+    gathered: dict[tuple[str, str, str], list[_RunFits]] = {}
     for key, fit in fits.items():
-        gathered.setdefault((generations[key], key[1]), []).append(fit)
+        gathered.setdefault(alike[key], []).append(fit)
     pools = {}
     for name, members in gathered.items():
         several = [fit.scatter for fit in members if fit.degrees > 0]
