@@ -277,7 +277,7 @@ def sum_up(
     """
     known = figures.dropna(subset=["value"])
     return tuple(
-        _sum_up_one(str(generation), rows, limit, _mean_of(put_back, str(generation)))
+        _sum_up_one(str(generation), rows, limit, _mean_of(put_back, str(generation), rows))
         for generation, rows in known.groupby("generation", sort=True)
     )
 
@@ -305,11 +305,13 @@ def _sum_up_one(generation: str, rows: pd.DataFrame, limit: float, put_back: flo
     )
 
 
-def _mean_of(figures: pd.DataFrame | None, generation: str) -> float:
+def _mean_of(figures: pd.DataFrame | None, generation: str, without: pd.DataFrame) -> float:
+    """Mean with everything put back; NaN where that adds nothing to the figures *without* it."""
     if figures is None:
         return math.nan
     rows = figures[figures["generation"] == generation].dropna(subset=["value"])
-    return float(rows.groupby("module")["value"].mean().mean()) if len(rows) else math.nan
+    added = len(rows) != len(without) or not np.allclose(sorted(rows["value"]), sorted(without["value"]))
+    return float(rows.groupby("module")["value"].mean().mean()) if added and len(rows) else math.nan
 
 
 def _effort_findings(effort: CalibrationEffort, limits: Limits) -> list[Finding]:

@@ -201,7 +201,7 @@ def _end_labels(lines: pd.DataFrame, axes: str, reference: ReferenceQuantity) ->
     made: list[Layout] = []
     last = -math.inf
     for height, right, sensor in ends:
-        if height - last < 0.09 * reach and made:
+        if height - last < 0.16 * reach and made:
             continue
         made.append(
             label(

@@ -225,6 +225,8 @@ def _sd_words(row: Mapping[Hashable, Any], factor: float, unit: str = "") -> str
     estimate, low, high = (float(row[key]) * factor for key in ("strain_sd", "low", "high"))
     if math.isnan(estimate) and math.isfinite(high):
         return f"at most {numbers.significant(high, 2, unit)}"
+    if math.isfinite(estimate) and not (math.isfinite(low) and math.isfinite(high)):
+        return f"{numbers.significant(estimate, 2, unit)} (interval withheld)"
     return numbers.interval(estimate, low, high, unit)
 
 
@@ -252,7 +254,7 @@ _MARKS = {"circle": "●", "square": "■", "diamond": "◆", "triangle-up": "�
 
 
 def _components_caption(table: pd.DataFrame, reference: ReferenceQuantity) -> str:
-    mid = table[(table["place"] == "mid") & ~table["level"].isin(["total"])]
+    mid = table[(table["place"] == "mid") & (table["level"] != "total")].dropna(subset=["strain_sd"])
     if mid.empty:
         return "Components of the spread as strain-equivalent standard deviations."
     parts = []
@@ -539,22 +541,32 @@ def _precision_and_tests(variance: Variance, generation: Column, factor: float, 
 
 
 def _side_by_side(table: pd.DataFrame, factor: float) -> pd.DataFrame:
-    """Return one row a generation and component: its SD at each place, its share, its label."""
+    """Return one row a generation and component: its SD at each place, its share, its label.
+
+    The pooled fit is profiled at mid range only, so that is all that is shown of it.
+    """
     made = []
+    several = table["generation"].nunique() > 1
     for (generation, level), rows in table.groupby(["generation", "level"], sort=False):
-        by_place = {str(r["place"]): r for r in rows.to_dict("records")}
+        shown = rows[rows["place"] == "mid"] if generation == "all" and several else rows
+        by_place = {str(r["place"]): r for r in shown.to_dict("records")}
         middle = by_place.get("mid", next(iter(by_place.values())))
-        sds = {place: _sd_words(by_place[place], factor) if place in by_place else "" for place in PLACES}
+        sds = {place: _unbroken(_sd_words(row, factor)) for place, row in by_place.items()}
         made.append(
             {
-                "generation": generation,
+                "generation": _unbroken(str(generation)),
                 "words": level_words(str(middle["called"])),
-                **sds,
-                "share": "" if level == "total" else _share_words(middle),
+                **{place: sds.get(place, "") for place in PLACES},
+                "share": "" if level == "total" else _unbroken(_share_words(middle)),
                 "label": "" if pd.isna(middle["label"]) else str(middle["label"]),
             }
         )
     return pd.DataFrame(made, columns=["generation", "words", *PLACES, "share", "label"])
+
+
+def _unbroken(text: str) -> str:
+    """Return *text* so that a cell does not break it into lines."""
+    return text.replace(" ", "\u00a0").replace("-", "\u2011")
 
 
 def _share_words(row: Mapping[Hashable, Any]) -> str:
