@@ -25,8 +25,9 @@ from campaign.pages.figures import (
     points,
 )
 from campaign.pages.page import Page
-from campaign.pages.sensor import FIGURE_ORDER, sensor_keys
+from campaign.pages.sensor import FIGURE_ORDER
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
+from campaign.pages.sensor_parts import sensor_keys
 from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
 from campaign.pages.variance import TERMS, in_shown_units
