@@ -102,6 +102,10 @@ class NestedCases:
         table = pd.DataFrame({"module": module, "sensor": sensor, "run": run, "x": x, "y": y})[kept]
         return table.reset_index(drop=True)
 
+    def means(self, table) -> NestedModel:
+        """Random means of module, sensor and run."""
+        return self.intercepts(table, "y", ["module", "sensor", "run"], {"mean": 1.0, "x": table["x"]})
+
     def lines(self, table) -> NestedModel:
         """Random lines of module, sensor and run."""
         x = table["x"]
@@ -120,6 +124,8 @@ class Dense:
             unit = np.unique(np.column_stack([unit, codes]), axis=0, return_inverse=True)[1].ravel()
             self.units[name] = unit
 
+        self.crossed = {term.name: self.designs(term) for term in model.terms}
+
     def designs(self, term: RandomTerm) -> list[np.ndarray]:
         """Design (N, d) of every effect of a term."""
         unit = self.units[term.level]
@@ -130,7 +136,7 @@ class Dense:
     def covariance(self, covariances, residual_variance):
         total = residual_variance * np.eye(len(self.model.response))
         for term in self.model.terms:
-            for z in self.designs(term):
+            for z in self.crossed[term.name]:
                 total += z @ covariances[term.name] @ z.T
         return total
 
