@@ -210,6 +210,7 @@ def _gather(
     unit, x_unit = str(fits[0].model.readings["unit"].iloc[0]), reference.unit
     single = _single(fits)
     uneven = {generation for generation, check in noise.items() if check.faults}
+    uneven |= {"all"} if uneven else set()
     tests = test_table(single, settling, seed)
     fixed, new = frames.fixed_effects_and_new_sensors(fits, unit, x_unit)
     return Variance(
@@ -370,7 +371,7 @@ def _fit_all(
 def _limits_at(model: VarianceModel, what: str) -> tuple[str, ...]:
     """Where limits are found: everywhere for a generation's signal, at mid range for all pooled.
 
-    Ratios are there to be looked at beside the signal, without limits: these cost more than all fits together.
+    Ratios are there to be looked at beside the signal, without limits: these cost more than the fits.
     """
     if what != SIGNAL:
         return ()
