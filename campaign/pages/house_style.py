@@ -8,6 +8,7 @@ from campaign.pages import palette
 
 FONT = "'Gill Sans Nova', 'Optima', Candara, 'Noto Sans', 'Source Sans 3', 'Segoe UI', system-ui, sans-serif"
 
+# Exponents as 'e': the library sets raised figures in a style attribute, which the content policy forbids.
 _AXIS: dict[str, Any] = {
     "showline": True,
     "linecolor": palette.SOFT,
@@ -19,6 +20,7 @@ _AXIS: dict[str, Any] = {
     "tickfont": {"size": 12, "color": palette.SOFT},
     "title": {"font": {"size": 13, "color": palette.INK}, "standoff": 12},
     "automargin": False,
+    "exponentformat": "e",
 }
 
 HOUSE_TEMPLATE: dict[str, Any] = {

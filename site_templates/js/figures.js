@@ -131,7 +131,14 @@ window.campaign = window.campaign || {};
     }, 0);
   }
 
+  /* The library adds style elements for parts that are not used here, unless their ids are taken: the content policy
+     forbids such elements. */
   function fetchLibrary() {
+    for (const id of window.campaignLibraryStyles) {
+      const taken = document.createElement("meta");
+      taken.id = id;
+      document.head.append(taken);
+    }
     const script = document.createElement("script");
     script.src = "assets/plot_library.js";
     script.addEventListener("load", function () {

@@ -134,6 +134,12 @@ def test_texts_of_recordings_are_not_read_as_markup() -> None:
     assert "<i>&" in words
 
 
+def test_markup_in_titles_and_labels_is_refused() -> None:
+    """The plot library would set it by style attributes, which the content policy forbids."""
+    with pytest.raises(ValueError, match="markup"):
+        made([figures.points([0], [0])], figures.layout(figures.axis("x<sub>1</sub>"), figures.axis("y")))
+
+
 @given(arrays(float, st.integers(1, 5000), elements=st.floats(-1e6, 1e6)))
 def test_thinning_keeps_the_extremes_the_ends_and_the_order(y: np.ndarray[Any, Any]) -> None:
     x = np.arange(len(y), dtype=float)
