@@ -58,15 +58,18 @@ class Worst:
 class SensorFigure:
     """One figure of every sensor of a generation, summed up.
 
-    ``mean`` with its 95 % interval counts modules as the unit (NaN limits with one module); ``exceeding``
-    is the number of sensors above ``threshold`` (the limit where there is one, else the mean); ``put_back``
-    is the mean with everything set aside put back, NaN where nothing was or it cannot be computed.
+    ``median`` and ``smallest`` are over sensors; ``mean`` with its 95 % interval counts modules as the unit
+    (NaN limits with one module); ``exceeding`` is the number of sensors above ``threshold`` (the limit
+    where there is one, else the mean); ``put_back`` is the mean with everything set aside put back, NaN
+    where nothing was or it cannot be computed.
     """
 
     generation: str
     sensors: int
     modules: int
     mean: float
+    median: float
+    smallest: float
     low: float
     high: float
     worst: Worst
@@ -295,6 +298,8 @@ def _sum_up_one(generation: str, rows: pd.DataFrame, limit: float, put_back: flo
         sensors=len(rows),
         modules=modules.size,
         mean=mean,
+        median=float(rows["value"].median()),
+        smallest=float(rows["value"].min()),
         low=max(mean - reach, 0.0) if math.isfinite(reach) else math.nan,
         high=mean + reach,
         worst=Worst(generation, str(worst["module"]), str(worst["sensor"]), float(worst["value"])),
