@@ -53,7 +53,7 @@ def _check_size(figure: Figure) -> None:
 
 
 def _check_texts(figure: Figure) -> None:
-    """Refuse markup in texts but line breaks: the library turns it into style attributes, which pages forbid."""
+    """Refuse markup in texts but line breaks: the library makes style attributes of it."""
     titles = [figure.layout[key].get("title", {}).get("text", "") for key in axis_names(figure.layout)]
     labels = [note["text"] for note in figure.layout.get("annotations", ())]
     for text in (*titles, *labels):

@@ -6,6 +6,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -187,7 +188,13 @@ def _page_html(
         "figures": {f.name: _placed_figure(page, i, figures[f.name]) for i, f in enumerate(page.figures, 1)},
         "tables": {t.name: _placed_table(page, i, t) for i, t in enumerate(page.tables, 1)},
     }
-    return jinja.get_template(page.template).render(context)
+    return _without_indents(jinja.get_template(page.template).render(context))
+
+
+def _without_indents(page: str) -> str:
+    """Return a page without indents and empty lines, but for what is set as it stands (``pre``)."""
+    parts = re.split(r"(<pre\b.*?</pre>)", page, flags=re.DOTALL)
+    return "".join(part if part.startswith("<pre") else re.sub(r"\s*\n\s*", "\n", part) for part in parts)
 
 
 def _placed_figure(page: Page, index: int, figure: Figure) -> PlacedFigure:

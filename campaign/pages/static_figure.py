@@ -269,58 +269,72 @@ def _markers(places: list[tuple[float, float]], trace: Trace) -> str:
     seen = [i for i, place in enumerate(places) if _seen(*place)]
     if not any(isinstance(value, list) for value in (symbols, sizes, colours)):
         outlines = "".join(_symbol(symbols, *places[i], sizes / 2) for i in seen)
-        return _painted_symbol(outlines, colours, symbols) if outlines else ""
+        return _painted_symbol(outlines, colours, symbols, sizes) if outlines else ""
     return "".join(
-        _painted_symbol(
-            _symbol(_each(symbols, i), *places[i], _each(sizes, i) / 2), _each(colours, i), _each(symbols, i)
-        )
-        for i in seen
+        _one_marker(places[i], _each(symbols, i), _each(sizes, i), _each(colours, i)) for i in seen
     )
+
+
+def _one_marker(place: tuple[float, float], symbol: str, size: float, colour: str) -> str:
+    return _painted_symbol(_symbol(symbol, *place, size / 2), colour, symbol, size)
 
 
 def _each(values: Any, index: int) -> Any:
     return values[index] if isinstance(values, list) else values
 
 
-def _painted_symbol(outline: str, colour: str, symbol: str) -> str:
+def _painted_symbol(outline: str, colour: str, symbol: str, size: float) -> str:
+    """Return outlines of *symbol* as one path: dots as caps of lines without length, else shapes."""
     paint = _paint(colour)
-    if symbol.endswith("-open") or symbol in ("x", "cross", "line-ns", "line-ew"):
+    if symbol in _CAPS:
+        cap, share = _CAPS[symbol]
+        looks = f'stroke-width="{_px(size * share)}" stroke-linecap="{cap}"'
+        return f'<path d="{outline}" fill="none" stroke="{paint}" {looks}/>'
+    if symbol.endswith("-open") or symbol in _STROKES:
         return f'<path d="{outline}" fill="none" stroke="{paint}" stroke-width="1.5"/>'
-    return f'<path d="{outline}" fill="{paint}" stroke="none"/>'
+    return f'<path d="{outline}" fill="{paint}"/>'
 
 
 def _symbol(symbol: str, x: float, y: float, r: float) -> str:
-    draw = _SYMBOLS.get(symbol.removesuffix("-open"), _circle)
-    return draw(x, y, r)
+    """Return the outline of one marker around (x, y), by relative steps to keep it short."""
+    if symbol in _CAPS:
+        return f"M{_px(x)} {_px(y)}h0"
+    return _SYMBOLS.get(symbol.removesuffix("-open"), _circle)(x, y, r)
 
 
 def _circle(x: float, y: float, r: float) -> str:
-    arc = f"a{_px(r)} {_px(r)} 0 1 0"
-    return f"M{_px(x - r)} {_px(y)}{arc} {_px(2 * r)} 0{arc} {_px(-2 * r)} 0Z"
+    arc = f"a{_px(r)} {_px(r)} 0 1 0 "
+    return f"M{_px(x - r)} {_px(y)}{arc}{_px(2 * r)} 0{arc}{_px(-2 * r)} 0"
 
 
 def _square(x: float, y: float, r: float) -> str:
-    return _polygon(x, y, r * 0.9, ((-1, -1), (1, -1), (1, 1), (-1, 1)))
+    side = 1.8 * r
+    return f"M{_px(x - side / 2)} {_px(y - side / 2)}h{_px(side)}v{_px(side)}h{_px(-side)}z"
 
 
 def _diamond(x: float, y: float, r: float) -> str:
-    return _polygon(x, y, r * 1.25, ((0, -1), (1, 0), (0, 1), (-1, 0)))
+    h = 1.25 * r
+    return f"M{_px(x)} {_px(y - h)}" + _steps((h, h), (-h, h), (-h, -h)) + "z"
 
 
 def _triangle(x: float, y: float, r: float) -> str:
-    return _polygon(x, y, r * 1.15, ((0, -1), (0.9, 0.7), (-0.9, 0.7)))
+    h = 1.15 * r
+    return f"M{_px(x)} {_px(y - h)}" + _steps((0.9 * h, 1.7 * h), (-1.8 * h, 0)) + "z"
 
 
 def _triangle_down(x: float, y: float, r: float) -> str:
-    return _polygon(x, y, r * 1.15, ((0, 1), (0.9, -0.7), (-0.9, -0.7)))
+    h = 1.15 * r
+    return f"M{_px(x)} {_px(y + h)}" + _steps((0.9 * h, -1.7 * h), (-1.8 * h, 0)) + "z"
 
 
 def _saltire(x: float, y: float, r: float) -> str:
-    return f"M{_px(x - r)} {_px(y - r)}l{_px(2 * r)} {_px(2 * r)}m{_px(-2 * r)} 0l{_px(2 * r)} {_px(-2 * r)}"
+    return (
+        f"M{_px(x - r)} {_px(y - r)}" + _steps((2 * r, 2 * r)) + f"m{_px(-2 * r)} 0" + _steps((2 * r, -2 * r))
+    )
 
 
 def _cross(x: float, y: float, r: float) -> str:
-    return f"M{_px(x - r)} {_px(y)}h{_px(2 * r)}M{_px(x)} {_px(y - r)}v{_px(2 * r)}"
+    return f"M{_px(x - r)} {_px(y)}h{_px(2 * r)}m{_px(-r)} {_px(-r)}v{_px(2 * r)}"
 
 
 def _upright_tick(x: float, y: float, r: float) -> str:
@@ -331,10 +345,12 @@ def _level_tick(x: float, y: float, r: float) -> str:
     return f"M{_px(x - r)} {_px(y)}h{_px(2 * r)}"
 
 
-def _polygon(x: float, y: float, r: float, corners: Iterable[tuple[float, float]]) -> str:
-    return "M" + "L".join(f"{_px(x + r * a)} {_px(y + r * b)}" for a, b in corners) + "Z"
+def _steps(*steps: tuple[float, float]) -> str:
+    return "".join(f"l{_px(dx)} {_px(dy)}" for dx, dy in steps)
 
 
+_CAPS: dict[str, tuple[str, float]] = {"circle": ("round", 1.0), "square": ("square", 0.9)}
+_STROKES = frozenset({"x", "cross", "line-ns", "line-ew"})
 _SYMBOLS: dict[str, Callable[[float, float, float], str]] = {
     "circle": _circle,
     "square": _square,

@@ -207,7 +207,7 @@ def _column_cells(frame: pd.DataFrame, column: Column) -> list[Cell]:
         return [Cell(_text(v), _text(v), h) for v, h in zip(values, hrefs, strict=True)]
     scaled = [_number(v) * column.factor for v in values]
     texts = numbers.aligned(_number_texts(frame, column, scaled))
-    sorts = ["" if math.isnan(v) else repr(v) for v in scaled]
+    sorts = ["" if math.isnan(v) else f"{v:.7g}" for v in scaled]
     return [Cell(t, s, h) for t, s, h in zip(texts, sorts, hrefs, strict=True)]
 
 

@@ -338,7 +338,8 @@ def axe_violations(browser: Chrome, **options: Any) -> list[str]:
     found = browser.execute_async_script(
         """const done = arguments[arguments.length - 1];
            const said = v => v.id + ': ' + v.help + ' at ' + v.nodes.slice(0, 3).map(n => n.target).join(' ');
-           axe.run(document, arguments[0]).then(r => done(r.violations.map(said)), e => done([String(e)]));""",
+           axe.run(document, arguments[0])
+             .then(r => done(r.violations.map(said)), e => done([String(e)]));""",
         {"preload": False, "resultTypes": ["violations"], **options},
     )
     return list(found)
