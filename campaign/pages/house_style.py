@@ -23,6 +23,13 @@ _AXIS: dict[str, Any] = {
     "exponentformat": "e",
 }
 
+NOTE_DEFAULTS: dict[str, Any] = {
+    "showarrow": False,
+    "yanchor": "middle",
+    "font": {"size": 12, "color": palette.INK},
+}
+"""What every label has unless it says otherwise; data scripts leave it out."""
+
 HOUSE_TEMPLATE: dict[str, Any] = {
     "layout": {
         "font": {"family": FONT, "size": 12, "color": palette.INK},
@@ -30,6 +37,7 @@ HOUSE_TEMPLATE: dict[str, Any] = {
         "plot_bgcolor": palette.PAPER,
         "colorway": [style.colour for style in palette.GENERATION_STYLES],
         "showlegend": False,
+        "annotationdefaults": NOTE_DEFAULTS,
         "hovermode": "closest",
         "dragmode": "zoom",
         "bargap": 0,

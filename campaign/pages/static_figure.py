@@ -10,7 +10,7 @@ from __future__ import annotations
 import html
 import math
 import re
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -112,23 +112,28 @@ def _axes(panel: Panel) -> str:
     y_ticks = _ticks(panel.y_axis, abs(panel.bottom - panel.top) / 42)
     xs = [(_from_axis(v, panel.x_axis, panel.left, panel.right), text) for v, text in x_ticks]
     ys = [(_from_axis(v, panel.y_axis, panel.bottom, panel.top), text) for v, text in y_ticks]
-    grid = [
-        _line(x, panel.top, x, panel.bottom, palette.RULE)
-        for x, _ in xs
-        if panel.x_axis.get("showgrid", True)
-    ]
-    grid += [
-        _line(panel.left, y, panel.right, y, palette.RULE)
-        for y, _ in ys
-        if panel.y_axis.get("showgrid", True)
-    ]
-    texts: list[str] = []
-    if panel.x_axis.get("showticklabels", True):
-        texts += [_text(t, x, panel.bottom + 17, anchor="middle", colour=palette.SOFT) for x, t in xs]
-    if panel.y_axis.get("showticklabels", True):
-        texts += [_text(t, panel.left - 8, y + 4, anchor="end", colour=palette.SOFT) for y, t in ys]
     base = _line(panel.left, panel.bottom, panel.right, panel.bottom, palette.SOFT)
-    return "".join(grid) + base + "".join(texts) + _axis_titles(panel)
+    return _grid(panel, xs, ys) + base + _tick_labels(panel, xs, ys) + _axis_titles(panel)
+
+
+def _grid(panel: Panel, xs: Sequence[tuple[float, str]], ys: Sequence[tuple[float, str]]) -> str:
+    path = ""
+    if panel.x_axis.get("showgrid", True):
+        path += "".join(_segment(x, panel.top, x, panel.bottom) for x, _ in xs)
+    if panel.y_axis.get("showgrid", True):
+        path += "".join(_segment(panel.left, y, panel.right, y) for y, _ in ys)
+    return f'<path d="{path}" stroke="{palette.RULE}"/>' if path else ""
+
+
+def _tick_labels(panel: Panel, xs: Sequence[tuple[float, str]], ys: Sequence[tuple[float, str]]) -> str:
+    made = ""
+    if xs and panel.x_axis.get("showticklabels", True):
+        texts = "".join(_text(words, x, panel.bottom + 17) for x, words in xs)
+        made += f'<g fill="{palette.SOFT}" text-anchor="middle">{texts}</g>'
+    if ys and panel.y_axis.get("showticklabels", True):
+        texts = "".join(_text(words, panel.left - 8, y + 4) for y, words in ys)
+        made += f'<g fill="{palette.SOFT}" text-anchor="end">{texts}</g>'
+    return made
 
 
 def _axis_titles(panel: Panel) -> str:
@@ -255,7 +260,7 @@ def _bars_along(trace: Trace, panel: Panel, letter: str) -> str:
         else:
             ends = panel.across(x), panel.upright(y - down), panel.across(x), panel.upright(y + up)
         if _seen(*ends):
-            segments.append(f"M{_px(ends[0])} {_px(ends[1])}L{_px(ends[2])} {_px(ends[3])}")
+            segments.append(_segment(*ends))
     looks = (
         f'stroke="{_paint(error.get("color", palette.INK))}" stroke-width="{error.get("thickness", 1.4):g}"'
     )
@@ -454,7 +459,15 @@ def _line(
 ) -> str:
     dashes = f' stroke-dasharray="{DASHES[dash]}"' if dash in DASHES else ""
     looks = f'stroke="{_paint(colour)}" stroke-width="{width:g}"{dashes}'
-    return f'<path d="M{_px(x0)} {_px(y0)}L{_px(x1)} {_px(y1)}" {looks}/>'
+    return f'<path d="{_segment(x0, y0, x1, y1)}" {looks}/>'
+
+
+def _segment(x0: float, y0: float, x1: float, y1: float) -> str:
+    """Return a straight piece of a path, by its one coordinate where it is level or upright."""
+    start, across, upright = f"M{_px(x0)} {_px(y0)}", _px(x1), _px(y1)
+    if upright == _px(y0):
+        return f"{start}H{across}"
+    return f"{start}V{upright}" if across == _px(x0) else f"{start}L{across} {upright}"
 
 
 def _text(
