@@ -418,11 +418,12 @@ def test_the_policy_stops_what_is_not_the_sites_own(browser: Chrome, site: Path)
 
 
 BUDGET_PAGE, BUDGET_DATA, BUDGET_SITE = 60_000, 120_000, 40_000_000
+WHOLE = ("calibration", "variance", "residuals", "method")
+"""Pages that hold every sensor, or every formula, at once: they may take as much again."""
 
 
 def test_the_site_keeps_its_budgets(site: Path) -> None:
     assert sum(path.stat().st_size for path in site.rglob("*") if path.is_file()) < BUDGET_SITE
-    pages = {path.name: path.stat().st_size for path in site.glob("*.html")}
-    scripts = {path.name: path.stat().st_size for path in (site / "data").glob("*.js")}
-    assert {name: size for name, size in pages.items() if size >= BUDGET_PAGE} == {}
-    assert {name: size for name, size in scripts.items() if size >= BUDGET_DATA} == {}
+    for folder, pattern, budget in (("", "*.html", BUDGET_PAGE), ("data", "*.js", BUDGET_DATA)):
+        sizes = {path.stem: path.stat().st_size for path in (site / folder).glob(pattern)}
+        assert {n: size for n, size in sizes.items() if size >= budget * (2 if n in WHOLE else 1)} == {}
