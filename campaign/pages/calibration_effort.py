@@ -14,10 +14,8 @@ from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers, palette
 from campaign.pages.figures import (
     Figure,
-    Layout,
     Trace,
     axis,
-    label,
     line,
     panel,
     points,
@@ -126,7 +124,6 @@ def effort_figure(effort: CalibrationEffort, reference: ReferenceQuantity) -> Fi
         ),
         axis("", ticks=ticks, low=-0.6, high=len(efforts) - 0.4, reverse=True),
         columns=min(len(generations), 3),
-        annotations=_key(),
     )
     return Figure(
         name="effort",
@@ -208,22 +205,6 @@ def _effort_bars(
         )
         for low, high, height in zip(rows["low"], rows["high"], heights, strict=True)
         if math.isfinite(low) and math.isfinite(high)
-    ]
-
-
-def _key() -> list[Layout]:
-    """Direct labels of the two marks, above the first panel."""
-    return [
-        label(
-            "● predicted   ○ left out",
-            1.0,
-            1.0,
-            colour=palette.SOFT,
-            anchor="right",
-            shift=(0, 10),
-            size=12,
-            paper=True,
-        )
     ]
 
 

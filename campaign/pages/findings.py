@@ -98,7 +98,7 @@ def limits_table(limits: Limits, reference: ReferenceQuantity) -> Table:
             Column("_unit", "Unit", kind="text"),
             Column("_estimate", "Found", interval=("_low", "_high")),
             Column("probability", "Probability that it is kept", kind="percent", missing="unknown"),
-            Column("verdict", "Verdict", kind="text"),
+            Column("_verdict", "Verdict", kind="text"),
         ),
         shown_rows=30,
         source="limits",

@@ -72,7 +72,8 @@ def _module_page(results: CampaignResults, mapped: SkinMap, generation: str, mod
     figures: list[Figure | None] = []
     if results.calibration is not None and len(lines):
         reference = results.calibration.reference
-        where = sensor_axis(lines)
+        generations = sensor_axis(results.calibration.sensor_lines).generations
+        where = replace(sensor_axis(lines), generations=generations)
         figures = [
             module_lines_figure(results, lines, reference),
             module_merits_figure(results, module),

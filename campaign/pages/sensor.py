@@ -11,6 +11,7 @@ import pandas as pd
 
 from campaign.analyses.calibration import CalibrationRecord
 from campaign.analyses.findings import AVERAGED
+from campaign.analyses.limits import CONDITIONS, ONE_MODULE, TOO_FEW, UNKNOWN
 from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers, slugs
 from campaign.pages.calculator import calculator_data, record_href
@@ -286,11 +287,19 @@ def _limits_table(parts: SensorParts) -> list[Table]:
                 Column("_unit", "Unit", kind="text"),
                 Column("_estimate", "Found", interval=("_low", "_high")),
                 Column("probability", "Probability that it is kept", kind="percent", missing="unknown"),
-                Column("verdict", "Verdict", kind="text"),
+                Column("_verdict", "Verdict", kind="text"),
             ),
             source="limits",
         )
     ]
+
+
+_REASONS: Mapping[str, str] = {
+    CONDITIONS: ": it holds on the stand, but conditions of use were not measured",
+    UNKNOWN: ": its uncertainty is not known",
+    TOO_FEW: ": too few sensors",
+    ONE_MODULE: ": one module says nothing of the next",
+}
 
 
 def limits_as_shown(rows: pd.DataFrame, reference: ReferenceQuantity) -> pd.DataFrame:
@@ -298,8 +307,10 @@ def limits_as_shown(rows: pd.DataFrame, reference: ReferenceQuantity) -> pd.Data
     in_reference = rows["limit"] == "strain_error"
     factor = in_reference.map({True: reference.shown_factor, False: 1.0})
     scaled = {f"_{key}": rows[key] * factor for key in ("value", "estimate", "low", "high")}
+    reasons = rows["reason"].map(_REASONS).fillna("")
     return rows.assign(
         **scaled,
+        _verdict=rows["verdict"].astype(str) + reasons.astype(str),
         _limit=rows["limit"].str.replace("_", " "),
         _unit=rows["unit"].where(~in_reference, reference.shown_unit),
     )

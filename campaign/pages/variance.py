@@ -449,12 +449,14 @@ def _tables(variance: Variance) -> Iterable[Table]:
         (
             generation,
             Column("words", "Component", kind="text"),
-            *(Column(place, f"SD {words}", unit, kind="text") for place, words in PLACES.items()),
-            Column("share", "Share of the variance at mid range", "%", kind="text"),
+            Column("mid", "SD at mid range", unit, kind="text"),
+            Column("share", "Share of variance", "%", kind="text"),
+            Column("zero", "SD at zero", unit, kind="text"),
+            Column("full", "SD at full scale", unit, kind="text"),
             Column("label", "The design says", kind="text"),
         ),
         source="variance_in_strain",
-        note="Shares are of variances. Where only limits are stated, shares are withheld.",
+        note="Shares are of variances, at mid range. Where only limits are stated, shares are withheld.",
     )
     yield Table(
         "variance_components",

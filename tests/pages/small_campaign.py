@@ -87,9 +87,8 @@ def _write_runs(
             name = f"trials/run_{first + len(rows):03d}.csv"
             run = generator.normal(0, 0.002, 2)
             _write(folder / name, _table(sketch, own + mounting + run, generator, torn=torn))
-            rows.append(
-                f'{name},staircase,"{module}","{sensor}",{session if sketch.sessions > 1 else ""},{repetition}'
-            )
+            mounted = session if sketch.sessions > 1 else ""
+            rows.append(f'{name},staircase,"{module}","{sensor}",{mounted},{repetition}')
     return rows
 
 

@@ -7,6 +7,7 @@ from functools import cache
 from html import unescape
 from html.parser import HTMLParser
 
+import numpy as np
 import pytest
 
 from campaign.analyses.findings import EnoughFinding
@@ -225,3 +226,41 @@ def test_without_staircases_the_findings_say_what_was_measured(tmp_path):
     assert "Pages 1 to 4" in page.text
     assert not HOLES.findall(page.text)
     assert "trials/M1_S_cyclic_r1.csv" in parsed(files["sensor-M1-S.html"]).text
+
+
+def write_wide_campaign(folder):
+    """Two sensors in every file: one run of the stand shared by the sensors of a module."""
+    generator = np.random.default_rng(9)
+    (folder / "trials").mkdir(parents=True)
+    for module in (1, 2, 3):
+        for run in (1, 2):
+            shift = generator.normal(0, 0.1)
+            rows = [
+                f"{60 + 6 * k},{50 + module + 4 * k + shift + a},{70 - module + 5 * k + shift + b}"
+                for k, a, b in zip(
+                    (0, 1, 2, 3, 4, 3, 2, 1, 0), *generator.normal(0, 0.02, (2, 9)), strict=True
+                )
+            ]
+            table = "\n".join(["length_mm,C_A,C_B", *rows])
+            (folder / "trials" / f"M{module}_cal_r{run}.csv").write_text(table + "\n")
+    sensors = [f"M{m},{s},60 mm" for m in (1, 2, 3) for s in "AB"]
+    (folder / "sensors.csv").write_text("\n".join(["module,sensor,rest_length", *sensors]) + "\n")
+    (folder / "campaign.toml").write_text(
+        'format = 1\n[campaign]\ntitle = "Wide"\n[recordings]\nname = "{module}_{kind}_r{repetition}"\n'
+        '[recordings.kinds]\ncal = "staircase"\n[[columns]]\nheader = "length_mm"\nquantity = "length"\n'
+        'unit = "mm"\nalong = ["A", "B"]\n[[columns]]\nheader = "C_{sensor}"\nquantity = "signal"\n'
+        'unit = "pF"\n'
+    )
+    return folder
+
+
+def test_a_run_that_sensors_share_is_a_section_of_its_modules_page(tmp_path):
+    files = build_site(analyse(read_campaign(write_wide_campaign(tmp_path / "c"))))
+    pages = pages_of(files)
+    module, sensor = pages["module-M1.html"], pages["sensor-M1-A.html"]
+    shared = {a for a in module.anchors if a.startswith("trial-")}
+    assert {a for a in sensor.anchors if a.startswith("trial-")} >= shared
+    assert len([a for a in shared if f"sensor-M1-A.html#{a}" in module.links]) == 2
+    assert "The same run carried B" in sensor.text
+    assert "runs shared by the sensors of a module" in pages["variance.html"].text
+    assert not any(HOLES.findall(page.text) for page in pages.values())
