@@ -380,14 +380,25 @@ def _spread_of(fit: _RunFits, pool: _Pool) -> tuple[RunSpread, str]:
 
 
 def _scatters_more(own: RunScatter, pool: RunScatter) -> bool:
-    """Whether this sensor's runs scatter more at its mean x than the other sensors' do, beyond chance."""
-    squares = float(own.between[0, 0] + own.within[0, 0])
-    others = float(pool.between[0, 0] + pool.within[0, 0]) - squares
-    rest = pool.degrees - own.degrees
-    if rest < 1 or others <= 0:
-        return False
-    ratio = squares / own.degrees / (others / rest)
-    return bool(special.fdtrc(own.degrees, rest, ratio) < HETEROGENEITY_RISK)
+    """Whether this sensor's runs scatter more at its mean x than the other sensors' do, beyond chance.
+
+    Mountings and runs within them are compared apart: their mean squares differ, and a sum of the two would
+    make a sensor with one odd mounting look like one that scatters.
+    """
+    sources = (
+        (own.between, pool.between, own.between_degrees, pool.between_degrees),
+        (own.within, pool.within, own.within_degrees, pool.within_degrees),
+    )
+    risks = [_risk(*source) for source in sources]
+    return bool(len(risks) * min(risks) < HETEROGENEITY_RISK)
+
+
+def _risk(own: FloatArray, pool: FloatArray, own_degrees: int, pool_degrees: int) -> float:
+    """Probability of a ratio of this sensor's mean square to that of the others at least as large, by chance."""
+    rest, others = pool_degrees - own_degrees, float(pool[0, 0] - own[0, 0])
+    if own_degrees < 1 or rest < 1 or others <= 0:
+        return 1.0
+    return float(special.fdtrc(own_degrees, rest, float(own[0, 0]) / own_degrees / (others / rest)))
 
 
 def _branch_line(
