@@ -394,7 +394,7 @@ def _scatters_more(own: RunScatter, pool: RunScatter) -> bool:
 
 
 def _risk(own: FloatArray, pool: FloatArray, own_degrees: int, pool_degrees: int) -> float:
-    """Probability of a ratio of this sensor's mean square to that of the others at least as large, by chance."""
+    """Probability that chance makes this sensor's mean square as large beside that of the others."""
     rest, others = pool_degrees - own_degrees, float(pool[0, 0] - own[0, 0])
     if own_degrees < 1 or rest < 1 or others <= 0:
         return 1.0
