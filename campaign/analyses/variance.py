@@ -375,7 +375,7 @@ def _limits_at(model: VarianceModel, what: str) -> tuple[str, ...]:
     """
     if what != SIGNAL:
         return ()
-    return ("mid",) if model.generation == "all" else (*PLACES, "slope")
+    return ("mid",) if model.generation == "all" else (*PLACES, "intercept", "slope")
 
 
 def _fallback_notice(fit: GenerationFit, what: str) -> Notice:

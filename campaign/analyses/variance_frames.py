@@ -96,7 +96,7 @@ def _fixed_requests(
     fit: GenerationFit, unit: str, reference_unit: str
 ) -> Iterator[tuple[str, FloatArray, str]]:
     """Name, weights on the coefficients and unit of everything in the table of fixed effects."""
-    per = f"{unit}/({reference_unit})"
+    per = _per(unit, reference_unit)
     yield "intercept", fit.line_weights[0], unit
     if fit.line_weights[1].any():
         yield "slope", fit.line_weights[1], per
@@ -155,10 +155,10 @@ def variance_components(
 
 
 def _component_rows(fit: GenerationFit, unit: str, reference_unit: str, uneven: bool) -> Iterator[Row]:
-    per = f"{unit}/({reference_unit})"
+    per = _per(unit, reference_unit)
     for component in fit.components:
         is_line = component.name in LINES and component.line
-        kinds = [("intercept", _zero_place(fit), unit), ("slope", "slope", per)] if is_line else []
+        kinds = [("intercept", "intercept", unit), ("slope", "slope", per)] if is_line else []
         kinds = kinds or [("intercept" if component.name in LINES else "level", "mid", unit)]
         for term, place, own_unit in kinds:
             limits = fit.intervals[component.name, place]
@@ -167,9 +167,9 @@ def _component_rows(fit: GenerationFit, unit: str, reference_unit: str, uneven: 
             yield _correlation_row(fit, component)
 
 
-def _zero_place(fit: GenerationFit) -> str:
-    """The place that intercepts are stated at: zero."""
-    return "zero" if "zero" in fit.places else "mid"
+def _per(unit: str, reference_unit: str) -> str:
+    """The unit of a slope: ``pF/mm``, ``pF/(mm/mm)``."""
+    return f"{unit}/({reference_unit})" if "/" in reference_unit else f"{unit}/{reference_unit}"
 
 
 def _component_row(
@@ -214,7 +214,7 @@ def _limits(
     if uneven and component.name in ON_NOISE:
         return estimate, NAN, NAN, AVERAGE if component.name == "residual" else f"{label}; interval withheld"
     if has_upper_limit_only(component):
-        return NAN, 0.0, high, label
+        return NAN, 0.0 if variance.known else NAN, high, label
     if low <= 1e-9 * high:
         label = ZERO
         low = 0.0
@@ -323,7 +323,7 @@ def _effect_terms(
     model = fit.model
     yield "intercept", model.direction(level, 0.0), unit
     if model.component(level).line:
-        yield "slope", np.array([0.0, 1.0 / model.scale]), f"{unit}/({reference_unit})"
+        yield "slope", np.array([0.0, 1.0 / model.scale]), _per(unit, reference_unit)
     yield "strain at mid", model.direction(level, fit.places["mid"]) / abs(fit.mean_slope), reference_unit
 
 

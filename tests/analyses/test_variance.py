@@ -400,4 +400,4 @@ def test_millimetres_where_no_rest_length_is_known() -> None:
     assert labels.loc["sensor", "label"] == "not identified"
     assert variance.reference == ELONGATION
     assert variance.reference != STRAIN
-    assert variance.fixed_effects["unit"].isin(["pF", "pF/(mm)"]).all()
+    assert variance.fixed_effects["unit"].isin(["pF", "pF/mm"]).all()
