@@ -169,6 +169,11 @@ class AccuracyFinding:
     one: SensorFigure
     mean_of_several: SensorFigure
 
+    @property
+    def averaging_helps(self) -> bool:
+        """Whether the mean's half-width is at least a fifth smaller than that of one reading."""
+        return self.mean_of_several.median < 0.8 * self.one.median
+
 
 FindingKind = Literal[
     "enough", "accuracy", "spread", "linearity", "bend", "repeatability", "hysteresis", "zero_return", "model"

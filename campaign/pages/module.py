@@ -30,7 +30,7 @@ from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
 from campaign.pages.sensor_parts import sensor_keys
 from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
-from campaign.pages.variance import TERMS, in_shown_units
+from campaign.pages.variance import TERM_WORDS, TERMS, in_shown_units
 from campaign.recordings.recording import ReferenceQuantity
 
 _MOST_TRIAL_PLOTS = 16
@@ -311,11 +311,12 @@ def module_effects_figure(results: CampaignResults, module: str, where: SensorAx
     ticks = [(where.places[key], key[2]) for key in where.places]
     return Figure(
         name="effects",
-        caption=f"Effects of the sensors on the {term}, about the module's own mean.",
-        alternative=f"Dots with 95 % intervals, one a sensor: effect on the {term}, with an upright at zero.",
+        caption=f"Effects of the sensors on the {TERM_WORDS.get(term, term)}, about the module's own mean.",
+        alternative=f"Dots with 95 % intervals, one a sensor: effect on the {TERM_WORDS.get(term, term)}, "
+        f"with an upright at zero.",
         traces=tuple(interval_traces(rows, where, text)),
         layout=layout(
-            axis(f"Effect on the {term}", unit),
+            axis(f"Effect on the {TERM_WORDS.get(term, term)}", unit),
             axis("", ticks=ticks, low=-0.6, high=0.6, reverse=True),
             shapes=[level_line(0, upright=True, colour=palette.INK)],
         ),

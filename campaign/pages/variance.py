@@ -55,6 +55,9 @@ _WORDS: Mapping[str, str] = {
 }
 """What each component is called on pages."""
 
+TERM_WORDS: Mapping[str, str] = {"strain at mid": "signal at mid range, as strain"}
+"""What terms of effects are called where their name does not say it."""
+
 TERMS = ("strain at mid", "slope", "intercept")
 """Terms of effects, the most telling first."""
 
@@ -98,6 +101,7 @@ def variance_page(results: CampaignResults) -> Page | None:
             "level_words": level_words,
             "pooled": any(fit.generation == "all" for fit in variance.fits) and len(variance.fits) > 1,
             "covariate_units": COVARIATE_UNITS,
+            "largest_difference": float(variance.certificate["difference"].abs().max()),
             "generations": generations_of(variance.variance_in_strain),
         },
         figures=tuple(figure for figure in figures if figure is not None),
@@ -369,7 +373,7 @@ def caterpillar_figure(variance: Variance, level: str) -> Figure | None:
     for index, term in enumerate(terms):
         key = f"yaxis{panel(index)}"
         made[key] = {k: v for k, v in made[key].items() if k not in ("matches", "showticklabels")} | {
-            "title": {"text": f"Effect on {term} / {units[term]}"}
+            "title": {"text": f"Effect on {TERM_WORDS.get(term, term)} / {units[term]}"}
         }
     return Figure(
         name=f"{level}-effects",
@@ -432,7 +436,7 @@ def _caterpillar_caption(rows: pd.DataFrame, level: str, terms: list[str]) -> st
     for term in terms:
         own = rows[rows["term"] == term]
         apart = int(((own["low"] > 0) | (own["high"] < 0)).sum())
-        parts.append(f"{apart} of {len(own)} in the {term}")
+        parts.append(f"{apart} of {len(own)} in the {TERM_WORDS.get(term, term)}")
     words = "modules" if level == "module" else "sensors"
     return f"{words.capitalize()} whose interval excludes the mean: {', '.join(parts)}."
 

@@ -143,7 +143,7 @@ def test_findings_say_the_expanded_uncertainties_of_the_effort_table(usual):
         assert isinstance(fact, EnoughFinding)
         table = results.calibration_effort.table
         own = table[(table["generation"] == fact.generation) & (table["effort"] == "sensor")]
-        shown = numbers.significant(float(own["strain_expanded"].iloc[0]) * 100, 2, "%")
+        shown = numbers.significant(float(own["strain_expanded"].iloc[0]) * 100, 3, "%")
         assert spaced(f"±{shown}") in text
 
 
