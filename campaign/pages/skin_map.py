@@ -197,6 +197,8 @@ def _scale(figure: MapFigure) -> Scale:
     if not math.isfinite(low):
         return Scale(figure.key, figure.title, figure.unit, "no value", "", ())
     ends = [_value_text(end, low, high) for end in (low, high)]
+    if low == high:
+        return Scale(figure.key, figure.title, figure.unit, f"{ends[0]} in every one", "", ())
     return Scale(figure.key, figure.title, figure.unit, ends[0], ends[1], ())
 
 
