@@ -19,7 +19,7 @@ from campaign.pages.page import Page, SiteFrame
 from campaign.pages.provenance import provenance_page
 from campaign.pages.recordings import recordings_page
 from campaign.pages.render import render_site
-from campaign.pages.residuals import residuals_page
+from campaign.pages.residuals import residual_files, residuals_page
 from campaign.pages.sensor import sensor_pages
 from campaign.pages.site_tables import site_tables
 from campaign.pages.variance import variance_page
@@ -51,7 +51,7 @@ def build_site(
         site_frame(results),
         pages,
         site_tables(results, pages),
-        files={**(notes.files or {}), **record_files(records)},
+        files={**(notes.files or {}), **record_files(records), **residual_files(results)},
         plot_library=plot_library,
         reference=results.readings.reference,
     )

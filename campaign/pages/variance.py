@@ -363,7 +363,7 @@ def caterpillar_figure(variance: Variance, level: str) -> Figure | None:
     units = {term: str(rows.loc[rows["term"] == term, "unit"].iloc[0]) for term in terms}
     number = int(rows.groupby("term")["module"].size().max())
     made = small_multiples(
-        [f"{term}" for term in terms],
+        [TERM_WORDS.get(term, term) for term in terms],
         axis("Rank", low=-1, high=number, grid=False),
         axis("Effect"),
         columns=len(terms),

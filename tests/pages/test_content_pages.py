@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import re
 from functools import cache
 from html import unescape
@@ -12,7 +13,8 @@ import pytest
 
 from campaign.analyses.findings import EnoughFinding
 from campaign.analyses.results import CampaignResults
-from campaign.pages import numbers
+from campaign.pages import numbers, residuals
+from campaign.pages.figures import marker_count
 from campaign.pages.site import build_site
 from campaign.pipeline import analyse, read_campaign
 from tests.pages.small_campaign import Sketch, small_results
@@ -264,3 +266,20 @@ def test_a_run_that_sensors_share_is_a_section_of_its_modules_page(tmp_path):
     assert "The same run carried B" in sensor.text
     assert "runs shared by the sensors of a module" in pages["variance.html"].text
     assert not any(HOLES.findall(page.text) for page in pages.values())
+
+
+def test_with_many_residuals_bands_are_drawn_and_every_module_has_a_script_of_its_points(sites, monkeypatch):
+    results, few = sites("usual")
+    assert not [name for name in few if name.startswith("data/residuals_")]
+    monkeypatch.setattr(residuals, "LARGEST_NUMBER_OF_MARKERS", 300)
+    page = residuals.residuals_page(results)
+    files = residuals.residual_files(results)
+    readings = results.residuals.table.groupby("module").size()
+    assert len(readings) == 6
+    for module, number in readings.items():
+        script = files[page.data["residual_files"][module]].decode("utf-8")
+        content = json.loads(script[script.index("] = ") + 4 : script.rindex(";")])
+        assert len(content["traces"][0]["y"]) == number
+        assert len(content["x"]["against-order"][0]) == number
+    against_level = next(figure for figure in page.figures if figure.name == "against-level")
+    assert marker_count(against_level) == residuals.LARGEST_SHOWN
