@@ -8,8 +8,8 @@ Names and columns of :data:`CONTRACT_COLUMNS` are kept stable.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass, replace
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass
 from typing import Any, Literal
 
 import orjson
@@ -193,11 +193,6 @@ def schema_bytes(frames: Mapping[str, pd.DataFrame]) -> bytes:
     ]
     package = {"profile": "tabular-data-package", "name": "tables", "resources": resources}
     return orjson.dumps(package, option=orjson.OPT_INDENT_2) + b"\n"
-
-
-def with_links(table: Table, links: Sequence[str], key: str = "_href") -> Table:
-    """Return *table* with a column of row links under *key*."""
-    return replace(table, frame=table.frame.assign(**{key: list(links)}))
 
 
 def _column_cells(frame: pd.DataFrame, column: Column) -> list[Cell]:
