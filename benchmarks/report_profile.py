@@ -1,7 +1,7 @@
 """Where the time of one whole report goes: stages of a cold run on the demonstration, in one process.
 
-Run as ``python benchmarks/report_profile.py [FOLDER]``. Prints one Markdown table of processor seconds and their
-share; the named floor beside it is hashing the same recordings once (reading every byte and nothing else).
+Run as ``python benchmarks/report_profile.py [FOLDER]``. Prints one Markdown table of processor seconds and
+their share; the named floor beside it is hashing the same recordings once: reading every byte, nothing else.
 """
 
 from __future__ import annotations
@@ -25,9 +25,7 @@ def main() -> None:
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("folder", nargs="?", type=Path, default=Path("demo_campaign"))
     folder = parser.parse_args().folder
-    print(
-        f"One report on `{folder.name}`, {platform.machine()}, Python {platform.python_version()}, one process\n"
-    )
+    print(f"One report on `{folder.name}`, {platform.machine()}, Python {platform.python_version()}\n")
     print("| stage | processor seconds | share |\n|---|---|---|")
     stages = list(profile(folder))
     whole = sum(seconds for _, seconds in stages)
