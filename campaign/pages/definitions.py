@@ -28,6 +28,7 @@ DEFINITIONS: dict[str, tuple[str, str]] = {
     "strain-equivalent": ("strain-equivalent", "strain_sd strain_residual_sd"),
     "component as a strain": ("component-in-strain", "strain_sd share"),
     "intervals of SDs": ("intervals", "strain_sd"),
+    "limits by modified large sample": ("modified-large-sample", "modified_large_sample"),
     "labels": ("identifiability", "label degrees_of_freedom"),
     "REML and its check": ("restricted-likelihood", "criterion smallest_cone_eigenvalue"),
     "kinds of precision": ("precision", "figure"),

@@ -63,6 +63,9 @@ FORMULAS: dict[str, str] = {
     "share": r"\text{share}=\frac{s_{\varepsilon,\text{level}}^2}{\sum_{\text{levels}}s_{\varepsilon}^2}",
     "profile_interval": r"\left\{\sigma:\ D(\sigma)-D(\hat\sigma)\le\chi^2_{1;\,0.95}=3.841\right\},"
     r"\qquad D(\sigma)=\min_{\text{all others}}\left(-2\,\ell_{\text{R}}\right)",
+    "modified_large_sample": r"\hat\gamma=\sum_{q}c_q\,\text{MS}_q,\qquad "
+    r"\hat\gamma-\sqrt{\sum_{q}\sum_{t}G_{qt}\,c_q c_t\,\text{MS}_q\,\text{MS}_t}\ \le\ \gamma\ \le\ "
+    r"\hat\gamma+\sqrt{\sum_{q}\sum_{t}H_{qt}\,c_q c_t\,\text{MS}_q\,\text{MS}_t}",
     "new_sensor": r"\hat y(x)\pm t_{\nu;\,0.975}\,u,\qquad u^2=u^2(\hat y(x))+"
     r"\sum_{\text{levels}}z^{\top}\Sigma z+\sigma^2,\qquad z=(1,x)^{\top}",
     "satterthwaite": r"\nu=\frac{2\,\hat v^2}{\text{Var}(\hat v)}",

@@ -454,6 +454,7 @@ def _tables(variance: Variance) -> Iterable[Table]:
             generation,
             Column("words", "Component", kind="text"),
             Column("mid", "SD at mid range", unit, kind="text"),
+            *_second_column(variance.variance_in_strain, unit),
             Column("share", "Share of variance", "%", kind="text"),
             Column("zero", "SD at zero", unit, kind="text"),
             Column("full", "SD at full scale", unit, kind="text"),
@@ -490,6 +491,17 @@ def _tables(variance: Variance) -> Iterable[Table]:
         ),
         shown_rows=60,
     )
+
+
+def _second_column(table: pd.DataFrame, unit: str) -> Iterable[Column]:
+    """The limits by modified large sample, where a balanced generation has them."""
+    if table["high_modified_large_sample"].notna().any():
+        yield Column(
+            "modified_large_sample",
+            "Limits at mid range by modified large sample",
+            unit,
+            kind="text",
+        )
 
 
 def _precision_and_tests(variance: Variance, generation: Column, factor: float, unit: str) -> Iterable[Table]:
@@ -563,16 +575,26 @@ def _side_by_side(table: pd.DataFrame, factor: float) -> pd.DataFrame:
                 "generation": _unbroken(str(generation)),
                 "words": level_words(str(middle["called"])),
                 **{place: sds.get(place, "") for place in PLACES},
+                "modified_large_sample": _unbroken(_second_words(middle, factor)),
                 "share": "" if level == "total" else _unbroken(_share_words(middle)),
                 "label": "" if pd.isna(middle["label"]) else str(middle["label"]),
             }
         )
-    return pd.DataFrame(made, columns=["generation", "words", *PLACES, "share", "label"])
+    columns = ["generation", "words", *PLACES, "modified_large_sample", "share", "label"]
+    return pd.DataFrame(made, columns=columns)
 
 
 def _unbroken(text: str) -> str:
     """Return *text* so that a cell does not break it into lines."""
     return text.replace(" ", "\u00a0").replace("-", "\u2011")
+
+
+def _second_words(row: Mapping[Hashable, Any], factor: float) -> str:
+    """The limits by modified large sample; empty where the profile has none either."""
+    low, high = (float(row[f"{end}_modified_large_sample"]) * factor for end in ("low", "high"))
+    if math.isnan(high):
+        return "" if pd.isna(row["high"]) else "not balanced"
+    return numbers.limits(low, high)
 
 
 def _share_words(row: Mapping[Hashable, Any]) -> str:
