@@ -9,6 +9,8 @@ import pandas as pd
 import pytest
 
 from campaign.analyses.variance import Variance, variance_of_readings
+from campaign.analyses.variance_fit import GenerationFit, choose_places, fit_generation
+from campaign.analyses.variance_model import build_model
 from campaign.recordings.description import Description
 from campaign.recordings.recording import STRAIN
 from campaign.simulation.plan import Plan, regular_plan
@@ -51,6 +53,17 @@ class Simulated:
     @lru_cache(maxsize=32)
     def analysed(plan: Plan, of: Truth | None = None, seed: int = 1) -> Variance:
         return Simulated.fit(Simulated.readings(plan, of, seed))
+
+    @staticmethod
+    def fits_alone(readings: pd.DataFrame, limits_at: tuple[str, ...] = ()) -> tuple[GenerationFit, ...]:
+        """The fit of each generation by itself: no tests, no ratio, limits only where wanted."""
+        places = choose_places(readings["x"].to_numpy(float), float("nan"), has_zero=True)
+        return tuple(
+            fit_generation(
+                build_model(part, part["signal"].to_numpy(float), str(name)), places, limits_at=limits_at
+            )
+            for name, part in readings.groupby("generation", sort=True)
+        )
 
     @staticmethod
     def usual() -> Variance:

@@ -54,6 +54,15 @@ def line(calibration: Calibration, branch="both", place=0) -> pd.Series:
     return lines[lines["branch"] == branch].iloc[place]
 
 
+def true_lines(*, seed, **plan) -> dict[tuple[str, str], np.ndarray]:
+    """Module and sensor → its own true line (intercept, slope): the same draw without runs and noise."""
+    quiet = simulated(Components(sensor=SPREAD.sensor, residual=0.0), seed=seed, **plan).table
+    return {
+        (str(module), str(sensor)): np.polynomial.polynomial.polyfit(part["x"], part["signal"], 1)
+        for (module, sensor), part in quiet.groupby(["module", "sensor"])
+    }
+
+
 @pytest.fixture(scope="module")
 def campaign() -> Calibration:
     return calibrate(simulated(modules=4, sensors=4, repetitions=3, levels=9, descending=True, loop=0.8))
@@ -127,15 +136,12 @@ def test_new_runs_are_covered_through_the_records():
     """95 % intervals by the records, one reading and a mean of ten in a new run; 25 campaigns of 12."""
     rng = np.random.default_rng(77)
     design = {"modules": 4, "sensors": 3, "repetitions": 3, "levels": 9}
-    quiet = Components(sensor=SPREAD.sensor, residual=0.0)
     hits = []
     for seed in range(25):
-        truth = (
-            calibrate(simulated(quiet, seed=seed, **design)).sensor_lines[["intercept", "slope"]].to_numpy()
-        )
-        for record, true in zip(calibrate(simulated(seed=seed, **design)).records, truth, strict=True):
+        truth = true_lines(seed=seed, **design)
+        for record in calibrate(simulated(seed=seed, **design)).records:
             strain = rng.uniform(0.05, 0.35)
-            new = true + SPREAD.repetition.factor @ rng.normal(0.0, 1.0, 2)
+            new = truth[record.module, record.sensor] + SPREAD.repetition.factor @ rng.normal(0.0, 1.0, 2)
             for count in (1, 10):
                 signal = new[0] + new[1] * strain + rng.normal(0.0, 0.15 / np.sqrt(count))
                 _, low, high = inverse_limits(record.reading_model, signal, count)
@@ -239,12 +245,12 @@ def test_a_zero_that_was_not_measured_is_extrapolated_to():
 
 
 def test_intervals_of_gauge_factor_cover():
-    lines = calibrate(simulated(modules=30, sensors=6, repetitions=3, seed=9)).sensor_lines
-    truth = calibrate(
-        simulated(
-            Components(sensor=SPREAD.sensor, residual=1e-9), modules=30, sensors=6, repetitions=3, seed=9
-        )
-    ).sensor_lines["gauge_factor"]
+    design = {"modules": 30, "sensors": 6, "repetitions": 3, "seed": 9}
+    lines = calibrate(simulated(**design)).sensor_lines
+    own = true_lines(**design)
+    truth = [
+        slope / intercept for intercept, slope in (own[key] for key in zip(lines["module"], lines["sensor"]))
+    ]
     inside = (lines["gauge_factor_low"] <= truth) & (truth <= lines["gauge_factor_high"])
     assert 0.90 <= inside.mean() <= 0.98
 
@@ -460,17 +466,13 @@ def test_a_new_mounting_is_covered_where_mountings_repeat():
     """A session moves a line more than a run does: readings after remounting must still be covered."""
     rng = np.random.default_rng(78)
     components = replace(SPREAD, session=LineSpread(0.5, 0.8), repetition=LineSpread(0.2, 0.3))
-    quiet = Components(sensor=SPREAD.sensor, residual=0.0)
     design = {"modules": 5, "sensors": 3, "sessions": 2, "repetitions": 3, "levels": 8}
     hits = []
     for seed in range(16):
-        truth = (
-            calibrate(simulated(quiet, seed=seed, **design)).sensor_lines[["intercept", "slope"]].to_numpy()
-        )
-        records = calibrate(simulated(components, seed=seed, **design)).records
-        for record, true in zip(records, truth, strict=True):
+        truth = true_lines(seed=seed, **design)
+        for record in calibrate(simulated(components, seed=seed, **design)).records:
             strain = rng.uniform(0.05, 0.35)
-            new = true + components.session.factor @ rng.normal(0.0, 1.0, 2)
+            new = truth[record.module, record.sensor] + components.session.factor @ rng.normal(0.0, 1.0, 2)
             new = new + components.repetition.factor @ rng.normal(0.0, 1.0, 2)
             signal = new[0] + new[1] * strain + rng.normal(0.0, 0.15 / np.sqrt(10))
             _, low, high = inverse_limits(record.reading_model, signal, 10)

@@ -43,8 +43,10 @@ def test_prediction_and_leaving_out_agree_where_the_model_is_right(usual) -> Non
 
 def test_every_agreement_holds_in_several_campaigns(simulated) -> None:
     plan = regular_plan(modules=4, sensors=3, repetitions=2, levels=4)
-    agree = [by_name(efforts(simulated.analysed(plan, seed=seed)))["agrees"].all() for seed in range(4)]
-    assert all(agree)
+    found = [
+        effort_of_fits(simulated.fits_alone(simulated.readings(plan, seed=seed)), seed) for seed in range(4)
+    ]
+    assert all(by_name(effort)["agrees"].all() for effort in found)
 
 
 def test_own_line_errs_by_what_a_new_run_adds(simulated, usual) -> None:
@@ -79,8 +81,8 @@ def test_least_work_comes_first_and_says_what_was_left_out(usual) -> None:
 
 def test_sessions_that_repeat_are_left_out(simulated) -> None:
     plan = regular_plan(modules=3, sensors=3, sessions=2, repetitions=2, levels=4)
-    remounted = simulated.analysed(plan, simulated.truth(simulated.components(session=LineSpread(0.6, 0.8))))
-    effort = efforts(remounted)
+    truth = simulated.truth(simulated.components(session=LineSpread(0.6, 0.8)))
+    effort = effort_of_fits(simulated.fits_alone(simulated.readings(plan, truth)), 1)
     own = by_name(effort).loc["sensor"]
     assert own["left_out_by"] == "session"
     assert own["label"] == ""
@@ -92,7 +94,7 @@ def test_a_model_without_the_positions_geometry_needs_a_line_a_position(simulate
     plan = regular_plan(modules=4, sensors=4, repetitions=2, levels=4)
     places = tuple(Place(f"P{k}", length) for k, length in enumerate((60.0, 80.0, 100.0, 120.0)))
     panel = Plan(plan.generations, places, repetitions=2, staircase=plan.staircase)
-    table = by_name(efforts(simulated.analysed(panel)))
+    table = by_name(effort_of_fits(simulated.fits_alone(simulated.readings(panel)), 1))
     assert table.loc["generation", "factor"] > 5 * table.loc["position", "factor"]
     assert table.loc["generation_rezero_ratio", "factor"] < 0.2 * table.loc["generation", "factor"]
 
@@ -103,7 +105,7 @@ def test_wrong_model_is_said_to_be_wrong(simulated) -> None:
     readings = simulated.readings(plan)
     first = readings["order"] == 1
     off = np.random.default_rng(0).normal(0, 1.5, len(readings)) * first
-    effort = efforts(simulated.fit(readings.assign(signal=readings["signal"] + off)))
+    effort = effort_of_fits(simulated.fits_alone(readings.assign(signal=readings["signal"] + off)), 1)
     table = by_name(effort)
     assert not table.loc["rezero_additive", "agrees"]
     assert table.loc["rezero_additive", "ratio"] > table.loc["rezero_additive", "ratio_high"]
@@ -114,7 +116,7 @@ def test_two_generations_also_share_one_line(simulated) -> None:
     plan = regular_plan(generations=2, modules=3, sensors=3, repetitions=2, levels=4)
     readings = simulated.readings(plan)
     apart = readings["signal"] + 20.0 * (readings["generation"] == "generation 2")
-    effort = efforts(simulated.fit(readings.assign(signal=apart)))
+    effort = effort_of_fits(simulated.fits_alone(readings.assign(signal=apart)), 1)
     for generation in ("generation 1", "generation 2"):
         table = by_name(effort, generation)
         assert table.loc["all", "factor"] > 3 * table.loc["generation", "factor"]
@@ -122,9 +124,9 @@ def test_two_generations_also_share_one_line(simulated) -> None:
 
 def test_units_do_not_matter(simulated) -> None:
     readings = simulated.readings(simulated.small_plan)
-    variance = simulated.fit(readings.assign(signal=readings["signal"] / 1000, unit="nF"))
+    fits = simulated.fits_alone(readings.assign(signal=readings["signal"] / 1000, unit="nF"))
     plain = by_name(effort_of_fits(simulated.small().by_generation, 7))
-    scaled = by_name(effort_of_fits(variance.by_generation, 7))
+    scaled = by_name(effort_of_fits(fits, 7))
     assert scaled["strain_sd_left_out"].to_numpy() == pytest.approx(plain["strain_sd_left_out"].to_numpy())
     assert scaled["strain_sd_predicted"].to_numpy() == pytest.approx(
         plain["strain_sd_predicted"].to_numpy(), rel=1e-3
@@ -132,8 +134,8 @@ def test_units_do_not_matter(simulated) -> None:
 
 
 def test_one_run_a_sensor_leaves_nothing_to_leave_out(simulated) -> None:
-    variance = simulated.fit(simulated.readings(regular_plan(modules=3, sensors=3, repetitions=1, levels=4)))
-    own = by_name(efforts(variance)).loc["sensor"]
+    readings = simulated.readings(regular_plan(modules=3, sensors=3, repetitions=1, levels=4))
+    own = by_name(effort_of_fits(simulated.fits_alone(readings), 1)).loc["sensor"]
     assert own["label"] == NOTHING_LEFT
     assert np.isnan(own["strain_sd_left_out"])
     assert own["agrees"] is None

@@ -9,7 +9,7 @@ import pandas as pd
 import pytest
 
 from campaign.analyses.variance import ONE_AT_A_TIME, SHARED, variance_of_readings
-from campaign.analyses.variance_frames import AVERAGE, LOWER_BOUND, ZERO
+from campaign.analyses.variance_frames import AVERAGE, LOWER_BOUND, ZERO, variance_in_strain
 from campaign.pages.contract_columns import CONTRACT_COLUMNS
 from campaign.recordings.description import Description
 from campaign.recordings.recording import ELONGATION, STRAIN
@@ -29,7 +29,9 @@ def test_truth_is_within_the_intervals(simulated) -> None:
     truth = simulated.components()
     held = []
     for seed in (1, 2, 3):
-        rows = at_mid(simulated.analysed(simulated.usual_plan, seed=seed))
+        fits = simulated.fits_alone(simulated.readings(simulated.usual_plan, seed=seed), ("mid",))
+        table = variance_in_strain(fits, set())
+        rows = table[table["place"] == "mid"].set_index("level")
         for level in ("module", "sensor", "repetition"):
             sd = getattr(truth, level).sd_at(0.2) / SLOPE
             held.append(rows.loc[level, "low"] <= sd <= rows.loc[level, "high"])
@@ -186,8 +188,6 @@ def test_shared_runs_are_a_component_of_their_own(simulated) -> None:
 
 
 def test_module_test_keeps_its_level_where_runs_are_shared(simulated) -> None:
-    from campaign.analyses.variance_fit import fit_generation
-    from campaign.analyses.variance_model import build_model
     from campaign.analyses.variance_tests import component_tests_of
 
     plan = regular_plan(modules=4, sensors=3, repetitions=2, levels=3, shared_runs=True)
@@ -199,9 +199,7 @@ def test_module_test_keeps_its_level_where_runs_are_shared(simulated) -> None:
     )
     rejected = []
     for seed in range(12):
-        readings = simulated.readings(plan, simulated.truth(nothing), seed)
-        model = build_model(readings, readings["signal"].to_numpy(), "generation 1")
-        fit = fit_generation(model, {"zero": 0.0, "mid": 0.2, "full": 0.4}, limits_at=())
+        (fit,) = simulated.fits_alone(simulated.readings(plan, simulated.truth(nothing), seed))
         tests = {test.component: test.p for test in component_tests_of(fit, seed)}
         rejected.append(tests["module"] < 0.05)
     # 5 % expected; nesting the shared run under each sensor would reject most

@@ -4,6 +4,11 @@ import numpy as np
 import pytest
 
 from campaign.methods.analysis_of_variance import nested_analysis_of_variance
+from campaign.methods.modified_large_sample import (
+    MeanSquares,
+    nested_degrees_of_freedom,
+    nested_expectations,
+)
 
 # expected.json, nested.sas_nested: rows (from 1) removed from the EP05 set
 REMOVED = [11, 12, 17, 37, 45, 56, 57, 68]
@@ -95,19 +100,28 @@ def test_unbalanced_estimates_are_unbiased():
     assert (np.abs(mean - [4.0, 1.0, 0.25]) < 4.0 * error).all()
 
 
-def test_modified_large_sample_intervals_cover_the_truth():
+def test_a_balanced_table_has_the_intervals_of_its_mean_squares():
+    """Coverage of these is counted in test_modified_large_sample, from mean squares drawn as χ²."""
     random = np.random.default_rng(6)
     module, sensor = np.repeat(np.arange(6), 20), np.repeat(np.arange(24), 5)
-    hits = np.zeros(3)
-    for _ in range(400):
-        y = random.standard_normal(6)[module] + 0.7 * random.standard_normal(24)[sensor]
-        y += 0.5 * random.standard_normal(120)
-        table = nested_analysis_of_variance(y, [("module", module), ("sensor", sensor)])
-        intervals = [table.interval("module"), table.interval("sensor"), table.total_interval()]
-        hits += [i.low <= t <= i.high for i, t in zip(intervals, (1.0, 0.49, 1.74), strict=True)]
-    # nominal 95 %; 400 simulations: within 92 and 98 %
-    assert (hits >= 0.92 * 400).all()
-    assert (hits <= 0.98 * 400).all()
+    y = random.standard_normal(6)[module] + 0.7 * random.standard_normal(24)[sensor]
+    y += 0.5 * random.standard_normal(120)
+    table = nested_analysis_of_variance(y, [("module", module), ("sensor", sensor)])
+    sizes = (6, 4, 5)
+    assert table.expectations == pytest.approx(nested_expectations(sizes))
+    assert table.degrees_of_freedom == pytest.approx(nested_degrees_of_freedom(sizes))
+    squares = MeanSquares(
+        table.names, table.mean_squares, nested_degrees_of_freedom(sizes), nested_expectations(sizes)
+    )
+    for name in table.names:
+        found, wanted = table.interval(name), squares.limits([name])
+        assert [found.estimate, found.low, found.high] == pytest.approx(
+            [float(v) for v in (wanted.estimate, wanted.low, wanted.high)]
+        )
+        assert found.estimate == pytest.approx(table.variance(name))
+    total, wanted = table.total_interval(), squares.limits(table.names)
+    assert [total.low, total.high] == pytest.approx([float(wanted.low), float(wanted.high)])
+    assert total.low < total.estimate < total.high
 
 
 def test_a_level_without_freedom_is_refused():
