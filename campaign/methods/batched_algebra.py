@@ -50,36 +50,49 @@ def transposed_product(a: FloatArray, b: FloatArray) -> FloatArray:
 
 
 def inverse_cholesky(m: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Transposed inverse of the lower Cholesky factor, and the logarithm of the determinant.
+    """A root of the inverse (of the transposed Cholesky factor) and the logarithm of the determinant.
 
     Parameters
     ----------
     m
-        Positive definite matrices (d, d, B).
+        Matrices (d, d, B) without an eigenvalue below one, as I + F'CF has none.
 
     Returns
     -------
     tuple
-        U (d, d, B), upper triangular with U U' = m⁻¹, and log|m| (B,).
+        U (d, d, B) with U U' = m⁻¹, and log|m| (B,).
     """
     d = m.shape[0]
     if d == 1:
+        m = np.maximum(m, 1.0)
         return 1.0 / np.sqrt(m), np.log(m[0, 0])
     if d == 2:
         return _inverse_cholesky_of_two(m)
-    lower = np.linalg.cholesky(_stack_first(m))
+    try:
+        lower = np.linalg.cholesky(_stack_first(m))
+    except np.linalg.LinAlgError:
+        return _inverse_root(m)
     log_determinant = 2.0 * np.log(np.diagonal(lower, axis1=1, axis2=2)).sum(axis=1)
     return np.linalg.inv(lower).transpose(2, 1, 0), log_determinant
 
 
 def _inverse_cholesky_of_two(m: FloatArray) -> tuple[FloatArray, FloatArray]:
     upper = np.zeros(m.shape)
-    ratio = m[1, 0] / m[0, 0]
-    rest = m[1, 1] - ratio * m[1, 0]
-    upper[0, 0] = 1.0 / np.sqrt(m[0, 0])
+    first = np.maximum(m[0, 0], 1.0)  # neither pivot is below the least eigenvalue
+    ratio = m[1, 0] / first
+    rest = np.maximum(m[1, 1] - ratio * m[1, 0], 1.0)
+    upper[0, 0] = 1.0 / np.sqrt(first)
     upper[1, 1] = 1.0 / np.sqrt(rest)
     upper[0, 1] = -ratio * upper[1, 1]
-    return upper, np.log(m[0, 0] * rest)
+    return upper, np.log(first) + np.log(rest)
+
+
+def _inverse_root(m: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """The same by eigenvalues, where rounding has pushed some of them below one."""
+    finite = np.where(np.isfinite(m), m, 1e300)
+    values, vectors = np.linalg.eigh(_stack_first(finite))
+    values = np.maximum(values, 1.0)
+    return (vectors / np.sqrt(values)[:, None, :]).transpose(1, 2, 0), np.log(values).sum(axis=1)
 
 
 def semidefinite_cholesky(covariance: FloatArray, tolerance: float = 1e-14) -> FloatArray:

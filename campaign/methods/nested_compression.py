@@ -10,6 +10,7 @@ data but the cross-products of the innermost slots with each other and with the 
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from functools import cached_property
 
 import numpy as np
 
@@ -21,84 +22,7 @@ from campaign.methods.nested_design import (
     ScaledColumns,
     scale_columns,
 )
-
-
-@dataclass(frozen=True)
-class Block:
-    """A random effect in its level: term number, size d, copies, first place in the level's random slots."""
-
-    term: int
-    size: int
-    copies: int
-    start: int
-
-
-@dataclass(frozen=True)
-class Transfer:
-    """Slots that units of one kind hand to their parents.
-
-    Attributes
-    ----------
-    children
-        Units of this kind, sorted by parent; None for all units.
-    starts
-        Where in `children` a new parent begins.
-    parents
-        The parents, one for each start.
-    parent_of_child
-        Parent of each child of `children`.
-    source, target
-        Slot of the child and slot of the parent, pairwise; the last pair is the response.
-    scale
-        (pairs, children) what the child's slot is multiplied by to be the parent's; None: by one.
-    children_each
-        Number of children where every parent here has the same, else 0.
-    every_parent
-        Whether `parents` are all units of the outer level.
-    """
-
-    children: IntArray | None
-    starts: IntArray
-    parents: IntArray
-    parent_of_child: IntArray
-    source: IntArray
-    target: IntArray
-    scale: FloatArray | None
-    children_each: int
-    every_parent: bool
-
-    def scale_of_slots(self) -> FloatArray:
-        """`scale`, or ones that broadcast to it."""
-        return np.ones((len(self.source), 1)) if self.scale is None else self.scale
-
-
-@dataclass(frozen=True)
-class Step:
-    """One level of the elimination.
-
-    Attributes
-    ----------
-    level
-        Name of the level.
-    units
-        Number of its units.
-    random
-        Slots of the level's own random columns, block after block, copy after copy.
-    blocks
-        The random effects of the level.
-    transfers
-        How what is left goes to the next outer level (or to the fixed part).
-    parent_units, parent_slots
-        Size of the next outer level; slots count the response.
-    """
-
-    level: str
-    units: int
-    random: IntArray
-    blocks: tuple[Block, ...]
-    transfers: tuple[Transfer, ...]
-    parent_units: int
-    parent_slots: int
+from campaign.methods.nested_transfer import Block, Step, Transfer, hand_over
 
 
 @dataclass(frozen=True)
@@ -157,6 +81,16 @@ class Compression:
     least_squares: FloatArray
     rows: int
     fixed: int
+
+    @cached_property
+    def handed(self) -> FloatArray:
+        """Cross-products of the innermost units as they are, added up in the slots of their parents."""
+        return hand_over(self.steps[0], self.products, 1)
+
+    @cached_property
+    def total(self) -> float:
+        """Sum of squares of the response about its least-squares fit."""
+        return float(self.products[-1, -1].sum())
 
     def products_of(self, responses: FloatArray) -> FloatArray:
         """Cross-products for other responses with the same design.

@@ -20,11 +20,16 @@ from dataclasses import dataclass
 import numpy as np
 
 from campaign.methods.batched_algebra import inverse_cholesky, product, product_transposed, transposed_product
-from campaign.methods.nested_compression import Compression, Step, Transfer
-from campaign.methods.nested_design import BoolArray, FloatArray, IntArray
+from campaign.methods.nested_compression import Compression
+from campaign.methods.nested_design import BoolArray, FloatArray
+from campaign.methods.nested_transfer import Step, hand_over, seated, take_back
 
 Factors = list[FloatArray]
 """For each random effect its relative factor θ (d, d, R), R replicates of the whole model."""
+
+
+_THIN = 8
+"""Slots from which the innermost level is kept thin: units hand over columns, not whole matrices."""
 
 
 @dataclass(frozen=True)
@@ -33,8 +38,10 @@ class Elimination:
 
     Attributes
     ----------
-    before, after
-        Cross-products (m, m, B) before and after; B = R · units, units running fastest.
+    before
+        Cross-products (m, m, B) before; B = R · units, units running fastest.
+    after
+        The same after; None at a thin level, where they are not formed.
     half
         T (D, D, B): T T' = F (I + F'CF)⁻¹ F'.
     scaled
@@ -42,7 +49,7 @@ class Elimination:
     """
 
     before: FloatArray
-    after: FloatArray
+    after: FloatArray | None
     half: FloatArray
     scaled: FloatArray
 
@@ -107,7 +114,9 @@ class Gradient:
     information: Factors
 
 
-def eliminate(compression: Compression, products: FloatArray, factors: Factors) -> Eliminated:
+def eliminate(
+    compression: Compression, products: FloatArray, factors: Factors, handed: FloatArray | None = None
+) -> Eliminated:
     """Eliminate all random effects, level by level from the innermost.
 
     Parameters
@@ -115,23 +124,68 @@ def eliminate(compression: Compression, products: FloatArray, factors: Factors) 
     compression
         The model.
     products
-        (m, m, R · units) cross-products of the innermost units, or of one replicate (m, m, units) used for
-        all.
+        (m, m, R · units) cross-products of the innermost units, or of one replicate (m, m, units) for all.
     factors
         θ (d, d, R) of each random effect.
+    handed
+        (m', m', R · parents) the products added up in the parents' slots, where `products` are not the
+        model's own and the innermost level is thin; None: they are added up here.
     """
     replicates = factors[0].shape[2] if factors else products.shape[2]
+    steps = compression.steps
     current = products
-    if compression.steps and products.shape[2] != replicates * compression.steps[0].units:
-        current = np.tile(products, (1, 1, replicates))
     levels = []
     log_determinant = np.zeros(replicates)
-    for step in compression.steps:
-        level, logs = _eliminate_level(step, current, factors, replicates)
+    for depth, step in enumerate(steps):
+        if depth == 0 and is_thin(compression):
+            whole = compression.handed if products is compression.products else handed
+            if whole is None:
+                whole = hand_over(step, products, products.shape[2] // step.units)
+            level, logs, current = _eliminate_thin(step, products, whole, factors, replicates)
+        else:
+            if depth == 0 and current.shape[2] != replicates * step.units:
+                current = np.tile(current, (1, 1, replicates))
+            level, logs = _eliminate_level(step, current, factors, replicates)
+            current = hand_over(step, _formed(level), replicates)
         log_determinant += logs
         levels.append(level)
-        current = _hand_over(step, level.after, replicates)
     return Eliminated(tuple(levels), current, log_determinant)
+
+
+def is_thin(compression: Compression) -> bool:
+    """Whether the innermost units hand over columns: many slots, few random columns, parents of like size."""
+    if not compression.steps:
+        return False
+    step, slots = compression.steps[0], compression.products.shape[0]
+    return (
+        slots >= _THIN
+        and 2 * len(step.random) < slots
+        and step.seats * step.parent_units <= 3 * step.units
+        and step.seats * len(step.random) <= 2 * step.parent_slots
+    )
+
+
+def _formed(level: Elimination) -> FloatArray:
+    if level.after is None:
+        raise ValueError("a thin level has no cross-products after its elimination")
+    return level.after
+
+
+def _eliminate_thin(
+    step: Step, products: FloatArray, whole: FloatArray, factors: Factors, replicates: int
+) -> tuple[Elimination, FloatArray, FloatArray]:
+    """Eliminate the innermost level and hand it over as whole − Y Y', Y in the parents' slots."""
+    columns = _repeated(products[:, step.random], step.units, replicates)
+    half, logs = _half(step, columns[step.random], factors, replicates)
+    scaled = product(columns, half)
+    side_by_side = seated(step, scaled, replicates)
+    lost = product_transposed(side_by_side, side_by_side)
+    current = _repeated(whole, step.parent_units, replicates) - lost
+    return Elimination(products, None, half, scaled), logs, current
+
+
+def _repeated(stack: FloatArray, units: int, replicates: int) -> FloatArray:
+    return stack if stack.shape[2] == units * replicates else np.tile(stack, (1, 1, replicates))
 
 
 def _level_factor(step: Step, factors: Factors, replicates: int) -> FloatArray:
@@ -145,66 +199,23 @@ def _level_factor(step: Step, factors: Factors, replicates: int) -> FloatArray:
     return out if replicates == 1 else np.repeat(out, step.units, axis=2)
 
 
-def _eliminate_level(
-    step: Step, products: FloatArray, factors: Factors, replicates: int
-) -> tuple[Elimination, FloatArray]:
+def _half(step: Step, corner: FloatArray, factors: Factors, replicates: int) -> tuple[FloatArray, FloatArray]:
+    """T (D, D, B) of a level whose random slots have cross-products `corner`, and its log|V| (R,)."""
     factor = _level_factor(step, factors, replicates)
-    columns = products[:, step.random]
-    inner = transposed_product(factor, product(columns[step.random], factor))
+    inner = transposed_product(factor, product(corner, factor))
     for k in range(len(inner)):
         inner[k, k] += 1.0
     upper, logs = inverse_cholesky(inner)
-    half = product(factor, upper)
+    return product(factor, upper), logs.reshape(replicates, -1).sum(axis=1)
+
+
+def _eliminate_level(
+    step: Step, products: FloatArray, factors: Factors, replicates: int
+) -> tuple[Elimination, FloatArray]:
+    columns = products[:, step.random]
+    half, logs = _half(step, columns[step.random], factors, replicates)
     scaled = product(columns, half)
-    after = products - product_transposed(scaled, scaled)
-    return Elimination(products, after, half, scaled), logs.reshape(replicates, -1).sum(axis=1)
-
-
-def _hand_over(step: Step, after: FloatArray, replicates: int) -> FloatArray:
-    """Add what is left of the units to their parents, slot by slot."""
-    split = after.reshape(after.shape[0], after.shape[1], replicates, step.units)
-    if len(step.transfers) == 1 and len(step.transfers[0].source) == step.parent_slots:
-        only = step.transfers[0]
-        return _summed(_picked(split, only), only).reshape(step.parent_slots, step.parent_slots, -1)
-    out = np.zeros((step.parent_slots, step.parent_slots, replicates, step.parent_units))
-    for transfer in step.transfers:
-        added = _summed(_picked(split, transfer), transfer)
-        if not transfer.every_parent:
-            spread = np.zeros((*added.shape[:3], step.parent_units))
-            spread[..., transfer.parents] = added
-            added = spread
-        out[np.ix_(transfer.target, transfer.target)] += added
-    return out.reshape(step.parent_slots, step.parent_slots, -1)
-
-
-def _picked(split: FloatArray, transfer: Transfer) -> FloatArray:
-    """The children of a transfer with the slots they hand over, (k, k, R, children)."""
-    if transfer.children is not None:
-        split = split[..., transfer.children]
-    if not _in_order(transfer.source, len(split)):
-        split = split[transfer.source[:, None], transfer.source[None, :]]
-    return split if transfer.scale is None else split * _squared_scale(transfer.scale)
-
-
-def _in_order(source: IntArray, slots: int) -> bool:
-    return len(source) == slots and bool((source == np.arange(slots)).all())
-
-
-def _summed(block: FloatArray, transfer: Transfer) -> FloatArray:
-    """Sum over the children of each parent, (k, k, R, parents)."""
-    each = transfer.children_each
-    if each == 1:
-        return block
-    if 1 < each <= 8:
-        total = block[..., 0::each] + block[..., 1::each]
-        for k in range(2, each):
-            total += block[..., k::each]
-        return total
-    return np.add.reduceat(block, transfer.starts, axis=3)
-
-
-def _squared_scale(scale: FloatArray) -> FloatArray:
-    return (scale[:, None] * scale[None, :])[:, :, None, :]
+    return Elimination(products, products - product_transposed(scaled, scaled), half, scaled), logs
 
 
 def value_of(
@@ -235,7 +246,8 @@ def value_of(
     inverse_lower = np.linalg.inv(lower)
     inverse = inverse_lower.transpose(0, 2, 1) @ inverse_lower
     coefficients = (inverse @ cross[:, :, None])[:, :, 0]
-    residual_square = np.maximum(root[:, p, p] - (coefficients * cross).sum(axis=1), np.finfo(float).tiny)
+    least = 1e-20 * compression.total + 1e-290  # a perfect fit must not divide by zero
+    residual_square = np.maximum(root[:, p, p] - (coefficients * cross).sum(axis=1), least)
     degrees = compression.rows - (p if restricted else 0)
     variance = residual_square / degrees if residual_variance is None else residual_variance
     criterion = (
@@ -243,7 +255,7 @@ def value_of(
     )
     if restricted:
         criterion = criterion + 2.0 * np.log(np.diagonal(lower, axis1=1, axis2=2)).sum(axis=1)
-    criterion = np.where(unusable, np.inf, criterion)
+    criterion = np.where(unusable | ~np.isfinite(criterion), np.inf, criterion)
     return Value(criterion, residual_square, coefficients.T, inverse)
 
 
@@ -285,8 +297,13 @@ def gradient_of(
     out = Gradient(*([np.zeros_like(f) for f in factors] for _ in range(3)))
     for depth in reversed(range(len(compression.steps))):
         step, level = compression.steps[depth], eliminated.levels[depth]
-        adjoint = _take_back(step, adjoint, len(level.after), replicates)
-        _add_cones(step, level, adjoint, out, replicates)
+        if level.after is None:
+            _add_thin_cones(step, level, adjoint, out, replicates)
+            break
+        adjoint = take_back(step, adjoint, len(level.after), replicates)
+        columns = level.after[:, step.random]
+        lost = transposed_product(columns, product(adjoint, columns))
+        _add_cones(step, columns[step.random], lost, out, replicates)
         if depth:
             adjoint = _before_level(step, level, adjoint)
     for theta, cone, mine in zip(factors, out.cones, out.factors, strict=True):
@@ -294,49 +311,28 @@ def gradient_of(
     return out
 
 
-def _take_back(step: Step, adjoint: FloatArray, slots: int, replicates: int) -> FloatArray:
-    """Adjoint of :func:`_hand_over`."""
-    parents = adjoint.reshape(step.parent_slots, step.parent_slots, replicates, step.parent_units)
-    out = np.zeros((slots, slots, replicates, step.units))
-    for transfer in step.transfers:
-        given = parents
-        if not _in_order(transfer.target, step.parent_slots):
-            given = parents[np.ix_(transfer.target, transfer.target)]
-        if not (transfer.every_parent and transfer.children_each == 1):
-            given = given[..., transfer.parent_of_child]
-        if transfer.scale is not None:
-            given = given * _squared_scale(transfer.scale)
-        received = _gathered(_gathered(given, transfer.source, slots).swapaxes(0, 1), transfer.source, slots)
-        if transfer.children is None and len(step.transfers) == 1:
-            return received.reshape(slots, slots, -1)
-        out[..., slice(None) if transfer.children is None else transfer.children] += received
-    return out.reshape(slots, slots, -1)
+def _add_thin_cones(
+    step: Step, level: Elimination, adjoint: FloatArray, out: Gradient, replicates: int
+) -> None:
+    """The cones of the innermost level where its units are kept thin; `adjoint` is that of their parents."""
+    columns = _repeated(level.before[:, step.random], step.units, replicates)
+    after = columns - product_transposed(level.scaled, level.scaled[step.random])
+    side_by_side = seated(step, after, replicates)
+    pulled = product(adjoint, side_by_side)
+    shape = (step.parent_slots, len(step.random), step.seats, replicates * step.parent_units)
+    lost = np.einsum("iacn,ibcn->abn", side_by_side.reshape(shape), pulled.reshape(shape))
+    _add_cones(step, after[step.random], lost, out, replicates)
 
 
-def _gathered(given: FloatArray, source: IntArray, slots: int) -> FloatArray:
-    """Add up along the first axis what belongs to the same slot."""
-    if _in_order(source, slots):
-        return given
-    out = np.zeros((slots, *given.shape[1:]))
-    if len(np.unique(source)) == len(source):
-        out[source] = given
-        return out
-    for k, slot in enumerate(source):
-        out[slot] += given[k]
-    return out
-
-
-def _add_cones(step: Step, level: Elimination, adjoint: FloatArray, out: Gradient, replicates: int) -> None:
+def _add_cones(step: Step, determinant: FloatArray, lost: FloatArray, out: Gradient, replicates: int) -> None:
     """∂/∂Ψ of a level: after_zz − after_z' adjoint after_z, summed over units and copies."""
-    columns = level.after[:, step.random]
-    determinant = columns[step.random]
-    cone = determinant - transposed_product(columns, product(adjoint, columns))
     for block in step.blocks:
         for copy in range(block.copies):
             at = slice(block.start + copy * block.size, block.start + (copy + 1) * block.size)
-            shape = (block.size, block.size, replicates, step.units)
-            out.cones[block.term][:] += cone[at, at].reshape(shape).sum(axis=3)
-            out.information[block.term][:] += determinant[at, at].reshape(shape).sum(axis=3)
+            shape = (block.size, block.size, replicates, -1)
+            information = determinant[at, at].reshape(shape).sum(axis=3)
+            out.cones[block.term][:] += information - lost[at, at].reshape(shape).sum(axis=3)
+            out.information[block.term][:] += information
 
 
 def _before_level(step: Step, level: Elimination, adjoint: FloatArray) -> FloatArray:

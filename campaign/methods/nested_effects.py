@@ -12,10 +12,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from campaign.methods.batched_algebra import product, product_transposed
-from campaign.methods.nested_compression import Step
 from campaign.methods.nested_criterion import Elimination, eliminate, value_of
 from campaign.methods.nested_design import FloatArray, IntArray
 from campaign.methods.nested_fit import NestedModelFit
+from campaign.methods.nested_transfer import Step
 
 
 @dataclass(frozen=True)

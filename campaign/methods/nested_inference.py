@@ -67,10 +67,10 @@ def satterthwaite_each(
         if not variance > 0.0:
             found.append((variance, float(degrees)))
             continue
-        spread = 2.0 * variance**2 / degrees
+        spread = 1.0 / degrees
         if hessian is not None:
-            spread += 2.0 * _quadratic(hessian, (row[1::2] - row[2::2]) / (2.0 * widths))
-        found.append((variance, 2.0 * variance**2 / spread))
+            spread += _quadratic(hessian, (row[1::2] - row[2::2]) / (2.0 * widths * variance))
+        found.append((variance, 1.0 / spread))
     return found
 
 

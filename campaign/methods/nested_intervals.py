@@ -25,7 +25,7 @@ from campaign.methods.nested_parameters import Layout, replicates_at_once
 RESIDUAL = "residual"
 """Name under which the residual SD is asked for."""
 
-_PRECISION = 1e-3
+_PRECISION = 2e-3
 """How near the profile's root must come to the quantile's before a last Newton step ends the search."""
 
 
@@ -92,6 +92,11 @@ def profile_intervals(
         (name, direction) each, as in :func:`profile_interval`.
     level
         Coverage.
+
+    Raises
+    ------
+    ValueError
+        A direction does not fit its effect, or the fit did not converge.
     """
     targets = [_Target((_part(fit, name, direction),)) for name, direction in requests]
     return _profile(fit, targets, level)
@@ -353,6 +358,8 @@ class _Limit:
 def _profile(fit: NestedModelFit, targets: Sequence[_Target], level: float) -> list[Interval]:
     if not targets:
         return []
+    if not fit.converged:
+        raise ValueError("no profile: the search found no certified minimum of the criterion")
     if not fit.model.terms:
         return [_residual_interval(fit, level)] * len(targets)
     profiles = _Profiles(fit, targets)
@@ -411,7 +418,7 @@ def _limits(profiles: _Profiles, cutoff: float, least: float) -> list[tuple[_Lim
             profiles.objective(length, which),
             np.column_stack([limit.vector for limit in running]),
             np.stack([limit.inverse for limit in running], axis=2),
-            tolerance=1e-5,
+            tolerance=3e-5,
             longest=longest,
         )
         value, _, slope = profiles.evaluate(minima.x, length, which)
@@ -481,6 +488,9 @@ def _advance(limit: _Limit, root: float, slope: float, cutoff: float) -> None:
         limit.inside = length
     else:
         limit.outside = length
+    if root <= cutoff and not limit.upper and length < 1e-6 * limit.estimate:
+        limit.limit = 0.0
+        return
     step = _newton(length, root, slope, cutoff)
     if _has_levelled_off(limit, root, slope, cutoff):
         limit.limit = np.inf
@@ -512,17 +522,16 @@ def _kept_between(limit: _Limit, wanted: float) -> float:
     if np.isnan(outside):
         return _further(limit, wanted)
     low, high = min(inside, outside), max(inside, outside)
-    margin = 0.02 * (high - low)
-    if low + margin <= wanted <= high - margin:
+    if low < wanted < high and limit.looks < 12:
         return wanted
     return (low + high) / 2.0 if low == 0.0 else float(np.sqrt(low * high))
 
 
 def _further(limit: _Limit, wanted: float) -> float:
-    """The wanted length, neither too near nor too far from the last; zero where a lower limit goes there."""
+    """The wanted length, not too far from the last one; zero where a lower limit goes there."""
     length = limit.length
     if limit.upper:
-        return float(np.clip(wanted, 1.1 * length, 4.0 * length)) if wanted > length else 2.0 * length
-    if not wanted < 0.9 * length:
+        return min(wanted, 4.0 * length) if wanted > length else 2.0 * length
+    if not wanted < length:
         wanted = 0.5 * length
     return 0.0 if wanted < 0.3 * limit.estimate and limit.zero_possible else max(wanted, 0.25 * length)

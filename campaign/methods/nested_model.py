@@ -8,6 +8,7 @@ each nominal level). This module is the door; the steps have a module each:
 
     nested_design         the model as stated, its check, well-scaled columns
     nested_compression    rows become cross-products per innermost unit
+    nested_transfer       how the slots of a unit become those of its parent
     nested_criterion      the criterion by elimination from inside outwards, and its gradient backwards
     nested_start          analysis-of-variance moments
     nested_optimiser      L-BFGS-B, Newton polish, certificate on the cone

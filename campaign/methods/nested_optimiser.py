@@ -24,6 +24,10 @@ _CONE_TOLERANCE = 1e-6
 """How far below zero, in units of its natural scale, the smallest eigenvalue of a cone's gradient may lie."""
 
 
+_LARGEST = 1e5
+"""Largest relative factor looked at: beyond it the readings have no noise and the likelihood no bound."""
+
+
 @dataclass(frozen=True)
 class Optimum:
     """Where the search ended, with the evidence.
@@ -122,8 +126,9 @@ def _evidence(search: _Search, start: FloatArray, best: FloatArray, restarts: in
     if free:
         step = _newton_step(_hessian(search, best, gradient, free), gradient[free])
         promise = float(-gradient[free] @ step) / 2.0
-    good = min(certificate, default=0.0) > -_CONE_TOLERANCE and promise < 1e-6
-    return Optimum(best, start, criterion, search.evaluations, restarts, certificate, promise, good)
+    bounded = np.abs(best).max(initial=0.0) < 0.1 * _LARGEST
+    good = bounded and min(certificate, default=0.0) > -_CONE_TOLERANCE and promise < 1e-6
+    return Optimum(best, start, criterion, search.evaluations, restarts, certificate, promise, bool(good))
 
 
 def _descend(search: _Search, start: FloatArray) -> FloatArray:
@@ -141,7 +146,9 @@ def _quasi_newton(search: _Search, start: FloatArray) -> FloatArray:
     if np.abs(gradient / scale).max() < 1e-4:
         return start
     diagonal = set(search.layout.diagonal())
-    bounds = [(0.0, None) if n in diagonal else (None, None) for n in range(len(start))]
+    bounds = [
+        (0.0 if n in diagonal else -_LARGEST * scale[n], _LARGEST * scale[n]) for n in range(len(start))
+    ]
 
     def scaled(x: FloatArray) -> tuple[float, FloatArray]:
         value, slope = search(x / scale)
@@ -240,6 +247,8 @@ def _line_search(
     noise = 1e-13 * max(abs(criterion), 1.0) if promise < 1e-6 else 0.0
     for length in 3.0 ** -np.arange(8.0):
         there = vector + length * step
+        if np.abs(there).max() > _LARGEST:
+            continue
         value, gradient = search(there)
         if value <= criterion - 0.1 * length * promise + noise:
             return there, value, gradient, length == 1.0

@@ -8,7 +8,15 @@ import numpy as np
 
 from campaign.methods.batched_algebra import semidefinite_cholesky
 from campaign.methods.nested_compression import Compression
-from campaign.methods.nested_criterion import Factors, Gradient, Value, eliminate, gradient_of, value_of
+from campaign.methods.nested_criterion import (
+    Factors,
+    Gradient,
+    Value,
+    eliminate,
+    gradient_of,
+    is_thin,
+    value_of,
+)
 from campaign.methods.nested_design import FloatArray
 
 
@@ -78,6 +86,7 @@ def evaluate(
     *,
     restricted: bool,
     products: FloatArray | None = None,
+    handed: FloatArray | None = None,
 ) -> tuple[Value, FloatArray, Gradient]:
     """Criterion with σ² profiled out and its gradient.
 
@@ -91,6 +100,8 @@ def evaluate(
         REML or maximum likelihood.
     products
         Cross-products of the replicates; None: those of the data.
+    handed
+        As in :func:`campaign.methods.nested_criterion.eliminate`.
 
     Returns
     -------
@@ -99,15 +110,22 @@ def evaluate(
     """
     factors = layout.factors(vectors)
     used = compression.products if products is None else products
-    eliminated = eliminate(compression, used, factors)
+    eliminated = eliminate(compression, used, factors, handed)
     value = value_of(compression, eliminated, restricted=restricted)
     gradient = gradient_of(compression, eliminated, value, factors, restricted=restricted)
     return value, layout.vector(gradient.factors), gradient
+
+
+_AT_ONCE = 600_000
+"""Numbers of one level's cross-products to work on at once."""
 
 
 def replicates_at_once(compression: Compression) -> int:
     """How many replicates of the model to work on at once so that the arrays stay in the cache."""
     if not compression.steps:
         return 1000
-    slots = compression.products.shape[0]
-    return max(1, int(300_000 / (slots * slots * compression.steps[0].units)))
+    slots = [compression.products.shape[0], *(step.parent_slots for step in compression.steps[:-1])]
+    sizes = [m * m * step.units for m, step in zip(slots, compression.steps, strict=True)]
+    if is_thin(compression):
+        sizes[0] //= slots[0] // len(compression.steps[0].random)
+    return max(1, _AT_ONCE // int(max(sizes)))

@@ -11,10 +11,11 @@ from __future__ import annotations
 import numpy as np
 
 from campaign.methods.batched_algebra import nearest_semidefinite, semidefinite_cholesky
-from campaign.methods.nested_compression import Block, Compression, Step
+from campaign.methods.nested_compression import Compression
 from campaign.methods.nested_criterion import eliminate
 from campaign.methods.nested_design import FloatArray
 from campaign.methods.nested_parameters import Layout
+from campaign.methods.nested_transfer import Block, Step
 
 
 def moment_covariances(compression: Compression) -> tuple[list[FloatArray], list[FloatArray], float]:

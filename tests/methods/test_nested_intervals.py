@@ -154,6 +154,15 @@ def test_a_direction_that_does_not_fit_is_refused(nested):
         profile_interval(fit, "stand")
 
 
+def test_a_fit_without_a_minimum_has_no_profile(nested):
+    table = nested.invented(modules=4, sensors=2)
+    exact = table.assign(y=table["sensor"] * (1.0 + table["x"]))
+    fit = fit_nested_model(nested.lines(exact))
+    assert not fit.converged
+    with pytest.raises(ValueError, match="no certified minimum"):
+        profile_interval(fit, "sensor", [1.0, 0.0])
+
+
 def test_limits_cover_the_truth(nested):
     covered, trials = 0, 30
     for seed in range(trials):
