@@ -187,8 +187,9 @@ def effort_of_fits(fits: tuple[GenerationFit, ...], seed: int) -> CalibrationEff
         )
     readings = pd.concat([fit.model.readings for fit in fits])
     low, high = common_range(readings)
+    margin = 1e-3 * float(np.ptp(readings["x"].to_numpy(float)))
     trials = _trials(fits, readings, np.random.default_rng([seed % 2**63, 1]))
-    inside = (trials.x >= low) & (trials.x <= high)
+    inside = (trials.x >= low - margin) & (trials.x <= high + margin)
     efforts = _possible_efforts(fits, trials)
     table = pd.DataFrame(list(_rows(efforts, trials, inside)), columns=list(EFFORT_COLUMNS))
     table = _with_agreement(_with_factor(table))
@@ -207,11 +208,10 @@ def _notice(code: str, what: str, done: str, remedy: str = "") -> Notice:
 def common_range(readings: pd.DataFrame) -> tuple[float, float]:
     """Return the range of x that all sensors were read over; the whole range where they share none."""
     grouped = readings.groupby(["generation", "module", "sensor"])["x"]
-    step = 1e-3 * float(np.ptp(readings["x"].to_numpy(float)))
     low, high = float(grouped.min().max()), float(grouped.max().min())
-    if high - low <= step:
+    if high - low <= 1e-3 * float(np.ptp(readings["x"].to_numpy(float))):
         low, high = float(readings["x"].min()), float(readings["x"].max())
-    return low - step, high + step
+    return low, high
 
 
 def _trials(

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Literal
 
 import numpy as np
@@ -24,6 +24,7 @@ from campaign.analyses.sensor_figures import (
     principal_lines,
     principal_records,
     principal_run_lines,
+    sensor_figures,
 )
 from campaign.recordings.description import Description
 
@@ -36,6 +37,12 @@ if TYPE_CHECKING:
 
 ENOUGH_FACTOR = 1.1
 """Without a limit an effort counts as enough up to this multiple of the SD with a sensor's own line."""
+
+BADLY_STRAIGHT_PERCENT_FSO = 10.0
+"""From this mean departure on, a straight line is a bad description and page 0 says so first.
+
+A choice of ours: ten times the residual of the order of 1 % that sensors of this kind are usually read to.
+"""
 
 OWN_LINE = ("sensor", "rezero_additive", "rezero_ratio")
 """Efforts that calibrate each sensor."""
@@ -59,7 +66,7 @@ class SensorFigure:
     """One figure of every sensor of a generation, summed up.
 
     ``median`` and ``smallest`` are over sensors; ``mean`` with its 95 % interval counts modules as the unit
-    (NaN limits with one module); ``exceeding`` is the number of sensors above ``threshold`` (the limit
+    (NaN limits with one module; with one sensor they are those of its own figure, where it has any); ``exceeding`` is the number of sensors above ``threshold`` (the limit
     where there is one, else the mean); ``put_back`` is the mean with everything set aside put back, NaN
     where nothing was or it cannot be computed.
     """
@@ -93,6 +100,22 @@ class Effort:
     factor: float
     agrees: bool | None
 
+    @property
+    def expanded_low(self) -> float:
+        """Lower 95 % limit of ``strain_expanded``; NaN where the SD has none."""
+        return self.strain_expanded * self.low / self.strain_sd
+
+    @property
+    def expanded_high(self) -> float:
+        """Upper 95 % limit of ``strain_expanded``; NaN where the SD has none."""
+        return self.strain_expanded * self.high / self.strain_sd
+
+    def keeps(self, limit: float) -> Literal["kept", "not kept", "not decided"]:
+        """Whether the expanded uncertainty keeps *limit*, its 95 % interval considered."""
+        if self.expanded_high <= limit:
+            return "kept"
+        return "not kept" if self.expanded_low > limit else "not decided"
+
 
 @dataclass(frozen=True)
 class EnoughFinding:
@@ -110,6 +133,28 @@ class EnoughFinding:
     sparing: Effort | None
     own: Effort
     efforts: tuple[Effort, ...]
+
+    @property
+    def spares_decided(self) -> bool:
+        """Whether the 95 % intervals too say that every effort that spares calibrating a sensor is worse."""
+        if self.sparing is None:
+            return False
+        if math.isfinite(self.limit):
+            return self.sparing.keeps(self.limit) == "not kept"
+        return self.sparing.low > ENOUGH_FACTOR * self.own.high
+
+    @property
+    def enough_decided(self) -> bool:
+        """Whether the interval of what is enough keeps the limit, not its estimate alone (no limit: true)."""
+        if self.enough is None or not math.isfinite(self.limit):
+            return self.enough is not None
+        return self.enough.keeps(self.limit) == "kept"
+
+    @property
+    def none_decided(self) -> bool:
+        """Whether the interval of the best effort, not its estimate alone, exceeds the limit."""
+        best = min((e for e in self.efforts if math.isfinite(e.strain_sd)), key=lambda e: e.strain_sd)
+        return best.keeps(self.limit) == "not kept"
 
 
 @dataclass(frozen=True)
@@ -129,13 +174,22 @@ class SpreadFinding:
     """Where the spread of one generation comes from at mid range, largest first.
 
     ``more_than`` holds what the levels are called that the first one exceeds, the interval of the ratio
-    excluding 1; empty where no such claim can be made.
+    excluding 1; empty where no such claim can be made. ``limited`` holds components of which the design gives
+    an upper limit only (``sd`` is NaN).
     """
 
     generation: str
     place: str
     sources: tuple[SpreadSource, ...]
     more_than: tuple[str, ...]
+    limited: tuple[SpreadSource, ...] = ()
+
+    @property
+    def rivals(self) -> tuple[str, ...]:
+        """What may spread as much as the first: not exceeded by it, or limited to more than its SD."""
+        first = self.sources[0]
+        level = [s.called for s in self.sources[1:] if s.called not in self.more_than]
+        return (*level, *(s.called for s in self.limited if not s.high <= first.sd))
 
 
 @dataclass(frozen=True)
@@ -176,7 +230,16 @@ class AccuracyFinding:
 
 
 FindingKind = Literal[
-    "enough", "accuracy", "spread", "linearity", "bend", "repeatability", "hysteresis", "zero_return", "model"
+    "curved",
+    "enough",
+    "accuracy",
+    "spread",
+    "linearity",
+    "bend",
+    "repeatability",
+    "hysteresis",
+    "zero_return",
+    "model",
 ]
 
 
@@ -247,8 +310,9 @@ def collect_findings(
     if variance is not None:
         findings += _spread_findings(variance)
     if calibration is not None:
-        findings += _line_findings(calibration, limits, put_back)
+        findings += _line_findings(calibration, description, limits, put_back)
     findings += _model_findings(effort, residuals)
+    findings.sort(key=lambda finding: finding.kind != "curved")
     return Findings(scope, tuple(findings))
 
 
@@ -399,7 +463,7 @@ def _spread_findings(variance: Variance) -> list[Finding]:
     table = variance.variance_in_strain
     table = table[(table["place"] == "mid") & (table["generation"] != "all")]
     facts = [
-        SpreadFinding(str(generation), "mid", *_sources(rows, variance.comparisons))
+        SpreadFinding(str(generation), "mid", *_sources(rows, variance.comparisons), _limited(rows))
         for generation, rows in table.groupby("generation", sort=True)
     ]
     known = tuple(fact for fact in facts if fact.sources)
@@ -410,13 +474,7 @@ def _sources(
     rows: pd.DataFrame, comparisons: pd.DataFrame
 ) -> tuple[tuple[SpreadSource, ...], tuple[str, ...]]:
     parts = rows[rows["level"] != "total"].dropna(subset=["strain_sd"])
-    ranked = parts.sort_values("strain_sd", ascending=False, kind="stable")
-    sources = tuple(
-        SpreadSource(
-            str(r["level"]), str(r["called"]), *(float(r[k]) for k in ("strain_sd", "low", "high", "share"))
-        )
-        for _, r in ranked.iterrows()
-    )
+    sources = _as_sources(parts.sort_values("strain_sd", ascending=False, kind="stable"))
     if not sources:
         return (), ()
     own = comparisons[comparisons["generation"] == rows["generation"].iloc[0]]
@@ -425,16 +483,34 @@ def _sources(
     return sources, tuple(s.called for s in sources[1:] if s.level in exceeded)
 
 
-def _line_findings(calibration: Calibration, limits: Limits, put_back: Calibration | None) -> list[Finding]:
+def _as_sources(rows: pd.DataFrame) -> tuple[SpreadSource, ...]:
+    return tuple(
+        SpreadSource(
+            str(r["level"]), str(r["called"]), *(float(r[k]) for k in ("strain_sd", "low", "high", "share"))
+        )
+        for _, r in rows.iterrows()
+    )
+
+
+def _limited(rows: pd.DataFrame) -> tuple[SpreadSource, ...]:
+    """Components without an estimate that have an upper limit."""
+    return _as_sources(rows[(rows["level"] != "total") & rows["strain_sd"].isna() & rows["high"].notna()])
+
+
+def _line_findings(
+    calibration: Calibration, description: Description, limits: Limits, put_back: Calibration | None
+) -> list[Finding]:
     findings = []
+    own = sensor_figures(calibration, description)
     for kind, column in (
         ("linearity", "linearity_least_squares_percent_fso"),
         ("repeatability", "repeatability_percent_fso"),
     ):
-        facts = _column_facts(calibration, column, limits, kind, put_back)
+        facts = _column_facts(calibration, column, limits, kind, put_back, own)
         if facts:
-            findings.append(Finding(kind, facts, _verdict(limits, kind), kind))  # type: ignore[arg-type]
-    loops = _loop_facts(calibration, limits, put_back)
+            shown = "curved" if kind == "linearity" and badly_straight(facts) else kind
+            findings.append(Finding(shown, facts, _verdict(limits, kind), kind))  # type: ignore[arg-type]
+    loops = _loop_facts(calibration, limits, put_back, own)
     if loops:
         findings.append(Finding("hysteresis", loops, _verdict(limits, "hysteresis"), "hysteresis"))
     bends = _bend_facts(calibration)
@@ -446,14 +522,33 @@ def _line_findings(calibration: Calibration, limits: Limits, put_back: Calibrati
     return findings
 
 
+def badly_straight(linearity: Iterable[SensorFigure]) -> bool:
+    """Return whether any generation departs from straight lines by :data:`BADLY_STRAIGHT_PERCENT_FSO`."""
+    return any(figure.mean >= BADLY_STRAIGHT_PERCENT_FSO for figure in linearity)
+
+
 def _column_facts(
-    calibration: Calibration, column: str, limits: Limits, name: str, put_back: Calibration | None
+    calibration: Calibration,
+    column: str,
+    limits: Limits,
+    name: str,
+    put_back: Calibration | None,
+    own: pd.DataFrame,
 ) -> tuple[SensorFigure, ...]:
-    return sum_up(
+    figures = sum_up(
         _line_values(calibration, column),
         _limit_value(limits, name),
         None if put_back is None else _line_values(put_back, column),
     )
+    return tuple(_with_own_interval(figure, own[own["figure"] == name]) for figure in figures)
+
+
+def _with_own_interval(figure: SensorFigure, own: pd.DataFrame) -> SensorFigure:
+    """Give the figure of an only sensor the interval of that sensor."""
+    rows = own[own["generation"] == figure.generation]
+    if figure.sensors != 1 or len(rows) != 1:
+        return figure
+    return replace(figure, low=float(rows["low"].iloc[0]), high=float(rows["high"].iloc[0]))
 
 
 def _line_values(calibration: Calibration, column: str) -> pd.DataFrame:
@@ -462,9 +557,9 @@ def _line_values(calibration: Calibration, column: str) -> pd.DataFrame:
 
 
 def _loop_facts(
-    calibration: Calibration, limits: Limits, put_back: Calibration | None
+    calibration: Calibration, limits: Limits, put_back: Calibration | None, own: pd.DataFrame
 ) -> tuple[LoopFinding, ...]:
-    figures = _column_facts(calibration, "hysteresis_percent_fso", limits, "hysteresis", put_back)
+    figures = _column_facts(calibration, "hysteresis_percent_fso", limits, "hysteresis", put_back, own)
     levels = calibration.level_hysteresis
     apart = levels[(levels["low"] > 0) | (levels["high"] < 0)]
     found = apart.drop_duplicates(["generation", "module", "sensor"])["generation"].value_counts()

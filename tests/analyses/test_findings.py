@@ -10,7 +10,13 @@ import pandas as pd
 import pytest
 from scipy import stats
 
-from campaign.analyses.findings import choose_effort, sum_up
+from campaign.analyses.findings import (
+    SpreadFinding,
+    SpreadSource,
+    badly_straight,
+    choose_effort,
+    sum_up,
+)
 from campaign.analyses.scope import describe_scope
 from tests.pages.small_campaign import Sketch, read_and_calibrate, write_campaign
 
@@ -125,3 +131,58 @@ def test_kinds_that_nothing_analyses_yet_are_counted_by_file():
     assert scope.not_analysed == (("hold", 2),)
     assert scope.x is None
     assert scope.first_day == ""
+
+
+def with_limits(table: pd.DataFrame, share: float) -> pd.DataFrame:
+    """*table* with 95 % limits of the SD that share part below and above it."""
+    sd = table["strain_sd_predicted"]
+    return table.assign(low=sd * (1 - share), high=sd * (1 + share))
+
+
+def test_a_line_for_every_sensor_is_needed_only_where_intervals_say_so():
+    table = efforts(generation=0.025, sensor=0.015)
+    sharp = choose_effort("g", with_limits(table, 0.1), 0.02)
+    vague = choose_effort("g", with_limits(table, 0.3), 0.02)
+    assert sharp.enough.effort == vague.enough.effort == "sensor"
+    assert (sharp.spares_decided, vague.spares_decided) == (True, False)
+    assert sharp.sparing.keeps(0.02) == "not kept"
+    assert vague.sparing.keeps(0.02) == "not decided"
+    assert sharp.own.expanded_high == pytest.approx(0.0165)
+    assert (sharp.enough_decided, with_wide_own(table).enough_decided) == (True, False)
+
+
+def with_wide_own(table: pd.DataFrame):
+    return choose_effort("g", with_limits(table, 0.4), 0.02)
+
+
+def test_without_a_limit_the_intervals_of_both_must_be_a_tenth_apart():
+    table = efforts(generation=0.02, sensor=0.01)
+    assert choose_effort("g", with_limits(table, 0.1), math.nan).spares_decided
+    assert not choose_effort("g", with_limits(table, 0.4), math.nan).spares_decided
+
+
+def test_one_sensor_says_nothing_of_sparing_lines():
+    assert not choose_effort("g", with_limits(efforts(sensor=0.01), 0.1), math.nan).spares_decided
+
+
+def test_no_effort_keeps_the_limit_beyond_doubt_only_where_the_best_exceeds_it():
+    table = efforts(generation=0.05, sensor=0.03)
+    assert choose_effort("g", with_limits(table, 0.1), 0.02).none_decided
+    assert not choose_effort("g", with_limits(table, 0.5), 0.02).none_decided
+
+
+def test_what_may_spread_as_much_is_named():
+    def source(called: str, sd: float, high: float) -> SpreadSource:
+        return SpreadSource(called, called, sd, math.nan, high, math.nan)
+
+    sources = (source("sensor", 2.0, 3.0), source("module", 1.0, 4.0), source("run", 0.1, 0.2))
+    limited = (source("batch", math.nan, 9.0), source("session", math.nan, 0.5))
+    assert SpreadFinding("g", "mid", sources, ("run",), limited).rivals == ("module", "batch")
+
+
+def test_a_bent_sensor_leads_the_findings():
+    figures = pd.DataFrame(
+        {"generation": ["a", "b"], "module": "m", "sensor": ["1", "2"], "value": [1.0, 31.0]}
+    )
+    assert badly_straight(sum_up(figures, math.nan))
+    assert not badly_straight(sum_up(figures.head(1), math.nan))
