@@ -21,7 +21,7 @@ from campaign.pages.notes import make_notes, read_note_files
 from campaign.pages.output import check_ours, write_folder
 from campaign.pages.site import build_site
 from campaign.provenance.manifest import with_manifests
-from campaign.recordings.inspection import inspection_lines, print_lines
+from campaign.recordings.inspection import ON_SITE, inspection_lines, print_lines
 from campaign.recordings.intake import Intake, Progress, run_intake
 from campaign.recordings.recording import Trial
 from campaign.recordings.sensor_share import TrialKey
@@ -86,9 +86,13 @@ def report(folder: Path, into: Path | None, fail_on_set_aside: bool, progress: P
     files = build_site(results, notes, folder / library if library is not None else None)
     write_folder(with_manifests(files, read.intake.file_hashes), site)
     tell("pages", 1, 1)
-    sys.stdout.write(print_lines(inspection_lines(replace(read.intake, notices=results.notices))))
+    sys.stdout.write(print_lines(_what_was_read(read.intake, results.notices)))
     print(f"\n{len(files)} files written; open {site / 'index.html'}")
     return SET_ASIDE if fail_on_set_aside and read.intake.set_aside_unasked else DONE
+
+
+def _what_was_read(intake: Intake, notices: tuple[Notice, ...]) -> list[str]:
+    return inspection_lines(replace(intake, notices=notices), where=ON_SITE)
 
 
 def beside(folder: Path) -> Path:

@@ -369,3 +369,36 @@ def test_report_never_writes_into_a_folder_of_somebody_else(
 def test_a_report_goes_beside_its_folder(folder: Path) -> None:
     assert main(["report", str(folder)]) == 0
     assert (folder.parent / "panels_report" / "index.html").is_file()
+
+
+def test_what_is_only_counted_stands_where_the_text_says(
+    folder: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    for path in sorted((folder / "trials").iterdir()):
+        for run in range(3, 6):
+            other = path.with_name(path.name.replace("_r1", f"_r{run}").replace("_r2", f"_r{run + 10}"))
+            other.write_bytes(path.read_bytes().replace(b"100", b"10%d" % run).replace(b"\n", b"\r\n"))
+    assert main(["inspect", str(folder)]) == 0
+    assert "more in notices.csv (inspect with --tables DIR writes it)" in capsys.readouterr().out
+    assert main(["report", str(folder), "--into", str(tmp_path / "site")]) == 0
+    out = capsys.readouterr().out
+    assert "more on the Recordings page" in out
+    assert "notices.csv" not in out
+
+
+def test_a_file_for_a_folder_is_one_fault(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    assert main(["report", str(folder / "campaign.toml")]) == 2
+    assert capsys.readouterr().err.startswith("STOPS (1)\n")
+
+
+def test_each_fault_is_followed_by_its_own_remedy(folder: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    description = folder / "campaign.toml"
+    description.write_text(DESCRIPTION + "lisence = 1\nnaem = 2\n")
+    assert main(["inspect", str(folder)]) == 2
+    lines = [line.strip() for line in capsys.readouterr().err.splitlines()]
+    first, second = (
+        next(i for i, line in enumerate(lines) if key in line) for key in ("'lisence'", "'naem'")
+    )
+    assert first < second
+    assert lines[first + 1].startswith("to mend:")
+    assert lines[second + 1].startswith("to mend:")

@@ -89,7 +89,13 @@ def first_description(folder: Path) -> str:
     names = [name for name, _ in chosen]
     looks = _with_wide_columns([look for file in _spread(chosen) if (look := _look(*file)) is not None])
     others = Counter(_ending(name) for name, _ in files if _ending(name) != ending)
-    lines = [*_head(folder), *_recordings(names, others, looks, folder), *_columns(looks), *_tail()]
+    lines = [
+        *_head(folder),
+        *_recordings(names, others, looks, folder),
+        *_columns(looks),
+        *_missing(looks),
+        *_tail(),
+    ]
     return re.sub(r"\n{3,}", "\n\n", "\n".join(lines) + "\n")
 
 
@@ -300,13 +306,42 @@ def _columns(looks: Sequence[Look]) -> Iterator[str]:
             if look.wide is not None and position in recognised and recognised[position].sensor is not None:
                 if look.wide not in described:
                     described.add(look.wide)
-                    yield from _table(look, position, look.wide, "signal", "", "one column a sensor")
+                    yield from _table(look, position, look.wide, "signal", "", _wide_words(look))
             elif position in recognised and name is not None:
                 yield _recognised(name, recognised[position])
             else:
                 quantity, unit, why = _guess_quantity(look, position, name, taken)
                 taken.add(quantity)
                 yield from _table(look, position, name, quantity, unit, why)
+
+
+def _wide_words(look: Look) -> str:
+    headers = [_quoted(c.header or "") for c in look.plan.columns if c.sensor is not None]
+    return f"one column a sensor, {', '.join(headers)}"
+
+
+def _missing(looks: Sequence[Look]) -> Iterator[str]:
+    """Say what a calibration needs and no column was taken for; a human sees at a glance which one it is."""
+    taken = {column.quantity for look in looks for column in look.plan.columns}
+    wanted = []
+    if not taken & {"length", "elongation", "strain"} and not any(_guesses(looks, "length")):
+        wanted.append(("a length", "length", "mm", "or elongation, or strain"))
+    if "signal" not in taken and not any(_guesses(looks, "signal")):
+        wanted.append(("the signal", "signal", "pF", "or whatever unit it has"))
+    for name, quantity, unit, choice in wanted:
+        yield ""
+        yield f"# MISSING: no column was taken for {name}. In the table that is it, put for ignore"
+        yield f'# quantity = "{quantity}"   # {choice}'
+        yield f'# unit = "{unit}"'
+
+
+def _guesses(looks: Sequence[Look], quantity: str) -> Iterator[bool]:
+    """Whether each column of each recording is guessed to be a quantity."""
+    for look in looks:
+        header = look.layout.header
+        for position in range(1, look.layout.fields + 1):
+            name = header[position - 1] if header is not None else None
+            yield _guess_quantity(look, position, name, set())[0] == quantity
 
 
 def _recognised(name: str, column: ColumnPlan) -> str:

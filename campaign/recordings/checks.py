@@ -292,7 +292,8 @@ def nothing_usable(counts: Counts) -> Notice | None:
     """Return the notice that no trial is usable, or ``None`` where one is."""
     if counts.used:
         return None
-    what = f"no trial is usable: {counts.set_aside} recordings are set aside, each with its notice"
-    return Notice(
-        "no-usable-trial", "stops", None, None, None, what, "no report is written", "mend one of them"
-    )
+    many = counts.set_aside != 1
+    what = f"no trial is usable: {counts.set_aside} {'recordings are' if many else 'recording is'} set aside"
+    what += ", each with its notice" if many else "; its notice says why"
+    remedy = "mend one of them" if many else "mend it"
+    return Notice("no-usable-trial", "stops", None, None, None, what, "no report is written", remedy)

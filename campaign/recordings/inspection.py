@@ -19,10 +19,16 @@ TABLE_NAMES = ("recordings", "trials", "notices")
 SHOWN_A_CODE: dict[Weight, int] = {"stops": 1000, "set aside": 20, "noted": 3}
 """Notices of one code that the text shows; the rest is counted, and stands in the tables."""
 
+IN_TABLES = "in notices.csv (inspect with --tables DIR writes it)"
+"""Where the notices stand that ``campaign inspect`` only counts."""
+
+ON_SITE = "on the Recordings page"
+"""Where they stand once a site is written."""
+
 HEADINGS: dict[Weight, str] = {"stops": "STOPS", "set aside": "SET ASIDE", "noted": "NOTED"}
 
 
-def inspection_lines(intake: Intake, width: int = 100) -> list[str]:
+def inspection_lines(intake: Intake, width: int = 100, where: str = IN_TABLES) -> list[str]:
     """Return an intake as lines of text: counts that add up, then notices by weight.
 
     Parameters
@@ -31,12 +37,14 @@ def inspection_lines(intake: Intake, width: int = 100) -> list[str]:
         From :func:`campaign.recordings.intake.run_intake`.
     width
         Characters a line.
+    where
+        Where the notices stand that are only counted, as the end of a sentence.
     """
     return [
         intake.description.title,
         "",
         *_count_lines(intake),
-        *notice_lines(intake.notices, width),
+        *notice_lines(intake.notices, width, where),
     ]
 
 
@@ -55,7 +63,7 @@ def _count_lines(intake: Intake) -> Iterator[str]:
         yield f"  another campaign, not counted: {folder}"
 
 
-def notice_lines(notices: Sequence[Notice], width: int = 100) -> list[str]:
+def notice_lines(notices: Sequence[Notice], width: int = 100, where: str = IN_TABLES) -> list[str]:
     """Return notices as lines of text, by weight and code."""
     lines: list[str] = []
     for weight, heading in HEADINGS.items():
@@ -63,21 +71,24 @@ def notice_lines(notices: Sequence[Notice], width: int = 100) -> list[str]:
         if of_weight:
             lines += ["", f"{heading} ({len(of_weight)})"]
         for code in dict.fromkeys(notice.code for notice in of_weight):
-            lines += _code_lines(code, [n for n in of_weight if n.code == code], width)
+            lines += _code_lines(code, [n for n in of_weight if n.code == code], width, where)
     return lines
 
 
-def _code_lines(code: str, notices: Sequence[Notice], width: int) -> Iterator[str]:
+def _code_lines(code: str, notices: Sequence[Notice], width: int, where: str) -> Iterator[str]:
     shown = SHOWN_A_CODE[notices[0].weight]
     yield ""
     yield f"  {code} ({len(notices)})"
+    remedies = dict.fromkeys(notice.remedy for notice in notices[:shown])
     for notice in notices[:shown]:
         place = f"{notice.where}: " if notice.where else ""
         yield from _wrapped(f"{place}{notice.what}; {notice.done}.", "    ", width)
+        if len(remedies) > 1 and notice.remedy:
+            yield from _wrapped(f"to mend: {notice.remedy}", "      ", width)
     if len(notices) > shown:
-        yield f"    and {len(notices) - shown} more in notices.csv"
-    for remedy in dict.fromkeys(notice.remedy for notice in notices[:shown] if notice.remedy):
-        yield from _wrapped(f"to mend: {remedy}", "      ", width)
+        yield f"    and {len(notices) - shown} more {where}"
+    if len(remedies) == 1 and notices[0].remedy:
+        yield from _wrapped(f"to mend: {notices[0].remedy}", "      ", width)
 
 
 def _wrapped(text: str, indent: str, width: int) -> list[str]:

@@ -233,7 +233,7 @@ def _read_register_file(folder: Path, name: str) -> tuple[Register, list[Notice]
     path = folder / f"{name}.csv"
     try:
         data = path.read_bytes()
-    except FileNotFoundError:
+    except (FileNotFoundError, NotADirectoryError):
         return Register(name), []
     except OSError as fault:
         what = f"the register cannot be opened ({fault.strerror})"
