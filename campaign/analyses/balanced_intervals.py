@@ -12,6 +12,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 import numpy.typing as npt
@@ -53,8 +54,9 @@ class _Row:
     inside: IntArray
     beside: IntArray
 
-    @property
+    @cached_property
     def freedom(self) -> int:
+        """Degrees of freedom, counted from the design."""
         return two_way_rank(self.factor, self.beside) - two_way_rank(self.inside, self.beside)
 
     def square(self, values: FloatArray) -> FloatArray:
