@@ -66,9 +66,10 @@ class SensorFigure:
     """One figure of every sensor of a generation, summed up.
 
     ``median`` and ``smallest`` are over sensors; ``mean`` with its 95 % interval counts modules as the unit
-    (NaN limits with one module; with one sensor they are those of its own figure, where it has any); ``exceeding`` is the number of sensors above ``threshold`` (the limit
-    where there is one, else the mean); ``put_back`` is the mean with everything set aside put back, NaN
-    where nothing was or it cannot be computed.
+    (NaN limits with one module; with one sensor they are those of its own figure, where it has any);
+    ``exceeding`` is the number of sensors above ``threshold`` (the limit where there is one, else the mean);
+    ``put_back`` is the mean with everything set aside put back, NaN where nothing was or it cannot be
+    computed.
     """
 
     generation: str

@@ -487,17 +487,23 @@ def _has_line(name: str, counts: DesignCounts, entering: tuple[str, ...]) -> boo
     return counts.run_levels >= (3 if lowest else 2)
 
 
+def _many(number: int, thing: str) -> str:
+    plural = f"{thing}es" if thing.endswith("ch") else f"{thing}s"
+    return f"{number} {thing if number == 1 else plural}"
+
+
 def _reason_in(name: str, counts: DesignCounts, freedom: int) -> str:
     count = {
-        "batch": f"{counts.batches} batches of {counts.generations} generation(s)",
-        "module": f"{counts.modules} modules",
-        "mounting": f"{counts.mountings} mountings of {counts.modules} modules",
-        "run": f"{counts.shared_runs} runs of {counts.mountings} mountings",
+        "batch": f"{_many(counts.batches, 'batch')} of {_many(counts.generations, 'generation')}",
+        "module": _many(counts.modules, "module"),
+        "mounting": f"{_many(counts.mountings, 'mounting')} of {_many(counts.modules, 'module')}",
+        "run": f"{_many(counts.shared_runs, 'run')} of {_many(counts.mountings, 'mounting')}",
         "sensor": f"{counts.sensors} sensors, {counts.modules} modules, {counts.position_terms} place terms",
-        "session": f"{counts.sessions} sessions of {counts.sensors} sensors",
-        "repetition": f"{counts.runs} runs of {counts.sessions} sessions of sensors",
-        "sensor_by_level": f"{counts.run_levels} levels of {counts.sensors} sensors, run repeatedly",
-        "sensor_by_direction": f"both branches of {counts.sensors} sensors, run repeatedly",
+        "session": f"{_many(counts.sessions, 'session')} of {_many(counts.sensors, 'sensor')}",
+        "repetition": f"{_many(counts.runs, 'run')} of {_many(counts.sessions, 'session')} of sensors",
+        "sensor_by_level": f"{_many(counts.run_levels, 'level')} of {_many(counts.sensors, 'sensor')}, "
+        "run repeatedly",
+        "sensor_by_direction": f"both branches of {_many(counts.sensors, 'sensor')}, run repeatedly",
         "residual": f"{counts.readings} readings",
     }[name]
     words = f"{count}: {freedom} degree{'s' if freedom != 1 else ''} of freedom"

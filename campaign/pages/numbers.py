@@ -135,10 +135,17 @@ def probability(p: float, *, missing: str = NOT_IDENTIFIABLE) -> str:
 
 
 def percent(fraction: float, digits: int = 2, *, missing: str = NOT_IDENTIFIABLE) -> str:
-    """Return a fraction of one as ``58 %``, to so many significant digits."""
+    """Return a fraction of one as ``58 %``, to so many significant digits.
+
+    Neither none nor all is said of what is only near it: ``< 0.01 %`` and ``> 99.9 %``.
+    """
     if not math.isfinite(fraction):
         return missing
     value = fraction * 100.0
+    if 0 < value < 0.005:
+        return _with_unit("< 0.01", "%")
+    if 99.95 <= value < 100:
+        return _with_unit("> 99.9", "%")
     place = max(_last_place(value, digits), -digits) if abs(value) < 99.95 else 0
     return _with_unit(_at_place(value, place, 0), "%")
 

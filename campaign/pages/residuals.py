@@ -54,10 +54,10 @@ def residuals_page(results: CampaignResults) -> Page | None:
         against_level(rows, drawn, where, reference, banded=banded),
         against_order(rows, drawn, where, reference, banded=banded),
         by_module(rows, drawn, where, reference, banded=banded),
+        variance_by_level(residuals, where, reference),
         normal_quantiles(residuals, where),
         histogram(rows, reference),
         sensor_effect_quantiles(residuals, where),
-        variance_by_level(residuals, where, reference),
     ]
     return Page(
         slug="residuals",
@@ -238,7 +238,7 @@ def against_level(
             _y_axis(reference),
             shapes=[level_line(0, colour=palette.INK)],
         ),
-        data=rows,
+        table="residuals",
         note=_note(banded) + " Every point leads to its trial.",
         height=380,
     )
@@ -272,7 +272,7 @@ def against_order(
         layout=layout(
             axis("Order in the run"), _y_axis(reference), shapes=[level_line(0, colour=palette.INK)]
         ),
-        data=rows[["generation", "module", "sensor", "repetition", "trial", "order", VALUE]],
+        table="residuals",
         note=_note(banded) + " A slope here is drift or creep within the run.",
         height=340,
     )
@@ -335,7 +335,7 @@ def by_module(
         layout=layout(
             _y_axis(reference), where.axis(), shapes=[level_line(0, upright=True, colour=palette.INK)]
         ),
-        data=rows[["generation", "module", "sensor", "repetition", "trial", "order", VALUE]],
+        table="residuals",
         note=_note(banded)
         if banded
         else "The bar is the middle half, the stroke the median; sensors are fanned out.",
@@ -391,7 +391,7 @@ def normal_quantiles(residuals: Residuals, where: SensorAxis) -> Figure | None:
         alternative="Standardised residuals against normal quantiles with the line of equality dotted.",
         traces=tuple(traces),
         layout=layout(axis("Normal quantile"), axis("Standardised residual")),
-        data=table,
+        data=table.drop(columns=["trial", "order"], errors="ignore"),
         note="On the dotted line the residuals are normal. Ends that turn away from it are heavy tails: "
         "intervals of "
         "runs and readings then say too little.",
@@ -483,10 +483,11 @@ def sensor_effect_quantiles(residuals: Residuals, where: SensorAxis) -> Figure |
             style=where.style(where.generations[0]),
         )
     )
-    verdict = "bend away from a normal sample" if residuals.bends else "follow a normal sample"
+    verdict = "bend away from" if residuals.bends else "show no departure from"
+    place = term.replace("at mid", "at mid range")
     return Figure(
         name="sensor-effects",
-        caption=f"The effects of sensors on the {term} {verdict}.",
+        caption=f"The effects of sensors on the {place} {verdict} a normal sample.",
         alternative="Effects of sensors against normal quantiles with the line of a normal sample dotted.",
         traces=tuple(traces),
         layout=layout(axis("Normal quantile"), axis(f"Effect on the {term}, standardised")),

@@ -33,6 +33,7 @@ _EXPORTED = (
     *("session", "repetition", "trial", "order", "direction", "nominal_level", "x", "signal", "unit"),
     *("standard_error", "settled", "used", "fitted", "residual", "studentised"),
 )
+_DEPARTURES = ("session", "repetition", "order", "direction", "x", "fitted", "residual")
 
 
 def sensor_figures_of(parts: SensorParts) -> list[Figure]:
@@ -144,7 +145,7 @@ def departure_figure(parts: SensorParts) -> Figure:
         "run.",
         traces=tuple(traces),
         layout=_departure_layout(reference, words),
-        data=parts.frame[[c for c in _EXPORTED if c in parts.frame]],
+        data=parts.frame[[c for c in _DEPARTURES if c in parts.frame]],
         note="Each path is one run in the order of its readings: a gap between its way up and down is its "
         "loop, a "
         "shifted path is the run’s own zero.",

@@ -10,7 +10,7 @@ from __future__ import annotations
 import html
 import math
 import re
-from collections.abc import Callable, Iterable, Sequence
+from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -185,7 +185,27 @@ def _traces(figure: Figure, key: str, panel: Panel) -> str:
         for t in figure.traces
         if f"{axis_of(t, 'x')}|{axis_of(t, 'y')}" == key and t.get("visible", True) is True
     ]
-    return "".join(_bar_trace(t, panel) if t["type"] == "bar" else _scatter_trace(t, panel) for t in own)
+    drawn = (_bar_trace(t, panel) if t["type"] == "bar" else _scatter_trace(t, panel) for t in own)
+    return "".join(_joined(drawn))
+
+
+_STROKE = re.compile(r'<path d="([^"]*)"( fill="none" stroke=[^>]*)/>')
+
+
+def _joined(drawn: Iterable[str]) -> Iterator[str]:
+    """Join neighbouring traces that are one stroked path each and look alike: the picture stays the same."""
+    strokes, looks = "", ""
+    for content in drawn:
+        stroke = _STROKE.fullmatch(content)
+        if strokes and (stroke is None or stroke[2] != looks):
+            yield f'<path d="{strokes}"{looks}/>'
+            strokes = ""
+        if stroke is None:
+            yield content
+        else:
+            strokes, looks = strokes + stroke[1], stroke[2]
+    if strokes:
+        yield f'<path d="{strokes}"{looks}/>'
 
 
 def _scatter_trace(trace: Trace, panel: Panel) -> str:

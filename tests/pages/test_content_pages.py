@@ -145,7 +145,10 @@ def test_findings_say_the_expanded_uncertainties_of_the_effort_table(usual):
         assert isinstance(fact, EnoughFinding)
         table = results.calibration_effort.table
         own = table[(table["generation"] == fact.generation) & (table["effort"] == "sensor")]
-        shown = numbers.significant(float(own["strain_expanded"].iloc[0]) * 100, 3, "%")
+        row = own.iloc[0]
+        expanded = 100 * float(row["strain_expanded"])
+        low, high = (expanded * row[k] / row["strain_sd_predicted"] for k in ("low", "high"))
+        shown = numbers.interval(expanded, low, high, "%")
         assert spaced(f"±{shown}") in text
 
 

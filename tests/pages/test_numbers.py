@@ -119,3 +119,9 @@ def test_columns_of_numbers_align_by_their_points() -> None:
     padded = numbers.aligned(["1.25", "12", "−3.5", "not identifiable from this design"])
     assert padded[:3] == ["1.25", "12\u2008\u2007\u2007", "−3.5\u2007"]
     assert padded[3] == "not identifiable from this design"
+
+
+def test_nearly_none_and_nearly_all_are_not_none_and_all() -> None:
+    assert numbers.percent(1e-7) == "< 0.01\u202f%"
+    assert numbers.percent(0.99996) == "> 99.9\u202f%"
+    assert numbers.percent(1.0) == "100\u202f%"
