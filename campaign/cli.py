@@ -36,6 +36,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
         0 done, 1 something was set aside and ``--fail-on-set-aside`` was given, 2 nothing written.
     """
     _show_every_character()
+    _keep_algebra_on_one_thread()
     options = _parser().parse_args(arguments)
     try:
         status: int = options.run(options)
@@ -146,6 +147,16 @@ def _say_stops(stops: CampaignStops) -> None:
 
 def _width() -> int:
     return min(max(shutil.get_terminal_size((100, 24)).columns, 60), 110)
+
+
+def _keep_algebra_on_one_thread() -> None:
+    """Ask the algebra libraries for one thread, unless the user asked for another number.
+
+    The matrices here are small: on a busy machine threads that wait for each other cost several times the work.
+    It must be said before numpy is imported.
+    """
+    for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"):
+        os.environ.setdefault(name, "1")
 
 
 def _show_every_character() -> None:
