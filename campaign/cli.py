@@ -152,7 +152,8 @@ def _width() -> int:
 def _keep_algebra_on_one_thread() -> None:
     """Ask the algebra libraries for one thread, unless the user asked for another number.
 
-    The matrices here are small: on a busy machine threads that wait for each other cost several times the work.
+    The matrices here are small: on a busy machine, threads that wait for each other cost several times the
+    work.
     It must be said before numpy is imported.
     """
     for name in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS"):

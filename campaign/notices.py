@@ -11,7 +11,7 @@ from dataclasses import dataclass, replace
 from typing import Literal
 
 Weight = Literal["stops", "set aside", "noted"]
-"""How heavy a notice is: the campaign cannot be read; this file, column or sensor is not used; a reader should know."""
+"""How heavy: the campaign cannot be read; this file, column or sensor is not used; a reader should know."""
 
 WEIGHTS: tuple[Weight, ...] = ("stops", "set aside", "noted")
 
@@ -182,14 +182,14 @@ NOTICE_CODES: dict[str, str] = {
     "too-few-readings": "fewer than two usable plateaus or rows: no readings are taken",
     "missing-values": "rows without a reference or a signal are left out, counted",
     "plateau-without-signal": "a plateau holds no signal at all and gives no reading",
-    "not-settled": "the signal still moves over the averaged part of a plateau; the reading is kept and marked",
+    "not-settled": "the signal still moves over the averaged part of a plateau; the reading is kept, marked",
     "no-line": "a sensor has readings at too few levels in every run: no line is fitted",
     "outlying-reading": "a reading lies further from its sensor's line than chance allows; it is kept",
     "reference-not-common": "a trial does not have the reference quantity that the campaign is analysed in",
     # Bytes, encodings and line ends of one file
     "bom": "the file starts with a byte order mark; the mark is taken off, the first name is kept whole",
     "utf-16": "the file is UTF-16; it is decoded",
-    "encoding": "the file is not UTF-8; it is decoded by the named encoding, and the first such character is shown",
+    "encoding": "the file is not UTF-8; it is decoded by the named encoding; the first such character shown",
     "crlf": "lines end in carriage return and line feed throughout",
     "cr": "lines end in carriage returns alone throughout",
     "mixed-eol": "the line end changes within the file",
@@ -209,7 +209,7 @@ NOTICE_CODES: dict[str, str] = {
     "spacer-column": "a column with neither name nor values",
     "blank-line": "a line without any value is passed over",
     "comment-line": "a comment stands between the rows; it is passed over and shown",
-    "repeated-header": "the header occurs again between the rows (the logger was restarted); the line is passed over",
+    "repeated-header": "the header occurs again between the rows (a restarted logger); it is passed over",
     "footer": "lines of text after the last row; they are passed over and shown",
     "ragged": "a row with too many or too few fields is dropped: nothing says which field is whose",
     "truncated": "the last line is cut short and is dropped",
@@ -223,7 +223,7 @@ NOTICE_CODES: dict[str, str] = {
     "several-clocks": "more than one time column; the first is used",
     "clock-unit": "times under a header in milliseconds look like seconds since 1970",
     "unit": "a unit is missing, not an accepted symbol, or of the wrong kind for the quantity",
-    "unit-overruled": "the description states another unit than the header or units row; the description holds",
+    "unit-overruled": "the description states another unit than the header or units row, and holds",
     "converted": "columns are converted to canonical units",
     "mixed-identity": "a column that names module, sensor or run does not hold one value throughout",
     # Values
@@ -238,4 +238,4 @@ NOTICE_CODES: dict[str, str] = {
     "duplicate-row": "a row repeats the one before in every value; it is kept",
     "stuck": "the signal repeats to the last digit while the reference moves",
 }
-"""Meaning of every notice code, one plain line each; the manual and the Recordings page are written from it."""
+"""Meaning of every notice code, one plain line each; manual and Recordings page are written from it."""

@@ -53,7 +53,8 @@ def test_arsenic_one_reading_and_a_mean_response():
 
 
 def test_arsenic_three_readings_pool_their_scatter():
-    # x0 + [(x0 − x̄) g ± (t s/b)√((x0 − x̄)²/Sxx + (1 − g)(1/m + 1/n))]/(1 − g), worked out beside this collection
+    # x0 + [(x0 − x̄) g ± (t s/b)√((x0 − x̄)²/Sxx + (1 − g)(1/m + 1/n))]/(1 − g), worked out
+    # beside this collection
     line = line_of("arsenic.csv", "actual", "measured")
     found = fieller_interval(line, np.array([3.17, 3.09, 3.16]), confidence=0.90)
     assert [found.estimate, found.low, found.high] == pytest.approx(
@@ -61,7 +62,7 @@ def test_arsenic_three_readings_pool_their_scatter():
     )
 
 
-# lme4's fit of HD^(3/2) ~ volume with uncorrelated random intercept and slope per subject, from the bladder data
+# lme4's fit of HD^(3/2) ~ volume, uncorrelated random intercept and slope per subject, from the bladder data
 BLADDER = ReadingModel(
     -53.8316338444148,
     69.0949048693515,
@@ -94,7 +95,7 @@ def test_nist_calibration_line_uncertainties():
 
 
 def test_pontius_load_from_a_deflection():
-    # the straight line is known to lack fit (e-Handbook 4.6.1); the interval must hold its own formula's roots
+    # the straight line is known to lack fit (e-Handbook 4.6.1); the interval must hold its formula's roots
     line = line_of("nist_pontius.csv", "load", "deflection")
     found = fieller_interval(line, np.array([1.239722]))
     t = t_quantile(0.975, line.degrees_of_freedom)
@@ -134,7 +135,7 @@ def test_more_readings_in_one_run_only_shrink_the_noise():
 
 
 def test_fieller_interval_for_a_new_run_covers():
-    """500 campaigns of 12 sensors with 3 runs each; one reading, and a mean of ten, of a new run of one sensor."""
+    """500 campaigns of 12 sensors with 3 runs; one reading, and a mean of ten, of a new run of one sensor."""
     rng = np.random.default_rng(20261201)
     hits = np.array([_campaign_covers(rng) for _ in range(500)])
     assert 0.92 <= hits[:, 0].mean() <= 0.975
