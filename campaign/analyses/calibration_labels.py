@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 
 import numpy as np
@@ -180,7 +181,7 @@ def record_conditions(used: UsedReadings, line: BranchLine, reference: Reference
     approach = {"rising": "from below only", "falling": "from above only", "both": "from either side"}
     mountings = len(set(used.table["session"].to_numpy()[line.rows]))
     conditions = {
-        "range": f"{x.min():.4g} to {x.max():.4g} {reference.shown_unit}",
+        "range": _span(x, reference.shown_unit),
         "approach": approach[line.branch],
         "runs": f"{line.runs} in {mountings} mounting{'s' if mountings > 1 else ''}",
         "rate": "quasi-static, held at each level",
@@ -196,9 +197,12 @@ def record_conditions(used: UsedReadings, line: BranchLine, reference: Reference
 
 
 def _span(values: FloatArray, unit: str) -> str:
-    """Range of the known values, or 'not recorded'."""
+    """Range of the known values, each end to a hundredth of its width, or 'not recorded'."""
     known = values[np.isfinite(values)]
     if len(known) == 0:
         return "not recorded"
-    low, high = f"{known.min():.4g}", f"{known.max():.4g}"
-    return f"{low} {unit}" if low == high else f"{low} to {high} {unit}"
+    width = float(np.ptp(known))
+    places = 2 - math.floor(math.log10(width)) if width > 0 else 6
+    low, high = (f"{round(float(end), places) + 0.0:.6g}" for end in (known.min(), known.max()))
+    shown = low if low == high else f"{low} to {high}"
+    return f"{shown} {unit}".replace("-", "\N{MINUS SIGN}")

@@ -138,7 +138,7 @@ def _sensor_page(
             "ordinary": parts.ordinary,
         },
         figures=(*sensor_figures_of(parts), *plots),
-        tables=(*_runs_table(parts), *_limits_table(parts)),
+        tables=(*_limits_table(parts), *_runs_table(parts)),
         data={"calculator": calculator_data(records)} if records else {},
         description=f"Readings, line, figures of merit and trials of sensor {parts.sensor} of module "
         f"{parts.module}.",

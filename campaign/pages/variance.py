@@ -58,6 +58,12 @@ _WORDS: Mapping[str, str] = {
 TERM_WORDS: Mapping[str, str] = {"strain at mid": "signal at mid range, as strain"}
 """What terms of effects are called where their name does not say it."""
 
+TABLES = (
+    *("components_in_strain", "precision", "identifiability", "variance_components", "component_tests"),
+    *("fixed_effects", "fit_certificates"),
+)
+"""Tables in the order in which the page has them, and so their numbers."""
+
 TERMS = ("strain at mid", "slope", "intercept")
 """Terms of effects, the most telling first."""
 
@@ -105,7 +111,7 @@ def variance_page(results: CampaignResults) -> Page | None:
             "generations": generations_of(variance.variance_in_strain),
         },
         figures=tuple(figure for figure in figures if figure is not None),
-        tables=tuple(_tables(variance)),
+        tables=tuple(sorted(_tables(variance), key=lambda table: TABLES.index(table.name))),
         description="How much of the spread lies between batches, modules, sensors, mountings and runs.",
     )
 

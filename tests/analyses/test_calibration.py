@@ -364,7 +364,7 @@ def test_records_carry_conditions_files_and_hashes():
     assert record.date == "2026-03-04"
     assert record.conditions["runs"] == "4 in 2 mountings"
     assert record.conditions["approach"] == "from below only"
-    assert record.conditions["range"].endswith("40 %")
+    assert record.conditions["range"] == "0 to 40 %"
     assert record.signal_low < record.signal_high
 
 
