@@ -4,8 +4,9 @@ from __future__ import annotations
 
 import sys
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
+from typing import TypeVar
 
 import pandas as pd
 
@@ -25,10 +26,18 @@ from campaign.recordings.inspection import inspection_lines, print_lines
 from campaign.recordings.intake import Intake, Progress, run_intake
 from campaign.recordings.recording import Trial
 from campaign.recordings.sensor_share import TrialKey
+from campaign.trials.features import TrialFeatures
 from campaign.trials.readings import Readings, collect_readings
 from campaign.trials.staircase import StaircaseFeatures, readings_of_staircase
 
 DONE, SET_ASIDE = 0, 1
+
+Features = TypeVar("Features", bound=TrialFeatures)
+
+REDUCED_BY: dict[str, Callable[[Trial], TrialFeatures]] = {
+    "staircase": readings_of_staircase,
+}
+"""What a trial is reduced to while its recording is in memory, by kind: the kinds that are analysed."""
 
 
 @dataclass(frozen=True)
@@ -43,11 +52,18 @@ class CampaignRead:
         Plateaus of the staircases; those that the registers set aside are there and marked as not used.
     readings_with_put_back
         The same with those that the registers set aside marked as used; ``None`` where there are none.
+    features
+        What the used trials of every other kind were reduced to, by trial in reading order.
     """
 
     intake: Intake
     readings: Readings
     readings_with_put_back: Readings | None
+    features: dict[TrialKey, TrialFeatures] = field(default_factory=dict)
+
+    def of_type(self, kept: type[Features]) -> dict[TrialKey, Features]:
+        """Return the features of one type, by trial in reading order."""
+        return {key: found for key, found in self.features.items() if isinstance(found, kept)}
 
 
 def report(folder: Path, into: Path | None, fail_on_set_aside: bool, progress: Progress | None = None) -> int:
@@ -106,17 +122,23 @@ def read_campaign(folder: Path, output: Path | None = None, progress: Progress |
         Where the folder cannot be read or no trial can be used.
     """
     intake, features = run_intake(folder, reduce_trial, output, progress, keep_put_back=True)
-    staircases = {key: found for key, found in features.items() if found is not None}
-    notices = [notice for key in staircases if key in intake.used for notice in staircases[key].notices]
+    staircases = {key: found for key, found in features.items() if isinstance(found, StaircaseFeatures)}
+    others = {
+        key: found
+        for key, found in features.items()
+        if found is not None and key in intake.used and key not in staircases
+    }
+    notices = [n for k, found in features.items() if found and k in intake.used for n in found.notices]
     sensors_aside = sensors_set_aside(intake)
     readings = _readings(intake, staircases, lambda key: key in intake.used, sensors_aside)
     put_back = _readings(intake, staircases, lambda _: True) if intake.put_back & staircases.keys() else None
-    return CampaignRead(with_notices(intake, [*notices, *readings.notices]), readings, put_back)
+    return CampaignRead(with_notices(intake, [*notices, *readings.notices]), readings, put_back, others)
 
 
-def reduce_trial(trial: Trial) -> StaircaseFeatures | None:
+def reduce_trial(trial: Trial) -> TrialFeatures | None:
     """Return what is kept of a trial; ``None`` for kinds that are accounted for but not analysed yet."""
-    return readings_of_staircase(trial) if trial.identity.kind == "staircase" else None
+    reduced = REDUCED_BY.get(trial.identity.kind)
+    return reduced(trial) if reduced is not None else None
 
 
 def sensors_set_aside(intake: Intake) -> frozenset[tuple[str, str]]:
@@ -160,9 +182,9 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         residuals = analyse_residuals(calibration, variance)
         effort = analyse_calibration_effort(calibration, variance, description)
         tell("analyses", 3, 4)
-    limits = judge_limits(description, calibration)
+    limits = judge_limits(description, calibration, further=[])
     findings = collect_findings(
-        description, intake, calibration, variance, residuals, effort, limits, put_back
+        description, intake, calibration, variance, residuals, effort, limits, put_back, further=[]
     )
     analyses = (calibration, variance, residuals, effort)
     notices = [notice for analysis in analyses if analysis is not None for notice in analysis.notices]

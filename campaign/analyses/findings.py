@@ -168,8 +168,18 @@ class AccuracyFinding:
 
 
 FindingKind = Literal[
-    "enough", "accuracy", "spread", "linearity", "bend", "repeatability", "hysteresis", "zero_return", "model"
+    "enough",
+    "accuracy",
+    "spread",
+    "linearity",
+    "bend",
+    "repeatability",
+    "hysteresis",
+    "zero_return",
+    "loops",
+    "model",
 ]
+"""What a finding is about; ``site_templates/findings/KIND.html`` has its words."""
 
 
 @dataclass(frozen=True)
@@ -211,6 +221,7 @@ def collect_findings(
     effort: CalibrationEffort | None,
     limits: Limits,
     put_back: Calibration | None = None,
+    further: Iterable[Finding] = (),
 ) -> Findings:
     """Choose what page 0 says.
 
@@ -224,6 +235,8 @@ def collect_findings(
         Verdicts.
     put_back
         The calibration with every sensor that was set aside put back; ``None`` where none was or could be.
+    further
+        Findings of the other kinds of trial, most important first.
 
     Returns
     -------
@@ -240,18 +253,21 @@ def collect_findings(
         findings += _spread_findings(variance)
     if calibration is not None:
         findings += _line_findings(calibration, limits, put_back)
+    findings += further
     findings += _model_findings(effort, residuals)
     return Findings(scope, tuple(findings))
 
 
-def _verdict(limits: Limits, name: str) -> str:
+def verdict_of_limit(limits: Limits, name: str) -> str:
+    """Return the verdict of a limit for new sensors over all generations, empty where it was not judged."""
     verdicts = set(limits.of_new_sensors().loc[lambda t: t["limit"] == name, "verdict"])
     if not verdicts:
         return ""
     return "not met" if "not met" in verdicts else "met" if verdicts == {"met"} else "not decided"
 
 
-def _limit_value(limits: Limits, name: str) -> float:
+def limit_value(limits: Limits, name: str) -> float:
+    """Return the value of a limit that was judged, NaN where it was not."""
     values = limits.table.loc[limits.table["limit"] == name, "value"]
     return float(values.iloc[0]) if len(values) else math.nan
 
@@ -313,7 +329,7 @@ def _mean_of(figures: pd.DataFrame | None, generation: str) -> float:
 
 
 def _effort_findings(effort: CalibrationEffort, limits: Limits) -> list[Finding]:
-    limit = _limit_value(limits, "strain_error")
+    limit = limit_value(limits, "strain_error")
     facts = tuple(
         fact
         for generation, rows in effort.table.groupby("generation", sort=True)
@@ -359,7 +375,7 @@ def _effort(row: pd.Series) -> Effort:
 def _accuracy_findings(
     calibration: Calibration, limits: Limits, put_back: Calibration | None
 ) -> list[Finding]:
-    limit = _limit_value(limits, "strain_error")
+    limit = limit_value(limits, "strain_error")
     parts = [
         sum_up(
             _record_figures(calibration, n), limit, None if put_back is None else _record_figures(put_back, n)
@@ -367,7 +383,11 @@ def _accuracy_findings(
         for n in (1, AVERAGED)
     ]
     facts = tuple(AccuracyFinding(one, several) for one, several in zip(*parts, strict=True))
-    return [Finding("accuracy", facts, _verdict(limits, "strain_error"), "strain_error")] if facts else []
+    return (
+        [Finding("accuracy", facts, verdict_of_limit(limits, "strain_error"), "strain_error")]
+        if facts
+        else []
+    )
 
 
 def _record_figures(calibration: Calibration, readings: int) -> pd.DataFrame:
@@ -421,10 +441,10 @@ def _line_findings(calibration: Calibration, limits: Limits, put_back: Calibrati
     ):
         facts = _column_facts(calibration, column, limits, kind, put_back)
         if facts:
-            findings.append(Finding(kind, facts, _verdict(limits, kind), kind))  # type: ignore[arg-type]
+            findings.append(Finding(kind, facts, verdict_of_limit(limits, kind), kind))  # type: ignore[arg-type]
     loops = _loop_facts(calibration, limits, put_back)
     if loops:
-        findings.append(Finding("hysteresis", loops, _verdict(limits, "hysteresis"), "hysteresis"))
+        findings.append(Finding("hysteresis", loops, verdict_of_limit(limits, "hysteresis"), "hysteresis"))
     bends = _bend_facts(calibration)
     if bends:
         findings.append(Finding("bend", bends))
@@ -439,7 +459,7 @@ def _column_facts(
 ) -> tuple[SensorFigure, ...]:
     return sum_up(
         _line_values(calibration, column),
-        _limit_value(limits, name),
+        limit_value(limits, name),
         None if put_back is None else _line_values(put_back, column),
     )
 

@@ -36,6 +36,8 @@ class CampaignResults:
         Limits judged, and the facts of page 0; always there.
     notices
         All notices of reading and of analyses, sorted.
+    hysteresis, drift, pressure, influences
+        Loops and endurance, holds, pressure, and the other influences; ``None`` where not measured.
     """
 
     description: Description
@@ -48,3 +50,7 @@ class CampaignResults:
     limits: Limits
     findings: Findings
     notices: tuple[Notice, ...]
+    hysteresis: object | None = None
+    drift: object | None = None
+    pressure: object | None = None
+    influences: object | None = None
