@@ -12,7 +12,9 @@ import pandas as pd
 
 from campaign.analyses.calibration import Calibration, analyse_calibration
 from campaign.analyses.calibration_effort import analyse_calibration_effort
+from campaign.analyses.endurance import analyse_endurance
 from campaign.analyses.findings import collect_findings
+from campaign.analyses.hysteresis import analyse_hysteresis
 from campaign.analyses.limits import judge_limits
 from campaign.analyses.residuals import analyse_residuals
 from campaign.analyses.results import CampaignResults
@@ -26,6 +28,8 @@ from campaign.recordings.inspection import inspection_lines, print_lines
 from campaign.recordings.intake import Intake, Progress, run_intake
 from campaign.recordings.recording import Trial
 from campaign.recordings.sensor_share import TrialKey
+from campaign.trials.cyclic import CyclicFeatures, features_of_cyclic
+from campaign.trials.endurance import EnduranceFeatures, features_of_endurance
 from campaign.trials.features import TrialFeatures
 from campaign.trials.readings import Readings, collect_readings
 from campaign.trials.staircase import StaircaseFeatures, readings_of_staircase
@@ -36,6 +40,8 @@ Features = TypeVar("Features", bound=TrialFeatures)
 
 REDUCED_BY: dict[str, Callable[[Trial], TrialFeatures]] = {
     "staircase": readings_of_staircase,
+    "cyclic": features_of_cyclic,
+    "endurance": features_of_endurance,
 }
 """What a trial is reduced to while its recording is in memory, by kind: the kinds that are analysed."""
 
@@ -182,11 +188,14 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         residuals = analyse_residuals(calibration, variance)
         effort = analyse_calibration_effort(calibration, variance, description)
         tell("analyses", 3, 4)
-    limits = judge_limits(description, calibration, further=[])
+    hysteresis = analyse_hysteresis(read.of_type(CyclicFeatures), calibration)
+    endurance = analyse_endurance(read.of_type(EnduranceFeatures).values())
+    others = [found for found in (hysteresis,) if found is not None]
+    limits = judge_limits(description, calibration, further=[found.figures for found in others])
     findings = collect_findings(
         description, intake, calibration, variance, residuals, effort, limits, put_back, further=[]
     )
-    analyses = (calibration, variance, residuals, effort)
+    analyses = (calibration, variance, residuals, effort, *others)
     notices = [notice for analysis in analyses if analysis is not None for notice in analysis.notices]
     tell("analyses", 4, 4)
     return CampaignResults(
@@ -200,6 +209,8 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         limits=limits,
         findings=findings,
         notices=sort_notices([*intake.notices, *notices]),
+        hysteresis=hysteresis,
+        endurance=endurance,
     )
 
 

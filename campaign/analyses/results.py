@@ -8,7 +8,9 @@ from typing import TYPE_CHECKING
 if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration
     from campaign.analyses.calibration_effort import CalibrationEffort
+    from campaign.analyses.endurance import Endurance
     from campaign.analyses.findings import Findings
+    from campaign.analyses.hysteresis import Hysteresis
     from campaign.analyses.limits import Limits
     from campaign.analyses.residuals import Residuals
     from campaign.analyses.variance import Variance
@@ -36,8 +38,8 @@ class CampaignResults:
         Limits judged, and the facts of page 0; always there.
     notices
         All notices of reading and of analyses, sorted.
-    hysteresis, drift, pressure, influences
-        Loops and endurance, holds, pressure, and the other influences; ``None`` where not measured.
+    hysteresis, endurance, drift, pressure, influences
+        Loops, thousands of cycles, holds, pressure, other influences; ``None`` where not measured.
     """
 
     description: Description
@@ -50,7 +52,8 @@ class CampaignResults:
     limits: Limits
     findings: Findings
     notices: tuple[Notice, ...]
-    hysteresis: object | None = None
+    hysteresis: Hysteresis | None = None
+    endurance: Endurance | None = None
     drift: object | None = None
     pressure: object | None = None
     influences: object | None = None

@@ -189,13 +189,15 @@ def find_reversals(values: FloatArray, threshold: float) -> IntArray:
 
 
 def _extremes(values: FloatArray) -> IntArray:
-    """First sample, last sample and every local extreme (the first sample of a level stretch)."""
+    """First sample, last sample and every local extreme (the middle sample of a level stretch)."""
     if len(values) == 0:
         return np.empty(0, dtype=np.int64)
-    moved = np.flatnonzero(np.concatenate([[True], np.diff(values) != 0]))
-    direction = np.sign(np.diff(values[moved]))
+    begins = np.flatnonzero(np.concatenate([[True], np.diff(values) != 0]))
+    ends = np.append(begins[1:], len(values)) - 1
+    direction = np.sign(np.diff(values[begins]))
     turned = np.flatnonzero(direction[1:] != direction[:-1]) + 1
-    return np.unique(np.concatenate([moved[:1], moved[turned], moved[-1:]]))
+    middle = (begins + ends) // 2
+    return np.unique(np.concatenate([begins[:1], middle[turned], ends[-1:]]))
 
 
 def _smallest_moves(moves: FloatArray, threshold: float) -> BoolArray:
