@@ -263,17 +263,20 @@ def _turns(values: FloatArray, least: float) -> list[int]:
 
 def _points_of(trial: Trial, values: FloatArray, rows: IntArray, legs: IntArray) -> pd.DataFrame:
     """The points of one sweep, in the order taken."""
+    signs = _leg_signs(values[rows], legs)
     if trial.time_s is None or len(rows) <= TABLE_ROWS:
         starts = np.arange(len(rows))
-        return _averaged(trial, values, rows, starts, starts + 1, legs)
+        return _averaged(trial, values, rows, starts, starts + 1, legs, signs)
     starts, stops = find_plateaus(values[rows])
     if len(starts) >= 3 and float(np.sum(stops - starts)) >= 0.5 * len(rows):
         settled = starts + (stops - starts) // 3
-        return _averaged(trial, values, rows, settled, stops, legs)
-    return _stepped(trial, values, rows, legs)
+        return _averaged(trial, values, rows, settled, stops, legs, signs)
+    return _stepped(trial, values, rows, legs, signs)
 
 
-def _stepped(trial: Trial, values: FloatArray, rows: IntArray, legs: IntArray) -> pd.DataFrame:
+def _stepped(
+    trial: Trial, values: FloatArray, rows: IntArray, legs: IntArray, signs: IntArray
+) -> pd.DataFrame:
     """Points of a sweep that never rests: means of equal steps of the influence on every leg."""
     parts = []
     for leg in np.unique(legs):
@@ -285,7 +288,7 @@ def _stepped(trial: Trial, values: FloatArray, rows: IntArray, legs: IntArray) -
         order = np.argsort(step, kind="stable")
         edges = np.flatnonzero(np.diff(step[order])) + 1
         starts, stops = np.concatenate([[0], edges]), np.concatenate([edges, [len(own)]])
-        parts.append(_averaged(trial, values, rows[own[order]], starts, stops, legs[own[order]]))
+        parts.append(_averaged(trial, values, rows[own[order]], starts, stops, legs[own[order]], signs))
     points = pd.concat(parts, ignore_index=True) if parts else _table([])
     keys = ["leg", "time_s"] if points["time_s"].notna().all() else ["leg"]
     in_order: pd.DataFrame = points.sort_values(keys, kind="stable").reset_index(drop=True)
@@ -293,7 +296,13 @@ def _stepped(trial: Trial, values: FloatArray, rows: IntArray, legs: IntArray) -
 
 
 def _averaged(
-    trial: Trial, values: FloatArray, rows: IntArray, starts: IntArray, stops: IntArray, legs: IntArray
+    trial: Trial,
+    values: FloatArray,
+    rows: IntArray,
+    starts: IntArray,
+    stops: IntArray,
+    legs: IntArray,
+    signs: IntArray,
 ) -> pd.DataFrame:
     """Means over stretches of *rows*, with branch and leg."""
     places, owner = expand(np.asarray(starts, dtype=np.int64), np.asarray(stops, dtype=np.int64))
@@ -309,14 +318,13 @@ def _averaged(
     seconds = mean(trial.time_s if timed else None)
     begun = float(trial.time_s[0]) if timed and trial.time_s is not None else 0.0
     leg = legs[places[np.cumsum(counts) - 1]] if len(places) else np.zeros(0, dtype=np.int64)
-    means = mean(values)
     return pd.DataFrame(
         {
             "sweep": 0,
             "leg": leg,
-            "influence": means,
+            "influence": mean(values),
             "signal": mean(trial.signal),
-            "branch": _branches(means, leg),
+            "branch": signs[leg],
             "time_s": seconds - begun,
             "dwell_s": _dwell(trial, chosen, owner, len(starts)) if timed else np.nan,
             "count": counts,
@@ -336,18 +344,15 @@ def _dwell(trial: Trial, chosen: IntArray, owner: IntArray, points: int) -> Floa
     return np.asarray(last - first)
 
 
-def _branches(means: FloatArray, legs: IntArray) -> IntArray:
-    """1 on legs that rise, −1 on legs that fall."""
-    signs = np.zeros(len(means), dtype=np.int64)
+def _leg_signs(values: FloatArray, legs: IntArray) -> IntArray:
+    """1 for every leg that rises over its rows, −1 for one that falls; shape (legs,)."""
+    signs = np.zeros(int(legs.max(initial=0)) + 1, dtype=np.int64)
     for leg in np.unique(legs):
-        own = np.flatnonzero(legs == leg)
+        own = values[np.flatnonzero(legs == leg)]
         if len(own) > 1:
-            middle = (len(own) - 1) / 2.0
-            trend = float(np.dot(np.arange(len(own)) - middle, means[own]))
-            signs[own] = int(np.sign(trend))
+            signs[leg] = int(np.sign(np.dot(np.arange(len(own)) - (len(own) - 1) / 2.0, own)))
         else:
-            before = means[own[0] - 1] if own[0] else means[min(1, len(means) - 1)]
-            signs[own] = int(np.sign(means[own[0]] - before))
+            signs[leg] = -signs[leg - 1] if leg else 0
     return signs
 
 
