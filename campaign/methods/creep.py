@@ -1,9 +1,10 @@
-"""Forms of slow change at a kept load or length, fitted to means over stretches of time and compared honestly.
+"""Forms of slow change at a kept load or length, fitted to means over stretches of time and compared.
 
     linear                 c₀ + c₁ t
     logarithmic            c₀ + c₁ ln(1 + t/τ)
-    power                  c₀ + c₁ tⁿ                     W. N. Findley, J. S. Lai, K. Onaran, Creep and Relaxation
-                                                          of Nonlinear Viscoelastic Materials (1976), ch. 8
+    power                  c₀ + c₁ tⁿ                     W. N. Findley, J. S. Lai, K. Onaran, Creep and
+                                                          Relaxation of Nonlinear Viscoelastic Materials
+                                                          (1976), ch. 8
     stretched exponential  c₀ + c₁ (1 − exp(−(t/τ)^β))    R. Kohlrausch, Annalen der Physik 167 (1854) 56–82
     Prony 1, 2, 3          c₀ + Σ cᵢ (1 − exp(−t/τᵢ))     a series of relaxation times
 
@@ -13,20 +14,21 @@ forms, and the forms compared by AICc (C. M. Hurvich and C.-L. Tsai, Biometrika 
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
-from scipy import stats
+from scipy import interpolate, stats
 
-from campaign.methods.block_noise import BlockNoise, Stretches, find_block_noise, whitening
+from campaign.methods.block_noise import BlockNoise, Stretches, find_block_noise
+from campaign.methods.drift_slope import lag_one
 from campaign.methods.separable_fit import (
     SeparableFit,
     SeparableModel,
     Whitening,
-    as_they_are,
     fit_separable,
+    inverse_of_squares,
+    solved,
 )
 
 FloatArray = npt.NDArray[np.float64]
@@ -34,14 +36,49 @@ FloatArray = npt.NDArray[np.float64]
 WITHIN_UNITS = 2.0
 """Forms whose AICc is within this of the least are all shown (Burnham and Anderson, 2002, 2.6)."""
 
-EXTRAPOLATION_LIMIT = 3.0
-"""No value is given beyond this multiple of the time that the record covers."""
+EXTRAPOLATION_LIMIT = 10.0
+"""No value is given beyond this multiple of the time that the record covers: one decade."""
+
+LONGEST_TIME = 3.0
+"""No time constant is looked for beyond this multiple of the time that the record covers."""
 
 FEWEST_STRETCHES = 12
 """A form is fitted only where there are this many means, and at least three a parameter."""
 
 NEVER_SETTLES = ("linear", "logarithmic", "power")
 """Forms without a final value: they have a change in the next decade, not a settling time."""
+
+
+@dataclass(frozen=True)
+class ShapeRange:
+    """Where a shape parameter is looked for.
+
+    Attributes
+    ----------
+    steps
+        Values tried first, in equal ratios.
+    low, high
+        Bounds. Of a time they are multiples of the shortest and of the longest time after the ramp; of an
+        exponent they are the bounds themselves.
+    is_time
+        Which of the two.
+    """
+
+    steps: int
+    low: float
+    high: float
+    is_time: bool
+
+    def bounds(self, shortest_s: float, longest_s: float) -> tuple[float, float]:
+        """Return the bounds for a record between two times after the ramp."""
+        if not self.is_time:
+            return self.low, self.high
+        return self.low * shortest_s, self.high * max(longest_s, 4.0 * shortest_s)
+
+    def scan(self, shortest_s: float, longest_s: float) -> FloatArray:
+        """Return the values tried first, (steps,), inside the bounds."""
+        low, high = self.bounds(shortest_s, longest_s)
+        return np.geomspace(low * 1.5, high / 1.5, self.steps)
 
 
 @dataclass(frozen=True)
@@ -56,15 +93,14 @@ class CreepForm:
         Names of the shape parameters in order; times in s.
     model
         The curves.
-    scans, bounds
-        From the shortest and longest time after the ramp (s) to the grids and to the bounds of the shapes.
+    ranges
+        For each shape parameter where it is looked for: relative to the times of the record, or as they are.
     """
 
     name: str
     shape_names: tuple[str, ...]
     model: SeparableModel
-    scans: Callable[[float, float], tuple[FloatArray, ...]]
-    bounds: Callable[[float, float], tuple[list[float], list[float]]]
+    ranges: tuple[ShapeRange, ...]
 
     @property
     def parameters(self) -> int:
@@ -154,7 +190,9 @@ class FittedForm:
     def _variances(self, gradient: FloatArray, times_s: FloatArray) -> FloatArray:
         known = np.isfinite(np.diag(self.fit.covariance))
         covariance = np.where(np.isfinite(self.fit.covariance), self.fit.covariance, 0.0)
-        found = np.einsum("ij,jk,ik->i", gradient[:, known], covariance[np.ix_(known, known)], gradient[:, known])
+        found = np.einsum(
+            "ij,jk,ik->i", gradient[:, known], covariance[np.ix_(known, known)], gradient[:, known]
+        )
         supported = times_s <= EXTRAPOLATION_LIMIT * self.longest_s
         return np.asarray(np.where(supported & known.any(), np.maximum(found, 0.0), np.nan))
 
@@ -170,7 +208,7 @@ class CreepFits:
     noise
         White and slow noise about the curve.
     lag_one
-        Lag-1 autocorrelation of the residuals before whitening, from one mean to the next.
+        Lag-1 autocorrelation of the best form's residuals before whitening, from one mean to the next.
     """
 
     fits: tuple[FittedForm, ...]
@@ -207,14 +245,44 @@ def fit_creep(stretches: Stretches, values: FloatArray) -> CreepFits | None:
     if len(values) < FEWEST_STRETCHES or np.ptp(values) == 0.0:
         return None
     times = middle_times(stretches)
-    forms = [form for form in FORMS if 3 * form.parameters <= len(values)]
-    by_count = weighted_by(np.sqrt(stretches.counts.astype(float)))
-    first = [_fitted(form, times, values, by_count) for form in forms]
-    closest = min(first, key=lambda found: found.aicc)
-    noise = find_block_noise(_jacobian(closest, times), values, stretches)
-    whiten = whitened_by(whitening(noise.covariance(stretches)))
-    fits = sorted((_fitted(form, times, values, whiten) for form in forms), key=lambda found: found.aicc)
-    return CreepFits(tuple(fits), noise, _lag_one(values - closest.curve(times)))
+    noise = find_block_noise(smooth_columns(times), values, stretches)
+    whiten = whitened_by(noise.whitening(stretches))
+    fits = sorted(
+        (_fitted(form, times, values, whiten) for form in FORMS if 3 * form.parameters <= len(values)),
+        key=lambda found: found.aicc,
+    )
+    return CreepFits(tuple(fits), noise, lag_one(values - fits[0].curve(times)))
+
+
+def slope_per_decade(
+    stretches: Stretches, values: FloatArray, noise: BlockNoise, shift_s: float = 0.0
+) -> tuple[float, float, int]:
+    """Return the slope of the means against log₁₀ t, its standard error and degrees of freedom.
+
+    Parameters
+    ----------
+    stretches, values, noise
+        As for :func:`fit_creep`, and the noise that it found.
+    shift_s
+        Added to all times: the ramp's duration takes t = 0 from its end to its beginning.
+
+    Returns
+    -------
+    tuple
+        Generalised least squares; where the means lie further from the line than their noise explains, the
+        error grows by the ratio (R. T. Birge, Physical Review 40 (1932) 207–227). NaN, NaN, 0 for fewer than
+        five means.
+    """
+    if len(values) < 5:
+        return float("nan"), float("nan"), 0
+    whiten = noise.whitening(stretches)
+    columns = np.column_stack([np.ones(len(values)), np.log10(middle_times(stretches) + shift_s)])
+    basis, answer = whiten @ columns, whiten @ values
+    coefficients = solved(basis, answer)
+    freedom = len(values) - 2
+    excess = max(float(np.sum((answer - basis @ coefficients) ** 2)) / freedom, 1.0)
+    error = float(np.sqrt(inverse_of_squares(basis)[1, 1] * excess))
+    return float(coefficients[1]), error, freedom
 
 
 def middle_times(stretches: Stretches) -> FloatArray:
@@ -222,9 +290,16 @@ def middle_times(stretches: Stretches) -> FloatArray:
     return np.asarray((stretches.starts_s + stretches.stops_s) / 2.0)
 
 
-def weighted_by(roots: FloatArray) -> Whitening:
-    """Return the whitening that multiplies every point by the root of its weight, shape (n,)."""
-    return lambda columns: np.asarray((columns.T * roots).T)
+def smooth_columns(times_s: FloatArray) -> FloatArray:
+    """Return cubic splines of ln t with two pieces a decade, shape (n, pieces + 3): any form runs along them.
+
+    *times_s* has shape (n,), rising and above 0; there are at most a third as many columns as times.
+    """
+    logarithms = np.log10(times_s)
+    pieces = int(np.clip(np.round(2.0 * np.ptp(logarithms)), 1, max(len(times_s) // 3 - 3, 1)))
+    knots = np.quantile(logarithms, np.linspace(0.0, 1.0, pieces + 1))
+    padded = np.concatenate([np.repeat(knots[0], 3), knots, np.repeat(knots[-1], 3)])
+    return np.asarray(interpolate.BSpline.design_matrix(logarithms, padded, 3).toarray())
 
 
 def whitened_by(matrix: FloatArray) -> Whitening:
@@ -232,37 +307,27 @@ def whitened_by(matrix: FloatArray) -> Whitening:
     return lambda columns: np.asarray(matrix @ columns)
 
 
-def _fitted(
-    form: CreepForm, times: FloatArray, values: FloatArray, whiten: Whitening = as_they_are
-) -> FittedForm:
+def _fitted(form: CreepForm, times: FloatArray, values: FloatArray, whiten: Whitening) -> FittedForm:
     shortest, longest = float(times[0]), float(times[-1])
-    low, high = form.bounds(shortest, longest)
+    bounds = [found.bounds(shortest, longest) for found in form.ranges]
     fit = fit_separable(
-        form.model, times, values, form.scans(shortest, longest), low=low, high=high, whiten=whiten
+        form.model,
+        times,
+        values,
+        [found.scan(shortest, longest) for found in form.ranges],
+        low=[low for low, _ in bounds],
+        high=[high for _, high in bounds],
+        whiten=whiten,
     )
     return FittedForm(form, fit, _aicc(fit), shortest, longest)
 
 
 def _aicc(fit: SeparableFit) -> float:
-    """n ln(RSS/n) + 2K + 2K(K + 1)/(n − K − 1), K counting the variance."""
+    """AICc = n ln(RSS/n) + 2K + 2K(K + 1)/(n − K − 1), K counting the variance."""
     n = len(fit.residuals)
     k = len(fit.parameters) + 1
     squares = max(fit.residual_sum_of_squares, 1e-300)
     return float(n * np.log(squares / n) + 2 * k + 2 * k * (k + 1) / (n - k - 1))
-
-
-def _jacobian(found: FittedForm, times: FloatArray) -> FloatArray:
-    """Columns of the curve near its fit that are independent."""
-    columns = found._gradient(times)
-    scaled = columns / np.maximum(np.linalg.norm(columns, axis=0), 1e-300)
-    left, sizes, _ = np.linalg.svd(scaled, full_matrices=False)
-    return np.asarray(left[:, sizes > 1e-9 * sizes[0]])
-
-
-def _lag_one(residuals: FloatArray) -> float:
-    centred = residuals - residuals.mean()
-    square = float(centred @ centred)
-    return float(centred[1:] @ centred[:-1]) / square if square > 0 else 0.0
 
 
 # --- the forms
@@ -320,55 +385,34 @@ def _second_column(values: FloatArray) -> FloatArray:
     return np.stack([np.zeros_like(values), values], axis=1)[None]
 
 
-def _times_between(shortest: float, longest: float, steps: int) -> FloatArray:
-    return np.geomspace(shortest, max(longest, 4.0 * shortest), steps)
-
-
-def _time_bounds(shortest: float, longest: float) -> tuple[float, float]:
-    return shortest / 3.0, EXTRAPOLATION_LIMIT * max(longest, 4.0 * shortest)
+_TIME = ShapeRange(12, 1.0 / 3.0, LONGEST_TIME, True)
 
 
 def _prony(terms: int) -> CreepForm:
-    return CreepForm(
-        f"Prony {terms}",
-        tuple(f"τ{index}" for index in "₁₂₃"[:terms]),
-        SeparableModel(_prony_basis, _prony_derivatives, terms, exchangeable=True),
-        lambda shortest, longest: (_times_between(shortest, longest, 10),) * terms,
-        lambda shortest, longest: tuple([end] * terms for end in _time_bounds(shortest, longest)),  # type: ignore[return-value]
-    )
+    model = SeparableModel(_prony_basis, _prony_derivatives, terms, exchangeable=True)
+    names = ("τ₁", "τ₂", "τ₃")[:terms]
+    return CreepForm(f"Prony {terms}", names, model, (replace(_TIME, steps=10),) * terms)
 
 
 FORMS: tuple[CreepForm, ...] = (
-    CreepForm(
-        "linear",
-        (),
-        SeparableModel(_linear_basis, _no_derivatives, 0),
-        lambda shortest, longest: (),
-        lambda shortest, longest: ([], []),
-    ),
+    CreepForm("linear", (), SeparableModel(_linear_basis, _no_derivatives, 0), ()),
     CreepForm(
         "logarithmic",
         ("τ",),
         SeparableModel(_logarithmic_basis, _logarithmic_derivatives, 1),
-        lambda shortest, longest: (_times_between(shortest / 10.0, longest, 12),),
-        lambda shortest, longest: ([shortest / 100.0], [_time_bounds(shortest, longest)[1]]),
+        (replace(_TIME, low=0.01),),
     ),
     CreepForm(
         "power",
         ("n",),
         SeparableModel(_power_basis, _power_derivatives, 1),
-        lambda shortest, longest: (np.geomspace(0.05, 1.5, 8),),
-        lambda shortest, longest: ([0.02], [2.0]),
+        (ShapeRange(8, 0.02, 2.0, False),),
     ),
     CreepForm(
         "stretched exponential",
         ("τ", "β"),
         SeparableModel(_stretched_basis, _stretched_derivatives, 2),
-        lambda shortest, longest: (_times_between(shortest, longest, 9), np.array([0.25, 0.4, 0.6, 0.8])),
-        lambda shortest, longest: (
-            [_time_bounds(shortest, longest)[0], 0.1],
-            [_time_bounds(shortest, longest)[1], 1.0],
-        ),
+        (replace(_TIME, steps=9), ShapeRange(4, 0.1, 1.0, False)),
     ),
     _prony(1),
     _prony(2),
