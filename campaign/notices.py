@@ -212,7 +212,7 @@ NOTICE_CODES: dict[str, str] = {
     "sweep-too-small": "at a kept length the influence covers a small part of the trial's range only",
     "no-return": "an influence is swept one way only: no loop width, and drift is part of the slope",
     "sweep-gap": "a sweep pauses for far longer than its samples lie apart",
-    "sweep-clipped": "the signal stays at its extreme while an influence goes on: the readout may be at its end",
+    "sweep-clipped": "the signal stays at its extreme while an influence goes on; the readout may be full",
     "one-length": "an influence was swept at one known length: its change with strain is not identifiable",
     "spread-not-fitted": "the spread of an influence over modules and sensors cannot be fitted",
     # Bytes, encodings and line ends of one file

@@ -15,7 +15,9 @@ from campaign.analyses.calibration_effort import analyse_calibration_effort
 from campaign.analyses.endurance import analyse_endurance
 from campaign.analyses.findings import collect_findings
 from campaign.analyses.hysteresis import analyse_hysteresis
+from campaign.analyses.influences import analyse_influences
 from campaign.analyses.limits import judge_limits
+from campaign.analyses.pressure import analyse_pressure
 from campaign.analyses.residuals import analyse_residuals
 from campaign.analyses.results import CampaignResults
 from campaign.analyses.variance import analyse_variance
@@ -31,8 +33,17 @@ from campaign.recordings.sensor_share import TrialKey
 from campaign.trials.cyclic import CyclicFeatures, features_of_cyclic
 from campaign.trials.endurance import EnduranceFeatures, features_of_endurance
 from campaign.trials.features import TrialFeatures
+from campaign.trials.influences import (
+    features_of_bend,
+    features_of_contact,
+    features_of_offaxis,
+    features_of_proximity,
+    features_of_thermal,
+)
+from campaign.trials.pressure import features_of_pressure
 from campaign.trials.readings import Readings, collect_readings
 from campaign.trials.staircase import StaircaseFeatures, readings_of_staircase
+from campaign.trials.sweeps import SweepFeatures
 
 DONE, SET_ASIDE = 0, 1
 
@@ -42,6 +53,12 @@ REDUCED_BY: dict[str, Callable[[Trial], TrialFeatures]] = {
     "staircase": readings_of_staircase,
     "cyclic": features_of_cyclic,
     "endurance": features_of_endurance,
+    "pressure": features_of_pressure,
+    "offaxis": features_of_offaxis,
+    "thermal": features_of_thermal,
+    "contact": features_of_contact,
+    "proximity": features_of_proximity,
+    "bend": features_of_bend,
 }
 """What a trial is reduced to while its recording is in memory, by kind: the kinds that are analysed."""
 
@@ -190,12 +207,15 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         tell("analyses", 3, 4)
     hysteresis = analyse_hysteresis(read.of_type(CyclicFeatures), calibration)
     endurance = analyse_endurance(read.of_type(EnduranceFeatures).values())
-    others = [found for found in (hysteresis,) if found is not None]
+    sweeps = read.of_type(SweepFeatures)
+    pressure = analyse_pressure(sweeps, calibration, description)
+    influences = analyse_influences(sweeps, calibration, description)
+    others = [found for found in (hysteresis, pressure) if found is not None]
     limits = judge_limits(description, calibration, further=[found.figures for found in others])
     findings = collect_findings(
         description, intake, calibration, variance, residuals, effort, limits, put_back, further=[]
     )
-    analyses = (calibration, variance, residuals, effort, *others)
+    analyses = (calibration, variance, residuals, effort, *others, influences)
     notices = [notice for analysis in analyses if analysis is not None for notice in analysis.notices]
     tell("analyses", 4, 4)
     return CampaignResults(
@@ -211,6 +231,8 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         notices=sort_notices([*intake.notices, *notices]),
         hysteresis=hysteresis,
         endurance=endurance,
+        pressure=pressure,
+        influences=influences,
     )
 
 

@@ -142,6 +142,9 @@ class Pressure:
     coupling
         Neighbours that moved while only another sensor was strained
         (:data:`campaign.analyses.coupling.COUPLING_COLUMNS`).
+    figures
+        The error at the pressure in use of every sensor, to be judged by ``[limits] pressure_error``; columns
+        of :data:`campaign.analyses.sensor_figures.FIGURE_COLUMNS`.
     in_use_kpa, rated
         Pressure that errors are stated at, and whether ``[use]`` named it.
     unit
@@ -160,6 +163,7 @@ class Pressure:
     spread: InfluenceSpread
     corrections: dict[SensorKey, Correction]
     coupling: pd.DataFrame
+    figures: pd.DataFrame
     in_use_kpa: float
     rated: bool
     unit: str
@@ -199,15 +203,17 @@ def analyse_pressure(
     core = coefficient_table(points, sweeps, fits, slopes, origin, in_use)
     units = sorted(set(sweeps["unit"].astype(str)))
     spread = influence_spread(points, sweeps, slopes, "pressure")
+    table = _pressure_table(core, spread)
     return Pressure(
         reference,
-        _pressure_table(core, spread),
+        table,
         sweeps,
         points,
         _curves(own),
         spread,
         _corrections(core, fits, origin),
         coupling_table(features, calibration),
+        pressure_figures(table, reference, calibration, description),
         in_use,
         rated,
         units[0] if len(units) == 1 else "various",
@@ -312,9 +318,23 @@ def _sd_about_line(x: FloatArray, y: FloatArray) -> float:
 
 
 def pressure_figures(
-    pressure: Pressure | None, calibration: Calibration | None, description: Description
+    table: pd.DataFrame,
+    reference: ReferenceQuantity,
+    calibration: Calibration | None,
+    description: Description,
 ) -> pd.DataFrame:
     """Return the error by pressure of every sensor as figures to be judged by ``[limits] pressure_error``.
+
+    Parameters
+    ----------
+    table
+        The table ``pressure``.
+    reference
+        What x is.
+    calibration
+        Full-scale outputs, for a limit in %FSO.
+    description
+        The limit, for its unit.
 
     Returns
     -------
@@ -322,14 +342,10 @@ def pressure_figures(
         Columns of :data:`campaign.analyses.sensor_figures.FIGURE_COLUMNS`: the magnitude of the uncorrected
         error at the pressure in use, in the unit of the limit; empty where it cannot be given in that unit.
     """
-    empty = pd.DataFrame(columns=list(FIGURE_COLUMNS))
-    if pressure is None or pressure.table.empty:
-        return empty
-    unit = description.limits.get("pressure_error", (math.nan, pressure.reference.unit))[1]
-    factors = _factors_to(unit, pressure, calibration)
+    unit = description.limits.get("pressure_error", (math.nan, reference.unit))[1]
+    factors = _factors_to(unit, table, reference, calibration)
     if factors is None:
-        return empty
-    table = pressure.table
+        return pd.DataFrame(columns=list(FIGURE_COLUMNS))
     estimate = table["strain_error_in_use"].abs() * factors
     reach = (table["strain_error_in_use_high"] - table["strain_error_in_use_low"]) / 2 * factors
     return table[["generation", "module", "sensor"]].assign(
@@ -344,13 +360,15 @@ def pressure_figures(
     )[list(FIGURE_COLUMNS)]
 
 
-def _factors_to(unit: str, pressure: Pressure, calibration: Calibration | None) -> pd.Series | None:
+def _factors_to(
+    unit: str, table: pd.DataFrame, reference: ReferenceQuantity, calibration: Calibration | None
+) -> pd.Series | None:
     """Factor from x to *unit* for every sensor; ``None`` where there is none."""
-    if unit == pressure.reference.unit:
-        return pd.Series(1.0, index=pressure.table.index)
+    if unit == reference.unit:
+        return pd.Series(1.0, index=table.index)
     if unit != "%FSO" or calibration is None or calibration.sensor_lines.empty:
         return None
     lines = principal_lines(calibration.sensor_lines).set_index(["generation", "module", "sensor"])
     full = lines["full_scale_output"] / lines["slope"].abs()
-    keys = pd.MultiIndex.from_frame(pressure.table[["generation", "module", "sensor"]])
-    return pd.Series(100.0 / full.reindex(keys).to_numpy(float), index=pressure.table.index)
+    keys = pd.MultiIndex.from_frame(table[["generation", "module", "sensor"]])
+    return pd.Series(100.0 / full.reindex(keys).to_numpy(float), index=table.index)

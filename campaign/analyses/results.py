@@ -11,7 +11,9 @@ if TYPE_CHECKING:
     from campaign.analyses.endurance import Endurance
     from campaign.analyses.findings import Findings
     from campaign.analyses.hysteresis import Hysteresis
+    from campaign.analyses.influences import Influences
     from campaign.analyses.limits import Limits
+    from campaign.analyses.pressure import Pressure
     from campaign.analyses.residuals import Residuals
     from campaign.analyses.variance import Variance
     from campaign.notices import Notice
@@ -55,5 +57,5 @@ class CampaignResults:
     hysteresis: Hysteresis | None = None
     endurance: Endurance | None = None
     drift: object | None = None
-    pressure: object | None = None
-    influences: object | None = None
+    pressure: Pressure | None = None
+    influences: Influences | None = None

@@ -31,7 +31,7 @@ KINDS = (
 )
 """All kinds of trial a campaign may hold, in the order of the folder's description."""
 
-ANALYSED = ("staircase",)
+ANALYSED = ("staircase", "cyclic", "endurance")
 """Kinds that an analysis answers."""
 
 
