@@ -201,7 +201,7 @@ NOTICE_CODES: dict[str, str] = {
     "no-hold": "no length is kept for long in a trial that should hold one: it gives no hold",
     "hold-without-time": "a hold has no time, or one that runs backwards: it is not analysed",
     "hold-too-short": "a hold has too few samples or ramp times for the forms and slopes asked of it",
-    "hold-without-line": "no staircase line gives a hold's full-scale output: its figures are per cent of its signal",
+    "hold-without-line": "no staircase line gives a hold's full-scale output: it is shown in per cent",
     "temperature-not-steady": "temperature moved during a hold: its change is not called drift",
     "not-evenly-sampled": "a hold at rest is not evenly sampled: no Allan deviation is given",
     "no-endurance": "an endurance trial has no cycle numbers or no signal",

@@ -61,6 +61,7 @@ REST_STRAIN, REST_ELONGATION_MM = 0.005, 0.5
 SLOPE_MEANS = 400
 """Means over equal times that the slope of a hold at rest is fitted to."""
 
+_NAN = float("nan")
 GAP_INTERVALS = 5.0
 CLIPPED_SHARE = 0.02
 STEADY_FORCE_SHARE = 0.01
@@ -77,6 +78,20 @@ class SignalAt:
     start_s: float
     stop_s: float
     count: int
+
+
+@dataclass(frozen=True)
+class Envelope:
+    """A hold as drawn: buckets of log time, each with its extremes, so that no spike is lost.
+
+    ``times_s`` is the middle of each bucket after the end of the ramp; ``low``, ``high`` and ``mean`` are in
+    the unit of the signal; all have shape (buckets,).
+    """
+
+    times_s: FloatArray
+    low: FloatArray
+    high: FloatArray
+    mean: FloatArray
 
 
 @dataclass(frozen=True)
@@ -120,8 +135,8 @@ class Hold:
         How long the ramp took; NaN where the recording does not show it: then t = 0 is the first sample.
     stretches, means
         Means over stretches of time, about :data:`MEANS_A_DECADE` a decade, signal units.
-    drawn_s, drawn_low, drawn_high, drawn_mean
-        Envelope and mean on log-time buckets, for drawing: the extremes of every bucket are kept.
+    envelope
+        What is drawn.
     first
         First settled signal: between one and two ramp times after the end of the ramp (without a ramp, the
         first samples).
@@ -146,10 +161,7 @@ class Hold:
     ramp_s: float
     stretches: Stretches
     means: FloatArray
-    drawn_s: FloatArray
-    drawn_low: FloatArray
-    drawn_high: FloatArray
-    drawn_mean: FloatArray
+    envelope: Envelope
     first: SignalAt
     signals: dict[str, SignalAt]
     zero_before: SignalAt
@@ -296,30 +308,33 @@ def _hold(trial: Trial, rows: IntArray, time: FloatArray, course: HoldCourse, ke
     ramp = _ramp(time, course)
     t, signal = time[inside] - origin, trial.signal[rows[inside]]
     stretches, means = log_time_means(t, signal)
-    drawn = log_time_envelope(t, signal)
-    levels = [
+    strain, elongation, length = (
         _mean_of(values, rows[inside]) for values in (trial.strain, trial.elongation_mm, trial.length_mm)
-    ]
-    place = "rest" if kept == "blank" else _place(levels[0], levels[1])
+    )
+    place = "rest" if kept == "blank" else _place(strain, elongation)
     allan, floors = _noise_at_rest(t, signal) if place == "rest" else (None, None)
     signals = {name: signal_at(t, signal, at) for name, at in TIMES_S.items()}
     signals["end"] = signal_at(t, signal, float(t[-1]) / (1.0 + WINDOW_SHARE))
+    before, after = _zeros(trial, rows, time, course)
     return Hold(
-        *levels,
-        place,
-        "length" if kept == "blank" else kept,
-        float(t[-1]),
-        ramp,
-        stretches,
-        means,
-        *drawn,
-        first_settled(t, signal, ramp),
-        signals,
-        *_zeros(trial, rows, time, course),
-        _temperature(trial, rows[inside]),
-        _slope(t, signal),
-        allan,
-        floors,
+        kept_strain=strain,
+        kept_elongation_mm=elongation,
+        kept_length_mm=length,
+        place=place,
+        kept="length" if kept == "blank" else kept,
+        duration_s=float(t[-1]),
+        ramp_s=ramp,
+        stretches=stretches,
+        means=means,
+        envelope=log_time_envelope(t, signal),
+        first=first_settled(t, signal, ramp),
+        signals=signals,
+        zero_before=before,
+        zero_after=after,
+        temperature=_temperature(trial, rows[inside]),
+        slope=_slope(t, signal),
+        allan=allan,
+        floors=floors,
     )
 
 
@@ -352,22 +367,19 @@ def log_time_means(t: FloatArray, signal: FloatArray) -> tuple[Stretches, FloatA
     return Stretches(t[first], t[last], counts), np.add.reduceat(signal, first) / counts
 
 
-def log_time_envelope(
-    t: FloatArray, signal: FloatArray
-) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
-    """Return times, lowest, highest and mean signal of log-time buckets: no spike is lost.
+def log_time_envelope(t: FloatArray, signal: FloatArray) -> Envelope:
+    """Return lowest, highest and mean signal of log-time buckets.
 
-    Arguments as for :func:`log_time_means`; at most :data:`MOST_DRAWN` buckets.
+    Arguments as for :func:`log_time_means`; at most about :data:`MOST_DRAWN` buckets.
     """
-    spanned = np.log10(t[-1] / _first_positive(t))
-    first = _log_time_starts(t, min(DRAWN_A_DECADE, MOST_DRAWN / max(float(spanned), 1e-9)))
+    spanned = float(np.log10(t[-1] / _first_positive(t)))
+    first = _log_time_starts(t, min(DRAWN_A_DECADE, MOST_DRAWN / max(spanned, 1e-9)))
     counts = np.diff(np.append(first, len(t)))
-    middle = np.sqrt(t[first] * t[first + counts - 1])
-    return (
-        middle,
+    return Envelope(
+        np.sqrt(t[first] * t[first + counts - 1]),
         np.minimum.reduceat(signal, first),
         np.maximum.reduceat(signal, first),
-        np.add.reduceat(signal, first) / counts,
+        np.asarray(np.add.reduceat(signal, first) / counts),
     )
 
 
@@ -383,7 +395,7 @@ def _log_time_starts(t: FloatArray, a_decade: float) -> IntArray:
 
 
 def signal_at(t: FloatArray, signal: FloatArray, at_s: float) -> SignalAt:
-    """Return the mean signal within :data:`WINDOW_SHARE` of a time, NaN where the hold has no sample there."""
+    """Return the mean signal within :data:`WINDOW_SHARE` of a time, NaN where there is no sample."""
     first, stop = np.searchsorted(t, [at_s * (1.0 - WINDOW_SHARE), at_s * (1.0 + WINDOW_SHARE)], side="left")
     return _mean_over(t, signal, int(first), int(stop))
 
@@ -402,7 +414,7 @@ def first_settled(t: FloatArray, signal: FloatArray, ramp_s: float) -> SignalAt:
 
 def _mean_over(t: FloatArray, signal: FloatArray, first: int, stop: int) -> SignalAt:
     if stop <= first:
-        return SignalAt(*(float("nan"),) * 3, 0)
+        return SignalAt(_NAN, _NAN, _NAN, 0)
     return SignalAt(float(np.mean(signal[first:stop])), float(t[first]), float(t[stop - 1]), stop - first)
 
 
@@ -424,7 +436,7 @@ def _place(strain: float, elongation_mm: float) -> str:
 
 def _zeros(trial: Trial, rows: IntArray, time: FloatArray, course: HoldCourse) -> tuple[SignalAt, SignalAt]:
     """Signal at the kept lengths before and after the hold; NaN unless both are there at one length."""
-    unknown = SignalAt(*(float("nan"),) * 3, 0)
+    unknown = SignalAt(_NAN, _NAN, _NAN, 0)
     before, after = course.before, course.after
     if before is None or after is None:
         return unknown, unknown
@@ -444,7 +456,7 @@ def _temperature(trial: Trial, rows: IntArray) -> TemperatureCourse:
     values = np.zeros(0) if trial.temperature_c is None else trial.temperature_c[rows]
     values = values[np.isfinite(values)]
     if len(values) < 2:
-        return TemperatureCourse(False, *(float("nan"),) * 3)
+        return TemperatureCourse(False, _NAN, _NAN, _NAN)
     parts = [part.mean() for part in np.array_split(values, min(20, len(values)))]
     tenth = max(len(values) // 10, 1)
     change = float(values[-tenth:].mean() - values[:tenth].mean())
