@@ -17,6 +17,7 @@ from campaign.analyses.findings import collect_findings
 from campaign.analyses.hysteresis import analyse_hysteresis
 from campaign.analyses.influences import analyse_influences
 from campaign.analyses.limits import judge_limits
+from campaign.analyses.loop_findings import loop_findings
 from campaign.analyses.pressure import analyse_pressure
 from campaign.analyses.residuals import analyse_residuals
 from campaign.analyses.results import CampaignResults
@@ -211,9 +212,21 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
     pressure = analyse_pressure(sweeps, calibration, description)
     influences = analyse_influences(sweeps, calibration, description)
     others = [found for found in (hysteresis, pressure) if found is not None]
+    readings = read.readings
+    if not len(readings.table) and others:
+        readings = replace(readings, reference=others[0].reference)
     limits = judge_limits(description, calibration, further=[found.figures for found in others])
     findings = collect_findings(
-        description, intake, calibration, variance, residuals, effort, limits, put_back, further=[]
+        description,
+        intake,
+        calibration,
+        variance,
+        residuals,
+        effort,
+        limits,
+        put_back,
+        further=[*loop_findings(hysteresis, endurance, limits)],
+        reference=readings.reference,
     )
     analyses = (calibration, variance, residuals, effort, *others, influences)
     notices = [notice for analysis in analyses if analysis is not None for notice in analysis.notices]
@@ -221,7 +234,7 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
     return CampaignResults(
         description=description,
         intake=intake,
-        readings=read.readings,
+        readings=readings,
         calibration=calibration,
         variance=variance,
         residuals=residuals,

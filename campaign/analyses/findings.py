@@ -26,6 +26,7 @@ from campaign.analyses.sensor_figures import (
     principal_run_lines,
 )
 from campaign.recordings.description import Description
+from campaign.recordings.recording import ReferenceQuantity
 
 if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration, CalibrationRecord
@@ -177,6 +178,7 @@ FindingKind = Literal[
     "hysteresis",
     "zero_return",
     "loops",
+    "endurance",
     "model",
 ]
 """What a finding is about; ``site_templates/findings/KIND.html`` has its words."""
@@ -222,6 +224,7 @@ def collect_findings(
     limits: Limits,
     put_back: Calibration | None = None,
     further: Iterable[Finding] = (),
+    reference: ReferenceQuantity | None = None,
 ) -> Findings:
     """Choose what page 0 says.
 
@@ -237,13 +240,15 @@ def collect_findings(
         The calibration with every sensor that was set aside put back; ``None`` where none was or could be.
     further
         Findings of the other kinds of trial, most important first.
+    reference
+        What lengths are given in; that of the calibration unless given.
 
     Returns
     -------
     Findings
         Only what the analyses support: a campaign without staircases has a scope and no findings.
     """
-    scope = describe_scope(description, intake, calibration)
+    scope = describe_scope(description, intake, calibration, reference)
     findings: list[Finding] = []
     if effort is not None:
         findings += _effort_findings(effort, limits)
@@ -444,7 +449,9 @@ def _line_findings(calibration: Calibration, limits: Limits, put_back: Calibrati
             findings.append(Finding(kind, facts, verdict_of_limit(limits, kind), kind))  # type: ignore[arg-type]
     loops = _loop_facts(calibration, limits, put_back)
     if loops:
-        findings.append(Finding("hysteresis", loops, verdict_of_limit(limits, "hysteresis"), "hysteresis"))
+        other = limits.further_figures["figure"].eq("hysteresis").any()
+        verdict = "" if other else verdict_of_limit(limits, "hysteresis")
+        findings.append(Finding("hysteresis", loops, verdict, "hysteresis"))
     bends = _bend_facts(calibration)
     if bends:
         findings.append(Finding("bend", bends))

@@ -29,6 +29,10 @@ CONTRACT_COLUMNS: dict[str, tuple[str, ...]] = {
         "calibration_effort": "generation effort strain_sd_predicted strain_sd_left_out "
         "strain_expanded factor",
         "effects": "generation level module sensor term estimate low high unit",
+        "loops": "generation module sensor repetition cycle rate_per_s width_percent_fso width_strain "
+        "at_strain degree_of_hysteresis peak_signal zero_signal",
+        "hysteresis": "generation module sensor settled_from_cycle width_percent_fso low high "
+        "degree_of_hysteresis softening_percent",
     }.items()
 }
 """Columns of each promised table, in order."""
@@ -82,7 +86,6 @@ _MEANINGS: dict[str, str] = {
     "cov_intercept_slope": "covariance of intercept and slope",
     "residual_sd": "residual standard deviation within runs",
     "df": "degrees of freedom",
-    "variance_source": "where the variance between runs was taken from",
     "zero_signal": "signal at zero strain",
     "r_squared": "coefficient of determination",
     "gauge_factor": "relative change of signal per strain",
@@ -125,6 +128,22 @@ _MEANINGS: dict[str, str] = {
     "weight": "stops, set aside or noted",
     "line": "line of the file, from 1",
     "column": "field of the line, from 1",
+    "cycle": "number of the cycle in its trial, from 1",
+    "rate_per_s": "mean speed of the cycle, units of the reference a second",
+    "width_percent_fso": "largest difference of the signal up and down, of full-scale output (or own range)",
+    "width_strain": "the same, divided by the slope of the sensor's line",
+    "at_strain": "where the loop is widest",
+    "degree_of_hysteresis": "area of the loop over the area under its loading branch (change of signal)",
+    "degree_of_whole_signal": "the same with the area under the signal as recorded",
+    "mid_width_percent_fso": "signed difference of the signal up and down at mid range",
+    "peak_signal": "signal at the upper turn",
+    "settled_from_cycle": "first cycle from which on no change a cycle is shown; empty: not settled",
+    "softening_percent": "range of signal of the first loop over that of settled ones, less one",
+    "counted": "whether the settled figures use it",
+    "scale": "what full-scale output and slope come from",
+    "variance_source": "where the uncertainty was taken from",
+    "survival": "share that works beyond (product-limit estimate)",
+    "delay_s": "time by which the signal is late, if all dependence on rate were that",
     "what": "what was found",
     "done": "what was done about it",
     "remedy": "what would mend it",
@@ -137,6 +156,7 @@ _UNIT_ENDINGS: tuple[tuple[str, str], ...] = (
     ("_mm2", "mm²"),
     ("_mm", "mm"),
     ("_kpa", "kPa"),
+    ("rate_per_s", "1/s"),
     ("_c", "°C"),
     ("_s", "s"),
     ("bytes", "B"),

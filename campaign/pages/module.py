@@ -9,6 +9,7 @@ from typing import Any
 import pandas as pd
 
 from campaign.analyses.results import CampaignResults
+from campaign.analyses.scope import ANALYSED
 from campaign.analyses.sensor_figures import principal_lines
 from campaign.pages import numbers, palette, slugs
 from campaign.pages.calibration import x_title
@@ -122,11 +123,10 @@ def _state(results: CampaignResults, module: str, sensor: str) -> str:
         table.loc[(table["module"] == module) & (table["sensor"] == sensor), "used"].any()
     ):
         return "used"
-    return (
-        "set aside"
-        if not (own["fate"] == "used").any() or own["kind"].eq("staircase").any()
-        else "not analysed"
-    )
+    used = own[own["fate"] == "used"]
+    if used.empty:
+        return "set aside"
+    return "used" if used["kind"].isin(ANALYSED).any() else "not analysed"
 
 
 def _batch_of(results: CampaignResults, module: str) -> str:

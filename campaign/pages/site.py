@@ -12,6 +12,8 @@ from campaign.pages.calibration import calibration_page
 from campaign.pages.calibration_effort import calibration_effort_page
 from campaign.pages.campaign_map import campaign_map
 from campaign.pages.findings import findings_page
+from campaign.pages.hysteresis import hysteresis_page
+from campaign.pages.loop_figures import loop_scripts
 from campaign.pages.method import method_page
 from campaign.pages.module import module_pages
 from campaign.pages.notes import Notes
@@ -51,7 +53,7 @@ def build_site(
         site_frame(results),
         pages,
         site_tables(results, pages),
-        files={**(notes.files or {}), **record_files(records)},
+        files={**(notes.files or {}), **record_files(records), **loop_scripts(results.hysteresis)},
         plot_library=plot_library,
         reference=results.readings.reference,
     )
@@ -68,6 +70,7 @@ def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
         variance_page(results),
         residuals_page(results),
         calibration_effort_page(results),
+        hysteresis_page(results),
     )
     pages = [findings_page(results, mapped), *(page for page in measured if page is not None)]
     pages += [recordings_page(results), method_page(results)]

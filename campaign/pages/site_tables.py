@@ -29,6 +29,13 @@ CAPTIONS: dict[str, str] = {
     "residuals": "Conditional and marginal residuals of the nested model.",
     "calibration_effort": "Error against calibration effort, predicted and left out.",
     "limits": "Every limit judged, sensor by sensor and for a new sensor.",
+    "loops": "Every loop: width, area, peak and zero signal, rate.",
+    "hysteresis": "The settled loops of every sensor.",
+    "loop_runs": "Every cyclic trial: when it settles, first and settled zero and peak signal.",
+    "loop_rates": "Width against rate, by sensor.",
+    "loop_components": "Where the spread of the widths comes from.",
+    "loop_means": "Mean signed width at mid range of every generation.",
+    "endurance_log": "Zero and sensitivity of every logged cycle, up to the sensor’s failure.",
 }
 """Tables of the analyses that are written whole, with their captions."""
 
@@ -69,4 +76,17 @@ def _frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
         frames["calibration_effort"] = results.calibration_effort.table
     if len(results.limits.table):
         frames["limits"] = results.limits.table
+    return frames | _loop_frames(results)
+
+
+def _loop_frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
+    """Return the frames of loops and endurance, where they were measured."""
+    frames: dict[str, pd.DataFrame] = {}
+    if (found := results.hysteresis) is not None:
+        frames |= {"loops": found.loops, "hysteresis": found.sensors, "loop_runs": found.runs}
+        frames |= {"loop_components": found.components, "loop_means": found.means}
+        if found.several_rates:
+            frames["loop_rates"] = found.rates.sensors
+    if results.endurance is not None:
+        frames["endurance_log"] = results.endurance.log
     return frames
