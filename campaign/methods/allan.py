@@ -138,7 +138,7 @@ def overlapping_allan_deviation(
     tails = [stats.chi2.ppf(q, freedom) for q in ((1 + level) / 2, (1 - level) / 2)]
     low, high = (deviations * np.sqrt(freedom / tail) for tail in tails)
     return AllanDeviation(
-        m_kept, m_kept * interval_s, deviations, low, high, counts, np.asarray(freedom), exponents
+        m_kept, np.asarray(m_kept * interval_s, dtype=np.float64), deviations, low, high, counts, np.asarray(freedom), exponents
     )
 
 
@@ -248,7 +248,10 @@ def _noise_exponents(readings: FloatArray, factors: IntArray) -> IntArray:
 
 
 def _noise_exponent(averages: FloatArray) -> int:
-    """α by the lag-1 autocorrelation r₁: δ = r₁/(1 + r₁), differenced until δ < ¼; α = −2 (δ + d), from −2 to 2."""
+    """Exponent α by the lag-1 autocorrelation r₁: differenced d times until δ = r₁/(1 + r₁) < ¼.
+
+    α = −2 (δ + d), held between −2 and 2.
+    """
     series, taken = averages, 0
     while True:
         centred = series - series.mean()
@@ -264,7 +267,8 @@ def _difference_covariance(lag: FloatArray, factor: int, exponent: int) -> Float
     """s_z of SP 1065 for second differences, lag in averaging times."""
     return np.asarray(
         6.0 * _average_covariance(lag, factor, exponent)
-        - 4.0 * (_average_covariance(lag - 1, factor, exponent) + _average_covariance(lag + 1, factor, exponent))
+        - 4.0
+        * (_average_covariance(lag - 1, factor, exponent) + _average_covariance(lag + 1, factor, exponent))
         + _average_covariance(lag - 2, factor, exponent)
         + _average_covariance(lag + 2, factor, exponent)
     )
@@ -274,7 +278,8 @@ def _average_covariance(lag: FloatArray, factor: int, exponent: int) -> FloatArr
     """s_x of SP 1065, filtered by the sampling of the phase: F²(2 s_w(t) − s_w(t − 1/F) − s_w(t + 1/F))."""
     middle = 2.0 * _structure(lag, exponent)
     return np.asarray(
-        factor**2 * (middle - _structure(lag - 1.0 / factor, exponent) - _structure(lag + 1.0 / factor, exponent))
+        factor**2
+        * (middle - _structure(lag - 1.0 / factor, exponent) - _structure(lag + 1.0 / factor, exponent))
     )
 
 

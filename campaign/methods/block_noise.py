@@ -3,8 +3,10 @@
     Cov(ȳᵢ, ȳⱼ) = σ_w² δᵢⱼ/nᵢ + σ_s² × mean over both stretches of exp(−|t − t′|/T)
 
 The slow part is a stationary process of first order in continuous time (J. L. Doob, Annals of Mathematics 43
-(1942) 351–369), averaged over each stretch exactly. Ratio and memory T are found by restricted likelihood on a
-grid, so that means over short and long stretches, early and late, are weighed and whitened together.
+(1942) 351–369), averaged over each stretch exactly. It has one state, so that whitening is a filter along the
+stretches (R. E. Kalman, Journal of Basic Engineering 82 (1960) 35–45), run for all tried memories at once.
+Ratio and memory are those of greatest restricted likelihood on a grid: means over short and long stretches,
+early and late, are weighed and whitened together.
 """
 
 from __future__ import annotations
@@ -13,7 +15,6 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
-from scipy import linalg
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
@@ -66,9 +67,18 @@ class BlockNoise:
             covariance = covariance + self.slow_variance * slow_correlation(stretches, self.memory_s)
         return covariance
 
+    def whitening(self, stretches: Stretches) -> FloatArray:
+        """Return the lower triangular W, (stretches, stretches), with W C W' = 1 for the covariance C."""
+        ratio = self.slow_variance / self.white_variance
+        memory = self.memory_s if ratio > 0 else 1.0
+        whitened, _ = _filtered(
+            np.eye(len(stretches.counts)), stretches, np.array([memory]), np.array([ratio])
+        )
+        return np.asarray(whitened[:, 0] / np.sqrt(self.white_variance))
+
 
 def slow_correlation(stretches: Stretches, memory_s: float) -> FloatArray:
-    """Return the mean of exp(−|t − t′|/T) over all pairs of times of two stretches, (stretches, stretches)."""
+    """Return the mean of exp(−|t − t′|/T) over all pairs of times of two stretches: a square matrix."""
     start, stop = stretches.starts_s / memory_s, stretches.stops_s / memory_s
     width = stop - start
     gap = np.maximum(start[None, :] - stop[:, None], start[:, None] - stop[None, :])
@@ -78,14 +88,14 @@ def slow_correlation(stretches: Stretches, memory_s: float) -> FloatArray:
     return np.asarray(between)
 
 
-def find_block_noise(residual_basis: FloatArray, values: FloatArray, stretches: Stretches) -> BlockNoise:
-    """Find the noise of means about a curve.
+def find_block_noise(smooth: FloatArray, values: FloatArray, stretches: Stretches) -> BlockNoise:
+    """Find the noise of means about a smooth curve.
 
     Parameters
     ----------
-    residual_basis
-        Shape (stretches, p): columns that the curve is made of near its best fit (its Jacobian); they are
-        projected out, so that what the curve explains is not taken for noise.
+    smooth
+        Shape (stretches, p): independent columns that follow any smooth curve; they are projected out, so
+        that what a curve explains is not taken for noise.
     values
         Shape (stretches,): means.
     stretches
@@ -97,41 +107,58 @@ def find_block_noise(residual_basis: FloatArray, values: FloatArray, stretches: 
         Of greatest restricted likelihood over a grid of memories (from the shortest gap to the third of the
         record) and ratios, white noise alone included.
     """
+    basis = np.linalg.qr(smooth)[0]
+    rest = values - basis @ (basis.T @ values)
+    memory, ratio = (grid.ravel() for grid in np.meshgrid(_memories(stretches), RATIOS, indexing="ij"))
+    whitened, variances = _filtered(np.column_stack([basis, rest]), stretches, memory, ratio)
+    squares = np.einsum("nga,ngb->gab", whitened, whitened)
+    inner, mixed = squares[:, :-1, :-1], squares[:, :-1, -1]
+    explained = np.einsum("ga,ga->g", mixed, np.linalg.solve(inner, mixed[..., None])[..., 0])
+    free = len(values) - smooth.shape[1]
+    scales = np.maximum(squares[:, -1, -1] - explained, 1e-300) / free
+    criterion = np.log(variances).sum(axis=0) + np.linalg.slogdet(inner)[1] + free * np.log(scales)
+    best = int(np.argmin(criterion))
+    slow = float(ratio[best])
+    return BlockNoise(
+        float(scales[best]), float(scales[best]) * slow, float(memory[best]) if slow > 0 else float("nan")
+    )
+
+
+def _memories(stretches: Stretches) -> FloatArray:
     span = float(stretches.stops_s[-1] - stretches.starts_s[0])
     steps = np.diff((stretches.starts_s + stretches.stops_s) / 2.0)
     shortest = max(float(np.median(steps[: max(len(steps) // 3, 1)])), span * 1e-5)
-    memories = np.geomspace(shortest, max(span / 3.0, 2.0 * shortest), MEMORIES)
-    best = (np.inf, 0.0, np.nan, np.nan)
-    white = 1.0 / stretches.counts
-    for memory in memories:
-        slow = slow_correlation(stretches, float(memory))
-        for ratio in RATIOS if memory == memories[0] else RATIOS[1:]:
-            criterion, scale = _restricted(np.diag(white) + ratio * slow, residual_basis, values)
-            if criterion < best[0]:
-                best = (criterion, float(ratio), float(memory), scale)
-    _, ratio, memory, scale = best
-    return BlockNoise(scale, scale * ratio, memory if ratio > 0 else float("nan"))
+    return np.geomspace(shortest, max(span / 3.0, 2.0 * shortest), MEMORIES)
 
 
-def whitening(covariance: FloatArray) -> FloatArray:
-    """Return the lower triangular W with W C W' = 1, from the Cholesky factor of *covariance* (n, n)."""
-    factor = np.linalg.cholesky(covariance)
-    return np.asarray(linalg.solve_triangular(factor, np.eye(len(factor)), lower=True))
+def _filtered(
+    columns: FloatArray, stretches: Stretches, memory_s: FloatArray, ratio: FloatArray
+) -> tuple[FloatArray, FloatArray]:
+    """Innovations of *columns* (n, c) by their SD, (n, grid, c), and their variances, (n, grid).
 
-
-def _restricted(covariance: FloatArray, basis: FloatArray, values: FloatArray) -> tuple[float, float]:
-    """−2 log restricted likelihood, scale profiled out, and that scale."""
-    factor = np.linalg.cholesky(covariance)
-    both = linalg.solve_triangular(factor, np.column_stack([basis, values]), lower=True)
-    triangle = np.abs(np.diag(np.linalg.qr(both, mode="r")))
-    free = len(values) - basis.shape[1]
-    square = float(triangle[-1] ** 2)
-    if square <= 0.0:
-        return np.inf, 0.0
-    logarithms = 2.0 * float(np.sum(np.log(np.diag(factor)))) + 2.0 * float(
-        np.sum(np.log(np.maximum(triangle[:-1], 1e-300)))
-    )
-    return logarithms + free * float(np.log(square / free)), square / free
+    *memory_s* and *ratio* have shape (grid,); the white variance of one sample is 1. The state is the slow
+    noise at the end of a stretch.
+    """
+    width = (stretches.stops_s - stretches.starts_s)[:, None] / memory_s
+    gap = np.diff(stretches.starts_s, prepend=0.0)
+    gap[1:] = stretches.starts_s[1:] - stretches.stops_s[:-1]
+    kept_over_gap = np.exp(-gap[:, None] / memory_s)
+    kept = np.exp(-width)
+    fading = _faded(width)
+    own = np.maximum(_own(width) - fading**2, 0.0)
+    whitened = np.empty((len(columns), len(ratio), columns.shape[1]))
+    variances = np.empty((len(columns), len(ratio)))
+    state, spread = np.zeros((len(ratio), columns.shape[1])), ratio.copy()
+    for i, column in enumerate(columns):
+        state = state * kept_over_gap[i][:, None]
+        spread = ratio + (spread - ratio) * kept_over_gap[i] ** 2
+        variance = fading[i] ** 2 * spread + ratio * own[i] + 1.0 / stretches.counts[i]
+        shared = kept[i] * fading[i] * spread + ratio * fading[i] * (1.0 - kept[i])
+        innovation = column - fading[i][:, None] * state
+        state = kept[i][:, None] * state + (shared / variance)[:, None] * innovation
+        spread = ratio + (spread - ratio) * kept[i] ** 2 - shared**2 / variance
+        whitened[i], variances[i] = innovation / np.sqrt(variance)[:, None], variance
+    return whitened, variances
 
 
 def _faded(width: FloatArray) -> FloatArray:

@@ -1,9 +1,9 @@
 """Non-linear least squares where some coefficients enter linearly: y = Σ cₖ φₖ(x; θ) + e, θ > 0.
 
 The linear coefficients are solved for exactly at every θ, so that only the shape parameters θ are searched
-(variable projection: G. H. Golub and V. Pereyra, SIAM Journal on Numerical Analysis 10 (1973) 413–432, with the
-Jacobian of L. Kaufman, BIT 15 (1975) 49–57). The search runs on ln θ: scales do not matter. A scan over decades
-about the start comes first, because a start far from the minimum may see no slope at all.
+(variable projection: G. H. Golub and V. Pereyra, SIAM Journal on Numerical Analysis 10 (1973) 413–432, with
+the Jacobian of L. Kaufman, BIT 15 (1975) 49–57). The search runs on ln θ: scales do not matter. A scan over
+decades about the start comes first, because a start far from the minimum may see no slope at all.
 """
 
 from __future__ import annotations
@@ -19,7 +19,7 @@ from scipy import linalg, optimize
 FloatArray = npt.NDArray[np.float64]
 BoolArray = npt.NDArray[np.bool_]
 
-KEPT_STARTS = 3
+KEPT_STARTS = 2
 SEARCH_TOLERANCE = 1e-13
 RANK_TOLERANCE = 1e-12
 
