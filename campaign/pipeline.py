@@ -12,6 +12,7 @@ import pandas as pd
 
 from campaign.analyses.calibration import Calibration, analyse_calibration
 from campaign.analyses.calibration_effort import analyse_calibration_effort
+from campaign.analyses.drift import analyse_drift
 from campaign.analyses.endurance import analyse_endurance
 from campaign.analyses.findings import collect_findings
 from campaign.analyses.hysteresis import analyse_hysteresis
@@ -34,6 +35,7 @@ from campaign.recordings.sensor_share import TrialKey
 from campaign.trials.cyclic import CyclicFeatures, features_of_cyclic
 from campaign.trials.endurance import EnduranceFeatures, features_of_endurance
 from campaign.trials.features import TrialFeatures
+from campaign.trials.hold import HoldFeatures, features_of_blank, features_of_hold
 from campaign.trials.influences import (
     features_of_bend,
     features_of_contact,
@@ -54,6 +56,8 @@ REDUCED_BY: dict[str, Callable[[Trial], TrialFeatures]] = {
     "staircase": readings_of_staircase,
     "cyclic": features_of_cyclic,
     "endurance": features_of_endurance,
+    "hold": features_of_hold,
+    "blank": features_of_blank,
     "pressure": features_of_pressure,
     "offaxis": features_of_offaxis,
     "thermal": features_of_thermal,
@@ -208,10 +212,11 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         tell("analyses", 3, 4)
     hysteresis = analyse_hysteresis(read.of_type(CyclicFeatures), calibration)
     endurance = analyse_endurance(read.of_type(EnduranceFeatures).values())
+    drift = analyse_drift(read.of_type(HoldFeatures), calibration, description)
     sweeps = read.of_type(SweepFeatures)
     pressure = analyse_pressure(sweeps, calibration, description)
     influences = analyse_influences(sweeps, calibration, description)
-    others = [found for found in (hysteresis, pressure) if found is not None]
+    others = [found for found in (hysteresis, drift, pressure) if found is not None]
     readings = read.readings
     if not len(readings.table) and others:
         readings = replace(readings, reference=others[0].reference)
@@ -244,6 +249,7 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         notices=sort_notices([*intake.notices, *notices]),
         hysteresis=hysteresis,
         endurance=endurance,
+        drift=drift,
         pressure=pressure,
         influences=influences,
     )

@@ -153,8 +153,9 @@ def analyse_drift(
 def _reference(features: list[HoldFeatures], calibration: Calibration | None) -> ReferenceQuantity:
     if calibration is not None:
         return calibration.reference
-    known = all(math.isfinite(hold.kept_strain) for own in features for hold in own.holds)
-    return STRAIN if known else ELONGATION
+    holds = [hold for own in features for hold in own.holds]
+    lengths = [hold for hold in holds if math.isfinite(hold.kept_elongation_mm + hold.kept_length_mm)]
+    return STRAIN if all(math.isfinite(hold.kept_strain) for hold in lengths) else ELONGATION
 
 
 def _kept_x(hold: Hold, reference: ReferenceQuantity) -> float:

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration
     from campaign.analyses.calibration_effort import CalibrationEffort
+    from campaign.analyses.drift import Drift
     from campaign.analyses.endurance import Endurance
     from campaign.analyses.findings import Findings
     from campaign.analyses.hysteresis import Hysteresis
@@ -56,6 +57,6 @@ class CampaignResults:
     notices: tuple[Notice, ...]
     hysteresis: Hysteresis | None = None
     endurance: Endurance | None = None
-    drift: object | None = None
+    drift: Drift | None = None
     pressure: Pressure | None = None
     influences: Influences | None = None
