@@ -16,6 +16,7 @@ from campaign.analyses.drift import analyse_drift
 from campaign.analyses.endurance import analyse_endurance
 from campaign.analyses.findings import collect_findings
 from campaign.analyses.hysteresis import analyse_hysteresis
+from campaign.analyses.influence_findings import influence_findings
 from campaign.analyses.influences import analyse_influences
 from campaign.analyses.limits import judge_limits
 from campaign.analyses.loop_findings import loop_findings
@@ -230,7 +231,10 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         effort,
         limits,
         put_back,
-        further=[*loop_findings(hysteresis, endurance, limits)],
+        further=[
+            *loop_findings(hysteresis, endurance, limits),
+            *influence_findings(pressure, influences, limits),
+        ],
         reference=readings.reference,
     )
     analyses = (calibration, variance, residuals, effort, *others, influences)

@@ -180,6 +180,9 @@ FindingKind = Literal[
     "loops",
     "endurance",
     "model",
+    "pressure",
+    "coupling",
+    "influences",
 ]
 """What a finding is about; ``site_templates/findings/KIND.html`` has its words."""
 

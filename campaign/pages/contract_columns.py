@@ -33,6 +33,9 @@ CONTRACT_COLUMNS: dict[str, tuple[str, ...]] = {
         "at_strain degree_of_hysteresis peak_signal zero_signal",
         "hysteresis": "generation module sensor settled_from_cycle width_percent_fso low high "
         "degree_of_hysteresis softening_percent",
+        "pressure": "generation module sensor per_kpa low high per_kpa_strain strain_error_per_kpa "
+        "residual_sd_before residual_sd_after",
+        "influences": "generation module sensor influence coefficient low high unit strain_equivalent",
     }.items()
 }
 """Columns of each promised table, in order."""
@@ -144,12 +147,30 @@ _MEANINGS: dict[str, str] = {
     "variance_source": "where the uncertainty was taken from",
     "survival": "share that works beyond (product-limit estimate)",
     "delay_s": "time by which the signal is late, if all dependence on rate were that",
+    "per_kpa": "change of the signal per kPa at zero strain (at the one length swept, where there is one)",
+    "per_kpa_strain": "its change per unit strain",
+    "strain_error_per_kpa": "apparent strain per kPa at the middle of the lengths",
+    "strain_error_in_use": "apparent strain at the pressure in use, at the length where it is largest",
+    "strain_loop": "rising minus falling at mid pressure, as strain",
+    "residual_sd_before": "SD about each sweep's mean without compensation",
+    "residual_sd_after": "the same with what other sweeps give taken off",
+    "left_out_by": "what was left out in turn",
+    "one_correction": "whether one correction serves all sensors of the generation",
+    "influence": "what was varied",
+    "coefficient": "change of the signal per unit of the influence",
+    "strain_equivalent": "apparent strain per unit of the influence",
+    "per_strain": "change of the coefficient per unit strain",
+    "relative_percent": "cross-axis sensitivity, or change of the zero signal per unit",
+    "sensitivity_percent": "change of the sensitivity per unit",
     "what": "what was found",
     "done": "what was done about it",
     "remedy": "what would mend it",
 }
 
 _UNIT_ENDINGS: tuple[tuple[str, str], ...] = (
+    ("strain_error_per_kpa", "mm/mm per kPa"),
+    ("per_kpa_strain", ""),
+    ("per_kpa", ""),
     ("_percent_fso", "%FSO"),
     ("humidity_percent", "%RH"),
     ("_percent", "%"),

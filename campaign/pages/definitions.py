@@ -36,6 +36,12 @@ DEFINITIONS: dict[str, tuple[str, str]] = {
         "calibration-effort",
         "strain_sd_predicted strain_sd_left_out strain_expanded factor",
     ),
+    "pressure": ("pressure", "per_kpa strain_error_per_kpa strain_error_in_use"),
+    "compensation": (
+        "compensation",
+        "residual_sd_before residual_sd_after strain_residual_sd_before strain_residual_sd_after",
+    ),
+    "influences": ("influences", "coefficient strain_equivalent"),
     "verdicts": ("limits", "verdict probability"),
 }
 """Words of a link → (address on the Method page, columns that it explains)."""

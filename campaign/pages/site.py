@@ -18,6 +18,7 @@ from campaign.pages.method import method_page
 from campaign.pages.module import module_pages
 from campaign.pages.notes import Notes
 from campaign.pages.page import Page, SiteFrame
+from campaign.pages.pressure import pressure_page
 from campaign.pages.provenance import provenance_page
 from campaign.pages.recordings import recordings_page
 from campaign.pages.render import render_site
@@ -71,6 +72,7 @@ def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
         residuals_page(results),
         calibration_effort_page(results),
         hysteresis_page(results),
+        pressure_page(results),
     )
     pages = [findings_page(results, mapped), *(page for page in measured if page is not None)]
     pages += [recordings_page(results), method_page(results)]

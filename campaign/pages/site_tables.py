@@ -35,6 +35,9 @@ CAPTIONS: dict[str, str] = {
     "loop_rates": "Width against rate, by sensor.",
     "loop_components": "Where the spread of the widths comes from.",
     "loop_means": "Mean signed width at mid range of every generation.",
+    "pressure_sweeps": "Every sweep of pressure: its line over both branches, loop width and drift.",
+    "pressure_corrections": "What is left of the error by pressure with every correction, left out.",
+    "influence_sweeps": "Every sweep of the other influences.",
     "endurance_log": "Zero and sensitivity of every logged cycle, up to the sensor’s failure.",
 }
 """Tables of the analyses that are written whole, with their captions."""
@@ -76,7 +79,7 @@ def _frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
         frames["calibration_effort"] = results.calibration_effort.table
     if len(results.limits.table):
         frames["limits"] = results.limits.table
-    return frames | _loop_frames(results)
+    return frames | _loop_frames(results) | _influence_frames(results)
 
 
 def _loop_frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
@@ -89,4 +92,15 @@ def _loop_frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
             frames["loop_rates"] = found.rates.sensors
     if results.endurance is not None:
         frames["endurance_log"] = results.endurance.log
+    return frames
+
+
+def _influence_frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
+    """Return the frames of pressure and the other influences, where they were measured."""
+    frames: dict[str, pd.DataFrame] = {}
+    if (pressure := results.pressure) is not None:
+        frames |= {"pressure_sweeps": pressure.sweeps, "pressure_corrections": pressure.spread.serving}
+    if (influences := results.influences) is not None:
+        parts = [result.sweeps.assign(influence=result.influence) for result in influences.results]
+        frames["influence_sweeps"] = pd.concat(parts, ignore_index=True)
     return frames
