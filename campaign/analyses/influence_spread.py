@@ -137,10 +137,11 @@ def _not_fitted(influence: str, generation: str, fault: str) -> Notice:
 
 def _with_effects(sweeps: pd.DataFrame, slopes: dict[SensorKey, SignalSlope]) -> pd.DataFrame:
     """Sweeps of sensors with a slope, with ``b`` and ``effect``, the apparent x per unit of the influence."""
-    names = zip(*(sweeps[key].astype(str) for key in SENSOR_KEYS), strict=True)
-    divisors = np.array([slopes[key].slope for key in names], dtype=float)
+    own = [slopes[key] for key in zip(*(sweeps[k].astype(str) for k in SENSOR_KEYS), strict=True)]
+    divisors = np.array([slope.slope for slope in own], dtype=float)
+    variances = np.nan_to_num(np.array([slope.variance for slope in own], dtype=float))
     known = np.isfinite(divisors) & (divisors != 0)
-    table: pd.DataFrame = sweeps[known].assign(b=divisors[known])
+    table: pd.DataFrame = sweeps[known].assign(b=divisors[known], b_variance=variances[known])
     table["effect"] = table["slope"] / table["b"]
     return table
 
@@ -280,8 +281,9 @@ def unit_tests(rows: pd.DataFrame) -> dict[str, MeansTest]:
     Parameters
     ----------
     rows
-        Sweeps of one generation with ``effect``. A sensor's mean is that over its runs; its error the
-        scatter of the runs' means (or of the sweeps about the change with x, where it has one run).
+        Sweeps of one generation with ``effect``, and the slope ``b`` with ``b_variance``. A sensor's mean is
+        that over its runs; its error the scatter of the runs' means (or of the sweeps about the change with
+        x, where it has one run), with that of the slope that all its sweeps are divided by.
 
     Returns
     -------
@@ -297,6 +299,8 @@ def unit_tests(rows: pd.DataFrame) -> dict[str, MeansTest]:
     freedom = float((counts - 1).sum()) - (columns - 1)
     spare = float(((counts - 1) * cells.var(ddof=1).fillna(0.0).to_numpy(float)).sum())
     error = spare / freedom / counts if freedom > 0 else np.full(len(counts), math.nan)
+    shared = (table["level"] / table["b"]) ** 2 * table["b_variance"]
+    error = error + shared.groupby([table[key] for key in SENSOR_KEYS]).mean().to_numpy(float)
     modules = pd.factorize(means.index.get_level_values("module"), sort=True)[0].astype(np.int64)
     values = means.to_numpy(float)
     found = {"module": test_groups(values, modules), "sensor": test_members(values, modules, error, freedom)}

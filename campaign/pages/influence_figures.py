@@ -45,7 +45,7 @@ def _figure(influences: Influences, result: InfluenceResult) -> Figure | None:
     where = sensor_axis(shown)
     words = [_sentence(row, unit, factor) for row in shown.to_dict("records")]
     ends = shown["estimate"].agg(["min", "max"]) * factor
-    between = f"between {numbers.significant(ends['min'], 2)} and {numbers.significant(ends['max'], 2, unit)}"
+    between = numbers.span(float(ends["min"]), float(ends["max"]), unit)
     return Figure(
         name=figure_name(result),
         caption=f"What {INFLUENCE_WORDS[result.influence]} does: {between} over "
@@ -53,7 +53,9 @@ def _figure(influences: Influences, result: InfluenceResult) -> Figure | None:
         alternative=f"Dots with 95 % intervals, one a sensor: {title.lower()}.",
         traces=tuple(interval_traces(shown, where, words, factor=factor)),
         layout=layout(
-            axis(title, unit), where.axis(), shapes=[level_line(0, upright=True, colour=palette.INK)]
+            axis(title, unit, rangemode="tozero"),
+            where.axis(),
+            shapes=[level_line(0, upright=True, colour=palette.INK)],
         ),
         table="influences",
         note=_note(result),
@@ -140,14 +142,14 @@ def influence_tables(influences: Influences | None) -> list[Table]:
                 ),
                 Column(
                     "relative_percent",
-                    "Headline",
+                    "In per cent",
                     "%",
                     interval=("relative_percent_low", "relative_percent_high"),
                     missing="–",
                 ),
-                Column("variance_source", "Interval from", kind="text"),
             ),
-            note="Headline: per cent of the zero signal per kelvin for temperature; for strain across, "
-            "cross-axis sensitivity.",
+            note="In per cent: of the zero signal per kelvin for temperature; for strain across, cross-axis "
+            "sensitivity. Intervals are from: "
+            f"{', '.join(sorted(set(frame['variance_source'].astype(str))))}.",
         )
     ]

@@ -132,10 +132,10 @@ def _figures(pressure: Pressure) -> Iterable[Figure]:
     made = (
         sweeps_figure(pressure, where),
         loops_figure(pressure),
+        hysteresis_figure(pressure, where),
         sensitivity_figure(pressure, where),
         corrections_figure(pressure),
         compensation_figure(pressure, where),
-        hysteresis_figure(pressure, where),
     )
     return [figure for figure in made if figure is not None]
 
@@ -157,7 +157,8 @@ def sweeps_figure(pressure: Pressure, where: SensorAxis) -> Figure:
             pressure.reference,
         )
     ]
-    rows = math.ceil(len(modules) / 3) if len(modules) > 4 else math.ceil(len(modules) / 2)
+    columns = 1 if len(modules) == 1 else 2 if len(modules) <= 4 else 3
+    rows = math.ceil(len(modules) / columns)
     title = "Apparent strain" if pressure.reference.name == "strain" else "Apparent length"
     y = axis(title, pressure.reference.shown_unit) if in_strain else axis("Change", pressure.unit)
     several = len(where.generations) > 1
@@ -171,7 +172,7 @@ def sweeps_figure(pressure: Pressure, where: SensorAxis) -> Figure:
             [f"{m} · {g}" if several else m for g, m in modules],
             axis("Pressure", "kPa"),
             y,
-            columns=1 if len(modules) == 1 else 2 if len(modules) <= 4 else 3,
+            columns=columns,
             gap=(0.04, 0.30 / rows if rows > 1 else 0.1),
             shapes=[level_line(0, colour=palette.SOFT, axes=panel(i)) for i in range(len(modules))],
         ),
@@ -268,7 +269,7 @@ def sensor_sweeps_figure(
         traces.append(
             line(
                 influence,
-                signal,
+                signal - row["level"],
                 colour=style.colour,
                 width=0.9,
                 text=[words] * len(influence),
@@ -278,22 +279,20 @@ def sensor_sweeps_figure(
             )
         )
         ends = np.array([row["influence_low"], row["influence_high"]])
-        traces.append(
-            line(ends, row["level"] + row["slope"] * ends, colour=palette.INK, dash="dash", width=1.0)
-        )
+        traces.append(line(ends, row["slope"] * ends, colour=palette.INK, dash="dash", width=0.8))
     own = pressure.points
     own = own[(own["module"] == module) & (own["sensor"] == sensor)]
     return Figure(
         name=name,
         caption=_sensor_caption(pressure, module, sensor),
-        alternative=f"Signal of {module} {sensor} against pressure, one loop a sweep, with its line.",
+        alternative=f"Change of {module} {sensor} with pressure, one loop a sweep, with its line.",
         traces=tuple(traces),
-        layout=layout(axis("Pressure", "kPa"), axis("Signal", unit)),
+        layout=layout(axis("Pressure", "kPa"), axis("Change of the signal", unit)),
         data=own[["trial", "repetition", "sweep", "leg", "x", "influence", "signal", "time_s"]].rename(
             columns={"influence": "pressure_kpa"}
         ),
-        note="Each length has its own colour; dashes are the line of each sweep over both branches. Curves "
-        "are thinned for drawing and keep their extremes.",
+        note="Each sweep less its signal without pressure. Each length has its own colour; dashes are the line "
+        "of each sweep over both branches. Curves are thinned for drawing and keep their extremes.",
         height=400,
     )
 
@@ -314,12 +313,14 @@ def _sensor_caption(pressure: Pressure, module: str, sensor: str) -> str:
     return f"{module} {sensor}: {slope} in {change}."
 
 
-def sensitivity_figure(pressure: Pressure, where: SensorAxis) -> Figure | None:
-    """Return the apparent strain per kPa of every sensor, and its change with strain, with intervals."""
-    reference, table = pressure.reference, pressure.table
+def sensitivity_figure(
+    pressure: Pressure, where: SensorAxis, table: pd.DataFrame | None = None
+) -> Figure | None:
+    """Return the apparent strain per kPa of every sensor of *table* (all), with intervals."""
+    reference, table = pressure.reference, pressure.table if table is None else table
     known = table.dropna(subset=["strain_error_per_kpa"])
     if known.empty:
-        return _coefficients_figure(pressure, where)
+        return _coefficients_figure(pressure, where, table)
     shown = known.rename(
         columns={
             "strain_error_per_kpa": "estimate",
@@ -334,13 +335,17 @@ def sensitivity_figure(pressure: Pressure, where: SensorAxis) -> Figure | None:
     spread = [float(v) * reference.shown_factor for v in (known["strain_error_per_kpa"].agg(["min", "max"]))]
     return Figure(
         name="sensitivity",
-        caption=f"The error by pressure lies between {numbers.significant(spread[0], 2)} and "
-        f"{numbers.significant(spread[1], 2, unit)} over {numbers.count(len(known), 'sensor')}.",
+        caption=f"What a kilopascal reads as: {numbers.span(spread[0], spread[1], unit)} over "
+        f"{numbers.count(len(known), 'sensor')}.",
         alternative="Dots with 95 % intervals, one a sensor, ordered by module: apparent strain per "
         "kilopascal at the middle of the lengths, with an upright at zero.",
         traces=tuple(interval_traces(shown, where, words, factor=reference.shown_factor)),
         layout=layout(
-            axis("Apparent strain" if reference.name == "strain" else "Apparent length", f"{unit}"),
+            axis(
+                "Apparent strain" if reference.name == "strain" else "Apparent length",
+                unit,
+                rangemode="tozero",
+            ),
             where.axis(),
             shapes=[level_line(0, upright=True, colour=palette.INK)],
         ),
@@ -351,9 +356,9 @@ def sensitivity_figure(pressure: Pressure, where: SensorAxis) -> Figure | None:
     )
 
 
-def _coefficients_figure(pressure: Pressure, where: SensorAxis) -> Figure | None:
+def _coefficients_figure(pressure: Pressure, where: SensorAxis, table: pd.DataFrame) -> Figure | None:
     """The same in signal units, where no slope turns signals into strains."""
-    known = pressure.table.dropna(subset=["per_kpa"]).rename(columns={"per_kpa": "estimate"})
+    known = table.dropna(subset=["per_kpa"]).rename(columns={"per_kpa": "estimate"})
     if known.empty:
         return None
     unit = f"{pressure.unit}/kPa"
@@ -410,7 +415,8 @@ def corrections_figure(pressure: Pressure) -> Figure | None:
         traces=tuple(traces),
         layout=layout(
             axis("SD of what pressure leaves", reference.shown_unit, rangemode="tozero"),
-            axis("Correction", ticks=ticks, low=-0.6, high=len(names) - 0.4, reverse=True),
+            axis("", ticks=ticks, low=-0.6, high=len(names) - 0.4, reverse=True),
+            margin={"l": 170},
         ),
         data=serving,
         note="Always left out: a sensor is never corrected by itself, but by other modules, other sensors of "
@@ -522,7 +528,7 @@ def hysteresis_figure(pressure: Pressure, where: SensorAxis) -> Figure | None:
         alternative="Dots with 95 % intervals, one a sensor: rising minus falling at mid pressure.",
         traces=tuple(interval_traces(drawn, where, words, factor=reference.shown_factor)),
         layout=layout(
-            axis("Rising − falling", reference.shown_unit),
+            axis("Rising − falling", reference.shown_unit, rangemode="tozero"),
             where.axis(),
             shapes=[level_line(0, upright=True, colour=palette.INK)],
         ),
@@ -580,11 +586,18 @@ def pressure_table(pressure: Pressure) -> Table:
             Column("strain_residual_sd_after", "after", unit, factor=factor, digits=2),
             Column("sweeps", "Sweeps", kind="integer"),
             Column("lengths", "Lengths", kind="integer"),
-            Column("variance_source", "Interval from", kind="text"),
+            *_source_column(pressure.table),
         ),
         note="Per kPa at zero strain, or at the one length that was swept. The error in use is that at the "
         "end of the lengths where it is largest.",
     )
+
+
+def _source_column(table: pd.DataFrame) -> tuple[Column, ...]:
+    """Where intervals come from, only where that differs from sensor to sensor (the text says it else)."""
+    if table["variance_source"].nunique() < 2:
+        return ()
+    return (Column("variance_source", "Interval from", kind="text"),)
 
 
 def components_table(pressure: Pressure) -> Table:

@@ -29,6 +29,7 @@ from campaign.pages.figures import (
     line,
     points,
 )
+from campaign.pages.influence_sections import sensor_influences
 from campaign.pages.page import Page
 from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
@@ -135,6 +136,8 @@ def _sensor_page(
         ]
         loops = hysteresis_figure(results, module, sensor)
         figures += [loops] if loops is not None else []
+    influences, swept = sensor_influences(results, module, sensor)
+    figures += swept
     tables = [*_runs_table(results, module, sensor), *_limits_table(results, module, sensor)]
     return Page(
         slug=slugs.sensor_slug(module, sensor),
@@ -157,6 +160,7 @@ def _sensor_page(
             "accuracy": _accuracy_of(records),
             "averaged": AVERAGED,
             "sections": sections,
+            "influences": influences,
             "register": _register_of(results, module, sensor),
             "used": bool(len(rows) and rows["used"].any()),
             "labels": {} if results.calibration is None else results.calibration.labels,
