@@ -5,11 +5,12 @@ from __future__ import annotations
 from collections.abc import Hashable, Sequence
 from typing import Any
 
+import numpy as np
 import pandas as pd
 
 from campaign.analyses.influences import InfluenceResult, Influences
 from campaign.pages import numbers, palette, slugs
-from campaign.pages.figures import Figure, axis, layout, level_line
+from campaign.pages.figures import Figure, Layout, axis, layout, level_line
 from campaign.pages.sensor_axis import interval_traces, sensor_axis
 from campaign.pages.tables import Column, Table
 
@@ -36,6 +37,14 @@ def figure_name(result: InfluenceResult) -> str:
     return result.influence if result.unit != "step" else f"{result.influence}-by-step"
 
 
+def axis_with_zero(title: str, unit: str, rows: pd.DataFrame, factor: float) -> Layout:
+    """Return an axis that shows zero, and the estimates of *rows* with their limits."""
+    values = rows[["estimate", "low", "high"]].to_numpy(float) * factor
+    known = [0.0, *values[np.isfinite(values)].tolist()]
+    spare = 0.05 * ((max(known) - min(known)) or 1.0)
+    return axis(title, unit, low=min(known) - spare, high=max(known) + spare)
+
+
 def _figure(influences: Influences, result: InfluenceResult) -> Figure | None:
     rows = influences.of(result.influence)
     rows = rows[rows["influence_unit"] == {"°C": "K"}.get(result.unit, result.unit)]
@@ -53,7 +62,7 @@ def _figure(influences: Influences, result: InfluenceResult) -> Figure | None:
         alternative=f"Dots with 95 % intervals, one a sensor: {title.lower()}.",
         traces=tuple(interval_traces(shown, where, words, factor=factor)),
         layout=layout(
-            axis(title, unit, rangemode="tozero"),
+            axis_with_zero(title, unit, shown, factor),
             where.axis(),
             shapes=[level_line(0, upright=True, colour=palette.INK)],
         ),

@@ -27,7 +27,7 @@ from campaign.pages.figures import (
     points,
     small_multiples,
 )
-from campaign.pages.influence_figures import influence_figures, influence_tables
+from campaign.pages.influence_figures import axis_with_zero, influence_figures, influence_tables
 from campaign.pages.page import Page
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
 from campaign.pages.skin_map import SkinMap
@@ -291,8 +291,8 @@ def sensor_sweeps_figure(
         data=own[["trial", "repetition", "sweep", "leg", "x", "influence", "signal", "time_s"]].rename(
             columns={"influence": "pressure_kpa"}
         ),
-        note="Each sweep less its signal without pressure. Each length has its own colour; dashes are the line "
-        "of each sweep over both branches. Curves are thinned for drawing and keep their extremes.",
+        note="Each sweep less its signal without pressure. Each length has its own colour; dashes are the "
+        "line of each sweep over both branches. Curves are thinned for drawing and keep their extremes.",
         height=400,
     )
 
@@ -341,10 +341,11 @@ def sensitivity_figure(
         "kilopascal at the middle of the lengths, with an upright at zero.",
         traces=tuple(interval_traces(shown, where, words, factor=reference.shown_factor)),
         layout=layout(
-            axis(
+            axis_with_zero(
                 "Apparent strain" if reference.name == "strain" else "Apparent length",
                 unit,
-                rangemode="tozero",
+                shown,
+                reference.shown_factor,
             ),
             where.axis(),
             shapes=[level_line(0, upright=True, colour=palette.INK)],
@@ -414,7 +415,7 @@ def corrections_figure(pressure: Pressure) -> Figure | None:
         "generation, one a position, one a module and the sensor’s own.",
         traces=tuple(traces),
         layout=layout(
-            axis("SD of what pressure leaves", reference.shown_unit, rangemode="tozero"),
+            axis("SD of what pressure leaves", reference.shown_unit),
             axis("", ticks=ticks, low=-0.6, high=len(names) - 0.4, reverse=True),
             margin={"l": 170},
         ),
@@ -528,7 +529,7 @@ def hysteresis_figure(pressure: Pressure, where: SensorAxis) -> Figure | None:
         alternative="Dots with 95 % intervals, one a sensor: rising minus falling at mid pressure.",
         traces=tuple(interval_traces(drawn, where, words, factor=reference.shown_factor)),
         layout=layout(
-            axis("Rising − falling", reference.shown_unit, rangemode="tozero"),
+            axis_with_zero("Rising − falling", reference.shown_unit, drawn, reference.shown_factor),
             where.axis(),
             shapes=[level_line(0, upright=True, colour=palette.INK)],
         ),
