@@ -13,6 +13,7 @@ import pandas as pd
 from campaign.analyses.calibration import Calibration, analyse_calibration
 from campaign.analyses.calibration_effort import analyse_calibration_effort
 from campaign.analyses.drift import analyse_drift
+from campaign.analyses.drift_findings import drift_findings
 from campaign.analyses.endurance import analyse_endurance
 from campaign.analyses.findings import collect_findings
 from campaign.analyses.hysteresis import analyse_hysteresis
@@ -233,6 +234,7 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         put_back,
         further=[
             *loop_findings(hysteresis, endurance, limits),
+            *drift_findings(drift, limits),
             *influence_findings(pressure, influences, limits),
         ],
         reference=readings.reference,

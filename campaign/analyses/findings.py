@@ -179,6 +179,8 @@ FindingKind = Literal[
     "zero_return",
     "loops",
     "endurance",
+    "holds",
+    "zero_over_time",
     "model",
     "pressure",
     "coupling",

@@ -69,6 +69,8 @@ HOLD_COLUMNS = (
     "change_1h_df",
     "change_1h_strain",
     "change_end_percent_fso",
+    "change_end_low",
+    "change_end_high",
     "per_decade_from_ramp_start",
     "per_decade_from_s",
     "creep_20_30min_low",

@@ -42,6 +42,15 @@ DEFINITIONS: dict[str, tuple[str, str]] = {
         "residual_sd_before residual_sd_after strain_residual_sd_before strain_residual_sd_after",
     ),
     "influences": ("influences", "coefficient strain_equivalent"),
+    "what it may be called": ("relaxation", "called place"),
+    "times of a hold": ("hold-time", "change_1min_percent_fso change_1h_percent_fso duration_s"),
+    "slope a decade": ("slope-per-decade", "percent_fso_per_decade"),
+    "20–30 min, zero return of a hold": ("hold-zero-return", "creep_20_30min_percent_fso"),
+    "forms": ("creep-forms", "form forms_shown aicc_above_best shape"),
+    "settling time": ("settling-time", "_settles"),
+    "Allan deviation": ("allan", "deviation_strain white flicker least_deviation"),
+    "zero across sessions": ("zero-over-time", "departure_percent_fso"),
+    "blank channels": ("blank", "per_hour parasitic"),
     "verdicts": ("limits", "verdict probability"),
 }
 """Words of a link → (address on the Method page, columns that it explains)."""

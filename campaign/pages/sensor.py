@@ -16,6 +16,7 @@ from campaign.analyses.sensor_figures import expanded_uncertainty, principal_lin
 from campaign.pages import numbers, palette, slugs
 from campaign.pages.calculator import calculator_data, record_href
 from campaign.pages.calibration import hysteresis_in_percent, x_title
+from campaign.pages.drift import sensor_holds
 from campaign.pages.figures import (
     Figure,
     Layout,
@@ -30,6 +31,7 @@ from campaign.pages.figures import (
     points,
 )
 from campaign.pages.influence_sections import sensor_influences
+from campaign.pages.loop_sections import sensor_loops
 from campaign.pages.page import Page
 from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
@@ -138,7 +140,12 @@ def _sensor_page(
         figures += [loops] if loops is not None else []
     influences, swept = sensor_influences(results, module, sensor)
     figures += swept
+    loops, outlines = sensor_loops(results, module, sensor)
+    figures += outlines
+    holds, held, holds_by_trial = sensor_holds(results, module, sensor)
+    figures += holds
     tables = [*_runs_table(results, module, sensor), *_limits_table(results, module, sensor)]
+    tables += [held] if held is not None else []
     return Page(
         slug=slugs.sensor_slug(module, sensor),
         number=None,
@@ -161,6 +168,8 @@ def _sensor_page(
             "averaged": AVERAGED,
             "sections": sections,
             "influences": influences,
+            "loops": loops,
+            "holds_by_trial": holds_by_trial,
             "register": _register_of(results, module, sensor),
             "used": bool(len(rows) and rows["used"].any()),
             "labels": {} if results.calibration is None else results.calibration.labels,

@@ -11,6 +11,7 @@ from campaign.pages.calculator import record_files
 from campaign.pages.calibration import calibration_page
 from campaign.pages.calibration_effort import calibration_effort_page
 from campaign.pages.campaign_map import campaign_map
+from campaign.pages.drift import drift_page
 from campaign.pages.findings import findings_page
 from campaign.pages.hysteresis import hysteresis_page
 from campaign.pages.loop_figures import loop_scripts
@@ -72,6 +73,7 @@ def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
         residuals_page(results),
         calibration_effort_page(results),
         hysteresis_page(results),
+        drift_page(results),
         pressure_page(results),
     )
     pages = [findings_page(results, mapped), *(page for page in measured if page is not None)]

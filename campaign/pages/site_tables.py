@@ -29,6 +29,11 @@ CAPTIONS: dict[str, str] = {
     "residuals": "Conditional and marginal residuals of the nested model.",
     "calibration_effort": "Error against calibration effort, predicted and left out.",
     "limits": "Every limit judged, sensor by sensor and for a new sensor.",
+    "holds": "Every hold: changes, slope a decade, form, and what it may be called.",
+    "hold_forms": "Every form fitted to every hold.",
+    "allan": "Overlapping Allan deviation of every hold at rest and blank channel.",
+    "zero_over_time": "The zero of every sensor, session by session.",
+    "hold_means": "Mean slope a decade of the stretched holds of every generation.",
     "loops": "Every loop: width, area, peak and zero signal, rate.",
     "hysteresis": "The settled loops of every sensor.",
     "loop_runs": "Every cyclic trial: when it settles, first and settled zero and peak signal.",
@@ -79,7 +84,7 @@ def _frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
         frames["calibration_effort"] = results.calibration_effort.table
     if len(results.limits.table):
         frames["limits"] = results.limits.table
-    return frames | _loop_frames(results) | _influence_frames(results)
+    return frames | _loop_frames(results) | _drift_frames(results) | _influence_frames(results)
 
 
 def _loop_frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
@@ -104,3 +109,18 @@ def _influence_frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
         parts = [result.sweeps.assign(influence=result.influence) for result in influences.results]
         frames["influence_sweeps"] = pd.concat(parts, ignore_index=True)
     return frames
+
+
+def _drift_frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
+    """Return the frames of holds, noise at rest and zeros, where they were measured."""
+    if (drift := results.drift) is None:
+        return {}
+    frames = {
+        "holds": drift.holds,
+        "hold_forms": drift.forms,
+        "allan": drift.allan,
+        "hold_means": drift.means,
+    }
+    if drift.zero is not None:
+        frames["zero_over_time"] = drift.zero.table
+    return {name: frame for name, frame in frames.items() if len(frame)}
