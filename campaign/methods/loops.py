@@ -488,7 +488,7 @@ def _holes(x: FloatArray, branch: IntArray, low: FloatArray, high: FloatArray) -
 
 
 def thin_cycles(
-    x: FloatArray, y: FloatArray, starts: IntArray, stops: IntArray, buckets: int = 24
+    x: FloatArray, y: FloatArray, starts: IntArray, stops: IntArray, buckets: int = 32
 ) -> list[IntArray]:
     """Choose samples that draw each cycle as it looks.
 

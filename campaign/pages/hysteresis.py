@@ -13,6 +13,7 @@ from campaign.analyses.loop_findings import lasting
 from campaign.analyses.loop_table import BY_LINE, BY_LOOP
 from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers, palette, slugs
+from campaign.pages.campaign_map import LOOP_KEY, campaign_map
 from campaign.pages.endurance import endurance_figures, endurance_tables
 from campaign.pages.figures import (
     Figure,
@@ -23,6 +24,7 @@ from campaign.pages.figures import (
     level_line,
     line,
     panel,
+    plain,
     points,
     small_multiples,
 )
@@ -38,11 +40,15 @@ from campaign.pages.loop_figures import (
 )
 from campaign.pages.page import Page
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
+from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import ReferenceQuantity
 
 MOST_CYCLES = 40
 """Cycles of one sensor that the figure of width against cycle draws, evenly spaced on a logarithmic axis."""
+
+MOST_LINE_POINTS = 2400
+"""Points of all lines of that figure together."""
 
 MOST_PANELS = 48
 """Modules that small multiples show; the tables hold all."""
@@ -65,6 +71,7 @@ def hysteresis_page(results: CampaignResults) -> Page | None:
     found, endurance = results.hysteresis, results.endurance
     if found is None and endurance is None:
         return None
+    mapped = campaign_map(results, chosen=LOOP_KEY) if found is not None else None
     figures = [*(_figures(found) if found is not None else ()), *endurance_figures(endurance)]
     tables = [*(_tables(found) if found is not None else ()), *endurance_tables(endurance)]
     return Page(
@@ -85,11 +92,12 @@ def hysteresis_page(results: CampaignResults) -> Page | None:
             "delays": [] if found is None else found.rates.delays.to_dict("records"),
             "component_words": COMPONENT_WORDS,
             "survivors": () if endurance is None else lasting(endurance),
+            "map": mapped,
             "percent": "" if found is None else width_unit(found),
         },
         figures=tuple(figures),
         tables=tuple(tables),
-        data={"loops": _picker(found)} if found is not None else {},
+        data=_data(found, mapped),
         description="How wide loops of stretch and release are, when they settle, what rate does to them.",
     )
 
@@ -98,11 +106,11 @@ def _figures(found: Hysteresis) -> Iterable[Figure]:
     where = sensor_axis(found.sensors)
     made = [
         widest_figure(found),
+        cycles_figure(found, where),
         widths_figure(found, where),
         curves_figure(found, where),
-        cycles_figure(found, where),
-        rates_figure(found, where),
         components_figure(found),
+        rates_figure(found, where),
     ]
     return [figure for figure in made if figure is not None]
 
@@ -150,6 +158,13 @@ def widest_figure(found: Hysteresis) -> Figure | None:
     )
 
 
+def _data(found: Hysteresis | None, mapped: SkinMap | None) -> dict[str, object]:
+    """What the page's scripts need: loops to pick, and the skin map's figures."""
+    if found is None:
+        return {}
+    return {"loops": _picker(found)} | ({"skin_map": mapped.data} if mapped is not None else {})
+
+
 def _picker(found: Hysteresis) -> dict[str, object]:
     """What the page's script needs to draw another sensor."""
     first = widest_sensor(found)
@@ -184,7 +199,7 @@ def widths_figure(found: Hysteresis, where: SensorAxis) -> Figure:
         name="widths",
         caption=f"The widest settled loop is that of {worst['module']} {worst['sensor']}: "
         f"{numbers.interval(worst['estimate'], worst['low'], worst['high'], unit)}; "
-        f"{numbers.whole(told)} of {numbers.count(len(rows), 'sensor')} have loops told from none.",
+        f"loops are told from none in {numbers.whole(told)} of {numbers.count(len(rows), 'sensor')}.",
         alternative="Dots with 95 % intervals, one a sensor, by module: largest width of the settled loop.",
         traces=tuple(interval_traces(rows, where, text)),
         layout=layout(axis("Settled width", unit), where.axis()),
@@ -211,11 +226,8 @@ def curves_figure(found: Hysteresis, where: SensorAxis) -> Figure | None:
                     colour=style.colour,
                     dash=style.dash,
                     width=1.2,
-                    text=[
-                        f"{module} {sensor}: {numbers.interval(w, a, b, unit)}"
-                        for w, a, b in zip(own["width_percent_fso"], own["low"], own["high"], strict=True)
-                    ],
-                    links=[slugs.sensor_href(module, str(sensor))] * len(own),
+                    hovertext=plain(f"{module} {sensor}"),
+                    hoverinfo="text",
                     module=module,
                     sensor=str(sensor),
                     axes=panel(index),
@@ -249,8 +261,8 @@ def _curves_caption(found: Hysteresis) -> str:
     clear = (found.sensors["mid_low"] > 0) | (found.sensors["mid_high"] < 0)
     up, down = int(np.sum((signs > 0) & clear)), int(np.sum((signs < 0) & clear))
     return (
-        f"At mid range the signal is told to be larger on the way up in {numbers.count(up, 'sensor')}, "
-        f"on the way down in {numbers.whole(down)} of {numbers.whole(len(signs))}."
+        f"Of {numbers.count(len(signs), 'sensor')}, {numbers.whole(up)} are told to have the larger signal "
+        f"on the way up at mid range, {numbers.whole(down)} on the way down."
     )
 
 
@@ -263,8 +275,9 @@ def cycles_figure(found: Hysteresis, where: SensorAxis) -> Figure | None:
     unit = width_unit(found)
     traces: list[Trace] = []
     drawn = []
+    most = min(MOST_CYCLES, max(2, MOST_LINE_POINTS // rows.groupby(["module", "sensor"]).ngroups))
     for (generation, module, sensor), own in rows.groupby(["generation", "module", "sensor"], sort=True):
-        kept = own.iloc[_spaced(len(own))]
+        kept = own.iloc[_spaced(len(own), most)]
         drawn.append(kept)
         style = where.style(str(generation))
         traces.append(
@@ -274,11 +287,8 @@ def cycles_figure(found: Hysteresis, where: SensorAxis) -> Figure | None:
                 colour=style.colour,
                 dash=style.dash,
                 width=1.1,
-                text=[
-                    f"{module} {sensor}, cycle {c}: {numbers.significant(w, 3, unit)}"
-                    for c, w in zip(kept["cycle"], kept["mid_width_percent_fso"], strict=True)
-                ],
-                links=[slugs.sensor_href(str(module), str(sensor))] * len(kept),
+                hovertext=plain(f"{module} {sensor}"),
+                hoverinfo="text",
                 module=str(module),
                 sensor=str(sensor),
             )
@@ -289,7 +299,7 @@ def cycles_figure(found: Hysteresis, where: SensorAxis) -> Figure | None:
         name="width-by-cycle",
         caption=_settling_caption(settling),
         alternative="Width at mid range against the number of the cycle, one line a sensor.",
-        traces=tuple(traces[: 10_000 // MOST_CYCLES]),
+        traces=tuple(traces),
         layout=layout(axis("Cycle", logarithmic=long), axis("Width at mid range", unit), hovermode="closest"),
         data=pd.concat(drawn)[
             [
@@ -308,11 +318,11 @@ def cycles_figure(found: Hysteresis, where: SensorAxis) -> Figure | None:
     )
 
 
-def _spaced(count: int) -> list[int]:
-    """Places of at most :data:`MOST_CYCLES` cycles, evenly spaced on a logarithmic axis, both ends kept."""
-    if count <= MOST_CYCLES:
+def _spaced(count: int, most: int) -> list[int]:
+    """Places of at most *most* cycles, evenly spaced on a logarithmic axis, both ends kept."""
+    if count <= most:
         return list(range(count))
-    places = np.unique(np.round(np.geomspace(1, count, MOST_CYCLES)).astype(int)) - 1
+    places = np.unique(np.round(np.geomspace(1, count, most)).astype(int)) - 1
     return [int(place) for place in places]
 
 
@@ -322,7 +332,8 @@ def _settling_caption(settling: dict[str, object]) -> str:
         return "No sensor’s loops settle within the cycles that were run."
     latest = numbers.whole(float(str(settling["latest"])))
     if settled == sensors:
-        return f"All {numbers.count(sensors, 'sensor')} are settled from cycle {latest} on at the latest."
+        who = f"All {numbers.count(sensors, 'sensor')} are" if sensors > 1 else "The sensor is"
+        return f"{who} settled from cycle {latest} on at the latest."
     return (
         f"{numbers.whole(settled)} of {numbers.count(sensors, 'sensor')} settle, from cycle {latest} on at "
         "the latest; the others still change at the end of a run."
@@ -443,11 +454,18 @@ def components_figure(found: Hysteresis) -> Figure | None:
 
 
 def _tables(found: Hysteresis) -> Iterable[Table]:
-    reference = found.reference
-    factor, unit, per_cent = reference.shown_factor, reference.shown_unit, width_unit(found)
+    yield _components_table(found)
+    if found.several_rates:
+        yield _rates_table(found)
+    yield _sensors_table(found)
+
+
+def _sensors_table(found: Hysteresis) -> Table:
+    reference, per_cent = found.reference, width_unit(found)
+    factor, unit = reference.shown_factor, reference.shown_unit
     rows = found.sensors.sort_values("width_percent_fso", ascending=False, kind="stable")
     links = [slugs.sensor_href(str(m), str(s)) for m, s in zip(rows["module"], rows["sensor"], strict=True)]
-    yield Table(
+    return Table(
         name="hysteresis",
         caption="The settled loops of every sensor, widest first.",
         frame=rows.assign(_href=links),
@@ -457,24 +475,26 @@ def _tables(found: Hysteresis) -> Iterable[Table]:
             Column("width_percent_fso", "Width", per_cent, interval=("low", "high")),
             Column("width_strain", "as " + reference.name, unit, factor=factor, digits=2),
             Column("at_strain", "widest at", unit, factor=factor, digits=2),
-            Column("degree_of_hysteresis", "Degree by area", "%", factor=100.0, digits=2),
-            Column("settled_from_cycle", "Settled from cycle", kind="integer", missing="not settled"),
-            Column("softening_percent", "First loop’s range, more by", "%", digits=2, missing="not settled"),
+            Column("degree_of_hysteresis", "By area", "%", factor=100.0, digits=2),
+            Column("settled_from_cycle", "Settled from", kind="integer", missing="not settled"),
+            Column("softening_percent", "Softens by", "%", digits=2, missing="not settled"),
             Column("runs", "Runs", kind="integer"),
-            Column("loops", "Loops", kind="integer"),
         ),
-        note="Width and degree by area are two figures, not two units of one.",
+        note="Width and degree of hysteresis by area are two figures, not two units of one. Settled from: "
+        "number of the cycle. Softens by: range of signal of the first loop over that of settled ones. "
+        "Intervals: " + "; ".join(sorted(set(found.sensors["variance_source"].astype(str)))) + ".",
     )
-    if found.several_rates:
-        yield _rates_table(found)
-    yield Table(
+
+
+def _components_table(found: Hysteresis) -> Table:
+    return Table(
         name="loop_components",
         caption="Where the spread of the widths at mid range comes from.",
         frame=found.components.assign(_words=found.components["called"].map(COMPONENT_WORDS)),
         columns=(
             Column("generation", "Generation", kind="text"),
             Column("_words", "Between", kind="text"),
-            Column("sd_percent_fso", "SD", per_cent, interval=("low", "high")),
+            Column("sd_percent_fso", "SD", width_unit(found), interval=("low", "high")),
             Column("degrees_of_freedom", "Degrees of freedom", kind="integer"),
             Column("label", "What the design supports", kind="text"),
         ),
@@ -485,33 +505,33 @@ def _tables(found: Hysteresis) -> Iterable[Table]:
 def _rates_table(found: Hysteresis) -> Table:
     reference: ReferenceQuantity = found.reference
     factor, unit = reference.shown_factor, reference.shown_unit
-    frame = found.rates.sensors
+    frame = found.rates.sensors.sort_values("delay_s", key=abs, ascending=False, kind="stable")
     millis = frame.assign(
         _delay=frame["delay_s"] * 1e3, _low=frame["delay_low_s"] * 1e3, _high=frame["delay_high_s"] * 1e3
     )
     return Table(
         name="loop_rates",
-        caption="Width against rate: constant + delay × rate, and per decade of rate.",
+        caption="Width against rate: constant + delay × rate, and per decade of rate; longest delay first.",
         frame=millis,
         columns=(
             Column("module", "Module", kind="text"),
             Column("sensor", "Sensor", kind="text"),
-            Column("rates", "Rates", kind="integer"),
             Column(
                 "strain_at_rest",
-                "Width left at rate zero",
+                "Width at rate zero",
                 unit,
                 factor=factor,
                 interval=("strain_at_rest_low", "strain_at_rest_high"),
             ),
-            Column("_delay", "Delay, if all of it were one", "ms", interval=("_low", "_high")),
+            Column("_delay", "Delay, if all were one", "ms", interval=("_low", "_high")),
             Column(
                 "percent_fso_per_decade",
-                "Change a decade of rate",
+                "A decade of rate",
                 width_unit(found),
                 interval=("low", "high"),
             ),
         ),
+        shown_rows=20,
         note="A signal that is late by τ narrows or turns the loop by 2 τ × rate: what grows linearly with "
         "rate cannot be told from a time shift between channels.",
     )

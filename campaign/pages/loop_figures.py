@@ -5,7 +5,6 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 
-import numpy as np
 import orjson
 import pandas as pd
 
@@ -71,8 +70,8 @@ def _trace(curve: SensorCurve, reference: ReferenceQuantity, dash: str, cycles: 
     rate = rate_words(curve.rate_per_s, reference)
     words = f"{curve.module} {curve.sensor}, cycle {curve.cycle} of run {curve.repetition}, {rate}"
     trace = line(
-        np.append(curve.x, curve.x[:1]) * reference.shown_factor,
-        np.append(curve.signal, curve.signal[:1]),
+        curve.x * reference.shown_factor,
+        curve.signal,
         name=f"cycle {curve.cycle}, {rate}",
         colour=colour,
         dash=dash,

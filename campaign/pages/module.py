@@ -26,6 +26,7 @@ from campaign.pages.figures import (
     points,
 )
 from campaign.pages.influence_sections import module_pressure_figure
+from campaign.pages.loop_sections import module_widths_figure
 from campaign.pages.page import Page
 from campaign.pages.sensor import FIGURE_ORDER, sensor_keys
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
@@ -79,7 +80,7 @@ def _module_page(results: CampaignResults, mapped: SkinMap, generation: str, mod
             module_merits_figure(results, module),
             module_effects_figure(results, module, where),
         ]
-    figures.append(module_pressure_figure(results, module))
+    figures += [module_widths_figure(results, module), module_pressure_figure(results, module)]
     return Page(
         slug=slugs.module_slug(module),
         number=None,

@@ -140,7 +140,7 @@ def _sensor_page(
         figures += [loops] if loops is not None else []
     influences, swept = sensor_influences(results, module, sensor)
     figures += swept
-    loops, outlines = sensor_loops(results, module, sensor)
+    looped, outlines = sensor_loops(results, module, sensor)
     figures += outlines
     holds, held, holds_by_trial = sensor_holds(results, module, sensor)
     figures += holds
@@ -168,7 +168,7 @@ def _sensor_page(
             "averaged": AVERAGED,
             "sections": sections,
             "influences": influences,
-            "loops": loops,
+            "loops": looped,
             "holds_by_trial": holds_by_trial,
             "register": _register_of(results, module, sensor),
             "used": bool(len(rows) and rows["used"].any()),
