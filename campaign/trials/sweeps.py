@@ -266,12 +266,18 @@ def _points_of(trial: Trial, values: FloatArray, rows: IntArray, legs: IntArray)
     signs = _leg_signs(values[rows], legs)
     if trial.time_s is None or len(rows) <= TABLE_ROWS:
         starts = np.arange(len(rows))
-        return _averaged(trial, values, rows, starts, starts + 1, legs, signs)
+        return _turns_apart(_averaged(trial, values, rows, starts, starts + 1, legs, signs))
     starts, stops = find_plateaus(values[rows])
     if len(starts) >= 3 and float(np.sum(stops - starts)) >= 0.5 * len(rows):
         settled = starts + (stops - starts) // 3
-        return _averaged(trial, values, rows, settled, stops, legs, signs)
+        return _turns_apart(_averaged(trial, values, rows, settled, stops, legs, signs))
     return _stepped(trial, values, rows, legs, signs)
+
+
+def _turns_apart(points: pd.DataFrame) -> pd.DataFrame:
+    """Points of dwells or of a table, in which the one at a turn belongs to neither branch."""
+    turning = points["leg"].diff().fillna(0) != 0
+    return points.assign(branch=points["branch"].where(~turning, 0))
 
 
 def _stepped(
