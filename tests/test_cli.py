@@ -15,6 +15,7 @@ import pytest
 
 from campaign import __version__
 from campaign.cli import main
+from campaign.recordings.beginning import wide_header
 from campaign.recordings.description_file import load_description
 from campaign.recordings.intake_tables import NOTICE_COLUMNS, RECORDING_COLUMNS, TRIAL_COLUMNS
 from campaign.recordings.name_guess import guess_pattern, kind_of_word
@@ -273,6 +274,33 @@ def test_begin_guesses_kinds_and_units_from_words(tmp_path: Path) -> None:
     assert [(rule.header, rule.quantity, rule.unit) for rule in description.columns] == [
         ("amb_C", "temperature", "C")
     ]
+
+
+def test_begin_sees_sensors_side_by_side(tmp_path: Path) -> None:
+    for number in (1, 2):
+        rows = "".join(f"{i},{60 + i},{100 + i + number},{200 + i},{150 + i}\n" for i in range(5))
+        (tmp_path / f"M01_staircase_r{number}.csv").write_text(
+            f"time_s,stage_mm,C_AB (pF),C_AC (pF),C_CB (pF)\n{rows}"
+        )
+    assert main(["begin", str(tmp_path)]) == 0
+    description = load_description(tmp_path)
+    assert [(rule.header, rule.quantity) for rule in description.columns] == [("C_{sensor} (pF)", "signal")]
+    assert description.same == {}
+
+
+@pytest.mark.parametrize(
+    ("headers", "pattern"),
+    [
+        (["C_AB (pF)", "C_AC (pF)"], "C_{sensor} (pF)"),
+        (["C1 pF", "C2 pF"], "{sensor} pF"),
+        (["AB_pF", "CB_pF"], "{sensor}_pF"),
+        (["C (pF)"], None),
+        (["C (pF)", "C (pF)"], None),
+        (["C {a} (pF)", "C {b} (pF)"], None),
+    ],
+)
+def test_headers_that_differ_in_one_word_are_one_pattern(headers: list[str], pattern: str | None) -> None:
+    assert wide_header(headers) == pattern
 
 
 @pytest.mark.parametrize(

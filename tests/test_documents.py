@@ -167,6 +167,11 @@ def test_links_of_the_documents_lead_to_files() -> None:
             assert (ROOT / address).exists(), address
 
 
+def test_benchmarks_of_the_manual_are_those_that_there_are() -> None:
+    named = set(re.findall(r"benchmarks/(\w+\.py)", DEVELOPERS))
+    assert named == {file.name for file in (ROOT / "benchmarks").glob("*.py")}
+
+
 def test_rooms_of_the_manual_are_there() -> None:
     section = DEVELOPERS[DEVELOPERS.index("## Rooms") : DEVELOPERS.index("Imports point one way")]
     rooms = re.findall(r"^\| `([^`]+)` \|", section, re.MULTILINE)

@@ -182,10 +182,13 @@ def branch_lines(
             fit = _fit_runs(used, part, branch, span)
             if fit is not None:
                 fits[int(used.sensor[rows[0]]), branch] = fit
-    generations = {key: used.text("generation", int(fit.rows[0])) for key, fit in fits.items()}
-    pools = _pools(fits, generations)
+    alike = {
+        key: (used.text("generation", int(fit.rows[0])), used.text("unit", int(fit.rows[0])), key[1])
+        for key, fit in fits.items()
+    }
+    pools = _pools(fits, alike)
     return tuple(
-        _branch_line(used, key[1], fit, pools[generations[key], key[1]], reference, description)
+        _branch_line(used, key[1], fit, pools[alike[key]], reference, description)
         for key, fit in fits.items()
     )
 
@@ -353,12 +356,12 @@ def _smallest(y: FloatArray) -> float:
 
 
 def _pools(
-    fits: dict[tuple[int, str], _RunFits], generations: dict[tuple[int, str], str]
-) -> dict[tuple[str, str], _Pool]:
-    """Observed scatter of runs, less noise within, pooled over sensors, by generation and branch."""
-    gathered: dict[tuple[str, str], list[_RunFits]] = {}
+    fits: dict[tuple[int, str], _RunFits], alike: dict[tuple[int, str], tuple[str, str, str]]
+) -> dict[tuple[str, str, str], _Pool]:
+    """Scatter of runs pooled over sensors that are alike: of one generation, unit and branch."""
+    gathered: dict[tuple[str, str, str], list[_RunFits]] = {}
     for key, fit in fits.items():
-        gathered.setdefault((generations[key], key[1]), []).append(fit)
+        gathered.setdefault(alike[key], []).append(fit)
     pools = {}
     for name, members in gathered.items():
         several = [fit.scatter for fit in members if fit.degrees > 0]
@@ -377,14 +380,25 @@ def _spread_of(fit: _RunFits, pool: _Pool) -> tuple[RunSpread, str]:
 
 
 def _scatters_more(own: RunScatter, pool: RunScatter) -> bool:
-    """Whether this sensor's runs scatter more at its mean x than the other sensors' do, beyond chance."""
-    squares = float(own.between[0, 0] + own.within[0, 0])
-    others = float(pool.between[0, 0] + pool.within[0, 0]) - squares
-    rest = pool.degrees - own.degrees
-    if rest < 1 or others <= 0:
-        return False
-    ratio = squares / own.degrees / (others / rest)
-    return bool(special.fdtrc(own.degrees, rest, ratio) < HETEROGENEITY_RISK)
+    """Whether this sensor's runs scatter more at its mean x than the other sensors' do, beyond chance.
+
+    Mountings and runs within them are compared apart: their mean squares differ, and a sum of the two would
+    make a sensor with one odd mounting look like one that scatters.
+    """
+    sources = (
+        (own.between, pool.between, own.between_degrees, pool.between_degrees),
+        (own.within, pool.within, own.within_degrees, pool.within_degrees),
+    )
+    risks = [_risk(*source) for source in sources]
+    return bool(len(risks) * min(risks) < HETEROGENEITY_RISK)
+
+
+def _risk(own: FloatArray, pool: FloatArray, own_degrees: int, pool_degrees: int) -> float:
+    """Probability that chance makes this sensor's mean square as large beside that of the others."""
+    rest, others = pool_degrees - own_degrees, float(pool[0, 0] - own[0, 0])
+    if own_degrees < 1 or rest < 1 or others <= 0:
+        return 1.0
+    return float(special.fdtrc(own_degrees, rest, float(own[0, 0]) / own_degrees / (others / rest)))
 
 
 def _branch_line(
@@ -460,7 +474,7 @@ def effective_degrees(
     spent = of_runs**2 / line.degrees_of_freedom
     if line.lack_of_fit is not None:
         spent += lack**2 / line.lack_of_fit.first_degrees
-    return total**2 / spent if spent > 0 else line.degrees_of_freedom
+    return float(total**2 / spent) if spent > 0 else line.degrees_of_freedom
 
 
 def _hysteresis(cells: LevelCells, fit: _RunFits) -> StepHysteresis | None:

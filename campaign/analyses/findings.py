@@ -59,15 +59,18 @@ class Worst:
 class SensorFigure:
     """One figure of every sensor of a generation, summed up.
 
-    ``mean`` with its 95 % interval counts modules as the unit (NaN limits with one module); ``exceeding``
-    is the number of sensors above ``threshold`` (the limit where there is one, else the mean); ``put_back``
-    is the mean with everything set aside put back, NaN where nothing was or it cannot be computed.
+    ``median`` and ``smallest`` are over sensors; ``mean`` with its 95 % interval counts modules as the unit
+    (NaN limits with one module); ``exceeding`` is the number of sensors above ``threshold`` (the limit
+    where there is one, else the mean); ``put_back`` is the mean with everything set aside put back, NaN
+    where nothing was or it cannot be computed.
     """
 
     generation: str
     sensors: int
     modules: int
     mean: float
+    median: float
+    smallest: float
     low: float
     high: float
     worst: Worst
@@ -166,6 +169,11 @@ class AccuracyFinding:
 
     one: SensorFigure
     mean_of_several: SensorFigure
+
+    @property
+    def averaging_helps(self) -> bool:
+        """Whether the mean's half-width is at least a fifth smaller than that of one reading."""
+        return self.mean_of_several.median < 0.8 * self.one.median
 
 
 FindingKind = Literal[
@@ -303,7 +311,7 @@ def sum_up(
     """
     known = figures.dropna(subset=["value"])
     return tuple(
-        _sum_up_one(str(generation), rows, limit, _mean_of(put_back, str(generation)))
+        _sum_up_one(str(generation), rows, limit, _mean_of(put_back, str(generation), rows))
         for generation, rows in known.groupby("generation", sort=True)
     )
 
@@ -321,6 +329,8 @@ def _sum_up_one(generation: str, rows: pd.DataFrame, limit: float, put_back: flo
         sensors=len(rows),
         modules=modules.size,
         mean=mean,
+        median=float(rows["value"].median()),
+        smallest=float(rows["value"].min()),
         low=max(mean - reach, 0.0) if math.isfinite(reach) else math.nan,
         high=mean + reach,
         worst=Worst(generation, str(worst["module"]), str(worst["sensor"]), float(worst["value"])),
@@ -331,11 +341,13 @@ def _sum_up_one(generation: str, rows: pd.DataFrame, limit: float, put_back: flo
     )
 
 
-def _mean_of(figures: pd.DataFrame | None, generation: str) -> float:
+def _mean_of(figures: pd.DataFrame | None, generation: str, without: pd.DataFrame) -> float:
+    """Mean with everything put back; NaN where that adds nothing to the figures *without* it."""
     if figures is None:
         return math.nan
     rows = figures[figures["generation"] == generation].dropna(subset=["value"])
-    return float(rows.groupby("module")["value"].mean().mean()) if len(rows) else math.nan
+    added = len(rows) != len(without) or not np.allclose(sorted(rows["value"]), sorted(without["value"]))
+    return float(rows.groupby("module")["value"].mean().mean()) if added and len(rows) else math.nan
 
 
 def _effort_findings(effort: CalibrationEffort, limits: Limits) -> list[Finding]:

@@ -83,7 +83,7 @@ class Scope:
     set_aside
         Sensors with recordings, none of which is used.
     failed_before_testing
-        Sensors and modules in a register that were never recorded.
+        Sensors and modules that the registers say failed before testing, or that were never recorded.
     trials_set_aside
         Number of trials set aside of sensors that are otherwise used.
     not_analysed
@@ -202,20 +202,31 @@ def _run_counts(rows: pd.DataFrame) -> Span | None:
 
 
 def _set_aside(intake: Intake, used: pd.DataFrame) -> tuple[Exclusion, ...]:
-    """Sensors that have recordings and no row among *used*."""
-    working = set(zip(used["module"], used["sensor"], strict=True))
+    """Sensors that have recordings, no row among *used*, and no fate before testing."""
+    working = set(zip(used["module"], used["sensor"], strict=True)) | _dead_before_testing(intake)
     recorded = intake.trials.loc[intake.trials["sensor"].astype(str) != "", ["module", "sensor"]]
     pairs = sorted(set(zip(recorded["module"].astype(str), recorded["sensor"].astype(str), strict=True)))
     return tuple(Exclusion(m, s, _reason(intake, m, s)) for m, s in pairs if (m, s) not in working)
 
 
 def _failed_before_testing(intake: Intake) -> tuple[Exclusion, ...]:
+    """Sensors and modules that the registers say failed before testing, or that were never recorded."""
     recorded = set(zip(intake.trials["module"].astype(str), intake.trials["sensor"].astype(str), strict=True))
     modules = {module for module, _ in recorded}
-    built = [(m, "") for m in _column(intake.modules, "module") if m not in modules]
+    built = {(m, "") for m in _column(intake.modules, "module") if m not in modules}
     pairs = zip(_column(intake.sensors, "module"), _column(intake.sensors, "sensor"), strict=True)
-    sensors = [(m, s) for m, s in pairs if m in modules and (m, s) not in recorded]
-    return tuple(Exclusion(m, s, _reason(intake, m, s)) for m, s in sorted(built + sensors))
+    sensors = {(m, s) for m, s in pairs if m in modules and (m, s) not in recorded}
+    failed = sorted(built | sensors | _dead_before_testing(intake))
+    return tuple(Exclusion(m, s, _reason(intake, m, s)) for m, s in failed)
+
+
+def _dead_before_testing(intake: Intake) -> set[tuple[str, str]]:
+    """Sensors whose fate in the register says that they failed before testing, recorded or not."""
+    fates = _column(intake.sensors, "fate")
+    if not fates:
+        return set()
+    names = zip(_column(intake.sensors, "module"), _column(intake.sensors, "sensor"), fates, strict=True)
+    return {(m, s) for m, s, fate in names if "before test" in fate.lower()}
 
 
 def _column(register: pd.DataFrame | None, column: str) -> list[str]:

@@ -124,13 +124,14 @@ def hysteresis_figures(calibration: Calibration) -> pd.DataFrame:
 def repeatability_figures(calibration: Calibration) -> pd.DataFrame:
     """Return each sensor's repeatability SD in %FSO with the degrees of freedom of its runs.
 
-    Readings of one run share the run's zero and slope, so that the runs, not the levels, are counted: R − 1.
+    Readings of one run share the run's zero and slope, so that the runs, not the levels, are counted, and
+    each mounting takes one: runs − mountings.
     """
     lines = principal_lines(calibration.sensor_lines)
     return lines[_SENSOR].assign(
         estimate=lines["repeatability_percent_fso"],
         standard_uncertainty=math.nan,
-        degrees_of_freedom=(lines["runs"] - 1).astype(float),
+        degrees_of_freedom=lines["repeatability_df"].where(lines["repeatability_df"] > 0),
         kind="spread",
     )
 

@@ -131,7 +131,12 @@ class Variance:
     @property
     def by_generation(self) -> tuple[GenerationFit, ...]:
         """The fits of single generations, the pooled one left out."""
-        return tuple(fit for fit in self.fits if fit.generation != "all" or len(self.fits) == 1)
+        return _single(self.fits)
+
+
+def _single(fits: tuple[GenerationFit, ...]) -> tuple[GenerationFit, ...]:
+    """The fits of single generations."""
+    return tuple(fit for fit in fits if fit.generation != "all" or len(fits) == 1)
 
 
 def analyse_variance(calibration: Calibration, description: Description) -> Variance:
@@ -183,7 +188,7 @@ def variance_of_readings(
         return replace(_nothing(reference, notices), identifiability=frames.identifiability(models, ()))
     ratio_fits, zero_noise = _fit_ratios(kept, places, notices)
     seed = seed_of(kept)
-    noise = {fit.generation: _noise_of(fit, seed) for fit in fits}
+    noise = {fit.generation: _noise_of(fit, seed) for fit in _single(fits)}
     notices += _noise_notices(noise)
     return _gather(reference, models, fits, ratio_fits, zero_noise, settling, noise, seed, notices)
 
@@ -203,16 +208,18 @@ def _gather(
     notices: list[Notice],
 ) -> Variance:
     unit, x_unit = str(fits[0].model.readings["unit"].iloc[0]), reference.unit
-    single = tuple(fit for fit in fits if fit.generation != "all" or len(fits) == 1)
+    single = _single(fits)
     uneven = {generation for generation, check in noise.items() if check.faults}
+    uneven |= {"all"} if uneven else set()
     tests = test_table(single, settling, seed)
+    fixed, new = frames.fixed_effects_and_new_sensors(fits, unit, x_unit)
     return Variance(
         reference=reference,
         response=SIGNAL,
         form=SHARED if fits[-1].model.counts.shared else ONE_AT_A_TIME,
         fits=fits,
         ratio_fits=ratio_fits,
-        fixed_effects=frames.fixed_effects(fits, unit, x_unit),
+        fixed_effects=fixed,
         variance_components=frames.variance_components(fits, unit, x_unit, tests, uneven),
         variance_in_strain=frames.variance_in_strain(fits, uneven),
         effects=frames.effects(single, unit, x_unit),
@@ -220,7 +227,7 @@ def _gather(
         precision=frames.precision(fits, uneven),
         tests=tests,
         certificate=_certificate(fits),
-        new_sensor=frames.new_sensors(fits),
+        new_sensor=new,
         comparisons=frames.comparisons(single, uneven),
         ratio_variance_in_strain=frames.variance_in_strain(ratio_fits, uneven),
         ratio_zero_noise=zero_noise,
@@ -362,10 +369,13 @@ def _fit_all(
 
 
 def _limits_at(model: VarianceModel, what: str) -> tuple[str, ...]:
-    """Where limits are found: everywhere for a generation's signal, at mid range for its ratio, for all."""
-    if model.generation == "all":
-        return ("mid",) if what == SIGNAL else ()
-    return (*PLACES, "slope") if what == SIGNAL else ("mid",)
+    """Where limits are found: everywhere for a generation's signal, at mid range for all pooled.
+
+    Ratios are there to be looked at beside the signal, without limits: these cost more than the fits.
+    """
+    if what != SIGNAL:
+        return ()
+    return ("mid",) if model.generation == "all" else (*PLACES, "intercept", "slope")
 
 
 def _fallback_notice(fit: GenerationFit, what: str) -> Notice:

@@ -59,7 +59,8 @@ class GenerationFit:
     residual_variance
         Variance of a reading about everything else.
     intervals
-        (component, ``zero``/``mid``/``full``/``slope``) → estimate and 95 % limits of its variance there.
+        (component, ``zero``/``mid``/``full``/``intercept``/``slope``) → estimate and 95 % limits of its
+        variance there; the intercept's is at x = 0, which is ``zero`` wherever zero was measured.
     effects
         Term → predicted effects of its units, with the covariances of their errors.
     conditional, marginal
@@ -173,12 +174,17 @@ def _requests(model: VarianceModel, places: Mapping[str, float]) -> Iterator[tup
         if not component.enters:
             continue
         if component.name in LINES and component.line:
-            for place, x in places.items():
+            for place, x in {**places, **_intercept_place(places)}.items():
                 yield component.name, place, model.direction(component.name, x)
             yield component.name, "slope", np.array([0.0, 1.0 / model.scale])
         else:
             half_a_loop = component.name == "sensor_by_direction"
             yield component.name, EVERYWHERE, np.array([0.5 if half_a_loop else 1.0])
+
+
+def _intercept_place(places: Mapping[str, float]) -> dict[str, float]:
+    """Zero of x as a place of its own where zero was not measured."""
+    return {} if places["zero"] == 0.0 else {"intercept": 0.0}
 
 
 def _intervals(
@@ -187,7 +193,8 @@ def _intervals(
     """Every component's variance at every place, with limits where wanted and where REML converged."""
     requests = list(_requests(model, places))
     stated = (*limits_at, EVERYWHERE) if limits_at and fit.method == "REML" else ()
-    wanted = [request for request in requests if request[1] in stated]
+    single = {c.name for c in model.components if c.enters and has_upper_limit_only(c)}
+    wanted = [r for r in requests if r[1] in stated and (r[0] not in single or r[1] in ("mid", EVERYWHERE))]
     found = profile_intervals(fit, [(name, weights) for name, _, weights in wanted])
     limits = {(name, place): i for (name, place, _), i in zip(wanted, found, strict=True)}
     intervals = {}
@@ -197,6 +204,8 @@ def _intervals(
         low, high = (NAN, NAN) if limit is None else (limit.low**2, limit.high**2)
         for one in PLACES if place == EVERYWHERE else (place,):
             intervals[name, one] = VarianceInterval(estimate, low, high)
+        if place == "zero" and places["zero"] == 0.0:
+            intervals[name, "intercept"] = intervals[name, "zero"]
     return intervals
 
 

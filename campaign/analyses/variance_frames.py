@@ -59,31 +59,44 @@ def _frame(rows: Iterable[Row], columns: tuple[str, ...]) -> pd.DataFrame:
     return pd.DataFrame(list(rows), columns=list(columns))
 
 
-def fixed_effects(fits: Iterable[GenerationFit], unit: str, reference_unit: str) -> pd.DataFrame:
-    """Return the mean line and every fixed coefficient with Satterthwaite's degrees of freedom.
+def fixed_effects_and_new_sensors(
+    fits: Iterable[GenerationFit], unit: str, reference_unit: str
+) -> tuple[pd.DataFrame, pd.DataFrame]:
+    """Return the fixed effects, and what to expect of a new sensor and of a new module.
+
+    Both rest on Satterthwaite's degrees of freedom, for which the criterion's curvature is looked at once.
 
     Returns
     -------
-    pandas.DataFrame
-        Columns of :data:`FIXED_COLUMNS`; positions' and branches' coefficients are differences.
+    tuple of pandas.DataFrame
+        The mean line and every fixed coefficient, columns of :data:`FIXED_COLUMNS`: positions' and branches'
+        are differences. Then the predictions on the mean line, columns of :data:`NEW_SENSOR_COLUMNS`:
+        ``strain_sd`` includes the variance of the mean line, ``expanded`` is its 95 % reach by Student's t.
     """
-    return _frame((row for fit in fits for row in _fixed_rows(fit, unit, reference_unit)), FIXED_COLUMNS)
-
-
-def _fixed_rows(fit: GenerationFit, unit: str, reference_unit: str) -> list[Row]:
-    requests = list(_fixed_requests(fit, unit, reference_unit))
-    found = satterthwaite_each(fit.fit, [(weights, {}) for _, weights, _ in requests])
-    return [
-        _fixed_row(fit, term, float(weights @ fit.fit.coefficients), variance, freedom, own_unit)
-        for (term, weights, own_unit), (variance, freedom) in zip(requests, found, strict=True)
-    ]
+    fixed: list[Row] = []
+    new: list[Row] = []
+    for fit in fits:
+        requests = list(_fixed_requests(fit, unit, reference_unit))
+        wanted = _predictions_of(fit)
+        asked: list[tuple[FloatArray, dict[str, FloatArray]]] = [(w, {}) for _, w, _ in requests]
+        asked += [_prediction(fit, names, place) for _, place, names in wanted]
+        found = satterthwaite_each(fit.fit, asked)
+        fixed += [
+            _fixed_row(fit, term, float(weights @ fit.fit.coefficients), variance, freedom, own_unit)
+            for (term, weights, own_unit), (variance, freedom) in zip(requests, found, strict=False)
+        ]
+        new += [
+            _prediction_row(fit, what, place, variance, freedom)
+            for (what, place, _), (variance, freedom) in zip(wanted, found[len(requests) :], strict=True)
+        ]
+    return _frame(fixed, FIXED_COLUMNS), _frame(new, NEW_SENSOR_COLUMNS)
 
 
 def _fixed_requests(
     fit: GenerationFit, unit: str, reference_unit: str
 ) -> Iterator[tuple[str, FloatArray, str]]:
     """Name, weights on the coefficients and unit of everything in the table of fixed effects."""
-    per = f"{unit}/({reference_unit})"
+    per = _per(unit, reference_unit)
     yield "intercept", fit.line_weights[0], unit
     if fit.line_weights[1].any():
         yield "slope", fit.line_weights[1], per
@@ -142,10 +155,10 @@ def variance_components(
 
 
 def _component_rows(fit: GenerationFit, unit: str, reference_unit: str, uneven: bool) -> Iterator[Row]:
-    per = f"{unit}/({reference_unit})"
+    per = _per(unit, reference_unit)
     for component in fit.components:
         is_line = component.name in LINES and component.line
-        kinds = [("intercept", _zero_place(fit), unit), ("slope", "slope", per)] if is_line else []
+        kinds = [("intercept", "intercept", unit), ("slope", "slope", per)] if is_line else []
         kinds = kinds or [("intercept" if component.name in LINES else "level", "mid", unit)]
         for term, place, own_unit in kinds:
             limits = fit.intervals[component.name, place]
@@ -154,9 +167,9 @@ def _component_rows(fit: GenerationFit, unit: str, reference_unit: str, uneven: 
             yield _correlation_row(fit, component)
 
 
-def _zero_place(fit: GenerationFit) -> str:
-    """The place that intercepts are stated at: zero."""
-    return "zero" if "zero" in fit.places else "mid"
+def _per(unit: str, reference_unit: str) -> str:
+    """The unit of a slope: ``pF/mm``, ``pF/(mm/mm)``."""
+    return f"{unit}/({reference_unit})" if "/" in reference_unit else f"{unit}/{reference_unit}"
 
 
 def _component_row(
@@ -201,7 +214,7 @@ def _limits(
     if uneven and component.name in ON_NOISE:
         return estimate, NAN, NAN, AVERAGE if component.name == "residual" else f"{label}; interval withheld"
     if has_upper_limit_only(component):
-        return NAN, 0.0, high, label
+        return NAN, 0.0 if variance.known else NAN, high, label
     if low <= 1e-9 * high:
         label = ZERO
         low = 0.0
@@ -310,7 +323,7 @@ def _effect_terms(
     model = fit.model
     yield "intercept", model.direction(level, 0.0), unit
     if model.component(level).line:
-        yield "slope", np.array([0.0, 1.0 / model.scale]), f"{unit}/({reference_unit})"
+        yield "slope", np.array([0.0, 1.0 / model.scale]), _per(unit, reference_unit)
     yield "strain at mid", model.direction(level, fit.places["mid"]) / abs(fit.mean_slope), reference_unit
 
 
@@ -390,41 +403,29 @@ def _hides_session(entering: dict[str, Component], figure: str) -> bool:
     return figure == "repeatability" and "session" in entering["repetition"].called.split(" + ")
 
 
-def new_sensors(fits: Iterable[GenerationFit]) -> pd.DataFrame:
-    """Return what to expect of a new sensor and of a new module on the mean line of its generation.
-
-    ``strain_sd`` includes the variance of the mean line, ``expanded`` is its 95 % reach by Student's t with
-    Satterthwaite's degrees of freedom.
-    """
-    return _frame(
-        (row for fit in fits if fit.mean_slope for row in _prediction_rows(fit)), NEW_SENSOR_COLUMNS
-    )
-
-
 _NEW = (("new sensor", ("batch", "module", "sensor")), ("new module", ("batch", "module")))
 """What is predicted, and the components that it draws anew."""
 
 
-def _prediction_rows(fit: GenerationFit) -> list[Row]:
-    wanted = [
-        (what, place, names) for what, names in _NEW if names[-1] in fit.model.terms for place in PLACES
-    ]
-    if not wanted:
+def _predictions_of(fit: GenerationFit) -> list[tuple[str, str, tuple[str, ...]]]:
+    """What is predicted, where, and the components that it draws anew."""
+    if not fit.mean_slope:
         return []
-    found = satterthwaite_each(fit.fit, [_prediction(fit, names, place) for _, place, names in wanted])
+    return [(what, place, names) for what, names in _NEW if names[-1] in fit.model.terms for place in PLACES]
+
+
+def _prediction_row(fit: GenerationFit, what: str, place: str, variance: float, freedom: float) -> Row:
+    sd = fit.strain_of(float(np.sqrt(variance)))
     complete = "module" in fit.model.terms or _is_module_and_sensor(fit)
-    return [
-        {
-            "generation": fit.generation,
-            "what": what,
-            "place": place,
-            "strain_sd": fit.strain_of(float(np.sqrt(variance))),
-            "expanded": float(stats.t.ppf(0.975, freedom)) * fit.strain_of(float(np.sqrt(variance))),
-            "df": freedom,
-            "label": "" if complete else LOWER_BOUND,
-        }
-        for (what, place, _), (variance, freedom) in zip(wanted, found, strict=True)
-    ]
+    return {
+        "generation": fit.generation,
+        "what": what,
+        "place": place,
+        "strain_sd": sd,
+        "expanded": float(stats.t.ppf(0.975, freedom)) * sd,
+        "df": freedom,
+        "label": "" if complete else LOWER_BOUND,
+    }
 
 
 def _prediction(

@@ -315,8 +315,11 @@ def independent_columns(columns: FloatArray) -> list[int]:
     """Return the numbers of the columns that do not depend linearly on the ones before them."""
     norms = np.linalg.norm(columns, axis=0)
     scaled = columns / np.where(norms > 0, norms, 1.0)
-    diagonal = np.abs(np.diag(np.linalg.qr(scaled, mode="r")))
-    if len(diagonal) == columns.shape[1] and diagonal.min() > 1e-9:
+    try:
+        diagonal = np.diag(np.linalg.cholesky(scaled.T @ scaled))
+    except np.linalg.LinAlgError:
+        return _independent_one_by_one(scaled)
+    if diagonal.min() > 1e-4:
         return list(range(columns.shape[1]))
     return _independent_one_by_one(scaled)
 

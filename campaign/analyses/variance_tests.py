@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import replace
 
 import numpy as np
@@ -20,7 +21,7 @@ from campaign.methods.component_tests import (
     compare_positions,
     tabulate_runs,
 )
-from campaign.methods.nested_model import fit_nested_model
+from campaign.methods.nested_model import NestedModel, fit_nested_model
 from campaign.methods.nested_simulation import simulate_deviations
 
 FloatArray = npt.NDArray[np.float64]
@@ -78,17 +79,12 @@ def _of_generation(fit: GenerationFit, settling: Settling | None, seed: int) -> 
 
 
 def component_tests_of(fit: GenerationFit, seed: int) -> tuple[ComponentTest, ...]:
-    """Return the test of every component of *fit*; bootstraps draw from the model refitted without it."""
+    """Return the test of every component of *fit*; bootstraps draw from the model without it."""
     generator = np.random.default_rng(seed)
 
     def draw(name: str, replicates: int) -> FloatArray:
-        terms = tuple(term for term in fit.model.model.terms if term.name != name)
-        used = {term.level for term in terms}
-        levels = tuple(level for level in fit.model.model.levels if level[0] in used)
-        null = fit_nested_model(replace(fit.model.model, terms=terms, levels=levels))
-        return simulate_deviations(
-            null.model, null.covariances, null.residual_variance, replicates, generator
-        )
+        null, covariances, residual = _without(fit, name)
+        return simulate_deviations(null, covariances, residual, replicates, generator)
 
     strata = Strata(fit.model.terms, fit.model.counts.shared, fit.model.counts.position_terms > 0)
     table = runs_of(fit)
@@ -99,6 +95,22 @@ def component_tests_of(fit: GenerationFit, seed: int) -> tuple[ComponentTest, ..
         *compare_components(table, strata, fit.marginal, draw),
         *(() if position is None else (position,)),
     )
+
+
+def _without(fit: GenerationFit, name: str) -> tuple[NestedModel, Mapping[str, FloatArray], float]:
+    """The model without a component, with the covariances of what remains.
+
+    A ratio of two spreads hardly depends on these: they are kept. A spread over the sum of two others depends
+    on them, so that there the model is fitted again.
+    """
+    model = fit.model.model
+    terms = tuple(term for term in model.terms if term.name != name)
+    used = {term.level for term in terms}
+    smaller = replace(model, terms=terms, levels=tuple(level for level in model.levels if level[0] in used))
+    if fit.model.counts.shared and name in ("module", "mounting"):
+        null = fit_nested_model(smaller)
+        return smaller, null.covariances, null.residual_variance
+    return smaller, fit.fit.covariances, fit.residual_variance
 
 
 def _component_row(test: ComponentTest) -> dict[str, object]:

@@ -27,7 +27,7 @@ IntArray = npt.NDArray[np.int64]
 Draw = Callable[[str, int], FloatArray]
 Kind = Literal["exact F", "parametric bootstrap"]
 
-REPLICATES = 999
+REPLICATES = 499
 """Campaigns drawn for one bootstrap test."""
 
 
@@ -234,17 +234,17 @@ def compare_positions(
 def _test(
     name: str, table: RunTable, strata: Strata, response: FloatArray, draw: Draw
 ) -> ComponentTest | None:
-    statistic, freedom = _statistic(name, table, strata, response)
-    if freedom is None or not np.isfinite(statistic).all():
+    exact = _is_exact(name, table, strata)
+    drawn = np.zeros((len(response), 0)) if exact else draw(name, REPLICATES)
+    statistics, freedom = _statistic(name, table, strata, np.hstack([response, drawn]))
+    if freedom is None or not np.isfinite(statistics).all():
         return None
-    if _is_exact(name, table, strata):
-        p = float(stats.f.sf(statistic[0], *freedom))
-        return ComponentTest(name, "exact F", float(statistic[0]), p, freedom)
-    drawn, _ = _statistic(name, table, strata, draw(name, REPLICATES))
-    larger = int(np.sum(drawn >= statistic[0] * (1 - 1e-12)))
+    statistic = float(statistics[0])
+    if exact:
+        return ComponentTest(name, "exact F", statistic, float(stats.f.sf(statistic, *freedom)), freedom)
+    larger = int(np.sum(statistics[1:] >= statistic * (1 - 1e-12)))
     shown = (0.0, 0.0) if _shares_runs(name, strata) else freedom
-    p = (1 + larger) / (1 + len(drawn))
-    return ComponentTest(name, "parametric bootstrap", float(statistic[0]), p, shown)
+    return ComponentTest(name, "parametric bootstrap", statistic, (1 + larger) / (1 + REPLICATES), shown)
 
 
 def _shares_runs(name: str, strata: Strata) -> bool:
@@ -383,9 +383,9 @@ def _basis(factors: list[IntArray], count: int) -> tuple[FloatArray, int]:
     if not factors:
         return np.zeros((count, 0)), 0
     columns = np.hstack([np.equal.outer(code, np.unique(code)).astype(float) for code in factors])
-    vectors, values, _ = np.linalg.svd(columns, full_matrices=False)
-    rank = int(np.sum(values > 1e-9 * values[0]))
-    return vectors[:, :rank], rank
+    values, vectors = np.linalg.eigh(columns.T @ columns)
+    kept = values > 1e-9 * values[-1]
+    return columns @ (vectors[:, kept] / np.sqrt(values[kept])), int(kept.sum())
 
 
 def wilks(effect: Spread, error: Spread) -> _Statistic:

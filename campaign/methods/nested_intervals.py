@@ -328,7 +328,8 @@ class _Limit:
     """One limit while it is sought.
 
     `inside` and `outside` are lengths whose profile lies below and above the cutoff; `outside` is NaN as long
-    as none is known. `vector` and `inverse` are the last minimum and the inverse second derivative there.
+    as none is known. `first` is the estimate or, where that is zero, a small length. `vector` and `inverse`
+    are the last minimum and the inverse second derivative there.
     """
 
     member: int
@@ -339,6 +340,7 @@ class _Limit:
     vector: FloatArray
     inverse: FloatArray
     zero_possible: bool
+    first: float
     outside: float = float("nan")
     limit: float = float("nan")
     looks: int = 0
@@ -443,7 +445,7 @@ def _first_limits(profiles: _Profiles, cutoff: float) -> list[tuple[_Limit, _Lim
         pair = []
         for upper, length in ((False, down), (True, up)):
             moved = start + response / spread * float(np.clip(length - lifted, -0.5 * base, 0.5 * base))
-            pair.append(_Limit(m, upper, estimate, estimate, length, moved, tangent, for_zero))
+            pair.append(_Limit(m, upper, estimate, estimate, length, moved, tangent, for_zero, base))
         if estimate == 0.0:
             pair[0].limit = 0.0
         pairs.append((pair[0], pair[1]))
@@ -480,12 +482,21 @@ def _advance(limit: _Limit, root: float, slope: float, cutoff: float) -> None:
     else:
         limit.outside = length
     step = _newton(length, root, slope, cutoff)
+    if _has_levelled_off(limit, root, slope, cutoff):
+        limit.limit = np.inf
+        return
     if abs(root - cutoff) < _PRECISION and not np.isnan(step):
         limit.limit = step
     elif limit.looks > 40:
         limit.limit = np.inf if np.isnan(limit.outside) and limit.upper else length
     else:
         limit.length = _kept_between(limit, step)
+
+
+def _has_levelled_off(limit: _Limit, root: float, slope: float, cutoff: float) -> bool:
+    """Whether an upper limit lies beyond all lengths: far out, and the profile hardly rises any more."""
+    far = limit.upper and np.isnan(limit.outside) and limit.length > 30.0 * limit.first
+    return bool(far and cutoff - root > 3.0 * slope * limit.length)
 
 
 def _newton(length: float, root: float, slope: float, cutoff: float) -> float:

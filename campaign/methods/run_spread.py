@@ -120,7 +120,7 @@ def spread_of_runs(scatter: RunScatter) -> RunSpread:
     inside = scatter.within / scatter.within_degrees
     run = run_covariance(inside, noise)
     mounting = run_covariance(between, run + noise) / size
-    parts = between[0, 0] / size, (1.0 - 1.0 / size) * inside[0, 0]
+    parts = float(between[0, 0] / size), float((1.0 - 1.0 / size) * inside[0, 0])
     spent = parts[0] ** 2 / scatter.between_degrees + parts[1] ** 2 / scatter.within_degrees
     degrees = sum(parts) ** 2 / spent if spent > 0 else float(scatter.degrees)
     return RunSpread(mounting, run, degrees)

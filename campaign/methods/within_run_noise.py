@@ -27,7 +27,7 @@ DRAWS = 499
 SIGNIFICANCE = 0.002
 """A figure counts where no draw is as large, if the effect is large as well."""
 
-LEAST_RATIO, LEAST_AUTOCORRELATION = 1.5, 0.2
+LEAST_RATIO, LEAST_AUTOCORRELATION = 1.3, 0.2
 """Effects that are large enough to withhold intervals: largest over smallest SD of levels or
 of sensors (beyond what even noise shows), and lag-1 autocorrelation."""
 

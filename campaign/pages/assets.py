@@ -31,11 +31,15 @@ def asset_files(templates: Path, plot_library: Path | None = None) -> dict[str, 
         for kind in ("css", "js")
         for path in sorted((templates / kind).glob(f"*.{kind}"))
     }
+    library = library_bytes(plot_library)
     template = orjson.dumps(HOUSE_TEMPLATE, option=orjson.OPT_SORT_KEYS)
+    styles = orjson.dumps(_own_style_elements(library))
+    values = (template, styles)
+    house_style = b"window.campaignHouseStyle = %b;\nwindow.campaignLibraryStyles = %b;\n" % values
     return made | {
         "assets/colours.css": colours_css().encode("utf-8"),
-        "assets/house_style.js": b"window.campaignHouseStyle = " + template + b";\n",
-        LIBRARY: library_bytes(plot_library),
+        "assets/house_style.js": house_style,
+        LIBRARY: library,
     }
 
 
@@ -112,6 +116,16 @@ def _wrapped_carried_library() -> bytes:
 def _version(text: str) -> str | None:
     found = re.search(r"plotly\.js (?:\([^)]*\) )?v(\d+\.\d+\.\d+)", text[:2000])
     return found.group(1) if found else None
+
+
+def _own_style_elements(library: bytes) -> list[str]:
+    """Return the ids of style elements that the library adds for parts we do not use (maps).
+
+    It adds none whose id is already taken; the site's script takes them, for the content policy forbids the
+    elements.
+    """
+    found = re.findall(rb'getElementById\("([0-9a-f]{64})"\)', library)
+    return sorted({name.decode("ascii") for name in found})
 
 
 def _wrapped(text: str) -> str:

@@ -10,6 +10,7 @@ import math
 from collections.abc import Iterable, Mapping
 from dataclasses import fields
 
+import numpy as np
 import orjson
 
 from campaign.analyses.calibration import CalibrationRecord
@@ -63,8 +64,10 @@ def calculator_data(records: Iterable[CalibrationRecord]) -> dict[str, object]:
 
 
 def _plain(value: object) -> object:
+    if isinstance(value, np.integer):
+        return int(value)
     if isinstance(value, float):
-        return value if math.isfinite(value) else None
+        return float(value) if math.isfinite(value) else None
     if isinstance(value, Mapping):
         return {str(k): _plain(v) for k, v in sorted(value.items())}
     if isinstance(value, (tuple, list)):

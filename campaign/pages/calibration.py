@@ -201,7 +201,7 @@ def _end_labels(lines: pd.DataFrame, axes: str, reference: ReferenceQuantity) ->
     made: list[Layout] = []
     last = -math.inf
     for height, right, sensor in ends:
-        if height - last < 0.09 * reach and made:
+        if height - last < 0.16 * reach and made:
             continue
         made.append(
             label(
@@ -220,6 +220,10 @@ def _end_labels(lines: pd.DataFrame, axes: str, reference: ReferenceQuantity) ->
 
 def _lines_caption(lines: pd.DataFrame, reference: ReferenceQuantity, modules: int) -> str:
     r_squared = lines["r_squared"].dropna()
+    if len(lines) == 1 and r_squared.notna().any():
+        row = lines.iloc[0]
+        fit = numbers.fixed(float(r_squared.iloc[0]), 4)
+        return f"The straight line of {row['module']} {row['sensor']}, with R² = {fit}."
     of = f"{numbers.count(len(lines), 'sensor')} of {numbers.count(modules, 'module')}"
     if r_squared.empty:
         return f"The lines of {of} against {x_title(reference).lower()}."
@@ -397,6 +401,9 @@ def _hysteresis_traces(
     style = where.style(module[0])
     x = grouped.median().index.to_numpy(float) * reference.shown_factor
     middle, low, high = grouped.median(), grouped.min(), grouped.max()
+    if own["sensor"].nunique() == 1:
+        only = own.groupby("nominal_level", sort=True)
+        low, high = only["low"].min(), only["high"].max()
     yield band(x, low, high, colour=style.colour, axes=axes, meta={"module": module[1], "sensor": ""})
     yield intervals(
         middle,
@@ -407,8 +414,8 @@ def _hysteresis_traces(
         style=style,
         size=4,
         text=[
-            f"{module[1]} at {numbers.significant(a, 3, reference.shown_unit)}: sensors from "
-            f"{numbers.span(b, c, '%FSO', digits=2)}"
+            f"{module[1]} at {numbers.significant(a, 3, reference.shown_unit)}: "
+            f"{numbers.limits(b, c, '%FSO')}"
             for a, b, c in zip(x.tolist(), low, high, strict=True)
         ],
         links=[slugs.module_href(module[1])] * len(x),

@@ -14,10 +14,8 @@ from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers, palette
 from campaign.pages.figures import (
     Figure,
-    Layout,
     Trace,
     axis,
-    label,
     line,
     panel,
     points,
@@ -42,9 +40,23 @@ EFFORTS: Mapping[str, str] = {
 """What each effort is called; other names have their underscores opened."""
 
 
+_SENTENCES: Mapping[str, str] = {
+    "generation_rezero_additive": "a generation’s line with each zero taken anew",
+    "generation_rezero_ratio": "a generation’s line with each signal divided by its zero",
+    "sensor": "a sensor’s own line",
+    "rezero_additive": "a sensor’s own line with its zero taken anew",
+    "rezero_ratio": "a sensor’s own line with its signal divided by its zero",
+}
+
+
 def effort_words(effort: str) -> str:
     """Return what an effort is called."""
     return EFFORTS.get(effort, effort.replace("_", " "))
+
+
+def effort_sentence(effort: str) -> str:
+    """Return what an effort is called within a sentence."""
+    return _SENTENCES.get(effort, effort_words(effort))
 
 
 def calibration_effort_page(results: CampaignResults) -> Page | None:
@@ -61,7 +73,7 @@ def calibration_effort_page(results: CampaignResults) -> Page | None:
         context={
             "reference": calibration.reference,
             "choices": [fact for fact in facts if isinstance(fact, EnoughFinding)],
-            "effort_words": effort_words,
+            "effort_words": effort_sentence,
             "disagreeing": _disagreeing(effort),
             "comparable": bool(effort.table["strain_sd_left_out"].notna().any()),
             "x_low": effort.x_low,
@@ -112,7 +124,6 @@ def effort_figure(effort: CalibrationEffort, reference: ReferenceQuantity) -> Fi
         ),
         axis("", ticks=ticks, low=-0.6, high=len(efforts) - 0.4, reverse=True),
         columns=min(len(generations), 3),
-        annotations=_key(),
     )
     return Figure(
         name="effort",
@@ -197,22 +208,6 @@ def _effort_bars(
     ]
 
 
-def _key() -> list[Layout]:
-    """Direct labels of the two marks, above the first panel."""
-    return [
-        label(
-            "● predicted   ○ left out",
-            1.0,
-            1.0,
-            colour=palette.SOFT,
-            anchor="right",
-            shift=(0, 10),
-            size=12,
-            paper=True,
-        )
-    ]
-
-
 def _effort_caption(table: pd.DataFrame, generations: tuple[str, ...]) -> str:
     parts = []
     for generation in generations:
@@ -224,7 +219,7 @@ def _effort_caption(table: pd.DataFrame, generations: tuple[str, ...]) -> str:
         best = rows.iloc[int(rows["factor"].to_numpy(float).argmin())]
         parts.append(
             f"{generation}: of all that spares calibrating each sensor, "
-            f"{effort_words(str(best['effort']))} errs "
+            f"{effort_sentence(str(best['effort']))} errs "
             f"least, {numbers.significant(float(best['factor']), 2)} times a sensor’s own line"
         )
     return f"{'; '.join(parts)}." if parts else "The error of a reading against calibration effort."
@@ -237,7 +232,7 @@ def effort_table(effort: CalibrationEffort, reference: ReferenceQuantity) -> Tab
     """Return the table that says how many calibration runs can be dropped."""
     factor, unit = reference.shown_factor, reference.shown_unit
     table = effort.table.sort_values("generation", kind="stable").reset_index(drop=True)
-    table = table.assign(_effort=[effort_words(str(e)) for e in table["effort"]])
+    table = table.assign(_effort=[effort_words(str(e)).replace(" ", "\u00a0") for e in table["effort"]])
     predicted = Column("strain_sd_predicted", "SD predicted", unit, factor=factor, digits=2)
     if {"low", "high"} <= set(table.columns):
         predicted = Column(
@@ -258,11 +253,9 @@ def effort_table(effort: CalibrationEffort, reference: ReferenceQuantity) -> Tab
         Column("strain_expanded", "95 % within ±", unit, factor=factor, digits=2),
         Column("factor", "× own line", digits=3),
     ]
-    if "agrees" in table:
+    if table["agrees"].eq(False).any():
         table = table.assign(_agrees=["" if pd.isna(v) else "yes" if v else "no" for v in table["agrees"]])
         columns.append(Column("_agrees", "Agree", kind="text"))
-    if "left_out_by" in table:
-        columns.append(Column("left_out_by", "left out by", kind="text"))
     return Table(
         name="calibration_effort",
         caption="What each calibration effort buys: the error of one reading anywhere in the range common "

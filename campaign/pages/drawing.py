@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Iterable
 from dataclasses import replace
 from typing import Any
@@ -22,9 +23,10 @@ def ready(figure: Figure) -> Figure:
     Raises
     ------
     ValueError
-        Where the figure draws more markers or points of lines than a page bears.
+        Where the figure draws more markers or points of lines than a page bears, or a text holds markup.
     """
     _check_size(figure)
+    _check_texts(figure)
     layout: Layout = {**figure.layout, "margin": {**MARGINS, **figure.layout.get("margin", {})}}
     for key in axis_names(layout):
         layout[key] = _with_range(key, layout, figure.traces)
@@ -48,6 +50,15 @@ def _check_size(figure: Figure) -> None:
         raise ValueError(f"figure {figure.name} draws {figures.marker_count(figure)} markers")
     if figures.line_point_count(figure) > figures.LARGEST_NUMBER_OF_LINE_POINTS:
         raise ValueError(f"figure {figure.name} draws {figures.line_point_count(figure)} points of lines")
+
+
+def _check_texts(figure: Figure) -> None:
+    """Refuse markup in texts but line breaks: the library makes style attributes of it."""
+    titles = [figure.layout[key].get("title", {}).get("text", "") for key in axis_names(figure.layout)]
+    labels = [note["text"] for note in figure.layout.get("annotations", ())]
+    for text in (*titles, *labels):
+        if re.search(r"<(?!br\s*/?>)", text):
+            raise ValueError(f"figure {figure.name} has markup in the text {text!r}")
 
 
 def _with_range(key: str, layout: Layout, traces: Iterable[Trace]) -> Layout:

@@ -352,11 +352,6 @@ def panel(index: int) -> str:
     return "" if index == 0 else str(index + 1)
 
 
-def all_floats(values: Iterable[float]) -> list[float]:
-    """Return *values* as a list of Python floats."""
-    return _floats(values)
-
-
 def marker_count(figure: Figure) -> int:
     """Return how many markers a figure draws."""
     return sum(len(t["x"]) for t in figure.traces if "markers" in t.get("mode", ""))

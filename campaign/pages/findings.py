@@ -7,7 +7,7 @@ from collections.abc import Mapping
 from campaign.analyses.findings import AVERAGED
 from campaign.analyses.limits import Limits
 from campaign.analyses.results import CampaignResults
-from campaign.pages.calibration_effort import effort_words
+from campaign.pages.calibration_effort import effort_sentence
 from campaign.pages.page import Page
 from campaign.pages.sensor import limits_as_shown
 from campaign.pages.skin_map import SkinMap
@@ -56,7 +56,7 @@ def findings_page(results: CampaignResults, mapped: SkinMap) -> Page:
             "counts": results.intake.counts,
             "verdict_words": VERDICT_WORDS,
             "kind_words": KIND_WORDS,
-            "effort_words": effort_words,
+            "effort_words": effort_sentence,
             "level_words": level_words,
             "averaged": AVERAGED,
             "reference": results.findings.scope.reference,
@@ -98,7 +98,7 @@ def limits_table(limits: Limits, reference: ReferenceQuantity) -> Table:
             Column("_unit", "Unit", kind="text"),
             Column("_estimate", "Found", interval=("_low", "_high")),
             Column("probability", "Probability that it is kept", kind="percent", missing="unknown"),
-            Column("verdict", "Verdict", kind="text"),
+            Column("_verdict", "Verdict", kind="text"),
         ),
         shown_rows=30,
         source="limits",

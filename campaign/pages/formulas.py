@@ -15,13 +15,15 @@ FORMULAS: dict[str, str] = {
     r"=|b|\,\varepsilon_{\text{full}}",
     "strain_equivalent": r"\Delta\varepsilon=\frac{\Delta y}{\beta_1(\varepsilon)}",
     "reading_mean": r"\bar y=\frac{1}{n}\sum_{t=1}^{n}y_t",
-    "standard_error": r"u(\bar y)=\max\left(s\sqrt{\frac{\tau}{n}},\ \frac{\delta}{\sqrt{12}}\right),"
+    "standard_error": r"u^2(\bar y)=\max\left(\frac{s^2\tau}{n},\ \frac{\delta^2}{12}\right),"
     r"\qquad \tau=1+2\sum_{k=1}^{K}\left(1-\frac{k}{n}\right)\rho_k,\qquad n_{\text{eff}}=\frac{n}{\tau}",
     "positive_sequence": r"\rho_{2j}+\rho_{2j+1}>0\quad\text{for every}\ j\le J,\qquad K=2J+1",
-    "run_line": r"y_i=a_r+b_r\,(x_i-\bar x)+e_i,\qquad r=1,\dots,R",
-    "sensor_line": r"\hat\theta=\frac{1}{R}\sum_{r=1}^{R}\hat\theta_r,\qquad "
-    r"\operatorname{Cov}(\hat\theta)=\frac{1}{R(R-1)}\sum_{r=1}^{R}"
-    r"(\hat\theta_r-\hat\theta)(\hat\theta_r-\hat\theta)^{\top},\qquad \hat\theta_r=(a_r,b_r)^{\top}",
+    "run_line": r"y_i=a_r+b_r\,(x_i-\bar x)+e_i,\qquad \hat\theta_{sr}=(a_r,b_r)^{\top}",
+    "sensor_line": r"\hat\theta=\frac{1}{S}\sum_{s=1}^{S}\hat\theta_s,\qquad "
+    r"\hat\theta_s=\frac{1}{R_s}\sum_{r=1}^{R_s}\hat\theta_{sr},\qquad "
+    r"\operatorname{Cov}(\hat\theta)=\frac{1}{S}\left(\Sigma_{\text{mounting}}+"
+    r"\frac{\Sigma_{\text{run}}+\Sigma_{\text{noise}}}{R_s}\right)",
+    "weights": r"w_i\propto\frac{1}{\tau^2(x_i)+u^2(\bar y_i)},\qquad \tau^2(x)=\exp(\alpha+\beta x)",
     "gauge_factor": r"\text{GF}=\frac{1}{C_0}\frac{\text{d}C}{\text{d}\varepsilon}=\frac{b}{a}",
     "gauge_factor_uncertainty": r"\frac{u^2(\text{GF})}{\text{GF}^2}=\frac{u^2(b)}{b^2}+\frac{u^2(a)}{a^2}"
     r"-\frac{2\,u(a,b)}{a\,b}",
@@ -29,7 +31,7 @@ FORMULAS: dict[str, str] = {
     r"\frac{\max_i\left|y_i-\hat y_{\text{line}}(x_i)\right|}{\text{FSO}}",
     "lack_of_fit": r"F=\frac{\text{MS}(\text{level})}{\text{MS}(\text{level}\times\text{run})}",
     "quadratic": r"y=a+b\,x+q\,(x-\bar x)^2+e",
-    "repeatability": r"s_r=\sqrt{\frac{\sum_{k}\sum_{r}(y_{kr}-\bar y_{k})^2}{\sum_{k}(R_k-1)}}",
+    "repeatability": r"s_r^2=\frac{\sum_{k}\sum_{r}(y_{kr}-\bar y_{k})^2}{\sum_{k}(R_k-1)}",
     "hysteresis": r"h_k=\overline{y^{\text{rising}}_k-y^{\text{falling}}_k},\qquad "
     r"h_k\pm c\,u(h_k)\quad\text{for all levels}\ k\ \text{together}",
     "inverse": r"\hat x=\frac{y-a}{b}",
@@ -56,15 +58,15 @@ FORMULAS: dict[str, str] = {
     r"+(y-X\hat\beta)^{\top}V^{-1}(y-X\hat\beta)+(N-p)\log 2\pi",
     "profiled": r"\hat\sigma^2=\frac{(y-X\hat\beta)^{\top}V_{\theta}^{-1}(y-X\hat\beta)}{N-p},"
     r"\qquad V=\sigma^2V_{\theta},\quad \Sigma=\sigma^2\theta\theta^{\top},\quad\theta_{kk}\ge 0",
-    "component_in_strain": r"s_{\varepsilon}(\varepsilon)=\frac{\sqrt{\Sigma_{00}+2\,\Sigma_{01}\,\varepsilon"
-    r"+\Sigma_{11}\,\varepsilon^2}}{|\beta_1|}",
+    "component_in_strain": r"s_{\varepsilon}^2(\varepsilon)="
+    r"\frac{\Sigma_{00}+2\,\Sigma_{01}\,\varepsilon+\Sigma_{11}\,\varepsilon^2}{\beta_1^2}",
     "share": r"\text{share}=\frac{s_{\varepsilon,\text{level}}^2}{\sum_{\text{levels}}s_{\varepsilon}^2}",
     "profile_interval": r"\left\{\sigma:\ D(\sigma)-D(\hat\sigma)\le\chi^2_{1;\,0.95}=3.841\right\},"
     r"\qquad D(\sigma)=\min_{\text{all others}}\left(-2\,\ell_{\text{R}}\right)",
-    "new_sensor": r"\hat y(x)\pm t_{\nu;\,0.975}\sqrt{u^2(\hat y(x))+\sum_{\text{levels}}z^{\top}\Sigma z"
-    r"+\sigma^2},\qquad z=(1,x)^{\top}",
+    "new_sensor": r"\hat y(x)\pm t_{\nu;\,0.975}\,u,\qquad u^2=u^2(\hat y(x))+"
+    r"\sum_{\text{levels}}z^{\top}\Sigma z+\sigma^2,\qquad z=(1,x)^{\top}",
     "satterthwaite": r"\nu=\frac{2\,\hat v^2}{\text{Var}(\hat v)}",
-    "effort": r"s_{\varepsilon}=\sqrt{\frac{1}{N}\sum_{i}(\hat x_i-x_i)^2},\qquad "
+    "effort": r"s_{\varepsilon}^2=\frac{1}{N}\sum_{i}(\hat x_i-x_i)^2,\qquad "
     r"\hat x_i=\frac{y_i-a}{b}\ \text{with the line of the effort}",
     "conformity": r"p_c=P\left(\eta\le L\right)=F_{\nu}\left(\frac{L-\hat\eta}{u(\hat\eta)}\right)",
     "autocorrelation": r"r_1=\frac{\sum_{i}e_i\,e_{i+1}}{\sum_{i}e_i^2}",

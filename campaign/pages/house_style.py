@@ -8,6 +8,7 @@ from campaign.pages import palette
 
 FONT = "'Gill Sans Nova', 'Optima', Candara, 'Noto Sans', 'Source Sans 3', 'Segoe UI', system-ui, sans-serif"
 
+# Exponents as 'e': the library sets raised figures in a style attribute, which the content policy forbids.
 _AXIS: dict[str, Any] = {
     "showline": True,
     "linecolor": palette.SOFT,
@@ -19,7 +20,15 @@ _AXIS: dict[str, Any] = {
     "tickfont": {"size": 12, "color": palette.SOFT},
     "title": {"font": {"size": 13, "color": palette.INK}, "standoff": 12},
     "automargin": False,
+    "exponentformat": "e",
 }
+
+NOTE_DEFAULTS: dict[str, Any] = {
+    "showarrow": False,
+    "yanchor": "middle",
+    "font": {"size": 12, "color": palette.INK},
+}
+"""What every label has unless it says otherwise; data scripts leave it out."""
 
 HOUSE_TEMPLATE: dict[str, Any] = {
     "layout": {
@@ -28,6 +37,7 @@ HOUSE_TEMPLATE: dict[str, Any] = {
         "plot_bgcolor": palette.PAPER,
         "colorway": [style.colour for style in palette.GENERATION_STYLES],
         "showlegend": False,
+        "annotationdefaults": NOTE_DEFAULTS,
         "hovermode": "closest",
         "dragmode": "zoom",
         "bargap": 0,

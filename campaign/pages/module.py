@@ -28,11 +28,12 @@ from campaign.pages.figures import (
 from campaign.pages.influence_sections import module_pressure_figure
 from campaign.pages.loop_sections import module_widths_figure
 from campaign.pages.page import Page
-from campaign.pages.sensor import FIGURE_ORDER, sensor_keys
+from campaign.pages.sensor import FIGURE_ORDER
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
+from campaign.pages.sensor_parts import sensor_keys
 from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
-from campaign.pages.variance import TERMS, in_shown_units
+from campaign.pages.variance import TERM_WORDS, TERMS, in_shown_units
 from campaign.recordings.recording import ReferenceQuantity
 
 _MOST_TRIAL_PLOTS = 16
@@ -74,7 +75,8 @@ def _module_page(results: CampaignResults, mapped: SkinMap, generation: str, mod
     figures: list[Figure | None] = []
     if results.calibration is not None and len(lines):
         reference = results.calibration.reference
-        where = sensor_axis(lines)
+        generations = sensor_axis(results.calibration.sensor_lines).generations
+        where = replace(sensor_axis(lines), generations=generations)
         figures = [
             module_lines_figure(results, lines, reference),
             module_merits_figure(results, module),
@@ -312,11 +314,12 @@ def module_effects_figure(results: CampaignResults, module: str, where: SensorAx
     ticks = [(where.places[key], key[2]) for key in where.places]
     return Figure(
         name="effects",
-        caption=f"Effects of the sensors on the {term}, about the module's own mean.",
-        alternative=f"Dots with 95 % intervals, one a sensor: effect on the {term}, with an upright at zero.",
+        caption=f"Effects of the sensors on the {TERM_WORDS.get(term, term)}, about the module's own mean.",
+        alternative=f"Dots with 95 % intervals, one a sensor: effect on the {TERM_WORDS.get(term, term)}, "
+        f"with an upright at zero.",
         traces=tuple(interval_traces(rows, where, text)),
         layout=layout(
-            axis(f"Effect on the {term}", unit),
+            axis(f"Effect on the {TERM_WORDS.get(term, term)}", unit),
             axis("", ticks=ticks, low=-0.6, high=0.6, reverse=True),
             shapes=[level_line(0, upright=True, colour=palette.INK)],
         ),

@@ -17,7 +17,7 @@ from campaign.recordings.description import Description
 
 CAMPAIGN_CHECKSUMS = "provenance/campaign_files.sha256"
 SITE_CHECKSUMS = "provenance/site_files.sha256"
-SHOWN_FILES = 120
+SHOWN_FILES = 60
 
 
 @dataclass(frozen=True)

@@ -42,8 +42,8 @@ def recordings_page(results: CampaignResults) -> Page:
             "other_campaigns": intake.other_campaigns,
         },
         tables=(
-            notice_groups_table(results.notices),
             set_aside_table(intake.recordings, results.notices),
+            notice_groups_table(results.notices),
             recordings_table(intake.recordings),
             trials_table(intake.trials),
         ),

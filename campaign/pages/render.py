@@ -6,6 +6,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -20,7 +21,8 @@ from campaign.pages import numbers, slugs
 from campaign.pages.assets import asset_files
 from campaign.pages.definitions import definitions_of
 from campaign.pages.drawing import ready
-from campaign.pages.figures import Figure
+from campaign.pages.figures import Figure, Layout, Trace
+from campaign.pages.house_style import NOTE_DEFAULTS
 from campaign.pages.page import Page, SiteFrame
 from campaign.pages.static_figure import static_svg
 from campaign.pages.tables import (
@@ -164,15 +166,39 @@ def table_files(tables: Iterable[Table], reference: ReferenceQuantity = STRAIN) 
 
 def data_script(page: Page, figures: Mapping[str, Figure]) -> bytes:
     """Return ``data/SLUG.js``: a classic script that hands the page's figures and values on."""
+    texts: dict[str, int] = {}
     drawn = {
-        name: {"traces": figure.traces, "layout": figure.layout, "height": figure.height}
+        name: {
+            "traces": [_with_numbered_texts(trace, texts) for trace in figure.traces],
+            "layout": {**figure.layout, "annotations": [_without_defaults(a) for a in _notes(figure)]},
+            "height": figure.height,
+        }
         for name, figure in figures.items()
     }
     content = orjson.dumps(
-        {"slug": page.slug, "figures": drawn, "values": dict(page.data)},
+        {"slug": page.slug, "figures": drawn, "texts": list(texts), "values": dict(page.data)},
         option=orjson.OPT_SERIALIZE_NUMPY | orjson.OPT_SORT_KEYS,
     )
     return b"window.campaignPage = " + content + b";\n"
+
+
+def _with_numbered_texts(trace: Trace, texts: dict[str, int]) -> Trace:
+    """Return a trace whose sentences and links are numbers in *texts*, which holds each of them once."""
+    numbered = {
+        key: [texts.setdefault(text, len(texts)) for text in trace[key]]
+        for key in ("hovertext", "customdata")
+        if isinstance(trace.get(key), list)
+    }
+    return {**trace, **numbered}
+
+
+def _notes(figure: Figure) -> list[Layout]:
+    return list(figure.layout.get("annotations", ()))
+
+
+def _without_defaults(note: Layout) -> Layout:
+    """Return a label without what the house template says of every label."""
+    return {key: value for key, value in note.items() if NOTE_DEFAULTS.get(key) != value}
 
 
 def _page_html(
@@ -187,7 +213,13 @@ def _page_html(
         "figures": {f.name: _placed_figure(page, i, figures[f.name]) for i, f in enumerate(page.figures, 1)},
         "tables": {t.name: _placed_table(page, i, t) for i, t in enumerate(page.tables, 1)},
     }
-    return jinja.get_template(page.template).render(context)
+    return _without_indents(jinja.get_template(page.template).render(context))
+
+
+def _without_indents(page: str) -> str:
+    """Return a page without indents and empty lines, but for what is set as it stands (``pre``)."""
+    parts = re.split(r"(<pre\b.*?</pre>)", page, flags=re.DOTALL)
+    return "".join(part if part.startswith("<pre") else re.sub(r"\s*\n\s*", "\n", part) for part in parts)
 
 
 def _placed_figure(page: Page, index: int, figure: Figure) -> PlacedFigure:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 
 import numpy as np
+import orjson
 import pandas as pd
 
 from campaign.analyses.residuals import Residuals
@@ -47,7 +48,7 @@ def residuals_page(results: CampaignResults) -> Page | None:
     reference = results.calibration.reference
     rows = residuals.table.dropna(subset=[VALUE]).reset_index(drop=True)
     where = sensor_axis(rows)
-    banded = len(rows) > LARGEST_NUMBER_OF_MARKERS - LARGEST_SHOWN
+    banded = is_banded(rows)
     drawn = _largest(rows) if banded else rows
     figures = [
         against_level(rows, drawn, where, reference, banded=banded),
@@ -73,9 +74,54 @@ def residuals_page(results: CampaignResults) -> Page | None:
         },
         figures=tuple(figure for figure in figures if figure is not None),
         tables=(largest_table(rows, reference),),
+        data={
+            "residual_files": {str(m): module_file(str(m)) for m in rows["module"].unique()} if banded else {}
+        },
         description="What the model leaves over, against strain, order and module; every point leads to "
         "its trial.",
     )
+
+
+def is_banded(rows: pd.DataFrame) -> bool:
+    """Whether there are more residuals than a figure bears, so that bands stand for most of them."""
+    return len(rows) > LARGEST_NUMBER_OF_MARKERS - LARGEST_SHOWN
+
+
+def module_file(module: str) -> str:
+    """Return the address of the script that holds all points of one module."""
+    return f"data/residuals_{slugs.slug(module)}.js"
+
+
+def residual_files(results: CampaignResults) -> dict[str, bytes]:
+    """Return one script a module with all its points, for pages that draw bands; loaded when it is chosen."""
+    residuals = results.residuals
+    if residuals is None or results.calibration is None or residuals.table.empty:
+        return {}
+    rows = residuals.table.dropna(subset=[VALUE]).reset_index(drop=True)
+    if not is_banded(rows):
+        return {}
+    where, reference = sensor_axis(rows), results.calibration.reference
+    files = {}
+    for module, own in rows.groupby("module", sort=True):
+        by_level = _marks(own, "x", where, reference, reference.shown_factor)
+        by_order = _marks(own, "order", where, reference)
+        content = orjson.dumps(
+            {
+                "traces": [_rounded(trace) for trace in by_level],
+                "x": {
+                    "against-level": [_rounded(trace)["x"] for trace in by_level],
+                    "against-order": [_rounded(trace)["x"] for trace in by_order],
+                },
+            }
+        )
+        name = orjson.dumps(str(module))
+        start = b"(window.campaignResiduals = window.campaignResiduals || {})["
+        files[module_file(str(module))] = start + name + b"] = " + content + b";\n"
+    return files
+
+
+def _rounded(trace: Trace) -> Trace:
+    return trace | {key: [float(f"{value:.5g}") for value in trace[key]] for key in ("x", "y")}
 
 
 def _autocorrelation(residuals: Residuals) -> list[dict[str, object]]:
@@ -209,7 +255,7 @@ def _note(banded: bool) -> str:
         return "All readings are drawn. A bend or a funnel would say that the model is wrong."
     return (
         "Bands hold the extremes and the middle half of all readings, the line their median; "
-        f"the {LARGEST_SHOWN} largest are drawn as points."
+        f"the {LARGEST_SHOWN} largest are drawn as points, and all points of a module that is marked."
     )
 
 

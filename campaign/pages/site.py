@@ -23,7 +23,7 @@ from campaign.pages.pressure import pressure_page
 from campaign.pages.provenance import provenance_page
 from campaign.pages.recordings import recordings_page
 from campaign.pages.render import render_site
-from campaign.pages.residuals import residuals_page
+from campaign.pages.residuals import residual_files, residuals_page
 from campaign.pages.sensor import sensor_pages
 from campaign.pages.site_tables import site_tables
 from campaign.pages.variance import variance_page
@@ -55,7 +55,12 @@ def build_site(
         site_frame(results),
         pages,
         site_tables(results, pages),
-        files={**(notes.files or {}), **record_files(records), **loop_scripts(results.hysteresis)},
+        files={
+            **(notes.files or {}),
+            **record_files(records),
+            **residual_files(results),
+            **loop_scripts(results.hysteresis),
+        },
         plot_library=plot_library,
         reference=results.readings.reference,
     )

@@ -18,7 +18,7 @@ Point = tuple[float, float]
 
 TILE_WIDTH, TILE_HEIGHT = 150.0, 108.0
 _SIDE_EDGE, _UPPER_EDGE = 27.0, 17.0
-_BAR_WIDTH, _BAR_GAP = 12.0, 18.0
+_BAR_GAP = 18.0
 
 COLOURS: tuple[str, ...] = (*palette.RAMP, palette.ATTENTION)
 """Colours by step: the ramp, then the one that asks for attention."""
@@ -89,7 +89,6 @@ class MapEdge:
     start: Point
     end: Point
     label: Point
-    width: float
     set_aside: bool
     colour: str
     text: str
@@ -198,6 +197,8 @@ def _scale(figure: MapFigure) -> Scale:
     if not math.isfinite(low):
         return Scale(figure.key, figure.title, figure.unit, "no value", "", ())
     ends = [_value_text(end, low, high) for end in (low, high)]
+    if low == high:
+        return Scale(figure.key, figure.title, figure.unit, f"{ends[0]} in every one", "", ())
     return Scale(figure.key, figure.title, figure.unit, ends[0], ends[1], ())
 
 
@@ -223,7 +224,6 @@ def _tile(
                 start=start,
                 end=end,
                 label=label,
-                width=_BAR_WIDTH if bars else 5.5,
                 set_aside=sensor.set_aside,
                 colour=COLOURS[step] if step != NO_VALUE else "",
                 text=text if step != NO_VALUE else "",

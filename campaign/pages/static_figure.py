@@ -10,7 +10,7 @@ from __future__ import annotations
 import html
 import math
 import re
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -112,23 +112,28 @@ def _axes(panel: Panel) -> str:
     y_ticks = _ticks(panel.y_axis, abs(panel.bottom - panel.top) / 42)
     xs = [(_from_axis(v, panel.x_axis, panel.left, panel.right), text) for v, text in x_ticks]
     ys = [(_from_axis(v, panel.y_axis, panel.bottom, panel.top), text) for v, text in y_ticks]
-    grid = [
-        _line(x, panel.top, x, panel.bottom, palette.RULE)
-        for x, _ in xs
-        if panel.x_axis.get("showgrid", True)
-    ]
-    grid += [
-        _line(panel.left, y, panel.right, y, palette.RULE)
-        for y, _ in ys
-        if panel.y_axis.get("showgrid", True)
-    ]
-    texts: list[str] = []
-    if panel.x_axis.get("showticklabels", True):
-        texts += [_text(t, x, panel.bottom + 17, anchor="middle", colour=palette.SOFT) for x, t in xs]
-    if panel.y_axis.get("showticklabels", True):
-        texts += [_text(t, panel.left - 8, y + 4, anchor="end", colour=palette.SOFT) for y, t in ys]
     base = _line(panel.left, panel.bottom, panel.right, panel.bottom, palette.SOFT)
-    return "".join(grid) + base + "".join(texts) + _axis_titles(panel)
+    return _grid(panel, xs, ys) + base + _tick_labels(panel, xs, ys) + _axis_titles(panel)
+
+
+def _grid(panel: Panel, xs: Sequence[tuple[float, str]], ys: Sequence[tuple[float, str]]) -> str:
+    path = ""
+    if panel.x_axis.get("showgrid", True):
+        path += "".join(_segment(x, panel.top, x, panel.bottom) for x, _ in xs)
+    if panel.y_axis.get("showgrid", True):
+        path += "".join(_segment(panel.left, y, panel.right, y) for y, _ in ys)
+    return f'<path d="{path}" stroke="{palette.RULE}"/>' if path else ""
+
+
+def _tick_labels(panel: Panel, xs: Sequence[tuple[float, str]], ys: Sequence[tuple[float, str]]) -> str:
+    made = ""
+    if xs and panel.x_axis.get("showticklabels", True):
+        texts = "".join(_text(words, x, panel.bottom + 17) for x, words in xs)
+        made += f'<g fill="{palette.SOFT}" text-anchor="middle">{texts}</g>'
+    if ys and panel.y_axis.get("showticklabels", True):
+        texts = "".join(_text(words, panel.left - 8, y + 4) for y, words in ys)
+        made += f'<g fill="{palette.SOFT}" text-anchor="end">{texts}</g>'
+    return made
 
 
 def _axis_titles(panel: Panel) -> str:
@@ -255,7 +260,7 @@ def _bars_along(trace: Trace, panel: Panel, letter: str) -> str:
         else:
             ends = panel.across(x), panel.upright(y - down), panel.across(x), panel.upright(y + up)
         if _seen(*ends):
-            segments.append(f"M{_px(ends[0])} {_px(ends[1])}L{_px(ends[2])} {_px(ends[3])}")
+            segments.append(_segment(*ends))
     looks = (
         f'stroke="{_paint(error.get("color", palette.INK))}" stroke-width="{error.get("thickness", 1.4):g}"'
     )
@@ -269,58 +274,72 @@ def _markers(places: list[tuple[float, float]], trace: Trace) -> str:
     seen = [i for i, place in enumerate(places) if _seen(*place)]
     if not any(isinstance(value, list) for value in (symbols, sizes, colours)):
         outlines = "".join(_symbol(symbols, *places[i], sizes / 2) for i in seen)
-        return _painted_symbol(outlines, colours, symbols) if outlines else ""
+        return _painted_symbol(outlines, colours, symbols, sizes) if outlines else ""
     return "".join(
-        _painted_symbol(
-            _symbol(_each(symbols, i), *places[i], _each(sizes, i) / 2), _each(colours, i), _each(symbols, i)
-        )
-        for i in seen
+        _one_marker(places[i], _each(symbols, i), _each(sizes, i), _each(colours, i)) for i in seen
     )
+
+
+def _one_marker(place: tuple[float, float], symbol: str, size: float, colour: str) -> str:
+    return _painted_symbol(_symbol(symbol, *place, size / 2), colour, symbol, size)
 
 
 def _each(values: Any, index: int) -> Any:
     return values[index] if isinstance(values, list) else values
 
 
-def _painted_symbol(outline: str, colour: str, symbol: str) -> str:
+def _painted_symbol(outline: str, colour: str, symbol: str, size: float) -> str:
+    """Return outlines of *symbol* as one path: dots as caps of lines without length, else shapes."""
     paint = _paint(colour)
-    if symbol.endswith("-open") or symbol in ("x", "cross", "line-ns", "line-ew"):
+    if symbol in _CAPS:
+        cap, share = _CAPS[symbol]
+        looks = f'stroke-width="{_px(size * share)}" stroke-linecap="{cap}"'
+        return f'<path d="{outline}" fill="none" stroke="{paint}" {looks}/>'
+    if symbol.endswith("-open") or symbol in _STROKES:
         return f'<path d="{outline}" fill="none" stroke="{paint}" stroke-width="1.5"/>'
-    return f'<path d="{outline}" fill="{paint}" stroke="none"/>'
+    return f'<path d="{outline}" fill="{paint}"/>'
 
 
 def _symbol(symbol: str, x: float, y: float, r: float) -> str:
-    draw = _SYMBOLS.get(symbol.removesuffix("-open"), _circle)
-    return draw(x, y, r)
+    """Return the outline of one marker around (x, y), by relative steps to keep it short."""
+    if symbol in _CAPS:
+        return f"M{_px(x)} {_px(y)}h0"
+    return _SYMBOLS.get(symbol.removesuffix("-open"), _circle)(x, y, r)
 
 
 def _circle(x: float, y: float, r: float) -> str:
-    arc = f"a{_px(r)} {_px(r)} 0 1 0"
-    return f"M{_px(x - r)} {_px(y)}{arc} {_px(2 * r)} 0{arc} {_px(-2 * r)} 0Z"
+    arc = f"a{_px(r)} {_px(r)} 0 1 0 "
+    return f"M{_px(x - r)} {_px(y)}{arc}{_px(2 * r)} 0{arc}{_px(-2 * r)} 0"
 
 
 def _square(x: float, y: float, r: float) -> str:
-    return _polygon(x, y, r * 0.9, ((-1, -1), (1, -1), (1, 1), (-1, 1)))
+    side = 1.8 * r
+    return f"M{_px(x - side / 2)} {_px(y - side / 2)}h{_px(side)}v{_px(side)}h{_px(-side)}z"
 
 
 def _diamond(x: float, y: float, r: float) -> str:
-    return _polygon(x, y, r * 1.25, ((0, -1), (1, 0), (0, 1), (-1, 0)))
+    h = 1.25 * r
+    return f"M{_px(x)} {_px(y - h)}" + _steps((h, h), (-h, h), (-h, -h)) + "z"
 
 
 def _triangle(x: float, y: float, r: float) -> str:
-    return _polygon(x, y, r * 1.15, ((0, -1), (0.9, 0.7), (-0.9, 0.7)))
+    h = 1.15 * r
+    return f"M{_px(x)} {_px(y - h)}" + _steps((0.9 * h, 1.7 * h), (-1.8 * h, 0)) + "z"
 
 
 def _triangle_down(x: float, y: float, r: float) -> str:
-    return _polygon(x, y, r * 1.15, ((0, 1), (0.9, -0.7), (-0.9, -0.7)))
+    h = 1.15 * r
+    return f"M{_px(x)} {_px(y + h)}" + _steps((0.9 * h, -1.7 * h), (-1.8 * h, 0)) + "z"
 
 
 def _saltire(x: float, y: float, r: float) -> str:
-    return f"M{_px(x - r)} {_px(y - r)}l{_px(2 * r)} {_px(2 * r)}m{_px(-2 * r)} 0l{_px(2 * r)} {_px(-2 * r)}"
+    return (
+        f"M{_px(x - r)} {_px(y - r)}" + _steps((2 * r, 2 * r)) + f"m{_px(-2 * r)} 0" + _steps((2 * r, -2 * r))
+    )
 
 
 def _cross(x: float, y: float, r: float) -> str:
-    return f"M{_px(x - r)} {_px(y)}h{_px(2 * r)}M{_px(x)} {_px(y - r)}v{_px(2 * r)}"
+    return f"M{_px(x - r)} {_px(y)}h{_px(2 * r)}m{_px(-r)} {_px(-r)}v{_px(2 * r)}"
 
 
 def _upright_tick(x: float, y: float, r: float) -> str:
@@ -331,10 +350,12 @@ def _level_tick(x: float, y: float, r: float) -> str:
     return f"M{_px(x - r)} {_px(y)}h{_px(2 * r)}"
 
 
-def _polygon(x: float, y: float, r: float, corners: Iterable[tuple[float, float]]) -> str:
-    return "M" + "L".join(f"{_px(x + r * a)} {_px(y + r * b)}" for a, b in corners) + "Z"
+def _steps(*steps: tuple[float, float]) -> str:
+    return "".join(f"l{_px(dx)} {_px(dy)}" for dx, dy in steps)
 
 
+_CAPS: dict[str, tuple[str, float]] = {"circle": ("round", 1.0), "square": ("square", 0.9)}
+_STROKES = frozenset({"x", "cross", "line-ns", "line-ew"})
 _SYMBOLS: dict[str, Callable[[float, float, float], str]] = {
     "circle": _circle,
     "square": _square,
@@ -438,7 +459,15 @@ def _line(
 ) -> str:
     dashes = f' stroke-dasharray="{DASHES[dash]}"' if dash in DASHES else ""
     looks = f'stroke="{_paint(colour)}" stroke-width="{width:g}"{dashes}'
-    return f'<path d="M{_px(x0)} {_px(y0)}L{_px(x1)} {_px(y1)}" {looks}/>'
+    return f'<path d="{_segment(x0, y0, x1, y1)}" {looks}/>'
+
+
+def _segment(x0: float, y0: float, x1: float, y1: float) -> str:
+    """Return a straight piece of a path, by its one coordinate where it is level or upright."""
+    start, across, upright = f"M{_px(x0)} {_px(y0)}", _px(x1), _px(y1)
+    if upright == _px(y0):
+        return f"{start}H{across}"
+    return f"{start}V{upright}" if across == _px(x0) else f"{start}L{across} {upright}"
 
 
 def _text(

@@ -8,8 +8,8 @@ Names and columns of :data:`CONTRACT_COLUMNS` are kept stable.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass, replace
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass
 from typing import Any, Literal
 
 import orjson
@@ -195,11 +195,6 @@ def schema_bytes(frames: Mapping[str, pd.DataFrame]) -> bytes:
     return orjson.dumps(package, option=orjson.OPT_INDENT_2) + b"\n"
 
 
-def with_links(table: Table, links: Sequence[str], key: str = "_href") -> Table:
-    """Return *table* with a column of row links under *key*."""
-    return replace(table, frame=table.frame.assign(**{key: list(links)}))
-
-
 def _column_cells(frame: pd.DataFrame, column: Column) -> list[Cell]:
     values = frame[column.key].tolist()
     hrefs = frame[column.href].tolist() if column.href else [""] * len(values)
@@ -207,7 +202,7 @@ def _column_cells(frame: pd.DataFrame, column: Column) -> list[Cell]:
         return [Cell(_text(v), _text(v), h) for v, h in zip(values, hrefs, strict=True)]
     scaled = [_number(v) * column.factor for v in values]
     texts = numbers.aligned(_number_texts(frame, column, scaled))
-    sorts = ["" if math.isnan(v) else repr(v) for v in scaled]
+    sorts = ["" if math.isnan(v) else f"{v:.7g}" for v in scaled]
     return [Cell(t, s, h) for t, s, h in zip(texts, sorts, hrefs, strict=True)]
 
 

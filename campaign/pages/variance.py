@@ -55,6 +55,9 @@ _WORDS: Mapping[str, str] = {
 }
 """What each component is called on pages."""
 
+TERM_WORDS: Mapping[str, str] = {"strain at mid": "signal at mid range, as strain"}
+"""What terms of effects are called where their name does not say it."""
+
 TERMS = ("strain at mid", "slope", "intercept")
 """Terms of effects, the most telling first."""
 
@@ -98,6 +101,7 @@ def variance_page(results: CampaignResults) -> Page | None:
             "level_words": level_words,
             "pooled": any(fit.generation == "all" for fit in variance.fits) and len(variance.fits) > 1,
             "covariate_units": COVARIATE_UNITS,
+            "largest_difference": float(variance.certificate["difference"].abs().max()),
             "generations": generations_of(variance.variance_in_strain),
         },
         figures=tuple(figure for figure in figures if figure is not None),
@@ -225,6 +229,8 @@ def _sd_words(row: Mapping[Hashable, Any], factor: float, unit: str = "") -> str
     estimate, low, high = (float(row[key]) * factor for key in ("strain_sd", "low", "high"))
     if math.isnan(estimate) and math.isfinite(high):
         return f"at most {numbers.significant(high, 2, unit)}"
+    if math.isfinite(estimate) and not (math.isfinite(low) and math.isfinite(high)):
+        return f"{numbers.significant(estimate, 2, unit)} (interval withheld)"
     return numbers.interval(estimate, low, high, unit)
 
 
@@ -252,7 +258,7 @@ _MARKS = {"circle": "●", "square": "■", "diamond": "◆", "triangle-up": "�
 
 
 def _components_caption(table: pd.DataFrame, reference: ReferenceQuantity) -> str:
-    mid = table[(table["place"] == "mid") & ~table["level"].isin(["total"])]
+    mid = table[(table["place"] == "mid") & (table["level"] != "total")].dropna(subset=["strain_sd"])
     if mid.empty:
         return "Components of the spread as strain-equivalent standard deviations."
     parts = []
@@ -357,7 +363,7 @@ def caterpillar_figure(variance: Variance, level: str) -> Figure | None:
     units = {term: str(rows.loc[rows["term"] == term, "unit"].iloc[0]) for term in terms}
     number = int(rows.groupby("term")["module"].size().max())
     made = small_multiples(
-        [f"{term}" for term in terms],
+        [TERM_WORDS.get(term, term) for term in terms],
         axis("Rank", low=-1, high=number, grid=False),
         axis("Effect"),
         columns=len(terms),
@@ -367,7 +373,7 @@ def caterpillar_figure(variance: Variance, level: str) -> Figure | None:
     for index, term in enumerate(terms):
         key = f"yaxis{panel(index)}"
         made[key] = {k: v for k, v in made[key].items() if k not in ("matches", "showticklabels")} | {
-            "title": {"text": f"Effect on {term} / {units[term]}"}
+            "title": {"text": f"Effect on {TERM_WORDS.get(term, term)} / {units[term]}"}
         }
     return Figure(
         name=f"{level}-effects",
@@ -430,7 +436,7 @@ def _caterpillar_caption(rows: pd.DataFrame, level: str, terms: list[str]) -> st
     for term in terms:
         own = rows[rows["term"] == term]
         apart = int(((own["low"] > 0) | (own["high"] < 0)).sum())
-        parts.append(f"{apart} of {len(own)} in the {term}")
+        parts.append(f"{apart} of {len(own)} in the {TERM_WORDS.get(term, term)}")
     words = "modules" if level == "module" else "sensors"
     return f"{words.capitalize()} whose interval excludes the mean: {', '.join(parts)}."
 
@@ -447,12 +453,14 @@ def _tables(variance: Variance) -> Iterable[Table]:
         (
             generation,
             Column("words", "Component", kind="text"),
-            *(Column(place, f"SD {words}", unit, kind="text") for place, words in PLACES.items()),
-            Column("share", "Share of the variance at mid range", "%", kind="text"),
+            Column("mid", "SD at mid range", unit, kind="text"),
+            Column("share", "Share of variance", "%", kind="text"),
+            Column("zero", "SD at zero", unit, kind="text"),
+            Column("full", "SD at full scale", unit, kind="text"),
             Column("label", "The design says", kind="text"),
         ),
         source="variance_in_strain",
-        note="Shares are of variances. Where only limits are stated, shares are withheld.",
+        note="Shares are of variances, at mid range. Where only limits are stated, shares are withheld.",
     )
     yield Table(
         "variance_components",
@@ -539,22 +547,32 @@ def _precision_and_tests(variance: Variance, generation: Column, factor: float, 
 
 
 def _side_by_side(table: pd.DataFrame, factor: float) -> pd.DataFrame:
-    """Return one row a generation and component: its SD at each place, its share, its label."""
+    """Return one row a generation and component: its SD at each place, its share, its label.
+
+    The pooled fit is profiled at mid range only, so that is all that is shown of it.
+    """
     made = []
+    several = table["generation"].nunique() > 1
     for (generation, level), rows in table.groupby(["generation", "level"], sort=False):
-        by_place = {str(r["place"]): r for r in rows.to_dict("records")}
+        shown = rows[rows["place"] == "mid"] if generation == "all" and several else rows
+        by_place = {str(r["place"]): r for r in shown.to_dict("records")}
         middle = by_place.get("mid", next(iter(by_place.values())))
-        sds = {place: _sd_words(by_place[place], factor) if place in by_place else "" for place in PLACES}
+        sds = {place: _unbroken(_sd_words(row, factor)) for place, row in by_place.items()}
         made.append(
             {
-                "generation": generation,
+                "generation": _unbroken(str(generation)),
                 "words": level_words(str(middle["called"])),
-                **sds,
-                "share": "" if level == "total" else _share_words(middle),
+                **{place: sds.get(place, "") for place in PLACES},
+                "share": "" if level == "total" else _unbroken(_share_words(middle)),
                 "label": "" if pd.isna(middle["label"]) else str(middle["label"]),
             }
         )
     return pd.DataFrame(made, columns=["generation", "words", *PLACES, "share", "label"])
+
+
+def _unbroken(text: str) -> str:
+    """Return *text* so that a cell does not break it into lines."""
+    return text.replace(" ", "\u00a0").replace("-", "\u2011")
 
 
 def _share_words(row: Mapping[Hashable, Any]) -> str:

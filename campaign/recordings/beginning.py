@@ -7,13 +7,14 @@ import re
 from collections import Counter
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, replace
+from itertools import takewhile
 from pathlib import Path
 
 import numpy as np
 
 from campaign.notices import CampaignStops, Notice
 from campaign.recordings.columns import ColumnPlan, TablePlan, plan_columns
-from campaign.recordings.description import DESCRIPTION_FILE, KINDS, Description
+from campaign.recordings.description import DESCRIPTION_FILE, KINDS, ColumnRule, Description
 from campaign.recordings.dialect import Layout, find_layout
 from campaign.recordings.encoding import plain_text
 from campaign.recordings.folder import list_files
@@ -34,11 +35,12 @@ SAMPLED_BYTES = 200_000
 
 @dataclass(frozen=True)
 class Look:
-    """What one recording gives away."""
+    """What one recording gives away; ``wide`` is the guessed pattern of headers with a sensor in them."""
 
     file: str
     layout: Layout
     plan: TablePlan
+    wide: str | None = None
 
 
 def write_first_description(folder: Path) -> Path:
@@ -85,7 +87,7 @@ def first_description(folder: Path) -> str:
     ending = Counter(_ending(name) for name, _ in files).most_common(1)[0][0]
     chosen = [(name, location) for name, location in files if _ending(name) == ending]
     names = [name for name, _ in chosen]
-    looks = [look for name, location in _spread(chosen) if (look := _look(name, location)) is not None]
+    looks = _with_wide_columns([look for file in _spread(chosen) if (look := _look(*file)) is not None])
     others = Counter(_ending(name) for name, _ in files if _ending(name) != ending)
     lines = [*_head(folder), *_recordings(names, others, looks, folder), *_columns(looks), *_tail()]
     return re.sub(r"\n{3,}", "\n\n", "\n".join(lines) + "\n")
@@ -123,6 +125,48 @@ def _look(name: str, location: Path) -> Look | None:
     if not layout.readable:
         layout = find_layout(text.data, Description("look"), by_position=True)
     return Look(name, layout, plan_columns(layout, (), name)) if layout.readable else None
+
+
+def _with_wide_columns(looks: Sequence[Look]) -> list[Look]:
+    """Take signals side by side for one column a sensor, where headers look so."""
+    return [
+        replace(look, wide=wide, plan=plan_columns(look.layout, [ColumnRule("signal", wide)], look.file))
+        if (wide := wide_header(_unread_signals(look))) is not None
+        else look
+        for look in looks
+    ]
+
+
+def _unread_signals(look: Look) -> list[str]:
+    """Headers with a unit of capacitance that are not recognised."""
+    recognised = {column.header for column in look.plan.columns}
+    units = FAMILIES["capacitance"].scales
+    headers = look.layout.header or ()
+    return [h.strip() for h in headers if h not in recognised and (split_header(h).unit or "") in units]
+
+
+def wide_header(headers: Sequence[str]) -> str | None:
+    """Return the pattern, ``C_{sensor} (pF)``, of headers that differ in one word only, else ``None``.
+
+    Parameters
+    ----------
+    headers
+        At least two of them, else there is nothing to compare.
+    """
+    if len(headers) < 2 or any(set(header) & set("{}*") for header in headers):
+        return None
+    begin, end = _shared_beginning(headers), _shared_beginning([header[::-1] for header in headers])
+    words = [header[begin : len(header) - end] for header in headers]
+    if not all(words) or len(set(words)) < len(words):
+        return None
+    return f"{headers[0][:begin]}{{sensor}}{headers[0][len(headers[0]) - end :]}"
+
+
+def _shared_beginning(texts: Sequence[str]) -> int:
+    """Characters that texts begin with alike, up to the last that is neither letter nor digit."""
+    alike = takewhile(lambda characters: len(set(characters)) == 1, zip(*texts, strict=False))
+    shared = "".join(characters[0] for characters in alike)
+    return len(re.sub(r"[^\W_]+$", "", shared))
 
 
 def _quoted(text: str) -> str:
@@ -253,7 +297,11 @@ def _columns(looks: Sequence[Look]) -> Iterator[str]:
             if key in described or key == "":
                 continue
             described.add(key)
-            if position in recognised and name is not None:
+            if look.wide is not None and position in recognised and recognised[position].sensor is not None:
+                if look.wide not in described:
+                    described.add(look.wide)
+                    yield from _table(look, position, look.wide, "signal", "", "one column a sensor")
+            elif position in recognised and name is not None:
                 yield _recognised(name, recognised[position])
             else:
                 quantity, unit, why = _guess_quantity(look, position, name, taken)
@@ -270,7 +318,7 @@ def _table(look: Look, position: int, name: str | None, quantity: str, unit: str
     """Write one ``[[columns]]`` table."""
     yield ""
     yield "[[columns]]"
-    by_name = name is not None and not set(name) & set("{}")
+    by_name = name is not None and (name == look.wide or not set(name) & set("{}"))
     yield f"header = {_quoted(name.strip())}" if name is not None and by_name else f"position = {position}"
     example = look.layout.sample[0][position - 1] if look.layout.sample else ""
     yield f"quantity = {_quoted(quantity)}   # guess: {why}; its first value is {_quoted(example[:40])}"

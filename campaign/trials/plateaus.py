@@ -19,6 +19,9 @@ MOTION_SHARE = 0.002
 SMALLEST_REST_SHARE = 1.0 / 6.0
 """A log that rests for less than this share of its samples is no staircase (a sine rests at its ends too)."""
 
+LARGEST_ROUNDING = 0.01
+"""The smallest move of a log is its rounding if it is no more than this share of the span."""
+
 SHORTEST_PLATEAU = 3
 """Fewest samples that make a plateau."""
 
@@ -86,11 +89,15 @@ def expand(starts: IntArray, stops: IntArray) -> tuple[IntArray, IntArray]:
 
 
 def _reference_noise(reference: FloatArray) -> float:
-    """Standard deviation of the reference noise, robust, from second differences; 0 for a set-point."""
+    """Standard deviation of the reference noise: robust, from second differences, or of its rounding."""
     if len(reference) < 4:
         return 0.0
     second = np.diff(reference, n=2)
-    return float(np.median(np.abs(second)) / (0.6745 * np.sqrt(6.0)))
+    noise = float(np.median(np.abs(second)) / (0.6745 * np.sqrt(6.0)))
+    moves = np.abs(np.diff(reference))
+    smallest = float(moves[moves > 1e-9 * np.ptp(reference)].min(initial=np.inf))
+    rounding = smallest / np.sqrt(12.0) if smallest <= LARGEST_ROUNDING * np.ptp(reference) else 0.0
+    return max(noise, rounding if np.mean(moves == 0.0) > 0.1 else 0.0)
 
 
 def _rests(reference: FloatArray, noise: float, span: float) -> tuple[IntArray, IntArray]:

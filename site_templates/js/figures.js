@@ -151,7 +151,14 @@ window.campaign = window.campaign || {};
     }, 0);
   }
 
+  /* The library adds style elements for parts that are not used here, unless their ids are taken: the content policy
+     forbids such elements. */
   function fetchLibrary() {
+    for (const id of window.campaignLibraryStyles) {
+      const taken = document.createElement("meta");
+      taken.id = id;
+      document.head.append(taken);
+    }
     const script = document.createElement("script");
     script.src = "assets/plot_library.js";
     script.addEventListener("load", function () {
@@ -351,8 +358,15 @@ window.campaign = window.campaign || {};
     if (target && window.location.hash.includes("?")) target.scrollIntoView();
   }
 
-  /* ---- beginning ----------------------------------------------------------------------------------------------- */
+  /* ---- beginning: sentences and links come as numbers in the page's list of texts ----------------------------------------------------------------------------------------------- */
 
+  for (const figure of Object.values(page.figures)) {
+    for (const trace of figure.traces) {
+      for (const key of ["hovertext", "customdata"]) {
+        if (Array.isArray(trace[key])) trace[key] = trace[key].map((number) => page.texts[number]);
+      }
+    }
+  }
   for (const element of document.querySelectorAll("figure[data-figure]")) {
     const spec = page.figures[element.dataset.figure];
     if (!spec) continue;

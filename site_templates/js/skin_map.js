@@ -70,5 +70,10 @@ window.campaign = window.campaign || {};
     if (values.figures[list.value].scale.marks.length) showScale(values.figures[list.value].scale);
   }
 
+  for (const edge of map.querySelectorAll("a.edge")) {
+    const title = document.createElementNS(SVG, "title");
+    title.textContent = edge.getAttribute("aria-label");
+    edge.prepend(title);
+  }
   buildPicker();
 })(window.campaign);

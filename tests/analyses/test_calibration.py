@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
+from dataclasses import asdict, replace
 from pathlib import Path
 
 import numpy as np
@@ -360,6 +360,13 @@ def test_records_carry_conditions_files_and_hashes():
     assert record.conditions["approach"] == "from below only"
     assert record.conditions["range"].endswith("40 %")
     assert record.signal_low < record.signal_high
+
+
+def test_records_hold_plain_values_that_any_file_can_carry():
+    readings = simulated(modules=2, sensors=2, sessions=2, repetitions=2, descending=True, loop=0.5)
+    for record in calibrate(readings).records:
+        values = [*asdict(record).values(), *record.length_line.values()]
+        assert {type(value) for value in values} <= {str, float, int, dict, tuple}
 
 
 def test_the_textbook_table_read_as_a_staircase():

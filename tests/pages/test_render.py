@@ -58,8 +58,10 @@ def tags_of(page: bytes) -> list[tuple[str, dict[str, str | None]]]:
 
 
 def shape_of(page: bytes) -> list[tuple[str, list[str]]]:
-    """Which elements with which attributes a page holds, in no order (sensors are sorted by name)."""
-    return sorted((tag, sorted(attributes)) for tag, attributes in tags_of(page))
+    """Which elements with which attributes a page holds, in no order, but for
+    places where a path may break."""
+    tags = ((tag, sorted(attributes)) for tag, attributes in tags_of(page))
+    return sorted((tag, attributes) for tag, attributes in tags if tag != "wbr")
 
 
 def test_the_same_input_gives_the_same_bytes_in_another_process() -> None:
