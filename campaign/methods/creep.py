@@ -42,6 +42,9 @@ EXTRAPOLATION_LIMIT = 10.0
 LONGEST_TIME = 3.0
 """No time constant is looked for beyond this multiple of the time that the record covers."""
 
+SAME_TIME = 1.5
+"""Two time constants of a series closer than this ratio are one: such a series is left out."""
+
 FEWEST_STRETCHES = 12
 """A form is fitted only where there are this many means, and at least three a parameter."""
 
@@ -247,10 +250,8 @@ def fit_creep(stretches: Stretches, values: FloatArray) -> CreepFits | None:
     times = middle_times(stretches)
     noise = find_block_noise(smooth_columns(times), values, stretches)
     whiten = whitened_by(noise.whitening(stretches))
-    fits = sorted(
-        (_fitted(form, times, values, whiten) for form in FORMS if 3 * form.parameters <= len(values)),
-        key=lambda found: found.aicc,
-    )
+    fitted = (_fitted(form, times, values, whiten) for form in FORMS if 3 * form.parameters <= len(values))
+    fits = sorted((found for found in fitted if not _is_degenerate(found)), key=lambda found: found.aicc)
     return CreepFits(tuple(fits), noise, lag_one(values - fits[0].curve(times)))
 
 
@@ -320,6 +321,14 @@ def _fitted(form: CreepForm, times: FloatArray, values: FloatArray, whiten: Whit
         whiten=whiten,
     )
     return FittedForm(form, fit, _aicc(fit), shortest, longest)
+
+
+def _is_degenerate(found: FittedForm) -> bool:
+    """Whether a series has fewer times than terms: two of them run together, or one lies on a bound."""
+    times = np.sort(found.fit.shape)
+    if not found.name.startswith("Prony") or len(times) < 2:
+        return False
+    return bool(found.fit.on_bound.any() or np.min(times[1:] / times[:-1]) < SAME_TIME)
 
 
 def _aicc(fit: SeparableFit) -> float:
