@@ -237,7 +237,7 @@ def _pressure_table(core: pd.DataFrame, spread: InfluenceSpread) -> pd.DataFrame
     return core.rename(columns=PRESSURE_NAMES).assign(
         strain_residual_sd_before=core["residual_sd_before"] / divisor,
         strain_residual_sd_after=core["residual_sd_after"] / divisor,
-        one_correction=core["generation"].map(spread.answers).fillna("not decided").astype(str),
+        one_correction=[spread.answers.get(str(g), "not decided") for g in core["generation"]],
     )
 
 

@@ -10,6 +10,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
 from itertools import pairwise
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -63,6 +64,7 @@ CURVE_POINTS = 160
 TRACE_POINTS = 150
 
 Series = FloatArray | None
+Columns = dict[str, npt.NDArray[Any]]
 
 
 @dataclass(frozen=True)
@@ -161,9 +163,9 @@ def features_of_sweeps(trial: Trial, influence: Influence) -> SweepFeatures:
     notices += _too_small(trial, len(stretches) - len(sweeps), influence.name)
     legs = [_legs(values[part]) for part in sweeps]
     points = [_points_of(trial, values, part, own) for part, own in zip(sweeps, legs, strict=True)]
-    kept = [number for number, part in enumerate(points) if len(part) >= 3]
+    kept = [number for number, part in enumerate(points) if len(part["leg"]) >= 3]
     notices += _remarks(trial, values, [sweeps[n] for n in kept], [legs[n] for n in kept], influence)
-    table = _table([points[n].assign(sweep=place) for place, n in enumerate(kept)])
+    table = _table([points[n] for n in kept])
     if influence.moves_length:
         table[list(REFERENCES)] = np.nan
     curves = {place: _curve(values[sweeps[n]], trial.signal[sweeps[n]]) for place, n in enumerate(kept)}
@@ -261,7 +263,7 @@ def _turns(values: FloatArray, least: float) -> list[int]:
     return turns
 
 
-def _points_of(trial: Trial, values: FloatArray, rows: IntArray, legs: IntArray) -> pd.DataFrame:
+def _points_of(trial: Trial, values: FloatArray, rows: IntArray, legs: IntArray) -> Columns:
     """The points of one sweep, in the order taken."""
     signs = _leg_signs(values[rows], legs)
     if trial.time_s is None or len(rows) <= TABLE_ROWS:
@@ -274,15 +276,13 @@ def _points_of(trial: Trial, values: FloatArray, rows: IntArray, legs: IntArray)
     return _stepped(trial, values, rows, legs, signs)
 
 
-def _turns_apart(points: pd.DataFrame) -> pd.DataFrame:
+def _turns_apart(points: Columns) -> Columns:
     """Points of dwells or of a table, in which the one at a turn belongs to neither branch."""
-    turning = points["leg"].diff().fillna(0) != 0
-    return points.assign(branch=points["branch"].where(~turning, 0))
+    turning = np.concatenate([[False], np.diff(points["leg"]) != 0])
+    return points | {"branch": np.where(turning, 0, points["branch"])}
 
 
-def _stepped(
-    trial: Trial, values: FloatArray, rows: IntArray, legs: IntArray, signs: IntArray
-) -> pd.DataFrame:
+def _stepped(trial: Trial, values: FloatArray, rows: IntArray, legs: IntArray, signs: IntArray) -> Columns:
     """Points of a sweep that never rests: means of equal steps of the influence on every leg."""
     parts = []
     for leg in np.unique(legs):
@@ -295,10 +295,15 @@ def _stepped(
         edges = np.flatnonzero(np.diff(step[order])) + 1
         starts, stops = np.concatenate([[0], edges]), np.concatenate([edges, [len(own)]])
         parts.append(_averaged(trial, values, rows[own[order]], starts, stops, legs[own[order]], signs))
-    points = pd.concat(parts, ignore_index=True) if parts else _table([])
-    keys = ["leg", "time_s"] if points["time_s"].notna().all() else ["leg"]
-    in_order: pd.DataFrame = points.sort_values(keys, kind="stable").reset_index(drop=True)
-    return in_order
+    points = _one_after_another(parts)
+    if not np.isfinite(points["time_s"]).all():
+        return points
+    in_order = np.lexsort([points["time_s"], points["leg"]])
+    return {name: column[in_order] for name, column in points.items()}
+
+
+def _one_after_another(parts: list[Columns]) -> Columns:
+    return {name: np.concatenate([part[name] for part in parts]) for name in POINT_COLUMNS}
 
 
 def _averaged(
@@ -309,7 +314,7 @@ def _averaged(
     stops: IntArray,
     legs: IntArray,
     signs: IntArray,
-) -> pd.DataFrame:
+) -> Columns:
     """Means over stretches of *rows*, with branch and leg."""
     places, owner = expand(np.asarray(starts, dtype=np.int64), np.asarray(stops, dtype=np.int64))
     counts = np.bincount(owner, minlength=len(starts))
@@ -324,22 +329,21 @@ def _averaged(
     seconds = mean(trial.time_s if timed else None)
     begun = float(trial.time_s[0]) if timed and trial.time_s is not None else 0.0
     leg = legs[places[np.cumsum(counts) - 1]] if len(places) else np.zeros(0, dtype=np.int64)
-    return pd.DataFrame(
-        {
-            "sweep": 0,
-            "leg": leg,
-            "influence": mean(values),
-            "signal": mean(trial.signal),
-            "branch": signs[leg],
-            "time_s": seconds - begun,
-            "dwell_s": _dwell(trial, chosen, owner, len(starts)) if timed else np.nan,
-            "count": counts,
-            "strain": mean(trial.strain),
-            "elongation_mm": mean(trial.elongation_mm),
-            "length_mm": mean(trial.length_mm),
-            "temperature_c": mean(trial.temperature_c),
-        }
-    )
+    unknown = np.full(len(starts), np.nan)
+    return {
+        "sweep": np.zeros(len(starts), dtype=np.int64),
+        "leg": leg,
+        "influence": mean(values),
+        "signal": mean(trial.signal),
+        "branch": signs[leg],
+        "time_s": seconds - begun,
+        "dwell_s": _dwell(trial, chosen, owner, len(starts)) if timed else unknown,
+        "count": counts,
+        "strain": mean(trial.strain),
+        "elongation_mm": mean(trial.elongation_mm),
+        "length_mm": mean(trial.length_mm),
+        "temperature_c": mean(trial.temperature_c),
+    }
 
 
 def _dwell(trial: Trial, chosen: IntArray, owner: IntArray, points: int) -> FloatArray:
@@ -362,12 +366,13 @@ def _leg_signs(values: FloatArray, legs: IntArray) -> IntArray:
     return signs
 
 
-def _table(parts: list[pd.DataFrame]) -> pd.DataFrame:
-    if not parts:
-        return pd.DataFrame(columns=list(POINT_COLUMNS)).astype(
-            {c: "int64" if c in ("sweep", "leg", "branch", "count") else "float64" for c in POINT_COLUMNS}
-        )
-    return pd.concat(parts, ignore_index=True)[list(POINT_COLUMNS)]
+def _table(sweeps: list[Columns]) -> pd.DataFrame:
+    """The points of all sweeps of a trial, numbered; empty with the right kinds of column."""
+    if not sweeps:
+        whole = ("sweep", "leg", "branch", "count")
+        return pd.DataFrame({c: np.zeros(0, np.int64 if c in whole else np.float64) for c in POINT_COLUMNS})
+    numbered = [part | {"sweep": np.full(len(part["leg"]), n)} for n, part in enumerate(sweeps)]
+    return pd.DataFrame(_one_after_another(numbered))
 
 
 def _curve(influence: FloatArray, signal: FloatArray) -> tuple[FloatArray, FloatArray]:

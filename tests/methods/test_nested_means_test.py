@@ -22,7 +22,7 @@ DYESTUFF = np.array(
     ],
     dtype=float,
 )
-"""Yield in grams of dyestuff of five samples from each of six batches: Davies & Goldsmith (1972), table 6.1."""
+"""Yield of dyestuff in grams, five samples of six batches: Davies & Goldsmith (1972), table 6.1."""
 
 
 def test_groups_of_the_dyestuff_data():
