@@ -126,6 +126,7 @@ def _moved(drift: Drift) -> list[dict[Hashable, Any]]:
 def _tables(drift: Drift) -> list[Table]:
     return [
         holds_table(drift.holds, drift.reference),
+        settling_table(drift.holds, drift.reference),
         _forms_table(drift),
         _components_table(drift),
         _zero_table(drift),
@@ -137,11 +138,74 @@ def _tables(drift: Drift) -> list[Table]:
 
 
 def holds_table(holds: pd.DataFrame, reference: ReferenceQuantity, name: str = "holds") -> Table:
-    """Return the table of holds, those that change most first."""
-    unit = percent_unit(str(holds["percent_of"].iloc[0])) if len(holds) else "%FSO"
+    """Return the changes of every hold, those that change most first."""
+    unit = _unit_of_rows(holds)
+    none = "not reached"
+    return Table(
+        name=name,
+        caption="Every hold: change since the first settled signal, and what it may be called.",
+        frame=_shown_holds(holds),
+        columns=(
+            *_who_columns(reference),
+            Column("called", "Called", kind="text"),
+            _changes("change_1min", "after 1 min", unit, none),
+            _changes("change_10min", "10 min", unit, none),
+            _changes("change_1h", "1 h", unit, none),
+            Column("percent_fso_per_decade", "a decade", unit, interval=("low", "high"), missing="too short"),
+        ),
+        shown_rows=40,
+        source="holds",
+        note="Brackets: 95 % limits of this one hold. They know its noise, not what another hold would give.",
+    )
+
+
+def settling_table(holds: pd.DataFrame, reference: ReferenceQuantity, name: str = "settling") -> Table:
+    """Return how every hold goes on: slope for the other time zero, creep, zero return, forms, settling."""
+    unit = _unit_of_rows(holds)
+    return Table(
+        name=name,
+        caption="Every hold: slope with time zero at the ramp’s start, 20 to 30 min, zero return, forms.",
+        frame=_shown_holds(holds),
+        columns=(
+            *_who_columns(reference),
+            Column("_lasts", "Lasts", kind="text"),
+            Column("per_decade_from_ramp_start", "a decade", unit, digits=3, missing="no ramp"),
+            _changes("creep_20_30min", "20–30 min", unit, "not reached"),
+            _changes("zero_return", "zero return", unit, "not recorded"),
+            Column("forms_shown", "Forms", kind="text"),
+            Column("_settles", "Settles", kind="text"),
+        ),
+        shown_rows=40,
+        source="holds",
+        note="Here time counts from the beginning of the ramp; the table before counts from its end. Where "
+        "the two slopes differ the ramp still shows.",
+    )
+
+
+def _unit_of_rows(holds: pd.DataFrame) -> str:
+    return percent_unit(str(holds["percent_of"].iloc[0])) if len(holds) else "%FSO"
+
+
+def _who_columns(reference: ReferenceQuantity) -> tuple[Column, ...]:
+    return (
+        Column("_sensor", "Sensor", kind="text", href="_href"),
+        Column("_place", "Place", kind="text"),
+        Column(
+            "strain",
+            reference.name.capitalize(),
+            reference.shown_unit,
+            digits=3,
+            factor=reference.shown_factor,
+            missing="not known",
+        ),
+    )
+
+
+def _shown_holds(holds: pd.DataFrame) -> pd.DataFrame:
+    """The rows with their words and links, largest change first; strains to a hundredth of a per cent."""
     order = holds["change_end_percent_fso"].abs().sort_values(ascending=False, kind="stable").index
     frame = holds.loc[order].reset_index(drop=True)
-    frame = frame.assign(
+    return frame.assign(
         _sensor=frame["module"].astype(str) + " " + frame["sensor"].astype(str),
         _href=[
             slugs.trial_href(str(m), str(s), str(t))
@@ -150,36 +214,6 @@ def holds_table(holds: pd.DataFrame, reference: ReferenceQuantity, name: str = "
         _place=[PLACE_WORDS[str(p)] for p in frame["place"]],
         _lasts=[time_words(float(v)) for v in frame["duration_s"]],
         _settles=[_settling(row) for row in frame.to_dict("records")],
-    )
-    factor, shown = reference.shown_factor, reference.shown_unit
-    none = "not reached"
-    return Table(
-        name=name,
-        caption="Every hold: change since the first settled signal, and what it may be called.",
-        frame=frame,
-        columns=(
-            Column("_sensor", "Sensor", kind="text", href="_href"),
-            Column("_place", "Place", kind="text"),
-            Column(
-                "strain", reference.name.capitalize(), shown, digits=3, factor=factor, missing="not known"
-            ),
-            Column("_lasts", "Lasts", kind="text"),
-            _changes("change_1min", "after 1 min", unit, none),
-            _changes("change_10min", "10 min", unit, none),
-            _changes("change_1h", "1 h", unit, none),
-            Column("percent_fso_per_decade", "a decade", unit, interval=("low", "high"), missing="too short"),
-            Column(
-                "per_decade_from_ramp_start", "t = 0 at the ramp’s start", unit, digits=2, missing="no ramp"
-            ),
-            _changes("creep_20_30min", "20–30 min", unit, none),
-            _changes("zero_return", "zero return", unit, "not recorded"),
-            Column("forms_shown", "Forms", kind="text"),
-            Column("_settles", "Settles", kind="text"),
-            Column("called", "Called", kind="text"),
-        ),
-        shown_rows=40,
-        source="holds",
-        note="Brackets: 95 % limits of this one hold. They know its noise, not what another hold would give.",
     )
 
 
@@ -210,7 +244,7 @@ def _forms_table(drift: Drift) -> Table:
         columns=(
             Column("module", "Module", kind="text"),
             Column("sensor", "Sensor", kind="text"),
-            Column("hold", "Hold", kind="integer"),
+            Column("repetition", "Run", kind="integer"),
             Column("form", "Form", kind="text"),
             Column("aicc_above_best", "AICc above the best", digits=2),
             Column("shape", "Shape, times in s", kind="text"),
@@ -354,17 +388,21 @@ def _parasitic_table(drift: Drift) -> Table:
 
 def sensor_holds(
     results: CampaignResults, module: str, sensor: str
-) -> tuple[list[Figure], Table | None, dict[str, list[str]]]:
-    """Return the figures of a sensor's holds, their table, and the names of the figures by trial."""
+) -> tuple[list[Figure], list[Table], dict[str, list[str]]]:
+    """Return the figures of a sensor's holds, their tables, and the names of the figures by trial."""
     drift = results.drift
     if drift is None:
-        return [], None, {}
+        return [], [], {}
     rows = drift.holds[(drift.holds["module"] == module) & (drift.holds["sensor"] == sensor)]
     if rows.empty:
-        return [], None, {}
+        return [], [], {}
     own = [c for c in drift.curves if (c.module, c.sensor) == (module, sensor)][:MOST_PLOTS]
     figures = [hold_figure(c, drift.reference, f"hold-{i}", 280) for i, c in enumerate(own, 1)]
     by_trial: dict[str, list[str]] = {}
     for curve, figure in zip(own, figures, strict=True):
         by_trial.setdefault(curve.trial, []).append(figure.name)
-    return figures, holds_table(rows, drift.reference, "own_holds"), by_trial
+    tables = [
+        holds_table(rows, drift.reference, "own_holds"),
+        settling_table(rows, drift.reference, "own_settling"),
+    ]
+    return figures, tables, by_trial

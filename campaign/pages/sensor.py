@@ -148,7 +148,7 @@ def _sensor_page(
             "ordinary": parts.ordinary,
         },
         figures=(*sensor_figures_of(parts), *swept, *outlines, *holds, *plots),
-        tables=(*_runs_table(parts), *_limits_table(parts), *([held] if held is not None else [])),
+        tables=(*_runs_table(parts), *_limits_table(parts), *held),
         data={"calculator": calculator_data(records)} if records else {},
         description=f"Readings, line, figures of merit and trials of sensor {parts.sensor} of module "
         f"{parts.module}.",
