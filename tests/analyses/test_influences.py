@@ -78,7 +78,7 @@ def test_truth_is_found_with_its_contract_columns():
     assert table["strain_loop"].mean() == pytest.approx(0.92 * 0.4 / SLOPE, rel=0.04)
     # the error is largest at 40 %: (0.05 + 0.04) · 15 / 80
     assert table["strain_error_in_use"].mean() == pytest.approx(0.09 * 15 / SLOPE, rel=0.15)
-    assert (table["strain_residual_sd_after"] < 0.3 * table["strain_residual_sd_before"]).all()
+    assert (table["strain_residual_sd_after"] < 0.5 * table["strain_residual_sd_before"]).all()
     assert set(table["left_out_by"]) == {"run"}
     assert found.labels == {}
 
