@@ -84,10 +84,9 @@ def hold_signal(plan: HoldPlan, sensor: MountedSensor, aging: SensorAging, time_
     since = time_s - plan.before_s - plan.ramp_s
     back = since - plan.duration_s - plan.ramp_s
     gone = aging.relaxation * truth.relaxation.at(np.clip(since, 0.0, plan.duration_s))
-    kept = np.where(
-        back < -plan.ramp_s, 1.0, truth.left_after * np.exp(-np.maximum(back, 0.0) / truth.recovery_s)
-    )
-    return np.asarray(signal - (held - rest) * gone * kept)
+    left = np.interp(back, [-plan.ramp_s, 0.0], [1.0, truth.left_after])
+    left = left * np.exp(-np.maximum(back, 0.0) / truth.recovery_s)
+    return np.asarray(signal - (held - rest) * gone * left)
 
 
 def _recording(
