@@ -148,7 +148,7 @@ def _sessions(runs: pd.DataFrame) -> pd.DataFrame:
         1.0 / table["runs"] + 1.0 / first["runs"]
     )
     reach = table["generation"].map({g: stats.t.ppf(0.975, f) if f else math.nan for g, f in freedom.items()})
-    reach = (error * reach).where(departure != 0.0, 0.0)
+    reach = (error * reach).where(table.groupby(SENSOR_KEYS, sort=False).cumcount() > 0, 0.0)
     table = table.assign(
         departure_percent_fso=departure, departure_low=departure - reach, departure_high=departure + reach
     )
