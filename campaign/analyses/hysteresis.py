@@ -184,7 +184,8 @@ def _loops(table: LoopTable) -> pd.DataFrame:
 
 def _outlines(features: Iterable[CyclicFeatures], table: LoopTable) -> list[SensorCurve]:
     """The outlines that trials kept, lengths in the reference, in the order of the table."""
-    rows = table.rows.set_index(["trial", "module", "sensor", "cycle"]).sort_index()
+    named = zip(*(table.rows[k] for k in ("trial", "sensor", "repetition", "cycle")), strict=True)
+    known = dict(zip(named, zip(table.rows["rate_level"], table.rows["settled"], strict=True), strict=True))
     found = []
     for own in features:
         conversion = into_reference(own.recorded, table.reference, own.identity.rest_length_mm)
@@ -193,7 +194,7 @@ def _outlines(features: Iterable[CyclicFeatures], table: LoopTable) -> list[Sens
         offset, factor = conversion
         identity = own.identity
         for curve in own.curves:
-            row = rows.loc[[(identity.file, identity.module, identity.sensor, curve.cycle)]].iloc[0]
+            rate, settled = known[identity.file, identity.sensor, identity.repetition, curve.cycle]
             found.append(
                 SensorCurve(
                     identity.generation,
@@ -202,9 +203,9 @@ def _outlines(features: Iterable[CyclicFeatures], table: LoopTable) -> list[Sens
                     identity.session,
                     identity.repetition,
                     identity.file,
-                    float(row["rate_level"]),
+                    float(rate),
                     curve.cycle,
-                    bool(row["settled"]),
+                    bool(settled),
                     offset + factor * curve.x,
                     curve.signal,
                 )

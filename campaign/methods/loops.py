@@ -31,6 +31,9 @@ SMALLEST_TURN = 0.05
 NOISE_MULTIPLE = 8.0
 """A reversal is at least this many standard deviations of the reference's noise."""
 
+SPIKE = 5.0
+"""A single sample that leaps by more than this multiple of the neighbouring steps is a spike."""
+
 REST_SHARE = 0.01
 """A sample rests at a turn while it lies within this share of the branch, or within the noise, of it."""
 
@@ -139,8 +142,8 @@ def find_cycles(reference: FloatArray) -> Cycles:
     Returns
     -------
     Cycles
-        Whole ones only: what comes before the first lower turn and after the last is in none. A cycle
-        may be of any amplitude above the threshold.
+        Each from a lower turn up and down to the next; the ends of the run count as turns, so that the first
+        and the last may be cut short. A cycle may be of any amplitude above the threshold.
     """
     none = np.empty(0, dtype=np.int64)
     span = float(np.ptp(reference)) if len(reference) else 0.0
@@ -148,13 +151,29 @@ def find_cycles(reference: FloatArray) -> Cycles:
     threshold = max(SMALLEST_TURN * span, min(NOISE_MULTIPLE * noise, 0.5 * span))
     if len(reference) < 5 or span == 0.0:
         return Cycles(none, none, none, threshold, noise)
-    turns = find_reversals(ndimage.median_filter(reference, size=3, mode="nearest"), threshold)
+    reference = without_spikes(reference)
+    turns = find_reversals(reference, threshold)
     turns = turns[1:] if len(turns) > 1 and reference[turns[0]] > reference[turns[1]] else turns
     whole = (len(turns) - 1) // 2
     if whole < 1:
         return Cycles(none, none, none, threshold, noise)
     lower, tops = turns[0 : 2 * whole + 1 : 2], turns[1 : 2 * whole : 2]
     return Cycles(lower[:-1], tops, lower[1:], threshold, noise)
+
+
+def without_spikes(reference: FloatArray) -> FloatArray:
+    """Return *reference* with single samples that leap out and back replaced by the median of three.
+
+    A leap is more than :data:`SPIKE` times the steps on either side of it, and more than noise: the turn of
+    a fast wave is none.
+    """
+    if len(reference) < 5:
+        return reference
+    step = np.abs(np.diff(reference, prepend=reference[0], append=reference[-1]))
+    around = np.maximum(np.roll(step[:-1], 1), np.roll(step[1:], -1))
+    median = ndimage.median_filter(reference, size=3, mode="nearest")
+    least = max(NOISE_MULTIPLE * reference_noise(reference), 0.02 * float(np.ptp(reference)))
+    return np.where(np.abs(reference - median) > SPIKE * around + least, median, reference)
 
 
 def find_reversals(values: FloatArray, threshold: float) -> IntArray:
@@ -231,6 +250,7 @@ def measure_loops(
     stretchable sensors with the signal's change from its unstretched value. A branch is averaged in
     :data:`BINS` equal steps of length (the mean of a straight branch lies on it), then interpolated.
     """
+    reference = without_spikes(reference)
     ends = np.concatenate([cycles.starts, cycles.tops]), np.concatenate([cycles.tops, cycles.stops])
     branches = _branches(reference, signal, time_s, *ends, cycles.noise)
     count = cycles.count
@@ -459,6 +479,8 @@ def _extrapolated(
     x: FloatArray, y: FloatArray, left: IntArray, right: IntArray, places: FloatArray
 ) -> FloatArray:
     """The straight line through knots *left* and *right*, at *places*."""
+    if len(x) == 0:
+        return np.full(places.shape, np.nan)
     last = len(x) - 1
     left, right = np.clip(left, 0, last), np.clip(right, 0, last)
     run = x[right] - x[left]

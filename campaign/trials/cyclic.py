@@ -181,7 +181,10 @@ def _cycle_table(trial: Trial, rows: IntArray, cycles: Cycles, loops: Loops) -> 
 def _are_whole(loops: Loops) -> BoolArray:
     """Cycles that reach the usual amplitude: the median of those above half of the largest."""
     amplitude = loops.high - loops.low
-    usual = np.median(amplitude[amplitude >= 0.5 * amplitude.max()])
+    known = amplitude[np.isfinite(amplitude)]
+    if len(known) == 0:
+        return np.zeros(len(amplitude), dtype=bool)
+    usual = np.median(known[known >= 0.5 * known.max()])
     return np.asarray((amplitude >= WHOLE_SHARE * usual) & np.isfinite(loops.width[:, MID]))
 
 
@@ -300,7 +303,8 @@ def _sample_notices(
         usual = float(np.median(steps)) if len(steps) else 0.0
         gaps = int(np.sum(steps > LONG_GAP * usual)) if usual > 0 else 0
         if gaps:
-            what = f"{gaps} gaps in time, the longest {float(steps.max()):.3g} s at samples of {usual:.3g} s"
+            longest = f"the longest {float(steps.max()):.3g} s at samples of {usual:.3g} s"
+            what = f"{gaps} gaps in time, {longest}" if gaps > 1 else f"one gap in time, {longest}"
             done = "loops are taken from the samples there are"
             found.append(_note(trial, "time-gaps", what, done, "log without pauses", gaps))
     clipped = _clipped(x[inside], signal[inside])

@@ -88,6 +88,7 @@ def cyclic_campaign(
     runs: int = 2,
     periods: tuple[float, ...] = (10.0,),
     cycles: int = 8,
+    samples: int = 100,
 ) -> Mapping[TrialKey, CyclicFeatures]:
     """Modules × sensors × runs × rates, widths drawn about the truth."""
     rng = np.random.default_rng(seed)
@@ -107,6 +108,7 @@ def cyclic_campaign(
                         repetition=r + 1,
                         period_s=period,
                         cycles=cycles,
+                        samples=samples,
                     )
                     found[trial.file, trial.identity.sensor, r + 1] = features_of_cyclic(trial)
     return found
