@@ -19,6 +19,7 @@ import numpy as np
 import pandas as pd
 from scipy import stats
 
+from campaign.analyses.balanced_intervals import balanced_intervals
 from campaign.analyses.variance_fit import PLACES, GenerationFit, choose_places, fit_generation
 from campaign.analyses.variance_frames import fixed_effects_and_new_sensors
 from campaign.analyses.variance_model import build_model
@@ -70,6 +71,17 @@ def outcomes(seed: int) -> Iterator[tuple[str, bool]]:
         yield f"{name.replace('_', ' ')} SD", _holds(fit.variance_at(name, "mid"), true_variance(name, 0.0))
     yield from _joined(fit)
     yield from _new_sensors(fit, np.random.default_rng([seed, 1]))
+    yield from _second_limits(fit)
+
+
+def _second_limits(fit: GenerationFit) -> Iterator[tuple[str, bool]]:
+    """The limits by modified large sample that stand beside the profile's, the design being balanced."""
+    found = balanced_intervals(fit)
+    x = fit.places["mid"]
+    truth = {c.name: true_variance(c.name, x) for c in fit.components}
+    for name, variance in {**truth, "total": sum(truth.values())}.items():
+        words = f"{name.replace('_', ' ')} SD at mid, modified large sample"
+        yield words, _holds(found[name, "mid"], variance)
 
 
 def _holds(interval: VarianceInterval, truth: float) -> bool:

@@ -10,6 +10,7 @@ import numpy.typing as npt
 import pandas as pd
 from scipy import stats
 
+from campaign.analyses.balanced_intervals import BalancedIntervals, balanced_intervals
 from campaign.analyses.variance_fit import (
     LINES,
     PLACES,
@@ -35,7 +36,7 @@ COMPONENT_COLUMNS = (
 )
 STRAIN_COLUMNS = (
     *("generation", "level", "place", "strain_sd", "low", "high", "share", "share_low", "share_high"),
-    *("label", "called", "x"),
+    *("label", "called", "x", "low_modified_large_sample", "high_modified_large_sample"),
 )
 EFFECT_COLUMNS = ("generation", "level", "module", "sensor", "term", "estimate", "low", "high", "unit")
 IDENTIFIABILITY_COLUMNS = ("generation", "component", "called", "degrees_of_freedom", "label", "reason")
@@ -225,19 +226,24 @@ def variance_in_strain(fits: Iterable[GenerationFit], uneven: set[str]) -> pd.Da
     """Return every component as strain-equivalent SD at zero, mid and full, with its share of the total.
 
     √(Σ00 + 2 Σ01 x + Σ11 x²)/|β1|; limits by profile REML, those of shares and totals joined from these. A
-    share is withheld where only limits of the component are stated.
+    share is withheld where only limits of the component are stated. Where the design is balanced, the limits
+    by modified large sample stand beside those by profile; NaN elsewhere.
     """
-    rows = (
-        row
-        for fit in fits
-        if fit.mean_slope
-        for place in PLACES
-        for row in _strain_rows(fit, place, fit.generation in uneven)
-    )
+    rows = (row for fit in fits if fit.mean_slope for row in _strain_rows(fit, fit.generation in uneven))
     return _frame(rows, STRAIN_COLUMNS)
 
 
-def _strain_rows(fit: GenerationFit, place: str, uneven: bool) -> Iterator[Row]:
+def _strain_rows(fit: GenerationFit, uneven: bool) -> Iterator[Row]:
+    profiled = fit.variance_at(fit.components[-1].name, "mid").known
+    second = balanced_intervals(fit) if profiled else {}
+    for place in PLACES:
+        yield from _component_strain_rows(fit, place, uneven, second)
+        yield _total_strain_row(fit, place, second)
+
+
+def _component_strain_rows(
+    fit: GenerationFit, place: str, uneven: bool, second: BalancedIntervals
+) -> Iterator[Row]:
     parts = {c.name: fit.variance_at(c.name, place) for c in fit.components}
     for component in fit.components:
         limits = _limits(component, parts[component.name], uneven)
@@ -246,19 +252,40 @@ def _strain_rows(fit: GenerationFit, place: str, uneven: bool) -> Iterator[Row]:
         hidden = is_withheld(component)
         yield {
             **_strain_row(fit, component.name, place, limits),
+            **_second_limits(
+                fit,
+                limits[2],
+                second.get((component.name, place)),
+                only_upper=has_upper_limit_only(component),
+            ),
             "share": NAN if hidden else share.estimate,
             "share_low": NAN if hidden else share.low,
             "share_high": NAN if hidden else share.high,
             "called": component.called,
         }
-    total = fit.total_at(place).root
-    label = "" if "module" in parts or _is_module_and_sensor(fit) else LOWER_BOUND
-    yield {
-        **_strain_row(fit, "total", place, (*total, label)),
+
+
+def _total_strain_row(fit: GenerationFit, place: str, second: BalancedIntervals) -> Row:
+    complete = "module" in fit.model.terms or _is_module_and_sensor(fit)
+    limits = (*fit.total_at(place).root, "" if complete else LOWER_BOUND)
+    return {
+        **_strain_row(fit, "total", place, limits),
+        **_second_limits(fit, limits[2], second.get(("total", place))),
         "share": 1.0,
         "share_low": 1.0,
         "share_high": 1.0,
         "called": "total",
+    }
+
+
+def _second_limits(
+    fit: GenerationFit, high: float, second: VarianceInterval | None, *, only_upper: bool = False
+) -> Row:
+    """The limits by modified large sample wherever a profile limit, *high*, stands."""
+    low, up = (NAN, NAN) if second is None or np.isnan(high) else second.root[1:]
+    return {
+        "low_modified_large_sample": fit.strain_of(0.0 if only_upper and low > 0 else low),
+        "high_modified_large_sample": fit.strain_of(up),
     }
 
 

@@ -17,6 +17,8 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import stats
 
+from campaign.methods.modified_large_sample import MeanSquares
+
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
@@ -99,21 +101,9 @@ class NestedAnalysisOfVariance:
 
         References
         ----------
-        Ting, Burdick, Graybill, Jeyaratnam & Lu (1990), Journal of Statistical Computation and Simulation 35,
-        135; Burdick & Graybill (1992), Confidence Intervals on Variance Components, 3.3.
+        As in :mod:`campaign.methods.modified_large_sample`.
         """
-        self._check_balance()
-        k = self.names.index(name)
-        alpha = (1.0 - level) / 2.0
-        square, freedom = self.mean_squares, self.degrees_of_freedom
-        if name == ERROR:
-            low, high = stats.chi2.isf([alpha, 1.0 - alpha], freedom[k]) / freedom[k]
-            return ComponentInterval(float(square[k]), float(square[k] / low), float(square[k] / high))
-        below, above = _difference_limits(square[k], freedom[k], square[k + 1], freedom[k + 1], alpha)
-        size = self.expectations[k, k]
-        return ComponentInterval(
-            self.variance(name), max(float(below / size), 0.0), max(float(above / size), 0.0)
-        )
+        return self._limits([name], level)
 
     def total_interval(self, level: float = 0.95) -> ComponentInterval:
         """Interval of the sum of all components, as a sum of mean squares with positive weights.
@@ -125,43 +115,17 @@ class NestedAnalysisOfVariance:
 
         References
         ----------
-        Graybill & Wang (1980), Journal of the American Statistical Association 75, 869.
+        As in :mod:`campaign.methods.modified_large_sample`.
         """
-        self._check_balance()
-        alpha = (1.0 - level) / 2.0
-        weights = np.linalg.solve(self.expectations.T, np.ones(len(self.names)))
-        parts = weights * self.mean_squares
-        upper = self.degrees_of_freedom / stats.chi2.isf(alpha, self.degrees_of_freedom)
-        lower = self.degrees_of_freedom / stats.chi2.isf(1.0 - alpha, self.degrees_of_freedom)
-        total = float(parts.sum())
-        below = float(np.sqrt((((1.0 - upper) * parts) ** 2).sum()))
-        above = float(np.sqrt((((lower - 1.0) * parts) ** 2).sum()))
-        return ComponentInterval(total, max(total - below, 0.0), total + above)
+        return self._limits(self.names, level)
 
-    def _check_balance(self) -> None:
+    def _limits(self, names: Sequence[str], level: float) -> ComponentInterval:
+        """Interval of the sum of the components *names*."""
         if not self.balanced:
             raise ValueError("modified-large-sample intervals need a balanced design")
-
-
-def _difference_limits(
-    first: float, first_freedom: float, second: float, second_freedom: float, alpha: float
-) -> tuple[float, float]:
-    """Limits of the difference of two expected mean squares."""
-
-    def quantile(tail: float, a: float, b: float) -> float:
-        return float(stats.f.isf(tail, a, b)) if np.isfinite(b) else float(stats.chi2.isf(tail, a) / a)
-
-    g1 = 1.0 - 1.0 / quantile(alpha, first_freedom, np.inf)
-    h1 = 1.0 / quantile(1.0 - alpha, first_freedom, np.inf) - 1.0
-    g2 = 1.0 - 1.0 / quantile(alpha, second_freedom, np.inf)
-    h2 = 1.0 / quantile(1.0 - alpha, second_freedom, np.inf) - 1.0
-    high = quantile(alpha, first_freedom, second_freedom)
-    low = quantile(1.0 - alpha, first_freedom, second_freedom)
-    g12 = ((high - 1.0) ** 2 - (g1 * high) ** 2 - h2**2) / high
-    h12 = ((1.0 - low) ** 2 - (h1 * low) ** 2 - g2**2) / low
-    down = (g1 * first) ** 2 + (h2 * second) ** 2 + g12 * first * second
-    up = (h1 * first) ** 2 + (g2 * second) ** 2 + h12 * first * second
-    return first - second - float(np.sqrt(max(down, 0.0))), first - second + float(np.sqrt(max(up, 0.0)))
+        table = MeanSquares(self.names, self.mean_squares, self.degrees_of_freedom, self.expectations)
+        found = table.limits(names, level)
+        return ComponentInterval(float(found.estimate), float(found.low), float(found.high))
 
 
 def nested_analysis_of_variance(

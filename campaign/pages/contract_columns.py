@@ -119,6 +119,8 @@ _MEANINGS: dict[str, str] = {
     "estimate": "the estimate",
     "low": "lower limit of the 95 % interval",
     "high": "upper limit of the 95 % interval",
+    "low_modified_large_sample": "lower limit by modified large sample, of balanced designs only",
+    "high_modified_large_sample": "upper limit by modified large sample, of balanced designs only",
     "p": "p value",
     "test": "which test the p value is of",
     "label": "what the design supports saying",

@@ -78,7 +78,7 @@ class Readings:
     @property
     def usable(self) -> pd.DataFrame:
         """The rows that analyses use (``used`` is True), index kept."""
-        return self.table[self.table["used"]]
+        return self.table[self.table["used"].astype(bool)]  # an empty table has no truth values
 
 
 RUN_KEYS = ["generation", "module", "sensor", "session", "repetition", "trial"]
