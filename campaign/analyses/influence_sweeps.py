@@ -59,7 +59,8 @@ def gather_points(
     -------
     pandas.DataFrame
         The columns of :data:`IDENTITY`, those of the trials' points, ``x``, ``unit`` (of the signal),
-        ``influence_unit`` and ``number``, which numbers the sweeps from 0; sorted by sensor, then trial.
+        ``influence_unit``, the sweep's whole range and ``number``, which numbers the sweeps from 0; sorted by
+        sensor, then trial.
     """
     parts = [_with_identity(found) for found in features if len(found.points)]
     if not parts:
@@ -68,14 +69,18 @@ def gather_points(
     keys = [*SENSOR_KEYS, "session", "repetition", "trial", "sweep"]
     table = table.sort_values(keys, kind="stable", ignore_index=True)
     table["x"] = table[COLUMN_OF[reference.name]].astype(float)
-    table["influence"] = table["influence"] - zero
+    for column in ("influence", "influence_low", "influence_high"):
+        table[column] = table[column] - zero
     table["number"] = table.groupby(keys, sort=False).ngroup()
     return table
 
 
 def _with_identity(found: SweepFeatures) -> pd.DataFrame:
     who = found.identity
+    sweep = found.points["sweep"]
     return found.points.assign(
+        influence_low=sweep.map({n: float(curve[0].min()) for n, curve in found.curves.items()}),
+        influence_high=sweep.map({n: float(curve[0].max()) for n, curve in found.curves.items()}),
         generation=who.generation,
         module=who.module,
         sensor=who.sensor,
@@ -102,7 +107,8 @@ def sweep_table(points: pd.DataFrame) -> pd.DataFrame:
         points["time_s"].to_numpy(float),
     )
     grouped = points.groupby("number", sort=True)
-    table = grouped[[*IDENTITY, "unit", "influence_unit", "sweep"]].first()
+    ends = ["influence_low", "influence_high"]
+    table = grouped[[*IDENTITY, "unit", "influence_unit", "sweep", *ends]].first()
     table = table.assign(
         points=counts,
         x=grouped["x"].mean(),
@@ -114,8 +120,6 @@ def sweep_table(points: pd.DataFrame) -> pd.DataFrame:
 def _with_lines(table: pd.DataFrame, lines: SweepLines) -> pd.DataFrame:
     run = table.groupby(SENSOR_KEYS, sort=False)["trial"].transform(lambda t: pd.factorize(t)[0])
     return table.assign(
-        influence_low=lines.low,
-        influence_high=lines.high,
         level=lines.level,
         slope=lines.slope,
         slope_error=lines.slope_error,

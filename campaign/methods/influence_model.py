@@ -45,8 +45,6 @@ class SweepLines:
         Shape (sweeps,): signal where the influence is zero, and its change per unit of the influence.
     slope_error, slope_freedom
         Standard error of the slope by the autocorrelation about the line, and the degrees of freedom left.
-    low, high
-        Range of the influence.
     loop
         Rising minus falling signal at mid range; NaN where the sweep has one branch only.
     residual_sd
@@ -61,8 +59,6 @@ class SweepLines:
     slope: FloatArray
     slope_error: FloatArray
     slope_freedom: FloatArray
-    low: FloatArray
-    high: FloatArray
     loop: FloatArray
     residual_sd: FloatArray
     time_correlation: FloatArray
@@ -166,8 +162,6 @@ def sweep_lines(
         means.slopes,
         means.slope_standard_errors,
         means.slope_degrees_of_freedom,
-        np.array([influence[part].min() for part in parts]),
-        np.array([influence[part].max() for part in parts]),
         np.array([loop_width(influence[part], signal[part], branch[part]) for part in parts]),
         np.sqrt(np.bincount(codes, residual**2) / np.maximum(counts - 2, 1)),
         correlation,
