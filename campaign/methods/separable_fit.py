@@ -134,7 +134,7 @@ def fit_separable(
     scan
         One grid a shape parameter, positive; every combination is tried and the best few are refined.
     low, high
-        Bounds of the shape parameters, positive; none where not given.
+        Bounds of the shape parameters, positive; where not given, twice beyond the scan.
     whiten
         Takes (n,) or (n, k) to what has independent residuals of equal variance.
 
@@ -155,8 +155,8 @@ def fit_separable(
     if model.shapes == 0:
         return _completed(problem, np.zeros(0), np.zeros(0, dtype=bool), 1, True)
     bounds = (
-        np.log(low) if low is not None else np.full(model.shapes, -np.inf),
-        np.log(high) if high is not None else np.full(model.shapes, np.inf),
+        np.log(low if low is not None else [grid.min() / 2.0 for grid in scan]),
+        np.log(high if high is not None else [grid.max() * 2.0 for grid in scan]),
     )
     starts, tried = _scanned(problem, scan)
     found = [_searched(problem, np.clip(start, *bounds), bounds) for start in starts]
