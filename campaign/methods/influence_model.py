@@ -151,21 +151,23 @@ def sweep_lines(
         The slope's standard error respects the autocorrelation of the residuals
         (:func:`campaign.methods.autocorrelation.stretch_means` with the influence in place of time).
     """
-    means = stretch_means(signal, influence, counts)
+    scale = float(np.ptp(signal)) or 1.0  # squares of residuals must neither vanish nor overflow
+    means = stretch_means((signal - signal[0]) / scale, influence, counts)
+    slope = means.slopes * scale
     codes = np.repeat(np.arange(len(counts)), counts)
-    level = means.means - means.slopes * np.bincount(codes, influence) / counts
-    residual = signal - level[codes] - means.slopes[codes] * influence
+    level = (np.bincount(codes, signal) - slope * np.bincount(codes, influence)) / counts
+    residual = (signal - level[codes] - slope[codes] * influence) / scale
     parts = np.split(np.arange(len(signal)), np.cumsum(counts)[:-1])
     drift, drift_p, correlation = _drifts(influence, residual, time_s, counts, parts)
     return SweepLines(
         level,
-        means.slopes,
-        means.slope_standard_errors,
+        slope,
+        means.slope_standard_errors * scale,
         means.slope_degrees_of_freedom,
         np.array([loop_width(influence[part], signal[part], branch[part]) for part in parts]),
-        np.sqrt(np.bincount(codes, residual**2) / np.maximum(counts - 2, 1)),
+        np.sqrt(np.bincount(codes, residual**2) / np.maximum(counts - 2, 1)) * scale,
         correlation,
-        drift,
+        drift * scale,
         drift_p,
     )
 
