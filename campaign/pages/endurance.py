@@ -14,7 +14,7 @@ from campaign.pages.sensor_axis import sensor_axis
 from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import FloatArray
 
-MOST_POINTS = 60
+MOST_POINTS = 30
 """Points of one sensor that are drawn; the file holds all."""
 
 _TITLES = {"zero": "Change of zero signal", "sensitivity": "Change of sensitivity"}

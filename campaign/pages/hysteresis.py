@@ -25,7 +25,6 @@ from campaign.pages.figures import (
     line,
     panel,
     plain,
-    points,
     small_multiples,
 )
 from campaign.pages.loop_figures import (
@@ -47,8 +46,8 @@ from campaign.recordings.recording import ReferenceQuantity
 MOST_CYCLES = 40
 """Cycles of one sensor that the figure of width against cycle draws, evenly spaced on a logarithmic axis."""
 
-MOST_LINE_POINTS = 2400
-"""Points of all lines of that figure together."""
+MOST_LINE_POINTS = 1000
+"""Points that the lines of one figure have together, where many sensors are drawn."""
 
 MOST_PANELS = 48
 """Modules that small multiples show; the tables hold all."""
@@ -214,11 +213,13 @@ def curves_figure(found: Hysteresis, where: SensorAxis) -> Figure | None:
     """Return the signed width along the range, one panel a module and one line a sensor."""
     modules = where.modules[:MOST_PANELS]
     factor, unit = found.reference.shown_factor, width_unit(found)
+    step = 1 if len(found.curves_of_width) <= MOST_LINE_POINTS else 3
     traces: list[Trace] = []
     for index, (generation, module) in enumerate(modules):
         rows = found.curves_of_width
         style = where.style(generation)
-        for sensor, own in rows[rows["module"] == module].groupby("sensor", sort=True):
+        for sensor, whole in rows[rows["module"] == module].groupby("sensor", sort=True):
+            own = whole.iloc[::step]
             traces.append(
                 line(
                     own["strain"] * factor,
@@ -351,10 +352,6 @@ def rates_figure(found: Hysteresis, where: SensorAxis) -> Figure | None:
             continue
         style = where.style(str(generation))
         width = own["mid_width_percent_fso"]
-        text = [
-            f"{module} {sensor} at {rate_words(r, found.reference)}: {numbers.measured(w, u, unit)}"
-            for r, w, u in zip(own["rate_per_s"], width, own["standard_uncertainty"], strict=True)
-        ]
         traces.append(
             line(
                 own["rate_per_s"] * factor,
@@ -362,17 +359,8 @@ def rates_figure(found: Hysteresis, where: SensorAxis) -> Figure | None:
                 colour=style.colour,
                 dash=style.dash,
                 width=1,
-                module=str(module),
-                sensor=str(sensor),
-            )
-        )
-        traces.append(
-            points(
-                own["rate_per_s"] * factor,
-                width,
-                style=style,
-                size=5,
-                text=text,
+                hovertext=plain(f"{module} {sensor}"),
+                hoverinfo="text",
                 module=str(module),
                 sensor=str(sensor),
             )
@@ -469,6 +457,7 @@ def _sensors_table(found: Hysteresis) -> Table:
         name="hysteresis",
         caption="The settled loops of every sensor, widest first.",
         frame=rows.assign(_href=links),
+        shown_rows=40,
         columns=(
             Column("module", "Module", kind="text"),
             Column("sensor", "Sensor", kind="text", href="_href"),
