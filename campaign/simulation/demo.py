@@ -119,7 +119,8 @@ def demo_plan() -> Plan:
 
 def demo_holds() -> tuple[HoldPlan, ...]:
     """Return the holds: two strains and the rest length for an hour each, and once a room that warms up."""
-    held = tuple((module, "AB") for module in ("M01", "M02", "M04", "M05", "M07", "M08", "M10", "M11"))
+    panels = ("M01", "M02", "M04", "M05", "M07", "M08", "M10", "M11")
+    held, diagonal = (tuple((module, place) for module in panels) for place in ("AB", "AC"))
     resting = tuple((module, "AB") for module in ("M01", "M04", "M07", "M10"))
     return (
         HoldPlan(
@@ -128,6 +129,7 @@ def demo_holds() -> tuple[HoldPlan, ...]:
         HoldPlan(
             held, strain=0.40, repetition=2, ramp_s=2.0, sample_period_s=1.0, session="2", start=time(15, 45)
         ),
+        HoldPlan(diagonal, strain=0.40, repetition=1, ramp_s=2.0, session="2", start=time(18, 15)),
         HoldPlan(resting, repetition=3, sample_period_s=1.0, session="2", start=time(17, 0)),
         HoldPlan((WARMED,), repetition=4, warming_k=5.0, session="2", start=time(17, 0)),
     )

@@ -66,7 +66,8 @@ def _width_table(plan: Plan, cyclic: CyclicPlan, truth: GenerationTruth, unit: s
 
 def _hold_lines(holds: tuple[HoldPlan, ...], truth: HoldTruth, white: float, unit: str) -> list[str]:
     minute, ten, hour = 100.0 * truth.relaxation.at(np.array([60.0, 600.0, 3600.0]))
-    strains = ", ".join(f"{100 * hold.strain:g} %" for hold in holds if not hold.at_rest)
+    kept = dict.fromkeys(hold.strain for hold in holds if not hold.at_rest)
+    strains = ", ".join(f"{100 * strain:g} %" for strain in kept)
     return [
         f"Holds at {strains} and at rest:",
         "",
