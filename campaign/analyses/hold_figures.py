@@ -141,7 +141,9 @@ class HoldCurve:
     """One hold as drawn, in per cent of what its scale says, zero at its first settled signal.
 
     ``times_s`` (s after the end of the ramp), ``low``, ``high`` and ``mean`` have shape (buckets,); ``forms``
-    are the forms within two units of the best, as (name, values at ``form_times_s``).
+    are the forms within two units of the best, as (name, values at ``form_times_s``). ``samples_s`` and
+    ``samples`` are all samples as recorded, in s after the end of the ramp and signal units; ``zero`` (a
+    signal) and ``per_cent`` (of a signal unit) take them to per cent.
     """
 
     generation: str
@@ -162,6 +164,10 @@ class HoldCurve:
     mean: FloatArray
     form_times_s: FloatArray
     forms: tuple[tuple[str, FloatArray], ...]
+    samples_s: FloatArray
+    samples: FloatArray
+    zero: float
+    per_cent: float
 
 
 @dataclass(frozen=True)
@@ -346,6 +352,10 @@ def hold_curve(fitted: FittedHold, scale: HoldScale, x: float, change: float) ->
         mean=mean,
         form_times_s=times,
         forms=tuple((found.name, (found.curve(times) - zero) * scale.per_cent) for found in forms),
+        samples_s=hold.times_s,
+        samples=hold.signal,
+        zero=zero,
+        per_cent=scale.per_cent,
     )
 
 

@@ -204,7 +204,7 @@ def hold_figure(curve: HoldCurve, reference: ReferenceQuantity, name: str, heigh
         ),
         data=curve_table(curve),
         note="The band reaches from the lowest to the highest sample of every stretch of time: no spike is "
-        "lost. Forms are drawn over the data they were fitted to.",
+        "lost, and the CSV holds every sample. Forms are drawn over the data they were fitted to.",
         height=height,
     )
 
@@ -252,25 +252,27 @@ def _hold_caption(curve: HoldCurve, reference: ReferenceQuantity) -> str:
 
 
 def curve_table(curve: HoldCurve) -> pd.DataFrame:
-    """Return a hold as drawn, one row a bucket, and the forms, one row a time and form."""
-    who = {"module": curve.module, "sensor": curve.sensor, "trial": curve.trial, "hold": curve.hold}
-    parts = [
+    """Return every sample of a hold, none thinned, and below them the forms, one row a time and form."""
+    samples = pd.DataFrame(
+        {
+            "curve": "samples",
+            "time_s": np.round(curve.samples_s, 6),
+            "signal": curve.samples,
+            "change_percent": np.round((curve.samples - curve.zero) * curve.per_cent, 6),
+        }
+    )
+    forms = [
         pd.DataFrame(
             {
-                **who,
-                "curve": "samples",
-                "time_s": curve.times_s,
-                "change_percent": curve.mean,
-                "low": curve.low,
-                "high": curve.high,
+                "curve": form,
+                "time_s": curve.form_times_s,
+                "signal": curve.zero + values / curve.per_cent,
+                "change_percent": values,
             }
         )
-    ]
-    parts += [
-        pd.DataFrame({**who, "curve": form, "time_s": curve.form_times_s, "change_percent": values})
         for form, values in curve.forms
     ]
-    return pd.concat(parts, ignore_index=True).assign(percent_of=curve.percent_of)
+    return pd.concat([samples, *forms], ignore_index=True)
 
 
 def decades_figure(drift: Drift) -> Figure | None:

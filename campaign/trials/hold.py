@@ -137,6 +137,8 @@ class Hold:
         Means over stretches of time, about :data:`MEANS_A_DECADE` a decade, signal units.
     envelope
         What is drawn.
+    times_s, signal
+        Every sample, s after the end of the ramp and signal units: what the figures' files hold.
     first
         First settled signal: between one and two ramp times after the end of the ramp (without a ramp, the
         first samples).
@@ -162,6 +164,8 @@ class Hold:
     stretches: Stretches
     means: FloatArray
     envelope: Envelope
+    times_s: FloatArray
+    signal: FloatArray
     first: SignalAt
     signals: dict[str, SignalAt]
     zero_before: SignalAt
@@ -327,6 +331,8 @@ def _hold(trial: Trial, rows: IntArray, time: FloatArray, course: HoldCourse, ke
         stretches=stretches,
         means=means,
         envelope=log_time_envelope(t, signal),
+        times_s=t,
+        signal=signal,
         first=first_settled(t, signal, ramp),
         signals=signals,
         zero_before=before,
