@@ -7,7 +7,7 @@ are not separable without the shape, so every coefficient holds for this actuato
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
@@ -34,8 +34,9 @@ from campaign.analyses.sensor_figures import FIGURE_COLUMNS, principal_lines
 from campaign.methods.influence_model import InfluenceFit, compensate
 from campaign.notices import Notice
 from campaign.recordings.description import Description
-from campaign.recordings.recording import ReferenceQuantity
+from campaign.recordings.recording import ReferenceQuantity, TrialIdentity
 from campaign.recordings.sensor_share import TrialKey
+from campaign.trials.logged_pressure import LoggedPressure
 from campaign.trials.sweeps import SweepFeatures
 from campaign.units import UnitError, parse_quantity
 
@@ -67,6 +68,15 @@ PRESSURE_NAMES: dict[str, str] = {
     "loop_error_high": "strain_loop_high",
 }
 """Columns of the core's table → columns of the table ``pressure``."""
+
+
+COMPENSATED_COLUMNS = (
+    *("generation", "module", "sensor", "kind", "repetition", "trial", "samples", "before", "after"),
+    *("strain_before", "strain_after", "inside"),
+)
+"""One row a trial of another kind that logs pressure: SD of its signals about their own line over x without
+and with the sensor's correction, in signal units and as x; ``inside`` is whether all of it lies within the
+range that the correction holds for."""
 
 
 @dataclass(frozen=True)
@@ -142,6 +152,9 @@ class Pressure:
     coupling
         Neighbours that moved while only another sensor was strained
         (:data:`campaign.analyses.coupling.COUPLING_COLUMNS`).
+    compensated
+        Trials of other kinds that log pressure, with and without their sensor's correction
+        (:data:`COMPENSATED_COLUMNS`).
     figures
         The error at the pressure in use of every sensor, to be judged by ``[limits] pressure_error``; columns
         of :data:`campaign.analyses.sensor_figures.FIGURE_COLUMNS`.
@@ -163,6 +176,7 @@ class Pressure:
     spread: InfluenceSpread
     corrections: dict[SensorKey, Correction]
     coupling: pd.DataFrame
+    compensated: pd.DataFrame
     figures: pd.DataFrame
     in_use_kpa: float
     rated: bool
@@ -172,7 +186,10 @@ class Pressure:
 
 
 def analyse_pressure(
-    features: Mapping[TrialKey, SweepFeatures], calibration: Calibration | None, description: Description
+    features: Mapping[TrialKey, SweepFeatures],
+    calibration: Calibration | None,
+    description: Description,
+    logged: Iterable[tuple[TrialIdentity, LoggedPressure]] = (),
 ) -> Pressure | None:
     """Analyse the pressure trials of a campaign.
 
@@ -185,6 +202,8 @@ def analyse_pressure(
         the sweeps at several lengths do, where there are such).
     description
         Pressure in use.
+    logged
+        Trials of other kinds that log pressure beside their own course: whose, and what they keep of it.
 
     Returns
     -------
@@ -204,6 +223,7 @@ def analyse_pressure(
     units = sorted(set(sweeps["unit"].astype(str)))
     spread = influence_spread(points, sweeps, slopes, "pressure")
     table = _pressure_table(core, spread)
+    corrections = _corrections(core, fits, origin)
     return Pressure(
         reference,
         table,
@@ -211,8 +231,9 @@ def analyse_pressure(
         points,
         _curves(own),
         spread,
-        _corrections(core, fits, origin),
+        corrections,
         coupling_table(features, calibration),
+        _compensated(logged, corrections, reference.name),
         pressure_figures(table, reference, calibration, description),
         in_use,
         rated,
@@ -279,6 +300,29 @@ def _one_length_notices(core: pd.DataFrame) -> tuple[Notice, ...]:
     done = "the change of the coefficient with strain is not identifiable for them"
     remedy = "sweep at two or more kept lengths"
     return (Notice("one-length", "noted", None, None, None, what, done, remedy, len(single)),)
+
+
+def _compensated(
+    logged: Iterable[tuple[TrialIdentity, LoggedPressure]],
+    corrections: Mapping[SensorKey, Correction],
+    reference: str,
+) -> pd.DataFrame:
+    """One row a trial of another kind that logs pressure and whose sensor has a correction."""
+    rows = []
+    for who, kept in logged:
+        correction = corrections.get((who.generation, who.module, who.sensor))
+        if correction is None or reference not in kept.products:
+            continue
+        at_origin, per_x = np.nan_to_num(correction.fit.coefficients).tolist()
+        before = kept.spread(reference, 0.0, 0.0, correction.origin)
+        after = kept.spread(reference, at_origin, per_x, correction.origin)
+        divisor = abs(correction.slope) or math.nan
+        ends = np.array(kept.x_range[reference]), np.array([kept.low_kpa, kept.high_kpa])
+        row = {name: getattr(who, name) for name in ("generation", "module", "sensor", "kind", "repetition")}
+        row |= {"trial": who.file, "samples": kept.samples, "before": before, "after": after}
+        row |= {"strain_before": before / divisor, "strain_after": after / divisor}
+        rows.append(row | {"inside": bool(correction.holds_for(*ends).all())})
+    return pd.DataFrame(rows, columns=list(COMPENSATED_COLUMNS))
 
 
 def before_and_after(

@@ -135,6 +135,8 @@ def influence_tables(influences: Influences | None) -> list[Table]:
             frame=frame.assign(
                 _href=links, _influence=[INFLUENCE_WORDS.get(str(i), str(i)) for i in frame["influence"]]
             ),
+            shown_rows=24,
+            source="influences",
             columns=(
                 Column("_influence", "Influence", kind="text"),
                 Column("generation", "Generation", kind="text"),

@@ -53,7 +53,7 @@ COMPONENT_WORDS = {
 }
 
 MOST_MODULES = 48
-POINTS_DRAWN = 24
+POINTS_DRAWN = 12
 """Points of a sweep that the small multiples draw at most."""
 
 
@@ -549,6 +549,8 @@ def _tables(pressure: Pressure) -> Sequence[Table]:
         made.append(components_table(pressure))
     if len(pressure.coupling):
         made.append(coupling_table(pressure))
+    if len(pressure.compensated):
+        made.append(compensated_table(pressure))
     return made
 
 
@@ -556,14 +558,15 @@ def pressure_table(pressure: Pressure) -> Table:
     """Return the coefficients of every sensor."""
     reference = pressure.reference
     factor, unit = reference.shown_factor, reference.shown_unit
-    links = [
-        slugs.sensor_href(str(m), str(s))
-        for m, s in zip(pressure.table["module"], pressure.table["sensor"], strict=True)
-    ]
+    size = pressure.table["strain_error_per_kpa"].abs().fillna(pressure.table["per_kpa"].abs())
+    frame = pressure.table.iloc[np.argsort(-size.to_numpy(float), kind="stable")]
+    names = zip(frame["module"].astype(str), frame["sensor"].astype(str), strict=True)
     return Table(
         name="pressure",
-        caption="What a kilopascal does to every sensor, and what its own compensation leaves.",
-        frame=pressure.table.assign(_href=links),
+        caption="What a kilopascal does to every sensor, and what its own compensation leaves, most first.",
+        frame=frame.assign(_href=[slugs.sensor_href(*pair) for pair in names]),
+        shown_rows=24,
+        source="pressure",
         columns=(
             Column("generation", "Generation", kind="text"),
             Column("module", "Module", kind="text"),
@@ -629,6 +632,34 @@ def components_table(pressure: Pressure) -> Table:
         ),
         note="Means with t intervals, SDs with profile intervals of the nested model. The change is per unit "
         "strain.",
+    )
+
+
+def compensated_table(pressure: Pressure) -> Table:
+    """Return trials of other kinds that log pressure, without and with their sensor's correction."""
+    reference, frame = pressure.reference, pressure.compensated
+    factor, unit = reference.shown_factor, reference.shown_unit
+    links = [
+        slugs.trial_href(str(r["module"]), str(r["sensor"]), str(r["trial"]))
+        for r in frame.to_dict("records")
+    ]
+    return Table(
+        name="pressure_compensated",
+        caption="Other trials that log pressure, as recorded and corrected.",
+        frame=frame.assign(
+            _href=links, _inside=frame["inside"].map({True: "yes", False: "no: extrapolated"})
+        ),
+        columns=(
+            Column("module", "Module", kind="text"),
+            Column("sensor", "Sensor", kind="text"),
+            Column("kind", "Kind", kind="text", href="_href"),
+            Column("repetition", "Run", kind="integer"),
+            Column("strain_before", "SD before", unit, factor=factor, digits=2),
+            Column("strain_after", "after", unit, factor=factor, digits=2),
+            Column("_inside", "Within the sweeps’ range", kind="text"),
+        ),
+        shown_rows=24,
+        note="About the trial’s own straight line, so that loop and bend remain in both.",
     )
 
 

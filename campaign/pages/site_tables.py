@@ -40,6 +40,8 @@ CAPTIONS: dict[str, str] = {
     "loop_rates": "Width against rate, by sensor.",
     "loop_components": "Where the spread of the widths comes from.",
     "loop_means": "Mean signed width at mid range of every generation.",
+    "pressure": "What a kilopascal does to every sensor, and what its own compensation leaves.",
+    "influences": "What the other influences do to every sensor.",
     "pressure_sweeps": "Every sweep of pressure: its line over both branches, loop width and drift.",
     "pressure_corrections": "What is left of the error by pressure with every correction, left out.",
     "influence_sweeps": "Every sweep of the other influences.",
@@ -105,8 +107,10 @@ def _influence_frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
     frames: dict[str, pd.DataFrame] = {}
     if (pressure := results.pressure) is not None:
         frames |= {"pressure_sweeps": pressure.sweeps, "pressure_corrections": pressure.spread.serving}
+        frames["pressure"] = pressure.table
     if (influences := results.influences) is not None:
         parts = [result.sweeps.assign(influence=result.influence) for result in influences.results]
+        frames["influences"] = influences.table
         frames["influence_sweeps"] = pd.concat(parts, ignore_index=True)
     return frames
 

@@ -13,6 +13,7 @@ from campaign.methods.loops import FRACTIONS, MID, Cycles, Loops, find_cycles, m
 from campaign.notices import Notice
 from campaign.recordings.recording import FloatArray, Trial, TrialIdentity
 from campaign.trials.features import recorded_reference
+from campaign.trials.logged_pressure import LoggedPressure, logged_pressure
 
 IntArray = npt.NDArray[np.int64]
 BoolArray = npt.NDArray[np.bool_]
@@ -91,6 +92,8 @@ class CyclicFeatures:
         Outlines of some cycles.
     notices
         What a reader should know about the trial.
+    logged
+        What the trial keeps of a pressure that it logs beside its cycles; ``None`` where there is none.
     """
 
     identity: TrialIdentity
@@ -100,6 +103,7 @@ class CyclicFeatures:
     width: FloatArray
     curves: tuple[LoopCurve, ...]
     notices: tuple[Notice, ...]
+    logged: LoggedPressure | None = None
 
     @property
     def settled_from_cycle(self) -> float:
@@ -142,7 +146,10 @@ def features_of_cyclic(trial: Trial) -> CyclicFeatures:
         *_zero_notice(trial, name, table),
     )
     curves = _curves(x, signal, cycles, table)
-    return CyclicFeatures(trial.identity, trial.signal_unit, name, table, loops.width, curves, notices)
+    logged = logged_pressure(trial)
+    return CyclicFeatures(
+        trial.identity, trial.signal_unit, name, table, loops.width, curves, notices, logged
+    )
 
 
 def _times(trial: Trial, rows: IntArray) -> FloatArray | None:

@@ -21,6 +21,7 @@ from campaign.recordings.description import Description
 from campaign.recordings.recording import STRAIN, Trial, TrialIdentity
 from campaign.recordings.sensor_share import key_of_trial
 from campaign.trials.influences import features_of_offaxis, features_of_thermal
+from campaign.trials.logged_pressure import logged_pressure
 from campaign.trials.pressure import features_of_pressure
 
 REST, ZERO, SLOPE = 60.0, 100.0, 80.0
@@ -345,3 +346,22 @@ def test_cross_axis_sensitivity_needs_a_slope_along():
     assert row["coefficient"] == pytest.approx(12.0, rel=1e-6)
     assert math.isnan(row["relative_percent"])
     assert influence_facts(found)[0].kind == "signal"
+
+
+def test_other_trials_that_log_pressure_are_shown_before_and_after():
+    rng = np.random.default_rng(15)
+    x = np.abs(np.sin(np.linspace(0.0, 12.0, 400))) * 0.4
+    p = 20.0 * np.abs(np.sin(np.linspace(0.0, 5.0, 400)))
+    y = ZERO + SLOPE * x + (C + D * x) * p + rng.normal(0, 0.02, 400)
+    cycled = Trial(identity("cyclic"), y, "pF", strain=x, pressure_kpa=p, reference="strain")
+    kept = logged_pressure(cycled)
+    trials = campaign(rng, modules=1, sensors=1)
+    found = analyse_pressure(trials, None, IN_USE, [(cycled.identity, kept)])
+    row = found.compensated.iloc[0]
+    # the cross-products say what the series say
+    shown = before_and_after(found.corrections["first", "M01", "AB"], y, x, p)
+    assert (row["before"], row["after"]) == pytest.approx((shown.before, shown.after), rel=1e-6)
+    assert row["strain_after"] < 0.2 * row["strain_before"]
+    assert (row["kind"], bool(row["inside"])) == ("cyclic", True)
+    still = Trial(identity("cyclic"), y, "pF", strain=x, pressure_kpa=np.full(400, 3.0))
+    assert logged_pressure(still) is None
