@@ -62,7 +62,9 @@ def widths_drawn(rng: np.random.Generator, modules: int = 4, sensors: int = 2, r
             of_sensor = of_module + rng.normal(0, 1.0)
             for r in range(runs):
                 of_run = of_sensor + rng.normal(0, 0.5)
-                rows += [(f"M{m}", "AB"[s], f"{m}{s}{r}.csv", of_run + rng.normal(0, 0.3)) for _ in range(4)]
+                rows += [
+                    (f"M{m}", "ABCDEF"[s], f"{m}{s}{r}.csv", of_run + rng.normal(0, 0.3)) for _ in range(4)
+                ]
     frame = pd.DataFrame(rows, columns=["module", "sensor", "trial", "width"])
     frame = frame.assign(generation="g1", position=frame["sensor"], counted=True)
     return LoopTable(STRAIN, frame, np.repeat(frame[["width"]].to_numpy(), 19, axis=1), 0.1, ())
@@ -78,6 +80,19 @@ def test_mean_width_and_components_come_back_within_their_intervals_over_a_hundr
         run += parts.loc["repetition", "low"] <= 0.5 <= parts.loc["repetition", "high"]
     # 95 % intervals: fewer than 89 of 100 would be met in 1 of 100 such tests
     assert min(mean, sensor, run) >= 89
+
+
+def test_a_component_of_zero_has_an_upper_limit() -> None:
+    # many loops with little noise and no spread between modules: the profile begins to rise far from zero
+    rng = np.random.default_rng(2)
+    table = widths_drawn(rng, modules=6, sensors=6)
+    rows = table.rows
+    means = rows.groupby("module")["width"].transform("mean")
+    level = np.repeat((rows["width"] - means + 5.0).to_numpy()[:, np.newaxis], 19, axis=1)
+    components, _ = width_components(replace(table, width=level))
+    module = components.set_index("component").loc["module"]
+    assert module["sd_percent_fso"] == module["low"] == 0.0
+    assert 0.0 < module["high"] < 1.0
 
 
 def test_widths_of_sensors_come_back_within_their_intervals() -> None:
