@@ -42,7 +42,8 @@ class HoldsFinding:
 class ZeroFinding:
     """The zero of one generation across sessions, %FSO: slope a day over ``days``, SD of a new mounting.
 
-    NaN where the design does not give one.
+    Where the sensors of a module share mountings the larger of their common and their own part is given. NaN
+    where the design does not give one.
     """
 
     generation: str
@@ -119,7 +120,8 @@ def _zeros(drift: Drift) -> tuple[ZeroFinding, ...]:
         by_term = {str(row["term"]): row for row in rows.to_dict("records")}
         nothing = {"estimate": math.nan, "low": math.nan, "high": math.nan}
         slope = by_term.get("slope", nothing)
-        mounting = by_term.get("mounting", by_term.get("session", nothing))
+        parts = [by_term[name] for name in ("mounting", "session") if name in by_term]
+        mounting = max(parts, key=lambda part: float(part["estimate"]), default=nothing)
         triples = [float(part[key]) for part in (slope, mounting) for key in ("estimate", "low", "high")]
         facts.append(ZeroFinding(str(generation), drift.zero.days[str(generation)], *triples))
     return tuple(facts)

@@ -433,9 +433,10 @@ def _forms(fitted: FittedHold, scale: HoldScale, band_percent: float) -> dict[st
         "forms_shown": "; ".join(found.name for found in shown),
         "lag_one": fitted.fits.lag_one,
     }
-    if any(found.name in NEVER_SETTLES for found in shown):
+    endless = [found for found in shown if found.name in NEVER_SETTLES]
+    if endless:
         end = best.longest_s
-        row["next_decade_percent_fso"] = best.change(end, 10.0 * end)[0] * scale.per_cent
+        row["next_decade_percent_fso"] = endless[0].change(end, 10.0 * end)[0] * scale.per_cent
     else:
         row["settling_time_s"] = best.settling_time(band_percent / abs(scale.per_cent))
     return row

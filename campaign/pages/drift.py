@@ -12,7 +12,7 @@ from campaign.analyses.drift import Drift
 from campaign.analyses.hold_figures import OF_FULL_SCALE, OF_SIGNAL, RAMP_TIMES_LEFT_OUT, HoldCurve
 from campaign.analyses.results import CampaignResults
 from campaign.methods.creep import EXTRAPOLATION_LIMIT, WITHIN_UNITS
-from campaign.pages import slugs
+from campaign.pages import numbers, slugs
 from campaign.pages.drift_figures import (
     PLACE_WORDS,
     allan_figure,
@@ -54,7 +54,7 @@ def drift_page(results: CampaignResults) -> Page | None:
             "means": drift.means.to_dict("records"),
             "slopes": _model_rows(drift, "slope"),
             "spans": {} if drift.zero is None else drift.zero.days,
-            "mountings": _model_rows(drift, "mounting") or _model_rows(drift, "session"),
+            "mountings": [*_model_rows(drift, "mounting"), *_model_rows(drift, "session")],
             "widening": widening_words(drift),
             "moved": _moved(drift),
             "time_words": time_words,
@@ -153,7 +153,7 @@ def holds_table(holds: pd.DataFrame, reference: ReferenceQuantity, name: str = "
             _changes("change_1h", "1 h", unit, none),
             Column("percent_fso_per_decade", "a decade", unit, interval=("low", "high"), missing="too short"),
         ),
-        shown_rows=40,
+        shown_rows=20,
         source="holds",
         note="Brackets: 95 % limits of this one hold. They know its noise, not what another hold would give.",
     )
@@ -162,6 +162,7 @@ def holds_table(holds: pd.DataFrame, reference: ReferenceQuantity, name: str = "
 def settling_table(holds: pd.DataFrame, reference: ReferenceQuantity, name: str = "settling") -> Table:
     """Return how every hold goes on: slope for the other time zero, creep, zero return, forms, settling."""
     unit = _unit_of_rows(holds)
+    band = numbers.significant(float(holds["band_percent_fso"].max()), 2, unit) if len(holds) else ""
     return Table(
         name=name,
         caption="Every hold: slope with time zero at the ramp’s start, 20 to 30 min, zero return, forms.",
@@ -173,9 +174,9 @@ def settling_table(holds: pd.DataFrame, reference: ReferenceQuantity, name: str 
             _changes("creep_20_30min", "20–30 min", unit, "not reached"),
             _changes("zero_return", "zero return", unit, "not recorded"),
             Column("forms_shown", "Forms", kind="text"),
-            Column("_settles", "Settles", kind="text"),
+            Column("_settles", f"Settles to ±{band}", kind="text"),
         ),
-        shown_rows=40,
+        shown_rows=20,
         source="holds",
         note="Here time counts from the beginning of the ramp; the table before counts from its end. Where "
         "the two slopes differ the ramp still shows.",
@@ -211,6 +212,7 @@ def _shown_holds(holds: pd.DataFrame) -> pd.DataFrame:
             slugs.trial_href(str(m), str(s), str(t))
             for m, s, t in zip(frame["module"], frame["sensor"], frame["trial"], strict=True)
         ],
+        strain=frame["strain"].round(4) + 0.0,
         _place=[PLACE_WORDS[str(p)] for p in frame["place"]],
         _lasts=[time_words(float(v)) for v in frame["duration_s"]],
         _settles=[_settling(row) for row in frame.to_dict("records")],
@@ -229,7 +231,7 @@ def _settling(row: Mapping[Hashable, Any]) -> str:
         return "too short to tell"
     if np.isfinite(row["settling_time_s"]):
         after = float(row["settling_time_s"])
-        return f"after {time_words(after)}" if after > 0 else "at once"
+        return f"after {time_words(after)}" if after > 0 else "within it throughout"
     if np.isfinite(row["next_decade_percent_fso"]):
         unit = percent_unit(str(row["percent_of"]))
         return f"never; {row['next_decade_percent_fso']:+.2g} {unit} in the next decade".replace("-", "−")

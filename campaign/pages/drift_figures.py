@@ -30,7 +30,8 @@ from campaign.pages.sensor_axis import interval_traces, sensor_axis
 from campaign.pages.thinning import thinned
 from campaign.recordings.recording import ReferenceQuantity
 
-MOST_LINE_POINTS = 8000
+MOST_LINE_POINTS = 1500
+"""Points of the figure of all holds: each carries its sentence and its link, and a page stays light."""
 MOST_CURVES = 400
 """Curves of a figure of all holds; beyond it those that change most."""
 
