@@ -31,7 +31,7 @@ KINDS = (
 )
 """All kinds of trial a campaign may hold, in the order of the folder's description."""
 
-ANALYSED = ("staircase", "cyclic", "endurance", "hold", "blank")
+ANALYSED = tuple(kind for kind in KINDS if kind != "layout")
 """Kinds that an analysis answers."""
 
 

@@ -19,7 +19,8 @@ from campaign.analyses.loop_findings import loop_findings
 from campaign.analyses.loop_model import width_components
 from campaign.analyses.loop_table import BY_LINE, BY_LOOP, LoopTable, rate_levels
 from campaign.analyses.loop_widths import BETWEEN_CYCLES, BETWEEN_RUNS
-from campaign.pipeline import analyse, read_campaign
+from campaign.analyses.scope import ANALYSED
+from campaign.pipeline import REDUCED_BY, analyse, read_campaign
 from campaign.recordings.description import Description
 from campaign.recordings.recording import STRAIN
 from campaign.trials.endurance import features_of_endurance
@@ -248,3 +249,7 @@ def test_a_slope_per_decade_widens_where_neighbours_are_correlated() -> None:
         ratios.append((high - low) / (plain[1] - plain[0]))
     assert np.median(ratios) > 1.3
     assert all(np.isnan(per_decade([1, 10], [0.0, 1.0])))
+
+
+def test_the_kinds_that_count_as_analysed_are_those_that_are_reduced() -> None:
+    assert sorted(ANALYSED) == sorted(REDUCED_BY)
