@@ -8,6 +8,7 @@ from dataclasses import dataclass
 import pandas as pd
 
 from campaign.analyses.findings import Finding, SensorFigure, sum_up, verdict_of_limit
+from campaign.analyses.influence_spread import BOTH
 from campaign.analyses.influences import Influences
 from campaign.analyses.limits import Limits
 from campaign.analyses.pressure import Pressure
@@ -108,9 +109,10 @@ def _pressure_fact(generation: str, rows: pd.DataFrame, pressure: Pressure, limi
     parts = own.set_index("component")
     serving = pressure.spread.serving
     left = serving[serving["generation"] == generation].set_index("correction")["sd"]
-    widest = next((n for n in ("module and sensor", "sensor", "module") if n in parts.index), "")
+    widest = next((n for n in (BOTH, "sensor", "module") if n in parts.index), "")
     spread, mean = _triple(parts, widest), _triple(parts, "mean")
     tests = parts["p_adjusted"]
+    one_each = rows["module"].nunique() == len(rows)
     return PressureFact(
         generation,
         summed[0] if summed else None,
@@ -127,7 +129,7 @@ def _pressure_fact(generation: str, rows: pd.DataFrame, pressure: Pressure, limi
         float(left.get("generation", math.nan)),
         float(left.get("sensor", math.nan)),
         float(tests.get("module", math.nan)),
-        float(tests.get("sensor", math.nan)),
+        float(tests.get("sensor", tests.get(BOTH, math.nan) if one_each else math.nan)),
         len(rows),
         int(rows["module"].nunique()),
     )

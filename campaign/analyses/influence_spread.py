@@ -43,6 +43,9 @@ from campaign.trials.readings import SENSOR_KEYS
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
 
+BOTH = "module and sensor"
+"""The component of a new sensor of a new module; the only one where every module has one sensor."""
+
 SAME = 0.05
 """A component whose adjusted p is below this differs from unit to unit."""
 
@@ -157,6 +160,7 @@ def _fit_generation(generation: str, rows: pd.DataFrame) -> tuple[NestedModelFit
     if sensors < 2 or len(rows) < 4:
         return None, _lonely_mean(generation, rows)
     columns = _columns(rows)
+    _check_scatter(rows, columns, sensor)
     terms = _terms(rows, module, sensor, columns)
     if not terms:
         return None, _lonely_mean(generation, rows)
@@ -167,6 +171,18 @@ def _fit_generation(generation: str, rows: pd.DataFrame) -> tuple[NestedModelFit
     fit = fit_nested_model(NestedModel(response / scale, columns, names, levels, terms))
     frame = _component_frame(generation, fit, scale, {"module": modules, "sensor": sensors}, len(rows))
     return fit, _with_tests(frame, rows)
+
+
+def _check_scatter(rows: pd.DataFrame, columns: FloatArray, sensor: IntArray) -> None:
+    """Refuse sweeps that follow their sensor's line to the last digit: no likelihood is bounded then."""
+    effect = rows["effect"].to_numpy(float)
+    several = [sensor == code for code in np.flatnonzero(np.bincount(sensor) > columns.shape[1])]
+    rests = [
+        effect[own] - columns[own] @ np.linalg.lstsq(columns[own], effect[own], rcond=None)[0]
+        for own in several
+    ]
+    if several and np.linalg.norm(np.concatenate(rests)) <= 1e-8 * np.linalg.norm(effect):
+        raise ValueError("the sweeps of a sensor do not scatter at all")
 
 
 def _columns(rows: pd.DataFrame) -> FloatArray:
@@ -215,13 +231,15 @@ def _component_frame(
         what = "change" if len(direction) > 1 and direction[1] else "error"
         freedom = freedoms.get(name, max(sweeps - spent, 1))
         called = "sweep" if name == "residual" else name
+        if name == "sensor" and units["sensor"] == units["module"]:
+            called, freedom = BOTH, units["sensor"] - 1
         rows.append(_spread_row(generation, called, what, interval, scale, freedom))
     together = [name for name in ("module", "sensor") if name in [t.name for t in fit.model.terms]]
     if len(together) == 2:
         parts = {str(n): np.eye(fit.model.term(n).columns.shape[1])[0] for n in together}
         freedom = freedoms["module"] + freedoms["sensor"]
         both = profile_total(fit, parts)
-        rows.append(_spread_row(generation, "module and sensor", "error", both, scale, freedom))
+        rows.append(_spread_row(generation, BOTH, "error", both, scale, freedom))
     return pd.DataFrame(rows, columns=list(SPREAD_COLUMNS))
 
 
@@ -288,7 +306,8 @@ def unit_tests(rows: pd.DataFrame) -> dict[str, MeansTest]:
     Returns
     -------
     dict
-        ``module`` and ``sensor``. Where sensors share runs, modules must also differ by more than runs do.
+        ``module`` and ``sensor``; :data:`BOTH` alone where every module has one sensor. Where sensors share
+        runs, modules must also differ by more than runs do.
     """
     table = rows.assign(level=_without_change(rows))
     runs = table.groupby([*SENSOR_KEYS, "run", "trial"], sort=True)["level"].mean()
@@ -303,6 +322,9 @@ def unit_tests(rows: pd.DataFrame) -> dict[str, MeansTest]:
     error = error + shared.groupby([table[key] for key in SENSOR_KEYS]).mean().to_numpy(float)
     modules = pd.factorize(means.index.get_level_values("module"), sort=True)[0].astype(np.int64)
     values = means.to_numpy(float)
+    if len(np.unique(modules)) == len(values):  # one sensor a module: the two are not told apart
+        together = test_members(values, np.zeros(len(values), dtype=np.int64), error, freedom)
+        return {BOTH: together}
     found = {"module": test_groups(values, modules), "sensor": test_members(values, modules, error, freedom)}
     if _shares_runs(rows):
         by_module = runs.groupby(level=["module", "trial"]).mean()

@@ -10,8 +10,14 @@ import pytest
 from scipy import stats
 
 from campaign.analyses.influence_findings import coupling_fact, influence_facts, pressure_facts
-from campaign.analyses.influence_sensors import ONE_LENGTH, coefficient_table, sensor_fits, signal_slopes
-from campaign.analyses.influence_spread import unit_tests
+from campaign.analyses.influence_sensors import (
+    ONE_LENGTH,
+    SignalSlope,
+    coefficient_table,
+    sensor_fits,
+    signal_slopes,
+)
+from campaign.analyses.influence_spread import influence_spread, unit_tests
 from campaign.analyses.influence_sweeps import gather_points, sweep_table
 from campaign.analyses.influences import analyse_influences
 from campaign.analyses.limits import judge_limits
@@ -365,3 +371,42 @@ def test_other_trials_that_log_pressure_are_shown_before_and_after():
     assert (row["kind"], bool(row["inside"])) == ("cyclic", True)
     still = Trial(identity("cyclic"), y, "pF", strain=x, pressure_kpa=np.full(400, 3.0))
     assert logged_pressure(still) is None
+
+
+def test_one_sensor_a_module_does_not_tell_modules_from_sensors():
+    found = analyse_pressure(
+        campaign(np.random.default_rng(16), modules=5, sensors=1, sensor_sd=0.02), None, IN_USE
+    )
+    components = set(found.spread.components["component"])
+    assert {"mean", "module and sensor", "sweep"} <= components
+    assert not {"module", "sensor"} & components
+    assert found.spread.answers == {"first": "no"}
+
+
+@pytest.mark.parametrize("sensor_sd", [0.0, 0.02])
+@pytest.mark.parametrize(("modules", "sensors"), [(1, 2), (2, 1), (2, 2), (3, 2)])
+def test_signals_without_any_noise_break_nothing(sensor_sd, modules, sensors):
+    rng = np.random.default_rng(17)
+    exact = campaign(rng, modules=modules, sensors=sensors, sensor_sd=sensor_sd, run_sd=0.0, noise=0.0)
+    found = analyse_pressure(exact, None, IN_USE)
+    table = found.table
+    assert table["per_kpa_strain"].to_numpy() == pytest.approx(np.full(modules * sensors, D), rel=1e-6)
+    assert table["strain_residual_sd_after"].max() < 1e-6
+    assert found.spread.answers == {}
+    assert [notice.code for notice in found.notices] == ["spread-not-fitted"]
+    assert (table["one_correction"] == "not decided").all()
+
+
+def test_one_sweep_a_sensor_leaves_modules_to_compare():
+    rng = np.random.default_rng(18)
+    rows = _rows(rng, runs=1, module_sd=0.5).assign(
+        repetition=1, position="", influence_unit="kPa", unit="pF", x=0.2, slope=lambda t: t["effect"]
+    )
+    rows["slope_error"], rows["slope_freedom"] = 0.1, 20.0
+    sure = {("g", m, s): SignalSlope(1.0, 0.0, 10.0, "") for m, s in zip(rows["module"], rows["sensor"])}
+    points = pd.DataFrame({"number": np.repeat(rows.index, 3), "influence": 1.0, "signal": 1.0})
+    found = influence_spread(points, rows, sure, "pressure")
+    components = found.components.set_index("component")
+    assert components.loc["module", "low"] < 0.5 < components.loc["module", "high"]
+    assert "sensor" not in components.index
+    assert found.answers == {"g": "no"}
