@@ -4,15 +4,24 @@ from __future__ import annotations
 
 import sys
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from pathlib import Path
+from typing import TypeVar
 
 import pandas as pd
 
 from campaign.analyses.calibration import Calibration, analyse_calibration
 from campaign.analyses.calibration_effort import analyse_calibration_effort
+from campaign.analyses.drift import analyse_drift
+from campaign.analyses.drift_findings import drift_findings
+from campaign.analyses.endurance import analyse_endurance
 from campaign.analyses.findings import collect_findings
+from campaign.analyses.hysteresis import analyse_hysteresis
+from campaign.analyses.influence_findings import influence_findings
+from campaign.analyses.influences import analyse_influences
 from campaign.analyses.limits import judge_limits
+from campaign.analyses.loop_findings import loop_findings
+from campaign.analyses.pressure import analyse_pressure
 from campaign.analyses.residuals import analyse_residuals
 from campaign.analyses.results import CampaignResults
 from campaign.analyses.variance import analyse_variance
@@ -25,10 +34,40 @@ from campaign.recordings.inspection import ON_SITE, inspection_lines, print_line
 from campaign.recordings.intake import Intake, Progress, run_intake
 from campaign.recordings.recording import Trial
 from campaign.recordings.sensor_share import TrialKey
+from campaign.trials.cyclic import CyclicFeatures, features_of_cyclic
+from campaign.trials.endurance import EnduranceFeatures, features_of_endurance
+from campaign.trials.features import TrialFeatures
+from campaign.trials.hold import HoldFeatures, features_of_blank, features_of_hold
+from campaign.trials.influences import (
+    features_of_bend,
+    features_of_contact,
+    features_of_offaxis,
+    features_of_proximity,
+    features_of_thermal,
+)
+from campaign.trials.pressure import features_of_pressure
 from campaign.trials.readings import Readings, collect_readings
 from campaign.trials.staircase import StaircaseFeatures, readings_of_staircase
+from campaign.trials.sweeps import SweepFeatures
 
 DONE, SET_ASIDE = 0, 1
+
+Features = TypeVar("Features", bound=TrialFeatures)
+
+REDUCED_BY: dict[str, Callable[[Trial], TrialFeatures]] = {
+    "staircase": readings_of_staircase,
+    "cyclic": features_of_cyclic,
+    "endurance": features_of_endurance,
+    "hold": features_of_hold,
+    "blank": features_of_blank,
+    "pressure": features_of_pressure,
+    "offaxis": features_of_offaxis,
+    "thermal": features_of_thermal,
+    "contact": features_of_contact,
+    "proximity": features_of_proximity,
+    "bend": features_of_bend,
+}
+"""What a trial is reduced to while its recording is in memory, by kind: the kinds that are analysed."""
 
 
 @dataclass(frozen=True)
@@ -43,11 +82,18 @@ class CampaignRead:
         Plateaus of the staircases; those that the registers set aside are there and marked as not used.
     readings_with_put_back
         The same with those that the registers set aside marked as used; ``None`` where there are none.
+    features
+        What the used trials of every other kind were reduced to, by trial in reading order.
     """
 
     intake: Intake
     readings: Readings
     readings_with_put_back: Readings | None
+    features: dict[TrialKey, TrialFeatures] = field(default_factory=dict)
+
+    def of_type(self, kept: type[Features]) -> dict[TrialKey, Features]:
+        """Return the features of one type, by trial in reading order."""
+        return {key: found for key, found in self.features.items() if isinstance(found, kept)}
 
 
 def report(folder: Path, into: Path | None, fail_on_set_aside: bool, progress: Progress | None = None) -> int:
@@ -110,17 +156,23 @@ def read_campaign(folder: Path, output: Path | None = None, progress: Progress |
         Where the folder cannot be read or no trial can be used.
     """
     intake, features = run_intake(folder, reduce_trial, output, progress, keep_put_back=True)
-    staircases = {key: found for key, found in features.items() if found is not None}
-    notices = [notice for key in staircases if key in intake.used for notice in staircases[key].notices]
+    staircases = {key: found for key, found in features.items() if isinstance(found, StaircaseFeatures)}
+    others = {
+        key: found
+        for key, found in features.items()
+        if found is not None and key in intake.used and key not in staircases
+    }
+    notices = [n for k, found in features.items() if found and k in intake.used for n in found.notices]
     sensors_aside = sensors_set_aside(intake)
     readings = _readings(intake, staircases, lambda key: key in intake.used, sensors_aside)
     put_back = _readings(intake, staircases, lambda _: True) if intake.put_back & staircases.keys() else None
-    return CampaignRead(with_notices(intake, [*notices, *readings.notices]), readings, put_back)
+    return CampaignRead(with_notices(intake, [*notices, *readings.notices]), readings, put_back, others)
 
 
-def reduce_trial(trial: Trial) -> StaircaseFeatures | None:
+def reduce_trial(trial: Trial) -> TrialFeatures | None:
     """Return what is kept of a trial; ``None`` for kinds that are accounted for but not analysed yet."""
-    return readings_of_staircase(trial) if trial.identity.kind == "staircase" else None
+    reduced = REDUCED_BY.get(trial.identity.kind)
+    return reduced(trial) if reduced is not None else None
 
 
 def sensors_set_aside(intake: Intake) -> frozenset[tuple[str, str]]:
@@ -164,17 +216,41 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         residuals = analyse_residuals(calibration, variance)
         effort = analyse_calibration_effort(calibration, variance, description)
         tell("analyses", 3, 4)
-    limits = judge_limits(description, calibration)
+    hysteresis = analyse_hysteresis(read.of_type(CyclicFeatures), calibration)
+    endurance = analyse_endurance(read.of_type(EnduranceFeatures).values())
+    drift = analyse_drift(read.of_type(HoldFeatures), calibration, description)
+    sweeps = read.of_type(SweepFeatures)
+    logged = [(f.identity, f.logged) for f in read.of_type(CyclicFeatures).values() if f.logged is not None]
+    pressure = analyse_pressure(sweeps, calibration, description, logged)
+    influences = analyse_influences(sweeps, calibration, description)
+    others = [found for found in (hysteresis, drift, pressure) if found is not None]
+    readings = read.readings
+    if not len(readings.table) and others:
+        readings = replace(readings, reference=others[0].reference)
+    limits = judge_limits(description, calibration, further=[found.figures for found in others])
     findings = collect_findings(
-        description, intake, calibration, variance, residuals, effort, limits, put_back
+        description,
+        intake,
+        calibration,
+        variance,
+        residuals,
+        effort,
+        limits,
+        put_back,
+        further=[
+            *loop_findings(hysteresis, endurance, limits),
+            *drift_findings(drift, limits),
+            *influence_findings(pressure, influences, limits),
+        ],
+        reference=readings.reference,
     )
-    analyses = (calibration, variance, residuals, effort)
+    analyses = (calibration, variance, residuals, effort, *others, influences)
     notices = [notice for analysis in analyses if analysis is not None for notice in analysis.notices]
     tell("analyses", 4, 4)
     return CampaignResults(
         description=description,
         intake=intake,
-        readings=read.readings,
+        readings=readings,
         calibration=calibration,
         variance=variance,
         residuals=residuals,
@@ -182,6 +258,11 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         limits=limits,
         findings=findings,
         notices=sort_notices([*intake.notices, *notices]),
+        hysteresis=hysteresis,
+        endurance=endurance,
+        drift=drift,
+        pressure=pressure,
+        influences=influences,
     )
 
 

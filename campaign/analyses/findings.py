@@ -27,6 +27,7 @@ from campaign.analyses.sensor_figures import (
     sensor_figures,
 )
 from campaign.recordings.description import Description
+from campaign.recordings.recording import ReferenceQuantity
 
 if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration, CalibrationRecord
@@ -240,8 +241,16 @@ FindingKind = Literal[
     "repeatability",
     "hysteresis",
     "zero_return",
+    "loops",
+    "endurance",
+    "holds",
+    "zero_over_time",
     "model",
+    "pressure",
+    "coupling",
+    "influences",
 ]
+"""What a finding is about; ``site_templates/findings/KIND.html`` has its words."""
 
 
 @dataclass(frozen=True)
@@ -283,6 +292,8 @@ def collect_findings(
     effort: CalibrationEffort | None,
     limits: Limits,
     put_back: Calibration | None = None,
+    further: Iterable[Finding] = (),
+    reference: ReferenceQuantity | None = None,
 ) -> Findings:
     """Choose what page 0 says.
 
@@ -296,13 +307,17 @@ def collect_findings(
         Verdicts.
     put_back
         The calibration with every sensor that was set aside put back; ``None`` where none was or could be.
+    further
+        Findings of the other kinds of trial, most important first.
+    reference
+        What lengths are given in; that of the calibration unless given.
 
     Returns
     -------
     Findings
         Only what the analyses support: a campaign without staircases has a scope and no findings.
     """
-    scope = describe_scope(description, intake, calibration)
+    scope = describe_scope(description, intake, calibration, reference)
     findings: list[Finding] = []
     if effort is not None:
         findings += _effort_findings(effort, limits)
@@ -312,19 +327,22 @@ def collect_findings(
         findings += _spread_findings(variance)
     if calibration is not None:
         findings += _line_findings(calibration, description, limits, put_back)
+    findings += further
     findings += _model_findings(effort, residuals)
     findings.sort(key=lambda finding: finding.kind != "curved")
     return Findings(scope, tuple(findings))
 
 
-def _verdict(limits: Limits, name: str) -> str:
+def verdict_of_limit(limits: Limits, name: str) -> str:
+    """Return the verdict of a limit for new sensors over all generations, empty where it was not judged."""
     verdicts = set(limits.of_new_sensors().loc[lambda t: t["limit"] == name, "verdict"])
     if not verdicts:
         return ""
     return "not met" if "not met" in verdicts else "met" if verdicts == {"met"} else "not decided"
 
 
-def _limit_value(limits: Limits, name: str) -> float:
+def limit_value(limits: Limits, name: str) -> float:
+    """Return the value of a limit that was judged, NaN where it was not."""
     values = limits.table.loc[limits.table["limit"] == name, "value"]
     return float(values.iloc[0]) if len(values) else math.nan
 
@@ -390,7 +408,7 @@ def _mean_of(figures: pd.DataFrame | None, generation: str, without: pd.DataFram
 
 
 def _effort_findings(effort: CalibrationEffort, limits: Limits) -> list[Finding]:
-    limit = _limit_value(limits, "strain_error")
+    limit = limit_value(limits, "strain_error")
     facts = tuple(
         fact
         for generation, rows in effort.table.groupby("generation", sort=True)
@@ -436,7 +454,7 @@ def _effort(row: pd.Series) -> Effort:
 def _accuracy_findings(
     calibration: Calibration, limits: Limits, put_back: Calibration | None
 ) -> list[Finding]:
-    limit = _limit_value(limits, "strain_error")
+    limit = limit_value(limits, "strain_error")
     parts = [
         sum_up(
             _record_figures(calibration, n), limit, None if put_back is None else _record_figures(put_back, n)
@@ -444,7 +462,11 @@ def _accuracy_findings(
         for n in (1, AVERAGED)
     ]
     facts = tuple(AccuracyFinding(one, several) for one, several in zip(*parts, strict=True))
-    return [Finding("accuracy", facts, _verdict(limits, "strain_error"), "strain_error")] if facts else []
+    return (
+        [Finding("accuracy", facts, verdict_of_limit(limits, "strain_error"), "strain_error")]
+        if facts
+        else []
+    )
 
 
 def _record_figures(calibration: Calibration, readings: int) -> pd.DataFrame:
@@ -510,10 +532,12 @@ def _line_findings(
         facts = _column_facts(calibration, column, limits, kind, put_back, own)
         if facts:
             shown = "curved" if kind == "linearity" and badly_straight(facts) else kind
-            findings.append(Finding(shown, facts, _verdict(limits, kind), kind))  # type: ignore[arg-type]
+            findings.append(Finding(shown, facts, verdict_of_limit(limits, kind), kind))  # type: ignore[arg-type]
     loops = _loop_facts(calibration, limits, put_back, own)
     if loops:
-        findings.append(Finding("hysteresis", loops, _verdict(limits, "hysteresis"), "hysteresis"))
+        other = limits.further_figures["figure"].eq("hysteresis").any()
+        verdict = "" if other else verdict_of_limit(limits, "hysteresis")
+        findings.append(Finding("hysteresis", loops, verdict, "hysteresis"))
     bends = _bend_facts(calibration)
     if bends:
         findings.append(Finding("bend", bends))
@@ -538,7 +562,7 @@ def _column_facts(
 ) -> tuple[SensorFigure, ...]:
     figures = sum_up(
         _line_values(calibration, column),
-        _limit_value(limits, name),
+        limit_value(limits, name),
         None if put_back is None else _line_values(put_back, column),
     )
     return tuple(_with_own_interval(figure, own[own["figure"] == name]) for figure in figures)

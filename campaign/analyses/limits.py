@@ -9,8 +9,8 @@ it.
 from __future__ import annotations
 
 import math
-from collections.abc import Hashable, Iterator
-from dataclasses import dataclass
+from collections.abc import Hashable, Iterator, Sequence
+from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -49,8 +49,8 @@ LIMIT_COLUMNS = (
 )
 """Columns of :attr:`Limits.table`; the first eight are the table's fixed part."""
 
-JUDGED = ("linearity", "hysteresis", "repeatability", "strain_error")
-"""Limits that staircases can answer, in the order in which pages show them."""
+JUDGED = ("linearity", "hysteresis", "repeatability", "strain_error", "drift_1h", "pressure_error")
+"""Limits that an analysis can answer, in the order in which pages show them."""
 
 UNKNOWN = "uncertainty unknown"
 TOO_FEW = "too few sensors"
@@ -75,8 +75,11 @@ class Limits:
         the bare estimate would pass (simple acceptance, JCGM 106:2012, 8.2); ``reason`` names why nothing
         was decided, or is empty.
     figures
-        The figures of merit of every sensor with their intervals, judged or not
+        The figures of merit of every sensor from its staircases with their intervals, judged or not
         (:func:`campaign.analyses.sensor_figures.sensor_figures`).
+    further_figures
+        Those of the other kinds of trial. One that bears the name of a figure of staircases is judged in its
+        stead, in the generations that have it.
     not_judged
         Limits of the description that nothing measured so far can answer.
     conditions_not_measured
@@ -91,6 +94,7 @@ class Limits:
     not_judged: tuple[str, ...]
     conditions_not_measured: tuple[str, ...]
     decision_rule: str = "simple acceptance"
+    further_figures: pd.DataFrame = field(default_factory=lambda: _no_figures())
 
     def of_new_sensors(self) -> pd.DataFrame:
         """Return the rows that judge a new sensor of a generation."""
@@ -101,8 +105,10 @@ class Limits:
         return self.table[self.table["sensor"] != ""]
 
 
-def judge_limits(description: Description, calibration: Calibration | None) -> Limits:
-    """Judge every limit of *description* that *calibration* can answer.
+def judge_limits(
+    description: Description, calibration: Calibration | None, further: Sequence[pd.DataFrame] = ()
+) -> Limits:
+    """Judge every limit of *description* that an analysis can answer.
 
     Parameters
     ----------
@@ -110,29 +116,49 @@ def judge_limits(description: Description, calibration: Calibration | None) -> L
         Limits, range and conditions of use.
     calibration
         Lines, run lines, level differences and records; ``None`` where no staircase was read.
+    further
+        Figures of merit of the other kinds of trial, columns of
+        :data:`campaign.analyses.sensor_figures.FIGURE_COLUMNS` each.
 
     Returns
     -------
     Limits
-        An empty table where there are no limits or no calibration.
+        An empty table where there are no limits or no figures.
     """
     conditions = tuple(key for key in _CONDITIONS if key in description.use)
     figures = _no_figures() if calibration is None else sensor_figures(calibration, description)
-    judged = [name for name in JUDGED if name in description.limits and name in set(figures["figure"])]
+    others = _joined(further)
+    judgeable = _in_their_stead(figures, others)
+    judged = [name for name in JUDGED if name in description.limits and name in set(judgeable["figure"])]
     rows: list[dict[str, object]] = []
     for name in judged:
         value, unit = description.limits[name]
-        rows += _judge_sensors(name, value, unit, figures[figures["figure"] == name])
-        rows += _judge_new_sensors(name, value, unit, figures[figures["figure"] == name])
+        rows += _judge_sensors(name, value, unit, judgeable[judgeable["figure"] == name])
+        rows += _judge_new_sensors(name, value, unit, judgeable[judgeable["figure"] == name])
     table = pd.DataFrame(rows, columns=list(LIMIT_COLUMNS))
     if conditions:
         table = _withhold_met(table)
     absent = tuple(name for name in description.limits if name not in judged)
-    return Limits(table, figures, absent, conditions)
+    return Limits(table, figures, absent, conditions, further_figures=others)
 
 
 def _no_figures() -> pd.DataFrame:
     return pd.DataFrame(columns=list(FIGURE_COLUMNS))
+
+
+def _joined(frames: Sequence[pd.DataFrame]) -> pd.DataFrame:
+    known = [frame for frame in frames if len(frame)]
+    return pd.concat(known, ignore_index=True)[list(FIGURE_COLUMNS)] if known else _no_figures()
+
+
+def _in_their_stead(figures: pd.DataFrame, others: pd.DataFrame) -> pd.DataFrame:
+    """Figures of staircases and the others; where a generation has both, the others alone."""
+    if figures.empty or others.empty:
+        return figures if others.empty else others
+    keys = ["figure", "generation"]
+    taken = pd.MultiIndex.from_frame(others[keys])
+    kept = figures[~pd.MultiIndex.from_frame(figures[keys]).isin(taken)]
+    return pd.concat([kept, others], ignore_index=True) if len(kept) else others
 
 
 def _judge_sensors(name: str, value: float, unit: str, figures: pd.DataFrame) -> Iterator[dict[str, object]]:

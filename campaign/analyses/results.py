@@ -8,8 +8,13 @@ from typing import TYPE_CHECKING
 if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration
     from campaign.analyses.calibration_effort import CalibrationEffort
+    from campaign.analyses.drift import Drift
+    from campaign.analyses.endurance import Endurance
     from campaign.analyses.findings import Findings
+    from campaign.analyses.hysteresis import Hysteresis
+    from campaign.analyses.influences import Influences
     from campaign.analyses.limits import Limits
+    from campaign.analyses.pressure import Pressure
     from campaign.analyses.residuals import Residuals
     from campaign.analyses.variance import Variance
     from campaign.notices import Notice
@@ -36,6 +41,8 @@ class CampaignResults:
         Limits judged, and the facts of page 0; always there.
     notices
         All notices of reading and of analyses, sorted.
+    hysteresis, endurance, drift, pressure, influences
+        Loops, thousands of cycles, holds, pressure, other influences; ``None`` where not measured.
     """
 
     description: Description
@@ -48,3 +55,8 @@ class CampaignResults:
     limits: Limits
     findings: Findings
     notices: tuple[Notice, ...]
+    hysteresis: Hysteresis | None = None
+    endurance: Endurance | None = None
+    drift: Drift | None = None
+    pressure: Pressure | None = None
+    influences: Influences | None = None

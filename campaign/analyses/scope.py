@@ -31,7 +31,7 @@ KINDS = (
 )
 """All kinds of trial a campaign may hold, in the order of the folder's description."""
 
-ANALYSED = ("staircase",)
+ANALYSED = tuple(kind for kind in KINDS if kind != "layout")
 """Kinds that an analysis answers."""
 
 
@@ -115,8 +115,16 @@ class Scope:
     not_measured: tuple[str, ...]
 
 
-def describe_scope(description: Description, intake: Intake, calibration: Calibration | None) -> Scope:
-    """Sum up what was measured, from the registers, the trials used and the readings used."""
+def describe_scope(
+    description: Description,
+    intake: Intake,
+    calibration: Calibration | None,
+    reference: ReferenceQuantity | None = None,
+) -> Scope:
+    """Sum up what was measured, from the registers, the trials used and the readings used.
+
+    *reference* is what lengths are given in where no calibration says so.
+    """
     trials = intake.trials
     used = trials[trials["fate"] == "used"]
     rows = _used_readings(calibration)
@@ -128,7 +136,7 @@ def describe_scope(description: Description, intake: Intake, calibration: Calibr
         title=description.title,
         simulated=description.simulated,
         stands=_names(intake.sessions, "stand"),
-        reference=calibration.reference if calibration is not None else STRAIN,
+        reference=calibration.reference if calibration is not None else reference or STRAIN,
         x=_visited(rows),
         temperature_c=_span(rows, "temperature_c"),
         humidity_percent=_span(rows, "humidity_percent"),

@@ -504,9 +504,14 @@ def _advance(limit: _Limit, root: float, slope: float, cutoff: float) -> None:
 
 
 def _has_levelled_off(limit: _Limit, root: float, slope: float, cutoff: float) -> bool:
-    """Whether an upper limit lies beyond all lengths: far out, and the profile hardly rises any more."""
+    """Whether an upper limit lies beyond all lengths: far out, and the profile hardly rises any more.
+
+    From an estimate of zero the root begins to rise with a power of the length: only where it rises by far
+    less than in proportion has it levelled off.
+    """
     far = limit.upper and np.isnan(limit.outside) and limit.length > 30.0 * limit.first
-    return bool(far and cutoff - root > 3.0 * slope * limit.length)
+    rise = slope * limit.length
+    return bool(far and cutoff - root > 3.0 * rise and rise <= 0.3 * root)
 
 
 def _newton(length: float, root: float, slope: float, cutoff: float) -> float:

@@ -7,6 +7,7 @@ from typing import Any
 
 import pandas as pd
 
+from campaign.analyses.loop_table import BY_LINE
 from campaign.analyses.results import CampaignResults
 from campaign.pages.skin_map import MapFigure, MapSensor, Point, SkinMap, skin_map
 from campaign.recordings.description import Geometry
@@ -21,13 +22,24 @@ OFFERED: tuple[tuple[str, str, str], ...] = (
 )
 """Columns of the table of lines that a reader may pick, with their words and units."""
 
+LOOP_KEY = "loop_width_percent_fso"
+"""Key of the settled width of loops among what edges can be coloured by."""
+
 FIRST_SHOWN = "hysteresis_percent_fso"
 
+PRESSURE_KEY = "strain_error_per_kpa"
+"""Key of the error by pressure on the map."""
 
-def campaign_map(results: CampaignResults) -> SkinMap:
-    """Return the skin map of all sensors that a register or a trial names."""
-    figures = [*_line_figures(results), *_verdict_figures(results)]
-    return skin_map(map_sensors(results), figures, chosen=FIRST_SHOWN)
+
+def campaign_map(results: CampaignResults, chosen: str = FIRST_SHOWN) -> SkinMap:
+    """Return the skin map of all sensors that a register or a trial names, coloured by *chosen* at first."""
+    figures = [
+        *_line_figures(results),
+        *_loop_figure(results),
+        *_pressure_figure(results),
+        *_verdict_figures(results),
+    ]
+    return skin_map(map_sensors(results), figures, chosen=chosen)
 
 
 def map_sensors(results: CampaignResults) -> list[MapSensor]:
@@ -79,6 +91,31 @@ def _line_figures(results: CampaignResults) -> list[MapFigure]:
         shown_unit = reference.shown_unit if in_reference else unit
         made.append(MapFigure(key, words, shown_unit, _by_sensor(both, key, factor)))
     return made
+
+
+def _loop_figure(results: CampaignResults) -> list[MapFigure]:
+    """Return the settled width of every sensor's loops, where they were measured."""
+    found = results.hysteresis
+    if found is None:
+        return []
+    unit = "%FSO" if BY_LINE in found.scales else "% of range"
+    return [
+        MapFigure(
+            LOOP_KEY, "hysteresis of the loops", unit, _by_sensor(found.sensors, "width_percent_fso", 1.0)
+        )
+    ]
+
+
+def _pressure_figure(results: CampaignResults) -> list[MapFigure]:
+    """Return the magnitude of the apparent strain per kPa of every sensor, where it is known."""
+    pressure = results.pressure
+    if pressure is None or pressure.table["strain_error_per_kpa"].isna().all():
+        return []
+    reference = pressure.reference
+    values = _by_sensor(pressure.table, "strain_error_per_kpa", reference.shown_factor)
+    sizes = {key: abs(value) for key, value in values.items()}
+    title = f"apparent {'strain' if reference.name == 'strain' else 'length'} by pressure"
+    return [MapFigure(PRESSURE_KEY, title, f"{reference.shown_unit}/kPa", sizes)]
 
 
 def _by_sensor(rows: pd.DataFrame, key: str, factor: float) -> dict[tuple[str, str], float]:

@@ -37,6 +37,21 @@ DEFINITIONS: dict[str, tuple[str, str]] = {
         "calibration-effort",
         "strain_sd_predicted strain_sd_left_out strain_expanded factor",
     ),
+    "pressure": ("pressure", "per_kpa strain_error_per_kpa strain_error_in_use"),
+    "compensation": (
+        "compensation",
+        "residual_sd_before residual_sd_after strain_residual_sd_before strain_residual_sd_after",
+    ),
+    "influences": ("influences", "coefficient strain_equivalent"),
+    "what it may be called": ("relaxation", "called place"),
+    "times of a hold": ("hold-time", "change_1min_percent_fso change_1h_percent_fso duration_s"),
+    "slope a decade": ("slope-per-decade", "percent_fso_per_decade"),
+    "20–30 min, zero return of a hold": ("hold-zero-return", "creep_20_30min_percent_fso"),
+    "forms": ("creep-forms", "form forms_shown aicc_above_best shape"),
+    "settling time": ("settling-time", "_settles"),
+    "Allan deviation": ("allan", "deviation_strain white flicker least_deviation"),
+    "zero across sessions": ("zero-over-time", "departure_percent_fso"),
+    "blank channels": ("blank", "per_hour parasitic"),
     "verdicts": ("limits", "verdict probability"),
 }
 """Words of a link → (address on the Method page, columns that it explains)."""

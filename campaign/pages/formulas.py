@@ -73,6 +73,15 @@ FORMULAS: dict[str, str] = {
     r"\hat x_i=\frac{y_i-a}{b}\ \text{with the line of the effort}",
     "conformity": r"p_c=P\left(\eta\le L\right)=F_{\nu}\left(\frac{L-\hat\eta}{u(\hat\eta)}\right)",
     "autocorrelation": r"r_1=\frac{\sum_{i}e_i\,e_{i+1}}{\sum_{i}e_i^2}",
+    "influence": r"y=a+b\,\varepsilon+c\,p+d\,\varepsilon\,p+e",
+    "influence_error": r"\Delta\varepsilon(p)=\frac{(c+d\,\varepsilon)\,p}{b},\qquad "
+    r"\frac{u^2(\Delta\varepsilon)}{\Delta\varepsilon^2}=\frac{u^2(c+d\,\varepsilon)}{(c+d\,\varepsilon)^2}"
+    r"+\frac{u^2(b)}{b^2}",
+    "compensation": r"y_{\text{corrected}}=y-(\hat c+\hat d\,\varepsilon)\,p,\qquad "
+    r"s=\frac{1}{|b|}\sqrt{\frac{\sum_{j}\sum_{i}(r_{ij}-\bar r_{j})^2}{N-J}}",
+    "cross_axis": r"S_{\times}=100\ \%\cdot\frac{\partial y/\partial\varepsilon_{\text{across}}}"
+    r"{\partial y/\partial\varepsilon_{\text{along}}}",
+    "temperature": r"\alpha_{\text{zero}}=\frac{c}{y_0},\qquad \alpha_{\text{sensitivity}}=\frac{d}{b}",
     "cook": r"D_i=\frac{e_i^2}{p\,s^2}\,\frac{h_{ii}}{(1-h_{ii})^2}",
 }
 """Formulas by name; a template writes ``{{ formulas.gauge_factor }}``."""

@@ -9,6 +9,7 @@ from typing import Any
 import pandas as pd
 
 from campaign.analyses.results import CampaignResults
+from campaign.analyses.scope import ANALYSED
 from campaign.analyses.sensor_figures import principal_lines
 from campaign.pages import numbers, palette, slugs
 from campaign.pages.calibration import x_title
@@ -24,6 +25,8 @@ from campaign.pages.figures import (
     line,
     points,
 )
+from campaign.pages.influence_sections import module_pressure_figure
+from campaign.pages.loop_sections import module_widths_figure
 from campaign.pages.page import Page
 from campaign.pages.sensor import FIGURE_ORDER
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
@@ -79,6 +82,7 @@ def _module_page(results: CampaignResults, mapped: SkinMap, generation: str, mod
             module_merits_figure(results, module),
             module_effects_figure(results, module, where),
         ]
+    figures += [module_widths_figure(results, module), module_pressure_figure(results, module)]
     return Page(
         slug=slugs.module_slug(module),
         number=None,
@@ -124,11 +128,10 @@ def _state(results: CampaignResults, module: str, sensor: str) -> str:
         table.loc[(table["module"] == module) & (table["sensor"] == sensor), "used"].any()
     ):
         return "used"
-    return (
-        "set aside"
-        if not (own["fate"] == "used").any() or own["kind"].eq("staircase").any()
-        else "not analysed"
-    )
+    used = own[own["fate"] == "used"]
+    if used.empty:
+        return "set aside"
+    return "used" if used["kind"].isin(ANALYSED).any() else "not analysed"
 
 
 def _batch_of(results: CampaignResults, module: str) -> str:

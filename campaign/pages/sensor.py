@@ -15,7 +15,10 @@ from campaign.analyses.limits import CONDITIONS, ONE_MODULE, TOO_FEW, UNKNOWN
 from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers, slugs
 from campaign.pages.calculator import calculator_data, record_href
+from campaign.pages.drift import sensor_holds
 from campaign.pages.figures import Figure
+from campaign.pages.influence_sections import sensor_influences
+from campaign.pages.loop_sections import sensor_loops
 from campaign.pages.page import Page
 from campaign.pages.sensor_parts import SensorParts, gather_sensors
 from campaign.pages.sensor_plots import half_widths, sensor_figures_of, trial_plot
@@ -86,7 +89,7 @@ def sensor_pages(results: CampaignResults, mapped: SkinMap) -> list[Page]:
     links = [(f"{s.module} {s.sensor}", slugs.sensor_href(s.module, s.sensor)) for s in sensors]
     return [
         replace(
-            _sensor_page(parts, mapped, labels, together),
+            _sensor_page(results, parts, mapped, labels, together),
             previous=links[i - 1] if i else None,
             following=links[i + 1] if i + 1 < len(links) else None,
         )
@@ -103,6 +106,7 @@ def _sensors_by_trial(trials: pd.DataFrame) -> dict[tuple[str, str], set[str]]:
 
 
 def _sensor_page(
+    results: CampaignResults,
     parts: SensorParts,
     mapped: SkinMap,
     labels: Mapping[str, str],
@@ -111,6 +115,9 @@ def _sensor_page(
     sections, plots = trial_sections(parts, together)
     reference, records = parts.reference, parts.records
     unit = "" if parts.line is None else f"{parts.line['unit']} per {reference.shown_unit}"
+    influences, swept = sensor_influences(results, parts.module, parts.sensor)
+    looped, outlines = sensor_loops(results, parts.module, parts.sensor)
+    holds, held, holds_by_trial = sensor_holds(results, parts.module, parts.sensor)
     return Page(
         slug=slugs.sensor_slug(parts.module, parts.sensor),
         number=None,
@@ -132,13 +139,16 @@ def _sensor_page(
             "accuracy": _accuracy_of(parts.record),
             "averaged": AVERAGED,
             "sections": sections,
+            "influences": influences,
+            "loops": looped,
+            "holds_by_trial": holds_by_trial,
             "register": register_facts(parts.register),
             "used": parts.used,
             "labels": labels,
             "ordinary": parts.ordinary,
         },
-        figures=(*sensor_figures_of(parts), *plots),
-        tables=(*_limits_table(parts), *_runs_table(parts)),
+        figures=(*sensor_figures_of(parts), *swept, *outlines, *holds, *plots),
+        tables=(*_limits_table(parts), *_runs_table(parts), *held),
         data={"calculator": calculator_data(records)} if records else {},
         description=f"Readings, line, figures of merit and trials of sensor {parts.sensor} of module "
         f"{parts.module}.",

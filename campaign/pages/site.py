@@ -11,11 +11,15 @@ from campaign.pages.calculator import record_files
 from campaign.pages.calibration import calibration_page
 from campaign.pages.calibration_effort import calibration_effort_page
 from campaign.pages.campaign_map import campaign_map
+from campaign.pages.drift import drift_page
 from campaign.pages.findings import findings_page
+from campaign.pages.hysteresis import hysteresis_page
+from campaign.pages.loop_figures import loop_scripts
 from campaign.pages.method import method_page
 from campaign.pages.module import module_pages
 from campaign.pages.notes import Notes
 from campaign.pages.page import Page, SiteFrame
+from campaign.pages.pressure import pressure_page
 from campaign.pages.provenance import provenance_page
 from campaign.pages.recordings import recordings_page
 from campaign.pages.render import render_site
@@ -51,7 +55,12 @@ def build_site(
         site_frame(results),
         pages,
         site_tables(results, pages),
-        files={**(notes.files or {}), **record_files(records), **residual_files(results)},
+        files={
+            **(notes.files or {}),
+            **record_files(records),
+            **residual_files(results),
+            **loop_scripts(results.hysteresis),
+        },
         plot_library=plot_library,
         reference=results.readings.reference,
     )
@@ -68,6 +77,9 @@ def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
         variance_page(results),
         residuals_page(results),
         calibration_effort_page(results),
+        hysteresis_page(results),
+        drift_page(results),
+        pressure_page(results),
     )
     pages = [findings_page(results, mapped), *(page for page in measured if page is not None)]
     pages += [recordings_page(results), method_page(results)]

@@ -29,6 +29,23 @@ CAPTIONS: dict[str, str] = {
     "residuals": "Conditional and marginal residuals of the nested model.",
     "calibration_effort": "Error against calibration effort, predicted and left out.",
     "limits": "Every limit judged, sensor by sensor and for a new sensor.",
+    "holds": "Every hold: changes, slope a decade, form, and what it may be called.",
+    "hold_forms": "Every form fitted to every hold.",
+    "allan": "Overlapping Allan deviation of every hold at rest and blank channel.",
+    "zero_over_time": "The zero of every sensor, session by session.",
+    "hold_means": "Mean slope a decade of the stretched holds of every generation.",
+    "loops": "Every loop: width, area, peak and zero signal, rate.",
+    "hysteresis": "The settled loops of every sensor.",
+    "loop_runs": "Every cyclic trial: when it settles, first and settled zero and peak signal.",
+    "loop_rates": "Width against rate, by sensor.",
+    "loop_components": "Where the spread of the widths comes from.",
+    "loop_means": "Mean signed width at mid range of every generation.",
+    "pressure": "What a kilopascal does to every sensor, and what its own compensation leaves.",
+    "influences": "What the other influences do to every sensor.",
+    "pressure_sweeps": "Every sweep of pressure: its line over both branches, loop width and drift.",
+    "pressure_corrections": "What is left of the error by pressure with every correction, left out.",
+    "influence_sweeps": "Every sweep of the other influences.",
+    "endurance_log": "Zero and sensitivity of every logged cycle, up to the sensor’s failure.",
 }
 """Tables of the analyses that are written whole, with their captions."""
 
@@ -69,4 +86,45 @@ def _frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
         frames["calibration_effort"] = results.calibration_effort.table
     if len(results.limits.table):
         frames["limits"] = results.limits.table
+    return frames | _loop_frames(results) | _drift_frames(results) | _influence_frames(results)
+
+
+def _loop_frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
+    """Return the frames of loops and endurance, where they were measured."""
+    frames: dict[str, pd.DataFrame] = {}
+    if (found := results.hysteresis) is not None:
+        frames |= {"loops": found.loops, "hysteresis": found.sensors, "loop_runs": found.runs}
+        frames |= {"loop_components": found.components, "loop_means": found.means}
+        if found.several_rates:
+            frames["loop_rates"] = found.rates.sensors
+    if results.endurance is not None:
+        frames["endurance_log"] = results.endurance.log
     return frames
+
+
+def _influence_frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
+    """Return the frames of pressure and the other influences, where they were measured."""
+    frames: dict[str, pd.DataFrame] = {}
+    if (pressure := results.pressure) is not None:
+        frames |= {"pressure_sweeps": pressure.sweeps, "pressure_corrections": pressure.spread.serving}
+        frames["pressure"] = pressure.table
+    if (influences := results.influences) is not None:
+        parts = [result.sweeps.assign(influence=result.influence) for result in influences.results]
+        frames["influences"] = influences.table
+        frames["influence_sweeps"] = pd.concat(parts, ignore_index=True)
+    return frames
+
+
+def _drift_frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
+    """Return the frames of holds, noise at rest and zeros, where they were measured."""
+    if (drift := results.drift) is None:
+        return {}
+    frames = {
+        "holds": drift.holds,
+        "hold_forms": drift.forms,
+        "allan": drift.allan,
+        "hold_means": drift.means,
+    }
+    if drift.zero is not None:
+        frames["zero_over_time"] = drift.zero.table
+    return {name: frame for name, frame in frames.items() if len(frame)}

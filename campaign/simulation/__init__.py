@@ -19,6 +19,14 @@ from campaign.simulation.plan import (
 from campaign.simulation.readings import sensor_register, simulate_readings
 from campaign.simulation.recordings import simulate_recordings
 from campaign.simulation.schedule import Schedule
+from campaign.simulation.trial_plans import CyclicPlan, HoldPlan, SweepPlan
+from campaign.simulation.trial_truths import (
+    CyclicTruth,
+    HoldTruth,
+    InfluenceTruth,
+    LogarithmicRelaxation,
+    StretchedRelaxation,
+)
 from campaign.simulation.truth import (
     Components,
     GenerationTruth,
@@ -34,10 +42,16 @@ from campaign.simulation.truth import (
 __all__ = [
     "Batch",
     "Components",
+    "CyclicPlan",
+    "CyclicTruth",
     "FolderHoldsOther",
     "Generation",
     "GenerationTruth",
+    "HoldPlan",
+    "HoldTruth",
+    "InfluenceTruth",
     "LineSpread",
+    "LogarithmicRelaxation",
     "LoopWidth",
     "Place",
     "Plan",
@@ -48,6 +62,8 @@ __all__ = [
     "SignalLaw",
     "StaircasePlan",
     "StandTruth",
+    "StretchedRelaxation",
+    "SweepPlan",
     "Truth",
     "panel_places",
     "regular_plan",

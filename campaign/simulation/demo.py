@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Iterable
-from datetime import date
+from dataclasses import replace
+from datetime import date, time
 from importlib.resources import files
 
 import numpy as np
@@ -21,6 +22,14 @@ from campaign.simulation.recordings import simulate_recordings
 from campaign.simulation.registers import csv_text, modules_text, sensors_text, sessions_text
 from campaign.simulation.schedule import Schedule
 from campaign.simulation.staircase import step_timing
+from campaign.simulation.trial_plans import CyclicPlan, HoldPlan, SweepPlan
+from campaign.simulation.trial_truths import (
+    CyclicTruth,
+    HoldTruth,
+    InfluenceTruth,
+    LogarithmicRelaxation,
+    StretchedRelaxation,
+)
 from campaign.simulation.truth import (
     Components,
     GenerationTruth,
@@ -50,6 +59,9 @@ UNSETTLED = "trials/M02/M02_AC_cal_r2_s1.csv"
 UNSETTLED_PLATEAU = 5
 UNSETTLED_CREEP_PF = 0.9
 KNOCKED = "trials/M09/M09_DA_cal_r3_s2.csv"
+MOVED_BY_PRESSURE = ("M10", "BC", 0.24)
+WARMED = ("M09", "AB")
+WARMED_RUN = "trials/M09/M09_AB_hold_r4_s2.csv"
 
 SCHEDULE = Schedule(date(2025, 2, 3))
 
@@ -57,6 +69,7 @@ TEXTS = {
     "campaign.toml": "description.toml",
     "notes/the-stand.md": "notes/the-stand.md",
     "notes/the-second-process.md": "notes/the-second-process.md",
+    "notes/loops-holds-pressure.md": "notes/loops-holds-pressure.md",
     "notes/panel.svg": "notes/panel.svg",
 }
 """Files of the folder that are written by hand: where they go, and their names beside this module."""
@@ -84,6 +97,41 @@ def demo_plan() -> Plan:
         repetitions=3,
         staircase=StaircasePlan(descending=True),
         omitted=dead,
+        cyclic=CyclicPlan(positions=("AB", "AC"), session="2"),
+        holds=demo_holds(),
+        pressure=SweepPlan(
+            positions=tuple(place.position for place in demo_places()), missing=frozenset({DEAD})
+        ),
+        thermal=SweepPlan(
+            positions=("AB", "BC"),
+            modules=("M01", "M04", "M07", "M10"),
+            strains=(0.0, 0.30),
+            low=15.0,
+            high=35.0,
+            leg_s=1500.0,
+            move_s=30.0,
+            sample_period_s=15.0,
+            start=time(14, 0),
+            run_minutes=105,
+        ),
+    )
+
+
+def demo_holds() -> tuple[HoldPlan, ...]:
+    """Return the holds: two strains and the rest length for an hour each, and once a room that warms up."""
+    panels = ("M01", "M02", "M04", "M05", "M07", "M08", "M10", "M11")
+    held, diagonal = (tuple((module, place) for module in panels) for place in ("AB", "AC"))
+    resting = tuple((module, "AB") for module in ("M01", "M04", "M07", "M10"))
+    return (
+        HoldPlan(
+            held, strain=0.20, repetition=1, ramp_s=2.0, sample_period_s=1.0, session="2", start=time(14, 30)
+        ),
+        HoldPlan(
+            held, strain=0.40, repetition=2, ramp_s=2.0, sample_period_s=1.0, session="2", start=time(15, 45)
+        ),
+        HoldPlan(diagonal, strain=0.40, repetition=1, ramp_s=2.0, session="2", start=time(18, 15)),
+        HoldPlan(resting, repetition=3, sample_period_s=1.0, session="2", start=time(17, 0)),
+        HoldPlan((WARMED,), repetition=4, warming_k=5.0, session="2", start=time(17, 0)),
     )
 
 
@@ -96,6 +144,14 @@ def demo_truth() -> Truth:
     """Return what is true: the blade makes sensors more alike, the clamps stay as they were."""
     noise = SampleNoise(white=0.030, slow=0.010, slow_correlation=0.5)
     settling = Settling(share=0.04, time_s=1.6)
+    cycling = CyclicTruth(delay_s=0.06, conditioning_cycles=0.9, recovered=0.2, run_sd=0.02)
+    holding = HoldTruth(
+        relative_sd=0.12, left_after=0.5, recovery_s=400.0, drift_per_hour=0.05, drift_sd=0.02, flicker=0.003
+    )
+    inflation = InfluenceTruth(per_strain=0.030, per_strain_sd=0.006, run_sd=0.0010, loop=0.10, loop_sd=0.02)
+    warming = InfluenceTruth(
+        coefficient=0.030, sensor_sd=0.003, run_sd=0.0005, per_strain=0.020, loop=0.02, origin=22.5
+    )
     poured = GenerationTruth(
         law=SignalLaw(parasitic=9.0, per_mm=0.72),
         components=Components(
@@ -110,6 +166,10 @@ def demo_truth() -> Truth:
         loop=LoopWidth(0.70, 0.20),
         noise=noise,
         settling=settling,
+        cyclic=replace(cycling, first_width_share=0.5, softening_share=0.030),
+        hold=replace(holding, relaxation=LogarithmicRelaxation(0.010, 5.0)),
+        pressure=replace(inflation, coefficient=0.040, module_sd=0.006, sensor_sd=0.008),
+        thermal=warming,
     )
     blade = GenerationTruth(
         law=SignalLaw(parasitic=9.0, per_mm=0.90),
@@ -125,6 +185,12 @@ def demo_truth() -> Truth:
         loop=LoopWidth(0.42, 0.12),
         noise=noise,
         settling=settling,
+        cyclic=replace(cycling, first_width_share=0.35, softening_share=0.018),
+        hold=replace(holding, relaxation=StretchedRelaxation(0.020, 300.0, 0.5)),
+        pressure=replace(
+            inflation, coefficient=0.048, module_sd=0.003, sensor_sd=0.004, outliers=(MOVED_BY_PRESSURE,)
+        ),
+        thermal=warming,
     )
     stand = StandTruth(
         scale=0.0003,
@@ -146,7 +212,7 @@ def demo_files() -> dict[str, bytes]:
     registers = {
         "modules.csv": modules_text(plan, _MATERIALS),
         "sensors.csv": sensors_text(plan, truth, SEED, {DEAD: ("failed before testing", _TORN)}),
-        "sessions.csv": sessions_text(plan, truth, SEED, SCHEDULE, "invented bench", "edge clamps, set anew"),
+        "sessions.csv": sessions_text(plan, truth, SEED, SCHEDULE, _STANDS),
         "trials.csv": csv_text(
             ["file", "use", "reason"], [[KNOCKED, "no", "the table was knocked during the run (invented)"]]
         ),
@@ -155,6 +221,7 @@ def demo_files() -> dict[str, bytes]:
     return written | {path: text.encode() for path, text in registers.items()} | _recording_files(plan, truth)
 
 
+_STANDS = {"edge": ("invented bench", "edge clamps, set anew"), "frame": ("invented frame", "four node pins")}
 _TORN = "torn when the panel left its plate (invented)"
 _MATERIALS = {
     "hand-poured": {
@@ -174,6 +241,8 @@ _FAULTS = {
     "duplicated file": f"`{DUPLICATE}` has the bytes of `{DUPLICATED}`",
     "unsettled plateau": f"plateau {UNSETTLED_PLATEAU + 1} of `{UNSETTLED}` creeps {UNSETTLED_CREEP_PF} pF",
     "left out by request": f"`{KNOCKED}`, in trials.csv",
+    "sensor moved by pressure": "{} {}: c = {} pF/kPa".format(*MOVED_BY_PRESSURE),
+    "a room that warms up": f"by 5 K half-way through `{WARMED_RUN}`: its change is not all drift",
 }
 
 

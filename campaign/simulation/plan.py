@@ -5,6 +5,8 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 from math import hypot
 
+from campaign.simulation.trial_plans import CyclicPlan, HoldPlan, SweepPlan
+
 
 @dataclass(frozen=True)
 class Place:
@@ -113,7 +115,9 @@ class Plan:
     shared_runs
         ``True``: one run carries all sensors of a module (wide files); ``False``: sensors run one at a time.
     omitted
-        Runs that were not made (with shared runs: sensors that were not connected in that run).
+        Staircase runs that were not made (with shared runs: sensors that were not connected in that run).
+    cyclic, holds, pressure, thermal
+        What is run besides staircases; ``None`` or empty: nothing.
     """
 
     generations: tuple[Generation, ...]
@@ -123,6 +127,10 @@ class Plan:
     staircase: StaircasePlan = field(default_factory=StaircasePlan)
     shared_runs: bool = False
     omitted: frozenset[RunKey] = frozenset()
+    cyclic: CyclicPlan | None = None
+    holds: tuple[HoldPlan, ...] = ()
+    pressure: SweepPlan | None = None
+    thermal: SweepPlan | None = None
 
     def __post_init__(self) -> None:
         modules = self.modules

@@ -11,6 +11,7 @@ import numpy as np
 from campaign.simulation.effects import draw_effects
 from campaign.simulation.plan import Plan
 from campaign.simulation.schedule import Schedule
+from campaign.simulation.sweep import framed_sensor
 from campaign.simulation.truth import Truth
 
 
@@ -52,8 +53,13 @@ def sensors_text(
     return csv_text([*header, "rest_length_method", "fate", "reason"], rows)
 
 
-def sessions_text(plan: Plan, truth: Truth, seed: int, schedule: Schedule, stand: str, grip: str) -> str:
-    """Return ``sessions.csv``: one row a mounting of a module, with day, stand, grip and temperature (°C)."""
+def sessions_text(
+    plan: Plan, truth: Truth, seed: int, schedule: Schedule, stands: Mapping[str, tuple[str, str]]
+) -> str:
+    """Return ``sessions.csv``: one row a mounting of a module, with day, stand, grip and temperature (°C).
+
+    *stands* gives stand and grip of mountings edge by edge (``"edge"``) and in the frame (``"frame"``).
+    """
     effects = draw_effects(plan, truth, np.random.default_rng(seed))
     rows = []
     for index, module in enumerate(plan.modules):
@@ -61,5 +67,11 @@ def sessions_text(plan: Plan, truth: Truth, seed: int, schedule: Schedule, stand
             day = schedule.mounting_day(plan, module, session)
             warmth = effects.temperature_c[index * len(plan.sessions) + number]
             started = f"{day.isoformat()}T{schedule.first_hour.isoformat()}"
-            rows.append([session, module, started, stand, grip, f"{warmth:.1f}"])
+            rows.append([session, module, started, *stands["edge"], f"{warmth:.1f}"])
+        if plan.pressure is not None and module in (plan.pressure.modules or plan.modules):
+            sensor = framed_sensor(plan, truth, effects, module, plan.pressure.positions[0], seed)
+            day = schedule.mounting_day(plan, module, plan.sessions[0])
+            started = f"{day.isoformat()}T{plan.pressure.start.isoformat()}"
+            session = plan.pressure.session
+            rows.append([session, module, started, *stands["frame"], f"{sensor.temperature_c:.1f}"])
     return csv_text(["session", "module", "started", "stand", "grip", "temperature"], rows)

@@ -7,14 +7,14 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
-from scipy.signal import lfilter
 
 from campaign.simulation.effects import Effects, design_of
+from campaign.simulation.noise import sample_noise, slow_noise
 from campaign.simulation.plan import Plan, StaircasePlan
 from campaign.simulation.readings import plateaus, reading_signals, trial_path
 from campaign.simulation.recording_text import SyntheticColumn, SyntheticRecording
 from campaign.simulation.schedule import Schedule
-from campaign.simulation.truth import GenerationTruth, SampleNoise, Settling, Truth
+from campaign.simulation.truth import GenerationTruth, Settling, Truth
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
@@ -110,7 +110,7 @@ def _recording(
     columns = [SyntheticColumn("time_s", timing.time_s, 1)]
     for run in runs:
         columns += _channel(plan, truth, effects, signals[run], run, timing, noise)
-    warmth = effects.temperature_c[mounting] + 0.05 * _slow_noise(noise, len(timing.time_s), 0.99)
+    warmth = effects.temperature_c[mounting] + 0.05 * slow_noise(noise, len(timing.time_s), 0.99)
     columns.append(SyntheticColumn("ambient_C", warmth, 1))
     preamble = [
         ("Invented data made by campaign.simulation; nothing was measured", ""),
@@ -164,16 +164,3 @@ def settling_signal(signals: FloatArray, timing: StepTiming, truth: GenerationTr
     settling: Settling = truth.settling
     late = np.exp(-np.maximum(timing.since_step_s, 0.0) / settling.time_s) * timing.progress
     return np.asarray(_stepped(signals, timing) - settling.share * steps[timing.plateau] * late)
-
-
-def sample_noise(truth: SampleNoise, generator: np.random.Generator, count: int) -> FloatArray:
-    """Return *count* successive samples of noise, in signal units."""
-    white = truth.white * generator.standard_normal(count)
-    return np.asarray(white + truth.slow * _slow_noise(generator, count, truth.slow_correlation))
-
-
-def _slow_noise(generator: np.random.Generator, count: int, correlation: float) -> FloatArray:
-    """Stationary first-order noise of unit SD."""
-    normal = generator.standard_normal(count)
-    normal[1:] *= np.sqrt(1.0 - correlation**2)
-    return np.asarray(lfilter([1.0], [1.0, -correlation], normal))

@@ -7,6 +7,8 @@ from dataclasses import dataclass, field
 import numpy as np
 import numpy.typing as npt
 
+from campaign.simulation.trial_truths import CyclicTruth, HoldTruth, InfluenceTruth
+
 FloatArray = npt.NDArray[np.float64]
 
 
@@ -168,13 +170,25 @@ class Settling:
 
 @dataclass(frozen=True)
 class GenerationTruth:
-    """All that is true of one generation."""
+    """All that is true of one generation.
+
+    Attributes
+    ----------
+    law, components, loop, noise, settling
+        Lines, their spread, the loop of the staircases, noise of samples, and what follows a step.
+    cyclic, hold, pressure, thermal
+        What the other kinds of trial add.
+    """
 
     law: SignalLaw = field(default_factory=SignalLaw)
     components: Components = field(default_factory=Components)
     loop: LoopWidth = field(default_factory=LoopWidth)
     noise: SampleNoise = field(default_factory=SampleNoise)
     settling: Settling = field(default_factory=Settling)
+    cyclic: CyclicTruth = field(default_factory=CyclicTruth)
+    hold: HoldTruth = field(default_factory=HoldTruth)
+    pressure: InfluenceTruth = field(default_factory=InfluenceTruth)
+    thermal: InfluenceTruth = field(default_factory=InfluenceTruth)
 
 
 @dataclass(frozen=True)

@@ -8,6 +8,7 @@ import numpy as np
 
 from campaign.simulation.plan import Plan
 from campaign.simulation.truth import GenerationTruth, Truth
+from campaign.simulation.truth_text_of_kinds import other_kinds_lines
 
 LEVELS = ("batch", "module", "sensor", "mounting", "session", "shared_run", "repetition")
 
@@ -29,6 +30,7 @@ def truth_text(plan: Plan, truth: Truth, seed: int, faults: Mapping[str, str]) -
     ]
     for index, generation in enumerate(plan.generations):
         lines += [f"## {generation.name}", "", *_generation_lines(plan, truth.of(index), truth.unit)]
+        lines += other_kinds_lines(plan, truth.of(index), truth.unit)
     lines += ["## The stand", "", *_stand_lines(truth), ""]
     if faults:
         lines += ["## Faults put in on purpose", "", "| fault | where |", "|---|---|"]
@@ -83,7 +85,8 @@ def _component_lines(truth: GenerationTruth, unit: str, slope: float, full: floa
         f"{loop.sd:g} {unit}.",
         f"Samples: white noise {noise.white:g} {unit}, slow noise {noise.slow:g} {unit} "
         f"(correlation {noise.slow_correlation:g} from sample to sample).",
-        f"Settling: {100 * settling.share:g} % of a step comes late, time constant {settling.time_s:g} s.",
+        f"Settling, in staircases only: {100 * settling.share:g} % of a step comes late, time constant "
+        f"{settling.time_s:g} s.",
     ]
 
 

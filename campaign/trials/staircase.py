@@ -14,6 +14,7 @@ from scipy import special
 from campaign.methods.autocorrelation import StretchMeans, stretch_means
 from campaign.notices import Notice
 from campaign.recordings.recording import Trial
+from campaign.trials.features import recorded_reference
 from campaign.trials.plateaus import SHORTEST_PLATEAU, expand, find_plateaus
 from campaign.trials.readings import ReadingPart
 
@@ -64,12 +65,12 @@ def readings_of_staircase(trial: Trial) -> StaircaseFeatures:
     StaircaseFeatures
         With no readings and a notice where nothing usable is found; input is never altered.
     """
-    reference = _reference_values(trial)
-    if reference is None or not np.any(np.isfinite(reference)):
+    reference = recorded_reference(trial)
+    if reference is None:
         return _nothing(trial, "reference-not-known", "no known length, elongation or strain in this trial")
     if _is_table(trial):
-        return _readings_of_table(trial, reference)
-    return _readings_of_log(trial, reference)
+        return _readings_of_table(trial, reference[1])
+    return _readings_of_log(trial, reference[1])
 
 
 def zero_return(levels: FloatArray, signals: FloatArray) -> float:
@@ -268,13 +269,6 @@ def _is_table(trial: Trial) -> bool:
         held = np.diff(known) == 0
         return len(known) < 2 or float(held.mean()) < 0.2
     return trial.time_s is None
-
-
-def _reference_values(trial: Trial) -> FloatArray | None:
-    """The quantity in which the stand recorded, else whichever of the others is there."""
-    recorded = {"length": trial.length_mm, "elongation": trial.elongation_mm, "strain": trial.strain}
-    order = [trial.reference, *(name for name in recorded if name != trial.reference)]
-    return next((recorded[name] for name in order if recorded.get(name) is not None), None)
 
 
 def _level_tolerance(levels: FloatArray) -> float:

@@ -106,6 +106,26 @@ window.campaign = window.campaign || {};
     library.react(figure.live, made.data, made.layout, CONFIG);
   }
 
+  /* Another choice of traces for a figure, with the ranges of its axes and the address of its data. */
+  campaign.changeFigure = function (name, traces, ranges, csv) {
+    const figure = figures.get(name);
+    if (!figure) return;
+    figure.spec.traces = traces;
+    for (const [axis, ends] of Object.entries(ranges)) {
+      figure.spec.layout[axis] = Object.assign({}, figure.spec.layout[axis], { range: ends });
+    }
+    figure.wanted = {};
+    figure.element.querySelector(".tools a").href = csv;
+    if (figure.dataTable) {
+      figure.dataTable.remove();
+      figure.dataTable = null;
+      figure.dataButton.setAttribute("aria-expanded", "false");
+    }
+    if (!figure.live) return;
+    const made = drawn(figure, {});
+    library.react(figure.live, made.data, made.layout, CONFIG);
+  };
+
   /* Addresses within the site only. */
   function address(point) {
     const href = point && typeof point.customdata === "string" ? point.customdata : "";

@@ -219,18 +219,18 @@ def test_without_staircases_the_findings_say_what_was_measured(tmp_path):
     folder = tmp_path / "c"
     (folder / "trials").mkdir(parents=True)
     rows = "\n".join(f"{i / 10},{60 + abs(i % 20 - 10)},{50 + abs(i % 20 - 10)}" for i in range(60))
-    (folder / "trials" / "M1_S_cyclic_r1.csv").write_text(f"time_s,length [mm],C (pF)\n{rows}\n")
+    (folder / "trials" / "M1_S_layout_r1.csv").write_text(f"time_s,length [mm],C (pF)\n{rows}\n")
     (folder / "campaign.toml").write_text(
-        'format = 1\n[campaign]\ntitle = "Only cycles"\n[recordings]\n'
+        'format = 1\n[campaign]\ntitle = "Only shapes"\n[recordings]\n'
         'name = "{module}_{sensor}_{kind}_r{repetition}"\n'
     )
     files = build_site(analyse(read_campaign(folder)))
     assert not {"calibration.html", "variance.html", "residuals.html", "calibration_effort.html"} & set(files)
     page = parsed(files["index.html"])
-    assert "1 recording of cycles of stretch and release" in page.text
+    assert "1 recording of known shapes of the module" in page.text
     assert "Pages 1 to 4" in page.text
     assert not HOLES.findall(page.text)
-    assert "trials/M1_S_cyclic_r1.csv" in parsed(files["sensor-M1-S.html"]).text
+    assert "trials/M1_S_layout_r1.csv" in parsed(files["sensor-M1-S.html"]).text
 
 
 def write_wide_campaign(folder):

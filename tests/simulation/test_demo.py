@@ -6,15 +6,17 @@ import hashlib
 import subprocess
 import sys
 import tomllib
+from dataclasses import replace
 from pathlib import Path
 
 import pandas as pd
 import pytest
 
 from campaign.pages.notes import make_notes, read_note_files
-from campaign.simulation import demo
+from campaign.simulation import demo, simulate_recordings
 from campaign.simulation.__main__ import main
 from campaign.simulation.demo import demo_files, demo_plan, demo_truth
+from campaign.simulation.recording_text import recording_bytes
 
 FOLDER = Path(__file__).parents[2] / "demo_campaign"
 
@@ -66,7 +68,7 @@ def test_every_file_says_that_it_is_invented(made: dict[str, bytes]) -> None:
     assert "invented" in description["title"]
     assert "Invented" in description["description"]
     assert description["authors"][0]["name"] == "Invented Author"
-    for page in ("notes/the-stand.md", "notes/the-second-process.md"):
+    for page in ("notes/the-stand.md", "notes/the-second-process.md", "notes/loops-holds-pressure.md"):
         assert "(invented)" in made[page].decode().splitlines()[0]
 
 
@@ -95,6 +97,44 @@ def test_the_faults_are_there(made: dict[str, bytes]) -> None:
     for path in (demo.DEAD_RUN, demo.MISLABELLED, demo.DUPLICATE, demo.UNSETTLED, demo.KNOCKED):
         assert path in truth
         assert path in made
+
+
+def test_other_kinds_leave_the_staircases_as_they_are(made: dict[str, bytes]) -> None:
+    alone = replace(demo_plan(), cyclic=None, holds=(), pressure=None, thermal=None)
+    without = {file.file: file for file in simulate_recordings(alone, demo_truth(), demo.SEED, demo.SCHEDULE)}
+    whole = simulate_recordings(demo_plan(), demo_truth(), demo.SEED, demo.SCHEDULE)
+    stairs = {file.file: file for file in whole if "_cal_" in file.file}
+    assert stairs.keys() == without.keys()
+    assert all(recording_bytes(stairs[path]) == recording_bytes(file) for path, file in without.items())
+    assert sum("_cal_" not in path for path in made if path.startswith("trials/")) == len(whole) - len(stairs)
+
+
+def test_every_kind_is_there_in_both_generations(made: dict[str, bytes]) -> None:
+    words = {"loop": "cyclic", "hold": "hold", "inflate": "pressure", "warm": "thermal"}
+    named = tomllib.loads(made["campaign.toml"].decode())["recordings"]["kinds"]
+    assert {word: named.get(word, word) for word in words} == words
+    for word in words:
+        modules = {path.split("/")[1] for path in made if f"_{word}_" in path}
+        for generation in demo_plan().generations:
+            assert len(modules & set(generation.modules)) >= 2
+
+
+def test_the_truth_of_every_kind_is_written_down(made: dict[str, bytes]) -> None:
+    """Hand-poured, AB at 0.1 1/s: 0.7 pF of loop, and 2 · 69.12 pF · 0.1 1/s · 0.06 s = 0.829 pF of delay."""
+    truth = made["TRUTH.md"].decode()
+    assert "| AB | 0.1 | 0.700 | 0.829 | 1.529 | 5.53 |" in truth
+    assert "1.11 % of the step at 1 min, 2.08 % at 10 min, 2.86 % at 1 h" in truth
+    assert "c = 0.04 pF/kPa; SD between modules 0.006, between sensors 0.008" in truth
+    assert demo.WARMED_RUN in truth
+    assert demo.WARMED_RUN in made
+    assert "M10 BC: c = 0.24 pF/kPa" in truth
+
+
+def test_the_room_warms_up_in_one_hold_only(made: dict[str, bytes]) -> None:
+    for path in (path for path in made if "_hold_" in path):
+        lines = [line for line in made[path].decode("utf-8-sig").splitlines() if line[0].isdigit()]
+        ambient = [float(line.split(",")[3]) for line in lines]
+        assert (max(ambient) - min(ambient) > 4.0) == (path == demo.WARMED_RUN)
 
 
 def test_the_unsettled_plateau_falls_while_the_stage_stands(made: dict[str, bytes]) -> None:
@@ -128,6 +168,10 @@ def test_truth_page_gives_the_strain_equivalents_of_the_components(made: dict[st
 
 def test_the_notes_are_shown_whole_with_their_picture() -> None:
     notes = make_notes(read_note_files(FOLDER))
-    assert [page.title for page in notes.pages] == ["The second process (invented)", "The stand (invented)"]
+    assert [page.title for page in notes.pages] == [
+        "Loops, holds, inflation and warmth (invented)",
+        "The second process (invented)",
+        "The stand (invented)",
+    ]
     assert notes.notices == ()
     assert len(notes.files or {}) == 1

@@ -1,0 +1,70 @@
+"""From which cycle on a run is settled, told from noise."""
+
+from __future__ import annotations
+
+import numpy as np
+import numpy.typing as npt
+from scipy import stats
+
+FloatArray = npt.NDArray[np.float64]
+
+WINDOW = 5
+"""Cycles over which the change per cycle is taken, fewer near the end of a run."""
+
+STATED_CHANGE = 0.002
+"""Settled means: no figure is shown to change by more than this share of the signal's range a cycle."""
+
+FEWEST_AFTER = 3
+"""A run is settled only where at least so many cycles show it."""
+
+RISK = 0.01
+"""Risk, per figure and window, of taking noise for a change."""
+
+
+def settled_from(series: FloatArray, scale: float, change: float = STATED_CHANGE) -> int | None:
+    """Return the index of the first settled cycle, or ``None`` where the run does not settle.
+
+    Parameters
+    ----------
+    series
+        Shape (cycles, figures): figures of every whole cycle in order (width, zero and peak signal), in
+        signal units; rows with NaN are passed over.
+    scale
+        Range of the signal in a cycle, in the same units.
+    change
+        Largest change per cycle that counts as settled, as a share of *scale*.
+
+    Notes
+    -----
+    The change per cycle at cycle n is the slope of a straight line through cycle n and the ones after it, up
+    to :data:`WINDOW`. A run is settled from the first cycle from which on no slope exceeds *change*
+    beyond its own noise (one-sided, :data:`RISK`); the noise is taken from the second differences of
+    the later half, which a steady change does not enter.
+    """
+    known = np.flatnonzero(np.all(np.isfinite(series), axis=1))
+    if len(known) < FEWEST_AFTER or not scale > 0:
+        return None
+    values = series[known] / scale
+    noise = cycle_noise(values)
+    degrees = max(len(values) // 2 - 1, 1)
+    last = len(values) - FEWEST_AFTER
+    moving = [np.any(_exceeds(values[n : n + WINDOW], noise, degrees, change)) for n in range(last + 1)]
+    after = int(np.flatnonzero(moving)[-1]) + 1 if any(moving) else 0
+    return int(known[after]) if after <= last else None
+
+
+def cycle_noise(values: FloatArray) -> FloatArray:
+    """Return the standard deviation from cycle to cycle of each column of *values* (cycles, figures)."""
+    late = values[max(len(values) // 2 - 1, 0) :]
+    late = late if len(late) >= 3 else values
+    second = np.diff(late, n=2, axis=0)
+    return np.asarray(np.sqrt(np.mean(second**2, axis=0) / 6.0))
+
+
+def _exceeds(window: FloatArray, noise: FloatArray, degrees: int, change: float) -> npt.NDArray[np.bool_]:
+    """Whether the slope of each column is above *change* beyond noise."""
+    place = np.arange(len(window)) - (len(window) - 1) / 2.0
+    square = float(np.sum(place**2))
+    slope = np.abs(place @ window) / square
+    error = noise / np.sqrt(square)
+    return np.asarray(slope - float(stats.t.ppf(1.0 - RISK, degrees)) * error > change)

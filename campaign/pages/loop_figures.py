@@ -1,0 +1,179 @@
+"""Loops as curves: the figure of one sensor at a time, and the scripts that hand it every other sensor."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+
+import orjson
+import pandas as pd
+
+from campaign.analyses.hysteresis import Hysteresis, SensorCurve
+from campaign.pages import numbers, palette, slugs
+from campaign.pages.drawing import ready
+from campaign.pages.figures import Figure, Trace, axis, layout, line, plain
+from campaign.recordings.recording import ReferenceQuantity
+
+MOST_RUNS = 3
+"""Runs of one sensor at one rate whose loops are drawn."""
+
+DASHES = ("solid", "dash", "dot", "dashdot", "longdash")
+"""How rates are told apart, the slowest first."""
+
+SETTLED_COLOURS = palette.RAMP[4:]
+"""Colours of cycles in order; the first cycle stands out by a colour of its own."""
+
+WORDS = {"strain": "Strain", "elongation": "Elongation", "length": "Length"}
+"""What an axis of the reference is called."""
+
+
+def rate_unit(reference: ReferenceQuantity) -> str:
+    """Return the unit that rates are shown in."""
+    return "%/s" if reference.name == "strain" else "mm/s"
+
+
+def rate_words(rate: float, reference: ReferenceQuantity) -> str:
+    """Return a rate as a reader sees it; 'rate not recorded' where there was no time."""
+    return numbers.significant(
+        rate * reference.shown_factor, 2, rate_unit(reference), missing="rate not recorded"
+    )
+
+
+def outlines_of(hysteresis: Hysteresis, module: str, sensor: str) -> list[SensorCurve]:
+    """Return the loops of a sensor that are drawn: of each rate the first runs."""
+    own = [c for c in hysteresis.outlines if (c.module, c.sensor) == (module, sensor)]
+    runs: dict[float, list[str]] = {}
+    for curve in own:
+        known = runs.setdefault(_key(curve.rate_per_s), [])
+        if curve.trial not in known:
+            known.append(curve.trial)
+    return [c for c in own if c.trial in runs[_key(c.rate_per_s)][:MOST_RUNS]]
+
+
+def _key(rate: float) -> float:
+    return rate if math.isfinite(rate) else -1.0
+
+
+def loop_traces(curves: Sequence[SensorCurve], reference: ReferenceQuantity) -> list[Trace]:
+    """Return one line a loop; its meta says whose it is, its rate and its cycle."""
+    rates = sorted({_key(c.rate_per_s) for c in curves})
+    cycles = sorted({c.cycle for c in curves})
+    return [
+        _trace(c, reference, DASHES[rates.index(_key(c.rate_per_s)) % len(DASHES)], cycles) for c in curves
+    ]
+
+
+def _trace(curve: SensorCurve, reference: ReferenceQuantity, dash: str, cycles: Sequence[int]) -> Trace:
+    first = curve.cycle == cycles[0] and len(cycles) > 1
+    place = cycles.index(curve.cycle) / max(len(cycles) - 1, 1)
+    colour = palette.ATTENTION if first else SETTLED_COLOURS[round(place * (len(SETTLED_COLOURS) - 1))]
+    rate = rate_words(curve.rate_per_s, reference)
+    words = f"{curve.module} {curve.sensor}, cycle {curve.cycle} of run {curve.repetition}, {rate}"
+    trace = line(
+        curve.x * reference.shown_factor,
+        curve.signal,
+        name=f"cycle {curve.cycle}, {rate}",
+        colour=colour,
+        dash=dash,
+        width=1.6 if first else 1.2,
+        hovertext=plain(words + (", settled" if curve.settled else "")),
+        hoverinfo="text",
+    )
+    meta = {"module": curve.module, "sensor": curve.sensor, "rate": rate, "cycle": curve.cycle}
+    return trace | {"meta": meta}
+
+
+def first_and_last(curves: Sequence[SensorCurve]) -> list[SensorCurve]:
+    """Return, of every run, the first cycle, the first settled one and the last."""
+    kept: list[SensorCurve] = []
+    for trial in dict.fromkeys(c.trial for c in curves):
+        own = [c for c in curves if c.trial == trial]
+        settled = [c for c in own if c.settled]
+        kept += [c for c in own if c in (own[0], own[-1], *settled[:1])]
+    return kept
+
+
+def loops_figure(
+    hysteresis: Hysteresis, module: str, sensor: str, caption: str, *, note: str = ""
+) -> Figure | None:
+    """Return the loops of one sensor, ``None`` where none is drawn."""
+    curves = first_and_last(outlines_of(hysteresis, module, sensor))
+    if not curves:
+        return None
+    reference = hysteresis.reference
+    rows = hysteresis.sensors
+    own = rows[(rows["module"] == module) & (rows["sensor"] == sensor)]
+    unit = str(own["unit"].iloc[0]) if len(own) else ""
+    return Figure(
+        name="loops",
+        caption=caption,
+        alternative=f"Closed curves of signal against {WORDS[reference.name].lower()}, one a cycle: the "
+        "first cycle of each run, the first settled one and the last.",
+        traces=tuple(loop_traces(curves, reference)),
+        layout=layout(
+            axis(WORDS[reference.name], reference.shown_unit), axis("Signal", unit), hovermode="closest"
+        ),
+        data=outline_table(curves),
+        note=note,
+        height=460,
+    )
+
+
+def outline_table(curves: Sequence[SensorCurve]) -> pd.DataFrame:
+    """Return the points of outlines as rows: what is drawn, thinned with the extremes of both axes kept."""
+    parts = [
+        pd.DataFrame(
+            {
+                "module": c.module,
+                "sensor": c.sensor,
+                "repetition": c.repetition,
+                "trial": c.trial,
+                "rate_per_s": c.rate_per_s,
+                "cycle": c.cycle,
+                "settled": c.settled,
+                "strain": c.x,
+                "signal": c.signal,
+            }
+        )
+        for c in curves
+    ]
+    return pd.concat(parts, ignore_index=True)
+
+
+def loop_script_address(module: str, sensor: str) -> str:
+    """Return the address of the script with all drawn loops of a sensor."""
+    return f"data/loops-{slugs.sensor_slug(module, sensor)}.js"
+
+
+def loop_scripts(hysteresis: Hysteresis | None) -> dict[str, bytes]:
+    """Return a classic script a sensor that hands page 5 its loops, by address."""
+    if hysteresis is None:
+        return {}
+    made: dict[str, bytes] = {}
+    for module, sensor in sensors_drawn(hysteresis):
+        curves = outlines_of(hysteresis, module, sensor)
+        figure = Figure(
+            name="loops",
+            caption="",
+            alternative="",
+            traces=tuple(loop_traces(curves, hysteresis.reference)),
+            layout=layout(axis(""), axis("")),
+        )
+        drawn = ready(figure)
+        content = {
+            "traces": drawn.traces,
+            "ranges": {name: drawn.layout[name]["range"] for name in ("xaxis", "yaxis")},
+            "rates": list(dict.fromkeys(t["meta"]["rate"] for t in drawn.traces)),
+            "cycles": sorted({t["meta"]["cycle"] for t in drawn.traces}),
+        }
+        key = orjson.dumps(loop_script_address(module, sensor))
+        packed = orjson.dumps(content, option=orjson.OPT_SERIALIZE_NUMPY | orjson.OPT_SORT_KEYS)
+        made[loop_script_address(module, sensor)] = (
+            b"(window.campaignLoops = window.campaignLoops || {})[" + key + b"] = " + packed + b";\n"
+        )
+    return made
+
+
+def sensors_drawn(hysteresis: Hysteresis) -> list[tuple[str, str]]:
+    """Return (module, sensor) of all sensors with loops to draw, in order."""
+    return list(dict.fromkeys((c.module, c.sensor) for c in hysteresis.outlines))
