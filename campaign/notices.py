@@ -189,7 +189,7 @@ NOTICE_CODES: dict[str, str] = {
     # Loops and endurance
     "no-cycles": "a cyclic trial goes up and comes back nowhere: it gives no loops",
     "too-few-cycles": "a cyclic trial has fewer than three whole cycles: nothing is said about settling",
-    "loops-not-settled": "the loops of a trial still change at its end; its last cycles stand for the settled",
+    "loops-not-settled": "the loops of a trial still change at its end; its last cycles stand in",
     "cycles-unequal": "cycles that are smaller than the others of their trial, or lack samples",
     "gap-in-cycles": "a branch of a cycle has no samples over part of its length",
     "rate-unknown": "a cyclic trial has no usable time",
