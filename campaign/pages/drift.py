@@ -153,7 +153,7 @@ def holds_table(holds: pd.DataFrame, reference: ReferenceQuantity, name: str = "
             _changes("change_1h", "1 h", unit, none),
             Column("percent_fso_per_decade", "a decade", unit, interval=("low", "high"), missing="too short"),
         ),
-        shown_rows=20,
+        shown_rows=15,
         source="holds",
         note="Brackets: 95 % limits of this one hold. They know its noise, not what another hold would give.",
     )
@@ -176,7 +176,7 @@ def settling_table(holds: pd.DataFrame, reference: ReferenceQuantity, name: str 
             Column("forms_shown", "Forms", kind="text"),
             Column("_settles", f"Settles to ±{band}", kind="text"),
         ),
-        shown_rows=20,
+        shown_rows=15,
         source="holds",
         note="Here time counts from the beginning of the ramp; the table before counts from its end. Where "
         "the two slopes differ the ramp still shows.",
@@ -252,7 +252,7 @@ def _forms_table(drift: Drift) -> Table:
             Column("shape", "Shape, times in s", kind="text"),
             Column("residual_sd", "Whitened residual SD", digits=2),
         ),
-        shown_rows=24,
+        shown_rows=12,
         source="hold_forms",
         note="Smaller is better; within two units forms are not told apart.",
     )
@@ -295,7 +295,7 @@ def _zero_table(drift: Drift) -> Table:
                 interval=("departure_low", "departure_high"),
             ),
         ),
-        shown_rows=24,
+        shown_rows=12,
         note="Limits come from the scatter of runs about their session, pooled over the generation.",
     )
 

@@ -30,7 +30,7 @@ from campaign.pages.sensor_axis import interval_traces, sensor_axis
 from campaign.pages.thinning import thinned
 from campaign.recordings.recording import ReferenceQuantity
 
-MOST_LINE_POINTS = 1500
+MOST_LINE_POINTS = 800
 """Points of the figure of all holds: each carries its sentence and its link, and a page stays light."""
 MOST_CURVES = 400
 """Curves of a figure of all holds; beyond it those that change most."""
@@ -188,7 +188,6 @@ def hold_figure(curve: HoldCurve, reference: ReferenceQuantity, name: str, heigh
                 dash=dash,
                 width=1.6,
                 name=form,
-                text=[f"{form}, after {time_words(t)}" for t in curve.form_times_s],
             )
         )
     return Figure(

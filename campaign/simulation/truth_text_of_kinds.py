@@ -37,9 +37,18 @@ def _loop_lines(plan: Plan, cyclic: CyclicPlan, truth: GenerationTruth, unit: st
         f"- both extras fall to 1/e in {own.conditioning_cycles:g} cycles; {100 * own.recovered:g} % of them "
         "are back at the start of each later run",
         f"- the logged signal is {own.delay_s:g} s late",
+        "- a sensor's own bend is straight from level to level: its slope at mid strain, and with it what "
+        f"the delay makes there, has an SD of {_slope_sd(plan, truth):.2g} {unit} per mm/mm about that of "
+        "its line",
         "",
         *_width_table(plan, cyclic, truth, unit),
     ]
+
+
+def _slope_sd(plan: Plan, truth: GenerationTruth) -> float:
+    """SD of the slope over the two steps about a level, by the sensor nonlinearity of its neighbours."""
+    step = float(np.median(np.diff(plan.staircase.levels)))
+    return truth.components.sensor_by_level / (float(np.sqrt(2.0)) * step)
 
 
 def _width_table(plan: Plan, cyclic: CyclicPlan, truth: GenerationTruth, unit: str) -> list[str]:
