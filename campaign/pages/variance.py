@@ -591,8 +591,8 @@ def _side_by_side(table: pd.DataFrame, factor: float) -> pd.DataFrame:
 
 
 def _unbroken(text: str) -> str:
-    """Return *text* so that a cell does not break it into lines."""
-    return text.replace(" ", "\u00a0").replace("-", "\u2011")
+    """Return *text* so that a cell does not break it into lines; a long refusal may break."""
+    return text if text == numbers.NOT_IDENTIFIABLE else text.replace(" ", "\u00a0").replace("-", "\u2011")
 
 
 def _second_words(row: Mapping[Hashable, Any], factor: float) -> str:

@@ -78,6 +78,12 @@
     return words({ reference_name: "length" }, answer);
   }
 
+  /* Five digits, rounded inwards: a signal typed as it stands here is inside the calibration. */
+  function end(value, round) {
+    const unit = Math.pow(10, Math.floor(Math.log10(Math.abs(value) || 1)) - 4);
+    return (round(value / unit) * unit).toPrecision(5);
+  }
+
   function update() {
     const record = given.records.find((r) => r.branch === branch.value) || given.records[0];
     const signal = parseFloat(input.value.trim().replace(",", ".").replace("\u2212", "-"));
@@ -87,7 +93,7 @@
       show(name + "-x", words(record, answer));
       show(name + "-length", lengthWords(record, signal, readings));
     }
-    show("range", record.signal_low.toPrecision(5) + " to " + record.signal_high.toPrecision(5) + "\u202f" + record.unit);
+    show("range", end(record.signal_low, Math.ceil) + " to " + end(record.signal_high, Math.floor) + "\u202f" + record.unit);
   }
 
   place.hidden = false;

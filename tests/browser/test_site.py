@@ -306,6 +306,16 @@ def test_the_calculator_agrees_with_the_record(browser: Chrome, site: Path, shar
             assert abs(value - 100 * wanted) <= 0.51 * 10.0**-decimals
 
 
+def test_the_ends_of_the_range_that_the_calculator_shows_are_inside(browser: Chrome, site: Path) -> None:
+    browser.get(address(site / "sensor-M01-AB.html"))
+    calculator = browser.find_element(By.CSS_SELECTOR, "[data-calculator]")
+    field = calculator.find_element(By.CSS_SELECTOR, "[data-part='signal']")
+    for end in re.findall(r"[\d.]+", calculator.find_element(By.CSS_SELECTOR, "[data-part='range']").text):
+        field.clear()
+        field.send_keys(end)
+        assert "[" in calculator.find_element(By.CSS_SELECTOR, "[data-part='one-x']").text
+
+
 def test_the_calculator_says_when_a_signal_lies_outside(browser: Chrome, site: Path) -> None:
     record = record_of(site)
     browser.get(address(site / "sensor-M01-AB.html"))
