@@ -88,7 +88,7 @@ def _mean(built: LoopModel, fit: NestedModelFit) -> dict[str, object]:
     variance, freedom = satterthwaite(fit, weights)
     centre = float(weights @ fit.coefficients)
     reach = float(stats.t.ppf(0.975, freedom)) * math.sqrt(variance)
-    limits = (centre - reach, centre + reach) if "module" in built.degrees else (math.nan, math.nan)
+    limits = (centre - reach, centre + reach) if built.modules > 1 else (math.nan, math.nan)
     counts = (built.modules, built.sensors, len(fit.model.response))
     row = (built.generation, "stretched", centre, *limits, freedom, *counts)
     return dict(zip(MEAN_COLUMNS[:-1], row, strict=True))

@@ -201,7 +201,7 @@ def _mean(model: LoopModel, fit: NestedModelFit) -> dict[str, object]:
     estimate = float(weights @ fit.coefficients)
     variance, degrees = satterthwaite(fit, weights)
     reach = float(stats.t.ppf(0.975, degrees)) * float(np.sqrt(variance))
-    alone = "module" not in model.degrees
+    alone = model.modules < 2
     return {
         "generation": model.generation,
         "mid_width_percent_fso": estimate,

@@ -142,6 +142,20 @@ def test_the_spread_says_what_one_hold_a_sensor_leaves_together(drift):
     assert mean["strain"] == pytest.approx(0.2, abs=1e-3)
 
 
+def test_one_hold_a_module_still_says_how_modules_scatter(lines, sensors):
+    rng = np.random.default_rng(4)
+    features = {}
+    for row in sensors.drop_duplicates("module").to_dict("records"):
+        who = identity(str(row["module"]), str(row["sensor"]))
+        key, found = hold(replace(who, generation=str(row["generation"])), rng)
+        features[key] = found
+    made = analyse_drift(features, lines, RATED)
+    assert made is not None
+    (mean,) = made.means.to_dict("records")
+    assert mean["modules"] == len(features) == 3
+    assert mean["low"] < mean["percent_fso_per_decade"] < mean["high"]
+
+
 def test_findings_count_and_name(drift, lines):
     limits = judge_limits(RATED, lines, further=[drift.figures])
     (found,) = (f for f in drift_findings(drift, limits) if f.kind == "holds")
