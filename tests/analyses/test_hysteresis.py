@@ -83,17 +83,18 @@ def test_mean_width_and_components_come_back_within_their_intervals_over_a_hundr
     assert min(mean, sensor, run) >= 89
 
 
-def test_a_component_of_zero_has_an_upper_limit() -> None:
-    # many loops with little noise and no spread between modules: the profile begins to rise far from zero
-    rng = np.random.default_rng(2)
-    table = widths_drawn(rng, modules=6, sensors=6)
+@pytest.mark.parametrize(("seed", "modules", "sensors"), [(2, 6, 6), (5, 4, 2)])
+def test_a_component_of_zero_has_an_upper_limit(seed: int, modules: int, sensors: int) -> None:
+    # many loops with little noise and no spread between modules: the profile begins to rise far from zero;
+    # the second campaign is one in which its slow beginning was once taken for the end of all rise
+    table = widths_drawn(np.random.default_rng(seed), modules, sensors)
     rows = table.rows
     means = rows.groupby("module")["width"].transform("mean")
     level = np.repeat((rows["width"] - means + 5.0).to_numpy()[:, np.newaxis], 19, axis=1)
     components, _ = width_components(replace(table, width=level))
     module = components.set_index("component").loc["module"]
     assert module["sd_percent_fso"] == module["low"] == 0.0
-    assert 0.0 < module["high"] < 1.0
+    assert 0.0 < module["high"] < 2.0
 
 
 def test_widths_of_sensors_come_back_within_their_intervals() -> None:
