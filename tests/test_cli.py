@@ -5,6 +5,7 @@ from __future__ import annotations
 import csv
 import os
 import pty
+import re
 import shutil
 import subprocess
 import sys
@@ -395,10 +396,7 @@ def test_each_fault_is_followed_by_its_own_remedy(folder: Path, capsys: pytest.C
     description = folder / "campaign.toml"
     description.write_text(DESCRIPTION + "lisence = 1\nnaem = 2\n")
     assert main(["inspect", str(folder)]) == 2
-    lines = [line.strip() for line in capsys.readouterr().err.splitlines()]
-    first, second = (
-        next(i for i, line in enumerate(lines) if key in line) for key in ("'lisence'", "'naem'")
-    )
-    assert first < second
-    assert lines[first + 1].startswith("to mend:")
-    assert lines[second + 1].startswith("to mend:")
+    said = " ".join(capsys.readouterr().err.split())
+    places = [said.index("'lisence'"), said.index("'naem'")]
+    remedies = [found.start() for found in re.finditer("to mend:", said)]
+    assert places[0] < remedies[0] < places[1] < remedies[1]

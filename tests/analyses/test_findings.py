@@ -114,7 +114,7 @@ def test_kinds_that_nothing_analyses_yet_are_counted_by_file():
     trials = pd.DataFrame(
         {
             "file": ["a.csv", "a.csv", "b.csv", "c.csv"],
-            "kind": ["hold", "hold", "hold", "cyclic"],
+            "kind": ["layout", "layout", "layout", "cyclic"],
             "fate": ["used", "used", "used", "set aside"],
             "generation": "g",
             "batch": "",
@@ -128,7 +128,7 @@ def test_kinds_that_nothing_analyses_yet_are_counted_by_file():
     intake = SimpleNamespace(trials=trials, modules=nothing, sensors=nothing, sessions=nothing)
     description = SimpleNamespace(title="t", simulated=False, first_day="", last_day="")
     scope = describe_scope(description, intake, None)
-    assert scope.not_analysed == (("hold", 2),)
+    assert scope.not_analysed == (("layout", 2),)
     assert scope.x is None
     assert scope.first_day == ""
 
