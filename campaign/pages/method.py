@@ -9,9 +9,15 @@ from pathlib import Path
 import pandas as pd
 
 from campaign import __version__
+from campaign.analyses.drift import Drift
+from campaign.analyses.hold_figures import OF_FULL_SCALE
+from campaign.analyses.hysteresis import Hysteresis
+from campaign.analyses.loop_table import BY_LINE
+from campaign.analyses.pressure import Pressure
 from campaign.analyses.results import CampaignResults
 from campaign.analyses.scope import Scope, Span
 from campaign.pages import numbers
+from campaign.pages.drift_figures import time_words
 from campaign.pages.formulas import rendered_formulas
 from campaign.pages.page import Page
 from campaign.pages.render import templates_folder
@@ -44,6 +50,7 @@ def method_page(results: CampaignResults) -> Page:
             "scope": scope,
             "reference": scope.reference,
             "reference_stated": results.description.length_reference.stated,
+            "kinds": measured_kinds(results),
             **measured_ranges(scope),
         },
         tables=(coverage,) if coverage is not None else (),
@@ -72,6 +79,59 @@ def measured_ranges(scope: Scope) -> dict[str, str]:
         "temperature": _temperatures(scope.temperature_c),
         "runs": _counts(scope.runs),
         "mountings": _counts(scope.mountings),
+    }
+
+
+def measured_kinds(results: CampaignResults) -> dict[str, Mapping[str, str]]:
+    """Return what the text for a paper says of each kind of trial; only of what was measured."""
+    said: dict[str, Mapping[str, str]] = {}
+    if results.calibration is not None:
+        said["staircases"] = {}
+    if results.hysteresis is not None:
+        said["loops"] = _loops_in_words(results.hysteresis)
+    if results.drift is not None and len(results.drift.holds):
+        said["holds"] = _holds_in_words(results.drift)
+    if results.pressure is not None:
+        said["pressure"] = _pressure_in_words(results.pressure)
+    return said
+
+
+def _loops_in_words(hysteresis: Hysteresis) -> dict[str, str]:
+    loops, shown = hysteresis.loops, hysteresis.reference
+    rates = sorted(set(loops["rate_level_per_s"].dropna()))
+    unit = f"{shown.shown_unit}/s"
+    return {
+        "sensors": numbers.count(len(hysteresis.sensors), "sensor"),
+        "one": "yes" if len(hysteresis.sensors) == 1 else "",
+        "runs": numbers.count(loops.groupby(["module", "sensor", "trial"]).ngroups, "run"),
+        "loops": numbers.count(len(loops), "loop"),
+        "rates": " and ".join(numbers.significant(rate * shown.shown_factor, 2, unit) for rate in rates),
+        "several_rates": "yes" if len(rates) > 1 else "",
+        "by_line": "yes" if set(hysteresis.scales) == {BY_LINE} else "",
+    }
+
+
+def _holds_in_words(drift: Drift) -> dict[str, str]:
+    lasted = drift.holds["duration_s"]
+    ends = [time_words(float(end)) for end in (lasted.min(), lasted.max())]
+    return {
+        "holds": numbers.count(len(drift.holds), "hold"),
+        "sensors": numbers.count(drift.holds.groupby(["module", "sensor"]).ngroups, "sensor"),
+        "lasted": ends[0] if ends[0] == ends[1] else f"{ends[0]} to {ends[1]}",
+        "at_rest": "yes" if len(drift.allan) else "",
+        "by_line": "yes" if drift.holds["percent_of"].eq(OF_FULL_SCALE).all() else "",
+        "steady": "yes" if drift.holds["temperature"].eq("steady").any() else "",
+    }
+
+
+def _pressure_in_words(pressure: Pressure) -> dict[str, str]:
+    table = pressure.table
+    low, high = float(table["low_kpa"].min()), float(table["high_kpa"].max())
+    return {
+        "sensors": numbers.count(len(table), "sensor"),
+        "one": "yes" if len(table) == 1 else "",
+        "sweeps": numbers.count(int(table["sweeps"].sum()), "sweep"),
+        "range": numbers.span(low, high, "kPa"),
     }
 
 

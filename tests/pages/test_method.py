@@ -11,10 +11,11 @@ import pytest
 from campaign.analyses.scope import Scope, Span
 from campaign.pages.definitions import DEFINITIONS, definitions_of
 from campaign.pages.formulas import FORMULAS, rendered_formulas
-from campaign.pages.method import coverage_table, measured_ranges, versions
+from campaign.pages.method import coverage_table, measured_ranges, method_page, versions
 from campaign.pages.page import Page, SiteFrame
 from campaign.pages.render import render_site, templates_folder
 from campaign.pages.tables import Column, Table, shown_cells
+from campaign.pipeline import analyse, read_campaign
 from campaign.recordings.recording import STRAIN
 
 TEMPLATES = templates_folder()
@@ -125,6 +126,30 @@ def test_text_for_a_paper_says_nothing_that_was_not_recorded() -> None:
     assert "taken as exact" in paper
     for absent in ("batch", "session", "None", "nan", "°C", "between 2"):
         assert absent not in paper
+
+
+def test_text_for_a_paper_tells_of_the_kinds_that_were_measured_and_of_no_others() -> None:
+    root = Path(__file__).parents[1] / "campaigns" / "real"
+    seals = _paper_of(root / "pneumatic_seals_3bar")
+    # SOURCE.md beside the data: two runs of ten strokes of one seal, time and stroke recorded, one speed
+    assert "1 sensor was cycled in 2 runs (20 loops) at 13" in seals
+    assert "One rate was run" in seals
+    assert "stretched in steps" not in seals
+    assert "Calibration." not in seals
+    assert "Holds." not in seals
+    assert "Pressure." not in seals
+    chamber = _paper_of(root / "pressure_decay")
+    # one log of two and a half minutes, without a temperature
+    assert "1 hold of 1 sensor lasted 2.5 min" in chamber
+    assert "no change is called drift" in chamber
+    assert "Loops." not in chamber
+
+
+def _paper_of(folder: Path) -> str:
+    page = method_page(analyse(read_campaign(folder)))
+    html = render_site(SiteFrame("Real", ()), [page])["method.html"].decode()
+    words = re.sub(r"\s+", " ", re.sub(r"<[^>]+>", "", html)).replace("\u202f", " ").replace("\xa0", " ")
+    return words[words.index("Measurements.") : words.index("Software.")]
 
 
 def test_coverage_table_shows_what_its_file_says(tmp_path: Path) -> None:
