@@ -12,16 +12,16 @@ import pandas as pd
 
 from campaign.analyses.calibration import Calibration, analyse_calibration
 from campaign.analyses.calibration_effort import analyse_calibration_effort
-from campaign.analyses.drift import analyse_drift
+from campaign.analyses.drift import Drift, analyse_drift
 from campaign.analyses.drift_findings import drift_findings
 from campaign.analyses.endurance import analyse_endurance
 from campaign.analyses.findings import collect_findings
-from campaign.analyses.hysteresis import analyse_hysteresis
+from campaign.analyses.hysteresis import Hysteresis, analyse_hysteresis
 from campaign.analyses.influence_findings import influence_findings
 from campaign.analyses.influences import analyse_influences
 from campaign.analyses.limits import judge_limits
 from campaign.analyses.loop_findings import loop_findings
-from campaign.analyses.pressure import analyse_pressure
+from campaign.analyses.pressure import Pressure, analyse_pressure
 from campaign.analyses.residuals import analyse_residuals
 from campaign.analyses.results import CampaignResults
 from campaign.analyses.variance import analyse_variance
@@ -84,16 +84,24 @@ class CampaignRead:
         The same with those that the registers set aside marked as used; ``None`` where there are none.
     features
         What the used trials of every other kind were reduced to, by trial in reading order.
+    features_put_back
+        The same of sound trials that the registers set aside.
     """
 
     intake: Intake
     readings: Readings
     readings_with_put_back: Readings | None
     features: dict[TrialKey, TrialFeatures] = field(default_factory=dict)
+    features_put_back: dict[TrialKey, TrialFeatures] = field(default_factory=dict)
 
     def of_type(self, kept: type[Features]) -> dict[TrialKey, Features]:
         """Return the features of one type, by trial in reading order."""
         return {key: found for key, found in self.features.items() if isinstance(found, kept)}
+
+    def with_put_back(self, kept: type[Features]) -> dict[TrialKey, Features]:
+        """Return the features of one type with those set aside put back; empty where none were."""
+        aside = {key: found for key, found in self.features_put_back.items() if isinstance(found, kept)}
+        return self.of_type(kept) | aside if aside else {}
 
 
 def report(folder: Path, into: Path | None, fail_on_set_aside: bool, progress: Progress | None = None) -> int:
@@ -157,16 +165,15 @@ def read_campaign(folder: Path, output: Path | None = None, progress: Progress |
     """
     intake, features = run_intake(folder, reduce_trial, output, progress, keep_put_back=True)
     staircases = {key: found for key, found in features.items() if isinstance(found, StaircaseFeatures)}
-    others = {
-        key: found
-        for key, found in features.items()
-        if found is not None and key in intake.used and key not in staircases
-    }
+    reduced = {key: found for key, found in features.items() if found is not None and key not in staircases}
+    others = {key: found for key, found in reduced.items() if key in intake.used}
+    aside = {key: found for key, found in reduced.items() if key in intake.put_back}
     notices = [n for k, found in features.items() if found and k in intake.used for n in found.notices]
     sensors_aside = sensors_set_aside(intake)
     readings = _readings(intake, staircases, lambda key: key in intake.used, sensors_aside)
     put_back = _readings(intake, staircases, lambda _: True) if intake.put_back & staircases.keys() else None
-    return CampaignRead(with_notices(intake, [*notices, *readings.notices]), readings, put_back, others)
+    noted = with_notices(intake, [*notices, *readings.notices])
+    return CampaignRead(noted, readings, put_back, others, aside)
 
 
 def reduce_trial(trial: Trial) -> TrialFeatures | None:
@@ -223,6 +230,7 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
     logged = [(f.identity, f.logged) for f in read.of_type(CyclicFeatures).values() if f.logged is not None]
     pressure = analyse_pressure(sweeps, calibration, description, logged)
     influences = analyse_influences(sweeps, calibration, description)
+    back = analyse_put_back(read, put_back or calibration)
     others = [found for found in (hysteresis, drift, pressure) if found is not None]
     readings = read.readings
     if not len(readings.table) and others:
@@ -238,9 +246,9 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         limits,
         put_back,
         further=[
-            *loop_findings(hysteresis, endurance, limits),
-            *drift_findings(drift, limits),
-            *influence_findings(pressure, influences, limits),
+            *loop_findings(hysteresis, endurance, limits, back.hysteresis),
+            *drift_findings(drift, limits, back.drift),
+            *influence_findings(pressure, influences, limits, back.pressure),
         ],
         reference=readings.reference,
     )
@@ -263,6 +271,26 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         drift=drift,
         pressure=pressure,
         influences=influences,
+    )
+
+
+@dataclass(frozen=True)
+class PutBack:
+    """Loops, holds and pressure with all that the registers set aside put back; ``None`` where none was."""
+
+    hysteresis: Hysteresis | None
+    drift: Drift | None
+    pressure: Pressure | None
+
+
+def analyse_put_back(read: CampaignRead, calibration: Calibration | None) -> PutBack:
+    """Analyse once more, by the lines of *calibration*, the kinds of trial of which some were set aside."""
+    description = read.intake.description
+    holds = read.with_put_back(HoldFeatures)
+    return PutBack(
+        analyse_hysteresis(read.with_put_back(CyclicFeatures), calibration),
+        analyse_drift(holds, calibration, description) if holds else None,
+        analyse_pressure(read.with_put_back(SweepFeatures), calibration, description),
     )
 
 

@@ -59,12 +59,15 @@ class ZeroFinding:
 _VERDICTS = ("relaxation", "creep", "drift", "undecided")
 
 
-def drift_findings(drift: Drift | None, limits: Limits) -> tuple[Finding, ...]:
-    """Return what page 0 says of holds and of the zero; nothing where neither was measured."""
+def drift_findings(drift: Drift | None, limits: Limits, put_back: Drift | None = None) -> tuple[Finding, ...]:
+    """Return what page 0 says of holds and of the zero; nothing where neither was measured.
+
+    *put_back* holds the holds with everything that was set aside put back, ``None`` where no holds were.
+    """
     if drift is None:
         return ()
     found: list[Finding] = []
-    holds = _holds(drift, limit_value(limits, "drift_1h"))
+    holds = _holds(drift, limit_value(limits, "drift_1h"), put_back)
     if holds:
         found.append(Finding("holds", holds, verdict_of_limit(limits, "drift_1h"), "drift_1h"))
     zeros = _zeros(drift)
@@ -73,15 +76,15 @@ def drift_findings(drift: Drift | None, limits: Limits) -> tuple[Finding, ...]:
     return tuple(found)
 
 
-def _holds(drift: Drift, limit: float) -> tuple[HoldsFinding, ...]:
+def _holds(drift: Drift, limit: float, put_back: Drift | None) -> tuple[HoldsFinding, ...]:
     facts = []
     for generation, rows in drift.holds.groupby("generation", sort=True):
         by_line = rows[rows["percent_of"] == OF_FULL_SCALE]
         counted = by_line if len(by_line) else rows
         hourly = bool(counted["change_1h_percent_fso"].notna().any())
         column = "change_1h_percent_fso" if hourly else "change_end_percent_fso"
-        values = counted.assign(value=counted[column].abs())
-        largest = values.groupby(["generation", "module", "sensor"]).agg(value=("value", "max")).reset_index()
+        largest = _largest(counted, column)
+        also = None if put_back is None else _largest(_as_counted(put_back.holds, bool(len(by_line))), column)
         judged = limit if hourly and len(by_line) else math.nan
         called = rows["verdict"].value_counts()
         relaxation, creep, drifting, undecided = (int(called.get(name, 0)) for name in _VERDICTS)
@@ -99,9 +102,19 @@ def _holds(drift: Drift, limit: float) -> tuple[HoldsFinding, ...]:
                 int((rows["temperature"] == "not steady").sum()),
                 *slope,
             )
-            for figure in sum_up(largest, judged)
+            for figure in sum_up(largest, judged, also)
         ]
     return tuple(facts)
+
+
+def _as_counted(holds: pd.DataFrame, by_line: bool) -> pd.DataFrame:
+    return holds[holds["percent_of"] == OF_FULL_SCALE] if by_line else holds
+
+
+def _largest(holds: pd.DataFrame, column: str) -> pd.DataFrame:
+    """Each sensor's largest change, sign left out."""
+    values = holds.assign(value=holds[column].abs())
+    return values.groupby(["generation", "module", "sensor"]).agg(value=("value", "max")).reset_index()
 
 
 def _mean_slope(means: pd.DataFrame, generation: str) -> tuple[float, float, float]:

@@ -91,19 +91,31 @@ class CouplingFact:
     relative: float
 
 
-def pressure_facts(pressure: Pressure | None, limits: Limits) -> tuple[PressureFact, ...]:
-    """Return the facts of every generation whose sensors were swept in pressure."""
+def pressure_facts(
+    pressure: Pressure | None, limits: Limits, put_back: Pressure | None = None
+) -> tuple[PressureFact, ...]:
+    """Return the facts of every generation whose sensors were swept in pressure.
+
+    *put_back* holds them with everything that was set aside put back, ``None`` where no sweeps were.
+    """
     if pressure is None:
         return ()
     return tuple(
-        _pressure_fact(str(generation), rows, pressure, limits)
+        _pressure_fact(str(generation), rows, pressure, limits, put_back)
         for generation, rows in pressure.table.groupby("generation", sort=True)
     )
 
 
-def _pressure_fact(generation: str, rows: pd.DataFrame, pressure: Pressure, limits: Limits) -> PressureFact:
-    values = rows[["generation", "module", "sensor"]].assign(value=rows["strain_error_in_use"].abs())
-    summed = sum_up(values, _limit_in_x(pressure, limits))
+def _errors(rows: pd.DataFrame) -> pd.DataFrame:
+    return rows[["generation", "module", "sensor"]].assign(value=rows["strain_error_in_use"].abs())
+
+
+def _pressure_fact(
+    generation: str, rows: pd.DataFrame, pressure: Pressure, limits: Limits, put_back: Pressure | None
+) -> PressureFact:
+    same = put_back is not None and put_back.in_use_kpa == pressure.in_use_kpa
+    also = _errors(put_back.table) if put_back is not None and same else None
+    summed = sum_up(_errors(rows), _limit_in_x(pressure, limits), also)
     components = pressure.spread.components
     own = components[(components["generation"] == generation) & (components["what"] == "error")]
     parts = own.set_index("component")
@@ -198,11 +210,14 @@ def coupling_fact(pressure: Pressure | None) -> CouplingFact | None:
 
 
 def influence_findings(
-    pressure: Pressure | None, influences: Influences | None, limits: Limits
+    pressure: Pressure | None,
+    influences: Influences | None,
+    limits: Limits,
+    put_back: Pressure | None = None,
 ) -> list[Finding]:
     """Return the findings of page 0 on pressure, coupling and the other influences."""
     made: list[Finding] = []
-    facts = pressure_facts(pressure, limits)
+    facts = pressure_facts(pressure, limits, put_back)
     if facts:
         made.append(Finding("pressure", facts, verdict_of_limit(limits, "pressure_error"), "pressure_error"))
     coupled = coupling_fact(pressure)

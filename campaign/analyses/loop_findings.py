@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+
+import pandas as pd
 
 from campaign.analyses.endurance import Endurance
 from campaign.analyses.findings import Finding, SensorFigure, limit_value, sum_up, verdict_of_limit
@@ -49,24 +51,33 @@ class Lasting:
 
 
 def loop_findings(
-    hysteresis: Hysteresis | None, endurance: Endurance | None, limits: Limits
+    hysteresis: Hysteresis | None,
+    endurance: Endurance | None,
+    limits: Limits,
+    put_back: Hysteresis | None = None,
 ) -> tuple[Finding, ...]:
-    """Return what page 0 says of loops and endurance; nothing where neither was measured."""
+    """Return what page 0 says of loops and endurance; nothing where neither was measured.
+
+    *put_back* holds the loops with everything that was set aside put back, ``None`` where no loops were.
+    """
     found: list[Finding] = []
     if hysteresis is not None:
-        facts = _settled_loops(hysteresis, limit_value(limits, "hysteresis"))
+        facts = _settled_loops(hysteresis, limit_value(limits, "hysteresis"), put_back)
         found.append(Finding("loops", facts, verdict_of_limit(limits, "hysteresis"), "hysteresis"))
     if endurance is not None:
         found.append(Finding("endurance", lasting(endurance)))
     return tuple(found)
 
 
-def _settled_loops(hysteresis: Hysteresis, limit: float) -> tuple[SettledLoops, ...]:
-    sensors = hysteresis.sensors.assign(value=hysteresis.sensors["width_percent_fso"])
+def _settled_loops(
+    hysteresis: Hysteresis, limit: float, put_back: Hysteresis | None
+) -> tuple[SettledLoops, ...]:
+    sensors = _with_widths(hysteresis)
     delays = {str(row["generation"]): row for row in hysteresis.rates.delays.to_dict("records")}
     facts = []
-    for figure in sum_up(sensors, limit):
-        own = sensors[sensors["generation"] == figure.generation]
+    for summed in sum_up(sensors, limit, None if put_back is None else _with_widths(put_back)):
+        own = sensors[sensors["generation"] == summed.generation]
+        figure = _of_an_only_sensor(summed, own) if summed.sensors == 1 else summed
         settled = own["settled_from_cycle"].dropna()
         late = delays.get(figure.generation, {"delay_s": math.nan, "low": math.nan, "high": math.nan})
         facts.append(
@@ -84,6 +95,16 @@ def _settled_loops(hysteresis: Hysteresis, limit: float) -> tuple[SettledLoops, 
             )
         )
     return tuple(facts)
+
+
+def _with_widths(hysteresis: Hysteresis) -> pd.DataFrame:
+    return hysteresis.sensors.assign(value=hysteresis.sensors["width_percent_fso"])
+
+
+def _of_an_only_sensor(figure: SensorFigure, own: pd.DataFrame) -> SensorFigure:
+    """Give the figure of an only sensor the interval of that sensor."""
+    known = own.dropna(subset=["value"]).iloc[0]
+    return replace(figure, low=float(known["low"]), high=float(known["high"]))
 
 
 def lasting(endurance: Endurance) -> tuple[Lasting, ...]:

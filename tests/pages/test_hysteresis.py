@@ -6,6 +6,7 @@ import csv
 import io
 import json
 import re
+import shutil
 from collections.abc import Mapping
 from dataclasses import replace
 from pathlib import Path
@@ -17,7 +18,7 @@ import pytest
 
 from campaign.analyses.endurance import analyse_endurance
 from campaign.analyses.hysteresis import LOOP_COLUMNS, analyse_hysteresis
-from campaign.analyses.loop_findings import loop_findings
+from campaign.analyses.loop_findings import SettledLoops, loop_findings
 from campaign.analyses.results import CampaignResults
 from campaign.pages.contract_columns import CONTRACT_COLUMNS
 from campaign.pages.hysteresis import hysteresis_page
@@ -78,6 +79,31 @@ def test_findings_say_how_wide_and_lead_to_the_page(site: dict[str, bytes]) -> N
     assert "Settled loops are" in page
     assert 'href="hysteresis.html"' in page
     assert "not yet analysed" not in page
+
+
+def test_a_run_set_aside_by_the_register_is_put_back_to_compare(tmp_path: Path) -> None:
+    folder = shutil.copytree(REAL / "pneumatic_seals", tmp_path / "seals")
+    whole = analyse(read_campaign(folder)).hysteresis
+    assert whole is not None
+    (folder / "trials.csv").write_text(
+        "file,use,reason\n1_O-ring257_1bar.csv,no,set aside to see it put back\n"
+    )
+    results = analyse(read_campaign(folder))
+    assert results.hysteresis is not None
+    assert set(results.hysteresis.loops["repetition"]) == {3}
+    [facts] = [finding.facts for finding in results.findings.findings if finding.kind == "loops"]
+    [fact] = facts
+    assert isinstance(fact, SettledLoops)
+    assert fact.figure.put_back == whole.sensors["width_percent_fso"].item()
+    assert fact.figure.mean == results.hysteresis.sensors["width_percent_fso"].item()
+    words = re.sub(r"\s+", " ", re.sub(r"<[^>]+>", "", build_site(results)["index.html"].decode("utf-8")))
+    assert "With everything that was set aside put back the mean is" in words
+
+
+def test_loops_that_do_not_settle_are_not_called_settled() -> None:
+    words = build_site(analyse(read_campaign(REAL / "pneumatic_seals_3bar")))["index.html"].decode("utf-8")
+    assert "No run settles, and the last cycles stand in" in words
+    assert "Settled loops are" not in words
 
 
 def test_the_sensor_has_a_section_with_its_loops(site: dict[str, bytes]) -> None:
