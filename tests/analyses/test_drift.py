@@ -165,6 +165,20 @@ def test_findings_count_and_name(drift, lines):
     assert fact.by_line
 
 
+def test_holds_set_aside_are_put_back_to_compare(drift, lines):
+    limits = judge_limits(RATED, lines, further=[drift.figures])
+    worst = drift.holds["change_1h_percent_fso"].abs().idxmax()
+    worst_of = drift.holds.loc[worst, ["module", "sensor"]]
+    own = drift.holds[["module", "sensor"]].eq(worst_of).all(axis=1)
+    without = replace(drift, holds=drift.holds[~own])
+    (alone,), (compared,) = (
+        next(f.facts for f in found if f.kind == "holds")
+        for found in (drift_findings(without, limits), drift_findings(without, limits, drift))
+    )
+    assert np.isnan(alone.figure.put_back)
+    assert compared.figure.put_back > compared.figure.mean == alone.figure.mean
+
+
 # ---------------------------------------------------------------- without a line
 
 

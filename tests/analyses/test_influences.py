@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 import pandas as pd
@@ -239,6 +240,17 @@ def test_a_limit_in_another_unit_is_not_judged_without_a_line():
     found = analyse_pressure(campaign(np.random.default_rng(9), modules=1, sensors=1), None, percent)
     assert found.figures.empty
     assert judge_limits(percent, None, [found.figures]).not_judged == ("pressure_error",)
+
+
+def test_sensors_set_aside_are_put_back_to_compare():
+    found = analyse_pressure(campaign(np.random.default_rng(8), modules=3, sensors=2), None, IN_USE)
+    limits = judge_limits(IN_USE, None, [found.figures])
+    errors = found.table["strain_error_in_use"].abs()
+    without = replace(found, table=found.table.drop(errors.idxmax()))
+    (alone,) = pressure_facts(without, limits)
+    (compared,) = pressure_facts(without, limits, found)
+    assert np.isnan(alone.figure.put_back)
+    assert compared.figure.put_back > compared.figure.mean == alone.figure.mean
 
 
 def test_a_correction_takes_pressure_out_of_another_trial():
