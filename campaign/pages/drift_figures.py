@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -172,12 +173,18 @@ def _holds_caption(drift: Drift) -> str:
     )
 
 
-def hold_figure(curve: HoldCurve, reference: ReferenceQuantity, name: str, height: int = 340) -> Figure:
-    """Return one hold in full: its envelope, its mean and the forms within two units of the best."""
+def hold_figure(
+    curve: HoldCurve, reference: ReferenceQuantity, name: str, height: int = 340, most: int = 500
+) -> Figure:
+    """Return one hold in full: its envelope, its mean and the forms within two units of the best.
+
+    *most* is how many stretches of time are drawn at most; neighbours go together, and no extreme is lost.
+    """
     unit = percent_unit(curve.percent_of)
+    drawn = fewer_stretches(curve, most)
     traces: list[Trace] = [
-        band(curve.times_s, curve.low, curve.high, colour=palette.RAMP[4], opacity=0.35),
-        line(curve.times_s, curve.mean, colour=palette.RAMP[7], width=1.3, text=_said(curve, unit)),
+        band(drawn.times_s, drawn.low, drawn.high, colour=palette.RAMP[4], opacity=0.35),
+        line(drawn.times_s, drawn.mean, colour=palette.RAMP[7], width=1.3, text=_said(drawn, unit)),
     ]
     for dash, (form, values) in zip(FORM_DASHES, curve.forms, strict=False):
         traces.append(
@@ -206,6 +213,25 @@ def hold_figure(curve: HoldCurve, reference: ReferenceQuantity, name: str, heigh
         note="The band reaches from the lowest to the highest sample of every stretch of time: no spike is "
         "lost, and the CSV holds every sample. Forms are drawn over the data they were fitted to.",
         height=height,
+    )
+
+
+def fewer_stretches(curve: HoldCurve, most: int) -> HoldCurve:
+    """Return *curve* with neighbouring stretches of time put together until there are at most *most*.
+
+    The lowest and highest of a group stay; its time and mean are the means of its members.
+    """
+    together = -(-len(curve.times_s) // most)
+    if together <= 1:
+        return curve
+    first = np.arange(0, len(curve.times_s), together)
+    members = np.diff(np.append(first, len(curve.times_s)))
+    return replace(
+        curve,
+        times_s=np.exp(np.add.reduceat(np.log(curve.times_s), first) / members),
+        low=np.minimum.reduceat(curve.low, first),
+        high=np.maximum.reduceat(curve.high, first),
+        mean=np.add.reduceat(curve.mean, first) / members,
     )
 
 

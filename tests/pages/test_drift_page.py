@@ -16,7 +16,7 @@ import pytest
 from campaign.analyses.results import CampaignResults
 from campaign.pages.drawing import ready
 from campaign.pages.drift import drift_page, largest_hold
-from campaign.pages.drift_figures import hold_figure, time_words
+from campaign.pages.drift_figures import fewer_stretches, hold_figure, time_words
 from campaign.pages.figures import line_point_count
 from campaign.pages.page import Page
 from campaign.pages.site import build_site
@@ -82,6 +82,17 @@ def test_a_long_hold_is_drawn_well_under_a_second_with_its_spike(results):
     assert len(mean["x"]) < 600
     assert max(envelope["y"]) - max(mean["y"]) > 0.5
     assert curve.high.max() > 1.0
+
+
+@pytest.mark.parametrize("most", [1, 7, 60, 10_000])
+def test_fewer_stretches_keep_the_extremes(results, most):
+    curve = max(results.drift.curves, key=lambda c: len(c.times_s))
+    drawn = fewer_stretches(curve, most)
+    assert len(drawn.times_s) <= most
+    assert len(drawn.times_s) == len(drawn.low) == len(drawn.mean)
+    assert (drawn.low.min(), drawn.high.max()) == (curve.low.min(), curve.high.max())
+    assert (np.diff(drawn.times_s) > 0).all()
+    assert curve.times_s[0] <= drawn.times_s[0] <= drawn.times_s[-1] <= curve.times_s[-1]
 
 
 def test_page_and_sensor_page_say_what_was_found(site, results):
