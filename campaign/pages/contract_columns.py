@@ -29,6 +29,7 @@ CONTRACT_COLUMNS: dict[str, tuple[str, ...]] = {
         "calibration_effort": "generation effort strain_sd_predicted strain_sd_left_out "
         "strain_expanded factor",
         "effects": "generation level module sensor term estimate low high unit",
+        "limits": "limit value unit subject estimate expanded_uncertainty verdict probability",
     }.items()
 }
 """Columns of each promised table, in order."""
@@ -123,6 +124,16 @@ _MEANINGS: dict[str, str] = {
     "strain_sd_left_out": "standard deviation found on what was left out",
     "strain_expanded": "expanded uncertainty, 95 %",
     "factor": "SD divided by that of a sensor's own line",
+    "limit": "which figure is limited",
+    "value": "the limit",
+    "subject": "a sensor, or a new sensor of a generation",
+    "expanded_uncertainty": "half the 95 % interval of the estimate",
+    "verdict": "met, not met or not decided",
+    "probability": "probability that the limit is kept",
+    "ratio": "ratio of the two",
+    "differs": "whether the interval of the ratio excludes 1",
+    "first_settled_run": "first run since mounting that enters the components",
+    "left_out_by": "what was left out in turn",
     "code": "name of the kind of notice",
     "weight": "stops, set aside or noted",
     "line": "line of the file, from 1",
