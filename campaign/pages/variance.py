@@ -518,7 +518,7 @@ def _precision_and_tests(variance: Variance, generation: Column, factor: float, 
         )
     yield Table(
         "identifiability",
-        "What the design can tell apart, counted before fitting.",
+        "What the design can tell apart, by counting its degrees of freedom.",
         _with_words(variance.identifiability),
         (
             generation,
