@@ -371,10 +371,10 @@ def _fit_all(
 def _limits_at(model: VarianceModel, what: str) -> tuple[str, ...]:
     """Where limits are found: everywhere for a generation's signal, at mid range for all pooled.
 
-    Ratios are there to be looked at beside the signal, without limits: these cost more than the fits.
+    Ratios stand beside the signal at mid range, generation by generation: limits cost more than the fits.
     """
     if what != SIGNAL:
-        return ()
+        return () if model.generation == "all" else ("mid",)
     return ("mid",) if model.generation == "all" else (*PLACES, "intercept", "slope")
 
 

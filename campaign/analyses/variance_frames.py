@@ -379,7 +379,8 @@ def _ladder_row(model: VarianceModel, component: Component, fit: GenerationFit |
 
 
 def _final_label(fit: GenerationFit, component: Component) -> str:
-    if not component.enters or not fit.by_profile:
+    """The design's label, but for an estimate that is stated and whose lower limit is zero."""
+    if not component.enters or not fit.by_profile or is_withheld(component):
         return component.label
     _, low, high = fit.variance_at(component.name, "mid").root
     return ZERO if low <= 1e-9 * high else component.label

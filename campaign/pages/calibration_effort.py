@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 
 import numpy as np
 import pandas as pd
@@ -82,7 +82,7 @@ def calibration_effort_page(results: CampaignResults) -> Page | None:
             "left_out_words": _left_out_words(effort),
         },
         figures=(effort_figure(effort, calibration.reference),),
-        tables=(effort_table(effort, calibration.reference),),
+        tables=tuple(_tables(effort, calibration.reference)),
         description="The error of a strain reading against the effort spent on calibrating.",
     )
 
@@ -97,7 +97,8 @@ def _disagreeing(effort: CalibrationEffort) -> list[dict[str, str]]:
 def _left_out_words(effort: CalibrationEffort) -> list[str]:
     if "left_out_by" not in effort.table:
         return []
-    return sorted({str(v) for v in effort.table["left_out_by"].dropna() if str(v)})
+    found = {str(v) for v in effort.table["left_out_by"].dropna() if str(v)}
+    return [words for name, words in LEFT_OUT_WORDS.items() if name in found]
 
 
 def effort_figure(effort: CalibrationEffort, reference: ReferenceQuantity) -> Figure:
@@ -226,6 +227,50 @@ def _effort_caption(table: pd.DataFrame, generations: tuple[str, ...]) -> str:
 
 
 _OWN = ("sensor", "rezero_additive", "rezero_ratio")
+
+
+def _tables(effort: CalibrationEffort, reference: ReferenceQuantity) -> Iterable[Table]:
+    yield effort_table(effort, reference)
+    if len(effort.left_out):
+        yield left_out_table(effort, reference)
+
+
+def left_out_table(effort: CalibrationEffort, reference: ReferenceQuantity) -> Table:
+    """Return every way of leaving out that the design allows, beside the same predicted by the model."""
+    factor, unit = reference.shown_factor, reference.shown_unit
+    table = effort.left_out.sort_values("generation", kind="stable").reset_index(drop=True)
+    known = effort.table.set_index(["generation", "effort"])["left_out_by"].to_dict()
+    pairs = zip(table["generation"], table["effort"], table["left_out_by"], strict=True)
+    chosen = ["yes" if known.get((g, e)) == by else "" for g, e, by in pairs]
+    words = [LEFT_OUT_WORDS.get(str(by), str(by)) for by in table["left_out_by"]]
+    return Table(
+        name="calibration_effort_left_out",
+        caption="The same efforts with everything left out in turn that the design allows.",
+        frame=table.assign(
+            _effort=[effort_words(str(e)) for e in table["effort"]], _by=words, _chosen=chosen
+        ),
+        columns=(
+            Column("generation", "Generation", kind="text"),
+            Column("_effort", "Calibrated", kind="text"),
+            Column("_by", "Left out in turn", kind="text"),
+            Column("strain_sd_predicted", "SD predicted", unit, factor=factor, digits=2),
+            Column("strain_sd_left_out", "left out", unit, factor=factor, digits=2, missing="–"),
+            Column("ratio", "Ratio", digits=2, missing="–"),
+            Column("_chosen", "In table 4.1", kind="text"),
+        ),
+        note="Leaving out runs alone keeps the mounting: that error is the smaller one, and does not hold "
+        "for a sensor that is mounted anew.",
+    )
+
+
+LEFT_OUT_WORDS: Mapping[str, str] = {
+    "batch": "batches",
+    "module": "modules",
+    "sensor": "sensors",
+    "session": "mountings",
+    "repetition": "runs",
+}
+"""What is left out in turn, as pages call it."""
 
 
 def effort_table(effort: CalibrationEffort, reference: ReferenceQuantity) -> Table:

@@ -32,6 +32,8 @@ DEFINITIONS: dict[str, tuple[str, str]] = {
     "labels": ("identifiability", "label degrees_of_freedom"),
     "REML and its check": ("restricted-likelihood", "criterion smallest_cone_eigenvalue"),
     "kinds of precision": ("precision", "figure"),
+    "new sensors": ("new-sensor", "expanded"),
+    "settled runs": ("run-number", "first_settled_run"),
     "tests of components": ("component-tests", "statistic p_adjusted"),
     "calibration effort": (
         "calibration-effort",

@@ -8,11 +8,11 @@ from campaign.analyses.findings import AVERAGED
 from campaign.analyses.limits import Limits
 from campaign.analyses.results import CampaignResults
 from campaign.pages.calibration_effort import effort_sentence
+from campaign.pages.component_words import level_words
 from campaign.pages.page import Page
 from campaign.pages.sensor import limits_as_shown
 from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
-from campaign.pages.variance import level_words
 from campaign.recordings.recording import ReferenceQuantity
 
 VERDICT_WORDS: Mapping[str, str] = {

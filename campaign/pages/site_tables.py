@@ -21,6 +21,9 @@ CAPTIONS: dict[str, str] = {
     "fixed_effects": "Mean intercept and slope of every generation.",
     "variance_components": "Components of variance with their intervals.",
     "variance_in_strain": "Components as equivalent strain at zero, mid and full scale.",
+    "ratio_variance_in_strain": "The same for the signal divided by the mounting’s zero signal; "
+    "its shares are not to be compared with those of the signal.",
+    "ratio_zero_noise": "What the noise of the zero signal adds to every ratio of its mounting.",
     "effects": "Predicted effects of modules and sensors.",
     "identifiability": "What the design can tell apart.",
     "precision": "Repeatability, intermediate precision and spread between sensors and modules.",
@@ -77,6 +80,8 @@ def _frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
             "effects",
             "identifiability",
             "precision",
+            "ratio_variance_in_strain",
+            "ratio_zero_noise",
         ):
             frames[name] = getattr(variance, name)
         frames |= {"component_tests": variance.tests, "fit_certificates": variance.certificate}

@@ -12,6 +12,7 @@ from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from typing import Any, Literal
 
+import numpy as np
 import orjson
 import pandas as pd
 
@@ -134,8 +135,17 @@ def csv_bytes(frame: pd.DataFrame, name: str = "") -> bytes:
     KeyError
         Where a column of the contract is missing.
     """
-    exported = exported_frame(frame, name)
+    exported = _with_infinities_named(exported_frame(frame, name))
     return exported.to_csv(index=False, lineterminator="\n", encoding="utf-8").encode("utf-8")
+
+
+def _with_infinities_named(frame: pd.DataFrame) -> pd.DataFrame:
+    """Return *frame* with infinite numbers as a Table Schema spells them: INF and -INF."""
+    named = frame.copy()
+    for column in frame.columns:
+        if pd.api.types.is_float_dtype(frame[column]) and np.isinf(frame[column].to_numpy(float)).any():
+            named[column] = frame[column].astype(object).replace({np.inf: "INF", -np.inf: "-INF"})
+    return named
 
 
 def exported_frame(frame: pd.DataFrame, name: str = "") -> pd.DataFrame:

@@ -11,6 +11,7 @@ import pandas as pd
 from campaign.analyses.results import CampaignResults
 from campaign.analyses.variance import Variance
 from campaign.pages import numbers, palette, slugs
+from campaign.pages.component_words import level_words, sd_words
 from campaign.pages.figures import (
     Figure,
     Layout,
@@ -27,6 +28,7 @@ from campaign.pages.figures import (
 )
 from campaign.pages.page import Page
 from campaign.pages.tables import Column, Table
+from campaign.pages.variance_tables import tables_beside_components
 from campaign.recordings.recording import ReferenceQuantity
 
 LEVELS = (
@@ -35,31 +37,12 @@ LEVELS = (
 )
 """Levels of nesting in the order in which figures show them."""
 
-_WORDS: Mapping[str, str] = {
-    "batch": "batches",
-    "module": "modules",
-    "mounting": "mountings",
-    "run": "runs",
-    "run shared by the sensors of a module": "runs that a module’s sensors share",
-    "sensor": "sensors of a module",
-    "session": "mountings",
-    "sensor × session": "a sensor’s own part of a mounting",
-    "repetition": "runs",
-    "sensor × run": "a sensor’s own part of a run",
-    "sensor × level": "a sensor’s own shape",
-    "sensor_by_level": "a sensor’s own shape",
-    "sensor × direction": "a sensor’s own loop",
-    "sensor_by_direction": "a sensor’s own loop",
-    "residual": "readings of a run",
-    "total": "all together",
-}
-"""What each component is called on pages."""
-
 TERM_WORDS: Mapping[str, str] = {"strain at mid": "signal at mid range, as strain"}
 """What terms of effects are called where their name does not say it."""
 
 TABLES = (
-    *("components_in_strain", "precision", "identifiability", "variance_components", "component_tests"),
+    *("components_in_strain", "component_ratios", "precision", "new_sensor", "ratio_components"),
+    *("identifiability", "run_numbers", "variance_components", "component_tests"),
     *("fixed_effects", "fit_certificates"),
 )
 """Tables in the order in which the page has them, and so their numbers."""
@@ -77,11 +60,6 @@ COVARIATE_UNITS: Mapping[str, str] = {
 
 PLACES: Mapping[str, str] = {"zero": "at zero", "mid": "at mid range", "full": "at full scale"}
 """Places of the range, in order."""
-
-
-def level_words(called: str) -> str:
-    """Return what a component is called on pages: ``modules and mountings`` for ``module + mounting``."""
-    return " and ".join(_WORDS.get(part, part.replace("_", " ")) for part in called.split(" + "))
 
 
 def variance_page(results: CampaignResults) -> Page | None:
@@ -109,11 +87,23 @@ def variance_page(results: CampaignResults) -> Page | None:
             "covariate_units": COVARIATE_UNITS,
             "largest_difference": float(variance.certificate["difference"].abs().max()),
             "generations": generations_of(variance.variance_in_strain),
+            "zero_noise": _zero_noise(variance),
         },
         figures=tuple(figure for figure in figures if figure is not None),
-        tables=tuple(sorted(_tables(variance), key=lambda table: TABLES.index(table.name))),
+        tables=tuple(
+            sorted(
+                (*_tables(variance), *tables_beside_components(variance)),
+                key=lambda table: TABLES.index(table.name),
+            )
+        ),
         description="How much of the spread lies between batches, modules, sensors, mountings and runs.",
     )
+
+
+def _zero_noise(variance: Variance) -> list[dict[Hashable, Any]]:
+    """The noise of the zero signals in strain, generation by generation."""
+    noise = variance.ratio_zero_noise
+    return noise[noise["generation"].isin(generations_of(noise))].to_dict("records")
 
 
 def generations_of(frame: pd.DataFrame) -> tuple[str, ...]:
@@ -227,17 +217,7 @@ def _component_traces(
 
 
 def _component_sentence(row: Mapping[Hashable, Any], factor: float, unit: str) -> str:
-    return f"{row['generation']}, {level_words(str(row['called']))}: {_sd_words(row, factor, unit)}"
-
-
-def _sd_words(row: Mapping[Hashable, Any], factor: float, unit: str = "") -> str:
-    """An SD with its interval; its upper limit alone where the design gives no more."""
-    estimate, low, high = (float(row[key]) * factor for key in ("strain_sd", "low", "high"))
-    if math.isnan(estimate) and math.isfinite(high):
-        return f"at most {numbers.significant(high, 2, unit)}"
-    if math.isfinite(estimate) and not (math.isfinite(low) and math.isfinite(high)):
-        return f"{numbers.significant(estimate, 2, unit)} (interval withheld)"
-    return numbers.interval(estimate, low, high, unit)
+    return f"{row['generation']}, {level_words(str(row['called']))}: {sd_words(row, factor, unit)}"
 
 
 def _generation_key(generations: tuple[str, ...], panels: int) -> list[Layout]:
@@ -270,7 +250,7 @@ def _components_caption(table: pd.DataFrame, reference: ReferenceQuantity) -> st
     parts = []
     for generation, rows in mid.groupby("generation", sort=True):
         top = rows.iloc[int(rows["strain_sd"].to_numpy(float).argmax())]
-        value = _sd_words(top.to_dict(), reference.shown_factor, reference.shown_unit)
+        value = sd_words(top.to_dict(), reference.shown_factor, reference.shown_unit)
         parts.append(f"{generation}: {level_words(str(top['called']))} with {value}")
     return f"The largest component at mid range. {'; '.join(parts)}."
 
@@ -538,7 +518,7 @@ def _precision_and_tests(variance: Variance, generation: Column, factor: float, 
         )
     yield Table(
         "identifiability",
-        "What the design can tell apart, counted before fitting.",
+        "What the design can tell apart, by counting its degrees of freedom.",
         _with_words(variance.identifiability),
         (
             generation,
@@ -575,7 +555,7 @@ def _side_by_side(table: pd.DataFrame, factor: float) -> pd.DataFrame:
         shown = rows[rows["place"] == "mid"] if generation == "all" and several else rows
         by_place = {str(r["place"]): r for r in shown.to_dict("records")}
         middle = by_place.get("mid", next(iter(by_place.values())))
-        sds = {place: _unbroken(_sd_words(row, factor)) for place, row in by_place.items()}
+        sds = {place: _unbroken(sd_words(row, factor)) for place, row in by_place.items()}
         made.append(
             {
                 "generation": _unbroken(str(generation)),

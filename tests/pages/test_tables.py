@@ -131,3 +131,10 @@ def test_every_promised_column_has_a_meaning_or_a_unit() -> None:
         if not describe_column(name) and not unit_of_column(name)
     }
     assert nameless == set()
+
+
+def test_infinite_limits_are_spelled_as_a_table_schema_wants_them() -> None:
+    limits = pd.DataFrame({"low": [-np.inf, 0.1], "high": [np.inf, 1 / 3]})
+    assert csv_bytes(limits).decode().split() == ["low,high", "-INF,INF", f"0.1,{1 / 3!r}"]
+    fields = json.loads(schema_bytes({"t": limits}))["resources"][0]["schema"]["fields"]
+    assert [field["type"] for field in fields] == ["number", "number"]
