@@ -42,7 +42,10 @@ class SensorAxis:
         return [self.places[key] for key in rows[_SENSOR].itertuples(index=False, name=None)]
 
     def axis(self) -> Layout:
-        """Return the y axis: one tick a module, the first module on top."""
+        """Return the y axis: one tick a module, the first on top; of one module, one tick a sensor."""
+        if len(self.modules) == 1:
+            own = [(height, sensor) for (_, _, sensor), height in self.places.items()]
+            return axis("Sensor", ticks=own, low=-0.6, high=0.6, reverse=True)
         ticks = [(float(i), module) for i, (_, module) in enumerate(self.modules)]
         return axis("Module", ticks=ticks, low=-0.6, high=len(self.modules) - 0.4, reverse=True)
 
