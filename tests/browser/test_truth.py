@@ -98,7 +98,7 @@ def test_pressure_and_the_one_sensor_that_it_moves(site: Path) -> None:
     assert moved["low"] - 0.002 <= 0.24 <= moved["high"] + 0.002
     assert found["strain_error_in_use"].abs().idxmax() == ("M10", "BC")
     rest = found.drop(("M10", "BC")).groupby("generation")
-    # c = 0.04 and 0.048 pF/kPa, SDs between modules 0.006 and 0.003: means of six lie within three SDs of them
+    # c = 0.04 and 0.048 pF/kPa, SDs between modules 0.006 and 0.003: means of six lie within three of theirs
     assert rest["per_kpa"].mean()["hand-poured"] == pytest.approx(0.04, abs=3 * 0.007 / 6**0.5)
     assert rest["per_kpa"].mean()["blade-cast"] == pytest.approx(0.048, abs=3 * 0.0035 / 6**0.5)
     # d = 0.03, SD between sensors 0.006
