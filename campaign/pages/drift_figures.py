@@ -167,8 +167,8 @@ def _holds_caption(drift: Drift) -> str:
         percent_unit(str(worst["percent_of"])),
     )
     who = f"{worst['module']} {worst['sensor']}"
-    number = len(drift.holds)
-    what = f"Of {numbers.count(number, 'hold')} that of {who} changes most" if number > 1 else f"Hold of {who}"
+    many = len(drift.holds)
+    what = f"Of {numbers.count(many, 'hold')} that of {who} changes most" if many > 1 else f"Hold of {who}"
     return f"{what}: {change} by its end, after {time_words(float(worst['duration_s']))}."
 
 
