@@ -29,6 +29,7 @@ from campaign.pages.figures import (
 )
 from campaign.pages.loop_figures import (
     WORDS,
+    departures_figure,
     first_and_last,
     loop_script_address,
     loops_figure,
@@ -103,6 +104,7 @@ def _figures(found: Hysteresis) -> Iterable[Figure]:
     where = sensor_axis(found.sensors)
     made = [
         widest_figure(found),
+        widest_departures(found),
         cycles_figure(found, where),
         widths_figure(found, where),
         curves_figure(found, where),
@@ -152,6 +154,22 @@ def widest_figure(found: Hysteresis) -> Figure | None:
         f"that of {module} {sensor}.",
         note="The first cycle of each run stands out; the first settled one and the last follow, paler to "
         f"deeper.{more} Outlines are thinned with the extremes of both axes kept.",
+    )
+
+
+def widest_departures(found: Hysteresis) -> Figure | None:
+    """Return the same loops less a straight line, which opens narrow ones; it follows the same choice."""
+    module, sensor = widest_sensor(found)
+    return departures_figure(
+        found,
+        module,
+        sensor,
+        f"The same loops less a straight line, first those of {module} {sensor}: how wide they are, and how "
+        "they bend.",
+        width_unit(found),
+        note="The line has the slope by which widths are turned into "
+        f"{found.reference.name} (table of all sensors) and passes through the middle of the loops. The "
+        "height between the two branches of a loop is its width.",
     )
 
 
