@@ -252,6 +252,9 @@ FindingKind = Literal[
 ]
 """What a finding is about; ``site_templates/findings/KIND.html`` has its words."""
 
+_FIRST = {"curved": 0, "enough": 1, "accuracy": 2, "pressure": 3}
+"""What comes first, in this order: what a length is read to, and what pressure adds to it."""
+
 
 @dataclass(frozen=True)
 class ModelFinding:
@@ -329,7 +332,7 @@ def collect_findings(
         findings += _line_findings(calibration, description, limits, put_back)
     findings += further
     findings += _model_findings(effort, residuals)
-    findings.sort(key=lambda finding: finding.kind != "curved")
+    findings.sort(key=lambda finding: _FIRST.get(finding.kind, len(_FIRST)))
     return Findings(scope, tuple(findings))
 
 

@@ -363,9 +363,15 @@ def _shape_words(found: FittedForm) -> str:
     parts = []
     for place, name in enumerate(found.form.shape_names):
         value, low, high = found.shape_interval(place)
-        limits = f" [{low:.4g}, {high:.4g}]" if math.isfinite(low) else " (on its bound)"
-        parts.append(f"{name} = {value:.4g}{limits}")
+        limits = f" [{_short(low)}, {_short(high)}]" if math.isfinite(low) else " (on its bound)"
+        parts.append(f"{name} = {_short(value)}{limits}")
     return "; ".join(parts)
+
+
+def _short(value: float) -> str:
+    """Return a positive number to three digits without a power of ten."""
+    rounded = float(f"{value:.3g}")
+    return f"{rounded:.0f}" if rounded >= 1000 else f"{rounded:g}"
 
 
 def _freedom(fitted: FittedHold) -> int:

@@ -125,12 +125,12 @@ def _moved(drift: Drift) -> list[dict[Hashable, Any]]:
 
 def _tables(drift: Drift) -> list[Table]:
     return [
+        _forms_table(drift),
         holds_table(drift.holds, drift.reference),
         settling_table(drift.holds, drift.reference),
-        _forms_table(drift),
         _components_table(drift),
-        _zero_table(drift),
         _zero_model_table(drift),
+        _zero_table(drift),
         _floors_table(drift),
         _blanks_table(drift),
         _parasitic_table(drift),
@@ -234,8 +234,12 @@ def _settling(row: Mapping[Hashable, Any]) -> str:
         return f"after {time_words(after)}" if after > 0 else "within it throughout"
     if np.isfinite(row["next_decade_percent_fso"]):
         unit = percent_unit(str(row["percent_of"]))
-        return f"never; {row['next_decade_percent_fso']:+.2g} {unit} in the next decade".replace("-", "−")
+        return f"never; {_with_sign(float(row['next_decade_percent_fso']), unit)} in the next decade"
     return "beyond what the record supports"
+
+
+def _with_sign(value: float, unit: str) -> str:
+    return ("+" if value > 0 else "") + numbers.significant(value, 2, unit)
 
 
 def _forms_table(drift: Drift) -> Table:
@@ -285,7 +289,7 @@ def _zero_table(drift: Drift) -> Table:
             Column("module", "Module", kind="text"),
             Column("sensor", "Sensor", kind="text"),
             Column("session", "Mounting", kind="text"),
-            Column("day", "Day", digits=3, missing="not recorded"),
+            Column("day", "Day", digits=2, missing="not recorded"),
             Column("runs", "Runs", kind="integer"),
             Column("zero_signal", "Zero", unit, digits=5),
             Column(
@@ -399,7 +403,7 @@ def sensor_holds(
     if rows.empty:
         return [], [], {}
     own = [c for c in drift.curves if (c.module, c.sensor) == (module, sensor)][:MOST_PLOTS]
-    figures = [hold_figure(c, drift.reference, f"hold-{i}", 280) for i, c in enumerate(own, 1)]
+    figures = [hold_figure(c, drift.reference, f"hold-{i}", 280, most=100) for i, c in enumerate(own, 1)]
     by_trial: dict[str, list[str]] = {}
     for curve, figure in zip(own, figures, strict=True):
         by_trial.setdefault(curve.trial, []).append(figure.name)

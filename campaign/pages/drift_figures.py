@@ -166,11 +166,10 @@ def _holds_caption(drift: Drift) -> str:
         worst["change_end_high"],
         percent_unit(str(worst["percent_of"])),
     )
-    return (
-        f"Of {numbers.count(len(drift.holds), 'hold')} that of {worst['module']} {worst['sensor']} "
-        "changes most: "
-        f"{change} by its end, after {time_words(float(worst['duration_s']))}."
-    )
+    who = f"{worst['module']} {worst['sensor']}"
+    many = len(drift.holds)
+    what = f"Of {numbers.count(many, 'hold')} that of {who} changes most" if many > 1 else f"Hold of {who}"
+    return f"{what}: {change} by its end, after {time_words(float(worst['duration_s']))}."
 
 
 def hold_figure(
@@ -321,9 +320,9 @@ def decades_figure(drift: Drift) -> Figure | None:
     return Figure(
         name="decades",
         caption=f"The change a decade of time is told from none in {numbers.whole(told)} of "
-        f"{numbers.count(len(rows), 'sensor')}; it lies between "
-        f"{numbers.significant(float(rows['estimate'].min()), 2)} and "
-        f"{numbers.significant(float(rows['estimate'].max()), 2, unit)}.",
+        f"{numbers.count(len(rows), 'sensor')}; it {'lies between' if len(rows) > 1 else 'is'} "
+        + (f"{numbers.significant(float(rows['estimate'].min()), 2)} and " if len(rows) > 1 else "")
+        + f"{numbers.significant(float(rows['estimate'].max()), 2, unit)}.",
         alternative="Dots with 95 % intervals, one a sensor, by module: change in a decade of time.",
         traces=tuple(interval_traces(rows, where, text)),
         layout=layout(

@@ -13,7 +13,7 @@ from campaign.analyses.loop_findings import lasting
 from campaign.analyses.loop_table import BY_LINE, BY_LOOP
 from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers, palette, slugs
-from campaign.pages.campaign_map import LOOP_KEY, campaign_map
+from campaign.pages.campaign_map import LOOP_KEY
 from campaign.pages.endurance import endurance_figures, endurance_tables
 from campaign.pages.figures import (
     Figure,
@@ -29,6 +29,7 @@ from campaign.pages.figures import (
 )
 from campaign.pages.loop_figures import (
     WORDS,
+    departures_figure,
     first_and_last,
     loop_script_address,
     loops_figure,
@@ -39,7 +40,6 @@ from campaign.pages.loop_figures import (
 )
 from campaign.pages.page import Page
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
-from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import ReferenceQuantity
 
@@ -70,7 +70,6 @@ def hysteresis_page(results: CampaignResults) -> Page | None:
     found, endurance = results.hysteresis, results.endurance
     if found is None and endurance is None:
         return None
-    mapped = campaign_map(results, chosen=LOOP_KEY) if found is not None else None
     figures = [*(_figures(found) if found is not None else ()), *endurance_figures(endurance)]
     tables = [*(_tables(found) if found is not None else ()), *endurance_tables(endurance)]
     return Page(
@@ -91,12 +90,12 @@ def hysteresis_page(results: CampaignResults) -> Page | None:
             "delays": [] if found is None else found.rates.delays.to_dict("records"),
             "component_words": COMPONENT_WORDS,
             "survivors": () if endurance is None else lasting(endurance),
-            "map": mapped,
+            "map_key": LOOP_KEY,
             "percent": "" if found is None else width_unit(found),
         },
         figures=tuple(figures),
         tables=tuple(tables),
-        data=_data(found, mapped),
+        data=_data(found),
         description="How wide loops of stretch and release are, when they settle, what rate does to them.",
     )
 
@@ -105,6 +104,7 @@ def _figures(found: Hysteresis) -> Iterable[Figure]:
     where = sensor_axis(found.sensors)
     made = [
         widest_figure(found),
+        widest_departures(found),
         cycles_figure(found, where),
         widths_figure(found, where),
         curves_figure(found, where),
@@ -157,11 +157,25 @@ def widest_figure(found: Hysteresis) -> Figure | None:
     )
 
 
-def _data(found: Hysteresis | None, mapped: SkinMap | None) -> dict[str, object]:
-    """What the page's scripts need: loops to pick, and the skin map's figures."""
-    if found is None:
-        return {}
-    return {"loops": _picker(found)} | ({"skin_map": mapped.data} if mapped is not None else {})
+def widest_departures(found: Hysteresis) -> Figure | None:
+    """Return the same loops less a straight line, which opens narrow ones; it follows the same choice."""
+    module, sensor = widest_sensor(found)
+    return departures_figure(
+        found,
+        module,
+        sensor,
+        f"The same loops less a straight line, first those of {module} {sensor}: how wide they are, and how "
+        "they bend.",
+        width_unit(found),
+        note="The line has the slope by which widths are turned into "
+        f"{found.reference.name} (table of all sensors) and passes through the middle of the loops. The "
+        "height between the two branches of a loop is its width.",
+    )
+
+
+def _data(found: Hysteresis | None) -> dict[str, object]:
+    """What the page's script needs: loops to pick."""
+    return {} if found is None else {"loops": _picker(found)}
 
 
 def _picker(found: Hysteresis) -> dict[str, object]:
@@ -261,10 +275,14 @@ def _curves_caption(found: Hysteresis) -> str:
     signs = np.sign(found.sensors["mid_width_percent_fso"].to_numpy(float))
     clear = (found.sensors["mid_low"] > 0) | (found.sensors["mid_high"] < 0)
     up, down = int(np.sum((signs > 0) & clear)), int(np.sum((signs < 0) & clear))
-    return (
-        f"Of {numbers.count(len(signs), 'sensor')}, {numbers.whole(up)} are told to have the larger signal "
-        f"on the way up at mid range, {numbers.whole(down)} on the way down."
-    )
+    open_ = len(signs) - up - down
+    parts = [
+        f"on the way {way} in {numbers.whole(number)}"
+        for way, number in (("up", up), ("down", down))
+        if number
+    ]
+    parts += [f"not decided in {numbers.whole(open_)}"] if open_ else []
+    return f"At mid range the signal is larger {', '.join(parts)} of {numbers.count(len(signs), 'sensor')}."
 
 
 def cycles_figure(found: Hysteresis, where: SensorAxis) -> Figure | None:

@@ -54,7 +54,7 @@ def _figure(influences: Influences, result: InfluenceResult) -> Figure | None:
     where = sensor_axis(shown)
     words = [_sentence(row, unit, factor) for row in shown.to_dict("records")]
     ends = shown["estimate"].agg(["min", "max"]) * factor
-    between = numbers.span(float(ends["min"]), float(ends["max"]), unit)
+    between = numbers.span(float(ends["min"]), float(ends["max"]), unit, digits=2)
     return Figure(
         name=figure_name(result),
         caption=f"What {INFLUENCE_WORDS[result.influence]} does: {between} over "

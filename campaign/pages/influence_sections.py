@@ -96,7 +96,7 @@ def _pressure_lines(row: dict[Hashable, Any], results: CampaignResults) -> list[
             numbers.significant(row[f"strain_residual_sd_{when}"] * factor, 2, reference.shown_unit)
             for when in ("before", "after")
         )
-        words = f"{before}, compensated {after} (leaving out by {row['left_out_by']})"
+        words = f"{before}, compensated {after} (leaving out each {row['left_out_by']} in turn)"
         made.append(InfluenceLine("Residual SD over the sweeps", "compensation", words))
     return made
 

@@ -4,7 +4,9 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
+from dataclasses import replace
 
+import numpy as np
 import orjson
 import pandas as pd
 
@@ -113,10 +115,62 @@ def loops_figure(
         layout=layout(
             axis(WORDS[reference.name], reference.shown_unit), axis("Signal", unit), hovermode="closest"
         ),
-        data=outline_table(curves),
+        data=_with_departures(hysteresis, curves),
         note=note,
         height=460,
     )
+
+
+def departures(hysteresis: Hysteresis, curves: Sequence[SensorCurve]) -> list[SensorCurve]:
+    """Return loops of one sensor less a straight line, in per cent of what its widths are in per cent of.
+
+    The line has the slope that the sensor's widths are turned into strain by, and passes through the middle
+    of all points of *curves*: narrow loops open, and nothing but a straight line is taken off.
+    """
+    rows = hysteresis.sensors
+    own = rows[(rows["module"] == curves[0].module) & (rows["sensor"] == curves[0].sensor)]
+    if len(own):
+        slope, whole = float(own["slope"].iloc[0]), float(own["full_scale_output"].iloc[0])
+    else:  # loops that are drawn and count nowhere: their own line, their own range
+        x, signal = (np.concatenate([getattr(c, name) for c in curves]) for name in ("x", "signal"))
+        slope, whole = float(np.polyfit(x, signal, 1)[0]), float(np.ptp(signal))
+    left = [curve.signal - slope * curve.x for curve in curves]
+    middle = float(np.mean(np.concatenate(left)))
+    return [
+        replace(curve, signal=100.0 * (values - middle) / whole)
+        for curve, values in zip(curves, left, strict=True)
+    ]
+
+
+def departures_figure(
+    hysteresis: Hysteresis, module: str, sensor: str, caption: str, unit: str, *, note: str = ""
+) -> Figure | None:
+    """Return the loops of one sensor as departures from a straight line, ``None`` where none is drawn."""
+    curves = first_and_last(outlines_of(hysteresis, module, sensor))
+    if not curves:
+        return None
+    reference = hysteresis.reference
+    left = departures(hysteresis, curves)
+    return Figure(
+        name="loop-departures",
+        caption=caption,
+        alternative=f"Closed curves of the departure from a straight line against "
+        f"{WORDS[reference.name].lower()}, one a cycle, the same cycles as in the figure before.",
+        traces=tuple(loop_traces(left, reference)),
+        layout=layout(
+            axis(WORDS[reference.name], reference.shown_unit),
+            axis("Departure from the line", unit),
+            hovermode="closest",
+        ),
+        data=_with_departures(hysteresis, curves),
+        note=note,
+        height=340,
+    )
+
+
+def _with_departures(hysteresis: Hysteresis, curves: Sequence[SensorCurve]) -> pd.DataFrame:
+    left = [curve.signal for curve in departures(hysteresis, curves)]
+    return outline_table(curves).assign(departure_percent=np.concatenate(left))
 
 
 def outline_table(curves: Sequence[SensorCurve]) -> pd.DataFrame:
@@ -160,8 +214,11 @@ def loop_scripts(hysteresis: Hysteresis | None) -> dict[str, bytes]:
             layout=layout(axis(""), axis("")),
         )
         drawn = ready(figure)
+        left = ready(replace(figure, traces=_departure_traces(hysteresis, curves)))
         content = {
             "traces": drawn.traces,
+            "departures": [trace["y"] for trace in left.traces],
+            "departure_ranges": {name: left.layout[name]["range"] for name in ("xaxis", "yaxis")},
             "ranges": {name: drawn.layout[name]["range"] for name in ("xaxis", "yaxis")},
             "rates": list(dict.fromkeys(t["meta"]["rate"] for t in drawn.traces)),
             "cycles": sorted({t["meta"]["cycle"] for t in drawn.traces}),
@@ -172,6 +229,10 @@ def loop_scripts(hysteresis: Hysteresis | None) -> dict[str, bytes]:
             b"(window.campaignLoops = window.campaignLoops || {})[" + key + b"] = " + packed + b";\n"
         )
     return made
+
+
+def _departure_traces(hysteresis: Hysteresis, curves: Sequence[SensorCurve]) -> tuple[Trace, ...]:
+    return tuple(loop_traces(departures(hysteresis, curves), hysteresis.reference))
 
 
 def sensors_drawn(hysteresis: Hysteresis) -> list[tuple[str, str]]:

@@ -314,7 +314,7 @@ def module_effects_figure(results: CampaignResults, module: str, where: SensorAx
     ticks = [(where.places[key], key[2]) for key in where.places]
     return Figure(
         name="effects",
-        caption=f"Effects of the sensors on the {TERM_WORDS.get(term, term)}, about the module's own mean.",
+        caption=f"Effects of the sensors on the {TERM_WORDS.get(term, term)}, about the module’s own mean.",
         alternative=f"Dots with 95 % intervals, one a sensor: effect on the {TERM_WORDS.get(term, term)}, "
         f"with an upright at zero.",
         traces=tuple(interval_traces(rows, where, text)),
@@ -422,7 +422,7 @@ def _tables(results: CampaignResults, module: str, lines: pd.DataFrame) -> list[
     return [
         Table(
             name="module_lines",
-            caption="The lines of the module's sensors.",
+            caption="The lines of the module’s sensors.",
             frame=frame,
             columns=(
                 Column("sensor", "Sensor", kind="text", href="_href"),

@@ -14,7 +14,7 @@ from campaign.analyses.influences import Influences
 from campaign.analyses.pressure import Pressure
 from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers, palette, slugs
-from campaign.pages.campaign_map import PRESSURE_KEY, campaign_map
+from campaign.pages.campaign_map import PRESSURE_KEY
 from campaign.pages.figures import (
     Figure,
     Trace,
@@ -30,9 +30,8 @@ from campaign.pages.figures import (
 from campaign.pages.influence_figures import axis_with_zero, influence_figures, influence_tables
 from campaign.pages.page import Page
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
-from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
-from campaign.recordings.recording import ReferenceQuantity
+from campaign.recordings.recording import FloatArray, ReferenceQuantity
 
 CORRECTION_WORDS = {
     "none": "none",
@@ -53,8 +52,14 @@ COMPONENT_WORDS = {
 }
 
 MOST_MODULES = 48
-POINTS_DRAWN = 12
+POINTS_DRAWN = 8
 """Points of a sweep that the small multiples draw at most."""
+
+FEW_SENSORS = 24
+"""Sensors up to which the page draws every sweep of the one that moves most; the sensors’ own pages do."""
+
+MOST_POINTS = 240
+"""Points that the curves of one sensor have together."""
 
 
 def pressure_page(results: CampaignResults) -> Page | None:
@@ -62,7 +67,7 @@ def pressure_page(results: CampaignResults) -> Page | None:
     pressure, influences = results.pressure, results.influences
     if pressure is None and influences is None:
         return None
-    mapped = _map(results)
+    has_strain = pressure is not None and bool(pressure.table["strain_error_per_kpa"].notna().any())
     figures = [*(_figures(pressure) if pressure is not None else ()), *influence_figures(influences)]
     tables = [*(_tables(pressure) if pressure is not None else ()), *influence_tables(influences)]
     return Page(
@@ -76,8 +81,9 @@ def pressure_page(results: CampaignResults) -> Page | None:
             "reference": _reference(pressure, influences),
             "facts": pressure_facts(pressure, results.limits),
             "influence_facts": influence_facts(influences),
-            "map": mapped,
-            "has_strain": pressure is not None and bool(pressure.table["strain_error_per_kpa"].notna().any()),
+            "map_key": PRESSURE_KEY if has_strain else "",
+            "has_strain": has_strain,
+            "worst": _worst(pressure) if pressure is not None else None,
             "shown_modules": 0 if pressure is None else min(pressure.table["module"].nunique(), MOST_MODULES),
             "all_modules": 0 if pressure is None else pressure.table["module"].nunique(),
             "left_out": [] if pressure is None else _left_out(pressure),
@@ -86,7 +92,6 @@ def pressure_page(results: CampaignResults) -> Page | None:
         },
         figures=tuple(figures),
         tables=tuple(tables),
-        data={"skin_map": mapped.data} if mapped is not None else {},
         description="What inflation of the actuators and other influences do to the signals, with intervals.",
     )
 
@@ -95,13 +100,6 @@ def _reference(pressure: Pressure | None, influences: Influences | None) -> Refe
     found = pressure if pressure is not None else influences
     assert found is not None
     return found.reference
-
-
-def _map(results: CampaignResults) -> SkinMap | None:
-    """The skin map coloured by the error per kPa; ``None`` where no sensor has one."""
-    if results.pressure is None or results.pressure.table["strain_error_per_kpa"].isna().all():
-        return None
-    return campaign_map(results, chosen=PRESSURE_KEY)
 
 
 def _left_out(pressure: Pressure) -> list[str]:
@@ -131,7 +129,7 @@ def _figures(pressure: Pressure) -> Iterable[Figure]:
     where = sensor_axis(pressure.table)
     made = (
         sweeps_figure(pressure, where),
-        loops_figure(pressure),
+        loops_figure(pressure) if len(pressure.table) <= FEW_SENSORS else None,
         hysteresis_figure(pressure, where),
         sensitivity_figure(pressure, where),
         corrections_figure(pressure),
@@ -259,11 +257,12 @@ def sensor_sweeps_figure(
     unit = str(rows["unit"].iloc[0])
     traces: list[Trace] = []
     lengths = sorted(set(rows["x"].round(4).dropna()))
+    most = max(12, MOST_POINTS // len(rows))
     for _, row in rows.iterrows():
         step = lengths.index(round(float(row["x"]), 4)) if math.isfinite(row["x"]) else 0
         style = palette.GENERATION_STYLES[step % len(palette.GENERATION_STYLES)]
         key = (str(row["trial"]), sensor, int(row["repetition"]), int(row["sweep"]))
-        influence, signal = pressure.curves.get(key, (np.empty(0), np.empty(0)))
+        influence, signal = _spaced(*pressure.curves.get(key, (np.empty(0), np.empty(0))), most)
         words = _sweep_words(row, pressure.reference, unit)
         link = slugs.trial_href(module, sensor, str(row["trial"]))
         traces.append(
@@ -292,9 +291,18 @@ def sensor_sweeps_figure(
             columns={"influence": "pressure_kpa"}
         ),
         note="Each sweep less its signal without pressure. Each length has its own colour; dashes are the "
-        "line of each sweep over both branches. Curves are thinned for drawing and keep their extremes.",
+        "line of each sweep over both branches. Curves show evenly chosen samples.",
         height=400,
     )
+
+
+def _spaced(influence: FloatArray, signal: FloatArray, most: int) -> tuple[FloatArray, FloatArray]:
+    """Return at most *most* points of a curve, evenly chosen, both ends and the turn kept."""
+    if len(influence) <= most:
+        return influence, signal
+    even = np.linspace(0, len(influence) - 1, most - 1).round().astype(int)
+    kept = np.union1d(even, influence.argmax())
+    return influence[kept], signal[kept]
 
 
 def _sweep_words(row: pd.Series, reference: ReferenceQuantity, unit: str) -> str:
@@ -335,7 +343,7 @@ def sensitivity_figure(
     spread = [float(v) * reference.shown_factor for v in (known["strain_error_per_kpa"].agg(["min", "max"]))]
     return Figure(
         name="sensitivity",
-        caption=f"What a kilopascal reads as: {numbers.span(spread[0], spread[1], unit)} over "
+        caption=f"What a kilopascal reads as: {numbers.span(spread[0], spread[1], unit, digits=2)} over "
         f"{numbers.count(len(known), 'sensor')}.",
         alternative="Dots with 95 % intervals, one a sensor, ordered by module: apparent strain per "
         "kilopascal at the middle of the lengths, with an upright at zero.",
@@ -502,7 +510,7 @@ def _compensation_sentence(row: dict[Hashable, Any], reference: ReferenceQuantit
         for when in ("before", "after")
     )
     who = f"{row['module']} {row['sensor']}"
-    return f"{who}: {before} before, {after} after, leaving out by {row['left_out_by']}"
+    return f"{who}: {before} before, {after} after, leaving out each {row['left_out_by']} in turn"
 
 
 def hysteresis_figure(pressure: Pressure, where: SensorAxis) -> Figure | None:
@@ -565,7 +573,7 @@ def pressure_table(pressure: Pressure) -> Table:
         name="pressure",
         caption="What a kilopascal does to every sensor, and what its own compensation leaves, most first.",
         frame=frame.assign(_href=[slugs.sensor_href(*pair) for pair in names]),
-        shown_rows=24,
+        shown_rows=8,
         source="pressure",
         columns=(
             Column("generation", "Generation", kind="text"),

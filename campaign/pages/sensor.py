@@ -60,7 +60,7 @@ class TrialSection:
         The recording's path.
     anchor
         Anchor of the section.
-    kind, started, session, fate
+    kind, started, session, repetition, fate
         As in the table of trials; empty where not recorded.
     runs
         One mapping a run of the trial: repetition, readings, line, zero return (NaN where unknown).
@@ -75,6 +75,7 @@ class TrialSection:
     kind: str
     started: str
     session: str
+    repetition: str
     fate: str
     runs: tuple[dict[Hashable, Any], ...]
     figure: str
@@ -147,7 +148,7 @@ def _sensor_page(
             "labels": labels,
             "ordinary": parts.ordinary,
         },
-        figures=(*sensor_figures_of(parts), *swept, *outlines, *holds, *plots),
+        figures=(*sensor_figures_of(parts), *outlines, *swept, *holds, *plots),
         tables=(*_limits_table(parts), *_runs_table(parts), *held),
         data={"calculator": calculator_data(records)} if records else {},
         description=f"Readings, line, figures of merit and trials of sensor {parts.sensor} of module "
@@ -235,6 +236,7 @@ def trial_sections(
                 kind=_text(trial["kind"]),
                 started=_text(trial["started"]).replace("T", " "),
                 session=_text(trial["session"]),
+                repetition=_text(trial["repetition"]),
                 fate=_text(trial["fate"]),
                 runs=tuple(_runs_of(parts, file)),
                 figure=plot.name if plot is not None else "",

@@ -42,9 +42,14 @@ class SensorAxis:
         return [self.places[key] for key in rows[_SENSOR].itertuples(index=False, name=None)]
 
     def axis(self) -> Layout:
-        """Return the y axis: one tick a module, the first module on top."""
+        """Return the y axis: one tick a module, the first on top; of one module, one tick a sensor."""
+        if len(self.modules) == 1:
+            own = [(height, sensor) for (_, _, sensor), height in self.places.items()]
+            return axis(_title("Sensor", own), ticks=own, low=-0.6, high=0.6, reverse=True)
         ticks = [(float(i), module) for i, (_, module) in enumerate(self.modules)]
-        return axis("Module", ticks=ticks, low=-0.6, high=len(self.modules) - 0.4, reverse=True)
+        return axis(
+            _title("Module", ticks), ticks=ticks, low=-0.6, high=len(self.modules) - 0.4, reverse=True
+        )
 
     def style(self, generation: str) -> palette.GenerationStyle:
         """Return the marks of *generation*."""
@@ -62,6 +67,11 @@ def sensor_axis(rows: pd.DataFrame) -> SensorAxis:
         for index, key in enumerate(own):
             places[key] = height + (index - (len(own) - 1) / 2) * step
     return SensorAxis(tuple(sorted({g for g, _ in modules})), modules, places)
+
+
+def _title(words: str, ticks: Sequence[tuple[float, str]]) -> str:
+    """Return the axis title; none where long names would run into it."""
+    return words if max((len(name) for _, name in ticks), default=0) <= 5 else ""
 
 
 def sensor_links(rows: pd.DataFrame) -> list[str]:

@@ -241,15 +241,20 @@ def _curve(places: list[tuple[float, float]], trace: Trace) -> str:
 
 
 def _path(places: Iterable[tuple[float, float]], shape: str) -> str:
-    parts, drawing, last_y = [], False, 0.0
+    """Return a path by relative steps, which are shorter; they add up to the rounded places exactly."""
+    parts: list[str] = []
+    last: tuple[int, int] | None = None
     for x, y in places:
         if not _seen(x, y):
-            drawing = False
+            last = None
             continue
-        if drawing and shape == "hv":
-            parts.append(f"L{_px(x)} {_px(last_y)}")
-        parts.append(f"{'L' if drawing else 'M'}{_px(x)} {_px(y)}")
-        drawing, last_y = True, y
+        across, upright = round(10 * x), round(10 * y)
+        if last is None:
+            parts.append(f"M{_px(across / 10)} {_px(upright / 10)}")
+        else:
+            right, down = _px((across - last[0]) / 10), _px((upright - last[1]) / 10)
+            parts.append(f"h{right}v{down}" if shape == "hv" else f"l{right} {down}".replace(" -", "-"))
+        last = across, upright
     return "".join(parts)
 
 

@@ -88,7 +88,14 @@ window.campaign = window.campaign || {};
       figure.live.on("plotly_relayout", () => showReset(figure));
       showReset(figure);
       figure.element.dataset.state = "live";
+      hideTester();
     });
+  }
+
+  /* The library measures texts in a picture of its own beside the page's content: nothing for readers. */
+  function hideTester() {
+    const tester = document.getElementById("js-plotly-tester");
+    if (tester) tester.setAttribute("aria-hidden", "true");
   }
 
   function makeStill(figure) {

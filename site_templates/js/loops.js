@@ -62,8 +62,11 @@
 
   function draw() {
     const loops = loopsOf(current);
-    const traces = loops.traces.filter((trace) => shown(trace, loops.cycles));
+    const wanted = (trace) => shown(trace, loops.cycles);
+    const traces = loops.traces.filter(wanted);
+    const less = loops.traces.map((trace, i) => Object.assign({}, trace, { y: loops.departures[i] })).filter(wanted);
     campaign.changeFigure("loops", traces, loops.ranges, current.csv);
+    campaign.changeFigure("loop-departures", less, loops.departure_ranges, current.csv);
     campaign.announce(nameOf(current) + ": " + traces.length + " loops drawn");
   }
 

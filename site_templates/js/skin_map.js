@@ -75,5 +75,16 @@ window.campaign = window.campaign || {};
     title.textContent = edge.getAttribute("aria-label");
     edge.prepend(title);
   }
+  /* An address like #skin-map?show=KEY picks a figure. */
+  function pickByAddress() {
+    const list = map.querySelector("select");
+    const key = new URLSearchParams(window.location.hash.split("?")[1] || "").get("show");
+    if (!list || !window.location.hash.startsWith("#skin-map") || !values.order.includes(key)) return;
+    list.value = key;
+    pick(key);
+  }
+
   buildPicker();
+  pickByAddress();
+  window.addEventListener("hashchange", pickByAddress);
 })(window.campaign);

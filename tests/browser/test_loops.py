@@ -79,6 +79,11 @@ def test_picking_a_sensor_a_rate_and_a_cycle_draws_just_these_loops(browser: Chr
     wait_for(lambda: len(browser.execute_script(DRAWN)) > 3, "all cycles")
     cycles.select_by_visible_text("2")
     wait_for(lambda: [c for _, _, c in browser.execute_script(DRAWN)] == [2], "one cycle")
+    departures = browser.find_element(By.ID, "figure-loop-departures")
+    browser.execute_script("arguments[0].scrollIntoView()", departures)
+    wait_for(lambda: departures.get_attribute("data-state") == "live", "live departures")
+    less = DRAWN.replace("figure-loops", "figure-loop-departures")
+    assert [(s, c) for s, _, c in browser.execute_script(less)] == [("AB", 2)]
     link = browser.find_element(By.CSS_SELECTOR, "#figure-loops .tools a").get_attribute("href")
     assert link is not None
     assert link.endswith("figures/sensor-M01-AB_loops.csv")

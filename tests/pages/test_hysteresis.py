@@ -22,7 +22,7 @@ from campaign.analyses.loop_findings import SettledLoops, loop_findings
 from campaign.analyses.results import CampaignResults
 from campaign.pages.contract_columns import CONTRACT_COLUMNS
 from campaign.pages.hysteresis import hysteresis_page
-from campaign.pages.loop_figures import loop_scripts
+from campaign.pages.loop_figures import departures, loop_scripts
 from campaign.pages.site import build_site
 from campaign.pipeline import analyse, read_campaign
 from campaign.trials.endurance import features_of_endurance
@@ -129,9 +129,24 @@ def test_every_loop_drawn_can_be_picked_and_is_a_sound_figure(many: CampaignResu
         assert len(loops["rates"]) == 2
         assert {trace["meta"]["cycle"] for trace in loops["traces"]} == set(loops["cycles"])
         go.Figure(data=loops["traces"])
+        assert [len(y) for y in loops["departures"]] == [len(trace["x"]) for trace in loops["traces"]]
         assert len(content) < 60_000
     for figure in page.figures:
         go.Figure(data=list(figure.traces), layout=figure.layout)
+
+
+def test_departures_open_a_loop_and_keep_its_width(many: CampaignResults) -> None:
+    found = many.hysteresis
+    assert found is not None
+    curves = [c for c in found.outlines if (c.module, c.sensor) == (found.outlines[0].module, "A")] or [
+        found.outlines[0]
+    ]
+    own = found.sensors.query("module == @curves[0].module and sensor == @curves[0].sensor").iloc[0]
+    for curve, left in zip(curves, departures(found, curves), strict=True):
+        # a straight line off, and nothing else: what remains plus the line is the signal, up to a constant
+        back = left.signal * own["full_scale_output"] / 100 + own["slope"] * curve.x - curve.signal
+        assert np.ptp(back) < 1e-9
+        assert np.ptp(left.signal) < 100 * np.ptp(curve.signal) / own["full_scale_output"]
 
 
 def test_the_page_stays_small_with_many_sensors(many: CampaignResults) -> None:
