@@ -12,6 +12,7 @@ from campaign.analyses.hysteresis import Hysteresis
 from campaign.analyses.loop_findings import lasting
 from campaign.analyses.loop_table import BY_LINE, BY_LOOP
 from campaign.analyses.results import CampaignResults
+from campaign.methods.conditioning import STATED_CHANGE
 from campaign.pages import numbers, palette, slugs
 from campaign.pages.campaign_map import LOOP_KEY
 from campaign.pages.endurance import endurance_figures, endurance_tables
@@ -351,11 +352,12 @@ def _settling_caption(settling: dict[str, object]) -> str:
         return "No sensor’s loops settle within the cycles that were run."
     latest = numbers.whole(float(str(settling["latest"])))
     if settled == sensors:
-        who = f"All {numbers.count(sensors, 'sensor')} are" if sensors > 1 else "The sensor is"
-        return f"{who} settled from cycle {latest} on at the latest."
+        whose = f"none of {numbers.count(sensors, 'sensor')} is" if sensors > 1 else "the sensor is not"
+        change = numbers.significant(100 * STATED_CHANGE, 1, "%")
+        return f"From cycle {latest} on, {whose} shown to change by more than {change} of its range a cycle."
     return (
-        f"{numbers.whole(settled)} of {numbers.count(sensors, 'sensor')} settle, from cycle {latest} on at "
-        "the latest; the others still change at the end of a run."
+        f"{numbers.whole(settled)} of {numbers.count(sensors, 'sensor')} settle, by cycle {latest} at the latest; "
+        "the others still change at the end of a run."
     )
 
 
