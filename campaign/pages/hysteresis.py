@@ -356,8 +356,8 @@ def _settling_caption(settling: dict[str, object]) -> str:
         change = numbers.significant(100 * STATED_CHANGE, 1, "%")
         return f"From cycle {latest} on, {whose} shown to change by more than {change} of its range a cycle."
     return (
-        f"{numbers.whole(settled)} of {numbers.count(sensors, 'sensor')} settle, by cycle {latest} at the latest; "
-        "the others still change at the end of a run."
+        f"{numbers.whole(settled)} of {numbers.count(sensors, 'sensor')} settle, by cycle {latest} at the "
+        "latest; the others still change at the end of a run."
     )
 
 
