@@ -14,7 +14,7 @@ from campaign.analyses.loop_table import BY_LINE, BY_LOOP
 from campaign.analyses.results import CampaignResults
 from campaign.methods.conditioning import STATED_CHANGE
 from campaign.pages import numbers, palette, slugs
-from campaign.pages.campaign_map import LOOP_KEY
+from campaign.pages.campaign_map import LOOP_KEY, campaign_map
 from campaign.pages.endurance import endurance_figures, endurance_tables
 from campaign.pages.figures import (
     Figure,
@@ -41,6 +41,7 @@ from campaign.pages.loop_figures import (
 )
 from campaign.pages.page import Page
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
+from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import ReferenceQuantity
 
@@ -71,6 +72,7 @@ def hysteresis_page(results: CampaignResults) -> Page | None:
     found, endurance = results.hysteresis, results.endurance
     if found is None and endurance is None:
         return None
+    mapped = campaign_map(results, chosen=LOOP_KEY) if found is not None else None
     figures = [*(_figures(found) if found is not None else ()), *endurance_figures(endurance)]
     tables = [*(_tables(found) if found is not None else ()), *endurance_tables(endurance)]
     return Page(
@@ -91,12 +93,12 @@ def hysteresis_page(results: CampaignResults) -> Page | None:
             "delays": [] if found is None else found.rates.delays.to_dict("records"),
             "component_words": COMPONENT_WORDS,
             "survivors": () if endurance is None else lasting(endurance),
-            "map_key": LOOP_KEY,
+            "map": mapped,
             "percent": "" if found is None else width_unit(found),
         },
         figures=tuple(figures),
         tables=tuple(tables),
-        data=_data(found),
+        data=_data(found, mapped),
         description="How wide loops of stretch and release are, when they settle, what rate does to them.",
     )
 
@@ -174,9 +176,11 @@ def widest_departures(found: Hysteresis) -> Figure | None:
     )
 
 
-def _data(found: Hysteresis | None) -> dict[str, object]:
-    """What the page's script needs: loops to pick."""
-    return {} if found is None else {"loops": _picker(found)}
+def _data(found: Hysteresis | None, mapped: SkinMap | None) -> dict[str, object]:
+    """What the page's scripts need: loops to pick, and the skin map's figures."""
+    if found is None:
+        return {}
+    return {"loops": _picker(found)} | ({"skin_map": mapped.data} if mapped is not None else {})
 
 
 def _picker(found: Hysteresis) -> dict[str, object]:
