@@ -45,6 +45,7 @@ from campaign.trials.influences import (
     features_of_proximity,
     features_of_thermal,
 )
+from campaign.trials.layout import LayoutFeatures, features_of_layout
 from campaign.trials.pressure import features_of_pressure
 from campaign.trials.readings import Readings, collect_readings
 from campaign.trials.staircase import StaircaseFeatures, readings_of_staircase
@@ -61,6 +62,7 @@ REDUCED_BY: dict[str, Callable[[Trial], TrialFeatures]] = {
     "hold": features_of_hold,
     "blank": features_of_blank,
     "pressure": features_of_pressure,
+    "layout": features_of_layout,
     "offaxis": features_of_offaxis,
     "thermal": features_of_thermal,
     "contact": features_of_contact,
@@ -227,7 +229,9 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
     endurance = analyse_endurance(read.of_type(EnduranceFeatures).values())
     drift = analyse_drift(read.of_type(HoldFeatures), calibration, description)
     sweeps = read.of_type(SweepFeatures)
-    logged = [(f.identity, f.logged) for f in read.of_type(CyclicFeatures).values() if f.logged is not None]
+    cycled, laid_out = read.of_type(CyclicFeatures).values(), read.of_type(LayoutFeatures).values()
+    logged = [(f.identity, f.logged) for f in cycled if f.logged is not None]
+    logged += [(f.identity, f.logged) for f in laid_out if f.logged is not None]
     pressure = analyse_pressure(sweeps, calibration, description, logged)
     influences = analyse_influences(sweeps, calibration, description)
     back = analyse_put_back(read, put_back or calibration)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+import shutil
 from dataclasses import replace
 from html import unescape
 from pathlib import Path
@@ -182,3 +183,43 @@ def test_pressure_at_one_unknown_length_is_told_in_signal_units(tmp_path):
     assert "too little to tell a difference by" in page
     assert "not identifiable from this design" in page
     assert not re.search(r"\bnan\b|None|inf\b", page)
+
+
+NODES = """
+[[columns]]
+header = "{node}_x"
+quantity = "node_x"
+unit = "mm"
+[[columns]]
+header = "{node}_y"
+quantity = "node_y"
+unit = "mm"
+[[columns]]
+header = "C_{sensor}"
+quantity = "signal"
+unit = "pF"
+"""
+
+
+def test_a_layout_trial_that_logs_pressure_is_shown_before_and_after(folder, tmp_path):
+    panels = tmp_path / "panels"
+    shutil.copytree(folder, panels)
+    (panels / "campaign.toml").write_text(DESCRIPTION + NODES)
+    ends = {"AB": ("A", "B"), "BC": ("B", "C")}
+    register = [f"{m},{s},60 mm,{ends[s][0]},{ends[s][1]}" for m, s, _ in SENSORS]
+    (panels / "sensors.csv").write_text("\n".join(["module,sensor,rest_length,from,to", *register]) + "\n")
+    t = np.arange(0.0, 60.0)
+    x, p = 0.1 + 0.1 * np.sin(t / 9.0), 10.0 + 8.0 * np.cos(t / 3.0)
+    length, still = 60.0 * (1.0 + x), np.zeros(len(t))
+    places = {"A_x": still, "A_y": still, "B_x": length, "B_y": still, "C_x": length, "C_y": length}
+    signals = {f"C_{s}": 100.0 + 80.0 * x + (c + 0.05 * x) * p for m, s, c in SENSORS if m == "M01"}
+    write(panels, "M01_layout_r1.csv", time_s=t, pressure_kPa=p, **places, **signals)
+    results = analyse(read_campaign(panels))
+    assert results.findings.scope.not_analysed == (("layout", 1),)
+    assert results.pressure is not None
+    shown = results.pressure.compensated.set_index(["kind", "sensor"]).loc["layout"]
+    assert sorted(shown.index) == ["AB", "BC"]
+    # without noise, what is left is what the coefficients are uncertain by
+    assert (shown["before"] > 0.2).all()
+    assert (shown["after"] < 0.1 * shown["before"]).all()
+    assert "layout" in words(build_site(results)["pressure.html"].decode())
