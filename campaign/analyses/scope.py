@@ -8,28 +8,12 @@ from typing import TYPE_CHECKING
 import numpy as np
 import pandas as pd
 
-from campaign.recordings.description import Description
+from campaign.recordings.description import KINDS, Description
 from campaign.recordings.recording import STRAIN, ReferenceQuantity
 
 if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration
     from campaign.recordings.intake import Intake
-
-KINDS = (
-    "staircase",
-    "cyclic",
-    "hold",
-    "pressure",
-    "layout",
-    "offaxis",
-    "thermal",
-    "endurance",
-    "contact",
-    "proximity",
-    "bend",
-    "blank",
-)
-"""All kinds of trial a campaign may hold, in the order of the folder's description."""
 
 ANALYSED = tuple(kind for kind in KINDS if kind != "layout")
 """Kinds that an analysis answers."""
