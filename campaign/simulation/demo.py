@@ -9,6 +9,15 @@ from importlib.resources import files
 
 import numpy as np
 
+from campaign.simulation.demo_braced import (
+    BRACED_SCHEDULE,
+    BRACED_SEED,
+    BRACED_SLIP,
+    braced_plan,
+    braced_truth,
+    braced_truth_text,
+)
+from campaign.simulation.demo_earlier import earlier_files
 from campaign.simulation.plan import Batch, Generation, Place, Plan, RunKey, StaircasePlan, panel_places
 from campaign.simulation.recording_text import (
     MARKED,
@@ -19,14 +28,21 @@ from campaign.simulation.recording_text import (
     recording_bytes,
 )
 from campaign.simulation.recordings import simulate_recordings
-from campaign.simulation.registers import csv_text, modules_text, sensors_text, sessions_text
+from campaign.simulation.registers import (
+    csv_text,
+    joined_text,
+    modules_text,
+    sensors_text,
+    sessions_text,
+)
 from campaign.simulation.schedule import Schedule
 from campaign.simulation.staircase import step_timing
-from campaign.simulation.trial_plans import CyclicPlan, HoldPlan, SweepPlan
+from campaign.simulation.trial_plans import CyclicPlan, HoldPlan, LayoutPlan, SweepPlan, placed
 from campaign.simulation.trial_truths import (
     CyclicTruth,
     HoldTruth,
     InfluenceTruth,
+    LayoutTruth,
     LogarithmicRelaxation,
     StretchedRelaxation,
 )
@@ -59,6 +75,7 @@ UNSETTLED = "trials/M02/M02_AC_cal_r2_s1.csv"
 UNSETTLED_PLATEAU = 5
 UNSETTLED_CREEP_PF = 0.9
 KNOCKED = "trials/M09/M09_DA_cal_r3_s2.csv"
+SLIP = ("M08", "AC", 1, 3, -6.0)
 MOVED_BY_PRESSURE = ("M10", "BC", 0.24)
 WARMED = ("M09", "AB")
 WARMED_RUN = "trials/M09/M09_AB_hold_r4_s2.csv"
@@ -70,6 +87,7 @@ TEXTS = {
     "notes/the-stand.md": "notes/the-stand.md",
     "notes/the-second-process.md": "notes/the-second-process.md",
     "notes/loops-holds-pressure.md": "notes/loops-holds-pressure.md",
+    "notes/shapes-from-lengths.md": "notes/shapes-from-lengths.md",
     "notes/panel.svg": "notes/panel.svg",
 }
 """Files of the folder that are written by hand: where they go, and their names beside this module."""
@@ -114,6 +132,7 @@ def demo_plan() -> Plan:
             start=time(14, 0),
             run_minutes=105,
         ),
+        layout=demo_layout(),
     )
 
 
@@ -135,6 +154,22 @@ def demo_holds() -> tuple[HoldPlan, ...]:
     )
 
 
+def demo_layout() -> LayoutPlan:
+    """Return the placements of the panel in the frame: larger, longer, higher, sheared, uneven, flat."""
+    return LayoutPlan(
+        tuple(NODES),
+        (
+            placed(NODES, 1.05, 1.05),
+            placed(NODES, 1.30, 1.10),
+            placed(NODES, 1.10, 1.33),
+            placed(NODES, 1.20, 1.22, shear=0.12),
+            placed(NODES, 1.15, 1.15, moved={"C": (12.0, 9.0)}),
+            placed(NODES, 1.36, 1.02),
+        ),
+        missing=frozenset({DEAD}),
+    )
+
+
 def demo_places() -> tuple[Place, ...]:
     """Return the six places of the panel: four edges and two diagonals."""
     return panel_places(NODES, EDGES)
@@ -152,6 +187,7 @@ def demo_truth() -> Truth:
     warming = InfluenceTruth(
         coefficient=0.030, sensor_sd=0.003, run_sd=0.0005, per_strain=0.020, loop=0.02, origin=22.5
     )
+    seated = LayoutTruth(seat_mm=0.20, slips=(SLIP,))
     poured = GenerationTruth(
         law=SignalLaw(parasitic=9.0, per_mm=0.72),
         components=Components(
@@ -170,6 +206,7 @@ def demo_truth() -> Truth:
         hold=replace(holding, relaxation=LogarithmicRelaxation(0.010, 5.0)),
         pressure=replace(inflation, coefficient=0.040, module_sd=0.006, sensor_sd=0.008),
         thermal=warming,
+        layout=seated,
     )
     blade = GenerationTruth(
         law=SignalLaw(parasitic=9.0, per_mm=0.90),
@@ -191,6 +228,7 @@ def demo_truth() -> Truth:
             inflation, coefficient=0.048, module_sd=0.003, sensor_sd=0.004, outliers=(MOVED_BY_PRESSURE,)
         ),
         thermal=warming,
+        layout=seated,
     )
     stand = StandTruth(
         scale=0.0003,
@@ -198,6 +236,7 @@ def demo_truth() -> Truth:
         rest_length_mm=0.12,
         build_mm=0.35,
         length_noise_mm=0.004,
+        node_mm=0.10,
         temperature_c=22.5,
         temperature_sd_c=0.8,
         signal_per_kelvin=0.03,
@@ -208,33 +247,48 @@ def demo_truth() -> Truth:
 def demo_files() -> dict[str, bytes]:
     """Return every file of the demonstration by its path from the campaign folder."""
     plan, truth = demo_plan(), demo_truth()
+    braced, second = braced_plan(), braced_truth(truth)
     written = {path: _text(name) for path, name in TEXTS.items()}
+    torn = {DEAD: ("failed before testing", _TORN)}
     registers = {
-        "modules.csv": modules_text(plan, _MATERIALS),
-        "sensors.csv": sensors_text(plan, truth, SEED, {DEAD: ("failed before testing", _TORN)}),
-        "sessions.csv": sessions_text(plan, truth, SEED, SCHEDULE, _STANDS),
+        "modules.csv": joined_text(
+            modules_text(plan, _materials("panel")), modules_text(braced, _materials("braced"))
+        ),
+        "sensors.csv": joined_text(
+            sensors_text(plan, truth, SEED, torn), sensors_text(braced, second, BRACED_SEED, {})
+        ),
+        "sessions.csv": joined_text(
+            sessions_text(plan, truth, SEED, SCHEDULE, _STANDS),
+            sessions_text(braced, second, BRACED_SEED, BRACED_SCHEDULE, _STANDS),
+        ),
         "trials.csv": csv_text(
             ["file", "use", "reason"], [[KNOCKED, "no", "the table was knocked during the run (invented)"]]
         ),
-        "TRUTH.md": truth_text(plan, truth, SEED, faults=_FAULTS),
+        "TRUTH.md": truth_text(plan, truth, SEED, faults=_FAULTS, further=braced_truth_text(braced, second)),
     }
-    return written | {path: text.encode() for path, text in registers.items()} | _recording_files(plan, truth)
+    files_of_braced = simulate_recordings(braced, second, BRACED_SEED, BRACED_SCHEDULE)
+    return (
+        written
+        | {path: text.encode() for path, text in registers.items()}
+        | _recording_files(plan, truth)
+        | {recording.file: recording_bytes(recording) for recording in files_of_braced}
+        | earlier_files()
+    )
 
 
 _STANDS = {"edge": ("invented bench", "edge clamps, set anew"), "frame": ("invented frame", "four node pins")}
 _TORN = "torn when the panel left its plate (invented)"
-_MATERIALS = {
-    "hand-poured": {
+
+
+def _materials(geometry: str) -> dict[str, dict[str, str]]:
+    details = {
         "materials": "silicone that does not exist; brushed carbon electrodes (invented)",
         "cure": "24 h at 23 °C (invented)",
-        "geometry": "panel",
-    },
-    "blade-cast": {
-        "materials": "silicone that does not exist; brushed carbon electrodes (invented)",
-        "cure": "24 h at 23 °C (invented)",
-        "geometry": "panel",
-    },
-}
+        "geometry": geometry,
+    }
+    return {"hand-poured": details, "blade-cast": details}
+
+
 _FAULTS = {
     "dead sensor": f"{' '.join(DEAD)}: `{DEAD_RUN}` shows the cable, then the instrument's overflow",
     "mislabelled file": f"`{MISLABELLED}` is a run of sensor AC, as its first lines say",
@@ -242,6 +296,12 @@ _FAULTS = {
     "unsettled plateau": f"plateau {UNSETTLED_PLATEAU + 1} of `{UNSETTLED}` creeps {UNSETTLED_CREEP_PF} pF",
     "left out by request": f"`{KNOCKED}`, in trials.csv",
     "sensor moved by pressure": "{} {}: c = {} pF/kPa".format(*MOVED_BY_PRESSURE),
+    "a clip that slipped, to be detected": "{} {}: {} mm in placement {} of run {}".format(
+        *SLIP[:2], f"{SLIP[4]:+g}", SLIP[3], SLIP[2]
+    ),
+    "a clip that slipped, to be located": "{} {}: {} mm in placement {} of run {}".format(
+        *BRACED_SLIP[:2], f"{BRACED_SLIP[4]:+g}", BRACED_SLIP[3], BRACED_SLIP[2]
+    ),
     "a room that warms up": f"by 5 K half-way through `{WARMED_RUN}`: its change is not all drift",
 }
 

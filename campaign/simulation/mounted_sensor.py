@@ -60,7 +60,17 @@ class MountedSensor:
         Between the levels of the staircase the sensor's own bend is interpolated.
         """
         length = self.rest_length_mm * (1.0 + strain) * (1.0 + self.scale_error) + self.zero_error_mm
-        true = length / self.true_rest_length_mm - 1.0
+        return self._signal(length / self.true_rest_length_mm - 1.0, strain)
+
+    def signal_at_length(self, length_mm: FloatArray) -> FloatArray:
+        """Return the mean signal at a true length in mm, of any shape: no stage is between."""
+        return self._signal(length_mm / self.true_rest_length_mm - 1.0, self.indicated_strain(length_mm))
+
+    def indicated_strain(self, length_mm: FloatArray) -> FloatArray:
+        """Return the strain (mm/mm) of lengths in mm by the rest length as measured."""
+        return np.asarray(length_mm / self.rest_length_mm - 1.0)
+
+    def _signal(self, true: FloatArray, strain: FloatArray) -> FloatArray:
         law = self.truth.law.signal(true, np.full_like(true, self.place.rest_length_mm))
         bend = np.interp(strain, self.levels, self.by_level)
         return np.asarray(law + self.line[0] + self.line[1] * true + bend + self.warmth)

@@ -5,7 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass, field
 from math import hypot
 
-from campaign.simulation.trial_plans import CyclicPlan, HoldPlan, SweepPlan
+from campaign.simulation.trial_plans import CyclicPlan, HoldPlan, LayoutPlan, SweepPlan
 
 
 @dataclass(frozen=True)
@@ -116,7 +116,7 @@ class Plan:
         ``True``: one run carries all sensors of a module (wide files); ``False``: sensors run one at a time.
     omitted
         Staircase runs that were not made (with shared runs: sensors that were not connected in that run).
-    cyclic, holds, pressure, thermal
+    cyclic, holds, pressure, thermal, layout
         What is run besides staircases; ``None`` or empty: nothing.
     """
 
@@ -131,6 +131,7 @@ class Plan:
     holds: tuple[HoldPlan, ...] = ()
     pressure: SweepPlan | None = None
     thermal: SweepPlan | None = None
+    layout: LayoutPlan | None = None
 
     def __post_init__(self) -> None:
         modules = self.modules

@@ -9,6 +9,7 @@ import numpy as np
 from campaign.simulation.cyclic import cyclic_recordings
 from campaign.simulation.effects import draw_effects
 from campaign.simulation.hold import hold_recordings
+from campaign.simulation.layout import layout_recordings
 from campaign.simulation.plan import Plan
 from campaign.simulation.pressure import pressure_recordings
 from campaign.simulation.recording_text import SyntheticRecording
@@ -46,4 +47,5 @@ def simulate_recordings(
         *hold_recordings(plan, truth, effects, diary, seed),
         *pressure_recordings(plan, truth, effects, diary, seed),
         *thermal_recordings(plan, truth, effects, diary, seed),
+        *layout_recordings(plan, truth, effects, diary, seed),
     )

@@ -24,6 +24,14 @@ def csv_text(header: Sequence[str], rows: Iterable[Sequence[object]]) -> str:
     return stream.getvalue()
 
 
+def joined_text(first: str, second: str) -> str:
+    """Return two registers of the same columns as one."""
+    header, rows = second.split("\n", 1)
+    if not first.startswith(f"{header}\n"):
+        raise ValueError("two registers with other columns cannot be joined")
+    return first + rows
+
+
 def modules_text(plan: Plan, details: Mapping[str, Mapping[str, str]]) -> str:
     """Return ``modules.csv``: module, generation, batch, and the columns of *details* (by generation)."""
     columns = list(next(iter(details.values()))) if details else []
@@ -68,10 +76,12 @@ def sessions_text(
             warmth = effects.temperature_c[index * len(plan.sessions) + number]
             started = f"{day.isoformat()}T{schedule.first_hour.isoformat()}"
             rows.append([session, module, started, *stands["edge"], f"{warmth:.1f}"])
-        if plan.pressure is not None and module in (plan.pressure.modules or plan.modules):
-            sensor = framed_sensor(plan, truth, effects, module, plan.pressure.positions[0], seed)
+        framed = next(
+            (f for f in (plan.pressure, plan.layout) if f and module in (f.modules or plan.modules)), None
+        )
+        if framed is not None:
+            sensor = framed_sensor(plan, truth, effects, module, plan.places[0].position, seed)
             day = schedule.mounting_day(plan, module, plan.sessions[0])
-            started = f"{day.isoformat()}T{plan.pressure.start.isoformat()}"
-            session = plan.pressure.session
-            rows.append([session, module, started, *stands["frame"], f"{sensor.temperature_c:.1f}"])
+            started = f"{day.isoformat()}T{framed.start.isoformat()}"
+            rows.append([framed.session, module, started, *stands["frame"], f"{sensor.temperature_c:.1f}"])
     return csv_text(["session", "module", "started", "stand", "grip", "temperature"], rows)

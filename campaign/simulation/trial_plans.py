@@ -1,4 +1,4 @@
-"""What is run besides staircases: loops, holds, and sweeps of pressure or temperature."""
+"""What is run besides staircases: loops, holds, sweeps of pressure or temperature, and layouts."""
 
 from __future__ import annotations
 
@@ -141,3 +141,68 @@ class SweepPlan:
             raise ValueError("a sweep needs a place, a strain, a run and a range that rises")
         if min(self.leg_s, self.move_s, self.sample_period_s) <= 0:
             raise ValueError("times of a sweep must be positive")
+
+
+@dataclass(frozen=True)
+class LayoutPlan:
+    """A module pinned by its nodes at one known shape after another, all its sensors logged at once.
+
+    Attributes
+    ----------
+    nodes
+        Names of the nodes.
+    placements
+        Places (x, y) of the nodes in mm, node by node, one placement after another: what is stated of the
+        support points.
+    modules
+        Modules that are run; empty: all.
+    missing
+        Pairs of module and place that are not connected.
+    samples, sample_period_s, placement_s
+        Rows logged at a placement, time between two, and from one placement to the next, in s.
+    repetitions
+        Runs of a module; every second run takes the placements in reverse.
+    session, start, run_minutes
+        The frame is a mounting of its own, as in :class:`SweepPlan`.
+    """
+
+    nodes: tuple[str, ...]
+    placements: tuple[tuple[tuple[float, float], ...], ...]
+    modules: tuple[str, ...] = ()
+    missing: frozenset[tuple[str, str]] = frozenset()
+    samples: int = 5
+    sample_period_s: float = 2.0
+    placement_s: float = 60.0
+    repetitions: int = 1
+    session: str = "F"
+    start: time = time(13, 30)
+    run_minutes: int = 15
+
+    def __post_init__(self) -> None:
+        if not self.placements or any(len(places) != len(self.nodes) for places in self.placements):
+            raise ValueError("a layout needs a placement, and every placement a place for every node")
+        if min(self.samples, self.repetitions) < 1 or min(self.sample_period_s, self.placement_s) <= 0:
+            raise ValueError("a layout needs a row, a run and positive times")
+
+    def order(self, run: int) -> tuple[int, ...]:
+        """Return the indices of the placements in the order in which *run* (from 1) takes them."""
+        indices = range(len(self.placements))
+        return tuple(indices if run % 2 else reversed(indices))
+
+
+def placed(
+    nodes: dict[str, tuple[float, float]],
+    along: float = 1.0,
+    across: float = 1.0,
+    shear: float = 0.0,
+    moved: dict[str, tuple[float, float]] | None = None,
+) -> tuple[tuple[float, float], ...]:
+    """Return places of the nodes after a stretch along x and y, a shear, and moves of single nodes (mm)."""
+    further = moved or {}
+    return tuple(
+        (
+            round(along * x + shear * y + further.get(name, (0.0, 0.0))[0], 2),
+            round(across * y + further.get(name, (0.0, 0.0))[1], 2),
+        )
+        for name, (x, y) in nodes.items()
+    )

@@ -1,4 +1,4 @@
-"""What is true of loops, holds and influences, generation by generation."""
+"""What is true of loops, holds, influences and layouts, generation by generation."""
 
 from __future__ import annotations
 
@@ -150,3 +150,25 @@ class InfluenceTruth:
     loop_sd: float = 0.0
     origin: float = 0.0
     outliers: tuple[tuple[str, str, float], ...] = ()
+
+
+@dataclass(frozen=True)
+class LayoutTruth:
+    """What happens to a sensor between its nodes, beside all that happens to it on the stage.
+
+    Attributes
+    ----------
+    seat_mm
+        SD of a sensor's length about the distance of its nodes, drawn once a sensor and placement.
+    slips
+        Blunders: module, place, run and number of the placement (both from 1), and by how many mm the sensor
+        was longer there than the distance of its nodes.
+    """
+
+    seat_mm: float = 0.0
+    slips: tuple[tuple[str, str, int, int, float], ...] = ()
+
+    def slip_mm(self, module: str, position: str, run: int, placement: int) -> float:
+        """Return by how much a sensor's length is wrong in one placement, in mm; 0 without a blunder."""
+        where = (module, position, run, placement)
+        return sum(slip[4] for slip in self.slips if slip[:4] == where)

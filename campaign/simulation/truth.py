@@ -7,7 +7,7 @@ from dataclasses import dataclass, field
 import numpy as np
 import numpy.typing as npt
 
-from campaign.simulation.trial_truths import CyclicTruth, HoldTruth, InfluenceTruth
+from campaign.simulation.trial_truths import CyclicTruth, HoldTruth, InfluenceTruth, LayoutTruth
 
 FloatArray = npt.NDArray[np.float64]
 
@@ -176,7 +176,7 @@ class GenerationTruth:
     ----------
     law, components, loop, noise, settling
         Lines, their spread, the loop of the staircases, noise of samples, and what follows a step.
-    cyclic, hold, pressure, thermal
+    cyclic, hold, pressure, thermal, layout
         What the other kinds of trial add.
     """
 
@@ -189,6 +189,7 @@ class GenerationTruth:
     hold: HoldTruth = field(default_factory=HoldTruth)
     pressure: InfluenceTruth = field(default_factory=InfluenceTruth)
     thermal: InfluenceTruth = field(default_factory=InfluenceTruth)
+    layout: LayoutTruth = field(default_factory=LayoutTruth)
 
 
 @dataclass(frozen=True)
@@ -207,6 +208,8 @@ class StandTruth:
         SD of the built rest length about the nominal one, drawn once a sensor; known, it changes no strain.
     length_noise_mm
         SD of a logged length about the one set.
+    node_mm
+        SD of a node's place about the one stated of its support point, along x and y, drawn once a placement.
     temperature_c, temperature_sd_c
         Mean temperature, and the SD of a mounting's about it, in °C.
     signal_per_kelvin
@@ -218,6 +221,7 @@ class StandTruth:
     rest_length_mm: float = 0.0
     build_mm: float = 0.0
     length_noise_mm: float = 0.0
+    node_mm: float = 0.0
     temperature_c: float = 22.0
     temperature_sd_c: float = 0.0
     signal_per_kelvin: float = 0.0

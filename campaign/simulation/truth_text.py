@@ -2,19 +2,24 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 
 import numpy as np
 
 from campaign.simulation.plan import Plan
-from campaign.simulation.truth import GenerationTruth, Truth
+from campaign.simulation.truth import GenerationTruth, SignalLaw, Truth
 from campaign.simulation.truth_text_of_kinds import other_kinds_lines
 
 LEVELS = ("batch", "module", "sensor", "mounting", "session", "shared_run", "repetition")
 
 
-def truth_text(plan: Plan, truth: Truth, seed: int, faults: Mapping[str, str]) -> str:
-    """Return the page: law, components in signal units and in strain, loop, noise, stand, faults put in."""
+def truth_text(
+    plan: Plan, truth: Truth, seed: int, faults: Mapping[str, str], further: Sequence[str] = ()
+) -> str:
+    """Return the page: law, components in signal units and in strain, loop, noise, stand, faults put in.
+
+    *further* are lines of Markdown that come before the stand.
+    """
     lines = [
         "# The truth of this invented campaign",
         "",
@@ -31,6 +36,7 @@ def truth_text(plan: Plan, truth: Truth, seed: int, faults: Mapping[str, str]) -
     for index, generation in enumerate(plan.generations):
         lines += [f"## {generation.name}", "", *_generation_lines(plan, truth.of(index), truth.unit)]
         lines += other_kinds_lines(plan, truth.of(index), truth.unit)
+    lines += further
     lines += ["## The stand", "", *_stand_lines(truth), ""]
     if faults:
         lines += ["## Faults put in on purpose", "", "| fault | where |", "|---|---|"]
@@ -47,16 +53,29 @@ def _generation_lines(plan: Plan, truth: GenerationTruth, unit: str) -> list[str
         f"Cable C_p = {law.parasitic:g} {unit}, c = {law.per_mm:g} {unit}/mm, stretch exponent p = "
         f"{law.exponent:g}; mean slope over the places {slope:.2f} {unit} per unit strain.",
         "",
+        *place_heads(unit),
+    ]
+    return [*lines, *place_rows(plan, law), "", *_component_lines(truth, unit, slope, full), ""]
+
+
+def place_heads(unit: str) -> list[str]:
+    """Return the head of the table of places."""
+    return [
         f"| place | rest length (mm) | intercept ({unit}) | slope ({unit}/(mm/mm)) | gauge factor |",
         "|---|---|---|---|---|",
     ]
+
+
+def place_rows(plan: Plan, law: SignalLaw) -> list[str]:
+    """Return a table's row for every place: rest length, intercept, slope, gauge factor."""
+    rows = []
     for place in plan.places:
         intercept, own = law.line(place.rest_length_mm)
-        lines.append(
+        rows.append(
             f"| {place.position} | {place.rest_length_mm:.2f} | {intercept:.2f} | {own:.2f} "
             f"| {law.gauge_factor(place.rest_length_mm):.4f} |"
         )
-    return [*lines, "", *_component_lines(truth, unit, slope, full), ""]
+    return rows
 
 
 def _component_lines(truth: GenerationTruth, unit: str, slope: float, full: float) -> list[str]:
@@ -100,6 +119,7 @@ def _stand_lines(truth: Truth) -> list[str]:
         f"| measured rest length | {stand.rest_length_mm:g} mm | sensor |",
         f"| built rest length about the nominal (known) | {stand.build_mm:g} mm | sensor |",
         f"| logged length about the one set | {stand.length_noise_mm:g} mm | sample |",
+        f"| place of a node, along x and y, about that stated | {stand.node_mm:g} mm | placement |",
         f"| temperature about {stand.temperature_c:g} °C | {stand.temperature_sd_c:g} K | mounting |",
         "",
         f"Temperature moves the signal by {stand.signal_per_kelvin:g} {truth.unit}/K.",

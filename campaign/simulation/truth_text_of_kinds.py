@@ -1,11 +1,11 @@
-"""What is true of loops, holds and influences, as lines of Markdown."""
+"""What is true of loops, holds, influences and layouts, as lines of Markdown."""
 
 from __future__ import annotations
 
 import numpy as np
 
 from campaign.simulation.plan import Plan
-from campaign.simulation.trial_plans import CyclicPlan, HoldPlan, SweepPlan
+from campaign.simulation.trial_plans import CyclicPlan, HoldPlan, LayoutPlan, SweepPlan
 from campaign.simulation.trial_truths import HoldTruth, InfluenceTruth
 from campaign.simulation.truth import GenerationTruth
 
@@ -23,6 +23,8 @@ def other_kinds_lines(plan: Plan, truth: GenerationTruth, unit: str) -> list[str
     ):
         if sweep is not None:
             lines += [*_influence_lines(name, sweep, influence, unit, of), ""]
+    if plan.layout is not None:
+        lines += [*layout_lines(plan.layout, truth, unit), ""]
     return lines
 
 
@@ -104,4 +106,21 @@ def _influence_lines(name: str, sweep: SweepPlan, truth: InfluenceTruth, unit: s
         f"- d = {truth.per_strain:g} {unit}/{of} per mm/mm; SD between sensors {truth.per_strain_sd:g}",
         f"- loop at mid range, rising minus falling: {truth.loop:g} {unit}, SD between sensors "
         f"{truth.loop_sd:g} {unit}",
+    ]
+
+
+def layout_lines(layout: LayoutPlan, truth: GenerationTruth, unit: str) -> list[str]:
+    """Return what is true of layout trials."""
+    parts = truth.components
+    return [
+        f"Layouts, {len(layout.placements)} placements of {len(layout.nodes)} nodes in the frame:",
+        "",
+        "- the columns of nodes hold the stated places; the sensors feel the true ones (see the stand)",
+        "- SD of a sensor's length about the distance of its nodes, drawn once a sensor and placement: "
+        f"{truth.layout.seat_mm:g} mm",
+        "- a sensor that came from a shorter length reads half the staircase's loop low, one that came from "
+        "a longer length half of it high",
+        f"- the frame is a mounting of its own: lines of session (SD {parts.session.intercept:g} {unit}) and "
+        f"repetition (SD {parts.repetition.intercept:g} {unit}), and a residual (SD {parts.residual:g} "
+        f"{unit}) a sensor and placement, as in staircases",
     ]

@@ -16,6 +16,7 @@ from campaign.pages.notes import make_notes, read_note_files
 from campaign.simulation import demo, simulate_recordings
 from campaign.simulation.__main__ import main
 from campaign.simulation.demo import demo_files, demo_plan, demo_truth
+from campaign.simulation.demo_braced import BRACED_NODES, BRACED_SCHEDULE, braced_plan
 from campaign.simulation.recording_text import recording_bytes
 
 FOLDER = Path(__file__).parents[2] / "demo_campaign"
@@ -68,7 +69,12 @@ def test_every_file_says_that_it_is_invented(made: dict[str, bytes]) -> None:
     assert "invented" in description["title"]
     assert "Invented" in description["description"]
     assert description["authors"][0]["name"] == "Invented Author"
-    for page in ("notes/the-stand.md", "notes/the-second-process.md", "notes/loops-holds-pressure.md"):
+    for page in (
+        "notes/the-stand.md",
+        "notes/the-second-process.md",
+        "notes/loops-holds-pressure.md",
+        "notes/shapes-from-lengths.md",
+    ):
         assert "(invented)" in made[page].decode().splitlines()[0]
 
 
@@ -78,10 +84,14 @@ def test_the_description_says_of_the_plan_what_the_plan_says(made: dict[str, byt
     assert nodes == demo.NODES
     assert description["range"]["strain"] == max(demo_plan().staircase.levels)
     assert description["campaign"]["first_day"] == demo.SCHEDULE.first_day
-    assert description["campaign"]["last_day"] == demo.SCHEDULE.last_day(demo_plan())
+    assert description["campaign"]["last_day"] == BRACED_SCHEDULE.last_day(braced_plan())
+    assert BRACED_SCHEDULE.first_day > demo.SCHEDULE.last_day(demo_plan())
+    braced = description["geometry"]["braced"]["nodes"]
+    assert {name: tuple(map(float, at)) for name, at in braced.items()} == BRACED_NODES
     stand = demo_truth().stand
     assert float(description["reference"]["length"]["scale"]) == stand.scale
     assert description["reference"]["length"]["zero"] == f"{stand.zero_mm:g} mm"
+    assert description["reference"]["node"] == f"{stand.node_mm:.1f} mm"
 
 
 def test_the_faults_are_there(made: dict[str, bytes]) -> None:
@@ -100,17 +110,24 @@ def test_the_faults_are_there(made: dict[str, bytes]) -> None:
 
 
 def test_other_kinds_leave_the_staircases_as_they_are(made: dict[str, bytes]) -> None:
-    alone = replace(demo_plan(), cyclic=None, holds=(), pressure=None, thermal=None)
+    alone = replace(demo_plan(), cyclic=None, holds=(), pressure=None, thermal=None, layout=None)
     without = {file.file: file for file in simulate_recordings(alone, demo_truth(), demo.SEED, demo.SCHEDULE)}
     whole = simulate_recordings(demo_plan(), demo_truth(), demo.SEED, demo.SCHEDULE)
     stairs = {file.file: file for file in whole if "_cal_" in file.file}
     assert stairs.keys() == without.keys()
     assert all(recording_bytes(stairs[path]) == recording_bytes(file) for path, file in without.items())
-    assert sum("_cal_" not in path for path in made if path.startswith("trials/")) == len(whole) - len(stairs)
+    panels = [path for path in made if path.startswith("trials/") and path.split("/")[1] <= "M12"]
+    assert sum("_cal_" not in path for path in panels) == len(whole) - len(stairs)
 
 
 def test_every_kind_is_there_in_both_generations(made: dict[str, bytes]) -> None:
-    words = {"loop": "cyclic", "hold": "hold", "inflate": "pressure", "warm": "thermal"}
+    words = {
+        "loop": "cyclic",
+        "hold": "hold",
+        "inflate": "pressure",
+        "warm": "thermal",
+        "layout": "layout",
+    }
     named = tomllib.loads(made["campaign.toml"].decode())["recordings"]["kinds"]
     assert {word: named.get(word, word) for word in words} == words
     for word in words:
@@ -170,6 +187,7 @@ def test_the_notes_are_shown_whole_with_their_picture() -> None:
     notes = make_notes(read_note_files(FOLDER))
     assert [page.title for page in notes.pages] == [
         "Loops, holds, inflation and warmth (invented)",
+        "Shapes from lengths (invented)",
         "The second process (invented)",
         "The stand (invented)",
     ]
