@@ -143,7 +143,8 @@ class Trial:
 
     Every array has shape (rows,), float64, NaN where missing; ``None`` where not recorded. ``reference`` says
     in which of ``length_mm``, ``elongation_mm`` or ``strain`` the stand's value was recorded; the others are
-    derived from the rest length where it is known.
+    derived from the rest length where it is known. ``placement`` numbers the placements of a layout trial;
+    ``nodes`` holds the recorded positions of all nodes of the file, (rows, 2) in mm by name.
     """
 
     identity: TrialIdentity
@@ -160,6 +161,8 @@ class Trial:
     temperature_c: FloatArray | None = None
     humidity_percent: FloatArray | None = None
     cycle: FloatArray | None = None
+    placement: FloatArray | None = None
+    nodes: dict[str, FloatArray] = field(default_factory=dict)
     line_numbers: npt.NDArray[np.int64] | None = None
     time_is_ordered: bool = True
     signal_resolution: float = float("nan")

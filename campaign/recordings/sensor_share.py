@@ -200,6 +200,8 @@ def _build(
         temperature_c=of_trial.values("temperature"),
         humidity_percent=of_trial.values("humidity"),
         cycle=of_trial.values("cycle"),
+        placement=of_trial.values("placement"),
+        nodes=of_trial.nodes(),
         line_numbers=recording.line_numbers,
         time_is_ordered=time is None or _is_ordered(time),
         signal_resolution=resolution.resolution if resolution.unit == signal.unit else float("nan"),
@@ -248,6 +250,16 @@ class _Columns:
     def node(self, quantity: str, node: str) -> Channel | None:
         """A column of one node's position."""
         return self._first(c for c in self.channels if c.quantity == quantity and c.node == node)
+
+    def nodes(self) -> dict[str, FloatArray]:
+        """Positions (x, y) of all nodes that have columns for both, shape (rows, 2) by name."""
+        names = dict.fromkeys(c.node for c in self.channels if c.quantity == "node_x" and c.node is not None)
+        pairs = {name: (self.node("node_x", name), self.node("node_y", name)) for name in names}
+        return {
+            name: np.column_stack([x.values, y.values])
+            for name, (x, y) in pairs.items()
+            if x is not None and y is not None
+        }
 
     def values(self, quantity: str) -> FloatArray | None:
         """Values of the sensor's own column, else of the file's."""
@@ -380,6 +392,7 @@ _SERIES = (
     "temperature_c",
     "humidity_percent",
     "cycle",
+    "placement",
     "line_numbers",
 )
 
@@ -387,7 +400,8 @@ _SERIES = (
 def _rows(trial: Trial, rows: slice, number: int) -> Trial:
     cut = {name: values[rows] for name in _SERIES if (values := getattr(trial, name)) is not None}
     identity = replace(trial.identity, repetition=trial.identity.repetition + number)
-    part = replace(trial, identity=identity, **cut)
+    nodes = {name: places[rows] for name, places in trial.nodes.items()}
+    part = replace(trial, identity=identity, nodes=nodes, **cut)
     return replace(part, time_is_ordered=part.time_s is None or _is_ordered(part.time_s))
 
 
