@@ -178,6 +178,9 @@ NOTICE_CODES: dict[str, str] = {
     "split-at-restarts": "a recording is split where its time restarts, as the description says",
     # Trials and readings
     "reference-not-known": "no length, elongation or strain is known in a staircase: no readings",
+    "no-node-positions": "a layout trial records no node's position: no shape is rebuilt from it",
+    "no-placements": "no placement of a layout trial has a signal",
+    "placement-without-signal": "a placement holds no signal of a sensor at all",
     "no-plateaus": "no stretches of constant reference in a log: it gives no readings",
     "too-few-readings": "fewer than two usable plateaus or rows: no readings are taken",
     "missing-values": "rows without a reference or a signal are left out, counted",
