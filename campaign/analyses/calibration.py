@@ -31,6 +31,7 @@ from campaign.analyses.calibration_lines import (
 )
 from campaign.analyses.calibration_spread import hysteresis_frame, repeatability_frame
 from campaign.analyses.length_lines import LengthLine, length_line
+from campaign.analyses.line_sources import LineSources, line_sources
 from campaign.analyses.sensor_lines import sensor_lines_frame
 from campaign.analyses.used_readings import REST, UsedReadings, used_readings
 from campaign.analyses.weighted_readings import with_weights
@@ -165,6 +166,8 @@ class Calibration:
         What the whole campaign's lines must be read with, by short name.
     notices
         Outlying readings, sensors without a line.
+    line_sources
+        One a sensor and branch: what the variance of a reading by it consists of, each source once.
     """
 
     reference: ReferenceQuantity
@@ -178,6 +181,7 @@ class Calibration:
     shared_reference: SharedReference
     labels: dict[str, str] = field(default_factory=dict)
     notices: tuple[Notice, ...] = ()
+    line_sources: tuple[LineSources, ...] = ()
 
 
 def analyse_calibration(
@@ -218,6 +222,7 @@ def analyse_calibration(
         shared_reference(used, description, reference),
         campaign_labels(used, lines, description, reference),
         (*_without_line(used, lines), *outlying_notices(table)),
+        tuple(line_sources(line, used) for line in lines),
     )
 
 

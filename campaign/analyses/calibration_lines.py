@@ -15,12 +15,14 @@ from campaign.analyses.used_readings import FALLING, RISING, TURNING, UsedReadin
 from campaign.methods.calibration_line import (
     GroupLines,
     LackOfFit,
+    at_zero,
     fit_lines,
     lack_of_fit_of_runs,
     line_of_runs,
     pooled_lack_of_fit,
 )
 from campaign.methods.run_spread import (
+    ONE_MOUNTING,
     RunScatter,
     RunSpread,
     line_of_mountings,
@@ -71,10 +73,15 @@ class BranchLine:
         it; NaN with one run and nothing to pool with.
     fit_covariance, fit_variance
         ``covariance`` before the uncertainty of the reference is added, and what it makes at the mean x.
+    mounting_covariance, mountings
+        The part of ``run_covariance`` that a new mounting makes, and whether it is told from runs
+        (:data:`campaign.methods.run_spread.APART` and its like).
+    reference_covariance
+        What the uncertainty of the reference adds to ``fit_covariance``.
     residual_sd
         SD within runs about the runs' own lines.
-    residual_variance, lack_of_fit_variance
-        Noise of one reading about its run, without and of lack of fit.
+    residual_variance, residual_degrees, lack_of_fit_variance
+        Noise of one reading about its run, without lack of fit, its degrees of freedom, and lack of fit.
     lack_of_fit
         The test of level against level × run within directions; None where it cannot be made.
     hysteresis
@@ -105,8 +112,12 @@ class BranchLine:
     fit_covariance: FloatArray
     fit_variance: float
     run_covariance: FloatArray
+    mounting_covariance: FloatArray
+    mountings: str
+    reference_covariance: FloatArray
     residual_sd: float
     residual_variance: float
+    residual_degrees: float
     lack_of_fit_variance: float
     lack_of_fit: LackOfFit | None
     hysteresis: StepHysteresis | None
@@ -372,7 +383,8 @@ def _pools(
 def _spread_of(fit: _RunFits, pool: _Pool) -> tuple[RunSpread, str]:
     """Spread of true run lines for one sensor and where it is from; NaN where it is unknown."""
     if fit.degrees == 0 or pool.scatter is None:
-        return RunSpread(np.full((2, 2), np.nan), np.full((2, 2), np.nan), float("nan")), UNKNOWN
+        unknown = np.full((2, 2), np.nan)
+        return RunSpread(unknown, unknown, float("nan"), ONE_MOUNTING), UNKNOWN
     own = fit.scatter
     if fit.degrees >= ENOUGH_OWN_DEGREES or pool.sensors < 2 or _scatters_more(own, pool.scatter):
         return spread_of_runs(own), OWN_RUNS
@@ -442,8 +454,12 @@ def _branch_line(
         fit_covariance,
         float(combined.covariance[0, 0]) if known else float("nan"),
         run_covariance if known else np.full((2, 2), np.nan),
+        at_zero(spread.mounting, fit.centre),
+        spread.mountings,
+        shared,
         fit.residual_sd,
         fit.noise,
+        fit.noise_degrees,
         fit.lack.variance if fit.lack is not None else 0.0,
         fit.lack,
         hysteresis,

@@ -339,7 +339,14 @@ class LineOfRuns:
     def raw(self) -> tuple[FloatArray, FloatArray, FloatArray]:
         """Coefficients, covariance and run covariance as intercept (at x = 0) and slope."""
         back = np.array([[1.0, -self.centre], [0.0, 1.0]])
-        return back @ self.coefficients, back @ self.covariance @ back.T, back @ self.run_covariance @ back.T
+        covariances = at_zero(self.covariance, self.centre), at_zero(self.run_covariance, self.centre)
+        return back @ self.coefficients, *covariances
+
+
+def at_zero(covariance: FloatArray, centre: float) -> FloatArray:
+    """Return the covariance of (intercept at x = 0, slope) from that of (value at *centre*, slope)."""
+    back = np.array([[1.0, -centre], [0.0, 1.0]])
+    return np.asarray(back @ covariance @ back.T)
 
 
 def scatter_of_runs(coefficients: FloatArray) -> FloatArray:

@@ -58,17 +58,25 @@ class RunScatter:
         )
 
 
+APART = "apart"
+TOGETHER = "together"
+ONE_MOUNTING = "one mounting"
+"""Mountings are told from runs; each run was a mounting of its own; no mounting was repeated."""
+
+
 @dataclass(frozen=True)
 class RunSpread:
     """Covariances of true lines, (2, 2): of mountings about the sensor, of runs about their mounting.
 
     ``degrees_of_freedom`` are those of the spread of a new run in a new mounting (Satterthwaite), at the
-    centre.
+    centre. ``mountings`` says what is known of remounting: :data:`APART` from runs, :data:`TOGETHER` with them
+    in ``run``, or :data:`ONE_MOUNTING`.
     """
 
     mounting: FloatArray
     run: FloatArray
     degrees_of_freedom: float
+    mountings: str
 
     @property
     def new_run(self) -> FloatArray:
@@ -114,7 +122,8 @@ def spread_of_runs(scatter: RunScatter) -> RunSpread:
     noise = scatter.noise / scatter.degrees
     if scatter.within_degrees == 0 or scatter.between_degrees == 0:
         observed = (scatter.between + scatter.within) / scatter.degrees
-        return RunSpread(np.zeros((2, 2)), run_covariance(observed, noise), float(scatter.degrees))
+        known = ONE_MOUNTING if scatter.between_degrees == 0 else TOGETHER
+        return RunSpread(np.zeros((2, 2)), run_covariance(observed, noise), float(scatter.degrees), known)
     size = scatter.sizes / scatter.between_degrees
     between = scatter.between / scatter.between_degrees
     inside = scatter.within / scatter.within_degrees
@@ -123,7 +132,7 @@ def spread_of_runs(scatter: RunScatter) -> RunSpread:
     parts = float(between[0, 0] / size), float((1.0 - 1.0 / size) * inside[0, 0])
     spent = parts[0] ** 2 / scatter.between_degrees + parts[1] ** 2 / scatter.within_degrees
     degrees = sum(parts) ** 2 / spent if spent > 0 else float(scatter.degrees)
-    return RunSpread(mounting, run, degrees)
+    return RunSpread(mounting, run, degrees, APART)
 
 
 def line_of_mountings(
