@@ -7,6 +7,7 @@ from typing import Any
 
 import pandas as pd
 
+from campaign.analyses.layout_signals import geometry_of
 from campaign.analyses.loop_table import BY_LINE
 from campaign.analyses.results import CampaignResults
 from campaign.pages.skin_map import MapFigure, MapSensor, Point, SkinMap, skin_map
@@ -54,18 +55,11 @@ def map_sensors(results: CampaignResults) -> list[MapSensor]:
     for row in intake.sensors.to_dict("records"):
         module, sensor = str(row["module"]), str(row["sensor"])
         details = modules.get(module, {})
-        ends = _ends(row, _geometry(details, results.description.geometries))
+        named = str(details.get("geometry", "") or "")
+        ends = _ends(row, geometry_of(named, results.description.geometries))
         generation = str(details.get("generation", ""))
         made.append(MapSensor(generation, module, sensor, ends, (module, sensor) not in used))
     return made
-
-
-def _geometry(module: Mapping[Hashable, Any], geometries: Mapping[str, Geometry]) -> Geometry | None:
-    """Return a module's geometry: the one that its register names, else the only one there is."""
-    named = str(module.get("geometry", "") or "")
-    if named:
-        return geometries.get(named)
-    return next(iter(geometries.values())) if len(geometries) == 1 else None
 
 
 def _ends(sensor: Mapping[Hashable, Any], geometry: Geometry | None) -> tuple[Point, Point] | None:
