@@ -58,7 +58,7 @@ class MeanLine:
 
 
 def mean_lines(fit: GenerationFit) -> dict[str, MeanLine]:
-    """Return the mean line at every position of a fit of one generation; at all alike where none is told apart."""
+    """Return the mean line at every position of one generation; the same at all where none is told apart."""
     positions = fit.model.readings["position"].astype(str).to_numpy()
     x = fit.model.readings["x"].to_numpy(float)
     apart = fit.model.counts.position_terms > 0
@@ -119,16 +119,15 @@ def read_by_generation_line(
     lengths, per_x = into_length(x, rest, calibration.reference.name)
     per_mm = per_x / slope
     seen = fit.model.readings["x"].to_numpy(float)
-    low, high = (into_length(np.full_like(x, end), rest, calibration.reference.name)[0] for end in
-    _ends(seen)) parts = _parts(table, fit, lines, x, per_mm)
+    low, high = (
+        into_length(np.full_like(x, end), rest, calibration.reference.name)[0]
+        for end in (float(seen.min()), float(seen.max()))
+    )
+    parts = _parts(table, fit, lines, x, per_mm)
     shared = _reference(table, lengths, rest, x, calibration, description)
     run = codes_of(table, ["module", "trial", "repetition"])
     last = [SharedPart("temperature", temperature[:, None], run)]
     return combined(lengths, iter([*parts, *shared, *last]), (low, high), {})
-
-
-def _ends(x: FloatArray) -> tuple[float, float]:
-    return float(x.min()), float(x.max())
 
 
 def _parts(

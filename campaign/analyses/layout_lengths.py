@@ -117,7 +117,7 @@ def mounting_columns(table: pd.DataFrame) -> list[str]:
 
 
 def shared_share(fit: GenerationFit | None) -> float:
-    """Return the share of the variance between runs that sensors of a shared run have in common, at mid range."""
+    """Return the share of the variance between runs, at mid range, that sensors of one run have in common."""
     if fit is None:
         return 0.0
     place = np.array([1.0, fit.places["mid"]])
@@ -242,8 +242,9 @@ def _own_parts(
     yield SharedPart("lack of fit", _row_factors(lines, "lack_of_fit"))
     loop = np.array([s.half_loop if s is not None else np.nan for s in lines.sources])
     yield SharedPart("direction", (lines.per_mm * loop)[:, None])
-    noise = np.fmax(_row_factors(lines, "noise")[:, 0], lines.per_mm *
-    table["standard_error"].to_numpy(float)) yield SharedPart("noise", noise[:, None])
+    own_error = np.abs(lines.per_mm) * table["standard_error"].to_numpy(float)
+    noise = np.fmax(_row_factors(lines, "noise")[:, 0], own_error)
+    yield SharedPart("noise", noise[:, None])
 
 
 def _row_factors(lines: OwnLines, name: str) -> FloatArray:
@@ -343,9 +344,7 @@ def _approach(table: pd.DataFrame, calibration: Calibration) -> FloatArray:
     sign = {"rising": 1.0, "falling": -1.0}
     branch: dict[tuple[str, str, str], float] = {}
     for record in calibration.records:
-        branch.setdefault(
-            (record.generation, record.module, record.sensor), sign.get(record.branch, 0.0)
-        )
+        branch.setdefault((record.generation, record.module, record.sensor), sign.get(record.branch, 0.0))
     keys = zip(table["generation"], table["module"], table["sensor"], strict=True)
     return np.array([branch.get(key, 0.0) for key in keys])
 
@@ -378,12 +377,12 @@ def temperature_factors(
     keys = ["generation", "module", "sensor"]
     per_kelvin = coefficients.drop_duplicates(keys).set_index(keys)["strain_equivalent"]
     known = per_kelvin.reindex(pd.MultiIndex.from_frame(table[keys])).to_numpy(float)
-    usual = per_kelvin.abs().groupby(level=0).mean().reindex(table["generation"]).to_numpy(float)
-    apparent = np.where(np.isfinite(known), np.abs(known), usual)
+    usual = per_kelvin.groupby(level=0).mean().reindex(table["generation"]).to_numpy(float)
+    apparent = np.where(np.isfinite(known), known, usual)
     used = calibration.readings[calibration.readings["used"].astype(bool)]
     means = used.groupby(keys)["temperature_c"].mean().reindex(pd.MultiIndex.from_frame(table[keys]))
     difference = table["temperature_c"].to_numpy(float) - means.to_numpy(float)
-    kelvin = np.where(np.isfinite(difference), np.abs(difference), _range_in_use(description))
+    kelvin = np.where(np.isfinite(difference), difference, _range_in_use(description))
     factors = np.nan_to_num(apparent * kelvin * table["rest_length_mm"].to_numpy(float))
     return factors, "temperature against that of calibration is in the ellipses, not corrected for"
 
