@@ -92,6 +92,15 @@ def _parser() -> argparse.ArgumentParser:
     begin = commands.add_parser("begin", help="look at a tree of recordings and write a first campaign.toml")
     begin.add_argument("folder", metavar="FOLDER", type=Path, help="the folder that holds the recordings")
     begin.set_defaults(run=_begin)
+
+    rehearse = commands.add_parser("rehearse", help="make the synthetic campaign of a planned design")
+    rehearse.add_argument(
+        "plan", metavar="PLAN", type=Path, help="a TOML file with [plan] and [plan.components]"
+    )
+    rehearse.add_argument(
+        "--into", metavar="FOLDER", type=Path, required=True, help="folder to write the rehearsal to"
+    )
+    rehearse.set_defaults(run=_rehearse)
     return parser
 
 
@@ -132,6 +141,12 @@ def _begin(options: argparse.Namespace) -> int:
     print(f"{path} is written. Every guess in it is marked; look them through, then run:")
     print(f"  campaign inspect {options.folder}")
     return DONE
+
+
+def _rehearse(options: argparse.Namespace) -> int:
+    from campaign.rehearsal import rehearse
+
+    return rehearse(options.plan, options.into)
 
 
 def _say_stops(stops: CampaignStops) -> None:

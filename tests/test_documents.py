@@ -24,6 +24,7 @@ START, END = "<!-- notices: written by tests/test_documents.py -->", "<!-- end o
 LADDER = (
     "cli",
     "pipeline",
+    "rehearsal",
     "provenance",
     "pages",
     "analyses",
@@ -56,10 +57,11 @@ def _help(capsys: pytest.CaptureFixture[str], *words: str) -> str:
 
 def test_every_command_and_option_is_in_the_readme(capsys: pytest.CaptureFixture[str]) -> None:
     commands = re.findall(r"^    ([a-z]+)  ", _help(capsys), re.MULTILINE)
-    assert {"report", "inspect", "begin"} <= set(commands)
+    assert {"report", "inspect", "begin", "rehearse"} <= set(commands)
     for command in commands:
         words = _help(capsys, command)
-        assert f"`campaign {command} FOLDER`" in README
+        read = "PLAN" if " PLAN\n" in words else "FOLDER"
+        assert f"`campaign {command} {read}" in README
         for option in set(re.findall(r"--[a-z][a-z-]+", words)) - {"--help"}:
             assert f"`{option}" in README, f"{command} {option}"
     assert "`campaign --version`" in README
@@ -103,7 +105,7 @@ def _may_import(room: str, other: str) -> bool:
     if room == "methods":
         return other == "units"
     if other == "simulation":
-        return room in ("cli", "pipeline")
+        return room in ("cli", "pipeline", "rehearsal")
     return LADDER.index(room) < LADDER.index(other)
 
 

@@ -6,6 +6,7 @@ from dataclasses import dataclass, field
 
 from campaign.notices import Notice
 from campaign.recordings.name_pattern import KEYS
+from campaign.recordings.planned_design import PlannedDesign
 from campaign.units import QUANTITY_FAMILIES
 
 DESCRIPTION_FILE = "campaign.toml"
@@ -61,6 +62,7 @@ USE_FAMILIES: dict[str, tuple[str, ...]] = {
     "temperature_range": ("temperature difference",),
     "pressure": ("pressure",),
     "rate": ("rate", "speed"),
+    "transverse_strain": ("strain",),
 }
 """Keys of ``[use]`` that are quantities."""
 
@@ -141,8 +143,9 @@ class Description:
     ``strain_error``, ``pressure_error``, ``node_error``) to (value, unit). ``kinds`` maps the lab's own
     word to our kind. ``same`` holds ``[recordings.same]``. ``use`` holds ``[use]`` as written.
     ``range_strain`` and ``range_elongation_mm`` are NaN where not given. ``plan`` and ``earlier`` are
-    kept as read. ``text`` is the file as it stands (for provenance). ``notices`` are remarks that do not
-    stop.
+    kept as read; ``planned`` is the plan checked, ``None`` where there is none that could be rehearsed.
+    ``simulated`` says that the recordings are invented, ``rehearsal`` that they were made from the plan.
+    ``text`` is the file as it stands (for provenance). ``notices`` are remarks that do not stop.
     """
 
     title: str
@@ -178,5 +181,7 @@ class Description:
     plot_library: str | None = None
     earlier: tuple[dict[str, str], ...] = ()
     plan: dict[str, object] = field(default_factory=dict)
+    planned: PlannedDesign | None = None
     simulated: bool = False
+    rehearsal: bool = False
     notices: tuple[Notice, ...] = ()

@@ -28,11 +28,10 @@ from campaign.recordings.description import (
 )
 from campaign.recordings.file_glob import glob_expression, leaves_the_folder
 from campaign.recordings.name_pattern import KEYS, PatternError, compile_pattern
+from campaign.recordings.plan_table import FORM_CODES, check_plan_file, read_plan
 from campaign.recordings.register import shown
 from campaign.recordings.toml_tables import CheckedTable, FaultList, suggestion
-from campaign.units import QUANTITY_FAMILIES, UnitError, find_unit, parse_quantity
-
-_LONGEST_NUMBER = re.compile(r"[eE][+-]?\d{4,}")
+from campaign.units import QUANTITY_FAMILIES, UnitError, find_unit
 
 
 def load_description(folder: Path) -> Description:
@@ -74,11 +73,37 @@ def _description_missing(folder: Path, fault: OSError) -> Notice:
 
 def read_description(data: bytes, folder_name: str = "campaign") -> Description:
     """Read a description from the bytes of its file (see :func:`load_description`)."""
-    faults = FaultList(DESCRIPTION_FILE, "")
+    return _read(data, FaultList(DESCRIPTION_FILE, ""), folder_name, to_rehearse=False)
+
+
+def read_plan_file(data: bytes, name: str) -> Description:
+    """Read a plan that is to be rehearsed: a description with ``[plan]`` and without recordings.
+
+    Parameters
+    ----------
+    data
+        The file.
+    name
+        Of the file, for faults.
+
+    Returns
+    -------
+    Description
+        Its ``planned`` is the design.
+
+    Raises
+    ------
+    CampaignStops
+        With everything that keeps the plan from being rehearsed.
+    """
+    return _read(data, FaultList(name, "", done="nothing is written"), "Rehearsal", to_rehearse=True)
+
+
+def _read(data: bytes, faults: FaultList, folder_name: str, to_rehearse: bool) -> Description:
     values = _parse(data, faults)
     if values is None:
         raise CampaignStops(faults.notices)
-    description = _read_top(CheckedTable(values, faults), folder_name)
+    description = _read_top(CheckedTable(values, faults), folder_name, to_rehearse)
     if faults.notices:
         raise CampaignStops(faults.notices)
     return description
@@ -117,7 +142,7 @@ class _Remarks:
         self.notices.append(Notice(code, "noted", DESCRIPTION_FILE, line, None, what, done, remedy))
 
 
-def _read_top(top: CheckedTable, folder_name: str) -> Description:
+def _read_top(top: CheckedTable, folder_name: str, to_rehearse: bool) -> Description:
     remarks = _Remarks()
     _check_format(top, remarks)
     sections = [
@@ -130,6 +155,7 @@ def _read_top(top: CheckedTable, folder_name: str) -> Description:
         _read_limits(top.table("limits")),
         _read_rest(top),
     ]
+    sections.append(_read_plan(top, sections, to_rehearse))
     columns = tuple(_read_column(table) for table in top.tables("columns"))
     top.finish()
     merged = {key: value for section in sections for key, value in section.items()}
@@ -158,7 +184,12 @@ def _read_campaign(
         )
     if table is None:
         return {"title": folder_name}
-    values: dict[str, object] = {"title": title or folder_name, "simulated": table.truth("simulated")}
+    simulated, rehearsal = table.truth("simulated"), table.truth("rehearsal")
+    values: dict[str, object] = {
+        "title": title or folder_name,
+        "simulated": simulated or rehearsal,
+        "rehearsal": rehearsal,
+    }
     values |= {key: table.text(key) for key in ("description", "licence")}
     values |= {key: table.day(key) for key in ("date", "first_day", "last_day")}
     values["authors"] = tuple(_read_author(author) for author in table.tables("authors"))
@@ -280,7 +311,7 @@ def _read_column(table: CheckedTable) -> ColumnRule:
         repetition=table.whole_number("repetition"),
         node=table.word("node") or None,
         along=table.texts("along"),
-        offset_mm=_quantity(table, "offset", ("length",), bare_unit="mm", default=0.0),
+        offset_mm=table.quantity("offset", ("length",), bare_unit="mm", default=0.0),
     )
     _check_column(table, rule, quantity)
     table.finish()
@@ -312,45 +343,8 @@ def _braces(header: str) -> list[str]:
     return re.findall(r"\{(\w*)\}", header)
 
 
-def _quantity_and_unit(
-    table: CheckedTable,
-    key: str,
-    families: tuple[str, ...],
-    bare_unit: str = "",
-    default: float = float("nan"),
-) -> tuple[float, str]:
-    """Take a quantity in its canonical unit; a bare number is in *bare_unit*."""
-    value = table.take(key)
-    if value is None:
-        return default, ""
-    if isinstance(value, bool) or not isinstance(value, str | int | float):
-        table.fault(
-            "wrong-type", key, f"{value!r} is no quantity", 'write a number with a unit, such as "0.05 mm"'
-        )
-        return default, ""
-    text = value.strip() if isinstance(value, str) else f"{value!r} {bare_unit}"
-    try:
-        if _LONGEST_NUMBER.search(text):
-            raise UnitError(f"'{text}' is out of all bounds")
-        quantity = parse_quantity(text, families)
-    except (UnitError, OverflowError) as fault:
-        table.fault("wrong-unit", key, str(fault), f"state a quantity of {' or '.join(families)}")
-        return default, ""
-    return quantity.value, quantity.unit
-
-
-def _quantity(
-    table: CheckedTable,
-    key: str,
-    families: tuple[str, ...],
-    bare_unit: str = "",
-    default: float = float("nan"),
-) -> float:
-    return _quantity_and_unit(table, key, families, bare_unit, default)[0]
-
-
 def _uncertainty(table: CheckedTable, key: str, families: tuple[str, ...]) -> tuple[float, str]:
-    value, unit = _quantity_and_unit(table, key, families)
+    value, unit = table.quantity_and_unit(key, families)
     if value < 0:
         table.fault(
             "wrong-value", key, "a standard uncertainty is not negative", "write it as a positive number"
@@ -427,7 +421,7 @@ def _read_readout(table: CheckedTable | None) -> dict[str, object]:
     if table is None:
         return {}
     for key, families in READOUT_FAMILIES.items():
-        _quantity(table, key, families)
+        table.quantity(key, families)
     table.text("instrument")
     table.choice("model", ("parallel", "series"), "model")
     table.truth("open_correction")
@@ -439,7 +433,7 @@ def _read_use(table: CheckedTable | None) -> dict[str, object]:
     if table is None:
         return {}
     for key, families in USE_FAMILIES.items():
-        _quantity(table, key, families)
+        table.quantity(key, families)
     table.choice("direction", ("unknown", "rising", "falling"), "direction")
     table.finish()
     return {"use": table.words()}
@@ -449,8 +443,8 @@ def _read_range(table: CheckedTable | None) -> dict[str, object]:
     if table is None:
         return {}
     values = {
-        "range_strain": _quantity(table, "strain", ("strain",)),
-        "range_elongation_mm": _quantity(table, "elongation", ("length",), bare_unit="mm"),
+        "range_strain": table.quantity("strain", ("strain",)),
+        "range_elongation_mm": table.quantity("elongation", ("length",), bare_unit="mm"),
     }
     for key, value in zip(("strain", "elongation"), values.values(), strict=True):
         if value <= 0:
@@ -464,7 +458,7 @@ def _read_limits(table: CheckedTable | None) -> dict[str, object]:
         return {}
     values: dict[str, object] = {
         "limits": {
-            key: _quantity_and_unit(table, key, families)
+            key: table.quantity_and_unit(key, families)
             for key, families in LIMIT_FAMILIES.items()
             if key in table.values
         }
@@ -481,7 +475,7 @@ def _read_limits(table: CheckedTable | None) -> dict[str, object]:
 def _read_margin(margins: CheckedTable, key: str) -> tuple[float, str]:
     """Read an equivalence margin: the figures have many units, so any known unit is taken here."""
     families = (*SHARE_OF_FULL_SCALE, "ratio", *REFERENCE_FAMILIES, "time", *QUANTITY_FAMILIES["signal"])
-    return _quantity_and_unit(margins, key, families)
+    return margins.quantity_and_unit(key, families)
 
 
 def _read_rest(top: CheckedTable) -> dict[str, object]:
@@ -493,7 +487,7 @@ def _read_rest(top: CheckedTable) -> dict[str, object]:
             table.path[-1]: _read_geometry(table) for table in tables if table is not None
         }
     if (electrode := top.table("electrode")) is not None:
-        values["electrode_resistance_ohm"] = _quantity(electrode, "resistance", ("resistance",))
+        values["electrode_resistance_ohm"] = electrode.quantity("resistance", ("resistance",))
         electrode.finish()
     if (costs := top.table("costs")) is not None:
         values["costs"] = {key: costs.number(key) for key in _COSTS if costs.take(key) is not None}
@@ -502,9 +496,21 @@ def _read_rest(top: CheckedTable) -> dict[str, object]:
         values["plot_library"] = site.text("plot_library") or None
         site.finish()
     values["earlier"] = tuple(_read_earlier(table) for table in top.tables("earlier"))
-    if (plan := top.table("plan")) is not None:
-        values["plan"] = _read_plan(plan)
     return values
+
+
+def _read_plan(top: CheckedTable, sections: list[dict[str, object]], to_rehearse: bool) -> dict[str, object]:
+    """Read ``[plan]``; what only a rehearsal needs of it does not stop a description."""
+    if to_rehearse:
+        check_plan_file(top)
+    if (table := top.table("plan")) is None:
+        return {}
+    read = {key: value for section in sections for key, value in section.items()}
+    geometries: dict[str, Geometry] = read.get("geometries", {})  # type: ignore[assignment]
+    range_strain: float = read.get("range_strain", float("nan"))  # type: ignore[assignment]
+    planned, faults = read_plan(table, geometries, range_strain)
+    top.faults.notices += [fault for fault in faults if to_rehearse or fault.code in FORM_CODES]
+    return {"plan": dict(table.values), "planned": planned}
 
 
 _COSTS = ("module", "sensor", "repetition")
@@ -518,32 +524,6 @@ def _read_earlier(table: CheckedTable) -> dict[str, str]:
         )
     table.finish()
     return {"folder": folder}
-
-
-def _read_plan(plan: CheckedTable) -> dict[str, object]:
-    for key in ("generations", "modules", "sensors", "repetitions"):
-        plan.whole_number(key)
-    _check_levels(plan)
-    components = plan.table("components")
-    if components is not None:
-        for key in components.values:
-            if isinstance(components.values[key], str):
-                _quantity(components, key, ("ratio", *REFERENCE_FAMILIES, *QUANTITY_FAMILIES["signal"]))
-            else:
-                components.number(key)
-    plan.finish()
-    return dict(plan.values)
-
-
-def _check_levels(plan: CheckedTable) -> None:
-    levels = plan.take("levels")
-    if levels is None or (isinstance(levels, int) and not isinstance(levels, bool) and levels > 1):
-        return
-    if isinstance(levels, list) and all(_is_number(level) for level in levels):
-        return
-    plan.fault(
-        "wrong-type", "levels", f"{levels!r} is neither a count nor a list of numbers", "write levels = 8"
-    )
 
 
 def _is_number(value: object) -> bool:

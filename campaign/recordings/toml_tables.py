@@ -9,7 +9,9 @@ from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
 
 from campaign.notices import Notice
+from campaign.units import UnitError, parse_quantity
 
+_LONGEST_NUMBER = re.compile(r"[eE][+-]?\d{4,}")
 _HEADER = re.compile(r"\s*(\[\[?)\s*([^\[\]]+?)\s*\]")
 
 
@@ -95,19 +97,20 @@ class FaultList:
         The file as it stands, for finding lines.
     notices
         What was found so far, of weight ``"stops"``.
+    done
+        What the program does about a fault.
     """
 
     file: str
     text: str
     notices: list[Notice] = field(default_factory=list)
+    done: str = "the campaign is not read"
 
     def add(
         self, code: str, what: str, remedy: str, line: int | None = None, column: int | None = None
     ) -> None:
         """Note one fault that stops the campaign."""
-        self.notices.append(
-            Notice(code, "stops", self.file, line, column, what, "the campaign is not read", remedy)
-        )
+        self.notices.append(Notice(code, "stops", self.file, line, column, what, self.done, remedy))
 
 
 @dataclass
@@ -193,6 +196,41 @@ class CheckedTable:
             return float(value)
         self._wrong(key, value, "a number")
         return default
+
+    def quantity_and_unit(
+        self,
+        key: str,
+        families: tuple[str, ...],
+        bare_unit: str = "",
+        default: float = float("nan"),
+    ) -> tuple[float, str]:
+        """Take a quantity of some unit families in its canonical unit; a bare number is in *bare_unit*."""
+        value = self.take(key)
+        if value is None:
+            return default, ""
+        if isinstance(value, bool) or not isinstance(value, str | int | float):
+            what, remedy = f"{value!r} is no quantity", 'write a number with a unit, such as "0.05 mm"'
+            self.fault("wrong-type", key, what, remedy)
+            return default, ""
+        text = value.strip() if isinstance(value, str) else f"{value!r} {bare_unit}"
+        try:
+            if _LONGEST_NUMBER.search(text):
+                raise UnitError(f"'{text}' is out of all bounds")
+            quantity = parse_quantity(text, families)
+        except (UnitError, OverflowError) as fault:
+            self.fault("wrong-unit", key, str(fault), f"state a quantity of {' or '.join(families)}")
+            return default, ""
+        return quantity.value, quantity.unit
+
+    def quantity(
+        self,
+        key: str,
+        families: tuple[str, ...],
+        bare_unit: str = "",
+        default: float = float("nan"),
+    ) -> float:
+        """Take a quantity as :meth:`quantity_and_unit` does, without its unit."""
+        return self.quantity_and_unit(key, families, bare_unit, default)[0]
 
     def whole_number(self, key: str, least: int = 1) -> int | None:
         """Take a whole number of at least *least*."""

@@ -84,6 +84,7 @@ SCHEDULE = Schedule(date(2025, 2, 3))
 
 TEXTS = {
     "campaign.toml": "description.toml",
+    "plans/next_panels.toml": "next_panels.toml",
     "notes/the-stand.md": "notes/the-stand.md",
     "notes/the-second-process.md": "notes/the-second-process.md",
     "notes/loops-holds-pressure.md": "notes/loops-holds-pressure.md",
