@@ -76,7 +76,7 @@ def _mean_line(fit: GenerationFit, rows: npt.NDArray[np.bool_], x: FloatArray) -
     loop = columns[:, branches] @ coefficients[branches]
     columns[:, branches] = 0.0
     design = np.column_stack([np.ones_like(x), x])
-    weights = np.linalg.lstsq(design, columns, rcond=None)[0]
+    weights = np.asarray(np.linalg.lstsq(design, columns, rcond=None)[0], dtype=np.float64)
     line = weights @ coefficients
     departure = columns @ coefficients - design @ line
     return MeanLine(
@@ -124,7 +124,7 @@ def read_by_generation_line(
         for end in (float(seen.min()), float(seen.max()))
     )
     parts = _parts(table, fit, lines, x, per_mm)
-    shared = _reference(table, lengths, rest, x, calibration, description)
+    shared = _reference(table, lengths, x, calibration, description)
     run = codes_of(table, ["module", "trial", "repetition"])
     last = [SharedPart("temperature", temperature[:, None], run)]
     return combined(lengths, iter([*parts, *shared, *last]), (low, high), {})
@@ -181,7 +181,6 @@ def _root(covariance: FloatArray) -> FloatArray:
 def _reference(
     table: pd.DataFrame,
     lengths: FloatArray,
-    rest: FloatArray,
     x: FloatArray,
     calibration: Calibration,
     description: Description,

@@ -91,7 +91,8 @@ def combined(
 ) -> LengthReadings:
     """Add up the parts, and take out the lengths beyond their *limits* (N,) each, in mm."""
     count = len(lengths)
-    covariance, variances = np.zeros((count, count)), {}
+    covariance = np.zeros((count, count))
+    variances: dict[str, FloatArray] = {}
     for part in parts:
         clean = SharedPart(part.name, np.nan_to_num(part.factors), part.codes)
         added = clean.covariance()
@@ -250,7 +251,7 @@ def _own_parts(
 def _row_factors(lines: OwnLines, name: str) -> FloatArray:
     """SD of each row in mm by a variance of its line, shape (N, 1)."""
     variance = np.array([getattr(s, name) if s is not None else np.nan for s in lines.sources])
-    return np.abs(lines.per_mm * np.sqrt(np.maximum(variance, 0.0)))[:, None]
+    return np.asarray(np.abs(lines.per_mm * np.sqrt(np.maximum(variance, 0.0))))[:, None]
 
 
 def _line_factors(lines: OwnLines, name: str) -> FloatArray:
@@ -393,4 +394,4 @@ def _range_in_use(description: Description) -> float:
         width = parse_quantity(text, ("temperature difference",)).value if text else 0.0
     except UnitError:
         return 0.0
-    return float(width) / np.sqrt(12.0)
+    return float(width / np.sqrt(12.0))

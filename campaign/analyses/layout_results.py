@@ -67,8 +67,8 @@ SUM_COLUMNS = (
     *("generation", "module", "placement", "line", "trial", "sum", "estimate_mm", "known_mm"),
     *("sd_mm", "sd_independent_mm", "sd_monte_carlo_mm"),
 )
-"""Columns of :attr:`Layout.sums`: sums of adjusted edges with the SD from the whole covariance, from edges
-taken as independent (wrong, for comparison), and by Monte Carlo."""
+"""Columns of :attr:`Layout.sums`: the sum of the edges used of every placement, with its SD from the whole
+adjusted covariance, from edges taken as independent (wrong, for comparison), and by Monte Carlo."""
 
 
 @dataclass(frozen=True)
@@ -174,6 +174,8 @@ class MonteCarlo:
         moved by more than this share of its SD.
     tolerance
         The share meant.
+    sum_sd_mm
+        SD of the sum of all edges used.
     """
 
     draws: int
@@ -182,6 +184,7 @@ class MonteCarlo:
     covariance_mm2: FloatArray
     first_order_fails: BoolArray
     tolerance: float
+    sum_sd_mm: float
 
 
 @dataclass(frozen=True)
