@@ -22,6 +22,7 @@ from campaign.analyses.influences import analyse_influences
 from campaign.analyses.limits import judge_limits
 from campaign.analyses.loop_findings import loop_findings
 from campaign.analyses.pressure import Pressure, analyse_pressure
+from campaign.analyses.rehearsal import compare_with_plan, rehearsal_findings
 from campaign.analyses.residuals import analyse_residuals
 from campaign.analyses.results import CampaignResults
 from campaign.analyses.variance import analyse_variance
@@ -225,6 +226,7 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         residuals = analyse_residuals(calibration, variance)
         effort = analyse_calibration_effort(calibration, variance, description)
         tell("analyses", 3, 4)
+    rehearsal = compare_with_plan(description, variance)
     hysteresis = analyse_hysteresis(read.of_type(CyclicFeatures), calibration)
     endurance = analyse_endurance(read.of_type(EnduranceFeatures).values())
     drift = analyse_drift(read.of_type(HoldFeatures), calibration, description)
@@ -250,6 +252,7 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         limits,
         put_back,
         further=[
+            *rehearsal_findings(rehearsal),
             *loop_findings(hysteresis, endurance, limits, back.hysteresis),
             *drift_findings(drift, limits, back.drift),
             *influence_findings(pressure, influences, limits, back.pressure),
@@ -275,6 +278,7 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         drift=drift,
         pressure=pressure,
         influences=influences,
+        rehearsal=rehearsal,
     )
 
 

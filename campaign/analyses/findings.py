@@ -232,6 +232,7 @@ class AccuracyFinding:
 
 
 FindingKind = Literal[
+    "rehearsal",
     "curved",
     "enough",
     "accuracy",
@@ -252,7 +253,7 @@ FindingKind = Literal[
 ]
 """What a finding is about; ``site_templates/findings/KIND.html`` has its words."""
 
-_FIRST = {"curved": 0, "enough": 1, "accuracy": 2, "pressure": 3}
+_FIRST = {"rehearsal": -1, "curved": 0, "enough": 1, "accuracy": 2, "pressure": 3}
 """What comes first, in this order: what a length is read to, and what pressure adds to it."""
 
 

@@ -15,6 +15,7 @@ if TYPE_CHECKING:
     from campaign.analyses.influences import Influences
     from campaign.analyses.limits import Limits
     from campaign.analyses.pressure import Pressure
+    from campaign.analyses.rehearsal import Rehearsal
     from campaign.analyses.residuals import Residuals
     from campaign.analyses.variance import Variance
     from campaign.notices import Notice
@@ -43,6 +44,8 @@ class CampaignResults:
         All notices of reading and of analyses, sorted.
     hysteresis, endurance, drift, pressure, influences
         Loops, thousands of cycles, holds, pressure, other influences; ``None`` where not measured.
+    rehearsal
+        Plan and estimate, where the campaign is a rehearsal.
     """
 
     description: Description
@@ -60,3 +63,4 @@ class CampaignResults:
     drift: Drift | None = None
     pressure: Pressure | None = None
     influences: Influences | None = None
+    rehearsal: Rehearsal | None = None

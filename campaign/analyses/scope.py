@@ -44,8 +44,8 @@ class Scope:
     ----------
     title
         Of the campaign.
-    simulated
-        Whether the recordings are invented.
+    simulated, rehearsal
+        Whether the recordings are invented, and whether they were made from a plan.
     stands
         Names in the session register, sorted; empty where not recorded.
     reference
@@ -97,6 +97,7 @@ class Scope:
     trials_set_aside: int
     not_analysed: tuple[tuple[str, int], ...]
     not_measured: tuple[str, ...]
+    rehearsal: bool = False
 
 
 def describe_scope(
@@ -138,6 +139,7 @@ def describe_scope(
         trials_set_aside=_trials_set_aside(trials, used),
         not_analysed=tuple((k, int(kinds[k])) for k in KINDS if k in kinds and k not in ANALYSED),
         not_measured=tuple(k for k in KINDS if k not in kinds),
+        rehearsal=description.rehearsal,
     )
 
 

@@ -40,8 +40,11 @@ def record_fields(record: CalibrationRecord) -> dict[str, object]:
     return {field.name: _plain(getattr(record, field.name)) for field in fields(record)}
 
 
-def record_files(records: Iterable[CalibrationRecord]) -> dict[str, bytes]:
-    """Return one JSON file a record, by its address, with its definition of terms and the caution."""
+def record_files(records: Iterable[CalibrationRecord], origin: str = "") -> dict[str, bytes]:
+    """Return one JSON file a record, by its address, with its definition of terms and the caution.
+
+    *origin* says what the data are where nothing was measured.
+    """
     return {
         record_href(record): orjson.dumps(
             {
@@ -49,6 +52,7 @@ def record_files(records: Iterable[CalibrationRecord]) -> dict[str, bytes]:
                 "model": "signal = intercept + slope x; the variance of a mean of m readings in a new run is "
                 "var_intercept + 2 x cov_intercept_slope + x² var_slope + run_var_intercept + 2 x run_cov "
                 "+ x² run_var_slope + lack_of_fit_variance + direction_half_width² + residual_variance / m",
+                **({"origin": origin} if origin else {}),
                 **record_fields(record),
             },
             option=orjson.OPT_INDENT_2 | orjson.OPT_SORT_KEYS | orjson.OPT_APPEND_NEWLINE,

@@ -127,6 +127,8 @@ _MEANINGS: dict[str, str] = {
     "label": "what the design supports saying",
     "method": "how the estimate was found",
     "level": "level of nesting",
+    "planned_strain_sd": "standard deviation that the plan assumes, as equivalent strain",
+    "held": "whether the interval holds what the plan assumes",
     "place": "where in the range: zero, mid or full",
     "strain_sd": "standard deviation as equivalent strain",
     "share": "share of the variance",

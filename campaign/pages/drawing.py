@@ -10,11 +10,13 @@ from typing import Any
 
 import numpy as np
 
-from campaign.pages import figures
+from campaign.pages import figures, palette
 from campaign.pages.figures import Figure, Layout, Trace
 from campaign.pages.thinning import rounded
 
 MARGINS = {"l": 64, "r": 24, "t": 28, "b": 52}
+MARK_SIZE, MARK_STRIP = 12, 18
+"""Size of a mark's letters, and height of the strip that it stands in, in pixels."""
 
 
 def ready(figure: Figure) -> Figure:
@@ -33,6 +35,24 @@ def ready(figure: Figure) -> Figure:
     layout["annotations"] = [_on_its_axes(note, layout) for note in layout.get("annotations", ())]
     traces = tuple(_rounded_trace(trace, layout) for trace in figure.traces)
     return replace(figure, traces=traces, layout=layout)
+
+
+def marked(figure: Figure, words: str) -> Figure:
+    """Return *figure* with *words* in its lower right corner, in a strip of its own below the axes."""
+    margin = {**MARGINS, **figure.layout.get("margin", {})}
+    title = {
+        "text": words,
+        "x": 1.0,
+        "xanchor": "right",
+        "xref": "container",
+        "y": 0.0,
+        "yanchor": "bottom",
+        "yref": "container",
+        "pad": {"r": 6, "b": 4},
+        "font": {"size": MARK_SIZE, "color": palette.ATTENTION},
+    }
+    layout = {**figure.layout, "margin": {**margin, "b": margin["b"] + MARK_STRIP}, "title": title}
+    return replace(figure, height=figure.height + MARK_STRIP, layout=layout)
 
 
 def axis_names(layout: Layout) -> list[str]:

@@ -59,6 +59,12 @@ class Page:
         return f"{self.slug}.html"
 
 
+REHEARSED = "rehearsal, not measured"
+"""What every page, figure, table and record of a rehearsal says."""
+
+INVENTED = "invented data"
+
+
 @dataclass(frozen=True)
 class SiteFrame:
     """What every page of one site shares.
@@ -71,6 +77,8 @@ class SiteFrame:
         The short line above it, in parts: ``("Characterisation campaign", "12 modules", "72 sensors")``.
     invented
         Whether the data are simulated: then every page says so.
+    rehearsal
+        Whether they were made from a plan: then every page, figure and table says that nothing was measured.
     version
         Version of the program.
     """
@@ -78,4 +86,10 @@ class SiteFrame:
     title: str
     summary: tuple[str, ...]
     invented: bool = False
+    rehearsal: bool = False
     version: str = ""
+
+    @property
+    def origin(self) -> str:
+        """What is said of data that were not measured; empty where they were."""
+        return REHEARSED if self.rehearsal else INVENTED if self.invented else ""

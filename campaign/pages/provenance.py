@@ -11,7 +11,7 @@ import pandas as pd
 from campaign.analyses.results import CampaignResults
 from campaign.pages import slugs
 from campaign.pages.calculator import record_href
-from campaign.pages.page import Page
+from campaign.pages.page import INVENTED, REHEARSED, Page
 from campaign.pages.tables import Column, Table
 from campaign.recordings.description import Description
 
@@ -114,7 +114,7 @@ def citation(description: Description) -> Citation:
     year = day[:4] if re.match(r"\d{4}", day) else ""
     names = [author.name for author in description.authors if author.name]
     who = "; ".join(names) or "Authors not given"
-    invented = " Invented data." if description.simulated else ""
+    invented = f" {_origin(description).capitalize()}." if description.simulated else ""
     licence = f" Licence: {description.licence}." if description.licence else ""
     sentence = (
         f"{who} ({year or 'no date given'}). {description.title} [recordings and report].{invented}{licence}"
@@ -127,12 +127,16 @@ def citation(description: Description) -> Citation:
     )
 
 
+def _origin(description: Description) -> str:
+    return REHEARSED if description.rehearsal else INVENTED
+
+
 def _bibtex(description: Description, names: Iterable[str], year: str) -> str:
     given = {
         "author": " and ".join(names),
         "title": description.title,
         "year": year,
-        "note": "Recordings and report" + (", invented data" if description.simulated else ""),
+        "note": "Recordings and report" + (f", {_origin(description)}" if description.simulated else ""),
     }
     lines = [f"  {key} = {{{_braced(value)}}}," for key, value in given.items() if value]
     return "\n".join([f"@misc{{campaign{year},", *lines, "}"])

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Iterable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -20,10 +20,10 @@ from markupsafe import Markup
 from campaign.pages import numbers, slugs
 from campaign.pages.assets import asset_files
 from campaign.pages.definitions import definitions_of
-from campaign.pages.drawing import ready
+from campaign.pages.drawing import marked, ready
 from campaign.pages.figures import Figure, Layout, Trace
 from campaign.pages.house_style import NOTE_DEFAULTS
-from campaign.pages.page import Page, SiteFrame
+from campaign.pages.page import REHEARSED, Page, SiteFrame
 from campaign.pages.static_figure import static_svg
 from campaign.pages.tables import (
     Cell,
@@ -138,7 +138,9 @@ def render_site(
     _check_slugs(pages)
     jinja = environment(further_templates)
     written: dict[str, bytes] = dict(files or {})
-    written |= table_files([*tables, *(t for page in pages for t in page.tables)], reference)
+    if frame.rehearsal:
+        pages = [_as_rehearsal(page) for page in pages]
+    written |= table_files([*tables, *(t for page in pages for t in page.tables)], reference, frame.origin)
     for page in pages:
         figures = {f.name: ready(f) for f in page.figures}
         written[page.file] = _page_html(jinja, frame, page, pages, figures).encode("utf-8")
@@ -150,8 +152,23 @@ def render_site(
     return dict(sorted(written.items()))
 
 
-def table_files(tables: Iterable[Table], reference: ReferenceQuantity = STRAIN) -> dict[str, bytes]:
-    """Return ``tables/NAME.csv`` of every table that is a file, and ``tables/schema.json``."""
+def _as_rehearsal(page: Page) -> Page:
+    """Return *page* with a mark in every figure, and words in every caption, that nothing was measured."""
+    words = f"{REHEARSED[0].upper()}{REHEARSED[1:]}."
+    return replace(
+        page,
+        figures=tuple(replace(marked(f, REHEARSED), caption=f"{f.caption} {words}") for f in page.figures),
+        tables=tuple(replace(table, caption=f"{table.caption} {words}") for table in page.tables),
+    )
+
+
+def table_files(
+    tables: Iterable[Table], reference: ReferenceQuantity = STRAIN, origin: str = ""
+) -> dict[str, bytes]:
+    """Return ``tables/NAME.csv`` of every table that is a file, and ``tables/schema.json``.
+
+    *origin* says in the schema what the data are where nothing was measured.
+    """
     frames: dict[str, pd.DataFrame] = {}
     for table in tables:
         if table.source is not None:
@@ -161,7 +178,7 @@ def table_files(tables: Iterable[Table], reference: ReferenceQuantity = STRAIN) 
         frames[table.name] = table.frame
     frames = {name: in_reference(frame, reference) for name, frame in frames.items()}
     made = {f"tables/{name}.csv": csv_bytes(frame, name) for name, frame in frames.items()}
-    return made | {"tables/schema.json": schema_bytes(frames)}
+    return made | {"tables/schema.json": schema_bytes(frames, origin)}
 
 
 def data_script(page: Page, figures: Mapping[str, Figure]) -> bytes:

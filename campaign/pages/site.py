@@ -57,7 +57,7 @@ def build_site(
         site_tables(results, pages),
         files={
             **(notes.files or {}),
-            **record_files(records),
+            **record_files(records, site_frame(results).origin),
             **residual_files(results),
             **loop_scripts(results.hysteresis),
         },
@@ -100,5 +100,6 @@ def site_frame(results: CampaignResults) -> SiteFrame:
         title=results.description.title,
         summary=("Characterisation campaign", *parts),
         invented=results.description.simulated,
+        rehearsal=results.description.rehearsal,
         version=__version__,
     )

@@ -60,6 +60,7 @@ def static_svg(figure: Figure, width: int = WIDTH) -> str:
     parts += [_clipped(figure, key, _traces(figure, key, panel)) for key, panel in panels.items()]
     parts += [_shape(shape, panels) for shape in shapes if shape.get("layer") != "below"]
     parts += [_annotation(note, panels) for note in figure.layout.get("annotations", ())]
+    parts += [_mark(figure.layout["title"], width, figure.height)] if "title" in figure.layout else []
     size = f'viewBox="0 0 {width} {figure.height}" width="{width}" height="{figure.height}"'
     alternative = _escaped(figure.alternative)
     return (
@@ -90,6 +91,19 @@ def _panels(figure: Figure, width: int) -> dict[str, Panel]:
             margin["t"] + (1 - y0) * inner_height,
         )
     return made
+
+
+def _mark(title: Layout, width: int, height: int) -> str:
+    """Words in the lower right corner (:func:`campaign.pages.drawing.marked`)."""
+    font, pad = title["font"], title["pad"]
+    return _text(
+        title["text"],
+        width - pad["r"],
+        height - pad["b"],
+        anchor="end",
+        size=font["size"],
+        colour=font["color"],
+    )
 
 
 def _axis_key(reference: str, letter: str) -> str:

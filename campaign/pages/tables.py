@@ -189,19 +189,24 @@ def millimetre_name(column: str, quantity: str) -> str:
     return column.replace("strain", quantity) + "_mm"
 
 
-def schema_bytes(frames: Mapping[str, pd.DataFrame]) -> bytes:
-    """Return ``tables/schema.json``: one resource a table, with every column's type, unit and meaning."""
+def schema_bytes(frames: Mapping[str, pd.DataFrame], origin: str = "") -> bytes:
+    """Return ``tables/schema.json``: one resource a table, with every column's type, unit and meaning.
+
+    *origin* says what the data are where nothing was measured; it stands with the package and every table.
+    """
+    said = {"description": origin} if origin else {}
     resources = [
         {
             "name": name,
             "path": f"{name}.csv",
             "profile": "tabular-data-resource",
             "encoding": "utf-8",
+            **said,
             "schema": {"fields": _fields(exported_frame(frames[name], name)), "missingValues": [""]},
         }
         for name in sorted(frames)
     ]
-    package = {"profile": "tabular-data-package", "name": "tables", "resources": resources}
+    package = {"profile": "tabular-data-package", "name": "tables", **said, "resources": resources}
     return orjson.dumps(package, option=orjson.OPT_INDENT_2) + b"\n"
 
 

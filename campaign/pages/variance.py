@@ -28,7 +28,7 @@ from campaign.pages.figures import (
 )
 from campaign.pages.page import Page
 from campaign.pages.tables import Column, Table
-from campaign.pages.variance_tables import tables_beside_components
+from campaign.pages.variance_tables import planned_tables, tables_beside_components
 from campaign.recordings.recording import ReferenceQuantity
 
 LEVELS = (
@@ -41,6 +41,7 @@ TERM_WORDS: Mapping[str, str] = {"strain at mid": "signal at mid range, as strai
 """What terms of effects are called where their name does not say it."""
 
 TABLES = (
+    "planned_components",
     *("components_in_strain", "component_ratios", "precision", "new_sensor", "ratio_components"),
     *("identifiability", "run_numbers", "variance_components", "component_tests"),
     *("fixed_effects", "fit_certificates"),
@@ -92,7 +93,7 @@ def variance_page(results: CampaignResults) -> Page | None:
         figures=tuple(figure for figure in figures if figure is not None),
         tables=tuple(
             sorted(
-                (*_tables(variance), *tables_beside_components(variance)),
+                (*planned_tables(results), *_tables(variance), *tables_beside_components(variance)),
                 key=lambda table: TABLES.index(table.name),
             )
         ),

@@ -6,6 +6,7 @@ from collections.abc import Iterable
 
 import pandas as pd
 
+from campaign.analyses.results import CampaignResults
 from campaign.analyses.variance import Variance
 from campaign.pages.component_words import level_words, sd_words
 from campaign.pages.tables import Column, Table
@@ -25,6 +26,32 @@ def tables_beside_components(variance: Variance) -> Iterable[Table]:
         yield _run_numbers(variance)
     if len(variance.ratio_variance_in_strain):
         yield _signal_over_zero(variance)
+
+
+def planned_tables(results: CampaignResults) -> Iterable[Table]:
+    """Yield the table of plan and estimate, where the campaign is a rehearsal."""
+    if results.rehearsal is None or results.variance is None:
+        return
+    frame = results.rehearsal.table
+    factor, unit = results.variance.reference.shown_factor, results.variance.reference.shown_unit
+    yield Table(
+        "planned_components",
+        f"The plan beside what the design made of it: {results.rehearsal.held} of "
+        f"{results.rehearsal.stated} intervals hold the SD that was planned.",
+        frame.assign(
+            _words=[level_words(str(called)) for called in frame["called"]],
+            _found=[sd_words(row, factor) for row in frame.to_dict("records")],
+            _held=frame["held"].map({True: "yes", False: "no"}),
+        ),
+        (
+            _GENERATION,
+            Column("_words", "Component", kind="text"),
+            Column("planned_strain_sd", "SD planned", unit, factor=factor, digits=2),
+            Column("_found", "SD estimated", unit, kind="text"),
+            Column("_held", "The interval holds it", kind="text"),
+        ),
+        note="At mid range. Components that the design cannot part stand together, in the plan as well.",
+    )
 
 
 def run_number_frame(variance: Variance) -> pd.DataFrame:
