@@ -22,13 +22,14 @@ PLACE = "mid"
 PLANNED_LEVELS: Mapping[str, str] = {
     "batch": "batch",
     "module": "module",
+    "mounting": "",
     "sensor": "sensor",
     "session": "session",
     "repetition": "repetition",
     "sensor × level": "sensor_by_level",
     "residual": "residual",
 }
-"""Which assumed SD a component of the model is, by what the model calls it."""
+"""Which assumed SD a component of the model is, by what the model calls it; empty: none is assumed."""
 
 
 @dataclass(frozen=True)
@@ -127,15 +128,17 @@ def compare_with_plan(description: Description, variance: Variance | None) -> Re
 def _components(
     variance: Variance, planned: PlannedGeneration, strain: float
 ) -> Iterator[tuple[str, PlannedComponent]]:
-    """Yield level and component; of components that the design cannot part, the sum of their variances."""
+    """Yield level and component where a spread is assumed; what the design cannot part is summed up."""
     table = variance.variance_in_strain
     here = table[(table["generation"] == planned.name) & (table["place"] == PLACE)]
     for row in here.to_dict("records"):
         parts = str(row["called"]).split(" + ")
         if set(parts) <= PLANNED_LEVELS.keys():
-            assumed = math.hypot(*(planned.sd_at(PLANNED_LEVELS[part], strain) for part in parts))
+            levels = [level for part in parts if (level := PLANNED_LEVELS[part])]
+            assumed = math.hypot(*(planned.sd_at(level, strain) for level in levels))
             figures = (float(row[key]) for key in ("strain_sd", "low", "high"))
-            yield str(row["level"]), PlannedComponent(str(row["called"]), assumed, *figures)
+            if assumed > 0.0:
+                yield str(row["level"]), PlannedComponent(str(row["called"]), assumed, *figures)
 
 
 def rehearsal_findings(rehearsal: Rehearsal | None) -> tuple[Finding, ...]:
