@@ -10,6 +10,8 @@ from typing import TypeVar
 
 import pandas as pd
 
+from campaign.analyses.budget import analyse_budget
+from campaign.analyses.budget_findings import budget_findings
 from campaign.analyses.calibration import Calibration, analyse_calibration
 from campaign.analyses.calibration_effort import analyse_calibration_effort
 from campaign.analyses.drift import Drift, analyse_drift
@@ -241,7 +243,9 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
     readings = read.readings
     if not len(readings.table) and others:
         readings = replace(readings, reference=others[0].reference)
-    limits = judge_limits(description, calibration, further=[found.figures for found in others])
+    budget = analyse_budget(description, calibration, variance, hysteresis, drift, pressure, influences)
+    judged = [found.figures for found in (*others, budget) if found is not None]
+    limits = judge_limits(description, calibration, judged, budget.missing if budget is not None else None)
     findings = collect_findings(
         description,
         intake,
@@ -256,6 +260,7 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
             *loop_findings(hysteresis, endurance, limits, back.hysteresis),
             *drift_findings(drift, limits, back.drift),
             *influence_findings(pressure, influences, limits, back.pressure),
+            *budget_findings(budget),
         ],
         reference=readings.reference,
     )
@@ -278,6 +283,7 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         drift=drift,
         pressure=pressure,
         influences=influences,
+        budget=budget,
         rehearsal=rehearsal,
     )
 

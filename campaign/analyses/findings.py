@@ -250,10 +250,11 @@ FindingKind = Literal[
     "pressure",
     "coupling",
     "influences",
+    "budget",
 ]
 """What a finding is about; ``site_templates/findings/KIND.html`` has its words."""
 
-_FIRST = {"rehearsal": -1, "curved": 0, "enough": 1, "accuracy": 2, "pressure": 3}
+_FIRST = {"rehearsal": -1, "curved": 0, "enough": 1, "accuracy": 2, "pressure": 3, "budget": 4}
 """What comes first, in this order: what a length is read to, and what pressure adds to it."""
 
 

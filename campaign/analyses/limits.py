@@ -9,7 +9,7 @@ it.
 from __future__ import annotations
 
 import math
-from collections.abc import Hashable, Iterator, Sequence
+from collections.abc import Hashable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Any
 
@@ -83,8 +83,8 @@ class Limits:
     not_judged
         Limits of the description that nothing measured so far can answer.
     conditions_not_measured
-        Keys of ``[use]`` that name an influence no analysis covers yet: with one of them an error in use is
-        'at least' what was found, and its limit can fail but not be met.
+        Sources that the budget of any sensor misses: with one of them an error in use is 'at least' what was
+        found, and its limit can fail but not be met.
     decision_rule
         The rule that ``accepted`` follows.
     """
@@ -106,7 +106,10 @@ class Limits:
 
 
 def judge_limits(
-    description: Description, calibration: Calibration | None, further: Sequence[pd.DataFrame] = ()
+    description: Description,
+    calibration: Calibration | None,
+    further: Sequence[pd.DataFrame] = (),
+    missing: Mapping[tuple[str, str, str], tuple[str, ...]] | None = None,
 ) -> Limits:
     """Judge every limit of *description* that an analysis can answer.
 
@@ -119,13 +122,16 @@ def judge_limits(
     further
         Figures of merit of the other kinds of trial, columns of
         :data:`campaign.analyses.sensor_figures.FIGURE_COLUMNS` each.
+    missing
+        (generation, module, sensor) → the sources that its budget misses; ``None`` where there is no budget:
+        then every condition that ``[use]`` states is missing.
 
     Returns
     -------
     Limits
         An empty table where there are no limits or no figures.
     """
-    conditions = tuple(key for key in _CONDITIONS if key in description.use)
+    conditions = _conditions(description, missing)
     figures = _no_figures() if calibration is None else sensor_figures(calibration, description)
     others = _joined(further)
     judgeable = _in_their_stead(figures, others)
@@ -137,7 +143,7 @@ def judge_limits(
         rows += _judge_new_sensors(name, value, unit, judgeable[judgeable["figure"] == name])
     table = pd.DataFrame(rows, columns=list(LIMIT_COLUMNS))
     if conditions:
-        table = _withhold_met(table)
+        table = _withhold_met(table, missing)
     absent = tuple(name for name in description.limits if name not in judged)
     return Limits(table, figures, absent, conditions, further_figures=others)
 
@@ -238,10 +244,25 @@ def _judge_new(value: float, rows: pd.DataFrame) -> dict[str, object]:
     return _verdict(value, estimate, low, high, freedom, probability, "")
 
 
-def _withhold_met(table: pd.DataFrame) -> pd.DataFrame:
+def _conditions(
+    description: Description, missing: Mapping[tuple[str, str, str], tuple[str, ...]] | None
+) -> tuple[str, ...]:
+    if missing is None:
+        return tuple(key for key in _CONDITIONS if key in description.use)
+    return tuple(dict.fromkeys(source for sources in missing.values() for source in sources))
+
+
+def _withhold_met(
+    table: pd.DataFrame, missing: Mapping[tuple[str, str, str], tuple[str, ...]] | None
+) -> pd.DataFrame:
     """An error in use holds influences not measured: it can be too large already, never small enough."""
     table = table.copy()
     open_ended = (table["limit"] == "strain_error") & (table["verdict"] == "met")
+    if missing is not None:
+        lacking = {key for key, sources in missing.items() if sources}
+        lacking |= {(generation, "", "") for generation, _, _ in lacking}
+        keys = zip(table["generation"], table["module"], table["sensor"], strict=True)
+        open_ended &= np.array([key in lacking for key in keys], dtype=bool)
     table.loc[open_ended, "verdict"] = "not decided"
     table.loc[open_ended, "reason"] = CONDITIONS
     return table

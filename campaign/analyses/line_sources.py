@@ -32,9 +32,9 @@ class LineSources:
     x_low, x_high
         Calibrated range.
     line, mounting, run, reference
-        Shape (2, 2), covariances of intercept and slope: of the line from between runs, of a new mounting, of a
-        new run within its mounting (both where mountings are not told from runs), and of the reference. NaN
-        where unknown.
+        Shape (2, 2), covariances of intercept and slope: of the line from between runs, of a new mounting, of
+        a new run within its mounting (both where mountings are not told from runs), and of the reference.
+        NaN where unknown.
     mountings
         :data:`campaign.methods.run_spread.APART`, ``TOGETHER`` or ``ONE_MOUNTING``.
     run_degrees

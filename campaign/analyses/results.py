@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 if TYPE_CHECKING:
+    from campaign.analyses.budget import Budget
     from campaign.analyses.calibration import Calibration
     from campaign.analyses.calibration_effort import CalibrationEffort
     from campaign.analyses.drift import Drift
@@ -44,6 +45,8 @@ class CampaignResults:
         All notices of reading and of analyses, sorted.
     hysteresis, endurance, drift, pressure, influences
         Loops, thousands of cycles, holds, pressure, other influences; ``None`` where not measured.
+    budget
+        What adds up to the uncertainty in use; ``None`` where no sensor has a line.
     rehearsal
         Plan and estimate, where the campaign is a rehearsal.
     """
@@ -63,4 +66,5 @@ class CampaignResults:
     drift: Drift | None = None
     pressure: Pressure | None = None
     influences: Influences | None = None
+    budget: Budget | None = None
     rehearsal: Rehearsal | None = None

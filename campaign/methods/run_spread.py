@@ -69,8 +69,8 @@ class RunSpread:
     """Covariances of true lines, (2, 2): of mountings about the sensor, of runs about their mounting.
 
     ``degrees_of_freedom`` are those of the spread of a new run in a new mounting (Satterthwaite), at the
-    centre. ``mountings`` says what is known of remounting: :data:`APART` from runs, :data:`TOGETHER` with them
-    in ``run``, or :data:`ONE_MOUNTING`.
+    centre. ``mountings`` says what is known of remounting: :data:`APART` from runs, :data:`TOGETHER` with
+    them in ``run``, or :data:`ONE_MOUNTING`.
     """
 
     mounting: FloatArray

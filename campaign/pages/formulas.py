@@ -72,6 +72,25 @@ FORMULAS: dict[str, str] = {
     "effort": r"s_{\varepsilon}^2=\frac{1}{N}\sum_{i}(\hat x_i-x_i)^2,\qquad "
     r"\hat x_i=\frac{y_i-a}{b}\ \text{with the line of the effort}",
     "conformity": r"p_c=P\left(\eta\le L\right)=F_{\nu}\left(\frac{L-\hat\eta}{u(\hat\eta)}\right)",
+    "budget": r"u^2=\sum_{g}u_g^2,\qquad u_g^2=\sum_{i\in g}c_i^2\,u_i^2,\qquad "
+    r"u_i=\frac{a_i}{\text{divisor}_i}",
+    "expanded": r"U=t_{\nu_{\text{eff}};\,0.975}\;u",
+    "welch": r"\nu_{\text{eff}}=\frac{u^4}{\sum_{g}u_g^4/\nu_g}",
+    "uniform": r"\Delta\ \text{uniform on}\ [0,\,D]\quad\Rightarrow\quad "
+    r"\sqrt{\text{E}\,\Delta^2}=\frac{|D|}{\sqrt{3}},\qquad "
+    r"D=s_{10}\log_{10}\frac{T}{t_0}\ \text{or}\ s_{\text{h}}\,(T-t_0)",
+    "generation_difference": r"\hat\mu_2-\hat\mu_1\pm t_{\nu;\,0.975}\sqrt{V_1+V_2},\qquad "
+    r"\nu=\frac{(V_1+V_2)^2}{V_1^2/\nu_1+V_2^2/\nu_2},\qquad \nu_g\le M_g-1",
+    "fieller_ratio": r"\left\{\rho:\ (\hat\mu_2-\rho\,\hat\mu_1)^2\le t_{\nu;\,0.975}^2"
+    r"\left(V_2+\rho^2 V_1\right)\right\}",
+    "two_one_sided": r"t_{\text{low}}=\frac{d+\delta}{\sqrt{V_1+V_2}}>t_{\nu;\,0.95}\quad\text{and}\quad "
+    r"t_{\text{high}}=\frac{\delta-d}{\sqrt{V_1+V_2}}>t_{\nu;\,0.95},\qquad d=\hat\mu_2-\hat\mu_1",
+    "plan_variance": r"V=\frac{1}{M}\left(\sigma_m^2+\frac{\sigma_q^2}{Q}+\frac{\sigma_c^2}{QR}"
+    r"+\frac{\sigma_s^2}{S}+\frac{\sigma_e^2}{SQ}+\frac{\sigma_r^2}{SQR}\right)",
+    "plan_power": r"P=P\left(\left|t'_{\nu}(\theta)\right|>t_{\nu;\,0.975}\right),\qquad "
+    r"\theta=\frac{\Delta}{\sqrt{2V}},\qquad \nu=2(M-1)",
+    "allocation": r"S=\sqrt{\frac{c_m\,\sigma_s^2}{c_s\,\sigma_m^2}},\qquad "
+    r"R=\sqrt{\frac{c_s\,\sigma_r^2}{c_r\,\sigma_s^2}}",
     "autocorrelation": r"r_1=\frac{\sum_{i}e_i\,e_{i+1}}{\sum_{i}e_i^2}",
     "influence": r"y=a+b\,\varepsilon+c\,p+d\,\varepsilon\,p+e",
     "influence_error": r"\Delta\varepsilon(p)=\frac{(c+d\,\varepsilon)\,p}{b},\qquad "

@@ -307,7 +307,7 @@ def _limits_table(parts: SensorParts) -> list[Table]:
 
 
 _REASONS: Mapping[str, str] = {
-    CONDITIONS: ": it holds on the stand, but conditions of use were not measured",
+    CONDITIONS: ": it would hold, but a source of its budget is not known",
     UNKNOWN: ": its uncertainty is not known",
     TOO_FEW: ": too few sensors",
     ONE_MODULE: ": one module says nothing of the next",

@@ -7,6 +7,8 @@ from pathlib import Path
 from campaign import __version__
 from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers
+from campaign.pages.budget import budget_page
+from campaign.pages.budget_data import budget_scripts
 from campaign.pages.calculator import record_files
 from campaign.pages.calibration import calibration_page
 from campaign.pages.calibration_effort import calibration_effort_page
@@ -60,6 +62,7 @@ def build_site(
             **record_files(records, site_frame(results).origin),
             **residual_files(results),
             **loop_scripts(results.hysteresis),
+            **budget_scripts(results.budget),
         },
         plot_library=plot_library,
         reference=results.readings.reference,
@@ -80,6 +83,7 @@ def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
         hysteresis_page(results),
         drift_page(results),
         pressure_page(results),
+        budget_page(results),
     )
     pages = [findings_page(results, mapped), *(page for page in measured if page is not None)]
     pages += [recordings_page(results), method_page(results)]

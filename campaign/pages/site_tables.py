@@ -31,6 +31,7 @@ CAPTIONS: dict[str, str] = {
     "fit_certificates": "Evidence of the optimisation of every fit.",
     "residuals": "Conditional and marginal residuals of the nested model.",
     "calibration_effort": "Error against calibration effort, predicted and left out.",
+    "budget": "Every source of every budget, at zero, mid and full scale.",
     "limits": "Every limit judged, sensor by sensor and for a new sensor.",
     "holds": "Every hold: changes, slope a decade, form, and what it may be called.",
     "hold_forms": "Every form fitted to every hold.",
@@ -89,6 +90,8 @@ def _frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
         frames["residuals"] = results.residuals.table
     if results.calibration_effort is not None:
         frames["calibration_effort"] = results.calibration_effort.table
+    if results.budget is not None:
+        frames["budget"] = results.budget.table
     if len(results.limits.table):
         frames["limits"] = results.limits.table
     return frames | _loop_frames(results) | _drift_frames(results) | _influence_frames(results)
