@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 import sys
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import TypeVar
@@ -16,23 +17,40 @@ from campaign.analyses.calibration import Calibration, analyse_calibration
 from campaign.analyses.calibration_effort import analyse_calibration_effort
 from campaign.analyses.drift import Drift, analyse_drift
 from campaign.analyses.drift_findings import drift_findings
+from campaign.analyses.earlier import (
+    EarlierCampaign,
+    Joined,
+    full_scale_of,
+    join,
+    sources_of,
+    with_common_full_scale,
+)
 from campaign.analyses.endurance import analyse_endurance
 from campaign.analyses.findings import collect_findings
+from campaign.analyses.generation_design import confounded_between, confounded_within, order_of_generations
+from campaign.analyses.generation_figures import Comparable, comparable_figures
+from campaign.analyses.generation_findings import generation_findings
+from campaign.analyses.generations import Generations, compare_generations
 from campaign.analyses.hysteresis import Hysteresis, analyse_hysteresis
 from campaign.analyses.influence_findings import influence_findings
 from campaign.analyses.influences import analyse_influences
 from campaign.analyses.limits import judge_limits
 from campaign.analyses.loop_findings import loop_findings
+from campaign.analyses.planning import analyse_planning
+from campaign.analyses.planning_findings import planning_findings
 from campaign.analyses.pressure import Pressure, analyse_pressure
 from campaign.analyses.rehearsal import compare_with_plan, rehearsal_findings
 from campaign.analyses.residuals import analyse_residuals
 from campaign.analyses.results import CampaignResults
-from campaign.analyses.variance import analyse_variance
-from campaign.notices import Notice, sort_notices
+from campaign.analyses.scope import describe_scope
+from campaign.analyses.variance import analyse_variance, fit_generations
+from campaign.analyses.variance_fit import GenerationFit
+from campaign.notices import CampaignStops, Notice, sort_notices
 from campaign.pages.notes import make_notes, read_note_files
 from campaign.pages.output import check_ours, write_folder
 from campaign.pages.site import build_site
 from campaign.provenance.manifest import with_manifests
+from campaign.recordings.description import DESCRIPTION_FILE, Description
 from campaign.recordings.inspection import ON_SITE, inspection_lines, print_lines
 from campaign.recordings.intake import Intake, Progress, run_intake
 from campaign.recordings.recording import Trial
@@ -137,7 +155,8 @@ def report(folder: Path, into: Path | None, fail_on_set_aside: bool, progress: P
     site = into if into is not None else beside(folder)
     check_ours(site)
     read = read_campaign(folder, site, tell)
-    results = analyse(read, tell)
+    earlier = read_earlier(folder, read, tell)
+    results = analyse(read, tell, earlier)
     notes = make_notes(read_note_files(folder))
     results = replace(results, notices=sort_notices([*results.notices, *notes.notices]))
     tell("pages", 0, 1)
@@ -147,7 +166,8 @@ def report(folder: Path, into: Path | None, fail_on_set_aside: bool, progress: P
     tell("pages", 1, 1)
     sys.stdout.write(print_lines(_what_was_read(read.intake, results.notices)))
     print(f"\n{len(files)} files written; open {site / 'index.html'}")
-    return SET_ASIDE if fail_on_set_aside and read.intake.set_aside_unasked else DONE
+    aside = read.intake.set_aside_unasked or any(notice.weight == "set aside" for notice in earlier.notices)
+    return SET_ASIDE if fail_on_set_aside and aside else DONE
 
 
 def _what_was_read(intake: Intake, notices: tuple[Notice, ...]) -> list[str]:
@@ -213,8 +233,126 @@ def _readings(
     return collect_readings(parts, sensors_aside)
 
 
-def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignResults:
-    """Run every analysis that the readings allow, each fit once."""
+def read_earlier(folder: Path, read: CampaignRead, progress: Progress | None = None) -> Joined:
+    """Read the earlier campaigns that the description of *folder* names, as far as comparison needs them.
+
+    One that cannot be read becomes a notice, and the report goes on without it. Earlier campaigns of an
+    earlier campaign are not followed, so that campaigns may name each other.
+    """
+    tell = progress or _silent
+    found: list[EarlierCampaign] = []
+    notices: list[Notice] = []
+    named = read.intake.description.earlier
+    taken = {folder.resolve()}
+    for number, one in enumerate(named):
+        tell("earlier campaigns", number, len(named))
+        where = one.get("archive") or one["folder"]
+        try:
+            with opened_earlier(folder, one) as place:
+                if place.resolve() in taken:
+                    raise CampaignStops([_not_joined(where, "is this campaign, or is named twice")])
+                taken.add(place.resolve())
+                found.append(_earlier_campaign(where, read_campaign(place), read.intake.description))
+                if found[-1].names_others:
+                    notices.append(_not_followed(where))
+        except CampaignStops as stop:
+            first = stop.notices[0]
+            known = first.code == _NOT_JOINED
+            notices.append(first if known else _not_joined(where, first.what, first.remedy))
+    return join(found, order_of_generations(read.intake), notices)
+
+
+_NOT_JOINED = "earlier-not-joined"
+
+
+def _not_joined(where: str, what: str, remedy: str = "") -> Notice:
+    said = f"{where} {what}" if what.startswith("is ") else f"{where}: {what}"
+    done = "the comparison goes on without it"
+    return Notice(
+        _NOT_JOINED, "set aside", DESCRIPTION_FILE, None, None, said, done, remedy or "mend its path"
+    )
+
+
+def _not_followed(where: str) -> Notice:
+    what = f"{where} names earlier campaigns of its own"
+    remedy = "name them in this campaign's description as well"
+    code = "earlier-not-followed"
+    return Notice(code, "noted", DESCRIPTION_FILE, None, None, what, "they are not followed", remedy)
+
+
+@contextmanager
+def opened_earlier(folder: Path, named: Mapping[str, str]) -> Iterator[Path]:
+    """Give the folder of an earlier campaign while it is read: the one place where archives come in.
+
+    Raises
+    ------
+    CampaignStops
+        Where an archive is named: this version cannot open one.
+    """
+    if "archive" in named:
+        remedy = 'unpack it, and name the folder: folder = "…"'
+        raise CampaignStops(
+            [_not_joined(named["archive"], "is a sealed archive, which is not opened yet", remedy)]
+        )
+    yield folder / named["folder"]
+
+
+def _earlier_campaign(where: str, read: CampaignRead, own: Description) -> EarlierCampaign:
+    """Analyse an earlier campaign as far as comparison needs it, per cent by this campaign's full scale."""
+    intake, description = read.intake, read.intake.description
+    calibration = None
+    rescaled = False
+    if len(read.readings.usable):
+        calibration = _calibrate(read.readings, intake)
+        description, rescaled = with_common_full_scale(description, own, calibration)
+        if rescaled:
+            intake = replace(intake, description=description)
+            calibration = _calibrate(read.readings, intake)
+    fits: tuple[GenerationFit, ...] = ()
+    uneven: frozenset[str] = frozenset()
+    if calibration is not None:
+        fits, uneven = fit_generations(calibration.readings, calibration.reference, description)
+    offers = comparable_figures(
+        description,
+        intake.used_identities,
+        calibration,
+        fits,
+        uneven,
+        analyse_hysteresis(read.of_type(CyclicFeatures), calibration),
+        analyse_drift(read.of_type(HoldFeatures), calibration, description),
+        analyse_pressure(read.of_type(SweepFeatures), calibration, description),
+    )
+    used = intake.trials[intake.trials["fate"] == "used"]
+    return EarlierCampaign(
+        where=where,
+        title=description.title,
+        simulated=description.simulated,
+        order=order_of_generations(intake),
+        offers=offers,
+        recordings=int(used["file"].nunique()),
+        modules=len(used.drop_duplicates(["generation", "module"])),
+        sensors=len(used.drop_duplicates(["generation", "module", "sensor"])),
+        hashes=intake.file_hashes,
+        full_scale=full_scale_of(offers),
+        rescaled=rescaled,
+        names_others=bool(description.earlier),
+    )
+
+
+def analyse(
+    read: CampaignRead, progress: Progress | None = None, earlier: Joined | None = None
+) -> CampaignResults:
+    """Run every analysis that the readings allow, each fit once.
+
+    Parameters
+    ----------
+    read
+        The campaign.
+    progress
+        Told what is being done.
+    earlier
+        Earlier campaigns to compare with (:func:`read_earlier`).
+    """
     tell = progress or _silent
     intake, description = read.intake, read.intake.description
     calibration = put_back = variance = residuals = effort = None
@@ -238,6 +376,22 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
     logged += [(f.identity, f.logged) for f in laid_out if f.logged is not None]
     pressure = analyse_pressure(sweeps, calibration, description, logged)
     influences = analyse_influences(sweeps, calibration, description)
+    joined = earlier or Joined()
+    own = comparable_figures(
+        description,
+        intake.used_identities,
+        calibration,
+        variance.by_generation if variance is not None else (),
+        variance.uneven if variance is not None else (),
+        hysteresis,
+        drift,
+        pressure,
+    )
+    generations = _compare(intake, own, joined)
+    scope = describe_scope(description, intake, calibration, read.readings.reference)
+    planning = analyse_planning(
+        description, scope.reference, variance.by_generation if variance is not None else (), scope
+    )
     back = analyse_put_back(read, put_back or calibration)
     others = [found for found in (hysteresis, drift, pressure) if found is not None]
     readings = read.readings
@@ -260,11 +414,13 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
             *loop_findings(hysteresis, endurance, limits, back.hysteresis),
             *drift_findings(drift, limits, back.drift),
             *influence_findings(pressure, influences, limits, back.pressure),
+            *generation_findings(generations),
+            *planning_findings(planning),
             *budget_findings(budget),
         ],
         reference=readings.reference,
     )
-    analyses = (calibration, variance, residuals, effort, *others, influences)
+    analyses = (calibration, variance, residuals, effort, *others, influences, joined, generations)
     notices = [notice for analysis in analyses if analysis is not None for notice in analysis.notices]
     tell("analyses", 4, 4)
     return CampaignResults(
@@ -284,8 +440,24 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         pressure=pressure,
         influences=influences,
         budget=budget,
+        generations=generations,
+        planning=planning,
+        earlier=joined.campaigns,
         rehearsal=rehearsal,
     )
+
+
+def _compare(intake: Intake, own: Comparable, earlier: Joined) -> Generations | None:
+    """Compare the generations of this campaign and of the earlier ones, oldest first."""
+    description = intake.description
+    order = (
+        *(name for campaign in earlier.campaigns for name in campaign.order),
+        *order_of_generations(intake),
+    )
+    sources = sources_of(earlier.campaigns, description.title, own)
+    titles = {name: source.title for source in sources for name in source.offers.generations}
+    confounded = (*confounded_between(titles, order), *confounded_within(intake, order))
+    return compare_generations(description, sources, order, confounded)
 
 
 @dataclass(frozen=True)

@@ -251,10 +251,12 @@ FindingKind = Literal[
     "coupling",
     "influences",
     "budget",
+    "generations",
+    "next",
 ]
 """What a finding is about; ``site_templates/findings/KIND.html`` has its words."""
 
-_FIRST = {"rehearsal": -1, "curved": 0, "enough": 1, "accuracy": 2, "pressure": 3, "budget": 4}
+_FIRST = {"rehearsal": -1, "curved": 0, "enough": 1, "generations": 2, "accuracy": 3, "pressure": 4, "budget": 5}
 """What comes first, in this order: what a length is read to, and what pressure adds to it."""
 
 

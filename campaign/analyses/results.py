@@ -10,11 +10,14 @@ if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration
     from campaign.analyses.calibration_effort import CalibrationEffort
     from campaign.analyses.drift import Drift
+    from campaign.analyses.earlier import EarlierCampaign
     from campaign.analyses.endurance import Endurance
     from campaign.analyses.findings import Findings
+    from campaign.analyses.generations import Generations
     from campaign.analyses.hysteresis import Hysteresis
     from campaign.analyses.influences import Influences
     from campaign.analyses.limits import Limits
+    from campaign.analyses.planning import Planning
     from campaign.analyses.pressure import Pressure
     from campaign.analyses.rehearsal import Rehearsal
     from campaign.analyses.residuals import Residuals
@@ -47,8 +50,14 @@ class CampaignResults:
         Loops, thousands of cycles, holds, pressure, other influences; ``None`` where not measured.
     budget
         What adds up to the uncertainty in use; ``None`` where no sensor has a line.
+    generations
+        Generations compared; ``None`` with fewer than two, earlier campaigns included.
+    planning
+        What the next campaign could resolve, and what this one lacks.
     rehearsal
         Plan and estimate, where the campaign is a rehearsal.
+    earlier
+        Earlier campaigns that were joined.
     """
 
     description: Description
@@ -67,4 +76,7 @@ class CampaignResults:
     pressure: Pressure | None = None
     influences: Influences | None = None
     budget: Budget | None = None
+    generations: Generations | None = None
+    planning: Planning | None = None
     rehearsal: Rehearsal | None = None
+    earlier: tuple[EarlierCampaign, ...] = ()

@@ -133,6 +133,11 @@ class Variance:
         """The fits of single generations, the pooled one left out."""
         return _single(self.fits)
 
+    @property
+    def uneven(self) -> frozenset[str]:
+        """Generations whose noise inside runs is uneven or autocorrelated."""
+        return frozenset(name for name, check in self.noise.items() if check.faults)
+
 
 def _single(fits: tuple[GenerationFit, ...]) -> tuple[GenerationFit, ...]:
     """The fits of single generations."""
@@ -192,6 +197,39 @@ def variance_of_readings(
     notices += _noise_notices(noise)
     return _gather(reference, models, fits, ratio_fits, zero_noise, settling, noise, seed, notices)
 
+
+def fit_generations(
+    readings: pd.DataFrame, reference: ReferenceQuantity, description: Description
+) -> tuple[tuple[GenerationFit, ...], frozenset[str]]:
+    """Fit each generation by itself with limits at mid range, no more: what comparing generations needs.
+
+    Parameters
+    ----------
+    readings, reference, description
+        As in :func:`variance_of_readings`.
+
+    Returns
+    -------
+    tuple
+        The fits, and the names of the generations whose noise within runs is uneven or autocorrelated.
+    """
+    used = readings[readings["used"].astype(bool)]
+    used = used[np.isfinite(used["x"].to_numpy(float)) & np.isfinite(used["signal"].to_numpy(float))]
+    if used.empty:
+        return (), frozenset()
+    used = _with_common_levels(used, [])
+    kept = _settled_runs(used, _find_all_settling(used), [])
+    places = choose_places(
+        kept["x"].to_numpy(float), _rated(description, reference), has_zero=_has_zero(reference)
+    )
+    models = [m for m in _build_all(kept, kept["signal"].to_numpy(float)) if m.generation != "all"]
+    fits = tuple(_fit_all(tuple(models), places, _COMPARED, []))
+    seed = seed_of(kept)
+    return fits, frozenset(fit.generation for fit in fits if _noise_of(fit, seed).faults)
+
+
+_COMPARED = "signal, for comparison"
+"""A fit whose limits are wanted at mid range only."""
 
 _WITHHELD = "components of spread are not estimated"
 

@@ -231,6 +231,6 @@ def _designs(reach: Reach, sessions: int) -> Iterator[Design]:
 MOST_MODULES = 60
 QUANTILES: tuple[float, ...] = (
     math.nan,
-    *stats.t.ppf((1 + LEVEL) / 2, np.arange(1, 2 * MOST_MODULES + 1)).tolist(),
+    *map(float, np.asarray(stats.t.ppf((1 + LEVEL) / 2, np.arange(1, 2 * MOST_MODULES + 1)))),
 )
 """97.5 % quantile of Student's t by degrees of freedom."""

@@ -43,6 +43,10 @@ CONTRACT_COLUMNS: dict[str, tuple[str, ...]] = {
         "influences": "generation module sensor influence coefficient low high unit strain_equivalent",
         "budget": "generation module sensor source standard_uncertainty distribution divisor sensitivity "
         "contribution_strain df",
+        "generations": "figure unit first second estimate_first estimate_second difference_or_ratio kind "
+        "low high df p p_adjusted verdict",
+        "planning": "generations modules sensors repetitions cost difference_half_width power "
+        "module_sd_low_factor module_sd_high_factor",
         "limits": "limit value unit subject estimate expanded_uncertainty verdict probability",
     }.items()
 }

@@ -54,6 +54,10 @@ DEFINITIONS: dict[str, tuple[str, str]] = {
     "Allan deviation": ("allan", "deviation_strain white flicker least_deviation"),
     "zero across sessions": ("zero-over-time", "departure_percent_fso"),
     "blank channels": ("blank", "per_hour parasitic"),
+    "generations compared": ("generations", "_compared difference_or_ratio"),
+    "equivalence": ("equivalence", "p_equivalence_adjusted _margin"),
+    "many tests": ("multiplicity", "p_adjusted"),
+    "plans": ("planning", "difference_half_width power"),
     "verdicts": ("limits", "verdict probability"),
 }
 """Words of a link → (address on the Method page, columns that it explains)."""

@@ -9,6 +9,7 @@ from campaign.analyses.limits import Limits
 from campaign.analyses.results import CampaignResults
 from campaign.pages.calibration_effort import effort_sentence
 from campaign.pages.component_words import level_words
+from campaign.pages.generation_words import comparison_sentence, figure_words
 from campaign.pages.page import Page
 from campaign.pages.sensor import limits_as_shown
 from campaign.pages.skin_map import SkinMap
@@ -58,6 +59,8 @@ def findings_page(results: CampaignResults, mapped: SkinMap) -> Page:
             "kind_words": KIND_WORDS,
             "effort_words": effort_sentence,
             "level_words": level_words,
+            "figure_words": figure_words,
+            "comparison_sentence": comparison_sentence,
             "averaged": AVERAGED,
             "reference": results.findings.scope.reference,
             "direction": results.description.use.get("direction", ""),

@@ -11,6 +11,7 @@ import pandas as pd
 from campaign.analyses.results import CampaignResults
 from campaign.pages import slugs
 from campaign.pages.calculator import record_href
+from campaign.pages.generations import earlier_files_table
 from campaign.pages.page import INVENTED, REHEARSED, Page
 from campaign.pages.tables import Column, Table
 from campaign.recordings.description import Description
@@ -44,6 +45,7 @@ def provenance_page(results: CampaignResults, tables: Sequence[Table]) -> Page:
     records = records_table(results)
     written = {t.name: t for t in (*tables, *((records,) if records else ())) if t.source is None}
     files = files_table(results.intake.recordings)
+    earlier = earlier_files_table(results.earlier)
     return Page(
         slug="provenance",
         number=14,
@@ -51,13 +53,14 @@ def provenance_page(results: CampaignResults, tables: Sequence[Table]) -> Page:
         template="provenance.html",
         context={
             "description": results.description,
+            "earlier": results.earlier,
             "citation": citation(results.description),
             "downloads": [_download(written[name]) for name in sorted(written)],
             "hashed_files": int((results.intake.recordings["sha256"].astype(str) != "").sum()),
             "campaign_checksums": CAMPAIGN_CHECKSUMS,
             "site_checksums": SITE_CHECKSUMS,
         },
-        tables=(files, *((records,) if records else ())),
+        tables=(files, *((records,) if records else ()), *((earlier,) if earlier else ())),
         description="Files and their hashes, downloads, how to cite and how to verify.",
     )
 

@@ -15,12 +15,14 @@ from campaign.pages.calibration_effort import calibration_effort_page
 from campaign.pages.campaign_map import campaign_map
 from campaign.pages.drift import drift_page
 from campaign.pages.findings import findings_page
+from campaign.pages.generations import generations_page
 from campaign.pages.hysteresis import hysteresis_page
 from campaign.pages.loop_figures import loop_scripts
 from campaign.pages.method import method_page
 from campaign.pages.module import module_pages
 from campaign.pages.notes import Notes
 from campaign.pages.page import Page, SiteFrame
+from campaign.pages.planning import planning_page
 from campaign.pages.pressure import pressure_page
 from campaign.pages.provenance import provenance_page
 from campaign.pages.recordings import recordings_page
@@ -83,6 +85,8 @@ def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
         hysteresis_page(results),
         drift_page(results),
         pressure_page(results),
+        generations_page(results),
+        planning_page(results),
         budget_page(results),
     )
     pages = [findings_page(results, mapped), *(page for page in measured if page is not None)]

@@ -49,6 +49,9 @@ CAPTIONS: dict[str, str] = {
     "pressure_sweeps": "Every sweep of pressure: its line over both branches, loop width and drift.",
     "pressure_corrections": "What is left of the error by pressure with every correction, left out.",
     "influence_sweeps": "Every sweep of the other influences.",
+    "generations": "Every headline figure of every two generations.",
+    "module_means": "Mean of every headline figure of every module.",
+    "planning": "What planned campaigns would resolve.",
     "endurance_log": "Zero and sensitivity of every logged cycle, up to the sensor’s failure.",
 }
 """Tables of the analyses that are written whole, with their captions."""
@@ -94,6 +97,10 @@ def _frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
         frames["budget"] = results.budget.table
     if len(results.limits.table):
         frames["limits"] = results.limits.table
+    if (compared := results.generations) is not None:
+        frames |= {"generations": compared.table, "module_means": compared.modules}
+    if results.planning is not None and len(results.planning.table):
+        frames["planning"] = results.planning.table
     return frames | _loop_frames(results) | _drift_frames(results) | _influence_frames(results)
 
 
