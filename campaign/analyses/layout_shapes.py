@@ -43,12 +43,12 @@ IntArray = npt.NDArray[np.int64]
 BoolArray = npt.NDArray[np.bool_]
 
 TOLERANCE = 0.1
-"""First order fails where a node's SD differs by more than this share, or its mean moves by that of its SD."""
+"""First order fails where a node's SD differs by more than this share, or its mean moves by that of an SD."""
 
 
 @dataclass(frozen=True)
 class SolvedPlacement:
-    """A placement and its drawn errors: by ``datum``, ``fit`` and ``edges``; empty where nothing is solved."""
+    """A placement and its drawn errors: by ``datum``, ``fit`` and ``edges``; empty where unsolved."""
 
     placement: Placement
     predicted: dict[str, PredictedErrors]

@@ -13,7 +13,6 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
-from scipy.linalg import solve_triangular
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
@@ -158,7 +157,7 @@ def adjust_network(
     UnsolvedNetworkError
         Fewer edges than coordinates, a singular figure, or a search that does not end.
     """
-    whiten = np.asarray(np.linalg.cholesky(covariance), dtype=np.float64)
+    whiten = np.linalg.inv(np.linalg.cholesky(covariance))
     origin = start.mean(axis=0)
     basis = datum_basis(start - origin, kept)
     if len(edges) < basis.shape[1]:
@@ -172,14 +171,14 @@ def _search(
 ) -> tuple[FloatArray, int]:
     """Damped Gauss–Newton steps from *start* within *basis* until they stand still."""
     points, damping, size = start, 1e-3, float(np.ptp(start)) or 1.0
-    residual = solve_triangular(whiten, lengths - distances(points, edges), lower=True)
+    residual = whiten @ (lengths - distances(points, edges))
     for step_number in range(MOST_STEPS):
-        slope = solve_triangular(whiten, distance_design(points, edges) @ basis, lower=True)
+        slope = whiten @ (distance_design(points, edges) @ basis)
         gram, right = slope.T @ slope, slope.T @ residual
         scale = np.diag(gram) + 1e-12 * float(np.max(np.diag(gram)))
         step = (basis @ np.linalg.solve(gram + damping * np.diag(scale), right)).reshape(-1, 2)
         tried = points + step
-        new = solve_triangular(whiten, lengths - distances(tried, edges), lower=True)
+        new = whiten @ (lengths - distances(tried, edges))
         before, after = float(residual @ residual), float(new @ new)
         tiny = float(np.abs(step).max()) <= STILL * size
         if after <= before:

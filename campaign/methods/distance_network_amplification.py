@@ -5,14 +5,14 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
-from campaign.methods.distance_network import SINGULAR, datum_basis, distance_design, distances, keep_nothing
+from campaign.methods.distance_network import SINGULAR, distance_design, distances, rigid_motions
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
 
 
 def node_amplification(points: FloatArray, edges: IntArray) -> FloatArray:
-    """Return the SD of every node (root of the sum of both coordinates' variances) per unit SD of a length.
+    """Return the SD of every node (both coordinates together) per unit SD of a length, shape (n,).
 
     Parameters
     ----------
@@ -24,16 +24,15 @@ def node_amplification(points: FloatArray, edges: IntArray) -> FloatArray:
     Returns
     -------
     numpy.ndarray
-        Shape (n,): after best rigid fit (inner constraints over all nodes), so that no datum decides;
-        infinite for a singular figure.
+        After best rigid fit (inner constraints over all nodes), so that no datum decides; infinite for a
+        singular figure.
     """
-    within = distance_design(points, edges) @ datum_basis(points, keep_nothing(len(points)))
-    values = np.linalg.svd(within, compute_uv=False)
-    if len(edges) < within.shape[1] or values[-1] < SINGULAR * values[0]:
+    design, motions = distance_design(points, edges), rigid_motions(points)
+    values, vectors = np.linalg.eigh(design.T @ design + motions @ motions.T)
+    if values[0] < SINGULAR**2 * values[-1]:
         return np.full(len(points), np.inf)
-    basis = datum_basis(points, keep_nothing(len(points)))
-    cofactor = basis @ np.linalg.inv(within.T @ within) @ basis.T
-    return np.asarray(np.sqrt(np.diag(cofactor).reshape(-1, 2).sum(axis=1)))
+    cofactor = (vectors / values) @ vectors.T - motions @ motions.T
+    return np.asarray(np.sqrt(np.maximum(np.diag(cofactor), 0.0).reshape(-1, 2).sum(axis=1)))
 
 
 def stretched_and_sheared(layout: FloatArray, stretch: float, shear: float) -> FloatArray:
