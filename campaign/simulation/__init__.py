@@ -19,11 +19,12 @@ from campaign.simulation.plan import (
 from campaign.simulation.readings import sensor_register, simulate_readings
 from campaign.simulation.recordings import simulate_recordings
 from campaign.simulation.schedule import Schedule
-from campaign.simulation.trial_plans import CyclicPlan, HoldPlan, SweepPlan
+from campaign.simulation.trial_plans import CyclicPlan, HoldPlan, LayoutPlan, SweepPlan, placed
 from campaign.simulation.trial_truths import (
     CyclicTruth,
     HoldTruth,
     InfluenceTruth,
+    LayoutTruth,
     LogarithmicRelaxation,
     StretchedRelaxation,
 )
@@ -50,6 +51,8 @@ __all__ = [
     "HoldPlan",
     "HoldTruth",
     "InfluenceTruth",
+    "LayoutPlan",
+    "LayoutTruth",
     "LineSpread",
     "LogarithmicRelaxation",
     "LoopWidth",
@@ -66,6 +69,7 @@ __all__ = [
     "SweepPlan",
     "Truth",
     "panel_places",
+    "placed",
     "regular_plan",
     "sensor_register",
     "simulate_readings",
