@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import sys
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
@@ -20,10 +21,14 @@ from campaign.analyses.drift_findings import drift_findings
 from campaign.analyses.earlier import (
     EarlierCampaign,
     Joined,
+    common_full_scale,
+    common_upper,
     full_scale_of,
     join,
+    reach_of,
     sources_of,
-    with_common_full_scale,
+    up_to,
+    with_full_scale,
 )
 from campaign.analyses.endurance import analyse_endurance
 from campaign.analyses.findings import collect_findings
@@ -34,6 +39,7 @@ from campaign.analyses.generations import Generations, compare_generations
 from campaign.analyses.hysteresis import Hysteresis, analyse_hysteresis
 from campaign.analyses.influence_findings import influence_findings
 from campaign.analyses.influences import analyse_influences
+from campaign.analyses.layout import analyse_layout
 from campaign.analyses.limits import judge_limits
 from campaign.analyses.loop_findings import loop_findings
 from campaign.analyses.planning import analyse_planning
@@ -50,7 +56,7 @@ from campaign.pages.notes import make_notes, read_note_files
 from campaign.pages.output import check_ours, write_folder
 from campaign.pages.site import build_site
 from campaign.provenance.manifest import with_manifests
-from campaign.recordings.description import DESCRIPTION_FILE, Description
+from campaign.recordings.description import DESCRIPTION_FILE
 from campaign.recordings.inspection import ON_SITE, inspection_lines, print_lines
 from campaign.recordings.intake import Intake, Progress, run_intake
 from campaign.recordings.recording import Trial
@@ -252,7 +258,7 @@ def read_earlier(folder: Path, read: CampaignRead, progress: Progress | None = N
                 if place.resolve() in taken:
                     raise CampaignStops([_not_joined(where, "is this campaign, or is named twice")])
                 taken.add(place.resolve())
-                found.append(_earlier_campaign(where, read_campaign(place), read.intake.description))
+                found.append(_earlier_campaign(where, read_campaign(place), read))
                 if found[-1].names_others:
                     notices.append(_not_followed(where))
         except CampaignStops as stop:
@@ -297,22 +303,43 @@ def opened_earlier(folder: Path, named: Mapping[str, str]) -> Iterator[Path]:
     yield folder / named["folder"]
 
 
-def _earlier_campaign(where: str, read: CampaignRead, own: Description) -> EarlierCampaign:
-    """Analyse an earlier campaign as far as comparison needs it, per cent by this campaign's full scale."""
-    intake, description = read.intake, read.intake.description
-    calibration = None
-    rescaled = False
-    if len(read.readings.usable):
-        calibration = _calibrate(read.readings, intake)
-        description, rescaled = with_common_full_scale(description, own, calibration)
-        if rescaled:
-            intake = replace(intake, description=description)
-            calibration = _calibrate(read.readings, intake)
+def _earlier_campaign(where: str, read: CampaignRead, own: CampaignRead) -> EarlierCampaign:
+    """Analyse an earlier campaign as far as comparison needs it, over the range common to both."""
+    intake, described = read.intake, own.intake.description
+    upper = common_upper(read.readings, own.readings)
+    full_scale = common_full_scale(described, read.readings, upper)
+    offers = _offers(read, up_to(read.readings, upper), full_scale)
+    further = reach_of(own.readings) > upper  # never where upper is not a number
+    used = intake.trials[intake.trials["fate"] == "used"]
+    stated = intake.description.range_strain, intake.description.range_elongation_mm
+    return EarlierCampaign(
+        where=where,
+        title=intake.description.title,
+        simulated=intake.description.simulated,
+        order=order_of_generations(intake),
+        offers=offers,
+        recordings=int(used["file"].nunique()),
+        modules=len(used.drop_duplicates(["generation", "module"])),
+        sensors=len(used.drop_duplicates(["generation", "module", "sensor"])),
+        hashes=intake.file_hashes,
+        full_scale=full_scale_of(offers),
+        rescaled=not math.isnan(full_scale) and full_scale not in stated,
+        upper=upper,
+        restricted=_offers(replace(own, features={}), up_to(own.readings, upper), upper) if further else None,
+        names_others=bool(intake.description.earlier),
+    )
+
+
+def _offers(read: CampaignRead, readings: Readings, full_scale: float) -> Comparable:
+    """Return the headline figures of a campaign by *readings*, full scale as given (NaN: as described)."""
+    description = with_full_scale(read.intake.description, readings.reference, full_scale)
+    intake = replace(read.intake, description=description)
+    calibration = _calibrate(readings, intake) if len(readings.usable) else None
     fits: tuple[GenerationFit, ...] = ()
     uneven: frozenset[str] = frozenset()
     if calibration is not None:
         fits, uneven = fit_generations(calibration.readings, calibration.reference, description)
-    offers = comparable_figures(
+    return comparable_figures(
         description,
         intake.used_identities,
         calibration,
@@ -321,21 +348,6 @@ def _earlier_campaign(where: str, read: CampaignRead, own: Description) -> Earli
         analyse_hysteresis(read.of_type(CyclicFeatures), calibration),
         analyse_drift(read.of_type(HoldFeatures), calibration, description),
         analyse_pressure(read.of_type(SweepFeatures), calibration, description),
-    )
-    used = intake.trials[intake.trials["fate"] == "used"]
-    return EarlierCampaign(
-        where=where,
-        title=description.title,
-        simulated=description.simulated,
-        order=order_of_generations(intake),
-        offers=offers,
-        recordings=int(used["file"].nunique()),
-        modules=len(used.drop_duplicates(["generation", "module"])),
-        sensors=len(used.drop_duplicates(["generation", "module", "sensor"])),
-        hashes=intake.file_hashes,
-        full_scale=full_scale_of(offers),
-        rescaled=rescaled,
-        names_others=bool(description.earlier),
     )
 
 
@@ -398,7 +410,11 @@ def analyse(
     if not len(readings.table) and others:
         readings = replace(readings, reference=others[0].reference)
     budget = analyse_budget(description, calibration, variance, hysteresis, drift, pressure, influences)
-    judged = [found.figures for found in (*others, budget) if found is not None]
+    registers = intake.modules, intake.sensors
+    layout = analyse_layout(
+        read.of_type(LayoutFeatures), calibration, variance, influences, description, registers
+    )
+    judged = [found.figures for found in (*others, budget, layout) if found is not None]
     limits = judge_limits(description, calibration, judged, budget.missing if budget is not None else None)
     findings = collect_findings(
         description,
@@ -420,7 +436,7 @@ def analyse(
         ],
         reference=readings.reference,
     )
-    analyses = (calibration, variance, residuals, effort, *others, influences, joined, generations)
+    analyses = (calibration, variance, residuals, effort, *others, influences, layout, joined, generations)
     notices = [notice for analysis in analyses if analysis is not None for notice in analysis.notices]
     tell("analyses", 4, 4)
     return CampaignResults(
@@ -439,6 +455,7 @@ def analyse(
         drift=drift,
         pressure=pressure,
         influences=influences,
+        layout=layout if layout is not None and layout.placements else None,
         budget=budget,
         generations=generations,
         planning=planning,

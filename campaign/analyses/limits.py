@@ -49,7 +49,10 @@ LIMIT_COLUMNS = (
 )
 """Columns of :attr:`Limits.table`; the first eight are the table's fixed part."""
 
-JUDGED = ("linearity", "hysteresis", "repeatability", "strain_error", "drift_1h", "pressure_error")
+JUDGED = (
+    *("linearity", "hysteresis", "repeatability", "strain_error", "drift_1h", "pressure_error"),
+    "node_error",
+)
 """Limits that an analysis can answer, in the order in which pages show them."""
 
 UNKNOWN = "uncertainty unknown"
@@ -57,6 +60,9 @@ TOO_FEW = "too few sensors"
 ONE_MODULE = "one module"
 CONDITIONS = "conditions of use not measured"
 """Reasons for which nothing is decided although the bare estimate may lie far from the limit."""
+
+NEW_SUBJECT = {"node_error": "a node of a new module"}
+"""What is predicted of a generation by a limit, where it is no new sensor."""
 
 _SENSOR = ["generation", "module", "sensor"]
 _CONDITIONS = ("time_since_zero", "temperature_range", "pressure", "rate")
@@ -214,7 +220,7 @@ def _judge_new_sensors(
             "limit": name,
             "value": value,
             "unit": unit,
-            "subject": f"a new sensor of {generation}",
+            "subject": f"{NEW_SUBJECT.get(name, 'a new sensor')} of {generation}",
             "generation": generation,
             "module": "",
             "sensor": "",

@@ -16,6 +16,7 @@ if TYPE_CHECKING:
     from campaign.analyses.generations import Generations
     from campaign.analyses.hysteresis import Hysteresis
     from campaign.analyses.influences import Influences
+    from campaign.analyses.layout_results import Layout
     from campaign.analyses.limits import Limits
     from campaign.analyses.planning import Planning
     from campaign.analyses.pressure import Pressure
@@ -48,6 +49,8 @@ class CampaignResults:
         All notices of reading and of analyses, sorted.
     hysteresis, endurance, drift, pressure, influences
         Loops, thousands of cycles, holds, pressure, other influences; ``None`` where not measured.
+    layout
+        Shapes rebuilt from lengths; ``None`` where there is no placement that could be read.
     budget
         What adds up to the uncertainty in use; ``None`` where no sensor has a line.
     generations
@@ -75,6 +78,7 @@ class CampaignResults:
     drift: Drift | None = None
     pressure: Pressure | None = None
     influences: Influences | None = None
+    layout: Layout | None = None
     budget: Budget | None = None
     generations: Generations | None = None
     planning: Planning | None = None

@@ -15,7 +15,7 @@ if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration
     from campaign.recordings.intake import Intake
 
-ANALYSED = tuple(kind for kind in KINDS if kind != "layout")
+ANALYSED = KINDS
 """Kinds that an analysis answers."""
 
 

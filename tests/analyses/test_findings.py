@@ -110,7 +110,8 @@ def test_scope_counts_what_was_used_and_names_what_was_not(tmp_path):
     assert "staircase" not in scope.not_measured
 
 
-def test_kinds_that_nothing_analyses_yet_are_counted_by_file():
+def test_kinds_that_nothing_analyses_yet_are_counted_by_file(monkeypatch):
+    monkeypatch.setattr("campaign.analyses.scope.ANALYSED", ("staircase", "cyclic"))
     trials = pd.DataFrame(
         {
             "file": ["a.csv", "a.csv", "b.csv", "c.csv"],
@@ -126,7 +127,7 @@ def test_kinds_that_nothing_analyses_yet_are_counted_by_file():
     )
     nothing = pd.DataFrame(columns=["module", "sensor"])
     intake = SimpleNamespace(trials=trials, modules=nothing, sensors=nothing, sessions=nothing)
-    description = SimpleNamespace(title="t", simulated=False, first_day="", last_day="")
+    description = SimpleNamespace(title="t", simulated=False, rehearsal=False, first_day="", last_day="")
     scope = describe_scope(description, intake, None)
     assert scope.not_analysed == (("layout", 2),)
     assert scope.x is None
