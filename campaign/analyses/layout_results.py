@@ -33,7 +33,7 @@ GROUP = "one edge of a group"
 NODE_COLUMNS = (
     *("generation", "module", "placement", "node", "x_mm", "y_mm", "known_x_mm", "known_y_mm"),
     *("sd_x_mm", "sd_y_mm", "cov_xy_mm2", "error_mm", "predicted_sd_mm"),
-    *("line", "trial", "repetition", "status", "error_x_mm", "error_y_mm"),
+    *("read_by", "trial", "repetition", "status", "error_x_mm", "error_y_mm"),
     *("fit_error_mm", "fit_predicted_sd_mm", "first_order_fails"),
 )
 """Columns of :attr:`Layout.nodes`; the first thirteen are the table's fixed part."""
@@ -41,30 +41,39 @@ NODE_COLUMNS = (
 EDGE_COLUMNS = (
     *("generation", "module", "placement", "sensor", "length_mm", "known_length_mm", "adjusted_length_mm"),
     *("residual_mm", "redundancy", "tau"),
-    *("line", "trial", "repetition", "status", "sd_length_mm", "known_sd_mm", "error_mm", "predicted_sd_mm"),
+    *(
+        "read_by",
+        "trial",
+        "repetition",
+        "status",
+        "sd_length_mm",
+        "known_sd_mm",
+        "error_mm",
+        "predicted_sd_mm",
+    ),
     *("standardised_residual", "tau_limit", "suspected"),
 )
 """Columns of :attr:`Layout.edges`; the first ten are the table's fixed part."""
 
 ERROR_COLUMNS = (
-    *("line", "generation", "module", "figure", "placements", "nodes_or_edges"),
+    *("read_by", "generation", "module", "figure", "placements", "nodes_or_edges"),
     *("rms_mm", "largest_mm", "predicted_rms_mm", "predicted_low_mm", "predicted_high_mm"),
     *("predicted_largest_mm", "predicted_largest_low_mm", "predicted_largest_high_mm"),
     *("ratio", "ratio_low", "ratio_high", "agrees"),
 )
 """Columns of :attr:`Layout.errors` and :attr:`Layout.by_module`.
 
-``figure`` is ``node error after datum``, ``node error after best fit`` or ``edge length error``; ``module``
+``read_by`` is one of :data:`LINES`. ``figure`` is ``node error after datum``, ``node error after best fit`` or ``edge length error``; ``module``
 is empty in rows of a generation. Predicted limits hold 95 % of what calibration and known positions alone
 would give; ``ratio`` is observed over predicted RMS with the 95 % interval that the prediction's own spread
 leaves; ``agrees`` is whether the observed RMS lies inside the predicted limits.
 """
 
-EXTRA_COLUMNS = ("line", "generation", "extra_sd_mm", "low_mm", "high_mm", "p", "lengths", "label")
+EXTRA_COLUMNS = ("read_by", "generation", "extra_sd_mm", "low_mm", "high_mm", "p", "lengths", "label")
 """Columns of :attr:`Layout.extra`: SD to be added to every length for prediction and observation to agree."""
 
 SUM_COLUMNS = (
-    *("generation", "module", "placement", "line", "trial", "sum", "estimate_mm", "known_mm"),
+    *("generation", "module", "placement", "read_by", "trial", "edges", "estimate_mm", "known_mm"),
     *("sd_mm", "sd_independent_mm", "sd_monte_carlo_mm"),
 )
 """Columns of :attr:`Layout.sums`: the sum of the edges used of every placement, with its SD from the whole

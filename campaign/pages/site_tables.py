@@ -32,6 +32,11 @@ CAPTIONS: dict[str, str] = {
     "residuals": "Conditional and marginal residuals of the nested model.",
     "calibration_effort": "Error against calibration effort, predicted and left out.",
     "budget": "Every source of every budget, at zero, mid and full scale.",
+    "layout": "Every node of every placement: adjusted and known, with errors beside predicted ones.",
+    "layout_edges": "Every edge of every placement: read, known and adjusted length, with its tests.",
+    "layout_errors": "Errors of nodes and edges by generation and module, beside predicted ones.",
+    "layout_extra_sd": "What must be added to every length for prediction and observation to agree.",
+    "layout_sums": "The sum of the edges of every placement, its uncertainty by covariance and by Monte Carlo.",
     "limits": "Every limit judged, sensor by sensor and for a new sensor.",
     "holds": "Every hold: changes, slope a decade, form, and what it may be called.",
     "hold_forms": "Every form fitted to every hold.",
@@ -101,7 +106,22 @@ def _frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
         frames |= {"generations": compared.table, "module_means": compared.modules}
     if results.planning is not None and len(results.planning.table):
         frames["planning"] = results.planning.table
-    return frames | _loop_frames(results) | _drift_frames(results) | _influence_frames(results)
+    frames |= _layout_frames(results) | _loop_frames(results)
+    return frames | _drift_frames(results) | _influence_frames(results)
+
+
+def _layout_frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
+    """Return the frames of rebuilt shapes, where there are any."""
+    if (found := results.layout) is None:
+        return {}
+    frames = {
+        "layout": found.nodes,
+        "layout_edges": found.edges,
+        "layout_errors": pd.concat([found.errors, found.by_module], ignore_index=True),
+        "layout_extra_sd": found.extra,
+        "layout_sums": found.sums,
+    }
+    return {name: frame for name, frame in frames.items() if len(frame)}
 
 
 def _loop_frames(results: CampaignResults) -> dict[str, pd.DataFrame]:
