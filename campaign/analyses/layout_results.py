@@ -59,14 +59,15 @@ ERROR_COLUMNS = (
     *("read_by", "generation", "module", "figure", "placements", "nodes_or_edges"),
     *("rms_mm", "largest_mm", "predicted_rms_mm", "predicted_low_mm", "predicted_high_mm"),
     *("predicted_largest_mm", "predicted_largest_low_mm", "predicted_largest_high_mm"),
-    *("ratio", "ratio_low", "ratio_high", "agrees"),
+    *("ratio", "ratio_low", "ratio_high", "as_predicted"),
 )
 """Columns of :attr:`Layout.errors` and :attr:`Layout.by_module`.
 
-``read_by`` is one of :data:`LINES`. ``figure`` is ``node error after datum``, ``node error after best fit`` or ``edge length error``; ``module``
-is empty in rows of a generation. Predicted limits hold 95 % of what calibration and known positions alone
-would give; ``ratio`` is observed over predicted RMS with the 95 % interval that the prediction's own spread
-leaves; ``agrees`` is whether the observed RMS lies inside the predicted limits.
+``read_by`` is one of :data:`LINES`. ``figure`` is ``node error after datum``, ``node error after best fit`` or
+``edge length error``; ``module`` is empty in rows of a generation. Predicted limits hold 95 % of what
+calibration and known positions alone would give; ``ratio`` is observed over predicted RMS with the 95 %
+interval that the prediction's own spread leaves; ``as_predicted`` is whether the observed RMS lies inside the
+predicted limits.
 """
 
 EXTRA_COLUMNS = ("read_by", "generation", "extra_sd_mm", "low_mm", "high_mm", "p", "lengths", "label")

@@ -309,7 +309,7 @@ _MEANINGS: dict[str, str] = {
     "predicted_largest_mm": "median of the predicted largest",
     "predicted_largest_low_mm": "lower limit that holds 95 % of it",
     "predicted_largest_high_mm": "upper limit that holds 95 % of it",
-    "agrees": "whether observed lies within predicted limits",
+    "as_predicted": "whether the observed root mean square lies within the predicted limits",
     "extra_sd_mm": "SD to be added to every length for prediction and observation to agree",
     "low_mm": "lower limit of the 95 % interval",
     "high_mm": "upper limit of the 95 % interval",

@@ -36,7 +36,7 @@ CAPTIONS: dict[str, str] = {
     "layout_edges": "Every edge of every placement: read, known and adjusted length, with its tests.",
     "layout_errors": "Errors of nodes and edges by generation and module, beside predicted ones.",
     "layout_extra_sd": "What must be added to every length for prediction and observation to agree.",
-    "layout_sums": "The sum of the edges of every placement, its uncertainty by covariance and by Monte Carlo.",
+    "layout_sums": "The sum of the edges of every placement, with its uncertainty by two ways.",
     "limits": "Every limit judged, sensor by sensor and for a new sensor.",
     "holds": "Every hold: changes, slope a decade, form, and what it may be called.",
     "hold_forms": "Every form fitted to every hold.",
