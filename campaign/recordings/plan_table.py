@@ -204,9 +204,10 @@ def _read_places(
     table: CheckedTable, sensors: int | None, geometries: Mapping[str, Geometry], layout: bool
 ) -> tuple[tuple[PlannedPlace, ...], str]:
     rest_mm = table.quantity("rest_length", ("length",), bare_unit="mm", default=USUAL_REST_LENGTH_MM)
-    if not 1.0 <= rest_mm <= 10_000.0 and rest_mm == rest_mm:
+    if not 1.0 <= rest_mm <= 10_000.0:
         what = f"{rest_mm:g} mm is no length of a sensor"
         table.fault("wrong-value", "rest_length", what, 'write rest_length = "80 mm"')
+        rest_mm = USUAL_REST_LENGTH_MM
     plain = tuple(PlannedPlace(f"S{index + 1}", rest_mm) for index in range(sensors or 1))
     joined = _read_edges(table)
     if not geometries:
