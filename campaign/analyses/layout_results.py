@@ -63,8 +63,8 @@ ERROR_COLUMNS = (
 )
 """Columns of :attr:`Layout.errors` and :attr:`Layout.by_module`.
 
-``read_by`` is one of :data:`LINES`. ``figure`` is ``node error after datum``, ``node error after best fit`` or
-``edge length error``; ``module`` is empty in rows of a generation. Predicted limits hold 95 % of what
+``read_by`` is one of :data:`LINES`; ``figure`` is ``node error after datum``, ``node error after best fit``
+or ``edge length error``; ``module`` is empty in rows of a generation. Predicted limits hold 95 % of what
 calibration and known positions alone would give; ``ratio`` is observed over predicted RMS with the 95 %
 interval that the prediction's own spread leaves; ``as_predicted`` is whether the observed RMS lies inside the
 predicted limits.
