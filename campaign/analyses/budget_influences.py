@@ -7,8 +7,8 @@ sensors with their spread.
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -55,15 +55,21 @@ class InfluenceSource:
         The nested model of apparent x per unit of the influence.
     middles
         Generation → middle of the lengths, from which that model counts x.
+    occasions
+        Generation → variance of the effect from one occasion to the next, by the scatter of sweeps and runs.
     farthest
         Largest amount that was swept, to a tenth beyond.
+    known
+        Effects on any sensor that were asked for before.
     """
 
     fits: Mapping[SensorKey, InfluenceFit]
     origin: float
     spread: InfluenceSpread
     middles: Mapping[str, float]
+    occasions: Mapping[str, float]
     farthest: float
+    known: dict[tuple[str, float], Effect | None] = field(default_factory=dict, compare=False)
 
     def own(self, key: SensorKey, x: float, slope: float) -> Effect | None:
         """Return the effect on a sensor that was swept itself; None for any other."""
@@ -73,12 +79,18 @@ class InfluenceSource:
         value, variance = fit.at(x - self.origin)
         if not (math.isfinite(value) and fit.degrees_of_freedom > 0):
             return None
-        anew = self._occasions(key[0])
+        anew = self.occasions.get(key[0], 0.0)
         spread = math.sqrt(max(variance, 0.0) / slope**2 + anew)
         return Effect(value / slope, spread, fit.degrees_of_freedom, self.farthest, owner=OWN)
 
     def shared(self, generation: str, x: float) -> Effect | None:
         """Return the effect on any sensor of a generation; None where its spread is not known."""
+        where = generation, round(x, 12)
+        if where not in self.known:
+            self.known[where] = self._shared(generation, x)
+        return self.known[where]
+
+    def _shared(self, generation: str, x: float) -> Effect | None:
         fit, table = self.spread.fits.get(generation), self.spread.components
         rows = table[(table["generation"] == generation) & (table["component"] == "mean")]
         if fit is None or rows.empty or not fit.coefficients[0]:
@@ -90,16 +102,6 @@ class InfluenceSource:
         variance, freedom = satterthwaite(fit, contrast, extra | {"residual": np.ones(1)})
         value = scale * float(contrast @ fit.coefficients)
         return Effect(value, abs(scale) * math.sqrt(variance), freedom, self.farthest, owner=SHARED)
-
-    def _occasions(self, generation: str) -> float:
-        """Variance of the effect from one occasion to the next, by the scatter of sweeps and runs."""
-        table = self.spread.components
-        rows = table[
-            (table["generation"] == generation)
-            & table["component"].isin(["run", "sweep"])
-            & (table["what"] == "error")
-        ]
-        return float(np.nansum(rows["estimate"].to_numpy(float) ** 2))
 
 
 def influence_sources(pressure: Pressure | None, influences: Influences | None) -> dict[str, InfluenceSource]:
@@ -124,20 +126,37 @@ def _source(sweeps: pd.DataFrame, spread: InfluenceSpread, quantity: str) -> Inf
     origin = float(x.min()) if quantity == "length" and x.notna().any() else 0.0
     ends = sweeps.groupby("generation")["x"].agg(["min", "max"])
     middles = {str(g): float(row["min"] + row["max"]) / 2.0 for g, row in ends.iterrows()}
+    parts = spread.components
+    anew = parts[parts["component"].isin(["run", "sweep"]) & (parts["what"] == "error")]
+    squares = (anew["estimate"].astype(float) ** 2).groupby(anew["generation"]).sum()
+    occasions = {str(generation): float(square) for generation, square in squares.items()}
     reach = float(sweeps[["influence_low", "influence_high"]].abs().to_numpy().max())
-    return InfluenceSource(sensor_fits(sweeps, origin), origin, spread, middles, REACH * reach)
+    return InfluenceSource(sensor_fits(sweeps, origin), origin, spread, middles, occasions, REACH * reach)
+
+
+@dataclass(frozen=True)
+class HeldPoints:
+    """What holds say at the lengths they kept, ordered by length.
+
+    Each point holds ``x``, ``per_decade`` and ``per_hour`` (one of the two is zero), their spreads and
+    ``degrees`` of freedom; ``start_s`` is when their slopes begin, ``longest_s`` how long the shortest one
+    lasted.
+    """
+
+    points: tuple[dict[str, float], ...]
+    start_s: float
+    longest_s: float
 
 
 @dataclass(frozen=True)
 class HoldSource:
-    """Holds as changes of x.
+    """Holds as changes of x: of every sensor that was held, and of any sensor of a generation.
 
-    One row a hold: ``generation``, ``module``, ``sensor``, ``x``, ``per_decade`` and ``per_hour`` (one of
-    the two is zero) with their standard errors, ``start_s`` and ``duration_s``; ``full`` is the full scale
-    of x.
+    ``full`` is the full scale of x.
     """
 
-    holds: pd.DataFrame
+    by_sensor: Mapping[SensorKey, HeldPoints]
+    by_generation: Mapping[str, HeldPoints]
     full: float
 
     def own(self, key: SensorKey, x: float, start_s: float) -> Course | None:
@@ -145,50 +164,41 @@ class HoldSource:
 
         Between lengths by straight lines; at lengths it was not held at, others of its generation stand in.
         """
-        rows = self.holds
-        rows = rows[(rows["generation"] == key[0]) & (rows["module"] == key[1]) & (rows["sensor"] == key[2])]
-        points = [_mean_of_holds(own) for own in self._by_length(rows)]
-        if not points:
+        held = self.by_sensor.get(key)
+        if held is None:
             return None
         apart = AT_REST * self.full
-        others = [p for p in self._points(key[0]) if all(abs(p["x"] - q["x"]) > apart for q in points)]
-        return self._course(rows, sorted([*points, *others], key=lambda p: p["x"]), x, start_s, OWN)
+        others = [
+            point
+            for point in self.by_generation[key[0]].points
+            if all(abs(point["x"] - own["x"]) > apart for own in held.points)
+        ]
+        points = sorted([*held.points, *others], key=lambda point: point["x"])
+        return self._course(replace(held, points=tuple(points)), x, start_s, OWN)
 
     def shared(self, generation: str, x: float, start_s: float) -> Course | None:
         """Return what time does to any sensor of a generation."""
-        rows = self.holds[self.holds["generation"] == generation]
-        return self._course(rows, self._points(generation), x, start_s, SHARED)
+        held = self.by_generation.get(generation)
+        return self._course(held, x, start_s, SHARED) if held is not None else None
 
-    def _points(self, generation: str) -> list[dict[str, float]]:
-        """What a further sensor of a generation does at each length that was held."""
-        rows = self.holds[self.holds["generation"] == generation]
-        found = (_prediction_of_holds(own) for own in self._by_length(rows))
-        return [point for point in found if point is not None]
-
-    def _by_length(self, rows: pd.DataFrame) -> list[pd.DataFrame]:
-        places = np.round(rows["x"].to_numpy(float) / (SAME_PLACE * self.full))
-        return [own for _, own in rows.groupby(places, sort=True)] if len(rows) else []
-
-    def _course(
-        self, rows: pd.DataFrame, points: Sequence[dict[str, float]], x: float, start_s: float, owner: str
-    ) -> Course | None:
-        stretched = [p for p in points if p["x"] > AT_REST * self.full]
+    def _course(self, held: HeldPoints, x: float, start_s: float, owner: str) -> Course | None:
+        points = held.points
+        stretched = any(point["x"] > AT_REST * self.full for point in points)
         if not points or (x > AT_REST * self.full and not stretched):
             return None
-        places = [p["x"] for p in points]
+        places = [point["x"] for point in points]
 
         def at(name: str) -> float:
-            return float(np.interp(x, places, [p[name] for p in points]))
+            return float(np.interp(x, places, [point[name] for point in points]))
 
-        start = start_s if math.isfinite(start_s) and start_s > 0 else float(rows["start_s"].median())
         return Course(
             at("per_decade"),
             at("per_decade_spread"),
             at("per_hour"),
             at("per_hour_spread"),
-            min(p["degrees"] for p in points),
-            start,
-            EXTRAPOLATION_LIMIT * float(rows["duration_s"].min()),
+            min(point["degrees"] for point in points),
+            start_s if math.isfinite(start_s) and start_s > 0 else held.start_s,
+            EXTRAPOLATION_LIMIT * held.longest_s,
             owner,
         )
 
@@ -225,7 +235,26 @@ def hold_source(drift: Drift | None, scales: Mapping[SensorKey, float], full: fl
         degrees=rows["change_1h_df"].astype(float),
     )
     made = made.dropna(subset=["x", "per_decade", "per_hour"])
-    return HoldSource(made.reset_index(drop=True), full) if len(made) else None
+    if made.empty:
+        return None
+    by_sensor = {
+        (str(key[0]), str(key[1]), str(key[2])): _held(own, full, _mean_of_holds)
+        for key, own in made.groupby(["generation", "module", "sensor"], sort=True)
+    }
+    by_generation = {
+        str(name): _held(own, full, _prediction_of_holds)
+        for name, own in made.groupby("generation", sort=True)
+    }
+    return HoldSource(by_sensor, by_generation, full)
+
+
+def _held(
+    rows: pd.DataFrame, full: float, summed: Callable[[pd.DataFrame], dict[str, float] | None]
+) -> HeldPoints:
+    """The holds of *rows*, those at one length taken together."""
+    places = np.round(rows["x"].to_numpy(float) / (SAME_PLACE * full))
+    points = [point for _, own in rows.groupby(places, sort=True) if (point := summed(own)) is not None]
+    return HeldPoints(tuple(points), float(rows["start_s"].median()), float(rows["duration_s"].min()))
 
 
 def _error(low: pd.Series, high: pd.Series) -> pd.Series:

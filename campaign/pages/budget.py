@@ -59,6 +59,7 @@ EXPLAINED_ON: Mapping[str, str] = {
 
 PLACE_WORDS: Mapping[str, str] = {"zero": "zero", "mid": "mid scale", "full": "full scale"}
 _TOTALS_SHOWN = 24
+_SMALLEST_SHARE = 0.01
 
 
 def budget_page(results: CampaignResults) -> Page | None:
@@ -202,6 +203,22 @@ def source_table(found: BudgetInUse, name: str, reference: ReferenceQuantity, th
 
 def _status_words(status: str, why: str) -> str:
     return why if status in (COUNTED, NOT_KNOWN) or why else status
+
+
+def sensor_budget(results: CampaignResults, module: str, sensor: str) -> dict[str, object] | None:
+    """Return what a sensor's page says of its uncertainty in use: U where it is largest, and what adds up."""
+    if results.budget is None:
+        return None
+    own = [b for b in results.budget.of_sensors() if (b.subject.module, b.subject.sensor) == (module, sensor)]
+    if not own:
+        return None
+    shares = sorted(shares_of(own[0]).items(), key=lambda pair: -pair[1])
+    return {
+        "combined": own[0].combined,
+        "x": own[0].place.x,
+        "unknown": own[0].unknown,
+        "shares": [(name, share) for name, share in shares if share >= _SMALLEST_SHARE],
+    }
 
 
 def totals_table(budget: Budget) -> Table:

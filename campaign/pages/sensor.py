@@ -14,6 +14,7 @@ from campaign.analyses.findings import AVERAGED
 from campaign.analyses.limits import CONDITIONS, ONE_MODULE, TOO_FEW, UNKNOWN
 from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers, slugs
+from campaign.pages.budget import sensor_budget
 from campaign.pages.calculator import calculator_data, record_href
 from campaign.pages.drift import sensor_holds
 from campaign.pages.figures import Figure
@@ -139,6 +140,7 @@ def _sensor_page(
             "records": [(record, record_href(record)) for record in records],
             "accuracy": _accuracy_of(parts.record),
             "averaged": AVERAGED,
+            "budget": sensor_budget(results, parts.module, parts.sensor),
             "sections": sections,
             "influences": influences,
             "loops": looped,
