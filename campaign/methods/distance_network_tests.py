@@ -25,8 +25,8 @@ RISK = 0.05
 ALIKE = 0.9
 """Edges whose test values are correlated beyond this are given as a group."""
 
-INDISTINCT = float(stats.chi2.ppf(0.95, 1))
-"""Two edges whose hypotheses differ by less in χ² are given as a group."""
+INDISTINCT = float(stats.chi2.ppf(0.99, 1))
+"""Edges whose error alone would explain the network almost as well, by less than this in χ², are a group."""
 
 NO_TEST, NO_BLUNDER = "no test: just determined", "none found"
 DETECTED, ONE_EDGE, GROUP = "detected, not located", "one edge", "one edge of a group"
@@ -164,7 +164,7 @@ def _gross_error(found: NetworkTest, root: FloatArray) -> GrossError:
     worst = int(np.argmax(squares))
     freedom = found.degrees_of_freedom
     rest = max(found.chi_square - float(squares[worst]), 0.0)
-    by_tau = freedom >= 2 and abs(float(found.tau[worst])) > found.tau_limit
+    by_tau = fails and freedom >= 2 and abs(float(found.tau[worst])) > found.tau_limit
     explained = stats.chi2.sf(rest, freedom - 1) >= RISK if freedom >= 2 else False
     by_known = fails and bool(explained) and squares[worst] > found.standardised_limit**2
     if freedom < 2 or not (by_known or by_tau):
