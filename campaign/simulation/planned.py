@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from datetime import time
+from typing import Any
 
 from campaign.simulation.plan import Batch, Generation, Place, Plan, StaircasePlan
 from campaign.simulation.trial_plans import CyclicPlan, HoldPlan, LayoutPlan, SweepPlan, placed
@@ -76,13 +77,14 @@ def assumed_truth(process: AssumedProcess, mean_rest_length_mm: float) -> Genera
     A sensor of the mean rest length has the mean line; longer ones have a steeper line and the same cable.
     """
     slope = process.signal * process.gauge_factor
-    lines = {level: LineSpread(z * slope, b * slope, r) for level, (z, b, r) in process.lines.items()}
+    spread: dict[str, Any] = {
+        level: LineSpread(zero * slope, relative * slope, correlation)
+        for level, (zero, relative, correlation) in process.lines.items()
+    }
+    spread |= {name: getattr(process, name) * slope for name in ("sensor_by_level", "residual")}
     return GenerationTruth(
         law=SignalLaw(parasitic=process.signal - slope, per_mm=slope / mean_rest_length_mm),
-        components=replace(
-            Components(sensor_by_level=process.sensor_by_level * slope, residual=process.residual * slope),
-            **lines,
-        ),
+        components=Components(**spread),
         loop=LoopWidth(process.hysteresis * slope, process.hysteresis_sd * slope),
         noise=SampleNoise(white=process.noise * slope),
         hold=HoldTruth(relaxation=LogarithmicRelaxation(process.relaxation)),
