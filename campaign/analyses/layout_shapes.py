@@ -35,7 +35,7 @@ from campaign.methods.distance_network_amplification import node_amplification
 from campaign.methods.distance_network_ellipses import ellipse_factor, standard_ellipses
 from campaign.methods.distance_network_figure import broken_triangles, edges_to_leave_out
 from campaign.methods.distance_network_monte_carlo import adjust_draws
-from campaign.methods.distance_network_tests import NetworkTest, tests_of_network
+from campaign.methods.distance_network_tests import NetworkTest, network_tests
 from campaign.methods.rigid_fit import into_frame
 
 FloatArray = npt.NDArray[np.float64]
@@ -115,7 +115,7 @@ def _solved(
     points[part.nodes] = network.points
     covariance[np.ix_(at, at)] = network.covariance
     sub = read.covariance_mm2[np.ix_(part.edges, part.edges)]
-    tested = tests_of_network(network, sub)
+    tested = network_tests(network, sub)
     errors, predicted = node_errors(blank, shape, part, network, read)
     edge = edge_errors(blank, shape, part, network, read)
     predicted["edges"] = edge.predicted

@@ -98,7 +98,7 @@ def tau_quantile(degrees_of_freedom: int, edges: int, risk: float = RISK) -> flo
     return float(np.sqrt(degrees_of_freedom) * t / np.sqrt(degrees_of_freedom - 1 + t**2))
 
 
-def tests_of_network(network: AdjustedNetwork, covariance: FloatArray) -> NetworkTest:
+def network_tests(network: AdjustedNetwork, covariance: FloatArray) -> NetworkTest:
     """Test an adjusted network against the known covariance of its lengths.
 
     Parameters
