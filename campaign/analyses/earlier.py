@@ -5,15 +5,15 @@ from __future__ import annotations
 import math
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
-from typing import TYPE_CHECKING
 
-from campaign.analyses.generation_figures import FULL_SCALE, Comparable
-from campaign.analyses.generations import Source
+import pandas as pd
+
+from campaign.analyses.generation_figures import FULL_SCALE, REACH, Comparable
+from campaign.analyses.generations import CONDITION_TOLERANCE, Source
 from campaign.notices import Notice
 from campaign.recordings.description import Description
-
-if TYPE_CHECKING:
-    from campaign.analyses.calibration import Calibration
+from campaign.recordings.recording import ReferenceQuantity
+from campaign.trials.readings import Readings
 
 
 @dataclass(frozen=True)
@@ -39,7 +39,11 @@ class EarlierCampaign:
     full_scale
         Full scale that its per cent figures refer to here, units of the reference; NaN where it has none.
     rescaled
-        Whether its own stated full scale was another, and this campaign's was taken.
+        Whether its own stated full scale was another.
+    upper
+        Up to where both campaigns read, where one reads further; NaN where they read alike.
+    restricted
+        Staircase figures of this campaign up to there; ``None`` where it reads no further.
     names_others
         Whether it names earlier campaigns of its own.
     """
@@ -55,6 +59,8 @@ class EarlierCampaign:
     hashes: Mapping[str, str]
     full_scale: float
     rescaled: bool
+    upper: float = math.nan
+    restricted: Comparable | None = None
     names_others: bool = False
 
 
@@ -66,24 +72,84 @@ class Joined:
     notices: tuple[Notice, ...] = ()
 
 
-def with_common_full_scale(
-    earlier: Description, own: Description, calibration: Calibration | None
-) -> tuple[Description, bool]:
-    """Return the description of an earlier campaign with this campaign's rated range, and whether it changed.
+def common_upper(earlier: Readings, own: Readings) -> float:
+    """Return up to which value of the reference both campaigns read, where one reads further; else NaN.
 
-    Only where its readings reach that range: full scale is never extrapolated. Then its figures in %FSO refer
-    to the common full scale.
+    NaN too where they have different references, or one has no readings.
     """
-    if calibration is None or calibration.sensor_lines.empty:
-        return earlier, False
-    name = "range_strain" if calibration.reference.name == "strain" else "range_elongation_mm"
-    wanted, stated = getattr(own, name), getattr(earlier, name)
-    lines = calibration.sensor_lines
-    reached = float(lines["strain_high"].groupby([lines["module"], lines["sensor"]]).max().median())
-    near = 0.02 * (reached - float(lines["strain_low"].min()))
-    if not math.isfinite(wanted) or wanted == stated or wanted > reached + near:
-        return earlier, False
-    return replace(earlier, **{name: wanted}), True
+    if earlier.reference != own.reference or not (len(earlier.usable) and len(own.usable)):
+        return math.nan
+    reached = reach_of(earlier), reach_of(own)
+    apart = abs(reached[0] - reached[1]) > CONDITION_TOLERANCE * max(map(abs, reached))
+    return min(reached) if apart else math.nan
+
+
+def reach_of(readings: Readings) -> float:
+    """Return how far the usual (median) sensor was read, in units of the reference."""
+    usable = readings.usable
+    return float(usable.groupby(["generation", "module", "sensor"])["x"].max().median())
+
+
+def up_to(readings: Readings, upper: float) -> Readings:
+    """Return the readings up to *upper*, and a fiftieth of it beyond; all of them where it is NaN."""
+    if math.isnan(upper):
+        return readings
+    kept = readings.table["x"] <= upper + 0.02 * abs(upper)
+    return replace(readings, table=readings.table[kept].reset_index(drop=True))
+
+
+def with_full_scale(description: Description, reference: ReferenceQuantity, full_scale: float) -> Description:
+    """Return the description with another rated range (NaN: as it is); lengths have none."""
+    if math.isnan(full_scale) or reference.name == "length":
+        return description
+    if reference.name == "strain":
+        return replace(description, range_strain=full_scale)
+    return replace(description, range_elongation_mm=full_scale)
+
+
+def common_full_scale(own: Description, readings: Readings, upper: float) -> float:
+    """Return the full scale that both campaigns' per cent refer to; NaN where each keeps its own.
+
+    This campaign's rated range where both reach it, else as far as both reach: never extrapolated.
+
+    Parameters
+    ----------
+    own
+        Rated range of this campaign.
+    readings
+        Of the earlier campaign.
+    upper
+        What :func:`common_upper` gave.
+    """
+    rated = own.range_strain if readings.reference.name == "strain" else own.range_elongation_mm
+    if not len(readings.usable):
+        return math.nan
+    reached = upper if math.isfinite(upper) else reach_of(readings)
+    if math.isfinite(rated) and rated <= 1.02 * reached:
+        return rated
+    return upper
+
+
+def at_common_range(restricted: Comparable, whole: Comparable) -> Comparable:
+    """Return what a campaign offers over the range common with another one.
+
+    Parameters
+    ----------
+    restricted
+        Figures of its staircases over that range.
+    whole
+        All its figures: those that staircases do not give are taken from here, per cent of full-scale output
+        referred to the other full scale.
+    """
+    scales = [offers.conditions.get(FULL_SCALE, math.nan) for offers in (whole, restricted)]
+    others = whole.values[~whole.values["figure"].isin(set(restricted.values["figure"]))]
+    percent = others["unit"].astype(str).str.startswith("%FSO")
+    factor = percent.map({True: scales[0] / scales[1], False: 1.0})
+    values = pd.concat([restricted.values, others.assign(value=others["value"] * factor)], ignore_index=True)
+    reach = {REACH: whole.conditions[REACH]} if REACH in whole.conditions else {}
+    return replace(
+        restricted, values=values, conditions={**whole.conditions, **restricted.conditions, **reach}
+    )
 
 
 def full_scale_of(offers: Comparable) -> float:
@@ -163,7 +229,7 @@ def join(campaigns: Sequence[EarlierCampaign], own: Iterable[str], notices: Iter
             None,
             None,
             f"{campaign.where} states another full scale",
-            "its figures in %FSO refer to that of this campaign",
+            "its figures in %FSO refer to the full scale common to both",
         )
         for campaign in campaigns
         if campaign.rescaled
@@ -173,4 +239,10 @@ def join(campaigns: Sequence[EarlierCampaign], own: Iterable[str], notices: Iter
 
 def sources_of(earlier: Iterable[EarlierCampaign], title: str, own: Comparable) -> list[Source]:
     """Return all campaigns as parts of one comparison, this one last."""
-    return [*(Source(campaign.title, campaign.offers) for campaign in earlier), Source(title, own)]
+    made = [
+        Source(
+            one.title, one.offers, None if one.restricted is None else at_common_range(one.restricted, own)
+        )
+        for one in earlier
+    ]
+    return [*made, Source(title, own)]

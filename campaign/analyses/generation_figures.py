@@ -25,8 +25,9 @@ if TYPE_CHECKING:
 
 Kind = Literal["difference", "ratio"]
 
-RANGE, FULL_SCALE, RATE, HELD_AT, MID_RANGE = (
+RANGE, REACH, FULL_SCALE, RATE, HELD_AT, MID_RANGE = (
     "highest calibrated level",
+    "reach of the runs",
     "full scale",
     "rate of the loops",
     "length of the holds",
@@ -60,10 +61,10 @@ class HeadlineFigure:
 _IN_FULL_SCALE = (RANGE, FULL_SCALE)
 
 SENSOR_FIGURES: tuple[HeadlineFigure, ...] = (
-    HeadlineFigure("strain_error", "difference", True, (RANGE,)),
+    HeadlineFigure("strain_error", "difference", True, (REACH,)),
     HeadlineFigure("linearity", "difference", True, _IN_FULL_SCALE),
-    HeadlineFigure("hysteresis", "difference", True, (*_IN_FULL_SCALE, RATE)),
-    HeadlineFigure("staircase_hysteresis", "difference", True, _IN_FULL_SCALE),
+    HeadlineFigure("hysteresis", "difference", True, (REACH, *_IN_FULL_SCALE, RATE)),
+    HeadlineFigure("staircase_hysteresis", "difference", True, (REACH, *_IN_FULL_SCALE)),
     HeadlineFigure("repeatability", "difference", True, (FULL_SCALE,)),
     HeadlineFigure("drift_1h", "difference", True, (FULL_SCALE, HELD_AT)),
     HeadlineFigure("slope_per_decade", "difference", True, (FULL_SCALE, HELD_AT)),
@@ -283,7 +284,7 @@ def _conditions(
     found: dict[str, float] = {}
     if calibration is not None and len(calibration.sensor_lines):
         lines = principal_lines(calibration.sensor_lines)
-        found[RANGE] = float(lines["strain_high"].median())
+        found[RANGE] = found[REACH] = float(lines["strain_high"].median())
         found[FULL_SCALE] = float((lines["full_scale_output"] / lines["slope"].abs()).median())
     if fits:
         found[MID_RANGE] = float(fits[0].places["mid"])

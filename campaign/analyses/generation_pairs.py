@@ -37,6 +37,7 @@ FEWEST_BATCHES = 3
 
 TOO_FEW_MODULES = "too few modules"
 NOT_DECIDED = "not decided"
+AT_COMMON_POSITIONS = "at common positions"
 EQUIVALENT = "equivalent"
 
 SIGNIFICANT = 0.05
@@ -121,7 +122,7 @@ def _at_common_positions(rows: pd.DataFrame, first: str, second: str) -> tuple[p
         return rows, "their sensors share no position"
     if own[first] == own[second]:
         return rows, ""
-    return rows[rows["position"].isin(common)], "at common positions"
+    return rows[rows["position"].isin(common)], AT_COMMON_POSITIONS
 
 
 def _batches(side: pd.DataFrame) -> int:

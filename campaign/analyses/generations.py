@@ -20,6 +20,7 @@ from campaign.analyses.generation_figures import (
     FIGURES,
     FULL_SCALE,
     RANGE,
+    RATE,
     SENSOR_FIGURES,
     SPREAD_FIGURES,
     Comparable,
@@ -74,10 +75,15 @@ CONDITION_TOLERANCE = 0.05
 
 @dataclass(frozen=True)
 class Source:
-    """One campaign's part in the comparison: its title and what it offers, under unique names."""
+    """One campaign's part in the comparison: its title and what it offers, under unique names.
+
+    ``counterpart`` is what this campaign offers over the range common to both, where it reads further than
+    the earlier one that this source is.
+    """
 
     title: str
     offers: Comparable
+    counterpart: Comparable | None = None
 
 
 @dataclass(frozen=True)
@@ -191,10 +197,11 @@ def compare_generations(
 
 
 def pairs_of(names: Sequence[str]) -> list[tuple[str, str]]:
-    """Return the pairs that are compared, the older first."""
-    if len(names) <= MOST_FOR_ALL_PAIRS:
-        return list(combinations(names, 2))
-    return [(name, names[-1]) for name in names[:-1]]
+    """Return the pairs that are compared, the older first in each; those with the newest first."""
+    with_newest = [(name, names[-1]) for name in reversed(names[:-1])]
+    if len(names) > MOST_FOR_ALL_PAIRS:
+        return with_newest
+    return [*with_newest, *(pair for pair in combinations(names, 2) if names[-1] not in pair)]
 
 
 def _compare(
@@ -205,7 +212,9 @@ def _compare(
     margins: Mapping[str, tuple[float, str]],
 ) -> Pair | str:
     """The comparison, or why there is none; empty where one of the two does not have the figure."""
-    sides = owner[first].offers, owner[second].offers
+    sides = owner[first].offers, owner[first].counterpart or owner[second].offers
+    if second not in sides[1].modules:
+        sides = owner[first].offers, owner[second].offers
     if figure in SPREAD_FIGURES:
         return _compare_spreads(figure, first, second, sides, margins)
     rows = [
@@ -270,8 +279,12 @@ def _conditions_differ(figure: HeadlineFigure, sides: tuple[Comparable, Comparab
         values = [side.conditions.get(name, math.nan) for side in sides]
         apart = abs(values[0] - values[1])
         if apart > CONDITION_TOLERANCE * max(map(abs, values)):
-            return f"{name} differs: {values[0]:.3g} and {values[1]:.3g}"
+            return f"{name} differs: {values[0]:.3g} and {values[1]:.3g} {_unit_of(name, sides[1].unit)}"
     return ""
+
+
+def _unit_of(condition: str, unit: str) -> str:
+    return f"{unit} a second" if condition == RATE else unit
 
 
 def _table(pairs: Sequence[Pair]) -> pd.DataFrame:
@@ -339,7 +352,7 @@ def module_means(sources: Iterable[Source], names: Sequence[str]) -> pd.DataFram
 def _mismatch_notices(refused: Iterable[tuple[str, str, str, str]]) -> Iterator[Notice]:
     by_reason: dict[tuple[str, str, str], list[str]] = {}
     for figure, first, second, reason in refused:
-        by_reason.setdefault((first, second, reason), []).append(figure.replace("_", " "))
+        by_reason.setdefault((first, second, reason), []).append(_spoken(figure))
     for (first, second, reason), figures in by_reason.items():
         yield Notice(
             "earlier-differs",
@@ -354,6 +367,12 @@ def _mismatch_notices(refused: Iterable[tuple[str, str, str, str]]) -> Iterator[
         )
 
 
+def _spoken(figure: str) -> str:
+    """A figure in words: ``SD sensor by level``, ``drift 1h``."""
+    words = figure.replace("_", " ")
+    return f"SD {words[3:]}" if words.startswith("sd ") else words
+
+
 def _missing_notices(sources: Sequence[Source]) -> Iterator[Notice]:
     """Figures that this campaign has and an earlier one lacks, or the other way round."""
     own = set(sources[-1].offers.values["figure"])
@@ -361,7 +380,7 @@ def _missing_notices(sources: Sequence[Source]) -> Iterator[Notice]:
         theirs = set(source.offers.values["figure"])
         for lacking, figures in ((source.title, own - theirs), (sources[-1].title, theirs - own)):
             if figures:
-                names = [f.name.replace("_", " ") for f in SENSOR_FIGURES if f.name in figures]
+                names = [_spoken(f.name) for f in SENSOR_FIGURES if f.name in figures]
                 what = f"{lacking} has no {', '.join(names)}"
                 yield Notice(
                     "earlier-differs", "noted", None, None, None, what, "not compared", "", len(names)

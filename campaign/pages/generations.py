@@ -9,7 +9,8 @@ import pandas as pd
 
 from campaign.analyses.earlier import EarlierCampaign
 from campaign.analyses.generation_findings import GenerationFinding
-from campaign.analyses.generations import Generations
+from campaign.analyses.generation_pairs import AT_COMMON_POSITIONS
+from campaign.analyses.generations import Confounded, Generations
 from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers, palette
 from campaign.pages.figures import (
@@ -62,13 +63,20 @@ def generations_page(results: CampaignResults) -> Page | None:
             "figure_anchor": figure_anchor,
             "comparison_sentence": comparison_sentence,
             "notices": [*compared.notices, *_joining_notices(results)],
-            "confounded": compared.confounded,
+            "confounded": _confounded(compared),
+            "at_common_positions": bool(compared.table["label"].eq(AT_COMMON_POSITIONS).any()),
             "margins": bool(compared.table["margin"].notna().any()),
         },
         figures=tuple(comparison_figures(compared)),
         tables=(generations_table(compared), *((joined,) if joined is not None else ())),
         description="Every headline figure of every two generations, with intervals and verdicts.",
     )
+
+
+def _confounded(compared: Generations) -> list[Confounded]:
+    """What differs together with the generation; campaigns once, against the newest."""
+    newest = compared.names[-1]
+    return [one for one in compared.confounded if one.what != "campaign" or one.second == newest]
 
 
 def _joining_notices(results: CampaignResults) -> list[object]:
@@ -273,18 +281,19 @@ def module_figures(compared: Generations) -> Iterator[Figure]:
     made = small_multiples(
         [_panel_title(name, frame) for name in several],
         axis("", ticks=ticks, low=-0.6, high=len(compared.names) - 0.4, tickangle=0),
-        axis("Mean of a module, of the largest", low=0.0, high=1.08),
-        columns=3,
+        axis("", low=0.0, high=1.08),
+        columns=2,
     )
     yield Figure(
         name="modules",
-        caption="The modules behind the comparisons: a point a module, a bar at the mean of a generation.",
+        caption="The modules behind the comparisons, as a share of the largest: a point a module, a bar at "
+        "the mean of a generation.",
         alternative="One panel a figure: the mean of each module by generation, as a share of the largest.",
         traces=tuple(traces),
         layout=made,
         data=frame,
         note="Each panel ends at its largest module, whose value stands above it.",
-        height=90 + 190 * math.ceil(len(several) / 3),
+        height=90 + 150 * math.ceil(len(several) / 2),
     )
 
 
@@ -339,7 +348,7 @@ def generations_table(compared: Generations) -> Table:
 
 def _verdict_cell(row: dict[object, object]) -> str:
     words, restriction = verdict_words(str(row["verdict"])), str(row["label"])
-    return f"{words} ({restriction})" if restriction else words
+    return f"{words} ({restriction})" if restriction and restriction != AT_COMMON_POSITIONS else words
 
 
 def joined_table(results: CampaignResults) -> Table | None:

@@ -45,7 +45,7 @@ def planning_page(results: CampaignResults) -> Page | None:
             "wanted_power": WANTED_POWER,
             "modules_needed": modules_needed(planning),
             "generations": results.generations,
-            "sensors_spread_more": _spread_more(planning),
+            "spared": _spared(planning),
         },
         figures=tuple(planning_figures(planning)) if planning.components else (),
         tables=(planning_table(planning),) if planning.components else (),
@@ -54,16 +54,22 @@ def planning_page(results: CampaignResults) -> Page | None:
     )
 
 
-def _spread_more(planning: Planning) -> bool:
-    """Whether half the sensors would do: the half-width rises by less than a tenth."""
-    if planning.resolved is None or planning.resolved.design.sensors < 2:
-        return False
-    design, table = planning.resolved.design, planning.table
-    own = table[(table["components"] == planning.components[0].name) & (table["modules"] == design.modules)]
-    own = own[(own["repetitions"] == design.repetitions) & (own["sessions"] == design.sessions)]
-    widths = own.set_index("sensors")["difference_half_width"]
-    half = max(design.sensors // 2, 1)
-    return half in widths.index and bool(widths[half] < 1.1 * widths[design.sensors])
+def _spared(planning: Planning) -> list[str]:
+    """What could be spared, each by itself, for less than a tenth more half-width."""
+    if planning.resolved is None or planning.resolved.design.modules < 2:
+        return []
+    modules = planning.resolved.design.modules
+    own = [rows[rows["modules"] == modules].iloc[0] for _, rows in _variants(planning)]
+    present = own[0]
+    words = []
+    for row in own[1:]:
+        if float(row["difference_half_width"]) >= 1.1 * float(present["difference_half_width"]):
+            continue
+        for key, singular in (("sensors", "sensor"), ("repetitions", "run"), ("sessions", "mounting")):
+            if row[key] < present[key]:
+                per = {"sensors": " a module", "repetitions": " a mounting", "sessions": ""}[key]
+                words.append(f"{numbers.count(int(row[key]), singular)}{per} instead of {int(present[key])}")
+    return words
 
 
 def planning_data(planning: Planning) -> dict[str, object]:

@@ -473,8 +473,15 @@ def _read_limits(table: CheckedTable | None) -> dict[str, object]:
 
 
 def _read_margin(margins: CheckedTable, key: str) -> tuple[float, str]:
-    """Read an equivalence margin: the figures have many units, so any known unit is taken here."""
-    families = (*SHARE_OF_FULL_SCALE, "ratio", *REFERENCE_FAMILIES, "time", *QUANTITY_FAMILIES["signal"])
+    """Read an equivalence margin: a limit's own units first, then any known one; per cent is a ratio."""
+    families = (
+        *LIMIT_FAMILIES.get(key, ()),
+        *SHARE_OF_FULL_SCALE,
+        "ratio",
+        *REFERENCE_FAMILIES,
+        "time",
+        *QUANTITY_FAMILIES["signal"],
+    )
     return margins.quantity_and_unit(key, families)
 
 
@@ -517,13 +524,17 @@ _COSTS = ("module", "sensor", "repetition")
 
 
 def _read_earlier(table: CheckedTable) -> dict[str, str]:
-    folder = table.text("folder")
-    if not folder and "folder" not in table.values:
-        table.fault(
-            "value-missing", "folder", "is not stated", "name an earlier campaign's folder or archive"
-        )
+    """Return ``folder`` or ``archive`` as written, one of the two."""
+    stated = {key: table.text(key) for key in ("folder", "archive") if key in table.values}
+    remedy = "name an earlier campaign's folder or archive"
+    if not stated:
+        table.fault("value-missing", "folder", "is not stated", remedy)
+    elif len(stated) > 1:
+        table.fault("wrong-value", "archive", "stands beside a folder", "name one of the two")
+    elif "archive" in stated and not stated["archive"]:
+        table.fault("value-missing", "archive", "is empty", remedy)
     table.finish()
-    return {"folder": folder}
+    return stated
 
 
 def _is_number(value: object) -> bool:
