@@ -16,8 +16,8 @@ from campaign.methods.distance_network_tests import (
     NO_TEST,
     ONE_EDGE,
     NetworkTest,
-    tau_quantile,
     network_tests,
+    tau_quantile,
 )
 from tests.methods.test_distance_network import PAIRS, PANEL, PUBLISHED, Published
 
