@@ -233,7 +233,7 @@ class _Maker:
         alike = [own[0] for key, own in sorted(self.lines.items()) if key[0] == fit.generation]
         if not alike:
             return None
-        scale = [self._scale_sd(x) for x in self.places.values()]
+        scale = [self._scale_sd(x, alike[0].recorded) for x in self.places.values()]
         parts = new_sensor_parts(fit, list(self.places.values()), readout_step(self.description), scale)
         key = (fit.generation, "", "")
         usual = replace(
@@ -249,14 +249,13 @@ class _Maker:
         half = _root_mean_square(self.loops[k] for k in self.loops if k[0] == fit.generation)
         return BudgetSubject(*key, self.units[alike[0].key], tuple(places), half, self.loop_rate)
 
-    def _scale_sd(self, x: float) -> float:
+    def _scale_sd(self, x: float, recorded: str) -> float:
         """Standard uncertainty of x by the scale of the reference, which all calibrations share."""
         reference = self.description.length_reference
         if not reference.stated:
             return math.nan
         scale = reference.scale_relative if reference.scale_relative > 0 else 0.0
-        lengths = self.calibration.readings["reference"].astype(str).mode()
-        from_rest = self.calibration.reference.name == "strain" and lengths.iloc[0] == "length"
+        from_rest = self.calibration.reference.name == "strain" and recorded == "length"
         return scale * abs(x + (1.0 if from_rest else 0.0))
 
     def _place(

@@ -220,13 +220,16 @@ class BudgetSubject:
 
 @dataclass(frozen=True)
 class SourceInUse:
-    """One source under given conditions: its lines (none unless counted), and what becomes of it."""
+    """One source under given conditions: its lines (none unless counted), and what becomes of it.
+
+    ``incomplete`` says that a part of it is not known although others count.
+    """
 
     source: str
     lines: tuple[BudgetLine, ...]
     status: str
     why: str = ""
-    amount: float = math.nan
+    incomplete: bool = False
 
     @property
     def contribution(self) -> float:
@@ -256,7 +259,8 @@ class BudgetInUse:
     @property
     def unknown(self) -> tuple[str, ...]:
         """Sources that are not known."""
-        return tuple(source.source for source in self.sources if source.status == NOT_KNOWN)
+        open_ended = (s for s in self.sources if s.status == NOT_KNOWN or s.incomplete)
+        return tuple(source.source for source in open_ended)
 
     @property
     def is_at_least(self) -> bool:
@@ -268,7 +272,13 @@ def budget_in_use(subject: BudgetSubject, place: BudgetPlace, conditions: UseCon
     """Return the budget of *subject* at *place* under *conditions*."""
     fixed = place.fixed.get(conditions.direction) or place.fixed["unknown"]
     found = {
-        source: SourceInUse(source, own, COUNTED, why=fixed.contained.get(source, ""))
+        source: SourceInUse(
+            source,
+            own,
+            COUNTED,
+            fixed.unknown.get(source, fixed.contained.get(source, "")),
+            incomplete=source in fixed.unknown,
+        )
         for source in SOURCES
         if (own := tuple(line for line in fixed.lines if line.source == source))
     }
@@ -309,7 +319,7 @@ def _time(place: BudgetPlace, time_s: float) -> SourceInUse:
     change, spread = place.course.over(time_s)
     known = BudgetLine(TIME, change, "rectangular")
     unsure = BudgetLine(TIME, spread / UNIFORM, "t", 1.0, place.course.degrees_of_freedom)
-    return SourceInUse(TIME, _that_count(known, unsure), COUNTED, place.course.owner, time_s)
+    return SourceInUse(TIME, _that_count(known, unsure), COUNTED, place.course.owner)
 
 
 def _effect(place: BudgetPlace, source: str, amount: float, *, corrected: bool = False) -> SourceInUse:
@@ -331,7 +341,7 @@ def _effect(place: BudgetPlace, source: str, amount: float, *, corrected: bool =
         return SourceInUse(source, (), CONTAINED, "calibration runs held as much of it: inside run to run")
     known = BudgetLine(source, left, "rectangular", 0.0 if corrected else effect.value)
     unsure = BudgetLine(source, left / UNIFORM, "t", effect.spread, effect.degrees_of_freedom)
-    return SourceInUse(source, _that_count(known, unsure), COUNTED, effect.owner, left)
+    return SourceInUse(source, _that_count(known, unsure), COUNTED, effect.owner)
 
 
 def _that_count(*lines: BudgetLine) -> tuple[BudgetLine, ...]:

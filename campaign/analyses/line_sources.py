@@ -51,6 +51,8 @@ class LineSources:
         Usual time from the last motion to a reading; NaN where no time was recorded.
     temperature_variance
         Of the mean temperature of runs about their sensor's, K²; NaN where not recorded or one run only.
+    recorded
+        What the stand records: ``strain``, ``elongation`` or ``length``.
     """
 
     generation: str
@@ -76,6 +78,7 @@ class LineSources:
     full_scale_output: float
     settled_s: float
     temperature_variance: float
+    recorded: str
 
     @property
     def key(self) -> tuple[str, str, str]:
@@ -111,6 +114,7 @@ def line_sources(line: BranchLine, used: UsedReadings) -> LineSources:
         line.full_scale_output,
         _median(used.column("time_since_motion_s", line.rows)),
         _temperature_variance(used, line),
+        used.text("reference", int(line.rows[0])),
     )
 
 

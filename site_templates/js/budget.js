@@ -107,6 +107,8 @@
     for (const [status, reasons] of [["contained", contained], ["unknown", unknown]])
       for (const [source, why] of Object.entries(reasons))
         if (!found[source]) found[source] = { status: status, lines: [], why: why };
+        else if (status === "unknown") Object.assign(found[source], { incomplete: true, why: why });
+        else if (!found[source].why) found[source].why = why;
     found[number("drift or creep")] = ofTime(place, use.time_s);
     found[number("pressure")] = ofInfluence(place.effects.pressure, use.pressure_kpa, use.corrected);
     const half = known(use.range_k) ? use.range_k / 2 : null;
@@ -158,7 +160,7 @@
 
   function budgetAt(data, subject, place, use) {
     const found = sourcesOf(data, subject, place, use);
-    const missing = data.sources.filter((_, n) => found[n] && found[n].status === "unknown");
+    const missing = data.sources.filter((_, n) => found[n] && (found[n].status === "unknown" || found[n].incomplete));
     return Object.assign(combine(found), { place: place, sources: found, missing: missing });
   }
 
