@@ -143,6 +143,7 @@ def _readings(campaign: _Campaign, labels: dict[str, str]) -> Iterator[tuple[str
         yield generation, OWN_LINE, _over_all(read, rows, len(table))
         if fit is not None and fit.mean_slope:
             read = read_by_generation_line(own, campaign.calibration, fit, *arguments)
+            labels |= read.labels
             yield generation, GENERATION_LINE, _over_all(read, rows, len(table))
 
 

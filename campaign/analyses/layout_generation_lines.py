@@ -34,14 +34,15 @@ FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
 
 
+PART_OF_IT = "sensors read by the mean line are among those that it is the mean of: a new one would err more"
+
+
 @dataclass(frozen=True)
 class MeanLine:
     """The mean line of a generation at one position.
 
     Attributes
     ----------
-    weights
-        Shape (2, p): intercept and slope as linear functions of the fixed coefficients.
     intercept, slope
         Signal units, and per unit of x.
     lack_of_fit
@@ -50,7 +51,6 @@ class MeanLine:
         Root mean square of half the mean difference of branches, signal units.
     """
 
-    weights: FloatArray
     intercept: float
     slope: float
     lack_of_fit: float
@@ -80,7 +80,6 @@ def _mean_line(fit: GenerationFit, rows: npt.NDArray[np.bool_], x: FloatArray) -
     line = weights @ coefficients
     departure = columns @ coefficients - design @ line
     return MeanLine(
-        weights,
         float(line[0]),
         float(line[1]),
         float(np.sqrt(np.mean(departure**2))),
@@ -127,25 +126,20 @@ def read_by_generation_line(
     shared = _reference(table, lengths, x, calibration, description)
     run = codes_of(table, ["module", "trial", "repetition"])
     last = [SharedPart("temperature", temperature[:, None], run)]
-    return combined(lengths, iter([*parts, *shared, *last]), (low, high), {})
+    return combined(lengths, iter([*parts, *shared, *last]), (low, high), {"mean_line": PART_OF_IT})
 
 
 def _parts(
     table: pd.DataFrame, fit: GenerationFit, lines: list[MeanLine | None], x: FloatArray, per_mm: FloatArray
 ) -> Iterator[SharedPart]:
-    """What the fit says: the mean line itself, and every component of spread."""
-    everywhere = np.zeros(len(table), dtype=np.int64)
-    root = _root(fit.fit.coefficient_covariance)
-    weights = np.zeros((len(table), len(root)))
-    for k, line in enumerate(lines):
-        if line is not None and np.isfinite(x[k]):
-            weights[k] = (line.weights[0] + x[k] * line.weights[1]) @ root
-    yield SharedPart("mean line", per_mm[:, None] * weights, everywhere)
-    for name, codes in _shared_by(table).items():
+    """What the fit says: every component of spread, of the sensors read and of those that make the mean."""
+    places = np.nan_to_num(np.column_stack([np.ones_like(x), x]))
+    shares = _shares_of_sensors(table, fit)
+    for name, members in (*_of_mean(shares), *_of_run(table)):
         if name in fit.covariances:
             covariance = fit.covariances[name]
-            places = np.column_stack([np.ones_like(x), x])[:, : len(covariance)]
-            yield SharedPart(name, per_mm[:, None] * (np.nan_to_num(places) @ _root(covariance)), codes)
+            factors = per_mm[:, None] * (places[:, : len(covariance)] @ _root(covariance))
+            yield SharedPart(name, factors, members=members)
     for name, share in (("sensor_by_level", 1.0), ("sensor_by_direction", 0.5)):
         if name in fit.covariances:
             sd = share * float(np.sqrt(fit.covariances[name][0, 0]))
@@ -158,18 +152,75 @@ def _parts(
     yield SharedPart("noise", (per_mm * own)[:, None])
 
 
-def _shared_by(table: pd.DataFrame) -> dict[str, IntArray]:
-    """Codes of the units that have each component of spread in common."""
+@dataclass(frozen=True)
+class _Shares:
+    """How the sensors of a campaign enter the error of every row.
+
+    Attributes
+    ----------
+    sensors
+        Columns batch, module, sensor, runs, mountings: the calibrated sensors, then those only laid out.
+    own, mean
+        Shape (N, sensors): the row's sensor; and the sensors whose mean the line is.
+    """
+
+    sensors: pd.DataFrame
+    own: FloatArray
+    mean: FloatArray
+
+
+def _shares_of_sensors(table: pd.DataFrame, fit: GenerationFit) -> _Shares:
+    """A row errs by what its sensor departs from the mean of those at its position, itself among them.
+
+    The mean line counts every sensor alike, as it does in a balanced design.
+    """
+    readings = fit.model.readings
+    runs = readings[["session", "trial", "repetition"]].astype(str).agg("|".join, axis=1)
+    known = (
+        readings.assign(run=runs)
+        .groupby(["batch", "module", "sensor", "position"], sort=True)
+        .agg(runs=("run", "nunique"), mountings=("session", "nunique"))
+        .reset_index()
+    )
+    new = table[["batch", "module", "sensor", "position"]].drop_duplicates(["module", "sensor"])
+    listed = set(zip(known["module"], known["sensor"], strict=True))
+    new = new[[(m, s) not in listed for m, s in zip(new["module"], new["sensor"], strict=True)]]
+    sensors = pd.concat([known, new.assign(runs=0, mountings=0)], ignore_index=True)
+    same = (table["module"].to_numpy()[:, None] == sensors["module"].to_numpy()) & (
+        table["sensor"].to_numpy()[:, None] == sensors["sensor"].to_numpy()
+    )
+    counted = np.broadcast_to(sensors["runs"].to_numpy() > 0, same.shape)
+    if fit.model.counts.position_terms > 0:
+        counted = counted & (table["position"].to_numpy()[:, None] == sensors["position"].to_numpy())
+    mean = counted / np.maximum(counted.sum(axis=1, keepdims=True), 1)
+    return _Shares(sensors, same.astype(np.float64), mean)
+
+
+def _of_mean(shares: _Shares) -> Iterator[tuple[str, FloatArray]]:
+    """Members of what sensors keep from trial to trial, and of what the mean has from its runs."""
+    away = shares.own - shares.mean
+    units = {"batch": ["batch"], "module": ["batch", "module"], "sensor": ["batch", "module", "sensor"]}
+    for name, columns in units.items():
+        codes = codes_of(shares.sensors, columns)
+        yield name, away @ np.eye(int(codes.max()) + 1)[codes]
+    module = np.eye(len(shares.sensors))[codes_of(shares.sensors, ["batch", "module"])]
+    for shared, single, count in (("mounting", "session", "mountings"), ("run", "repetition", "runs")):
+        several = 1.0 / np.sqrt(np.maximum(shares.sensors[count].to_numpy(float), 1.0))
+        yield shared, (shares.mean * several) @ module
+        yield single, shares.mean * several
+
+
+def _of_run(table: pd.DataFrame) -> Iterator[tuple[str, FloatArray]]:
+    """Members of what the run and mounting of the layout trial itself add."""
     mounting, run = mounting_columns(table), ["module", "trial", "repetition"]
-    return {
-        "batch": codes_of(table, ["batch"]),
-        "module": codes_of(table, ["module"]),
-        "mounting": codes_of(table, mounting),
-        "run": codes_of(table, run),
-        "sensor": codes_of(table, ["module", "sensor"]),
-        "session": codes_of(table, [*mounting, "sensor"]),
-        "repetition": codes_of(table, [*run, "sensor"]),
-    }
+    for name, columns in (
+        ("mounting", mounting),
+        ("run", run),
+        ("session", [*mounting, "sensor"]),
+        ("repetition", [*run, "sensor"]),
+    ):
+        codes = codes_of(table, columns)
+        yield name, np.eye(int(codes.max()) + 1)[codes]
 
 
 def _root(covariance: FloatArray) -> FloatArray:

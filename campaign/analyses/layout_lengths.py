@@ -42,17 +42,30 @@ BEYOND = 2.0
 
 @dataclass(frozen=True)
 class SharedPart:
-    """One part of the error of N lengths: ``factors`` (N, q) in mm, shared by rows of equal ``codes`` (N,).
+    """One part of the error of N lengths.
 
-    ``codes`` is ``None`` for what is each row's own.
+    Attributes
+    ----------
+    name
+        What it is.
+    factors
+        Shape (N, q), in mm.
+    codes
+        Shape (N,): rows of equal code share it; ``None`` for what is each row's own.
+    members
+        Instead of codes, shape (N, units): how much of the error of every unit a row has, where it is not
+        just that of its own.
     """
 
     name: str
     factors: FloatArray
     codes: IntArray | None = None
+    members: FloatArray | None = None
 
     def covariance(self) -> FloatArray:
         """Return what the part adds to the covariance, shape (N, N)."""
+        if self.members is not None:
+            return np.asarray((self.members @ self.members.T) * (self.factors @ self.factors.T))
         if self.codes is None:
             return np.diag(np.sum(self.factors**2, axis=1))
         return np.asarray((self.codes[:, None] == self.codes[None, :]) * (self.factors @ self.factors.T))
@@ -94,7 +107,7 @@ def combined(
     covariance = np.zeros((count, count))
     variances: dict[str, FloatArray] = {}
     for part in parts:
-        clean = SharedPart(part.name, np.nan_to_num(part.factors), part.codes)
+        clean = SharedPart(part.name, np.nan_to_num(part.factors), part.codes, part.members)
         added = clean.covariance()
         covariance += added
         variances[part.name] = variances.get(part.name, np.zeros(count)) + np.diag(added)

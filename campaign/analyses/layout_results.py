@@ -409,7 +409,8 @@ class Layout:
         :data:`campaign.analyses.sensor_figures.FIGURE_COLUMNS`; one a module, ``sensor`` being its worst
         node.
     labels
-        What the results must be read with, by short name: ``known_nodes``, ``shared_parts``, ``temperature``.
+        What the results must be read with, by short name: ``known_nodes``, ``shared_parts``, ``runs``,
+        ``mean_line``, ``temperature``.
     notices
         Placements and sensors that could not be used, or only in part.
     """
