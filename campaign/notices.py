@@ -148,6 +148,11 @@ NOTICE_CODES: dict[str, str] = {
     "case-of-name": "a file would be a recording but for upper and lower case",
     "twin-names": "two files have names that many systems cannot tell apart",
     "copy": "a recording has the same bytes as another: they are one recording",
+    # Archives
+    "archive-unreadable": "a file is no zip file, is cut short, or cannot be unpacked where it should be",
+    "archive-member": "an archive holds a link, a name that leads elsewhere, or a member that is not unpacked",
+    "archive-too-large": "an archive would unpack to more than is reasonable",
+    "archive-damaged": "the bytes of a member of an archive are damaged",
     # Who says which trial it is
     "identity-conflict": "two sources say different things of one trial; nothing is guessed",
     "identity-missing": "nobody says module, kind or sensor of a trial",
