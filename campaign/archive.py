@@ -11,6 +11,7 @@ What is unpacked comes from somewhere: every name is looked at before the first 
 from __future__ import annotations
 
 import hashlib
+import io
 import os
 import re
 import stat
@@ -18,9 +19,10 @@ import unicodedata
 import zipfile
 import zlib
 from collections import Counter
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path, PurePosixPath
+from typing import IO
 
 from campaign.notices import CampaignStops, Notice
 
@@ -97,19 +99,57 @@ def write_archive(files: Mapping[str, Content], into: Path) -> None:
     CampaignStops
         Where a name could not be unpacked everywhere; nothing is written.
     """
-    faults = [_refused(name, wrong) for name in sorted(files) if (wrong := _wrong_name(name)) is not None]
-    if faults:
-        raise CampaignStops(faults)
+    check_names(files)
     aside = into.with_name(f".{into.name}.new")
     try:
-        with zipfile.ZipFile(aside, "w", strict_timestamps=True) as archive:
-            archive.comment = _COMMENT + b"0" * _DIGEST_LENGTH
-            for name in sorted(files):
-                _write_member(archive, name, files[name])
-        _put_hash_into_comment(aside)
+        with aside.open("w+b") as stream:
+            _write_all(files, stream)
         os.replace(aside, into)
     finally:
         aside.unlink(missing_ok=True)
+
+
+def archive_bytes(files: Mapping[str, Content]) -> bytes:
+    """Return the bytes of the zip file that :func:`write_archive` writes.
+
+    Raises
+    ------
+    CampaignStops
+        As there.
+    """
+    check_names(files)
+    stream = io.BytesIO()
+    _write_all(files, stream)
+    return stream.getvalue()
+
+
+def check_names(names: Iterable[str]) -> None:
+    """Stop unless files of all *names* can be unpacked wherever the archive is taken.
+
+    Raises
+    ------
+    CampaignStops
+        With every name that cannot.
+    """
+    faults = [_not_packed(name, wrong) for name in sorted(names) if (wrong := _wrong_name(name)) is not None]
+    if faults:
+        raise CampaignStops(faults)
+
+
+def _not_packed(name: str, wrong: str) -> Notice:
+    what = f"{_spelled(name)} {wrong}"
+    remedy = "rename the file: letters, digits, spaces, hyphens and full stops go everywhere"
+    return Notice("name-not-portable", "stops", name, None, None, what, "nothing is sealed", remedy)
+
+
+def _write_all(files: Mapping[str, Content], stream: IO[bytes]) -> None:
+    with zipfile.ZipFile(stream, "w") as archive:
+        archive.comment = _COMMENT + b"0" * _DIGEST_LENGTH
+        for name in sorted(files):
+            _write_member(archive, name, files[name])
+    digest = _digest_before(stream)
+    stream.seek(-_DIGEST_LENGTH, os.SEEK_END)
+    stream.write(digest.encode("ascii"))
 
 
 def _write_member(archive: zipfile.ZipFile, name: str, content: Content) -> None:
@@ -135,20 +175,13 @@ def _is_deflated(name: str, content: Content) -> bool:
     return size <= MOST_TIMES_SMALLER * squeezed
 
 
-def _put_hash_into_comment(file: Path) -> None:
-    with file.open("r+b") as archive:
-        digest = _digest_before(file)
-        archive.seek(-_DIGEST_LENGTH, os.SEEK_END)
-        archive.write(digest.encode("ascii"))
-
-
-def _digest_before(file: Path) -> str:
-    """SHA-512 of a file without the hash at its end."""
-    digest, left = hashlib.sha512(), file.stat().st_size - _DIGEST_LENGTH
-    with file.open("rb") as archive:
-        while left > 0 and (chunk := archive.read(min(CHUNK_BYTES, left))):
-            digest.update(chunk)
-            left -= len(chunk)
+def _digest_before(stream: IO[bytes]) -> str:
+    """SHA-512 of a zip file without the hash at its end."""
+    digest, left = hashlib.sha512(), stream.seek(0, os.SEEK_END) - _DIGEST_LENGTH
+    stream.seek(0)
+    while left > 0 and (chunk := stream.read(min(CHUNK_BYTES, left))):
+        digest.update(chunk)
+        left -= len(chunk)
     return digest.hexdigest()
 
 
@@ -163,9 +196,9 @@ def hash_in_comment_holds(file: Path) -> bool | None:
     with file.open("rb") as archive:
         archive.seek(max(file.stat().st_size - _DIGEST_LENGTH - len(_COMMENT), 0))
         comment = archive.read()
-    if not comment.startswith(_COMMENT):
-        return None
-    return comment[len(_COMMENT) :] == _digest_before(file).encode("ascii")
+        if not comment.startswith(_COMMENT):
+            return None
+        return comment[len(_COMMENT) :] == _digest_before(archive).encode("ascii")
 
 
 @dataclass(frozen=True)
