@@ -30,6 +30,7 @@ LADDER = (
     "trials",
     "recordings",
     "archive",
+    "keeping",
     "methods",
     "units",
     "notices",
