@@ -99,7 +99,7 @@ def top_files_of_installation(installed: Distribution) -> dict[str, bytes]:
     pins = pinned_requirements(records["Name"], dependencies)
     return {
         "pyproject.toml": project.encode(),
-        "README.md": str(records.get_payload()).encode(),
+        "README.md": (installed.read_text("METADATA") or "").partition("\n\n")[2].encode(),
         "LICENSE": (installed.read_text("licenses/LICENSE") or "").encode(),
         "requirements.lock": "".join(f"{pin}\n" for pin in pins).encode(),
     }
