@@ -77,6 +77,18 @@ def _parser() -> argparse.ArgumentParser:
         action="store_true",
         help="end with status 1 where anything is set aside unasked",
     )
+    report.add_argument(
+        "--workers",
+        metavar="N",
+        type=_count,
+        help="processes that read recordings (as many as cores, where that is faster than one)",
+    )
+    report.add_argument(
+        "--dask", metavar="ADDRESS", help="read on a Dask cluster: the address of its scheduler"
+    )
+    report.add_argument(
+        "--ignore-cache", action="store_true", help="compute everything anew, and keep nothing of it"
+    )
     report.set_defaults(run=_report)
 
     inspect = commands.add_parser("inspect", help="read and check a campaign folder, and say what is found")
@@ -97,9 +109,27 @@ def _parser() -> argparse.ArgumentParser:
 
 def _report(options: argparse.Namespace) -> int:
     from campaign.pipeline import report
+    from campaign.recordings.description import DESCRIPTION_FILE
+    from campaign.workers.workshop import open_workshop
 
-    with _progress_bar() as progress:
-        return report(options.folder, options.into, options.fail_on_set_aside, progress)
+    with (
+        open_workshop(
+            options.folder,
+            DESCRIPTION_FILE,
+            workers=options.workers,
+            dask=options.dask,
+            ignore_cache=options.ignore_cache,
+        ) as workshop,
+        _progress_bar() as progress,
+    ):
+        return report(options.folder, options.into, options.fail_on_set_aside, progress, workshop)
+
+
+def _count(text: str) -> int:
+    """Read a number of workers."""
+    if not text.isascii() or not text.isdigit() or int(text) < 1:
+        raise argparse.ArgumentTypeError(f"{text!r} is no whole number from 1")
+    return int(text)
 
 
 def _inspect(options: argparse.Namespace) -> int:

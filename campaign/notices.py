@@ -141,6 +141,8 @@ NOTICE_CODES: dict[str, str] = {
     "unreadable-file": "a recording cannot be opened",
     "vanished": "a file was gone before it could be read",
     "changed-while-read": "a recording changed after the folder was surveyed; it is not read",
+    "reading-failed": "the program failed on a recording; it is set aside, the others are read",
+    "reader-died": "the process that read a recording died of it, twice; the others are read",
     "link": "a link; links are not followed",
     "no-ordinary-file": "a pipe, socket or device under a recording's name; it is never opened",
     "too-large": "a recording is larger than can be read at once",
@@ -164,6 +166,10 @@ NOTICE_CODES: dict[str, str] = {
     "no-authors": "the description names no author",
     "orcid-refused": "an author's ORCID is not one: its form or its check digit is wrong; it is left out",
     "nothing-to-recompute": "what is verified holds no recordings, so nothing can be computed again",
+    # Workers
+    "cluster-not-installed": "a Dask cluster is asked for and Dask is not installed",
+    "cluster-silent": "nobody answers at the address of a Dask cluster, or it has no workers",
+    "cluster-differs": "workers of a Dask cluster have another version of this program, or see other files",
     # Who says which trial it is
     "identity-conflict": "two sources say different things of one trial; nothing is guessed",
     "identity-missing": "nobody says module, kind or sensor of a trial",

@@ -31,45 +31,23 @@ from campaign.pages.output import check_ours, write_folder
 from campaign.pages.site import build_site
 from campaign.provenance.manifest import with_manifests
 from campaign.recordings.inspection import ON_SITE, inspection_lines, print_lines
-from campaign.recordings.intake import Intake, Progress, run_intake
-from campaign.recordings.recording import Trial
+from campaign.recordings.intake import Intake, run_intake
 from campaign.recordings.sensor_share import TrialKey
-from campaign.trials.cyclic import CyclicFeatures, features_of_cyclic
-from campaign.trials.endurance import EnduranceFeatures, features_of_endurance
+from campaign.recordings.shared_reading import Progress
+from campaign.trials.cyclic import CyclicFeatures
+from campaign.trials.endurance import EnduranceFeatures
 from campaign.trials.features import TrialFeatures
-from campaign.trials.hold import HoldFeatures, features_of_blank, features_of_hold
-from campaign.trials.influences import (
-    features_of_bend,
-    features_of_contact,
-    features_of_offaxis,
-    features_of_proximity,
-    features_of_thermal,
-)
-from campaign.trials.layout import LayoutFeatures, features_of_layout
-from campaign.trials.pressure import features_of_pressure
+from campaign.trials.hold import HoldFeatures
+from campaign.trials.layout import LayoutFeatures
 from campaign.trials.readings import Readings, collect_readings
-from campaign.trials.staircase import StaircaseFeatures, readings_of_staircase
+from campaign.trials.reduction import reduce_trial
+from campaign.trials.staircase import StaircaseFeatures
 from campaign.trials.sweeps import SweepFeatures
+from campaign.workers.workshop import Workshop
 
 DONE, SET_ASIDE = 0, 1
 
 Features = TypeVar("Features", bound=TrialFeatures)
-
-REDUCED_BY: dict[str, Callable[[Trial], TrialFeatures]] = {
-    "staircase": readings_of_staircase,
-    "cyclic": features_of_cyclic,
-    "endurance": features_of_endurance,
-    "hold": features_of_hold,
-    "blank": features_of_blank,
-    "pressure": features_of_pressure,
-    "layout": features_of_layout,
-    "offaxis": features_of_offaxis,
-    "thermal": features_of_thermal,
-    "contact": features_of_contact,
-    "proximity": features_of_proximity,
-    "bend": features_of_bend,
-}
-"""What a trial is reduced to while its recording is in memory, by kind: the kinds that are analysed."""
 
 
 @dataclass(frozen=True)
@@ -106,7 +84,13 @@ class CampaignRead:
         return self.of_type(kept) | aside if aside else {}
 
 
-def report(folder: Path, into: Path | None, fail_on_set_aside: bool, progress: Progress | None = None) -> int:
+def report(
+    folder: Path,
+    into: Path | None,
+    fail_on_set_aside: bool,
+    progress: Progress | None = None,
+    workshop: Workshop | None = None,
+) -> int:
     """Read the campaign in *folder*, analyse it, and write its site whole or not at all.
 
     Parameters
@@ -119,6 +103,8 @@ def report(folder: Path, into: Path | None, fail_on_set_aside: bool, progress: P
         Whether the status is 1 where anything was set aside unasked.
     progress
         Told what is being done and how far it is.
+    workshop
+        Who works, and what earlier runs left; this process alone, and nothing, where ``None``.
 
     Returns
     -------
@@ -133,7 +119,7 @@ def report(folder: Path, into: Path | None, fail_on_set_aside: bool, progress: P
     tell = progress or _silent
     site = into if into is not None else beside(folder)
     check_ours(site)
-    read = read_campaign(folder, site, tell)
+    read = read_campaign(folder, site, tell, workshop)
     results = analyse(read, tell)
     notes = make_notes(read_note_files(folder))
     results = replace(results, notices=sort_notices([*results.notices, *notes.notices]))
@@ -157,15 +143,24 @@ def beside(folder: Path) -> Path:
     return whole.with_name(f"{whole.name}_report")
 
 
-def read_campaign(folder: Path, output: Path | None = None, progress: Progress | None = None) -> CampaignRead:
+def read_campaign(
+    folder: Path,
+    output: Path | None = None,
+    progress: Progress | None = None,
+    workshop: Workshop | None = None,
+) -> CampaignRead:
     """Read every recording of *folder* once and keep what its trials are reduced to.
+
+    What comes of it is the same, to the last bit, whoever of the *workshop* read it and whenever.
 
     Raises
     ------
     CampaignStops
         Where the folder cannot be read or no trial can be used.
     """
-    intake, features = run_intake(folder, reduce_trial, output, progress, keep_put_back=True)
+    intake, features = run_intake(
+        folder, reduce_trial, output, progress, keep_put_back=True, workshop=workshop, as_bytes=True
+    )
     staircases = {key: found for key, found in features.items() if isinstance(found, StaircaseFeatures)}
     reduced = {key: found for key, found in features.items() if found is not None and key not in staircases}
     others = {key: found for key, found in reduced.items() if key in intake.used}
@@ -176,12 +171,6 @@ def read_campaign(folder: Path, output: Path | None = None, progress: Progress |
     put_back = _readings(intake, staircases, lambda _: True) if intake.put_back & staircases.keys() else None
     noted = with_notices(intake, [*notices, *readings.notices])
     return CampaignRead(noted, readings, put_back, others, aside)
-
-
-def reduce_trial(trial: Trial) -> TrialFeatures | None:
-    """Return what is kept of a trial; ``None`` for kinds that are accounted for but not analysed yet."""
-    reduced = REDUCED_BY.get(trial.identity.kind)
-    return reduced(trial) if reduced is not None else None
 
 
 def sensors_set_aside(intake: Intake) -> frozenset[tuple[str, str]]:

@@ -30,6 +30,7 @@ LADDER = (
     "trials",
     "recordings",
     "archive",
+    "workers",
     "keeping",
     "methods",
     "units",
