@@ -91,7 +91,9 @@ def grown_plan(size: Size) -> Plan:
     others = size.recordings - modules * (8 + 2) - len(names) // 3 * 2 - 28
     staircases = max(1, round(others / (modules * len(demo.places) * len(demo.sessions))))
     whole = demo.staircase.dwell_s * 17 + demo.staircase.step_s * 16
-    assert demo.cyclic is not None and demo.pressure is not None and demo.thermal is not None
+    assert demo.cyclic is not None
+    assert demo.pressure is not None
+    assert demo.thermal is not None
     return replace(
         demo,
         generations=tuple(generations),
