@@ -104,6 +104,26 @@ def _parser() -> argparse.ArgumentParser:
     begin = commands.add_parser("begin", help="look at a tree of recordings and write a first campaign.toml")
     begin.add_argument("folder", metavar="FOLDER", type=Path, help="the folder that holds the recordings")
     begin.set_defaults(run=_begin)
+
+    seal = commands.add_parser("seal", help="seal a campaign and its report into one archive")
+    seal.add_argument("folder", metavar="FOLDER", type=Path, help="the campaign folder")
+    seal.add_argument(
+        "--into", metavar="FILE.zip", type=Path, required=True, help="the archive to write, outside FOLDER"
+    )
+    seal.set_defaults(run=_seal)
+
+    verify = commands.add_parser(
+        "verify",
+        help="check hashes and structure of a sealed archive, an unpacked one or a site",
+        epilog="exit status: 0 everything agrees; 1 something differs; 2 it cannot be read, or is refused",
+    )
+    verify.add_argument("target", metavar="FILE.zip|FOLDER", type=Path, help="what to verify")
+    verify.add_argument(
+        "--recompute",
+        action="store_true",
+        help="also read and analyse the sealed recordings again and compare every figure",
+    )
+    verify.set_defaults(run=_verify)
     return parser
 
 
@@ -162,6 +182,30 @@ def _begin(options: argparse.Namespace) -> int:
     print(f"{path} is written. Every guess in it is marked; look them through, then run:")
     print(f"  campaign inspect {options.folder}")
     return DONE
+
+
+def _seal(options: argparse.Namespace) -> int:
+    from campaign.pipeline import seal
+    from campaign.recordings.description import DESCRIPTION_FILE
+    from campaign.workers.workshop import open_workshop
+
+    with (
+        open_workshop(options.folder, DESCRIPTION_FILE, ignore_cache=True) as workshop,
+        _progress_bar() as progress,
+    ):
+        return seal(options.folder, options.into, progress, workshop)
+
+
+def _verify(options: argparse.Namespace) -> int:
+    from campaign.pipeline import verify
+    from campaign.recordings.description import DESCRIPTION_FILE
+    from campaign.workers.workshop import open_workshop
+
+    with (
+        open_workshop(options.target, DESCRIPTION_FILE, ignore_cache=True) as workshop,
+        _progress_bar() as progress,
+    ):
+        return verify(options.target, options.recompute, progress, workshop)
 
 
 def _say_stops(stops: CampaignStops) -> None:

@@ -6,6 +6,7 @@ The standard library is enough: a bag is a few text files. The tests have the ``
 from __future__ import annotations
 
 import hashlib
+import os
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
@@ -91,6 +92,19 @@ def check_bag(folder: Path) -> list[BagFault]:
     faults += [BagFault(name, "is not in the manifest: an extra file") for name in files if name not in known]
     faults += _oxum_faults(files)
     return faults
+
+
+def files_below(folder: Path) -> tuple[dict[str, Path], tuple[str, ...]]:
+    """Return every ordinary file below *folder* by its path, sorted, and the names of links, not followed."""
+    files, links = {}, []
+    for place, folders, names in os.walk(folder):
+        for name in sorted([*folders, *names]):
+            path = Path(place) / name
+            if path.is_symlink():
+                links.append(path.relative_to(folder).as_posix())
+            elif path.is_file():
+                files[path.relative_to(folder).as_posix()] = path
+    return dict(sorted(files.items())), tuple(sorted(links))
 
 
 def _declaration_faults(files: Mapping[str, Path]) -> Iterator[BagFault]:

@@ -39,6 +39,8 @@ class Tolerance:
     @property
     def words(self) -> str:
         """The tolerance as it is printed."""
+        if math.isinf(self.relative):
+            return "not compared"
         if self.absolute:
             return f"{self.absolute:g}"
         return f"{self.relative:g} of the figure" if self.relative else "none: they must be equal"
@@ -184,7 +186,8 @@ def _differences(
             tolerance = tolerance_of(table, name, types.get((table, name), "number"))
             if pair[0] != pair[1] and not _agree(*pair, tolerance, scales[name]):
                 row = _named(number, heads[0], before, types, table)
-                yield Difference(table, row, name, *map(_shown, pair), _by(*pair), _allowed(tolerance))
+                was, now = (_shown(cell) for cell in pair)
+                yield Difference(table, row, name, was, now, _by(*pair), _allowed(tolerance))
 
 
 def _columns_apart(table: str, old: list[str], new: list[str]) -> Iterator[Difference]:

@@ -21,7 +21,7 @@ from __future__ import annotations
 import hashlib
 import posixpath
 import re
-from collections.abc import Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -39,6 +39,7 @@ from campaign.archive import (
 from campaign.notices import CampaignStops, Notice, sort_notices
 from campaign.pages import numbers
 from campaign.pages.citation import Citation, citation
+from campaign.pages.site_tables import CAPTIONS
 from campaign.pages.slugs import slug
 from campaign.pages.tables import csv_bytes
 from campaign.provenance.bag import PAYLOAD, bag_files
@@ -156,7 +157,12 @@ def seal_campaign(folder: Path, results: CampaignResults, site: Mapping[str, byt
         PREVIEW: preview_page(metadata, cited, parts),
     }
     payload[METADATA_FILE] = crate_metadata(
-        metadata, cited, _with_files(parts, payload), _WORDS, payload, software.version
+        metadata,
+        cited,
+        _with_files(parts, payload),
+        file_words(payload, places, results),
+        payload,
+        software.version,
     )
     beside = {"README.txt": render_text("README.txt", title=metadata.title, preview=PREVIEW)}
     name = slug(description.title)
@@ -291,7 +297,7 @@ def set_aside_table(results: CampaignResults) -> pd.DataFrame:
     """
     recordings = results.intake.recordings
     fates = dict(zip(recordings["file"], recordings["fate"], strict=True))
-    rows = [
+    rows: list[tuple[object, ...]] = [
         (n.file or "", fates.get(n.file or "", ""), n.code, n.line, n.column, n.what, n.done, n.remedy)
         for n in results.notices
         if n.weight == "set aside"
@@ -302,7 +308,8 @@ def set_aside_table(results: CampaignResults) -> pd.DataFrame:
         for file, fate in fates.items()
         if fate == "set aside" and file not in told
     ]
-    frame = pd.DataFrame(sorted(rows, key=lambda row: (row[0], row[2])), columns=list(_SET_ASIDE_COLUMNS))
+    rows.sort(key=lambda row: (str(row[0]), str(row[2])))
+    frame = pd.DataFrame(rows, columns=list(_SET_ASIDE_COLUMNS))
     return frame.astype({"line": "Int64", "column": "Int64"})
 
 
@@ -341,7 +348,42 @@ _WORDS = {
     CITATION_FILE: "How to cite, in the Citation File Format.",
     SET_ASIDE: "Every file set aside, and why.",
     f"{TABLES}schema.json": "Columns of every table: name, type, unit, meaning (tabular data package).",
+    f"{SOFTWARE}requirements.txt": "Exact versions of the packages that the program ran with.",
+    f"{SOFTWARE}versions.json": "Versions of the program, of Python and of the packages.",
+    "texts/methods.md": "Methods, ready for a paper, with references.",
+    "texts/data_availability.md": "A data-availability sentence.",
+    "texts/citation.bib": "How to cite, for BibTeX.",
+    "texts/references.bib": "The works that the methods cite, for BibTeX.",
 }
+_WORDS_BY_PLACE = (
+    (RECORDS, "Calibration record of one sensor and branch."),
+    (SOFTWARE, "The program as a wheel."),
+    (MODEL_FOLDER, "Design or covariance of a fitted model; MODEL.md explains it."),
+    (TABLES, "Table of the report; schema.json explains its columns."),
+)
+
+
+def file_words(paths: Iterable[str], places: Places, results: CampaignResults) -> dict[str, str]:
+    """Return what each file is, in a few words, by its path in the crate."""
+    recordings = results.intake.recordings
+    fates = {
+        f"{places.own}/{file}": f"{kind or 'A'} recording, {fate}." if fate != _NO_RECORDING else _KEPT
+        for file, kind, fate in zip(recordings["file"], recordings["kind"], recordings["fate"], strict=True)
+    }
+    tables = {f"{TABLES}{name}.csv": caption for name, caption in CAPTIONS.items()}
+    known = {**fates, **tables, **_WORDS}
+    return {path: known.get(path) or _by_place(path) for path in paths}
+
+
+_NO_RECORDING = "not a recording"
+_KEPT = "A file of the campaign's folder that is no recording."
+
+
+def _by_place(path: str) -> str:
+    return next((words for place, words in _WORDS_BY_PLACE if path.startswith(place)), _EARLIER)
+
+
+_EARLIER = "A file of an earlier campaign."
 
 
 def _readme(
