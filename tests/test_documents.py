@@ -58,7 +58,7 @@ def _help(capsys: pytest.CaptureFixture[str], *words: str) -> str:
 
 def test_every_command_and_option_is_in_the_readme(capsys: pytest.CaptureFixture[str]) -> None:
     commands = re.findall(r"^    ([a-z]+)  ", _help(capsys), re.MULTILINE)
-    assert {"report", "inspect", "begin"} <= set(commands)
+    assert {"report", "inspect", "begin", "seal", "verify"} <= set(commands)
     for command in commands:
         words = _help(capsys, command)
         assert f"`campaign {command} FOLDER`" in README
