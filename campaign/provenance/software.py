@@ -27,9 +27,8 @@ from campaign.pages.render import templates_folder
 
 PACKAGE = Path(__file__).resolve().parents[1]
 DISTRIBUTION = "campaign-report"
-AT_THE_TOP = ("pyproject.toml", "README.md", "LICENSE", "requirements.lock")
-"""Files of the source beside the package; where only the package is installed, they are made again."""
 
+_SCRIPTS = "console_scripts"
 _TEMPLATES = "site_templates"
 _LEFT_OUT = ("__pycache__", "demo_campaign", _TEMPLATES)
 _NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]*")
@@ -57,55 +56,85 @@ class Software:
 
 def gather_software() -> Software:
     """Return the running program: its source, its wheel and the versions of what it ran with."""
-    source = source_files()
-    project = tomllib.loads(source["pyproject.toml"].decode("utf-8"))["project"]
-    name = f"{_wheel_name(project)}-{__version__}-py3-none-any.whl"
-    requirements = pinned_requirements(str(project["name"]), list(project["dependencies"]))
+    project = running_project()
+    source = source_files(project)
+    name = f"{_wheel_name(project)}-{project.version}-py3-none-any.whl"
+    pins = pinned_requirements(project)
     files = {f"source/{path}": content for path, content in source.items()}
-    files[name] = wheel_bytes(source)
-    files["requirements.txt"] = "".join(f"{pin}\n" for pin in requirements).encode()
-    files["versions.json"] = json.dumps(_versions(requirements), indent=2, sort_keys=True).encode() + b"\n"
-    return Software(__version__, dict(sorted(files.items())), name)
+    files[name] = wheel_bytes(project, source)
+    files["requirements.txt"] = "".join(f"{pin}\n" for pin in pins).encode()
+    files["versions.json"] = json.dumps(_versions(pins), indent=2, sort_keys=True).encode() + b"\n"
+    return Software(project.version, dict(sorted(files.items())), name)
 
 
-def source_files() -> dict[str, bytes]:
-    """Return the program's source by path, as in its repository but for tests and the demonstration."""
+@dataclass(frozen=True)
+class Project:
+    """What the program says of itself: in its checkout, or in the records of its installation."""
+
+    name: str
+    version: str
+    summary: str
+    python: str
+    dependencies: tuple[str, ...]
+    scripts: tuple[tuple[str, str], ...]
+    readme: str
+    licence: str
+
+
+def running_project() -> Project:
+    """Return what the running program says of itself; a checkout and an installation of it say the same."""
+    beside = PACKAGE.parent
+    if all((beside / name).is_file() for name in ("pyproject.toml", "README.md", "LICENSE")):
+        return _project_of_checkout(beside)
+    return project_of_installation(distribution(DISTRIBUTION))
+
+
+def _project_of_checkout(folder: Path) -> Project:
+    said = tomllib.loads((folder / "pyproject.toml").read_text("utf-8"))["project"]
+    return Project(
+        name=said["name"],
+        version=__version__,
+        summary=said["description"],
+        python=said["requires-python"],
+        dependencies=tuple(said["dependencies"]),
+        scripts=tuple(sorted(said["scripts"].items())),
+        readme=(folder / "README.md").read_text("utf-8"),
+        licence=(folder / "LICENSE").read_text("utf-8"),
+    )
+
+
+def project_of_installation(installed: Distribution) -> Project:
+    """Return what the records of an installed program say of it."""
+    records = installed.metadata
+    return Project(
+        name=records["Name"],
+        version=__version__,
+        summary=records["Summary"],
+        python=records["Requires-Python"],
+        dependencies=tuple(text for text in installed.requires or [] if "extra ==" not in text),
+        scripts=tuple(sorted((e.name, e.value) for e in installed.entry_points if e.group == _SCRIPTS)),
+        readme=(installed.read_text("METADATA") or "").partition("\n\n")[2],
+        licence=installed.read_text("licenses/LICENSE") or "",
+    )
+
+
+def source_files(project: Project) -> dict[str, bytes]:
+    """Return the program's source by path: what it runs from, and a project file that installs it."""
     files = {f"campaign/{path}": content for path, content in _files_of(PACKAGE).items()}
     files |= {f"{_TEMPLATES}/{path}": content for path, content in _files_of(templates_folder()).items()}
-    return dict(sorted({**files, **_top_files()}.items()))
+    files["README.md"], files["LICENSE"] = project.readme.encode(), project.licence.encode()
+    files["pyproject.toml"] = _PROJECT.format(
+        name=project.name,
+        version=project.version,
+        summary=json.dumps(project.summary, ensure_ascii=False),
+        python=project.python,
+        dependencies="".join(f"  {json.dumps(text)},\n" for text in project.dependencies),
+        scripts="".join(f"{name} = {json.dumps(place)}\n" for name, place in project.scripts),
+    ).encode()
+    return dict(sorted(files.items()))
 
 
-def _top_files() -> dict[str, bytes]:
-    """The files beside the package in a checkout, else the same from the installation's records."""
-    beside = [PACKAGE.parent / name for name in AT_THE_TOP]
-    if all(path.is_file() for path in beside):
-        return {path.name: path.read_bytes() for path in beside}
-    return top_files_of_installation(distribution(DISTRIBUTION))
-
-
-def top_files_of_installation(installed: Distribution) -> dict[str, bytes]:
-    """Return project file, README, licence and pins as the records of an installed program give them."""
-    records = installed.metadata
-    dependencies = [text for text in installed.requires or [] if "extra ==" not in text]
-    scripts = {e.name: e.value for e in installed.entry_points if e.group == "console_scripts"}
-    project = _PROJECT.format(
-        name=records["Name"],
-        version=installed.version,
-        summary=json.dumps(records["Summary"], ensure_ascii=False),
-        python=records["Requires-Python"],
-        dependencies="".join(f"  {json.dumps(text)},\n" for text in dependencies),
-        scripts="".join(f"{name} = {json.dumps(place)}\n" for name, place in sorted(scripts.items())),
-    )
-    pins = pinned_requirements(records["Name"], dependencies)
-    return {
-        "pyproject.toml": project.encode(),
-        "README.md": (installed.read_text("METADATA") or "").partition("\n\n")[2].encode(),
-        "LICENSE": (installed.read_text("licenses/LICENSE") or "").encode(),
-        "requirements.lock": "".join(f"{pin}\n" for pin in pins).encode(),
-    }
-
-
-_PROJECT = """# Written again from the records of an installed program.
+_PROJECT = """# Written for this archive: what installs the program, without the tools of its makers.
 [build-system]
 requires = ["hatchling>=1.24"]
 build-backend = "hatchling.build"
@@ -139,19 +168,18 @@ def _files_of(folder: Path) -> dict[str, bytes]:
     return found
 
 
-def wheel_bytes(source: Mapping[str, bytes]) -> bytes:
+def wheel_bytes(project: Project, source: Mapping[str, bytes]) -> bytes:
     """Return a wheel of the program made of its *source* (:func:`source_files`).
 
     It holds what the build of the repository puts into one, but for the demonstration campaign.
     """
-    project = tomllib.loads(source["pyproject.toml"].decode("utf-8"))["project"]
-    information = f"{_wheel_name(project)}-{__version__}.dist-info"
-    files = {_place_in_wheel(path): content for path, content in source.items() if path not in AT_THE_TOP}
+    information = f"{_wheel_name(project)}-{project.version}.dist-info"
+    files = {_place_in_wheel(path): content for path, content in source.items() if "/" in path}
     files |= {
-        f"{information}/METADATA": _metadata(project, source["README.md"].decode("utf-8")).encode(),
+        f"{information}/METADATA": _metadata(project).encode(),
         f"{information}/WHEEL": _WHEEL.encode(),
         f"{information}/entry_points.txt": _entry_points(project).encode(),
-        f"{information}/licenses/LICENSE": source["LICENSE"],
+        f"{information}/licenses/LICENSE": project.licence.encode(),
     }
     record = "".join(f"{path},{_digest(content)},{len(content)}\n" for path, content in sorted(files.items()))
     listing = f"{information}/RECORD"
@@ -165,8 +193,8 @@ def _place_in_wheel(path: str) -> str:
     return f"campaign/{path}" if path.startswith(f"{_TEMPLATES}/") else path
 
 
-def _wheel_name(project: Mapping[str, object]) -> str:
-    return re.sub(r"[-_.]+", "_", str(project["name"])).lower()
+def _wheel_name(project: Project) -> str:
+    return re.sub(r"[-_.]+", "_", project.name).lower()
 
 
 def _digest(content: bytes) -> str:
@@ -174,43 +202,34 @@ def _digest(content: bytes) -> str:
     return f"sha256={digest}"
 
 
-def _metadata(project: Mapping[str, object], readme: str) -> str:
-    dependencies = project["dependencies"]
-    assert isinstance(dependencies, list)
+def _metadata(project: Project) -> str:
     lines = [
         "Metadata-Version: 2.1",
-        f"Name: {project['name']}",
-        f"Version: {__version__}",
-        f"Summary: {project['description']}",
-        f"Requires-Python: {project['requires-python']}",
-        *(f"Requires-Dist: {dependency}" for dependency in dependencies),
+        f"Name: {project.name}",
+        f"Version: {project.version}",
+        f"Summary: {project.summary}",
+        f"Requires-Python: {project.python}",
+        *(f"Requires-Dist: {dependency}" for dependency in project.dependencies),
         "License-File: LICENSE",
         "Description-Content-Type: text/markdown",
     ]
-    return "\n".join(lines) + f"\n\n{readme}"
+    return "\n".join(lines) + f"\n\n{project.readme}"
 
 
-def _entry_points(project: Mapping[str, object]) -> str:
-    scripts = project["scripts"]
-    assert isinstance(scripts, dict)
-    return "[console_scripts]\n" + "".join(f"{name} = {place}\n" for name, place in sorted(scripts.items()))
+def _entry_points(project: Project) -> str:
+    return f"[{_SCRIPTS}]\n" + "".join(f"{name} = {place}\n" for name, place in project.scripts)
 
 
-def pinned_requirements(name: str, dependencies: list[str]) -> list[str]:
+def pinned_requirements(project: Project) -> list[str]:
     """Return ``name==version`` of all that the program stands on in the running environment, sorted.
 
-    Parameters
-    ----------
-    name
-        The program itself, which is not among them.
-    dependencies
-        What it requires; what those require in turn is followed, extras apart.
+    What its dependencies require in turn is followed, extras apart; the program itself is not among them.
     """
     found: dict[str, str] = {}
-    waiting = [requirement_name(text) for text in dependencies]
+    waiting = [requirement_name(text) for text in project.dependencies]
     while waiting:
         wanted = waiting.pop()
-        if wanted in found or wanted == _plain(name):
+        if wanted in found or wanted == _plain(project.name):
             continue
         try:
             installed = distribution(wanted)
