@@ -66,20 +66,23 @@ class DaskCluster(Closing):
             raise CrewGone(str(fault)) from fault
 
     def is_there(self) -> bool:
-        """Whether the cluster had a worker during the last :data:`PATIENCE_S` seconds."""
-        try:
-            if self._client.nthreads():
-                self._seen = time.monotonic()
-        except Exception:  # whatever a connection that broke may raise
-            return False
-        return time.monotonic() - self._seen < PATIENCE_S
+        """Whether the cluster answers and had a worker during the last :data:`PATIENCE_S` seconds."""
+        if self._has_workers():
+            self._seen = time.monotonic()
+        return self._client.status == "running" and time.monotonic() - self._seen < PATIENCE_S
 
     def renew(self) -> None:
         """Wait until the cluster has put a worker in the place of the one that died."""
-        while not self._client.nthreads():
+        while not self._has_workers():
             if not self.is_there():
                 raise CrewGone("the cluster has no workers left")
             time.sleep(0.1)
+
+    def _has_workers(self) -> bool:
+        try:
+            return bool(self._client.nthreads())
+        except Exception:  # whatever a connection that broke, or is closed, may raise
+            return False
 
     def close(self) -> None:
         """Leave the cluster."""

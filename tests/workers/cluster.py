@@ -18,10 +18,16 @@ ROOT = Path(__file__).parents[2]
 
 @dataclass(frozen=True)
 class Cluster:
-    """Where the scheduler listens, and the process numbers of its workers."""
+    """Where the scheduler listens, the process numbers of its workers, and the process it is."""
 
     address: str
     workers: tuple[int, ...]
+    process: subprocess.Popen[str]
+
+    def end(self) -> None:
+        """Kill the scheduler; its workers end with it."""
+        self.process.kill()
+        self.process.wait(30)
 
 
 @contextmanager
@@ -36,7 +42,7 @@ def cluster(workers: int = 2) -> Iterator[Cluster]:
     assert process.stdout is not None
     try:
         address, *numbers = process.stdout.readline().split()
-        yield Cluster(address, tuple(map(int, numbers)))
+        yield Cluster(address, tuple(map(int, numbers)), process)
     finally:
         process.stdin.close()
         process.wait(30)
@@ -52,7 +58,7 @@ def main(workers: int) -> None:
     logging.disable(logging.CRITICAL)  # the death of a worker is what is tried here
     with (
         LocalCluster(
-            n_workers=workers, threads_per_worker=1, dashboard_address=None, host="127.0.0.1"
+            n_workers=workers, threads_per_worker=1, dashboard_address=":0", host="127.0.0.1"
         ) as running,
         Client(running) as client,
     ):
