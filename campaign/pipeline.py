@@ -27,9 +27,11 @@ from campaign.analyses.residuals import analyse_residuals
 from campaign.analyses.results import CampaignResults
 from campaign.analyses.variance import analyse_variance
 from campaign.archive import campaign_in, hash_in_comment_holds, sha512_of, unpack_what_is_whole
+from campaign.keeping.kept_site import MadeSite, SiteKeeper
 from campaign.notices import CampaignStops, Notice, sort_notices
 from campaign.pages.notes import make_notes, read_note_files
 from campaign.pages.output import check_ours, write_folder
+from campaign.pages.render import templates_folder
 from campaign.pages.site import build_site
 from campaign.provenance.bag import BagFault
 from campaign.provenance.comparing import SCHEMA, compare_tables
@@ -134,11 +136,18 @@ def report(
     """
     site = into if into is not None else beside(folder)
     check_ours(site)
-    results, files = make_site(folder, site, progress, workshop)
-    write_folder(files, site)
-    sys.stdout.write(print_lines(_what_was_read(results.intake, results.notices)))
-    print(f"\n{len(files)} files written; open {site / 'index.html'}")
-    return SET_ASIDE if fail_on_set_aside and results.intake.set_aside_unasked else DONE
+    workshop = workshop or Workshop()
+    keeper = SiteKeeper(workshop.store, folder, site, templates_folder())
+    made = keeper.find()
+    if made is None:
+        results, files = make_site(folder, site, progress, workshop)
+        said = print_lines(_what_was_read(results.intake, results.notices))
+        made = MadeSite(files, said, bool(results.intake.set_aside_unasked))
+        keeper.keep(made, results.intake.file_hashes)
+    write_folder(made.files, site)
+    sys.stdout.write(made.said)
+    print(f"\n{len(made.files)} files written; open {site / 'index.html'}")
+    return SET_ASIDE if fail_on_set_aside and made.set_aside else DONE
 
 
 def make_site(

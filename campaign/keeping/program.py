@@ -23,8 +23,7 @@ def program_digest() -> str:
     with this digest.
     """
     said = hashlib.sha256(f"{campaign.__version__} {sys.version}".encode())
-    for name in LIBRARIES:
-        said.update(f" {name} {_version_of(name)}".encode())
+    said.update(f" {versions_of(LIBRARIES)}".encode())
     root = Path(campaign.__file__).parent
     for file in sorted(root.rglob("*.py")):
         said.update(file.relative_to(root).as_posix().encode() + b"\0" + file.read_bytes())
@@ -38,6 +37,11 @@ def digest_of(parts: Iterable[str | bytes]) -> str:
         data = part.encode() if isinstance(part, str) else part
         said.update(len(data).to_bytes(8, "little") + data)
     return said.hexdigest()
+
+
+def versions_of(libraries: Iterable[str]) -> str:
+    """Return names and versions of libraries as one text."""
+    return " ".join(f"{name} {_version_of(name)}" for name in libraries)
 
 
 def _version_of(library: str) -> str:
