@@ -82,12 +82,12 @@ def check_bag(folder: Path) -> list[BagFault]:
 
     Every changed, missing and extra file is named, tag files too.
     """
-    files = {
-        path.relative_to(folder).as_posix(): path for path in sorted(folder.rglob("*")) if path.is_file()
-    }
-    faults = [*_declaration_faults(files)]
+    files, links = files_below(folder)
+    faults = [BagFault(name, "is a link; sealed archives hold none") for name in links]
+    faults += _declaration_faults(files)
     listed = {name: _manifest_of(files, name, faults) for name in (MANIFEST, TAG_MANIFEST)}
-    faults += _hash_faults(files, {**listed[TAG_MANIFEST], **listed[MANIFEST]})
+    faults += _hash_faults(files, listed[MANIFEST], "differs from what was sealed")
+    faults += _hash_faults(files, listed[TAG_MANIFEST], _OR_ITS_LIST)
     known = {*listed[MANIFEST], *listed[TAG_MANIFEST], TAG_MANIFEST}
     faults += [BagFault(name, "is not in the manifest: an extra file") for name in files if name not in known]
     faults += _oxum_faults(files)
@@ -125,12 +125,15 @@ def _manifest_of(files: Mapping[str, Path], name: str, faults: list[BagFault]) -
         return {}
 
 
-def _hash_faults(files: Mapping[str, Path], hashes: Mapping[str, str]) -> Iterator[BagFault]:
+_OR_ITS_LIST = f"differs from what was sealed (or {TAG_MANIFEST} does, which nothing else lists)"
+
+
+def _hash_faults(files: Mapping[str, Path], hashes: Mapping[str, str], differs: str) -> Iterator[BagFault]:
     for name, digest in sorted(hashes.items()):
         if name not in files:
             yield BagFault(name, "is missing")
         elif sha512_of(files[name]) != digest:
-            yield BagFault(name, "differs from what was sealed")
+            yield BagFault(name, differs)
 
 
 def _oxum_faults(files: Mapping[str, Path]) -> Iterator[BagFault]:

@@ -88,7 +88,10 @@ def tolerance_of(table: str, column: str, kind: str) -> Tolerance:
 
 @dataclass(frozen=True)
 class Difference:
-    """One figure that differs: where it stands, both values, by how much, and what was allowed."""
+    """One figure that differs: where it stands, both values, by how much, what was allowed.
+
+    ``rank`` is the place of its tolerance in :data:`TOLERANCES`: what was read comes before what was computed.
+    """
 
     table: str
     row: str
@@ -97,6 +100,7 @@ class Difference:
     again: str
     by: str
     allowed: str
+    rank: int = 0
 
     @property
     def sentence(self) -> str:
@@ -119,7 +123,7 @@ class TableComparison:
     same_bytes
         Whether both files are the same to the byte.
     differences
-        Every figure beyond its tolerance, in the order of the table.
+        Every figure beyond its tolerance: what was read first, then in the order of the table.
     """
 
     table: str
@@ -162,7 +166,7 @@ def _compare(
     figures = sum(len(row) for row in old[1:])
     if sealed == again:
         return TableComparison(table, figures, True, ())
-    differences = tuple(_differences(table, old, new, types))
+    differences = tuple(sorted(_differences(table, old, new, types), key=lambda d: d.rank))
     return TableComparison(table, figures, False, differences)
 
 
@@ -187,7 +191,8 @@ def _differences(
             if pair[0] != pair[1] and not _agree(*pair, tolerance, scales[name]):
                 row = _named(number, heads[0], before, types, table)
                 was, now = (_shown(cell) for cell in pair)
-                yield Difference(table, row, name, was, now, _by(*pair), _allowed(tolerance))
+                rank = TOLERANCES.index(tolerance)
+                yield Difference(table, row, name, was, now, _by(*pair), _allowed(tolerance), rank)
 
 
 def _columns_apart(table: str, old: list[str], new: list[str]) -> Iterator[Difference]:

@@ -331,9 +331,8 @@ def _parts(places: Places, results: CampaignResults) -> Iterator[Part | None]:
         yield Part(
             MODEL_FOLDER, "Models", "Design and covariances of every nested fit; explained in MODEL.md."
         )
-    yield Part(
-        SOFTWARE, "Software", "The program's source and wheel, and the versions that it ran with.", False
-    )
+    yield Part(SOFTWARE, "Software", "The program's source and wheel, and the versions that it ran with.")
+    yield Part(f"{SOFTWARE}source/", "Source of the program", "It can be installed with pip.", False)
     yield Part("texts/", "Texts for a paper", "Methods with references, data availability, BibTeX.")
 
 

@@ -21,7 +21,10 @@ from campaign.recordings.folder import OUTPUT_MARKER
 
 ARCHIVE, SITE = "sealed archive", "site"
 MOST_SHOWN = 40
-"""Faults and differences that are printed one by one; the rest is counted."""
+"""Faults that are printed one by one; the rest is counted."""
+
+MOST_OF_A_TABLE = 4
+"""Differences of one table that are printed one by one."""
 
 WHAT_HASHES_SHOW = (
     "The hashes show that nothing changed since sealing. They do not show when or by whom: deposit the"
@@ -225,7 +228,8 @@ def recomputation_lines(found: Recomputation) -> list[str]:
     ]
     if differences:
         lines.append(f"{len(differences)} {'figure lies' if len(differences) == 1 else 'figures lie'} apart:")
-        lines += _shown([f"  {difference.sentence}" for difference in differences])
+        for table in sorted(found.tables, key=_nearness):
+            lines += _shown([f"  {difference.sentence}" for difference in table.differences], MOST_OF_A_TABLE)
     else:
         lines.append("every figure agrees within its tolerance")
     lines.append("tolerances:")
@@ -233,6 +237,12 @@ def recomputation_lines(found: Recomputation) -> list[str]:
     return [*lines, *(f"{'' if refit.agrees else 'DIFFERS: '}{refit.sentence}" for refit in found.refits)]
 
 
-def _shown(lines: list[str]) -> list[str]:
-    more = len(lines) - MOST_SHOWN
-    return [*lines[:MOST_SHOWN], *([f"  and {more} more"] if more > 0 else [])]
+def _nearness(table: TableComparison) -> tuple[int, str]:
+    """Tables nearest to the recordings first: what differs there is why the others do."""
+    nearest = ("recordings", "trials", "notices", "readings", "run_lines", "sensor_lines")
+    return (nearest.index(table.table) if table.table in nearest else len(nearest)), table.table
+
+
+def _shown(lines: list[str], most: int = MOST_SHOWN) -> list[str]:
+    more = len(lines) - most
+    return [*lines[:most], *([f"  and {more} more"] if more > 0 else [])]
