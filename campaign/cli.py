@@ -77,6 +77,18 @@ def _parser() -> argparse.ArgumentParser:
         action="store_true",
         help="end with status 1 where anything is set aside unasked",
     )
+    report.add_argument(
+        "--workers",
+        metavar="N",
+        type=_count,
+        help="processes that read recordings (as many as cores, where that is faster than one)",
+    )
+    report.add_argument(
+        "--dask", metavar="ADDRESS", help="read on a Dask cluster: the address of its scheduler"
+    )
+    report.add_argument(
+        "--ignore-cache", action="store_true", help="compute everything anew, and keep nothing of it"
+    )
     report.set_defaults(run=_report)
 
     inspect = commands.add_parser("inspect", help="read and check a campaign folder, and say what is found")
@@ -101,14 +113,52 @@ def _parser() -> argparse.ArgumentParser:
         "--into", metavar="FOLDER", type=Path, required=True, help="folder to write the rehearsal to"
     )
     rehearse.set_defaults(run=_rehearse)
+
+    seal = commands.add_parser("seal", help="seal a campaign and its report into one archive")
+    seal.add_argument("folder", metavar="FOLDER", type=Path, help="the campaign folder")
+    seal.add_argument(
+        "--into", metavar="FILE.zip", type=Path, required=True, help="the archive to write, outside FOLDER"
+    )
+    seal.set_defaults(run=_seal)
+
+    verify = commands.add_parser(
+        "verify",
+        help="check hashes and structure of a sealed archive, an unpacked one or a site",
+        epilog="exit status: 0 everything agrees; 1 something differs; 2 it cannot be read, or is refused",
+    )
+    verify.add_argument("target", metavar="FILE.zip|FOLDER", type=Path, help="what to verify")
+    verify.add_argument(
+        "--recompute",
+        action="store_true",
+        help="also read and analyse the sealed recordings again and compare every figure",
+    )
+    verify.set_defaults(run=_verify)
     return parser
 
 
 def _report(options: argparse.Namespace) -> int:
     from campaign.pipeline import report
+    from campaign.recordings.description import DESCRIPTION_FILE
+    from campaign.workers.workshop import open_workshop
 
-    with _progress_bar() as progress:
-        return report(options.folder, options.into, options.fail_on_set_aside, progress)
+    with (
+        open_workshop(
+            options.folder,
+            DESCRIPTION_FILE,
+            workers=options.workers,
+            dask=options.dask,
+            ignore_cache=options.ignore_cache,
+        ) as workshop,
+        _progress_bar() as progress,
+    ):
+        return report(options.folder, options.into, options.fail_on_set_aside, progress, workshop)
+
+
+def _count(text: str) -> int:
+    """Read a number of workers."""
+    if not text.isascii() or not text.isdigit() or int(text) < 1:
+        raise argparse.ArgumentTypeError(f"{text!r} is no whole number from 1")
+    return int(text)
 
 
 def _inspect(options: argparse.Namespace) -> int:
@@ -147,6 +197,30 @@ def _rehearse(options: argparse.Namespace) -> int:
     from campaign.rehearsal import rehearse
 
     return rehearse(options.plan, options.into)
+
+
+def _seal(options: argparse.Namespace) -> int:
+    from campaign.pipeline import seal
+    from campaign.recordings.description import DESCRIPTION_FILE
+    from campaign.workers.workshop import open_workshop
+
+    with (
+        open_workshop(options.folder, DESCRIPTION_FILE, ignore_cache=True) as workshop,
+        _progress_bar() as progress,
+    ):
+        return seal(options.folder, options.into, progress, workshop)
+
+
+def _verify(options: argparse.Namespace) -> int:
+    from campaign.pipeline import verify
+    from campaign.recordings.description import DESCRIPTION_FILE
+    from campaign.workers.workshop import open_workshop
+
+    with (
+        open_workshop(options.target, DESCRIPTION_FILE, ignore_cache=True) as workshop,
+        _progress_bar() as progress,
+    ):
+        return verify(options.target, options.recompute, progress, workshop)
 
 
 def _say_stops(stops: CampaignStops) -> None:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import sys
+import tempfile
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
@@ -51,52 +52,53 @@ from campaign.analyses.results import CampaignResults
 from campaign.analyses.scope import describe_scope
 from campaign.analyses.variance import analyse_variance, fit_generations
 from campaign.analyses.variance_fit import GenerationFit
+from campaign.archive import (
+    campaign_in,
+    hash_in_comment_holds,
+    sha512_of,
+    unpack_archive,
+    unpack_what_is_whole,
+)
+from campaign.keeping.kept_site import MadeSite, SiteKeeper
 from campaign.notices import CampaignStops, Notice, sort_notices
 from campaign.pages.notes import make_notes, read_note_files
 from campaign.pages.output import check_ours, write_folder
+from campaign.pages.render import templates_folder
 from campaign.pages.site import build_site
+from campaign.provenance.bag import BagFault
+from campaign.provenance.comparing import SCHEMA, compare_tables
 from campaign.provenance.manifest import with_manifests
-from campaign.recordings.description import DESCRIPTION_FILE
-from campaign.recordings.inspection import ON_SITE, inspection_lines, print_lines
-from campaign.recordings.intake import Intake, Progress, run_intake
-from campaign.recordings.recording import Trial
-from campaign.recordings.sensor_share import TrialKey
-from campaign.trials.cyclic import CyclicFeatures, features_of_cyclic
-from campaign.trials.endurance import EnduranceFeatures, features_of_endurance
-from campaign.trials.features import TrialFeatures
-from campaign.trials.hold import HoldFeatures, features_of_blank, features_of_hold
-from campaign.trials.influences import (
-    features_of_bend,
-    features_of_contact,
-    features_of_offaxis,
-    features_of_proximity,
-    features_of_thermal,
+from campaign.provenance.refitting import refit_from_readings
+from campaign.provenance.sealing import TABLES, check_archive_place, seal_campaign, write_sealed
+from campaign.provenance.verifying import (
+    ARCHIVE,
+    WHAT_HASHES_SHOW,
+    Recomputation,
+    Verification,
+    recomputation_lines,
+    sealed_tables,
+    verification_lines,
+    verify_folder,
 )
-from campaign.trials.layout import LayoutFeatures, features_of_layout
-from campaign.trials.pressure import features_of_pressure
+from campaign.recordings.description import DESCRIPTION_FILE
+from campaign.recordings.inspection import ON_SITE, inspection_lines, notice_lines, print_lines
+from campaign.recordings.intake import Intake, run_intake
+from campaign.recordings.sensor_share import TrialKey
+from campaign.recordings.shared_reading import Progress
+from campaign.trials.cyclic import CyclicFeatures
+from campaign.trials.endurance import EnduranceFeatures
+from campaign.trials.features import TrialFeatures
+from campaign.trials.hold import HoldFeatures
+from campaign.trials.layout import LayoutFeatures
 from campaign.trials.readings import Readings, collect_readings
-from campaign.trials.staircase import StaircaseFeatures, readings_of_staircase
+from campaign.trials.reduction import reduce_trial
+from campaign.trials.staircase import StaircaseFeatures
 from campaign.trials.sweeps import SweepFeatures
+from campaign.workers.workshop import Workshop
 
-DONE, SET_ASIDE = 0, 1
+DONE, SET_ASIDE, DIFFERS = 0, 1, 1
 
 Features = TypeVar("Features", bound=TrialFeatures)
-
-REDUCED_BY: dict[str, Callable[[Trial], TrialFeatures]] = {
-    "staircase": readings_of_staircase,
-    "cyclic": features_of_cyclic,
-    "endurance": features_of_endurance,
-    "hold": features_of_hold,
-    "blank": features_of_blank,
-    "pressure": features_of_pressure,
-    "layout": features_of_layout,
-    "offaxis": features_of_offaxis,
-    "thermal": features_of_thermal,
-    "contact": features_of_contact,
-    "proximity": features_of_proximity,
-    "bend": features_of_bend,
-}
-"""What a trial is reduced to while its recording is in memory, by kind: the kinds that are analysed."""
 
 
 @dataclass(frozen=True)
@@ -133,7 +135,13 @@ class CampaignRead:
         return self.of_type(kept) | aside if aside else {}
 
 
-def report(folder: Path, into: Path | None, fail_on_set_aside: bool, progress: Progress | None = None) -> int:
+def report(
+    folder: Path,
+    into: Path | None,
+    fail_on_set_aside: bool,
+    progress: Progress | None = None,
+    workshop: Workshop | None = None,
+) -> int:
     """Read the campaign in *folder*, analyse it, and write its site whole or not at all.
 
     Parameters
@@ -146,6 +154,8 @@ def report(folder: Path, into: Path | None, fail_on_set_aside: bool, progress: P
         Whether the status is 1 where anything was set aside unasked.
     progress
         Told what is being done and how far it is.
+    workshop
+        Who works, and what earlier runs left; this process alone, and nothing, where ``None``.
 
     Returns
     -------
@@ -157,23 +167,166 @@ def report(folder: Path, into: Path | None, fail_on_set_aside: bool, progress: P
     CampaignStops
         Where the campaign cannot be read or the output folder is not ours; nothing is written then.
     """
-    tell = progress or _silent
     site = into if into is not None else beside(folder)
     check_ours(site)
-    read = read_campaign(folder, site, tell)
-    earlier = read_earlier(folder, read, tell)
-    results = analyse(read, tell, earlier)
+    workshop = workshop or Workshop()
+    keeper = SiteKeeper(workshop.store, folder, site, templates_folder())
+    made = keeper.find()
+    if made is None:
+        results, files = make_site(folder, site, progress, workshop)
+        said = print_lines(_what_was_read(results.intake, results.notices))
+        made = MadeSite(files, said, _anything_set_aside(results))
+        keeper.keep(made, results.intake.file_hashes)
+    write_folder(made.files, site)
+    sys.stdout.write(made.said)
+    print(f"\n{len(made.files)} files written; open {site / 'index.html'}")
+    return SET_ASIDE if fail_on_set_aside and made.set_aside else DONE
+
+
+def _anything_set_aside(results: CampaignResults) -> bool:
+    """Whether anything was set aside unasked, an earlier campaign included."""
+    earlier = any(notice.code == _NOT_JOINED for notice in results.notices)
+    return earlier or bool(results.intake.set_aside_unasked)
+
+
+def make_site(
+    folder: Path,
+    output: Path | None = None,
+    progress: Progress | None = None,
+    workshop: Workshop | None = None,
+) -> tuple[CampaignResults, dict[str, bytes]]:
+    """Read and analyse a campaign and return its results and every file of its site by address.
+
+    Parameters are those of :func:`read_campaign`; so are the faults that stop it.
+    """
+    tell = progress or _silent
+    read = read_campaign(folder, output, tell, workshop)
+    results = analyse(read, tell, read_earlier(folder, read, tell, workshop))
     notes = make_notes(read_note_files(folder))
     results = replace(results, notices=sort_notices([*results.notices, *notes.notices]))
     tell("pages", 0, 1)
     library = results.description.plot_library
     files = build_site(results, notes, folder / library if library is not None else None)
-    write_folder(with_manifests(files, read.intake.file_hashes), site)
     tell("pages", 1, 1)
-    sys.stdout.write(print_lines(_what_was_read(read.intake, results.notices)))
-    print(f"\n{len(files)} files written; open {site / 'index.html'}")
-    aside = read.intake.set_aside_unasked or any(notice.weight == "set aside" for notice in earlier.notices)
-    return SET_ASIDE if fail_on_set_aside and aside else DONE
+    return results, with_manifests(files, read.intake.file_hashes)
+
+
+def seal(folder: Path, into: Path, progress: Progress | None = None, workshop: Workshop | None = None) -> int:
+    """Read and analyse the campaign in *folder* and seal everything into the zip file *into*.
+
+    The same folder gives the same bytes. Nothing is written where anything stops.
+
+    Returns
+    -------
+    int
+        Exit status: 0 done.
+
+    Raises
+    ------
+    CampaignStops
+        Where the campaign cannot be read or sealed, or *into* is not ours to write.
+    """
+    tell = progress or _silent
+    check_archive_place(folder, into)
+    results, site = make_site(folder, None, tell, workshop)
+    tell("sealing", 0, 1)
+    sealed = seal_campaign(folder, results, site)
+    write_sealed(sealed, into)
+    tell("sealing", 1, 1)
+    sys.stdout.write(print_lines(notice_lines(sealed.notices)))
+    print(f"{into} holds {len(sealed.files)} files, {into.stat().st_size} bytes; its SHA-512:")
+    print(f"  {sha512_of(into)}")
+    print(f"{WHAT_HASHES_SHOW}\nVerify it with: campaign verify {into}")
+    return DONE
+
+
+def verify(
+    target: Path, recompute: bool, progress: Progress | None = None, workshop: Workshop | None = None
+) -> int:
+    """Verify a sealed archive (a zip file, or the folder it was unpacked to) or a site, and say what differs.
+
+    Parameters
+    ----------
+    target
+        What to verify; it is not altered.
+    recompute
+        Whether to read and analyse the recordings in the archive again and compare every figure.
+    progress, workshop
+        As in :func:`read_campaign`; nothing kept by earlier runs should be in the workshop.
+
+    Returns
+    -------
+    int
+        Exit status: 0 everything agrees, 1 something differs.
+
+    Raises
+    ------
+    CampaignStops
+        Where *target* cannot be read, is refused, or holds nothing to recompute.
+    """
+    with tempfile.TemporaryDirectory(prefix="campaign-verify-") as space:
+        folder, damaged = _opened(target, Path(space) / "archive")
+        found = verify_folder(folder)
+        faults = _named_once([*damaged, *found.faults])
+        found = replace(found, faults=faults, remarks=(*found.remarks, *_packing_remarks(target)))
+        sys.stdout.write(print_lines(verification_lines(found, target.name)))
+        again = recompute_archive(found, progress, workshop) if recompute else None
+        if again is not None:
+            sys.stdout.write(print_lines(recomputation_lines(again)))
+    print(WHAT_HASHES_SHOW)
+    return DIFFERS if found.faults or (again is not None and not again.agrees) else DONE
+
+
+def _opened(target: Path, space: Path) -> tuple[Path, list[BagFault]]:
+    """Where *target* lies unpacked, and what of its zip file is damaged."""
+    if target.is_dir():
+        return target, []
+    unpacked = unpack_what_is_whole(target, space)
+    home = unpacked.folder.relative_to(space).as_posix()
+    faults = [
+        BagFault((notice.file or "").removeprefix(f"{home}/"), "is damaged in the zip file")
+        for notice in unpacked.damaged
+    ]
+    if hash_in_comment_holds(target) is False:
+        faults.append(BagFault(target.name, "is not, byte by byte, the zip file that was sealed"))
+    return unpacked.folder, faults
+
+
+def _named_once(faults: list[BagFault]) -> tuple[BagFault, ...]:
+    """Faults with the first of each file alone."""
+    first: dict[str, BagFault] = {}
+    for fault in faults:
+        first.setdefault(fault.file, fault)
+    return tuple(first.values())
+
+
+def _packing_remarks(target: Path) -> list[str]:
+    if target.is_dir() or hash_in_comment_holds(target) is not None:
+        return []
+    return ["another program packed this zip file: its contents are looked at, not its own bytes"]
+
+
+def recompute_archive(
+    found: Verification, progress: Progress | None = None, workshop: Workshop | None = None
+) -> Recomputation:
+    """Read and analyse the recordings of an unpacked archive again, and compare with what it holds.
+
+    Raises
+    ------
+    CampaignStops
+        Where it holds no recordings, or they cannot be read.
+    """
+    if found.kind != ARCHIVE:
+        what = f"a {found.kind} holds no recordings"
+        remedy = "name a sealed archive, or leave out --recompute"
+        done = "nothing is computed again"
+        raise CampaignStops([Notice("nothing-to-recompute", "stops", None, None, None, what, done, remedy)])
+    _, site = make_site(campaign_in(found.folder), None, progress, workshop)
+    sealed = sealed_tables(found.folder)
+    made = {address.removeprefix(TABLES): site[address] for address in site if address.startswith(TABLES)}
+    parts = [sealed.get(name) for name in ("readings.csv", SCHEMA, "fit_certificates.csv")]
+    refits = refit_from_readings(*parts) if None not in parts else ()  # type: ignore[arg-type]
+    return Recomputation(compare_tables(sealed, made), refits)
 
 
 def _what_was_read(intake: Intake, notices: tuple[Notice, ...]) -> list[str]:
@@ -186,15 +339,24 @@ def beside(folder: Path) -> Path:
     return whole.with_name(f"{whole.name}_report")
 
 
-def read_campaign(folder: Path, output: Path | None = None, progress: Progress | None = None) -> CampaignRead:
+def read_campaign(
+    folder: Path,
+    output: Path | None = None,
+    progress: Progress | None = None,
+    workshop: Workshop | None = None,
+) -> CampaignRead:
     """Read every recording of *folder* once and keep what its trials are reduced to.
+
+    What comes of it is the same, to the last bit, whoever of the *workshop* read it and whenever.
 
     Raises
     ------
     CampaignStops
         Where the folder cannot be read or no trial can be used.
     """
-    intake, features = run_intake(folder, reduce_trial, output, progress, keep_put_back=True)
+    intake, features = run_intake(
+        folder, reduce_trial, output, progress, keep_put_back=True, workshop=workshop, as_bytes=True
+    )
     staircases = {key: found for key, found in features.items() if isinstance(found, StaircaseFeatures)}
     reduced = {key: found for key, found in features.items() if found is not None and key not in staircases}
     others = {key: found for key, found in reduced.items() if key in intake.used}
@@ -205,12 +367,6 @@ def read_campaign(folder: Path, output: Path | None = None, progress: Progress |
     put_back = _readings(intake, staircases, lambda _: True) if intake.put_back & staircases.keys() else None
     noted = with_notices(intake, [*notices, *readings.notices])
     return CampaignRead(noted, readings, put_back, others, aside)
-
-
-def reduce_trial(trial: Trial) -> TrialFeatures | None:
-    """Return what is kept of a trial; ``None`` for kinds that are accounted for but not analysed yet."""
-    reduced = REDUCED_BY.get(trial.identity.kind)
-    return reduced(trial) if reduced is not None else None
 
 
 def sensors_set_aside(intake: Intake) -> frozenset[tuple[str, str]]:
@@ -239,7 +395,12 @@ def _readings(
     return collect_readings(parts, sensors_aside)
 
 
-def read_earlier(folder: Path, read: CampaignRead, progress: Progress | None = None) -> Joined:
+def read_earlier(
+    folder: Path,
+    read: CampaignRead,
+    progress: Progress | None = None,
+    workshop: Workshop | None = None,
+) -> Joined:
     """Read the earlier campaigns that the description of *folder* names, as far as comparison needs them.
 
     One that cannot be read becomes a notice, and the report goes on without it. Earlier campaigns of an
@@ -258,7 +419,7 @@ def read_earlier(folder: Path, read: CampaignRead, progress: Progress | None = N
                 if place.resolve() in taken:
                     raise CampaignStops([_not_joined(where, "is this campaign, or is named twice")])
                 taken.add(place.resolve())
-                found.append(_earlier_campaign(where, read_campaign(place), read))
+                found.append(_earlier_campaign(where, read_campaign(place, workshop=workshop), read))
                 if found[-1].names_others:
                     notices.append(_not_followed(where))
         except CampaignStops as stop:
@@ -288,19 +449,18 @@ def _not_followed(where: str) -> Notice:
 
 @contextmanager
 def opened_earlier(folder: Path, named: Mapping[str, str]) -> Iterator[Path]:
-    """Give the folder of an earlier campaign while it is read: the one place where archives come in.
+    """Give the folder of an earlier campaign while it is read; a sealed archive is unpacked for that long.
 
     Raises
     ------
     CampaignStops
-        Where an archive is named: this version cannot open one.
+        Where a sealed archive is refused or damaged, or holds no campaign.
     """
-    if "archive" in named:
-        remedy = 'unpack it, and name the folder: folder = "…"'
-        raise CampaignStops(
-            [_not_joined(named["archive"], "is a sealed archive, which is not opened yet", remedy)]
-        )
-    yield folder / named["folder"]
+    if "folder" in named:
+        yield folder / named["folder"]
+        return
+    with tempfile.TemporaryDirectory(prefix="campaign-earlier-") as space:
+        yield campaign_in(unpack_archive(folder / named["archive"], Path(space) / "archive"))
 
 
 def _earlier_campaign(where: str, read: CampaignRead, own: CampaignRead) -> EarlierCampaign:

@@ -400,3 +400,68 @@ def test_each_fault_is_followed_by_its_own_remedy(folder: Path, capsys: pytest.C
     places = [said.index("'lisence'"), said.index("'naem'")]
     remedies = [found.start() for found in re.finditer("to mend:", said)]
     assert places[0] < remedies[0] < places[1] < remedies[1]
+
+
+# ---------------------------------------------------------------- workers and cache
+
+
+@pytest.mark.parametrize("number", ["0", "-1", "two", "1.5"])
+def test_a_number_of_workers_is_a_whole_number(
+    folder: Path, number: str, capsys: pytest.CaptureFixture[str]
+) -> None:
+    with pytest.raises(SystemExit) as end:
+        main(["report", str(folder), "--workers", number])
+    assert end.value.code == 2
+    assert "no whole number from 1" in capsys.readouterr().err
+
+
+def test_a_cluster_where_nobody_answers_stops_with_a_notice(
+    folder: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    monkeypatch.setattr("campaign.workers.cluster.ANSWER_S", 0.3)
+    assert main(["report", str(folder), "--dask", "tcp://127.0.0.1:9"]) == 2
+    said = " ".join(capsys.readouterr().err.split())
+    assert "no scheduler answers at tcp://127.0.0.1:9" in said
+    assert "dask scheduler" in said
+    assert not folder.with_name("panels_report").exists()
+
+
+@pytest.mark.parametrize("address", ["", "nowhere", "http://x y:z", "tcp://"])
+def test_an_address_that_is_none_stops_with_a_notice(
+    folder: Path, address: str, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    monkeypatch.setattr("campaign.workers.cluster.ANSWER_S", 0.3)
+    assert main(["report", str(folder), "--dask", address]) == 2
+    assert "no scheduler answers" in " ".join(capsys.readouterr().err.split())
+
+
+def test_without_dask_a_cluster_stops_with_a_notice(
+    folder: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    monkeypatch.setitem(sys.modules, "distributed", None)
+    assert main(["report", str(folder), "--dask", "tcp://127.0.0.1:9"]) == 2
+    said = " ".join(capsys.readouterr().err.split())
+    assert "'distributed' is not installed" in said
+    assert "campaign-report[cluster]" in said
+
+
+def test_a_cache_that_is_no_cache_is_thrown_away_with_a_line_and_changes_nothing(
+    folder: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    monkeypatch.setenv("CAMPAIGN_CACHE", str(tmp_path / "cache"))
+    sites = [tmp_path / name for name in ("first", "second", "third")]
+    assert main(["report", str(folder), "--into", str(sites[0]), "--ignore-cache"]) == 0
+    assert not (tmp_path / "cache").exists()
+    (tmp_path / "cache").mkdir()
+    (tmp_path / "cache" / "results.sqlite").write_text("not a database, " * 300)
+    capsys.readouterr()
+    assert main(["report", str(folder), "--into", str(sites[1])]) == 0
+    err = capsys.readouterr().err
+    assert err.count("\n") == 1
+    assert "thrown away, nothing in it is believed" in err
+    assert main(["report", str(folder), "--into", str(sites[2]), "--workers", "1"]) == 0
+    assert capsys.readouterr().err == ""
+    first, second, third = (
+        {p.relative_to(site): p.read_bytes() for p in site.rglob("*") if p.is_file()} for site in sites
+    )
+    assert first == second == third

@@ -31,6 +31,8 @@ LADDER = (
     "trials",
     "recordings",
     "archive",
+    "workers",
+    "keeping",
     "methods",
     "units",
     "notices",
@@ -57,7 +59,7 @@ def _help(capsys: pytest.CaptureFixture[str], *words: str) -> str:
 
 def test_every_command_and_option_is_in_the_readme(capsys: pytest.CaptureFixture[str]) -> None:
     commands = re.findall(r"^    ([a-z]+)  ", _help(capsys), re.MULTILINE)
-    assert {"report", "inspect", "begin", "rehearse"} <= set(commands)
+    assert {"report", "inspect", "begin", "rehearse", "seal", "verify"} <= set(commands)
     for command in commands:
         words = _help(capsys, command)
         read = "PLAN" if " PLAN\n" in words else "FOLDER"

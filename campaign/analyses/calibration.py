@@ -217,7 +217,7 @@ def analyse_calibration(
         run_lines_frame(used, lines),
         hysteresis_frame(used, lines, reference, description),
         repeatability_frame(lines),
-        ordinary_lines(used, lines, fits),
+        ordinary_lines(lines, fits),
         tuple(_record(line, used, reference, description, file_hashes) for line in lines),
         shared_reference(used, description, reference),
         campaign_labels(used, lines, description, reference),

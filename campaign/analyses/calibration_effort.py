@@ -21,7 +21,7 @@ from scipy import stats
 from campaign.analyses.run_settling import number_runs
 from campaign.analyses.variance import Variance
 from campaign.analyses.variance_fit import GenerationFit
-from campaign.methods.component_tests import group_sums
+from campaign.methods.cell_sums import CellSums, lines_without, squares_of_errors, stacked, sums_of_cells
 from campaign.methods.identifiability import Units, code_units
 from campaign.methods.nested_simulation import simulate_deviations
 from campaign.notices import Notice
@@ -121,28 +121,51 @@ _LEFT_OUT = {
 
 @dataclass(frozen=True)
 class Trials:
-    """Signals of the campaign and of drawn campaigns, ready for procedures.
+    """Runs of the campaign and of drawn campaigns, ready for procedures.
 
     Attributes
     ----------
-    x
-        Shape (readings,).
-    signals
-        Shape (readings, 1 + drawn): as observed, then as drawn.
     codes
-        Unit name → code, shape (readings,).
-    zero_row
-        Shape (readings,): row of the zero reading of the same mounting (of the same run where mountings do
-        not repeat), −1 where there is none.
+        Unit name → code, shape (runs,).
     generation
-        Shape (readings,), names.
+        Shape (runs,), names.
+    made
+        Sums over the readings of every run, x and signal centred; campaigns as observed, then as drawn.
+    read
+        The same over the readings within the common range.
+    zeros, zeros_read
+        The same over the readings that are the zero of a mounting (of a run where mountings do not repeat).
+    zero_x, zero_signal
+        Shape (runs,) and (runs, campaigns): that zero reading, centred like the others; NaN where a run has
+        none.
+    centre
+        What was taken off all signals.
+    variance_of_x
+        Of all readings.
     """
 
-    x: FloatArray
-    signals: FloatArray
     codes: dict[str, IntArray]
-    zero_row: IntArray
     generation: npt.NDArray[np.object_]
+    made: CellSums
+    read: CellSums
+    zeros: CellSums
+    zeros_read: CellSums
+    zero_x: FloatArray
+    zero_signal: FloatArray
+    centre: float
+    variance_of_x: float
+
+    @property
+    def has_zeros(self) -> bool:
+        """Whether every run has a zero reading, and x varies."""
+        return bool(np.isfinite(self.zero_x).all()) and self.variance_of_x > 0
+
+    def drawn_fewer(self, campaigns: int) -> Trials:
+        """Return the observed campaign and the first of those drawn, *campaigns* together."""
+        sums = {
+            key: getattr(self, key).of_first(campaigns) for key in ("made", "read", "zeros", "zeros_read")
+        }
+        return replace(self, zero_signal=self.zero_signal[:, :campaigns], **sums)
 
 
 def analyse_calibration_effort(
@@ -187,13 +210,11 @@ def effort_of_fits(fits: tuple[GenerationFit, ...], seed: int) -> CalibrationEff
         )
     readings = pd.concat([fit.model.readings for fit in fits])
     low, high = common_range(readings)
-    margin = 1e-3 * float(np.ptp(readings["x"].to_numpy(float)))
-    trials = _trials(fits, readings, np.random.default_rng([seed % 2**63, 1]))
-    inside = (trials.x >= low - margin) & (trials.x <= high + margin)
+    trials = _trials(fits, readings, (low, high), np.random.default_rng([seed % 2**63, 1]))
     efforts = _possible_efforts(fits, trials)
-    table = pd.DataFrame(list(_rows(efforts, trials, inside)), columns=list(EFFORT_COLUMNS))
+    table = pd.DataFrame(list(_rows(efforts, trials)), columns=list(EFFORT_COLUMNS))
     table = _with_agreement(_with_factor(table))
-    left_out = pd.DataFrame(list(_left_out_rows(efforts, trials, inside)), columns=list(LEFT_OUT_COLUMNS))
+    left_out = pd.DataFrame(list(_left_out_rows(efforts, trials)), columns=list(LEFT_OUT_COLUMNS))
     return CalibrationEffort(table, left_out, low, high, DRAWN, tuple(_disagreements(table)))
 
 
@@ -215,11 +236,13 @@ def common_range(readings: pd.DataFrame) -> tuple[float, float]:
 
 
 def _trials(
-    fits: tuple[GenerationFit, ...], readings: pd.DataFrame, generator: np.random.Generator
+    fits: tuple[GenerationFit, ...],
+    readings: pd.DataFrame,
+    common: tuple[float, float],
+    generator: np.random.Generator,
 ) -> Trials:
+    """Add up every run of the campaign and of the drawn ones, generation by generation."""
     units = code_units(readings)
-    drawn = [_drawn_signals(fit, generator) for fit in fits]
-    observed = readings["signal"].to_numpy(float)[:, np.newaxis]
     codes = {
         "campaign": np.zeros(len(readings), dtype=np.int64),
         "generation": units.generation,
@@ -232,13 +255,56 @@ def _trials(
     }
     if not units.batches_known:
         del codes["batch"]
+    x = readings["x"].to_numpy(float)
+    margin = 1e-3 * float(np.ptp(x))
+    inside = (x >= common[0] - margin) & (x <= common[1] + margin)
+    zero_row = _zero_rows(readings, units, fits[0].places["zero"])
+    first, cell = _finest([*codes.values(), zero_row])
+    centred, centre = x - x.mean(), float(readings["signal"].mean())
+    zero_x = np.where(zero_row >= 0, centred[zero_row], np.nan)[first]
+    is_zero = zero_row == np.arange(len(x))
+    masks = (np.ones_like(inside), inside, is_zero, inside & is_zero)
+    sums: list[list[CellSums]] = [[], [], [], []]
+    zero_signal = np.full((len(first), 1 + DRAWN), np.nan)
+    start = 0
+    for fit in fits:
+        rows = slice(start, start := start + len(fit.model.readings))
+        own, here = np.unique(cell[rows], return_inverse=True)
+        signals = _signals(fit, centre, generator)
+        for mask, parts in zip(masks, sums, strict=True):
+            parts.append(sums_of_cells(here.ravel(), len(own), centred[rows], signals, mask[rows]))
+        known = own[zero_row[first[own]] >= 0]
+        zero_signal[known] = signals[zero_row[first[known]] - rows.start]
+    made, read, zeros, zeros_read = (stacked(parts) for parts in sums)
     return Trials(
-        x=readings["x"].to_numpy(float),
-        signals=np.hstack([observed, np.vstack(drawn)]),
-        codes=codes,
-        zero_row=_zero_rows(readings, units, fits[0].places["zero"]),
-        generation=readings["generation"].to_numpy(object),
+        codes={name: code[first] for name, code in codes.items()},
+        generation=readings["generation"].to_numpy(object)[first],
+        made=made,
+        read=read,
+        zeros=zeros,
+        zeros_read=zeros_read,
+        zero_x=zero_x,
+        zero_signal=zero_signal,
+        centre=centre,
+        variance_of_x=float(np.var(x)),
     )
+
+
+def _finest(codes: list[IntArray]) -> tuple[IntArray, IntArray]:
+    """First row of every finest cell, cells in the order of their generations, and the cell of every row."""
+    cell = np.zeros(len(codes[0]), dtype=np.int64)
+    for code in codes:
+        cell = np.unique(cell * (int(code.max()) + 2) + code + 1, return_inverse=True)[1].ravel()
+    order = np.unique(cell, return_index=True)[1]
+    rank = np.empty_like(order)
+    rank[np.argsort(order)] = np.arange(len(order))
+    return np.sort(order), rank[cell]
+
+
+def _signals(fit: GenerationFit, centre: float, generator: np.random.Generator) -> FloatArray:
+    """Signals as observed, then those of campaigns drawn from the fit, less *centre*, side by side."""
+    observed = fit.model.readings["signal"].to_numpy(float)[:, np.newaxis]
+    return np.hstack([observed, _drawn_signals(fit, generator)]) - centre
 
 
 def _drawn_signals(fit: GenerationFit, generator: np.random.Generator) -> FloatArray:
@@ -273,27 +339,21 @@ def _possible_efforts(fits: tuple[GenerationFit, ...], trials: Trials) -> tuple[
         "module": count["module"] > count["generation"] and count["sensor"] > count["module"],
         "sensor": True,
     }
-    zeros = bool((trials.zero_row >= 0).all()) and not _is_flat(trials.x)
-    return tuple(e for e in EFFORTS if differs[e.line_of] and (zeros or not e.rezero))
+    return tuple(e for e in EFFORTS if differs[e.line_of] and (trials.has_zeros or not e.rezero))
 
 
-def _is_flat(x: FloatArray) -> bool:
-    return bool(np.ptp(x) == 0)
-
-
-def _rows(efforts: tuple[Effort, ...], trials: Trials, inside: BoolArray) -> Iterator[dict[str, object]]:
+def _rows(efforts: tuple[Effort, ...], trials: Trials) -> Iterator[dict[str, object]]:
     names = sorted(set(trials.generation))
     for effort in efforts:
         by = _first_possible(effort, trials)
-        squares = None if by is None else _squared_errors(effort, by, trials)
+        errors = None if by is None else _squared_errors(effort, by, trials)
         for name in names:
-            rows = inside & (trials.generation == name)
             yield {
                 "generation": name,
                 "effort": effort.name,
                 "left_out_by": by or "",
                 "label": _label(effort, by),
-                **_summary(squares, rows),
+                **_summary(errors, trials.generation == name),
             }
 
 
@@ -316,67 +376,37 @@ def _is_possible(effort: Effort, by: str, trials: Trials) -> bool:
     return bool(np.mean(parts >= 2) > 0.5)
 
 
-def _squared_errors(effort: Effort, by: str, trials: Trials) -> FloatArray:
-    """Squared errors of reading every row by a line made without its unit of *by*, (readings, 1 + drawn).
+def _squared_errors(effort: Effort, by: str, trials: Trials) -> tuple[FloatArray, FloatArray]:
+    """Readings that a procedure reads in every run, and their sums of squared errors, (runs, 1 + drawn).
 
-    NaN where nothing remains to make a line from, and for the zero readings themselves.
+    The line is made without the run's unit of *by*; NaN where nothing remains to make a line from. Zero
+    readings that a procedure takes anew are not read by it.
     """
-    signals, zeros = trials.signals, trials.zero_row
-    used = np.ones(len(trials.x), dtype=bool)
+    made, read = trials.made, trials.read
     if effort.rezero:
-        used = zeros != np.arange(len(zeros))
+        made, read = made.without(trials.zeros), read.without(trials.zeros_read)
     if effort.rezero == "ratio":
-        signals = signals / signals[zeros]
-    lines, cell = _lines_without(trials.codes[effort.line_of], trials.codes[by], trials.x, signals, used)
-    intercept, slope = lines[cell, 0], lines[cell, 1]
+        unit = trials.zero_signal + trials.centre
+        made, read = (sums.rescaled(trials.zero_signal, unit) for sums in (made, read))
+    group, left_out = trials.codes[effort.line_of], trials.codes[by]
+    intercept, slope = lines_without(made, group, left_out, trials.variance_of_x)
     if effort.rezero == "additive":
-        errors = (signals - signals[zeros]) / slope + (trials.x[zeros] - trials.x)[:, np.newaxis]
-    else:
-        errors = (signals - intercept) / slope - trials.x[:, np.newaxis]
-    errors[~used] = np.nan
-    return np.asarray(errors**2)
+        return read.n, squares_of_errors(read, trials.zero_signal, slope, trials.zero_x)
+    return read.n, squares_of_errors(read, intercept, slope)
 
 
-def _lines_without(
-    group: IntArray, left_out: IntArray, x: FloatArray, signals: FloatArray, used: BoolArray
-) -> tuple[FloatArray, IntArray]:
-    """Least-squares lines of each group without each of its left-out units.
-
-    Returns
-    -------
-    tuple
-        Lines, shape (cells, 2, campaigns), NaN where fewer than two values of x remain; cell of every
-        reading.
-    """
-    pairs, cell = np.unique(np.column_stack([group, left_out]), axis=0, return_inverse=True)
-    cell = cell.ravel()
-    centre = float(x.mean())
-    design = np.column_stack([np.ones_like(x), x - centre]) * used[:, np.newaxis]
-    gram = group_sums(design[:, :, None] * design[:, None, :], cell)
-    cross = np.stack([group_sums(design[:, k, None] * signals, cell) for k in range(2)], axis=1)
-    whole = np.unique(pairs[:, 0], return_inverse=True)[1].ravel()
-    gram = group_sums(gram, whole)[whole] - gram
-    cross = group_sums(cross, whole)[whole] - cross
-    determinant = gram[:, 0, 0] * gram[:, 1, 1] - gram[:, 0, 1] ** 2
-    sound = determinant > 1e-9 * np.maximum(gram[:, 0, 0], 1.0) ** 2 * max(float(np.var(x)), 1e-300)
-    lines = np.full(cross.shape, np.nan)
-    lines[sound] = np.linalg.solve(gram[sound], cross[sound])
-    lines[:, 0] -= lines[:, 1] * centre
-    return lines, cell
-
-
-def _summary(squares: FloatArray | None, rows: BoolArray) -> dict[str, float]:
+def _summary(errors: tuple[FloatArray, FloatArray] | None, rows: BoolArray) -> dict[str, float]:
     """Observed and predicted SD of one generation, limits and degrees of freedom of the predicted one."""
     nothing = dict.fromkeys(
         ("strain_sd_predicted", "strain_sd_left_out", "strain_expanded", "low", "high", "df", "ratio"), np.nan
     )
-    if squares is None:
+    if errors is None:
         return nothing
-    own = squares[rows]
-    own = own[np.isfinite(own).all(axis=1)]
-    if not len(own):
+    count, squares = (part[rows] for part in errors)
+    known = (count > 0) & np.isfinite(squares).all(axis=1)
+    if not known.any():
         return nothing
-    mean_squares = own.mean(axis=0)
+    mean_squares = squares[known].sum(axis=0) / count[known].sum()
     observed, drawn = float(mean_squares[0]), mean_squares[1:]
     predicted, spread = float(drawn.mean()), float(drawn.var(ddof=1))
     freedom = 2 * predicted**2 / spread if spread > 0 else np.inf
@@ -425,18 +455,16 @@ def _disagreements(table: pd.DataFrame) -> Iterator[Notice]:
         )
 
 
-def _left_out_rows(
-    efforts: tuple[Effort, ...], trials: Trials, inside: BoolArray
-) -> Iterator[dict[str, object]]:
+def _left_out_rows(efforts: tuple[Effort, ...], trials: Trials) -> Iterator[dict[str, object]]:
     """Observed and predicted SD for everything that can be left out."""
-    observed_only = replace(trials, signals=trials.signals[:, : 1 + DRAWN // 4])
+    fewer = trials.drawn_fewer(1 + DRAWN // 4)
     for effort in efforts:
         for by in _LEFT_OUT[effort.line_of]:
             if effort.rezero or not _is_possible(effort, by, trials):
                 continue
-            squares = _squared_errors(effort, by, observed_only)
+            errors = _squared_errors(effort, by, fewer)
             for name in sorted(set(trials.generation)):
-                found = _summary(squares, inside & (trials.generation == name))
+                found = _summary(errors, trials.generation == name)
                 yield {"generation": name, "effort": effort.name, "left_out_by": by, **_only(found)}
 
 

@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 import numpy.typing as npt
 import pandas as pd
-from statsmodels.regression.linear_model import OLS, RegressionResults
-from statsmodels.stats.outliers_influence import OLSInfluence
 
 from campaign.analyses.calibration_lines import BranchLine, line_of_sensor
 from campaign.analyses.used_readings import UsedReadings
@@ -25,26 +25,72 @@ OUTLYING_RISK = 0.05
 """Risk, over all readings of a sensor, of marking one that is not outlying (Bonferroni)."""
 
 
-def ordinary_fits(used: UsedReadings, lines: tuple[BranchLine, ...]) -> tuple[RegressionResults, ...]:
-    """Return the least-squares fit over all readings of each line, x centred so that no digits are lost."""
-    fits = []
-    for line in lines:
-        x = used.x[line.rows]
-        design = np.column_stack([np.ones(len(x)), x - x.mean()])
-        fits.append(OLS(used.signal[line.rows], design).fit())
-    return tuple(fits)
+@dataclass(frozen=True)
+class OrdinaryFit:
+    """A least-squares line over all readings of a sensor, as if all were independent.
+
+    Attributes
+    ----------
+    mean_x, sum_of_squares
+        Mean of x, and Σ(x − mean)².
+    centred
+        Shape (readings,): x less its mean, so that no digits are lost.
+    signal
+        Shape (readings,).
+    level, slope
+        Signal at the mean of x, and per unit of x.
+    """
+
+    mean_x: float
+    sum_of_squares: float
+    centred: FloatArray
+    signal: FloatArray
+    level: float
+    slope: float
+
+    @property
+    def degrees(self) -> int:
+        """Degrees of freedom of the residuals."""
+        return len(self.signal) - 2
+
+    @property
+    def residuals(self) -> FloatArray:
+        """Departures from the line, shape (readings,)."""
+        return np.asarray(self.signal - self.level - self.slope * self.centred)
+
+    @property
+    def variance(self) -> float:
+        """Mean square of the residuals; NaN without degrees of freedom."""
+        return float(np.sum(self.residuals**2)) / self.degrees if self.degrees > 0 else float("nan")
+
+    @property
+    def leverage(self) -> FloatArray:
+        """Share of every reading in its own fitted value, shape (readings,)."""
+        return np.asarray(1.0 / len(self.signal) + self.centred**2 / self.sum_of_squares)
 
 
-def ordinary_lines(
-    used: UsedReadings, lines: tuple[BranchLine, ...], fits: tuple[RegressionResults, ...]
-) -> pd.DataFrame:
+def ordinary_fits(used: UsedReadings, lines: tuple[BranchLine, ...]) -> tuple[OrdinaryFit, ...]:
+    """Return the least-squares fit over all readings of each line."""
+    return tuple(_ordinary_fit(used.x[line.rows], used.signal[line.rows]) for line in lines)
+
+
+def _ordinary_fit(x: FloatArray, signal: FloatArray) -> OrdinaryFit:
+    mean, level = float(x.mean()), float(signal.mean())
+    centred = x - mean
+    squares = float(centred @ centred)
+    return OrdinaryFit(mean, squares, centred, signal, level, float(centred @ (signal - level)) / squares)
+
+
+def ordinary_lines(lines: tuple[BranchLine, ...], fits: tuple[OrdinaryFit, ...]) -> pd.DataFrame:
     """Return least-squares lines over all readings of each sensor and branch, as if all were independent."""
     records = []
     for line, fit in zip(lines, fits, strict=True):
-        back = np.array([[1.0, -float(used.x[line.rows].mean())], [0.0, 1.0]])
-        covariance = fit.cov_params() if fit.df_resid > 0 else np.full((2, 2), np.nan)
-        errors = np.sqrt(np.diag(back @ covariance @ back.T))
-        records.append((*line.key, line.branch, *(back @ fit.params), *errors))
+        slope_variance = fit.variance / fit.sum_of_squares
+        level_variance = fit.variance / len(fit.signal) + fit.mean_x**2 * slope_variance
+        errors = np.sqrt([level_variance, slope_variance])
+        records.append(
+            (*line.key, line.branch, fit.level - fit.slope * fit.mean_x, fit.slope, *errors.tolist())
+        )
     columns = [*SENSOR_KEYS, "branch", "intercept", "slope", "se_intercept", "se_slope"]
     return pd.DataFrame(records, columns=columns)
 
@@ -53,7 +99,7 @@ def influence_of_readings(
     table: pd.DataFrame,
     used: UsedReadings,
     lines: tuple[BranchLine, ...],
-    fits: tuple[RegressionResults, ...],
+    fits: tuple[OrdinaryFit, ...],
 ) -> pd.DataFrame:
     """Return *table* with fitted, residual, studentised, leverage and cooks_distance; NaN where not used.
 
@@ -71,15 +117,16 @@ def influence_of_readings(
     return table.join(influence.reindex(table.index))
 
 
-def _influence(fit: RegressionResults) -> FloatArray:
+def _influence(fit: OrdinaryFit) -> FloatArray:
     """Externally studentised residuals, leverages and Cook's distances, shape (readings, 3)."""
-    degrees = int(fit.df_resid) - 1
-    rounding = (EXACT_SHARE * float(np.max(np.abs(fit.model.endog)))) ** 2
-    if degrees < 1 or fit.mse_resid <= rounding:
-        return np.full((int(fit.nobs), 3), np.nan)
-    influence = OLSInfluence(fit)
-    studentised = externally_studentised(influence.resid_studentized_internal, degrees)
-    return np.column_stack([studentised, influence.hat_matrix_diag, influence.cooks_distance[0]])
+    degrees = fit.degrees - 1
+    rounding = (EXACT_SHARE * float(np.max(np.abs(fit.signal)))) ** 2
+    if degrees < 1 or fit.variance <= rounding:
+        return np.full((len(fit.signal), 3), np.nan)
+    leverage = fit.leverage
+    internal = fit.residuals / np.sqrt(fit.variance * (1.0 - leverage))
+    distance = internal**2 / 2.0 * leverage / (1.0 - leverage)
+    return np.column_stack([externally_studentised(internal, degrees), leverage, distance])
 
 
 def externally_studentised(internal: FloatArray, degrees: int) -> FloatArray:

@@ -9,7 +9,6 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 import pandas as pd
-import statsmodels.api as sm
 from scipy import stats
 
 from campaign.methods.survival import product_limit
@@ -128,6 +127,9 @@ def per_decade(cycles: npt.ArrayLike, change: npt.ArrayLike) -> tuple[float, flo
     Least squares by statsmodels with the covariance of W. K. Newey and K. D. West, Econometrica 55 (1987)
     703–708, which allows for correlated neighbours, and its correction for small samples.
     """
+    from statsmodels.regression.linear_model import OLS  # seconds to load, wanted by few campaigns
+    from statsmodels.tools import add_constant
+
     x, y = np.asarray(cycles, float), np.asarray(change, float)
     used = np.isfinite(y) & (x > 0)
     x, y = np.log10(x[used]), y[used]
@@ -135,7 +137,7 @@ def per_decade(cycles: npt.ArrayLike, change: npt.ArrayLike) -> tuple[float, flo
         return math.nan, math.nan, math.nan
     lags = max(1, int(4 * (len(x) / 100) ** (2 / 9)))
     options = {"maxlags": lags, "use_correction": True}
-    fit = sm.OLS(y, sm.add_constant(x)).fit(cov_type="HAC", cov_kwds=options)
+    fit = OLS(y, add_constant(x)).fit(cov_type="HAC", cov_kwds=options)
     slope, reach = float(fit.params[1]), float(stats.t.ppf(0.975, len(x) - 2) * fit.bse[1])
     return slope, slope - reach, slope + reach
 

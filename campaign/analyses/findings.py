@@ -15,7 +15,6 @@ from typing import TYPE_CHECKING, Literal
 import numpy as np
 import pandas as pd
 from scipy import stats
-from statsmodels.stats.multitest import multipletests
 
 from campaign.analyses.limits import Limits
 from campaign.analyses.scope import Scope, describe_scope
@@ -26,6 +25,7 @@ from campaign.analyses.sensor_figures import (
     principal_run_lines,
     sensor_figures,
 )
+from campaign.methods.holm import holm_adjusted
 from campaign.recordings.description import Description
 from campaign.recordings.recording import ReferenceQuantity
 
@@ -256,7 +256,15 @@ FindingKind = Literal[
 ]
 """What a finding is about; ``site_templates/findings/KIND.html`` has its words."""
 
-_FIRST = {"rehearsal": -1, "curved": 0, "enough": 1, "generations": 2, "accuracy": 3, "pressure": 4, "budget": 5}
+_FIRST = {
+    "rehearsal": -1,
+    "curved": 0,
+    "enough": 1,
+    "generations": 2,
+    "accuracy": 3,
+    "pressure": 4,
+    "budget": 5,
+}
 """What comes first, in this order: what a length is read to, and what pressure adds to it."""
 
 
@@ -615,7 +623,7 @@ def _bend_facts(calibration: Calibration) -> tuple[BendFinding, ...]:
 
 
 def _bend_of(generation: str, rows: pd.DataFrame) -> BendFinding:
-    rejected = multipletests(rows["lack_of_fit_p"].to_numpy(float), alpha=0.05, method="holm")[0]
+    rejected = holm_adjusted(rows["lack_of_fit_p"].to_numpy(float)) <= 0.05
     bent = rows[rejected]
     exponents = rows["stretch_exponent"].dropna().to_numpy(float)
     known = exponents.size > 0

@@ -16,9 +16,9 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 from scipy import stats
-from statsmodels.stats.multitest import multipletests
 
 from campaign.analyses.influence_sensors import SensorKey, SignalSlope, sweep_set
+from campaign.methods.holm import holm_adjusted
 from campaign.methods.identifiability import label_of
 from campaign.methods.influence_model import (
     design_of,
@@ -284,7 +284,7 @@ def _with_tests(frame: pd.DataFrame, rows: pd.DataFrame) -> pd.DataFrame:
     found = {name: test for name, test in unit_tests(rows).items() if math.isfinite(test.p)}
     if not found:
         return frame
-    adjusted = multipletests([test.p for test in found.values()], method="holm")[1]
+    adjusted = holm_adjusted([test.p for test in found.values()])
     for (name, test), p in zip(found.items(), adjusted, strict=True):
         own = (frame["component"] == name) & (frame["what"] == "error")
         frame.loc[own, "test"] = f"F of means, {test.freedom[0]:.0f} and {test.freedom[1]:.0f}"

@@ -9,10 +9,10 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 from scipy import stats
-from statsmodels.stats.multitest import multipletests
 
 from campaign.analyses.variance import Variance
 from campaign.analyses.variance_fit import GenerationFit
+from campaign.methods.holm import holm_adjusted
 from campaign.notices import Notice
 
 if TYPE_CHECKING:
@@ -245,8 +245,7 @@ def _effect_tests(effects: pd.DataFrame) -> pd.DataFrame:
             test = stats.shapiro(part["observed"].to_numpy(float))
             found.append((name, "strain at mid", len(part), float(test.statistic), float(test.pvalue)))
     frame = pd.DataFrame(found, columns=columns[:-1])
-    adjusted = multipletests(frame["p"].to_numpy(float), method="holm")[1] if len(frame) else []
-    return frame.assign(p_adjusted=np.asarray(adjusted, dtype=float))
+    return frame.assign(p_adjusted=holm_adjusted(frame["p"].to_numpy(float)))
 
 
 def _notices(tests: pd.DataFrame) -> tuple[Notice, ...]:

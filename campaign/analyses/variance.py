@@ -176,14 +176,10 @@ def variance_of_readings(
     description
         The rated range.
     """
-    used = readings[readings["used"].astype(bool)]
-    used = used[np.isfinite(used["x"].to_numpy(float)) & np.isfinite(used["signal"].to_numpy(float))]
     notices: list[Notice] = []
-    if used.empty:
-        return _nothing(reference, [_notice("no-readings", "no staircase reading is used", _WITHHELD)])
-    used = _with_common_levels(used, notices)
-    settling = _find_all_settling(used)
-    kept = _settled_runs(used, settling, notices)
+    kept, settling = _fitted_readings(readings, notices)
+    if kept.empty:
+        return _nothing(reference, notices)
     places = choose_places(
         kept["x"].to_numpy(float), _rated(description, reference), has_zero=_has_zero(reference)
     )
@@ -232,6 +228,29 @@ _COMPARED = "signal, for comparison"
 """A fit whose limits are wanted at mid range only."""
 
 _WITHHELD = "components of spread are not estimated"
+
+
+def _fitted_readings(
+    readings: pd.DataFrame, notices: list[Notice]
+) -> tuple[pd.DataFrame, dict[str, Settling]]:
+    """Return the rows that are fitted, and from which run on each generation's runs are alike."""
+    used = readings[readings["used"].astype(bool)]
+    used = used[np.isfinite(used["x"].to_numpy(float)) & np.isfinite(used["signal"].to_numpy(float))]
+    if used.empty:
+        notices.append(_notice("no-readings", "no staircase reading is used", _WITHHELD))
+        return used, {}
+    used = _with_common_levels(used, notices)
+    settling = _find_all_settling(used)
+    return _settled_runs(used, settling, notices), settling
+
+
+def signal_models(readings: pd.DataFrame) -> tuple[VarianceModel, ...]:
+    """Return the models of the signal that readings lead to: one a generation, then the pooled one.
+
+    They hold design and response and are not fitted yet. A table read back from ``readings.csv`` will do.
+    """
+    kept, _ = _fitted_readings(readings, [])
+    return tuple(_build_all(kept, kept["signal"].to_numpy(float)))
 
 
 def _gather(

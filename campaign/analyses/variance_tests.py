@@ -9,7 +9,6 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 from scipy import stats
-from statsmodels.stats.multitest import multipletests
 
 from campaign.analyses.run_settling import Settling
 from campaign.analyses.variance_fit import GenerationFit
@@ -21,6 +20,7 @@ from campaign.methods.component_tests import (
     compare_positions,
     tabulate_runs,
 )
+from campaign.methods.holm import holm_adjusted
 from campaign.methods.nested_model import NestedModel, fit_nested_model
 from campaign.methods.nested_simulation import simulate_deviations
 
@@ -74,7 +74,7 @@ def _of_generation(fit: GenerationFit, settling: Settling | None, seed: int) -> 
     frame = pd.DataFrame(rows)
     if frame.empty:
         return frame
-    adjusted = multipletests(frame["p"].to_numpy(float), method="holm")[1]
+    adjusted = holm_adjusted(frame["p"].to_numpy(float))
     return frame.assign(generation=fit.generation, p_adjusted=adjusted)
 
 

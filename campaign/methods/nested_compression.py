@@ -22,7 +22,7 @@ from campaign.methods.nested_design import (
     ScaledColumns,
     scale_columns,
 )
-from campaign.methods.nested_transfer import Block, Step, Transfer, hand_over
+from campaign.methods.nested_transfer import Block, Step, Transfer, hand_over, seated
 
 
 @dataclass(frozen=True)
@@ -86,6 +86,17 @@ class Compression:
     def handed(self) -> FloatArray:
         """Cross-products of the innermost units as they are, added up in the slots of their parents."""
         return hand_over(self.steps[0], self.products, 1)
+
+    @cached_property
+    def seated(self) -> FloatArray:
+        """Random columns of the innermost units in the seats of their parents, (1, D, parents, seats, m')."""
+        return self.seated_of(self.products)
+
+    def seated_of(self, products: FloatArray) -> FloatArray:
+        """Return the same of other products (m, m, R · units): (R, D, parents, seats, m')."""
+        step = self.steps[0]
+        replicates = products.shape[2] // step.units
+        return seated(step, products[:, step.random], replicates)
 
     @cached_property
     def total(self) -> float:

@@ -22,7 +22,7 @@ import numpy as np
 from campaign.methods.batched_algebra import inverse_cholesky, product, product_transposed, transposed_product
 from campaign.methods.nested_compression import Compression
 from campaign.methods.nested_design import BoolArray, FloatArray
-from campaign.methods.nested_transfer import Step, hand_over, seated, take_back
+from campaign.methods.nested_transfer import Step, hand_over, in_seats, take_back
 
 Factors = list[FloatArray]
 """For each random effect its relative factor θ (d, d, R), R replicates of the whole model."""
@@ -45,7 +45,7 @@ class Elimination:
     half
         T (D, D, B): T T' = F (I + F'CF)⁻¹ F'.
     scaled
-        Y (m, D, B).
+        Y (m, D, B); at a thin level its columns in the seats of their parents, (R, D, parents, seats, m').
     """
 
     before: FloatArray
@@ -141,7 +141,7 @@ def eliminate(
             whole = compression.handed if products is compression.products else handed
             if whole is None:
                 whole = hand_over(step, products, products.shape[2] // step.units)
-            level, logs, current = _eliminate_thin(step, products, whole, factors, replicates)
+            level, logs, current = _eliminate_thin(compression, products, whole, factors, replicates)
         else:
             if depth == 0 and current.shape[2] != replicates * step.units:
                 current = np.tile(current, (1, 1, replicates))
@@ -172,16 +172,41 @@ def _formed(level: Elimination) -> FloatArray:
 
 
 def _eliminate_thin(
-    step: Step, products: FloatArray, whole: FloatArray, factors: Factors, replicates: int
+    compression: Compression, products: FloatArray, whole: FloatArray, factors: Factors, replicates: int
 ) -> tuple[Elimination, FloatArray, FloatArray]:
-    """Eliminate the innermost level and hand it over as whole − Y Y', Y in the parents' slots."""
-    columns = _repeated(products[:, step.random], step.units, replicates)
-    half, logs = _half(step, columns[step.random], factors, replicates)
-    scaled = product(columns, half)
-    side_by_side = seated(step, scaled, replicates)
-    lost = product_transposed(side_by_side, side_by_side)
-    current = _repeated(whole, step.parent_units, replicates) - lost
-    return Elimination(products, None, half, scaled), logs, current
+    """Eliminate the innermost level and hand it over as whole − Y Y', Y in the parents' slots.
+
+    Only the half T changes from evaluation to evaluation: Y is a sum of the units' columns, seated once.
+    """
+    step = compression.steps[0]
+    half, logs = _half(step, _thin_corner(step, products, replicates), factors, replicates)
+    scaled = _mixed(_thin_columns(compression, products), in_seats(step, half, replicates))
+    lost = sum(np.matmul(part.transpose(0, 1, 3, 2), part) for part in scaled.swapaxes(0, 1))
+    current = _repeated(whole, step.parent_units, replicates) - np.moveaxis(
+        np.reshape(lost, (-1, step.parent_slots, step.parent_slots)), 0, 2
+    )
+    return Elimination(products, None, half, scaled), logs, np.ascontiguousarray(current)
+
+
+def _thin_corner(step: Step, products: FloatArray, replicates: int) -> FloatArray:
+    """Cross-products of the random slots of every unit, (D, D, R · units)."""
+    return _repeated(products[np.ix_(step.random, step.random)], step.units, replicates)
+
+
+def _thin_columns(compression: Compression, products: FloatArray) -> FloatArray:
+    """Random columns of every unit in the seats of its parent, (1 or R, D, parents, seats, m')."""
+    return compression.seated if products is compression.products else compression.seated_of(products)
+
+
+def _mixed(columns: FloatArray, weights: FloatArray) -> FloatArray:
+    """Σⱼ columnsⱼ weightsⱼₖ for every k, as `columns`; weights (R, D, D, parents, seats, 1)."""
+    size = columns.shape[1]
+    out = np.empty((len(weights), size, *columns.shape[2:]))
+    for k in range(size):
+        np.multiply(columns[:, 0], weights[:, 0, k], out=out[:, k])
+        for j in range(1, size):
+            out[:, k] += columns[:, j] * weights[:, j, k]
+    return out
 
 
 def _repeated(stack: FloatArray, units: int, replicates: int) -> FloatArray:
@@ -298,7 +323,7 @@ def gradient_of(
     for depth in reversed(range(len(compression.steps))):
         step, level = compression.steps[depth], eliminated.levels[depth]
         if level.after is None:
-            _add_thin_cones(step, level, adjoint, out, replicates)
+            _add_thin_cones(compression, level, adjoint, out, replicates)
             break
         adjoint = take_back(step, adjoint, len(level.after), replicates)
         columns = level.after[:, step.random]
@@ -312,16 +337,21 @@ def gradient_of(
 
 
 def _add_thin_cones(
-    step: Step, level: Elimination, adjoint: FloatArray, out: Gradient, replicates: int
+    compression: Compression, level: Elimination, adjoint: FloatArray, out: Gradient, replicates: int
 ) -> None:
     """The cones of the innermost level where its units are kept thin; `adjoint` is that of their parents."""
-    columns = _repeated(level.before[:, step.random], step.units, replicates)
-    after = columns - product_transposed(level.scaled, level.scaled[step.random])
-    side_by_side = seated(step, after, replicates)
-    pulled = product(adjoint, side_by_side)
-    shape = (step.parent_slots, len(step.random), step.seats, replicates * step.parent_units)
-    lost = np.einsum("iacn,ibcn->abn", side_by_side.reshape(shape), pulled.reshape(shape))
-    _add_cones(step, after[step.random], lost, out, replicates)
+    step = compression.steps[0]
+    corner = _thin_corner(step, level.before, replicates)
+    own = product(corner, level.half)
+    after = _thin_columns(compression, level.before) - _mixed(
+        level.scaled, in_seats(step, own.transpose(1, 0, 2), replicates)
+    )
+    slots, size = step.parent_slots, len(step.random)
+    shape = (replicates, 1, step.parent_units, slots, slots)
+    pulled = np.matmul(after, np.moveaxis(adjoint, 2, 0).reshape(shape))
+    flat = (replicates, size, -1)
+    lost = np.matmul(after.reshape(flat), pulled.reshape(flat).transpose(0, 2, 1)).transpose(1, 2, 0)
+    _add_cones(step, corner - product_transposed(own, own), lost, out, replicates)
 
 
 def _add_cones(step: Step, determinant: FloatArray, lost: FloatArray, out: Gradient, replicates: int) -> None:

@@ -8,7 +8,7 @@ import numpy as np
 
 from campaign.methods.nested_criterion import eliminate, value_of
 from campaign.methods.nested_design import FloatArray
-from campaign.methods.nested_fit import NestedModelFit
+from campaign.methods.nested_fit import NestedModelFit, covariances_of
 from campaign.methods.nested_parameters import evaluate
 
 
@@ -74,6 +74,74 @@ def satterthwaite_each(
     return found
 
 
+def component_covariance(fit: NestedModelFit) -> tuple[tuple[str, ...], FloatArray, FloatArray]:
+    """Estimates of all covariances of random effects and of σ², with their large-sample covariance.
+
+    Parameters
+    ----------
+    fit
+        The fitted model.
+
+    Returns
+    -------
+    tuple
+        Names (n,), such as 'sensor: covariance of columns 1 and 2'; estimates (n,) in the user's columns; and
+        their covariance (n, n).
+
+    Notes
+    -----
+    All are σ² times functions of θ; the covariance is that of :func:`satterthwaite`, element by element: 2
+    vv'/(N − p) for σ² and 2 J H⁻¹ J' along the profile. A column of θ that is estimated as zero is kept
+    there, so that nothing is said of its uncertainty: use the profile intervals.
+    """
+    free = [n for n in range(len(fit.vector)) if not _in_zero_column(fit, n)]
+    places, widths = _star(fit, free)
+    value = value_of(
+        fit.compression,
+        eliminate(fit.compression, fit.compression.products, fit.layout.factors(places)),
+        restricted=fit.restricted,
+    )
+    degrees = fit.compression.rows - (fit.compression.fixed if fit.restricted else 0)
+    elements = np.column_stack(
+        [
+            _component_elements(
+                covariances_of(fit.compression, place, float(square) / degrees), square / degrees
+            )
+            for place, square in zip(places.T, value.residual_square, strict=True)
+        ]
+    )
+    covariance = 2.0 / degrees * np.outer(elements[:, 0], elements[:, 0])
+    if free:
+        slopes = (elements[:, 1::2] - elements[:, 2::2]) / (2.0 * widths)
+        covariance += 2.0 * slopes @ _inverse(_curvature(fit, places, widths, free)) @ slopes.T
+    return _component_names(fit), elements[:, 0], covariance
+
+
+def _component_elements(covariances: Sequence[FloatArray], residual: float) -> FloatArray:
+    return np.array([*(c[i, k] for c in covariances for i in range(len(c)) for k in range(i + 1)), residual])
+
+
+def _component_names(fit: NestedModelFit) -> tuple[str, ...]:
+    names = [
+        f"{term.name}: variance of column {i + 1}"
+        if i == k
+        else f"{term.name}: covariance of columns {k + 1} and {i + 1}"
+        for term in fit.model.terms
+        for i in range(term.columns.shape[1])
+        for k in range(i + 1)
+    ]
+    return (*names, "residual: variance")
+
+
+def _inverse(hessian: FloatArray) -> FloatArray:
+    """Inverse over the directions in which the criterion is curved."""
+    size = np.sqrt(np.maximum(np.diag(hessian), 1e-12 * np.abs(hessian).max()))
+    values, vectors = np.linalg.eigh(hessian / np.outer(size, size))
+    kept = values > 1e-8 * values.max()
+    scaled = vectors[:, kept] / size[:, None]
+    return np.asarray(scaled / values[kept] @ scaled.T)
+
+
 def _curvature(fit: NestedModelFit, places: FloatArray, widths: FloatArray, free: list[int]) -> FloatArray:
     """Second derivatives of the profiled criterion from gradients on the star, (free, free)."""
     _, gradients, _ = evaluate(fit.compression, fit.layout, places[:, 1:], restricted=fit.restricted)
@@ -137,8 +205,4 @@ def _variances(
 
 def _quadratic(hessian: FloatArray, slope: FloatArray) -> float:
     """Quadratic form slope' hessian⁻¹ slope over the directions in which the criterion is curved."""
-    size = np.sqrt(np.maximum(np.diag(hessian), 1e-12 * np.abs(hessian).max()))
-    values, vectors = np.linalg.eigh(hessian / np.outer(size, size))
-    kept = values > 1e-8 * values.max()
-    along = vectors[:, kept].T @ (slope / size)
-    return float((along**2 / values[kept]).sum())
+    return float(slope @ _inverse(hessian) @ slope)

@@ -232,7 +232,7 @@ def seated(step: Step, columns: FloatArray, replicates: int) -> FloatArray:
     Returns
     -------
     FloatArray
-        (m', d · seats, R · parents); the seats of a parent that has fewer units are zero.
+        (R, d, parents, seats, m'); the seats of a parent that has fewer units are zero.
     """
     d = columns.shape[1]
     split = columns.reshape(len(columns), d, replicates, step.units)
@@ -246,4 +246,12 @@ def seated(step: Step, columns: FloatArray, replicates: int) -> FloatArray:
         placed[..., step.seat if transfer.children is None else step.seat[transfer.children]] = given
         out[transfer.target] += placed
     parted = out.reshape(step.parent_slots, d, replicates, step.parent_units, step.seats)
-    return parted.transpose(0, 1, 4, 2, 3).reshape(step.parent_slots, d * step.seats, -1)
+    return np.ascontiguousarray(parted.transpose(2, 1, 3, 4, 0))
+
+
+def in_seats(step: Step, weights: FloatArray, replicates: int) -> FloatArray:
+    """Weights (j, k, R · units) of units in their seats, (R, j, k, parents, seats, 1); zero in empty ones."""
+    split = weights.reshape(*weights.shape[:2], replicates, step.units)
+    out = np.zeros((replicates, *weights.shape[:2], step.parent_units * step.seats))
+    out[..., step.seat] = split.transpose(2, 0, 1, 3)
+    return out.reshape(*out.shape[:3], step.parent_units, step.seats, 1)

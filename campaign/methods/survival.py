@@ -7,7 +7,6 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 from scipy import stats
-from statsmodels.duration.survfunc import SurvfuncRight
 
 FloatArray = npt.NDArray[np.float64]
 BoolArray = npt.NDArray[np.bool_]
@@ -55,6 +54,8 @@ def product_limit(time: FloatArray, failed: BoolArray) -> Survival:
     if not failed.any():
         low = 0.025 ** (1.0 / len(time))
         return Survival(*(np.array([v]) for v in (end, float(len(time)), 0.0, 1.0, low, 1.0)))
+    from statsmodels.duration.survfunc import SurvfuncRight  # seconds to load, wanted by few campaigns
+
     found = SurvfuncRight(time, failed.astype(int))
     share, error = np.asarray(found.surv_prob, float), np.asarray(found.surv_prob_se, float)
     low, high = _limits(share, error)

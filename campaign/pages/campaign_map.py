@@ -32,15 +32,19 @@ PRESSURE_KEY = "strain_error_per_kpa"
 """Key of the error by pressure on the map."""
 
 
-def campaign_map(results: CampaignResults, chosen: str = FIRST_SHOWN) -> SkinMap:
-    """Return the skin map of all sensors that a register or a trial names, coloured by *chosen* at first."""
+def campaign_map(results: CampaignResults, chosen: str = FIRST_SHOWN, *, alone: bool = False) -> SkinMap:
+    """Return the skin map of all sensors that a register or a trial names, coloured by *chosen* at first.
+
+    Where *chosen* stands *alone* no other figure can be picked.
+    """
     figures = [
         *_line_figures(results),
         *_loop_figure(results),
         *_pressure_figure(results),
         *_verdict_figures(results),
     ]
-    return skin_map(map_sensors(results), figures, chosen=chosen)
+    offered = [figure for figure in figures if figure.key == chosen or not alone]
+    return skin_map(map_sensors(results), offered, chosen=chosen)
 
 
 def map_sensors(results: CampaignResults) -> list[MapSensor]:

@@ -2,6 +2,10 @@
 
 from __future__ import annotations
 
+import re
+
+from markupsafe import Markup
+
 from campaign.pages.tables import Table
 
 DEFINITIONS: dict[str, tuple[str, str]] = {
@@ -72,3 +76,9 @@ def definitions_of(table: Table) -> list[tuple[str, str]]:
         for words, (anchor, keys) in DEFINITIONS.items()
         if not shown.isdisjoint(keys.split())
     ]
+
+
+def defined_in(section: str) -> list[tuple[str, Markup]]:
+    """Return what a section of the Method page defines, in order, as (anchor, name)."""
+    found = re.findall(r'<h3><a href="#([^"]+)">(.*?)</a></h3>', section, flags=re.DOTALL)
+    return [(anchor, Markup(name)) for anchor, name in found]

@@ -72,7 +72,7 @@ def hysteresis_page(results: CampaignResults) -> Page | None:
     found, endurance = results.hysteresis, results.endurance
     if found is None and endurance is None:
         return None
-    mapped = campaign_map(results, chosen=LOOP_KEY) if found is not None else None
+    mapped = campaign_map(results, chosen=LOOP_KEY, alone=True) if found is not None else None
     figures = [*(_figures(found) if found is not None else ()), *endurance_figures(endurance)]
     tables = [*(_tables(found) if found is not None else ()), *endurance_tables(endurance)]
     return Page(

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from dataclasses import dataclass
 from importlib.metadata import PackageNotFoundError, version
 from pathlib import Path
 
@@ -35,16 +36,41 @@ COVERAGE_COLUMNS = (
 """The table of coverage as shown; brackets are the 95 % limits of the share that was counted."""
 
 
-def method_page(results: CampaignResults) -> Page:
-    """Return page 13; it is part of every site."""
+@dataclass(frozen=True)
+class Section:
+    """A part of the Method page with a page of its own: its anchor, its title, its templates."""
+
+    anchor: str
+    title: str
+    templates: tuple[str, ...]
+
+    @property
+    def slug(self) -> str:
+        """Name of its page."""
+        return f"method-{self.anchor}"
+
+
+SECTIONS = (
+    Section("words", "Words", ("words",)),
+    Section("readings", "From recordings to readings", ("readings",)),
+    Section("lines", "One sensor’s line", ("line", "stretch")),
+    Section("spread", "Where the spread comes from", ("spread", "coverage")),
+    Section("judging", "Residuals, effort, limits, uncertainty in use, numbers", ("judging", "budget")),
+    Section("loops-and-endurance", "Loops and endurance", ("loops",)),
+    Section("holds-and-drift", "Holds, drift, noise at rest", ("holds",)),
+    Section("pressure-and-influences", "Pressure and other influences", ("influences",)),
+    Section("generations-and-plans", "Generations and the next campaign", ("comparison",)),
+    Section("paper", "Text ready for a paper", ("paper",)),
+    Section("sources", "Sources", ("sources",)),
+)
+"""The sections of the Method page in order; every template of ``site_templates/method`` is in one of them."""
+
+
+def method_pages(results: CampaignResults) -> list[Page]:
+    """Return page 13, which lists every definition, and a page for each of its sections."""
     scope = results.findings.scope
-    coverage = coverage_table(templates_folder() / "method" / "coverage.csv")
-    return Page(
-        slug="method",
-        number=13,
-        title="Method",
-        template="method.html",
-        context={
+    return pages_of_sections(
+        {
             "formulas": rendered_formulas(),
             "versions": versions(),
             "scope": scope,
@@ -53,9 +79,43 @@ def method_page(results: CampaignResults) -> Page:
             "kinds": measured_kinds(results),
             **measured_ranges(scope),
         },
-        tables=(coverage,) if coverage is not None else (),
+        coverage_table(templates_folder() / "method" / "coverage.csv"),
+    )
+
+
+def pages_of_sections(context: Mapping[str, object], coverage: Table | None) -> list[Page]:
+    """Return page 13 and the pages of its sections, told with the values of *context*."""
+    tables = (coverage,) if coverage is not None else ()
+    whole = Page(
+        slug="method",
+        number=13,
+        title="Method",
+        template="method.html",
+        context={**context, "sections": SECTIONS},
+        tables=tables,
         description="Every definition, model and formula of this site, with its source.",
     )
+    links = [(section.title, f"{section.slug}.html") for section in SECTIONS]
+    neighbours = [None, *links, None]
+    return [
+        whole,
+        *(
+            Page(
+                slug=section.slug,
+                number=None,
+                title=section.title,
+                template="method_section.html",
+                context={**context, "section": section, "index": index},
+                tables=tables if "coverage" in section.templates else (),
+                description=f"Definitions and sources: {section.title}.",
+                above=((whole.title, whole.file),),
+                previous=neighbours[index - 1],
+                following=neighbours[index + 1],
+                part_of=whole.file,
+            )
+            for index, section in enumerate(SECTIONS, 1)
+        ),
+    ]
 
 
 def versions() -> Mapping[str, str]:

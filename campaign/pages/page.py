@@ -38,6 +38,8 @@ class Page:
         Links of the way up, outermost first, as (text, address); pages of modules and sensors have them.
     previous, following
         Neighbours as (text, address), or ``None``.
+    part_of
+        File of the page that this one holds a part of: links to anchors there are led here.
     """
 
     slug: str
@@ -52,6 +54,7 @@ class Page:
     above: tuple[tuple[str, str], ...] = ()
     previous: tuple[str, str] | None = None
     following: tuple[str, str] | None = None
+    part_of: str = ""
 
     @property
     def file(self) -> str:

@@ -2,8 +2,7 @@
 
 from __future__ import annotations
 
-import re
-from collections.abc import Iterable, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass, fields
 
 import pandas as pd
@@ -11,23 +10,14 @@ import pandas as pd
 from campaign.analyses.results import CampaignResults
 from campaign.pages import slugs
 from campaign.pages.calculator import record_href
+from campaign.pages.citation import citation
 from campaign.pages.generations import earlier_files_table
-from campaign.pages.page import INVENTED, REHEARSED, Page
+from campaign.pages.page import Page
 from campaign.pages.tables import Column, Table
-from campaign.recordings.description import Description
 
 CAMPAIGN_CHECKSUMS = "provenance/campaign_files.sha256"
 SITE_CHECKSUMS = "provenance/site_files.sha256"
 SHOWN_FILES = 60
-
-
-@dataclass(frozen=True)
-class Citation:
-    """What is needed to cite the campaign: a sentence, the same for BibTeX, and what was not given."""
-
-    sentence: str
-    bibtex: str
-    missing: tuple[str, ...]
 
 
 @dataclass(frozen=True)
@@ -54,7 +44,7 @@ def provenance_page(results: CampaignResults, tables: Sequence[Table]) -> Page:
         context={
             "description": results.description,
             "earlier": results.earlier,
-            "citation": citation(results.description),
+            "citation": citation(results.description, results.findings.scope.last_day),
             "downloads": [_download(written[name]) for name in sorted(written)],
             "hashed_files": int((results.intake.recordings["sha256"].astype(str) != "").sum()),
             "campaign_checksums": CAMPAIGN_CHECKSUMS,
@@ -109,45 +99,6 @@ def records_table(results: CampaignResults) -> Table | None:
         ),
         shown_rows=SHOWN_FILES,
     )
-
-
-def citation(description: Description) -> Citation:
-    """Return how to cite the campaign from what its description says; no date is ever taken from a clock."""
-    day = description.date or description.last_day or description.first_day
-    year = day[:4] if re.match(r"\d{4}", day) else ""
-    names = [author.name for author in description.authors if author.name]
-    who = "; ".join(names) or "Authors not given"
-    invented = f" {_origin(description).capitalize()}." if description.simulated else ""
-    licence = f" Licence: {description.licence}." if description.licence else ""
-    sentence = (
-        f"{who} ({year or 'no date given'}). {description.title} [recordings and report].{invented}{licence}"
-    )
-    lacking = {"authors": names, "date": year, "licence": description.licence}
-    return Citation(
-        sentence,
-        _bibtex(description, names, year),
-        tuple(word for word, given in lacking.items() if not given),
-    )
-
-
-def _origin(description: Description) -> str:
-    return REHEARSED if description.rehearsal else INVENTED
-
-
-def _bibtex(description: Description, names: Iterable[str], year: str) -> str:
-    given = {
-        "author": " and ".join(names),
-        "title": description.title,
-        "year": year,
-        "note": "Recordings and report" + (f", {_origin(description)}" if description.simulated else ""),
-    }
-    lines = [f"  {key} = {{{_braced(value)}}}," for key, value in given.items() if value]
-    return "\n".join([f"@misc{{campaign{year},", *lines, "}"])
-
-
-def _braced(text: str) -> str:
-    """Return *text* for BibTeX: characters with a meaning of their own are set apart."""
-    return re.sub(r"([#$%&_{}])", r"\\\1", text.replace("\\", "/"))
 
 
 def _download(table: Table) -> Download:

@@ -9,21 +9,21 @@ from __future__ import annotations
 import re
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
+from functools import partial
 from pathlib import Path
 from typing import Any
 
-import orjson
 import pandas as pd
 from jinja2 import Environment, FileSystemLoader, StrictUndefined
 from markupsafe import Markup
 
 from campaign.pages import numbers, slugs
 from campaign.pages.assets import asset_files
-from campaign.pages.definitions import definitions_of
+from campaign.pages.definitions import defined_in, definitions_of
 from campaign.pages.drawing import marked, ready
-from campaign.pages.figures import Figure, Layout, Trace
-from campaign.pages.house_style import NOTE_DEFAULTS
+from campaign.pages.figures import Figure
 from campaign.pages.page import REHEARSED, Page, SiteFrame
+from campaign.pages.page_data import data_script, folded_row
 from campaign.pages.static_figure import static_svg
 from campaign.pages.tables import (
     Cell,
@@ -35,6 +35,9 @@ from campaign.pages.tables import (
     shown_marks,
 )
 from campaign.recordings.recording import STRAIN, ReferenceQuantity
+
+ROWS_NOT_WORTH_A_BUTTON = 2
+"""So many rows more than a table has in its page stand there as well, rather than in the page's script."""
 
 
 @dataclass(frozen=True)
@@ -50,12 +53,13 @@ class PlacedFigure:
 
 @dataclass(frozen=True)
 class PlacedTable:
-    """A table with its number on its page, and the rows that the page shows."""
+    """A table with its number on its page, the rows that stand in it, and those that its script adds."""
 
     table: Table
     number: str
     anchor: str
     rows: list[tuple[tuple[str, str], list[Cell]]]
+    further: list[tuple[tuple[str, str], list[Cell]]]
     csv: str
 
 
@@ -82,6 +86,7 @@ def environment(further: Sequence[Path] = ()) -> Environment:
     made.globals.update({name: getattr(numbers, name) for name in _NUMBER_FUNCTIONS})
     made.globals.update({name: getattr(slugs, name) for name in _LINK_FUNCTIONS})
     made.globals["definitions_of"] = definitions_of
+    made.filters["defined"] = defined_in
     return made
 
 
@@ -141,13 +146,21 @@ def render_site(
     if frame.rehearsal:
         pages = [_as_rehearsal(page) for page in pages]
     written |= table_files([*tables, *(t for page in pages for t in page.tables)], reference, frame.origin)
+    html = {}
     for page in pages:
         figures = {f.name: ready(f) for f in page.figures}
-        written[page.file] = _page_html(jinja, frame, page, pages, figures).encode("utf-8")
-        written[f"data/{page.slug}.js"] = data_script(page, figures)
+        tables_placed = {t.name: _placed_table(page, i, t) for i, t in enumerate(page.tables, 1)}
+        html[page.file] = _page_html(jinja, frame, page, pages, figures, tables_placed)
+        further = {
+            name: [folded_row(*row) for row in placed.further]
+            for name, placed in tables_placed.items()
+            if placed.further
+        }
+        written[f"data/{page.slug}.js"] = data_script(page, figures, further)
         for figure in page.figures:
             if figure.data is not None:
                 written[_figure_csv(page, figure)] = csv_bytes(in_reference(figure.data, reference))
+    written |= {name: text.encode("utf-8") for name, text in with_places_of_anchors(html, pages).items()}
     written |= asset_files(templates_folder(), plot_library)
     return dict(sorted(written.items()))
 
@@ -160,6 +173,27 @@ def _as_rehearsal(page: Page) -> Page:
         figures=tuple(replace(marked(f, REHEARSED), caption=f"{f.caption} {words}") for f in page.figures),
         tables=tuple(replace(table, caption=f"{table.caption} {words}") for table in page.tables),
     )
+
+
+def with_places_of_anchors(html: Mapping[str, str], pages: Sequence[Page]) -> dict[str, str]:
+    """Return the pages with links to anchors of a page that is told in parts leading to the right part.
+
+    A page that holds a part of another (:attr:`campaign.pages.page.Page.part_of`) holds that part's anchors:
+    ``method.html#line`` becomes ``method-lines.html#line``.
+    """
+    parts = {page.file: page.part_of for page in pages if page.part_of}
+    own = {file: set(re.findall(r'\sid="([^"]+)"', html[file])) for file in parts}
+    places = {f"{parts[file]}#{anchor}": f"{file}#{anchor}" for file in parts for anchor in own[file]}
+    if not places:
+        return dict(html)
+    link = re.compile(r'(?<= href=")([\w.-]*)#([^"]+)(?=")')
+
+    def led(name: str, found: re.Match[str]) -> str:
+        if not found[1] and found[2] in own.get(name, found[2]):
+            return found[0]
+        return places.get(f"{found[1] or parts.get(name, name)}#{found[2]}", found[0])
+
+    return {name: link.sub(partial(led, name), text) for name, text in html.items()}
 
 
 def table_files(
@@ -181,45 +215,13 @@ def table_files(
     return made | {"tables/schema.json": schema_bytes(frames, origin)}
 
 
-def data_script(page: Page, figures: Mapping[str, Figure]) -> bytes:
-    """Return ``data/SLUG.js``: a classic script that hands the page's figures and values on."""
-    texts: dict[str, int] = {}
-    drawn = {
-        name: {
-            "traces": [_with_numbered_texts(trace, texts) for trace in figure.traces],
-            "layout": {**figure.layout, "annotations": [_without_defaults(a) for a in _notes(figure)]},
-            "height": figure.height,
-        }
-        for name, figure in figures.items()
-    }
-    content = orjson.dumps(
-        {"slug": page.slug, "figures": drawn, "texts": list(texts), "values": dict(page.data)},
-        option=orjson.OPT_SERIALIZE_NUMPY | orjson.OPT_SORT_KEYS,
-    )
-    return b"window.campaignPage = " + content + b";\n"
-
-
-def _with_numbered_texts(trace: Trace, texts: dict[str, int]) -> Trace:
-    """Return a trace whose sentences and links are numbers in *texts*, which holds each of them once."""
-    numbered = {
-        key: [texts.setdefault(text, len(texts)) for text in trace[key]]
-        for key in ("hovertext", "customdata")
-        if isinstance(trace.get(key), list)
-    }
-    return {**trace, **numbered}
-
-
-def _notes(figure: Figure) -> list[Layout]:
-    return list(figure.layout.get("annotations", ()))
-
-
-def _without_defaults(note: Layout) -> Layout:
-    """Return a label without what the house template says of every label."""
-    return {key: value for key, value in note.items() if NOTE_DEFAULTS.get(key) != value}
-
-
 def _page_html(
-    jinja: Environment, frame: SiteFrame, page: Page, pages: Sequence[Page], figures: Mapping[str, Figure]
+    jinja: Environment,
+    frame: SiteFrame,
+    page: Page,
+    pages: Sequence[Page],
+    figures: Mapping[str, Figure],
+    tables: Mapping[str, PlacedTable],
 ) -> str:
     strip = sorted((p for p in pages if p.number is not None), key=lambda p: (p.number or 0, p.slug))
     context: dict[str, Any] = dict(page.context)
@@ -228,7 +230,7 @@ def _page_html(
         "site": frame,
         "strip": strip,
         "figures": {f.name: _placed_figure(page, i, figures[f.name]) for i, f in enumerate(page.figures, 1)},
-        "tables": {t.name: _placed_table(page, i, t) for i, t in enumerate(page.tables, 1)},
+        "tables": tables,
     }
     return _without_indents(jinja.get_template(page.template).render(context))
 
@@ -252,7 +254,9 @@ def _placed_figure(page: Page, index: int, figure: Figure) -> PlacedFigure:
 
 def _placed_table(page: Page, index: int, table: Table) -> PlacedTable:
     rows = list(zip(shown_marks(table), shown_cells(table), strict=True))
-    return PlacedTable(table, _numbered(page, index), f"table-{table.name}", rows, table.file)
+    first = len(rows) if len(rows) <= table.rows_in_page + ROWS_NOT_WORTH_A_BUTTON else table.rows_in_page
+    anchor = f"table-{table.name}"
+    return PlacedTable(table, _numbered(page, index), anchor, rows[:first], rows[first:], table.file)
 
 
 def _numbered(page: Page, index: int) -> str:

@@ -17,12 +17,11 @@ from campaign.pages import numbers, slugs
 from campaign.pages.budget import sensor_budget
 from campaign.pages.calculator import calculator_data, record_href
 from campaign.pages.drift import sensor_holds
-from campaign.pages.figures import Figure
 from campaign.pages.influence_sections import sensor_influences
 from campaign.pages.loop_sections import sensor_loops
 from campaign.pages.page import Page
 from campaign.pages.sensor_parts import SensorParts, gather_sensors
-from campaign.pages.sensor_plots import half_widths, sensor_figures_of, trial_plot
+from campaign.pages.sensor_plots import half_widths, moved_from_line, sensor_figures_of
 from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import ReferenceQuantity
@@ -48,8 +47,6 @@ MERIT_ANCHORS: Mapping[str, str] = {
 }
 """Where the Method page defines each."""
 
-_MOST_TRIAL_PLOTS = 24
-
 
 @dataclass(frozen=True)
 class TrialSection:
@@ -65,8 +62,8 @@ class TrialSection:
         As in the table of trials; empty where not recorded.
     runs
         One mapping a run of the trial: repetition, readings, line, zero return (NaN where unknown).
-    figure
-        Name of its little plot; empty where it has none.
+    moved
+        How far its readings lie from the sensor's line on average, in words; empty where there is no line.
     shared_with
         Other sensors of the module that the same run carried.
     """
@@ -79,7 +76,7 @@ class TrialSection:
     repetition: str
     fate: str
     runs: tuple[dict[Hashable, Any], ...]
-    figure: str
+    moved: str
     shared_with: tuple[str, ...]
 
 
@@ -114,7 +111,7 @@ def _sensor_page(
     labels: Mapping[str, str],
     together: Mapping[tuple[str, str], set[str]],
 ) -> Page:
-    sections, plots = trial_sections(parts, together)
+    sections = trial_sections(parts, together)
     reference, records = parts.reference, parts.records
     unit = "" if parts.line is None else f"{parts.line['unit']} per {reference.shown_unit}"
     influences, swept = sensor_influences(results, parts.module, parts.sensor)
@@ -150,7 +147,7 @@ def _sensor_page(
             "labels": labels,
             "ordinary": parts.ordinary,
         },
-        figures=(*sensor_figures_of(parts), *outlines, *swept, *holds, *plots),
+        figures=(*sensor_figures_of(parts), *outlines, *swept, *holds),
         tables=(*_limits_table(parts), *_runs_table(parts), *held),
         data={"calculator": calculator_data(records)} if records else {},
         description=f"Readings, line, figures of merit and trials of sensor {parts.sensor} of module "
@@ -218,18 +215,12 @@ def _text(value: object) -> str:
     return "" if missing or str(value) in ("nan", "None") else str(value)
 
 
-def trial_sections(
-    parts: SensorParts, together: Mapping[tuple[str, str], set[str]]
-) -> tuple[list[TrialSection], list[Figure]]:
-    """Return the sections of a sensor's trials in order of time, and their little plots."""
+def trial_sections(parts: SensorParts, together: Mapping[tuple[str, str], set[str]]) -> list[TrialSection]:
+    """Return the sections of a sensor's trials in order of time."""
     trials = parts.trials.drop_duplicates("file").sort_values(["started", "file"], kind="stable")
     sections: list[TrialSection] = []
-    plots: list[Figure] = []
-    for index, trial in enumerate(trials.to_dict("records"), 1):
+    for trial in trials.to_dict("records"):
         file = str(trial["file"])
-        plot = trial_plot(parts, file, index) if index <= _MOST_TRIAL_PLOTS else None
-        if plot is not None:
-            plots.append(plot)
         others = together.get((file, parts.module), set()) - {parts.sensor, ""}
         sections.append(
             TrialSection(
@@ -241,11 +232,11 @@ def trial_sections(
                 repetition=_text(trial["repetition"]),
                 fate=_text(trial["fate"]),
                 runs=tuple(_runs_of(parts, file)),
-                figure=plot.name if plot is not None else "",
+                moved=moved_from_line(parts, file),
                 shared_with=tuple(sorted(others)),
             )
         )
-    return sections, plots
+    return sections
 
 
 def _runs_of(parts: SensorParts, file: str) -> list[dict[Hashable, Any]]:

@@ -1,7 +1,8 @@
-"""The figures of one sensor's page: its line, its departures from it, its loop, and a little plot a trial."""
+"""The figures of one sensor's page: its line, its departures from it run by run, its loop."""
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable, Sequence
 
 import numpy as np
@@ -18,11 +19,12 @@ from campaign.pages.figures import (
     axis,
     band,
     intervals,
-    label,
     layout,
     level_line,
     line,
+    panel,
     points,
+    small_multiples,
 )
 from campaign.pages.sensor_parts import PlottedReading, SensorParts
 from campaign.recordings.recording import ReferenceQuantity
@@ -104,7 +106,9 @@ def _line_caption(parts: SensorParts) -> str:
     return f"{who} follows a line of slope {slope} (standard uncertainty) over {runs}."
 
 
-def _marks(readings: Sequence[PlottedReading], index: int, heights: Sequence[float]) -> Iterable[Trace]:
+def _marks(
+    readings: Sequence[PlottedReading], index: int, heights: Sequence[float], axes: str = ""
+) -> Iterable[Trace]:
     """Marks of one run: filled while rising, open else."""
     style = _STYLES[index % len(_STYLES)]
     for rising in (True, False):
@@ -121,57 +125,83 @@ def _marks(readings: Sequence[PlottedReading], index: int, heights: Sequence[flo
             open_marker=not rising,
             text=[r.sentence for r, _ in chosen],
             links=[r.href for r, _ in chosen],
+            axes=axes,
         )
 
 
 def departure_figure(parts: SensorParts) -> Figure:
-    """Return departures from the sensor's line in units of x, one path a run."""
+    """Return departures from the sensor's line in units of x, one panel a run."""
     reference = parts.reference
     grid, reach = _reach(parts)
+    every_run = list(parts.readings_by_run())
+    runs = every_run[:_MOST_PANELS]
+    drawn = layout_of_runs([run for run, _ in runs], reference)
     traces: list[Trace] = []
-    if reach is not None:
-        wide = reach * reference.shown_factor
-        traces.append(band(grid * reference.shown_factor, -wide, wide))
-    for index, (_, readings) in enumerate(parts.readings_by_run()):
+    for index, (_, readings) in enumerate(runs):
+        if reach is not None:
+            wide = reach * reference.shown_factor
+            traces.append(band(grid * reference.shown_factor, -wide, wide, axes=panel(index)))
         traces += _path(readings, index)
     largest = max((abs(r.departure) for r in parts.readings if r.used), default=float("nan"))
-    words = _departure_words(reference)
     return Figure(
         name="departures",
         caption="No reading departs from the line by more than "
         f"{numbers.significant(largest, 2, reference.shown_unit)}.",
-        alternative=f"{words}, one path a run in the order of its readings, with the band of one reading "
-        f"in a new "
-        "run.",
+        alternative=f"{_departure_words(reference)}, one panel a run, as a path in the order of its "
+        "readings, with the band of one reading in a new run.",
         traces=tuple(traces),
-        layout=_departure_layout(reference, words),
+        layout=drawn,
         data=parts.frame[[c for c in _DEPARTURES if c in parts.frame]],
-        note="Each path is one run in the order of its readings: a gap between its way up and down is its "
-        "loop, a "
-        "shifted path is the run’s own zero.",
-        height=340,
+        note="Each panel is one run, its path in the order of the readings: a gap between its way up and down "
+        "is its loop, a path that lies high or low is the run’s own zero. Filled: rising; open: falling."
+        + (
+            f" The first {len(runs)} runs are drawn; the CSV holds all." if len(every_run) > len(runs) else ""
+        ),
+        height=90 + 150 * math.ceil(len(runs) / _COLUMNS),
     )
+
+
+_MOST_PANELS = 24
+_COLUMNS = 3
+
+
+def layout_of_runs(runs: Sequence[tuple[str, int, str]], reference: ReferenceQuantity) -> Layout:
+    """Return a panel for each run, named by its repetition and, where modules were remounted, its mounting."""
+    mountings = {session for session, _, _ in runs}
+    titles = [
+        f"run {repetition}, mounting {session}" if len(mountings) > 1 else f"run {repetition}"
+        for session, repetition, _ in runs
+    ]
+    made = small_multiples(
+        titles,
+        axis(x_title(reference), reference.shown_unit),
+        axis("Departure", reference.shown_unit),
+        columns=_COLUMNS,
+        gap=(0.04, min(0.2, 0.36 / max(math.ceil(len(runs) / _COLUMNS), 1))),
+        shapes=[level_line(0, colour=palette.INK, axes=panel(i)) for i in range(len(runs))],
+    )
+    return made
+
+
+def moved_from_line(parts: SensorParts, trial: str) -> str:
+    """Return in words how far the readings of a trial lie from the sensor's line on average; empty if none."""
+    departures = [r.departure for run, own in parts.readings_by_run() if run[2] == trial for r in own]
+    if not departures or parts.line is None:
+        return ""
+    moved = float(np.mean(departures))
+    size = numbers.significant(abs(moved), 2, parts.reference.shown_unit)
+    return f"On average {size} {'above' if moved >= 0 else 'below'} the sensor’s line"
 
 
 def _departure_words(reference: ReferenceQuantity) -> str:
     return f"Departure as {'strain' if reference.name == 'strain' else reference.name}"
 
 
-def _departure_layout(reference: ReferenceQuantity, words: str, annotations: Sequence[Layout] = ()) -> Layout:
-    return layout(
-        axis(x_title(reference), reference.shown_unit),
-        axis(words, reference.shown_unit),
-        shapes=[level_line(0, colour=palette.INK)],
-        annotations=list(annotations),
-    )
-
-
 def _path(readings: Sequence[PlottedReading], index: int) -> list[Trace]:
-    """One run as a path in the order of its readings, with its marks."""
-    style = _STYLES[index % len(_STYLES)]
-    heights = [r.departure for r in readings]
-    path = line([r.x for r in readings], heights, colour=style.colour, dash=style.dash, width=1)
-    return [path, *_marks(readings, index, heights)]
+    """One run in a panel of its own: a path in the order of its readings, with its marks."""
+    heights, style = [r.departure for r in readings], _STYLES[0]
+    path = line([r.x for r in readings], heights, colour=style.colour, width=1, axes=panel(index))
+    return [path, *_marks(readings, 0, heights, panel(index))]
 
 
 def hysteresis_figure(parts: SensorParts) -> Figure | None:
@@ -204,31 +234,4 @@ def hysteresis_figure(parts: SensorParts) -> Figure | None:
         data=levels,
         note="The intervals hold together over all levels.",
         height=260,
-    )
-
-
-def trial_plot(parts: SensorParts, trial: str, index: int) -> Figure | None:
-    """Return the little plot of one trial: departure from the sensor's line in the order of the readings."""
-    runs = [(run, own) for run, own in parts.readings_by_run() if run[2] == trial]
-    if not runs or parts.line is None:
-        return None
-    reference = parts.reference
-    traces: list[Trace] = []
-    ends: list[Layout] = []
-    for number, (run, readings) in enumerate(runs):
-        traces += _path(readings, number)
-        if len(runs) > 1:
-            last, style = readings[-1], _STYLES[number % len(_STYLES)]
-            ends.append(label(f"run {run[1]}", last.x, last.departure, colour=style.colour, size=11))
-    moved = float(np.mean([r.departure for _, own in runs for r in own]))
-    return Figure(
-        name=f"trial-{index}",
-        caption=f"On average {numbers.significant(abs(moved), 2, reference.shown_unit)} "
-        f"{'above' if moved >= 0 else 'below'} the sensor’s line.",
-        alternative=f"{_departure_words(reference)} against {x_title(reference).lower()}, in the order of "
-        f"readings.",
-        traces=tuple(traces),
-        layout=_departure_layout(reference, "Departure", ends),
-        table="readings",
-        height=210,
     )

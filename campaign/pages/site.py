@@ -18,7 +18,7 @@ from campaign.pages.findings import findings_page
 from campaign.pages.generations import generations_page
 from campaign.pages.hysteresis import hysteresis_page
 from campaign.pages.loop_figures import loop_scripts
-from campaign.pages.method import method_page
+from campaign.pages.method import method_pages
 from campaign.pages.module import module_pages
 from campaign.pages.notes import Notes
 from campaign.pages.page import Page, SiteFrame
@@ -90,7 +90,7 @@ def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
         budget_page(results),
     )
     pages = [findings_page(results, mapped), *(page for page in measured if page is not None)]
-    pages += [recordings_page(results), method_page(results)]
+    pages += [recordings_page(results), *method_pages(results)]
     pages += [*module_pages(results, mapped), *sensor_pages(results, mapped), *notes.pages]
     tables = [*(table for page in pages for table in page.tables), *site_tables(results, pages)]
     return [*pages, provenance_page(results, tables)]

@@ -94,6 +94,11 @@ class MapEdge:
     text: str
     name: str
 
+    @property
+    def told(self) -> bool:
+        """Whether there is something to say of it: a value, or that it was set aside."""
+        return self.set_aside or bool(self.colour)
+
 
 @dataclass(frozen=True)
 class MapTile:

@@ -2,7 +2,8 @@
 
 It is what print, readers without scripts and the first moment of every page see. All looks are presentation
 attributes (a lone file keeps them); ink is ``currentColor`` and every other colour is one of the palette,
-which the style sheet swaps by attribute in the dark scheme.
+which the style sheet swaps by attribute in the dark scheme. Coordinates are whole tenths of a pixel
+(:mod:`campaign.pages.static_strokes`); neighbours that look alike are one path.
 """
 
 from __future__ import annotations
@@ -10,24 +11,47 @@ from __future__ import annotations
 import html
 import math
 import re
-from collections.abc import Callable, Iterable, Iterator, Sequence
+from collections import Counter
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
+
+import numpy as np
 
 from campaign.pages import palette
 from campaign.pages.drawing import axis_names, axis_of
 from campaign.pages.figures import WIDTH, Figure, Layout, Trace
+from campaign.pages.static_strokes import (
+    CAPS,
+    STROKES,
+    TENTHS,
+    Floats,
+    curve,
+    markers,
+    outline,
+    rectangle,
+    segment,
+    segments,
+    tenths,
+)
 from campaign.pages.ticks import linear_ticks, logarithmic_ticks
 
 DASHES = {
-    "dash": "7 4",
-    "dot": "1.5 3",
-    "dashdot": "7 3 1.5 3",
-    "longdash": "12 4",
-    "longdashdot": "12 3 1.5 3",
+    "dash": "70 40",
+    "dot": "15 30",
+    "dashdot": "70 30 15 30",
+    "longdash": "120 40",
+    "longdashdot": "120 30 15 30",
 }
+"""Dashes in tenths of a pixel, by the plot library's names."""
 _TEXT_SIZE = 12
-_TICK_LABEL_WIDTH = 58
+_TEXTS_WITH_ROOM = 90, 42
+"""Pixels that a tick's text takes across and upright, with the room around it."""
+_OVER_THE_EDGE = 5.0
+"""Pixels by which curves and markers may stand over the edge of their panel."""
+
+Piece = tuple[str, str]
+"""A path and its looks: ``('stroke="#0072B2" fill="none"', "M0 0l5 5")``."""
 
 
 @dataclass(frozen=True)
@@ -41,32 +65,46 @@ class Panel:
     top: float
     bottom: float
 
-    def across(self, value: float | None) -> float:
-        """Return the pixel of an x value in data units (NaN where it has none)."""
-        return _place(value, self.x_axis, self.left, self.right)
+    def across(self, values: Any) -> Floats:
+        """Return the pixels of x values in data units (NaN where one has none)."""
+        return _places(values, self.x_axis, self.left, self.right)
 
-    def upright(self, value: float | None) -> float:
-        """Return the pixel of a y value in data units (NaN where it has none)."""
-        return _place(value, self.y_axis, self.bottom, self.top)
+    def upright(self, values: Any) -> Floats:
+        """Return the pixels of y values in data units (NaN where one has none)."""
+        return _places(values, self.y_axis, self.bottom, self.top)
+
+    def holds(self, x: Floats, y: Floats, room: float) -> bool:
+        """Return whether all places (those that are not numbers aside) lie within the panel and its *room*."""
+        return bool(
+            np.all(~(x < self.left - room) & ~(x > self.right + room))
+            and np.all(~(y < self.top - room) & ~(y > self.bottom + room))
+        )
 
 
 def static_svg(figure: Figure, width: int = WIDTH) -> str:
     """Return the SVG of *figure*, which must be ready to be drawn (:func:`campaign.pages.drawing.ready`)."""
-    panels = _panels(figure, width)
-    clips = [_clip(figure, key, panel) for key, panel in panels.items()]
-    parts = [_axes(panel) for panel in panels.values()]
-    shapes = figure.layout.get("shapes", ())
-    parts += [_shape(shape, panels) for shape in shapes if shape.get("layer") == "below"]
-    parts += [_clipped(figure, key, _traces(figure, key, panel)) for key, panel in panels.items()]
-    parts += [_shape(shape, panels) for shape in shapes if shape.get("layer") != "below"]
-    parts += [_annotation(note, panels) for note in figure.layout.get("annotations", ())]
-    parts += [_mark(figure.layout["title"], width, figure.height)] if "title" in figure.layout else []
-    size = f'viewBox="0 0 {width} {figure.height}" width="{width}" height="{figure.height}"'
-    alternative = _escaped(figure.alternative)
     return (
-        f'<svg xmlns="http://www.w3.org/2000/svg" {size} role="img" aria-label="{alternative}" '
-        f'font-size="{_TEXT_SIZE}" fill="currentColor"><defs>{"".join(clips)}</defs>{"".join(parts)}</svg>'
+        f'<svg viewBox="0 0 {TENTHS * width} {TENTHS * figure.height}" width="{width}" '
+        f'height="{figure.height}" role="img" aria-label="{_escaped(figure.alternative)}" '
+        f'font-size="{TENTHS * _TEXT_SIZE}" fill="none" stroke-width="{TENTHS}" stroke-linejoin="round">'
+        f"{drawn_content(figure, width)}</svg>"
     )
+
+
+def drawn_content(figure: Figure, width: int) -> str:
+    """Return what stands within the SVG of *figure*, *width* pixels wide."""
+    panels = _panels(figure, width)
+    shapes = figure.layout.get("shapes", ())
+    parts = [
+        _all_axes(list(panels.values())),
+        *_shapes([shape for shape in shapes if shape.get("layer") == "below"], panels),
+        *_all_traces(figure, panels),
+        *_shapes([shape for shape in shapes if shape.get("layer") != "below"], panels),
+    ]
+    notes = "".join(_annotation(note, panels) for note in figure.layout.get("annotations", ()))
+    if "title" in figure.layout:
+        notes += _mark(figure.layout["title"], width, figure.height)
+    return "".join(parts) + (f'<g fill="currentColor">{notes}</g>' if notes else "")
 
 
 def _panels(figure: Figure, width: int) -> dict[str, Panel]:
@@ -110,33 +148,49 @@ def _axis_key(reference: str, letter: str) -> str:
     return f"{letter}axis{reference[1:]}"
 
 
-def _place(value: float | None, axis: Layout, start: float, end: float) -> float:
-    if value is None or not math.isfinite(value):
-        return math.nan
+def _places(values: Any, axis: Layout, start: float, end: float) -> Floats:
+    array = np.array(values, dtype=float)
     if axis.get("type") == "log":
-        if value <= 0:
-            return math.nan
-        value = math.log10(value)
+        array = np.log10(array, where=array > 0, out=np.full(array.shape, np.nan))
+    low, high = axis["range"]
+    placed: Floats = start + (array - low) * ((end - start) / (high - low))
+    return placed
+
+
+def _place(value: float, axis: Layout, start: float, end: float) -> float:
+    return float(_places(value, axis, start, end))
+
+
+def _from_axis(value: float, axis: Layout, start: float, end: float) -> float:
     low, high = axis["range"]
     return float(start + (value - low) / (high - low) * (end - start))
 
 
-def _axes(panel: Panel) -> str:
-    x_ticks = _ticks(panel.x_axis, abs(panel.right - panel.left) / 90)
-    y_ticks = _ticks(panel.y_axis, abs(panel.bottom - panel.top) / 42)
-    xs = [(_from_axis(v, panel.x_axis, panel.left, panel.right), text) for v, text in x_ticks]
-    ys = [(_from_axis(v, panel.y_axis, panel.bottom, panel.top), text) for v, text in y_ticks]
-    base = _line(panel.left, panel.bottom, panel.right, panel.bottom, palette.SOFT)
-    return _grid(panel, xs, ys) + base + _tick_labels(panel, xs, ys) + _axis_titles(panel)
+# Axes.
+
+
+def _all_axes(panels: Sequence[Panel]) -> str:
+    """Return grids, base lines, ticks' texts and titles of all panels."""
+    grid, labels = "", ""
+    for panel in panels:
+        x_ticks = _ticks(panel.x_axis, abs(panel.right - panel.left) / _TEXTS_WITH_ROOM[0])
+        y_ticks = _ticks(panel.y_axis, abs(panel.bottom - panel.top) / _TEXTS_WITH_ROOM[1])
+        xs = [(_from_axis(v, panel.x_axis, panel.left, panel.right), text) for v, text in x_ticks]
+        ys = [(_from_axis(v, panel.y_axis, panel.bottom, panel.top), text) for v, text in y_ticks]
+        grid += _grid(panel, xs, ys)
+        labels += _tick_labels(panel, xs, ys) + _axis_titles(panel)
+    base = "".join(segment(p.left, p.bottom, p.right, p.bottom) for p in panels)
+    drawn = f'<path d="{grid}" stroke="{palette.RULE}"/>' if grid else ""
+    return drawn + f'<path d="{base}" stroke="{palette.SOFT}"/>{labels}'
 
 
 def _grid(panel: Panel, xs: Sequence[tuple[float, str]], ys: Sequence[tuple[float, str]]) -> str:
     path = ""
     if panel.x_axis.get("showgrid", True):
-        path += "".join(_segment(x, panel.top, x, panel.bottom) for x, _ in xs)
+        path += "".join(segment(x, panel.top, x, panel.bottom) for x, _ in xs)
     if panel.y_axis.get("showgrid", True):
-        path += "".join(_segment(panel.left, y, panel.right, y) for y, _ in ys)
-    return f'<path d="{path}" stroke="{palette.RULE}"/>' if path else ""
+        path += "".join(segment(panel.left, y, panel.right, y) for y, _ in ys)
+    return path
 
 
 def _tick_labels(panel: Panel, xs: Sequence[tuple[float, str]], ys: Sequence[tuple[float, str]]) -> str:
@@ -159,7 +213,7 @@ def _axis_titles(panel: Panel) -> str:
     if y_title:
         x, y = panel.left - panel.y_axis.get("title", {}).get("standoff", 46), (panel.top + panel.bottom) / 2
         made += _text(y_title, x, y, anchor="middle", size=13, turn=-90)
-    return made
+    return f'<g fill="currentColor">{made}</g>' if made else ""
 
 
 def _ticks(axis: Layout, about: float) -> list[tuple[float, str]]:
@@ -174,285 +228,200 @@ def _ticks(axis: Layout, about: float) -> list[tuple[float, str]]:
     return linear_ticks(low, high, max(3, round(about)))
 
 
-def _from_axis(value: float, axis: Layout, start: float, end: float) -> float:
-    low, high = axis["range"]
-    return float(start + (value - low) / (high - low) * (end - start))
+# Traces.
 
 
-def _clip(figure: Figure, key: str, panel: Panel) -> str:
-    place = f'x="{_px(panel.left - 5)}" y="{_px(panel.top - 5)}"'
-    size = f'width="{_px(panel.right - panel.left + 10)}" height="{_px(panel.bottom - panel.top + 10)}"'
-    return f'<clipPath id="{_clip_id(figure, key)}"><rect {place} {size}/></clipPath>'
+@dataclass(frozen=True)
+class DrawnTrace:
+    """What one trace draws: paths with their looks, texts after them, its opacity, and whether all lies within."""
+
+    pieces: tuple[Piece, ...]
+    texts: str = ""
+    opacity: float = 1.0
+    within: bool = True
 
 
-def _clip_id(figure: Figure, key: str) -> str:
-    return f"clip-{figure.name}-{key.replace('|', '-')}"
-
-
-def _clipped(figure: Figure, key: str, content: str) -> str:
-    return f'<g clip-path="url(#{_clip_id(figure, key)})">{content}</g>' if content else ""
-
-
-def _traces(figure: Figure, key: str, panel: Panel) -> str:
-    own = [
-        t
-        for t in figure.traces
-        if f"{axis_of(t, 'x')}|{axis_of(t, 'y')}" == key and t.get("visible", True) is True
-    ]
-    drawn = (_bar_trace(t, panel) if t["type"] == "bar" else _scatter_trace(t, panel) for t in own)
-    return "".join(_joined(drawn))
-
-
-_STROKE = re.compile(r'<path d="([^"]*)"( fill="none" stroke=[^>]*)/>')
-
-
-def _joined(drawn: Iterable[str]) -> Iterator[str]:
-    """Join neighbouring traces that are one stroked path each and look alike: the picture stays the same."""
-    strokes, looks = "", ""
-    for content in drawn:
-        stroke = _STROKE.fullmatch(content)
-        if strokes and (stroke is None or stroke[2] != looks):
-            yield f'<path d="{strokes}"{looks}/>'
-            strokes = ""
-        if stroke is None:
-            yield content
+def _all_traces(figure: Figure, panels: Mapping[str, Panel]) -> Iterator[str]:
+    """Return the traces of all panels; those with something that reaches over their edges are cut off there."""
+    shown: dict[str, list[Trace]] = {key: [] for key in panels}
+    for trace in figure.traces:
+        key = f"{axis_of(trace, 'x')}|{axis_of(trace, 'y')}"
+        if key in shown and trace.get("visible", True) is True:
+            shown[key].append(trace)
+    whole: list[list[DrawnTrace]] = []
+    for key, panel in panels.items():
+        drawn = [_bar_trace(t, panel) if t["type"] == "bar" else _scatter_trace(t, panel) for t in shown[key]]
+        if all(trace.within for trace in drawn):
+            whole.append(drawn)
         else:
-            strokes, looks = strokes + stroke[1], stroke[2]
-    if strokes:
-        yield f'<path d="{strokes}"{looks}/>'
+            yield _cut_off(f"clip-{figure.name}-{key.replace('|', '-')}", panel, _joined([drawn]))
+    yield _joined(whole)
 
 
-def _scatter_trace(trace: Trace, panel: Panel) -> str:
-    places = [(panel.across(x), panel.upright(y)) for x, y in zip(trace["x"], trace["y"], strict=True)]
+def _cut_off(name: str, panel: Panel, content: str) -> str:
+    room = _OVER_THE_EDGE
+    path = rectangle(panel.left - room, panel.right + room, panel.top - room, panel.bottom + room)
+    return f'<clipPath id="{name}"><path d="{path}"/></clipPath><g clip-path="url(#{name})">{content}</g>'
+
+
+def _joined(panels: Iterable[Iterable[DrawnTrace]]) -> str:
+    """Join paths that look alike, each where its like is first drawn.
+
+    Paths that are seen through are joined over different panels only: within one they would no longer add up.
+    """
+    paths: dict[tuple[str, int], list[str]] = {}
+    texts = ""
+    for panel in panels:
+        seen_through: Counter[str] = Counter()
+        for trace in panel:
+            texts += trace.texts
+            for looks, path in trace.pieces:
+                own = looks
+                if trace.opacity != 1:
+                    own = f'{looks} opacity="{trace.opacity:g}"'
+                    seen_through[own] += 1
+                paths.setdefault((own, seen_through[own]), []).append(path)
+    drawn = "".join(f'<path d="{"".join(parts)}" {looks}/>' for (looks, _), parts in paths.items())
+    return drawn + (f'<g fill="currentColor">{texts}</g>' if texts else "")
+
+
+def _scatter_trace(trace: Trace, panel: Panel) -> DrawnTrace:
+    x, y = panel.across(trace["x"]), panel.upright(trace["y"])
     mode = trace.get("mode", "lines")
-    parts = []
+    pieces: list[Piece] = []
     if trace.get("fill") == "toself":
-        parts.append(_area(places, trace))
+        fill = f'fill="{_paint(trace.get("fillcolor", palette.INK))}"'
+        pieces.append((fill, outline(x, y)))
     elif "lines" in mode:
-        parts.append(_curve(places, trace))
-    parts.append(_error_bars(trace, panel))
+        pieces += _curve(x, y, trace)
+    bars, within = _error_bars(trace, panel)
+    pieces += bars
     if "markers" in mode:
-        parts.append(_markers(places, trace))
+        pieces += _markers(x, y, trace)
+    texts = ""
     if "text" in mode:
-        parts += [
-            _text(t, x + 6, y + 4) for t, (x, y) in zip(trace["text"], places, strict=True) if _seen(x, y)
-        ]
-    content = "".join(parts)
-    opacity = trace.get("opacity", 1)
-    return f'<g opacity="{opacity:g}">{content}</g>' if opacity != 1 and content else content
+        named = zip(trace["text"], x.tolist(), y.tolist(), strict=True)
+        texts = "".join(
+            _text(t, across + 6, upright + 4) for t, across, upright in named if _seen(across, upright)
+        )
+    return DrawnTrace(
+        tuple((looks, path) for looks, path in pieces if path),
+        texts,
+        trace.get("opacity", 1),
+        within and panel.holds(x, y, 1.0),
+    )
 
 
-def _curve(places: list[tuple[float, float]], trace: Trace) -> str:
+def _curve(x: Floats, y: Floats, trace: Trace) -> list[Piece]:
     drawn = trace.get("line", {})
     if drawn.get("width", 1.5) == 0:
-        return ""
-    path = _path(places, drawn.get("shape", "linear"))
-    dash = DASHES.get(drawn.get("dash", "solid"))
-    dashes = f' stroke-dasharray="{dash}"' if dash else ""
-    paint, width = _paint(drawn.get("color", palette.INK)), drawn.get("width", 1.5)
-    looks = f'stroke="{paint}" stroke-width="{width:g}"{dashes}'
-    return f'<path d="{path}" fill="none" {looks} stroke-linejoin="round"/>' if path else ""
+        return []
+    looks = _line_looks({"color": palette.INK, "width": 1.5, **drawn})
+    return [(looks, curve(x, y, drawn.get("shape", "linear")))]
 
 
-def _path(places: Iterable[tuple[float, float]], shape: str) -> str:
-    """Return a path by relative steps, which are shorter; they add up to the rounded places exactly."""
-    parts: list[str] = []
-    last: tuple[int, int] | None = None
-    for x, y in places:
-        if not _seen(x, y):
-            last = None
+def _error_bars(trace: Trace, panel: Panel) -> tuple[list[Piece], bool]:
+    """Return the bars of a trace along x and along y, and whether they end within the panel."""
+    pieces, within = [], True
+    for letter in ("x", "y"):
+        error = trace.get(f"error_{letter}")
+        if not error:
             continue
-        across, upright = round(10 * x), round(10 * y)
-        if last is None:
-            parts.append(f"M{_px(across / 10)} {_px(upright / 10)}")
-        else:
-            right, down = _px((across - last[0]) / 10), _px((upright - last[1]) / 10)
-            parts.append(f"h{right}v{down}" if shape == "hv" else f"l{right} {down}".replace(" -", "-"))
-        last = across, upright
-    return "".join(parts)
+        ends = _bar_ends(trace, error, panel, letter)
+        looks = _line_looks({"color": error.get("color", palette.INK), "width": error.get("thickness", 1.4)})
+        pieces.append((looks, segments(*ends)))
+        within &= panel.holds(ends[0], ends[1], 1.0) and panel.holds(ends[2], ends[3], 1.0)
+    return pieces, within
 
 
-def _area(places: list[tuple[float, float]], trace: Trace) -> str:
-    path = _path(places, "linear")
-    return (
-        f'<path d="{path}Z" fill="{_paint(trace.get("fillcolor", palette.INK))}" stroke="none"/>'
-        if path
-        else ""
-    )
+def _bar_ends(
+    trace: Trace, error: dict[str, Any], panel: Panel, letter: str
+) -> tuple[Floats, Floats, Floats, Floats]:
+    x, y = np.array(trace["x"], dtype=float), np.array(trace["y"], dtype=float)
+    up = np.array(error["array"], dtype=float)
+    down = np.array(error.get("arrayminus", error["array"]), dtype=float)
+    if letter == "x":
+        level = panel.upright(y)
+        return panel.across(x - down), level, panel.across(x + up), level
+    place = panel.across(x)
+    return place, panel.upright(y - down), place, panel.upright(y + up)
 
 
-def _error_bars(trace: Trace, panel: Panel) -> str:
-    return _bars_along(trace, panel, "x") + _bars_along(trace, panel, "y")
-
-
-def _bars_along(trace: Trace, panel: Panel, letter: str) -> str:
-    error = trace.get(f"error_{letter}")
-    if not error:
-        return ""
-    ups, downs = error["array"], error.get("arrayminus", error["array"])
-    segments = []
-    for x, y, up, down in zip(trace["x"], trace["y"], ups, downs, strict=True):
-        if None in (x, y, up, down):
-            continue
-        if letter == "x":
-            ends = panel.across(x - down), panel.upright(y), panel.across(x + up), panel.upright(y)
-        else:
-            ends = panel.across(x), panel.upright(y - down), panel.across(x), panel.upright(y + up)
-        if _seen(*ends):
-            segments.append(_segment(*ends))
-    looks = (
-        f'stroke="{_paint(error.get("color", palette.INK))}" stroke-width="{error.get("thickness", 1.4):g}"'
-    )
-    return f'<path d="{"".join(segments)}" fill="none" {looks}/>' if segments else ""
-
-
-def _markers(places: list[tuple[float, float]], trace: Trace) -> str:
+def _markers(x: Floats, y: Floats, trace: Trace) -> list[Piece]:
     marker = trace.get("marker", {})
     symbols, sizes = marker.get("symbol", "circle"), marker.get("size", 7)
     colours = marker.get("color", palette.INK)
-    seen = [i for i, place in enumerate(places) if _seen(*place)]
     if not any(isinstance(value, list) for value in (symbols, sizes, colours)):
-        outlines = "".join(_symbol(symbols, *places[i], sizes / 2) for i in seen)
-        return _painted_symbol(outlines, colours, symbols, sizes) if outlines else ""
-    return "".join(
-        _one_marker(places[i], _each(symbols, i), _each(sizes, i), _each(colours, i)) for i in seen
-    )
+        return [(_marker_looks(symbols, colours, sizes), markers(symbols, x, y, sizes))]
+    kinds: dict[tuple[str, str, float], list[int]] = {}
+    for i in range(len(x)):
+        kinds.setdefault((_each(symbols, i), _each(colours, i), _each(sizes, i)), []).append(i)
+    return [(_marker_looks(*kind), markers(kind[0], x[at], y[at], kind[2])) for kind, at in kinds.items()]
 
 
-def _one_marker(place: tuple[float, float], symbol: str, size: float, colour: str) -> str:
-    return _painted_symbol(_symbol(symbol, *place, size / 2), colour, symbol, size)
+def _marker_looks(symbol: str, colour: str, size: float) -> str:
+    paint = _paint(colour)
+    if symbol in CAPS:
+        cap, share = CAPS[symbol]
+        return f'stroke="{paint}" stroke-width="{tenths(size * share)}" stroke-linecap="{cap}"'
+    if symbol.endswith("-open") or symbol in STROKES:
+        return f'stroke="{paint}" stroke-width="15"'
+    return f'fill="{paint}"'
 
 
 def _each(values: Any, index: int) -> Any:
     return values[index] if isinstance(values, list) else values
 
 
-def _painted_symbol(outline: str, colour: str, symbol: str, size: float) -> str:
-    """Return outlines of *symbol* as one path: dots as caps of lines without length, else shapes."""
-    paint = _paint(colour)
-    if symbol in _CAPS:
-        cap, share = _CAPS[symbol]
-        looks = f'stroke-width="{_px(size * share)}" stroke-linecap="{cap}"'
-        return f'<path d="{outline}" fill="none" stroke="{paint}" {looks}/>'
-    if symbol.endswith("-open") or symbol in _STROKES:
-        return f'<path d="{outline}" fill="none" stroke="{paint}" stroke-width="1.5"/>'
-    return f'<path d="{outline}" fill="{paint}"/>'
-
-
-def _symbol(symbol: str, x: float, y: float, r: float) -> str:
-    """Return the outline of one marker around (x, y), by relative steps to keep it short."""
-    if symbol in _CAPS:
-        return f"M{_px(x)} {_px(y)}h0"
-    return _SYMBOLS.get(symbol.removesuffix("-open"), _circle)(x, y, r)
-
-
-def _circle(x: float, y: float, r: float) -> str:
-    arc = f"a{_px(r)} {_px(r)} 0 1 0 "
-    return f"M{_px(x - r)} {_px(y)}{arc}{_px(2 * r)} 0{arc}{_px(-2 * r)} 0"
-
-
-def _square(x: float, y: float, r: float) -> str:
-    side = 1.8 * r
-    return f"M{_px(x - side / 2)} {_px(y - side / 2)}h{_px(side)}v{_px(side)}h{_px(-side)}z"
-
-
-def _diamond(x: float, y: float, r: float) -> str:
-    h = 1.25 * r
-    return f"M{_px(x)} {_px(y - h)}" + _steps((h, h), (-h, h), (-h, -h)) + "z"
-
-
-def _triangle(x: float, y: float, r: float) -> str:
-    h = 1.15 * r
-    return f"M{_px(x)} {_px(y - h)}" + _steps((0.9 * h, 1.7 * h), (-1.8 * h, 0)) + "z"
-
-
-def _triangle_down(x: float, y: float, r: float) -> str:
-    h = 1.15 * r
-    return f"M{_px(x)} {_px(y + h)}" + _steps((0.9 * h, -1.7 * h), (-1.8 * h, 0)) + "z"
-
-
-def _saltire(x: float, y: float, r: float) -> str:
-    return (
-        f"M{_px(x - r)} {_px(y - r)}" + _steps((2 * r, 2 * r)) + f"m{_px(-2 * r)} 0" + _steps((2 * r, -2 * r))
-    )
-
-
-def _cross(x: float, y: float, r: float) -> str:
-    return f"M{_px(x - r)} {_px(y)}h{_px(2 * r)}m{_px(-r)} {_px(-r)}v{_px(2 * r)}"
-
-
-def _upright_tick(x: float, y: float, r: float) -> str:
-    return f"M{_px(x)} {_px(y - r)}v{_px(2 * r)}"
-
-
-def _level_tick(x: float, y: float, r: float) -> str:
-    return f"M{_px(x - r)} {_px(y)}h{_px(2 * r)}"
-
-
-def _steps(*steps: tuple[float, float]) -> str:
-    return "".join(f"l{_px(dx)} {_px(dy)}" for dx, dy in steps)
-
-
-_CAPS: dict[str, tuple[str, float]] = {"circle": ("round", 1.0), "square": ("square", 0.9)}
-_STROKES = frozenset({"x", "cross", "line-ns", "line-ew"})
-_SYMBOLS: dict[str, Callable[[float, float, float], str]] = {
-    "circle": _circle,
-    "square": _square,
-    "diamond": _diamond,
-    "triangle-up": _triangle,
-    "triangle-down": _triangle_down,
-    "x": _saltire,
-    "cross": _cross,
-    "line-ns": _upright_tick,
-    "line-ew": _level_tick,
-}
-
-
-def _bar_trace(trace: Trace, panel: Panel) -> str:
+def _bar_trace(trace: Trace, panel: Panel) -> DrawnTrace:
     lying = trace.get("orientation") == "h"
     places, sizes = (trace["y"], trace["x"]) if lying else (trace["x"], trace["y"])
     widths, bases = trace.get("width", 0.8), trace.get("base", 0.0)
     colours = trace.get("marker", {}).get("color", palette.RAMP[6])
-    parts = []
-    for index, (place, size) in enumerate(zip(places, sizes, strict=True)):
-        if place is None or size is None:
+    along, across = (panel.upright, panel.across) if lying else (panel.across, panel.upright)
+    place, size = np.array(places, dtype=float), np.array(sizes, dtype=float)
+    half, base = np.array(widths, dtype=float) / 2, np.array(bases, dtype=float)
+    feet = np.column_stack([along(place - half), along(place + half)])
+    ends = np.column_stack([across(base + 0 * size), across(base + size)])
+    x, y = (ends, feet) if lying else (feet, ends)
+    paths: dict[str, list[str]] = {}
+    for i in np.flatnonzero(np.isfinite(x).all(axis=1) & np.isfinite(y).all(axis=1)).tolist():
+        shape = rectangle(*sorted(x[i].tolist()), *sorted(y[i].tolist()))
+        paths.setdefault(_paint(_each(colours, i)), []).append(shape)
+    bars, within = _error_bars(trace, panel)
+    pieces = [(f'fill="{paint}"', "".join(shapes)) for paint, shapes in paths.items()] + bars
+    held = within and panel.holds(x.ravel(), y.ravel(), 1.0)
+    return DrawnTrace(tuple(pieces), opacity=trace.get("opacity", 1), within=held)
+
+
+# Shapes and labels.
+
+
+def _shapes(shapes: Iterable[Layout], panels: dict[str, Panel]) -> list[str]:
+    """Return level lines and areas, lines that look alike as one path."""
+    lines: dict[str, str] = {}
+    areas = []
+    for shape in shapes:
+        panel = _panel_of(shape, panels)
+        x0, x1 = (_referred(shape[k], shape["xref"], panel, "x", _place) for k in ("x0", "x1"))
+        y0, y1 = (_referred(shape[k], shape["yref"], panel, "y", _place) for k in ("y0", "y1"))
+        if not _seen(x0, y0, x1, y1):
             continue
-        half, base = _each(widths, index) / 2, _each(bases, index)
-        along, across = (panel.upright, panel.across) if lying else (panel.across, panel.upright)
-        corners = (
-            sorted((along(place - half), along(place + half))),
-            sorted((across(base), across(base + size))),
-        )
-        parts.append(
-            _rectangle(corners[1], corners[0], _each(colours, index))
-            if lying
-            else _rectangle(*corners, _each(colours, index))
-        )
-    content = "".join(parts) + _error_bars(trace, panel)
-    opacity = trace.get("opacity", 1)
-    return f'<g opacity="{opacity:g}">{content}</g>' if opacity != 1 else content
+        if shape["type"] == "rect":
+            path = rectangle(*sorted((x0, x1)), *sorted((y0, y1)))
+            paint = _paint(shape.get("fillcolor", palette.RULE))
+            areas.append(f'<path d="{path}" fill="{paint}" opacity="{shape.get("opacity", 0.5):g}"/>')
+        else:
+            looks = _line_looks(shape.get("line", {}))
+            lines[looks] = lines.get(looks, "") + segment(x0, y0, x1, y1)
+    return areas + [f'<path d="{path}" {looks}/>' for looks, path in lines.items()]
 
 
-def _rectangle(xs: list[float], ys: list[float], colour: str) -> str:
-    if not _seen(*xs, *ys):
-        return ""
-    size = f'width="{_px(xs[1] - xs[0])}" height="{_px(ys[1] - ys[0])}"'
-    return f'<rect x="{_px(xs[0])}" y="{_px(ys[0])}" {size} fill="{_paint(colour)}"/>'
-
-
-def _shape(shape: Layout, panels: dict[str, Panel]) -> str:
-    panel = _panel_of(shape, panels)
-    x0, x1 = (_referred(shape[k], shape["xref"], panel, "x", _place) for k in ("x0", "x1"))
-    y0, y1 = (_referred(shape[k], shape["yref"], panel, "y", _place) for k in ("y0", "y1"))
-    if not _seen(x0, y0, x1, y1):
-        return ""
-    if shape["type"] == "rect":
-        drawn = _rectangle(sorted((x0, x1)), sorted((y0, y1)), shape.get("fillcolor", palette.RULE))
-        return f'<g opacity="{shape.get("opacity", 0.5):g}">{drawn}</g>'
-    drawn = shape.get("line", {})
-    return _line(
-        x0, y0, x1, y1, drawn.get("color", palette.SOFT), drawn.get("dash", "solid"), drawn.get("width", 1)
-    )
+def _line_looks(drawn: Mapping[str, Any]) -> str:
+    width, dash = drawn.get("width", 1), DASHES.get(drawn.get("dash", "solid"))
+    looks = f'stroke="{_paint(drawn.get("color", palette.SOFT))}"'
+    looks += f' stroke-width="{tenths(width)}"' if width != 1 else ""
+    return looks + (f' stroke-dasharray="{dash}"' if dash else "")
 
 
 def _annotation(note: Layout, panels: dict[str, Panel]) -> str:
@@ -493,22 +462,6 @@ def _referred(
     return place(value, panel.x_axis if letter == "x" else panel.y_axis, start, end)
 
 
-def _line(
-    x0: float, y0: float, x1: float, y1: float, colour: str, dash: str = "solid", width: float = 1
-) -> str:
-    dashes = f' stroke-dasharray="{DASHES[dash]}"' if dash in DASHES else ""
-    looks = f'stroke="{_paint(colour)}" stroke-width="{width:g}"{dashes}'
-    return f'<path d="{_segment(x0, y0, x1, y1)}" {looks}/>'
-
-
-def _segment(x0: float, y0: float, x1: float, y1: float) -> str:
-    """Return a straight piece of a path, by its one coordinate where it is level or upright."""
-    start, across, upright = f"M{_px(x0)} {_px(y0)}", _px(x1), _px(y1)
-    if upright == _px(y0):
-        return f"{start}H{across}"
-    return f"{start}V{upright}" if across == _px(x0) else f"{start}L{across} {upright}"
-
-
 def _text(
     words: str,
     x: float,
@@ -519,15 +472,16 @@ def _text(
     colour: str = palette.INK,
     turn: float = 0,
 ) -> str:
-    lines = re.split(r"<br\s*/?>", words)
+    lines = re.split(r"<br\s*/?>", words) if "<" in words else [words]
     shown = [_escaped(html.unescape(re.sub(r"</?(?:b|i|sub|sup)>", "", line))) for line in lines]
-    turned = f' transform="rotate({turn:g} {_px(x)} {_px(y)})"' if turn else ""
-    looks = f'x="{_px(x)}" y="{_px(y)}"' + (f' text-anchor="{anchor}"' if anchor != "start" else "")
-    looks += (f' font-size="{size:g}"' if size != _TEXT_SIZE else "") + turned
+    place = f'x="{tenths(x)}" y="{tenths(y)}"'
+    looks = f' transform="rotate({turn:g} {tenths(x)} {tenths(y)})"' if turn else ""
+    looks += f' text-anchor="{anchor}"' if anchor != "start" else ""
+    looks += f' font-size="{tenths(size)}"' if size != _TEXT_SIZE else ""
     paint = _paint(colour)
     looks += f' fill="{paint}"' if paint != "currentColor" else ""
-    spans = [shown[0]] + [f'<tspan x="{_px(x)}" dy="1.25em">{line}</tspan>' for line in shown[1:]]
-    return f"<text {looks}>{''.join(spans)}</text>"
+    spans = [shown[0]] + [f'<tspan x="{tenths(x)}" dy="1.25em">{line}</tspan>' for line in shown[1:]]
+    return f"<text {place}{looks}>{''.join(spans)}</text>"
 
 
 def _paint(colour: str) -> str:
@@ -536,10 +490,6 @@ def _paint(colour: str) -> str:
 
 def _seen(*places: float) -> bool:
     return all(math.isfinite(place) for place in places)
-
-
-def _px(value: float) -> str:
-    return f"{value:.1f}".removesuffix(".0").replace("-0.0", "0") if value > -0.05 or value < -0.05 else "0"
 
 
 def _escaped(text: str) -> str:

@@ -8,6 +8,7 @@ Names and columns of :data:`CONTRACT_COLUMNS` are kept stable.
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 from typing import Any, Literal
@@ -80,6 +81,8 @@ class Table:
         What the page shows, in order.
     shown_rows
         How many rows the page shows at most; the file is always whole. ``None``: all.
+    rows_in_page
+        How many of them stand in the page at once; its script adds the others when they are asked for.
     source
         Name of the site's table that these rows are part of; then the link leads to that file and none is
         written for this one.
@@ -97,6 +100,7 @@ class Table:
     source: str | None = None
     note: str = ""
     mark: tuple[str, str] = ("module", "sensor")
+    rows_in_page: int = 10
 
     @property
     def file(self) -> str:
@@ -106,10 +110,10 @@ class Table:
 
 @dataclass(frozen=True)
 class Cell:
-    """One cell as shown: its text, what it sorts by and where it leads (empty: nowhere)."""
+    """One cell as shown: its text, what it sorts by where the text alone does not say so, where it leads."""
 
     text: str
-    sort: str
+    sort: str | None = None
     href: str = ""
 
 
@@ -214,11 +218,25 @@ def _column_cells(frame: pd.DataFrame, column: Column) -> list[Cell]:
     values = frame[column.key].tolist()
     hrefs = frame[column.href].tolist() if column.href else [""] * len(values)
     if column.kind in ("text", "code"):
-        return [Cell(_text(v), _text(v), h) for v, h in zip(values, hrefs, strict=True)]
+        return [Cell(_text(v), None, h) for v, h in zip(values, hrefs, strict=True)]
     scaled = [_number(v) * column.factor for v in values]
     texts = numbers.aligned(_number_texts(frame, column, scaled))
-    sorts = ["" if math.isnan(v) else f"{v:.7g}" for v in scaled]
-    return [Cell(t, s, h) for t, s, h in zip(texts, sorts, hrefs, strict=True)]
+    return [Cell(t, sort_beside(t, v), h) for t, v, h in zip(texts, scaled, hrefs, strict=True)]
+
+
+_LEADING_NUMBER = re.compile(r"[\s\u2007]*([-−]?)(\d+(?:\.(\d+))?)(?![\d.e\s×]*[e×])")
+
+
+def sort_beside(text: str, value: float) -> str | None:
+    """Return what a cell sorts by, or ``None`` where the number that its text begins with says it."""
+    begins = _LEADING_NUMBER.match(text)
+    if math.isnan(value):
+        return None if begins is None else ""
+    if begins is not None:
+        shown = float(begins[2]) * (-1.0 if begins[1] else 1.0)
+        if abs(shown - value) <= 0.51 * 10.0 ** -len(begins[3] or ""):
+            return None
+    return f"{value:.7g}"
 
 
 def _number_texts(frame: pd.DataFrame, column: Column, scaled: list[float]) -> list[str]:

@@ -6,12 +6,11 @@ what that function returns stays.
 
 from __future__ import annotations
 
-import os
 from collections import Counter
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import TypeVar
+from typing import TypeVar, cast
 
 import pandas as pd
 
@@ -29,14 +28,11 @@ from campaign.recordings.checks import (
     nothing_usable,
 )
 from campaign.recordings.description import Description
-from campaign.recordings.folder import Survey, SurveyedFile, survey_folder
+from campaign.recordings.folder import Survey, survey_folder
 from campaign.recordings.identity import (
     BY_REQUEST,
     SET_ASIDE_BY_THE_LAB,
-    SOLE_GENERATION,
-    Identification,
     NamingRules,
-    identify,
     naming_rules,
 )
 from campaign.recordings.intake_tables import (
@@ -46,20 +42,12 @@ from campaign.recordings.intake_tables import (
     sessions_table,
     trials_table,
 )
-from campaign.recordings.reading import ReadOutcome, RecordingBytes, read_recordings
-from campaign.recordings.recording import Recording, Trial, TrialIdentity
-from campaign.recordings.sensor_share import Shares, TrialKey, key_of_trial, trials_of_recording
+from campaign.recordings.recording import Trial, TrialIdentity
+from campaign.recordings.sensor_share import TrialKey, key_of_trial
+from campaign.recordings.shared_reading import Progress, take_recordings
+from campaign.workers.workshop import Workshop
 
 T = TypeVar("T")
-
-Progress = Callable[[str, int, int], None]
-"""Called with what is being done, how much of it is done and how much there is."""
-
-BATCH_BYTES = 4_000_000
-"""Bytes of recordings that are read together."""
-
-BATCH_FILES = 500
-"""Recordings that are read together at most."""
 
 
 @dataclass(frozen=True)
@@ -146,6 +134,8 @@ def run_intake(
     progress: Progress | None = None,
     *,
     keep_put_back: bool = False,
+    workshop: Workshop | None = None,
+    as_bytes: bool = False,
 ) -> tuple[Intake, dict[TrialKey, T]]:
     """Read a campaign folder once, reducing each trial while its recording is in memory.
 
@@ -162,6 +152,10 @@ def run_intake(
     keep_put_back
         Whether the results of sound trials that a register sets aside are kept too; their keys are in
         ``Intake.put_back``, never in ``Intake.used``.
+    workshop
+        Who reads, and where results of earlier runs are; this process alone where ``None``.
+    as_bytes
+        See :func:`campaign.recordings.shared_reading.take_recordings`.
 
     Returns
     -------
@@ -177,13 +171,11 @@ def run_intake(
     rules = naming_rules(survey.description, survey.registers)
     results: dict[TrialKey, T] = {}
     read: list[ReadFile] = []
-    for outcome in read_campaign_files(survey, progress=progress):
-        file, trials = _take(outcome, rules)
-        read.append(file)
-        for trial in trials:
-            key = key_of_trial(trial.identity)
-            if set(file.reasons(key)) <= SET_ASIDE_BY_THE_LAB:
-                results[key] = reduce(trial)
+    for taken in take_recordings(
+        survey.recordings, rules, reduce, workshop or Workshop(), progress or _silent, as_bytes=as_bytes
+    ):
+        read.append(taken.read)
+        results |= cast(dict[TrialKey, T], taken.features)
     intake = settle(survey, rules, read)
     if (fault := nothing_usable(intake.counts)) is not None:
         raise NothingUsable(fault, intake)
@@ -196,124 +188,8 @@ def inspect_folder(folder: Path, output: Path | None = None, progress: Progress 
     return run_intake(folder, lambda _: None, output, progress)[0]
 
 
-def read_campaign_files(survey: Survey, *, progress: Progress | None = None) -> Iterator[ReadOutcome]:
-    """Read the recordings of a survey, some megabytes at a time.
-
-    Parameters
-    ----------
-    survey
-        From :func:`campaign.recordings.folder.survey_folder`.
-    progress
-        Told how many bytes are read.
-
-    Yields
-    ------
-    ReadOutcome
-        One a recording, in the order of their paths; a file that cannot be opened yields one, too.
-    """
-    total = sum(file.size_bytes for file in survey.recordings)
-    done = 0
-    tell = progress or _silent
-    tell("reading", done, total)
-    for batch in batches(survey.recordings):
-        opened = [(file, *open_recording(file)) for file in batch]
-        items = [RecordingBytes(file.file, data) for file, data, _ in opened if data is not None]
-        outcomes = {outcome.file: outcome for outcome in read_recordings(items, survey.description)}
-        for file, _, fault in opened:
-            yield outcomes[file.file] if fault is None else _unread(file, fault)
-        done += sum(file.size_bytes for file in batch)
-        tell("reading", done, total)
-
-
-def _silent(what: str, done: int, total: int) -> None:
+def _silent(_what: str, _done: int, _total: int) -> None:
     """Say nothing of progress."""
-
-
-def batches(files: Sequence[SurveyedFile]) -> Iterator[list[SurveyedFile]]:
-    """Yield files in order, :data:`BATCH_BYTES` or :data:`BATCH_FILES` at a time, whichever comes first."""
-    batch: list[SurveyedFile] = []
-    size = 0
-    for file in files:
-        batch.append(file)
-        size += file.size_bytes
-        if size >= BATCH_BYTES or len(batch) >= BATCH_FILES:
-            yield batch
-            batch, size = [], 0
-    if batch:
-        yield batch
-
-
-def open_recording(file: SurveyedFile) -> tuple[bytes | None, Notice | None]:
-    """Return the bytes of a file, or the notice that says why there are none.
-
-    A file that changed after the folder was surveyed, or while it is read, is not taken.
-    """
-    try:
-        with file.location.open("rb") as stream:
-            data = stream.read()
-            after = os.fstat(stream.fileno())
-    except FileNotFoundError:
-        return None, _not_read(file, "vanished", "the file was gone when it was to be read", "run again")
-    except OSError as fault:
-        what = f"the file cannot be opened ({fault.strerror})"
-        return None, _not_read(file, "unreadable-file", what, "make it readable")
-    if (after.st_size, after.st_mtime_ns) != (file.size_bytes, file.modified_ns) or len(
-        data
-    ) != file.size_bytes:
-        what = f"the file changed while the folder was read ({file.size_bytes} bytes, then {after.st_size})"
-        return None, _not_read(file, "changed-while-read", what, "run again when nothing is being logged")
-    return data, None
-
-
-def _unread(file: SurveyedFile, fault: Notice) -> ReadOutcome:
-    return ReadOutcome(file.file, "", file.size_bytes, None, (fault,))
-
-
-def _not_read(file: SurveyedFile, code: str, what: str, remedy: str) -> Notice:
-    return Notice(code, "set aside", file.file, None, None, what, "not read", remedy)
-
-
-def _take(outcome: ReadOutcome, rules: NamingRules) -> tuple[ReadFile, tuple[Trial, ...]]:
-    """Identify one recording and build its trials; what is returned first holds no values."""
-    file = ReadFile(
-        outcome.file,
-        outcome.sha256,
-        outcome.size_bytes,
-        notices=outcome.notices,
-        left_alone=outcome.left_alone,
-        rules_used=outcome.rules_used,
-    )
-    if outcome.recording is None:
-        return file, ()
-    identification = _with_sole_generation(identify(outcome.recording, rules), rules)
-    shares = _shares(outcome.recording, identification, rules)
-    identities = tuple(trial.identity for trial in shares.trials)
-    reasons = {
-        key_of_trial(i): (*identification.reasons, *shares.set_aside.get(key_of_trial(i), ()))
-        for i in identities
-    }
-    read = replace(
-        file,
-        rows=outcome.recording.rows,
-        identification=identification,
-        trials=identities,
-        set_aside=reasons,
-        notices=(*outcome.notices, *identification.notices, *shares.notices),
-        repetition_assumed=shares.repetition_assumed,
-    )
-    return read, shares.trials
-
-
-def _with_sole_generation(identification: Identification, rules: NamingRules) -> Identification:
-    if rules.generations_are_named or "generation" in identification.values:
-        return identification
-    return replace(identification, values=identification.values | {"generation": SOLE_GENERATION})
-
-
-def _shares(recording: Recording, identification: Identification, rules: NamingRules) -> Shares:
-    if not identification.settled:
-        return Shares((), {}, ())
-    return trials_of_recording(recording, identification, rules)
 
 
 def settle(survey: Survey, rules: NamingRules, read: Sequence[ReadFile]) -> Intake:

@@ -31,10 +31,14 @@ LineNumbers = npt.NDArray[np.int64]
 
 @dataclass(frozen=True)
 class RecordingBytes:
-    """A file that is to be read: its path from the campaign folder with forward slashes, and its bytes."""
+    """A file that is to be read: its path from the campaign folder with forward slashes, and its bytes.
+
+    ``sha256`` is that of the bytes where it is known already, else empty.
+    """
 
     file: str
     data: bytes
+    sha256: str = ""
 
 
 @dataclass(frozen=True)
@@ -112,7 +116,7 @@ def read_recordings(
 
 def _prepared(item: RecordingBytes, description: Description, careful: bool) -> _Table | ReadOutcome:
     """Decode, lay out, plan and part one file, or say why it is set aside."""
-    sha256 = hashlib.sha256(item.data).hexdigest()
+    sha256 = item.sha256 or hashlib.sha256(item.data).hexdigest()
     text = plain_text(item.data, description.encoding)
     if not text.readable:
         return _outcome(item, sha256, text.notices)

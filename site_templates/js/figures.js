@@ -365,15 +365,8 @@ window.campaign = window.campaign || {};
     if (target && window.location.hash.includes("?")) target.scrollIntoView();
   }
 
-  /* ---- beginning: sentences and links come as numbers in the page's list of texts ----------------------------------------------------------------------------------------------- */
+  /* ---- beginning ------------------------------------------------------------------------------------------ */
 
-  for (const figure of Object.values(page.figures)) {
-    for (const trace of figure.traces) {
-      for (const key of ["hovertext", "customdata"]) {
-        if (Array.isArray(trace[key])) trace[key] = trace[key].map((number) => page.texts[number]);
-      }
-    }
-  }
   for (const element of document.querySelectorAll("figure[data-figure]")) {
     const spec = page.figures[element.dataset.figure];
     if (!spec) continue;

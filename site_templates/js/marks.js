@@ -43,6 +43,9 @@ window.campaign = window.campaign || {};
     }
   }
 
+  /* Marks what was added to the page since. */
+  campaign.mark = markElements;
+
   /* Every module of the page with its sensors, from rows, edges and traces. */
   function known() {
     const modules = new Map();
@@ -52,6 +55,7 @@ window.campaign = window.campaign || {};
       if (sensor) modules.get(module).add(sensor);
     };
     for (const element of document.querySelectorAll("[data-module]")) add(element.dataset.module, element.dataset.sensor);
+    for (const rows of Object.values((window.campaignPage || {}).rows || {})) for (const row of rows) add(row[0], row[1]);
     const figures = (window.campaignPage || {}).figures || {};
     for (const figure of Object.values(figures)) {
       for (const trace of figure.traces) if (trace.meta) add(trace.meta.module, trace.meta.sensor);

@@ -20,10 +20,11 @@ from campaign.analyses.loop_model import width_components
 from campaign.analyses.loop_table import BY_LINE, BY_LOOP, LoopTable, rate_levels
 from campaign.analyses.loop_widths import BETWEEN_CYCLES, BETWEEN_RUNS
 from campaign.analyses.scope import ANALYSED
-from campaign.pipeline import REDUCED_BY, analyse, read_campaign
+from campaign.pipeline import analyse, read_campaign
 from campaign.recordings.description import Description
 from campaign.recordings.recording import STRAIN
 from campaign.trials.endurance import features_of_endurance
+from campaign.trials.reduction import REDUCED_BY
 from tests.analyses.loop_campaign import SLOPE, Truth, cyclic_campaign
 from tests.trials.test_cyclic import endurance
 

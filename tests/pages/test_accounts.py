@@ -10,7 +10,8 @@ import pandas as pd
 import pytest
 
 from campaign.notices import Notice
-from campaign.pages.provenance import CAMPAIGN_CHECKSUMS, SITE_CHECKSUMS, citation
+from campaign.pages.citation import citation
+from campaign.pages.provenance import CAMPAIGN_CHECKSUMS, SITE_CHECKSUMS
 from campaign.pages.recordings import (
     kind_counts,
     notice_groups_table,

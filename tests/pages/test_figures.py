@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 import xml.etree.ElementTree as ElementTree
 from typing import Any
 
@@ -18,10 +19,9 @@ from campaign.pages.drawing import ready
 from campaign.pages.figures import Figure
 from campaign.pages.house_style import HOUSE_TEMPLATE
 from campaign.pages.static_figure import static_svg
+from campaign.pages.static_strokes import curve
 from campaign.pages.thinning import rounded, thinned
 from campaign.pages.ticks import linear_ticks, logarithmic_ticks
-
-SVG = "{http://www.w3.org/2000/svg}"
 
 
 def made(traces: list[dict[str, Any]], layout: dict[str, Any], **more: Any) -> Figure:
@@ -56,9 +56,10 @@ def test_the_static_picture_shows_every_trace_with_a_text_alternative() -> None:
     root = ElementTree.fromstring(static_svg(every_kind()))
     assert root.get("role") == "img"
     assert root.get("aria-label") == "alternative text"
-    words = {element.text for element in root.iter(f"{SVG}text")}
+    words = {element.text for element in root.iter("text")}
     assert {"M01", "M05", "Strain / %", "Signal / pF"} <= words
-    assert len(list(root.iter(f"{SVG}rect"))) == 5 + 5  # five clips and five bars
+    bars = [e.get("d", "") for e in root.iter("path") if e.get("fill") == palette.RAMP[6]]
+    assert sum(path.count("z") for path in bars) == 5
 
 
 def test_the_static_picture_uses_currentcolor_and_colours_of_the_palette_alone() -> None:
@@ -79,7 +80,10 @@ def test_a_point_stands_where_its_values_say() -> None:
     dot = next(
         e for e in ElementTree.fromstring(static_svg(figure)).iter() if e.get("stroke-linecap") == "round"
     )
-    assert (dot.get("d"), dot.get("stroke-width")) == (f"M{x:g} {y:g}h0", "8")
+    assert (dot.get("d"), dot.get("stroke-width")) == (
+        f"M{10 * x:g} {10 * y:g}h0",
+        "80",
+    )  # whole tenths of a pixel
 
 
 def test_ranges_reach_over_error_bars_bars_and_shared_axes() -> None:
@@ -128,7 +132,7 @@ def test_texts_of_recordings_are_not_read_as_markup() -> None:
         [trace],
         figures.layout(figures.axis("x"), figures.axis("y"), annotations=[figures.label("<i>&", 0, 0)]),
     )
-    words = [e.text for e in ElementTree.fromstring(static_svg(label)).iter(f"{SVG}text")]
+    words = [e.text for e in ElementTree.fromstring(static_svg(label)).iter("text")]
     assert "<i>&" in words
 
 
@@ -170,3 +174,28 @@ def test_ticks_read_well() -> None:
     assert [text for _, text in linear_ticks(-0.25, 0.25)] == ["−0.2", "−0.1", "0.0", "0.1", "0.2"]
     assert [text for _, text in logarithmic_ticks(-1, 1)] == ["0.1", "0.2", "0.5", "1", "2", "5", "10"]
     assert [text for _, text in logarithmic_ticks(0, 6)][:3] == ["1", "10", "100"]
+
+
+@given(arrays(float, st.integers(3, 400), elements=st.floats(0, 500)))
+def test_a_curve_of_a_picture_stays_within_a_pixel_of_its_points(y: np.ndarray[Any, Any]) -> None:
+    x = np.linspace(0, 800, len(y))
+    (start, steps) = re.fullmatch(r"M(-?\d+ -?\d+)l(.*)", curve(x, y)).groups()  # type: ignore[union-attr]
+    numbers = np.array([int(n) for n in re.findall(r"-?\d+", steps)]).reshape(-1, 2)
+    places = np.cumsum([[int(n) for n in start.split()], *numbers.tolist()], axis=0) / 10
+    assert np.abs(places[-1] - (x[-1], y[-1])).max() <= 0.05 + 1e-9
+    begins, ways = places[:-1], np.diff(places, axis=0)
+    lengths = np.maximum((ways**2).sum(axis=1), 1e-12)
+    for point in np.column_stack([x, y]):
+        along = np.clip(((point - begins) * ways).sum(axis=1) / lengths, 0, 1)
+        off = np.hypot(*(begins + along[:, None] * ways - point).T).min()
+        assert off < 1.0
+
+
+def test_neighbours_that_look_alike_are_one_path_and_what_lies_within_is_not_cut_off() -> None:
+    axes = figures.layout(figures.axis("x", low=0, high=3), figures.axis("y", low=0, high=3))
+    inside = [figures.line([0, 1, 2], [i, 2, 0]) for i in range(3)]
+    root = ElementTree.fromstring(static_svg(made(inside, axes)))
+    assert len([e for e in root.iter("path") if e.get("stroke-width") == "15"]) == 1
+    assert not list(root.iter("clipPath"))
+    over = ElementTree.fromstring(static_svg(made([figures.line([0, 1], [0, 9])], axes)))
+    assert len(list(over.iter("clipPath"))) == 1

@@ -11,14 +11,22 @@ import pytest
 from campaign.analyses.scope import Scope, Span
 from campaign.pages.definitions import DEFINITIONS, definitions_of
 from campaign.pages.formulas import FORMULAS, rendered_formulas
-from campaign.pages.method import coverage_table, measured_ranges, method_page, versions
-from campaign.pages.page import Page, SiteFrame
+from campaign.pages.method import (
+    SECTIONS,
+    coverage_table,
+    measured_ranges,
+    method_pages,
+    pages_of_sections,
+    versions,
+)
+from campaign.pages.page import SiteFrame
 from campaign.pages.render import render_site, templates_folder
 from campaign.pages.tables import Column, Table, shown_cells
 from campaign.pipeline import analyse, read_campaign
 from campaign.recordings.recording import STRAIN
 
 TEMPLATES = templates_folder()
+IN_EVERY_PAGE = ("content",)
 PACKAGE = Path(__file__).parents[2] / "campaign"
 
 
@@ -49,22 +57,25 @@ def _scope(**changes: object) -> Scope:
     return Scope(**(values | changes))  # type: ignore[arg-type]
 
 
+def _site(scope: Scope, stated: bool = True) -> dict[str, str]:
+    """The Method page and its sections, by file."""
+    context = {
+        "formulas": rendered_formulas(),
+        "versions": versions(),
+        "scope": scope,
+        "reference": scope.reference,
+        "reference_stated": stated,
+        **measured_ranges(scope),
+    }
+    coverage = coverage_table(TEMPLATES / "method" / "coverage.csv")
+    files = render_site(SiteFrame("Invented", ()), pages_of_sections(context, coverage))
+    return {name: content.decode() for name, content in files.items() if name.endswith(".html")}
+
+
 def _html(scope: Scope, stated: bool = True) -> str:
-    page = Page(
-        slug="method",
-        number=13,
-        title="Method",
-        template="method.html",
-        context={
-            "formulas": rendered_formulas(),
-            "versions": versions(),
-            "scope": scope,
-            "reference": scope.reference,
-            "reference_stated": stated,
-            **measured_ranges(scope),
-        },
-    )
-    return render_site(SiteFrame("Invented", ()), [page])["method.html"].decode()
+    """All sections, one after the other."""
+    site = _site(scope, stated)
+    return "".join(site[f"{section.slug}.html"] for section in SECTIONS)
 
 
 @pytest.fixture(scope="module")
@@ -81,7 +92,7 @@ def test_every_formula_is_shown_once_or_more_and_obeys_the_content_policy(html: 
 
 
 def test_every_definition_has_an_address_of_its_own_and_a_source(html: str) -> None:
-    ids = re.findall(r'\bid="([^"]+)"', html)
+    ids = [name for name in re.findall(r'\sid="([^"]+)"', html) if name not in IN_EVERY_PAGE]
     assert len(ids) == len(set(ids))
     definitions = re.findall(r'<section class="definition" id="([^"]+)">(.*?)</section>', html, re.DOTALL)
     assert len(definitions) > 30
@@ -89,13 +100,29 @@ def test_every_definition_has_an_address_of_its_own_and_a_source(html: str) -> N
     assert without == ["coverage"]
 
 
-def test_links_to_definitions_find_them(html: str) -> None:
+def test_links_to_definitions_find_them() -> None:
+    """Every address that templates and code name stands on the Method page, which leads to the section."""
     texts = [p.read_text() for p in (*TEMPLATES.rglob("*.html"), *PACKAGE.rglob("*.py"))]
-    link = re.compile(r"method\.html#([\w-]+)|\bterm\(\s*[\"']([\w-]+)")
+    link = re.compile(r"method\.html#([a-z][\w-]*)|\bterm\(\s*[\"']([\w-]+)")
     wanted = {anchor for text in texts for pair in link.findall(text) for anchor in pair if anchor}
     assert {"linearity", "versions"} <= wanted
     wanted |= {anchor for anchor, _ in DEFINITIONS.values()}
-    assert sorted(wanted - set(re.findall(r'\bid="([^"]+)"', html))) == []
+    index = _site(_scope())["method.html"]
+    assert sorted(wanted - set(re.findall(r'\bid="([^"]+)"', index))) == []
+
+
+def test_every_section_has_a_page_of_its_own_that_links_lead_to() -> None:
+    templates = {path.stem for path in (TEMPLATES / "method").glob("*.html")}
+    assert sorted(name for section in SECTIONS for name in section.templates) == sorted(templates)
+    site = _site(_scope())
+    for section in SECTIONS:
+        page = site[f"{section.slug}.html"]
+        entries = re.findall(rf'href="{section.slug}\.html#([^"]+)"', site["method.html"])
+        assert set(entries) <= set(re.findall(r'\bid="([^"]+)"', page))
+        assert section.anchor in re.findall(r'\bid="([^"]+)"', page)
+    spread = site["method-spread.html"]
+    assert 'href="method-lines.html#' in "".join(site.values())
+    assert not re.search(r'href="method\.html#(?!versions)', spread)
 
 
 def test_columns_that_a_table_shows_are_explained_below_it() -> None:
@@ -146,8 +173,8 @@ def test_text_for_a_paper_tells_of_the_kinds_that_were_measured_and_of_no_others
 
 
 def _paper_of(folder: Path) -> str:
-    page = method_page(analyse(read_campaign(folder)))
-    html = render_site(SiteFrame("Real", ()), [page])["method.html"].decode()
+    pages = method_pages(analyse(read_campaign(folder)))
+    html = render_site(SiteFrame("Real", ()), pages)["method-paper.html"].decode()
     words = re.sub(r"\s+", " ", re.sub(r"<[^>]+>", "", html)).replace("\u202f", " ").replace("\xa0", " ")
     return words[words.index("Measurements.") : words.index("Software.")]
 

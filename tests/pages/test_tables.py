@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import io
 import json
+import math
 
 import numpy as np
 import pandas as pd
@@ -18,6 +19,7 @@ from campaign.pages.tables import (
     schema_bytes,
     shown_cells,
     shown_marks,
+    sort_beside,
 )
 from campaign.recordings.recording import ELONGATION, STRAIN
 
@@ -85,12 +87,31 @@ def test_cells_are_rounded_by_their_uncertainty_or_interval_and_sort_by_the_valu
     first, second = shown_cells(table)
     assert first[0].href == "sensor-M01-AB.html"
     assert first[1].text == "0.3000 ± 0.0040"
-    assert first[1].sort == "0.3"
+    assert first[1].sort is None  # it begins with the number that it sorts by
     assert first[2].text == "0.300 [0.290, 0.310]"
     assert first[3].text == "30.0"
     assert [cell.text for cell in second[1:]] == ["not identifiable from this design"] * 3 + ["no"]
-    assert second[1].sort == ""
+    assert second[1].sort is None  # no number to begin with: missing
     assert shown_marks(table) == [("M01", "AB"), ("M02", "=1+1")]
+
+
+@pytest.mark.parametrize(
+    ("text", "value", "sort"),
+    [
+        ("0.300 ± 0.010", 0.3004, None),
+        ("−12 [−13, −11]", -12.4, None),
+        ("\u2007\u20075.0", 5.02, None),
+        ("< 0.001", 2e-5, "2e-05"),
+        ("1.2 × 10⁻⁵", 1.2e-5, "1.2e-05"),
+        ("1\u202f234", 1234.0, "1234"),
+        ("not measured", math.nan, None),
+        ("1 at most", math.nan, ""),
+    ],
+)
+def test_a_cell_says_what_it_sorts_by_only_where_its_text_does_not(
+    text: str, value: float, sort: str | None
+) -> None:
+    assert sort_beside(text, value) == sort
 
 
 def test_the_page_shows_some_rows_and_the_file_all() -> None:

@@ -22,7 +22,8 @@ from campaign.recordings.folder import (
     list_files,
     survey_folder,
 )
-from campaign.recordings.intake import inspect_folder, open_recording
+from campaign.recordings.intake import inspect_folder
+from campaign.recordings.reading_step import open_recording
 
 CampaignMaker = Callable[..., Path]
 NAME = "trials/M01_AB_staircase_r1.csv"

@@ -12,9 +12,10 @@ import numpy as np
 import pytest
 
 from campaign.notices import NOTICE_CODES
-from campaign.recordings.intake import BATCH_FILES, Intake, NothingUsable, inspect_folder, run_intake
+from campaign.recordings.intake import Intake, NothingUsable, inspect_folder, run_intake
 from campaign.recordings.intake_tables import NOTICE_COLUMNS, RECORDING_COLUMNS, TRIAL_COLUMNS, notices_table
 from campaign.recordings.recording import Trial
+from campaign.recordings.shared_reading import BATCH_FILES
 
 CampaignMaker = Callable[..., Path]
 StaircaseMaker = Callable[..., str]

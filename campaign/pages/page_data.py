@@ -1,0 +1,220 @@
+"""The data script of a page: figures, tables' further rows and values, nothing said twice.
+
+``assets/unfold.js`` puts everything back before any other script sees it, as :func:`unfolded` does.
+
+- What traces, axes and labels share (looks, units, ranges) stands once in ``shared``; ``"$"`` is its place.
+- Sentences and links stand once in ``texts``. The sentences of one trace that differ in some words only are
+  one sentence with gaps and a list of words for each gap, ``{"t": place, "v": ["1|2|3", "0.52|0.48|0.61"]}``;
+  a gap with one word for all points holds that word alone.
+"""
+
+from __future__ import annotations
+
+import json
+import re
+from collections.abc import Mapping, Sequence
+from typing import Any
+
+import orjson
+
+from campaign.pages.figures import Figure, Layout, Trace
+from campaign.pages.house_style import NOTE_DEFAULTS
+from campaign.pages.page import Page
+from campaign.pages.tables import Cell
+
+GAP = "\ue000"
+"""Stands in a sentence where a word of its own goes (a private character of Unicode)."""
+BETWEEN = "|"
+"""Stands between the words of one gap."""
+
+_HEAD, _TAIL = b"window.campaignPage = ", b";\n"
+_OWN_OF_TRACE = frozenset(
+    {"x", "y", "name", "meta", "hovertext", "customdata", "text", "error_x", "error_y", "base"}
+)
+_OWN_OF_AXIS = frozenset({"domain", "anchor", "matches"})
+_OWN_OF_LABEL = frozenset({"text", "x", "y", "xref", "yref"})
+_WORDS = re.compile(r"([ \u202f:,;()\[\]]+)")
+
+
+class Fold:
+    """What a page's script holds once: shared looks and texts, each by its place in a list."""
+
+    def __init__(self) -> None:
+        self._shared: dict[bytes, int] = {}
+        self._texts: dict[str, int] = {}
+
+    @property
+    def shared(self) -> list[orjson.Fragment]:
+        """The shared looks, in order."""
+        return [orjson.Fragment(look) for look in self._shared]
+
+    @property
+    def texts(self) -> list[str]:
+        """The texts, in order."""
+        return list(self._texts)
+
+    def trace(self, trace: Trace) -> Trace:
+        """Return a trace with its looks, sentences and links folded."""
+        made = self._parted(trace, _OWN_OF_TRACE)
+        if isinstance(trace.get("meta"), dict):
+            made["meta"] = self._looks(trace["meta"])
+        if isinstance(trace.get("customdata"), list):
+            made["customdata"] = self._links(trace["customdata"])
+        if isinstance(trace.get("hovertext"), list):
+            made["hovertext"] = self._sentences(trace["hovertext"])
+        return made
+
+    def layout(self, layout: Layout) -> Layout:
+        """Return a layout with its axes and labels folded."""
+        made = {
+            key: self._parted(value, _OWN_OF_AXIS) if key.startswith(("xaxis", "yaxis")) else value
+            for key, value in layout.items()
+        }
+        labels = [_without_defaults(note) for note in layout.get("annotations", ())]
+        return {**made, "annotations": [self._parted(note, _OWN_OF_LABEL) for note in labels]}
+
+    def _parted(self, whole: Mapping[str, Any], own: frozenset[str]) -> dict[str, Any]:
+        looks = {key: value for key, value in whole.items() if key not in own}
+        return {"$": self._looks(looks), **{key: value for key, value in whole.items() if key in own}}
+
+    def _looks(self, looks: Mapping[str, Any]) -> int:
+        written = orjson.dumps(looks, option=orjson.OPT_SORT_KEYS | orjson.OPT_SERIALIZE_NUMPY)
+        return self._shared.setdefault(written, len(self._shared))
+
+    def _text(self, text: str) -> int:
+        return self._texts.setdefault(text, len(self._texts))
+
+    def _links(self, links: Sequence[str]) -> int | list[int]:
+        """Return the places of links, one number where all points lead to the same."""
+        if links and all(link == links[0] for link in links):
+            return self._text(links[0])
+        return [self._text(link) for link in links]
+
+    def _sentences(self, sentences: Sequence[str]) -> dict[str, Any] | list[int]:
+        parts = _parted_sentences(sentences)
+        if parts is None:
+            return [self._text(sentence) for sentence in sentences]
+        with_gaps, words = parts
+        return {"t": self._text(with_gaps), "v": words}
+
+
+def _parted_sentences(sentences: Sequence[str]) -> tuple[str, list[str]] | None:
+    """Return one sentence with gaps and each gap's words, or ``None`` where the sentences differ more."""
+    if not sentences or any(GAP in s or BETWEEN in s for s in sentences):
+        return None
+    rows = [_WORDS.split(sentence) for sentence in sentences]
+    if any(len(row) != len(rows[0]) for row in rows):
+        return None
+    with_gaps, words = "", []
+    for place, column in enumerate(zip(*rows, strict=True)):
+        first = column[0]
+        same = all(word == first for word in column)
+        if place % 2 == 1 and not same:
+            return None
+        if same and not any(map(str.isdigit, first)):
+            with_gaps += first
+        else:
+            with_gaps += GAP
+            words.append(first if same else BETWEEN.join(column))
+    return with_gaps, words
+
+
+def _without_defaults(note: Layout) -> Layout:
+    """Return a label without what the house template says of every label."""
+    return {key: value for key, value in note.items() if NOTE_DEFAULTS.get(key) != value}
+
+
+def data_script(
+    page: Page, figures: Mapping[str, Figure], further_rows: Mapping[str, list[list[Any]]] | None = None
+) -> bytes:
+    """Return ``data/SLUG.js``: a classic script that hands the page's figures, rows and values on.
+
+    Parameters
+    ----------
+    page
+        The page.
+    figures
+        Its figures by name, ready to be drawn.
+    further_rows
+        Rows of its tables that the page itself does not hold, as :func:`folded_row` makes them.
+    """
+    fold = Fold()
+    drawn = {
+        name: {
+            "traces": [fold.trace(trace) for trace in figure.traces],
+            "layout": fold.layout(figure.layout),
+            "height": figure.height,
+        }
+        for name, figure in figures.items()
+    }
+    content = {
+        "slug": page.slug,
+        "figures": drawn,
+        "shared": fold.shared,
+        "texts": fold.texts,
+        "rows": further_rows or {},
+        "values": dict(page.data),
+    }
+    return _HEAD + orjson.dumps(content, option=orjson.OPT_SERIALIZE_NUMPY | orjson.OPT_SORT_KEYS) + _TAIL
+
+
+def folded_row(marks: tuple[str, str], cells: Sequence[Cell]) -> list[Any]:
+    """Return a row as the script holds it: module, sensor, then its cells (a text, or a text and more)."""
+    return [*marks, *(_folded_cell(cell) for cell in cells)]
+
+
+def _folded_cell(cell: Cell) -> str | list[str]:
+    if cell.sort is not None:
+        return [cell.text, cell.href, cell.sort]
+    return [cell.text, cell.href] if cell.href else cell.text
+
+
+def unfolded(script: bytes) -> dict[str, Any]:
+    """Return what a page's script holds, as the site's scripts see it once it is unfolded.
+
+    Raises
+    ------
+    ValueError
+        Where *script* is no data script.
+    """
+    if not (script.startswith(_HEAD) and script.endswith(_TAIL)):
+        raise ValueError("not a data script")
+    page: dict[str, Any] = json.loads(script[len(_HEAD) : -len(_TAIL)])
+    for figure in page["figures"].values():
+        figure["traces"] = [_unfolded_trace(trace, page) for trace in figure["traces"]]
+        layout: dict[str, Any] = {
+            key: _whole(value, page) if key.startswith(("xaxis", "yaxis")) else value
+            for key, value in figure["layout"].items()
+        }
+        layout["annotations"] = [_whole(note, page) for note in layout["annotations"]]
+        figure["layout"] = layout
+    return page
+
+
+def _unfolded_trace(trace: dict[str, Any], page: dict[str, Any]) -> dict[str, Any]:
+    made, texts = _whole(trace, page), page["texts"]
+    if "meta" in made:
+        made["meta"] = page["shared"][made["meta"]]
+    if "customdata" in made:
+        places = made["customdata"]
+        places = places if isinstance(places, list) else [places] * len(made["x"])
+        made["customdata"] = [texts[place] for place in places]
+    hover = made.get("hovertext")
+    if isinstance(hover, list):
+        made["hovertext"] = [texts[place] for place in hover]
+    elif isinstance(hover, dict):
+        made["hovertext"] = [_filled(texts[hover["t"]], hover["v"], i) for i in range(len(made["x"]))]
+    return made
+
+
+def _filled(with_gaps: str, words: Sequence[str], index: int) -> str:
+    first, *rest = with_gaps.split(GAP)
+    own = [column.split(BETWEEN) for column in words]
+    return first + "".join(
+        (column[index] if len(column) > 1 else column[0]) + after
+        for column, after in zip(own, rest, strict=True)
+    )
+
+
+def _whole(parted: dict[str, Any], page: dict[str, Any]) -> dict[str, Any]:
+    return {**page["shared"][parted["$"]], **{key: value for key, value in parted.items() if key != "$"}}
