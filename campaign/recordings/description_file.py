@@ -525,7 +525,7 @@ _COSTS = ("module", "sensor", "repetition")
 
 def _read_earlier(table: CheckedTable) -> dict[str, str]:
     """Return ``folder`` or ``archive`` as written, one of the two."""
-    stated = {key: table.text(key) for key in ("folder", "archive") if key in table.values}
+    stated: dict[str, str] = {key: table.text(key) for key in ("folder", "archive") if key in table.values}
     remedy = "name an earlier campaign's folder or archive"
     if not stated:
         table.fault("value-missing", "folder", "is not stated", remedy)
