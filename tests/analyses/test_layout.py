@@ -102,8 +102,8 @@ def test_sums_of_edges_have_the_spread_that_the_whole_covariance_says() -> None:
     for line in (OWN_LINE, GENERATION_LINE):
         sums = laid().layout.sums
         sums = sums[sums["read_by"] == line]
-        # 2,000 draws: a relative SD of 0.016
-        assert sums["sd_monte_carlo_mm"].to_numpy() == pytest.approx(sums["sd_mm"].to_numpy(), rel=0.07)
+        # 1,000 draws: a relative SD of 0.022
+        assert sums["sd_monte_carlo_mm"].to_numpy() == pytest.approx(sums["sd_mm"].to_numpy(), rel=0.09)
         known = NODE * np.sqrt(12.0)
         standardised = (sums["estimate_mm"] - sums["known_mm"]) / np.hypot(sums["sd_mm"], known)
         assert 0.3 < np.sqrt(np.mean(standardised**2)) < 1.9
@@ -373,7 +373,7 @@ def test_errors_after_the_best_fit_are_never_larger_than_in_the_frame_of_a_datum
 def test_monte_carlo_stands_beside_first_order() -> None:
     for p in laid().layout.of_line(OWN_LINE):
         assert p.monte_carlo is not None
-        assert p.monte_carlo.draws == 2000
+        assert p.monte_carlo.draws == 1000
         assert p.monte_carlo.failed == 0
         assert not p.monte_carlo.first_order_fails.any()
         first, second = (np.sqrt(np.diag(c)) for c in (p.covariance_mm2, p.monte_carlo.covariance_mm2))
