@@ -264,7 +264,8 @@ def read_earlier(folder: Path, read: CampaignRead, progress: Progress | None = N
         except CampaignStops as stop:
             first = stop.notices[0]
             known = first.code == _NOT_JOINED
-            notices.append(first if known else _not_joined(where, first.what, first.remedy))
+            what = first.what.replace(str(folder / where), where)  # no path of this machine in a site
+            notices.append(first if known else _not_joined(where, what, first.remedy))
     return join(found, order_of_generations(read.intake), notices)
 
 

@@ -474,14 +474,8 @@ def _read_limits(table: CheckedTable | None) -> dict[str, object]:
 
 def _read_margin(margins: CheckedTable, key: str) -> tuple[float, str]:
     """Read an equivalence margin: a limit's own units first, then any known one; per cent is a ratio."""
-    families = (
-        *LIMIT_FAMILIES.get(key, ()),
-        *SHARE_OF_FULL_SCALE,
-        "ratio",
-        *REFERENCE_FAMILIES,
-        "time",
-        *QUANTITY_FAMILIES["signal"],
-    )
+    any_known = (*SHARE_OF_FULL_SCALE, "ratio", *REFERENCE_FAMILIES, "time", *QUANTITY_FAMILIES["signal"])
+    families = (*LIMIT_FAMILIES.get(key, ()), *any_known)
     return margins.quantity_and_unit(key, families)
 
 
@@ -525,7 +519,7 @@ _COSTS = ("module", "sensor", "repetition")
 
 def _read_earlier(table: CheckedTable) -> dict[str, str]:
     """Return ``folder`` or ``archive`` as written, one of the two."""
-    stated = {key: table.text(key) for key in ("folder", "archive") if key in table.values}
+    stated: dict[str, str] = {key: table.text(key) for key in ("folder", "archive") if key in table.values}
     remedy = "name an earlier campaign's folder or archive"
     if not stated:
         table.fault("value-missing", "folder", "is not stated", remedy)
