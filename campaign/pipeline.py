@@ -433,7 +433,7 @@ def analyse(
             *influence_findings(pressure, influences, limits, back.pressure),
             *generation_findings(generations),
             *planning_findings(planning),
-            *budget_findings(budget),
+            *budget_findings(budget, limits),
         ],
         reference=readings.reference,
     )
