@@ -389,6 +389,16 @@ def analyse(
     logged += [(f.identity, f.logged) for f in laid_out if f.logged is not None]
     pressure = analyse_pressure(sweeps, calibration, description, logged)
     influences = analyse_influences(sweeps, calibration, description)
+    back = analyse_put_back(read, put_back or calibration)
+    others = [found for found in (hysteresis, drift, pressure) if found is not None]
+    readings = read.readings
+    if not len(readings.table) and others:
+        readings = replace(readings, reference=others[0].reference)
+    budget = analyse_budget(description, calibration, variance, hysteresis, drift, pressure, influences)
+    registers = intake.modules, intake.sensors
+    layout = analyse_layout(
+        read.of_type(LayoutFeatures), calibration, variance, influences, description, registers
+    )
     joined = earlier or Joined()
     own = comparable_figures(
         description,
@@ -399,21 +409,14 @@ def analyse(
         hysteresis,
         drift,
         pressure,
+        budget,
+        layout,
+        _geometries(intake),
     )
     generations = _compare(intake, own, joined)
     scope = describe_scope(description, intake, calibration, read.readings.reference)
     planning = analyse_planning(
         description, scope.reference, variance.by_generation if variance is not None else (), scope
-    )
-    back = analyse_put_back(read, put_back or calibration)
-    others = [found for found in (hysteresis, drift, pressure) if found is not None]
-    readings = read.readings
-    if not len(readings.table) and others:
-        readings = replace(readings, reference=others[0].reference)
-    budget = analyse_budget(description, calibration, variance, hysteresis, drift, pressure, influences)
-    registers = intake.modules, intake.sensors
-    layout = analyse_layout(
-        read.of_type(LayoutFeatures), calibration, variance, influences, description, registers
     )
     judged = [found.figures for found in (*others, budget, layout) if found is not None]
     limits = judge_limits(description, calibration, judged, budget.missing if budget is not None else None)
@@ -463,6 +466,14 @@ def analyse(
         earlier=joined.campaigns,
         rehearsal=rehearsal,
     )
+
+
+def _geometries(intake: Intake) -> dict[str, str]:
+    """Module → the geometry that modules.csv names for it."""
+    modules = intake.modules
+    if "geometry" not in modules:
+        return {}
+    return dict(zip(modules["module"].astype(str), modules["geometry"].fillna("").astype(str), strict=True))
 
 
 def _compare(intake: Intake, own: Comparable, earlier: Joined) -> Generations | None:

@@ -88,7 +88,7 @@ def comparison_figures(compared: Generations) -> Iterator[Figure]:
     """Return the newest against each other: ratios, differences by unit, then the module means."""
     table = compared.table
     table = table[table["second"] == compared.names[-1]].reset_index(drop=True)
-    ratios = table[(table["kind"] == "ratio") & table["difference_or_ratio"].gt(0)]
+    ratios = table[(table["kind"] == "ratio") & table["difference_or_ratio"].notna()]
     if len(ratios):
         ends = _ratio_ends(ratios)
         yield _rows_figure(
@@ -195,6 +195,7 @@ def _marks(
     ends = [10**e for e in x["range"]] if x.get("type") == "log" else list(x["range"])
     for row, height in zip(rows.to_dict("records"), heights, strict=True):
         estimate, low, high = (float(row[key]) * factor for key in ("difference_or_ratio", "low", "high"))
+        estimate = max(estimate, ends[0])  # a ratio of zero has no place on its axis but the end
         low = max(low, ends[0]) if not math.isnan(low) else low
         high = min(high, ends[1]) if not math.isnan(high) else high
         pair = f"{row['first']} → {row['second']}, "
