@@ -425,7 +425,8 @@ def read_earlier(
         except CampaignStops as stop:
             first = stop.notices[0]
             known = first.code == _NOT_JOINED
-            notices.append(first if known else _not_joined(where, first.what, first.remedy))
+            what = first.what.replace(str(folder / where), where)  # no path of this machine in a site
+            notices.append(first if known else _not_joined(where, what, first.remedy))
     return join(found, order_of_generations(read.intake), notices)
 
 
@@ -548,6 +549,16 @@ def analyse(
     logged += [(f.identity, f.logged) for f in laid_out if f.logged is not None]
     pressure = analyse_pressure(sweeps, calibration, description, logged)
     influences = analyse_influences(sweeps, calibration, description)
+    back = analyse_put_back(read, put_back or calibration)
+    others = [found for found in (hysteresis, drift, pressure) if found is not None]
+    readings = read.readings
+    if not len(readings.table) and others:
+        readings = replace(readings, reference=others[0].reference)
+    budget = analyse_budget(description, calibration, variance, hysteresis, drift, pressure, influences)
+    registers = intake.modules, intake.sensors
+    layout = analyse_layout(
+        read.of_type(LayoutFeatures), calibration, variance, influences, description, registers
+    )
     joined = earlier or Joined()
     own = comparable_figures(
         description,
@@ -558,21 +569,14 @@ def analyse(
         hysteresis,
         drift,
         pressure,
+        budget,
+        layout,
+        _geometries(intake),
     )
     generations = _compare(intake, own, joined)
     scope = describe_scope(description, intake, calibration, read.readings.reference)
     planning = analyse_planning(
         description, scope.reference, variance.by_generation if variance is not None else (), scope
-    )
-    back = analyse_put_back(read, put_back or calibration)
-    others = [found for found in (hysteresis, drift, pressure) if found is not None]
-    readings = read.readings
-    if not len(readings.table) and others:
-        readings = replace(readings, reference=others[0].reference)
-    budget = analyse_budget(description, calibration, variance, hysteresis, drift, pressure, influences)
-    registers = intake.modules, intake.sensors
-    layout = analyse_layout(
-        read.of_type(LayoutFeatures), calibration, variance, influences, description, registers
     )
     judged = [found.figures for found in (*others, budget, layout) if found is not None]
     limits = judge_limits(description, calibration, judged, budget.missing if budget is not None else None)
@@ -592,7 +596,7 @@ def analyse(
             *influence_findings(pressure, influences, limits, back.pressure),
             *generation_findings(generations),
             *planning_findings(planning),
-            *budget_findings(budget),
+            *budget_findings(budget, limits),
         ],
         reference=readings.reference,
     )
@@ -622,6 +626,14 @@ def analyse(
         earlier=joined.campaigns,
         rehearsal=rehearsal,
     )
+
+
+def _geometries(intake: Intake) -> dict[str, str]:
+    """Module → the geometry that modules.csv names for it."""
+    modules = intake.modules
+    if "geometry" not in modules:
+        return {}
+    return dict(zip(modules["module"].astype(str), modules["geometry"].fillna("").astype(str), strict=True))
 
 
 def _compare(intake: Intake, own: Comparable, earlier: Joined) -> Generations | None:

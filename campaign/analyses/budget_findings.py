@@ -7,7 +7,8 @@ from dataclasses import dataclass
 
 from campaign.analyses.budget import Budget
 from campaign.analyses.budget_model import NOT_KNOWN, BudgetInUse
-from campaign.analyses.findings import Finding
+from campaign.analyses.findings import Finding, limit_value, verdict_of_limit
+from campaign.analyses.limits import Limits
 
 
 @dataclass(frozen=True)
@@ -31,6 +32,9 @@ class BudgetFinding:
         Their number.
     missing
         Sources that are not known for the new sensor, or for any of the sensors.
+    limit, exceeding
+        ``[limits] strain_error`` in units of x, NaN where none is stated, and how many sensors with their own
+        lines exceed it.
     """
 
     generation: str
@@ -46,6 +50,8 @@ class BudgetFinding:
     own_share: float
     sensors: int
     missing: tuple[str, ...]
+    limit: float
+    exceeding: int
 
     @property
     def has_new(self) -> bool:
@@ -53,17 +59,19 @@ class BudgetFinding:
         return self.new == self.new
 
 
-def budget_findings(budget: Budget | None) -> tuple[Finding, ...]:
+def budget_findings(budget: Budget | None, limits: Limits) -> tuple[Finding, ...]:
     """Return what page 0 says of what adds up in use; nothing without a budget."""
     if budget is None:
         return ()
     new = {found.subject.generation: found for found in budget.of_new_sensors()}
     generations = sorted({subject.generation for subject in budget.subjects})
-    facts = [_fact(name, new.get(name), budget) for name in generations]
-    return (Finding("budget", tuple(fact for fact in facts if fact is not None)),)
+    limit = limit_value(limits, "strain_error")
+    facts = [_fact(name, new.get(name), budget, limit) for name in generations]
+    verdict = verdict_of_limit(limits, "strain_error")
+    return (Finding("budget", tuple(f for f in facts if f is not None), verdict, "strain_error"),)
 
 
-def _fact(generation: str, new: BudgetInUse | None, budget: Budget) -> BudgetFinding | None:
+def _fact(generation: str, new: BudgetInUse | None, budget: Budget, limit: float) -> BudgetFinding | None:
     own = [found for found in budget.of_sensors() if found.subject.generation == generation]
     if not own:
         return None
@@ -87,6 +95,8 @@ def _fact(generation: str, new: BudgetInUse | None, budget: Budget) -> BudgetFin
         own_share,
         len(own),
         tuple(dict.fromkeys(name for found in every for name in found.unknown)),
+        limit,
+        sum(reach > limit for reach in expanded),
     )
 
 

@@ -337,7 +337,7 @@ def collect_findings(
     if effort is not None:
         findings += _effort_findings(effort, limits)
     if calibration is not None:
-        findings += _accuracy_findings(calibration, limits, put_back)
+        findings += _accuracy_findings(calibration, put_back)
     if variance is not None:
         findings += _spread_findings(variance)
     if calibration is not None:
@@ -466,22 +466,18 @@ def _effort(row: pd.Series) -> Effort:
     )
 
 
-def _accuracy_findings(
-    calibration: Calibration, limits: Limits, put_back: Calibration | None
-) -> list[Finding]:
-    limit = limit_value(limits, "strain_error")
+def _accuracy_findings(calibration: Calibration, put_back: Calibration | None) -> list[Finding]:
+    """By the records alone: the limit of the error in use is judged by the budget."""
     parts = [
         sum_up(
-            _record_figures(calibration, n), limit, None if put_back is None else _record_figures(put_back, n)
+            _record_figures(calibration, n),
+            math.nan,
+            None if put_back is None else _record_figures(put_back, n),
         )
         for n in (1, AVERAGED)
     ]
     facts = tuple(AccuracyFinding(one, several) for one, several in zip(*parts, strict=True))
-    return (
-        [Finding("accuracy", facts, verdict_of_limit(limits, "strain_error"), "strain_error")]
-        if facts
-        else []
-    )
+    return [Finding("accuracy", facts)] if facts else []
 
 
 def _record_figures(calibration: Calibration, readings: int) -> pd.DataFrame:

@@ -10,6 +10,7 @@ from typing import TYPE_CHECKING, Literal
 import pandas as pd
 
 from campaign.analyses.hold_figures import OF_FULL_SCALE
+from campaign.analyses.layout_results import OWN_LINE
 from campaign.analyses.sensor_figures import principal_lines, sensor_figures
 from campaign.analyses.variance_fit import GenerationFit, is_withheld
 from campaign.analyses.variance_frames import ON_NOISE
@@ -18,9 +19,11 @@ from campaign.recordings.description import Description
 from campaign.recordings.recording import TrialIdentity
 
 if TYPE_CHECKING:
+    from campaign.analyses.budget import Budget
     from campaign.analyses.calibration import Calibration
     from campaign.analyses.drift import Drift
     from campaign.analyses.hysteresis import Hysteresis
+    from campaign.analyses.layout_results import Layout
     from campaign.analyses.pressure import Pressure
 
 Kind = Literal["difference", "ratio"]
@@ -61,6 +64,7 @@ class HeadlineFigure:
 _IN_FULL_SCALE = (RANGE, FULL_SCALE)
 
 SENSOR_FIGURES: tuple[HeadlineFigure, ...] = (
+    HeadlineFigure("expanded_uncertainty", "difference", True, (REACH,)),
     HeadlineFigure("strain_error", "difference", True, (REACH,)),
     HeadlineFigure("linearity", "difference", True, _IN_FULL_SCALE),
     HeadlineFigure("hysteresis", "difference", True, (REACH, *_IN_FULL_SCALE, RATE)),
@@ -69,6 +73,7 @@ SENSOR_FIGURES: tuple[HeadlineFigure, ...] = (
     HeadlineFigure("drift_1h", "difference", True, (FULL_SCALE, HELD_AT)),
     HeadlineFigure("slope_per_decade", "difference", True, (FULL_SCALE, HELD_AT)),
     HeadlineFigure("pressure_sensitivity", "difference", True),
+    HeadlineFigure("node_error", "difference", True),
     HeadlineFigure("slope", "ratio", False),
     HeadlineFigure("gauge_factor", "ratio", False),
     HeadlineFigure("zero_signal", "ratio", False),
@@ -161,6 +166,9 @@ def comparable_figures(
     hysteresis: Hysteresis | None,
     drift: Drift | None,
     pressure: Pressure | None,
+    budget: Budget | None = None,
+    layout: Layout | None = None,
+    geometries: Mapping[str, str] | None = None,
 ) -> Comparable:
     """Gather every headline figure of a campaign.
 
@@ -170,15 +178,17 @@ def comparable_figures(
         Rated range, direction in use.
     identities
         Of the trials that are used: batch and position of every sensor.
-    calibration, hysteresis, drift, pressure
+    calibration, hysteresis, drift, pressure, budget, layout
         The analyses, ``None`` where not measured.
+    geometries
+        Module → geometry of its nodes: node errors are compared between modules of one geometry.
     fits
         The nested fit of each generation by itself.
     uneven
         Generations whose noise forbids intervals of repetition and residual.
     """
     parts = [*_of_lines(calibration, description), *_of_loops(hysteresis), *_of_holds(drift)]
-    parts += _of_pressure(pressure)
+    parts += [*_of_pressure(pressure), *_of_budget(budget), *_of_layout(layout, geometries or {})]
     values = _joined(parts, identities)
     known = values.drop_duplicates(["generation", "module"])["generation"].value_counts()
     fits = tuple(fits)
@@ -198,10 +208,11 @@ def _joined(parts: list[pd.DataFrame], identities: Iterable[TrialIdentity]) -> p
     if not kept:
         return pd.DataFrame(columns=list(VALUE_COLUMNS))
     values = pd.concat(kept, ignore_index=True).dropna(subset=["value"])
-    places = {(i.generation, i.module, i.sensor): (i.batch, i.position or i.sensor) for i in identities}
-    owners = [
-        places.get(key, ("", key[2])) for key in values[_KEYS].astype(str).itertuples(index=False, name=None)
-    ]
+    known = list(identities)
+    places = {(i.generation, i.module, i.sensor): (i.batch, i.position or i.sensor) for i in known}
+    batches = {i.module: i.batch for i in known}
+    sensors = values[_KEYS].astype(str).itertuples(index=False, name=None)
+    owners = [places.get(key, (batches.get(key[1], ""), key[2])) for key in sensors]
     values = values.assign(batch=[b for b, _ in owners], position=[p for _, p in owners])
     return values[list(VALUE_COLUMNS)].reset_index(drop=True)
 
@@ -253,6 +264,24 @@ def _of_pressure(pressure: Pressure | None) -> Iterator[pd.DataFrame]:
         table = pressure.table
         unit = f"{pressure.reference.unit} per kPa"
         yield _figure("pressure_sensitivity", unit, table, table["strain_error_per_kpa"].abs())
+
+
+def _of_budget(budget: Budget | None) -> Iterator[pd.DataFrame]:
+    """Expanded uncertainty in use of every measured sensor, where it is largest."""
+    if budget is not None:
+        totals = budget.totals
+        own = totals[totals["worst"].astype(bool) & (totals["sensor"].astype(str) != "")]
+        yield _figure("expanded_uncertainty", budget.reference.unit, own, own["expanded_strain"])
+
+
+def _of_layout(layout: Layout | None, geometries: Mapping[str, str]) -> Iterator[pd.DataFrame]:
+    """Node error of every module, read by its sensors' own lines; its geometry stands for the position."""
+    if layout is None:
+        return
+    rows = layout.by_module
+    own = rows[(rows["read_by"] == OWN_LINE) & (rows["figure"] == "node error after best fit")]
+    named = own.assign(sensor=[geometries.get(str(module), "") for module in own["module"]])
+    yield _figure("node_error", "mm", named, named["rms_mm"])
 
 
 def _spreads(fits: Iterable[GenerationFit], uneven: set[str]) -> Iterator[Spread]:

@@ -38,6 +38,7 @@ FEWEST_BATCHES = 3
 TOO_FEW_MODULES = "too few modules"
 NOT_DECIDED = "not decided"
 AT_COMMON_POSITIONS = "at common positions"
+NO_COMMON_POSITION = "their sensors share no position"
 EQUIVALENT = "equivalent"
 
 SIGNIFICANT = 0.05
@@ -106,7 +107,7 @@ def compare_means(
         kind=kind,
         found=joined(means[0], means[1]),
         p_equivalence=_equivalence(kind, means[0], means[1], margin) if enough else math.nan,
-        p_common_variance=_with_common_variance(rows, second, several) if enough else math.nan,
+        p_common_variance=_with_common_variance(rows, second, several, label) if enough else math.nan,
         margin=math.nan if margin is None else margin[0],
         modules=(means[0].groups, means[1].groups),
         sensors=(means[0].members, means[1].members),
@@ -119,7 +120,7 @@ def _at_common_positions(rows: pd.DataFrame, first: str, second: str) -> tuple[p
     own = {name: set(rows.loc[rows["generation"] == name, "position"]) for name in (first, second)}
     common = own[first] & own[second]
     if not common:
-        return rows, "their sensors share no position"
+        return rows, NO_COMMON_POSITION
     if own[first] == own[second]:
         return rows, ""
     return rows[rows["position"].isin(common)], AT_COMMON_POSITIONS
@@ -142,14 +143,16 @@ def _mean_of(side: pd.DataFrame, several: bool) -> Mean:
     return nested_mean(side["value"].to_numpy(float), levels, places)
 
 
-def _with_common_variance(rows: pd.DataFrame, second: str, several: bool) -> float:
+def _with_common_variance(rows: pd.DataFrame, second: str, several: bool, label: str) -> float:
+    """Return p of the test that takes both to spread alike; positions that they share are a factor."""
     rows = rows.assign(
         module=rows["generation"].astype(str) + "\n" + rows["module"].astype(str),
         batch=rows["generation"].astype(str) + "\n" + rows["batch"].astype(str),
     )
     levels, places = _codes(rows, several)
     side = np.asarray(rows["generation"] == second, dtype=np.int64)
-    return common_variance_difference(rows["value"].to_numpy(float), side, levels, places).p
+    shared = None if label == NO_COMMON_POSITION else places
+    return common_variance_difference(rows["value"].to_numpy(float), side, levels, shared).p
 
 
 def _equivalence(kind: Kind, first: Mean, second: Mean, margin: tuple[float, str] | None) -> float:

@@ -47,7 +47,7 @@ if TYPE_CHECKING:
 FloatArray = npt.NDArray[np.float64]
 
 DRAWS = 2000
-"""Sets of lengths drawn for every placement."""
+"""Sets of length errors drawn for all placements together."""
 
 EXACT_NODES = "known node positions taken as exact: no uncertainty is stated under [reference] node"
 

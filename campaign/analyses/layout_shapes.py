@@ -42,6 +42,9 @@ FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
 BoolArray = npt.NDArray[np.bool_]
 
+ADJUSTED_DRAWS = 1000
+"""Drawn sets of lengths that are adjusted: their SDs are known to 2 %."""
+
 TOLERANCE = 0.1
 """First order fails where a node's SD differs by more than this share, or its mean moves by that of an SD."""
 
@@ -227,7 +230,7 @@ def _monte_carlo(
 ) -> MonteCarlo:
     """The same propagation by adjusting drawn lengths, and where first order fails."""
     covariance = read.covariance_mm2[np.ix_(part.edges, part.edges)]
-    draws = network.lengths + read.deviations_mm[:, part.edges]
+    draws = network.lengths + read.deviations_mm[:ADJUSTED_DRAWS, part.edges]
     drawn = adjust_draws(network, part.pairs, draws, covariance, keep_direction(len(part.nodes), *part.datum))
     at = coordinates_of(part.nodes)
     mean, spread = np.full((count, 2), np.nan), np.full((2 * count, 2 * count), np.nan)

@@ -1,4 +1,8 @@
-"""How much a figure amplifies: SD of a node per SD of a length, all lengths independent and alike."""
+"""How much a figure amplifies: SD of a node per SD of a length, all lengths independent and alike.
+
+Common practice, no source: node errors of a shape rebuilt from lengths are several times the length errors,
+and grow as the shape flattens, since lengths along a direction say little of what lies across it.
+"""
 
 from __future__ import annotations
 

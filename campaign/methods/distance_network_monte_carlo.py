@@ -88,7 +88,7 @@ def _steps(
     points: FloatArray, edges: IntArray, lengths: FloatArray, whiten: FloatArray, basis: FloatArray
 ) -> FloatArray:
     """One Gauss–Newton step of every draw, shape (draws, n, 2)."""
-    slope = whiten @ (distance_design(points, edges) @ basis)
+    slope = (whiten @ distance_design(points, edges)) @ basis
     residual = (lengths - distances(points, edges)) @ whiten.T
     turned = slope.transpose(0, 2, 1)
     gram = turned @ slope

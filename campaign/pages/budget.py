@@ -174,7 +174,7 @@ def source_table(found: BudgetInUse, name: str, reference: ReferenceQuantity, th
             "contribution_strain": own.contribution,
             "_share": shares.get(own.source, math.nan),
             "_distribution": ", ".join(dict.fromkeys(line.shape for line in own.lines)) or "–",
-            "df": min((line.degrees_of_freedom for line in own.lines), default=math.nan),
+            "_df": min((line.degrees_of_freedom for line in own.lines), default=math.nan),
             "_why": _status_words(own.status, own.why),
         }
         for own in found.sources
@@ -192,7 +192,7 @@ def source_table(found: BudgetInUse, name: str, reference: ReferenceQuantity, th
             Column("contribution_strain", "Contribution", unit, factor=factor, digits=2, missing="unknown"),
             Column("_share", "Share", kind="percent", missing="–"),
             Column("_distribution", "Distribution", kind="text"),
-            Column("df", "Degrees of freedom", digits=2, missing="–"),
+            Column("_df", "Degrees of freedom", digits=2, missing="–"),
             Column("_why", "Of which", kind="text"),
         ),
         source="budget",
@@ -232,7 +232,8 @@ def totals_table(budget: Budget) -> Table:
         _subject=[worst[key].subject.name for key in keys],
         _href=["" if not key[2] else slugs.sensor_href(key[1], key[2]) for key in keys],
         _largest=[f"{name}, {numbers.percent(share)}" for name, share in largest],
-        _at_least=["at least" if open_ else "" for open_ in frame["at_least"]],
+        _complete=["at least" if open_ else "whole" for open_ in frame["at_least"]],
+        _df=frame["df"],
         _new=[not key[2] for key in keys],
     )
     frame = frame.sort_values(["worst", "_new", "expanded_strain"], ascending=False, kind="stable")
@@ -244,10 +245,10 @@ def totals_table(budget: Budget) -> Table:
         columns=(
             Column("_subject", "Read", kind="text", href="_href"),
             Column("strain", "at", unit, factor=factor, digits=3),
-            Column("_at_least", "", kind="text"),
+            Column("_complete", "U is", kind="text"),
             Column("expanded_strain", "U (95 %)", unit, factor=factor, digits=2),
             Column("coverage_factor", "k", digits=3),
-            Column("df", "Degrees of freedom", digits=2),
+            Column("_df", "Degrees of freedom", digits=2),
             Column("_largest", "Largest source", kind="text"),
         ),
         shown_rows=min(_TOTALS_SHOWN, len(budget.worst)),

@@ -62,6 +62,10 @@ DEFINITIONS: dict[str, tuple[str, str]] = {
     "equivalence": ("equivalence", "p_equivalence_adjusted _margin"),
     "many tests": ("multiplicity", "p_adjusted"),
     "plans": ("planning", "difference_half_width power"),
+    "uncertainty budget": ("uncertainty-budget", "contribution_strain"),
+    "sources": ("budget-sources", "source"),
+    "expanded uncertainty": ("expanded-uncertainty", "expanded_strain coverage_factor"),
+    "effective degrees of freedom": ("effective-degrees", "_df"),
     "verdicts": ("limits", "verdict probability"),
 }
 """Words of a link → (address on the Method page, columns that it explains)."""

@@ -12,6 +12,8 @@ Row = Mapping[Hashable, Any]
 
 FIGURE_WORDS: Mapping[str, tuple[str, str]] = {
     "strain_error": ("error of one reading (95 %)", "inverse-reading"),
+    "expanded_uncertainty": ("expanded uncertainty in use", "expanded-uncertainty"),
+    "node_error": ("node error after best fit", "generations"),
     "linearity": ("departure from a line", "linearity"),
     "hysteresis": ("width of settled loops", "loops"),
     "staircase_hysteresis": ("staircase hysteresis", "hysteresis"),

@@ -85,9 +85,10 @@ def _joining_notices(results: CampaignResults) -> list[object]:
 
 
 def comparison_figures(compared: Generations) -> Iterator[Figure]:
-    """Return one figure for all ratios and one for the differences of each unit, then the module means."""
-    table = compared.table.reset_index(drop=True)
-    ratios = table[(table["kind"] == "ratio") & table["difference_or_ratio"].gt(0)]
+    """Return the newest against each other: ratios, differences by unit, then the module means."""
+    table = compared.table
+    table = table[table["second"] == compared.names[-1]].reset_index(drop=True)
+    ratios = table[(table["kind"] == "ratio") & table["difference_or_ratio"].notna()]
     if len(ratios):
         ends = _ratio_ends(ratios)
         yield _rows_figure(
@@ -168,7 +169,7 @@ def _rows_figure(
         alternative="One row a figure and pair of generations: the estimate with its 95 % interval against "
         f"{'one' if centre else 'zero'}.",
         traces=tuple(traces),
-        layout=made | {"margin": {"l": 236}},
+        layout=made | {"margin": {"l": 204}},
         table="generations",
         note=note,
         height=110 + (46 if several else 34) * len(rows),
@@ -194,6 +195,7 @@ def _marks(
     ends = [10**e for e in x["range"]] if x.get("type") == "log" else list(x["range"])
     for row, height in zip(rows.to_dict("records"), heights, strict=True):
         estimate, low, high = (float(row[key]) * factor for key in ("difference_or_ratio", "low", "high"))
+        estimate = max(estimate, ends[0])  # a ratio of zero has no place on its axis but the end
         low = max(low, ends[0]) if not math.isnan(low) else low
         high = min(high, ends[1]) if not math.isnan(high) else high
         pair = f"{row['first']} → {row['second']}, "
@@ -283,6 +285,7 @@ def module_figures(compared: Generations) -> Iterator[Figure]:
         axis("", ticks=ticks, low=-0.6, high=len(compared.names) - 0.4, tickangle=0),
         axis("", low=0.0, high=1.08),
         columns=2,
+        gap=(0.06, 0.055),
     )
     yield Figure(
         name="modules",

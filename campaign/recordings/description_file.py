@@ -474,14 +474,8 @@ def _read_limits(table: CheckedTable | None) -> dict[str, object]:
 
 def _read_margin(margins: CheckedTable, key: str) -> tuple[float, str]:
     """Read an equivalence margin: a limit's own units first, then any known one; per cent is a ratio."""
-    families = (
-        *LIMIT_FAMILIES.get(key, ()),
-        *SHARE_OF_FULL_SCALE,
-        "ratio",
-        *REFERENCE_FAMILIES,
-        "time",
-        *QUANTITY_FAMILIES["signal"],
-    )
+    any_known = (*SHARE_OF_FULL_SCALE, "ratio", *REFERENCE_FAMILIES, "time", *QUANTITY_FAMILIES["signal"])
+    families = (*LIMIT_FAMILIES.get(key, ()), *any_known)
     return margins.quantity_and_unit(key, families)
 
 

@@ -14,7 +14,8 @@ from campaign.simulation.truth_text import place_heads, place_rows
 from campaign.simulation.truth_text_of_kinds import layout_lines
 
 BRACED_SEED = 20250244
-BRACED_NODES = {"P": (0.0, 0.0), "Q": (80.0, 0.0), "R": (100.0, 55.0), "S": (42.0, 92.0), "T": (-16.0, 52.0)}
+BRACED_NODES = {"P": (0.0, 0.0), "Q": (78.0, 0.0), "R": (97.0, 53.0), "S": (41.0, 89.0), "T": (-16.0, 50.0)}
+"""In mm; their distances have the mean of the panel's, so that the process alone changes mean signals."""
 BRACED_SLIP = ("M13", "RT", 1, 8, -18.0)
 BRACED_SCHEDULE = Schedule(date(2025, 2, 27))
 """The two days after the last panel's."""

@@ -273,7 +273,7 @@
   }
 
   form.hidden = false;
-  form.addEventListener("input", update);
+  for (const kind of ["input", "change"]) form.addEventListener(kind, update);
   form.addEventListener("submit", (event) => event.preventDefault());
   document.addEventListener("campaign-marks", follow);
   follow();

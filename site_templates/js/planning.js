@@ -148,6 +148,6 @@
   }
 
   place.hidden = false;
-  for (const control of place.querySelectorAll("input, select")) control.addEventListener("input", update);
+  for (const kind of ["input", "change"]) place.addEventListener(kind, update);
   update();
 })();

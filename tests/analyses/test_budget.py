@@ -70,6 +70,7 @@ from tests.analyses.hold_campaign import hold, identity
 
 NO_REGISTER = pd.DataFrame(columns=["module", "sensor"])
 RATED = Description("invented", range_strain=0.40)
+NOTHING_JUDGED = judge_limits(Description("t"), None)
 COMPONENTS = Components(
     module=LineSpread(0.5, 1.0, 0.2),
     sensor=LineSpread(0.8, 1.5, 0.2),
@@ -441,6 +442,8 @@ def test_the_limit_is_judged_by_the_budget_and_not_met_while_a_source_is_missing
     assert set(closed.missing.values()) == {()}
     decided = judge_limits(none, calibration, [closed.figures], closed.missing)
     assert set(decided.table["verdict"]) == {"met"}
+    fact = budget_findings(closed, decided)[0].facts[0]
+    assert (fact.limit, fact.exceeding) == (0.5, 0)
 
 
 def test_monte_carlo_stands_beside_where_a_two_point_source_dominates():
@@ -482,7 +485,7 @@ def test_one_sensor_has_a_budget_of_its_own_and_no_new_one_is_promised():
     assert math.isfinite(own[0].combined.expanded_uncertainty)
     new = budget.of_new_sensors()
     assert all(SENSORS in found.unknown for found in new)
-    fact = budget_findings(budget)[0].facts[0]
+    fact = budget_findings(budget, NOTHING_JUDGED)[0].facts[0]
     assert fact.sensors == 1
     assert fact.own_low == fact.own_high
 
@@ -523,12 +526,12 @@ def test_one_branch_leaves_hysteresis_unknown_where_the_direction_is():
 
 def test_without_staircases_there_is_no_budget():
     assert analyse_budget(RATED, None, None) is None
-    assert budget_findings(None) == ()
+    assert budget_findings(None, NOTHING_JUDGED) == ()
 
 
 def test_the_finding_names_the_largest_source_and_what_is_missing(campaign):
     _, _, budget = campaign
-    fact = budget_findings(budget)[0].facts[0]
+    fact = budget_findings(budget, NOTHING_JUDGED)[0].facts[0]
     assert fact.largest == SENSORS
     assert fact.has_new
     assert fact.new > fact.own_high

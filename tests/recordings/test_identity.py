@@ -312,6 +312,10 @@ def test_lengths_follow_from_node_columns() -> None:
     known = registers(sensors="module,sensor,from,to\nM01,AB,A,B\nM01,BC,B,C\n")
     found = shares(wide(*nodes), describe(WIDE), known)
     np.testing.assert_allclose(found.trials[0].length_mm, [5, 10])
+    assert {name: places.tolist() for name, places in found.trials[0].nodes.items()} == {
+        "A": [[0, 0], [0, 0]],
+        "B": [[3, 4], [6, 8]],
+    }
     assert list(found.set_aside) == [("M01_staircase_r1.csv", "BC", 1)]
 
 

@@ -1,0 +1,188 @@
+"""Earlier campaigns joined for comparison: read, reconciled, or said to be missing; the report goes on."""
+
+from __future__ import annotations
+
+import json
+from pathlib import Path
+
+import pytest
+
+from campaign.analyses.earlier import unique_labels
+from campaign.pipeline import analyse, read_campaign, read_earlier, report
+from tests.pages.small_campaign import Sketch, write_campaign
+
+OLD = Sketch(generations=("first",), modules=3, sensors=("AB", "BC"), sessions=1, limits="")
+NEW = Sketch(generations=("second",), modules=3, sensors=("AB", "BC"), sessions=1, limits="")
+
+
+def named(folder: Path, *earlier: str, key: str = "folder") -> Path:
+    """Add ``[[earlier]]`` tables to the description of *folder*."""
+    description = folder / "campaign.toml"
+    text = description.read_text(encoding="utf-8")
+    text += "".join(f'\n[[earlier]]\n{key} = "{one}"\n' for one in earlier)
+    description.write_text(text, encoding="utf-8")
+    return folder
+
+
+def retitled(folder: Path, title: str) -> Path:
+    description = folder / "campaign.toml"
+    text = description.read_text(encoding="utf-8").replace("Small invented panels", title)
+    description.write_text(text, encoding="utf-8")
+    return folder
+
+
+def joined(folder: Path):
+    read = read_campaign(folder)
+    earlier = read_earlier(folder, read)
+    return analyse(read, None, earlier), earlier
+
+
+@pytest.fixture(scope="module")
+def old(tmp_path_factory) -> Path:
+    return retitled(write_campaign(tmp_path_factory.mktemp("old") / "old", OLD, seed=3), "Older panels")
+
+
+@pytest.fixture
+def new(tmp_path: Path) -> Path:
+    return write_campaign(tmp_path / "new", NEW)
+
+
+def test_an_earlier_folder_joins_the_comparison_as_the_older_side(old, new):
+    results, earlier = joined(named(new, str(old)))
+    assert earlier.notices == ()
+    assert [c.title for c in results.earlier] == ["Older panels"]
+    assert results.generations is not None
+    assert results.generations.names == ("first", "second")
+    assert results.generations.sources == {"first": "Older panels", "second": "Small invented panels"}
+    assert {"linearity", "slope", "zero_signal"} <= set(results.generations.table["figure"])
+    one = results.earlier[0]
+    assert (one.recordings, one.modules, one.sensors) == (12, 3, 6)
+    assert len(one.hashes["trials/run_000.csv"]) == 64
+    assert {c.what for c in results.generations.confounded} >= {"campaign"}
+
+
+def test_a_generation_of_the_same_name_carries_its_campaigns_title(tmp_path, old):
+    folder = named(write_campaign(tmp_path / "again", OLD), str(old))
+    results, earlier = joined(folder)
+    assert results.generations is not None
+    assert results.generations.names == ("first (Older panels)", "first")
+    assert [n.code for n in earlier.notices] == ["earlier-renamed"]
+
+
+def test_labels_are_unique_however_often_a_name_and_a_title_occur():
+    labels = unique_labels(["a"], [("T", ["a", "b"]), ("T", ["a"]), ("U", ["c"])])
+    assert labels == [{"a": "a (T)", "b": "b"}, {"a": "a (T, 2)"}, {"c": "c"}]
+
+
+def test_signals_in_other_units_of_one_family_are_the_same_signals(tmp_path, old, new):
+    folder = tmp_path / "nanofarads"
+    write_campaign(folder, OLD, seed=3)
+    text = (folder / "campaign.toml").read_text(encoding="utf-8").replace('unit = "pF"', 'unit = "nF"')
+    (folder / "campaign.toml").write_text(text, encoding="utf-8")
+    for path in (folder / "trials").glob("*.csv"):
+        head, *rows = path.read_text(encoding="utf-8").splitlines()
+        made = [f"{x},{float(c) / 1000:.9f}" for x, c in (row.split(",") for row in rows)]
+        path.write_text("\n".join([head, *made]) + "\n", encoding="utf-8")
+    here = analyse(read_campaign(named(new, str(old))), None, read_earlier(new, read_campaign(new)))
+    again = write_campaign(tmp_path / "new2", NEW)
+    there, _ = joined(named(again, str(folder)))
+    assert here.generations is not None
+    assert there.generations is not None
+    pair = [
+        r.generations.table.set_index("figure").loc["slope", "difference_or_ratio"] for r in (here, there)
+    ]
+    assert pair[0] == pytest.approx(pair[1], rel=1e-5)
+
+
+def test_signals_of_another_kind_are_a_mismatch_and_the_rest_is_compared(tmp_path, new):
+    folder = write_campaign(tmp_path / "ohms", OLD, seed=3)
+    text = (folder / "campaign.toml").read_text(encoding="utf-8").replace('unit = "pF"', 'unit = "ohm"')
+    (folder / "campaign.toml").write_text(text, encoding="utf-8")
+    results, _ = joined(named(new, str(folder)))
+    made = results.generations
+    assert made is not None
+    assert {f for f, *_ in made.not_compared} == {"slope", "zero_signal"}
+    assert {"linearity", "gauge_factor"} <= set(made.table["figure"])
+    assert any(n.code == "earlier-differs" and "units differ" in n.what for n in results.notices)
+
+
+def test_a_shorter_range_is_compared_over_what_both_reach(tmp_path, new):
+    folder = write_campaign(tmp_path / "short", OLD, seed=3)
+    for path in (folder / "trials").glob("*.csv"):
+        head, *rows = path.read_text(encoding="utf-8").splitlines()
+        made = [row for row in rows if float(row.split(",")[0]) < 79.0]  # 60 mm at rest: up to 30 %
+        path.write_text("\n".join([head, *made]) + "\n", encoding="utf-8")
+    results, _ = joined(named(new, str(folder)))
+    made = results.generations
+    assert made is not None
+    assert {"linearity", "repeatability", "slope"} <= set(made.table["figure"])
+    assert {f for f, *_ in made.not_compared} == {"strain_error", "staircase_hysteresis"}
+    assert results.earlier[0].upper == pytest.approx(0.3)
+    assert results.earlier[0].full_scale == pytest.approx(0.3)
+    assert results.earlier[0].restricted is not None
+    # this campaign's own figures stay those of its whole range
+    assert results.calibration is not None
+    assert results.calibration.sensor_lines["strain_high"].max() == pytest.approx(0.4)
+
+
+@pytest.mark.parametrize(
+    ("spoil", "said"),
+    [
+        (lambda folder: folder / "nowhere", "is no folder"),
+        (lambda folder: folder.mkdir() or folder, "no campaign.toml"),
+        (lambda folder: _without_recordings(folder), "recording"),
+    ],
+)
+def test_a_campaign_that_cannot_be_read_is_a_notice_and_the_report_goes_on(tmp_path, new, spoil, said):
+    results, earlier = joined(named(new, str(spoil(tmp_path / "broken"))))
+    assert [(n.code, n.weight) for n in earlier.notices] == [("earlier-not-joined", "set aside")]
+    assert said in earlier.notices[0].what
+    assert earlier.notices[0].remedy
+    assert earlier.notices[0].what.count(str(tmp_path)) <= 2  # as the description names it, no more
+    assert results.earlier == ()
+    assert results.calibration is not None
+    assert "earlier-not-joined" in {n.code for n in results.notices}
+
+
+def _without_recordings(folder: Path) -> Path:
+    write_campaign(folder, OLD)
+    for path in (folder / "trials").glob("*.csv"):
+        path.unlink()
+    return folder
+
+
+def test_a_campaign_never_joins_itself_or_another_twice(old, new):
+    results, earlier = joined(named(new, ".", str(old), f"{old}/."))
+    assert [n.what for n in earlier.notices] == [
+        ". is this campaign, or is named twice",
+        f"{old}/. is this campaign, or is named twice",
+    ]
+    assert len(results.earlier) == 1
+
+
+def test_campaigns_that_name_each_other_are_followed_one_step_only(tmp_path, new):
+    folder = named(write_campaign(tmp_path / "mutual", OLD), str(new))
+    results, earlier = joined(named(new, str(folder)))
+    assert [n.code for n in earlier.notices] == ["earlier-not-followed"]
+    assert len(results.earlier) == 1
+
+
+def test_the_site_shows_what_was_joined_with_its_hashes(tmp_path, old, new):
+    site = tmp_path / "site"
+    assert report(named(new, str(old)), site, fail_on_set_aside=True) == 0
+    page = (site / "generations.html").read_text(encoding="utf-8")
+    assert "Older panels" in page
+    files = (site / "tables" / "earlier_files.csv").read_text(encoding="utf-8")
+    assert files.count("\n") == 1 + len(list(old.rglob("*.csv"))) + 1
+    assert "earlier_files" in (site / "provenance.html").read_text(encoding="utf-8")
+    names = {r["name"] for r in json.loads((site / "tables" / "schema.json").read_text())["resources"]}
+    assert {"generations", "planning", "earlier_campaigns", "earlier_files"} <= names
+
+
+def test_a_missing_earlier_campaign_counts_as_set_aside_and_no_path_of_the_machine_is_shown(tmp_path):
+    tiny = Sketch(generations=("second",), modules=1, sensors=("AB",), sessions=1, runs=2, limits="")
+    folder = named(write_campaign(tmp_path / "tiny", tiny), "../nowhere")
+    assert report(folder, tmp_path / "site", fail_on_set_aside=True) == 1
+    notices = (tmp_path / "site" / "tables" / "notices.csv").read_text(encoding="utf-8")
+    assert "../nowhere" in notices
+    assert str(tmp_path) not in notices
