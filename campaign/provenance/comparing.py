@@ -90,7 +90,7 @@ def tolerance_of(table: str, column: str, kind: str) -> Tolerance:
 class Difference:
     """One figure that differs: where it stands, both values, by how much, what was allowed.
 
-    ``rank`` is the place of its tolerance in :data:`TOLERANCES`: what was read comes before what was computed.
+    ``rank`` is the place of its tolerance in :data:`TOLERANCES`: what was read comes first.
     """
 
     table: str
