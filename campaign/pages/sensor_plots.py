@@ -152,8 +152,8 @@ def departure_figure(parts: SensorParts) -> Figure:
         traces=tuple(traces),
         layout=drawn,
         data=parts.frame[[c for c in _DEPARTURES if c in parts.frame]],
-        note="Each panel is one run, its path in the order of the readings: a gap between its way up and down "
-        "is its loop, a path that lies high or low is the run’s own zero. Filled: rising; open: falling."
+        note="Each panel is one run, its path in the order of the readings: a gap between its way up and "
+        "down is its loop, a path that lies high or low is the run’s own zero. Filled: rising; open: falling."
         + (
             f" The first {len(runs)} runs are drawn; the CSV holds all." if len(every_run) > len(runs) else ""
         ),
@@ -166,13 +166,13 @@ _COLUMNS = 3
 
 
 def layout_of_runs(runs: Sequence[tuple[str, int, str]], reference: ReferenceQuantity) -> Layout:
-    """Return a panel for each run, named by its repetition and, where modules were remounted, its mounting."""
+    """Return a panel for each run, named by its repetition and, where there are several, its mounting."""
     mountings = {session for session, _, _ in runs}
     titles = [
         f"run {repetition}, mounting {session}" if len(mountings) > 1 else f"run {repetition}"
         for session, repetition, _ in runs
     ]
-    made = small_multiples(
+    return small_multiples(
         titles,
         axis(x_title(reference), reference.shown_unit),
         axis("Departure", reference.shown_unit),
@@ -180,11 +180,10 @@ def layout_of_runs(runs: Sequence[tuple[str, int, str]], reference: ReferenceQua
         gap=(0.04, min(0.2, 0.36 / max(math.ceil(len(runs) / _COLUMNS), 1))),
         shapes=[level_line(0, colour=palette.INK, axes=panel(i)) for i in range(len(runs))],
     )
-    return made
 
 
 def moved_from_line(parts: SensorParts, trial: str) -> str:
-    """Return in words how far the readings of a trial lie from the sensor's line on average; empty if none."""
+    """Return in words how far a trial's readings lie from the sensor's line on average; empty if none."""
     departures = [r.departure for run, own in parts.readings_by_run() if run[2] == trial for r in own]
     if not departures or parts.line is None:
         return ""
