@@ -104,6 +104,9 @@ def model_files(results: CampaignResults) -> dict[str, bytes]:
         seed=variance.seed if variance is not None else None,
         lines=results.calibration is not None,
         reference=results.readings.reference,
+        loops=results.hysteresis is not None,
+        holds=results.drift is not None,
+        influences=results.pressure is not None or results.influences is not None,
     )
     files = {MODEL_TEXT: text}
     for (fit, _), words in zip(fits, told, strict=True):

@@ -36,6 +36,7 @@ def simple(tmp_path_factory: pytest.TempPathFactory) -> tuple[Calibration, Varia
         variance=variance,
         calibration=calibration,
         readings=SimpleNamespace(reference=calibration.reference),
+        **dict.fromkeys(("hysteresis", "drift", "pressure", "influences")),
     )
     return calibration, variance, results
 
@@ -148,12 +149,16 @@ def test_the_call_of_statsmodels_runs_on_the_design_and_finds_the_optimum(
 
 def test_without_a_fit_the_text_says_so() -> None:
     reference = SimpleNamespace(name="strain", unit="mm/mm")
-    results: Any = SimpleNamespace(
-        variance=None, calibration=None, readings=SimpleNamespace(reference=reference)
-    )
+    nothing = dict.fromkeys(("variance", "calibration", "hysteresis", "drift", "pressure", "influences"))
+    results: Any = SimpleNamespace(**nothing, readings=SimpleNamespace(reference=reference))
     files = model_files(results)
     assert set(files) == {"MODEL.md"}
     assert b"No nested model was fitted: the campaign holds no staircase reading." in files["MODEL.md"]
+    assert b"Widths of loops" not in files["MODEL.md"]
+    results.hysteresis = results.pressure = SimpleNamespace()
+    told = model_files(results)["MODEL.md"]
+    assert b"Widths of loops" in told
+    assert b"Pressure and other influences" in told
 
 
 def test_readings_come_back_from_their_file_as_they_were(simple: tuple[Any, Any, Any]) -> None:
