@@ -14,7 +14,7 @@ from collections import deque
 from concurrent.futures import Executor, Future
 from typing import Any
 
-from distributed import Client, LocalCluster
+import distributed
 
 IN_HAND = 2
 """Tasks in hand, a worker, as in ``campaign.workers.sharing``."""
@@ -30,11 +30,12 @@ def main() -> None:
     parser.add_argument("--tasks", type=int, default=100_000)
     parser.add_argument("--workers", type=int, default=2)
     options = parser.parse_args()
+    dask: Any = distributed
     with (
-        LocalCluster(
-            n_workers=options.workers, threads_per_worker=1, dashboard_address=None, silence_logs=40
+        dask.LocalCluster(
+            n_workers=options.workers, threads_per_worker=1, dashboard_address=None, silence_logs=50
         ) as cluster,
-        Client(cluster) as client,
+        dask.Client(cluster) as client,
     ):
         print("| how tasks are handed over | tasks | ms a task |\n|---|---|---|")
         for tasks in (options.tasks // 100, options.tasks // 10, options.tasks):

@@ -7,10 +7,12 @@ Names and columns of :data:`CONTRACT_COLUMNS` are kept stable.
 
 from __future__ import annotations
 
+import csv
 import math
 import re
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
+from io import StringIO
 from typing import Any, Literal
 
 import numpy as np
@@ -139,17 +141,25 @@ def csv_bytes(frame: pd.DataFrame, name: str = "") -> bytes:
     KeyError
         Where a column of the contract is missing.
     """
-    exported = _with_infinities_named(exported_frame(frame, name))
-    return exported.to_csv(index=False, lineterminator="\n", encoding="utf-8").encode("utf-8")
+    exported = exported_frame(frame, name)
+    stream = StringIO(newline="")
+    writer = csv.writer(stream, lineterminator="\n")
+    writer.writerow(exported.columns)
+    writer.writerows(zip(*(_fields_of(values) for _, values in exported.items()), strict=True))
+    return stream.getvalue().encode("utf-8")
 
 
-def _with_infinities_named(frame: pd.DataFrame) -> pd.DataFrame:
-    """Return *frame* with infinite numbers as a Table Schema spells them: INF and -INF."""
-    named = frame.copy()
-    for column in frame.columns:
-        if pd.api.types.is_float_dtype(frame[column]) and np.isinf(frame[column].to_numpy(float)).any():
-            named[column] = frame[column].astype(object).replace({np.inf: "INF", -np.inf: "-INF"})
-    return named
+def _fields_of(values: pd.Series[Any]) -> list[object]:
+    """Fields of a column: nothing where a value is missing, infinity as a Table Schema spells it."""
+    fields: list[object] = values.tolist()
+    missing = values.isna().to_numpy()
+    if missing.any():
+        fields = [None if gone else field for field, gone in zip(fields, missing.tolist(), strict=True)]
+    if pd.api.types.is_float_dtype(values):
+        infinite = np.isinf(values.to_numpy(float))
+        for row in np.flatnonzero(infinite).tolist():
+            fields[row] = "INF" if values.iloc[row] > 0 else "-INF"
+    return fields
 
 
 def exported_frame(frame: pd.DataFrame, name: str = "") -> pd.DataFrame:
