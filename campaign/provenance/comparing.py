@@ -171,7 +171,12 @@ def _compare(
 
 
 def _rows(content: bytes) -> list[list[str]]:
-    return list(csv.reader(io.StringIO(content.decode("utf-8", "backslashreplace"), newline="")))
+    """Rows of a file; as one cell a line where it is no CSV at all."""
+    text = content.decode("utf-8", "backslashreplace")
+    try:
+        return list(csv.reader(io.StringIO(text, newline="")))
+    except csv.Error:
+        return [[line] for line in text.splitlines()]
 
 
 def _differences(

@@ -103,9 +103,12 @@ def verify_folder(folder: Path) -> Verification:
 
 
 def _home(folder: Path) -> Path:
-    """The folder itself, or the only one in it that holds a bag."""
+    """The folder itself, the only one in it that holds a bag, or the bag whose payload it is."""
     if (folder / DECLARATION).is_file() or (folder / SITE_CHECKSUMS).is_file():
         return folder
+    above = folder.resolve().parent
+    if folder.resolve() == above / PAYLOAD.rstrip("/") and (above / DECLARATION).is_file():
+        return above
     inside = [place.parent for place in sorted(folder.glob(f"*/{DECLARATION}"))]
     return inside[0] if len(inside) == 1 else folder
 

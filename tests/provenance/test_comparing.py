@@ -103,7 +103,7 @@ def test_rows_columns_and_tables_that_are_missing_or_new_are_named() -> None:
     ]
 
 
-@pytest.mark.parametrize("content", [b"", b"\xff\xfe", b'"', b"x\n1,2,3\n", b"{"])
+@pytest.mark.parametrize("content", [b"", b"\xff\xfe", b'"', b"x\n1,2,3\n", b"{", b"x" * 200_000, b"\0"])
 def test_whatever_stands_in_a_file_nothing_breaks(content: bytes) -> None:
     (found,) = compare_tables({"lines.csv": table(ROWS), "schema.json": content}, {"lines.csv": content})
     assert found.differences

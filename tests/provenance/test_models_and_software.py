@@ -193,6 +193,20 @@ def test_a_criterion_that_is_not_that_of_the_readings_is_found(simple: tuple[Any
     assert (refit.generation, refit.agrees) == ("third", False)
 
 
+@pytest.mark.parametrize("spoilt", [0, 1, 2])
+@pytest.mark.parametrize(
+    "content", [b"", b"\xff", b"[]", b"a,b\n1,2\n", b'{"resources": [{"name": "readings"}]}']
+)
+def test_tables_that_are_not_what_they_should_be_are_said_to_be_so(
+    simple: tuple[Any, Any, Any], spoilt: int, content: bytes
+) -> None:
+    parts = list(sealed_tables(*simple[:2]))
+    parts[spoilt] = content
+    (refit,) = refit_from_readings(*parts)
+    assert not refit.agrees
+    assert "cannot be fitted again as it stands" in refit.sentence
+
+
 def test_changed_readings_do_not_give_the_sealed_criterion(unpacked: Path) -> None:
     tables = unpacked / "data" / "tables"
     readings = (tables / "readings.csv").read_text("utf-8").splitlines()

@@ -71,7 +71,7 @@ def said(capsys: pytest.CaptureFixture[str]) -> str:
 def test_what_is_as_sealed_is_said_to_be(
     sealed: Path, unpacked: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:
-    for target in (sealed, unpacked, unpacked.parent):
+    for target in (sealed, unpacked, unpacked.parent, unpacked / "data"):
         assert main(["verify", str(target)]) == 0
         words = said(capsys)
         assert "hashes and structure: nothing differs" in words
