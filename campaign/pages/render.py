@@ -33,6 +33,7 @@ from campaign.pages.tables import (
     schema_bytes,
     shown_cells,
     shown_marks,
+    to_ten_digits,
 )
 from campaign.recordings.recording import STRAIN, ReferenceQuantity
 
@@ -157,7 +158,8 @@ def render_site(
         written[f"data/{page.slug}.js"] = data_script(page, figures, further)
         for figure in page.figures:
             if figure.data is not None:
-                written[_figure_csv(page, figure)] = csv_bytes(in_reference(figure.data, reference))
+                data = to_ten_digits(in_reference(figure.data, reference))
+                written[_figure_csv(page, figure)] = csv_bytes(data)
     written |= {name: text.encode("utf-8") for name, text in with_places_of_anchors(html, pages).items()}
     written |= asset_files(templates_folder(), plot_library)
     return dict(sorted(written.items()))

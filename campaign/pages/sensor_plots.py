@@ -31,12 +31,6 @@ from campaign.recordings.recording import ReferenceQuantity
 
 _STYLES = palette.GENERATION_STYLES
 
-_EXPORTED = (
-    *("session", "repetition", "trial", "order", "direction", "nominal_level", "x", "signal", "unit"),
-    *("standard_error", "settled", "used", "fitted", "residual", "studentised"),
-)
-_DEPARTURES = ("session", "repetition", "order", "direction", "x", "fitted", "residual")
-
 
 def sensor_figures_of(parts: SensorParts) -> list[Figure]:
     """Return the figures of a sensor that has a line."""
@@ -67,7 +61,7 @@ def line_figure(parts: SensorParts) -> Figure:
         "open while falling, about a straight line with its band.",
         traces=tuple(traces),
         layout=layout(axis(x_title(reference), reference.shown_unit), axis("Signal", str(row["unit"]))),
-        data=parts.frame[[c for c in _EXPORTED if c in parts.frame]],
+        table="readings",
         note=(
             "The band holds one reading of a new run with 95 %. "
             if reach is not None
@@ -151,7 +145,7 @@ def departure_figure(parts: SensorParts) -> Figure:
         "readings, with the band of one reading in a new run.",
         traces=tuple(traces),
         layout=drawn,
-        data=parts.frame[[c for c in _DEPARTURES if c in parts.frame]],
+        table="readings",
         note="Each panel is one run, its path in the order of the readings: a gap between its way up and "
         "down is its loop, a path that lies high or low is the run’s own zero. Filled: rising; open: falling."
         + (

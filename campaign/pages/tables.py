@@ -198,6 +198,26 @@ def in_reference(frame: pd.DataFrame, reference: ReferenceQuantity) -> pd.DataFr
     return frame.drop(columns=taken).rename(columns=names)
 
 
+def to_ten_digits(frame: pd.DataFrame) -> pd.DataFrame:
+    """Return *frame* with every column of numbers rounded to ten significant digits of its largest one.
+
+    Files of figures hold no more: what was measured has fewer digits, and what was computed stands in full
+    precision in the tables.
+    """
+    rounded = {
+        str(column): frame[column].round(_decimals_of_ten_digits(frame[column].to_numpy()))
+        for column, kind in frame.dtypes.items()
+        if pd.api.types.is_float_dtype(kind)
+    }
+    return frame.assign(**rounded) if rounded else frame
+
+
+def _decimals_of_ten_digits(values: np.ndarray[Any, Any]) -> int:
+    finite = np.abs(values[np.isfinite(values)])
+    largest = float(finite.max()) if finite.size else 0.0
+    return 9 - math.floor(math.log10(largest)) if largest > 0 else 9
+
+
 def millimetre_name(column: str, quantity: str) -> str:
     """Return the name that a strain column has in a campaign whose reference is a length in mm."""
     return column.replace("strain", quantity) + "_mm"

@@ -10,10 +10,13 @@ from pathlib import Path
 import pytest
 
 from campaign.analyses.results import CampaignResults
+from campaign.cli import main
 from campaign.notices import CampaignStops
 from campaign.pages.brief import LARGEST, MARK, brief_bytes, check_brief_place, write_brief
 from campaign.pages.page import Page
 from campaign.pages.site import site_frame
+
+REAL = Path(__file__).parents[1] / "campaigns" / "real"
 
 
 @pytest.fixture(scope="module")
@@ -50,6 +53,20 @@ def test_it_holds_findings_limits_caution_and_the_first_figure_of_every_page(bri
     assert brief.count('<svg viewBox="0 0 8640') == len(figures)
     ids = re.findall(r'\sid="([^"]+)"', brief)
     assert len(ids) == len(set(ids))
+
+
+def test_the_command_writes_the_brief_and_nothing_beside_it(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    file = tmp_path / "in one file.html"
+    assert main(["report", str(REAL / "pressure_decay"), "--brief", str(file)]) == 0
+    assert [path.name for path in tmp_path.iterdir()] == [file.name]
+    assert f"{file.stat().st_size} bytes" in capsys.readouterr().out
+    assert MARK in file.read_text(encoding="utf-8")
+    file.write_text("no brief", encoding="utf-8")
+    assert main(["report", str(REAL / "pressure_decay"), "--brief", str(file)]) == 2
+    assert "--brief" in capsys.readouterr().err
+    assert file.read_text(encoding="utf-8") == "no brief"
 
 
 def test_it_overwrites_only_a_brief(tmp_path: Path) -> None:

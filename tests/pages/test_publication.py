@@ -14,6 +14,7 @@ from typing import Any
 import pytest
 
 from campaign.analyses.results import CampaignResults
+from campaign.cli import main
 from campaign.notices import CampaignStops
 from campaign.pages import figures, palette
 from campaign.pages.drawing import ready
@@ -135,6 +136,24 @@ def test_the_folder_holds_every_figure_and_table_of_the_pages_and_an_index(pages
     assert files["tables/calibration_effort.tex"].startswith(b"% Calibration effort: table 4.")
     assert b"\\begin{" in files["tables/sensor-M1-AB_runs.tex"]
     assert list(files) == sorted(files)
+
+
+def test_the_command_writes_the_folder_whole_and_overwrites_none_but_its_own(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    into, folder = (
+        tmp_path / "for a paper",
+        Path(__file__).parents[1] / "campaigns" / "real" / "pressure_decay",
+    )
+    command = ["figures", str(folder), "--into", str(into), "--page", "drift"]
+    assert main(command) == 0
+    assert "index.csv" in capsys.readouterr().out
+    names = {path.name for path in (into / "figures").iterdir()}
+    assert {"drift_holds_one-column.svg", "drift_holds_two-column.png"} <= names
+    assert main(command) == 0
+    (into / "campaign-site.txt").unlink()
+    assert main(command) == 2
+    assert (into / "index.csv").is_file()
 
 
 def test_a_page_that_is_not_there_stops_with_names_that_are() -> None:
