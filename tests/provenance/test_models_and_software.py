@@ -17,7 +17,7 @@ from campaign.analyses.calibration import Calibration
 from campaign.analyses.variance import Variance, analyse_variance
 from campaign.methods.nested_model import NestedModel, RandomTerm, fit_nested_model
 from campaign.pages.tables import csv_bytes, schema_bytes
-from campaign.provenance.model_text import describe_fit, fit_tables, model_files
+from campaign.provenance.model_text import describe_fit, fit_tables, model_files, told_fit
 from campaign.provenance.refitting import readings_table, refit_from_readings
 from campaign.provenance.software import requirement_name
 from tests.pages.small_campaign import Sketch, read_and_calibrate, write_campaign
@@ -65,6 +65,7 @@ def test_the_design_table_alone_gives_the_sealed_criterion(unpacked: Path) -> No
     assert len(places) == len(criteria) >= 2
     for place, criterion in zip(places, criteria, strict=True):
         design = design_of(data / "model" / place)
+        assert list(design["row"]) == sorted(design["row"])
         units = [name.removeprefix("unit_") for name in design if name.startswith("unit_")]
         fixed = design[[name for name in design if re.fullmatch(r"f\d+", name)]].to_numpy(float)
         line = np.column_stack([np.ones(len(design)), design["z"]])
@@ -133,11 +134,12 @@ def test_the_call_of_statsmodels_runs_on_the_design_and_finds_the_optimum(
 
     import statsmodels.formula.api as smf
 
-    _, variance, results = simple
+    calibration, variance, _ = simple
     fit = variance.fits[0]
-    words = describe_fit(fit, "signal", results)
+    told = told_fit(fit, "signal", calibration.readings.index, calibration.reference)
+    words = describe_fit(told)
     assert words.statsmodels_says == ""
-    for name, content in fit_tables(fit, results):
+    for name, content in fit_tables(told):
         (tmp_path / name).write_bytes(content)
     with warnings.catch_warnings():
         warnings.simplefilter("ignore")
@@ -153,12 +155,41 @@ def test_without_a_fit_the_text_says_so() -> None:
     results: Any = SimpleNamespace(**nothing, readings=SimpleNamespace(reference=reference))
     files = model_files(results)
     assert set(files) == {"MODEL.md"}
-    assert b"No nested model was fitted: the campaign holds no staircase reading." in files["MODEL.md"]
-    assert b"Widths of loops" not in files["MODEL.md"]
-    results.hysteresis = results.pressure = SimpleNamespace()
-    told = model_files(results)["MODEL.md"]
-    assert b"Widths of loops" in told
-    assert b"Pressure and other influences" in told
+    assert b"No nested model was fitted: the campaign holds no staircase reading" in files["MODEL.md"]
+
+
+def test_models_of_loops_holds_and_influences_are_told_as_well() -> None:
+    """One level, one value a unit: the text, the design and the covariances are those of the fit."""
+    module = np.repeat(np.arange(5), 4)
+    y = np.random.default_rng(3).normal(size=5)[module] + np.random.default_rng(4).normal(size=20) / 3
+    one = np.ones((20, 1))
+    model = NestedModel(y, one, ("first",), (("module", module),), (RandomTerm("module", "module", one),))
+    fit = fit_nested_model(model)
+    hysteresis = SimpleNamespace(fits=((SimpleNamespace(generation="first"), fit),))
+    pressure = SimpleNamespace(spread=SimpleNamespace(fits={"first": fit}))
+    results: Any = SimpleNamespace(
+        variance=None,
+        calibration=None,
+        hysteresis=hysteresis,
+        drift=None,
+        pressure=pressure,
+        influences=None,
+        readings=SimpleNamespace(reference=SimpleNamespace(name="strain", unit="mm/mm")),
+    )
+    files = model_files(results)
+    text = files["MODEL.md"].decode()
+    assert "## generation first: width of loops" in text
+    assert "## generation first: effect of pressure in kPa" in text
+    assert text.count(f"−2 log restricted likelihood: {fit.criterion},") == 2
+    assert "seeded by" not in text
+    folders = {name.split("/")[1] for name in files if name.startswith("model/")}
+    assert len(folders) == 2
+    for folder in folders:
+        design = files[f"model/{folder}/design.csv"].decode().splitlines()
+        assert design[0] == "y,unit_module,outermost,f1"
+        assert design[1] == f"{y[0]},0,0,1.0"
+        covariance = files[f"model/{folder}/component_covariance.csv"].decode()
+        assert covariance.startswith("of,component,estimate,c1,c2\nc1,module: variance of column 1,")
 
 
 def test_readings_come_back_from_their_file_as_they_were(simple: tuple[Any, Any, Any]) -> None:
