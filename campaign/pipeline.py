@@ -175,7 +175,7 @@ def read_and_analyse(
     folder: Path, output: Path | None, tell: Progress, workshop: Workshop | None
 ) -> tuple[CampaignResults, Notes]:
     """Return what a campaign's recordings say, and its notes; notices of both are among the results'."""
-    results = analyse(read_campaign(folder, output, tell, workshop), tell)
+    results = analyse(read_campaign(folder, output, tell, workshop), tell, workshop)
     notes = make_notes(read_note_files(folder))
     return replace(results, notices=sort_notices([*results.notices, *notes.notices])), notes
 
@@ -426,7 +426,9 @@ def _readings(
     return collect_readings(parts, sensors_aside)
 
 
-def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignResults:
+def analyse(
+    read: CampaignRead, progress: Progress | None = None, workshop: Workshop | None = None
+) -> CampaignResults:
     """Run every analysis that the readings allow, each fit once."""
     tell = progress or _silent
     intake, description = read.intake, read.intake.description
@@ -436,7 +438,7 @@ def analyse(read: CampaignRead, progress: Progress | None = None) -> CampaignRes
         calibration = _calibrate(read.readings, intake)
         put_back = _calibrate(read.readings_with_put_back, intake) if read.readings_with_put_back else None
         tell("analyses", 1, 4)
-        variance = analyse_variance(calibration, description)
+        variance = analyse_variance(calibration, description, workshop)
         tell("analyses", 2, 4)
         residuals = analyse_residuals(calibration, variance)
         effort = analyse_calibration_effort(calibration, variance, description)
