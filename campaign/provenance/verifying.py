@@ -117,7 +117,7 @@ def _verify_archive(home: Path) -> Verification:
     files, _ = files_below(home)
     info = read_info(files[BAG_INFO].read_text("utf-8", errors="replace")) if BAG_INFO in files else {}
     faults = [*check_bag(home), *_crate_faults(files), *_copy_faults(files), *_campaign_faults(files, info)]
-    version = info.get("Bag-Software-Agent", "").removeprefix("campaign-report ")
+    version = info.get("Sealed-By", "").removeprefix("campaign-report ")
     remarks = tuple(version_remarks(version, sealed_versions(home)))
     return Verification(ARCHIVE, home, len(files), version, tuple(faults), remarks)
 
