@@ -118,6 +118,7 @@ def _with_broken_titles(figure: Figure, width: int) -> Figure:
     margin["b"] += _LINE * (lines - 1)
     notes = [_legible(note, layout, inner) for note in layout.get("annotations", ())]
     highest = max((note["text"].count("<br>") for note in notes if _is_panel_title(note)), default=0)
+    notes = [_raised(note, _LINE * highest) if _is_above(note) else note for note in notes]
     margin["t"] += _LINE * highest
     layout |= {"annotations": notes, "margin": margin}
     return replace(figure, layout=layout, height=figure.height + _LINE * (lines - 1 + highest))
@@ -130,6 +131,16 @@ def _share(axis: Layout) -> float:
 
 def _is_panel_title(note: Layout) -> bool:
     return str(note.get("xref", "")).endswith("domain") and (note["x"], note["y"]) == (0, 1)
+
+
+def _is_above(note: Layout) -> bool:
+    """Return whether a label stands above its panel and is not its title: a key, say."""
+    above = str(note.get("yref", "")).endswith("domain") and note["y"] >= 1 and note.get("yshift", 0) > 0
+    return above and not _is_panel_title(note)
+
+
+def _raised(note: Layout, pixels: float) -> Layout:
+    return {**note, "yshift": note.get("yshift", 0) + pixels}
 
 
 def _legible(note: Layout, layout: Layout, inner: float) -> Layout:
