@@ -89,7 +89,29 @@ def _parser() -> argparse.ArgumentParser:
     report.add_argument(
         "--ignore-cache", action="store_true", help="compute everything anew, and keep nothing of it"
     )
+    report.add_argument(
+        "--brief",
+        metavar="FILE.html",
+        type=Path,
+        help="write one file for mail instead of the site: findings and key figures, no script",
+    )
     report.set_defaults(run=_report)
+
+    figures = commands.add_parser(
+        "figures", help="write every figure as SVG and 300 dpi PNG, and every table as CSV and LaTeX"
+    )
+    figures.add_argument("folder", metavar="FOLDER", type=Path, help="the campaign folder")
+    figures.add_argument(
+        "--into", metavar="DIR", type=Path, help="folder to write to (FOLDER_figures beside FOLDER)"
+    )
+    figures.add_argument(
+        "--page",
+        metavar="NAME",
+        action="append",
+        default=[],
+        help="only of this page (calibration, sensor-M01-AB, …); may be given more than once",
+    )
+    figures.set_defaults(run=_figures)
 
     inspect = commands.add_parser("inspect", help="read and check a campaign folder, and say what is found")
     inspect.add_argument("folder", metavar="FOLDER", type=Path, help="the campaign folder")
@@ -137,7 +159,7 @@ def _parser() -> argparse.ArgumentParser:
 
 
 def _report(options: argparse.Namespace) -> int:
-    from campaign.pipeline import report
+    from campaign.pipeline import brief, report
     from campaign.recordings.description import DESCRIPTION_FILE
     from campaign.workers.workshop import open_workshop
 
@@ -151,7 +173,18 @@ def _report(options: argparse.Namespace) -> int:
         ) as workshop,
         _progress_bar() as progress,
     ):
+        if options.brief is not None:
+            return brief(options.folder, options.brief, progress, workshop)
         return report(options.folder, options.into, options.fail_on_set_aside, progress, workshop)
+
+
+def _figures(options: argparse.Namespace) -> int:
+    from campaign.pipeline import publish
+    from campaign.recordings.description import DESCRIPTION_FILE
+    from campaign.workers.workshop import open_workshop
+
+    with open_workshop(options.folder, DESCRIPTION_FILE) as workshop, _progress_bar() as progress:
+        return publish(options.folder, options.into, options.page, progress, workshop)
 
 
 def _count(text: str) -> int:

@@ -132,6 +132,8 @@ NOTICE_CODES: dict[str, str] = {
     "rest-length-unreadable": "a rest length is no positive length; it is taken as unknown",
     "description-there": "campaign begin finds a campaign.toml already; it never overwrites one",
     "folder-taken": "a folder for tables holds other things; nothing is overwritten",
+    "brief-file": "a file stands where the brief should be, and is no brief; nothing is overwritten",
+    "page-not-there": "campaign figures is asked for a page that the report does not have",
     # Folder
     "no-recordings": "no file of the folder is named as a recording",
     "no-usable-trial": "every recording is set aside",

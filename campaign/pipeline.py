@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 import sys
 import tempfile
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass, field, replace
 from pathlib import Path
@@ -61,10 +61,12 @@ from campaign.archive import (
 )
 from campaign.keeping.kept_site import MadeSite, SiteKeeper
 from campaign.notices import CampaignStops, Notice, sort_notices
-from campaign.pages.notes import make_notes, read_note_files
+from campaign.pages.brief import brief_bytes, check_brief_place, write_brief
+from campaign.pages.notes import Notes, make_notes, read_note_files
 from campaign.pages.output import check_ours, write_folder
+from campaign.pages.publication import chosen_pages, publication_files
 from campaign.pages.render import templates_folder
-from campaign.pages.site import build_site
+from campaign.pages.site import build_site, site_frame, site_pages
 from campaign.provenance.bag import BagFault
 from campaign.provenance.comparing import SCHEMA, compare_tables
 from campaign.provenance.manifest import with_manifests
@@ -200,15 +202,84 @@ def make_site(
     Parameters are those of :func:`read_campaign`; so are the faults that stop it.
     """
     tell = progress or _silent
-    read = read_campaign(folder, output, tell, workshop)
-    results = analyse(read, tell, read_earlier(folder, read, tell, workshop))
-    notes = make_notes(read_note_files(folder))
-    results = replace(results, notices=sort_notices([*results.notices, *notes.notices]))
+    results, notes = read_and_analyse(folder, output, tell, workshop)
     tell("pages", 0, 1)
     library = results.description.plot_library
     files = build_site(results, notes, folder / library if library is not None else None)
     tell("pages", 1, 1)
-    return results, with_manifests(files, read.intake.file_hashes)
+    return results, with_manifests(files, results.intake.file_hashes)
+
+
+def read_and_analyse(
+    folder: Path, output: Path | None, tell: Progress, workshop: Workshop | None
+) -> tuple[CampaignResults, Notes]:
+    """Return what a campaign's recordings say, and its notes; notices of both are among the results'."""
+    read = read_campaign(folder, output, tell, workshop)
+    results = analyse(read, tell, read_earlier(folder, read, tell, workshop), workshop)
+    notes = make_notes(read_note_files(folder))
+    return replace(results, notices=sort_notices([*results.notices, *notes.notices])), notes
+
+
+def brief(
+    folder: Path, file: Path, progress: Progress | None = None, workshop: Workshop | None = None
+) -> int:
+    """Read and analyse the campaign in *folder* and write its brief, whole or not at all.
+
+    Returns
+    -------
+    int
+        Exit status: 0 done.
+
+    Raises
+    ------
+    CampaignStops
+        Where the campaign cannot be read, or *file* is not ours to write.
+    """
+    check_brief_place(file)
+    results, notes = read_and_analyse(folder, None, progress or _silent, workshop)
+    content = brief_bytes(site_frame(results), site_pages(results, notes))
+    write_brief(content, file)
+    print(f"{file}: {len(content)} bytes, findings and key figures in one file")
+    return DONE
+
+
+def publish(
+    folder: Path,
+    into: Path | None,
+    wanted: Sequence[str] = (),
+    progress: Progress | None = None,
+    workshop: Workshop | None = None,
+) -> int:
+    """Read and analyse the campaign in *folder* and write its figures and tables for a paper.
+
+    Parameters
+    ----------
+    folder
+        The campaign folder; nothing in it is altered.
+    into
+        Folder of the files; ``FOLDER_figures`` beside the campaign where ``None``.
+    wanted
+        Names of the pages whose figures and tables are wanted; all where none is named.
+
+    Returns
+    -------
+    int
+        Exit status: 0 done.
+
+    Raises
+    ------
+    CampaignStops
+        Where the campaign cannot be read, a page is not there, or the folder is not ours to write.
+    """
+    place = into if into is not None else beside(folder, "figures")
+    check_ours(place)
+    tell = progress or _silent
+    results, notes = read_and_analyse(folder, place, tell, workshop)
+    pages = site_pages(results, notes)
+    files = publication_files(chosen_pages(pages, wanted), (), results.readings.reference, tell)
+    write_folder(files, place)
+    print(f"{len(files)} files written to {place}; index.csv says which is which")
+    return DONE
 
 
 def seal(folder: Path, into: Path, progress: Progress | None = None, workshop: Workshop | None = None) -> int:
@@ -333,10 +404,10 @@ def _what_was_read(intake: Intake, notices: tuple[Notice, ...]) -> list[str]:
     return inspection_lines(replace(intake, notices=notices), where=ON_SITE)
 
 
-def beside(folder: Path) -> Path:
+def beside(folder: Path, word: str = "report") -> Path:
     """Return where a report of *folder* is written unless said otherwise: FOLDER_report beside it."""
     whole = folder.resolve()
-    return whole.with_name(f"{whole.name}_report")
+    return whole.with_name(f"{whole.name}_{word}")
 
 
 def read_campaign(
@@ -513,7 +584,10 @@ def _offers(read: CampaignRead, readings: Readings, full_scale: float) -> Compar
 
 
 def analyse(
-    read: CampaignRead, progress: Progress | None = None, earlier: Joined | None = None
+    read: CampaignRead,
+    progress: Progress | None = None,
+    earlier: Joined | None = None,
+    workshop: Workshop | None = None,
 ) -> CampaignResults:
     """Run every analysis that the readings allow, each fit once.
 
@@ -525,6 +599,8 @@ def analyse(
         Told what is being done.
     earlier
         Earlier campaigns to compare with (:func:`read_earlier`).
+    workshop
+        Who fits, and what earlier runs fitted; this process alone, and nothing, where ``None``.
     """
     tell = progress or _silent
     intake, description = read.intake, read.intake.description
@@ -534,7 +610,7 @@ def analyse(
         calibration = _calibrate(read.readings, intake)
         put_back = _calibrate(read.readings_with_put_back, intake) if read.readings_with_put_back else None
         tell("analyses", 1, 4)
-        variance = analyse_variance(calibration, description)
+        variance = analyse_variance(calibration, description, workshop)
         tell("analyses", 2, 4)
         residuals = analyse_residuals(calibration, variance)
         effort = analyse_calibration_effort(calibration, variance, description)

@@ -142,8 +142,8 @@ class HoldCurve:
 
     ``times_s`` (s after the end of the ramp), ``low``, ``high`` and ``mean`` have shape (buckets,); ``forms``
     are the forms within two units of the best, as (name, values at ``form_times_s``). ``samples_s`` and
-    ``samples`` are all samples as recorded, in s after the end of the ramp and signal units; ``zero`` (a
-    signal) and ``per_cent`` (of a signal unit) take them to per cent.
+    ``samples`` are the samples that are kept of the ``recorded_samples``, as recorded, in s after the end of
+    the ramp and signal units; ``zero`` (a signal) and ``per_cent`` (of a signal unit) take them to per cent.
     """
 
     generation: str
@@ -166,6 +166,7 @@ class HoldCurve:
     forms: tuple[tuple[str, FloatArray], ...]
     samples_s: FloatArray
     samples: FloatArray
+    recorded_samples: int
     zero: float
     per_cent: float
 
@@ -354,6 +355,7 @@ def hold_curve(fitted: FittedHold, scale: HoldScale, x: float, change: float) ->
         forms=tuple((found.name, (found.curve(times) - zero) * scale.per_cent) for found in forms),
         samples_s=hold.times_s,
         samples=hold.signal,
+        recorded_samples=hold.recorded_samples,
         zero=zero,
         per_cent=scale.per_cent,
     )

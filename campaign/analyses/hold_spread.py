@@ -44,22 +44,28 @@ def spread_of_slopes(holds: pd.DataFrame) -> tuple[pd.DataFrame, pd.DataFrame]:
     with one hold a sensor there is no split between sensor and run. Only holds at the largest length of their
     generation are taken, because slopes depend on it.
     """
-    rows = holds[(holds["percent_of"] == OF_FULL_SCALE) & (holds["place"] == "stretched")]
-    rows = rows.dropna(subset=["percent_fso_per_decade"])
     components: list[dict[str, object]] = []
     means: list[dict[str, object]] = []
-    for generation, own in rows.groupby("generation", sort=True):
-        own = own[own["strain"] >= SAME_LENGTH * own["strain"].max()]
-        built = loop_model(own.assign(width=own["percent_fso_per_decade"]), str(generation))
-        if built is None:
-            continue
-        fit = fit_nested_model(built.model)
+    for built, fit, strain in fit_slopes(holds):
         components += _components(built, fit)
-        means.append(_mean(built, fit) | {"strain": float(own["strain"].mean())})
+        means.append(_mean(built, fit) | {"strain": strain})
     return (
         pd.DataFrame(components, columns=list(COMPONENT_COLUMNS)),
         pd.DataFrame(means, columns=list(MEAN_COLUMNS)),
     )
+
+
+def fit_slopes(holds: pd.DataFrame) -> tuple[tuple[LoopModel, NestedModelFit, float], ...]:
+    """Fit the slopes of every generation that has a spread; with the mean strain of the holds taken."""
+    rows = holds[(holds["percent_of"] == OF_FULL_SCALE) & (holds["place"] == "stretched")]
+    rows = rows.dropna(subset=["percent_fso_per_decade"])
+    fits = []
+    for generation, own in rows.groupby("generation", sort=True):
+        own = own[own["strain"] >= SAME_LENGTH * own["strain"].max()]
+        built = loop_model(own.assign(width=own["percent_fso_per_decade"]), str(generation))
+        if built is not None:
+            fits.append((built, fit_nested_model(built.model), float(own["strain"].mean())))
+    return tuple(fits)
 
 
 def _components(built: LoopModel, fit: NestedModelFit) -> list[dict[str, object]]:

@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING
 
 import pandas as pd
 
-from campaign.analyses.loop_model import width_components
+from campaign.analyses.loop_model import FittedLoops, fit_widths, width_components
 from campaign.analyses.loop_rates import RateDependence, rate_dependence
 from campaign.analyses.loop_table import BY_LINE, SENSOR_KEYS, LoopTable, loop_table
 from campaign.analyses.loop_widths import runs_table, sensor_widths
@@ -101,6 +101,8 @@ class Hysteresis:
         gives its full-scale output).
     notices
         What was found when the loops of all trials were put together.
+    fits
+        The fits that ``components`` and ``means`` are read off.
     """
 
     reference: ReferenceQuantity
@@ -116,6 +118,7 @@ class Hysteresis:
     outlines: tuple[SensorCurve, ...]
     figures: pd.DataFrame
     notices: tuple[Notice, ...]
+    fits: tuple[FittedLoops, ...] = ()
 
     @property
     def several_rates(self) -> bool:
@@ -146,7 +149,8 @@ def analyse_hysteresis(
     if table is None or not table.rows["counted"].any():
         return None
     sensors, curves = sensor_widths(table)
-    components, means = width_components(table)
+    fits = fit_widths(table)
+    components, means = width_components(table, fits)
     return Hysteresis(
         reference=table.reference,
         rate_per_s=table.rate,
@@ -161,6 +165,7 @@ def analyse_hysteresis(
         outlines=tuple(_outlines(known, table)),
         figures=_figures(sensors),
         notices=_notices(known, table),
+        fits=fits,
     )
 
 

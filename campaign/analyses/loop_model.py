@@ -67,8 +67,14 @@ class LoopModel:
     sensors: int
 
 
-def width_components(table: LoopTable) -> tuple[pd.DataFrame, pd.DataFrame]:
-    """Fit the widths of every generation, and of all of them together.
+FittedLoops = tuple[LoopModel, NestedModelFit]
+"""A model and its fit."""
+
+
+def width_components(
+    table: LoopTable, fits: tuple[FittedLoops, ...] | None = None
+) -> tuple[pd.DataFrame, pd.DataFrame]:
+    """Fit the widths of every generation, and of all of them together; *fits* where that is done already.
 
     Returns
     -------
@@ -82,25 +88,27 @@ def width_components(table: LoopTable) -> tuple[pd.DataFrame, pd.DataFrame]:
     Generation and position are fixed; module, sensor and run (repetition) are random; what loops of one run
     differ by is the residual. Runs that several sensors of a module shared are an effect of the module.
     """
-    counted = table.rows["counted"].to_numpy(bool)
-    rows = table.rows[counted].assign(width=table.width[counted][:, MID]).dropna(subset=["width"])
-    parts = [(str(g), own) for g, own in rows.groupby("generation", sort=True)]
-    if len(parts) > 1:
-        parts.append(("all", rows))
     components: list[dict[str, object]] = []
     means: list[dict[str, object]] = []
-    for generation, own in parts:
-        model = loop_model(own, generation)
-        if model is None:
-            continue
-        fit = fit_nested_model(model.model)
+    for model, fit in fit_widths(table) if fits is None else fits:
         components += _components(model, fit)
-        if generation != "all":
+        if model.generation != "all":
             means.append(_mean(model, fit))
     return (
         pd.DataFrame(components, columns=list(COMPONENT_COLUMNS)),
         pd.DataFrame(means, columns=list(MEAN_COLUMNS)),
     )
+
+
+def fit_widths(table: LoopTable) -> tuple[FittedLoops, ...]:
+    """Fit the widths of every generation that has a spread, then of all of them together."""
+    counted = table.rows["counted"].to_numpy(bool)
+    rows = table.rows[counted].assign(width=table.width[counted][:, MID]).dropna(subset=["width"])
+    parts = [(str(g), own) for g, own in rows.groupby("generation", sort=True)]
+    if len(parts) > 1:
+        parts.append(("all", rows))
+    models = (loop_model(own, generation) for generation, own in parts)
+    return tuple((model, fit_nested_model(model.model)) for model in models if model is not None)
 
 
 def loop_model(rows: pd.DataFrame, generation: str) -> LoopModel | None:

@@ -9,7 +9,7 @@ once pooled, on the signal and on its ratio to the session's zero signal.
 from __future__ import annotations
 
 import hashlib
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
@@ -19,11 +19,11 @@ import pandas as pd
 
 from campaign.analyses import variance_frames as frames
 from campaign.analyses.run_settling import Settling, find_settling, number_runs
+from campaign.analyses.shared_fits import FitTask, Outcome, fit_all
 from campaign.analyses.variance_fit import (
     PLACES,
     GenerationFit,
     choose_places,
-    fit_generation,
     session_zeros,
 )
 from campaign.analyses.variance_model import VarianceModel, build_model
@@ -33,6 +33,7 @@ from campaign.methods.within_run_noise import NoiseCheck, check_noise
 from campaign.notices import Notice
 from campaign.recordings.description import Description
 from campaign.recordings.recording import STRAIN, ReferenceQuantity
+from campaign.workers.workshop import Workshop
 
 if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration
@@ -144,7 +145,9 @@ def _single(fits: tuple[GenerationFit, ...]) -> tuple[GenerationFit, ...]:
     return tuple(fit for fit in fits if fit.generation != "all" or len(fits) == 1)
 
 
-def analyse_variance(calibration: Calibration, description: Description) -> Variance:
+def analyse_variance(
+    calibration: Calibration, description: Description, workshop: Workshop | None = None
+) -> Variance:
     """Fit the nested model to the used readings of a campaign.
 
     Parameters
@@ -153,17 +156,22 @@ def analyse_variance(calibration: Calibration, description: Description) -> Vari
         Its ``readings`` and ``reference``.
     description
         The rated range.
+    workshop
+        Who fits, and what earlier runs fitted; this process alone where ``None``.
 
     Returns
     -------
     Variance
         Empty tables with a notice where nothing can be fitted.
     """
-    return variance_of_readings(calibration.readings, calibration.reference, description)
+    return variance_of_readings(calibration.readings, calibration.reference, description, workshop)
 
 
 def variance_of_readings(
-    readings: pd.DataFrame, reference: ReferenceQuantity, description: Description
+    readings: pd.DataFrame,
+    reference: ReferenceQuantity,
+    description: Description,
+    workshop: Workshop | None = None,
 ) -> Variance:
     """Fit the nested model to the used rows of a table of readings.
 
@@ -175,6 +183,8 @@ def variance_of_readings(
         What its ``x`` is.
     description
         The rated range.
+    workshop
+        Who fits, and what earlier runs fitted; this process alone where ``None``.
     """
     notices: list[Notice] = []
     kept, settling = _fitted_readings(readings, notices)
@@ -184,10 +194,15 @@ def variance_of_readings(
         kept["x"].to_numpy(float), _rated(description, reference), has_zero=_has_zero(reference)
     )
     models = tuple(_build_all(kept, kept["signal"].to_numpy(float)))
-    fits = tuple(_fit_all(models, places, SIGNAL, notices))
+    of_ratios: list[Notice] = []
+    ratio_models = _ratio_models(kept, places, of_ratios)
+    outcomes = _outcomes(models, ratio_models, places, workshop or Workshop())
+    fits = tuple(_fits_of(models, outcomes[: len(models)], SIGNAL, notices))
     if not fits:
         return replace(_nothing(reference, notices), identifiability=frames.identifiability(models, ()))
-    ratio_fits, zero_noise = _fit_ratios(kept, places, notices)
+    ratio_fits = tuple(_fits_of(ratio_models, outcomes[len(models) :], "ratio", of_ratios))
+    zero_noise = _zero_noise(ratio_fits)
+    notices += of_ratios
     seed = seed_of(kept)
     noise = {fit.generation: _noise_of(fit, seed) for fit in _single(fits)}
     notices += _noise_notices(noise)
@@ -400,12 +415,25 @@ def _build_all(readings: pd.DataFrame, response: FloatArray) -> Iterator[Varianc
         yield build_model(readings, response, "all")
 
 
-def _fit_all(
-    models: tuple[VarianceModel, ...], places: dict[str, float], what: str, notices: list[Notice]
+def _outcomes(
+    models: Sequence[VarianceModel],
+    ratio_models: Sequence[VarianceModel],
+    places: dict[str, float],
+    workshop: Workshop,
+) -> list[Outcome | None]:
+    """Fit all models together; ``None`` for those that tell no component from another."""
+    both = [*((model, SIGNAL) for model in models), *((model, "ratio") for model in ratio_models)]
+    tasks = [FitTask(model, places, _limits_at(model, what)) for model, what in both if model.terms]
+    fitted = iter(fit_all(tasks, workshop))
+    return [next(fitted) if model.terms else None for model, _ in both]
+
+
+def _fits_of(
+    models: Sequence[VarianceModel], outcomes: Sequence[Outcome | None], what: str, notices: list[Notice]
 ) -> Iterator[GenerationFit]:
     """The fit of each model, or a notice that says why there is none."""
-    for model in models:
-        if not model.terms:
+    for model, outcome in zip(models, outcomes, strict=True):
+        if outcome is None:
             notices.append(
                 _notice(
                     "spread-not-fitted",
@@ -414,15 +442,12 @@ def _fit_all(
                     "repeat runs, or measure several sensors",
                 )
             )
-            continue
-        try:
-            fit = fit_generation(model, places, limits_at=_limits_at(model, what))
-        except (ValueError, np.linalg.LinAlgError) as error:
-            notices.append(_notice("spread-not-fitted", f"{model.generation}, {what}: {error}", _WITHHELD))
-            continue
-        if not fit.by_profile:
-            notices.append(_fallback_notice(fit, what))
-        yield fit
+        elif isinstance(outcome, str):
+            notices.append(_notice("spread-not-fitted", f"{model.generation}, {what}: {outcome}", _WITHHELD))
+        else:
+            if not outcome.by_profile:
+                notices.append(_fallback_notice(outcome, what))
+            yield outcome
 
 
 def _limits_at(model: VarianceModel, what: str) -> tuple[str, ...]:
@@ -443,11 +468,10 @@ def _fallback_notice(fit: GenerationFit, what: str) -> Notice:
     )
 
 
-def _fit_ratios(
+def _ratio_models(
     readings: pd.DataFrame, places: dict[str, float], notices: list[Notice]
-) -> tuple[tuple[GenerationFit, ...], pd.DataFrame]:
-    """The fits on y/y0, and what the noise of y0 adds; none where some session has no zero signal."""
-    none = pd.DataFrame(columns=["generation", "strain_sd"])
+) -> tuple[VarianceModel, ...]:
+    """The models of y/y0; none where some session has no zero signal."""
     zeros = session_zeros(readings, places["zero"], number_runs(readings))
     zero = zeros["zero_signal"].to_numpy(float)
     if not np.isfinite(zero).all() or (np.abs(zero) <= 1e-6 * np.abs(readings["signal"]).max()).any():
@@ -459,15 +483,19 @@ def _fit_ratios(
                 "start every session at the rest length",
             )
         )
-        return (), none
+        return ()
     kept = readings[~zeros["is_zero"].to_numpy()]
     ratio = kept["signal"].to_numpy(float) / zero[~zeros["is_zero"].to_numpy()]
-    fits = tuple(_fit_all(tuple(_build_all(kept, ratio)), places, "ratio", notices))
+    return tuple(_build_all(kept, ratio))
+
+
+def _zero_noise(fits: Sequence[GenerationFit]) -> pd.DataFrame:
+    """What the noise of y0 adds to every ratio."""
     noise = [
         {"generation": f.generation, "strain_sd": f.strain_of(float(np.sqrt(f.residual_variance)))}
         for f in fits
     ]
-    return fits, pd.DataFrame(noise, columns=none.columns)
+    return pd.DataFrame(noise, columns=["generation", "strain_sd"])
 
 
 def _noise_of(fit: GenerationFit, seed: int) -> NoiseCheck:

@@ -17,27 +17,28 @@ from campaign.pages import palette
 from campaign.pages.house_style import HOUSE_TEMPLATE
 
 LIBRARY = "assets/plot_library.js"
+SHARED_SHEETS = ("text", "frame", "figures", "tables", "skin_map", "print")
+"""Style sheets of every page, in the order in which they count."""
 
 
 def asset_files(templates: Path, plot_library: Path | None = None) -> dict[str, bytes]:
     """Return the shared files of a site by address.
 
-    Style sheets and scripts are the files of the folders ``css`` and ``js`` of *templates* as they stand;
-    ``assets/colours.css`` and ``assets/house_style.js`` are written from :mod:`campaign.pages.palette` and
-    :mod:`campaign.pages.house_style`, so that colours stand in one place.
+    Scripts are the files of the folder ``js`` of *templates* as they stand. Style sheets that every page has
+    (:data:`SHARED_SHEETS`) are one file, ``assets/site.css``, after the colours of
+    :mod:`campaign.pages.palette`; the others of the folder ``css`` stand alone. ``assets/house_style.js`` is
+    written from :mod:`campaign.pages.house_style`.
     """
-    made = {
-        f"assets/{path.name}": path.read_bytes()
-        for kind in ("css", "js")
-        for path in sorted((templates / kind).glob(f"*.{kind}"))
-    }
+    sheets = (path for path in (templates / "css").glob("*.css") if path.stem not in SHARED_SHEETS)
+    paths = sorted([*sheets, *(templates / "js").glob("*.js")])
+    made = {f"assets/{path.name}": path.read_bytes() for path in paths}
     library = library_bytes(plot_library)
     template = orjson.dumps(HOUSE_TEMPLATE, option=orjson.OPT_SORT_KEYS)
     styles = orjson.dumps(_own_style_elements(library))
     values = (template, styles)
     house_style = b"window.campaignHouseStyle = %b;\nwindow.campaignLibraryStyles = %b;\n" % values
     return made | {
-        "assets/colours.css": colours_css().encode("utf-8"),
+        "assets/site.css": shared_css(templates).encode("utf-8"),
         "assets/house_style.js": house_style,
         LIBRARY: library,
     }
@@ -64,6 +65,12 @@ def library_bytes(plot_library: Path | None = None) -> bytes:
     if found is None or wanted is None or found.split(".")[0] != wanted.split(".")[0]:
         raise CampaignStops([_library_notice(plot_library, f"it is not a build of plotly.js {wanted}")])
     return _wrapped(text).encode("utf-8")
+
+
+def shared_css(templates: Path) -> str:
+    """Return what every page is styled by: colours, then the shared sheets of the folder ``css``."""
+    sheets = [(templates / "css" / f"{name}.css").read_text(encoding="utf-8") for name in SHARED_SHEETS]
+    return "".join([colours_css(), *sheets])
 
 
 def colours_css() -> str:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 import re
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from dataclasses import replace
 from typing import Any
 
@@ -30,8 +30,9 @@ def ready(figure: Figure) -> Figure:
     _check_size(figure)
     _check_texts(figure)
     layout: Layout = {**figure.layout, "margin": {**MARGINS, **figure.layout.get("margin", {})}}
+    reached = _reached(figure.traces)
     for key in axis_names(layout):
-        layout[key] = _with_range(key, layout, figure.traces)
+        layout[key] = _with_range(key, layout, reached)
     layout["annotations"] = [_on_its_axes(note, layout) for note in layout.get("annotations", ())]
     traces = tuple(_rounded_trace(trace, layout) for trace in figure.traces)
     return replace(figure, traces=traces, layout=layout)
@@ -81,12 +82,21 @@ def _check_texts(figure: Figure) -> None:
             raise ValueError(f"figure {figure.name} has markup in the text {text!r}")
 
 
-def _with_range(key: str, layout: Layout, traces: Iterable[Trace]) -> Layout:
+def _reached(traces: Iterable[Trace]) -> dict[str, list[float]]:
+    """Every place that traces reach along each axis."""
+    reached: dict[str, list[float]] = {}
+    for trace in traces:
+        for letter in ("x", "y"):
+            reached.setdefault(axis_of(trace, letter), []).extend(_extent(trace, letter))
+    return reached
+
+
+def _with_range(key: str, layout: Layout, reached: Mapping[str, list[float]]) -> Layout:
     axis: Layout = layout[key]
     if "range" in axis:
         return axis
     group = _matching(key, layout)
-    values = [v for trace in traces for v in _extent(trace, key[0]) if axis_of(trace, key[0]) in group]
+    values = [v for axis_name in group for v in reached.get(axis_name, ())]
     logarithmic = axis.get("type") == "log"
     ends = _fitted([math.log10(v) for v in values if v > 0] if logarithmic else values)
     reverse = axis.get("autorange") == "reversed"
@@ -127,7 +137,8 @@ def _extent(trace: Trace, letter: str) -> list[float]:
     if trace["type"] == "bar":
         parts += _bar_extent(trace, letter, centre)
     joined = np.concatenate(parts)
-    return [float(v) for v in joined[np.isfinite(joined)]]
+    reached: list[float] = joined[np.isfinite(joined)].tolist()
+    return reached
 
 
 def _bar_extent(trace: Trace, letter: str, centre: Any) -> list[Any]:

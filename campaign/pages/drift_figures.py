@@ -210,7 +210,8 @@ def hold_figure(
         ),
         data=curve_table(curve),
         note="The band reaches from the lowest to the highest sample of every stretch of time: no spike is "
-        "lost, and the CSV holds every sample. Forms are drawn over the data they were fitted to.",
+        f"lost, and the CSV holds {_samples_words(curve)}. Forms are drawn over the data they were fitted "
+        "to.",
         height=height,
     )
 
@@ -276,8 +277,18 @@ def _hold_caption(curve: HoldCurve, reference: ReferenceQuantity) -> str:
     )
 
 
+def _samples_words(curve: HoldCurve) -> str:
+    """Say which samples a hold's file holds."""
+    if len(curve.samples) == curve.recorded_samples:
+        return "every sample"
+    return (
+        f"{len(curve.samples):,} of {curve.recorded_samples:,} samples: the first ones, and the lowest and "
+        "highest of every short stretch after them"
+    )
+
+
 def curve_table(curve: HoldCurve) -> pd.DataFrame:
-    """Return every sample of a hold, none thinned, and below them the forms, one row a time and form."""
+    """Return the kept samples of a hold, and below them the forms, one row a time and form."""
     samples = pd.DataFrame(
         {
             "curve": "samples",

@@ -216,9 +216,7 @@ def module_lines_figure(
             annotations=labels,
             margin={"r": 56},
         ),
-        data=readings[
-            ["sensor", "session", "repetition", "trial", "order", "direction", "x", "signal", "unit"]
-        ],
+        table="readings",
         note="Every point leads to its trial.",
         height=400,
     )

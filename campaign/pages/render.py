@@ -33,6 +33,7 @@ from campaign.pages.tables import (
     schema_bytes,
     shown_cells,
     shown_marks,
+    to_ten_digits,
 )
 from campaign.recordings.recording import STRAIN, ReferenceQuantity
 
@@ -149,7 +150,7 @@ def render_site(
     html = {}
     for page in pages:
         figures = {f.name: ready(f) for f in page.figures}
-        tables_placed = {t.name: _placed_table(page, i, t) for i, t in enumerate(page.tables, 1)}
+        tables_placed = {t.name: placed_table(page, i, t) for i, t in enumerate(page.tables, 1)}
         html[page.file] = _page_html(jinja, frame, page, pages, figures, tables_placed)
         further = {
             name: [folded_row(*row) for row in placed.further]
@@ -159,7 +160,8 @@ def render_site(
         written[f"data/{page.slug}.js"] = data_script(page, figures, further)
         for figure in page.figures:
             if figure.data is not None:
-                written[_figure_csv(page, figure)] = csv_bytes(in_reference(figure.data, reference))
+                data = to_ten_digits(in_reference(figure.data, reference))
+                written[_figure_csv(page, figure)] = csv_bytes(data)
     written |= {name: text.encode("utf-8") for name, text in with_places_of_anchors(html, pages).items()}
     written |= asset_files(templates_folder(), plot_library)
     return dict(sorted(written.items()))
@@ -232,10 +234,10 @@ def _page_html(
         "figures": {f.name: _placed_figure(page, i, figures[f.name]) for i, f in enumerate(page.figures, 1)},
         "tables": tables,
     }
-    return _without_indents(jinja.get_template(page.template).render(context))
+    return without_indents(jinja.get_template(page.template).render(context))
 
 
-def _without_indents(page: str) -> str:
+def without_indents(page: str) -> str:
     """Return a page without indents and empty lines, but for what is set as it stands (``pre``)."""
     parts = re.split(r"(<pre\b.*?</pre>)", page, flags=re.DOTALL)
     return "".join(part if part.startswith("<pre") else re.sub(r"\s*\n\s*", "\n", part) for part in parts)
@@ -245,21 +247,23 @@ def _placed_figure(page: Page, index: int, figure: Figure) -> PlacedFigure:
     csv = f"tables/{figure.table}.csv" if figure.data is None and figure.table else _figure_csv(page, figure)
     return PlacedFigure(
         figure,
-        _numbered(page, index),
+        number_on_page(page, index),
         f"figure-{figure.name}",
         Markup(static_svg(figure)),
         csv,
     )
 
 
-def _placed_table(page: Page, index: int, table: Table) -> PlacedTable:
+def placed_table(page: Page, index: int, table: Table) -> PlacedTable:
+    """Return a table with its number and the cells that its page shows."""
     rows = list(zip(shown_marks(table), shown_cells(table), strict=True))
     first = len(rows) if len(rows) <= table.rows_in_page + ROWS_NOT_WORTH_A_BUTTON else table.rows_in_page
     anchor = f"table-{table.name}"
-    return PlacedTable(table, _numbered(page, index), anchor, rows[:first], rows[first:], table.file)
+    return PlacedTable(table, number_on_page(page, index), anchor, rows[:first], rows[first:], table.file)
 
 
-def _numbered(page: Page, index: int) -> str:
+def number_on_page(page: Page, index: int) -> str:
+    """Return the number that a figure or table carries: ``"2.1"``, or ``"1"`` on pages without a number."""
     return str(index) if page.number is None else f"{page.number}.{index}"
 
 

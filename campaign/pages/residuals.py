@@ -26,6 +26,7 @@ from campaign.pages.figures import (
     points,
 )
 from campaign.pages.page import Page
+from campaign.pages.page_data import Fold
 from campaign.pages.sensor_axis import SensorAxis, sensor_axis
 from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import ReferenceQuantity
@@ -105,9 +106,13 @@ def residual_files(results: CampaignResults) -> dict[str, bytes]:
     for module, own in rows.groupby("module", sort=True):
         by_level = _marks(own, "x", where, reference, reference.shown_factor)
         by_order = _marks(own, "order", where, reference)
+        fold = Fold()
+        traces = [fold.trace(_rounded(trace)) for trace in by_level]
         content = orjson.dumps(
             {
-                "traces": [_rounded(trace) for trace in by_level],
+                "traces": traces,
+                "shared": fold.shared,
+                "texts": fold.texts,
                 "x": {
                     "against-level": [_rounded(trace)["x"] for trace in by_level],
                     "against-order": [_rounded(trace)["x"] for trace in by_order],

@@ -218,6 +218,7 @@ def _text(value: object) -> str:
 def trial_sections(parts: SensorParts, together: Mapping[tuple[str, str], set[str]]) -> list[TrialSection]:
     """Return the sections of a sensor's trials in order of time."""
     trials = parts.trials.drop_duplicates("file").sort_values(["started", "file"], kind="stable")
+    runs = _runs_by_trial(parts)
     sections: list[TrialSection] = []
     for trial in trials.to_dict("records"):
         file = str(trial["file"])
@@ -231,7 +232,7 @@ def trial_sections(parts: SensorParts, together: Mapping[tuple[str, str], set[st
                 session=_text(trial["session"]),
                 repetition=_text(trial["repetition"]),
                 fate=_text(trial["fate"]),
-                runs=tuple(_runs_of(parts, file)),
+                runs=tuple(runs.get(file, ())),
                 moved=moved_from_line(parts, file),
                 shared_with=tuple(sorted(others)),
             )
@@ -239,10 +240,11 @@ def trial_sections(parts: SensorParts, together: Mapping[tuple[str, str], set[st
     return sections
 
 
-def _runs_of(parts: SensorParts, file: str) -> list[dict[Hashable, Any]]:
-    if parts.runs.empty:
-        return []
-    return parts.runs[parts.runs["trial"] == file].to_dict("records")
+def _runs_by_trial(parts: SensorParts) -> dict[str, list[dict[Hashable, Any]]]:
+    runs: dict[str, list[dict[Hashable, Any]]] = {}
+    for run in parts.runs.to_dict("records"):
+        runs.setdefault(str(run["trial"]), []).append(run)
+    return runs
 
 
 def _runs_table(parts: SensorParts) -> list[Table]:

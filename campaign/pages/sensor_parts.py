@@ -119,16 +119,18 @@ class _BySensor:
     def __init__(self, frame: pd.DataFrame | None) -> None:
         self._empty = pd.DataFrame() if frame is None else frame.iloc[:0]
         self._parts: dict[Pair, pd.DataFrame] = {}
+        self._first: dict[Pair, Row] = {}
         if frame is not None and {"module", "sensor"} <= set(frame.columns):
             for (module, sensor), part in frame.groupby(["module", "sensor"], sort=False):
                 self._parts[str(module), str(sensor)] = part
+            for row in frame.drop_duplicates(["module", "sensor"]).to_dict("records"):
+                self._first[str(row["module"]), str(row["sensor"])] = row
 
     def of(self, pair: Pair) -> pd.DataFrame:
         return self._parts.get(pair, self._empty)
 
     def first(self, pair: Pair) -> Row | None:
-        rows = self.of(pair).head(1).to_dict("records")
-        return rows[0] if rows else None
+        return self._first.get(pair)
 
 
 def gather_sensors(results: CampaignResults) -> list[SensorParts]:

@@ -31,12 +31,6 @@ from campaign.recordings.recording import ReferenceQuantity
 
 _STYLES = palette.GENERATION_STYLES
 
-_EXPORTED = (
-    *("session", "repetition", "trial", "order", "direction", "nominal_level", "x", "signal", "unit"),
-    *("standard_error", "settled", "used", "fitted", "residual", "studentised"),
-)
-_DEPARTURES = ("session", "repetition", "order", "direction", "x", "fitted", "residual")
-
 
 def sensor_figures_of(parts: SensorParts) -> list[Figure]:
     """Return the figures of a sensor that has a line."""
@@ -67,7 +61,7 @@ def line_figure(parts: SensorParts) -> Figure:
         "open while falling, about a straight line with its band.",
         traces=tuple(traces),
         layout=layout(axis(x_title(reference), reference.shown_unit), axis("Signal", str(row["unit"]))),
-        data=parts.frame[[c for c in _EXPORTED if c in parts.frame]],
+        table="readings",
         note=(
             "The band holds one reading of a new run with 95 %. "
             if reach is not None
@@ -151,9 +145,9 @@ def departure_figure(parts: SensorParts) -> Figure:
         "readings, with the band of one reading in a new run.",
         traces=tuple(traces),
         layout=drawn,
-        data=parts.frame[[c for c in _DEPARTURES if c in parts.frame]],
-        note="Each panel is one run, its path in the order of the readings: a gap between its way up and down "
-        "is its loop, a path that lies high or low is the run’s own zero. Filled: rising; open: falling."
+        table="readings",
+        note="Each panel is one run, its path in the order of the readings: a gap between its way up and "
+        "down is its loop, a path that lies high or low is the run’s own zero. Filled: rising; open: falling."
         + (
             f" The first {len(runs)} runs are drawn; the CSV holds all." if len(every_run) > len(runs) else ""
         ),
@@ -166,13 +160,13 @@ _COLUMNS = 3
 
 
 def layout_of_runs(runs: Sequence[tuple[str, int, str]], reference: ReferenceQuantity) -> Layout:
-    """Return a panel for each run, named by its repetition and, where modules were remounted, its mounting."""
+    """Return a panel for each run, named by its repetition and, where there are several, its mounting."""
     mountings = {session for session, _, _ in runs}
     titles = [
         f"run {repetition}, mounting {session}" if len(mountings) > 1 else f"run {repetition}"
         for session, repetition, _ in runs
     ]
-    made = small_multiples(
+    return small_multiples(
         titles,
         axis(x_title(reference), reference.shown_unit),
         axis("Departure", reference.shown_unit),
@@ -180,11 +174,10 @@ def layout_of_runs(runs: Sequence[tuple[str, int, str]], reference: ReferenceQua
         gap=(0.04, min(0.2, 0.36 / max(math.ceil(len(runs) / _COLUMNS), 1))),
         shapes=[level_line(0, colour=palette.INK, axes=panel(i)) for i in range(len(runs))],
     )
-    return made
 
 
 def moved_from_line(parts: SensorParts, trial: str) -> str:
-    """Return in words how far the readings of a trial lie from the sensor's line on average; empty if none."""
+    """Return in words how far a trial's readings lie from the sensor's line on average; empty if none."""
     departures = [r.departure for run, own in parts.readings_by_run() if run[2] == trial for r in own]
     if not departures or parts.line is None:
         return ""

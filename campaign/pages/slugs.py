@@ -11,11 +11,13 @@ from __future__ import annotations
 import hashlib
 import re
 import unicodedata
+from functools import lru_cache
 
 _PLAIN = re.compile(r"[A-Z0-9][A-Z0-9_]{0,31}")
 _LETTERS = "bcdfghjklmnpqrst"
 
 
+@lru_cache(maxsize=100_000)
 def slug(text: str) -> str:
     """Return *text* as part of a file name: letters, digits and underscores of ASCII, never empty."""
     if _PLAIN.fullmatch(text):

@@ -74,7 +74,7 @@ class Panel:
         return _places(values, self.y_axis, self.bottom, self.top)
 
     def holds(self, x: Floats, y: Floats, room: float) -> bool:
-        """Return whether all places (those that are not numbers aside) lie within the panel and its *room*."""
+        """Return whether all places (but those that are not numbers) lie within the panel and its *room*."""
         return bool(
             np.all(~(x < self.left - room) & ~(x > self.right + room))
             and np.all(~(y < self.top - room) & ~(y > self.bottom + room))
@@ -233,7 +233,7 @@ def _ticks(axis: Layout, about: float) -> list[tuple[float, str]]:
 
 @dataclass(frozen=True)
 class DrawnTrace:
-    """What one trace draws: paths with their looks, texts after them, its opacity, and whether all lies within."""
+    """What one trace draws: paths with their looks, texts, its opacity, and whether all lies within."""
 
     pieces: tuple[Piece, ...]
     texts: str = ""
@@ -242,7 +242,7 @@ class DrawnTrace:
 
 
 def _all_traces(figure: Figure, panels: Mapping[str, Panel]) -> Iterator[str]:
-    """Return the traces of all panels; those with something that reaches over their edges are cut off there."""
+    """Return the traces of all panels; panels that something reaches out of are cut off at their edges."""
     shown: dict[str, list[Trace]] = {key: [] for key in panels}
     for trace in figure.traces:
         key = f"{axis_of(trace, 'x')}|{axis_of(trace, 'y')}"

@@ -1,7 +1,7 @@
 """Paths of static pictures: whole tenths of a pixel, steps from point to point, shapes of markers.
 
-Every coordinate is a whole number of tenths of a pixel; the picture's ``viewBox`` is ten times its size. A path
-says where it begins and then only how far each next point lies away, which is shorter than saying where it is.
+Every coordinate is a whole number of tenths of a pixel; the picture's ``viewBox`` is ten times its size. A
+path says where it begins and then only how far each next point lies away, which is shorter than saying where.
 """
 
 from __future__ import annotations
@@ -46,7 +46,8 @@ def steps(across: Sequence[int], upright: Sequence[int]) -> str:
 def curve(x: Floats, y: Floats, shape: str = "linear") -> str:
     """Return the path through points in pixels; one that is not a number breaks it.
 
-    Points that lie within half a pixel off the chord of their neighbours are left out. ``shape="hv"`` goes across first and then up or down.
+    Points that lie within half a pixel off the chord of their neighbours are left out. ``shape="hv"`` goes
+    across first and then up or down.
     """
     return "".join(_unbroken(*run, shape) for run in _runs(x, y))
 

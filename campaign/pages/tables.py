@@ -7,10 +7,12 @@ Names and columns of :data:`CONTRACT_COLUMNS` are kept stable.
 
 from __future__ import annotations
 
+import csv
 import math
 import re
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
+from io import StringIO
 from typing import Any, Literal
 
 import numpy as np
@@ -139,17 +141,25 @@ def csv_bytes(frame: pd.DataFrame, name: str = "") -> bytes:
     KeyError
         Where a column of the contract is missing.
     """
-    exported = _with_infinities_named(exported_frame(frame, name))
-    return exported.to_csv(index=False, lineterminator="\n", encoding="utf-8").encode("utf-8")
+    exported = exported_frame(frame, name)
+    stream = StringIO(newline="")
+    writer = csv.writer(stream, lineterminator="\n")
+    writer.writerow(exported.columns)
+    writer.writerows(zip(*(_fields_of(values) for _, values in exported.items()), strict=True))
+    return stream.getvalue().encode("utf-8")
 
 
-def _with_infinities_named(frame: pd.DataFrame) -> pd.DataFrame:
-    """Return *frame* with infinite numbers as a Table Schema spells them: INF and -INF."""
-    named = frame.copy()
-    for column in frame.columns:
-        if pd.api.types.is_float_dtype(frame[column]) and np.isinf(frame[column].to_numpy(float)).any():
-            named[column] = frame[column].astype(object).replace({np.inf: "INF", -np.inf: "-INF"})
-    return named
+def _fields_of(values: pd.Series[Any]) -> list[object]:
+    """Fields of a column: nothing where a value is missing, infinity as a Table Schema spells it."""
+    fields: list[object] = values.tolist()
+    missing = values.isna().to_numpy()
+    if missing.any():
+        fields = [None if gone else field for field, gone in zip(fields, missing.tolist(), strict=True)]
+    if pd.api.types.is_float_dtype(values):
+        infinite = np.isinf(values.to_numpy(float))
+        for row in np.flatnonzero(infinite).tolist():
+            fields[row] = "INF" if values.iloc[row] > 0 else "-INF"
+    return fields
 
 
 def exported_frame(frame: pd.DataFrame, name: str = "") -> pd.DataFrame:
@@ -186,6 +196,26 @@ def in_reference(frame: pd.DataFrame, reference: ReferenceQuantity) -> pd.DataFr
     names = {c: millimetre_name(str(c), reference.name) for c in frame.columns if "strain" in str(c)}
     taken = [old for old, new in names.items() if new in frame.columns]
     return frame.drop(columns=taken).rename(columns=names)
+
+
+def to_ten_digits(frame: pd.DataFrame) -> pd.DataFrame:
+    """Return *frame* with every column of numbers rounded to ten significant digits of its largest one.
+
+    Files of figures hold no more: what was measured has fewer digits, and what was computed stands in full
+    precision in the tables.
+    """
+    rounded = {
+        str(column): frame[column].round(_decimals_of_ten_digits(frame[column].to_numpy()))
+        for column, kind in frame.dtypes.items()
+        if pd.api.types.is_float_dtype(kind)
+    }
+    return frame.assign(**rounded) if rounded else frame
+
+
+def _decimals_of_ten_digits(values: np.ndarray[Any, Any]) -> int:
+    finite = np.abs(values[np.isfinite(values)])
+    largest = float(finite.max()) if finite.size else 0.0
+    return 9 - math.floor(math.log10(largest)) if largest > 0 else 9
 
 
 def millimetre_name(column: str, quantity: str) -> str:

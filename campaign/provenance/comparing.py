@@ -90,7 +90,7 @@ def tolerance_of(table: str, column: str, kind: str) -> Tolerance:
 class Difference:
     """One figure that differs: where it stands, both values, by how much, what was allowed.
 
-    ``rank`` is the place of its tolerance in :data:`TOLERANCES`: what was read comes before what was computed.
+    ``rank`` is the place of its tolerance in :data:`TOLERANCES`: what was read comes first.
     """
 
     table: str
@@ -171,7 +171,12 @@ def _compare(
 
 
 def _rows(content: bytes) -> list[list[str]]:
-    return list(csv.reader(io.StringIO(content.decode("utf-8", "backslashreplace"), newline="")))
+    """Rows of a file; as one cell a line where it is no CSV at all."""
+    text = content.decode("utf-8", "backslashreplace")
+    try:
+        return list(csv.reader(io.StringIO(text, newline="")))
+    except csv.Error:
+        return [[line] for line in text.splitlines()]
 
 
 def _differences(

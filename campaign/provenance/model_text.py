@@ -7,21 +7,23 @@ models reads, the covariance of the fixed coefficients, and that of the estimate
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 import pandas as pd
 
+from campaign.analyses.hold_spread import fit_slopes
 from campaign.analyses.results import CampaignResults
 from campaign.analyses.variance import RATIO, SIGNAL
 from campaign.analyses.variance_fit import GenerationFit
 from campaign.methods.nested_in_statsmodels import effect_of_row, outermost_level, why_not_in_statsmodels
 from campaign.methods.nested_inference import component_covariance
-from campaign.methods.nested_model import RandomTerm
+from campaign.methods.nested_model import NestedModelFit, RandomTerm
 from campaign.pages.slugs import slug
 from campaign.pages.tables import csv_bytes
 from campaign.provenance.sealed_text import render_text
+from campaign.recordings.recording import ReferenceQuantity
 
 MODEL_TEXT = "MODEL.md"
 MODEL_FOLDER = "model/"
@@ -58,10 +60,8 @@ class FitText:
     ----------
     title, slug
         What was fitted; the same as part of file names.
-    response, unit
-        What y is and its unit.
-    readings, centre, scale, reference
-        Number of rows; z = (x − centre)/scale, and what x is.
+    rows, about
+        Number of rows; what y, x and z are.
     fixed, effects
         The parts of the model.
     residual_variance, criterion
@@ -76,12 +76,8 @@ class FitText:
 
     title: str
     slug: str
-    response: str
-    unit: str
-    readings: int
-    centre: float
-    scale: float
-    reference: str
+    rows: int
+    about: str
     fixed: tuple[FixedColumn, ...]
     effects: tuple[RandomEffect, ...]
     residual_variance: float
@@ -93,65 +89,153 @@ class FitText:
     statsmodels_says: str
 
 
+@dataclass(frozen=True)
+class ToldFit:
+    """A fit to be told.
+
+    Attributes
+    ----------
+    fit
+        The engine's fit.
+    title, slug
+        What was fitted; the same as part of file names.
+    about
+        What y, x and z are.
+    groups
+        What each fixed column belongs to; empty where its name says it.
+    rows
+        Columns that say which row of the campaign each row of the design is; may be empty.
+    """
+
+    fit: NestedModelFit
+    title: str
+    slug: str
+    about: str
+    groups: tuple[str, ...] = ()
+    rows: pd.DataFrame = field(default_factory=pd.DataFrame)
+
+
 def model_files(results: CampaignResults) -> dict[str, bytes]:
     """Return ``MODEL.md`` and the tables of every fit; the text says so where nothing was fitted."""
-    variance = results.variance
-    fits = [] if variance is None else [*_named(variance.fits, SIGNAL), *_named(variance.ratio_fits, RATIO)]
-    told = [describe_fit(fit, what, results) for fit, what in fits]
+    told = [*_main_fits(results), *_loop_fits(results), *_hold_fits(results), *_influence_fits(results)]
+    words = [describe_fit(one) for one in told]
     text = render_text(
         "MODEL.md",
-        fits=told,
-        seed=variance.seed if variance is not None else None,
+        fits=words,
+        seed=results.variance.seed if results.variance is not None else None,
         lines=results.calibration is not None,
         reference=results.readings.reference,
     )
     files = {MODEL_TEXT: text}
-    for (fit, _), words in zip(fits, told, strict=True):
-        files |= {f"{MODEL_FOLDER}{words.slug}/{name}": content for name, content in fit_tables(fit, results)}
+    for one in told:
+        files |= {f"{MODEL_FOLDER}{one.slug}/{name}": content for name, content in fit_tables(one)}
     return files
 
 
-def _named(fits: tuple[GenerationFit, ...], what: str) -> list[tuple[GenerationFit, str]]:
-    return [(fit, what) for fit in fits]
+def _main_fits(results: CampaignResults) -> Iterator[ToldFit]:
+    """The nested model of the readings: signal, and ratio to the session's zero signal."""
+    if results.variance is None or results.calibration is None:
+        return
+    index = results.calibration.readings.index
+    for what, fits in ((SIGNAL, results.variance.fits), (RATIO, results.variance.ratio_fits)):
+        for fit in fits:
+            yield told_fit(fit, what, index, results.readings.reference)
 
 
-def describe_fit(fit: GenerationFit, what: str, results: CampaignResults) -> FitText:
-    """Return one fit in words, symbols and formulas."""
-    fixed, effects = tuple(_fixed_columns(fit)), tuple(_random_effects(fit))
-    whose = "all generations together" if fit.generation == "all" else f"generation {fit.generation}"
-    reference = results.readings.reference
-    return FitText(
-        title=f"{whose}: {what}",
-        slug=f"{slug(fit.generation)}-{'signal' if what == SIGNAL else 'ratio'}",
-        response=what,
-        unit=str(fit.model.readings["unit"].iloc[0]) if what == SIGNAL else "1",
-        readings=len(fit.model.response),
-        centre=fit.model.centre,
-        scale=fit.model.scale,
-        reference=f"{reference.name} in {reference.unit}",
-        fixed=fixed,
-        effects=effects,
-        residual_variance=fit.residual_variance,
-        criterion=fit.fit.criterion,
-        evidence=tuple(_evidence(fit)),
-        symbols=_symbols(effects, len(fixed)),
-        lme4=_lme4(fixed, effects),
-        statsmodels=_statsmodels(fit, fixed, effects),
-        statsmodels_says=why_not_in_statsmodels(fit.model.model),
+def told_fit(fit: GenerationFit, what: str, index: pd.Index, reference: ReferenceQuantity) -> ToldFit:
+    """Return a fit of the readings to be told; *index* is that of the campaign's table of readings."""
+    model = fit.model
+    rows = model.readings[["generation", "module", "sensor", "trial"]].reset_index(drop=True)
+    rows.insert(0, "row", index.get_indexer(model.readings.index) + 1)
+    rows["x"] = model.readings["x"].to_numpy(float)
+    unit = str(model.readings["unit"].iloc[0]) if what == SIGNAL else "1"
+    return ToldFit(
+        fit.fit,
+        f"{_whose(fit.generation)}: {what}",
+        f"{slug(fit.generation)}-{'signal' if what == SIGNAL else 'ratio'}",
+        f"y is the {what} in {unit}; x is {reference.name} in {reference.unit};"
+        f" z = (x − {model.centre}) / {model.scale}."
+        " `row` counts the lines of `tables/readings.csv` after its head",
+        model.fixed.groups,
+        rows,
     )
 
 
-def _fixed_columns(fit: GenerationFit) -> Iterator[FixedColumn]:
-    errors = np.sqrt(np.diag(fit.fit.coefficient_covariance))
-    parts = zip(fit.model.fixed.names, fit.model.fixed.groups, fit.fit.coefficients, errors, strict=True)
+def _whose(generation: str) -> str:
+    return "all generations together" if generation == "all" else f"generation {generation}"
+
+
+def _loop_fits(results: CampaignResults) -> Iterator[ToldFit]:
+    for model, fit in results.hysteresis.fits if results.hysteresis is not None else ():
+        yield ToldFit(
+            fit,
+            f"{_whose(model.generation)}: width of loops",
+            f"{slug(model.generation)}-loops",
+            "y is the signed width of a settled loop at mid range, in %FSO (`tables/loops.csv`)",
+        )
+
+
+def _hold_fits(results: CampaignResults) -> Iterator[ToldFit]:
+    for model, fit, _ in fit_slopes(results.drift.holds) if results.drift is not None else ():
+        yield ToldFit(
+            fit,
+            f"{_whose(model.generation)}: slope of holds",
+            f"{slug(model.generation)}-holds",
+            "y is the slope of a stretched hold, in %FSO a decade of time (`tables/holds.csv`)",
+        )
+
+
+def _influence_fits(results: CampaignResults) -> Iterator[ToldFit]:
+    spreads = [("pressure in kPa", results.pressure.spread)] if results.pressure is not None else []
+    if results.influences is not None:
+        spreads += [(f"{one.influence} in {one.unit}", one.spread) for one in results.influences.results]
+    for influence, spread in spreads:
+        for generation, fit in spread.fits.items():
+            yield ToldFit(
+                fit,
+                f"{_whose(generation)}: effect of {influence}",
+                f"{slug(generation)}-{slug(influence)}",
+                f"y is what a unit of {influence} reads as, sweep by sweep, over the SD of all of them; z,"
+                " where there is one, is the length from the middle of those that were swept",
+            )
+
+
+def describe_fit(told: ToldFit) -> FitText:
+    """Return one fit in words, symbols and formulas."""
+    fit = told.fit
+    fixed, effects = tuple(_fixed_columns(told)), tuple(_random_effects(fit))
+    reason = why_not_in_statsmodels(fit.model)
+    return FitText(
+        title=told.title,
+        slug=told.slug,
+        rows=len(fit.model.response),
+        about=told.about,
+        fixed=fixed,
+        effects=effects,
+        residual_variance=float(fit.residual_variance),
+        criterion=fit.criterion,
+        evidence=tuple(_evidence(fit)),
+        symbols=_symbols(effects, len(fixed)),
+        lme4=_lme4(fixed, effects),
+        statsmodels="" if reason else _statsmodels(fit, fixed, effects),
+        statsmodels_says=reason,
+    )
+
+
+def _fixed_columns(told: ToldFit) -> Iterator[FixedColumn]:
+    fit = told.fit
+    names = fit.model.fixed_names
+    errors = np.sqrt(np.diag(fit.coefficient_covariance))
+    groups = told.groups or ("mean",) * len(names)
+    parts = zip(names, groups, fit.coefficients, errors, strict=True)
     for number, (name, group, estimate, error) in enumerate(parts, 1):
         yield FixedColumn(f"f{number}", name, group, float(estimate), float(error))
 
 
-def _random_effects(fit: GenerationFit) -> Iterator[RandomEffect]:
-    for number, term in enumerate(fit.model.model.terms):
-        covariance = tuple(tuple(float(v) for v in row) for row in fit.fit.covariances[term.name])
-        count = len(np.unique(effect_of_row(fit.fit, number)))
+def _random_effects(fit: NestedModelFit) -> Iterator[RandomEffect]:
+    for number, term in enumerate(fit.model.terms):
+        covariance = tuple(tuple(float(v) for v in row) for row in fit.covariances[term.name])
+        count = len(np.unique(effect_of_row(fit, number)))
         yield RandomEffect(term.name, term.level, f"unit_{term.name}", _columns_of(term), count, covariance)
 
 
@@ -162,8 +246,7 @@ def _columns_of(term: RandomTerm) -> tuple[str, ...]:
     return ("1",) if (term.columns == 1.0).all() else (f"column_{term.name}",)
 
 
-def _evidence(fit: GenerationFit) -> Iterator[tuple[str, str]]:
-    found = fit.fit
+def _evidence(found: NestedModelFit) -> Iterator[tuple[str, str]]:
     yield "method", found.method
     yield "log-likelihood", repr(found.log_likelihood)
     yield "evaluations of the criterion", str(found.evaluations)
@@ -197,13 +280,11 @@ def _bar(columns: tuple[str, ...]) -> str:
 
 
 def _statsmodels(
-    fit: GenerationFit, fixed: tuple[FixedColumn, ...], effects: tuple[RandomEffect, ...]
+    fit: NestedModelFit, fixed: tuple[FixedColumn, ...], effects: tuple[RandomEffect, ...]
 ) -> str:
-    """A call of statsmodels' formula interface; empty where it cannot express the model."""
-    if why_not_in_statsmodels(fit.model.model):
-        return ""
-    outermost = outermost_level(fit.model.model)
-    terms = zip(effects, fit.model.model.terms, strict=True)
+    """A call of statsmodels' formula interface for a model that it can express."""
+    outermost = outermost_level(fit.model)
+    terms = zip(effects, fit.model.terms, strict=True)
     own = [effect for effect, term in terms if term.level == outermost and term.copies is None]
     groups = max(own, key=lambda effect: len(effect.columns), default=None)
     inner = [effect for effect in effects if effect is not groups]
@@ -221,13 +302,14 @@ def _component(effect: RandomEffect) -> str:
     return f"C({effect.group})" + ("" if effect.columns == ("1",) else f":{effect.columns[0]}")
 
 
-def fit_tables(fit: GenerationFit, results: CampaignResults) -> Iterator[tuple[str, bytes]]:
+def fit_tables(told: ToldFit) -> Iterator[tuple[str, bytes]]:
     """Yield name and bytes of the design and of both covariances of a fit, at full precision."""
-    yield "design.csv", csv_bytes(design_table(fit, results))
-    names = [f"f{k}" for k in range(1, len(fit.model.fixed.names) + 1)]
-    yield "fixed_covariance.csv", csv_bytes(_matrix(names, fit.fit.coefficient_covariance))
-    if fit.fit.method == "REML":
-        labels, estimates, covariance = component_covariance(fit.fit)
+    fit = told.fit
+    yield "design.csv", csv_bytes(design_table(told))
+    names = [f"f{k}" for k in range(1, len(fit.model.fixed_names) + 1)]
+    yield "fixed_covariance.csv", csv_bytes(_matrix(names, fit.coefficient_covariance))
+    if fit.method == "REML":
+        labels, estimates, covariance = component_covariance(fit)
         matrix = _matrix([f"c{k}" for k in range(1, len(labels) + 1)], covariance)
         matrix.insert(1, "component", list(labels))
         matrix.insert(2, "estimate", estimates)
@@ -240,24 +322,24 @@ def _matrix(names: list[str], values: np.ndarray[Any, np.dtype[np.float64]]) -> 
     return frame
 
 
-def design_table(fit: GenerationFit, results: CampaignResults) -> pd.DataFrame:
-    """Return the design of a fit, one row a reading.
+def design_table(told: ToldFit) -> pd.DataFrame:
+    """Return the design of a fit, one row an observation.
 
-    Columns: ``row`` (line of ``tables/readings.csv`` after its head, from 1), generation, module, sensor,
-    trial, ``y``, ``x``, ``z``, the fixed columns ``f1`` …, the unit of every random effect ``unit_…``
-    (counted from 0), and ``column_…`` where an effect's column is neither 1 nor z.
+    Columns: which row of the campaign it is (where that is known), ``y``, ``z`` (the second column of an
+    effect that is a line), the fixed columns ``f1`` …, the unit of every random effect ``unit_…`` (counted
+    from 0), ``column_…`` where an effect's only column is not 1, and ``outermost`` where no effect of the
+    outermost level names its units.
     """
-    model = fit.model
-    assert results.calibration is not None
-    place = results.calibration.readings.index.get_indexer(model.readings.index)
-    design = model.readings[["generation", "module", "sensor", "trial"]].reset_index(drop=True)
-    design.insert(0, "row", place + 1)
-    design["y"], design["x"] = model.response, model.readings["x"].to_numpy(float)
-    design["z"] = (design["x"] - model.centre) / model.scale
-    further: dict[str, object] = {f"f{k}": c for k, c in enumerate(model.fixed.columns.T, 1)}
-    for number, term in enumerate(model.model.terms):
-        further[f"unit_{term.name}"] = effect_of_row(fit.fit, number)
-        name = _columns_of(term)[0]
-        if name.startswith("column_"):
-            further[name] = term.columns[:, 0]
-    return pd.concat([design, pd.DataFrame(further)], axis=1)
+    model = told.fit.model
+    columns: dict[str, object] = {str(name): told.rows[name].to_numpy() for name in told.rows}
+    columns["y"] = model.response
+    for number, term in enumerate(model.terms):
+        if term.columns.shape[1] == 2:
+            columns["z"] = term.columns[:, 1]
+        elif (name := _columns_of(term)[0]) != "1":
+            columns[name] = term.columns[:, 0]
+        columns[f"unit_{term.name}"] = effect_of_row(told.fit, number)
+    if model.terms:
+        outer = next(k for k, t in enumerate(model.terms) if t.level == outermost_level(model))
+        columns["outermost"] = told.fit.compression.term_rows[outer].unit
+    return pd.DataFrame({**columns, **{f"f{k}": c for k, c in enumerate(model.fixed.T, 1)}})

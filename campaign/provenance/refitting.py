@@ -56,8 +56,16 @@ def refit_from_readings(readings: bytes, schema: bytes, certificates: bytes) -> 
     Returns
     -------
     tuple of Refit
-        One a model that was sealed.
+        One a model that was sealed; one that says why where the tables are not what they should be.
     """
+    try:
+        return _refit_all(readings, schema, certificates)
+    except (ValueError, KeyError, TypeError, IndexError, AttributeError, np.linalg.LinAlgError) as fault:
+        why = f"{type(fault).__name__}: {fault}"
+        return (Refit("", False, f"readings.csv cannot be fitted again as it stands ({why})"),)
+
+
+def _refit_all(readings: bytes, schema: bytes, certificates: bytes) -> tuple[Refit, ...]:
     sealed = pd.read_csv(io.BytesIO(certificates), dtype={"generation": str})
     criteria = dict(zip(sealed["generation"], sealed["criterion"].astype(float), strict=True))
     models = signal_models(readings_table(readings, schema))

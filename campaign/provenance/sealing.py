@@ -409,7 +409,7 @@ def _readme(
 def _bag_info(metadata: ArchiveMetadata, places: Places, software: Software) -> dict[str, str]:
     affiliations = sorted({author.affiliation for author in metadata.authors if author.affiliation})
     return {
-        "Bag-Software-Agent": f"campaign-report {software.version}",
+        "Sealed-By": f"campaign-report {software.version}",
         "Bagging-Date": metadata.day if metadata.day_is_known else "",
         "Source-Organization": "; ".join(affiliations),
         "Contact-Name": "; ".join(author.name for author in metadata.authors),

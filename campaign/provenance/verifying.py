@@ -16,8 +16,10 @@ from campaign.provenance.bag import DECLARATION, PAYLOAD, BagFault, check_bag, f
 from campaign.provenance.comparing import TOLERANCES, TableComparison
 from campaign.provenance.refitting import Refit
 from campaign.provenance.ro_crate import METADATA_FILE, PREVIEW_FILES, described_paths
-from campaign.provenance.sealing import RECORDS, TABLES
+from campaign.provenance.sealing import RECORDS, SOFTWARE, TABLES
+from campaign.provenance.software import pinned_requirements, running_project
 from campaign.recordings.folder import OUTPUT_MARKER
+from campaign.recordings.register import shown
 
 ARCHIVE, SITE = "sealed archive", "site"
 MOST_SHOWN = 40
@@ -101,9 +103,12 @@ def verify_folder(folder: Path) -> Verification:
 
 
 def _home(folder: Path) -> Path:
-    """The folder itself, or the only one in it that holds a bag."""
+    """The folder itself, the only one in it that holds a bag, or the bag whose payload it is."""
     if (folder / DECLARATION).is_file() or (folder / SITE_CHECKSUMS).is_file():
         return folder
+    above = folder.resolve().parent
+    if folder.resolve() == above / PAYLOAD.rstrip("/") and (above / DECLARATION).is_file():
+        return above
     inside = [place.parent for place in sorted(folder.glob(f"*/{DECLARATION}"))]
     return inside[0] if len(inside) == 1 else folder
 
@@ -112,17 +117,34 @@ def _verify_archive(home: Path) -> Verification:
     files, _ = files_below(home)
     info = read_info(files[BAG_INFO].read_text("utf-8", errors="replace")) if BAG_INFO in files else {}
     faults = [*check_bag(home), *_crate_faults(files), *_copy_faults(files), *_campaign_faults(files, info)]
-    version = info.get("Bag-Software-Agent", "").removeprefix("campaign-report ")
-    return Verification(ARCHIVE, home, len(files), version, tuple(faults), tuple(version_remark(version)))
+    version = info.get("Sealed-By", "").removeprefix("campaign-report ")
+    remarks = tuple(version_remarks(version, sealed_versions(home)))
+    return Verification(ARCHIVE, home, len(files), version, tuple(faults), remarks)
 
 
-def version_remark(version: str) -> Iterator[str]:
-    """Say where another version of the program made the archive."""
+def version_remarks(version: str, packages: dict[str, str]) -> Iterator[str]:
+    """Say where another version of the program, or of what it stands on, made the archive.
+
+    Parameters
+    ----------
+    version
+        Of the program that sealed it; empty where not known.
+    packages
+        Versions of the packages that it ran with.
+    """
     if version and version != __version__:
         yield (
             f"sealed by version {version}, looked at by version {__version__}: figures may differ for that"
             " alone; the sealed program is in software/"
         )
+    here = dict(pin.split("==", 1) for pin in pinned_requirements(running_project()))
+    others = [
+        f"{name} {then} (here {here[name]})"
+        for name, then in sorted(packages.items())
+        if here.get(name, then) != then
+    ]
+    if others:
+        yield f"sealed with other packages: {', '.join(others)}; software/requirements.txt names them all"
 
 
 def _crate_faults(files: dict[str, Path]) -> Iterator[BagFault]:
@@ -199,7 +221,7 @@ def sealed_tables(home: Path) -> dict[str, bytes]:
 def sealed_versions(home: Path) -> dict[str, str]:
     """Return the versions of the packages that the sealed program ran with; empty where not known."""
     try:
-        found = json.loads((home / PAYLOAD / "software" / "versions.json").read_bytes())["packages"]
+        found = json.loads((home / PAYLOAD / SOFTWARE / "versions.json").read_bytes())["packages"]
         return {str(name): str(version) for name, version in found.items()}
     except (OSError, ValueError, KeyError, AttributeError, TypeError):
         return {}
@@ -210,11 +232,15 @@ def verification_lines(found: Verification, name: str) -> list[str]:
     by = f", made by campaign-report {found.version}" if found.version else ""
     lines = [f"{name}: a {found.kind}, {found.files} files{by}"]
     lines += [f"  {remark}" for remark in found.remarks]
-    if not found.faults:
-        return [*lines, "hashes and structure: nothing differs"]
-    many = len(found.faults)
-    lines.append(f"hashes and structure: {many} {'thing is' if many == 1 else 'things are'} not as sealed")
-    return [*lines, *_shown([f"  {fault.file} {fault.wrong}" for fault in found.faults])]
+    if found.faults:
+        many = len(found.faults)
+        lines.append(
+            f"hashes and structure: {many} {'thing is' if many == 1 else 'things are'} not as sealed"
+        )
+        lines += _shown([f"  {fault.file} {fault.wrong}" for fault in found.faults])
+    else:
+        lines.append("hashes and structure: nothing differs")
+    return [shown(line) for line in lines]
 
 
 def recomputation_lines(found: Recomputation) -> list[str]:
@@ -234,7 +260,8 @@ def recomputation_lines(found: Recomputation) -> list[str]:
         lines.append("every figure agrees within its tolerance")
     lines.append("tolerances:")
     lines += [f"  {kind.kind}: {kind.words}" for kind in TOLERANCES]
-    return [*lines, *(f"{'' if refit.agrees else 'DIFFERS: '}{refit.sentence}" for refit in found.refits)]
+    lines += [f"{'' if refit.agrees else 'DIFFERS: '}{refit.sentence}" for refit in found.refits]
+    return [shown(line) for line in lines]
 
 
 def _nearness(table: TableComparison) -> tuple[int, str]:

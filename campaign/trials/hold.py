@@ -25,6 +25,7 @@ from campaign.notices import Notice
 from campaign.recordings.recording import Trial, TrialIdentity
 from campaign.trials.features import recorded_reference
 from campaign.trials.hold_course import HoldCourse, KeptLength, find_holds
+from campaign.trials.hold_samples import kept_samples
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
@@ -138,7 +139,10 @@ class Hold:
     envelope
         What is drawn.
     times_s, signal
-        Every sample, s after the end of the ramp and signal units: what the figures' files hold.
+        Samples, s after the end of the ramp and signal units: what the figures' files hold. All of them, but
+        of very long holds those of :func:`campaign.trials.hold_samples.kept_samples`.
+    recorded_samples
+        How many samples there were.
     first
         First settled signal: between one and two ramp times after the end of the ramp (without a ramp, the
         first samples).
@@ -166,6 +170,7 @@ class Hold:
     envelope: Envelope
     times_s: FloatArray
     signal: FloatArray
+    recorded_samples: int
     first: SignalAt
     signals: dict[str, SignalAt]
     zero_before: SignalAt
@@ -320,6 +325,7 @@ def _hold(trial: Trial, rows: IntArray, time: FloatArray, course: HoldCourse, ke
     signals = {name: signal_at(t, signal, at) for name, at in TIMES_S.items()}
     signals["end"] = signal_at(t, signal, float(t[-1]) / (1.0 + WINDOW_SHARE))
     before, after = _zeros(trial, rows, time, course)
+    kept_times, kept_signal = kept_samples(t, signal)
     return Hold(
         kept_strain=strain,
         kept_elongation_mm=elongation,
@@ -331,8 +337,9 @@ def _hold(trial: Trial, rows: IntArray, time: FloatArray, course: HoldCourse, ke
         stretches=stretches,
         means=means,
         envelope=log_time_envelope(t, signal),
-        times_s=t,
-        signal=signal,
+        times_s=kept_times,
+        signal=kept_signal,
+        recorded_samples=len(signal),
         first=first_settled(t, signal, ramp),
         signals=signals,
         zero_before=before,

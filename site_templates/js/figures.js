@@ -203,6 +203,8 @@ window.campaign = window.campaign || {};
   function buildTools(figure) {
     const tools = figure.element.querySelector(".tools");
     const csv = tools.querySelector("a");
+    tools.setAttribute("role", "group");
+    tools.setAttribute("aria-label", figure.element.querySelector("figcaption .number").textContent);
     figure.liveButton = button("live", "Draw the figure live, or show the still picture", () => toggleLive(figure));
     figure.liveButton.setAttribute("aria-pressed", "true");
     figure.resetButton = button("reset", "Show the whole figure again", () => reset(figure));

@@ -12,6 +12,8 @@
   /* The traces as written, and those of the chosen module beside them. */
   function withPoints(module) {
     const points = (window.campaignResiduals || {})[module] || { traces: [], x: {} };
+    if (points.shared) points.traces = window.campaignUnfold(points);
+    delete points.shared;
     for (const [name, figure] of Object.entries(page.figures)) {
       const places = points.x[name] || [];
       figure.traces = whole[name].concat(places.map((x, i) => Object.assign({}, points.traces[i], { x: x })));

@@ -3,18 +3,17 @@
 "use strict";
 
 (function (page) {
-  if (!page || !page.shared) return;
   const GAP = "\ue000";
   const BETWEEN = "|";
 
-  function whole(parted) {
-    const made = Object.assign({}, page.shared[parted.$], parted);
+  function whole(parted, shared) {
+    const made = Object.assign({}, shared[parted.$], parted);
     delete made.$;
     return made;
   }
 
-  function filled(sentence, points) {
-    const fixed = page.texts[sentence.t].split(GAP);
+  function filled(sentence, texts, points) {
+    const fixed = texts[sentence.t].split(GAP);
     const words = sentence.v.map((column) => column.split(BETWEEN));
     return Array.from({ length: points }, function (_, i) {
       return fixed.slice(1).reduce(function (text, after, gap) {
@@ -23,24 +22,28 @@
     });
   }
 
-  function trace(folded) {
-    const made = whole(folded);
+  function trace(folded, shared, texts) {
+    const made = whole(folded, shared);
     const points = (made.x || []).length;
-    if (made.meta !== undefined) made.meta = page.shared[made.meta];
-    if (Array.isArray(made.hovertext)) made.hovertext = made.hovertext.map((place) => page.texts[place]);
-    else if (made.hovertext && made.hovertext.v) made.hovertext = filled(made.hovertext, points);
+    if (made.meta !== undefined) made.meta = shared[made.meta];
+    if (Array.isArray(made.hovertext)) made.hovertext = made.hovertext.map((place) => texts[place]);
+    else if (made.hovertext && made.hovertext.v) made.hovertext = filled(made.hovertext, texts, points);
     if (made.customdata !== undefined) {
       const places = Array.isArray(made.customdata) ? made.customdata : Array(points).fill(made.customdata);
-      made.customdata = places.map((place) => page.texts[place]);
+      made.customdata = places.map((place) => texts[place]);
     }
     return made;
   }
 
+  /* For scripts that bring further traces with looks and texts of their own. */
+  window.campaignUnfold = (content) => content.traces.map((folded) => trace(folded, content.shared, content.texts));
+
+  if (!page || !page.shared) return;
   for (const figure of Object.values(page.figures)) {
-    figure.traces = figure.traces.map(trace);
+    figure.traces = figure.traces.map((folded) => trace(folded, page.shared, page.texts));
     for (const key of Object.keys(figure.layout)) {
-      if (/^[xy]axis\d*$/.test(key)) figure.layout[key] = whole(figure.layout[key]);
+      if (/^[xy]axis\d*$/.test(key)) figure.layout[key] = whole(figure.layout[key], page.shared);
     }
-    figure.layout.annotations = figure.layout.annotations.map(whole);
+    figure.layout.annotations = figure.layout.annotations.map((note) => whole(note, page.shared));
   }
 })(window.campaignPage);

@@ -17,7 +17,11 @@ from selenium.webdriver.common.by import By
 
 from campaign.methods.inverse_reading import ReadingModel, read_reference
 from campaign.pages import palette
+from campaign.pages.brief import brief_bytes, write_brief
+from campaign.pages.notes import Notes
+from campaign.pages.site import site_frame, site_pages
 from tests.browser.chromium import address, messages, outside, requests, wait_for
+from tests.pages.small_campaign import Sketch, small_results
 
 pytestmark = pytest.mark.browser
 
@@ -197,14 +201,16 @@ def test_tables_sort_by_value_and_back(browser: Chrome, site: Path) -> None:
     table = browser.find_element(By.CSS_SELECTOR, "table[data-table='sensor_lines']")
     heads = table.find_elements(By.CSS_SELECTOR, "thead th")
     column = next(i for i, head in enumerate(heads) if "n" in str(head.get_attribute("class")).split())
-    values = f"return [...arguments[0].tBodies[0].rows].map(r => r.cells[{column}].dataset.sort)"
+    values = f"return [...arguments[0].tBodies[0].rows].map(r => r.cells[{column}].textContent)"
     for way, reverse in (("ascending", False), ("descending", True)):
         heads[column].find_element(By.TAG_NAME, "button").click()
         assert heads[column].get_attribute("aria-sort") == way
         shown = browser.execute_script(values, table)
-        numbers = [float(value) for value in shown if value]
+        found = [re.match(r"[\s\u2007]*([-−]?)([\d.]+)", text) for text in shown]
+        numbers = [float(f"{'-' * len(m[1])}{m[2]}") for m in found if m]
+        assert len(numbers) > 50  # all rows, also those that the page did not show at first
         assert numbers == sorted(numbers, reverse=reverse)
-        assert shown[len(numbers) :] == [""] * (len(shown) - len(numbers))
+        assert found[len(numbers) :] == [None] * (len(found) - len(numbers))
 
 
 def test_tables_and_figures_download_as_csv(browser: Chrome, site: Path, downloads: Path) -> None:
@@ -468,3 +474,36 @@ def test_an_old_address_of_a_definition_leads_on_to_it(browser: Chrome, site: Pa
     assert entry.is_displayed()
     browser.get(entry.find_element(By.TAG_NAME, "a").get_attribute("href"))
     assert browser.find_element(By.ID, "lack-of-fit").tag_name == "section"
+
+
+@pytest.fixture(scope="session")
+def brief(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """The brief of a small campaign."""
+    folder = tmp_path_factory.mktemp("mail")
+    results = small_results(folder / "campaign", Sketch(modules=2, runs=2))
+    file = folder / "brief of the campaign.html"
+    write_brief(brief_bytes(site_frame(results), site_pages(results, Notes())), file)
+    return file
+
+
+@pytest.mark.parametrize("scheme", ["light", "dark"])
+def test_the_brief_opens_with_its_style_and_asks_for_nothing(
+    browser: Chrome, brief: Path, scheme: str
+) -> None:
+    emulate(browser, prefers_color_scheme=scheme)
+    browser.get(address(brief))
+    assert messages(browser) == []
+    assert len(requests(browser)) == 1
+    paper = palette.DARK[palette.PAPER] if scheme == "dark" else palette.PAPER
+    assert colour(browser, "body", "background-color") == paper
+    assert len(browser.find_elements(By.CSS_SELECTOR, "figure svg[role='img']")) >= 3
+    assert browser.execute_script("return document.links.length + document.scripts.length") == 0
+    assert browser.execute_script("return document.documentElement.scrollWidth") <= 1440
+
+
+def test_the_brief_is_clean_for_axe_and_fits_a_telephone(browser: Chrome, brief: Path) -> None:
+    size = {"width": 390, "height": 900, "deviceScaleFactor": 1, "mobile": True}
+    browser.execute_cdp_cmd("Emulation.setDeviceMetricsOverride", size)
+    browser.get(address(brief))
+    assert browser.execute_script("return document.documentElement.scrollWidth") <= 390
+    assert axe_violations(browser) == []

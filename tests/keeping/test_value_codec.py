@@ -29,7 +29,7 @@ def same(left: object, right: object) -> bool:
     if type(left) is not type(right):
         return False
     if isinstance(left, float):
-        return struct.pack("d", left) == struct.pack("d", right)
+        return (math.isnan(left) and math.isnan(right)) or struct.pack("d", left) == struct.pack("d", right)
     if isinstance(left, (list, tuple)):
         return len(left) == len(right) and all(map(same, left, right))
     if isinstance(left, dict):

@@ -95,6 +95,15 @@ def test_fewer_stretches_keep_the_extremes(results, most):
     assert curve.times_s[0] <= drawn.times_s[0] <= drawn.times_s[-1] <= curve.times_s[-1]
 
 
+def test_a_hold_of_which_samples_are_left_out_says_how_many(results):
+    curve = largest_hold(results.drift)
+    whole = ready(hold_figure(curve, results.drift.reference, "hold"))
+    longer = replace(curve, recorded_samples=3_000_000)
+    thinned = ready(hold_figure(longer, results.drift.reference, "hold"))
+    assert "the CSV holds every sample" in whole.note
+    assert f"holds {SAMPLES - 220:,} of 3,000,000 samples" in thinned.note
+
+
 def test_page_and_sensor_page_say_what_was_found(site, results):
     html = site["drift.html"].decode()
     assert "relaxation" in html

@@ -20,6 +20,7 @@ from campaign.pages.tables import (
     shown_cells,
     shown_marks,
     sort_beside,
+    to_ten_digits,
 )
 from campaign.recordings.recording import ELONGATION, STRAIN
 
@@ -112,6 +113,17 @@ def test_a_cell_says_what_it_sorts_by_only_where_its_text_does_not(
     text: str, value: float, sort: str | None
 ) -> None:
     assert sort_beside(text, value) == sort
+
+
+def test_files_of_figures_hold_ten_digits_of_each_column() -> None:
+    frame = pd.DataFrame(
+        {"a": [1 / 3, 1000 / 3, np.nan], "b": ["x", "y", "z"], "c": [1e-9 / 3, 0.0, -np.inf]}
+    )
+    rounded = to_ten_digits(frame)
+    assert rounded["a"].tolist()[:2] == [0.3333333, 333.3333333]
+    assert rounded["c"].tolist() == [3.333333333e-10, 0.0, -np.inf]
+    assert rounded["b"].tolist() == ["x", "y", "z"]
+    assert frame["a"][0] == 1 / 3
 
 
 def test_the_page_shows_some_rows_and_the_file_all() -> None:

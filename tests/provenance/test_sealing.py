@@ -257,6 +257,17 @@ def test_texts_for_a_paper_are_plain_and_cite(unpacked: Path) -> None:
     assert "CC-BY-4.0" in availability
 
 
+def test_the_provenance_page_tells_how_to_cite_and_to_verify(unpacked: Path) -> None:
+    page = (unpacked / "data" / "ro-crate-preview_files" / "provenance.html").read_text("utf-8")
+    words = re.sub(r"\s+", " ", re.sub(r"<[^>]+>", " ", page))
+    availability = (unpacked / "data" / "texts" / "data_availability.md").read_text("utf-8").splitlines()[2]
+    assert availability in words
+    assert "campaign verify ARCHIVE.zip --recompute" in words
+    assert "It does not show when or by whom. Deposit the files where a date is kept." in words
+    assert re.search(r'href="method[^"]*paper[^"]*">text ready for a paper', page)
+    assert "@misc{campaign2025," in words
+
+
 def test_sealing_into_the_campaign_or_over_something_else_is_refused(
     campaign_folder: Path, tmp_path: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:

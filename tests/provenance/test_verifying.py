@@ -71,7 +71,7 @@ def said(capsys: pytest.CaptureFixture[str]) -> str:
 def test_what_is_as_sealed_is_said_to_be(
     sealed: Path, unpacked: Path, capsys: pytest.CaptureFixture[str]
 ) -> None:
-    for target in (sealed, unpacked, unpacked.parent):
+    for target in (sealed, unpacked, unpacked.parent, unpacked / "data"):
         assert main(["verify", str(target)]) == 0
         words = said(capsys)
         assert "hashes and structure: nothing differs" in words
@@ -265,10 +265,19 @@ def test_an_altered_figure_is_named_with_its_row_and_by_how_much(
     assert "(-0.0099 of it); allowed 1e-06 of the figure" in words
 
 
-def test_another_version_of_the_program_is_said(unpacked: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+def test_another_version_of_the_program_or_its_packages_is_said(
+    copy_of_archive: Copy, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    folder = copy_of_archive()
+    versions = folder / "data" / "software" / "versions.json"
+    said = json.loads(versions.read_bytes())
+    now = said["packages"]["numpy"]
+    said["packages"]["numpy"] = "1.0\x1b[2J"
+    versions.write_text(json.dumps(said), encoding="utf-8")
     monkeypatch.setattr(verifying, "__version__", "99.0")
-    lines = verification_lines(verify_folder(unpacked), "panels.zip")
+    lines = verification_lines(verify_folder(folder), "panels.zip")
     assert any("sealed by version 0" in line and "looked at by version 99.0" in line for line in lines)
+    assert any(f"numpy 1.0\\x1b[2J (here {now})" in line for line in lines)
 
 
 def test_an_archive_whose_label_leads_out_is_not_computed(copy_of_archive: Copy) -> None:

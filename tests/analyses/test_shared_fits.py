@@ -1,0 +1,55 @@
+"""A fit is the same, to the last bit, whoever made it and whether it was kept from an earlier run."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from pathlib import Path
+
+import pytest
+
+from campaign.analyses import shared_fits
+from campaign.analyses.shared_fits import FitTask, fit_all, fit_task
+from campaign.analyses.variance_fit import PLACES, GenerationFit
+from campaign.keeping.store import open_store
+from campaign.keeping.value_codec import encode
+from campaign.methods.nested_model import conditional_residuals
+from campaign.workers.crew import LocalProcesses
+from campaign.workers.workshop import Workshop
+
+
+@pytest.fixture(scope="module")
+def tasks(simulated) -> list[FitTask]:
+    fits = simulated.small().by_generation
+    return [FitTask(fit.model, dict(fit.places), at) for fit in fits for at in ((*PLACES, "slope"), ())]
+
+
+def as_bytes(outcomes: list[GenerationFit | str]) -> list[bytes]:
+    bare = [o if isinstance(o, str) else replace(o, fit=replace(o.fit, compression=None)) for o in outcomes]
+    return [encode(outcome) for outcome in bare]
+
+
+def test_processes_and_the_store_give_the_same_fits(
+    tasks: list[FitTask], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    alone = as_bytes(fit_all(tasks, Workshop()))
+    monkeypatch.setattr(shared_fits, "WORTH_READINGS", 0)
+    with LocalProcesses(2) as crew, open_store(tmp_path / "results.sqlite") as store:
+        assert as_bytes(fit_all(tasks, Workshop(crew, store))) == alone
+    with open_store(tmp_path / "results.sqlite") as store:
+        monkeypatch.setattr(shared_fits, "fit_generation", None)  # nothing is fitted any more
+        assert as_bytes(fit_all(tasks, Workshop(store=store))) == alone
+
+
+def test_a_kept_fit_serves_the_methods_that_go_on_from_it(tasks: list[FitTask]) -> None:
+    (fresh,) = fit_all(tasks[:1], Workshop())
+    assert isinstance(fresh, GenerationFit)
+    assert fresh.model is tasks[0].model
+    assert (conditional_residuals(fresh.fit) == fresh.conditional).all()
+
+
+def test_what_cannot_be_fitted_is_a_sentence(tasks: list[FitTask]) -> None:
+    model = tasks[0].model
+    few = replace(model, model=replace(model.model, response=model.model.response[:3]))
+    (outcome,) = fit_task(replace(tasks[0], model=few))
+    assert isinstance(outcome, str)
+    assert outcome
