@@ -490,7 +490,9 @@ def read_earlier(
                 if place.resolve() in taken:
                     raise CampaignStops([_not_joined(where, "is this campaign, or is named twice")])
                 taken.add(place.resolve())
-                found.append(_earlier_campaign(where, read_campaign(place, workshop=workshop), read))
+                found.append(
+                    _earlier_campaign(where, read_campaign(place, workshop=workshop), read, workshop)
+                )
                 if found[-1].names_others:
                     notices.append(_not_followed(where))
         except CampaignStops as stop:
@@ -535,12 +537,14 @@ def opened_earlier(folder: Path, named: Mapping[str, str]) -> Iterator[Path]:
         yield campaign_in(unpack_archive(folder / named["archive"], Path(space) / "archive"))
 
 
-def _earlier_campaign(where: str, read: CampaignRead, own: CampaignRead) -> EarlierCampaign:
+def _earlier_campaign(
+    where: str, read: CampaignRead, own: CampaignRead, workshop: Workshop | None
+) -> EarlierCampaign:
     """Analyse an earlier campaign as far as comparison needs it, over the range common to both."""
     intake, described = read.intake, own.intake.description
     upper = common_upper(read.readings, own.readings)
     full_scale = common_full_scale(described, read.readings, upper)
-    offers = _offers(read, up_to(read.readings, upper), full_scale)
+    offers = _offers(read, up_to(read.readings, upper), full_scale, workshop)
     further = reach_of(own.readings) > upper  # never where upper is not a number
     used = intake.trials[intake.trials["fate"] == "used"]
     stated = intake.description.range_strain, intake.description.range_elongation_mm
@@ -557,12 +561,16 @@ def _earlier_campaign(where: str, read: CampaignRead, own: CampaignRead) -> Earl
         full_scale=full_scale_of(offers),
         rescaled=not math.isnan(full_scale) and full_scale not in stated,
         upper=upper,
-        restricted=_offers(replace(own, features={}), up_to(own.readings, upper), upper) if further else None,
+        restricted=_offers(replace(own, features={}), up_to(own.readings, upper), upper, workshop)
+        if further
+        else None,
         names_others=bool(intake.description.earlier),
     )
 
 
-def _offers(read: CampaignRead, readings: Readings, full_scale: float) -> Comparable:
+def _offers(
+    read: CampaignRead, readings: Readings, full_scale: float, workshop: Workshop | None
+) -> Comparable:
     """Return the headline figures of a campaign by *readings*, full scale as given (NaN: as described)."""
     description = with_full_scale(read.intake.description, readings.reference, full_scale)
     intake = replace(read.intake, description=description)
@@ -570,7 +578,7 @@ def _offers(read: CampaignRead, readings: Readings, full_scale: float) -> Compar
     fits: tuple[GenerationFit, ...] = ()
     uneven: frozenset[str] = frozenset()
     if calibration is not None:
-        fits, uneven = fit_generations(calibration.readings, calibration.reference, description)
+        fits, uneven = fit_generations(calibration.readings, calibration.reference, description, workshop)
     return comparable_figures(
         description,
         intake.used_identities,

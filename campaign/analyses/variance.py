@@ -210,13 +210,16 @@ def variance_of_readings(
 
 
 def fit_generations(
-    readings: pd.DataFrame, reference: ReferenceQuantity, description: Description
+    readings: pd.DataFrame,
+    reference: ReferenceQuantity,
+    description: Description,
+    workshop: Workshop | None = None,
 ) -> tuple[tuple[GenerationFit, ...], frozenset[str]]:
     """Fit each generation by itself with limits at mid range, no more: what comparing generations needs.
 
     Parameters
     ----------
-    readings, reference, description
+    readings, reference, description, workshop
         As in :func:`variance_of_readings`.
 
     Returns
@@ -234,13 +237,12 @@ def fit_generations(
         kept["x"].to_numpy(float), _rated(description, reference), has_zero=_has_zero(reference)
     )
     models = [m for m in _build_all(kept, kept["signal"].to_numpy(float)) if m.generation != "all"]
-    fits = tuple(_fit_all(tuple(models), places, _COMPARED, []))
+    tasks = [FitTask(model, places, ("mid",)) for model in models if model.terms]
+    outcomes = fit_all(tasks, workshop or Workshop())
+    fits = tuple(outcome for outcome in outcomes if not isinstance(outcome, str))
     seed = seed_of(kept)
     return fits, frozenset(fit.generation for fit in fits if _noise_of(fit, seed).faults)
 
-
-_COMPARED = "signal, for comparison"
-"""A fit whose limits are wanted at mid range only."""
 
 _WITHHELD = "components of spread are not estimated"
 
