@@ -233,7 +233,7 @@ def _rehearse(options: argparse.Namespace) -> int:
 
 
 def _seal(options: argparse.Namespace) -> int:
-    from campaign.pipeline import seal
+    from campaign.archiving import seal
     from campaign.recordings.description import DESCRIPTION_FILE
     from campaign.workers.workshop import open_workshop
 
@@ -245,7 +245,7 @@ def _seal(options: argparse.Namespace) -> int:
 
 
 def _verify(options: argparse.Namespace) -> int:
-    from campaign.pipeline import verify
+    from campaign.archiving import verify
     from campaign.recordings.description import DESCRIPTION_FILE
     from campaign.workers.workshop import open_workshop
 

@@ -2,35 +2,18 @@
 
 from __future__ import annotations
 
-import math
 import sys
-import tempfile
-from collections.abc import Callable, Iterator, Mapping, Sequence
-from contextlib import contextmanager
-from dataclasses import dataclass, field, replace
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import TypeVar
-
-import pandas as pd
 
 from campaign.analyses.budget import analyse_budget
 from campaign.analyses.budget_findings import budget_findings
-from campaign.analyses.calibration import Calibration, analyse_calibration
+from campaign.analyses.calibration import Calibration
 from campaign.analyses.calibration_effort import analyse_calibration_effort
 from campaign.analyses.drift import Drift, analyse_drift
 from campaign.analyses.drift_findings import drift_findings
-from campaign.analyses.earlier import (
-    EarlierCampaign,
-    Joined,
-    common_full_scale,
-    common_upper,
-    full_scale_of,
-    join,
-    reach_of,
-    sources_of,
-    up_to,
-    with_full_scale,
-)
+from campaign.analyses.earlier import Joined, sources_of
 from campaign.analyses.endurance import analyse_endurance
 from campaign.analyses.findings import collect_findings
 from campaign.analyses.generation_design import confounded_between, confounded_within, order_of_generations
@@ -41,6 +24,7 @@ from campaign.analyses.hysteresis import Hysteresis, analyse_hysteresis
 from campaign.analyses.influence_findings import influence_findings
 from campaign.analyses.influences import analyse_influences
 from campaign.analyses.layout import analyse_layout
+from campaign.analyses.layout_findings import layout_findings
 from campaign.analyses.limits import judge_limits
 from campaign.analyses.loop_findings import loop_findings
 from campaign.analyses.planning import analyse_planning
@@ -50,91 +34,29 @@ from campaign.analyses.rehearsal import compare_with_plan, rehearsal_findings
 from campaign.analyses.residuals import analyse_residuals
 from campaign.analyses.results import CampaignResults
 from campaign.analyses.scope import describe_scope
-from campaign.analyses.variance import analyse_variance, fit_generations
-from campaign.analyses.variance_fit import GenerationFit
-from campaign.archive import (
-    campaign_in,
-    hash_in_comment_holds,
-    sha512_of,
-    unpack_archive,
-    unpack_what_is_whole,
-)
+from campaign.analyses.variance import analyse_variance
+from campaign.campaign_reading import CampaignRead, calibrate, read_campaign, silent
+from campaign.earlier_campaigns import NOT_JOINED, read_earlier
 from campaign.keeping.kept_site import MadeSite, SiteKeeper
-from campaign.notices import CampaignStops, Notice, sort_notices
+from campaign.notices import Notice, sort_notices
 from campaign.pages.brief import brief_bytes, check_brief_place, write_brief
 from campaign.pages.notes import Notes, make_notes, read_note_files
 from campaign.pages.output import check_ours, write_folder
 from campaign.pages.publication import chosen_pages, publication_files
 from campaign.pages.render import templates_folder
 from campaign.pages.site import build_site, site_frame, site_pages
-from campaign.provenance.bag import BagFault
-from campaign.provenance.comparing import SCHEMA, compare_tables
 from campaign.provenance.manifest import with_manifests
-from campaign.provenance.refitting import refit_from_readings
-from campaign.provenance.sealing import TABLES, check_archive_place, seal_campaign, write_sealed
-from campaign.provenance.verifying import (
-    ARCHIVE,
-    WHAT_HASHES_SHOW,
-    Recomputation,
-    Verification,
-    recomputation_lines,
-    sealed_tables,
-    verification_lines,
-    verify_folder,
-)
-from campaign.recordings.description import DESCRIPTION_FILE
-from campaign.recordings.inspection import ON_SITE, inspection_lines, notice_lines, print_lines
-from campaign.recordings.intake import Intake, run_intake
-from campaign.recordings.sensor_share import TrialKey
+from campaign.recordings.inspection import ON_SITE, inspection_lines, print_lines
+from campaign.recordings.intake import Intake
 from campaign.recordings.shared_reading import Progress
 from campaign.trials.cyclic import CyclicFeatures
 from campaign.trials.endurance import EnduranceFeatures
-from campaign.trials.features import TrialFeatures
 from campaign.trials.hold import HoldFeatures
 from campaign.trials.layout import LayoutFeatures
-from campaign.trials.readings import Readings, collect_readings
-from campaign.trials.reduction import reduce_trial
-from campaign.trials.staircase import StaircaseFeatures
 from campaign.trials.sweeps import SweepFeatures
 from campaign.workers.workshop import Workshop
 
-DONE, SET_ASIDE, DIFFERS = 0, 1, 1
-
-Features = TypeVar("Features", bound=TrialFeatures)
-
-
-@dataclass(frozen=True)
-class CampaignRead:
-    """A campaign folder after its files were read once: no recording is held any more.
-
-    Attributes
-    ----------
-    intake
-        Every file with its fate; notices of the trial stage included.
-    readings
-        Plateaus of the staircases; those that the registers set aside are there and marked as not used.
-    readings_with_put_back
-        The same with those that the registers set aside marked as used; ``None`` where there are none.
-    features
-        What the used trials of every other kind were reduced to, by trial in reading order.
-    features_put_back
-        The same of sound trials that the registers set aside.
-    """
-
-    intake: Intake
-    readings: Readings
-    readings_with_put_back: Readings | None
-    features: dict[TrialKey, TrialFeatures] = field(default_factory=dict)
-    features_put_back: dict[TrialKey, TrialFeatures] = field(default_factory=dict)
-
-    def of_type(self, kept: type[Features]) -> dict[TrialKey, Features]:
-        """Return the features of one type, by trial in reading order."""
-        return {key: found for key, found in self.features.items() if isinstance(found, kept)}
-
-    def with_put_back(self, kept: type[Features]) -> dict[TrialKey, Features]:
-        """Return the features of one type with those set aside put back; empty where none were."""
-        aside = {key: found for key, found in self.features_put_back.items() if isinstance(found, kept)}
-        return self.of_type(kept) | aside if aside else {}
+DONE, SET_ASIDE = 0, 1
 
 
 def report(
@@ -187,7 +109,7 @@ def report(
 
 def _anything_set_aside(results: CampaignResults) -> bool:
     """Whether anything was set aside unasked, an earlier campaign included."""
-    earlier = any(notice.code == _NOT_JOINED for notice in results.notices)
+    earlier = any(notice.code == NOT_JOINED for notice in results.notices)
     return earlier or bool(results.intake.set_aside_unasked)
 
 
@@ -201,7 +123,7 @@ def make_site(
 
     Parameters are those of :func:`read_campaign`; so are the faults that stop it.
     """
-    tell = progress or _silent
+    tell = progress or silent
     results, notes = read_and_analyse(folder, output, tell, workshop)
     tell("pages", 0, 1)
     library = results.description.plot_library
@@ -236,7 +158,7 @@ def brief(
         Where the campaign cannot be read, or *file* is not ours to write.
     """
     check_brief_place(file)
-    results, notes = read_and_analyse(folder, None, progress or _silent, workshop)
+    results, notes = read_and_analyse(folder, None, progress or silent, workshop)
     content = brief_bytes(site_frame(results), site_pages(results, notes))
     write_brief(content, file)
     print(f"{file}: {len(content)} bytes, findings and key figures in one file")
@@ -273,131 +195,13 @@ def publish(
     """
     place = into if into is not None else beside(folder, "figures")
     check_ours(place)
-    tell = progress or _silent
+    tell = progress or silent
     results, notes = read_and_analyse(folder, place, tell, workshop)
     pages = site_pages(results, notes)
     files = publication_files(chosen_pages(pages, wanted), (), results.readings.reference, tell)
     write_folder(files, place)
     print(f"{len(files)} files written to {place}; index.csv says which is which")
     return DONE
-
-
-def seal(folder: Path, into: Path, progress: Progress | None = None, workshop: Workshop | None = None) -> int:
-    """Read and analyse the campaign in *folder* and seal everything into the zip file *into*.
-
-    The same folder gives the same bytes. Nothing is written where anything stops.
-
-    Returns
-    -------
-    int
-        Exit status: 0 done.
-
-    Raises
-    ------
-    CampaignStops
-        Where the campaign cannot be read or sealed, or *into* is not ours to write.
-    """
-    tell = progress or _silent
-    check_archive_place(folder, into)
-    results, site = make_site(folder, None, tell, workshop)
-    tell("sealing", 0, 1)
-    sealed = seal_campaign(folder, results, site)
-    write_sealed(sealed, into)
-    tell("sealing", 1, 1)
-    sys.stdout.write(print_lines(notice_lines(sealed.notices)))
-    print(f"{into} holds {len(sealed.files)} files, {into.stat().st_size} bytes; its SHA-512:")
-    print(f"  {sha512_of(into)}")
-    print(f"{WHAT_HASHES_SHOW}\nVerify it with: campaign verify {into}")
-    return DONE
-
-
-def verify(
-    target: Path, recompute: bool, progress: Progress | None = None, workshop: Workshop | None = None
-) -> int:
-    """Verify a sealed archive (a zip file, or the folder it was unpacked to) or a site, and say what differs.
-
-    Parameters
-    ----------
-    target
-        What to verify; it is not altered.
-    recompute
-        Whether to read and analyse the recordings in the archive again and compare every figure.
-    progress, workshop
-        As in :func:`read_campaign`; nothing kept by earlier runs should be in the workshop.
-
-    Returns
-    -------
-    int
-        Exit status: 0 everything agrees, 1 something differs.
-
-    Raises
-    ------
-    CampaignStops
-        Where *target* cannot be read, is refused, or holds nothing to recompute.
-    """
-    with tempfile.TemporaryDirectory(prefix="campaign-verify-") as space:
-        folder, damaged = _opened(target, Path(space) / "archive")
-        found = verify_folder(folder)
-        faults = _named_once([*damaged, *found.faults])
-        found = replace(found, faults=faults, remarks=(*found.remarks, *_packing_remarks(target)))
-        sys.stdout.write(print_lines(verification_lines(found, target.name)))
-        again = recompute_archive(found, progress, workshop) if recompute else None
-        if again is not None:
-            sys.stdout.write(print_lines(recomputation_lines(again)))
-    print(WHAT_HASHES_SHOW)
-    return DIFFERS if found.faults or (again is not None and not again.agrees) else DONE
-
-
-def _opened(target: Path, space: Path) -> tuple[Path, list[BagFault]]:
-    """Where *target* lies unpacked, and what of its zip file is damaged."""
-    if target.is_dir():
-        return target, []
-    unpacked = unpack_what_is_whole(target, space)
-    home = unpacked.folder.relative_to(space).as_posix()
-    faults = [
-        BagFault((notice.file or "").removeprefix(f"{home}/"), "is damaged in the zip file")
-        for notice in unpacked.damaged
-    ]
-    if hash_in_comment_holds(target) is False:
-        faults.append(BagFault(target.name, "is not, byte by byte, the zip file that was sealed"))
-    return unpacked.folder, faults
-
-
-def _named_once(faults: list[BagFault]) -> tuple[BagFault, ...]:
-    """Faults with the first of each file alone."""
-    first: dict[str, BagFault] = {}
-    for fault in faults:
-        first.setdefault(fault.file, fault)
-    return tuple(first.values())
-
-
-def _packing_remarks(target: Path) -> list[str]:
-    if target.is_dir() or hash_in_comment_holds(target) is not None:
-        return []
-    return ["another program packed this zip file: its contents are looked at, not its own bytes"]
-
-
-def recompute_archive(
-    found: Verification, progress: Progress | None = None, workshop: Workshop | None = None
-) -> Recomputation:
-    """Read and analyse the recordings of an unpacked archive again, and compare with what it holds.
-
-    Raises
-    ------
-    CampaignStops
-        Where it holds no recordings, or they cannot be read.
-    """
-    if found.kind != ARCHIVE:
-        what = f"a {found.kind} holds no recordings"
-        remedy = "name a sealed archive, or leave out --recompute"
-        done = "nothing is computed again"
-        raise CampaignStops([Notice("nothing-to-recompute", "stops", None, None, None, what, done, remedy)])
-    _, site = make_site(campaign_in(found.folder), None, progress, workshop)
-    sealed = sealed_tables(found.folder)
-    made = {address.removeprefix(TABLES): site[address] for address in site if address.startswith(TABLES)}
-    parts = [sealed.get(name) for name in ("readings.csv", SCHEMA, "fit_certificates.csv")]
-    refits = refit_from_readings(*parts) if None not in parts else ()  # type: ignore[arg-type]
-    return Recomputation(compare_tables(sealed, made), refits)
 
 
 def _what_was_read(intake: Intake, notices: tuple[Notice, ...]) -> list[str]:
@@ -408,187 +212,6 @@ def beside(folder: Path, word: str = "report") -> Path:
     """Return where a report of *folder* is written unless said otherwise: FOLDER_report beside it."""
     whole = folder.resolve()
     return whole.with_name(f"{whole.name}_{word}")
-
-
-def read_campaign(
-    folder: Path,
-    output: Path | None = None,
-    progress: Progress | None = None,
-    workshop: Workshop | None = None,
-) -> CampaignRead:
-    """Read every recording of *folder* once and keep what its trials are reduced to.
-
-    What comes of it is the same, to the last bit, whoever of the *workshop* read it and whenever.
-
-    Raises
-    ------
-    CampaignStops
-        Where the folder cannot be read or no trial can be used.
-    """
-    intake, features = run_intake(
-        folder, reduce_trial, output, progress, keep_put_back=True, workshop=workshop, as_bytes=True
-    )
-    staircases = {key: found for key, found in features.items() if isinstance(found, StaircaseFeatures)}
-    reduced = {key: found for key, found in features.items() if found is not None and key not in staircases}
-    others = {key: found for key, found in reduced.items() if key in intake.used}
-    aside = {key: found for key, found in reduced.items() if key in intake.put_back}
-    notices = [n for k, found in features.items() if found and k in intake.used for n in found.notices]
-    sensors_aside = sensors_set_aside(intake)
-    readings = _readings(intake, staircases, lambda key: key in intake.used, sensors_aside)
-    put_back = _readings(intake, staircases, lambda _: True) if intake.put_back & staircases.keys() else None
-    noted = with_notices(intake, [*notices, *readings.notices])
-    return CampaignRead(noted, readings, put_back, others, aside)
-
-
-def sensors_set_aside(intake: Intake) -> frozenset[tuple[str, str]]:
-    """Return (module, sensor) of the sensors of which no trial is used although sound ones were read."""
-    used = {_sensor(intake, key) for key in intake.used}
-    return frozenset(_sensor(intake, key) for key in intake.put_back) - used
-
-
-def _sensor(intake: Intake, key: TrialKey) -> tuple[str, str]:
-    identity = intake.identities[key]
-    return identity.module, identity.sensor
-
-
-def _readings(
-    intake: Intake,
-    staircases: Mapping[TrialKey, StaircaseFeatures],
-    wanted: Callable[[TrialKey], bool],
-    sensors_aside: frozenset[tuple[str, str]] = frozenset(),
-) -> Readings:
-    """Put the readings of wanted trials together; those of sensors aside are in it, marked as not used."""
-    parts = [
-        found.readings
-        for key, found in staircases.items()
-        if wanted(key) or _sensor(intake, key) in sensors_aside
-    ]
-    return collect_readings(parts, sensors_aside)
-
-
-def read_earlier(
-    folder: Path,
-    read: CampaignRead,
-    progress: Progress | None = None,
-    workshop: Workshop | None = None,
-) -> Joined:
-    """Read the earlier campaigns that the description of *folder* names, as far as comparison needs them.
-
-    One that cannot be read becomes a notice, and the report goes on without it. Earlier campaigns of an
-    earlier campaign are not followed, so that campaigns may name each other.
-    """
-    tell = progress or _silent
-    found: list[EarlierCampaign] = []
-    notices: list[Notice] = []
-    named = read.intake.description.earlier
-    taken = {folder.resolve()}
-    for number, one in enumerate(named):
-        tell("earlier campaigns", number, len(named))
-        where = one.get("archive") or one["folder"]
-        try:
-            with opened_earlier(folder, one) as place:
-                if place.resolve() in taken:
-                    raise CampaignStops([_not_joined(where, "is this campaign, or is named twice")])
-                taken.add(place.resolve())
-                found.append(
-                    _earlier_campaign(where, read_campaign(place, workshop=workshop), read, workshop)
-                )
-                if found[-1].names_others:
-                    notices.append(_not_followed(where))
-        except CampaignStops as stop:
-            first = stop.notices[0]
-            known = first.code == _NOT_JOINED
-            what = first.what.replace(str(folder / where), where)  # no path of this machine in a site
-            notices.append(first if known else _not_joined(where, what, first.remedy))
-    return join(found, order_of_generations(read.intake), notices)
-
-
-_NOT_JOINED = "earlier-not-joined"
-
-
-def _not_joined(where: str, what: str, remedy: str = "") -> Notice:
-    said = f"{where} {what}" if what.startswith("is ") else f"{where}: {what}"
-    done = "the comparison goes on without it"
-    return Notice(
-        _NOT_JOINED, "set aside", DESCRIPTION_FILE, None, None, said, done, remedy or "mend its path"
-    )
-
-
-def _not_followed(where: str) -> Notice:
-    what = f"{where} names earlier campaigns of its own"
-    remedy = "name them in this campaign's description as well"
-    code = "earlier-not-followed"
-    return Notice(code, "noted", DESCRIPTION_FILE, None, None, what, "they are not followed", remedy)
-
-
-@contextmanager
-def opened_earlier(folder: Path, named: Mapping[str, str]) -> Iterator[Path]:
-    """Give the folder of an earlier campaign while it is read; a sealed archive is unpacked for that long.
-
-    Raises
-    ------
-    CampaignStops
-        Where a sealed archive is refused or damaged, or holds no campaign.
-    """
-    if "folder" in named:
-        yield folder / named["folder"]
-        return
-    with tempfile.TemporaryDirectory(prefix="campaign-earlier-") as space:
-        yield campaign_in(unpack_archive(folder / named["archive"], Path(space) / "archive"))
-
-
-def _earlier_campaign(
-    where: str, read: CampaignRead, own: CampaignRead, workshop: Workshop | None
-) -> EarlierCampaign:
-    """Analyse an earlier campaign as far as comparison needs it, over the range common to both."""
-    intake, described = read.intake, own.intake.description
-    upper = common_upper(read.readings, own.readings)
-    full_scale = common_full_scale(described, read.readings, upper)
-    offers = _offers(read, up_to(read.readings, upper), full_scale, workshop)
-    further = reach_of(own.readings) > upper  # never where upper is not a number
-    used = intake.trials[intake.trials["fate"] == "used"]
-    stated = intake.description.range_strain, intake.description.range_elongation_mm
-    return EarlierCampaign(
-        where=where,
-        title=intake.description.title,
-        simulated=intake.description.simulated,
-        order=order_of_generations(intake),
-        offers=offers,
-        recordings=int(used["file"].nunique()),
-        modules=len(used.drop_duplicates(["generation", "module"])),
-        sensors=len(used.drop_duplicates(["generation", "module", "sensor"])),
-        hashes=intake.file_hashes,
-        full_scale=full_scale_of(offers),
-        rescaled=not math.isnan(full_scale) and full_scale not in stated,
-        upper=upper,
-        restricted=_offers(replace(own, features={}), up_to(own.readings, upper), upper, workshop)
-        if further
-        else None,
-        names_others=bool(intake.description.earlier),
-    )
-
-
-def _offers(
-    read: CampaignRead, readings: Readings, full_scale: float, workshop: Workshop | None
-) -> Comparable:
-    """Return the headline figures of a campaign by *readings*, full scale as given (NaN: as described)."""
-    description = with_full_scale(read.intake.description, readings.reference, full_scale)
-    intake = replace(read.intake, description=description)
-    calibration = _calibrate(readings, intake) if len(readings.usable) else None
-    fits: tuple[GenerationFit, ...] = ()
-    uneven: frozenset[str] = frozenset()
-    if calibration is not None:
-        fits, uneven = fit_generations(calibration.readings, calibration.reference, description, workshop)
-    return comparable_figures(
-        description,
-        intake.used_identities,
-        calibration,
-        fits,
-        uneven,
-        analyse_hysteresis(read.of_type(CyclicFeatures), calibration),
-        analyse_drift(read.of_type(HoldFeatures), calibration, description),
-        analyse_pressure(read.of_type(SweepFeatures), calibration, description),
-    )
 
 
 def analyse(
@@ -610,13 +233,13 @@ def analyse(
     workshop
         Who fits, and what earlier runs fitted; this process alone, and nothing, where ``None``.
     """
-    tell = progress or _silent
+    tell = progress or silent
     intake, description = read.intake, read.intake.description
     calibration = put_back = variance = residuals = effort = None
     if len(read.readings.usable):
         tell("analyses", 0, 4)
-        calibration = _calibrate(read.readings, intake)
-        put_back = _calibrate(read.readings_with_put_back, intake) if read.readings_with_put_back else None
+        calibration = calibrate(read.readings, intake)
+        put_back = calibrate(read.readings_with_put_back, intake) if read.readings_with_put_back else None
         tell("analyses", 1, 4)
         variance = analyse_variance(calibration, description, workshop)
         tell("analyses", 2, 4)
@@ -681,6 +304,7 @@ def analyse(
             *generation_findings(generations),
             *planning_findings(planning),
             *budget_findings(budget, limits),
+            *layout_findings(layout, limits),
         ],
         reference=readings.reference,
     )
@@ -751,19 +375,3 @@ def analyse_put_back(read: CampaignRead, calibration: Calibration | None) -> Put
         analyse_drift(holds, calibration, description) if holds else None,
         analyse_pressure(read.with_put_back(SweepFeatures), calibration, description),
     )
-
-
-def _calibrate(readings: Readings, intake: Intake) -> Calibration:
-    return analyse_calibration(readings, intake.description, intake.sensors, intake.file_hashes)
-
-
-def with_notices(intake: Intake, notices: list[Notice]) -> Intake:
-    """Return *intake* with the notices of a later stage added, counted on the recordings they are about."""
-    recordings: pd.DataFrame = intake.recordings.copy()
-    more = pd.Series([notice.file for notice in notices], dtype="object").value_counts()
-    recordings["notices"] += recordings["file"].map(more).fillna(0).astype("int64")
-    return replace(intake, recordings=recordings, notices=sort_notices([*intake.notices, *notices]))
-
-
-def _silent(_what: str, _done: int, _total: int) -> None:
-    """Tell nobody."""

@@ -23,7 +23,10 @@ START, END = "<!-- notices: written by tests/test_documents.py -->", "<!-- end o
 
 LADDER = (
     "cli",
+    "archiving",
     "pipeline",
+    "earlier_campaigns",
+    "campaign_reading",
     "rehearsal",
     "provenance",
     "pages",

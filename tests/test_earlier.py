@@ -8,7 +8,9 @@ from pathlib import Path
 import pytest
 
 from campaign.analyses.earlier import unique_labels
-from campaign.pipeline import analyse, read_campaign, read_earlier, report
+from campaign.campaign_reading import read_campaign
+from campaign.earlier_campaigns import read_earlier
+from campaign.pipeline import analyse, report
 from tests.pages.small_campaign import Sketch, write_campaign
 
 OLD = Sketch(generations=("first",), modules=3, sensors=("AB", "BC"), sessions=1, limits="")

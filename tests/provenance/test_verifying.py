@@ -11,7 +11,7 @@ from pathlib import Path
 
 import pytest
 
-from campaign import pipeline
+from campaign import archiving
 from campaign.archive import CAMPAIGN_LABEL, campaign_in, unpack_archive, write_archive
 from campaign.cli import main
 from campaign.notices import CampaignStops
@@ -247,7 +247,7 @@ def test_an_altered_figure_is_named_with_its_row_and_by_how_much(
     """The reading again is the other tests'; here it gives what was sealed, and the sealed table lies."""
     site = unpacked / "data" / "ro-crate-preview_files"
     files = {p.relative_to(site).as_posix(): p.read_bytes() for p in site.rglob("*") if p.is_file()}
-    monkeypatch.setattr(pipeline, "make_site", lambda *_: (None, files))
+    monkeypatch.setattr(archiving, "make_site", lambda *_: (None, files))
     folder = copy_of_archive()
     for place in (folder / "data", folder / "data" / "ro-crate-preview_files"):
         table = place / "tables" / "sensor_lines.csv"
@@ -288,7 +288,7 @@ def test_an_archive_whose_label_leads_out_is_not_computed(copy_of_archive: Copy)
     found = verify_folder(folder)
     assert "bag-info.txt" in {fault.file for fault in found.faults}
     with pytest.raises(CampaignStops, match="no place inside"):
-        pipeline.recompute_archive(found)
+        archiving.recompute_archive(found)
 
 
 def test_many_faults_are_counted_and_the_first_are_shown(copy_of_archive: Copy) -> None:
