@@ -249,14 +249,14 @@ def analyse(
     rehearsal = compare_with_plan(description, variance)
     hysteresis = analyse_hysteresis(read.of_type(CyclicFeatures), calibration)
     endurance = analyse_endurance(read.of_type(EnduranceFeatures).values())
-    drift = analyse_drift(read.of_type(HoldFeatures), calibration, description)
+    drift = analyse_drift(read.of_type(HoldFeatures), calibration, description, workshop)
     sweeps = read.of_type(SweepFeatures)
     cycled, laid_out = read.of_type(CyclicFeatures).values(), read.of_type(LayoutFeatures).values()
     logged = [(f.identity, f.logged) for f in cycled if f.logged is not None]
     logged += [(f.identity, f.logged) for f in laid_out if f.logged is not None]
     pressure = analyse_pressure(sweeps, calibration, description, logged)
     influences = analyse_influences(sweeps, calibration, description)
-    back = analyse_put_back(read, put_back or calibration)
+    back = analyse_put_back(read, put_back or calibration, workshop)
     others = [found for found in (hysteresis, drift, pressure) if found is not None]
     readings = read.readings
     if not len(readings.table) and others:
@@ -366,12 +366,14 @@ class PutBack:
     pressure: Pressure | None
 
 
-def analyse_put_back(read: CampaignRead, calibration: Calibration | None) -> PutBack:
+def analyse_put_back(
+    read: CampaignRead, calibration: Calibration | None, workshop: Workshop | None = None
+) -> PutBack:
     """Analyse once more, by the lines of *calibration*, the kinds of trial of which some were set aside."""
     description = read.intake.description
     holds = read.with_put_back(HoldFeatures)
     return PutBack(
         analyse_hysteresis(read.with_put_back(CyclicFeatures), calibration),
-        analyse_drift(holds, calibration, description) if holds else None,
+        analyse_drift(holds, calibration, description, workshop) if holds else None,
         analyse_pressure(read.with_put_back(SweepFeatures), calibration, description),
     )

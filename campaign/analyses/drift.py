@@ -18,7 +18,7 @@ from campaign.analyses.hold_figures import (
     FittedHold,
     HoldCurve,
     HoldScale,
-    fit_hold,
+    fit_holds,
     form_rows,
     hold_curve,
     hold_row,
@@ -34,6 +34,7 @@ from campaign.recordings.description import Description
 from campaign.recordings.recording import ELONGATION, STRAIN, ReferenceQuantity
 from campaign.trials.hold import Hold, HoldFeatures
 from campaign.trials.readings import SENSOR_KEYS
+from campaign.workers.workshop import Workshop
 
 if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration
@@ -90,7 +91,10 @@ class Drift:
 
 
 def analyse_drift(
-    features: Mapping[TrialKey, HoldFeatures], calibration: Calibration | None, description: Description
+    features: Mapping[TrialKey, HoldFeatures],
+    calibration: Calibration | None,
+    description: Description,
+    workshop: Workshop | None = None,
 ) -> Drift | None:
     """Analyse every hold and blank channel, and the zero across sessions.
 
@@ -103,6 +107,8 @@ def analyse_drift(
         settled signal.
     description
         Limits.
+    workshop
+        Who fits, and what earlier runs fitted; this process alone where ``None``.
 
     Returns
     -------
@@ -118,14 +124,12 @@ def analyse_drift(
     reference = _reference(sensors, calibration)
     scales = sensor_scales(calibration)
     band = _band(description)
+    each = [(own, number, hold) for own in sensors for number, hold in enumerate(own.holds, 1)]
+    named = [(own.identity, own.unit, number, hold) for own, number, hold in each]
+    fits = fit_holds(named, workshop or Workshop())
     fitted = [
-        (
-            fit_hold(own.identity, own.unit, number, hold),
-            scale_of_hold(own, hold, scales),
-            _kept_x(hold, reference),
-        )
-        for own in sensors
-        for number, hold in enumerate(own.holds, 1)
+        (fit, scale_of_hold(own, hold, scales), _kept_x(hold, reference))
+        for fit, (own, _, hold) in zip(fits, each, strict=True)
     ]
     holds = holds_frame([hold_row(one, scale, x, band) for one, scale, x in fitted])
     blanks = blank_table(blank)

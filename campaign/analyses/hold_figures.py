@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -10,16 +11,20 @@ import numpy.typing as npt
 import pandas as pd
 from scipy import stats
 
+from campaign.analyses.shared_work import do_all
 from campaign.methods.block_noise import BlockNoise, Stretches
 from campaign.methods.creep import (
     NEVER_SETTLES,
     CreepFits,
     FittedForm,
+    bare_fits,
     fit_creep,
+    fits_from_bare,
     slope_per_decade,
 )
 from campaign.recordings.recording import TrialIdentity
 from campaign.trials.hold import Hold, SignalAt
+from campaign.workers.workshop import Workshop
 
 FloatArray = npt.NDArray[np.float64]
 
@@ -200,17 +205,47 @@ class FittedHold:
     noise: BlockNoise | None
 
 
+WORTH_HOLDS = 60
+"""Holds from which on sharing their fits out is faster."""
+
+
+def fit_holds(holds: Sequence[tuple[TrialIdentity, str, int, Hold]], workshop: Workshop) -> list[FittedHold]:
+    """Fit all forms to the part of every hold (identity, unit, number, hold) that is late enough."""
+    tasks = [_late(hold) for _, _, _, hold in holds]
+    late = do_all(fit_stretches, tasks, workshop, lambda wanted: len(wanted) >= WORTH_HOLDS)
+    fits = [fits_from_bare(bare) for bare in late]
+    whole = [
+        (hold.stretches, hold.means) for (*_, hold), found in zip(holds, fits, strict=True) if found is None
+    ]
+    others = iter(do_all(fit_stretches, whole, workshop, lambda _: False))
+    return [
+        FittedHold(
+            *one, *task, found, found.noise if found is not None else _noise_of(fits_from_bare(next(others)))
+        )
+        for one, task, found in zip(holds, tasks, fits, strict=True)
+    ]
+
+
 def fit_hold(identity: TrialIdentity, unit: str, number: int, hold: Hold) -> FittedHold:
-    """Fit all forms to the part of *hold* that is late enough."""
+    """Fit one hold as :func:`fit_holds` does."""
+    return fit_holds([(identity, unit, number, hold)], Workshop())[0]
+
+
+def _late(hold: Hold) -> tuple[Stretches, FloatArray]:
+    """Stretches and means of what is left where the first ramp times are left out."""
     earliest = RAMP_TIMES_LEFT_OUT * hold.ramp_s if hold.ramp_s > 0 else 0.0
     kept = hold.stretches.starts_s >= earliest
     late = Stretches(hold.stretches.starts_s[kept], hold.stretches.stops_s[kept], hold.stretches.counts[kept])
-    fits = fit_creep(late, hold.means[kept])
-    noise = fits.noise if fits is not None else None
-    if noise is None:
-        whole = fit_creep(hold.stretches, hold.means)
-        noise = whole.noise if whole is not None else None
-    return FittedHold(identity, unit, number, hold, late, hold.means[kept], fits, noise)
+    return late, hold.means[kept]
+
+
+def fit_stretches(task: tuple[Stretches, FloatArray]) -> tuple[tuple[object, ...]]:
+    """Fit all forms to stretches and their means; the fits are written down as :func:`bare_fits` does."""
+    return (bare_fits(fit_creep(*task)),)
+
+
+def _noise_of(fits: CreepFits | None) -> BlockNoise | None:
+    return fits.noise if fits is not None else None
 
 
 def verdict_of_hold(hold: Hold) -> tuple[str, str]:

@@ -13,14 +13,11 @@ from typing import cast
 
 import numpy as np
 
+from campaign.analyses.shared_work import do_all
 from campaign.analyses.variance_fit import GenerationFit, fit_generation
 from campaign.analyses.variance_model import VarianceModel
-from campaign.keeping.program import digest_of, program_digest
-from campaign.keeping.value_codec import encode
 from campaign.methods.nested_compression import Compression, compress
 from campaign.methods.nested_design import NestedModel
-from campaign.workers.crew import LocalProcesses, ThisProcess
-from campaign.workers.sharing import Work, share_out
 from campaign.workers.workshop import Workshop
 
 WORTH_READINGS = 30_000
@@ -52,23 +49,15 @@ Outcome = GenerationFit | str
 
 def fit_all(tasks: Sequence[FitTask], workshop: Workshop) -> list[Outcome]:
     """Fit every task and return its outcome, in order."""
-    keys = [_key(task) for task in tasks] if workshop.store.is_open else []
-    kept = workshop.store.get_many(keys)
-    known = [kept[key].get("") if key in kept else None for key in keys] or [None] * len(tasks)
-    readings = sum(
-        len(task.model.response) for task, found in zip(tasks, known, strict=True) if found is None
-    )
-    local = isinstance(workshop.crew, LocalProcesses) and readings >= WORTH_READINGS
-    crew = workshop.crew if local else ThisProcess()
-    wanted = [task for task, found in zip(tasks, known, strict=True) if found is None]
-    made = (outcome for (outcome,) in share_out(_WORK, wanted, crew))
-    outcomes: list[Outcome] = []
-    for number, (task, found) in enumerate(zip(tasks, known, strict=True)):
-        outcome = cast(Outcome, found) if found is not None else next(made)
-        if found is None and keys:
-            workshop.store.put(keys[number], outcome)
-        outcomes.append(outcome if isinstance(outcome, str) else _with_data(outcome, task.model))
-    return outcomes
+    outcomes = do_all(fit_task, tasks, workshop, _are_worth_sharing)
+    return [
+        outcome if isinstance(outcome, str) else _with_data(outcome, task.model)
+        for task, outcome in zip(tasks, outcomes, strict=True)
+    ]
+
+
+def _are_worth_sharing(tasks: list[FitTask]) -> bool:
+    return sum(len(task.model.response) for task in tasks) >= WORTH_READINGS
 
 
 def fit_task(task: FitTask) -> tuple[Outcome]:
@@ -78,13 +67,6 @@ def fit_task(task: FitTask) -> tuple[Outcome]:
     except (ValueError, np.linalg.LinAlgError) as error:
         return (str(error),)
     return (_without_data(fit),)
-
-
-_WORK: Work[FitTask, Outcome] = Work(fit_task, lambda task: (task,), fit_task)
-
-
-def _key(task: FitTask) -> str:
-    return digest_of([program_digest(), "nested fit", encode(task)])
 
 
 def _without_data(fit: GenerationFit) -> GenerationFit:

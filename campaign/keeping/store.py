@@ -215,6 +215,7 @@ class Store:
         self._run("PRAGMA locking_mode = EXCLUSIVE")
         self._run("PRAGMA auto_vacuum = FULL")
         self._run("PRAGMA journal_mode = DELETE")
+        self._run("PRAGMA synchronous = OFF")  # what a power cut damages is noticed and thrown away
         self._run("BEGIN IMMEDIATE")
         found = self._run("SELECT type, sql FROM sqlite_master WHERE sql IS NOT NULL")
         application, form = self._number("application_id"), self._number("user_version")

@@ -15,6 +15,7 @@ forms, and the forms compared by AICc (C. M. Hurvich and C.-L. Tsai, Biometrika 
 from __future__ import annotations
 
 from dataclasses import dataclass, replace
+from typing import Any, cast
 
 import numpy as np
 import numpy.typing as npt
@@ -253,6 +254,24 @@ def fit_creep(stretches: Stretches, values: FloatArray) -> CreepFits | None:
     fitted = (_fitted(form, times, values, whiten) for form in FORMS if 3 * form.parameters <= len(values))
     fits = sorted((found for found in fitted if not _is_degenerate(found)), key=lambda found: found.aicc)
     return CreepFits(tuple(fits), noise, lag_one(values - fits[0].curve(times)))
+
+
+def bare_fits(fits: CreepFits | None) -> tuple[object, ...]:
+    """Return *fits* as numbers and names, without the functions of the forms; empty for ``None``."""
+    if fits is None:
+        return ()
+    forms = tuple((f.name, f.fit, f.aicc, f.shortest_s, f.longest_s) for f in fits.fits)
+    return forms, fits.noise, fits.lag_one
+
+
+def fits_from_bare(bare: tuple[object, ...]) -> CreepFits | None:
+    """Return the fits that :func:`bare_fits` wrote down."""
+    if not bare:
+        return None
+    forms, noise, of_best = cast(tuple[Any, BlockNoise, float], bare)
+    by_name = {form.name: form for form in FORMS}
+    fitted = tuple(FittedForm(by_name[name], *numbers) for name, *numbers in forms)
+    return CreepFits(fitted, noise, of_best)
 
 
 def slope_per_decade(

@@ -130,11 +130,11 @@ def _root(metadata: ArchiveMetadata, citation: Citation, holds: list[str]) -> En
         "datePublished": metadata.day,
         "license": {"@id": licence_id(metadata)},
         "creditText": citation.sentence,
-        "hasPart": [{"@id": reference(path)} for path in holds],
-        "mentions": [{"@id": "#report"}],
+        "hasPart": _references(reference(path) for path in holds),
+        "mentions": {"@id": "#report"},
     }
     if metadata.authors:
-        root["author"] = [{"@id": author_id(metadata, k)} for k in range(len(metadata.authors))]
+        root["author"] = _references(author_id(metadata, k) for k in range(len(metadata.authors)))
     if metadata.invented:
         root["keywords"] = "invented data"
     return root
@@ -154,7 +154,13 @@ def _folder(part: Part, files: list[str]) -> Entity:
         "name": part.name,
         "description": part.description,
     }
-    return folder | ({"hasPart": [{"@id": reference(path)} for path in files]} if files else {})
+    return folder | ({"hasPart": _references(reference(path) for path in files)} if files else {})
+
+
+def _references(identifiers: Iterable[str]) -> object:
+    """References to entities; to a single one as itself, as compact JSON-LD has it."""
+    references = [{"@id": identifier} for identifier in identifiers]
+    return references[0] if len(references) == 1 else references
 
 
 def _file(path: str, words: str, content: Content) -> Entity:

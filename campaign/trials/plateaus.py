@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import numpy as np
 import numpy.typing as npt
-from scipy import ndimage
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
@@ -25,23 +24,9 @@ LARGEST_ROUNDING = 0.01
 SHORTEST_PLATEAU = 3
 """Fewest samples that make a plateau."""
 
-MOTION_SHARE = 0.002
-"""Differences smaller than this share of the span of the reference are not motion."""
-
-SMALLEST_REST_SHARE = 1.0 / 6.0
-"""A log that rests for less than this share of its samples is no staircase (a sine rests at its ends too)."""
-
-SHORTEST_PLATEAU = 3
-"""Fewest samples that make a plateau."""
-
-SMALLEST_REST_SHARE = 1.0 / 6.0
-"""A log that rests for less than this share of its samples is no staircase (a sine rests at its ends too)."""
-
-SHORTEST_PLATEAU = 3
-"""Fewest samples that make a plateau."""
-
-SHORTEST_PLATEAU = 3
-"""Fewest samples that make a plateau."""
+PADDING = 4
+"""Stretches are laid out side by side for their medians where that takes no more than this many times their
+samples."""
 
 
 def find_plateaus(reference: FloatArray) -> tuple[IntArray, IntArray]:
@@ -102,28 +87,46 @@ def _reference_noise(reference: FloatArray) -> float:
 
 def _rests(reference: FloatArray, noise: float, span: float) -> tuple[IntArray, IntArray]:
     """Stretches without motion, at the finest averaging that tells motion from noise; none if none does."""
+    sums = np.concatenate([[0.0], np.cumsum(reference - reference.mean())])
     width = 1
     while width <= max(len(reference) // 20, 1):
-        motion = _motion(reference, width)
+        motion = _motion(sums, width)
         noise_left = noise * np.sqrt(2.0 / width)
         still = max(4.0 * noise_left, MOTION_SHARE * span)
         moving = motion[motion > still]
-        if len(moving) and np.quantile(moving, 0.25) > 1.5 * still:
+        if len(moving) and _lower_quartile_exceeds(moving, 1.5 * still):
             return _stretches(motion <= still)
         width *= 2
     return _stretches(np.zeros(len(reference), dtype=bool))
 
 
-def _motion(reference: FloatArray, width: int) -> FloatArray:
-    """Absolute difference of the means of the *width* samples before each sample and from it on."""
-    sums = np.concatenate([[0.0], np.cumsum(reference - reference.mean())])
-    places = np.arange(len(reference))
-    low, high = np.maximum(places - width, 0), np.minimum(places + width, len(reference))
-    before = (sums[places] - sums[low]) / np.maximum(places - low, 1)
-    after = (sums[high] - sums[places]) / (high - places)
-    difference = np.abs(after - before)
+def _motion(sums: FloatArray, width: int) -> FloatArray:
+    """Absolute difference of the means of the *width* samples before each sample and from it on.
+
+    ``sums`` has shape (samples + 1,): sums of the samples before each place.
+    """
+    samples = len(sums) - 1
+    difference = np.empty(samples)
+    difference[: samples - width + 1] = (sums[width:] - sums[:-width]) / width
+    difference[samples - width + 1 :] = (sums[-1] - sums[samples - width + 1 : -1]) / np.arange(
+        width - 1, 0, -1
+    )
+    difference[width:] -= (sums[width:-1] - sums[: -width - 1]) / width
+    difference[1:width] -= sums[1:width] / np.arange(1, width)
+    np.abs(difference, out=difference)
     difference[0] = difference[1]
-    return np.asarray(difference)
+    return difference
+
+
+def _lower_quartile_exceeds(values: FloatArray, limit: float) -> bool:
+    """Whether the lower quartile lies above *limit*: by counting, where the count settles it."""
+    below = int(np.count_nonzero(values <= limit))
+    first = (len(values) - 1) // 4
+    if below <= first:
+        return True
+    if below >= min(first + 2, len(values)):
+        return False
+    return bool(np.quantile(values, 0.25) > limit)
 
 
 def _stretches(mask: BoolArray) -> tuple[IntArray, IntArray]:
@@ -150,7 +153,17 @@ def _long_enough(starts: IntArray, stops: IntArray) -> tuple[IntArray, IntArray]
 def _medians(values: FloatArray, starts: IntArray, stops: IntArray) -> FloatArray:
     """Median of the values of each stretch."""
     places, owner = expand(starts, stops)
-    return np.asarray(ndimage.median(values[places], labels=owner, index=np.arange(len(starts))))
+    lengths = stops - starts
+    longest = int(lengths.max())
+    if longest * len(starts) <= PADDING * len(places):
+        rows = np.full((len(starts), longest), np.inf)
+        rows[np.arange(longest) < lengths[:, None]] = values[places]
+        rows.sort(axis=1)
+        ordered, first = rows.ravel(), np.arange(len(starts)) * longest
+    else:
+        ordered = values[places][np.lexsort([values[places], owner])]
+        first = np.cumsum(lengths) - lengths
+    return np.asarray((ordered[first + (lengths - 1) // 2] + ordered[first + lengths // 2]) / 2.0)
 
 
 def _joined(values: FloatArray, starts: IntArray, stops: IntArray, band: float) -> tuple[IntArray, IntArray]:
@@ -169,13 +182,12 @@ def _joined(values: FloatArray, starts: IntArray, stops: IntArray, band: float) 
 def _widened(values: FloatArray, starts: IntArray, stops: IntArray, band: float) -> tuple[IntArray, IntArray]:
     """Edges moved outwards over samples in the band about the level, up to the first that is not."""
     medians = _medians(values, starts, stops)
-    place = np.arange(len(values))
-    after = np.searchsorted(starts, place, side="right") - 1
-    before = np.minimum(np.searchsorted(stops, place, side="right"), len(starts) - 1)
-    left = (np.abs(values - medians[np.maximum(after, 0)]) > band) & (place >= stops[np.maximum(after, 0)])
-    not_yet = (np.abs(values - medians[before]) > band) & (place < starts[before])
-    outside = np.concatenate([np.flatnonzero(left), [len(values)]])
+    place, gap = expand(np.append(0, stops), np.append(starts, len(values)))
+    after = (gap > 0) & (np.abs(values[place] - medians[np.maximum(gap - 1, 0)]) > band)
+    before = (gap < len(starts)) & (np.abs(values[place] - medians[np.minimum(gap, len(starts) - 1)]) > band)
+    left, not_yet = place[after], place[before]
+    outside = np.append(left, len(values))
     new_stops = np.minimum(outside[np.searchsorted(outside, stops)], np.append(starts[1:], len(values)))
-    inside = np.concatenate([[-1], np.flatnonzero(not_yet)])
+    inside = np.append(-1, not_yet)
     new_starts = np.maximum(inside[np.searchsorted(inside, starts) - 1] + 1, np.append(0, new_stops[:-1]))
     return new_starts, new_stops

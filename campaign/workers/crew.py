@@ -9,9 +9,11 @@ from __future__ import annotations
 import os
 import signal
 import threading
+import time
 from collections.abc import Callable
 from concurrent.futures import Executor, Future, ProcessPoolExecutor
-from multiprocessing import connection, get_context, parent_process
+from multiprocessing import active_children, connection, get_context, parent_process
+from multiprocessing.process import BaseProcess
 from types import TracebackType
 from typing import Protocol, Self, TypeVar
 
@@ -20,6 +22,10 @@ R = TypeVar("R")
 
 ALGEBRA_THREADS = ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS", "MKL_NUM_THREADS")
 """Variables by which algebra libraries are told their number of threads."""
+
+
+GRACE_S = 1.0
+"""How long processes may take to end by themselves, s."""
 
 
 class CrewGone(Exception):  # noqa: N818 - work goes on without the crew
@@ -105,13 +111,18 @@ class LocalProcesses(Closing):
     def __init__(self, hands: int | None = None) -> None:
         self.hands = hands if hands is not None else cores()
         self._executor: Executor | None = None
+        self._processes: list[BaseProcess] = []
 
     def submit(self, function: Callable[[T], R], task: T) -> Future[R]:
         """Hand a task to one of the processes."""
         try:
-            if self._executor is None:
-                self._executor = ProcessPoolExecutor(self.hands, get_context("spawn"), _begin_worker)
-            return self._executor.submit(function, task)
+            if self._executor is not None:
+                return self._executor.submit(function, task)
+            others = active_children()
+            self._executor = ProcessPoolExecutor(self.hands, get_context("spawn"), _begin_worker)
+            future = self._executor.submit(function, task)  # spawned processes begin all at once
+            self._processes = [child for child in active_children() if child not in others]
+            return future
         except OSError as fault:
             raise CrewGone(str(fault)) from fault
 
@@ -124,10 +135,15 @@ class LocalProcesses(Closing):
         self.close()
 
     def close(self) -> None:
-        """Let the processes end."""
+        """Let the processes end; those that are busy with what nobody waits for any more are ended."""
         executor, self._executor = self._executor, None
         if executor is not None:
-            executor.shutdown(wait=True, cancel_futures=True)
+            executor.shutdown(wait=False, cancel_futures=True)
+            end = time.monotonic() + GRACE_S
+            for process in self._processes:
+                process.join(max(end - time.monotonic(), 0.0))
+                process.terminate()
+            executor.shutdown(wait=True)
 
 
 def cores() -> int:

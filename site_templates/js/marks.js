@@ -101,7 +101,7 @@ window.campaign = window.campaign || {};
   function buildChooser() {
     modules = known();
     if (modules.size < 2) return;
-    const line = document.createElement("p");
+    const line = document.querySelector("main > h1 + .chooser") || document.createElement("p");
     line.className = "chooser";
     moduleList = list("Mark a module", () => campaign.choose(moduleList.value, ""));
     sensorList = list("Mark a sensor", () => campaign.choose(chosen.module, sensorList.value));

@@ -5,13 +5,18 @@ from __future__ import annotations
 from dataclasses import replace
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from campaign.analyses import shared_fits
+from campaign.analyses.hold_figures import fit_stretches
 from campaign.analyses.shared_fits import FitTask, fit_all, fit_task
+from campaign.analyses.shared_work import do_all
 from campaign.analyses.variance_fit import PLACES, GenerationFit
 from campaign.keeping.store import open_store
 from campaign.keeping.value_codec import encode
+from campaign.methods.block_noise import Stretches
+from campaign.methods.creep import bare_fits, fit_creep, fits_from_bare
 from campaign.methods.nested_model import conditional_residuals
 from campaign.workers.crew import LocalProcesses
 from campaign.workers.workshop import Workshop
@@ -53,3 +58,20 @@ def test_what_cannot_be_fitted_is_a_sentence(tasks: list[FitTask]) -> None:
     (outcome,) = fit_task(replace(tasks[0], model=few))
     assert isinstance(outcome, str)
     assert outcome
+
+
+def test_kept_fits_of_holds_are_those_that_were_made(tmp_path: Path) -> None:
+    generator = np.random.default_rng(3)
+    starts = np.geomspace(1.0, 3000.0, 40)
+    stretches = Stretches(starts, starts * 1.15, np.full(40, 20))
+    task = (stretches, 5.0 + 0.3 * np.log1p(starts / 5.0) + 0.01 * generator.standard_normal(40))
+    direct = bare_fits(fit_creep(*task))
+    found = []
+    for _ in range(2):
+        with open_store(tmp_path / "results.sqlite") as store:
+            found += do_all(fit_stretches, [task], Workshop(store=store), lambda _: False)
+    assert [encode(one) for one in found] == [encode(direct)] * 2
+    again = fits_from_bare(found[1])
+    assert again is not None
+    assert again.best.name == "logarithmic"
+    assert fits_from_bare(bare_fits(None)) is None

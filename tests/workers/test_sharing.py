@@ -186,6 +186,16 @@ def test_workers_end_when_their_parent_is_killed(tmp_path: Path) -> None:
     wait_until(lambda: not is_running(worker))
 
 
+def test_a_crew_that_is_sent_home_does_not_finish_what_nobody_waits_for(tmp_path: Path) -> None:
+    crew = LocalProcesses(1)
+    crew.submit(sleep_long, tmp_path / "worker")
+    wait_until(lambda: (tmp_path / "worker").exists() and bool((tmp_path / "worker").read_text()))
+    begun = time.monotonic()
+    crew.close()
+    assert time.monotonic() - begun < 30.0, "the task takes a minute"
+    wait_until(lambda: not is_running(int((tmp_path / "worker").read_text())))
+
+
 def is_running(process: int) -> bool:
     """Whether a process still runs; one that ended and that nobody asks for any more does not."""
     try:
