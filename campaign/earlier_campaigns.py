@@ -30,7 +30,7 @@ from campaign.analyses.variance_fit import GenerationFit
 from campaign.archive import campaign_in, unpack_archive
 from campaign.campaign_reading import CampaignRead, calibrate, read_campaign, silent
 from campaign.notices import CampaignStops, Notice
-from campaign.recordings.description import DESCRIPTION_FILE
+from campaign.recordings.description import DESCRIPTION_FILE, Description
 from campaign.recordings.shared_reading import Progress
 from campaign.trials.cyclic import CyclicFeatures
 from campaign.trials.hold import HoldFeatures
@@ -92,6 +92,12 @@ def _not_followed(where: str) -> Notice:
     remedy = "name them in this campaign's description as well"
     code = "earlier-not-followed"
     return Notice(code, "noted", DESCRIPTION_FILE, None, None, what, "they are not followed", remedy)
+
+
+def places_of_earlier(folder: Path, description: Description) -> list[Path]:
+    """Return where the earlier campaigns that *description* names lie, those within *folder* left out."""
+    places = [(folder / (one.get("archive") or one["folder"])).resolve() for one in description.earlier]
+    return [place for place in places if not place.is_relative_to(folder.resolve())]
 
 
 @contextmanager

@@ -36,7 +36,7 @@ from campaign.analyses.results import CampaignResults
 from campaign.analyses.scope import describe_scope
 from campaign.analyses.variance import analyse_variance
 from campaign.campaign_reading import CampaignRead, calibrate, read_campaign, silent
-from campaign.earlier_campaigns import NOT_JOINED, read_earlier
+from campaign.earlier_campaigns import NOT_JOINED, places_of_earlier, read_earlier
 from campaign.keeping.kept_site import MadeSite, SiteKeeper
 from campaign.notices import Notice, sort_notices
 from campaign.pages.brief import brief_bytes, check_brief_place, write_brief
@@ -100,7 +100,7 @@ def report(
         results, files = make_site(folder, site, progress, workshop)
         said = print_lines(_what_was_read(results.intake, results.notices))
         made = MadeSite(files, said, _anything_set_aside(results))
-        keeper.keep(made, results.intake.file_hashes)
+        keeper.keep(made, results.intake.file_hashes, places_of_earlier(folder, results.description))
     write_folder(made.files, site)
     sys.stdout.write(made.said)
     print(f"\n{len(made.files)} files written; open {site / 'index.html'}")

@@ -1,6 +1,7 @@
 """A whole site from one run to the next: where nothing of a campaign changed, it is written as it was.
 
-What a site is made of is the content of every file of the campaign folder and the program. Both are compared
+What a site is made of is the content of every file of the campaign folder and of the earlier campaigns that it
+names, wherever they lie, and the program. All are compared
 by hashes of the bytes, never by times; times only tell early that comparing them is not worth while.
 """
 
@@ -9,6 +10,7 @@ from __future__ import annotations
 import hashlib
 import os
 import stat
+import time
 import zlib
 from collections.abc import Iterable, Mapping, Sequence
 from concurrent.futures import ThreadPoolExecutor
@@ -21,6 +23,12 @@ from campaign.keeping.store import Store
 
 PAGE_LIBRARIES = ("jinja2", "latex2mathml", "markdown", "markupsafe", "nh3", "orjson", "plotly")
 """Libraries whose version may change a page."""
+
+_ELSEWHERE = "\0"
+"""What names of entries outside the campaign folder begin with: no name of a file holds it."""
+
+_CLOCK_NS = 2_000_000_000
+"""Nanoseconds by which times of files may lag behind the clock: coarse file systems keep even seconds."""
 
 _QUICK = 1
 """Level of compression: pages shrink to a sixth at little cost."""
@@ -77,19 +85,22 @@ class SiteKeeper:
         self._folder = folder
         self._apart = tuple(p for p in _beside(site.resolve()) if p.is_relative_to(folder.resolve()))
         self._templates = templates
+        self._elsewhere: tuple[Path, ...] = ()
         self._before: dict[str, Entry] | None = None
+        self._began_ns = time.time_ns()
 
     def find(self) -> MadeSite | None:
         """Return the site that an earlier run made of the very same content, or ``None``."""
         if not self._store.is_open:
             return None
+        self._elsewhere = _paths(self._store.get(self._key("elsewhere")))
         self._before = self._listing()
         known = self._store.get(self._key("content"))
         if self._before is None or not isinstance(known, dict) or not self._is_unchanged(known):
             return None
         return _unpacked(self._store.get(self._key("site")), _digest_of_content(known))
 
-    def keep(self, made: MadeSite, hashes: Mapping[str, str]) -> None:
+    def keep(self, made: MadeSite, hashes: Mapping[str, str], elsewhere: Sequence[Path] = ()) -> None:
         """Keep a site for the next run; not where the folder changed while it was made.
 
         Parameters
@@ -98,7 +109,14 @@ class SiteKeeper:
             The site.
         hashes
             SHA-256 of what was read of the recordings, by path from the campaign folder.
+        elsewhere
+            Folders and files besides the campaign folder that the site was made from: earlier campaigns.
         """
+        if self._before is None:
+            return
+        if tuple(elsewhere) != self._elsewhere:
+            self._elsewhere = tuple(elsewhere)
+            self._before = self._with_elsewhere(self._before)
         if self._before is None or self._listing() != self._before:
             return
         try:
@@ -110,6 +128,7 @@ class SiteKeeper:
             return
         packed = {name: zlib.compress(data, _QUICK) for name, data in made.files.items()}
         said = [_digest_of_content(content), packed, made.said, made.set_aside]
+        self._store.put(self._key("elsewhere"), [os.fspath(path) for path in self._elsewhere])
         if self._store.put(self._key("site"), said):
             self._store.put(self._key("content"), content)
 
@@ -118,11 +137,27 @@ class SiteKeeper:
         parts += [os.fsencode(path) for path in (self._folder.resolve(), *self._apart)]
         return digest_of([*parts, *_folder_parts(self._templates)])
 
+    def _with_elsewhere(self, before: Mapping[str, Entry]) -> dict[str, Entry] | None:
+        """Add what lies elsewhere, listed only now: ``None`` where any of it changed since the run began."""
+        listed = self._listing() or {}
+        further = {name: entry for name, entry in listed.items() if name.startswith(_ELSEWHERE)}
+        late = any(entry.modified_ns >= self._began_ns - _CLOCK_NS for entry in further.values())
+        inside = {name: entry for name, entry in before.items() if not name.startswith(_ELSEWHERE)}
+        return None if late or not listed else dict(sorted((inside | further).items()))
+
+    def _places(self) -> list[tuple[Path, str]]:
+        """Folders whose entries count, and what their names begin with."""
+        numbered = [(path, f"{_ELSEWHERE}{i}/") for i, path in enumerate(self._elsewhere)]
+        return [(self._folder, ""), *numbered]
+
     def _listing(self) -> dict[str, Entry] | None:
-        """Every entry below the folder by its path, sorted; ``None`` where one cannot be told."""
+        """Every entry below the folders by its path, sorted; ``None`` where one cannot be told."""
         found: dict[str, Entry] = {}
-        waiting = [(self._folder, "")]
+        waiting = [(place, prefix) for place, prefix in self._places() if place.is_dir()]
         try:
+            for place, prefix in self._places():
+                if not place.is_dir():
+                    found[prefix] = _entry_of(place.lstat())
             while waiting:
                 place, prefix = waiting.pop()
                 with os.scandir(place) as entries:
@@ -164,16 +199,31 @@ class SiteKeeper:
             return entry.target
         if name.isascii() and name.isprintable() and name in hashes:
             return hashes[name]
-        return hashlib.sha256((self._folder / name).read_bytes()).hexdigest()
+        return hashlib.sha256(self._path(name).read_bytes()).hexdigest()
+
+    def _path(self, name: str) -> Path:
+        """Where the entry of this name lies."""
+        if not name.startswith(_ELSEWHERE):
+            return self._folder / name
+        number, _, rest = name.removeprefix(_ELSEWHERE).partition("/")
+        return self._elsewhere[int(number)] / rest
 
 
 def _entry(found: os.DirEntry[str]) -> Entry:
     status = found.stat(follow_symlinks=False)
-    if stat.S_ISREG(status.st_mode):
-        return Entry("file", status.st_size, status.st_mtime_ns)
     if stat.S_ISLNK(status.st_mode):
         return Entry("link", target=os.readlink(found.path))
+    return _entry_of(status)
+
+
+def _entry_of(status: os.stat_result) -> Entry:
+    if stat.S_ISREG(status.st_mode):
+        return Entry("file", status.st_size, status.st_mtime_ns)
     return Entry("folder" if stat.S_ISDIR(status.st_mode) else "other")
+
+
+def _paths(kept: object) -> tuple[Path, ...]:
+    return tuple(Path(str(path)) for path in kept) if isinstance(kept, list) else ()
 
 
 def _beside(site: Path) -> tuple[Path, ...]:

@@ -89,6 +89,46 @@ def test_a_folder_that_changed_meanwhile_is_not_kept(store: Store, places: tuple
     assert SiteKeeper(store, *places).find() is None
 
 
+EARLIER_CHANGES: dict[str, Callable[[Path], object]] = {
+    "a recording of it, of the same size": lambda earlier: (earlier / "a.csv").write_text("3,1\n"),
+    "one file more of it": lambda earlier: (earlier / "b.csv").write_text(""),
+    "it is gone": lambda earlier: earlier.rename(earlier.with_name("elsewhere")),
+}
+
+
+def keep_with_earlier(store: Store, places: tuple[Path, Path, Path], earlier: Path) -> None:
+    """Keep a site that was also made from what lies outside its campaign folder."""
+    earlier.mkdir()
+    (earlier / "a.csv").write_text("1,2\n")
+    os.utime(earlier / "a.csv", ns=(5, 5))
+    keeper = SiteKeeper(store, *places)
+    assert keeper.find() is None
+    keeper.keep(MADE, {}, [earlier])
+
+
+@pytest.mark.parametrize("change", EARLIER_CHANGES)
+def test_what_lies_elsewhere_counts_as_well(
+    change: str, store: Store, places: tuple[Path, Path, Path], tmp_path: Path
+) -> None:
+    earlier = tmp_path / "first_process"
+    keep_with_earlier(store, places, earlier)
+    assert SiteKeeper(store, *places).find() == MADE
+    EARLIER_CHANGES[change](earlier)
+    assert SiteKeeper(store, *places).find() is None
+
+
+def test_what_changed_elsewhere_meanwhile_is_not_kept(
+    store: Store, places: tuple[Path, Path, Path], tmp_path: Path
+) -> None:
+    archive = tmp_path / "first_process.zip"
+    archive.write_bytes(b"sealed")
+    keeper = SiteKeeper(store, *places)
+    assert keeper.find() is None
+    archive.write_bytes(b"sealed again")
+    keeper.keep(MADE, {}, [archive])
+    assert SiteKeeper(store, *places).find() is None
+
+
 def test_hashes_of_what_was_read_are_believed(store: Store, places: tuple[Path, Path, Path]) -> None:
     keeper = SiteKeeper(store, *places)
     keeper.find()
