@@ -181,6 +181,7 @@ NOTICE_CODES: dict[str, str] = {
     "repetition-assumed": "recordings number no repetition; 1 is taken",
     "generation-assumed": "no generation is named anywhere; all modules are 'generation 1'",
     "generation-missing": "a trial has no generation though others have one",
+    "text-refused": "a text that tables show beside ids begins like a formula or holds unseen characters",
     "id-refused": "an id begins with a sign that spreadsheets take for a formula, or holds unseen characters",
     "id-unusual": "an id is very long or looks like a path; it is kept as text",
     "id-twins": "two ids look alike (upper and lower case, composed letters); they are kept apart",
@@ -247,7 +248,7 @@ NOTICE_CODES: dict[str, str] = {
     "one-length": "an influence was swept at one known length: its change with strain is not identifiable",
     "spread-not-fitted": "the spread of an influence over modules and sensors cannot be fitted",
     # Earlier campaigns and comparison
-    "earlier-not-joined": "an earlier campaign cannot be read, or is this one: the comparison goes without it",
+    "earlier-not-joined": "an earlier campaign cannot be read, or is this one: the comparison leaves it out",
     "earlier-not-followed": "an earlier campaign names earlier ones of its own; they are not followed",
     "earlier-renamed": "two campaigns have a generation of one name; the earlier one carries its title",
     "earlier-rescaled": "figures of an earlier campaign in %FSO refer to this campaign's full scale",

@@ -27,6 +27,7 @@ from campaign.analyses.budget_model import (
 )
 from campaign.methods.uncertainty_budget import BudgetLine
 from campaign.pages import slugs
+from campaign.pages.page_data import script_value
 
 DIGITS = 7
 """Significant digits of a coefficient."""
@@ -61,7 +62,7 @@ def budget_scripts(budget: Budget | None) -> dict[str, bytes]:
     start = b"(window.campaignBudgets = window.campaignBudgets || {})["
     made = {}
     for module, subjects in modules.items():
-        content = orjson.dumps({subject.sensor: _subject(subject) for subject in subjects})
+        content = script_value({subject.sensor: _subject(subject) for subject in subjects})
         address = script_address(module)
         made[address] = start + orjson.dumps(address) + b"] = " + content + b";\n"
     return made

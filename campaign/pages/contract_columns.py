@@ -57,7 +57,7 @@ CONTRACT_COLUMNS: dict[str, tuple[str, ...]] = {
 """Columns of each promised table, in order."""
 
 _MEANINGS: dict[str, str] = {
-    "file": "path from the campaign folder",
+    "file": "path from the campaign folder (./ before one that begins like a formula)",
     "sha256": "SHA-256 of the file's bytes, hexadecimal",
     "bytes": "size of the file",
     "kind": "what the run was",

@@ -86,8 +86,8 @@ def axis(
 ) -> Layout:
     """Return an axis: title with its unit, limits in data values, ticks as (value, text) where given.
 
-    Without limits the axis is fitted to the data. *more* goes into the axis as it is (``domain``,
-    ``anchor``).
+    A line feed in a tick's text begins another line. Without limits the axis is fitted to the data. *more*
+    goes into the axis as it is (``domain``, ``anchor``).
     """
     words = f"{title} / {unit}" if unit else title
     made: Layout = {"title": {"text": words}, "showgrid": grid, **more}
@@ -97,7 +97,8 @@ def axis(
         ends = [math.log10(low), math.log10(high)] if logarithmic else [float(low), float(high)]
         made["range"] = ends[::-1] if reverse else ends
     if ticks:
-        made |= {"tickmode": "array", "tickvals": [v for v, _ in ticks], "ticktext": [t for _, t in ticks]}
+        texts = [plain(text).replace("\n", "<br>") for _, text in ticks]
+        made |= {"tickmode": "array", "tickvals": [v for v, _ in ticks], "ticktext": texts}
     return made
 
 

@@ -178,7 +178,7 @@ def _rows_figure(
 
 def _broken(text: str) -> str:
     """A label in two lines: the figure, then the pair."""
-    return text.replace(", ", "<br>", 1) if "→" in text else text
+    return text.replace(", ", "\n", 1) if "→" in text else text
 
 
 def _bands(rows: pd.DataFrame, heights: list[float], factor: float, ratio: bool) -> Iterator[Trace]:

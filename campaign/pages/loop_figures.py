@@ -14,6 +14,7 @@ from campaign.analyses.hysteresis import Hysteresis, SensorCurve
 from campaign.pages import numbers, palette, slugs
 from campaign.pages.drawing import ready
 from campaign.pages.figures import Figure, Trace, axis, layout, line, plain
+from campaign.pages.page_data import script_value
 from campaign.recordings.recording import ReferenceQuantity
 
 MOST_RUNS = 3
@@ -224,7 +225,7 @@ def loop_scripts(hysteresis: Hysteresis | None) -> dict[str, bytes]:
             "cycles": sorted({t["meta"]["cycle"] for t in drawn.traces}),
         }
         key = orjson.dumps(loop_script_address(module, sensor))
-        packed = orjson.dumps(content, option=orjson.OPT_SERIALIZE_NUMPY | orjson.OPT_SORT_KEYS)
+        packed = script_value(content)
         made[loop_script_address(module, sensor)] = (
             b"(window.campaignLoops = window.campaignLoops || {})[" + key + b"] = " + packed + b";\n"
         )

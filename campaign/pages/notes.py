@@ -20,6 +20,7 @@ from markupsafe import Markup
 
 from campaign.notices import Notice
 from campaign.pages import slugs
+from campaign.pages.legible import legible
 from campaign.pages.page import Page
 
 FOLDER = "notes"
@@ -166,6 +167,7 @@ class _Note:
 
     def page(self) -> Page:
         text = self.files[self.name].decode("utf-8-sig", errors="replace").replace("\r\n", "\n")
+        text = legible(text)
         title, body = _title_and_body(text, PurePosixPath(self.name).stem)
         made = Markdown(extensions=["tables", "fenced_code", "sane_lists", "footnotes"], output_format="html")
         cleaned = nh3.clean(

@@ -19,6 +19,7 @@ import orjson
 
 from campaign.pages.figures import Figure, Layout, Trace
 from campaign.pages.house_style import NOTE_DEFAULTS
+from campaign.pages.legible import legible_json
 from campaign.pages.page import Page
 from campaign.pages.tables import Cell
 
@@ -27,6 +28,7 @@ GAP = "\ue000"
 BETWEEN = "|"
 """Stands between the words of one gap."""
 
+_PROTO, _PROTO_AS_KEY = b'"__proto__":', b'["__proto__"]:'
 _HEAD, _TAIL = b"window.campaignPage = ", b";\n"
 _OWN_OF_TRACE = frozenset(
     {"x", "y", "name", "meta", "hovertext", "customdata", "text", "error_x", "error_y", "base"}
@@ -138,6 +140,27 @@ def data_script(
     further_rows
         Rows of its tables that the page itself does not hold, as :func:`folded_row` makes them.
     """
+    content = {
+        "slug": page.slug,
+        **folded_figures(figures),
+        "rows": further_rows or {},
+        "values": dict(page.data),
+    }
+    return _HEAD + script_value(content) + _TAIL
+
+
+def script_value(value: Any) -> bytes:
+    """Return *value* as a classic script states it: JSON with legible texts.
+
+    A key ``"__proto__"`` stands in brackets: in a script, unlike in JSON, the bare one would set what the
+    object inherits from, and a module may be called so.
+    """
+    content = orjson.dumps(value, option=orjson.OPT_SERIALIZE_NUMPY | orjson.OPT_SORT_KEYS)
+    return legible_json(content).replace(_PROTO, _PROTO_AS_KEY)
+
+
+def folded_figures(figures: Mapping[str, Figure]) -> dict[str, Any]:
+    """Return ``figures``, ``shared`` and ``texts`` of figures that are ready to be drawn, by their names."""
     fold = Fold()
     drawn = {
         name: {
@@ -147,15 +170,7 @@ def data_script(
         }
         for name, figure in figures.items()
     }
-    content = {
-        "slug": page.slug,
-        "figures": drawn,
-        "shared": fold.shared,
-        "texts": fold.texts,
-        "rows": further_rows or {},
-        "values": dict(page.data),
-    }
-    return _HEAD + orjson.dumps(content, option=orjson.OPT_SERIALIZE_NUMPY | orjson.OPT_SORT_KEYS) + _TAIL
+    return {"figures": drawn, "shared": fold.shared, "texts": fold.texts}
 
 
 def folded_row(marks: tuple[str, str], cells: Sequence[Cell]) -> list[Any]:
@@ -179,7 +194,7 @@ def unfolded(script: bytes) -> dict[str, Any]:
     """
     if not (script.startswith(_HEAD) and script.endswith(_TAIL)):
         raise ValueError("not a data script")
-    page: dict[str, Any] = json.loads(script[len(_HEAD) : -len(_TAIL)])
+    page: dict[str, Any] = json.loads(script[len(_HEAD) : -len(_TAIL)].replace(_PROTO_AS_KEY, _PROTO))
     for figure in page["figures"].values():
         figure["traces"] = [_unfolded_trace(trace, page) for trace in figure["traces"]]
         layout: dict[str, Any] = {

@@ -14,6 +14,7 @@ from pathlib import Path
 
 from campaign.pages import palette
 from campaign.pages.figures import Figure
+from campaign.pages.legible import legible
 from campaign.pages.print_layout import laid_for_print
 from campaign.pages.static_figure import drawn_content
 from campaign.pages.static_strokes import TENTHS
@@ -82,7 +83,7 @@ def _on_white(content: str) -> str:
 
 
 def _plain(text: str) -> str:
-    return text.replace("&", "&amp;").replace("<", "&lt;").replace(">", "&gt;")
+    return legible(text).replace("&", "&amp;").replace("<", "&lt;").replace(">", "&gt;")
 
 
 def _with_density(png: bytes) -> bytes:

@@ -22,6 +22,7 @@ from campaign.pages.assets import asset_files
 from campaign.pages.definitions import defined_in, definitions_of
 from campaign.pages.drawing import marked, ready
 from campaign.pages.figures import Figure
+from campaign.pages.legible import legible_value
 from campaign.pages.page import REHEARSED, Page, SiteFrame
 from campaign.pages.page_data import data_script, folded_row
 from campaign.pages.static_figure import static_svg
@@ -79,6 +80,7 @@ def environment(further: Sequence[Path] = ()) -> Environment:
     made = Environment(
         loader=FileSystemLoader([templates_folder(), *further]),
         autoescape=True,
+        finalize=legible_value,
         undefined=StrictUndefined,
         trim_blocks=True,
         lstrip_blocks=True,

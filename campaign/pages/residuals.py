@@ -26,7 +26,7 @@ from campaign.pages.figures import (
     points,
 )
 from campaign.pages.page import Page
-from campaign.pages.page_data import Fold
+from campaign.pages.page_data import Fold, script_value
 from campaign.pages.sensor_axis import SensorAxis, sensor_axis
 from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import ReferenceQuantity
@@ -108,7 +108,7 @@ def residual_files(results: CampaignResults) -> dict[str, bytes]:
         by_order = _marks(own, "order", where, reference)
         fold = Fold()
         traces = [fold.trace(_rounded(trace)) for trace in by_level]
-        content = orjson.dumps(
+        content = script_value(
             {
                 "traces": traces,
                 "shared": fold.shared,
@@ -119,7 +119,7 @@ def residual_files(results: CampaignResults) -> dict[str, bytes]:
                 },
             }
         )
-        name = orjson.dumps(str(module))
+        name = orjson.dumps(module_file(str(module)))
         start = b"(window.campaignResiduals = window.campaignResiduals || {})["
         files[module_file(str(module))] = start + name + b"] = " + content + b";\n"
     return files

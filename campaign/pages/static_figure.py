@@ -21,6 +21,7 @@ import numpy as np
 from campaign.pages import palette
 from campaign.pages.drawing import axis_names, axis_of
 from campaign.pages.figures import WIDTH, Figure, Layout, Trace
+from campaign.pages.legible import legible
 from campaign.pages.static_strokes import (
     CAPS,
     STROKES,
@@ -493,4 +494,4 @@ def _seen(*places: float) -> bool:
 
 
 def _escaped(text: str) -> str:
-    return html.escape(text, quote=True)
+    return html.escape(legible(text), quote=True)

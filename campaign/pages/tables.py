@@ -21,6 +21,7 @@ import pandas as pd
 
 from campaign.pages import numbers
 from campaign.pages.contract_columns import CONTRACT_COLUMNS, describe_column, unit_of_column
+from campaign.recordings.intake_tables import spelled_paths
 from campaign.recordings.recording import ReferenceQuantity
 
 Kind = Literal["number", "integer", "percent", "probability", "text", "code"]
@@ -169,7 +170,7 @@ def exported_frame(frame: pd.DataFrame, name: str = "") -> pd.DataFrame:
     if missing:
         raise KeyError(f"table {name} lacks {', '.join(missing)}")
     further = [c for c in frame.columns if c not in contract and not str(c).startswith("_")]
-    exported = frame[[*contract, *further]].copy()
+    exported = spelled_paths(frame[[*contract, *further]].copy())
     for column in exported.columns:
         if exported[column].dtype == bool:
             exported[column] = exported[column].map({True: "true", False: "false"})

@@ -11,6 +11,7 @@ from dataclasses import dataclass
 
 from campaign.notices import Notice
 from campaign.pages.citation import citation_day
+from campaign.pages.legible import legible
 from campaign.provenance.licences import Licence, find_licence
 from campaign.recordings.description import DESCRIPTION_FILE, Author, Description
 
@@ -68,17 +69,17 @@ def gather_metadata(description: Description, summary: str, last_day: str = "") 
     day = citation_day(description, last_day)
     licence = find_licence(description.licence)
     authors = tuple(
-        Author(author.name, author.affiliation, orcid_address(author.orcid) or "")
+        Author(legible(author.name), legible(author.affiliation), orcid_address(author.orcid) or "")
         for author in description.authors
         if author.name
     )
     return ArchiveMetadata(
-        title=description.title,
-        summary=description.description or summary,
+        title=legible(description.title),
+        summary=legible(description.description or summary),
         day=day or STAND_IN_DAY,
         day_is_known=bool(day),
         licence=licence,
-        licence_text=description.licence,
+        licence_text=legible(description.licence),
         authors=authors,
         invented=description.simulated,
         notices=tuple(_gaps(description, bool(day), licence)),

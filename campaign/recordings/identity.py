@@ -170,6 +170,7 @@ def identify(recording: Recording, rules: NamingRules) -> Identification:
     notices += _check_row(file, row, rules)
     notices += _translate(file, values, sources, rules)
     notices += _check_ids(file, values, sources)
+    notices += _leave_out_refused_texts(file, values, sources)
     notices += _add_module(file, values, sources, rules)
     notices += _check_needed(file, values, name, rules)
     set_points = {key: name.values[key] for key in SET_POINTS if key in name.values}
@@ -284,6 +285,18 @@ def _check_ids(file: str, values: Mapping[str, str], sources: Mapping[str, str])
         for key in ID_COLUMNS
         if key in values and (notice := refused_id(file, key, values[key], sources[key])) is not None
     ]
+
+
+def _leave_out_refused_texts(file: str, values: dict[str, str], sources: Mapping[str, str]) -> list[Notice]:
+    """Leave out, in place, what is carried into tables beside the ids though no id could be like it."""
+    reasons = {key: refusal_of_id(values[key]) for key in CARRIED_KEYS if key in values}
+    notices = []
+    for key, reason in reasons.items():
+        if reason is not None:
+            what = f"the {key} '{shown(values.pop(key))}' ({sources[key]}) {reason}"
+            remedy = "write it otherwise"
+            notices.append(Notice("text-refused", "noted", file, None, None, what, "left out", remedy))
+    return notices
 
 
 def refused_id(file: str, key: str, value: str, source: str) -> Notice | None:

@@ -9,9 +9,12 @@ import textwrap
 from collections.abc import Iterable, Iterator, Sequence
 from pathlib import Path
 
+import pandas as pd
+
 from campaign.notices import CampaignStops, Notice, Weight
 from campaign.recordings.intake import Intake
-from campaign.recordings.intake_tables import notices_table
+from campaign.recordings.intake_tables import notices_table, spelled_paths
+from campaign.recordings.register import shown
 
 TABLE_NAMES = ("recordings", "trials", "notices")
 """Tables that :func:`write_tables` writes, as NAME.csv."""
@@ -141,9 +144,9 @@ def write_tables(intake: Intake, folder: Path) -> None:
     """
     check_tables_folder(folder)
     texts = {
-        "recordings": intake.recordings.to_csv(index=False, lineterminator="\n"),
-        "trials": intake.trials.to_csv(index=False, lineterminator="\n"),
-        "notices": notices_table(intake.notices).to_csv(index=False, lineterminator="\n"),
+        "recordings": _csv(intake.recordings),
+        "trials": _csv(intake.trials),
+        "notices": _csv(notices_table(intake.notices)),
     }
     target = folder.resolve()
     target.parent.mkdir(parents=True, exist_ok=True)
@@ -153,6 +156,10 @@ def write_tables(intake: Intake, folder: Path) -> None:
         for name, text in texts.items():
             (fresh / f"{name}.csv").write_text(text, encoding="utf-8", newline="\n")
         _swap(fresh, target, Path(aside) / "old")
+
+
+def _csv(table: pd.DataFrame) -> str:
+    return spelled_paths(table).to_csv(index=False, lineterminator="\n")
 
 
 def _swap(fresh: Path, target: Path, old: Path) -> None:
@@ -167,5 +174,5 @@ def _swap(fresh: Path, target: Path, old: Path) -> None:
 
 
 def print_lines(lines: Iterable[str]) -> str:
-    """Join lines into the text of a terminal, each ended by a line feed."""
-    return "".join(f"{line}\n" for line in lines)
+    """Join lines into the text of a terminal, each ended by a line feed; the unseen is spelled out."""
+    return "".join(f"{shown(line)}\n" for line in lines)

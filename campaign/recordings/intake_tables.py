@@ -11,7 +11,14 @@ from campaign.notices import Notice
 from campaign.recordings.checks import ReadFile
 from campaign.recordings.folder import LARGEST_RECORDING_BYTES, Survey, SurveyedFile
 from campaign.recordings.recording import TrialIdentity
-from campaign.recordings.register import KNOWN_COLUMNS, Register, rest_length_mm
+from campaign.recordings.register import (
+    ID_COLUMNS,
+    KNOWN_COLUMNS,
+    Register,
+    path_in_tables,
+    refusal_of_id,
+    rest_length_mm,
+)
 from campaign.recordings.sensor_share import TrialKey, key_of_trial
 from campaign.units import UnitError
 
@@ -65,12 +72,27 @@ def _hash(file: SurveyedFile) -> str:
 
 
 def trials_table(identities: dict[TrialKey, TrialIdentity], used: frozenset[TrialKey]) -> pd.DataFrame:
-    """Return one row a trial with its identity and its fate, ``used`` or ``set aside``."""
+    """Return one row a trial with its identity (no refused id) and its fate, ``used`` or ``set aside``."""
     rows = [
-        (*(getattr(trial, name) for name in TRIAL_COLUMNS[:-1]), "used" if key in used else "set aside")
+        (*(_as_id(name, getattr(trial, name)) for name in TRIAL_COLUMNS[:-1]), _fate(key in used))
         for key, trial in identities.items()
     ]
     return pd.DataFrame(rows, columns=list(TRIAL_COLUMNS))
+
+
+def _as_id(column: str, value: object) -> object:
+    return "" if column in ID_COLUMNS and refusal_of_id(str(value)) is not None else value
+
+
+def _fate(used: bool) -> str:
+    return "used" if used else "set aside"
+
+
+def spelled_paths(table: pd.DataFrame) -> pd.DataFrame:
+    """Return a table to be written, its files spelled so that no spreadsheet runs one as a formula."""
+    if "file" not in table:
+        return table
+    return table.assign(file=[path_in_tables(path) if path else path for path in table["file"].tolist()])
 
 
 def notices_table(notices: Iterable[Notice]) -> pd.DataFrame:

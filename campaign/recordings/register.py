@@ -76,6 +76,9 @@ KNOWN_COLUMNS: dict[str, tuple[str, ...]] = {
 ID_COLUMNS = ("module", "sensor", "session", "generation", "batch")
 """Columns that hold ids."""
 
+TEXT_COLUMNS = ("position", "from", "to", "started", "channel")
+"""Columns that hold no ids but stand in tables beside them: a text that an id could not be is left out."""
+
 LONG_ID = 64
 """Characters above which an id is noted as long."""
 
@@ -114,6 +117,11 @@ def refusal_of_id(text: str) -> str | None:
     if not all(_is_visible(c) for c in text):
         return "holds characters that cannot be seen (controls or direction marks)"
     return None
+
+
+def path_in_tables(path: str) -> str:
+    """Return a path as tables spell it: ``./`` before one that spreadsheets would take for a formula."""
+    return f"./{path}" if path.startswith(_FORMULA_SIGNS) else path
 
 
 def remark_on_id(text: str) -> str | None:
@@ -402,6 +410,8 @@ def _check_keys(
             refused[key] = what
             notices.append(_notice("id-refused", "set aside", file, row.line, what, "give it another id"))
             continue
+        row, remarks = _without_refused_texts(file, row)
+        notices += remarks
         by_key[key].append(row)
     kept = []
     for key, group in by_key.items():
@@ -412,6 +422,24 @@ def _check_keys(
         if len(group) > 1:
             notices.append(_twice(file, key, group, key in refused))
     return kept, refused, notices
+
+
+def _without_refused_texts(file: str, row: RegisterRow) -> tuple[RegisterRow, list[Notice]]:
+    """Leave out texts that tables would show beside ids though no id could be like them."""
+    refused = {c: r for c in TEXT_COLUMNS if row.get(c) and (r := refusal_of_id(row.get(c))) is not None}
+    notices = [
+        _notice(
+            "text-refused",
+            "noted",
+            file,
+            row.line,
+            f"the {column} '{shown(row.get(column))}' {reason}",
+            "write it otherwise",
+            "left out",
+        )
+        for column, reason in refused.items()
+    ]
+    return RegisterRow(row.line, row.values | dict.fromkeys(refused, "")), notices
 
 
 def _twice(file: str, key: tuple[str, ...], group: Sequence[RegisterRow], differ: bool) -> Notice:
@@ -435,7 +463,7 @@ def _check_numbers(name: str, rows: Iterable[RegisterRow]) -> list[Notice]:
             try:
                 rest_length_mm(row, column)
             except UnitError as fault:
-                what = f"{column} of {row.get('module')} {row.get('sensor')}: {fault}"
+                what = shown(f"{column} of {row.get('module')} {row.get('sensor')}: {fault}")
                 done, remedy = "taken as unknown; none is invented", "write the unstretched length in mm"
                 notices.append(
                     _notice("rest-length-unreadable", "noted", f"{name}.csv", row.line, what, remedy, done)

@@ -10,7 +10,7 @@ import numpy as np
 from campaign.notices import Notice
 from campaign.recordings.identity import Identification, NamingRules, fate_of_sensor, refused_id
 from campaign.recordings.recording import Channel, FloatArray, Recording, Trial, TrialIdentity
-from campaign.recordings.register import RegisterRow, rest_length_mm, shown, tidy_id
+from campaign.recordings.register import RegisterRow, refusal_of_id, rest_length_mm, shown, tidy_id
 from campaign.units import UnitError, parse_quantity
 
 TrialKey = tuple[str, str, int]
@@ -78,7 +78,7 @@ def trials_of_recording(recording: Recording, identification: Identification, ru
     signals = [channel for channel in recording.channels if channel.quantity == "signal"]
     if not signals:
         return Shares((), {}, (_aside(recording.file, "no-signal", "no column is a signal"),))
-    notices: list[Notice] = []
+    notices = _check_nodes(recording)
     trials: list[Trial] = []
     refused: dict[TrialKey, tuple[str, ...]] = {}
     for signal in signals:
@@ -95,6 +95,26 @@ def trials_of_recording(recording: Recording, identification: Identification, ru
     notices += _check_set_points(identification, trials, refused)
     assumed = "repetition" not in identification.values and any(s.repetition is None for s in signals)
     return Shares(tuple(trials), refused, tuple(dict.fromkeys(notices)), assumed)
+
+
+def _check_nodes(recording: Recording) -> list[Notice]:
+    """Name nodes that headers call by what no id may be: their positions are not read."""
+    nodes = {c.node: c.position for c in recording.channels if c.node is not None}
+    reasons = {node: refusal_of_id(node) for node in nodes}
+    return [
+        Notice(
+            "text-refused",
+            "noted",
+            recording.file,
+            None,
+            nodes[node],
+            f"the node '{shown(node)}' {reason}",
+            "its positions are not read",
+            "give it another name",
+        )
+        for node, reason in reasons.items()
+        if reason is not None
+    ]
 
 
 def _aside(file: str, code: str, what: str, remedy: str = "", column: int | None = None) -> Notice:
@@ -258,7 +278,7 @@ class _Columns:
         return {
             name: np.column_stack([x.values, y.values])
             for name, (x, y) in pairs.items()
-            if x is not None and y is not None
+            if x is not None and y is not None and refusal_of_id(name) is None
         }
 
     def values(self, quantity: str) -> FloatArray | None:

@@ -210,7 +210,7 @@
   function coefficients(entry) {
     if (entry.own) return entry.own;
     const module = (window.campaignBudgets || {})[entry.script];
-    return module && module[entry.sensor];
+    return module && Object.hasOwn(module, entry.sensor) ? module[entry.sensor] : undefined;
   }
 
   function fetchThen(entry, then) {

@@ -6,12 +6,13 @@
   const files = (page.values && page.values.residual_files) || {};
   const asked = new Set();
   const whole = {};
+  const fileOf = (module) => (Object.hasOwn(files, module) ? files[module] : "");
   if (!Object.keys(files).length) return;
   for (const [name, figure] of Object.entries(page.figures)) whole[name] = figure.traces;
 
   /* The traces as written, and those of the chosen module beside them. */
   function withPoints(module) {
-    const points = (window.campaignResiduals || {})[module] || { traces: [], x: {} };
+    const points = (window.campaignResiduals || {})[fileOf(module)] || { traces: [], x: {} };
     if (points.shared) points.traces = window.campaignUnfold(points);
     delete points.shared;
     for (const [name, figure] of Object.entries(page.figures)) {
@@ -23,7 +24,7 @@
   function load(module) {
     asked.add(module);
     const script = document.createElement("script");
-    script.src = files[module];
+    script.src = fileOf(module);
     script.addEventListener("load", function () {
       if (window.campaign.chosen().module === module) document.dispatchEvent(new CustomEvent("campaign-marks"));
     });
@@ -34,6 +35,6 @@
   window.addEventListener("campaign-marks", function () {
     const module = window.campaign.chosen().module;
     withPoints(module);
-    if (module && files[module] && !asked.has(module)) load(module);
+    if (module && fileOf(module) && !asked.has(module)) load(module);
   }, true);
 })();
