@@ -251,6 +251,7 @@ FindingKind = Literal[
     "coupling",
     "influences",
     "budget",
+    "layout",
     "generations",
     "next",
 ]
@@ -264,8 +265,9 @@ _FIRST = {
     "accuracy": 3,
     "pressure": 4,
     "budget": 5,
+    "layout": 6,
 }
-"""What comes first, in this order: what a length is read to, and what pressure adds to it."""
+"""What comes first, in this order: what a length is read to, what pressure adds, what shapes come back."""
 
 
 @dataclass(frozen=True)

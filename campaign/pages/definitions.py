@@ -66,6 +66,11 @@ DEFINITIONS: dict[str, tuple[str, str]] = {
     "sources": ("budget-sources", "source"),
     "expanded uncertainty": ("expanded-uncertainty", "expanded_strain coverage_factor"),
     "effective degrees of freedom": ("effective-degrees", "_df"),
+    "node errors": ("node-error", "_error fit_rms rms predicted_rms"),
+    "redundancy": ("redundancy", "redundancy"),
+    "χ² test": ("chi-square-test", "chi_square"),
+    "test of single edges": ("tau-test", "_edge_verdict tau"),
+    "all tests counted": ("multiplicity", "_all_counted"),
     "verdicts": ("limits", "verdict probability"),
 }
 """Words of a link → (address on the Method page, columns that it explains)."""

@@ -101,6 +101,20 @@ FORMULAS: dict[str, str] = {
     "cross_axis": r"S_{\times}=100\ \%\cdot\frac{\partial y/\partial\varepsilon_{\text{across}}}"
     r"{\partial y/\partial\varepsilon_{\text{along}}}",
     "temperature": r"\alpha_{\text{zero}}=\frac{c}{y_0},\qquad \alpha_{\text{sensitivity}}=\frac{d}{b}",
+    "shape_adjustment": r"(l-d(x))^{\top}\,\Sigma^{-1}(l-d(x))\ \to\ \min,\qquad "
+    r"\text{Cov}(\hat x)=(A^{\top}\Sigma^{-1}A)^{-1}\ \text{in the datum},\qquad "
+    r"A=\frac{\partial d}{\partial x}",
+    "inner_constraints": r"B^{\top}(\hat x-x_0)=0\quad\Rightarrow\quad "
+    r"\operatorname{tr}\text{Cov}(\hat x)\ \text{least},\qquad B:\ \text{shift and rotation}",
+    "rigid_fit": r"\sum_{k}\left|\hat x_k-(R\,x_k+t)\right|^2\to\min,\qquad R\ \text{a rotation}",
+    "extra_sd": r"l-l_{\text{known}}\sim\text{N}(0,\ \Sigma+\Sigma_{\text{known}}+\tau^2 I)",
+    "redundancy": r"r=E-(2n-3),\qquad r_i=\left(Q_{vv}\Sigma^{-1}\right)_{ii},\qquad \sum_i r_i=r",
+    "chi_square": r"\chi^2=v^{\top}\Sigma^{-1}v,\qquad v=d(\hat x)-l,\qquad \hat\sigma_0^2=\frac{\chi^2}{r}",
+    "tau_test": r"w_i=\frac{(\Sigma^{-1}v)_i}{\sqrt{(\Sigma^{-1}Q_{vv}\Sigma^{-1})_{ii}}},\qquad "
+    r"\tau_i=\frac{w_i}{\hat\sigma_0},\qquad "
+    r"\nabla_i=-\frac{(\Sigma^{-1}v)_i}{(\Sigma^{-1}Q_{vv}\Sigma^{-1})_{ii}}",
+    "ellipse": r"a,b=\sqrt{\frac{s_x^2+s_y^2}{2}\pm\sqrt{\frac{(s_x^2-s_y^2)^2}{4}+s_{xy}^2}},\qquad "
+    r"\tan 2\varphi=\frac{2s_{xy}}{s_x^2-s_y^2},\qquad \sqrt{\chi^2_{2;\,0.95}}=2.45",
     "cook": r"D_i=\frac{e_i^2}{p\,s^2}\,\frac{h_{ii}}{(1-h_{ii})^2}",
 }
 """Formulas by name; a template writes ``{{ formulas.gauge_factor }}``."""

@@ -13,7 +13,7 @@ Row = Mapping[Hashable, Any]
 FIGURE_WORDS: Mapping[str, tuple[str, str]] = {
     "strain_error": ("error of one reading (95 %)", "inverse-reading"),
     "expanded_uncertainty": ("expanded uncertainty in use", "expanded-uncertainty"),
-    "node_error": ("node error after best fit", "generations"),
+    "node_error": ("node error after best fit", "node-error"),
     "linearity": ("departure from a line", "linearity"),
     "hysteresis": ("width of settled loops", "loops"),
     "staircase_hysteresis": ("staircase hysteresis", "hysteresis"),

@@ -59,6 +59,7 @@ SECTIONS = (
     Section("loops-and-endurance", "Loops and endurance", ("loops",)),
     Section("holds-and-drift", "Holds, drift, noise at rest", ("holds",)),
     Section("pressure-and-influences", "Pressure and other influences", ("influences",)),
+    Section("shapes", "Shapes from lengths", ("layout",)),
     Section("generations-and-plans", "Generations and the next campaign", ("comparison",)),
     Section("paper", "Text ready for a paper", ("paper",)),
     Section("sources", "Sources", ("sources",)),

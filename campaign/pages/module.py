@@ -26,6 +26,7 @@ from campaign.pages.figures import (
     points,
 )
 from campaign.pages.influence_sections import module_pressure_figure
+from campaign.pages.layout_sections import module_shapes
 from campaign.pages.loop_sections import module_widths_figure
 from campaign.pages.page import Page
 from campaign.pages.sensor import FIGURE_ORDER
@@ -341,7 +342,9 @@ def shared_trials(
     for index, row in enumerate(first.to_dict("records"), 1):
         own = wide[wide["file"] == row["file"]]
         plot = None
-        if index <= _MOST_TRIAL_PLOTS and len(lines):
+        if str(row["kind"]) == "layout":
+            plot = module_shapes(results, module, str(row["file"]), f"trial-{index}")
+        elif index <= _MOST_TRIAL_PLOTS and len(lines):
             plot = shared_trial_plot(results, module, str(row["file"]), lines, index)
         if plot is not None:
             plots.append(plot)

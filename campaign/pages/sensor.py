@@ -18,6 +18,7 @@ from campaign.pages.budget import sensor_budget
 from campaign.pages.calculator import calculator_data, record_href
 from campaign.pages.drift import sensor_holds
 from campaign.pages.influence_sections import sensor_influences
+from campaign.pages.layout_sections import lengths_said
 from campaign.pages.loop_sections import sensor_loops
 from campaign.pages.page import Page
 from campaign.pages.sensor_parts import SensorParts, gather_sensors
@@ -85,10 +86,11 @@ def sensor_pages(results: CampaignResults, mapped: SkinMap) -> list[Page]:
     labels = {} if results.calibration is None else results.calibration.labels
     together = _sensors_by_trial(results.intake.trials)
     sensors = gather_sensors(results)
+    laid = lengths_said(results)
     links = [(f"{s.module} {s.sensor}", slugs.sensor_href(s.module, s.sensor)) for s in sensors]
     return [
         replace(
-            _sensor_page(results, parts, mapped, labels, together),
+            _sensor_page(results, parts, mapped, labels, together, laid),
             previous=links[i - 1] if i else None,
             following=links[i + 1] if i + 1 < len(links) else None,
         )
@@ -110,6 +112,7 @@ def _sensor_page(
     mapped: SkinMap,
     labels: Mapping[str, str],
     together: Mapping[tuple[str, str], set[str]],
+    laid: Mapping[tuple[str, str, str], str],
 ) -> Page:
     sections = trial_sections(parts, together)
     reference, records = parts.reference, parts.records
@@ -142,6 +145,9 @@ def _sensor_page(
             "influences": influences,
             "loops": looped,
             "holds_by_trial": holds_by_trial,
+            "lengths": {
+                trial: said for (m, s, trial), said in laid.items() if (m, s) == (parts.module, parts.sensor)
+            },
             "register": register_facts(parts.register),
             "used": parts.used,
             "labels": labels,

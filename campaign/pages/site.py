@@ -17,6 +17,8 @@ from campaign.pages.drift import drift_page
 from campaign.pages.findings import findings_page
 from campaign.pages.generations import generations_page
 from campaign.pages.hysteresis import hysteresis_page
+from campaign.pages.layout import layout_page
+from campaign.pages.layout_scripts import layout_scripts
 from campaign.pages.loop_figures import loop_scripts
 from campaign.pages.method import method_pages
 from campaign.pages.module import module_pages
@@ -65,6 +67,7 @@ def build_site(
             **residual_files(results),
             **loop_scripts(results.hysteresis),
             **budget_scripts(results.budget),
+            **layout_scripts(results.layout),
         },
         plot_library=plot_library,
         reference=results.readings.reference,
@@ -85,6 +88,7 @@ def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
         hysteresis_page(results),
         drift_page(results),
         pressure_page(results),
+        layout_page(results),
         generations_page(results),
         planning_page(results),
         budget_page(results),

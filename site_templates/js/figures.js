@@ -113,11 +113,13 @@ window.campaign = window.campaign || {};
     library.react(figure.live, made.data, made.layout, CONFIG);
   }
 
-  /* Another choice of traces for a figure, with the ranges of its axes and the address of its data. */
-  campaign.changeFigure = function (name, traces, ranges, csv) {
+  /* Another choice of traces for a figure, with the ranges of its axes, the address of its data and, where they
+     differ too, its labels. */
+  campaign.changeFigure = function (name, traces, ranges, csv, labels) {
     const figure = figures.get(name);
     if (!figure) return;
     figure.spec.traces = traces;
+    if (labels) figure.spec.layout.annotations = labels;
     for (const [axis, ends] of Object.entries(ranges)) {
       figure.spec.layout[axis] = Object.assign({}, figure.spec.layout[axis], { range: ends });
     }

@@ -38,12 +38,16 @@
   /* For scripts that bring further traces with looks and texts of their own. */
   window.campaignUnfold = (content) => content.traces.map((folded) => trace(folded, content.shared, content.texts));
 
-  if (!page || !page.shared) return;
-  for (const figure of Object.values(page.figures)) {
-    figure.traces = figure.traces.map((folded) => trace(folded, page.shared, page.texts));
-    for (const key of Object.keys(figure.layout)) {
-      if (/^[xy]axis\d*$/.test(key)) figure.layout[key] = whole(figure.layout[key], page.shared);
+  /* For scripts that bring whole figures. */
+  window.campaignUnfoldFigures = function (content) {
+    for (const figure of Object.values(content.figures)) {
+      figure.traces = figure.traces.map((folded) => trace(folded, content.shared, content.texts));
+      for (const key of Object.keys(figure.layout)) {
+        if (/^[xy]axis\d*$/.test(key)) figure.layout[key] = whole(figure.layout[key], content.shared);
+      }
+      figure.layout.annotations = figure.layout.annotations.map((note) => whole(note, content.shared));
     }
-    figure.layout.annotations = figure.layout.annotations.map((note) => whole(note, page.shared));
-  }
+  };
+
+  if (page && page.shared) window.campaignUnfoldFigures(page);
 })(window.campaignPage);
