@@ -58,7 +58,7 @@ EXPLAINED_ON: Mapping[str, str] = {
 """Page where each source's number comes from; the Method page where that page is not there."""
 
 PLACE_WORDS: Mapping[str, str] = {"zero": "zero", "mid": "mid scale", "full": "full scale"}
-_TOTALS_SHOWN = 24
+_TOTALS_SHOWN = 12
 _SMALLEST_SHARE = 0.01
 
 
