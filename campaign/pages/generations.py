@@ -342,7 +342,7 @@ def generations_table(compared: Generations) -> Table:
         caption="Every headline figure of every two generations.",
         frame=frame,
         columns=tuple(columns),
-        shown_rows=None,
+        shown_rows=max(int(table["second"].eq(compared.names[-1]).sum()), 1),
         note=f"Intervals are of one comparison by itself (95 %); p is corrected by Holm over all "
         f"{compared.family} tests. SDs are compared by the intervals of page 2 and have no df.",
         mark=("", ""),

@@ -31,6 +31,8 @@ KINDS = (
     "hysteresis.html",
     "drift.html",
     "pressure.html",
+    "generations.html",
+    "planning.html",
     "recordings.html",
     "method.html",
     "provenance.html",
@@ -432,7 +434,17 @@ def test_the_policy_stops_what_is_not_the_sites_own(browser: Chrome, site: Path)
 
 
 BUDGET_PAGE, BUDGET_DATA, BUDGET_SITE = 60_000, 120_000, 40_000_000
-WHOLE = ("calibration", "variance", "residuals", "hysteresis", "drift", "pressure", "method")
+WHOLE = (
+    "calibration",
+    "variance",
+    "residuals",
+    "hysteresis",
+    "drift",
+    "pressure",
+    "generations",
+    "planning",
+    "method",
+)
 """Pages that hold every sensor, or every formula, at once: they may take as much again."""
 OF_A_SENSOR = "sensor-"
 """So may pages of sensors that were cycled, held, inflated and warmed as well; most sensors were not."""
