@@ -6,6 +6,7 @@ import re
 from dataclasses import replace
 
 import pandas as pd
+import plotly.graph_objects as go
 import pytest
 
 from campaign.analyses.generation_figures import FIGURES
@@ -79,6 +80,13 @@ def test_figures_draw_zero_or_one_and_every_row(results):
         figures["differences-1"].layout["shapes"][0]["x0"],
     }
     assert centres == {1.0, 0.0}
+
+
+def test_every_figure_is_valid_in_the_schema_of_the_plot_library(results):
+    for page in (generations_page(results), planning_page(results)):
+        for figure in page.figures:
+            go.Figure(data=list(ready(figure).traces), layout=ready(figure).layout)
+            assert figure.caption.endswith(".")
 
 
 def row(**given) -> dict[str, object]:
