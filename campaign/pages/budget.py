@@ -193,7 +193,7 @@ def source_table(found: BudgetInUse, name: str, reference: ReferenceQuantity, th
             Column("_share", "Share", kind="percent", missing="–"),
             Column("_distribution", "Distribution", kind="text"),
             Column("_df", "Degrees of freedom", digits=2, missing="–"),
-            Column("_why", "Of which", kind="text"),
+            Column("_why", "Remark", kind="text"),
         ),
         source="budget",
         note="Contributions are standard uncertainties and add as squares. The file has every place, divisor "
