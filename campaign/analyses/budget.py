@@ -72,6 +72,12 @@ TOTAL_COLUMNS = (
 DRAWS = 40_000
 """Draws of the Monte Carlo beside a budget: ends of its interval to about one per cent."""
 
+_NO_OUTPUT = 1e-9
+"""Share of the signal below which a change over the whole range is rounding."""
+
+_TOLD_APART = 2.0
+"""Standard uncertainties of a new run's slope that the slope must exceed."""
+
 DOMINATES = 0.5
 """Share of the variance from which sources that are not normal dominate."""
 
@@ -147,7 +153,7 @@ def analyse_budget(
     Budget or None
         ``None`` without a calibrated sensor.
     """
-    if calibration is None or not calibration.line_sources:
+    if calibration is None or not _that_read(calibration):
         return None
     maker = _Maker.of(description, calibration, variance, hysteresis, drift, pressure, influences)
     fits = variance.by_generation if variance is not None else ()
@@ -196,7 +202,7 @@ class _Maker:
         influences: Influences | None,
     ) -> _Maker:
         lines: dict[SensorKey, list[LineSources]] = {}
-        for line in calibration.line_sources:
+        for line in _that_read(calibration):
             lines.setdefault(line.key, []).append(line)
         places = _places(description, calibration, variance)
         scales = {key: own[0].full_scale_output / own[0].slope for key, own in lines.items()}
@@ -321,6 +327,18 @@ def _half_loops(hysteresis: Hysteresis | None) -> dict[SensorKey, float]:
     square = hysteresis.curves_of_width.assign(s=hysteresis.curves_of_width["width_percent_fso"] ** 2)
     widths = np.sqrt(square.groupby(keys)["s"].mean()) * scale / 2.0
     return {(str(k[0]), str(k[1]), str(k[2])): float(v) for k, v in widths.items() if math.isfinite(v)}
+
+
+def _that_read(calibration: Calibration) -> list[LineSources]:
+    """Lines that a signal can be read by."""
+    return [line for line in calibration.line_sources if _reads(line)]
+
+
+def _reads(line: LineSources) -> bool:
+    """Whether the slope is told from zero (g < 1, as for the interval of a reading)."""
+    output = abs(line.slope) * (line.x_high - line.x_low)
+    spread = float(np.nan_to_num(line.line[1, 1] + line.mounting[1, 1] + line.run[1, 1]))
+    return output > _NO_OUTPUT * abs(line.intercept) and line.slope**2 > _TOLD_APART**2 * spread
 
 
 def _median(values: Iterable[float]) -> float:

@@ -145,7 +145,8 @@ def at_common_range(restricted: Comparable, whole: Comparable) -> Comparable:
     others = whole.values[~whole.values["figure"].isin(set(restricted.values["figure"]))]
     percent = others["unit"].astype(str).str.startswith("%FSO")
     factor = percent.map({True: scales[0] / scales[1], False: 1.0})
-    values = pd.concat([restricted.values, others.assign(value=others["value"] * factor)], ignore_index=True)
+    rescaled = others.assign(value=others["value"] * factor, noise=others["noise"] * factor)
+    values = pd.concat([restricted.values, rescaled], ignore_index=True)
     reach = {REACH: whole.conditions[REACH]} if REACH in whole.conditions else {}
     return replace(
         restricted, values=values, conditions={**whole.conditions, **restricted.conditions, **reach}

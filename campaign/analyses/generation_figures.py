@@ -7,7 +7,9 @@ from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Literal
 
+import numpy as np
 import pandas as pd
+from scipy import special
 
 from campaign.analyses.hold_figures import OF_FULL_SCALE
 from campaign.analyses.layout_results import OWN_LINE
@@ -53,19 +55,23 @@ class HeadlineFigure:
         Whether less of it is better; else a verdict only says which is larger.
     conditions
         What the figure holds at; it is compared only where these agree.
+    is_pooled
+        Whether its values hold components that are estimated once for all sensors of a generation: they then
+        agree with each other better than they are known, and modules are no units to test by.
     """
 
     name: str
     kind: Kind
     smaller_is_better: bool
     conditions: tuple[str, ...] = ()
+    is_pooled: bool = False
 
 
 _IN_FULL_SCALE = (RANGE, FULL_SCALE)
 
 SENSOR_FIGURES: tuple[HeadlineFigure, ...] = (
-    HeadlineFigure("expanded_uncertainty", "difference", True, (REACH,)),
-    HeadlineFigure("strain_error", "difference", True, (REACH,)),
+    HeadlineFigure("expanded_uncertainty", "difference", True, (REACH,), is_pooled=True),
+    HeadlineFigure("strain_error", "difference", True, (REACH,), is_pooled=True),
     HeadlineFigure("linearity", "difference", True, _IN_FULL_SCALE),
     HeadlineFigure("hysteresis", "difference", True, (REACH, *_IN_FULL_SCALE, RATE)),
     HeadlineFigure("staircase_hysteresis", "difference", True, (REACH, *_IN_FULL_SCALE)),
@@ -100,10 +106,14 @@ SPREAD_FIGURES: tuple[HeadlineFigure, ...] = tuple(
 FIGURES: tuple[HeadlineFigure, ...] = (*SENSOR_FIGURES, *SPREAD_FIGURES)
 """Everything that generations are compared by."""
 
-VALUE_COLUMNS = ("figure", "unit", "generation", "batch", "module", "sensor", "position", "value")
-"""Columns of :attr:`Comparable.values`."""
+VALUE_COLUMNS = ("figure", "unit", "generation", "batch", "module", "sensor", "position", "value", "noise")
+"""Columns of :attr:`Comparable.values`. ``noise`` is how far noise, or few runs, moves a value to one side (a
+magnitude upwards by about its standard uncertainty, an SD downwards); NaN where it does not or is unknown."""
 
 _KEYS = ["generation", "module", "sensor"]
+
+_NORMAL = 1.96
+"""Half-width of a 95 % interval in standard uncertainties; more where degrees of freedom are few."""
 
 
 @dataclass(frozen=True)
@@ -217,8 +227,33 @@ def _joined(parts: list[pd.DataFrame], identities: Iterable[TrialIdentity]) -> p
     return values[list(VALUE_COLUMNS)].reset_index(drop=True)
 
 
-def _figure(name: str, unit: str | pd.Series, rows: pd.DataFrame, values: pd.Series) -> pd.DataFrame:
-    return rows[_KEYS].assign(figure=name, unit=unit, value=values.astype(float))
+def _figure(
+    name: str,
+    unit: str | pd.Series,
+    rows: pd.DataFrame,
+    values: pd.Series,
+    noise: pd.Series | float = math.nan,
+) -> pd.DataFrame:
+    return rows[_KEYS].assign(figure=name, unit=unit, value=values.astype(float), noise=noise)
+
+
+def noise_of(figures: pd.DataFrame) -> pd.Series:
+    """Return how far noise moves figures of merit to one side, in their unit.
+
+    A magnitude, or the largest of several, grows by about its standard uncertainty in quadrature. The SD of
+    normal values with ν degrees of freedom is too small on average by the factor c₄(ν): what that lacks in
+    quadrature.
+
+    Source: c₄ as in ISO 7870-2:2013, annex (from memory).
+    """
+    half = figures["degrees_of_freedom"].astype(float) / 2.0
+    share = np.exp(2.0 * (special.gammaln(half + 0.5) - special.gammaln(half))) / half
+    lacks: pd.Series = figures["estimate"].astype(float) * np.sqrt(np.maximum(1.0 - share, 0.0))
+    return figures["standard_uncertainty"].astype(float).where(figures["kind"] != "spread", lacks)
+
+
+def _half_width(rows: pd.DataFrame, prefix: str) -> pd.Series:
+    return (rows[f"{prefix}high"].astype(float) - rows[f"{prefix}low"].astype(float)) / 2.0
 
 
 def _of_lines(calibration: Calibration | None, description: Description) -> Iterator[pd.DataFrame]:
@@ -235,22 +270,26 @@ def _of_lines(calibration: Calibration | None, description: Description) -> Iter
     names = {name: name for name in ("linearity", "repeatability", "strain_error")}
     for own, name in {**names, "hysteresis": "staircase_hysteresis"}.items():
         rows = found[found["figure"] == own]
-        yield _figure(name, rows["unit"], rows, rows["estimate"])
+        yield _figure(name, rows["unit"], rows, rows["estimate"], noise_of(rows))
 
 
 def _of_loops(hysteresis: Hysteresis | None) -> Iterator[pd.DataFrame]:
     if hysteresis is not None:
         rows = hysteresis.figures
-        yield _figure("hysteresis", rows["unit"], rows, rows["estimate"])
+        yield _figure("hysteresis", rows["unit"], rows, rows["estimate"], noise_of(rows))
 
 
 def _of_holds(drift: Drift | None) -> Iterator[pd.DataFrame]:
     if drift is None:
         return
-    yield _figure("drift_1h", drift.figures["unit"], drift.figures, drift.figures["estimate"])
+    figures = drift.figures
+    yield _figure("drift_1h", figures["unit"], figures, figures["estimate"], noise_of(figures))
     stretched = _stretched(drift)
-    slopes = stretched.groupby(_KEYS, sort=True)["percent_fso_per_decade"].mean().abs().reset_index()
-    yield _figure("slope_per_decade", "%FSO per decade", slopes, slopes["percent_fso_per_decade"])
+    squares = (_half_width(stretched, "") / _NORMAL) ** 2
+    held = stretched.assign(_square=squares).groupby(_KEYS, sort=True)
+    slopes = held["percent_fso_per_decade"].mean().abs().reset_index()
+    noise = np.sqrt(held["_square"].mean() / held["_square"].count()).reset_index(drop=True)
+    yield _figure("slope_per_decade", "%FSO per decade", slopes, slopes["percent_fso_per_decade"], noise)
 
 
 def _stretched(drift: Drift) -> pd.DataFrame:
@@ -263,7 +302,8 @@ def _of_pressure(pressure: Pressure | None) -> Iterator[pd.DataFrame]:
     if pressure is not None:
         table = pressure.table
         unit = f"{pressure.reference.unit} per kPa"
-        yield _figure("pressure_sensitivity", unit, table, table["strain_error_per_kpa"].abs())
+        noise = _half_width(table, "strain_error_per_kpa_") / _NORMAL
+        yield _figure("pressure_sensitivity", unit, table, table["strain_error_per_kpa"].abs(), noise)
 
 
 def _of_budget(budget: Budget | None) -> Iterator[pd.DataFrame]:

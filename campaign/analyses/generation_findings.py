@@ -9,7 +9,7 @@ from typing import Any
 import pandas as pd
 
 from campaign.analyses.findings import Finding
-from campaign.analyses.generation_pairs import NOT_DECIDED, TOO_FEW_MODULES
+from campaign.analyses.generation_pairs import NOT_DECIDED, NOT_TESTED, TOO_FEW_MODULES
 from campaign.analyses.generations import Confounded, Generations
 
 MOST_NAMED = 4
@@ -24,8 +24,9 @@ class GenerationFinding:
     """The newest generation against one other.
 
     ``better``, ``worse``, ``changed`` (larger or smaller, with no better or worse) and ``equivalent`` hold
-    rows of the table, in its order; ``undecided`` names the figures of which nothing is shown. ``few`` is
-    whether there are too few modules for any verdict. ``confounded`` differs together with the two.
+    rows of the table, in its order; ``undecided`` names the figures of which nothing is shown, ``untested``
+    holds those compared without a test. ``few`` is whether there are too few modules for any verdict.
+    ``confounded`` differs together with the two.
     """
 
     first: str
@@ -36,6 +37,7 @@ class GenerationFinding:
     changed: tuple[Compared, ...]
     equivalent: tuple[Compared, ...]
     undecided: tuple[str, ...]
+    untested: tuple[Compared, ...]
     few: bool
     modules: tuple[int, int]
     confounded: tuple[Confounded, ...]
@@ -64,6 +66,7 @@ def _of_pair(generations: Generations, first: str, second: str) -> GenerationFin
         changed=_rows(rows[verdicts.str.startswith(("larger", "smaller"))]),
         equivalent=_rows(rows[verdicts.eq("equivalent") | verdicts.str.endswith("within the margin")]),
         undecided=tuple(rows.loc[verdicts == NOT_DECIDED, "figure"].astype(str)),
+        untested=_rows(rows[verdicts == NOT_TESTED]),
         few=len(rows) > 0 and bool((verdicts == TOO_FEW_MODULES).all()),
         modules=(int(rows["modules_first"].max()), int(rows["modules_second"].max()))
         if len(rows)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -37,11 +37,21 @@ FEWEST_BATCHES = 3
 
 TOO_FEW_MODULES = "too few modules"
 NOT_DECIDED = "not decided"
+NOT_TESTED = "not tested"
+POOLED = "its uncertainty is common to the generation"
+NOISE_DIFFERS = "noise or numbers of runs differ as much"
 AT_COMMON_POSITIONS = "at common positions"
 NO_COMMON_POSITION = "their sensors share no position"
 EQUIVALENT = "equivalent"
 
 SIGNIFICANT = 0.05
+
+FEELABLE_NOISE = 0.02
+"""Share of the square of a figure from which on a difference in noise is looked at."""
+
+NOISE_EXPLAINS = 4.0
+"""A difference of squares of up to so many times that of the noise may be noise: the largest of several noisy
+values exceeds one of them by about a factor of two."""
 
 
 @dataclass(frozen=True)
@@ -50,7 +60,7 @@ class Pair:
 
     ``margin`` is NaN where none is stated; ``p`` and ``p_equivalence`` are NaN where there is no verdict.
     ``p_common_variance`` is of the test that takes both generations to spread alike. ``label`` says what
-    restricts the comparison, empty if nothing does.
+    restricts the comparison, empty if nothing does; ``untested`` says why there is no test, likewise.
     """
 
     figure: HeadlineFigure
@@ -67,11 +77,17 @@ class Pair:
     modules: tuple[int, int]
     sensors: tuple[int, int]
     label: str = ""
+    untested: str = ""
+
+    @property
+    def has_modules(self) -> bool:
+        """Whether there are modules enough to say more than the estimates."""
+        return min(self.modules) >= FEWEST_MODULES
 
     @property
     def has_verdict(self) -> bool:
-        """Whether there are modules enough to say more than the estimates."""
-        return min(self.modules) >= FEWEST_MODULES
+        """Whether more than the estimates may be said."""
+        return self.has_modules and not self.untested
 
 
 def compare_means(
@@ -96,7 +112,9 @@ def compare_means(
     means = [_mean_of(side, several) for side in sides]
     kind: Kind = figure.kind if margin is None else "ratio" if margin[1] == "1" else "difference"
     joined = ratio_of_means if kind == "ratio" else difference_of_means
-    enough = min(mean.groups for mean in means) >= FEWEST_MODULES
+    untested = POOLED if figure.is_pooled else NOISE_DIFFERS if _noise_explains(sides) else ""
+    enough = min(mean.groups for mean in means) >= FEWEST_MODULES and not untested
+    found = joined(means[0], means[1])
     return Pair(
         figure=figure,
         unit=str(rows["unit"].iloc[0]),
@@ -105,14 +123,29 @@ def compare_means(
         estimate_first=means[0].estimate,
         estimate_second=means[1].estimate,
         kind=kind,
-        found=joined(means[0], means[1]),
+        found=found if not untested else Comparison(found.estimate, *(math.nan,) * 4),
         p_equivalence=_equivalence(kind, means[0], means[1], margin) if enough else math.nan,
         p_common_variance=_with_common_variance(rows, second, several, label) if enough else math.nan,
-        margin=math.nan if margin is None else margin[0],
+        margin=math.nan if margin is None or untested else margin[0],
         modules=(means[0].groups, means[1].groups),
         sensors=(means[0].members, means[1].members),
         label=label,
+        untested=untested,
     )
+
+
+def _noise_explains(sides: Sequence[pd.DataFrame]) -> bool:
+    """Whether noise differs so much between two generations that it may be all of the difference found.
+
+    What grows with noise, or shrinks with few runs, differs between alike generations that were measured
+    differently: more runs of the same modules would count as an improvement.
+    """
+    noise = [float((side["noise"].astype(float) ** 2).mean()) for side in sides]
+    squares = [float((side["value"] ** 2).mean()) for side in sides]
+    apart = abs(noise[1] - noise[0])
+    if not apart > FEELABLE_NOISE * sum(squares) / 2:  # also where the noise is unknown
+        return False
+    return abs(squares[1] - squares[0]) < NOISE_EXPLAINS * apart
 
 
 def _at_common_positions(rows: pd.DataFrame, first: str, second: str) -> tuple[pd.DataFrame, str]:
@@ -212,8 +245,10 @@ def verdict_of(pair: Pair, p_adjusted: float, equivalence_adjusted: float) -> st
     Both p values are corrected for the family. Where a difference is shown and shown to be within the margin
     too, both are said.
     """
-    if not pair.has_verdict:
+    if not pair.has_modules:
         return TOO_FEW_MODULES
+    if pair.untested:
+        return NOT_TESTED
     word = _direction(pair) if p_adjusted < SIGNIFICANT else ""
     within = equivalence_adjusted < SIGNIFICANT
     if word and within:

@@ -28,6 +28,7 @@ from campaign.analyses.generation_figures import (
 )
 from campaign.analyses.generation_pairs import (
     NOT_DECIDED,
+    NOT_TESTED,
     TOO_FEW_MODULES,
     Pair,
     compare_means,
@@ -138,7 +139,7 @@ class Generations:
     @property
     def decided(self) -> pd.DataFrame:
         """The rows in which something is shown."""
-        return self.table[~self.table["verdict"].isin((NOT_DECIDED, TOO_FEW_MODULES))]
+        return self.table[~self.table["verdict"].isin((NOT_DECIDED, NOT_TESTED, TOO_FEW_MODULES))]
 
 
 def compare_generations(
@@ -246,7 +247,7 @@ def _on_one_full_scale(
     scales = [side.conditions.get(FULL_SCALE, math.nan) for side in sides]
     if not scales[1] > 0:
         return rows
-    return rows.assign(value=rows["value"] * scales[0] / scales[1])
+    return rows.assign(**{name: rows[name] * scales[0] / scales[1] for name in ("value", "noise")})
 
 
 def _compare_spreads(
@@ -316,7 +317,7 @@ def _table(pairs: Sequence[Pair]) -> pd.DataFrame:
             "sensors_first": pair.sensors[0],
             "sensors_second": pair.sensors[1],
             "smaller_is_better": pair.figure.smaller_is_better,
-            "label": pair.label,
+            "label": "; ".join(filter(None, (pair.untested, pair.label))),
         }
         for pair, p, p_adjusted, equivalence in zip(pairs, tested, adjusted, equivalences, strict=True)
     ]
@@ -389,15 +390,17 @@ def _missing_notices(sources: Sequence[Source]) -> Iterator[Notice]:
 
 def _margin_notices(description: Description, table: pd.DataFrame) -> Iterator[Notice]:
     used = set(table.loc[table["margin"].notna(), "figure"])
-    known = {figure.name for figure in FIGURES}
+    known = {figure.name: figure for figure in FIGURES}
+    untested = set(table.loc[table["verdict"] == NOT_TESTED, "figure"])
     for name, (value, unit) in description.margins.items():
         if name in used:
             continue
-        reason = (
-            f"the unit {unit or '1'} does not fit"
-            if name in set(table["figure"])
-            else ("it was not compared" if name in known else "no figure has this name")
-        )
+        if name in untested:
+            reason = "it is compared without a test"
+        elif name in set(table["figure"]):
+            reason = f"the unit {unit or '1'} does not fit"
+        else:
+            reason = "it was not compared" if name in known else "no figure has this name"
         what = f"[limits.margins] {name} = {value:g} {unit}: {reason}"
-        remedy = f"figures are {', '.join(sorted(known))}"
+        remedy = f"figures are {', '.join(sorted(n for n, figure in known.items() if not figure.is_pooled))}"
         yield Notice("margin-not-used", "noted", None, None, None, what, "no equivalence is tested", remedy)

@@ -341,8 +341,8 @@ def _recorded(table: pd.DataFrame, calibration: Calibration) -> npt.NDArray[np.s
 
 def _session_shares(table: pd.DataFrame, calibration: Calibration) -> FloatArray:
     """Share of each mounting in the runs of each row's sensor, shape (N, mountings)."""
-    runs = calibration.run_lines
-    runs = runs[runs["branch"] == "both"] if (runs["branch"] == "both").any() else runs
+    keys_of_runs = ["generation", "module", "sensor", "session", "repetition", "trial"]
+    runs = calibration.run_lines.drop_duplicates(keys_of_runs)
     sessions = sorted(set(runs["session"].astype(str)))
     counts = runs.groupby(["generation", "module", "sensor", "session"]).size()
     shares = np.zeros((len(table), len(sessions)))

@@ -52,6 +52,7 @@ def map_of(network: Network, strain_range: tuple[float, float]) -> Amplification
     stretch = np.linspace(1.0 + min(low, 0.0), 1.0 + high, STEPS)
     shear = np.linspace(-high, high, STEPS)
     by_node = amplification_map(network.layout_mm, network.pairs, stretch, shear, strain_range)
+    by_node = np.where(np.isfinite(by_node), by_node, np.nan)
     return AmplificationMap(
         network.geometry,
         stretch,

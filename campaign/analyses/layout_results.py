@@ -339,7 +339,8 @@ class AmplificationMap:
     stretch, shear
         Shape (a,) and (b,): the grid.
     root_mean_square, largest
-        Shape (a, b): over the nodes; NaN where a length leaves the calibrated strain range.
+        Shape (a, b): over the nodes; NaN where a length leaves the calibrated strain range, and where the
+        figure is singular.
     by_node
         Shape (a, b, n), in the order of ``nodes``.
     nodes

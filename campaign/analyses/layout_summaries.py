@@ -36,6 +36,9 @@ _FRAMES = {"datum": AFTER_DATUM, "fit": AFTER_FIT, "edges": EDGE_ERROR}
 GROSS_RISK = 0.001
 """Risk, over all lengths of a generation, of leaving a length out of the extra SD as a gross error."""
 
+MOST_GROSS = 10
+"""Lengths left out at most: more are no exceptions."""
+
 NOT_FROM_ZERO = "not distinguishable from zero"
 
 
@@ -126,21 +129,23 @@ def extra_row(
 ) -> dict[str, object] | None:
     """Return the extra SD of one generation, columns of :data:`EXTRA_COLUMNS`; ``None`` without any length.
 
-    Lengths further from the known ones than chance allows (with the extra SD counted in) are gross errors,
-    for the tests to find; they are left out here, and counted.
+    A length further from what the others and the known positions say of it than chance allows (with the extra
+    SD counted in) is a gross error, for the tests to find; such are left out here one by one, and counted.
     """
     found = _differences(shapes, read, float(np.nan_to_num(known_sd)))
     if len(found.values) < 3:
         return None
     kept = np.arange(len(found.values))
     reach = float(stats.norm.ppf(1.0 - GROSS_RISK / (2.0 * len(kept))))
-    for _ in range(10):
-        extra = extra_variance(found.values[kept], found.covariance[np.ix_(kept, kept)])
-        spread = np.sqrt(np.diag(found.covariance) + extra.sd**2)
-        inside = np.flatnonzero(np.abs(found.values) <= reach * spread)
-        if len(inside) >= len(kept) or len(inside) < 3:
+    for _ in range(MOST_GROSS + 1):
+        covariance = found.covariance[np.ix_(kept, kept)]
+        extra = extra_variance(found.values[kept], covariance)
+        weights = np.linalg.inv(covariance + extra.sd**2 * np.eye(len(kept)))
+        deviation = np.abs(weights @ found.values[kept]) / np.sqrt(np.diag(weights))
+        worst = int(np.argmax(deviation))
+        if deviation[worst] <= reach or len(kept) == max(len(found.values) - MOST_GROSS, 3):
             break
-        kept = inside
+        kept = np.delete(kept, worst)
     labels = [NOT_FROM_ZERO] if extra.low == 0.0 else []
     if len(kept) < len(found.values):
         labels.append(f"{len(found.values) - len(kept)} lengths beyond chance left out")

@@ -58,7 +58,7 @@ EXPLAINED_ON: Mapping[str, str] = {
 """Page where each source's number comes from; the Method page where that page is not there."""
 
 PLACE_WORDS: Mapping[str, str] = {"zero": "zero", "mid": "mid scale", "full": "full scale"}
-_TOTALS_SHOWN = 24
+_TOTALS_SHOWN = 12
 _SMALLEST_SHARE = 0.01
 
 
@@ -193,7 +193,7 @@ def source_table(found: BudgetInUse, name: str, reference: ReferenceQuantity, th
             Column("_share", "Share", kind="percent", missing="–"),
             Column("_distribution", "Distribution", kind="text"),
             Column("_df", "Degrees of freedom", digits=2, missing="–"),
-            Column("_why", "Of which", kind="text"),
+            Column("_why", "Remark", kind="text"),
         ),
         source="budget",
         note="Contributions are standard uncertainties and add as squares. The file has every place, divisor "

@@ -46,7 +46,7 @@ def budget_figures(budget: Budget) -> tuple[Figure, ...]:
     made = []
     if new := budget.of_new_sensors():
         made.append(new_sensor_figure(new, budget.reference))
-    return (*made, sensor_figure(budget.of_sensors(), budget.reference))
+    return (*made, sensor_figure(budget.of_sensors(), budget.reference, first=not made))
 
 
 def new_sensor_figure(found: Sequence[BudgetInUse], reference: ReferenceQuantity) -> Figure:
@@ -73,8 +73,11 @@ def new_sensor_figure(found: Sequence[BudgetInUse], reference: ReferenceQuantity
     )
 
 
-def sensor_figure(found: Sequence[BudgetInUse], reference: ReferenceQuantity) -> Figure:
-    """Return one bar a sensor with its own line, a panel a generation, largest U first."""
+def sensor_figure(found: Sequence[BudgetInUse], reference: ReferenceQuantity, *, first: bool) -> Figure:
+    """Return one bar a sensor with its own line, a panel a generation, largest U first.
+
+    *first* says that no figure above explains the parts.
+    """
     generations = sorted({one.subject.generation for one in found})
     traces: list[Trace] = []
     most = 1
@@ -96,7 +99,7 @@ def sensor_figure(found: Sequence[BudgetInUse], reference: ReferenceQuantity) ->
         traces=tuple(traces),
         layout=made,
         table="budget",
-        note=_HOW_TO_READ,
+        note=_HOW_TO_READ if first else "Parts as in the figure above.",
         height=min(620, 120 + max(8, 60 // most) * most),
     )
 

@@ -43,6 +43,7 @@ VERDICT_WORDS: Mapping[str, str] = {
     "smaller": "smaller",
     "equivalent": "equivalent within the margin",
     "not decided": "not decided",
+    "not tested": "compared without a test",
     "too few modules": "too few modules for a verdict",
 }
 """What verdicts are called; those 'within the margin' are said as they stand."""
@@ -84,8 +85,15 @@ def estimates_words(row: Row) -> tuple[str, str]:
 
 
 def comparison_words(row: Row) -> str:
-    """Return ``0.49 [0.33, 0.73] times`` or ``−0.36 [−0.45, −0.28] %`` for one row of the table."""
+    """Return ``0.49 [0.33, 0.73] times`` or ``−0.36 [−0.45, −0.28] %`` for one row of the table.
+
+    What is compared without a test has no interval, and says so.
+    """
     estimate, low, high = (float(row[key]) for key in ("difference_or_ratio", "low", "high"))
+    if row["verdict"] == "not tested" and math.isfinite(estimate):
+        factor, unit = (1.0, "") if row["kind"] == "ratio" else shown_unit(str(row["unit"]))
+        times = " times" if row["kind"] == "ratio" else ""
+        return f"{numbers.significant(estimate * factor, 2, unit)}{times} (no interval)"
     if row["kind"] == "ratio":
         if not math.isfinite(estimate):
             return numbers.NOT_IDENTIFIABLE

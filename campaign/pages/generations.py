@@ -9,7 +9,7 @@ import pandas as pd
 
 from campaign.analyses.earlier import EarlierCampaign
 from campaign.analyses.generation_findings import GenerationFinding
-from campaign.analyses.generation_pairs import AT_COMMON_POSITIONS
+from campaign.analyses.generation_pairs import AT_COMMON_POSITIONS, NOT_TESTED, POOLED
 from campaign.analyses.generations import Confounded, Generations
 from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers, palette
@@ -65,6 +65,7 @@ def generations_page(results: CampaignResults) -> Page | None:
             "notices": [*compared.notices, *_joining_notices(results)],
             "confounded": _confounded(compared),
             "at_common_positions": bool(compared.table["label"].eq(AT_COMMON_POSITIONS).any()),
+            "has_pooled": bool(compared.table["label"].str.startswith(POOLED).any()),
             "margins": bool(compared.table["margin"].notna().any()),
         },
         figures=tuple(comparison_figures(compared)),
@@ -87,7 +88,8 @@ def _joining_notices(results: CampaignResults) -> list[object]:
 def comparison_figures(compared: Generations) -> Iterator[Figure]:
     """Return the newest against each other: ratios, differences by unit, then the module means."""
     table = compared.table
-    table = table[table["second"] == compared.names[-1]].reset_index(drop=True)
+    tested = table["verdict"] != NOT_TESTED
+    table = table[(table["second"] == compared.names[-1]) & tested].reset_index(drop=True)
     ratios = table[(table["kind"] == "ratio") & table["difference_or_ratio"].notna()]
     if len(ratios):
         ends = _ratio_ends(ratios)
@@ -98,8 +100,7 @@ def comparison_figures(compared: Generations) -> Iterator[Figure]:
             axis("Newer over older", "", logarithmic=True, low=ends[0], high=ends[1], ticks=_ticks(*ends)),
             centre=1.0,
             caption=_caption(ratios, "Ratios"),
-            note="One: no change. Left of it the newer modules have less. Filled: a verdict is given; open: "
-            "not decided. Grey band: the margin within which two figures count as equivalent.",
+            note=f"One: no change. Left of it the newer modules have less. {_reading(ratios)}",
         )
     differences = table[(table["kind"] == "difference") & table["difference_or_ratio"].notna()]
     for unit in dict.fromkeys(differences["unit"].astype(str)):
@@ -113,9 +114,19 @@ def comparison_figures(compared: Generations) -> Iterator[Figure]:
             axis("Newer less older", shown, low=ends[0], high=ends[1]),
             centre=0.0,
             caption=_caption(rows, "Differences"),
-            note="Zero: no change. Left of it the newer modules have less.",
+            note=f"Zero: no change. Left of it the newer modules have less. {_reading(rows)}",
         )
     yield from module_figures(compared)
+
+
+def _reading(rows: pd.DataFrame) -> str:
+    """How marks and bands are read."""
+    marks = (
+        "Filled: a verdict, with p corrected for the family; open: none, even where the interval excludes it."
+    )
+    if rows["margin"].isna().all():
+        return marks
+    return f"{marks} Grey band: the margin within which two figures count as equivalent."
 
 
 def _ratio_ends(rows: pd.DataFrame) -> tuple[float, float]:
@@ -230,7 +241,8 @@ def _caption(rows: pd.DataFrame, what: str) -> str:
     parts += [f"{few} with too few modules for a verdict"] if few else []
     unit = shown_unit(str(rows["unit"].iloc[0]))[1]
     kind = f"{what} in {unit}" if what == "Differences" and unit else what
-    return f"{kind} of the newer to the older generation with 95 % intervals: {', '.join(parts)}."
+    against = "of the newer to the older" if what == "Ratios" else "of the newer from the older"
+    return f"{kind} {against} generation with 95 % intervals: {', '.join(parts)}."
 
 
 def module_figures(compared: Generations) -> Iterator[Figure]:
@@ -325,15 +337,16 @@ def generations_table(compared: Generations) -> Table:
     columns = [
         Column("_figure", "Figure", kind="text", href="_href"),
         Column("first", "Older", kind="text"),
+        Column("_first", "Its value", digits=3),
         Column("second", "Newer", kind="text"),
-        Column("_first", "older", digits=3),
-        Column("_second", "newer", digits=3),
+        Column("_second", "Its value", digits=3),
         Column("_unit", "Unit", kind="text"),
         Column("_compared", "Difference, or times", kind="text"),
         Column("df", "df", digits=2, missing="–"),
         Column("p_adjusted", "p, family", kind="probability", missing="–"),
     ]
-    if table["margin"].notna().any():
+    has_margins = bool(table["margin"].notna().any())
+    if has_margins:
         columns.append(Column("_margin", "Margin", kind="text"))
         columns.append(Column("p_equivalence_adjusted", "p, equivalence", kind="probability", missing="–"))
     columns.append(Column("_verdict", "The newer is", kind="text"))
@@ -342,9 +355,11 @@ def generations_table(compared: Generations) -> Table:
         caption="Every headline figure of every two generations.",
         frame=frame,
         columns=tuple(columns),
-        shown_rows=None,
-        note=f"Intervals are of one comparison by itself (95 %); p is corrected by Holm over all "
-        f"{compared.family} tests. SDs are compared by the intervals of page 2 and have no df.",
+        shown_rows=max(int(table["second"].eq(compared.names[-1]).sum()), 1),
+        note="Values are means over positions and modules, or SDs as strain. Intervals are of one comparison "
+        f"by itself (95 %); p is corrected by Holm over all {compared.family} tests"
+        f"{', p of equivalence over its own' if has_margins else ''}. df are degrees of freedom by Welch; "
+        "SDs are compared by the intervals of page 2 and have none.",
         mark=("", ""),
     )
 

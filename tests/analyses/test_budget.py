@@ -524,6 +524,14 @@ def test_one_branch_leaves_hysteresis_unknown_where_the_direction_is():
     assert source(worst_in_use(subject, UseConditions("falling")), LOOP).status == NOT_KNOWN
 
 
+def test_a_sensor_that_does_not_answer_to_strain_has_no_budget():
+    table = simulated(1)
+    dead = (table["module"] == "M01") & (table["sensor"] == "S1")
+    budget = analyse_budget(RATED, calibrated(table.assign(signal=table["signal"].where(~dead, 50.0))), None)
+    assert ("M01", "S1") not in {(s.module, s.sensor) for s in budget.subjects}
+    assert len(budget.subjects) == 15
+
+
 def test_without_staircases_there_is_no_budget():
     assert analyse_budget(RATED, None, None) is None
     assert budget_findings(None, NOTHING_JUDGED) == ()

@@ -9,8 +9,16 @@ import numpy as np
 import pandas as pd
 import pytest
 
+from benchmarks.generations import alike
 from campaign.analyses.generation_design import confounded_within, order_of_generations
-from campaign.analyses.generation_figures import FULL_SCALE, RANGE, VALUE_COLUMNS, Comparable, Spread
+from campaign.analyses.generation_figures import (
+    FULL_SCALE,
+    RANGE,
+    VALUE_COLUMNS,
+    Comparable,
+    Spread,
+    noise_of,
+)
 from campaign.analyses.generation_findings import generation_findings
 from campaign.analyses.generations import (
     GENERATION_COLUMNS,
@@ -211,17 +219,78 @@ def test_holm_as_published():
     assert holm([0.01, NAN, 0.04, 0.03]) == pytest.approx([0.03, NAN, 0.06, 0.06], nan_ok=True)
 
 
-def test_a_family_of_true_null_hypotheses_rarely_yields_a_verdict():
-    wrong, number = 0, 20
-    for seed in range(number):
-        frames = [
-            values(figure, name, 1.0, modules=4, sensors=2, seed=seed)
-            for figure in ("linearity", "repeatability")
-            for name in ("old", "new")
-        ]
-        made = compared(offer(*frames))
-        wrong += bool(len(made.decided))
-    assert wrong <= 4  # binomial, 20 trials at 5 %: more than 4 has a probability of 0.003
+def test_alike_generations_rarely_yield_a_verdict_and_no_figure_rejects_more_often_than_it_may():
+    number, small = 30, {"sensors": 2, "sessions": 0, "levels": 4}
+    made = [alike(seed, (small, small), with_spreads=False) for seed in range(number)]
+    table = pd.concat([one.table for one in made])
+    # binomial, 30 trials at 5 %: more than 5 has a probability of 0.003, more than 6 one of 0.0006
+    assert sum(len(one.decided) > 0 for one in made) <= 5
+    rejected = table["p"].lt(0.05).groupby(table["figure"]).sum()
+    assert rejected.max() <= 6
+    tested = table["p"].notna().groupby(table["figure"]).sum()
+    assert {name for name in tested.index if tested[name] == number} >= {
+        "slope",
+        "zero_signal",
+        "gauge_factor",
+    }
+    assert tested["strain_error"] == 0
+
+
+def test_more_runs_of_alike_modules_are_no_improvement():
+    few, many = (
+        {"modules": 6, "sessions": 0, "repetitions": 2},
+        {"modules": 6, "sessions": 0, "repetitions": 8},
+    )
+    made = [alike(seed, (few, many), with_spreads=False) for seed in range(3)]
+    table = pd.concat([one.table for one in made]).set_index("figure")
+    # SDs of two runs come out smaller on average than those of eight: as if more runs repeated worse
+    assert (
+        table.loc["repeatability", "estimate_second"] > table.loc["repeatability", "estimate_first"]
+    ).any()
+    assert table.loc["repeatability", "verdict"].eq("not tested").sum() >= 2
+    assert table.loc["repeatability", "label"].str.startswith("noise").sum() >= 2
+    assert table.loc["slope", "verdict"].ne("not tested").all()
+
+
+def test_figures_of_pooled_components_are_estimates_without_a_test_or_a_margin():
+    frames = [values("strain_error", n, m, unit="mm/mm") for n, m in (("old", 2.0), ("new", 1.0))]
+    made = compared(offer(*frames), margins={"strain_error": (0.5, "mm/mm")})
+    found = row(made, "strain_error")
+    assert found["verdict"] == "not tested"
+    assert found["label"] == "its uncertainty is common to the generation"
+    assert found["difference_or_ratio"] == pytest.approx(-1.0, abs=0.2)
+    assert all(math.isnan(found[name]) for name in ("low", "high", "df", "p", "p_adjusted", "margin"))
+    assert ["without a test" in n.what for n in made.notices] == [True]
+    assert made.decided.empty
+    assert [r["figure"] for r in generation_findings(made)[0].facts[0].untested] == ["strain_error"]
+
+
+def test_noise_that_may_be_all_of_the_difference_leaves_none_and_a_larger_difference_is_tested():
+    def compared_with(noise_of_old: float, old: float = 2.3):
+        frames = [values("linearity", n, m) for n, m in (("old", old), ("new", 1.8))]
+        frames[0]["noise"], frames[1]["noise"] = noise_of_old, 0.1
+        return row(compared(offer(*frames)), "linearity")["verdict"]
+
+    assert compared_with(0.1) == "better"
+    assert compared_with(1.0) == "not tested"
+    assert compared_with(1.0, old=4.0) == "better"
+
+
+def test_few_degrees_of_freedom_make_an_sd_too_small_as_published():
+    # c4 for samples of 2, 5 and 10 (1, 4 and 9 degrees of freedom): Montgomery, Introduction to Statistical
+    # Quality Control, appendix VI: 0.7979, 0.9400, 0.9727
+    figures = pd.DataFrame(
+        {
+            "estimate": 1.0,
+            "degrees_of_freedom": [1.0, 4.0, 9.0],
+            "kind": "spread",
+            "standard_uncertainty": NAN,
+        }
+    )
+    c4 = np.sqrt(1.0 - noise_of(figures) ** 2)
+    assert c4.to_numpy() == pytest.approx([0.7979, 0.9400, 0.9727], abs=6e-5)
+    magnitude = figures.assign(kind="estimate", standard_uncertainty=0.3)
+    assert noise_of(magnitude).tolist() == [0.3] * 3
 
 
 @pytest.fixture(scope="module")

@@ -34,6 +34,8 @@ KINDS = (
     "hysteresis.html",
     "drift.html",
     "pressure.html",
+    "generations.html",
+    "planning.html",
     "recordings.html",
     "method.html",
     "method-lines.html",

@@ -6,6 +6,7 @@ import re
 from dataclasses import replace
 
 import pandas as pd
+import plotly.graph_objects as go
 import pytest
 
 from campaign.analyses.generation_figures import FIGURES
@@ -73,12 +74,24 @@ def test_figures_draw_zero_or_one_and_every_row(results):
     assert page is not None
     figures = {figure.name: ready(figure) for figure in page.figures}
     rows = sum(len(figure.traces) for name, figure in figures.items() if name != "modules")
-    assert rows == len(results.generations.table.dropna(subset=["difference_or_ratio"]))
+    table = results.generations.table.dropna(subset=["difference_or_ratio"])
+    assert rows == len(table[table["verdict"] != "not tested"]) > 0
+    assert set(table.loc[table["verdict"] == "not tested", "figure"]) == {
+        "strain_error",
+        "expanded_uncertainty",
+    }
     centres = {
         figures["ratios"].layout["shapes"][0]["x0"],
         figures["differences-1"].layout["shapes"][0]["x0"],
     }
     assert centres == {1.0, 0.0}
+
+
+def test_every_figure_is_valid_in_the_schema_of_the_plot_library(results):
+    for page in (generations_page(results), planning_page(results)):
+        for figure in page.figures:
+            go.Figure(data=list(ready(figure).traces), layout=ready(figure).layout)
+            assert figure.caption.endswith(".")
 
 
 def row(**given) -> dict[str, object]:
@@ -95,6 +108,8 @@ def test_numbers_carry_units_and_two_digits_of_their_interval():
     ratio = row(kind="ratio", difference_or_ratio=0.48, low=0.32, high=0.69)
     assert comparison_words(ratio) == "0.48 [0.32, 0.69] times"
     assert comparison_words(row(kind="ratio")) == "not identifiable from this design"
+    untested = row(difference_or_ratio=-0.0036, verdict="not tested")
+    assert comparison_words(untested) == "−0.36\u202f% (no interval)"
     assert margin_words(row(margin=0.005)) == "±0.500\u202f%"
     assert margin_words(row(margin=0.25, kind="ratio")) == "×0.800 to ×1.25"
     assert shown_unit("pF/(mm/mm)") == (0.01, "pF/%")

@@ -334,6 +334,8 @@ def test_any_quantity_may_stand_as_the_signal() -> None:
         ("[plan]\nlevels = 'many'\n", "wrong-type"),
         ("[plan]\nmodules = 0\n", "wrong-type"),
         ("[[earlier]]\n", "value-missing"),
+        ('[[earlier]]\narchive = ""\n', "value-missing"),
+        ('[[earlier]]\nfolder = "../a"\narchive = "a.zip"\n', "wrong-value"),
         ("[site]\nplot_library = 3\n", "wrong-type"),
     ],
 )
@@ -427,3 +429,22 @@ def test_every_key_of_the_format_is_known_at_its_place(everything: Description) 
 def test_the_nearest_word_is_found_whatever_its_case() -> None:
     assert nearest("Modul", ["module", "sensor"]) == "module"
     assert nearest("qqqq", ["module", "sensor"]) is None
+
+
+def test_an_earlier_campaign_is_a_folder_or_an_archive():
+    text = (
+        'format = 1\n[campaign]\ntitle = "t"\n[[earlier]]\nfolder = "../a"\n[[earlier]]\narchive = "b.zip"\n'
+    )
+    assert read_description(text.encode()).earlier == ({"folder": "../a"}, {"archive": "b.zip"})
+
+
+def test_margins_are_read_in_the_unit_of_the_limit_and_per_cent_else_is_a_ratio():
+    text = (
+        'format = 1\n[campaign]\ntitle = "t"\n[limits.margins]\n'
+        'strain_error = "0.005"\nlinearity = "0.5 %FSO"\nslope = "10 %"\n'
+    )
+    assert read_description(text.encode()).margins == {
+        "strain_error": (0.005, "mm/mm"),
+        "linearity": (0.5, "%FSO"),
+        "slope": (0.1, "1"),
+    }
