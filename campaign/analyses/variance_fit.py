@@ -132,6 +132,7 @@ def fit_generation(
     weights = _line_weights(model)
     line = weights @ fit.coefficients
     covariances = {name: _in_x(model, fit.covariances[name]) for name in model.terms}
+    effects = random_effects(fit)
     return GenerationFit(
         model=model,
         fit=fit,
@@ -142,8 +143,8 @@ def fit_generation(
         covariances=covariances,
         residual_variance=float(fit.residual_variance),
         intervals=_intervals(model, fit, places, limits_at),
-        effects=random_effects(fit),
-        conditional=conditional_residuals(fit),
+        effects=effects,
+        conditional=conditional_residuals(fit, effects),
         marginal=marginal_residuals(fit),
     )
 

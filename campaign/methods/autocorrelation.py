@@ -128,11 +128,11 @@ def _pooled_correlation(residuals: FloatArray, counts: IntArray, removed: int) -
     lines the lags are those of the uncorrected sequence: what is put back would lengthen it without end.
     """
     longest = int(counts.max(initial=0))
-    last_lag = int(np.median(counts)) // 2 if len(counts) else 0
+    last_lag = _whole_median(counts) // 2 if len(counts) else 0
     if last_lag < 1 or not np.any(residuals):
         return np.ones(1)
     sums = _lagged_sums(residuals, counts, longest)[: last_lag + 1]
-    pairs_each = np.clip(counts[:, None] - np.arange(last_lag + 1)[None, :], 0, None).astype(float)
+    pairs_each = np.maximum(counts[:, None] - np.arange(last_lag + 1)[None, :], 0).astype(float)
     pairs = pairs_each.sum(axis=0)
     shares = pairs_each[:, 1:] / counts[:, None]
     kept = _initial_positive(sums / pairs)
@@ -146,6 +146,12 @@ def _pooled_correlation(residuals: FloatArray, counts: IntArray, removed: int) -
         if close:
             break
     return np.asarray(kept / kept[0])
+
+
+def _whole_median(counts: IntArray) -> int:
+    """Median, rounded down."""
+    ordered = np.sort(counts)
+    return int(ordered[(len(counts) - 1) // 2] + ordered[len(counts) // 2]) // 2
 
 
 def _lagged_sums(residuals: FloatArray, counts: IntArray, longest: int) -> FloatArray:

@@ -7,6 +7,7 @@ includes the uncertainty of the fixed part (Henderson's C matrix), at the estima
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
@@ -156,10 +157,15 @@ def marginal_residuals(fit: NestedModelFit) -> FloatArray:
     return np.asarray(fit.model.response - fit.model.fixed @ fit.coefficients)
 
 
-def conditional_residuals(fit: NestedModelFit) -> FloatArray:
-    """Residuals about fixed part and predicted effects, y − X β̂ − Σ Z û, (N,)."""
+def conditional_residuals(
+    fit: NestedModelFit, predicted: Mapping[str, RandomEffects] | None = None
+) -> FloatArray:
+    """Residuals about fixed part and predicted effects, y − X β̂ − Σ Z û, (N,).
+
+    *predicted* are the :func:`random_effects` where they are known already.
+    """
     residuals = marginal_residuals(fit)
-    for number, effects in enumerate(random_effects(fit).values()):
+    for number, effects in enumerate((predicted or random_effects(fit)).values()):
         term, rows = fit.model.terms[number], fit.compression.term_rows[number]
         table = np.zeros((rows.units * rows.copies, term.columns.shape[1]))
         table[(rows.unit * rows.copies + rows.copy)[effects.first_row]] = effects.estimates

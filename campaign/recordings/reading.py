@@ -19,7 +19,7 @@ from campaign.recordings.description import Description
 from campaign.recordings.dialect import Layout, find_layout
 from campaign.recordings.encoding import plain_text
 from campaign.recordings.fast_reader import PlainTable, read_plain
-from campaign.recordings.gate import Gated, pass_gate
+from campaign.recordings.gate import Gated, count_line_feeds, pass_gate
 from campaign.recordings.line_parser import NEIGHBOURS, Ending, NumberedLine, ParsedLines, parse_lines
 from campaign.recordings.recording import Channel, Recording
 from campaign.recordings.remarks import Remark, gather_remarks
@@ -158,7 +158,7 @@ def _body(text: bytes, layout: Layout) -> tuple[bytes, Ending]:
     """Return the table's lines and how they end."""
     body = text[layout.body_start :]
     terminated = body.endswith(b"\n")
-    lines = body.count(b"\n") + (0 if terminated else 1)
+    lines = count_line_feeds(body) + (0 if terminated else 1)
     last = layout.first_row_line + lines - 1
     if terminated or not body:
         return body, Ending(last)

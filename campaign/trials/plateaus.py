@@ -57,10 +57,11 @@ def find_plateaus(reference: FloatArray) -> tuple[IntArray, IntArray]:
         return none, none
     band = max(4.0 * noise, SMALLEST_BAND * span)
     starts, stops = _rests(reference, noise, span)
-    starts, stops = _joined(reference, *_long_enough(starts, stops), band)
+    starts, stops = _long_enough(starts, stops)
     if len(starts) == 0:
         return none, none
-    starts, stops = _long_enough(*_widened(reference, starts, stops, band))
+    starts, stops, levels = _joined(reference, starts, stops, band)
+    starts, stops = _long_enough(*_widened(reference, starts, stops, levels, band))
     rests = float(np.sum(stops - starts)) / len(reference)
     return (starts, stops) if rests >= SMALLEST_REST_SHARE else (none, none)
 
@@ -166,25 +167,28 @@ def _medians(values: FloatArray, starts: IntArray, stops: IntArray) -> FloatArra
     return np.asarray((ordered[first + (lengths - 1) // 2] + ordered[first + lengths // 2]) / 2.0)
 
 
-def _joined(values: FloatArray, starts: IntArray, stops: IntArray, band: float) -> tuple[IntArray, IntArray]:
-    """Neighbouring stretches at one level made one, unless the reference was away for a while."""
-    if len(starts) < 2:
-        return starts, stops
+def _joined(
+    values: FloatArray, starts: IntArray, stops: IntArray, band: float
+) -> tuple[IntArray, IntArray, FloatArray]:
+    """Neighbours at one level made one, unless the reference was away for a while; and all levels."""
     medians = _medians(values, starts, stops)
     gaps = starts[1:] - stops[:-1]
     shorter = np.minimum((stops - starts)[1:], (stops - starts)[:-1])
     apart = (np.abs(np.diff(medians)) > band) | (gaps > np.maximum(SHORTEST_PLATEAU, shorter))
-    first = np.concatenate([[True], apart])
-    last = np.concatenate([apart, [True]])
-    return starts[first], stops[last]
+    if apart.all():
+        return starts, stops, medians
+    starts, stops = starts[np.append(True, apart)], stops[np.append(apart, True)]
+    return starts, stops, _medians(values, starts, stops)
 
 
-def _widened(values: FloatArray, starts: IntArray, stops: IntArray, band: float) -> tuple[IntArray, IntArray]:
+def _widened(
+    values: FloatArray, starts: IntArray, stops: IntArray, levels: FloatArray, band: float
+) -> tuple[IntArray, IntArray]:
     """Edges moved outwards over samples in the band about the level, up to the first that is not."""
-    medians = _medians(values, starts, stops)
     place, gap = expand(np.append(0, stops), np.append(starts, len(values)))
-    after = (gap > 0) & (np.abs(values[place] - medians[np.maximum(gap - 1, 0)]) > band)
-    before = (gap < len(starts)) & (np.abs(values[place] - medians[np.minimum(gap, len(starts) - 1)]) > band)
+    beside = values[place]
+    after = (gap > 0) & (np.abs(beside - levels[np.maximum(gap - 1, 0)]) > band)
+    before = (gap < len(starts)) & (np.abs(beside - levels[np.minimum(gap, len(starts) - 1)]) > band)
     left, not_yet = place[after], place[before]
     outside = np.append(left, len(values))
     new_stops = np.minimum(outside[np.searchsorted(outside, stops)], np.append(starts[1:], len(values)))

@@ -117,7 +117,7 @@ def _readings_of_table(trial: Trial, reference: FloatArray) -> StaircaseFeatures
     given = trial.direction[kept] if trial.direction is not None else np.full(len(kept), np.nan)
     timed = trial.time_s is not None and trial.time_is_ordered
     times = trial.time_s[kept] - trial.time_s[kept[0]] if timed and trial.time_s is not None else np.nan
-    columns = _means_of_channels(trial, kept, np.ones(len(kept), dtype=np.int64))
+    columns = _means_of_channels(trial, kept, np.arange(len(kept)))
     columns |= {
         "direction": _given_directions(levels, given),
         "signal": trial.signal[kept],
@@ -181,9 +181,10 @@ def _readings_of_log(trial: Trial, reference: FloatArray) -> StaircaseFeatures:
     settled = _settled(means)
     notices += _settled_notice(trial, settled)
     begun, ended = times[rows[starts[plateau]]], times[rows[stops[plateau] - 1]]
-    middle = _stretch_mean(times[averaged], counts)
-    columns = _means_of_channels(trial, averaged, counts)
-    levels = _stretch_mean(reference[averaged], counts)
+    stretch = np.repeat(np.arange(len(counts)), counts)
+    middle = _stretch_mean(times[averaged], stretch)
+    columns = _means_of_channels(trial, averaged, stretch)
+    levels = _stretch_mean(reference[averaged], stretch)
     unknown = np.full(len(counts), np.nan)
     columns |= {
         "direction": plateau_directions(levels),
@@ -208,7 +209,7 @@ def _readings_of_log(trial: Trial, reference: FloatArray) -> StaircaseFeatures:
 def _plateaus_of_log(trial: Trial, reference: FloatArray, rows: IntArray) -> tuple[IntArray, IntArray]:
     """Plateaus as places among *rows*: from the level column where there is one, else from the reference."""
     if trial.level is None:
-        return find_plateaus(reference[rows])
+        return find_plateaus(reference[rows] if len(rows) < len(reference) else reference)
     level = trial.level[rows]
     changes = np.flatnonzero(np.diff(level) != 0) + 1
     starts, stops = np.concatenate([[0], changes]), np.concatenate([changes, [len(level)]])
@@ -292,17 +293,21 @@ def _largest_before(levels: FloatArray) -> IntArray:
     return np.concatenate([[0], places[:-1]]).astype(np.int64)
 
 
-def _stretch_mean(values: FloatArray, counts: IntArray) -> FloatArray:
-    """Mean of the finite values of consecutive stretches; NaN where there are none."""
-    codes = np.repeat(np.arange(len(counts)), counts)
+def _stretch_mean(values: FloatArray, stretch: IntArray) -> FloatArray:
+    """Mean of the finite values of each stretch, by the stretch of each value; NaN where there are none."""
+    stretches = int(stretch[-1]) + 1
     finite = np.isfinite(values)
-    held = np.bincount(codes[finite], minlength=len(counts))
-    sums = np.bincount(codes[finite], values[finite], minlength=len(counts))
-    return np.asarray(np.divide(sums, held, out=np.full(len(counts), np.nan), where=held > 0))
+    if finite.all():
+        return np.asarray(np.bincount(stretch, values) / np.bincount(stretch))
+    values, stretch = values[finite], stretch[finite]
+    held = np.bincount(stretch, minlength=stretches)
+    sums = np.bincount(stretch, values, minlength=stretches)
+    return np.asarray(np.divide(sums, held, out=np.full(stretches, np.nan), where=held > 0))
 
 
-def _means_of_channels(trial: Trial, rows: IntArray, counts: IntArray) -> dict[str, object]:
+def _means_of_channels(trial: Trial, rows: IntArray, stretch: IntArray) -> dict[str, object]:
     """Means over the averaged rows of every channel that a reading keeps."""
+    unknown = np.full(int(stretch[-1]) + 1, np.nan)
     channels = {
         "strain": trial.strain,
         "elongation_mm": trial.elongation_mm,
@@ -312,7 +317,7 @@ def _means_of_channels(trial: Trial, rows: IntArray, counts: IntArray) -> dict[s
         "pressure_kpa": trial.pressure_kpa,
     }
     return {
-        name: _stretch_mean(values[rows], counts) if values is not None else np.full(len(counts), np.nan)
+        name: _stretch_mean(values[rows], stretch) if values is not None else unknown.copy()
         for name, values in channels.items()
     }
 

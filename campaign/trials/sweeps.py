@@ -9,7 +9,6 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field
-from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -246,21 +245,25 @@ def _legs(values: FloatArray) -> IntArray:
 def _turns(values: FloatArray, least: float) -> list[int]:
     """Places where the series turns and then comes back by more than *least*."""
     turns: list[int] = []
-    best, sign = 0, 0
-    low = high = 0
-    for place, value in enumerate(values.tolist()):
-        if sign == 0:
-            low = place if value < values[low] else low
-            high = place if value > values[high] else high
-            if values[high] - values[low] > least:
-                sign = 1 if high > low else -1
-                best = max(high, low)
-        elif sign * (value - values[best]) > 0:
-            best = place
-        elif sign * (values[best] - value) > least:
+    best, sign = _first_leg(values, least)
+    extreme = float(values[best])
+    for place, value in enumerate(values[best:].tolist(), best):
+        if sign * (value - extreme) > 0:
+            best, extreme = place, value
+        elif sign * (extreme - value) > least:
             turns.append(best)
-            best, sign = place, -sign
+            best, extreme, sign = place, value, -sign
     return turns
+
+
+def _first_leg(values: FloatArray, least: float) -> tuple[int, int]:
+    """Return the place from which the series is known to rise (1) or fall (−1), and which; 0 for neither."""
+    lowest, highest = np.minimum.accumulate(values), np.maximum.accumulate(values)
+    wide = np.flatnonzero(highest - lowest > least)
+    if not len(wide):
+        return len(values) - 1, 0
+    place = int(wide[0])
+    return place, 1 if values[place] == highest[place] else -1
 
 
 def _points_of(trial: Trial, values: FloatArray, rows: IntArray, legs: IntArray) -> Columns:
@@ -285,12 +288,13 @@ def _turns_apart(points: Columns) -> Columns:
 def _stepped(trial: Trial, values: FloatArray, rows: IntArray, legs: IntArray, signs: IntArray) -> Columns:
     """Points of a sweep that never rests: means of equal steps of the influence on every leg."""
     parts = []
-    for leg in np.unique(legs):
-        own = np.flatnonzero(legs == leg)
-        low, high = float(values[rows[own]].min()), float(values[rows[own]].max())
+    for _, start, stop in _each_leg(legs):
+        own = np.arange(start, stop)
+        swept = values[rows[start:stop]]
+        low, high = float(swept.min()), float(swept.max())
         if high <= low:
             continue
-        step = np.minimum(((values[rows[own]] - low) / (high - low) * STEPS).astype(np.int64), STEPS - 1)
+        step = np.minimum(((swept - low) / (high - low) * STEPS).astype(np.int64), STEPS - 1)
         order = np.argsort(step, kind="stable")
         edges = np.flatnonzero(np.diff(step[order])) + 1
         starts, stops = np.concatenate([[0], edges]), np.concatenate([edges, [len(own)]])
@@ -354,11 +358,17 @@ def _dwell(trial: Trial, chosen: IntArray, owner: IntArray, points: int) -> Floa
     return np.asarray(last - first)
 
 
+def _each_leg(legs: IntArray) -> list[tuple[int, int, int]]:
+    """Number, first row and one past the last of every leg."""
+    stops = np.append(np.flatnonzero(np.diff(legs)) + 1, len(legs)).tolist()
+    return [(int(legs[start]), start, stop) for start, stop in zip([0, *stops[:-1]], stops) if stop > start]
+
+
 def _leg_signs(values: FloatArray, legs: IntArray) -> IntArray:
     """1 for every leg that rises over its rows, −1 for one that falls; shape (legs,)."""
     signs = np.zeros(int(legs.max(initial=0)) + 1, dtype=np.int64)
-    for leg in np.unique(legs):
-        own = values[np.flatnonzero(legs == leg)]
+    for leg, start, stop in _each_leg(legs):
+        own = values[start:stop]
         if len(own) > 1:
             signs[leg] = int(np.sign(np.dot(np.arange(len(own)) - (len(own) - 1) / 2.0, own)))
         else:
@@ -380,11 +390,14 @@ def _curve(influence: FloatArray, signal: FloatArray) -> tuple[FloatArray, Float
     if len(influence) <= CURVE_POINTS:
         return influence.copy(), signal.copy()
     edges = np.linspace(0, len(influence), CURVE_POINTS // 4 + 1).astype(np.int64)
-    kept = {0, len(influence) - 1}
-    for start, stop in pairwise(edges):
-        for series in (influence[start:stop], signal[start:stop]):
-            kept |= {start + int(series.argmin()), start + int(series.argmax())}
-    chosen = np.array(sorted(kept), dtype=np.int64)
+    starts, stops = edges[:-1, None], edges[1:, None]
+    places = np.minimum(starts + np.arange(int((stops - starts).max())), stops - 1)  # the last one repeated
+    found = [
+        starts[:, 0] + at
+        for series in (influence[places], signal[places])
+        for at in (series.argmin(axis=1), series.argmax(axis=1))
+    ]
+    chosen = np.unique(np.concatenate([[0, len(influence) - 1], *found]))
     return influence[chosen], signal[chosen]
 
 
