@@ -3,18 +3,23 @@
 from __future__ import annotations
 
 import json
+import shutil
+import zipfile
 from pathlib import Path
 
 import pytest
 
 from campaign.analyses.earlier import unique_labels
 from campaign.campaign_reading import read_campaign
+from campaign.cli import main
 from campaign.earlier_campaigns import read_earlier
 from campaign.pipeline import analyse, report
 from tests.pages.small_campaign import Sketch, write_campaign
 
 OLD = Sketch(generations=("first",), modules=3, sensors=("AB", "BC"), sessions=1, limits="")
 NEW = Sketch(generations=("second",), modules=3, sensors=("AB", "BC"), sessions=1, limits="")
+
+FEW = Sketch(generations=("second",), modules=2, sensors=("AB", "BC"), sessions=1, runs=2, limits="")
 
 
 def named(folder: Path, *earlier: str, key: str = "folder") -> Path:
@@ -160,6 +165,99 @@ def test_a_campaign_never_joins_itself_or_another_twice(old, new):
         f"{old}/. is this campaign, or is named twice",
     ]
     assert len(results.earlier) == 1
+
+
+@pytest.fixture(scope="module")
+def sealed(old, tmp_path_factory) -> Path:
+    file = tmp_path_factory.mktemp("sealed") / "older.zip"
+    assert main(["seal", str(old), "--into", str(file)]) == 0
+    return file
+
+
+def tables_of(site: Path) -> dict[str, bytes]:
+    named_otherwise = ("schema.json", "earlier_campaigns.csv", "earlier_files.csv", "files.csv")
+    return {p.name: p.read_bytes() for p in (site / "tables").iterdir() if p.name not in named_otherwise}
+
+
+def test_a_sealed_archive_joins_as_the_folder_does_and_is_sealed_in_its_turn(tmp_path, old, sealed, capsys):
+    for name, place, key in (("one", "old", "folder"), ("two", "older.zip", "archive")):
+        folder = named(write_campaign(tmp_path / name / "new", FEW), f"../{place}", key=key)
+        shutil.copytree(old, folder.parent / "old") if key == "folder" else shutil.copy(sealed, folder.parent)
+        assert report(folder, tmp_path / name / "site", fail_on_set_aside=True) == 0
+    by_folder, by_archive = tmp_path / "one" / "site", tmp_path / "two" / "site"
+    made, again = tables_of(by_folder), tables_of(by_archive)
+    # the description is another file by its name of the earlier campaign; what it leads to is the same
+    own = ("recordings.csv",)
+    assert {name for name in made if made[name] != again[name]} <= set(own)
+    assert "Older panels" in made["generations.csv"].decode() or b"first" in made["generations.csv"]
+    hashes = [(site / "tables" / "earlier_files.csv").read_text("utf-8") for site in (by_folder, by_archive)]
+    assert hashes[0].replace("../old", "../older.zip") == hashes[1]
+    words = (by_archive / "generations.html").read_text("utf-8") + (by_archive / "provenance.html").read_text(
+        "utf-8"
+    )
+    assert "../older.zip" in words
+    assert "campaign-earlier-" not in words
+
+    archive = tmp_path / "newer.zip"
+    assert main(["seal", str(tmp_path / "two" / "new"), "--into", str(archive)]) == 0
+    with zipfile.ZipFile(archive) as whole:
+        (inside,) = (name for name in whole.namelist() if name.endswith("/campaigns/older.zip"))
+        assert whole.read(inside) == sealed.read_bytes()
+    capsys.readouterr()
+    assert main(["verify", str(archive), "--recompute"]) == 0
+    assert "every figure agrees within its tolerance" in " ".join(capsys.readouterr().out.split())
+
+
+def repacked(file: Path, into: Path, name: str, content: bytes) -> Path:
+    """Write the members of a zip file anew, sound as a zip file, with other bytes under the end of a name."""
+    with zipfile.ZipFile(file) as was, zipfile.ZipFile(into, "w") as now:
+        for member in was.namelist():
+            now.writestr(member, content if member.endswith(name) else was.read(member))
+    return into
+
+
+def damaged(file: Path, into: Path) -> Path:
+    content = bytearray(file.read_bytes())
+    content[len(content) // 2] ^= 1
+    into.write_bytes(content)
+    return into
+
+
+def climbing(into: Path) -> Path:
+    with zipfile.ZipFile(into, "w") as archive:
+        archive.writestr("../evil.txt", "evil")
+    return into
+
+
+@pytest.mark.parametrize(
+    ("spoil", "said"),
+    [
+        (lambda file, into: damaged(file, into), "damaged"),
+        (
+            lambda file, into: repacked(file, into, "trials/run_000.csv", b"length [mm]\n1\n"),
+            "not as it was sealed",
+        ),
+        (lambda file, into: climbing(into), "climbs out of the folder"),
+        (lambda file, into: into.write_bytes(b"no zip file"), "zip"),
+        (lambda file, into: None, "No such file"),
+    ],
+)
+def test_an_archive_that_is_damaged_hostile_or_gone_is_a_notice(tmp_path, new, sealed, spoil, said):
+    spoil(sealed, tmp_path / "broken.zip")
+    earlier = read_earlier(named(new, "../broken.zip", key="archive"), read_campaign(new))
+    assert [(n.code, n.weight) for n in earlier.notices] == [("earlier-not-joined", "set aside")]
+    assert said in earlier.notices[0].what
+    assert "broken.zip" in earlier.notices[0].what
+    assert str(tmp_path) not in earlier.notices[0].what
+    assert "campaign-earlier-" not in earlier.notices[0].what
+    assert not (tmp_path / "evil.txt").exists()
+
+
+def test_an_archive_is_joined_once_however_often_it_is_named(new, sealed):
+    folder = named(new, str(sealed), f"{sealed.parent}/./{sealed.name}", key="archive")
+    earlier = read_earlier(folder, read_campaign(folder))
+    assert [n.what.endswith("is named twice") for n in earlier.notices] == [True]
+    assert len(earlier.campaigns) == 1
 
 
 def test_campaigns_that_name_each_other_are_followed_one_step_only(tmp_path, new):

@@ -146,8 +146,7 @@ def render_site(
     _check_slugs(pages)
     jinja = environment(further_templates)
     written: dict[str, bytes] = dict(files or {})
-    if frame.rehearsal:
-        pages = [_as_rehearsal(page) for page in pages]
+    pages = pages_as_marked(frame, pages)
     written |= table_files([*tables, *(t for page in pages for t in page.tables)], reference, frame.origin)
     html = {}
     for page in pages:
@@ -167,6 +166,11 @@ def render_site(
     written |= {name: text.encode("utf-8") for name, text in with_places_of_anchors(html, pages).items()}
     written |= asset_files(templates_folder(), plot_library)
     return dict(sorted(written.items()))
+
+
+def pages_as_marked(frame: SiteFrame, pages: Sequence[Page]) -> Sequence[Page]:
+    """Return *pages*; those of a rehearsal say in every figure and caption that nothing was measured."""
+    return [_as_rehearsal(page) for page in pages] if frame.rehearsal else pages
 
 
 def _as_rehearsal(page: Page) -> Page:
