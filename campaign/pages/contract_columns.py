@@ -320,6 +320,7 @@ _MEANINGS: dict[str, str] = {
     "sd_mm": "standard uncertainty of the sum, from the whole adjusted covariance",
     "sd_independent_mm": "the same if edges were independent, for comparison only",
     "sd_monte_carlo_mm": "SD of the sum by Monte Carlo",
+    "network_redundancy": "edges solved for less coordinates solved for",
     "chi_square": "sum of squares of the residuals against the known covariance of the lengths",
     "chi_square_limit": "its 5 % limit for one test",
     "sigma0": "square root of chi_square over its redundancy",
