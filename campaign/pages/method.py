@@ -238,10 +238,14 @@ def _budget_in_words(budget: Budget) -> dict[str, str]:
     use = conditions_in_words(budget.conditions, budget.reference)
     unknown = sorted({source for sources in budget.missing.values() for source in sources})
     return {
-        "use": "; ".join(f"{what.lower()}: {amount}" for what, amount in use),
+        "use": "; ".join(_condition(what, amount) for what, amount in use if amount != "not stated"),
         "unknown": ", ".join(unknown),
         "monte_carlo": "yes" if budget.totals["monte_carlo_low"].notna().any() else "",
     }
+
+
+def _condition(what: str, amount: str) -> str:
+    return f"{what[0].lower()}{what[1:]} {amount}".replace(", up to", " up to").replace("known:", "known")
 
 
 def _temperatures(span: Span | None) -> str:

@@ -76,8 +76,7 @@ REFERENCES: tuple[Reference, ...] = (
         "A testing procedure for use in geodetic networks",
         "1968",
         institution="Netherlands Geodetic Commission, Publications on Geodesy",
-        volume="2",
-        number="5",
+        number="New Series 2(5)",
     ),
     _work(
         "Cochran 1977",
