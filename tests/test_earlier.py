@@ -9,6 +9,7 @@ from pathlib import Path
 import pytest
 
 from campaign.analyses.earlier import Joined, unique_labels
+from campaign.pages.generations import comparison_figures
 from campaign.pages.site import build_site
 from campaign.pipeline import analyse, read_campaign, read_earlier, report
 from tests.pages.small_campaign import Sketch, write_campaign
@@ -136,6 +137,14 @@ def test_a_shorter_range_is_compared_over_what_both_reach(tmp_path, new):
     assert results.earlier[0].upper == pytest.approx(0.3)
     assert results.earlier[0].full_scale == pytest.approx(0.3)
     assert results.earlier[0].restricted is not None
+    # the eye is not given to compare what the table does not
+    drawn = {figure.name: figure for figure in comparison_figures(made, results.earlier)}["modules"].data
+    assert set(drawn.loc[drawn["generation"] == "first", "figure"]) == {
+        "slope",
+        "gauge_factor",
+        "zero_signal",
+    }
+    assert {"linearity", "strain_error"} <= set(made.modules["figure"])
     # this campaign's own figures stay those of its whole range
     assert results.calibration is not None
     assert results.calibration.sensor_lines["strain_high"].max() == pytest.approx(0.4)
