@@ -12,7 +12,7 @@ from campaign.analyses.layout_tables import placement_table
 from campaign.pages import slugs
 from campaign.pages.drawing import ready
 from campaign.pages.layout_shapes import shape_figure
-from campaign.pages.layout_words import line_words, placement_sentence
+from campaign.pages.layout_words import line_words, placement_caption, placement_sentence
 from campaign.pages.page_data import folded_figures, script_value
 
 Key = tuple[str, str, str, int, str]
@@ -26,7 +26,8 @@ def layout_script_address(module: str, line: str) -> str:
 def layout_scripts(layout: Layout | None) -> dict[str, bytes]:
     """Return a classic script a module and choice of lines that hands page 8 its placements, by address.
 
-    Each holds folded figures by the number of the placement, and what is said of them.
+    Each holds folded figures by the number of the placement, their captions, and what is
+    said of them.
     """
     if layout is None:
         return {}
@@ -39,7 +40,8 @@ def layout_scripts(layout: Layout | None) -> dict[str, bytes]:
             views = {key: ready(shape_figure(own, generations)) for key, own in chosen.items()}
             said = {key: placement_sentence(own, adjusted[own.key, choice]) for key, own in chosen.items()}
             address = layout_script_address(module, choice)
-            content = {**folded_figures(views), "said": said}
+            captions = {key: placement_caption(own) for key, own in chosen.items()}
+            content = {**folded_figures(views), "said": said, "captions": captions}
             start = b"(window.campaignShapes = window.campaignShapes || {})["
             made[address] = start + orjson.dumps(address) + b"] = " + script_value(content) + b";\n"
     return made

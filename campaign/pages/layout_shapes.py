@@ -241,25 +241,28 @@ def shape_figure(own: Placement, generations: Sequence[str], caption: str = "", 
             anchor=f"x{suffix}",
             constrain="domain",
         )
-        head = label(_head(own, frame, panel.factor), 0, 1, axes=suffix, shift=(0, 12), paper=True)
-        notes.append(head | {"font": {"size": 13, "color": palette.INK}})
+        head = label("", 0, 1, axes=suffix, shift=(0, 20), paper=True)
+        first, second = _head(own, frame, panel.factor)
+        text = f"{drawn.plain(first)}<br>{drawn.plain(second)}"
+        notes.append(head | {"text": text, "align": "left", "font": {"size": 13, "color": palette.INK}})
     return Figure(
         name="shape",
         caption=caption,
         alternative=_alternative(own),
         traces=tuple(trace for panel in panels.values() for trace in panel.traces),
-        layout={**made, "annotations": notes},
+        layout={**made, "annotations": notes, "margin": {"t": 48}},
         table="layout",
         note=note,
-        height=410,
+        height=430,
     )
 
 
-def _head(own: Placement, frame: str, factor: float) -> str:
-    name = f"{own.module}, placement {own.name}"
-    by = f"{own.datum[0]} kept, {own.datum[1]} on +x" if frame == BY_DATUM else "best rigid fit"
+def _head(own: Placement, frame: str, factor: float) -> tuple[str, str]:
+    """Two lines above a panel: whose, in which frame, and what is drawn larger."""
     larger = f"differences ×{factor:g}" if factor > 1 else "differences to scale"
-    return f"{name}: {by}; {larger}" if frame == BY_DATUM else f"{by[0].upper()}{by[1:]}; {larger}"
+    if frame == BY_DATUM:
+        return f"{own.module}, placement {own.name}", f"Datum {own.datum[0]}, {own.datum[1]}; {larger}"
+    return "After the best rigid fit", larger[0].upper() + larger[1:]
 
 
 def _alternative(own: Placement) -> str:

@@ -73,6 +73,16 @@ def verdict_words(row: Row) -> str:
 # --- of one placement
 
 
+def placement_caption(own: Placement) -> str:
+    """Return the caption of the drawing of a placement that a reader picked."""
+    said = f"{placement_name(own)}, read by {line_words(own.line)}"
+    if own.after_fit is None:
+        return f"{said}: {own.status}." if own.tests is None else f"{said}."
+    limits = numbers.limits(own.after_fit.predicted_rms_low_mm, own.after_fit.predicted_rms_high_mm, "mm")
+    size = numbers.significant(own.after_fit.rms_mm, 2, "mm")
+    return f"{said}: {size} off after the best rigid fit, predicted {limits}."
+
+
 def placement_sentence(own: Placement, p_adjusted: float = math.nan) -> str:
     """Return what is said of one placement below its drawing.
 

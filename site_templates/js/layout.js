@@ -7,11 +7,17 @@
   const given = ((window.campaignPage || {}).values || {}).layout;
   if (!place || !given || !given.modules.length || !campaign.changeFigure) return;
   const said = document.querySelector("[data-part='said']");
+  const caption = document.querySelector("#figure-shape figcaption");
+  const firstCaption = caption.lastChild.textContent;
   const unfolded = new Set();
   let current = { module: moduleOf(given.first[0]), placement: given.first[1], line: given.first[2] };
 
   function moduleOf(name) {
     return given.modules.find((one) => one.module === name);
+  }
+
+  function isFirst() {
+    return current.module.module === given.first[0] && current.placement === given.first[1] && current.line === given.first[2];
   }
 
   function address() {
@@ -72,6 +78,7 @@
     for (const axis of Object.keys(layout).filter((key) => /^[xy]axis/.test(key))) ranges[axis] = layout[axis].range;
     campaign.changeFigure("shape", figure.traces, ranges, "tables/layout.csv", layout.annotations);
     said.textContent = found.said[current.placement];
+    caption.lastChild.textContent = isFirst() ? firstCaption : " " + found.captions[current.placement];
   }
 
   /* What the lists offer of the module that is chosen. */
