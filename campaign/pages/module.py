@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Hashable
+from collections.abc import Hashable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -28,6 +28,7 @@ from campaign.pages.figures import (
 from campaign.pages.influence_sections import module_pressure_figure
 from campaign.pages.layout_sections import module_shapes
 from campaign.pages.loop_sections import module_widths_figure
+from campaign.pages.module_share import ModuleShares
 from campaign.pages.page import Page
 from campaign.pages.sensor import FIGURE_ORDER
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
@@ -55,33 +56,45 @@ class SharedTrial:
     figure: str
 
 
-def module_pages(results: CampaignResults, mapped: SkinMap) -> list[Page]:
-    """Return the page of every module that a trial names, neighbours linked in order."""
-    keys = sorted({(generation, module) for generation, module, _ in sensor_keys(results)})
+def module_pages(
+    results: CampaignResults, mapped: SkinMap, shares: ModuleShares | None = None
+) -> Iterator[Page]:
+    """Yield the page of every module that a trial names, neighbours linked in order.
+
+    *shares* are the results module by module, where they are parted already.
+    """
+    shares = shares or ModuleShares(results)
+    named = sensor_keys(results)
+    keys = sorted({(generation, module) for generation, module, _ in named})
     links = [(module, slugs.module_href(module)) for _, module in keys]
-    return [
-        replace(
-            _module_page(results, mapped, *key),
+    for i, (generation, module) in enumerate(keys):
+        sensors = [sensor for _, m, sensor in named if m == module]
+        yield replace(
+            _module_page(results, shares.of(module), mapped, generation, module, sensors),
             previous=links[i - 1] if i else None,
             following=links[i + 1] if i + 1 < len(links) else None,
         )
-        for i, key in enumerate(keys)
-    ]
 
 
-def _module_page(results: CampaignResults, mapped: SkinMap, generation: str, module: str) -> Page:
-    sensors = [sensor for _, m, sensor in sensor_keys(results) if m == module]
+def _module_page(
+    results: CampaignResults,
+    own: CampaignResults,
+    mapped: SkinMap,
+    generation: str,
+    module: str,
+    sensors: Sequence[str],
+) -> Page:
     lines = _lines_of(results, module)
-    shared, plots = shared_trials(results, module, lines)
+    shared, plots = shared_trials(own, module, lines)
     figures: list[Figure | None] = []
     if results.calibration is not None and len(lines):
         reference = results.calibration.reference
         generations = sensor_axis(results.calibration.sensor_lines).generations
         where = replace(sensor_axis(lines), generations=generations)
         figures = [
-            module_lines_figure(results, lines, reference),
+            module_lines_figure(own, lines, reference),
             module_merits_figure(results, module),
-            module_effects_figure(results, module, where),
+            module_effects_figure(own, module, where),
         ]
     figures += [module_widths_figure(results, module), module_pressure_figure(results, module)]
     return Page(
@@ -94,14 +107,13 @@ def _module_page(results: CampaignResults, mapped: SkinMap, generation: str, mod
             "module": module,
             "map": mapped,
             "sensors": [
-                (sensor, slugs.sensor_href(module, sensor), _state(results, module, sensor))
-                for sensor in sensors
+                (sensor, slugs.sensor_href(module, sensor), _state(own, module, sensor)) for sensor in sensors
             ],
             "register": _register_of(results, module),
-            "batch": _batch_of(results, module),
-            "mountings": _mountings_of(results, module),
+            "batch": _batch_of(own, module),
+            "mountings": _mountings_of(own, module),
             "shared": shared,
-            "trials": _trials_of(results, module),
+            "trials": _trials_of(own, module),
             "reference": results.readings.reference,
         },
         figures=(*(figure for figure in figures if figure is not None), *plots),

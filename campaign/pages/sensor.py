@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Hashable, Mapping, Sequence
+from collections.abc import Hashable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -20,6 +20,7 @@ from campaign.pages.drift import sensor_holds
 from campaign.pages.influence_sections import sensor_influences
 from campaign.pages.layout_sections import lengths_said
 from campaign.pages.loop_sections import sensor_loops
+from campaign.pages.module_share import ModuleShares
 from campaign.pages.page import Page
 from campaign.pages.sensor_parts import SensorParts, gather_sensors
 from campaign.pages.sensor_plots import half_widths, moved_from_line, sensor_figures_of
@@ -81,21 +82,25 @@ class TrialSection:
     shared_with: tuple[str, ...]
 
 
-def sensor_pages(results: CampaignResults, mapped: SkinMap) -> list[Page]:
-    """Return the page of every sensor that a trial names, neighbours linked in order."""
+def sensor_pages(
+    results: CampaignResults, mapped: SkinMap, shares: ModuleShares | None = None
+) -> Iterator[Page]:
+    """Yield the page of every sensor that a trial names, neighbours linked in order.
+
+    *shares* are the results module by module, where they are parted already.
+    """
+    shares = shares or ModuleShares(results)
     labels = {} if results.calibration is None else results.calibration.labels
     together = _sensors_by_trial(results.intake.trials)
     sensors = gather_sensors(results)
     laid = lengths_said(results)
     links = [(f"{s.module} {s.sensor}", slugs.sensor_href(s.module, s.sensor)) for s in sensors]
-    return [
-        replace(
-            _sensor_page(results, parts, mapped, labels, together, laid),
+    for i, parts in enumerate(sensors):
+        yield replace(
+            _sensor_page(shares.of(parts.module), parts, mapped, labels, together, laid),
             previous=links[i - 1] if i else None,
             following=links[i + 1] if i + 1 < len(links) else None,
         )
-        for i, parts in enumerate(sensors)
-    ]
 
 
 def _sensors_by_trial(trials: pd.DataFrame) -> dict[tuple[str, str], set[str]]:
@@ -224,7 +229,7 @@ def _text(value: object) -> str:
 def trial_sections(parts: SensorParts, together: Mapping[tuple[str, str], set[str]]) -> list[TrialSection]:
     """Return the sections of a sensor's trials in order of time."""
     trials = parts.trials.drop_duplicates("file").sort_values(["started", "file"], kind="stable")
-    runs = _runs_by_trial(parts)
+    runs, moved = _runs_by_trial(parts), moved_from_line(parts)
     sections: list[TrialSection] = []
     for trial in trials.to_dict("records"):
         file = str(trial["file"])
@@ -239,7 +244,7 @@ def trial_sections(parts: SensorParts, together: Mapping[tuple[str, str], set[st
                 repetition=_text(trial["repetition"]),
                 fate=_text(trial["fate"]),
                 runs=tuple(runs.get(file, ())),
-                moved=moved_from_line(parts, file),
+                moved=moved.get(file, ""),
                 shared_with=tuple(sorted(others)),
             )
         )

@@ -176,13 +176,18 @@ def layout_of_runs(runs: Sequence[tuple[str, int, str]], reference: ReferenceQua
     )
 
 
-def moved_from_line(parts: SensorParts, trial: str) -> str:
-    """Return in words how far a trial's readings lie from the sensor's line on average; empty if none."""
-    departures = [r.departure for run, own in parts.readings_by_run() if run[2] == trial for r in own]
-    if not departures or parts.line is None:
-        return ""
-    moved = float(np.mean(departures))
-    size = numbers.significant(abs(moved), 2, parts.reference.shown_unit)
+def moved_from_line(parts: SensorParts) -> dict[str, str]:
+    """Return in words how far the readings of each trial lie from the sensor's line on average."""
+    if parts.line is None:
+        return {}
+    departures: dict[str, list[float]] = {}
+    for (_, _, trial), own in parts.readings_by_run():
+        departures.setdefault(trial, []).extend(reading.departure for reading in own)
+    return {trial: _moved_words(float(np.mean(own)), parts.reference) for trial, own in departures.items()}
+
+
+def _moved_words(moved: float, reference: ReferenceQuantity) -> str:
+    size = numbers.significant(abs(moved), 2, reference.shown_unit)
     return f"On average {size} {'above' if moved >= 0 else 'below'} the sensor’s line"
 
 

@@ -22,6 +22,7 @@ from campaign.pages.layout_scripts import layout_scripts
 from campaign.pages.loop_figures import loop_scripts
 from campaign.pages.method import method_pages
 from campaign.pages.module import module_pages
+from campaign.pages.module_share import ModuleShares
 from campaign.pages.notes import Notes
 from campaign.pages.page import Page, SiteFrame
 from campaign.pages.planning import planning_page
@@ -95,7 +96,8 @@ def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
     )
     pages = [findings_page(results, mapped), *(page for page in measured if page is not None)]
     pages += [recordings_page(results), *method_pages(results)]
-    pages += [*module_pages(results, mapped), *sensor_pages(results, mapped), *notes.pages]
+    shares = ModuleShares(results)
+    pages += [*module_pages(results, mapped, shares), *sensor_pages(results, mapped, shares), *notes.pages]
     tables = [*(table for page in pages for table in page.tables), *site_tables(results, pages)]
     return [*pages, provenance_page(results, tables)]
 
