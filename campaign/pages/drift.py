@@ -403,7 +403,10 @@ def sensor_holds(
     if rows.empty:
         return [], [], {}
     own = [c for c in drift.curves if (c.module, c.sensor) == (module, sensor)][:MOST_PLOTS]
-    figures = [hold_figure(c, drift.reference, f"hold-{i}", 280, most=100) for i, c in enumerate(own, 1)]
+    figures = [
+        hold_figure(c, drift.reference, f"hold-{i}", 280, most=100, with_samples=False)
+        for i, c in enumerate(own, 1)
+    ]
     by_trial: dict[str, list[str]] = {}
     for curve, figure in zip(own, figures, strict=True):
         by_trial.setdefault(curve.trial, []).append(figure.name)

@@ -30,7 +30,7 @@ from campaign.pages.figures import (
 from campaign.pages.influence_figures import axis_with_zero, influence_figures, influence_tables
 from campaign.pages.page import Page
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
-from campaign.pages.tables import Column, Table
+from campaign.pages.tables import Column, Table, without_told_trial
 from campaign.recordings.recording import FloatArray, ReferenceQuantity
 
 CORRECTION_WORDS = {
@@ -287,8 +287,10 @@ def sensor_sweeps_figure(
         alternative=f"Change of {module} {sensor} with pressure, one loop a sweep, with its line.",
         traces=tuple(traces),
         layout=layout(axis("Pressure", "kPa"), axis("Change of the signal", unit)),
-        data=own[["trial", "repetition", "sweep", "leg", "x", "influence", "signal", "time_s"]].rename(
-            columns={"influence": "pressure_kpa"}
+        data=without_told_trial(
+            own[["trial", "repetition", "sweep", "leg", "x", "influence", "signal", "time_s"]].rename(
+                columns={"influence": "pressure_kpa"}
+            )
         ),
         note="Each sweep less its signal without pressure. Each length has its own colour; dashes are the "
         "line of each sweep over both branches. Curves show evenly chosen samples.",

@@ -198,24 +198,38 @@ def in_reference(frame: pd.DataFrame, reference: ReferenceQuantity) -> pd.DataFr
     return frame.drop(columns=taken).rename(columns=names)
 
 
-def to_ten_digits(frame: pd.DataFrame) -> pd.DataFrame:
-    """Return *frame* with every column of numbers rounded to ten significant digits of its largest one.
+DIGITS_OF_FIGURES = 7
+"""Significant digits of numbers in the files of figures, of each column's largest number."""
 
-    Files of figures hold no more: what was measured has fewer digits, and what was computed stands in full
-    precision in the tables.
+
+def as_drawn(frame: pd.DataFrame) -> pd.DataFrame:
+    """Return *frame* with every column of numbers rounded to :data:`DIGITS_OF_FIGURES` of its largest one.
+
+    Files of figures hold no more: what was measured has fewer digits, a picture shows four, and what was
+    computed stands in full precision in the tables.
     """
     rounded = {
-        str(column): frame[column].round(_decimals_of_ten_digits(frame[column].to_numpy()))
+        str(column): frame[column].round(_decimals_of_figures(frame[column].to_numpy()))
         for column, kind in frame.dtypes.items()
         if pd.api.types.is_float_dtype(kind)
     }
     return frame.assign(**rounded) if rounded else frame
 
 
-def _decimals_of_ten_digits(values: np.ndarray[Any, Any]) -> int:
+def without_told_trial(frame: pd.DataFrame) -> pd.DataFrame:
+    """Return rows of one sensor without their trial where the repetition tells which it is.
+
+    The tables of loops and of sweeps hold the trial of every repetition.
+    """
+    told = len(frame) and frame.groupby("repetition")["trial"].nunique().max() == 1
+    return frame.drop(columns="trial") if told else frame
+
+
+def _decimals_of_figures(values: np.ndarray[Any, Any]) -> int:
     finite = np.abs(values[np.isfinite(values)])
     largest = float(finite.max()) if finite.size else 0.0
-    return 9 - math.floor(math.log10(largest)) if largest > 0 else 9
+    last = DIGITS_OF_FIGURES - 1
+    return last - math.floor(math.log10(largest)) if largest > 0 else last
 
 
 def millimetre_name(column: str, quantity: str) -> str:
