@@ -64,14 +64,15 @@ def _batches(tables: Sequence[PlainTable]) -> Iterator[list[int]]:
 
 
 def _read_batch(tables: Sequence[PlainTable]) -> list[npt.NDArray[np.float64] | None]:
-    """Read tables with equal numbers of fields at once; where that fails, one by one to find the culprit."""
+    """Read tables with equal numbers of fields at once; where that fails, by halves to find the culprit."""
     joined = _parse(b"".join(table.data for table in tables), tables[0].fields)
     if joined is not None and len(joined) == sum(table.rows for table in tables):
         cuts = np.cumsum([table.rows for table in tables])[:-1]
         return list(np.split(joined, cuts))
     if len(tables) == 1:
         return [None]
-    return [read for table in tables for read in _read_batch([table])]
+    half = len(tables) // 2
+    return [*_read_batch(tables[:half]), *_read_batch(tables[half:])]
 
 
 def _parse(data: bytes, fields: int) -> npt.NDArray[np.float64] | None:

@@ -58,8 +58,8 @@ def pass_gate(body: bytes, layout: Layout) -> Gated:
     if 2 * np.count_nonzero(mask) < len(mask):
         return _all_careful(len(mask))
     everything = np.arange(len(mask), dtype=np.int64)
-    kept = np.frombuffer(body, np.uint8)[np.repeat(mask, lengths)].tobytes()
-    return Gated(_normalised(kept, layout), everything[mask], everything[~mask])
+    kept = _normalised(_kept_lines(body, mask, lengths), layout)
+    return Gated(kept, everything[mask], everything[~mask])
 
 
 def count_line_feeds(data: bytes) -> int:
@@ -124,23 +124,37 @@ def _plain_mask(body: bytes, layout: Layout) -> tuple[npt.NDArray[np.bool_], npt
     """Return, for every line, whether it is plain, and its length with the line feed."""
     data = np.frombuffer(body, np.uint8)
     ends = np.flatnonzero(data == 10)
-    starts = np.concatenate(([0], ends[:-1] + 1))
+    lengths = np.diff(ends, prepend=-1)
     separator = ord(layout.separator)
-    is_separator = data == separator
-    allowed = np.zeros(256, np.bool_)
-    allowed[list(_numeric(layout) + layout.separator.encode() + b"\n")] = True
-    marks = is_separator | (data == 10)
-    bad = ~allowed[data]
-    if layout.separator == " ":
-        bad[1:] |= marks[1:] & marks[:-1]
-        bad[0] |= marks[0]
-    counts = np.add.reduceat(is_separator, starts, dtype=np.int64)
     expected = layout.fields - (0 if layout.trailing_separator else 1)
-    plain = (counts == expected) & (ends - starts > expected) & ~np.logical_or.reduceat(bad, starts)
+    plain = _holds_numbers(body, layout, expected) & (lengths - 1 > expected)
     if layout.trailing_separator:
         plain &= data[np.maximum(ends - 1, 0)] == separator
-    plain &= _longest_field(marks, starts) <= LONGEST_NUMBER
-    return plain, ends - starts + 1
+    if layout.separator == " ":
+        marks = (data == separator) | (data == 10)
+        touching = np.flatnonzero(marks & np.append(True, marks[:-1]))
+        plain[np.searchsorted(ends, touching)] = False
+    if lengths.max() > LONGEST_NUMBER:
+        marks = (data == separator) | (data == 10)
+        plain &= _longest_field(marks, ends + 1 - lengths) <= LONGEST_NUMBER
+    return plain, lengths
+
+
+def _holds_numbers(body: bytes, layout: Layout, separators: int) -> npt.NDArray[np.bool_]:
+    """Whether a line has so many separators and nothing but the characters of numbers besides."""
+    left = np.frombuffer(body.translate(None, _numeric(layout)), np.uint8)
+    ends = np.flatnonzero(left == 10)
+    right = np.diff(ends, prepend=-1) == separators + 1
+    strange = np.flatnonzero((left != ord(layout.separator)) & (left != 10))
+    right[np.searchsorted(ends, strange)] = False
+    return np.asarray(right)
+
+
+def _kept_lines(body: bytes, kept: npt.NDArray[np.bool_], lengths: npt.NDArray[np.int64]) -> bytes:
+    """Return the lines that are kept, stretch by stretch."""
+    edges = np.flatnonzero(np.diff(kept, prepend=False, append=False))
+    places = np.append(0, np.cumsum(lengths))[edges].tolist()
+    return b"".join(body[start:stop] for start, stop in zip(places[::2], places[1::2], strict=True))
 
 
 def _longest_field(mark: npt.NDArray[np.bool_], starts: npt.NDArray[np.int64]) -> npt.NDArray[np.int64]:
