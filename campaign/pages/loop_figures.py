@@ -45,7 +45,7 @@ def rate_words(rate: float, reference: ReferenceQuantity) -> str:
 
 def outlines_of(hysteresis: Hysteresis, module: str, sensor: str) -> list[SensorCurve]:
     """Return the loops of a sensor that are drawn: of each rate the first runs."""
-    own = [c for c in hysteresis.outlines if (c.module, c.sensor) == (module, sensor)]
+    own = [c for c in hysteresis.outlines if c.module == module and c.sensor == sensor]
     runs: dict[float, list[str]] = {}
     for curve in own:
         known = runs.setdefault(_key(curve.rate_per_s), [])
