@@ -10,7 +10,7 @@ its sign. A point stands for no number. ``assets/unfold.js`` reads them, as :fun
 from __future__ import annotations
 
 from collections.abc import Sequence
-from typing import Any
+from functools import cache
 
 import numpy as np
 import numpy.typing as npt
@@ -21,9 +21,8 @@ NOTHING = "."
 
 _MOST_DECIMALS = 12
 _LARGEST = 2.0**48
-_BITS = 5
-_CODES = np.frombuffer((LETTERS + NOTHING).encode("ascii"), dtype=np.uint8)
-_PLACE_OF_NOTHING = len(LETTERS)
+_SHORT = 2**15
+"""Steps below this many are looked up: all that three letters hold."""
 _SAMPLED = 6
 
 
@@ -46,13 +45,11 @@ def packed(values: Sequence[float | None]) -> str | None:
     decimals, whole = found
     steps = np.diff(whole, prepend=0)
     signed = np.where(steps < 0, -2 * steps + 1, 2 * steps)
-    letters, counts = _letters_of(signed)
+    texts = _letters_of(signed.tolist())
     if missing.any():
-        ends = np.concatenate([[0], np.cumsum(counts)])
-        before = ends[np.cumsum(~missing)[missing]]
-        letters = np.insert(letters, before, _PLACE_OF_NOTHING)
-    text: str = _CODES[letters].tobytes().decode("ascii")
-    return LETTERS[decimals] + text
+        own = iter(texts)
+        texts = [NOTHING if gone else next(own) for gone in missing.tolist()]
+    return LETTERS[decimals] + "".join(texts)
 
 
 def unpacked(text: str) -> list[float | None]:
@@ -93,14 +90,21 @@ def _decimals(value: float) -> int:
     return 0 if "e" in text or text.endswith(".0") else len(text.partition(".")[2])
 
 
-def _letters_of(signed: npt.NDArray[np.int64]) -> tuple[Any, Any]:
-    """Return the places of the letters of all steps in order, and how many letters each step takes."""
-    counts = np.ones(signed.shape, dtype=np.int64)
-    rest = signed >> _BITS
-    while rest.any():
-        counts += rest > 0
-        rest >>= _BITS
-    columns = np.arange(int(counts.max(initial=1)))
-    digits = (signed[:, None] >> (_BITS * columns)) & 31
-    followed = columns < counts[:, None] - 1
-    return (digits + 32 * followed)[columns < counts[:, None]], counts
+def _letters_of(signed: list[int]) -> list[str]:
+    """Return the letters of every step in order; short ones are looked up."""
+    short = _short_steps()
+    most = len(short)
+    return [short[step] if step < most else _written(step) for step in signed]
+
+
+@cache
+def _short_steps() -> list[str]:
+    return [_written(step) for step in range(_SHORT)]
+
+
+def _written(step: int) -> str:
+    letters = []
+    while step >= 32:
+        letters.append(LETTERS[32 + step % 32])
+        step //= 32
+    return "".join((*letters, LETTERS[step]))

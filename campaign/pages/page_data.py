@@ -48,6 +48,7 @@ class Fold:
     def __init__(self) -> None:
         self._shared: dict[bytes, int] = {}
         self._lists: dict[bytes, int] = {}
+        self._places: dict[tuple[float | str | None, ...], int] = {}
         self._texts: dict[str, int] = {}
 
     @property
@@ -84,9 +85,12 @@ class Fold:
 
     def numbers(self, values: Sequence[float | None]) -> int:
         """Return the place of a list of numbers."""
-        short = packed(values)
-        written = orjson.dumps(values if short is None else short)
-        return self._lists.setdefault(written, len(self._lists))
+        known = tuple(values)
+        if (place := self._places.get(known)) is None:
+            short = packed(values)
+            written = orjson.dumps(values if short is None else short)
+            place = self._places[known] = self._lists.setdefault(written, len(self._lists))
+        return place
 
     def _bars(self, bars: Mapping[str, Any]) -> dict[str, Any]:
         made = self._parted(bars, _OWN_OF_BARS)

@@ -83,6 +83,7 @@ def environment(further: Sequence[Path] = ()) -> Environment:
         trim_blocks=True,
         lstrip_blocks=True,
         keep_trailing_newline=True,
+        auto_reload=False,
     )
     made.globals.update({name: getattr(numbers, name) for name in _NUMBER_FUNCTIONS})
     made.globals.update({name: getattr(slugs, name) for name in _LINK_FUNCTIONS})
