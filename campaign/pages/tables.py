@@ -129,8 +129,12 @@ def shown_cells(table: Table) -> list[list[Cell]]:
 def shown_marks(table: Table) -> list[tuple[str, str]]:
     """Return the module and sensor of each shown row, empty where the table has no such columns."""
     frame = table.frame if table.shown_rows is None else table.frame.head(table.shown_rows)
-    columns = [frame[key].astype(str).tolist() if key in frame else [""] * len(frame) for key in table.mark]
+    columns = [_texts_of(frame[key]) if key in frame else [""] * len(frame) for key in table.mark]
     return list(zip(columns[0], columns[1], strict=True))
+
+
+def _texts_of(values: pd.Series[Any]) -> list[str]:
+    return [str(value) for value in values.tolist()]
 
 
 def csv_bytes(frame: pd.DataFrame, name: str = "") -> bytes:
@@ -152,13 +156,14 @@ def csv_bytes(frame: pd.DataFrame, name: str = "") -> bytes:
 def _fields_of(values: pd.Series[Any]) -> list[object]:
     """Fields of a column: nothing where a value is missing, infinity as a Table Schema spells it."""
     fields: list[object] = values.tolist()
-    missing = values.isna().to_numpy()
-    if missing.any():
-        fields = [None if gone else field for field, gone in zip(fields, missing.tolist(), strict=True)]
-    if pd.api.types.is_float_dtype(values):
-        infinite = np.isinf(values.to_numpy(float))
-        for row in np.flatnonzero(infinite).tolist():
-            fields[row] = "INF" if values.iloc[row] > 0 else "-INF"
+    held = values.to_numpy()
+    if held.dtype.kind in "biu":
+        return fields
+    for row in np.flatnonzero(pd.isna(held)).tolist():
+        fields[row] = None
+    if held.dtype.kind == "f":
+        for row in np.flatnonzero(np.isinf(held)).tolist():
+            fields[row] = "INF" if held[row] > 0 else "-INF"
     return fields
 
 
@@ -169,11 +174,10 @@ def exported_frame(frame: pd.DataFrame, name: str = "") -> pd.DataFrame:
     if missing:
         raise KeyError(f"table {name} lacks {', '.join(missing)}")
     further = [c for c in frame.columns if c not in contract and not str(c).startswith("_")]
-    exported = frame[[*contract, *further]].copy()
-    for column in exported.columns:
-        if exported[column].dtype == bool:
-            exported[column] = exported[column].map({True: "true", False: "false"})
-    return exported
+    exported = frame[[*contract, *further]]
+    truths = [str(column) for column, kind in exported.dtypes.items() if kind == np.dtype(bool)]
+    words = {column: exported[column].map({True: "true", False: "false"}) for column in truths}
+    return exported.assign(**words) if words else exported
 
 
 def contract_of(name: str, frame: pd.DataFrame) -> list[str]:
@@ -208,11 +212,8 @@ def as_drawn(frame: pd.DataFrame) -> pd.DataFrame:
     Files of figures hold no more: what was measured has fewer digits, a picture shows four, and what was
     computed stands in full precision in the tables.
     """
-    rounded = {
-        str(column): frame[column].round(_decimals_of_figures(frame[column].to_numpy()))
-        for column, kind in frame.dtypes.items()
-        if pd.api.types.is_float_dtype(kind)
-    }
+    numbers_of = {str(c): frame[c].to_numpy() for c, kind in frame.dtypes.items() if kind == np.dtype(float)}
+    rounded = {c: np.round(held, _decimals_of_figures(held)) for c, held in numbers_of.items()}
     return frame.assign(**rounded) if rounded else frame
 
 
