@@ -107,29 +107,37 @@ def _is_plain_throughout(body: bytes, layout: Layout) -> bool:
 
 
 def _fields_fit(body: bytes, layout: Layout) -> bool:
-    """Whether every field has the length of a number and none is empty.
-
-    In short lines no field can be too long; tables with longer ones are looked at line by line.
-    """
+    """Whether every field has the length of a number and none is empty."""
     data = np.frombuffer(body, np.uint8)
-    separator = ord(layout.separator)
-    if data[0] in (10, separator):
-        return False
-    last_end = -1
-    for start in range(0, len(data), CHUNK_BYTES):
-        part = data[start : start + CHUNK_BYTES + 1]
-        ends, separators = part == 10, part == separator
-        marks = ends | separators
-        touching = marks[1:] & marks[:-1]
-        if layout.trailing_separator:
-            touching &= ~(ends[1:] & separators[:-1])
-        if touching.any():
+    start = 0
+    while start < len(data):
+        size = _fitting_lines(data[start : start + CHUNK_BYTES], layout)
+        if not size:
             return False
-        at = np.append(last_end, np.flatnonzero(ends) + start)
-        if (at[1:] - at[:-1]).max(initial=0) > LONGEST_NUMBER:
-            return False
-        last_end = int(at[-1])
+        start += size
     return True
+
+
+def _fitting_lines(part: npt.NDArray[np.uint8], layout: Layout) -> int:
+    """Return the bytes of the whole lines that *part* begins with; 0 where there are none or one is unfit."""
+    ends, separators = part == 10, part == ord(layout.separator)
+    marks = ends | separators
+    touching = marks[1:] & marks[:-1]
+    if layout.trailing_separator:
+        touching &= ~(ends[1:] & separators[:-1])
+    at = np.flatnonzero(ends)
+    if marks[0] or touching.any() or not len(at):
+        return 0
+    if (
+        _widest_gap(at) <= LONGEST_NUMBER
+        or _widest_gap(np.flatnonzero(marks[: at[-1] + 1])) <= LONGEST_NUMBER
+    ):
+        return int(at[-1]) + 1
+    return 0
+
+
+def _widest_gap(places: npt.NDArray[np.int64]) -> int:
+    return max(int(places[0]), int((places[1:] - places[:-1]).max(initial=1)) - 1)
 
 
 def _plain_mask(body: bytes, layout: Layout) -> tuple[npt.NDArray[np.bool_], npt.NDArray[np.int64]]:
