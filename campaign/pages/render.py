@@ -29,12 +29,12 @@ from campaign.pages.static_figure import static_svg
 from campaign.pages.tables import (
     Cell,
     Table,
+    as_drawn,
     csv_bytes,
     in_reference,
     schema_bytes,
     shown_cells,
     shown_marks,
-    to_ten_digits,
 )
 from campaign.recordings.recording import STRAIN, ReferenceQuantity
 
@@ -85,6 +85,7 @@ def environment(further: Sequence[Path] = ()) -> Environment:
         trim_blocks=True,
         lstrip_blocks=True,
         keep_trailing_newline=True,
+        auto_reload=False,
     )
     made.globals.update({name: getattr(numbers, name) for name in _NUMBER_FUNCTIONS})
     made.globals.update({name: getattr(slugs, name) for name in _LINK_FUNCTIONS})
@@ -161,7 +162,7 @@ def render_site(
         written[f"data/{page.slug}.js"] = data_script(page, figures, further)
         for figure in page.figures:
             if figure.data is not None:
-                data = to_ten_digits(in_reference(figure.data, reference))
+                data = as_drawn(in_reference(figure.data, reference))
                 written[_figure_csv(page, figure)] = csv_bytes(data)
     written |= {name: text.encode("utf-8") for name, text in with_places_of_anchors(html, pages).items()}
     written |= asset_files(templates_folder(), plot_library)
