@@ -39,6 +39,7 @@ TOO_FEW_MODULES = "too few modules"
 NOT_DECIDED = "not decided"
 NOT_TESTED = "not tested"
 POOLED = "its uncertainty is common to the generation"
+SHARED_BY_READINGS = "readings of one sensor may share what is in it"
 NOISE_DIFFERS = "noise or numbers of runs differ as much"
 AT_COMMON_POSITIONS = "at common positions"
 NO_COMMON_POSITION = "their sensors share no position"
@@ -217,6 +218,10 @@ def compare_spreads(
         found = Comparison(estimate, low, high, math.nan, difference_of_spreads(first, second))
     else:
         label = "the first SD is not distinguishable from zero"
+    # loops that differ from sensor to sensor are left in the residual, whose interval counts readings
+    untested = SHARED_BY_READINGS if spreads[0].level == "residual" else ""
+    if untested:
+        found, share = Comparison(found.estimate, *(math.nan,) * 4), math.nan
     enough = min(modules) >= FEWEST_MODULES and math.isfinite(share) and first.estimate > 0
     names = {spread.called for spread in spreads}
     if len(names) > 1:
@@ -236,6 +241,7 @@ def compare_spreads(
         modules=modules,
         sensors=(0, 0),
         label=label,
+        untested=untested,
     )
 
 

@@ -49,7 +49,7 @@ def test_oxide_sources_differ_as_published(nested):
     assert common.p == pytest.approx(0.26287, abs=5e-6)
     half = (common.high - common.low) / 2
     assert half / stats.t.ppf(0.975, 6) == pytest.approx(8.162242438, rel=1e-6)
-    # separate fits: the same estimate and, sizes being equal, standard error; Welch: 3 to 6 degrees of freedom
+    # separate fits: the same estimate and, sizes being equal, standard error; Welch: 3 to 6 degrees
     means = [nested_mean(values[side == s], [lots[side == s], wafers[side == s]]) for s in (0, 1)]
     welch = difference_of_means(*means)
     assert welch.estimate == pytest.approx(10.0833333, abs=1e-6)

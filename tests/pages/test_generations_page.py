@@ -79,6 +79,7 @@ def test_figures_draw_zero_or_one_and_every_row(results):
     assert set(table.loc[table["verdict"] == "not tested", "figure"]) == {
         "strain_error",
         "expanded_uncertainty",
+        "sd_residual",
     }
     centres = {
         figures["ratios"].layout["shapes"][0]["x0"],
