@@ -30,6 +30,7 @@ from campaign.analyses.variance_fit import GenerationFit
 from campaign.archive import campaign_in, unpack_archive
 from campaign.campaign_reading import CampaignRead, calibrate, read_campaign, silent
 from campaign.notices import CampaignStops, Notice
+from campaign.provenance.bag import check_bag
 from campaign.recordings.description import DESCRIPTION_FILE, Description
 from campaign.recordings.shared_reading import Progress
 from campaign.trials.cyclic import CyclicFeatures
@@ -58,11 +59,12 @@ def read_earlier(
     for number, one in enumerate(named):
         tell("earlier campaigns", number, len(named))
         where = one.get("archive") or one["folder"]
+        stands = (folder / where).resolve()  # where an archive is unpacked is new each time
         try:
+            if stands in taken:
+                raise CampaignStops([_not_joined(where, "is this campaign, or is named twice")])
             with opened_earlier(folder, one) as place:
-                if place.resolve() in taken:
-                    raise CampaignStops([_not_joined(where, "is this campaign, or is named twice")])
-                taken.add(place.resolve())
+                taken.add(stands)
                 found.append(
                     _earlier_campaign(where, read_campaign(place, workshop=workshop), read, workshop)
                 )
@@ -107,13 +109,18 @@ def opened_earlier(folder: Path, named: Mapping[str, str]) -> Iterator[Path]:
     Raises
     ------
     CampaignStops
-        Where a sealed archive is refused or damaged, or holds no campaign.
+        Where a sealed archive is refused or damaged, is not as it was sealed, or holds no campaign.
     """
     if "folder" in named:
         yield folder / named["folder"]
         return
     with tempfile.TemporaryDirectory(prefix="campaign-earlier-") as space:
-        yield campaign_in(unpack_archive(folder / named["archive"], Path(space) / "archive"))
+        home = unpack_archive(folder / named["archive"], Path(space) / "archive")
+        if faults := check_bag(home):
+            more = f", and {len(faults) - 1} more" if len(faults) > 1 else ""
+            what = f"is not as it was sealed: {faults[0].file} {faults[0].wrong}{more}"
+            raise CampaignStops([_not_joined(named["archive"], what, "look at it with campaign verify")])
+        yield campaign_in(home)
 
 
 def _earlier_campaign(

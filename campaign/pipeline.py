@@ -43,7 +43,7 @@ from campaign.pages.brief import brief_bytes, check_brief_place, write_brief
 from campaign.pages.notes import Notes, make_notes, read_note_files
 from campaign.pages.output import check_ours, write_folder
 from campaign.pages.publication import chosen_pages, publication_files
-from campaign.pages.render import templates_folder
+from campaign.pages.render import pages_as_marked, templates_folder
 from campaign.pages.site import build_site, site_frame, site_pages
 from campaign.provenance.manifest import with_manifests
 from campaign.recordings.inspection import ON_SITE, inspection_lines, print_lines
@@ -199,7 +199,8 @@ def publish(
     tell = progress or silent
     results, notes = read_and_analyse(folder, place, tell, workshop)
     pages = site_pages(results, notes)
-    files = publication_files(chosen_pages(pages, wanted), (), results.readings.reference, tell)
+    marked = pages_as_marked(site_frame(results), chosen_pages(pages, wanted))
+    files = publication_files(marked, (), results.readings.reference, tell)
     write_folder(files, place)
     print(f"{len(files)} files written to {place}; index.csv says which is which")
     return DONE

@@ -219,6 +219,8 @@ def _write_registers(folder: Path, plan: Plan, ids: HostileIds) -> None:
             length = f"{place.rest_length_mm:.2f}"
             rows.append([ids.modules[module], sensor, position, *nodes, length, "0.1", next(free), "", ""])
     rows += [[ids.modules["M01"], t, t, t, t, t, t, t, f"set aside {t}", t] for t in FORMULAS.values()]
+    beside = [FORMULAS["equals"], FORMULAS["at"], UNSEEN["override"]]
+    rows.append([ids.modules["M01"], "spare", *beside, "60", "0.1", FORMULAS["plus"], "", ""])
     head = ["module", "sensor", "position", "from", "to", "rest_length", "rest_length_uncertainty"]
     _write_csv(folder / "sensors.csv", [*head, "rest_length_method", "fate", "reason"], rows)
     sessions = [

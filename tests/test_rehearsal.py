@@ -18,9 +18,12 @@ import pytest
 
 from campaign.analyses.rehearsal import compare_with_plan, rehearsal_findings
 from campaign.analyses.variance import Variance
+from campaign.archive import unpack_archive
+from campaign.campaign_reading import silent
 from campaign.cli import main
 from campaign.notices import CampaignStops
-from campaign.pipeline import read_campaign
+from campaign.pipeline import read_and_analyse, read_campaign
+from campaign.provenance.sealing import seal_campaign, write_sealed
 from campaign.recordings.description_file import load_description, read_description, read_plan_file
 from campaign.rehearsal import rehearsal_files
 from campaign.simulation import write_campaign
@@ -317,6 +320,82 @@ def test_citation_paper_and_first_words_say_so(site: Path) -> None:
     first = words("index.html").split("Measured on")[0]
     assert "Rehearsal, not measured" in first
     assert "the recordings were simulated from a plan" in first
+
+
+def test_brief_figures_for_a_paper_and_archive_say_so(
+    rehearsed: Path, site: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    found = read_and_analyse(rehearsed, None, silent, None)
+    monkeypatch.setattr("campaign.pipeline.read_and_analyse", lambda *_: found)  # once for both commands
+    brief, figures, archive = tmp_path / "brief.html", tmp_path / "figures", tmp_path / "sealed.zip"
+    assert main(["report", str(rehearsed), "--brief", str(brief)]) == 0
+    text = brief.read_text(encoding="utf-8")
+    assert SAID.search(text.split("<title>")[1].split("</title>")[0])
+    assert SAID.search(text.split('<header class="masthead">')[1].split("</header>")[0])
+    assert SAID.search(text.split("<footer>")[1])
+    drawn = re.findall(r'<figure class="figure".*?</figure>', text, re.DOTALL)
+    assert len(drawn) > 5
+    assert all(SAID.search(part) for figure in drawn for part in figure.split("</figcaption>"))
+
+    assert main(["figures", str(rehearsed), "--page", "hysteresis", "--into", str(figures)]) == 0
+    listed = pd.read_csv(figures / "index.csv")
+    assert listed["caption"].str.contains(SAID).all()
+    assert (listed["kind"] == "figure").sum() >= 2
+    sheets = sorted((figures / "tables").glob("*.tex"))
+    assert len(sheets) == (listed["kind"] == "table").sum()
+    assert all(SAID.search(sheet.read_text(encoding="utf-8")) for sheet in sheets)
+
+    write_sealed(seal_campaign(rehearsed, found[0], contents(site)), archive)
+    data = unpack_archive(archive, tmp_path / "unpacked") / "data"
+    for name in ("README.md", "../README.txt", "CITATION.cff", "ro-crate-preview.html", "../bag-info.txt"):
+        assert SAID.search(" ".join((data / name).read_text(encoding="utf-8").split())), name
+    for name in ("methods.md", "data_availability.md", "citation.bib"):
+        assert SAID.search((data / "texts" / name).read_text(encoding="utf-8")), name
+    crate = json.loads((data / "ro-crate-metadata.json").read_bytes())
+    (root,) = (entity for entity in crate["@graph"] if entity["@id"] == "./")
+    assert SAID.search(root["description"])
+    assert SAID.search(root["keywords"])
+    assert nodes_by_the_lengths_of_the_archive(data) > 10
+
+
+def nodes_by_the_lengths_of_the_archive(data: Path) -> int:
+    """Return how many node covariances of an archive follow from those of its lengths, A⁻¹ Σ A⁻ᵀ.
+
+    A triangle is just determined, so that its design A is square in the three free coordinates.
+    """
+    text = (data / "MODEL.md").read_text(encoding="utf-8")
+    assert all(f"## {part}" in text for part in ("Shapes from lengths", "Generations compared"))
+    assert all(f"## {part}" in text for part in ("Uncertainty in use", "What a plan resolves"))
+    whose = ["generation", "module", "trial", "repetition", "placement", "read_by"]
+    nodes = pd.read_csv(data / "tables" / "layout.csv").groupby(whose)
+    lengths = pd.read_csv(data / "model" / "shapes" / "length_covariance.csv").groupby(whose)
+    found = pd.read_csv(data / "model" / "shapes" / "node_covariance.csv").groupby(whose)
+    for key, pairs in found:
+        at = nodes.get_group(key).set_index("node")[["x_mm", "y_mm"]].to_numpy()
+        names = list(nodes.get_group(key)["node"])
+        covariance = pairs.pivot(index="first", columns="second", values="covariance_mm2")
+        q = symmetric(covariance)
+        free = [name for name in q.index if q.loc[name, name] > 0]
+        sigma = symmetric(
+            lengths.get_group(key).pivot(index="first", columns="second", values="covariance_mm2")
+        )
+        design = pd.DataFrame(0.0, index=sigma.index, columns=q.index)
+        for edge in sigma.index:
+            i, j = (names.index(letter) for letter in edge)
+            along = (at[j] - at[i]) / np.linalg.norm(at[j] - at[i])
+            for axis, part in zip("xy", along, strict=True):
+                design.loc[edge, f"{names[i]}.{axis}"] = -part
+                design.loc[edge, f"{names[j]}.{axis}"] = part
+        inverse = np.linalg.inv(design[free].to_numpy())
+        assert q.loc[free, free].to_numpy() == pytest.approx(inverse @ sigma.to_numpy() @ inverse.T, rel=1e-6)
+    return len(found)
+
+
+def symmetric(upper: pd.DataFrame) -> pd.DataFrame:
+    """Return a whole covariance from its upper triangle, rows and columns in one order."""
+    names = sorted(set(upper.index) | set(upper.columns))
+    whole = upper.reindex(index=names, columns=names)
+    return whole.fillna(whole.T)
 
 
 def test_every_printed_sheet_says_so(site: Path) -> None:

@@ -26,7 +26,7 @@ class GenerationFinding:
     ``better``, ``worse``, ``changed`` (larger or smaller, with no better or worse) and ``equivalent`` hold
     rows of the table, in its order; ``undecided`` names the figures of which nothing is shown, ``untested``
     holds those compared without a test. ``few`` is whether there are too few modules for any verdict.
-    ``confounded`` differs together with the two.
+    ``modules`` are the numbers behind most of the figures. ``confounded`` differs together with the two.
     """
 
     first: str
@@ -68,11 +68,14 @@ def _of_pair(generations: Generations, first: str, second: str) -> GenerationFin
         undecided=tuple(rows.loc[verdicts == NOT_DECIDED, "figure"].astype(str)),
         untested=_rows(rows[verdicts == NOT_TESTED]),
         few=len(rows) > 0 and bool((verdicts == TOO_FEW_MODULES).all()),
-        modules=(int(rows["modules_first"].max()), int(rows["modules_second"].max()))
-        if len(rows)
-        else (0, 0),
+        modules=(_usual(rows["modules_first"]), _usual(rows["modules_second"])),
         confounded=tuple(c for c in generations.confounded if (c.first, c.second) == (first, second)),
     )
+
+
+def _usual(modules: pd.Series) -> int:
+    """The number of modules behind most figures, the larger of two that are as frequent."""
+    return int(modules.mode().max()) if len(modules) else 0
 
 
 def _rows(rows: pd.DataFrame) -> tuple[Compared, ...]:

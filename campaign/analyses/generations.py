@@ -335,11 +335,14 @@ def holm(p_values: Sequence[float]) -> list[float]:
 
 
 def module_means(sources: Iterable[Source], names: Sequence[str]) -> pd.DataFrame:
-    """Return the mean of every figure and module, generations in the order of *names*."""
+    """Return the mean of every figure and module, generations in the order of *names*.
+
+    Where all generations share positions, the means are over those alone, as in the comparison.
+    """
     parts = [source.offers.values for source in sources if len(source.offers.values)]
     if not parts:
         return pd.DataFrame(columns=["figure", "unit", "generation", "module", "value"])
-    values = pd.concat(parts, ignore_index=True)
+    values = _at_positions_of_all(pd.concat(parts, ignore_index=True))
     means = (
         values.groupby(["figure", "unit", "generation", "module"], sort=True)["value"].mean().reset_index()
     )
@@ -348,6 +351,14 @@ def module_means(sources: Iterable[Source], names: Sequence[str]) -> pd.DataFram
     means = means.assign(_figure=means["figure"].map(figures), _rank=means["generation"].map(rank))
     ordered = means.sort_values(["_figure", "_rank", "module"], kind="stable")
     return ordered.drop(columns=["_figure", "_rank"]).reset_index(drop=True)
+
+
+def _at_positions_of_all(values: pd.DataFrame) -> pd.DataFrame:
+    """Rows at the positions that all generations of a figure have; all its rows where there is none."""
+    generations = values.groupby("figure")["generation"].transform("nunique")
+    shared = values.groupby(["figure", "position"])["generation"].transform("nunique") == generations
+    kept = shared | ~shared.groupby(values["figure"]).transform("any")
+    return values[kept]
 
 
 def _mismatch_notices(refused: Iterable[tuple[str, str, str, str]]) -> Iterator[Notice]:

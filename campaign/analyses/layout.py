@@ -6,7 +6,6 @@ distance network with the whole covariance of its lengths, and laid beside the k
 
 from __future__ import annotations
 
-import hashlib
 from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
@@ -33,6 +32,7 @@ from campaign.analyses.layout_results import (
 from campaign.analyses.layout_shapes import SolvedPlacement, adjust_placement
 from campaign.analyses.layout_signals import PlacedShape, PlacedSignals, gather_placements
 from campaign.analyses.layout_summaries import error_table, extra_row, node_figures, sum_table
+from campaign.analyses.seeds import seed_from
 from campaign.analyses.variance_fit import GenerationFit
 from campaign.notices import Notice
 from campaign.recordings.description import Description
@@ -195,10 +195,7 @@ def _missing(shape: PlacedShape, read: LengthReadings, lengths: FloatArray) -> d
 
 def _seed(table: pd.DataFrame, line: str) -> int:
     """A seed that depends on the signals alone, so that a report repeats to the byte."""
-    digest = hashlib.sha256(line.encode())
-    digest.update("\n".join(table["trial"].astype(str)).encode())
-    digest.update(table["signal"].to_numpy("<f8").tobytes())
-    return int.from_bytes(digest.digest()[:8], "little")
+    return seed_from([line, table["trial"]], [table["signal"]])
 
 
 # --- putting it together

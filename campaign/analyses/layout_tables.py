@@ -18,7 +18,7 @@ RISK = 0.05
 PLACEMENT_COLUMNS = (
     *("read_by", "generation", "module", "trial", "repetition", "placement", "status", "reason"),
     *(
-        "redundancy",
+        "network_redundancy",
         "chi_square",
         "chi_square_limit",
         "p",

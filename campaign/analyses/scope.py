@@ -74,6 +74,8 @@ class Scope:
         Kind and number of trials used that no analysis answers yet.
     not_measured
         Kinds with no trial at all.
+    measured
+        Kind and number of all recordings used.
     """
 
     title: str
@@ -98,6 +100,7 @@ class Scope:
     not_analysed: tuple[tuple[str, int], ...]
     not_measured: tuple[str, ...]
     rehearsal: bool = False
+    measured: tuple[tuple[str, int], ...] = ()
 
 
 def describe_scope(
@@ -140,6 +143,7 @@ def describe_scope(
         not_analysed=tuple((k, int(kinds[k])) for k in KINDS if k in kinds and k not in ANALYSED),
         not_measured=tuple(k for k in KINDS if k not in kinds),
         rehearsal=description.rehearsal,
+        measured=tuple((k, int(kinds[k])) for k in KINDS if k in kinds),
     )
 
 

@@ -8,7 +8,6 @@ once pooled, on the signal and on its ratio to the session's zero signal.
 
 from __future__ import annotations
 
-import hashlib
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
@@ -19,6 +18,7 @@ import pandas as pd
 
 from campaign.analyses import variance_frames as frames
 from campaign.analyses.run_settling import Settling, find_settling, number_runs
+from campaign.analyses.seeds import seed_from
 from campaign.analyses.shared_fits import FitTask, Outcome, fit_all
 from campaign.analyses.variance_fit import (
     PLACES,
@@ -347,12 +347,8 @@ def _notice(code: str, what: str, done: str, remedy: str = "", count: int = 1) -
 
 def seed_of(readings: pd.DataFrame) -> int:
     """Return a seed that depends on the readings alone, so that a report repeats to the byte."""
-    digest = hashlib.sha256()
-    for column in ("generation", "module", "sensor", "session", "trial"):
-        digest.update("\n".join(readings[column].astype(str)).encode())
-    for column in ("x", "signal"):
-        digest.update(readings[column].to_numpy("<f8").tobytes())
-    return int.from_bytes(digest.digest()[:8], "little")
+    words = [readings[column] for column in ("generation", "module", "sensor", "session", "trial")]
+    return seed_from(words, [readings["x"], readings["signal"]])
 
 
 def _rated(description: Description, reference: ReferenceQuantity) -> float:

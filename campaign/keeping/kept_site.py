@@ -1,8 +1,8 @@
 """A whole site from one run to the next: where nothing of a campaign changed, it is written as it was.
 
-What a site is made of is the content of every file of the campaign folder and of the earlier campaigns that it
-names, wherever they lie, and the program. All are compared
-by hashes of the bytes, never by times; times only tell early that comparing them is not worth while.
+What a site is made of is the content of every file of the campaign folder and of the earlier campaigns that
+it names, wherever they lie, and the program. All are compared by hashes of the bytes, never by times; times
+only tell early that comparing them is not worth while.
 """
 
 from __future__ import annotations

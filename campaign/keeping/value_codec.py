@@ -211,7 +211,7 @@ def _write_column(writer: _Writer, array: Any) -> Node:
 
 def _write_table(writer: _Writer, table: pd.DataFrame) -> Node:
     index, columns = writer.node(table.index), writer.node(table.columns)  # read in the same order
-    arrays = [_write_column(writer, table.iloc[:, place].array) for place in range(table.shape[1])]
+    arrays = [_write_column(writer, column.array) for _, column in table.items()]
     return ["df", index, columns, arrays]
 
 

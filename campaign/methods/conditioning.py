@@ -48,7 +48,8 @@ def settled_from(series: FloatArray, scale: float, change: float = STATED_CHANGE
     noise = cycle_noise(values)
     degrees = max(len(values) // 2 - 1, 1)
     last = len(values) - FEWEST_AFTER
-    moving = [np.any(_exceeds(values[n : n + WINDOW], noise, degrees, change)) for n in range(last + 1)]
+    multiple = float(stats.t.ppf(1.0 - RISK, degrees))
+    moving = [np.any(_exceeds(values[n : n + WINDOW], noise, multiple, change)) for n in range(last + 1)]
     after = int(np.flatnonzero(moving)[-1]) + 1 if any(moving) else 0
     return int(known[after]) if after <= last else None
 
@@ -61,10 +62,10 @@ def cycle_noise(values: FloatArray) -> FloatArray:
     return np.asarray(np.sqrt(np.mean(second**2, axis=0) / 6.0))
 
 
-def _exceeds(window: FloatArray, noise: FloatArray, degrees: int, change: float) -> npt.NDArray[np.bool_]:
-    """Whether the slope of each column is above *change* beyond noise."""
+def _exceeds(window: FloatArray, noise: FloatArray, multiple: float, change: float) -> npt.NDArray[np.bool_]:
+    """Whether the slope of each column is above *change* by more than a multiple of its standard error."""
     place = np.arange(len(window)) - (len(window) - 1) / 2.0
     square = float(np.sum(place**2))
     slope = np.abs(place @ window) / square
     error = noise / np.sqrt(square)
-    return np.asarray(slope - float(stats.t.ppf(1.0 - RISK, degrees)) * error > change)
+    return np.asarray(slope - multiple * error > change)

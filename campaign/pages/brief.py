@@ -21,7 +21,13 @@ from campaign.pages.assets import shared_css
 from campaign.pages.drawing import ready
 from campaign.pages.figures import Figure
 from campaign.pages.page import Page, SiteFrame
-from campaign.pages.render import environment, placed_table, templates_folder, without_indents
+from campaign.pages.render import (
+    environment,
+    pages_as_marked,
+    placed_table,
+    templates_folder,
+    without_indents,
+)
 from campaign.pages.static_figure import static_svg
 
 MARK = "A brief written by campaign report; writing it again replaces this file as a whole."
@@ -53,6 +59,7 @@ def brief_bytes(frame: SiteFrame, pages: Sequence[Page]) -> bytes:
     pages
         The pages of the site, Findings first; the first figure of each numbered page is a key figure.
     """
+    pages = pages_as_marked(frame, pages)
     findings = replace(pages[0], number=None)
     tables = [replace(table, rows_in_page=_ROWS_OF_LIMITS) for table in findings.tables]
     style = without_indents(shared_css(templates_folder())).strip()

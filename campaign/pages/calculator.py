@@ -62,9 +62,19 @@ def record_files(records: Iterable[CalibrationRecord], origin: str = "") -> dict
 
 
 def calculator_data(records: Iterable[CalibrationRecord]) -> dict[str, object]:
-    """Return what the calculator's script reads: the records of one sensor, both branches first."""
+    """Return what the calculator's script reads: the records of one sensor, both branches first.
+
+    What is only told of a record (files, hashes, conditions) stands in its own file.
+    """
     ordered = sorted(records, key=lambda record: BRANCHES.index(record.branch))
-    return {"records": [record_fields(record) for record in ordered]}
+    return {"records": [_without_told(record_fields(record)) for record in ordered]}
+
+
+_TOLD = frozenset({"conditions", "date", "files", "generation", "runs", "sha256", "variance_source"})
+
+
+def _without_told(record: dict[str, object]) -> dict[str, object]:
+    return {key: value for key, value in record.items() if key not in _TOLD}
 
 
 def _plain(value: object) -> object:

@@ -44,7 +44,7 @@ def citation(description: Description, last_day: str = "") -> Citation:
     year = citation_day(description, last_day)[:4]
     names = [author.name for author in description.authors if author.name]
     who = "; ".join(names) or "Authors not given"
-    invented = f" {_origin(description).capitalize()}." if description.simulated else ""
+    invented = f" {origin.capitalize()}." if (origin := origin_of(description)) else ""
     licence = f" Licence: {description.licence}." if description.licence else ""
     sentence = (
         f"{who} ({year or 'no date given'}). {description.title} [recordings and report].{invented}{licence}"
@@ -63,7 +63,7 @@ DEPOSIT = "[repository, DOI]"
 
 
 def _availability(description: Description) -> str:
-    invented = f" ({_origin(description)})" if description.simulated else ""
+    invented = f" ({origin})" if (origin := origin_of(description)) else ""
     licence = f" under {description.licence}" if description.licence else ""
     return (
         f"The recordings of ‘{description.title}’{invented} with their description, all tables, the fitted"
@@ -72,8 +72,9 @@ def _availability(description: Description) -> str:
     )
 
 
-def _origin(description: Description) -> str:
-    return REHEARSED if description.rehearsal else INVENTED
+def origin_of(description: Description) -> str:
+    """Return what the recordings are where they were not measured; empty where they were."""
+    return REHEARSED if description.rehearsal else INVENTED if description.simulated else ""
 
 
 def _bibtex(description: Description, names: Iterable[str], year: str) -> str:
@@ -81,7 +82,7 @@ def _bibtex(description: Description, names: Iterable[str], year: str) -> str:
         "author": " and ".join(names),
         "title": description.title,
         "year": year,
-        "note": "Recordings and report" + (f", {_origin(description)}" if description.simulated else ""),
+        "note": "Recordings and report" + (f", {origin}" if (origin := origin_of(description)) else ""),
     }
     lines = [f"  {key} = {{{_braced(value)}}}," for key, value in given.items() if value]
     return "\n".join([f"@misc{{campaign{year},", *lines, "}"])

@@ -67,7 +67,7 @@ DEFINITIONS: dict[str, tuple[str, str]] = {
     "expanded uncertainty": ("expanded-uncertainty", "expanded_strain coverage_factor"),
     "effective degrees of freedom": ("effective-degrees", "_df"),
     "node errors": ("node-error", "_error fit_rms rms predicted_rms"),
-    "redundancy": ("redundancy", "redundancy"),
+    "redundancy": ("redundancy", "redundancy network_redundancy"),
     "χ² test": ("chi-square-test", "chi_square"),
     "test of single edges": ("tau-test", "_edge_verdict tau"),
     "all tests counted": ("multiplicity", "_all_counted"),

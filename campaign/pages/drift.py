@@ -25,6 +25,7 @@ from campaign.pages.drift_figures import (
 )
 from campaign.pages.figures import Figure
 from campaign.pages.page import Page
+from campaign.pages.rows import of_sensor
 from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import ReferenceQuantity
 from campaign.trials.hold import STEADY_K
@@ -399,11 +400,14 @@ def sensor_holds(
     drift = results.drift
     if drift is None:
         return [], [], {}
-    rows = drift.holds[(drift.holds["module"] == module) & (drift.holds["sensor"] == sensor)]
+    rows = of_sensor(drift.holds, module, sensor)
     if rows.empty:
         return [], [], {}
     own = [c for c in drift.curves if (c.module, c.sensor) == (module, sensor)][:MOST_PLOTS]
-    figures = [hold_figure(c, drift.reference, f"hold-{i}", 280, most=100) for i, c in enumerate(own, 1)]
+    figures = [
+        hold_figure(c, drift.reference, f"hold-{i}", 280, most=100, with_samples=False)
+        for i, c in enumerate(own, 1)
+    ]
     by_trial: dict[str, list[str]] = {}
     for curve, figure in zip(own, figures, strict=True):
         by_trial.setdefault(curve.trial, []).append(figure.name)

@@ -173,11 +173,17 @@ def _holds_caption(drift: Drift) -> str:
 
 
 def hold_figure(
-    curve: HoldCurve, reference: ReferenceQuantity, name: str, height: int = 340, most: int = 500
+    curve: HoldCurve,
+    reference: ReferenceQuantity,
+    name: str,
+    height: int = 340,
+    most: int = 500,
+    with_samples: bool = True,
 ) -> Figure:
     """Return one hold in full: its envelope, its mean and the forms within two units of the best.
 
     *most* is how many stretches of time are drawn at most; neighbours go together, and no extreme is lost.
+    Its file holds the samples, or, without them, the stretches as drawn.
     """
     unit = percent_unit(curve.percent_of)
     drawn = fewer_stretches(curve, most)
@@ -208,9 +214,9 @@ def hold_figure(
             annotations=_form_labels(curve),
             margin={"r": 150 if curve.forms else 24},
         ),
-        data=curve_table(curve),
+        data=curve_table(curve) if with_samples else stretches_table(drawn),
         note="The band reaches from the lowest to the highest sample of every stretch of time: no spike is "
-        f"lost, and the CSV holds {_samples_words(curve)}. Forms are drawn over the data they were fitted "
+        f"lost, and {_held_words(curve, with_samples)}. Forms are drawn over the data they were fitted "
         "to.",
         height=height,
     )
@@ -277,8 +283,14 @@ def _hold_caption(curve: HoldCurve, reference: ReferenceQuantity) -> str:
     )
 
 
-def _samples_words(curve: HoldCurve) -> str:
+def _held_words(curve: HoldCurve, with_samples: bool) -> str:
     """Say which samples a hold's file holds."""
+    if not with_samples:
+        return f"the CSV holds every stretch; all {curve.recorded_samples:,} samples stand in the recording"
+    return f"the CSV holds {_samples_words(curve)}"
+
+
+def _samples_words(curve: HoldCurve) -> str:
     if len(curve.samples) == curve.recorded_samples:
         return "every sample"
     return (
@@ -309,6 +321,15 @@ def curve_table(curve: HoldCurve) -> pd.DataFrame:
         for form, values in curve.forms
     ]
     return pd.concat([samples, *forms], ignore_index=True)
+
+
+def stretches_table(drawn: HoldCurve) -> pd.DataFrame:
+    """Return the stretches of a hold as drawn, and below them the forms, one row a time and form."""
+    columns = ("curve", "time_s", "change_percent", "low", "high")
+    stretches = ("mean of samples", drawn.times_s, drawn.mean, drawn.low, drawn.high)
+    forms = [(form, drawn.form_times_s, values, np.nan, np.nan) for form, values in drawn.forms]
+    parts = [pd.DataFrame(dict(zip(columns, part, strict=True))) for part in (stretches, *forms)]
+    return pd.concat(parts, ignore_index=True)
 
 
 def decades_figure(drift: Drift) -> Figure | None:

@@ -47,7 +47,7 @@ class Figure:
     traces, layout
         Plain dictionaries in the plot library's schema; axis titles carry units.
     data
-        What stands behind the figure, in full precision: its CSV file. ``None`` where ``table`` is given.
+        What stands behind the figure: its CSV file. ``None`` where ``table`` is given.
     table
         Name of the site's table that holds the figure's data, instead of ``data``.
     note

@@ -8,6 +8,7 @@ from collections.abc import Iterable, Iterator
 import pandas as pd
 
 from campaign.analyses.earlier import EarlierCampaign
+from campaign.analyses.generation_figures import FIGURES
 from campaign.analyses.generation_findings import GenerationFinding
 from campaign.analyses.generation_pairs import AT_COMMON_POSITIONS, NOT_TESTED, POOLED
 from campaign.analyses.generations import Confounded, Generations
@@ -68,7 +69,7 @@ def generations_page(results: CampaignResults) -> Page | None:
             "has_pooled": bool(compared.table["label"].str.startswith(POOLED).any()),
             "margins": bool(compared.table["margin"].notna().any()),
         },
-        figures=tuple(comparison_figures(compared)),
+        figures=tuple(comparison_figures(compared, results.earlier)),
         tables=(generations_table(compared), *((joined,) if joined is not None else ())),
         description="Every headline figure of every two generations, with intervals and verdicts.",
     )
@@ -85,7 +86,7 @@ def _joining_notices(results: CampaignResults) -> list[object]:
     return [notice for notice in results.notices if notice.code in codes]
 
 
-def comparison_figures(compared: Generations) -> Iterator[Figure]:
+def comparison_figures(compared: Generations, earlier: Iterable[EarlierCampaign] = ()) -> Iterator[Figure]:
     """Return the newest against each other: ratios, differences by unit, then the module means."""
     table = compared.table
     tested = table["verdict"] != NOT_TESTED
@@ -111,12 +112,13 @@ def comparison_figures(compared: Generations) -> Iterator[Figure]:
             f"differences-{list(dict.fromkeys(differences['unit'].astype(str))).index(unit) + 1}",
             rows,
             compared,
-            axis("Newer less older", shown, low=ends[0], high=ends[1]),
+            axis("Change", shown, low=ends[0], high=ends[1]),
             centre=0.0,
             caption=_caption(rows, "Differences"),
-            note=f"Zero: no change. Left of it the newer modules have less. {_reading(rows)}",
+            note="Change: the newer less the older. Left of zero the newer modules have less. "
+            f"{_reading(rows)}",
         )
-    yield from module_figures(compared)
+    yield from module_figures(compared, earlier)
 
 
 def _reading(rows: pd.DataFrame) -> str:
@@ -245,10 +247,13 @@ def _caption(rows: pd.DataFrame, what: str) -> str:
     return f"{kind} {against} generation with 95 % intervals: {', '.join(parts)}."
 
 
-def module_figures(compared: Generations) -> Iterator[Figure]:
-    """Return the module means behind the comparisons, one panel a figure, scaled to its largest value."""
-    frame = compared.modules
-    frame = frame[frame["generation"].isin(compared.names)]
+def module_figures(compared: Generations, earlier: Iterable[EarlierCampaign] = ()) -> Iterator[Figure]:
+    """Return the module means behind the comparisons, one panel a figure, scaled to its largest value.
+
+    Generations that were read over another range than this campaign's are drawn only for figures that do not
+    depend on it: the eye would compare what the table does not.
+    """
+    frame = _drawn_modules(compared, earlier)
     known = [
         name for name in dict.fromkeys(frame["figure"]) if frame[frame["figure"] == name]["value"].gt(0).any()
     ]
@@ -307,9 +312,18 @@ def module_figures(compared: Generations) -> Iterator[Figure]:
         traces=tuple(traces),
         layout=made,
         data=frame,
-        note="Each panel ends at its largest module, whose value stands above it.",
+        note="Each panel ends at its largest module, whose value stands above it. Modules are drawn over the "
+        "positions that all share; those read over another range are left out where it matters.",
         height=90 + 150 * math.ceil(len(several) / 2),
     )
+
+
+def _drawn_modules(compared: Generations, earlier: Iterable[EarlierCampaign]) -> pd.DataFrame:
+    other_range = {name for one in earlier if one.restricted is not None for name in one.order}
+    conditional = {figure.name for figure in FIGURES if figure.conditions}
+    frame = compared.modules
+    unlike = frame["figure"].isin(conditional) & frame["generation"].isin(other_range)
+    return frame[frame["generation"].isin(compared.names) & ~unlike]
 
 
 def _panel_title(name: str, frame: pd.DataFrame) -> str:
@@ -333,6 +347,7 @@ def generations_table(compared: Generations) -> Table:
         _compared=[comparison_words(row) for row in rows],
         _margin=[margin_words(row) for row in rows],
         _verdict=[_verdict_cell(row) for row in rows],
+        _modules=[f"{row['modules_first']}, {row['modules_second']}" for row in rows],
     )
     columns = [
         Column("_figure", "Figure", kind="text", href="_href"),
@@ -342,6 +357,7 @@ def generations_table(compared: Generations) -> Table:
         Column("_second", "Its value", digits=3),
         Column("_unit", "Unit", kind="text"),
         Column("_compared", "Difference, or times", kind="text"),
+        Column("_modules", "Modules", kind="text"),
         Column("df", "df", digits=2, missing="–"),
         Column("p_adjusted", "p, family", kind="probability", missing="–"),
     ]

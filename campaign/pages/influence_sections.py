@@ -13,6 +13,7 @@ from campaign.pages import numbers
 from campaign.pages.figures import Figure
 from campaign.pages.influence_figures import INFLUENCE_WORDS
 from campaign.pages.pressure import per_unit, sensitivity_figure, sensor_sweeps_figure
+from campaign.pages.rows import of_module, of_sensor
 from campaign.pages.sensor_axis import sensor_axis
 
 
@@ -43,14 +44,15 @@ def sensor_influences(
     figures: list[Figure] = []
     answer = labels = ""
     pressure = results.pressure
-    if pressure is not None and len(rows := _of(pressure.table, module, sensor)):
+    if pressure is not None and len(rows := of_sensor(pressure.table, module, sensor)):
         row = rows.iloc[0].to_dict()
         lines += _pressure_lines(row, results)
         figures.append(sensor_sweeps_figure(pressure, module, sensor))
         answer, labels = str(row["one_correction"]), str(row["label"])
     if results.influences is not None:
         lines += [
-            _line(row, results) for row in _of(results.influences.table, module, sensor).to_dict("records")
+            _line(row, results)
+            for row in of_sensor(results.influences.table, module, sensor).to_dict("records")
         ]
     if not lines:
         return None, []
@@ -62,15 +64,11 @@ def module_pressure_figure(results: CampaignResults, module: str) -> Figure | No
     pressure = results.pressure
     if pressure is None:
         return None
-    table = pressure.table[pressure.table["module"].astype(str) == module]
+    table = of_module(pressure.table, module)
     if table.empty:
         return None
     made = sensitivity_figure(pressure, sensor_axis(table), table)
     return replace(made, name="pressure") if made is not None else None
-
-
-def _of(frame: pd.DataFrame, module: str, sensor: str) -> pd.DataFrame:
-    return frame[(frame["module"].astype(str) == module) & (frame["sensor"].astype(str) == sensor)]
 
 
 def _interval(row: dict[Hashable, Any], key: str, factor: float, unit: str) -> str:

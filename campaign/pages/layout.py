@@ -195,7 +195,7 @@ def placements_table(table: pd.DataFrame) -> Table:
             Column("module", "Module", kind="text", href="_href"),
             Column("placement", "Placement", kind="text"),
             Column("_line", "Read by", kind="text"),
-            Column("redundancy", "Redundancy", kind="integer"),
+            Column("network_redundancy", "Redundancy", kind="integer"),
             Column("chi_square", "χ²", digits=3, missing="no test"),
             Column("p", "p", kind="probability", missing="–"),
             Column("p_adjusted", "p, all counted", kind="probability", missing="–"),

@@ -117,7 +117,7 @@ def _decades(smallest: float) -> list[tuple[float, str]]:
 def _test_sentence(row: Row) -> str:
     chi = numbers.significant(float(row["chi_square"]), 3)
     name = f"{row['module']}, placement {row['placement']}"
-    freedom = numbers.whole(float(row["redundancy"]))
+    freedom = numbers.whole(float(row["network_redundancy"]))
     said = f"χ² = {chi}, redundancy {freedom}, {numbers.probability(float(row['p']))}"
     return f"{name}: {said}; {verdict_words(row)}"
 

@@ -29,7 +29,7 @@ from campaign.pages.figures import (
 from campaign.pages.figures import (
     layout as one_panel,
 )
-from campaign.pages.layout_words import line_words
+from campaign.pages.layout_words import SHORT_LINE_WORDS, line_words
 
 Row = Mapping[Hashable, Any]
 
@@ -59,9 +59,8 @@ def error_figure(found: Layout) -> Figure | None:
     for choice in lines:
         for frame in (AFTER_FIT, AFTER_DATUM):
             where = panel(len(heads))
-            heads.append(
-                f"{'After best fit' if frame == AFTER_FIT else 'By the datum'}, by {line_words(choice)}"
-            )
+            by = "Best fit" if frame == AFTER_FIT else "Datum"
+            heads.append(f"{by}, {SHORT_LINE_WORDS[choice]}s")
             rows = table[(table["read_by"] == choice) & (table["figure"] == frame)]
             traces += _error_traces(rows, modules, generations, where)
     ticks = [(float(i), module) for i, (_, module) in enumerate(modules)]
@@ -272,7 +271,8 @@ def _agreement_caption(table: pd.DataFrame, by_node: bool) -> str:
             above = int((rows["observed_mm"] > rows["predicted_mm"]).sum())
             what = numbers.count(len(rows), "node" if by_node else "module")
             parts.append(f"{numbers.whole(above)} of {what} by {line_words(choice)}")
-    return f"Further off than predicted: {', '.join(parts)}; half of them would be if the prediction held."
+    said = f"Further off than predicted: {', '.join(parts)}"
+    return f"{said}; rather less than half would be if the prediction held."
 
 
 # --- edges

@@ -37,7 +37,8 @@ def legible_json(content: bytes) -> bytes:
 
 
 def _spelled(found: re.Match[str]) -> str:
-    return found[0].encode("unicode_escape").decode("ascii")
+    number = ord(found[0])
+    return f"\\u{number:04x}" if number < 0x10000 else f"\\U{number:08x}"
 
 
 def _spelled_in_json(found: re.Match[str]) -> str:

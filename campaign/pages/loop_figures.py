@@ -14,7 +14,8 @@ from campaign.analyses.hysteresis import Hysteresis, SensorCurve
 from campaign.pages import numbers, palette, slugs
 from campaign.pages.drawing import ready
 from campaign.pages.figures import Figure, Trace, axis, layout, line, plain
-from campaign.pages.page_data import script_value
+from campaign.pages.page_data import Fold, script_value
+from campaign.pages.tables import without_told_trial
 from campaign.recordings.recording import ReferenceQuantity
 
 MOST_RUNS = 3
@@ -44,7 +45,7 @@ def rate_words(rate: float, reference: ReferenceQuantity) -> str:
 
 def outlines_of(hysteresis: Hysteresis, module: str, sensor: str) -> list[SensorCurve]:
     """Return the loops of a sensor that are drawn: of each rate the first runs."""
-    own = [c for c in hysteresis.outlines if (c.module, c.sensor) == (module, sensor)]
+    own = [c for c in hysteresis.outlines if c.module == module and c.sensor == sensor]
     runs: dict[float, list[str]] = {}
     for curve in own:
         known = runs.setdefault(_key(curve.rate_per_s), [])
@@ -170,8 +171,13 @@ def departures_figure(
 
 
 def _with_departures(hysteresis: Hysteresis, curves: Sequence[SensorCurve]) -> pd.DataFrame:
+    """Return what is drawn as rows, beside it the departures; the sensor stands in the name of the file."""
     left = [curve.signal for curve in departures(hysteresis, curves)]
-    return outline_table(curves).assign(departure_percent=np.concatenate(left))
+    rows = outline_table(curves).assign(departure_percent=np.concatenate(left))
+    rates = rows["rate_per_s"].to_numpy(float)
+    shown = {rate: float(f"{rate:.4g}") for rate in set(rates[np.isfinite(rates)].tolist())}
+    rows = rows.assign(rate_per_s=rows["rate_per_s"].map(shown)).drop(columns=["module", "sensor"])
+    return without_told_trial(rows)
 
 
 def outline_table(curves: Sequence[SensorCurve]) -> pd.DataFrame:
@@ -216,9 +222,13 @@ def loop_scripts(hysteresis: Hysteresis | None) -> dict[str, bytes]:
         )
         drawn = ready(figure)
         left = ready(replace(figure, traces=_departure_traces(hysteresis, curves)))
+        fold = Fold()
         content = {
-            "traces": drawn.traces,
-            "departures": [trace["y"] for trace in left.traces],
+            "traces": [fold.trace(trace) for trace in drawn.traces],
+            "departures": [fold.numbers(trace["y"]) for trace in left.traces],
+            "shared": fold.shared,
+            "lists": fold.lists,
+            "texts": fold.texts,
             "departure_ranges": {name: left.layout[name]["range"] for name in ("xaxis", "yaxis")},
             "ranges": {name: drawn.layout[name]["range"] for name in ("xaxis", "yaxis")},
             "rates": list(dict.fromkeys(t["meta"]["rate"] for t in drawn.traces)),

@@ -13,6 +13,7 @@ from campaign.pages import numbers
 from campaign.pages.figures import Figure
 from campaign.pages.hysteresis import width_unit, widths_figure
 from campaign.pages.loop_figures import loops_figure, rate_words
+from campaign.pages.rows import of_module, of_sensor
 from campaign.pages.sensor_axis import sensor_axis
 
 
@@ -42,7 +43,7 @@ def sensor_loops(
     """Return the section of one sensor with its figures; ``None`` where neither loops nor endurance are."""
     lasted = _endurance_words(results, module, sensor)
     found = results.hysteresis
-    rows = _of(found.sensors, module, sensor) if found is not None else pd.DataFrame()
+    rows = of_sensor(found.sensors, module, sensor) if found is not None else pd.DataFrame()
     if found is None or rows.empty:
         return (SensorLoops(endurance=lasted), []) if lasted else (None, [])
     row = rows.to_dict("records")[0]
@@ -75,7 +76,7 @@ def module_widths_figure(results: CampaignResults, module: str) -> Figure | None
     found = results.hysteresis
     if found is None:
         return None
-    rows = found.sensors[found.sensors["module"].astype(str) == module]
+    rows = of_module(found.sensors, module)
     if rows.empty:
         return None
     own = replace(found, sensors=rows)
@@ -83,14 +84,10 @@ def module_widths_figure(results: CampaignResults, module: str) -> Figure | None
     return replace(figure, name="loops", table=None, data=rows)
 
 
-def _of(frame: pd.DataFrame, module: str, sensor: str) -> pd.DataFrame:
-    return frame[(frame["module"].astype(str) == module) & (frame["sensor"].astype(str) == sensor)]
-
-
 def _delay_words(results: CampaignResults, module: str, sensor: str) -> str:
     """The delay with its interval; empty where one rate was run."""
     found = results.hysteresis
-    rows = _of(found.rates.sensors, module, sensor) if found is not None else pd.DataFrame()
+    rows = of_sensor(found.rates.sensors, module, sensor) if found is not None else pd.DataFrame()
     if rows.empty:
         return ""
     row = rows.to_dict("records")[0]
@@ -102,7 +99,7 @@ def _endurance_words(results: CampaignResults, module: str, sensor: str) -> tupl
     """One sentence a trial of thousands of cycles."""
     if results.endurance is None:
         return ()
-    rows = _of(results.endurance.sensors, module, sensor)
+    rows = of_sensor(results.endurance.sensors, module, sensor)
     return tuple(_lasting_words(row) for row in rows.to_dict("records"))
 
 

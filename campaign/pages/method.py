@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 from importlib.metadata import PackageNotFoundError, version
@@ -10,14 +11,17 @@ from pathlib import Path
 import pandas as pd
 
 from campaign import __version__
+from campaign.analyses.budget import Budget
 from campaign.analyses.drift import Drift
 from campaign.analyses.hold_figures import OF_FULL_SCALE
 from campaign.analyses.hysteresis import Hysteresis
+from campaign.analyses.layout_results import OWN_LINE, Layout
 from campaign.analyses.loop_table import BY_LINE
 from campaign.analyses.pressure import Pressure
 from campaign.analyses.results import CampaignResults
 from campaign.analyses.scope import Scope, Span
 from campaign.pages import numbers
+from campaign.pages.budget import conditions_in_words
 from campaign.pages.drift_figures import time_words
 from campaign.pages.formulas import rendered_formulas
 from campaign.pages.page import Page
@@ -154,6 +158,14 @@ def measured_kinds(results: CampaignResults) -> dict[str, Mapping[str, str]]:
         said["holds"] = _holds_in_words(results.drift)
     if results.pressure is not None:
         said["pressure"] = _pressure_in_words(results.pressure)
+    if results.layout is not None and results.layout.placements:
+        said["layout"] = _layout_in_words(results.layout, results.description.node_reference_mm)
+    if results.generations is not None:
+        said["generations"] = _generations_in_words(results)
+    if results.budget is not None and results.budget.subjects:
+        said["budget"] = _budget_in_words(results.budget)
+    if results.planning is not None and len(results.planning.table):
+        said["planning"] = {"costs": "yes" if results.planning.costs is not None else ""}
     return said
 
 
@@ -194,6 +206,46 @@ def _pressure_in_words(pressure: Pressure) -> dict[str, str]:
         "sweeps": numbers.count(int(table["sweeps"].sum()), "sweep"),
         "range": numbers.span(low, high, "kPa"),
     }
+
+
+def _layout_in_words(layout: Layout, node_reference_mm: float) -> dict[str, str]:
+    own = layout.of_line(OWN_LINE)
+    stated = math.isfinite(node_reference_mm)
+    return {
+        "placements": numbers.count(len(own), "placement"),
+        "modules": numbers.count(len({(one.generation, one.module) for one in own}), "module"),
+        "known": numbers.significant(node_reference_mm, 2, "mm") if stated else "",
+    }
+
+
+def _generations_in_words(results: CampaignResults) -> dict[str, str]:
+    compared = results.generations
+    assert compared is not None
+    names = [
+        name if results.description.title == title else f"{name} ({title})"
+        for name, title in compared.sources.items()
+    ]
+    return {
+        "names": f"{', '.join(names[:-1])} and {names[-1]}",
+        "figures": numbers.count(int(compared.table["figure"].nunique()), "figure"),
+        "family": numbers.whole(compared.family) if compared.family else "",
+        "earlier": "yes" if results.earlier else "",
+        "margins": "yes" if compared.table["p_equivalence"].notna().any() else "",
+    }
+
+
+def _budget_in_words(budget: Budget) -> dict[str, str]:
+    use = conditions_in_words(budget.conditions, budget.reference)
+    unknown = sorted({source for sources in budget.missing.values() for source in sources})
+    return {
+        "use": "; ".join(_condition(what, amount) for what, amount in use if amount != "not stated"),
+        "unknown": ", ".join(unknown),
+        "monte_carlo": "yes" if budget.totals["monte_carlo_low"].notna().any() else "",
+    }
+
+
+def _condition(what: str, amount: str) -> str:
+    return f"{what[0].lower()}{what[1:]} {amount}".replace(", up to", " up to").replace("known:", "known")
 
 
 def _temperatures(span: Span | None) -> str:

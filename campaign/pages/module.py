@@ -30,6 +30,7 @@ from campaign.pages.layout_sections import module_shapes
 from campaign.pages.loop_sections import module_widths_figure
 from campaign.pages.module_share import ModuleShares
 from campaign.pages.page import Page
+from campaign.pages.rows import of_module, of_sensor
 from campaign.pages.sensor import FIGURE_ORDER
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
 from campaign.pages.sensor_parts import sensor_keys
@@ -122,24 +123,18 @@ def _module_page(
     )
 
 
-def _in_module(frame: pd.DataFrame, module: str) -> pd.DataFrame:
-    return frame[frame["module"].astype(str) == module]
-
-
 def _lines_of(results: CampaignResults, module: str) -> pd.DataFrame:
     if results.calibration is None:
         return pd.DataFrame()
-    return principal_lines(_in_module(results.calibration.sensor_lines, module))
+    return principal_lines(of_module(results.calibration.sensor_lines, module))
 
 
 def _state(results: CampaignResults, module: str, sensor: str) -> str:
     """One of: used, set aside, not analysed."""
-    trials = _in_module(results.intake.trials, module)
+    trials = of_module(results.intake.trials, module)
     own = trials[trials["sensor"].astype(str) == sensor]
     table = results.readings.table
-    if len(table) and bool(
-        table.loc[(table["module"] == module) & (table["sensor"] == sensor), "used"].any()
-    ):
+    if len(table) and bool(of_sensor(table, module, sensor)["used"].any()):
         return "used"
     used = own[own["fate"] == "used"]
     if used.empty:
@@ -149,14 +144,14 @@ def _state(results: CampaignResults, module: str, sensor: str) -> str:
 
 def _batch_of(results: CampaignResults, module: str) -> str:
     batches = sorted(
-        {str(b) for b in _in_module(results.intake.trials, module)["batch"] if str(b) not in ("", "nan")}
+        {str(b) for b in of_module(results.intake.trials, module)["batch"] if str(b) not in ("", "nan")}
     )
     return ", ".join(batches)
 
 
 def _mountings_of(results: CampaignResults, module: str) -> list[str]:
     return sorted(
-        {str(s) for s in _in_module(results.intake.trials, module)["session"] if str(s) not in ("", "nan")}
+        {str(s) for s in of_module(results.intake.trials, module)["session"] if str(s) not in ("", "nan")}
     )
 
 
@@ -164,7 +159,7 @@ def _register_of(results: CampaignResults, module: str) -> list[tuple[str, str]]
     register = results.intake.modules
     if register is None or "module" not in register:
         return []
-    rows = _in_module(register, module)
+    rows = of_module(register, module)
     if rows.empty:
         return []
     row = rows.iloc[0]
@@ -174,7 +169,7 @@ def _register_of(results: CampaignResults, module: str) -> list[tuple[str, str]]
 
 def _trials_of(results: CampaignResults, module: str) -> list[dict[Hashable, Any]]:
     """Trials of single sensors, each with the address of its section."""
-    rows = _in_module(results.intake.trials, module)
+    rows = of_module(results.intake.trials, module)
     rows = rows[rows["sensor"].astype(str) != ""].drop_duplicates(["file", "sensor"])
     return [
         {**row, "href": slugs.trial_href(module, str(row["sensor"]), str(row["file"]))}
@@ -236,7 +231,7 @@ def module_lines_figure(
 
 
 def _used_readings(results: CampaignResults, module: str) -> pd.DataFrame:
-    rows = _in_module(results.readings.table, module)
+    rows = of_module(results.readings.table, module)
     return rows[rows["used"]]
 
 
@@ -245,7 +240,7 @@ def module_merits_figure(results: CampaignResults, module: str) -> Figure | None
     names = [n for n in FIGURE_ORDER if n not in ("bend", "strain_error")]
     figures = results.limits.figures
     figures = figures[figures["figure"].isin(names)].dropna(subset=["estimate"])
-    own = _in_module(figures, module)
+    own = of_module(figures, module)
     if own.empty:
         return None
     order = [n for n in names if n in set(own["figure"])]
@@ -307,7 +302,7 @@ def module_effects_figure(results: CampaignResults, module: str, where: SensorAx
     if results.variance is None:
         return None
     rows = results.variance.effects
-    rows = _in_module(rows[(rows["level"] == "sensor")], module).dropna(subset=["estimate"])
+    rows = of_module(rows[(rows["level"] == "sensor")], module).dropna(subset=["estimate"])
     rows = rows[rows["generation"] != "all"] if (rows["generation"] != "all").any() else rows
     term = next((name for name in TERMS if (rows["term"] == name).any()), "")
     rows = in_shown_units(rows[rows["term"] == term])
@@ -344,7 +339,7 @@ def shared_trials(
     results: CampaignResults, module: str, lines: pd.DataFrame
 ) -> tuple[list[SharedTrial], list[Figure]]:
     """Return the trials that carried several of the module's sensors, and their little plots."""
-    trials = _in_module(results.intake.trials, module)
+    trials = of_module(results.intake.trials, module)
     trials = trials[trials["sensor"].astype(str) != ""]
     counts = trials.groupby("file")["sensor"].nunique()
     wide = trials[trials["file"].isin(counts[counts > 1].index)]
@@ -380,7 +375,7 @@ def shared_trial_plot(
     results: CampaignResults, module: str, file: str, lines: pd.DataFrame, index: int
 ) -> Figure | None:
     """Return departures of all sensors of one shared run from their own lines."""
-    rows = _in_module(results.readings.table, module)
+    rows = of_module(results.readings.table, module)
     rows = rows[rows["trial"] == file].merge(
         lines[["sensor", "intercept", "slope"]], on="sensor", suffixes=("", "_line")
     )

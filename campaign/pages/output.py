@@ -1,24 +1,30 @@
 """Writing a folder of files: aside, then swapped in; a folder that is not ours is never touched.
 
-A marker file says that a folder was written by this program. While a new folder is written the old one
-stands; it is moved away in one step and the new one moved in. A run that is killed leaves the old folder or
-the new, or, between the two steps, neither with the old one beside it, which the next run puts back.
+A marker file says that a folder was written by this program, and lists what was written. A folder without
+it, or with anything that it does not list, is somebody's: it is refused, and nothing in it is touched.
+
+While a new folder is written the old one stands. Where the system can exchange two folders in one step
+(Linux, macOS), a run that is killed leaves the old one whole or the new one whole. Elsewhere the old one is
+moved away and the new one moved in; killed between the two, the next run puts the old one back.
 """
 
 from __future__ import annotations
 
 import os
 import shutil
-from collections.abc import Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from pathlib import Path, PurePosixPath
 
 from campaign.notices import CampaignStops, Notice
+from campaign.pages.exchange import exchange_folders
 
 MARKER = "campaign-site.txt"
 _MARKER_TEXT = (
-    "This folder was written by campaign report. Writing the report again replaces it as a whole:\n"
-    "keep nothing of your own in it.\n"
+    "This folder was written by campaign report, which replaces it as a whole when it writes again.\n"
+    "Where anything stands in it that is not listed here, it is left alone and nothing is written.\n\n"
 )
+_OF_THE_SYSTEM = frozenset({".DS_Store", "Thumbs.db", "desktop.ini", ".directory"})
+"""What file managers put into folders that are only looked at."""
 
 
 def write_folder(files: Mapping[str, bytes], into: Path) -> None:
@@ -42,11 +48,20 @@ def write_folder(files: Mapping[str, bytes], into: Path) -> None:
         _write_all(files, aside)
         _swap(aside, into, away)
     except OSError as fault:
+        _leave_nothing(aside)
         raise CampaignStops([_notice(into, f"cannot be written ({fault.strerror or fault})")]) from fault
 
 
+def _leave_nothing(aside: Path) -> None:
+    """Remove what was begun, as far as that can be done: what stopped the writing may stop this too."""
+    try:
+        _remove(aside)
+    except OSError:
+        return
+
+
 def check_ours(into: Path) -> None:
-    """Stop unless *into* may be replaced: it does not exist, is empty, or carries our marker.
+    """Stop unless *into* may be replaced: it does not exist, is empty, or holds what our marker lists alone.
 
     Raises
     ------
@@ -55,20 +70,50 @@ def check_ours(into: Path) -> None:
     """
     if into.is_symlink() or (into.exists() and not into.is_dir()):
         raise CampaignStops([_notice(into, "is not a folder")])
-    if into.is_dir() and any(into.iterdir()) and not (into / MARKER).is_file():
+    if not into.is_dir() or not any(into.iterdir()):
+        return
+    if (into / MARKER).is_symlink() or not (into / MARKER).is_file():
         raise CampaignStops([_notice(into, "holds files that campaign report did not write")])
+    if foreign := next(_foreign(into), None):
+        raise CampaignStops([_notice(into, f"holds what campaign report did not write ({foreign!r})")])
+
+
+def _foreign(folder: Path) -> Iterator[str]:
+    """Addresses of files, links and empty folders that the marker of *folder* does not list."""
+    text = (folder / MARKER).read_text(encoding="utf-8", errors="replace")
+    _, lists, listing = text.partition("\n\n")
+    if not lists:
+        return  # written before markers listed anything
+    listed = set(listing.splitlines())
+    folders = {str(parent) for address in listed for parent in PurePosixPath(address).parents}
+    for place, names, files in os.walk(folder):
+        within = Path(place).relative_to(folder)
+        links = [name for name in names if (Path(place) / name).is_symlink()]
+        for name in sorted({*files, *links} - _OF_THE_SYSTEM):
+            address = (within / name).as_posix()
+            if address != MARKER and (address not in listed or (folder / address).is_symlink()):
+                yield address
+        if within.as_posix() not in folders and within != Path():
+            yield within.as_posix()
 
 
 def _write_all(files: Mapping[str, bytes], folder: Path) -> None:
     folder.mkdir(parents=True)
-    (folder / MARKER).write_text(_MARKER_TEXT, encoding="utf-8", newline="\n")
+    (folder / MARKER).write_text(_marker(files), encoding="utf-8", newline="\n")
     for parent in sorted({str(PurePosixPath(address).parent) for address in files}):
         (folder / parent).mkdir(parents=True, exist_ok=True)
     for address, content in files.items():
         (folder / address).write_bytes(content)
 
 
+def _marker(addresses: Iterable[str]) -> str:
+    return _MARKER_TEXT + "".join(f"{address}\n" for address in sorted(addresses))
+
+
 def _swap(aside: Path, into: Path, away: Path) -> None:
+    if into.exists() and exchange_folders(aside, into):
+        _remove(aside)
+        return
     if into.exists():
         os.replace(into, away)
     os.replace(aside, into)
@@ -94,7 +139,15 @@ def _remove(folder: Path) -> None:
         or (any(folder.iterdir()) and not (folder / MARKER).is_file())
     ):
         raise CampaignStops([_notice(folder, "stands in the way and was not written by campaign report")])
-    shutil.rmtree(folder)
+    for entry in folder.iterdir():
+        if entry.name == MARKER:
+            continue
+        if entry.is_dir() and not entry.is_symlink():
+            shutil.rmtree(entry)
+        else:
+            entry.unlink()
+    (folder / MARKER).unlink(missing_ok=True)  # last: a run that is killed here leaves what is known as ours
+    folder.rmdir()
 
 
 def _beside(into: Path, word: str) -> Path:

@@ -3,9 +3,11 @@
 ``assets/unfold.js`` puts everything back before any other script sees it, as :func:`unfolded` does.
 
 - What traces, axes and labels share (looks, units, ranges) stands once in ``shared``; ``"$"`` is its place.
+- Numbers of points stand once in ``lists``, as short texts (:mod:`campaign.pages.packed_numbers`) where they
+  are whole numbers of one decimal place; a trace holds the place of each of its lists.
 - Sentences and links stand once in ``texts``. The sentences of one trace that differ in some words only are
-  one sentence with gaps and a list of words for each gap, ``{"t": place, "v": ["1|2|3", "0.52|0.48|0.61"]}``;
-  a gap with one word for all points holds that word alone.
+  one sentence with gaps and the words of each gap, ``{"t": place, "v": [place, place]}``, words such as
+  ``"1|2|3"`` being one text; a gap with one word for all points holds that word alone.
 """
 
 from __future__ import annotations
@@ -20,6 +22,7 @@ import orjson
 from campaign.pages.figures import Figure, Layout, Trace
 from campaign.pages.house_style import NOTE_DEFAULTS
 from campaign.pages.legible import legible_json
+from campaign.pages.packed_numbers import packed, unpacked
 from campaign.pages.page import Page
 from campaign.pages.tables import Cell
 
@@ -33,16 +36,21 @@ _HEAD, _TAIL = b"window.campaignPage = ", b";\n"
 _OWN_OF_TRACE = frozenset(
     {"x", "y", "name", "meta", "hovertext", "customdata", "text", "error_x", "error_y", "base"}
 )
+_NUMBERS_OF_TRACE = ("x", "y", "base")
+_BARS_OF_TRACE = ("error_x", "error_y")
+_OWN_OF_BARS = frozenset({"array", "arrayminus"})
 _OWN_OF_AXIS = frozenset({"domain", "anchor", "matches"})
 _OWN_OF_LABEL = frozenset({"text", "x", "y", "xref", "yref"})
 _WORDS = re.compile(r"([ \u202f:,;()\[\]]+)")
 
 
 class Fold:
-    """What a page's script holds once: shared looks and texts, each by its place in a list."""
+    """What a page's script holds once: shared looks, numbers and texts, each by its place in a list."""
 
     def __init__(self) -> None:
         self._shared: dict[bytes, int] = {}
+        self._lists: dict[bytes, int] = {}
+        self._places: dict[tuple[float | str | None, ...], int] = {}
         self._texts: dict[str, int] = {}
 
     @property
@@ -51,13 +59,24 @@ class Fold:
         return [orjson.Fragment(look) for look in self._shared]
 
     @property
+    def lists(self) -> list[orjson.Fragment]:
+        """The lists of numbers, in order."""
+        return [orjson.Fragment(numbers) for numbers in self._lists]
+
+    @property
     def texts(self) -> list[str]:
         """The texts, in order."""
         return list(self._texts)
 
     def trace(self, trace: Trace) -> Trace:
-        """Return a trace with its looks, sentences and links folded."""
+        """Return a trace with its looks, numbers, sentences and links folded."""
         made = self._parted(trace, _OWN_OF_TRACE)
+        for key in _NUMBERS_OF_TRACE:
+            if isinstance(trace.get(key), list):
+                made[key] = self.numbers(trace[key])
+        for key in _BARS_OF_TRACE:
+            if key in trace:
+                made[key] = self._bars(trace[key])
         if isinstance(trace.get("meta"), dict):
             made["meta"] = self._looks(trace["meta"])
         if isinstance(trace.get("customdata"), list):
@@ -65,6 +84,19 @@ class Fold:
         if isinstance(trace.get("hovertext"), list):
             made["hovertext"] = self._sentences(trace["hovertext"])
         return made
+
+    def numbers(self, values: Sequence[float | None]) -> int:
+        """Return the place of a list of numbers."""
+        known = tuple(values)
+        if (place := self._places.get(known)) is None:
+            short = packed(values)
+            written = orjson.dumps(values if short is None else short)
+            place = self._places[known] = self._lists.setdefault(written, len(self._lists))
+        return place
+
+    def _bars(self, bars: Mapping[str, Any]) -> dict[str, Any]:
+        made = self._parted(bars, _OWN_OF_BARS)
+        return {key: self.numbers(value) if key in _OWN_OF_BARS else value for key, value in made.items()}
 
     def layout(self, layout: Layout) -> Layout:
         """Return a layout with its axes and labels folded."""
@@ -97,7 +129,7 @@ class Fold:
         if parts is None:
             return [self._text(sentence) for sentence in sentences]
         with_gaps, words = parts
-        return {"t": self._text(with_gaps), "v": words}
+        return {"t": self._text(with_gaps), "v": [self._text(own) for own in words]}
 
 
 def _parted_sentences(sentences: Sequence[str]) -> tuple[str, list[str]] | None:
@@ -160,7 +192,7 @@ def script_value(value: Any) -> bytes:
 
 
 def folded_figures(figures: Mapping[str, Figure]) -> dict[str, Any]:
-    """Return ``figures``, ``shared`` and ``texts`` of figures that are ready to be drawn, by their names."""
+    """Return ``figures``, ``shared``, ``lists`` and ``texts`` of figures that are ready to be drawn."""
     fold = Fold()
     drawn = {
         name: {
@@ -170,7 +202,7 @@ def folded_figures(figures: Mapping[str, Figure]) -> dict[str, Any]:
         }
         for name, figure in figures.items()
     }
-    return {"figures": drawn, "shared": fold.shared, "texts": fold.texts}
+    return {"figures": drawn, "shared": fold.shared, "lists": fold.lists, "texts": fold.texts}
 
 
 def folded_row(marks: tuple[str, str], cells: Sequence[Cell]) -> list[Any]:
@@ -195,6 +227,7 @@ def unfolded(script: bytes) -> dict[str, Any]:
     if not (script.startswith(_HEAD) and script.endswith(_TAIL)):
         raise ValueError("not a data script")
     page: dict[str, Any] = json.loads(script[len(_HEAD) : -len(_TAIL)].replace(_PROTO_AS_KEY, _PROTO))
+    page["lists"] = unpacked_lists(page)
     for figure in page["figures"].values():
         figure["traces"] = [_unfolded_trace(trace, page) for trace in figure["traces"]]
         layout: dict[str, Any] = {
@@ -206,8 +239,26 @@ def unfolded(script: bytes) -> dict[str, Any]:
     return page
 
 
+def unfolded_traces(content: dict[str, Any]) -> list[Trace]:
+    """Return the traces of a script that brings further ones with ``shared``, ``lists`` and ``texts``."""
+    whole = {**content, "lists": unpacked_lists(content)}
+    return [_unfolded_trace(trace, whole) for trace in content["traces"]]
+
+
+def unpacked_lists(content: Mapping[str, Any]) -> list[list[Any]]:
+    """Return the lists of numbers that a script holds, in order."""
+    return [unpacked(held) if isinstance(held, str) else held for held in content["lists"]]
+
+
 def _unfolded_trace(trace: dict[str, Any], page: dict[str, Any]) -> dict[str, Any]:
-    made, texts = _whole(trace, page), page["texts"]
+    made, texts, lists = _whole(trace, page), page["texts"], page["lists"]
+    for key in _NUMBERS_OF_TRACE:
+        if isinstance(made.get(key), int):
+            made[key] = lists[made[key]]
+    for key in _BARS_OF_TRACE:
+        if key in made:
+            bars = _whole(made[key], page)
+            made[key] = {k: lists[v] if k in _OWN_OF_BARS else v for k, v in bars.items()}
     if "meta" in made:
         made["meta"] = page["shared"][made["meta"]]
     if "customdata" in made:
@@ -218,7 +269,8 @@ def _unfolded_trace(trace: dict[str, Any], page: dict[str, Any]) -> dict[str, An
     if isinstance(hover, list):
         made["hovertext"] = [texts[place] for place in hover]
     elif isinstance(hover, dict):
-        made["hovertext"] = [_filled(texts[hover["t"]], hover["v"], i) for i in range(len(made["x"]))]
+        words = [texts[place] for place in hover["v"]]
+        made["hovertext"] = [_filled(texts[hover["t"]], words, i) for i in range(len(made["x"]))]
     return made
 
 

@@ -46,12 +46,25 @@ def planning_page(results: CampaignResults) -> Page | None:
             "modules_needed": modules_needed(planning),
             "generations": results.generations,
             "spared": _spared(planning),
+            "present": _present_row(planning),
         },
         figures=tuple(planning_figures(planning)) if planning.components else (),
         tables=(planning_table(planning),) if planning.components else (),
         data={"planning": planning_data(planning)} if planning.components else {},
         description="Precision against numbers of modules, sensors and runs, with live controls and costs.",
     )
+
+
+def _present_row(planning: Planning) -> dict[str, float]:
+    """The row of the table that this campaign's own design has, by the components plans rest on."""
+    if planning.resolved is None:
+        return {}
+    table, design = planning.table, planning.resolved.design
+    own = table[table["components"] == planning.components[0].name]
+    for name, size in asdict(design).items():
+        own = own[own[name] == size]
+    names = ("difference_half_width_low", "difference_half_width_high", "power_low", "power_high")
+    return {name: float(own.iloc[0][name]) for name in names} if len(own) else {}
 
 
 def _spared(planning: Planning) -> list[str]:

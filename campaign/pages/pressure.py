@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Hashable, Iterable, Sequence
+from collections.abc import Hashable, Iterable, Mapping, Sequence
 from typing import Any
 
 import numpy as np
@@ -29,8 +29,9 @@ from campaign.pages.figures import (
 )
 from campaign.pages.influence_figures import axis_with_zero, influence_figures, influence_tables
 from campaign.pages.page import Page
+from campaign.pages.rows import of_sensor
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
-from campaign.pages.tables import Column, Table
+from campaign.pages.tables import Column, Table, without_told_trial
 from campaign.recordings.recording import FloatArray, ReferenceQuantity
 
 CORRECTION_WORDS = {
@@ -252,13 +253,12 @@ def sensor_sweeps_figure(
     pressure: Pressure, module: str, sensor: str, name: str = "pressure-sweeps"
 ) -> Figure:
     """Return the signal of one sensor against pressure, all sweeps, with their lines."""
-    rows = pressure.sweeps
-    rows = rows[(rows["module"] == module) & (rows["sensor"] == sensor)]
+    rows = of_sensor(pressure.sweeps, module, sensor)
     unit = str(rows["unit"].iloc[0])
     traces: list[Trace] = []
     lengths = sorted(set(rows["x"].round(4).dropna()))
     most = max(12, MOST_POINTS // len(rows))
-    for _, row in rows.iterrows():
+    for row in rows.to_dict("records"):
         step = lengths.index(round(float(row["x"]), 4)) if math.isfinite(row["x"]) else 0
         style = palette.GENERATION_STYLES[step % len(palette.GENERATION_STYLES)]
         key = (str(row["trial"]), sensor, int(row["repetition"]), int(row["sweep"]))
@@ -279,16 +279,17 @@ def sensor_sweeps_figure(
         )
         ends = np.array([row["influence_low"], row["influence_high"]])
         traces.append(line(ends, row["slope"] * ends, colour=palette.INK, dash="dash", width=0.8))
-    own = pressure.points
-    own = own[(own["module"] == module) & (own["sensor"] == sensor)]
+    own = of_sensor(pressure.points, module, sensor)
     return Figure(
         name=name,
         caption=_sensor_caption(pressure, module, sensor),
         alternative=f"Change of {module} {sensor} with pressure, one loop a sweep, with its line.",
         traces=tuple(traces),
         layout=layout(axis("Pressure", "kPa"), axis("Change of the signal", unit)),
-        data=own[["trial", "repetition", "sweep", "leg", "x", "influence", "signal", "time_s"]].rename(
-            columns={"influence": "pressure_kpa"}
+        data=without_told_trial(
+            own[["trial", "repetition", "sweep", "leg", "x", "influence", "signal", "time_s"]].rename(
+                columns={"influence": "pressure_kpa"}
+            )
         ),
         note="Each sweep less its signal without pressure. Each length has its own colour; dashes are the "
         "line of each sweep over both branches. Curves show evenly chosen samples.",
@@ -305,7 +306,7 @@ def _spaced(influence: FloatArray, signal: FloatArray, most: int) -> tuple[Float
     return influence[kept], signal[kept]
 
 
-def _sweep_words(row: pd.Series, reference: ReferenceQuantity, unit: str) -> str:
+def _sweep_words(row: Mapping[Hashable, Any], reference: ReferenceQuantity, unit: str) -> str:
     at = ""
     if math.isfinite(row["x"]):
         at = f" at {numbers.significant(row['x'] * reference.shown_factor, 3, reference.shown_unit)}"

@@ -15,6 +15,7 @@ from pathlib import Path
 from campaign.pages import palette
 from campaign.pages.figures import Figure
 from campaign.pages.legible import legible
+from campaign.pages.numbers import MINUS
 from campaign.pages.print_layout import laid_for_print
 from campaign.pages.static_figure import drawn_content
 from campaign.pages.static_strokes import TENTHS
@@ -28,6 +29,8 @@ MILLIMETRES_PER_PIXEL = 0.2268
 
 TYPEFACES = "'Source Sans Pro', 'Source Sans 3', Arial, Helvetica, sans-serif"
 _PAPER = "#ffffff"
+_SMALL_POWER = re.compile("(\\s?×\\s?)?10⁻([⁰¹²³⁴⁵⁶⁷⁸⁹]+)")
+"""The carried typeface has no raised minus sign: 10⁻⁸ is written as 1e−8."""
 _BEYOND_THE_FONT = re.compile("[\u0530-\u1dff\u2e80-\U0010ffff]")
 """Scripts that the carried typeface lacks: letters of the machine stand in, where it has any."""
 
@@ -78,8 +81,14 @@ def print_png(svg: str) -> bytes:
 
 
 def _on_white(content: str) -> str:
-    """Return what a picture draws with the site's paper turned white, and a dot that every typeface has."""
-    return content.replace(f'"{palette.PAPER}"', f'"{_PAPER}"').replace("●", "•")
+    """Return what a picture draws on white paper, in signs that every typeface has."""
+    powers = _SMALL_POWER.sub(_as_exponent, content)
+    return powers.replace(f'"{palette.PAPER}"', f'"{_PAPER}"').replace("●", "•")
+
+
+def _as_exponent(found: re.Match[str]) -> str:
+    digits = found[2].translate(str.maketrans("⁰¹²³⁴⁵⁶⁷⁸⁹", "0123456789"))
+    return f"{'' if found[1] else '1'}e{MINUS}{digits}"
 
 
 def _plain(text: str) -> str:

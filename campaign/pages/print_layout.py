@@ -16,6 +16,8 @@ NARROW = 500
 _SMALLEST_LETTERS = 11
 _LETTER = 6.2
 """Width in pixels that a letter takes at most, on average, at the size of titles."""
+_LETTER_SHARE = 0.5
+"""Width of a letter over the size of letters, on average."""
 _LINE = 16
 _BETWEEN_ROWS, _BETWEEN_TITLED_ROWS = 34, 72
 _BETWEEN_COLUMNS = 0.08
@@ -120,6 +122,7 @@ def _with_broken_titles(figure: Figure, width: int) -> Figure:
     highest = max((note["text"].count("<br>") for note in notes if _is_panel_title(note)), default=0)
     notes = [_raised(note, _LINE * highest) if _is_above(note) else note for note in notes]
     margin["t"] += _LINE * highest
+    notes = [_kept_inside(note, layout, width) for note in notes]
     layout |= {"annotations": notes, "margin": margin}
     return replace(figure, layout=layout, height=figure.height + _LINE * (lines - 1 + highest))
 
@@ -141,6 +144,22 @@ def _is_above(note: Layout) -> bool:
 
 def _raised(note: Layout, pixels: float) -> Layout:
     return {**note, "yshift": note.get("yshift", 0) + pixels}
+
+
+def _kept_inside(note: Layout, layout: Layout, width: int) -> Layout:
+    """Return a label moved back into the picture where its end would be cut off."""
+    axis = layout.get(f"xaxis{str(note.get('xref', 'x')).split(' ')[0][1:]}")
+    if axis is None:
+        return note
+    low, high = (0.0, 1.0) if str(note.get("xref", "")).endswith("domain") else axis["range"]
+    start, margin = axis.get("domain", (0.0, 1.0))[0], layout["margin"]
+    along = start + _share(axis) * (float(note["x"]) - low) / (high - low)
+    place = margin["l"] + (width - margin["l"] - margin["r"]) * along + note.get("xshift", 0)
+    longest = max(len(line) for line in str(note["text"]).split("<br>"))
+    size = longest * _LETTER_SHARE * note["font"]["size"]
+    left = place - size * {"left": 0.0, "center": 0.5, "right": 1.0}.get(note.get("xanchor", "center"), 0.5)
+    moved = min(width - 2 - (left + size), 0.0) or max(2 - left, 0.0)
+    return {**note, "xshift": note.get("xshift", 0) + moved} if moved else note
 
 
 def _legible(note: Layout, layout: Layout, inner: float) -> Layout:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import unicodedata
 from collections.abc import Iterable
 from dataclasses import dataclass
 
@@ -29,7 +30,8 @@ class Reference:
     @property
     def key(self) -> str:
         """Key in a bibliography: ``fieller1954``."""
-        return "".join(c for c in self.label.lower().replace("š", "s") if c.isascii() and c.isalnum())
+        plain = unicodedata.normalize("NFKD", self.label.lower())
+        return "".join(c for c in plain if c.isascii() and c.isalnum())
 
     @property
     def bibtex(self) -> str:
@@ -46,7 +48,8 @@ class Reference:
         where = ", ".join(
             filter(None, (f"{place} {number}".strip(), said.get("pages", "").replace("--", "–")))
         )
-        return f"{said['author'].replace(' and ', ', ')} ({said['year']}). {said['title']}. {where}."
+        who = said["author"].replace(" and ", ", ").strip("{}")
+        return f"{who} ({said['year']}). {said['title']}. {where}."
 
 
 def cited_in(text: str) -> tuple[Reference, ...]:
@@ -67,12 +70,39 @@ _JASA = "Journal of the American Statistical Association"
 
 REFERENCES: tuple[Reference, ...] = (
     _work(
+        "Baarda 1968",
+        _REPORT,
+        "Baarda, W.",
+        "A testing procedure for use in geodetic networks",
+        "1968",
+        institution="Netherlands Geodetic Commission, Publications on Geodesy",
+        number="New Series 2(5)",
+    ),
+    _work(
+        "Cochran 1977",
+        _BOOK,
+        "Cochran, W. G.",
+        "Sampling Techniques",
+        "1977",
+        publisher="Wiley",
+    ),
+    _work(
         "Davison and Hinkley 1997",
         _BOOK,
         "Davison, A. C. and Hinkley, D. V.",
         "Bootstrap Methods and their Application",
         "1997",
         publisher="Cambridge University Press",
+    ),
+    _work(
+        "Donner and Zou 2012",
+        _ARTICLE,
+        "Donner, A. and Zou, G. Y.",
+        "Closed-form confidence intervals for functions of the normal mean and standard deviation",
+        "2012",
+        journal="Statistical Methods in Medical Research",
+        volume="21",
+        pages="347--359",
     ),
     _work(
         "Fieller 1954",
@@ -125,6 +155,24 @@ REFERENCES: tuple[Reference, ...] = (
         pages="297--307",
     ),
     _work(
+        "JCGM 100:2008",
+        _REPORT,
+        "{Joint Committee for Guides in Metrology}",
+        "Guide to the expression of uncertainty in measurement",
+        "2008",
+        institution="JCGM",
+        number="100:2008",
+    ),
+    _work(
+        "JCGM 101:2008",
+        _REPORT,
+        "{Joint Committee for Guides in Metrology}",
+        "Propagation of distributions using a Monte Carlo method",
+        "2008",
+        institution="JCGM",
+        number="101:2008",
+    ),
+    _work(
         "Patterson and Thompson 1971",
         _ARTICLE,
         "Patterson, H. D. and Thompson, R.",
@@ -135,6 +183,15 @@ REFERENCES: tuple[Reference, ...] = (
         pages="545--554",
     ),
     _work(
+        "Pope 1976",
+        _REPORT,
+        "Pope, A. J.",
+        "The statistics of residuals and the detection of outliers",
+        "1976",
+        institution="NOAA Technical Report",
+        number="NOS 65 NGS 1",
+    ),
+    _work(
         "Riley 2008",
         _REPORT,
         "Riley, W. J.",
@@ -142,6 +199,16 @@ REFERENCES: tuple[Reference, ...] = (
         "2008",
         institution="NIST Special Publication",
         number="1065",
+    ),
+    _work(
+        "Sasabuchi 1980",
+        _ARTICLE,
+        "Sasabuchi, S.",
+        "A test of a multivariate normal mean with composite hypotheses determined by linear inequalities",
+        "1980",
+        journal="Biometrika",
+        volume="67",
+        pages="429--439",
     ),
     _work(
         "Satterthwaite 1946",
@@ -154,6 +221,27 @@ REFERENCES: tuple[Reference, ...] = (
         pages="110--114",
     ),
     _work(
+        "Schönemann 1966",
+        _ARTICLE,
+        "Schönemann, P. H.",
+        "A generalized solution of the orthogonal Procrustes problem",
+        "1966",
+        journal="Psychometrika",
+        volume="31",
+        pages="1--10",
+    ),
+    _work(
+        "Schuirmann 1987",
+        _ARTICLE,
+        "Schuirmann, D. J.",
+        "A comparison of the two one-sided tests procedure and the power approach for assessing the"
+        " equivalence of average bioavailability",
+        "1987",
+        journal="Journal of Pharmacokinetics and Biopharmaceutics",
+        volume="15",
+        pages="657--680",
+    ),
+    _work(
         "Seely and El-Bassiouny 1983",
         _ARTICLE,
         "Seely, J. F. and El-Bassiouny, Y.",
@@ -162,6 +250,17 @@ REFERENCES: tuple[Reference, ...] = (
         journal="Annals of Statistics",
         volume="11",
         pages="197--201",
+    ),
+    _work(
+        "Self and Liang 1987",
+        _ARTICLE,
+        "Self, S. G. and Liang, K.-Y.",
+        "Asymptotic properties of maximum likelihood estimators and likelihood ratio tests under nonstandard"
+        " conditions",
+        "1987",
+        journal=_JASA,
+        volume="82",
+        pages="605--610",
     ),
     _work(
         "Šidák 1967",
@@ -174,6 +273,14 @@ REFERENCES: tuple[Reference, ...] = (
         pages="626--633",
     ),
     _work(
+        "Strang and Borre 1997",
+        _BOOK,
+        "Strang, G. and Borre, K.",
+        "Linear Algebra, Geodesy, and GPS",
+        "1997",
+        publisher="Wellesley-Cambridge Press",
+    ),
+    _work(
         "Swamy 1970",
         _ARTICLE,
         "Swamy, P. A. V. B.",
@@ -182,6 +289,16 @@ REFERENCES: tuple[Reference, ...] = (
         journal="Econometrica",
         volume="38",
         pages="311--323",
+    ),
+    _work(
+        "Welch 1947",
+        _ARTICLE,
+        "Welch, B. L.",
+        "The generalization of ‘Student’s’ problem when several different population variances are involved",
+        "1947",
+        journal="Biometrika",
+        volume="34",
+        pages="28--35",
     ),
 )
 """The works, in the order of their labels."""

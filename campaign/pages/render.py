@@ -30,12 +30,12 @@ from campaign.pages.static_figure import static_svg
 from campaign.pages.tables import (
     Cell,
     Table,
+    as_drawn,
     csv_bytes,
     in_reference,
     schema_bytes,
     shown_cells,
     shown_marks,
-    to_ten_digits,
 )
 from campaign.recordings.recording import STRAIN, ReferenceQuantity
 from campaign.workers.crew import Crew, ThisProcess
@@ -91,6 +91,7 @@ def environment(further: Sequence[Path] = ()) -> Environment:
         trim_blocks=True,
         lstrip_blocks=True,
         keep_trailing_newline=True,
+        auto_reload=False,
     )
     made.globals.update({name: getattr(numbers, name) for name in _NUMBER_FUNCTIONS})
     made.globals.update({name: getattr(slugs, name) for name in _LINK_FUNCTIONS})
@@ -157,8 +158,7 @@ def render_site(
     """
     _check_slugs(page.slug for page in pages)
     written: dict[str, bytes] = dict(files or {})
-    if frame.rehearsal:
-        pages = [_as_rehearsal(page) for page in pages]
+    pages = pages_as_marked(frame, pages)
     written |= table_files([*tables, *(t for page in pages for t in page.tables)], reference, frame.origin)
     whole = RenderingTask(tuple(pages), frame, _strip(pages), tuple(further_templates), reference)
     made = list(render_pages(whole))
@@ -216,8 +216,7 @@ def _tasks(whole: RenderingTask, pages: Iterable[Page]) -> Iterator[RenderingTas
     """Put pages together, a few a task, as they are made: others render while this process makes the next."""
     waiting = iter(pages)
     while some := tuple(islice(waiting, PAGES_A_TASK)):
-        if whole.frame.rehearsal:
-            some = tuple(_as_rehearsal(page) for page in some)
+        some = tuple(pages_as_marked(whole.frame, some))
         if any(table.source is None for page in some for table in page.tables):
             raise ValueError("pages of modules and sensors show parts of the site's tables only")
         yield replace(whole, pages=some)
@@ -236,9 +235,14 @@ def _page_files(jinja: Environment, task: RenderingTask, page: Page) -> PageFile
     further = {f"data/{page.slug}.js": data_script(page, figures, rows)}
     for figure in page.figures:
         if figure.data is not None:
-            data = to_ten_digits(in_reference(figure.data, task.reference))
+            data = as_drawn(in_reference(figure.data, task.reference))
             further[_figure_csv(page, figure)] = csv_bytes(data)
     return PageFiles(page.slug, page.file, _page_html(jinja, task, page, figures, tables), further)
+
+
+def pages_as_marked(frame: SiteFrame, pages: Sequence[Page]) -> Sequence[Page]:
+    """Return *pages*; those of a rehearsal say in every figure and caption that nothing was measured."""
+    return [_as_rehearsal(page) for page in pages] if frame.rehearsal else pages
 
 
 def _as_rehearsal(page: Page) -> Page:

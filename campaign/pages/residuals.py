@@ -29,6 +29,7 @@ from campaign.pages.page import Page
 from campaign.pages.page_data import Fold, script_value
 from campaign.pages.sensor_axis import SensorAxis, sensor_axis
 from campaign.pages.tables import Column, Table
+from campaign.pages.thinning import rounded
 from campaign.recordings.recording import ReferenceQuantity
 
 LARGEST_SHOWN = 200
@@ -108,16 +109,10 @@ def residual_files(results: CampaignResults) -> dict[str, bytes]:
         by_order = _marks(own, "order", where, reference)
         fold = Fold()
         traces = [fold.trace(_rounded(trace)) for trace in by_level]
+        places = {"against-level": by_level, "against-order": by_order}
+        x = {name: [fold.numbers(_rounded(trace)["x"]) for trace in drawn] for name, drawn in places.items()}
         content = script_value(
-            {
-                "traces": traces,
-                "shared": fold.shared,
-                "texts": fold.texts,
-                "x": {
-                    "against-level": [_rounded(trace)["x"] for trace in by_level],
-                    "against-order": [_rounded(trace)["x"] for trace in by_order],
-                },
-            }
+            {"traces": traces, "shared": fold.shared, "lists": fold.lists, "texts": fold.texts, "x": x}
         )
         name = orjson.dumps(module_file(str(module)))
         start = b"(window.campaignResiduals = window.campaignResiduals || {})["
@@ -126,7 +121,14 @@ def residual_files(results: CampaignResults) -> dict[str, bytes]:
 
 
 def _rounded(trace: Trace) -> Trace:
-    return trace | {key: [float(f"{value:.5g}") for value in trace[key]] for key in ("x", "y")}
+    """Round to five digits of the largest value, as :func:`campaign.pages.drawing.ready` does of an axis."""
+    return trace | {key: _rounded_values(trace[key]) for key in ("x", "y")}
+
+
+def _rounded_values(values: list[float]) -> list[float]:
+    finite = [abs(value) for value in values if math.isfinite(value)]
+    made: list[float] = rounded(np.array(values, dtype=float), max(finite, default=0.0)).tolist()
+    return made
 
 
 def _autocorrelation(residuals: Residuals) -> list[dict[str, object]]:

@@ -228,10 +228,9 @@ def _text(value: object) -> str:
 
 def trial_sections(parts: SensorParts, together: Mapping[tuple[str, str], set[str]]) -> list[TrialSection]:
     """Return the sections of a sensor's trials in order of time."""
-    trials = parts.trials.drop_duplicates("file").sort_values(["started", "file"], kind="stable")
     runs, moved = _runs_by_trial(parts), moved_from_line(parts)
     sections: list[TrialSection] = []
-    for trial in trials.to_dict("records"):
+    for trial in _trials_in_order(parts.trials):
         file = str(trial["file"])
         others = together.get((file, parts.module), set()) - {parts.sensor, ""}
         sections.append(
@@ -249,6 +248,20 @@ def trial_sections(parts: SensorParts, together: Mapping[tuple[str, str], set[st
             )
         )
     return sections
+
+
+_OF_TRIAL = ("file", "kind", "started", "session", "repetition", "fate")
+
+
+def _trials_in_order(trials: pd.DataFrame) -> list[dict[str, Any]]:
+    """Return the first row of every file, by time and file, those without a time last."""
+    rows = zip(*(trials[key].tolist() for key in _OF_TRIAL), strict=True)
+    first: dict[str, dict[str, Any]] = {}
+    for row in rows:
+        first.setdefault(str(row[0]), dict(zip(_OF_TRIAL, row, strict=True)))
+    return sorted(
+        first.values(), key=lambda t: (not _text(t["started"]), _text(t["started"]), str(t["file"]))
+    )
 
 
 def _runs_by_trial(parts: SensorParts) -> dict[str, list[dict[Hashable, Any]]]:
@@ -322,13 +335,15 @@ _REASONS: Mapping[str, str] = {
 
 def limits_as_shown(rows: pd.DataFrame, reference: ReferenceQuantity) -> pd.DataFrame:
     """Return verdicts with hidden columns in shown units: strain errors in per cent, others as they are."""
-    in_reference = rows["limit"] == "strain_error"
-    factor = in_reference.map({True: reference.shown_factor, False: 1.0})
-    scaled = {f"_{key}": rows[key] * factor for key in ("value", "estimate", "low", "high")}
-    reasons = rows["reason"].map(_REASONS).fillna("")
+    limits = [str(limit) for limit in rows["limit"].tolist()]
+    in_reference = np.array([limit == "strain_error" for limit in limits], dtype=bool)
+    factor = np.where(in_reference, reference.shown_factor, 1.0)
+    scaled = {f"_{key}": rows[key].to_numpy(float) * factor for key in ("value", "estimate", "low", "high")}
+    verdicts = zip(rows["verdict"].tolist(), rows["reason"].tolist(), strict=True)
+    units = zip(rows["unit"].tolist(), in_reference.tolist(), strict=True)
     return rows.assign(
         **scaled,
-        _verdict=rows["verdict"].astype(str) + reasons.astype(str),
-        _limit=rows["limit"].str.replace("_", " "),
-        _unit=rows["unit"].where(~in_reference, reference.shown_unit),
+        _verdict=[f"{verdict}{_REASONS.get(reason, '')}" for verdict, reason in verdicts],
+        _limit=[limit.replace("_", " ") for limit in limits],
+        _unit=[reference.shown_unit if shown else unit for unit, shown in units],
     )

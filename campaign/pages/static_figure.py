@@ -14,6 +14,7 @@ import re
 from collections import Counter
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Any
 
 import numpy as np
@@ -197,12 +198,27 @@ def _grid(panel: Panel, xs: Sequence[tuple[float, str]], ys: Sequence[tuple[floa
 def _tick_labels(panel: Panel, xs: Sequence[tuple[float, str]], ys: Sequence[tuple[float, str]]) -> str:
     made = ""
     if xs and panel.x_axis.get("showticklabels", True):
-        texts = "".join(_text(words, x, panel.bottom + 17) for x, words in xs)
+        lower = _STAGGER if _names_meet(panel, xs) else 0
+        texts = "".join(
+            _text(words, x, panel.bottom + 17 + lower * (k % 2)) for k, (x, words) in enumerate(xs)
+        )
         made += f'<g fill="{palette.SOFT}" text-anchor="middle">{texts}</g>'
     if ys and panel.y_axis.get("showticklabels", True):
         texts = "".join(_text(words, panel.left - 8, y + 4) for y, words in ys)
         made += f'<g fill="{palette.SOFT}" text-anchor="end">{texts}</g>'
     return made
+
+
+_STAGGER = 13
+"""How much lower every second name stands where names along x would meet, in pixels."""
+
+
+def _names_meet(panel: Panel, xs: Sequence[tuple[float, str]]) -> bool:
+    """Return whether names along x meet, and no title stands below them."""
+    if "ticktext" not in panel.x_axis or panel.x_axis.get("title", {}).get("text"):
+        return False
+    pairs = pairwise(xs)
+    return any(abs(b - a) < 2.9 * (len(one) + len(other)) for (a, one), (b, other) in pairs)
 
 
 def _axis_titles(panel: Panel) -> str:

@@ -130,8 +130,12 @@ def shown_cells(table: Table) -> list[list[Cell]]:
 def shown_marks(table: Table) -> list[tuple[str, str]]:
     """Return the module and sensor of each shown row, empty where the table has no such columns."""
     frame = table.frame if table.shown_rows is None else table.frame.head(table.shown_rows)
-    columns = [frame[key].astype(str).tolist() if key in frame else [""] * len(frame) for key in table.mark]
+    columns = [_texts_of(frame[key]) if key in frame else [""] * len(frame) for key in table.mark]
     return list(zip(columns[0], columns[1], strict=True))
+
+
+def _texts_of(values: pd.Series[Any]) -> list[str]:
+    return [str(value) for value in values.tolist()]
 
 
 def csv_bytes(frame: pd.DataFrame, name: str = "") -> bytes:
@@ -153,13 +157,14 @@ def csv_bytes(frame: pd.DataFrame, name: str = "") -> bytes:
 def _fields_of(values: pd.Series[Any]) -> list[object]:
     """Fields of a column: nothing where a value is missing, infinity as a Table Schema spells it."""
     fields: list[object] = values.tolist()
-    missing = values.isna().to_numpy()
-    if missing.any():
-        fields = [None if gone else field for field, gone in zip(fields, missing.tolist(), strict=True)]
-    if pd.api.types.is_float_dtype(values):
-        infinite = np.isinf(values.to_numpy(float))
-        for row in np.flatnonzero(infinite).tolist():
-            fields[row] = "INF" if values.iloc[row] > 0 else "-INF"
+    held = values.to_numpy()
+    if held.dtype.kind in "biu":
+        return fields
+    for row in np.flatnonzero(pd.isna(held)).tolist():
+        fields[row] = None
+    if held.dtype.kind == "f":
+        for row in np.flatnonzero(np.isinf(held)).tolist():
+            fields[row] = "INF" if held[row] > 0 else "-INF"
     return fields
 
 
@@ -170,11 +175,10 @@ def exported_frame(frame: pd.DataFrame, name: str = "") -> pd.DataFrame:
     if missing:
         raise KeyError(f"table {name} lacks {', '.join(missing)}")
     further = [c for c in frame.columns if c not in contract and not str(c).startswith("_")]
-    exported = spelled_paths(frame[[*contract, *further]].copy())
-    for column in exported.columns:
-        if exported[column].dtype == bool:
-            exported[column] = exported[column].map({True: "true", False: "false"})
-    return exported
+    exported = spelled_paths(frame[[*contract, *further]])
+    truths = [str(column) for column, kind in exported.dtypes.items() if kind == np.dtype(bool)]
+    words = {column: exported[column].map({True: "true", False: "false"}) for column in truths}
+    return exported.assign(**words) if words else exported
 
 
 def contract_of(name: str, frame: pd.DataFrame) -> list[str]:
@@ -199,24 +203,35 @@ def in_reference(frame: pd.DataFrame, reference: ReferenceQuantity) -> pd.DataFr
     return frame.drop(columns=taken).rename(columns=names)
 
 
-def to_ten_digits(frame: pd.DataFrame) -> pd.DataFrame:
-    """Return *frame* with every column of numbers rounded to ten significant digits of its largest one.
+DIGITS_OF_FIGURES = 7
+"""Significant digits of numbers in the files of figures, of each column's largest number."""
 
-    Files of figures hold no more: what was measured has fewer digits, and what was computed stands in full
-    precision in the tables.
+
+def as_drawn(frame: pd.DataFrame) -> pd.DataFrame:
+    """Return *frame* with every column of numbers rounded to :data:`DIGITS_OF_FIGURES` of its largest one.
+
+    Files of figures hold no more: what was measured has fewer digits, a picture shows four, and what was
+    computed stands in full precision in the tables.
     """
-    rounded = {
-        str(column): frame[column].round(_decimals_of_ten_digits(frame[column].to_numpy()))
-        for column, kind in frame.dtypes.items()
-        if pd.api.types.is_float_dtype(kind)
-    }
+    numbers_of = {str(c): frame[c].to_numpy() for c, kind in frame.dtypes.items() if kind == np.dtype(float)}
+    rounded = {c: np.round(held, _decimals_of_figures(held)) for c, held in numbers_of.items()}
     return frame.assign(**rounded) if rounded else frame
 
 
-def _decimals_of_ten_digits(values: np.ndarray[Any, Any]) -> int:
+def without_told_trial(frame: pd.DataFrame) -> pd.DataFrame:
+    """Return rows of one sensor without their trial where the repetition tells which it is.
+
+    The tables of loops and of sweeps hold the trial of every repetition.
+    """
+    told = len(frame) and frame.groupby("repetition")["trial"].nunique().max() == 1
+    return frame.drop(columns="trial") if told else frame
+
+
+def _decimals_of_figures(values: np.ndarray[Any, Any]) -> int:
     finite = np.abs(values[np.isfinite(values)])
     largest = float(finite.max()) if finite.size else 0.0
-    return 9 - math.floor(math.log10(largest)) if largest > 0 else 9
+    last = DIGITS_OF_FIGURES - 1
+    return last - math.floor(math.log10(largest)) if largest > 0 else last
 
 
 def millimetre_name(column: str, quantity: str) -> str:

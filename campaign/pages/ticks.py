@@ -8,14 +8,21 @@ from campaign.pages.numbers import MINUS, NARROW_SPACE
 
 
 def linear_ticks(low: float, high: float, about: int = 5) -> list[tuple[float, str]]:
-    """Return places and texts of ticks at steps of 1, 2 or 5 times a power of ten."""
+    """Return places and texts of ticks at steps of 1, 2 or 5 times a power of ten; two at least."""
     low, high = min(low, high), max(low, high)
     if not high > low:
         return [(low, tick_text(low, 2))]
     step = _round_step((high - low) / max(about, 1))
+    first, last = _multiples(low, high, step)
+    if first == last:  # one tick is no scale
+        step = _round_step((high - low) / 5)
+        first, last = _multiples(low, high, step)
     decimals = max(0, -math.floor(math.log10(step)))
-    first, last = math.ceil(low / step - 1e-9), math.floor(high / step + 1e-9)
     return [(k * step, tick_text(round(k * step, decimals + 1), decimals)) for k in range(first, last + 1)]
+
+
+def _multiples(low: float, high: float, step: float) -> tuple[int, int]:
+    return math.ceil(low / step - 1e-9), math.floor(high / step + 1e-9)
 
 
 def logarithmic_ticks(low: float, high: float) -> list[tuple[float, str]]:

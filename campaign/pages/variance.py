@@ -268,7 +268,7 @@ def shares_figure(variance: Variance) -> Figure | None:
     traces: list[Trace] = []
     labels: list[Layout] = []
     for row_index, generation in enumerate(generations):
-        start = 0.0
+        start, told = 0.0, len(labels)
         for level in levels:
             share = float(
                 table.loc[(table["generation"] == generation) & (table["level"] == level), "share"].sum()
@@ -287,7 +287,8 @@ def shares_figure(variance: Variance) -> Figure | None:
                 )
             )
             if share >= 0.08:
-                labels.append(_share_label(words[level], share, start, row_index))
+                side = 0.38 if len(labels) % 2 == told % 2 else -0.38  # neighbours would meet in print
+                labels.append(_share_label(words[level], share, start, row_index + side))
             start += share
     ticks = [(float(i), g) for i, g in enumerate(generations)]
     return Figure(
@@ -313,7 +314,7 @@ def _share_label(words: str, share: float, start: float, height: float) -> Layou
     return label(
         f"{words} {numbers.percent(share)}",
         (start + share / 2) * 100,
-        height + 0.38,
+        height,
         anchor="center",
         shift=(0, 0),
         size=11,

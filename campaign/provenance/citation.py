@@ -28,7 +28,7 @@ def citation_file(metadata: ArchiveMetadata) -> bytes:
         f"message: {_quoted('If you use these recordings, tables or figures, please cite them as below.')}",
         "type: dataset",
         f"title: {_quoted(metadata.title)}",
-        f"abstract: {_quoted(metadata.summary)}",
+        f"abstract: {_quoted(metadata.marked_summary)}",
         "authors:",
         *(line for author in metadata.authors for line in _author_lines(author)),
     ]
@@ -38,8 +38,8 @@ def citation_file(metadata: ArchiveMetadata) -> bytes:
         lines.append(f"date-released: {_quoted(metadata.day)}")
     if metadata.licence is not None:
         lines.append(f"license: {_quoted(metadata.licence.identifier)}")
-    if metadata.invented:
-        lines += ["keywords:", f"  - {_quoted('invented data')}"]
+    if metadata.origin:
+        lines += ["keywords:", f"  - {_quoted(metadata.origin)}"]
     return ("\n".join(lines) + "\n").encode()
 
 

@@ -60,8 +60,10 @@ TOLERANCES = (EXACT, READ, COMPUTED, LIMIT, PROBABILITY, SEARCH)
 _READ_COLUMNS = re.compile(
     r"(nominal_level|strain|length_mm|elongation_mm|signal|x|time_s|.*_mm|temperature_c|humidity_percent|pressure_kpa)"
 )
-_LIMITS = re.compile(r"(.*_)?(low|high)(_.*)?|expanded.*|.*_expanded.*|df\d?|degrees_of_freedom")
-_PROBABILITIES = re.compile(r"p|p_adjusted|.*_p|.*probability")
+_LIMITS = re.compile(
+    r"(.*_)?(low|high)(_.*)?|expanded.*|.*_expanded.*|df\d?|degrees_of_freedom|coverage_factor|.*half_width.*"
+)
+_PROBABILITIES = re.compile(r"p|p_.*|.*_p|.*probability|power(_.*)?")
 _OF_A_SEARCH = re.compile(r"evaluations|restarts|smallest_cone_eigenvalue|difference")
 
 

@@ -10,8 +10,9 @@ import re
 from dataclasses import dataclass
 
 from campaign.notices import Notice
-from campaign.pages.citation import citation_day
+from campaign.pages.citation import citation_day, origin_of
 from campaign.pages.legible import legible
+from campaign.pages.page import INVENTED, REHEARSED
 from campaign.provenance.licences import Licence, find_licence
 from campaign.recordings.description import DESCRIPTION_FILE, Author, Description
 
@@ -37,8 +38,9 @@ class ArchiveMetadata:
         The licence where it is known here; as the description words it (empty: not stated).
     authors
         Authors with ORCIDs as addresses, empty where none (or no true one) is given.
-    invented
-        Whether the recordings are simulated.
+    origin
+        What the recordings are where they were not measured (:data:`campaign.pages.page.REHEARSED` or
+        ``INVENTED``); empty where they were.
     notices
         What the description should say and does not.
     """
@@ -50,8 +52,19 @@ class ArchiveMetadata:
     licence: Licence | None
     licence_text: str
     authors: tuple[Author, ...]
-    invented: bool
+    origin: str
     notices: tuple[Notice, ...]
+
+    @property
+    def marked_summary(self) -> str:
+        """The summary, and what the recordings are where they were not measured."""
+        return " ".join(filter(None, (self.summary, _NOT_MEASURED.get(self.origin, ""))))
+
+
+_NOT_MEASURED = {
+    INVENTED: "The recordings are invented.",
+    REHEARSED: "Rehearsal, not measured: the recordings were simulated from a plan.",
+}
 
 
 def gather_metadata(description: Description, summary: str, last_day: str = "") -> ArchiveMetadata:
@@ -81,7 +94,7 @@ def gather_metadata(description: Description, summary: str, last_day: str = "") 
         licence=licence,
         licence_text=legible(description.licence),
         authors=authors,
-        invented=description.simulated,
+        origin=origin_of(description),
         notices=tuple(_gaps(description, bool(day), licence)),
     )
 

@@ -13,7 +13,9 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from campaign.analyses.budget import DRAWS as DRAWS_OF_A_BUDGET
 from campaign.analyses.hold_spread import fit_slopes
+from campaign.analyses.layout import DRAWS as DRAWS_OF_LENGTHS
 from campaign.analyses.results import CampaignResults
 from campaign.analyses.variance import RATIO, SIGNAL
 from campaign.analyses.variance_fit import GenerationFit
@@ -22,6 +24,7 @@ from campaign.methods.nested_inference import component_covariance
 from campaign.methods.nested_model import NestedModelFit, RandomTerm
 from campaign.pages.slugs import slug
 from campaign.pages.tables import csv_bytes
+from campaign.provenance.model_shapes import shape_files
 from campaign.provenance.sealed_text import render_text
 from campaign.recordings.recording import ReferenceQuantity
 
@@ -119,14 +122,21 @@ def model_files(results: CampaignResults) -> dict[str, bytes]:
     """Return ``MODEL.md`` and the tables of every fit; the text says so where nothing was fitted."""
     told = [*_main_fits(results), *_loop_fits(results), *_hold_fits(results), *_influence_fits(results)]
     words = [describe_fit(one) for one in told]
+    shapes = {MODEL_FOLDER + name: content for name, content in shape_files(results.layout).items()}
     text = render_text(
         "MODEL.md",
         fits=words,
         seed=results.variance.seed if results.variance is not None else None,
         lines=results.calibration is not None,
         reference=results.readings.reference,
+        results=results,
+        shapes=shapes,
+        model_folder=MODEL_FOLDER,
+        earlier=[one.title for one in results.earlier],
+        layout_draws=DRAWS_OF_LENGTHS,
+        budget_draws=DRAWS_OF_A_BUDGET,
     )
-    files = {MODEL_TEXT: text}
+    files = {MODEL_TEXT: text, **shapes}
     for one in told:
         files |= {f"{MODEL_FOLDER}{one.slug}/{name}": content for name, content in fit_tables(one)}
     return files

@@ -135,16 +135,15 @@ def _root(metadata: ArchiveMetadata, citation: Citation, holds: list[str]) -> En
     }
     if metadata.authors:
         root["author"] = _references(author_id(metadata, k) for k in range(len(metadata.authors)))
-    if metadata.invented:
-        root["keywords"] = "invented data"
+    if metadata.origin:
+        root["keywords"] = metadata.origin
     return root
 
 
 def _described(metadata: ArchiveMetadata) -> str:
     """The summary, and what stands in for something that is not known."""
     further = "" if metadata.day_is_known else f" No date is known; {metadata.day} stands in for it."
-    invented = " The recordings are invented." if metadata.invented else ""
-    return f"{metadata.summary}{invented}{further}"
+    return f"{metadata.marked_summary}{further}"
 
 
 def _folder(part: Part, files: list[str]) -> Entity:

@@ -145,7 +145,7 @@ def seal_campaign(folder: Path, results: CampaignResults, site: Mapping[str, byt
     software = gather_software()
     parts = [part for part in _parts(places, results) if part is not None]
     payload: dict[str, Content] = {
-        **_folder_files(folder, places, results.intake.file_hashes),
+        **_folder_files(folder, places, results),
         **{PREVIEW_FILES + address: content for address, content in site.items()},
         **{address: content for address, content in site.items() if address.startswith((TABLES, RECORDS))},
         **model_files(results),
@@ -164,7 +164,9 @@ def seal_campaign(folder: Path, results: CampaignResults, site: Mapping[str, byt
         payload,
         software.version,
     )
-    beside = {"README.txt": render_text("README.txt", title=metadata.title, preview=PREVIEW)}
+    beside = {
+        "README.txt": render_text("README.txt", title=metadata.title, origin=metadata.origin, preview=PREVIEW)
+    }
     name = slug(description.title)
     bagged = bag_files(payload, _bag_info(metadata, places, software), beside)
     files = {f"{name}/{path}": content for path, content in bagged.items()}
@@ -269,18 +271,22 @@ def _not_there(name: str) -> Notice:
     return Notice("earlier-not-sealed", "noted", DESCRIPTION_FILE, None, None, what, done, remedy)
 
 
-def _folder_files(folder: Path, places: Places, hashes: Mapping[str, str]) -> dict[str, Content]:
+def _folder_files(folder: Path, places: Places, results: CampaignResults) -> dict[str, Content]:
     """Every ordinary file of the campaign and of earlier ones, by its place; unaltered since it was read."""
-    own = list_files(folder)
-    if changed := [name for name, disk in own if name in hashes and _sha256(disk) != hashes[name]]:
+    files = {places.own: dict(list_files(folder))}
+    files |= {place: dict(list_files(disk)) for place, disk in places.earlier.items() if disk.is_dir()}
+    read: dict[str, Mapping[str, str]] = {places.own: results.intake.file_hashes}
+    read |= {posixpath.normpath(f"{places.own}/{one.where}"): one.hashes for one in results.earlier}
+    changed = [
+        name
+        for place, found in files.items()
+        for name, disk in found.items()
+        if name in (hashes := read.get(place, {})) and _sha256(disk) != hashes[name]
+    ]
+    if changed:
         raise CampaignStops([_changed(name) for name in changed])
-    files: dict[str, Content] = {f"{places.own}/{name}": disk for name, disk in own}
-    for place, disk in places.earlier.items():
-        if disk.is_dir():
-            files |= {f"{place}/{name}": found for name, found in list_files(disk)}
-        else:
-            files[place] = disk
-    return files
+    archives: dict[str, Content] = {p: disk for p, disk in places.earlier.items() if not disk.is_dir()}
+    return archives | {f"{p}/{name}": disk for p, found in files.items() for name, disk in found.items()}
 
 
 def _sha256(file: Path) -> str:
@@ -327,10 +333,8 @@ def _parts(places: Places, results: CampaignResults) -> Iterator[Part | None]:
     yield Part(TABLES, "Tables", "Every table of the report as CSV; names, units and types in schema.json.")
     if results.calibration is not None and results.calibration.records:
         yield Part(RECORDS, "Calibration records", "One file a sensor and branch, with its covariance.")
-    if results.variance is not None and results.variance.fits:
-        yield Part(
-            MODEL_FOLDER, "Models", "Design and covariances of every nested fit; explained in MODEL.md."
-        )
+    models = "Design and covariances of every nested fit, covariances of shapes; explained in MODEL.md."
+    yield Part(MODEL_FOLDER, "Models", models)
     yield Part(SOFTWARE, "Software", "The program's source and wheel, and the versions that it ran with.")
     yield Part(f"{SOFTWARE}source/", "Source of the program", "It can be installed with pip.", False)
     yield Part("texts/", "Texts for a paper", "Methods with references, data availability, BibTeX.")
@@ -402,6 +406,7 @@ def _readme(
         preview=PREVIEW,
         site=f"{PREVIEW_FILES}index.html",
         counts=results.intake.counts,
+        rehearsal=results.description.rehearsal,
         payload=PAYLOAD,
     )
 
@@ -413,6 +418,6 @@ def _bag_info(metadata: ArchiveMetadata, places: Places, software: Software) -> 
         "Bagging-Date": metadata.day if metadata.day_is_known else "",
         "Source-Organization": "; ".join(affiliations),
         "Contact-Name": "; ".join(author.name for author in metadata.authors),
-        "External-Description": f"{metadata.title}. {metadata.summary}",
+        "External-Description": f"{metadata.title}. {metadata.marked_summary}",
         CAMPAIGN_LABEL: f"{PAYLOAD}{places.own}",
     }

@@ -18,6 +18,9 @@ from campaign.recordings.line_parser import LONGEST_NUMBER
 
 _NUMERIC = b"0123456789+-eE"
 
+CHUNK_BYTES = 1 << 16
+"""Bytes that are looked at together: larger arrays are taken from the system and given back each time."""
+
 
 @dataclass(frozen=True)
 class Gated:
@@ -58,13 +61,15 @@ def pass_gate(body: bytes, layout: Layout) -> Gated:
     if 2 * np.count_nonzero(mask) < len(mask):
         return _all_careful(len(mask))
     everything = np.arange(len(mask), dtype=np.int64)
-    kept = np.frombuffer(body, np.uint8)[np.repeat(mask, lengths)].tobytes()
-    return Gated(_normalised(kept, layout), everything[mask], everything[~mask])
+    kept = _normalised(_kept_lines(body, mask, lengths), layout)
+    return Gated(kept, everything[mask], everything[~mask])
 
 
 def count_line_feeds(data: bytes) -> int:
     """Return how many line feeds there are; several times faster than the method of bytes."""
-    return int(np.count_nonzero(np.frombuffer(data, np.uint8) == ord("\n")))
+    values = np.frombuffer(data, np.uint8)
+    starts = range(0, len(values), CHUNK_BYTES)
+    return sum(int(np.count_nonzero(values[start : start + CHUNK_BYTES] == 10)) for start in starts)
 
 
 def _unquoted(body: bytes, layout: Layout) -> bytes:
@@ -102,45 +107,74 @@ def _is_plain_throughout(body: bytes, layout: Layout) -> bool:
 
 
 def _fields_fit(body: bytes, layout: Layout) -> bool:
-    """Whether every field has the length of a number and none is empty.
-
-    In short lines no field can be too long; tables with longer ones are looked at line by line.
-    """
+    """Whether every field has the length of a number and none is empty."""
     data = np.frombuffer(body, np.uint8)
-    ends = data == 10
-    separators = data == ord(layout.separator)
+    start = 0
+    while start < len(data):
+        size = _fitting_lines(data[start : start + CHUNK_BYTES], layout)
+        if not size:
+            return False
+        start += size
+    return True
+
+
+def _fitting_lines(part: npt.NDArray[np.uint8], layout: Layout) -> int:
+    """Return the bytes of the whole lines that *part* begins with; 0 where there are none or one is unfit."""
+    ends, separators = part == 10, part == ord(layout.separator)
     marks = ends | separators
     touching = marks[1:] & marks[:-1]
     if layout.trailing_separator:
         touching &= ~(ends[1:] & separators[:-1])
-    if marks[0] or touching.any():
-        return False
     at = np.flatnonzero(ends)
-    longest = max(int(at[0]) + 1, int((at[1:] - at[:-1]).max(initial=0)))
-    return longest <= LONGEST_NUMBER
+    if marks[0] or touching.any() or not len(at):
+        return 0
+    if (
+        _widest_gap(at) <= LONGEST_NUMBER
+        or _widest_gap(np.flatnonzero(marks[: at[-1] + 1])) <= LONGEST_NUMBER
+    ):
+        return int(at[-1]) + 1
+    return 0
+
+
+def _widest_gap(places: npt.NDArray[np.int64]) -> int:
+    return max(int(places[0]), int((places[1:] - places[:-1]).max(initial=1)) - 1)
 
 
 def _plain_mask(body: bytes, layout: Layout) -> tuple[npt.NDArray[np.bool_], npt.NDArray[np.int64]]:
     """Return, for every line, whether it is plain, and its length with the line feed."""
     data = np.frombuffer(body, np.uint8)
     ends = np.flatnonzero(data == 10)
-    starts = np.concatenate(([0], ends[:-1] + 1))
+    lengths = np.diff(ends, prepend=-1)
     separator = ord(layout.separator)
-    is_separator = data == separator
-    allowed = np.zeros(256, np.bool_)
-    allowed[list(_numeric(layout) + layout.separator.encode() + b"\n")] = True
-    marks = is_separator | (data == 10)
-    bad = ~allowed[data]
-    if layout.separator == " ":
-        bad[1:] |= marks[1:] & marks[:-1]
-        bad[0] |= marks[0]
-    counts = np.add.reduceat(is_separator, starts, dtype=np.int64)
     expected = layout.fields - (0 if layout.trailing_separator else 1)
-    plain = (counts == expected) & (ends - starts > expected) & ~np.logical_or.reduceat(bad, starts)
+    plain = _holds_numbers(body, layout, expected) & (lengths - 1 > expected)
     if layout.trailing_separator:
         plain &= data[np.maximum(ends - 1, 0)] == separator
-    plain &= _longest_field(marks, starts) <= LONGEST_NUMBER
-    return plain, ends - starts + 1
+    if layout.separator == " ":
+        marks = (data == separator) | (data == 10)
+        touching = np.flatnonzero(marks & np.append(True, marks[:-1]))
+        plain[np.searchsorted(ends, touching)] = False
+    if lengths.max() > LONGEST_NUMBER:
+        marks = (data == separator) | (data == 10)
+        plain &= _longest_field(marks, ends + 1 - lengths) <= LONGEST_NUMBER
+    return plain, lengths
+
+
+def _holds_numbers(body: bytes, layout: Layout, separators: int) -> npt.NDArray[np.bool_]:
+    """Whether a line has so many separators and nothing but the characters of numbers besides."""
+    left = np.frombuffer(body.translate(None, _numeric(layout)), np.uint8)
+    ends = np.flatnonzero(left == 10)
+    right = np.diff(ends, prepend=-1) == separators + 1
+    strange = np.flatnonzero((left != ord(layout.separator)) & (left != 10))
+    right[np.searchsorted(ends, strange)] = False
+    return np.asarray(right)
+
+
+def _kept_lines(body: bytes, kept: npt.NDArray[np.bool_], lengths: npt.NDArray[np.int64]) -> bytes:
+    """Return the lines that are kept, stretch by stretch."""
+    edges = np.flatnonzero(np.diff(kept, prepend=False, append=False))
+    places = np.append(0, np.cumsum(lengths))[edges].tolist()
+    return b"".join(body[start:stop] for start, stop in zip(places[::2], places[1::2], strict=True))
 
 
 def _longest_field(mark: npt.NDArray[np.bool_], starts: npt.NDArray[np.int64]) -> npt.NDArray[np.int64]:

@@ -226,30 +226,38 @@ def _joined(table: _Table, plain: FloatArray | None) -> _Rows:
     places = [column.position - 1 for column in columns]
     fast_lines = table.gated.plain_lines
     if plain is None:
-        plain, fast_lines = np.empty((0, table.layout.fields)), fast_lines[:0]
+        plain, fast_lines, finite = np.empty((0, table.layout.fields)), fast_lines[:0], True
         careful_lines = np.union1d(table.gated.plain_lines, table.gated.other_lines)
     else:
-        finite = ~np.isinf(plain).any(axis=1)
         careful_lines = table.gated.other_lines
-        if not finite.all():
-            careful_lines = np.union1d(careful_lines, fast_lines[~finite])
-            plain, fast_lines = plain[finite], fast_lines[finite]
+        if not (finite := bool(np.isfinite(plain).all())) and (infinite := np.isinf(plain).any(axis=1)).any():
+            careful_lines = np.union1d(careful_lines, fast_lines[infinite])
+            plain, fast_lines = plain[~infinite], fast_lines[~infinite]
     parsed = _parsed(table, careful_lines)
     lines = fast_lines + table.layout.first_row_line
-    before = lines < _unclosed_line(parsed)
-    fast, lines = plain[before][:, places], lines[before]
-    remarks = (*parsed.remarks, *_empty_fields(fast, lines, columns))
+    if (unclosed := _unclosed_line(parsed)) is not None:
+        before = lines < unclosed
+        plain, lines = plain[before], lines[before]
+    fast = _chosen(plain, places)
+    remarks = parsed.remarks if finite else (*parsed.remarks, *_empty_fields(fast, lines, columns))
     if not parsed.line_numbers:
-        return _Rows(fast, lines, (), remarks)
+        return _Rows(fast, lines, (), tuple(remarks))
     values = np.concatenate([fast, parsed.values(len(columns))])
     lines = np.concatenate([lines, np.array(parsed.line_numbers, dtype=np.int64)])
     order = np.argsort(lines, kind="stable")
-    return _Rows(values[order], lines[order], tuple(map(tuple, parsed.texts)), remarks)
+    return _Rows(
+        _chosen(values[order], slice(None)), lines[order], tuple(map(tuple, parsed.texts)), tuple(remarks)
+    )
 
 
-def _unclosed_line(parsed: ParsedLines) -> float:
+def _chosen(values: FloatArray, columns: list[int] | slice) -> FloatArray:
+    """Return a copy of some columns, each of them whole in memory."""
+    return np.array(values[:, columns], order="F")
+
+
+def _unclosed_line(parsed: ParsedLines) -> int | None:
     """Return the line whose quotation mark is not closed: what follows it counts for nothing."""
-    return min((r.line or 0 for r in parsed.remarks if r.code == "quote"), default=np.inf)
+    return min((r.line or 0 for r in parsed.remarks if r.code == "quote"), default=None)
 
 
 def _empty_fields(values: FloatArray, lines: LineNumbers, columns: Sequence[ColumnPlan]) -> list[Remark]:

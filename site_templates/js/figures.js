@@ -214,7 +214,7 @@ window.campaign = window.campaign || {};
     figure.dataButton = button("data", "Show the figure's data as a table", () => toggleData(figure));
     figure.dataButton.setAttribute("aria-expanded", "false");
     tools.prepend(figure.liveButton, figure.resetButton, figure.dataButton);
-    csv.title = "The figure's data in full precision";
+    csv.title = "The figure's data as a file";
     tools.append(
       button("SVG", "Save as vectors, at print size", () => saveSvg(figure)),
       button("PNG", "Save as a picture, 300 dots an inch at print size", () => savePng(figure)),

@@ -9,7 +9,8 @@
   const said = document.querySelector("[data-part='said']");
   const caption = document.querySelector("#figure-shape figcaption");
   const firstCaption = caption.lastChild.textContent;
-  const unfolded = new Set();
+  const unfolded = new WeakSet();
+  const asked = new Map();
   let current = { module: moduleOf(given.first[0]), placement: given.first[1], line: given.first[2] };
 
   function moduleOf(name) {
@@ -50,9 +51,9 @@
 
   function shapes(script) {
     const found = (window.campaignShapes || {})[script];
-    if (found && !unfolded.has(script)) {
+    if (found && !unfolded.has(found)) {
       window.campaignUnfoldFigures(found);
-      unfolded.add(script);
+      unfolded.add(found);
     }
     return found;
   }
@@ -62,7 +63,13 @@
       then();
       return;
     }
+    const before = asked.get(script);
+    if (before) {
+      before.addEventListener("load", then);
+      return;
+    }
     const made = document.createElement("script");
+    asked.set(script, made);
     made.src = script;
     made.addEventListener("load", then);
     made.addEventListener("error", () => campaign.announce("The shapes of " + current.module.module + " cannot be read"));

@@ -31,7 +31,13 @@
   }
 
   function loopsOf(entry) {
-    return (window.campaignLoops || {})[entry.script];
+    const loops = (window.campaignLoops || {})[entry.script];
+    if (loops && loops.shared) {
+      loops.traces = window.campaignUnfold(loops);
+      loops.departures = loops.departures.map((place) => loops.lists[place]);
+      delete loops.shared;
+    }
+    return loops;
   }
 
   function fetchLoops(entry, then) {

@@ -17,7 +17,7 @@
     delete points.shared;
     for (const [name, figure] of Object.entries(page.figures)) {
       const places = points.x[name] || [];
-      figure.traces = whole[name].concat(places.map((x, i) => Object.assign({}, points.traces[i], { x: x })));
+      figure.traces = whole[name].concat(places.map((x, i) => Object.assign({}, points.traces[i], { x: points.lists[x] })));
     }
   }
 

@@ -148,8 +148,10 @@ def test_two_positions_that_only_one_has_take_no_part():
     one = values("linearity", "old", 1.0)
     other = values("linearity", "new", 1.0, positions=("AB", "BC", "XX", "YY"))
     other.loc[other["position"].isin(["XX", "YY"]), "value"] += 50.0
-    found = row(compared(offer(one, other)), "linearity")
+    made = compared(offer(one, other))
+    found = row(made, "linearity")
     assert found["estimate_second"] == pytest.approx(1.0, abs=0.3)
+    assert made.modules["value"].max() < 2.0
     assert (found["sensors_second"], found["label"]) == (12, "at common positions")
     apart = compared(offer(one, values("linearity", "new", 1.0, positions=("P", "Q", "R", "S"))))
     assert row(apart, "linearity")["label"] == "their sensors share no position"

@@ -81,7 +81,7 @@ def test_a_slip_stays_beyond_doubt_and_chance_does_not() -> None:
 def test_a_named_edge_and_its_error_stand_in_its_row() -> None:
     table = placement_table(laid("braced", 2).with_signals(-7.0, "QS", "2"))
     row = row_of(table, "M01", "2")
-    assert row["redundancy"] == 3
+    assert row["network_redundancy"] == 3
     assert row["verdict"] == ONE_EDGE or row["suspected"].startswith("QS")
     assert row["p_adjusted"] < RISK
     assert abs(row["error_mm"] + 7.0) < row["expanded_uncertainty_mm"] + 0.5

@@ -84,6 +84,25 @@ def test_picking_a_placement_and_a_line_changes_drawing_and_sentence(
     assert outside(requests(browser), site) == []
 
 
+def test_a_choice_made_before_the_script_has_come_is_drawn_as_it_should_be(
+    browser: Chrome, laid_out: tuple[Path, Layout]
+) -> None:
+    opened(browser, laid_out[0])
+    browser.execute_script(
+        """
+        const [module, placement] = document.querySelectorAll('[data-shapes] select');
+        for (const [list, value] of [[module, 'M02'], [placement, '2'], [placement, '3']]) {
+          list.value = value;
+          list.dispatchEvent(new Event('change'));
+        }
+        """
+    )
+    wait_for(lambda: browser.execute_script(DRAWN)[0].startswith("M02, placement 4<br>"), "the last choice")
+    drawn = "return document.querySelector('#figure-shape .live').data.map((trace) => trace.mode)"
+    assert None not in browser.execute_script(drawn)
+    assert messages(browser) == []
+
+
 def test_keys_alone_step_through_the_placements(browser: Chrome, laid_out: tuple[Path, Layout]) -> None:
     site, _ = laid_out
     modules, _, _ = opened(browser, site)

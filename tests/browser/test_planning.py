@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import subprocess
-import sys
 from dataclasses import replace
 from itertools import product
 from pathlib import Path
@@ -23,14 +21,15 @@ from campaign.methods.campaign_design import (
     half_width_of_difference,
     power_of_difference,
 )
+from campaign.pages.output import write_folder
 from campaign.pages.planning import planning_data
+from campaign.pages.site import build_site
 from tests.browser.chromium import address, messages, outside, requests, wait_for
 from tests.browser.test_site import axe_violations
-from tests.pages.small_campaign import Sketch, small_results, write_campaign
+from tests.pages.small_campaign import Sketch, small_results
 
 pytestmark = pytest.mark.browser
 
-ROOT = Path(__file__).parents[2]
 LIMITS = 'strain_error = "0.02"\n[costs]\nmodule = 7\nsensor = 0.6\nrepetition = 0.15\n'
 SKETCH = Sketch(limits=LIMITS)
 
@@ -38,12 +37,9 @@ SKETCH = Sketch(limits=LIMITS)
 @pytest.fixture(scope="module")
 def planned(tmp_path_factory: pytest.TempPathFactory) -> tuple[Path, object]:
     """The site of a small campaign of two generations, and what its plans rest on."""
-    folder = write_campaign(tmp_path_factory.mktemp("planned") / "small", SKETCH)
+    results = small_results(tmp_path_factory.mktemp("planned") / "small", SKETCH)
     site = tmp_path_factory.mktemp("site") / "planned"
-    command = [sys.executable, "-m", "campaign", "report", str(folder), "--into", str(site)]
-    run = subprocess.run(command, cwd=ROOT, capture_output=True, text=True, check=False)
-    assert run.returncode == 0, run.stderr
-    results = small_results(tmp_path_factory.mktemp("again") / "small", SKETCH)
+    write_folder(build_site(results), site)
     assert results.planning is not None
     return site, results.planning
 

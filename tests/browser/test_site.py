@@ -451,6 +451,22 @@ def test_the_site_keeps_its_budgets(site: Path) -> None:
         assert {name: size for name, size in sizes.items() if size >= budget} == {}
 
 
+MEAN_BYTES_OF_A_SENSOR = {".": 42_000, "data": 28_000, "figures": 24_000}
+"""Largest mean size of what a sensor's page adds to a site, by folder: a large site grows by this."""
+
+
+def test_a_sensor_adds_no_more_than_its_share_to_a_site(site: Path) -> None:
+    sensors = len(list(site.glob("sensor-*.html")))
+    assert sensors > 50
+    added = {
+        folder: sum(path.stat().st_size for path in (site / folder).glob("sensor-*")) / sensors
+        for folder in MEAN_BYTES_OF_A_SENSOR
+    }
+    assert {f: size for f, size in added.items() if size >= MEAN_BYTES_OF_A_SENSOR[f]} == {}
+    chosen = [*(site / "data").glob("loops-*.js"), *(site / "data").glob("residuals_*.js")]
+    assert max(path.stat().st_size for path in chosen) < 50_000
+
+
 def test_a_long_table_shows_its_other_rows_when_asked_and_when_sorted(browser: Chrome, site: Path) -> None:
     browser.get(address(site / "calibration.html"))
     section = browser.find_element(By.ID, "table-sensor_lines")

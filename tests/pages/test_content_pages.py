@@ -15,6 +15,7 @@ from campaign.analyses.findings import EnoughFinding
 from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers, residuals
 from campaign.pages.figures import marker_count
+from campaign.pages.page_data import unfolded_traces, unpacked_lists
 from campaign.pages.site import build_site
 from campaign.pipeline import analyse, read_campaign
 from tests.pages.small_campaign import Sketch, small_results
@@ -282,7 +283,7 @@ def test_with_many_residuals_bands_are_drawn_and_every_module_has_a_script_of_it
     for module, number in readings.items():
         script = files[page.data["residual_files"][module]].decode("utf-8")
         content = json.loads(script[script.index("] = ") + 4 : script.rindex(";")])
-        assert len(content["traces"][0]["y"]) == number
-        assert len(content["x"]["against-order"][0]) == number
+        assert len(unfolded_traces(content)[0]["y"]) == number
+        assert len(unpacked_lists(content)[content["x"]["against-order"][0]]) == number
     against_level = next(figure for figure in page.figures if figure.name == "against-level")
     assert marker_count(against_level) == residuals.LARGEST_SHOWN

@@ -167,3 +167,13 @@ def test_a_campaign_without_holds_and_sessions_has_no_page(results):
 def test_times_are_said_in_units_that_people_use(seconds, words):
     unit = {0.5: "s", 59.9: "min", 600.0: "min", 7200.0: "h", 172800.0: "d"}[seconds]
     assert time_words(seconds) == f"{words}\u202f{unit}"
+
+
+def test_the_file_of_a_hold_on_a_sensor_page_holds_what_is_drawn(site):
+    (name,) = (n for n in site if n.startswith("figures/sensor-M1") and n.endswith("_hold-1.csv"))
+    drawn = pd.read_csv(StringIO(site[name].decode()))
+    stretches = drawn[drawn["curve"] == "mean of samples"]
+    assert 50 < len(stretches) <= 100
+    assert (stretches["low"] <= stretches["change_percent"]).all()
+    assert (stretches["change_percent"] <= stretches["high"]).all()
+    assert len(site[name]) < 25_000

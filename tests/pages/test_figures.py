@@ -171,6 +171,8 @@ def test_ticks_lie_within_the_axis_at_equal_steps(low: float, width: float) -> N
 
 
 def test_ticks_read_well() -> None:
+    assert [text for _, text in linear_ticks(-1.2, -0.3, 3)] == ["−1.0", "−0.5"]
+    assert [text for _, text in linear_ticks(-0.9, 0.9, 2)] == ["−0.5", "0.0", "0.5"]
     assert [text for _, text in linear_ticks(-0.25, 0.25)] == ["−0.2", "−0.1", "0.0", "0.1", "0.2"]
     assert [text for _, text in logarithmic_ticks(-1, 1)] == ["0.1", "0.2", "0.5", "1", "2", "5", "10"]
     assert [text for _, text in logarithmic_ticks(0, 6)][:3] == ["1", "10", "100"]

@@ -138,6 +138,7 @@ def test_too_few_modules_are_said_to_be_so_on_both_pages(tmp_path):
 def test_without_costs_no_allocation_is_shown_and_the_controls_ask_for_them(site):
     said = text_of(site, "planning.html")
     assert "The description states no costs" in said
+    assert re.search(r"with the components at the ends of their intervals it is [\d.]+\s% or [\d.]+\s%", said)
     assert (
         'data-part="cost-module" type="text" inputmode="decimal" value=""' in site["planning.html"].decode()
     )

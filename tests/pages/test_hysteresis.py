@@ -23,6 +23,7 @@ from campaign.analyses.results import CampaignResults
 from campaign.pages.contract_columns import CONTRACT_COLUMNS
 from campaign.pages.hysteresis import hysteresis_page
 from campaign.pages.loop_figures import departures, loop_scripts
+from campaign.pages.page_data import unfolded_traces, unpacked_lists
 from campaign.pages.site import build_site
 from campaign.pipeline import analyse, read_campaign
 from campaign.trials.endurance import features_of_endurance
@@ -127,10 +128,11 @@ def test_every_loop_drawn_can_be_picked_and_is_a_sound_figure(many: CampaignResu
     for content in list(scripts.values())[:3]:
         loops = script(content)
         assert len(loops["rates"]) == 2
-        assert {trace["meta"]["cycle"] for trace in loops["traces"]} == set(loops["cycles"])
-        go.Figure(data=loops["traces"])
-        assert [len(y) for y in loops["departures"]] == [len(trace["x"]) for trace in loops["traces"]]
-        assert len(content) < 60_000
+        traces, lists = unfolded_traces(loops), unpacked_lists(loops)
+        assert {trace["meta"]["cycle"] for trace in traces} == set(loops["cycles"])
+        go.Figure(data=traces)
+        assert [len(lists[place]) for place in loops["departures"]] == [len(trace["x"]) for trace in traces]
+        assert len(content) < 30_000
     for figure in page.figures:
         go.Figure(data=list(figure.traces), layout=figure.layout)
 

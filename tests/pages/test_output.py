@@ -3,10 +3,6 @@
 from __future__ import annotations
 
 import os
-import signal
-import subprocess
-import sys
-import time
 from pathlib import Path
 
 import pytest
@@ -14,7 +10,6 @@ import pytest
 from campaign.notices import CampaignStops
 from campaign.pages.output import MARKER, check_ours, write_folder
 
-ROOT = Path(__file__).parents[2]
 FILES = {"index.html": b"first", "data/index.js": b"1", "tables/a.csv": b"x\n"}
 
 
@@ -90,39 +85,82 @@ def test_a_folder_that_cannot_be_written_is_a_notice(tmp_path: Path, monkeypatch
     assert (tmp_path / "site" / "index.html").read_bytes() == b"first"
 
 
-WRITER = """
-import sys
-from pathlib import Path
-from campaign.pages.output import write_folder
-print("begins", flush=True)
-write_folder({f"pages/{i:04d}.html": b"second" * 500 for i in range(1500)}, Path(sys.argv[1]))
-"""
-
-
-def test_a_killed_run_leaves_the_old_site_or_the_new(tmp_path: Path) -> None:
+def test_what_somebody_put_into_a_site_is_kept_and_nothing_is_written(tmp_path: Path) -> None:
     site = tmp_path / "site"
-    write_folder(FILES, site)
-    first = content_of(site)
-    outcomes = set()
-    for moment in (0.0, 0.01, 0.03, 0.06, 0.1, 0.2):
-        run = subprocess.Popen(
-            [sys.executable, "-c", WRITER, str(site)],
-            cwd=ROOT,
-            stdout=subprocess.PIPE,
-            env={**os.environ, "PYTHONPATH": str(ROOT)},
-        )
-        assert run.stdout is not None
-        run.stdout.readline()
-        time.sleep(moment)
-        run.send_signal(signal.SIGKILL)
-        run.wait()
-        run.stdout.close()
-        now = content_of(site)
-        whole = sum(name.startswith("pages/") for name in now) == 1500
-        assert now == first or whole
-        outcomes.add(whole)
-    write_folder(FILES, site)
-    assert content_of(site) == first
+    for name in ("thesis.txt", "tables/mine.csv", "own/notes.md"):
+        write_folder(FILES, site)
+        (site / name).parent.mkdir(exist_ok=True)
+        (site / name).write_text("years of work", encoding="utf-8")
+        with pytest.raises(CampaignStops, match=name):
+            write_folder({"index.html": b"second"}, site)
+        assert content_of(site).keys() == {*FILES, MARKER, name}
+        assert (site / "index.html").read_bytes() == b"first"
+        (site / name).unlink()
+        if not any((site / name).parent.iterdir()):
+            (site / name).parent.rmdir()
+
+
+def test_a_link_and_an_empty_folder_in_a_site_are_somebodys(tmp_path: Path) -> None:
+    site, home = tmp_path / "site", tmp_path / "home"
+    home.mkdir()
+    (home / "mine").write_bytes(b"x")
+    for place in ("tables/link", "link"):
+        write_folder(FILES, site)
+        (site / place).symlink_to(home, target_is_directory=True)
+        with pytest.raises(CampaignStops, match="link"):
+            write_folder(FILES, site)
+        (site / place).unlink()
+    (site / "index.html").unlink()
+    (site / "index.html").symlink_to(home / "mine")
+    with pytest.raises(CampaignStops, match=r"index\.html"):
+        write_folder(FILES, site)
+    (site / "index.html").unlink()
+    (site / "empty").mkdir()
+    with pytest.raises(CampaignStops, match="empty"):
+        write_folder(FILES, site)
+    assert content_of(home) == {"mine": b"x"}
+
+
+def test_what_a_file_manager_left_does_not_matter(tmp_path: Path) -> None:
+    write_folder(FILES, tmp_path / "site")
+    (tmp_path / "site" / "tables" / ".DS_Store").write_bytes(b"x")
+    write_folder({"index.html": b"second"}, tmp_path / "site")
+    assert content_of(tmp_path / "site").keys() == {"index.html", MARKER}
+
+
+def test_a_place_that_cannot_be_moved_is_left_as_it_was(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """A folder on which another file system is mounted can be neither exchanged nor moved away."""
+    write_folder(FILES, tmp_path / "site")
+
+    def busy(source: object, target: object) -> None:
+        raise OSError(16, "Device or resource busy")
+
+    monkeypatch.setattr("campaign.pages.output.exchange_folders", lambda first, second: False)
+    monkeypatch.setattr(os, "replace", busy)
+    with pytest.raises(CampaignStops, match="busy"):
+        write_folder({"index.html": b"second"}, tmp_path / "site")
+    assert content_of(tmp_path / "site").keys() == {*FILES, MARKER}
+    assert [path.name for path in tmp_path.iterdir()] == ["site"]
+
+
+def test_without_an_exchange_the_old_site_is_moved_away_first(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("campaign.pages.output.exchange_folders", lambda first, second: False)
+    for content in (b"first", b"second"):
+        write_folder({"index.html": content}, tmp_path / "site")
+        assert (tmp_path / "site" / "index.html").read_bytes() == content
+    assert [path.name for path in tmp_path.iterdir()] == ["site"]
+
+
+def test_a_removal_that_was_killed_goes_on(tmp_path: Path) -> None:
+    """The marker goes last, so that what is left of an old site is still known as ours."""
+    write_folder(FILES, tmp_path / "site")
+    write_folder(FILES, tmp_path / ".site.new")
+    (tmp_path / ".site.new" / "index.html").unlink()
+    write_folder({"index.html": b"second"}, tmp_path / "site")
     assert [path.name for path in tmp_path.iterdir()] == ["site"]
 
 

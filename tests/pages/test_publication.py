@@ -116,6 +116,32 @@ def test_panels_go_into_fewer_columns_in_a_narrow_column_and_titles_are_broken()
     assert len({e.get("x") for e in wide.iter(f"{SVG}text") if (e.text or "").startswith("M0")}) == 3
 
 
+def crowded() -> Figure:
+    """A figure whose names along x meet in a narrow column, with a label that begins at its right end."""
+    x_axis = figures.axis("", ticks=[(float(k), f"a long name {k}") for k in range(5)], low=-0.5, high=4.5)
+    notes = [figures.label("six sensors, six runs in two mountings, p of 3×10⁻⁸", 4.0, 1.0, anchor="left")]
+    layout = figures.layout(x_axis, figures.axis("Signal", "pF"), annotations=notes)
+    return ready(Figure("crowded", "c", "a", (figures.line([0, 4], [0, 1]),), layout, height=300))
+
+
+def test_labels_stay_in_the_picture_names_do_not_meet_and_powers_have_letters_of_the_typeface() -> None:
+    root = ElementTree.fromstring(print_svg(crowded(), 85))
+    texts = {"".join(e.itertext()): e for e in root.iter(f"{SVG}text")}
+    (told,) = (e for words, e in texts.items() if words.startswith("six sensors"))
+    assert "".join(told.itertext()).endswith("p of 3e−8")
+    width = float(str(root.get("viewBox")).split()[2])
+    # nineteen letters and more of half their size each end before the right edge
+    assert float(str(told.get("x"))) + 49 * 0.5 * 110 < width
+    names = [e for words, e in texts.items() if words.startswith("a long name")]
+    heights = [float(str(e.get("y"))) for e in names]
+    assert len(names) == 5
+    assert len(set(heights[::2])) == len(set(heights[1::2])) == 1
+    assert heights[1] > heights[0]
+    wide = ElementTree.fromstring(print_svg(crowded(), 175))
+    shown = [e for e in wide.iter(f"{SVG}text") if "".join(e.itertext()).startswith("a long name")]
+    assert len({e.get("y") for e in shown}) == 1
+
+
 def test_no_print_figure_is_taller_than_a_page_for_more_columns() -> None:
     root = ElementTree.fromstring(print_svg(panels(24, 3), 85))
     height = float(str(root.get("viewBox")).split()[3]) / 10

@@ -14,13 +14,13 @@ from campaign.pages.contract_columns import CONTRACT_COLUMNS
 from campaign.pages.tables import (
     Column,
     Table,
+    as_drawn,
     csv_bytes,
     in_reference,
     schema_bytes,
     shown_cells,
     shown_marks,
     sort_beside,
-    to_ten_digits,
 )
 from campaign.recordings.recording import ELONGATION, STRAIN
 
@@ -115,13 +115,13 @@ def test_a_cell_says_what_it_sorts_by_only_where_its_text_does_not(
     assert sort_beside(text, value) == sort
 
 
-def test_files_of_figures_hold_ten_digits_of_each_column() -> None:
+def test_files_of_figures_hold_seven_digits_of_each_column() -> None:
     frame = pd.DataFrame(
         {"a": [1 / 3, 1000 / 3, np.nan], "b": ["x", "y", "z"], "c": [1e-9 / 3, 0.0, -np.inf]}
     )
-    rounded = to_ten_digits(frame)
-    assert rounded["a"].tolist()[:2] == [0.3333333, 333.3333333]
-    assert rounded["c"].tolist() == [3.333333333e-10, 0.0, -np.inf]
+    rounded = as_drawn(frame)
+    assert rounded["a"].tolist()[:2] == [0.3333, 333.3333]
+    assert rounded["c"].tolist() == [3.333333e-10, 0.0, -np.inf]
     assert rounded["b"].tolist() == ["x", "y", "z"]
     assert frame["a"][0] == 1 / 3
 
