@@ -127,7 +127,8 @@ def make_site(
     results, notes = read_and_analyse(folder, output, tell, workshop)
     tell("pages", 0, 1)
     library = results.description.plot_library
-    files = build_site(results, notes, folder / library if library is not None else None)
+    given = folder / library if library is not None else None
+    files = build_site(results, notes, given, workshop)
     tell("pages", 1, 1)
     return results, with_manifests(files, results.intake.file_hashes)
 

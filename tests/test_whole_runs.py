@@ -11,6 +11,7 @@ from typing import Any
 
 import pytest
 
+from campaign.pages import site as site_pages
 from campaign.pipeline import report
 from campaign.recordings import reading_step, shared_reading
 from campaign.recordings.description import DESCRIPTION_FILE, Description
@@ -96,6 +97,7 @@ def test_processes_the_cache_they_fill_and_one_changed_trial_give_the_sites_of_o
 ) -> None:
     monkeypatch.setenv("CAMPAIGN_CACHE", str(tmp_path / "cache"))
     monkeypatch.setattr(shared_reading, "SMALLEST_BATCH_BYTES", 1000)
+    monkeypatch.setattr(site_pages, "PAGES_WORTH_SHARING", 1)
     assert report_with(folder, tmp_path / "two", workers=2) == site
     assert report_with(folder, tmp_path / "warm") == site
     assert parsed == []

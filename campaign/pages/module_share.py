@@ -68,10 +68,12 @@ class ModuleShares:
             holds, curves = self._rows(drift.holds, module), self._own(drift.curves, module)
             changed["drift"] = replace(drift, holds=holds, curves=curves)
         if (pressure := whole.pressure) is not None:
-            own = {
-                name: self._rows(getattr(pressure, name), module) for name in ("table", "sweeps", "points")
-            }
-            changed["pressure"] = replace(pressure, **own)
+            changed["pressure"] = replace(
+                pressure,
+                table=self._rows(pressure.table, module),
+                sweeps=self._rows(pressure.sweeps, module),
+                points=self._rows(pressure.points, module),
+            )
         if (influences := whole.influences) is not None:
             changed["influences"] = replace(influences, table=self._rows(influences.table, module))
         if (lasted := whole.endurance) is not None:
@@ -86,7 +88,9 @@ class ModuleShares:
             return table
         places = self._places.get(id(table))
         if places is None:
-            places = self._places[id(table)] = table.groupby(table["module"].astype(str)).indices
+            found = table.groupby(table["module"].astype(str)).indices
+            places = {str(name): np.asarray(rows, np.intp) for name, rows in found.items()}
+            self._places[id(table)] = places
         return table.iloc[places.get(module, np.empty(0, np.intp))]
 
     def _own(self, things: Sequence[_Own], module: str) -> tuple[_Own, ...]:

@@ -7,9 +7,10 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
-from functools import partial
+from functools import lru_cache, partial
+from itertools import islice
 from pathlib import Path
 from typing import Any
 
@@ -37,6 +38,11 @@ from campaign.pages.tables import (
     shown_marks,
 )
 from campaign.recordings.recording import STRAIN, ReferenceQuantity
+from campaign.workers.crew import Crew, ThisProcess
+from campaign.workers.sharing import Work, share_out
+
+PAGES_A_TASK = 8
+"""Pages of modules and sensors that are rendered together."""
 
 ROWS_NOT_WORTH_A_BUTTON = 2
 """So many rows more than a table has in its page stand there as well, rather than in the page's script."""
@@ -119,6 +125,8 @@ def render_site(
     plot_library: Path | None = None,
     further_templates: Sequence[Path] = (),
     reference: ReferenceQuantity = STRAIN,
+    own_pages: Iterable[Page] = (),
+    crew: Crew | None = None,
 ) -> dict[str, bytes]:
     """Return every file of the site by its address, sorted.
 
@@ -138,35 +146,98 @@ def render_site(
         Folders with templates of pages that are not the site's own.
     reference
         What signals are calibrated against: where it is a length, ``strain…`` columns of files are renamed.
+    own_pages
+        Pages of modules and sensors, which have no number and no table that is a file; taken a few at a time.
+    crew
+        Who renders *own_pages*; this process where ``None``. The files are the same.
 
     Raises
     ------
     ValueError
         Where two pages or two different tables would be one file.
     """
-    _check_slugs(pages)
-    jinja = environment(further_templates)
+    _check_slugs(page.slug for page in pages)
     written: dict[str, bytes] = dict(files or {})
     pages = pages_as_marked(frame, pages)
     written |= table_files([*tables, *(t for page in pages for t in page.tables)], reference, frame.origin)
-    html = {}
-    for page in pages:
-        figures = {f.name: ready(f) for f in page.figures}
-        tables_placed = {t.name: placed_table(page, i, t) for i, t in enumerate(page.tables, 1)}
-        html[page.file] = _page_html(jinja, frame, page, pages, figures, tables_placed)
-        further = {
-            name: [folded_row(*row) for row in placed.further]
-            for name, placed in tables_placed.items()
-            if placed.further
-        }
-        written[f"data/{page.slug}.js"] = data_script(page, figures, further)
-        for figure in page.figures:
-            if figure.data is not None:
-                data = as_drawn(in_reference(figure.data, reference))
-                written[_figure_csv(page, figure)] = csv_bytes(data)
-    written |= {name: text.encode("utf-8") for name, text in with_places_of_anchors(html, pages).items()}
+    whole = RenderingTask(tuple(pages), frame, _strip(pages), tuple(further_templates), reference)
+    made = list(render_pages(whole))
+    for some in share_out(RENDERING, _tasks(whole, own_pages), crew or ThisProcess()):
+        made += some
+    _check_slugs(page.slug for page in made)
+    for page in made:
+        written |= page.further
+    html = with_places_of_anchors({page.file: page.html for page in made}, pages)
+    written |= {name: text.encode("utf-8") for name, text in html.items()}
     written |= asset_files(templates_folder(), plot_library)
     return dict(sorted(written.items()))
+
+
+@dataclass(frozen=True)
+class RenderingTask:
+    """Some pages to be rendered, with what they share: it may be handed to another process."""
+
+    pages: tuple[Page, ...]
+    frame: SiteFrame
+    strip: tuple[Page, ...]
+    further_templates: tuple[Path, ...]
+    reference: ReferenceQuantity
+
+
+@dataclass(frozen=True)
+class PageFiles:
+    """What one page became: its text, and its data script and its figures' CSV files by address.
+
+    Links to anchors of a page that is told in parts are not led there yet.
+    """
+
+    slug: str
+    file: str
+    html: str
+    further: dict[str, bytes]
+
+
+def render_pages(task: RenderingTask) -> tuple[PageFiles, ...]:
+    """Return the files of some pages, in order."""
+    jinja = _kept_environment(task.further_templates)
+    return tuple(_page_files(jinja, task, page) for page in task.pages)
+
+
+_kept_environment = lru_cache(maxsize=1)(environment)
+"""Templates are compiled once a process."""
+
+RENDERING = Work(
+    render_pages, lambda task: [replace(task, pages=(page,)) for page in task.pages], render_pages
+)
+"""How pages are shared out; those that kill a worker are rendered by this process after all."""
+
+
+def _tasks(whole: RenderingTask, pages: Iterable[Page]) -> Iterator[RenderingTask]:
+    """Put pages together, a few a task, as they are made: others render while this process makes the next."""
+    waiting = iter(pages)
+    while some := tuple(islice(waiting, PAGES_A_TASK)):
+        some = tuple(pages_as_marked(whole.frame, some))
+        if any(table.source is None for page in some for table in page.tables):
+            raise ValueError("pages of modules and sensors show parts of the site's tables only")
+        yield replace(whole, pages=some)
+
+
+def _strip(pages: Iterable[Page]) -> tuple[Page, ...]:
+    """Return the pages of the strip in order, without what they hold."""
+    numbered = sorted((p for p in pages if p.number is not None), key=lambda p: (p.number or 0, p.slug))
+    return tuple(replace(page, context={}, figures=(), tables=(), data={}) for page in numbered)
+
+
+def _page_files(jinja: Environment, task: RenderingTask, page: Page) -> PageFiles:
+    figures = {f.name: ready(f) for f in page.figures}
+    tables = {t.name: placed_table(page, i, t) for i, t in enumerate(page.tables, 1)}
+    rows = {name: [folded_row(*row) for row in own.further] for name, own in tables.items() if own.further}
+    further = {f"data/{page.slug}.js": data_script(page, figures, rows)}
+    for figure in page.figures:
+        if figure.data is not None:
+            data = as_drawn(in_reference(figure.data, task.reference))
+            further[_figure_csv(page, figure)] = csv_bytes(data)
+    return PageFiles(page.slug, page.file, _page_html(jinja, task, page, figures, tables), further)
 
 
 def pages_as_marked(frame: SiteFrame, pages: Sequence[Page]) -> Sequence[Page]:
@@ -226,18 +297,16 @@ def table_files(
 
 def _page_html(
     jinja: Environment,
-    frame: SiteFrame,
+    task: RenderingTask,
     page: Page,
-    pages: Sequence[Page],
     figures: Mapping[str, Figure],
     tables: Mapping[str, PlacedTable],
 ) -> str:
-    strip = sorted((p for p in pages if p.number is not None), key=lambda p: (p.number or 0, p.slug))
     context: dict[str, Any] = dict(page.context)
     context |= {
         "page": page,
-        "site": frame,
-        "strip": strip,
+        "site": task.frame,
+        "strip": task.strip,
         "figures": {f.name: _placed_figure(page, i, figures[f.name]) for i, f in enumerate(page.figures, 1)},
         "tables": tables,
     }
@@ -278,9 +347,9 @@ def _figure_csv(page: Page, figure: Figure) -> str:
     return f"figures/{page.slug}_{figure.name}.csv"
 
 
-def _check_slugs(pages: Sequence[Page]) -> None:
+def _check_slugs(slugs: Iterable[str]) -> None:
     seen: set[str] = set()
-    for page in pages:
-        if page.slug.casefold() in seen:
-            raise ValueError(f"two pages are named {page.slug}")
-        seen.add(page.slug.casefold())
+    for slug in slugs:
+        if slug.casefold() in seen:
+            raise ValueError(f"two pages are named {slug}")
+        seen.add(slug.casefold())

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator, Sequence
 from pathlib import Path
 
 from campaign import __version__
@@ -32,12 +33,23 @@ from campaign.pages.recordings import recordings_page
 from campaign.pages.render import render_site
 from campaign.pages.residuals import residual_files, residuals_page
 from campaign.pages.sensor import sensor_pages
+from campaign.pages.sensor_parts import sensor_keys
 from campaign.pages.site_tables import site_tables
+from campaign.pages.skin_map import SkinMap
+from campaign.pages.tables import Table
 from campaign.pages.variance import variance_page
+from campaign.workers.crew import Crew, LocalProcesses, ThisProcess
+from campaign.workers.workshop import Workshop
+
+PAGES_WORTH_SHARING = 150
+"""From so many pages of modules and sensors on, other processes render them while this one makes them."""
 
 
 def build_site(
-    results: CampaignResults, notes: Notes | None = None, plot_library: Path | None = None
+    results: CampaignResults,
+    notes: Notes | None = None,
+    plot_library: Path | None = None,
+    workshop: Workshop | None = None,
 ) -> dict[str, bytes]:
     """Return every file of the campaign's site by its address.
 
@@ -49,6 +61,8 @@ def build_site(
         The campaign's notes (:func:`campaign.pages.notes.make_notes`).
     plot_library
         The build of the plot library that the description names, else the one that plotly carries.
+    workshop
+        Who renders pages where there are many; this process alone where ``None``. The site is the same.
 
     Raises
     ------
@@ -56,7 +70,9 @@ def build_site(
         Where *plot_library* is not what it should be.
     """
     notes = notes or Notes()
-    pages = site_pages(results, notes)
+    mapped = campaign_map(results)
+    pages = [*pages_of_campaign(results, mapped), *notes.pages]
+    pages.append(provenance_page(results, _all_tables(results, pages)))
     records = results.calibration.records if results.calibration is not None else ()
     return render_site(
         site_frame(results),
@@ -72,6 +88,8 @@ def build_site(
         },
         plot_library=plot_library,
         reference=results.readings.reference,
+        own_pages=own_pages(results, mapped),
+        crew=_crew_for(results, workshop),
     )
 
 
@@ -81,6 +99,12 @@ def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
     A page appears only for what was measured.
     """
     mapped = campaign_map(results)
+    pages = [*pages_of_campaign(results, mapped), *own_pages(results, mapped), *notes.pages]
+    return [*pages, provenance_page(results, _all_tables(results, pages))]
+
+
+def pages_of_campaign(results: CampaignResults, mapped: SkinMap) -> list[Page]:
+    """Return the pages of the strip in order, and those of Method, but for Provenance."""
     measured = (
         calibration_page(results),
         variance_page(results),
@@ -95,11 +119,26 @@ def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
         budget_page(results),
     )
     pages = [findings_page(results, mapped), *(page for page in measured if page is not None)]
-    pages += [recordings_page(results), *method_pages(results)]
+    return [*pages, recordings_page(results), *method_pages(results)]
+
+
+def own_pages(results: CampaignResults, mapped: SkinMap) -> Iterator[Page]:
+    """Yield the pages of modules, then those of sensors; none has a table that is a file of its own."""
     shares = ModuleShares(results)
-    pages += [*module_pages(results, mapped, shares), *sensor_pages(results, mapped, shares), *notes.pages]
-    tables = [*(table for page in pages for table in page.tables), *site_tables(results, pages)]
-    return [*pages, provenance_page(results, tables)]
+    yield from module_pages(results, mapped, shares)
+    yield from sensor_pages(results, mapped, shares)
+
+
+def _all_tables(results: CampaignResults, pages: Sequence[Page]) -> list[Table]:
+    return [*(table for page in pages for table in page.tables), *site_tables(results, pages)]
+
+
+def _crew_for(results: CampaignResults, workshop: Workshop | None) -> Crew:
+    if workshop is None or not isinstance(workshop.crew, LocalProcesses):
+        return ThisProcess()
+    keys = sensor_keys(results)
+    pages = len(keys) + len({module for _, module, _ in keys})
+    return workshop.crew if pages >= PAGES_WORTH_SHARING else ThisProcess()
 
 
 def site_frame(results: CampaignResults) -> SiteFrame:

@@ -1,0 +1,74 @@
+"""Pages of modules and sensors: rendered by any process, and made from the rows of their module alone."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from operator import attrgetter
+
+import pandas as pd
+import pytest
+
+from campaign.analyses.results import CampaignResults
+from campaign.pages.module_share import ModuleShares
+from campaign.pages.page import Page, SiteFrame
+from campaign.pages.render import PAGES_A_TASK, render_site
+from campaign.workers.crew import Crew, LocalProcesses
+from tests.pages.toy import TEMPLATES, toy_page
+
+FRAME = SiteFrame("t", (), version="0")
+
+
+def own_page(name: str) -> Page:
+    page = toy_page(name, slug=name, number=None)
+    return replace(page, tables=tuple(replace(table, source="toy_lines") for table in page.tables))
+
+
+def site_with(own: list[Page], crew: Crew | None = None, *, rehearsal: bool = False) -> dict[str, bytes]:
+    frame = replace(FRAME, rehearsal=rehearsal)
+    return render_site(frame, (toy_page(),), further_templates=[TEMPLATES], own_pages=own, crew=crew)
+
+
+@pytest.mark.parametrize("rehearsal", [False, True])
+def test_other_processes_render_the_same_files(rehearsal: bool) -> None:
+    own = [own_page(f"sensor-{i}") for i in range(PAGES_A_TASK + 3)]
+    alone = site_with(own, rehearsal=rehearsal)
+    assert {f"sensor-{i}.html" for i in range(PAGES_A_TASK + 3)} <= set(alone)
+    with LocalProcesses(2) as crew:
+        assert site_with(own, crew, rehearsal=rehearsal) == alone
+
+
+def test_a_page_that_cannot_be_rendered_is_an_error_whoever_renders_it() -> None:
+    from jinja2 import UndefinedError
+
+    broken = replace(own_page("sensor-1"), context={})
+    with pytest.raises(UndefinedError):
+        site_with([broken])
+    with LocalProcesses(2) as crew, pytest.raises(UndefinedError):
+        site_with([broken], crew)
+
+
+def test_own_pages_of_one_name_or_with_a_file_of_their_own_are_refused() -> None:
+    with pytest.raises(ValueError, match="two pages are named Sensor-1"):
+        site_with([own_page("sensor-1"), own_page("Sensor-1")])
+    with pytest.raises(ValueError, match="parts of the site's tables only"):
+        site_with([toy_page("sensor-1", slug="sensor-1", number=None)])
+
+
+def test_shares_of_modules_hold_every_row_once_and_in_order(
+    small_campaign_pages: tuple[CampaignResults, list[Page]],
+) -> None:
+    results, _ = small_campaign_pages
+    shares = ModuleShares(results)
+    modules = sorted(set(results.intake.trials["module"]))
+    assert len(modules) > 1
+    for tables_of in (
+        attrgetter("intake.trials"),
+        attrgetter("readings.table"),
+        attrgetter("variance.effects"),
+    ):
+        whole = tables_of(results)
+        for module in modules:
+            expected = whole[whole["module"].astype(str) == module]
+            pd.testing.assert_frame_equal(tables_of(shares.of(module)), expected)
+    assert shares.of("nobody").intake.trials.empty
+    assert shares.of(modules[0]).calibration is results.calibration
