@@ -163,7 +163,8 @@ class Inherited(Notice):
     "value",
     [print, Foreign(1), os, object(), np.array([(1, 2)], dtype=[("a", int), ("b", int)]), Notice, "\ud800",
      Inherited("nul", "noted", None, None, None, "", "")],
-    ids=str,
+    ids=["a function", "a foreign dataclass", "a module", "an object", "records", "a class", "half a letter",
+         "a foreign heir"],
 )  # fmt: skip
 def test_anything_else_is_not_kept(value: object) -> None:
     with pytest.raises(NotKept):
