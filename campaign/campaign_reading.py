@@ -10,7 +10,9 @@ from typing import TypeVar
 import pandas as pd
 
 from campaign.analyses.calibration import Calibration, analyse_calibration
+from campaign.analyses.shared_work import keep
 from campaign.notices import Notice, sort_notices
+from campaign.recordings.description import Description
 from campaign.recordings.intake import Intake, run_intake
 from campaign.recordings.sensor_share import TrialKey
 from campaign.recordings.shared_reading import Progress
@@ -113,9 +115,19 @@ def _readings(
     return collect_readings(parts, sensors_aside)
 
 
-def calibrate(readings: Readings, intake: Intake) -> Calibration:
-    """Return every sensor's line from *readings*, with what the campaign's registers say of the sensors."""
-    return analyse_calibration(readings, intake.description, intake.sensors, intake.file_hashes)
+def calibrate(readings: Readings, intake: Intake, workshop: Workshop | None = None) -> Calibration:
+    """Return every sensor's line from *readings*, with what the campaign's registers say of the sensors.
+
+    It is taken from an earlier run where that had the same readings, description and register of sensors.
+    """
+    files, every = sorted(set(readings.table["trial"].astype(str))), intake.file_hashes
+    hashes = {file: every[file] for file in files if file in every}
+    task = readings, intake.description, intake.sensors, hashes
+    return keep(_calibration, task, workshop or Workshop())
+
+
+def _calibration(task: tuple[Readings, Description, pd.DataFrame, dict[str, str]]) -> tuple[Calibration]:
+    return (analyse_calibration(*task),)
 
 
 def with_notices(intake: Intake, notices: list[Notice]) -> Intake:

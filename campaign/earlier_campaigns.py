@@ -160,7 +160,7 @@ def _offers(
     """Return the headline figures of a campaign by *readings*, full scale as given (NaN: as described)."""
     description = with_full_scale(read.intake.description, readings.reference, full_scale)
     intake = replace(read.intake, description=description)
-    calibration = calibrate(readings, intake) if len(readings.usable) else None
+    calibration = calibrate(readings, intake, workshop) if len(readings.usable) else None
     fits: tuple[GenerationFit, ...] = ()
     uneven: frozenset[str] = frozenset()
     if calibration is not None:
@@ -172,6 +172,6 @@ def _offers(
         fits,
         uneven,
         analyse_hysteresis(read.of_type(CyclicFeatures), calibration),
-        analyse_drift(read.of_type(HoldFeatures), calibration, description),
+        analyse_drift(read.of_type(HoldFeatures), calibration, description, workshop),
         analyse_pressure(read.of_type(SweepFeatures), calibration, description),
     )

@@ -240,13 +240,14 @@ def analyse(
     calibration = put_back = variance = residuals = effort = None
     if len(read.readings.usable):
         tell("analyses", 0, 4)
-        calibration = calibrate(read.readings, intake)
-        put_back = calibrate(read.readings_with_put_back, intake) if read.readings_with_put_back else None
+        calibration = calibrate(read.readings, intake, workshop)
+        if read.readings_with_put_back is not None:
+            put_back = calibrate(read.readings_with_put_back, intake, workshop)
         tell("analyses", 1, 4)
         variance = analyse_variance(calibration, description, workshop)
         tell("analyses", 2, 4)
         residuals = analyse_residuals(calibration, variance)
-        effort = analyse_calibration_effort(calibration, variance, description)
+        effort = analyse_calibration_effort(calibration, variance, description, workshop)
         tell("analyses", 3, 4)
     rehearsal = compare_with_plan(description, variance)
     hysteresis = analyse_hysteresis(read.of_type(CyclicFeatures), calibration)
@@ -266,7 +267,7 @@ def analyse(
     budget = analyse_budget(description, calibration, variance, hysteresis, drift, pressure, influences)
     registers = intake.modules, intake.sensors
     layout = analyse_layout(
-        read.of_type(LayoutFeatures), calibration, variance, influences, description, registers
+        read.of_type(LayoutFeatures), calibration, variance, influences, description, registers, workshop
     )
     joined = earlier or Joined()
     own = comparable_figures(

@@ -11,7 +11,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, cast
 
 import numpy as np
 import numpy.typing as npt
@@ -19,13 +19,16 @@ import pandas as pd
 from scipy import stats
 
 from campaign.analyses.run_settling import number_runs
+from campaign.analyses.shared_work import keep
 from campaign.analyses.variance import Variance
 from campaign.analyses.variance_fit import GenerationFit
 from campaign.methods.cell_sums import CellSums, lines_without, squares_of_errors, stacked, sums_of_cells
 from campaign.methods.identifiability import Units, code_units
+from campaign.methods.nested_compression import Compression
 from campaign.methods.nested_simulation import simulate_deviations
 from campaign.notices import Notice
 from campaign.recordings.description import Description
+from campaign.workers.workshop import Workshop
 
 if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration
@@ -169,7 +172,10 @@ class Trials:
 
 
 def analyse_calibration_effort(
-    calibration: Calibration, variance: Variance, description: Description
+    calibration: Calibration,
+    variance: Variance,
+    description: Description,
+    workshop: Workshop | None = None,
 ) -> CalibrationEffort:
     """Compare calibration efforts by the model and by leaving out.
 
@@ -181,6 +187,8 @@ def analyse_calibration_effort(
         The fits.
     description
         Not read: errors are over the range common to all sensors, whatever range is rated.
+    workshop
+        What earlier runs left; nothing where ``None``.
 
     Returns
     -------
@@ -188,7 +196,13 @@ def analyse_calibration_effort(
         An empty table with a notice where nothing was fitted.
     """
     del calibration, description
-    return effort_of_fits(variance.by_generation, variance.seed)
+    nothing = cast(Compression, None)  # made of the model, which is there
+    bare = tuple(replace(fit, fit=replace(fit.fit, compression=nothing)) for fit in variance.by_generation)
+    return keep(_effort, (bare, variance.seed), workshop or Workshop())
+
+
+def _effort(task: tuple[tuple[GenerationFit, ...], int]) -> tuple[CalibrationEffort]:
+    return (effort_of_fits(*task),)
 
 
 def effort_of_fits(fits: tuple[GenerationFit, ...], seed: int) -> CalibrationEffort:

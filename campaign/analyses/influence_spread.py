@@ -8,9 +8,8 @@ sensor is corrected by the others of its generation, by its module, or by its ow
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Hashable
 from dataclasses import dataclass
-from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -42,6 +41,7 @@ from campaign.trials.readings import SENSOR_KEYS
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
+BoolArray = npt.NDArray[np.bool_]
 
 BOTH = "module and sensor"
 """The component of a new sensor of a new module; the only one where every module has one sensor."""
@@ -376,7 +376,8 @@ def _serving(generation: str, rows: pd.DataFrame, points: pd.DataFrame) -> pd.Da
         ),
         "sensor": _from_own(rows),
     }
-    made = [_remaining(generation, name, rows, points, slopes) for name, slopes in predicted.items()]
+    parts = _points_of(rows, points)
+    made = [_remaining(generation, name, rows, parts, slopes) for name, slopes in predicted.items()]
     table = pd.DataFrame([row for row in made if row is not None], columns=list(SERVING_COLUMNS))
     without = table.loc[table["correction"] == "none", "sd"]
     return table.assign(factor=table["sd"] / float(without.iloc[0])) if len(without) else table
@@ -390,30 +391,48 @@ def _from_own(rows: pd.DataFrame) -> FloatArray:
     return np.asarray(predicted, dtype=float)
 
 
-def _from_others(rows: pd.DataFrame, chosen: Callable[[pd.DataFrame, Any], Any]) -> FloatArray:
+Codes = dict[str, IntArray]
+"""Whose each sweep is, as numbers: module, position, sensor."""
+
+
+def _from_others(rows: pd.DataFrame, chosen: Callable[[Codes, dict[str, int]], BoolArray]) -> FloatArray:
     """Slopes of every sensor's sweeps as the effects of the *chosen* others predict them, sensors alike."""
-    predicted = pd.Series(np.nan, index=rows.index)
-    for _, own in rows.groupby(SENSOR_KEYS, sort=False):
-        others = rows[chosen(rows, own.iloc[0])]
-        if others.empty:
+    codes = {name: pd.factorize(rows[name])[0].astype(np.int64) for name in ("module", "position", "sensor")}
+    x, effect, b = (rows[name].to_numpy(float) for name in ("x", "effect", "b"))
+    predicted = np.full(len(rows), np.nan)
+    for own in rows.groupby(SENSOR_KEYS, sort=False).indices.values():
+        others = chosen(codes, {name: int(code[own[0]]) for name, code in codes.items()})
+        if not others.any():
             continue
-        x = others["x"].to_numpy(float)
-        two = distinct_lengths(x) > 1 and bool(own["x"].notna().all())
-        design = design_of(x, 2 if two else 1)
-        theta = np.linalg.lstsq(design, others["effect"].to_numpy(float), rcond=None)[0]
-        effects = design_of(own["x"].to_numpy(float), 2 if two else 1) @ theta
-        predicted[own.index] = effects * own["b"].to_numpy(float)
-    return np.asarray(predicted, dtype=float)
+        two = distinct_lengths(x[others]) > 1 and not np.isnan(x[own]).any()
+        design = design_of(x[others], 2 if two else 1)
+        theta = np.linalg.lstsq(design, effect[others], rcond=None)[0]
+        predicted[own] = design_of(x[own], 2 if two else 1) @ theta * b[own]
+    return predicted
+
+
+SensorPoints = dict[Hashable, pd.DataFrame]
+
+
+def _points_of(rows: pd.DataFrame, points: pd.DataFrame) -> SensorPoints:
+    """The points of every sensor's sweeps, found once for all corrections."""
+    grouped = rows.groupby(SENSOR_KEYS, sort=True)
+    owner = grouped.ngroup()
+    known = points[points["number"].isin(rows.index)]
+    parts = [part for _, part in known.groupby(owner.loc[known["number"]].to_numpy(), sort=True)]
+    return dict(zip(grouped.indices, parts, strict=True))
 
 
 def _remaining(
-    generation: str, correction: str, rows: pd.DataFrame, points: pd.DataFrame, slopes: FloatArray
+    generation: str, correction: str, rows: pd.DataFrame, parts: SensorPoints, slopes: FloatArray
 ) -> dict[str, object] | None:
     """SD of what is left over all sensors that the correction reaches, with limits by modules."""
     known = rows.assign(predicted=slopes).dropna(subset=["predicted"])
     squares = []
-    for _, own in known.groupby(SENSOR_KEYS, sort=True):
-        part = points[points["number"].isin(own.index)]
+    for key, own in known.groupby(SENSOR_KEYS, sort=True):
+        part = parts[key]
+        if own.index.size < part["number"].nunique():
+            part = part[part["number"].isin(own.index)]
         number = np.searchsorted(own.index.to_numpy(), part["number"].to_numpy())
         left = spread_about_sweeps(
             part["influence"].to_numpy(float),

@@ -33,11 +33,13 @@ from campaign.analyses.layout_shapes import SolvedPlacement, adjust_placement
 from campaign.analyses.layout_signals import PlacedShape, PlacedSignals, gather_placements
 from campaign.analyses.layout_summaries import error_table, extra_row, node_figures, sum_table
 from campaign.analyses.seeds import seed_from
+from campaign.analyses.shared_work import do_all
 from campaign.analyses.variance_fit import GenerationFit
 from campaign.notices import Notice
 from campaign.recordings.description import Description
 from campaign.recordings.sensor_share import TrialKey
 from campaign.trials.layout import LayoutFeatures
+from campaign.workers.workshop import Workshop
 
 if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration
@@ -49,6 +51,9 @@ FloatArray = npt.NDArray[np.float64]
 DRAWS = 2000
 """Sets of length errors drawn for all placements together."""
 
+AT_A_TIME = 50
+"""Placements whose drawn lengths are held at a time."""
+
 EXACT_NODES = "known node positions taken as exact: no uncertainty is stated under [reference] node"
 
 
@@ -59,6 +64,7 @@ def analyse_layout(
     influences: Influences | None,
     description: Description,
     registers: tuple[pd.DataFrame, pd.DataFrame],
+    workshop: Workshop | None = None,
 ) -> Layout | None:
     """Rebuild the shape of every placement of every layout trial.
 
@@ -76,6 +82,8 @@ def analyse_layout(
         Geometries, uncertainties of the reference and of known nodes.
     registers
         Modules (geometry) and sensors (from, to).
+    workshop
+        Who adjusts, and what earlier runs adjusted; this process alone where ``None``.
 
     Returns
     -------
@@ -97,7 +105,7 @@ def analyse_layout(
     labels: dict[str, str] = {}
     for generation, line, read in _readings(campaign, labels):
         shapes = [shape for shape in placed.shapes if shape.generation == generation]
-        solved += _adjusted(campaign, shapes, line, read)
+        solved += _adjusted(campaign, shapes, line, read, workshop or Workshop())
         row = extra_row(line, generation, shapes, read, description.node_reference_mm)
         extra += [row] if row is not None else []
     if not np.isfinite(description.node_reference_mm):
@@ -157,8 +165,8 @@ def _over_all(read: LengthReadings, rows: npt.NDArray[np.int64], count: int) -> 
 
 
 def _adjusted(
-    campaign: _Campaign, shapes: list[PlacedShape], line: str, read: LengthReadings
-) -> Iterator[SolvedPlacement]:
+    campaign: _Campaign, shapes: list[PlacedShape], line: str, read: LengthReadings, workshop: Workshop
+) -> list[SolvedPlacement]:
     """Adjust the placements of one generation; their length errors are drawn together, as they are shared."""
     known = np.flatnonzero(np.isfinite(read.lengths_mm))
     rng = np.random.default_rng(_seed(campaign.placed.table, line))
@@ -166,9 +174,18 @@ def _adjusted(
     deviations = np.zeros((DRAWS, len(read.lengths_mm)))
     deviations[:, known] = rng.standard_normal((DRAWS, len(known))) @ root.T
     sd = campaign.description.node_reference_mm
-    for shape in shapes:
-        moved = float(np.nan_to_num(sd)) * rng.standard_normal((DRAWS, 2 * len(shape.network.nodes)))
-        yield adjust_placement(shape, _lengths_of(shape, line, read, deviations, moved), sd)
+    solved: list[SolvedPlacement] = []
+    for start in range(0, len(shapes), AT_A_TIME):
+        tasks = []
+        for shape in shapes[start : start + AT_A_TIME]:
+            moved = float(np.nan_to_num(sd)) * rng.standard_normal((DRAWS, 2 * len(shape.network.nodes)))
+            tasks.append((shape, _lengths_of(shape, line, read, deviations, moved), sd))
+        solved += do_all(_adjusted_placement, tasks, workshop, lambda _: False)
+    return solved
+
+
+def _adjusted_placement(task: tuple[PlacedShape, LengthsOfPlacement, float]) -> tuple[SolvedPlacement]:
+    return (adjust_placement(*task),)
 
 
 def _lengths_of(

@@ -13,6 +13,7 @@ from typing import cast
 
 import numpy as np
 
+from campaign.analyses.fit_checks import FitChecks, check_fit
 from campaign.analyses.shared_work import do_all
 from campaign.analyses.variance_fit import GenerationFit, fit_generation
 from campaign.analyses.variance_model import VarianceModel
@@ -36,22 +37,35 @@ class FitTask:
         ``zero``, ``mid``, ``full`` → x.
     limits_at
         As in :func:`campaign.analyses.variance_fit.fit_generation`.
+    asked, unit, reference_unit
+        What else is asked of the fit, as in :func:`campaign.analyses.fit_checks.check_fit`.
     """
 
     model: VarianceModel
     places: Mapping[str, float]
     limits_at: tuple[str, ...]
+    asked: tuple[str, ...] = ()
+    unit: str = ""
+    reference_unit: str = ""
 
 
-Outcome = GenerationFit | str
+@dataclass(frozen=True)
+class CheckedFit:
+    """A fit, and the answers to what was asked of it."""
+
+    fit: GenerationFit
+    checks: FitChecks
+
+
+Outcome = CheckedFit | str
 """A fit, or why there is none."""
 
 
 def fit_all(tasks: Sequence[FitTask], workshop: Workshop) -> list[Outcome]:
     """Fit every task and return its outcome, in order."""
-    outcomes = do_all(fit_task, tasks, workshop, _are_worth_sharing)
+    outcomes = do_all(fit_task, [_bare(task) for task in tasks], workshop, _are_worth_sharing)
     return [
-        outcome if isinstance(outcome, str) else _with_data(outcome, task.model)
+        outcome if isinstance(outcome, str) else replace(outcome, fit=_with_data(outcome.fit, task.model))
         for task, outcome in zip(tasks, outcomes, strict=True)
     ]
 
@@ -66,7 +80,18 @@ def fit_task(task: FitTask) -> tuple[Outcome]:
         fit = fit_generation(task.model, task.places, limits_at=task.limits_at)
     except (ValueError, np.linalg.LinAlgError) as error:
         return (str(error),)
-    return (_without_data(fit),)
+    checks = check_fit(fit, task.asked, task.unit, task.reference_unit)
+    return (CheckedFit(_without_data(fit), checks),)
+
+
+_COLUMNS = ["x", "order"]
+"""Columns of the readings that a fit looks at; all else of them is in the model already."""
+
+
+def _bare(task: FitTask) -> FitTask:
+    """The task without what its outcome does not depend on: names of recordings, places in a table."""
+    readings = task.model.readings[_COLUMNS].reset_index(drop=True)
+    return replace(task, model=replace(task.model, readings=readings))
 
 
 def _without_data(fit: GenerationFit) -> GenerationFit:

@@ -51,5 +51,10 @@ def do_all(
     return results
 
 
+def keep(function: Callable[[T], tuple[R]], task: T, workshop: Workshop) -> R:
+    """Return the result of one task, from an earlier run where that had the same; as :func:`do_all` does."""
+    return do_all(function, [task], workshop, lambda _: False)[0]
+
+
 def _key(function: Callable[[T], tuple[R]], task: T) -> str:
     return digest_of([program_digest(), f"{function.__module__}.{function.__qualname__}", encode(task)])

@@ -13,40 +13,37 @@ from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
-import numpy.typing as npt
 import pandas as pd
 
 from campaign.analyses import variance_frames as frames
-from campaign.analyses.run_settling import Settling, find_settling, number_runs
-from campaign.analyses.seeds import seed_from
-from campaign.analyses.shared_fits import FitTask, Outcome, fit_all
-from campaign.analyses.variance_fit import (
-    PLACES,
-    GenerationFit,
-    choose_places,
-    session_zeros,
+from campaign.analyses.fit_checks import LIKELIHOOD, NOISE, PREDICTIONS, TESTS, FitChecks, check_fit
+from campaign.analyses.run_settling import Settling
+from campaign.analyses.shared_fits import CheckedFit, FitTask, Outcome, fit_all
+from campaign.analyses.variance_fit import PLACES, GenerationFit
+from campaign.analyses.variance_model import VarianceModel
+from campaign.analyses.variance_readings import (
+    WITHHELD,
+    build_all,
+    fitted_readings,
+    places_of,
+    ratio_models,
+    seed_of,
+    spread_notice,
 )
-from campaign.analyses.variance_model import VarianceModel, build_model
-from campaign.analyses.variance_tests import TEST_COLUMNS, runs_of, test_table
-from campaign.methods.nested_model import statsmodels_log_likelihood
-from campaign.methods.within_run_noise import NoiseCheck, check_noise
+from campaign.analyses.variance_tests import TEST_COLUMNS, test_table
+from campaign.methods.within_run_noise import NoiseCheck
 from campaign.notices import Notice
 from campaign.recordings.description import Description
-from campaign.recordings.recording import STRAIN, ReferenceQuantity
+from campaign.recordings.recording import ReferenceQuantity
 from campaign.workers.workshop import Workshop
 
 if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration
 
-FloatArray = npt.NDArray[np.float64]
-
 ONE_AT_A_TIME = "sensors run one at a time"
 SHARED = "runs shared by the sensors of a module"
 SIGNAL = "signal"
 RATIO = "ratio to the session's zero signal"
-
-MOST_ROWS_CHECKED = 4000
-"""Fits of at most this many readings are always compared with statsmodels' likelihood."""
 
 
 @dataclass(frozen=True)
@@ -101,7 +98,8 @@ class Variance:
         Name → (mean, lowest, highest) of surroundings in the model; empty: they are inside session and
         repetition.
     seed
-        Seed of the random numbers, taken from the readings.
+        Seed of random numbers of the whole campaign, taken from the readings; those of a fit are seeded by
+        its own.
     notices
         What a reader must know about the fits.
     """
@@ -187,26 +185,27 @@ def variance_of_readings(
         Who fits, and what earlier runs fitted; this process alone where ``None``.
     """
     notices: list[Notice] = []
-    kept, settling = _fitted_readings(readings, notices)
+    kept, settling = fitted_readings(readings, notices)
     if kept.empty:
         return _nothing(reference, notices)
-    places = choose_places(
-        kept["x"].to_numpy(float), _rated(description, reference), has_zero=_has_zero(reference)
-    )
-    models = tuple(_build_all(kept, kept["signal"].to_numpy(float)))
+    places = places_of(kept, reference, description)
+    models = tuple(build_all(kept, kept["signal"].to_numpy(float)))
     of_ratios: list[Notice] = []
-    ratio_models = _ratio_models(kept, places, of_ratios)
-    outcomes = _outcomes(models, ratio_models, places, workshop or Workshop())
-    fits = tuple(_fits_of(models, outcomes[: len(models)], SIGNAL, notices))
-    if not fits:
+    others = ratio_models(kept, places, of_ratios)
+    units = str(kept["unit"].iloc[0]), reference.unit
+    outcomes = _outcomes(models, others, places, units, workshop or Workshop())
+    found = tuple(_fits_of(models, outcomes[: len(models)], SIGNAL, notices))
+    if not found:
         return replace(_nothing(reference, notices), identifiability=frames.identifiability(models, ()))
-    ratio_fits = tuple(_fits_of(ratio_models, outcomes[len(models) :], "ratio", of_ratios))
-    zero_noise = _zero_noise(ratio_fits)
+    ratio_fits = tuple(one.fit for one in _fits_of(others, outcomes[len(models) :], "ratio", of_ratios))
     notices += of_ratios
-    seed = seed_of(kept)
-    noise = {fit.generation: _noise_of(fit, seed) for fit in _single(fits)}
+    checks = {one.fit.generation: one.checks for one in found}
+    fits = tuple(one.fit for one in found)
+    if len(fits) == 1 and fits[0].generation == "all":  # no generation by itself could be fitted
+        checks["all"] = check_fit(fits[0], _asked("", SIGNAL), *units)
+    noise = {fit.generation: check for fit in _single(fits) if (check := checks[fit.generation].noise)}
     notices += _noise_notices(noise)
-    return _gather(reference, models, fits, ratio_fits, zero_noise, settling, noise, seed, notices)
+    return _gather(reference, models, fits, ratio_fits, checks, settling, noise, seed_of(kept), notices)
 
 
 def fit_generations(
@@ -227,47 +226,17 @@ def fit_generations(
     tuple
         The fits, and the names of the generations whose noise within runs is uneven or autocorrelated.
     """
-    used = readings[readings["used"].astype(bool)]
-    used = used[np.isfinite(used["x"].to_numpy(float)) & np.isfinite(used["signal"].to_numpy(float))]
-    if used.empty:
+    kept, _ = fitted_readings(readings, [])
+    if kept.empty:
         return (), frozenset()
-    used = _with_common_levels(used, [])
-    kept = _settled_runs(used, _find_all_settling(used), [])
-    places = choose_places(
-        kept["x"].to_numpy(float), _rated(description, reference), has_zero=_has_zero(reference)
+    places = places_of(kept, reference, description)
+    models = [m for m in build_all(kept, kept["signal"].to_numpy(float)) if m.generation != "all"]
+    tasks = [FitTask(model, places, ("mid",), (NOISE,)) for model in models if model.terms]
+    found = [one for one in fit_all(tasks, workshop or Workshop()) if not isinstance(one, str)]
+    uneven = frozenset(
+        one.fit.generation for one in found if one.checks.noise is not None and one.checks.noise.faults
     )
-    models = [m for m in _build_all(kept, kept["signal"].to_numpy(float)) if m.generation != "all"]
-    tasks = [FitTask(model, places, ("mid",)) for model in models if model.terms]
-    outcomes = fit_all(tasks, workshop or Workshop())
-    fits = tuple(outcome for outcome in outcomes if not isinstance(outcome, str))
-    seed = seed_of(kept)
-    return fits, frozenset(fit.generation for fit in fits if _noise_of(fit, seed).faults)
-
-
-_WITHHELD = "components of spread are not estimated"
-
-
-def _fitted_readings(
-    readings: pd.DataFrame, notices: list[Notice]
-) -> tuple[pd.DataFrame, dict[str, Settling]]:
-    """Return the rows that are fitted, and from which run on each generation's runs are alike."""
-    used = readings[readings["used"].astype(bool)]
-    used = used[np.isfinite(used["x"].to_numpy(float)) & np.isfinite(used["signal"].to_numpy(float))]
-    if used.empty:
-        notices.append(_notice("no-readings", "no staircase reading is used", _WITHHELD))
-        return used, {}
-    used = _with_common_levels(used, notices)
-    settling = _find_all_settling(used)
-    return _settled_runs(used, settling, notices), settling
-
-
-def signal_models(readings: pd.DataFrame) -> tuple[VarianceModel, ...]:
-    """Return the models of the signal that readings lead to: one a generation, then the pooled one.
-
-    They hold design and response and are not fitted yet. A table read back from ``readings.csv`` will do.
-    """
-    kept, _ = _fitted_readings(readings, [])
-    return tuple(_build_all(kept, kept["signal"].to_numpy(float)))
+    return tuple(one.fit for one in found), uneven
 
 
 def _gather(
@@ -275,7 +244,7 @@ def _gather(
     models: tuple[VarianceModel, ...],
     fits: tuple[GenerationFit, ...],
     ratio_fits: tuple[GenerationFit, ...],
-    zero_noise: pd.DataFrame,
+    checks: dict[str, FitChecks],
     settling: dict[str, Settling],
     noise: dict[str, NoiseCheck],
     seed: int,
@@ -285,26 +254,25 @@ def _gather(
     single = _single(fits)
     uneven = {generation for generation, check in noise.items() if check.faults}
     uneven |= {"all"} if uneven else set()
-    tests = test_table(single, settling, seed)
-    fixed, new = frames.fixed_effects_and_new_sensors(fits, unit, x_unit)
+    tests = test_table(single, {name: own.tests for name, own in checks.items()}, settling)
     return Variance(
         reference=reference,
         response=SIGNAL,
         form=SHARED if fits[-1].model.counts.shared else ONE_AT_A_TIME,
         fits=fits,
         ratio_fits=ratio_fits,
-        fixed_effects=fixed,
+        fixed_effects=_joined([checks[fit.generation].fixed for fit in fits], frames.FIXED_COLUMNS),
         variance_components=frames.variance_components(fits, unit, x_unit, tests, uneven),
         variance_in_strain=frames.variance_in_strain(fits, uneven),
         effects=frames.effects(single, unit, x_unit),
         identifiability=frames.identifiability(models, fits),
         precision=frames.precision(fits, uneven),
         tests=tests,
-        certificate=_certificate(fits),
-        new_sensor=new,
+        certificate=_certificate(fits, checks),
+        new_sensor=_joined([checks[fit.generation].new for fit in fits], frames.NEW_SENSOR_COLUMNS),
         comparisons=frames.comparisons(single, uneven),
         ratio_variance_in_strain=frames.variance_in_strain(ratio_fits, uneven),
-        ratio_zero_noise=zero_noise,
+        ratio_zero_noise=_zero_noise(ratio_fits),
         noise=noise,
         settling=settling,
         covariates=fits[-1].model.covariates,
@@ -341,110 +309,45 @@ def _nothing(reference: ReferenceQuantity, notices: list[Notice]) -> Variance:
     )
 
 
-def _notice(code: str, what: str, done: str, remedy: str = "", count: int = 1) -> Notice:
-    return Notice(code, "noted", None, None, None, what, done, remedy, count)
-
-
-def seed_of(readings: pd.DataFrame) -> int:
-    """Return a seed that depends on the readings alone, so that a report repeats to the byte."""
-    words = [readings[column] for column in ("generation", "module", "sensor", "session", "trial")]
-    return seed_from(words, [readings["x"], readings["signal"]])
-
-
-def _rated(description: Description, reference: ReferenceQuantity) -> float:
-    if reference == STRAIN:
-        return description.range_strain
-    return description.range_elongation_mm if reference.name == "elongation" else float("nan")
-
-
-def _has_zero(reference: ReferenceQuantity) -> bool:
-    return reference.name != "length"
-
-
-def _with_common_levels(readings: pd.DataFrame, notices: list[Notice]) -> pd.DataFrame:
-    """Leave out single readings at levels that hardly any run visits, where all others have common levels."""
-    known = readings["nominal_level"].notna()
-    if known.all() or known.mean() < 0.9:
-        return readings
-    left_out = int((~known).sum())
-    notices.append(
-        _notice(
-            "level-not-common",
-            f"{left_out} readings lie at levels that fewer than half of the runs visit",
-            "they are left out of the components of spread, nowhere else",
-            count=left_out,
-        )
-    )
-    return readings[known]
-
-
-def _find_all_settling(readings: pd.DataFrame) -> dict[str, Settling]:
-    parts = readings.groupby("generation", sort=True)
-    return {str(name): find_settling(part, str(name)) for name, part in parts}
-
-
-def _settled_runs(
-    readings: pd.DataFrame, settling: dict[str, Settling], notices: list[Notice]
-) -> pd.DataFrame:
-    """Leave out the runs before a generation's sensors have settled, with a notice."""
-    first = readings["generation"].map({name: s.first_settled for name, s in settling.items()})
-    early = number_runs(readings) < first.to_numpy()
-    for name, found in settling.items():
-        if found.first_settled > 1:
-            notices.append(
-                _notice(
-                    "runs-before-settling",
-                    f"{name}: the run number matters (F = {found.statistic:.3g}, p = {found.p:.2g})",
-                    f"runs before number {found.first_settled} do not enter the components of spread",
-                    "condition sensors by some cycles after mounting",
-                )
-            )
-    return readings[~early]
-
-
-def _build_all(readings: pd.DataFrame, response: FloatArray) -> Iterator[VarianceModel]:
-    """The models of the generations, then the pooled one."""
-    names = sorted(set(readings["generation"]))
-    generation = readings["generation"].to_numpy()
-    for name in names:
-        rows = generation == name
-        yield build_model(readings[rows], response[rows], str(name))
-    if len(names) > 1:
-        yield build_model(readings, response, "all")
-
-
 def _outcomes(
     models: Sequence[VarianceModel],
     ratio_models: Sequence[VarianceModel],
     places: dict[str, float],
+    units: tuple[str, str],
     workshop: Workshop,
 ) -> list[Outcome | None]:
     """Fit all models together; ``None`` for those that tell no component from another."""
     both = [*((model, SIGNAL) for model in models), *((model, "ratio") for model in ratio_models)]
-    tasks = [FitTask(model, places, _limits_at(model, what)) for model, what in both if model.terms]
+    tasks = [
+        FitTask(model, places, _limits_at(model, what), _asked(model.generation, what), *units)
+        for model, what in both
+        if model.terms
+    ]
     fitted = iter(fit_all(tasks, workshop))
     return [next(fitted) if model.terms else None for model, _ in both]
 
 
 def _fits_of(
     models: Sequence[VarianceModel], outcomes: Sequence[Outcome | None], what: str, notices: list[Notice]
-) -> Iterator[GenerationFit]:
+) -> Iterator[CheckedFit]:
     """The fit of each model, or a notice that says why there is none."""
     for model, outcome in zip(models, outcomes, strict=True):
         if outcome is None:
             notices.append(
-                _notice(
+                spread_notice(
                     "spread-not-fitted",
                     f"{model.generation}, {what}: this design tells no component of spread from another",
-                    _WITHHELD,
+                    WITHHELD,
                     "repeat runs, or measure several sensors",
                 )
             )
         elif isinstance(outcome, str):
-            notices.append(_notice("spread-not-fitted", f"{model.generation}, {what}: {outcome}", _WITHHELD))
+            notices.append(
+                spread_notice("spread-not-fitted", f"{model.generation}, {what}: {outcome}", WITHHELD)
+            )
         else:
-            if not outcome.by_profile:
-                notices.append(_fallback_notice(outcome, what))
+            if not outcome.fit.by_profile:
+                notices.append(_fallback_notice(outcome.fit, what))
             yield outcome
 
 
@@ -458,33 +361,19 @@ def _limits_at(model: VarianceModel, what: str) -> tuple[str, ...]:
     return ("mid",) if model.generation == "all" else (*PLACES, "intercept", "slope")
 
 
+def _asked(generation: str, what: str) -> tuple[str, ...]:
+    """What is asked of a fit: nothing of ratios, no noise and no tests of the pooled fit."""
+    if what != SIGNAL:
+        return ()
+    return (LIKELIHOOD, PREDICTIONS) if generation == "all" else (NOISE, TESTS, LIKELIHOOD, PREDICTIONS)
+
+
 def _fallback_notice(fit: GenerationFit, what: str) -> Notice:
-    return _notice(
+    return spread_notice(
         "fit-by-analysis-of-variance",
         f"{fit.generation}, {what}: restricted maximum likelihood did not reach a certified optimum",
         f"components are those of the {fit.fit.method}, without intervals",
     )
-
-
-def _ratio_models(
-    readings: pd.DataFrame, places: dict[str, float], notices: list[Notice]
-) -> tuple[VarianceModel, ...]:
-    """The models of y/y0; none where some session has no zero signal."""
-    zeros = session_zeros(readings, places["zero"], number_runs(readings))
-    zero = zeros["zero_signal"].to_numpy(float)
-    if not np.isfinite(zero).all() or (np.abs(zero) <= 1e-6 * np.abs(readings["signal"]).max()).any():
-        notices.append(
-            _notice(
-                "no-zero-signal",
-                "not every session has a usable signal at zero",
-                "ratios to the session's zero signal are not analysed",
-                "start every session at the rest length",
-            )
-        )
-        return ()
-    kept = readings[~zeros["is_zero"].to_numpy()]
-    ratio = kept["signal"].to_numpy(float) / zero[~zeros["is_zero"].to_numpy()]
-    return tuple(_build_all(kept, ratio))
 
 
 def _zero_noise(fits: Sequence[GenerationFit]) -> pd.DataFrame:
@@ -496,14 +385,14 @@ def _zero_noise(fits: Sequence[GenerationFit]) -> pd.DataFrame:
     return pd.DataFrame(noise, columns=["generation", "strain_sd"])
 
 
-def _noise_of(fit: GenerationFit, seed: int) -> NoiseCheck:
-    order = fit.model.readings["order"].to_numpy(np.int64)
-    return check_noise(runs_of(fit), order, fit.marginal, np.random.default_rng([seed, 2]))
+def _joined(parts: Sequence[pd.DataFrame | None], columns: Sequence[str]) -> pd.DataFrame:
+    kept = [part for part in parts if part is not None and len(part)]
+    return pd.concat(kept, ignore_index=True) if kept else pd.DataFrame(columns=list(columns))
 
 
 def _noise_notices(noise: dict[str, NoiseCheck]) -> list[Notice]:
     return [
-        _notice(
+        spread_notice(
             "uneven-noise",
             f"{generation}: the noise inside runs is {', '.join(check.faults)}",
             "the residual SD is an average; its interval and that of repetition are withheld",
@@ -513,11 +402,11 @@ def _noise_notices(noise: dict[str, NoiseCheck]) -> list[Notice]:
     ]
 
 
-def _certificate(fits: tuple[GenerationFit, ...]) -> pd.DataFrame:
+def _certificate(fits: tuple[GenerationFit, ...], checks: dict[str, FitChecks]) -> pd.DataFrame:
     """The evidence of every fit; statsmodels' log-likelihood where the fit is small enough."""
     rows = []
     for fit in fits:
-        theirs = _their_likelihood(fit)
+        theirs = checks[fit.generation].likelihood
         rows.append(
             {
                 "generation": fit.generation,
@@ -532,12 +421,6 @@ def _certificate(fits: tuple[GenerationFit, ...]) -> pd.DataFrame:
             }
         )
     return pd.DataFrame(rows, columns=list(frames.CERTIFICATE_COLUMNS))
-
-
-def _their_likelihood(fit: GenerationFit) -> float:
-    if len(fit.model.response) > MOST_ROWS_CHECKED or not fit.model.terms:
-        return float("nan")
-    return statsmodels_log_likelihood(fit.fit)
 
 
 __all__ = ["PLACES", "Variance", "VarianceModel", "analyse_variance", "variance_of_readings"]

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import replace
 
 import numpy as np
@@ -39,24 +39,28 @@ def runs_of(fit: GenerationFit) -> RunTable:
     return tabulate_runs(model.units, z, line=model.counts.run_levels >= 3)
 
 
-def test_table(fits: tuple[GenerationFit, ...], settling: dict[str, Settling], seed: int) -> pd.DataFrame:
+def test_table(
+    fits: tuple[GenerationFit, ...],
+    components: Mapping[str, Iterable[ComponentTest]],
+    settling: Mapping[str, Settling],
+) -> pd.DataFrame:
     """Test the components and the fixed groups of every fit.
 
     Parameters
     ----------
     fits
         One a generation; the pooled fit is not tested again.
+    components
+        The tests of the components, by generation (:func:`component_tests_of`).
     settling
         The test of the run number, by generation.
-    seed
-        Seed of the bootstrap.
 
     Returns
     -------
     pandas.DataFrame
         Columns of :data:`TEST_COLUMNS`; Holm's correction (1979) runs over the tests of a generation.
     """
-    parts = [_of_generation(fit, settling.get(fit.generation), seed) for fit in fits]
+    parts = [_of_generation(fit, components[fit.generation], settling.get(fit.generation)) for fit in fits]
     kept = [part for part in parts if len(part)]
     if not kept:
         return pd.DataFrame(columns=list(TEST_COLUMNS))
@@ -66,8 +70,10 @@ def test_table(fits: tuple[GenerationFit, ...], settling: dict[str, Settling], s
 test_table.__test__ = False  # type: ignore[attr-defined]  # its name is not that of a test case
 
 
-def _of_generation(fit: GenerationFit, settling: Settling | None, seed: int) -> pd.DataFrame:
-    rows = [_component_row(test) for test in component_tests_of(fit, seed)]
+def _of_generation(
+    fit: GenerationFit, components: Iterable[ComponentTest], settling: Settling | None
+) -> pd.DataFrame:
+    rows = [_component_row(test) for test in components]
     rows += [row for group in _GROUPS if (row := _fixed_row(fit, group)) is not None]
     if settling is not None and np.isfinite(settling.p):
         rows.append(_row("run number", "exact F", settling.statistic, settling.p, (np.nan, np.nan)))

@@ -9,8 +9,8 @@ from dataclasses import dataclass
 import numpy as np
 import pandas as pd
 
-from campaign.analyses.variance import signal_models
 from campaign.analyses.variance_model import VarianceModel
+from campaign.analyses.variance_readings import signal_models
 from campaign.methods.nested_in_statsmodels import fit_by_statsmodels, why_not_in_statsmodels
 from campaign.methods.nested_model import NestedModelFit, fit_nested_model, statsmodels_log_likelihood
 

@@ -9,8 +9,9 @@ import numpy as np
 import pytest
 
 from campaign.analyses import shared_fits
+from campaign.analyses.fit_checks import LIKELIHOOD, NOISE, PREDICTIONS, TESTS
 from campaign.analyses.hold_figures import fit_stretches
-from campaign.analyses.shared_fits import FitTask, fit_all, fit_task
+from campaign.analyses.shared_fits import CheckedFit, FitTask, Outcome, fit_all, fit_task
 from campaign.analyses.shared_work import do_all
 from campaign.analyses.variance_fit import PLACES, GenerationFit
 from campaign.keeping.store import open_store
@@ -25,11 +26,17 @@ from campaign.workers.workshop import Workshop
 @pytest.fixture(scope="module")
 def tasks(simulated) -> list[FitTask]:
     fits = simulated.small().by_generation
-    return [FitTask(fit.model, dict(fit.places), at) for fit in fits for at in ((*PLACES, "slope"), ())]
+    everything = (NOISE, TESTS, LIKELIHOOD, PREDICTIONS)
+    wanted = ((*PLACES, "slope"), everything), ((), ())
+    return [FitTask(fit.model, dict(fit.places), *what, "pF", "mm/mm") for fit in fits for what in wanted]
 
 
-def as_bytes(outcomes: list[GenerationFit | str]) -> list[bytes]:
-    bare = [o if isinstance(o, str) else replace(o, fit=replace(o.fit, compression=None)) for o in outcomes]
+def without_compression(fit: GenerationFit) -> GenerationFit:
+    return replace(fit, fit=replace(fit.fit, compression=None))
+
+
+def as_bytes(outcomes: list[Outcome]) -> list[bytes]:
+    bare = [o if isinstance(o, str) else replace(o, fit=without_compression(o.fit)) for o in outcomes]
     return [encode(outcome) for outcome in bare]
 
 
@@ -47,9 +54,26 @@ def test_processes_and_the_store_give_the_same_fits(
 
 def test_a_kept_fit_serves_the_methods_that_go_on_from_it(tasks: list[FitTask]) -> None:
     (fresh,) = fit_all(tasks[:1], Workshop())
-    assert isinstance(fresh, GenerationFit)
-    assert fresh.model is tasks[0].model
-    assert (conditional_residuals(fresh.fit) == fresh.conditional).all()
+    assert isinstance(fresh, CheckedFit)
+    assert fresh.fit.model is tasks[0].model
+    assert (conditional_residuals(fresh.fit.fit) == fresh.fit.conditional).all()
+
+
+def test_a_fit_and_its_random_numbers_stay_while_other_recordings_come_and_go(
+    tasks: list[FitTask], tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    model = tasks[0].model
+    renamed = model.readings.assign(trial="elsewhere.csv").set_index(model.readings.index + 7)
+    later = replace(tasks[0], model=replace(model, readings=renamed))
+    with open_store(tmp_path / "results.sqlite") as store:
+        (before,) = fit_all(tasks[:1], Workshop(store=store))
+        monkeypatch.setattr(shared_fits, "fit_generation", None)  # nothing is fitted any more
+        (after,) = fit_all([later], Workshop(store=store))
+    assert isinstance(before, CheckedFit)
+    assert isinstance(after, CheckedFit)
+    assert before.checks.tests
+    assert encode(after.checks) == encode(before.checks)
+    assert after.fit.model is later.model
 
 
 def test_what_cannot_be_fitted_is_a_sentence(tasks: list[FitTask]) -> None:
