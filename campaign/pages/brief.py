@@ -98,8 +98,7 @@ def key_figures(pages: Sequence[Page]) -> list[KeyFigure]:
 def _without_links(page: str) -> str:
     """Return a page whose links are plain text, and without what leads to other files."""
     head, style, body = re.split(r"(<style>.*?</style>)", page, maxsplit=1, flags=re.DOTALL)
-    for left_out in (r'<p class="(?:tools|meanings|see)">.*?</p>', r'<path class="hit"[^>]*/>'):
-        body = re.sub(left_out, "", body, flags=re.DOTALL)
+    body = re.sub(r'<p class="(?:tools|meanings|see)">.*?</p>', "", body, flags=re.DOTALL)
     body = re.sub(r'(<svg class="tile"[^>]*) role="group"', r'\1 role="img"', body)
     parts = re.split(r"(<svg\b.*?</svg>)", body, flags=re.DOTALL)
     return head + style + "".join(_unlinked(part) for part in parts)

@@ -405,7 +405,7 @@ def sensor_holds(
         return [], [], {}
     own = [c for c in drift.curves if (c.module, c.sensor) == (module, sensor)][:MOST_PLOTS]
     figures = [
-        hold_figure(c, drift.reference, f"hold-{i}", 280, most=100, with_samples=False)
+        hold_figure(c, drift.reference, f"hold-{i}", 280, most=100, with_samples=False, explained=i == 1)
         for i, c in enumerate(own, 1)
     ]
     by_trial: dict[str, list[str]] = {}

@@ -179,11 +179,13 @@ def hold_figure(
     height: int = 340,
     most: int = 500,
     with_samples: bool = True,
+    explained: bool = True,
 ) -> Figure:
     """Return one hold in full: its envelope, its mean and the forms within two units of the best.
 
     *most* is how many stretches of time are drawn at most; neighbours go together, and no extreme is lost.
-    Its file holds the samples, or, without them, the stretches as drawn.
+    Its file holds the samples, or, without them, the stretches as drawn. Further ones of a page need not be
+    *explained* again.
     """
     unit = percent_unit(curve.percent_of)
     drawn = fewer_stretches(curve, most)
@@ -215,10 +217,15 @@ def hold_figure(
             margin={"r": 150 if curve.forms else 24},
         ),
         data=curve_table(curve) if with_samples else stretches_table(drawn),
-        note="The band reaches from the lowest to the highest sample of every stretch of time: no spike is "
-        f"lost, and {_held_words(curve, with_samples)}. Forms are drawn over the data they were fitted "
-        "to.",
+        note=_hold_note(curve, with_samples) if explained else "",
         height=height,
+    )
+
+
+def _hold_note(curve: HoldCurve, with_samples: bool) -> str:
+    return (
+        "The band reaches from the lowest to the highest sample of every stretch of time: no spike is lost, "
+        f"and {_held_words(curve, with_samples)}. Forms are drawn over the data they were fitted to."
     )
 
 

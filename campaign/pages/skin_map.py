@@ -219,7 +219,7 @@ def _tile(
     for sensor, (start, end, label) in zip(sensors, places, strict=True):
         index = indices[sensor.module, sensor.sensor]
         step, text = steps[index]
-        words = f"{figure.title} {text} {figure.unit}".strip() if figure and step != NO_VALUE else text
+        words = f"{text} {figure.unit}".strip() if figure and step != NO_VALUE else text
         edges.append(
             MapEdge(
                 index=index,

@@ -119,6 +119,11 @@ window.campaign = window.campaign || {};
     else campaign.choose(row.dataset.module, row.dataset.sensor);
   }
 
+  /* The edges of a map say their sensor only; their module is that of the tile they stand in. */
+  for (const edge of document.querySelectorAll(".skin-map .edge")) {
+    edge.dataset.module = edge.closest("svg").querySelector(".module").dataset.module;
+  }
+
   buildChooser();
   document.addEventListener("click", chooseByRow);
   document.addEventListener("keydown", function (event) {

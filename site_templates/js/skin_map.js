@@ -11,12 +11,13 @@ window.campaign = window.campaign || {};
 
   function paintEdge(edge, step, text, scale) {
     const paint = edge.querySelector(".paint");
-    const words = step < 0 ? text : (scale.title + " " + text + " " + scale.unit).trim();
+    const words = step < 0 ? text : (text + " " + scale.unit).trim();
     const name = edge.dataset.module + " " + edge.dataset.sensor + ": " + words;
     edge.setAttribute("aria-label", name);
-    edge.querySelector("title").textContent = name;
+    edge.querySelector("title").textContent = name + ", " + scale.title;
     if (paint) paint.setAttribute("stroke", step < 0 ? "#faf8f3" : values.colours[step]);
-    const label = map.querySelector("text[data-edge='" + edge.dataset.edge + "']");
+    const tile = edge.closest("svg");
+    const label = tile.querySelectorAll(".values text")[[...tile.querySelectorAll("a.edge")].indexOf(edge)];
     label.textContent = step < 0 ? "" : text;
   }
 
@@ -33,6 +34,7 @@ window.campaign = window.campaign || {};
   }
 
   function showScale(scale) {
+    map.setAttribute("aria-label", "Skin map: " + scale.title);
     map.querySelector(".picked-unit").textContent = scale.unit ? ", " + scale.unit : "";
     map.querySelector(".low").textContent = scale.low;
     map.querySelector(".high").textContent = scale.high;
@@ -72,7 +74,8 @@ window.campaign = window.campaign || {};
 
   for (const edge of map.querySelectorAll("a.edge")) {
     const title = document.createElementNS(SVG, "title");
-    title.textContent = edge.getAttribute("aria-label");
+    const shown = map.querySelector(".picked");
+    title.textContent = edge.getAttribute("aria-label") + (shown ? ", " + shown.textContent : "");
     edge.prepend(title);
   }
   /* An address like #skin-map?show=KEY picks a figure. */

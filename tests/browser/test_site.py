@@ -187,9 +187,16 @@ def test_the_skin_map_leads_to_sensors_and_modules_and_shows_what_is_picked(
     after = [e.get_attribute("stroke") for e in browser.find_elements(By.CSS_SELECTOR, "#skin-map .paint")]
     assert before != after
     edge = browser.find_element(By.CSS_SELECTOR, "#skin-map a.edge[data-module='M02'][data-sensor='AB']")
-    assert browser.find_element(By.CSS_SELECTOR, "#skin-map option:checked").text in str(
-        edge.get_attribute("aria-label")
+    shown = browser.find_element(By.CSS_SELECTOR, "#skin-map option:checked").text
+    assert shown in str(browser.find_element(By.ID, "skin-map").get_attribute("aria-label"))
+    value = browser.execute_script(
+        "const tile = arguments[0].closest('svg');"
+        "const at = [...tile.querySelectorAll('.edge')].indexOf(arguments[0]);"
+        "return tile.querySelectorAll('.values text')[at].textContent",
+        edge,
     )
+    assert str(edge.get_attribute("aria-label")).startswith(f"M02 AB: {value}")
+    assert str(edge.find_element(By.TAG_NAME, "title").get_attribute("textContent")).endswith(shown)
     edge.send_keys(Keys.ENTER)
     wait_for(lambda: browser.current_url.endswith("sensor-M02-AB.html"), "the sensor's page")
     browser.back()

@@ -267,7 +267,7 @@ def test_a_run_that_sensors_share_is_a_section_of_its_modules_page(tmp_path):
     shared = {a for a in module.anchors if a.startswith("trial-")}
     assert {a for a in sensor.anchors if a.startswith("trial-")} >= shared
     assert len([a for a in shared if f"sensor-M1-A.html#{a}" in module.links]) == 2
-    assert "The same run carried B" in sensor.text
+    assert "Run shared with B" in sensor.text
     assert "runs shared by the sensors of a module" in pages["variance.html"].text
     assert not any(HOLES.findall(page.text) for page in pages.values())
 

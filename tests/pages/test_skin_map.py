@@ -40,7 +40,7 @@ def test_edges_are_coloured_by_their_place_in_the_range() -> None:
     assert drawn["AB"].colour == palette.RAMP[0]
     assert drawn["BD"].colour == palette.RAMP[-1]
     assert drawn["BD"].text == "5.0"
-    assert drawn["BD"].name == "M01 BD: hysteresis 5.0 %FSO"
+    assert drawn["BD"].name == "M01 BD: 5.0 %FSO"
     assert drawn["BD"].href == "sensor-M01-BD.html"
 
 
