@@ -56,7 +56,7 @@ DEFINITIONS: dict[str, tuple[str, str]] = {
     "forms": ("creep-forms", "form forms_shown aicc_above_best shape"),
     "settling time": ("settling-time", "_settles"),
     "Allan deviation": ("allan", "deviation_strain white flicker least_deviation"),
-    "zero across sessions": ("zero-over-time", "departure_percent_fso"),
+    "zero across sessions": ("zero-over-time", "_departure"),
     "blank channels": ("blank", "per_hour parasitic"),
     "generations compared": ("generations", "_compared difference_or_ratio"),
     "equivalence": ("equivalence", "p_equivalence_adjusted _margin"),

@@ -282,10 +282,14 @@ def _components_table(drift: Drift) -> Table:
 def _zero_table(drift: Drift) -> Table:
     empty = pd.DataFrame(columns=["module", "sensor"])
     unit = str(drift.zero.table["unit"].iloc[0]) if drift.zero is not None and len(drift.zero.table) else ""
+    frame = drift.zero.table if drift.zero is not None else empty
+    if len(frame):
+        later = frame.duplicated(["generation", "module", "sensor"])
+        frame = frame.assign(_departure=frame["departure_percent_fso"].where(later))
     return Table(
         name="zero_over_time",
         caption="The zero of every sensor, session by session.",
-        frame=drift.zero.table if drift.zero is not None else empty,
+        frame=frame,
         columns=(
             Column("module", "Module", kind="text"),
             Column("sensor", "Sensor", kind="text"),
@@ -294,10 +298,11 @@ def _zero_table(drift: Drift) -> Table:
             Column("runs", "Runs", kind="integer"),
             Column("zero_signal", "Zero", unit, digits=5),
             Column(
-                "departure_percent_fso",
+                "_departure",
                 "less first",
                 "%FSO",
                 interval=("departure_low", "departure_high"),
+                missing="the first",
             ),
         ),
         shown_rows=12,

@@ -408,5 +408,7 @@ def _panel_axis(
 
 
 def _panel_title(title: str, suffix: str) -> Layout:
-    made = label(title, 0, 1, axes=suffix, shift=(0, 10), paper=True)
-    return made | {"font": {"size": 13, "color": palette.INK}}
+    """Return a panel's title; one of several lines grows upwards."""
+    text = plain(title).replace("\n", "<br>")
+    made = label("", 0, 1, axes=suffix, shift=(0, 10 + 8 * text.count("<br>")), paper=True)
+    return made | {"text": text, "font": {"size": 13, "color": palette.INK}}

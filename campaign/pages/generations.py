@@ -303,6 +303,7 @@ def module_figures(compared: Generations, earlier: Iterable[EarlierCampaign] = (
         axis("", low=0.0, high=1.08),
         columns=2,
         gap=(0.06, 0.055),
+        margin={"t": 44},
     )
     yield Figure(
         name="modules",
@@ -330,7 +331,7 @@ def _panel_title(name: str, frame: pd.DataFrame) -> str:
     own = frame[frame["figure"] == name]
     factor, unit = shown_unit(str(own["unit"].iloc[0]))
     largest = numbers.significant(float(own["value"].max()) * factor, 2, unit)
-    return f"{capitalised(figure_words(name))}, to {largest}"
+    return f"{capitalised(figure_words(name))},\nto {largest}"
 
 
 def generations_table(compared: Generations) -> Table:

@@ -71,7 +71,11 @@ def chi_square_figure(table: pd.DataFrame, chance: ChanceOfTests, generations: S
                 )
             )
     ticks = [(float(i), module) for i, (_, module) in enumerate(modules)]
-    labels = [label("5 % limit of one test", RISK, -0.85, shift=(5, 0), size=11, colour=palette.SOFT)]
+    labels = [
+        label(
+            "5 % limit of one test", RISK, -0.85, anchor="right", shift=(-5, 0), size=11, colour=palette.SOFT
+        )
+    ]
     for row in rows[sure].to_dict("records"):
         height = float(modules.index((str(row["generation"]), str(row["module"]))))
         place = max(float(row["p"]), SMALLEST_P)

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator
 from dataclasses import asdict
+from typing import TypeAlias
 
 import pandas as pd
 
@@ -72,7 +73,7 @@ def _spared(planning: Planning) -> list[str]:
     if planning.resolved is None or planning.resolved.design.modules < 2:
         return []
     modules = planning.resolved.design.modules
-    own = [rows[rows["modules"] == modules].iloc[0] for _, rows in _variants(planning)]
+    own = [rows[rows["modules"] == modules].iloc[0] for *_, rows in _variants(planning)]
     present = own[0]
     words = []
     for row in own[1:]:
@@ -127,17 +128,28 @@ def planning_figures(planning: Planning) -> Iterator[Figure]:
     yield spread_figure(planning)
 
 
-def _variants(planning: Planning) -> list[tuple[str, pd.DataFrame]]:
-    """The designs about the present one by what is varied, in words, present first."""
+_Variants: TypeAlias = list[tuple[str, str, pd.DataFrame]]
+"""Designs in words, as a short label, and their rows by modules."""
+
+
+def _variants(planning: Planning) -> _Variants:
+    """The designs about the present one by what is varied, in words and in short, present first."""
     table = planning.table[planning.table["components"] == planning.components[0].name]
+    several = _in_mountings(planning)
     keys = ["sensors", "repetitions", "sessions"]
     made = []
     for _, rows in table.groupby(keys, sort=False):
         sensors, runs, sessions = (int(rows[key].iloc[0]) for key in keys)
         words = f"{numbers.count(sensors, 'sensor')}, {numbers.count(runs * sessions, 'run')}"
-        words += f" in {numbers.count(sessions, 'mounting')}" if table["sessions"].nunique() > 1 else ""
-        made.append((words, rows.sort_values("modules")))
+        words += f" in {numbers.count(sessions, 'mounting')}" if several else ""
+        short = f"{sensors} × {sessions} × {runs}" if several else f"{sensors} × {runs}"
+        made.append((words, short, rows.sort_values("modules")))
     return made
+
+
+def _in_mountings(planning: Planning) -> bool:
+    """Whether the designs differ in mountings too."""
+    return planning.table["sessions"].nunique() > 1
 
 
 def half_width_figure(planning: Planning) -> Figure:
@@ -147,7 +159,7 @@ def half_width_figure(planning: Planning) -> Figure:
     traces: list[Trace] = []
     notes = []
     variants = _variants(planning)
-    first = variants[0][1]
+    first = variants[0][2]
     known = first[first["difference_half_width_high"].notna() & first["difference_half_width_low"].notna()]
     if len(known):
         traces.append(
@@ -157,7 +169,7 @@ def half_width_figure(planning: Planning) -> Figure:
                 known["difference_half_width_high"] * factor,
             )
         )
-    for (words, rows), style in zip(variants, palette.GENERATION_STYLES, strict=False):
+    for (words, _, rows), style in zip(variants, palette.GENERATION_STYLES, strict=False):
         text = [
             f"{numbers.count(int(m), 'module')} a generation, {words}: "
             f"± {numbers.significant(w * factor, 2, unit)}"
@@ -188,26 +200,25 @@ def half_width_figure(planning: Planning) -> Figure:
         ),
         table="planning",
         note="Modules buy most: they are what a generation’s mean is averaged over. The band is where the "
-        "first line may lie, its components being known only so well. Dotted: the difference planned for.",
+        "first line may lie, its components being known only so well. Dotted: the difference planned for. "
+        f"Labels: {'sensors × mountings × runs' if _in_mountings(planning) else 'sensors × runs'}.",
     )
 
 
-def _top(variants: list[tuple[str, pd.DataFrame]], factor: float) -> float:
+def _top(variants: _Variants, factor: float) -> float:
     """End of the axis: what the widest estimate needs, bands cut off."""
-    return 1.25 * factor * max(float(rows["difference_half_width"].max()) for _, rows in variants)
+    return 1.25 * factor * max(float(rows["difference_half_width"].max()) for *_, rows in variants)
 
 
-def _end_labels(
-    variants: list[tuple[str, pd.DataFrame]], column: str, factor: float
-) -> list[dict[str, object]]:
+def _end_labels(variants: _Variants, column: str, factor: float) -> list[dict[str, object]]:
     """Direct labels at the right ends, moved apart where they would cover each other."""
     ends = sorted(
         (
             (float(rows[column].iloc[-1]) * factor, words, index)
-            for index, (words, rows) in enumerate(variants)
+            for index, (_, words, rows) in enumerate(variants)
         )
     )
-    spacing = 0.055 * max(float(rows[column].max()) * factor for _, rows in variants)
+    spacing = 0.055 * max(float(rows[column].max()) * factor for *_, rows in variants)
     notes, last = [], -math.inf
     for value, words, index in ends:
         place = max(value, last + spacing)
@@ -233,10 +244,10 @@ def power_figure(planning: Planning) -> Figure:
     wanted = numbers.significant(planning.difference * reference.shown_factor, 2, reference.shown_unit)
     traces: list[Trace] = []
     variants = _variants(planning)
-    first = variants[0][1].dropna(subset=["power_low", "power_high"])
+    first = variants[0][2].dropna(subset=["power_low", "power_high"])
     if len(first):
         traces.append(band(first["modules"], first["power_low"] * 100, first["power_high"] * 100))
-    for (words, rows), style in zip(variants, palette.GENERATION_STYLES, strict=False):
+    for (words, _, rows), style in zip(variants, palette.GENERATION_STYLES, strict=False):
         text = [
             f"{numbers.count(int(m), 'module')} a generation, {words}: {numbers.percent(p)}"
             for m, p in zip(rows["modules"], rows["power"], strict=True)
