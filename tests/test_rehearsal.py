@@ -283,7 +283,9 @@ def test_every_figure_and_table_says_so_wherever_it_is_taken(site: Path) -> None
             assert SAID.search(html.unescape(caption)), page.name
             assert SAID.search(re.sub("<[^>]+>", " ", drawn.split("<svg")[1].split("</svg>")[0])), page.name
             figures += 1
-        for caption in re.findall(r'<caption>(<span class="number">Table.*?)</caption>', text, re.DOTALL):
+        for caption in re.findall(
+            r'<caption[^>]*>(<span class="number">Table.*?)</caption>', text, re.DOTALL
+        ):
             assert SAID.search(caption), page.name
             tables += 1
     assert figures > 20
@@ -316,7 +318,7 @@ def test_citation_paper_and_first_words_say_so(site: Path) -> None:
 
     assert "Rehearsal, not measured." in words("provenance.html").split("How to cite")[1][:400]
     assert "note = {Recordings and report, rehearsal, not measured}" in words("provenance.html")
-    assert "Rehearsal, not measured: the text below shows the form only." in words("method.html")
+    assert "Rehearsal, not measured: the text below shows the form only." in words("method-paper.html")
     first = words("index.html").split("Measured on")[0]
     assert "Rehearsal, not measured" in first
     assert "the recordings were simulated from a plan" in first
@@ -399,7 +401,7 @@ def symmetric(upper: pd.DataFrame) -> pd.DataFrame:
 
 
 def test_every_printed_sheet_says_so(site: Path) -> None:
-    sheet = (site / "assets" / "print.css").read_text(encoding="utf-8")
+    sheet = (site / "assets" / "site.css").read_text(encoding="utf-8")
     assert re.search(r'@page rehearsal \{ @top-left \{ content: "Rehearsal, not measured"', sheet)
     assert "body:has(.rehearsal) { page: rehearsal; }" in sheet
 

@@ -22,6 +22,21 @@ from campaign.provenance.refitting import readings_table, refit_from_readings
 from campaign.provenance.software import requirement_name
 from tests.pages.small_campaign import Sketch, read_and_calibrate, write_campaign
 
+WITHOUT_MODEL = (
+    *("hysteresis", "drift", "pressure", "influences"),
+    *("layout", "generations", "budget", "planning"),
+)
+    "hysteresis",
+    "drift",
+    "pressure",
+    "influences",
+    "layout",
+    "generations",
+    "budget",
+    "planning",
+)
+"""Results that a campaign may lack, each told of in MODEL.md where it is there."""
+
 
 @pytest.fixture(scope="module")
 def simple(tmp_path_factory: pytest.TempPathFactory) -> tuple[Calibration, Variance, Any]:
@@ -36,7 +51,8 @@ def simple(tmp_path_factory: pytest.TempPathFactory) -> tuple[Calibration, Varia
         variance=variance,
         calibration=calibration,
         readings=SimpleNamespace(reference=calibration.reference),
-        **dict.fromkeys(("hysteresis", "drift", "pressure", "influences")),
+        **dict.fromkeys(WITHOUT_MODEL),
+        earlier=(),
     )
     return calibration, variance, results
 
@@ -151,8 +167,8 @@ def test_the_call_of_statsmodels_runs_on_the_design_and_finds_the_optimum(
 
 def test_without_a_fit_the_text_says_so() -> None:
     reference = SimpleNamespace(name="strain", unit="mm/mm")
-    nothing = dict.fromkeys(("variance", "calibration", "hysteresis", "drift", "pressure", "influences"))
-    results: Any = SimpleNamespace(**nothing, readings=SimpleNamespace(reference=reference))
+    nothing = dict.fromkeys(("variance", "calibration", *WITHOUT_MODEL))
+    results: Any = SimpleNamespace(**nothing, earlier=(), readings=SimpleNamespace(reference=reference))
     files = model_files(results)
     assert set(files) == {"MODEL.md"}
     assert b"No nested model was fitted: the campaign holds no staircase reading" in files["MODEL.md"]
@@ -170,10 +186,8 @@ def test_models_of_loops_holds_and_influences_are_told_as_well() -> None:
     results: Any = SimpleNamespace(
         variance=None,
         calibration=None,
-        hysteresis=hysteresis,
-        drift=None,
-        pressure=pressure,
-        influences=None,
+        **dict.fromkeys(WITHOUT_MODEL) | {"hysteresis": hysteresis, "pressure": pressure},
+        earlier=(),
         readings=SimpleNamespace(reference=SimpleNamespace(name="strain", unit="mm/mm")),
     )
     files = model_files(results)
