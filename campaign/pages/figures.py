@@ -411,4 +411,4 @@ def _panel_title(title: str, suffix: str) -> Layout:
     """Return a panel's title; one of several lines grows upwards."""
     text = plain(title).replace("\n", "<br>")
     made = label("", 0, 1, axes=suffix, shift=(0, 10 + 8 * text.count("<br>")), paper=True)
-    return made | {"text": text, "font": {"size": 13, "color": palette.INK}}
+    return made | {"text": text, "align": "left", "font": {"size": 13, "color": palette.INK}}

@@ -253,7 +253,24 @@ def _bar_places(sensors: Sequence[MapSensor]) -> list[tuple[Point, Point, Point]
 def _edge_places(sensors: Sequence[MapSensor]) -> list[tuple[Point, Point, Point]]:
     place = _placing([end for s in sensors for end in s.ends or ()])
     drawn = [tuple(place(end) for end in s.ends or ()) for s in sensors]
-    return [(start, end, _label_place(start, end)) for start, end in drawn]
+    outer = _sides([end for ends in drawn for end in ends])
+    labels: list[Point] = []
+    for start, end in drawn:
+        offered = _label_places(start, end, side={start, end} in outer)
+        free = [p for p in offered if not any(_meet(p, other) for other in labels)]
+        labels.append((free or offered)[0])
+    return [(start, end, label) for (start, end), label in zip(drawn, labels, strict=True)]
+
+
+def _sides(places: Sequence[Point]) -> list[set[Point]]:
+    """Return the pairs of neighbouring corners of the outline."""
+    corners = convex_hull(places)
+    return [{a, b} for a, b in zip(corners, [*corners[1:], *corners[:1]], strict=True)]
+
+
+def _meet(first: Point, second: Point) -> bool:
+    """Whether two values that stand there would cover each other."""
+    return abs(first[0] - second[0]) < 18 and abs(first[1] - second[1]) < 10
 
 
 def _placing(nodes: Sequence[Point]) -> _Placing:
@@ -278,22 +295,29 @@ class _Placing:
         return round(x, 1), round(y, 1)
 
 
-def _label_place(start: Point, end: Point) -> Point:
-    """Return where an edge's value stands: outside a side, and a third of the way along a slanting edge.
+def _label_places(start: Point, end: Point, side: bool) -> list[Point]:
+    """Return where an edge's value may stand, best first: outside a side, along an edge that runs inside.
 
     Diagonals cross in the middle, where their values would meet.
     """
-    slanting = abs(end[0] - start[0]) > 25 and abs(end[1] - start[1]) > 25
+    if side:
+        return [_beside(start, end)]
     lower, upper = sorted((start, end))
-    share = 0.28 if slanting else 0.5
-    x = lower[0] + share * (upper[0] - lower[0])
-    y = lower[1] + share * (upper[1] - lower[1])
-    if slanting:
-        return round(x, 1), round(y, 1)
-    outward_x, outward_y = x - TILE_WIDTH / 2, y - TILE_HEIGHT / 2
-    upright = abs(end[1] - start[1]) > abs(end[0] - start[0])
-    shift = (math.copysign(17.0, outward_x), 0.0) if upright else (0.0, math.copysign(10.0, outward_y))
-    return round(x + shift[0], 1), round(y + shift[1], 1)
+    shares = (0.28, 0.72, 0.36, 0.64, 0.5, 0.2, 0.8)
+    reach_x, reach_y = upper[0] - lower[0], upper[1] - lower[1]
+    return [(round(lower[0] + s * reach_x, 1), round(lower[1] + s * reach_y, 1)) for s in shares]
+
+
+def _beside(start: Point, end: Point) -> Point:
+    """Return the place outside the middle of a side, further off where the side stands upright."""
+    x, y = (start[0] + end[0]) / 2, (start[1] + end[1]) / 2
+    across, upright = end[1] - start[1], start[0] - end[0]
+    length = math.hypot(across, upright) or 1.0
+    across, upright = across / length, upright / length
+    if across * (x - TILE_WIDTH / 2) + upright * (y - TILE_HEIGHT / 2) < 0:
+        across, upright = -across, -upright
+    reach = 10.0 + 7.0 * across**2
+    return round(x + reach * across, 1), round(y + reach * upright, 1)
 
 
 def _outline(nodes: Sequence[Point], sensors: Sequence[MapSensor]) -> str:

@@ -124,3 +124,20 @@ def test_the_outline_is_the_convex_hull(
     points: list[tuple[float, float]], corners: set[tuple[float, float]]
 ) -> None:
     assert set(convex_hull(points)) == corners
+
+
+def test_values_of_a_braced_panel_do_not_cover_each_other() -> None:
+    turn = 2 * math.pi / 5
+    places = {
+        name: (60 * math.sin(i * turn + 0.1), 54 * math.cos(i * turn + 0.1)) for i, name in enumerate("PQRST")
+    }
+    pairs = [(a, b) for i, a in enumerate("PQRST") for b in "PQRST"[i + 1 :]]
+    braced = [MapSensor("g", "M01", a + b, (places[a], places[b])) for a, b in pairs]
+    labels = [edge.label for edge in edges(skin_map(braced, [])).values()]
+    close = [
+        (one, other)
+        for i, one in enumerate(labels)
+        for other in labels[i + 1 :]
+        if abs(one[0] - other[0]) < 16 and abs(one[1] - other[1]) < 9
+    ]
+    assert not close
