@@ -26,15 +26,6 @@ WITHOUT_MODEL = (
     *("hysteresis", "drift", "pressure", "influences"),
     *("layout", "generations", "budget", "planning"),
 )
-    "hysteresis",
-    "drift",
-    "pressure",
-    "influences",
-    "layout",
-    "generations",
-    "budget",
-    "planning",
-)
 """Results that a campaign may lack, each told of in MODEL.md where it is there."""
 
 
