@@ -1,3 +1,3 @@
 """Turns a campaign folder of stretchable strain sensor recordings into an offline site of evidence."""
 
-__version__ = "0.1.0"
+__version__ = "0.2.0"
