@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Hashable, Mapping
+from dataclasses import replace
 from typing import Any
 
 import numpy as np
@@ -420,4 +421,10 @@ def sensor_holds(
         holds_table(rows, drift.reference, "own_holds"),
         settling_table(rows, drift.reference, "own_settling"),
     ]
-    return figures, tables, by_trial
+    return figures, [_leading_within_the_page(table) for table in tables], by_trial
+
+
+def _leading_within_the_page(table: Table) -> Table:
+    """Return the table of a sensor's own page, whose links need not name the page."""
+    anchors = table.frame["_href"].str.replace("^[^#]*", "", regex=True)
+    return replace(table, frame=table.frame.assign(_href=anchors))
