@@ -151,7 +151,9 @@ def test_without_script_table_and_figures_stand_and_the_controls_do_not(browser:
     browser.get(address(planned[0] / "planning.html"))
     assert not browser.find_element(By.CSS_SELECTOR, "[data-planning]").is_displayed()
     assert len(browser.find_elements(By.CSS_SELECTOR, "figure.figure svg")) == 3
-    assert len(browser.find_elements(By.CSS_SELECTOR, "#table-planning tbody tr")) > 20
+    assert len(browser.find_elements(By.CSS_SELECTOR, "#table-planning tbody tr")) == 10
+    assert "the file has all of them" in browser.find_element(By.CSS_SELECTOR, "#table-planning .tools").text
+    assert browser.find_element(By.CSS_SELECTOR, "#table-planning .tools a").is_displayed()
 
 
 def test_data_of_the_page_hold_no_number_that_json_cannot_say(planned) -> None:
