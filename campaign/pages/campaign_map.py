@@ -10,6 +10,7 @@ import pandas as pd
 from campaign.analyses.layout_signals import geometry_of
 from campaign.analyses.loop_table import BY_LINE
 from campaign.analyses.results import CampaignResults
+from campaign.pages.sensor_parts import sensor_keys
 from campaign.pages.skin_map import MapFigure, MapSensor, Point, SkinMap, skin_map
 from campaign.recordings.description import Geometry
 
@@ -50,11 +51,12 @@ def campaign_map(results: CampaignResults, chosen: str = FIRST_SHOWN, *, alone: 
 def map_sensors(results: CampaignResults) -> list[MapSensor]:
     """Return every sensor with the places of its ends where register and geometry give them.
 
-    A sensor is set aside on the map where no trial of it is used.
+    A sensor is set aside on the map where no trial of it is used; it has a page where a trial names it.
     """
     intake = results.intake
     modules = {str(row["module"]): row for row in intake.modules.to_dict("records")}
     used = {(i.module, i.sensor) for i in intake.used_identities}
+    paged = {(named, sensor) for _, named, sensor in sensor_keys(results)}
     made = []
     for row in intake.sensors.to_dict("records"):
         module, sensor = str(row["module"]), str(row["sensor"])
@@ -62,7 +64,8 @@ def map_sensors(results: CampaignResults) -> list[MapSensor]:
         named = str(details.get("geometry", "") or "")
         ends = _ends(row, geometry_of(named, results.description.geometries))
         generation = str(details.get("generation", ""))
-        made.append(MapSensor(generation, module, sensor, ends, (module, sensor) not in used))
+        key = (module, sensor)
+        made.append(MapSensor(generation, *key, ends, set_aside=key not in used, has_page=key in paged))
     return made
 
 

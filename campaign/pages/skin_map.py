@@ -36,13 +36,24 @@ VERDICT_STEPS: dict[str, tuple[int, str]] = {
 
 @dataclass(frozen=True)
 class MapSensor:
-    """One sensor of the map; *ends* are the places of its two nodes in mm, ``None`` where not known."""
+    """One sensor of the map.
+
+    Attributes
+    ----------
+    ends
+        The places of its two nodes in mm, ``None`` where not known.
+    set_aside
+        Whether no trial of it is used.
+    has_page
+        Whether it has a page; one that a register names and no trial has none.
+    """
 
     generation: str
     module: str
     sensor: str
     ends: tuple[Point, Point] | None = None
     set_aside: bool = False
+    has_page: bool = True
 
 
 @dataclass(frozen=True)
@@ -80,7 +91,10 @@ class Scale:
 
 @dataclass(frozen=True)
 class MapEdge:
-    """One sensor as drawn: its line, where its value stands, and what it says for the figure first chosen."""
+    """One sensor as drawn: its line, where its value stands, and what it says for the figure first chosen.
+
+    Its address is empty where it has no page.
+    """
 
     index: int
     module: str
@@ -102,7 +116,10 @@ class MapEdge:
 
 @dataclass(frozen=True)
 class MapTile:
-    """One module as drawn: outline (empty for a row of bars), edges, and its address."""
+    """One module as drawn: outline (empty for a row of bars), edges, and its address.
+
+    The address is empty where no sensor of it has a page.
+    """
 
     generation: str
     module: str
@@ -130,6 +147,11 @@ class SkinMap:
     def has_bars(self) -> bool:
         """Whether any module is drawn as a row of bars."""
         return any(tile.bars for _, group in self.groups for tile in group)
+
+    @property
+    def has_unmeasured(self) -> bool:
+        """Whether any sensor has no page, for no trial names it."""
+        return any(not edge.href for _, group in self.groups for tile in group for edge in tile.edges)
 
 
 def skin_map(sensors: Sequence[MapSensor], figures: Sequence[MapFigure], chosen: str = "") -> SkinMap:
@@ -172,7 +194,7 @@ def _painted(figure: MapFigure, sensors: Sequence[MapSensor]) -> list[tuple[int,
 def _step(figure: MapFigure, sensor: MapSensor, low: float, high: float) -> tuple[int, str]:
     key = (sensor.module, sensor.sensor)
     if sensor.set_aside:
-        return NO_VALUE, "set aside"
+        return NO_VALUE, "set aside" if sensor.has_page else "not measured"
     if figure.verdicts is not None:
         return VERDICT_STEPS.get(figure.verdicts.get(key, ""), (NO_VALUE, "no verdict"))
     value = figure.values.get(key, math.nan)
@@ -225,7 +247,7 @@ def _tile(
                 index=index,
                 module=sensor.module,
                 sensor=sensor.sensor,
-                href=slugs.sensor_href(sensor.module, sensor.sensor),
+                href=slugs.sensor_href(sensor.module, sensor.sensor) if sensor.has_page else "",
                 start=start,
                 end=end,
                 label=label,
@@ -237,7 +259,7 @@ def _tile(
         )
     outline = "" if bars else _outline([end for s in sensors for end in s.ends or ()], sensors)
     module = sensors[0]
-    href = slugs.module_href(module.module)
+    href = slugs.module_href(module.module) if any(s.has_page for s in sensors) else ""
     return MapTile(module.generation, module.module, href, outline, tuple(edges), bars)
 
 

@@ -72,6 +72,12 @@ window.campaign = window.campaign || {};
     return { data: swapped(markedTraces(figure.spec.traces), style), layout: layout };
   }
 
+  /* A figure that is still being drawn must not be taken down: the library goes on with what is gone. */
+  function busy(figure, drawing) {
+    figure.drawing = Promise.allSettled([figure.drawing, drawing]);
+    return drawing;
+  }
+
   function makeLive(figure) {
     if (figure.live || figure.stays) return Promise.resolve();
     const live = document.createElement("div");
@@ -80,7 +86,7 @@ window.campaign = window.campaign || {};
     figure.plot.append(live);
     figure.live = live;
     const made = drawn(figure, figure.wanted);
-    return library.newPlot(live, made.data, made.layout, CONFIG).then(function () {
+    const drawing = library.newPlot(live, made.data, made.layout, CONFIG).then(function () {
       figure.plot.classList.add("is-live");
       figure.live.on("plotly_click", follow);
       figure.live.on("plotly_hover", (event) => live.classList.toggle("leads", Boolean(address(event.points[0]))));
@@ -90,6 +96,7 @@ window.campaign = window.campaign || {};
       figure.element.dataset.state = "live";
       hideTester();
     });
+    return busy(figure, drawing);
   }
 
   /* The library measures texts in a picture of its own beside the page's content: nothing for readers. */
@@ -107,10 +114,20 @@ window.campaign = window.campaign || {};
     figure.element.dataset.state = "still";
   }
 
+  /* Whatever is begun while it waits is waited for too; pressed again by then, the figure stays live. */
+  function stillOnceDrawn(figure) {
+    const drawing = figure.drawing;
+    drawing.then(function () {
+      if (!figure.stays) return;
+      if (figure.drawing === drawing) makeStill(figure);
+      else stillOnceDrawn(figure);
+    });
+  }
+
   function redraw(figure) {
     if (!figure.live) return;
     const made = drawn(figure, ranges(figure));
-    library.react(figure.live, made.data, made.layout, CONFIG);
+    busy(figure, library.react(figure.live, made.data, made.layout, CONFIG));
   }
 
   /* Another choice of traces for a figure, with the ranges of its axes, the address of its data and, where they
@@ -132,7 +149,7 @@ window.campaign = window.campaign || {};
     }
     if (!figure.live) return;
     const made = drawn(figure, {});
-    library.react(figure.live, made.data, made.layout, CONFIG);
+    busy(figure, library.react(figure.live, made.data, made.layout, CONFIG));
   };
 
   /* Addresses within the site only. */
@@ -223,9 +240,9 @@ window.campaign = window.campaign || {};
   }
 
   function toggleLive(figure) {
-    figure.stays = Boolean(figure.live);
+    figure.stays = !figure.stays;
     figure.liveButton.setAttribute("aria-pressed", String(!figure.stays));
-    if (figure.stays) makeStill(figure);
+    if (figure.stays) stillOnceDrawn(figure);
     else {
       waiting.push(figure);
       work();
@@ -257,7 +274,7 @@ window.campaign = window.campaign || {};
     if (!figure.live) return;
     const update = {};
     for (const axis of axes(figure)) update[axis + ".range"] = figure.spec.layout[axis].range.slice();
-    library.relayout(figure.live, update);
+    busy(figure, library.relayout(figure.live, update));
     campaign.announce("The whole figure is shown");
   }
 
@@ -362,7 +379,7 @@ window.campaign = window.campaign || {};
       if (figure.live) {
         const update = {};
         for (const [axis, ends] of Object.entries(view.ranges)) update[axis + ".range"] = ends;
-        library.relayout(figure.live, update);
+        busy(figure, library.relayout(figure.live, update));
       }
     }
     const target = document.getElementById(view.anchor);
@@ -375,6 +392,7 @@ window.campaign = window.campaign || {};
     const spec = page.figures[element.dataset.figure];
     if (!spec) continue;
     const figure = { element: element, plot: element.querySelector(".plot"), spec: spec, live: null, wanted: {} };
+    Object.assign(figure, { stays: false, drawing: Promise.resolve() });
     if (panelCount(figure) > 1) figure.plot.classList.add("panels");
     figures.set(element.dataset.figure, figure);
     buildTools(figure);

@@ -68,6 +68,10 @@
 
   function draw() {
     const loops = loopsOf(current);
+    if (!loops) {
+      pick(current);
+      return;
+    }
     const wanted = (trace) => shown(trace, loops.cycles);
     const traces = loops.traces.filter(wanted);
     const less = loops.traces.map((trace, i) => Object.assign({}, trace, { y: loops.departures[i] })).filter(wanted);

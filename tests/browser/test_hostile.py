@@ -43,7 +43,7 @@ USED = """
     }
   }
   for (const button of document.querySelectorAll('.tools button, thead button')) {
-    if (!/SVG|PNG|link|live/.test(button.textContent)) button.click();
+    if (!/SVG|PNG|link/.test(button.textContent)) button.click();
   }
 """
 """A reader who points at everything, chooses everything and presses every button but those that save."""

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import pytest
 
@@ -50,6 +51,18 @@ def test_what_is_set_aside_or_has_no_value_has_no_colour_and_says_so() -> None:
     assert (drawn["CD"].colour, drawn["CD"].name) == ("", "M01 CD: set aside")
     assert (drawn["BC"].colour, drawn["BC"].name) == ("", "M01 BC: no value")
     assert drawn["AB"].colour != ""
+
+
+def test_what_no_trial_names_leads_nowhere_and_is_said_to_be_unmeasured() -> None:
+    known = MapSensor("g", "M01", "AB", (NODES["A"], NODES["B"]))
+    spare = replace(known, sensor="CD", set_aside=True, has_page=False)
+    drawn = skin_map([known, spare], [MapFigure("h", "h", "", {("M01", "AB"): 1.0})])
+    assert [edge.href for edge in drawn.groups[0][1][0].edges] == ["sensor-M01-AB.html", ""]
+    assert drawn.groups[0][1][0].edges[1].name == "M01 CD: not measured"
+    assert drawn.has_unmeasured
+    assert drawn.groups[0][1][0].href == "module-M01.html"
+    assert skin_map([spare], []).groups[0][1][0].href == ""
+    assert not skin_map([known], []).has_unmeasured
 
 
 def test_y_points_up_in_the_module_and_down_on_the_page() -> None:
