@@ -50,7 +50,7 @@ def started(downloads: Path) -> Chrome:
     """Start Chromium with a profile of its own that saves to *downloads* and keeps its logs."""
     options = ChromeOptions()
     options.binary_location = chromium() or ""
-    for flag in (*FLAGS, f"--user-data-dir={downloads.parent / 'profile'}"):
+    for flag in (*FLAGS, f"--user-data-dir={downloads.parent / f'{downloads.name}_profile'}"):
         options.add_argument(flag)
     options.add_experimental_option(
         "prefs",
