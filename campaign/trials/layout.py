@@ -102,7 +102,8 @@ def features_of_layout(trial: Trial) -> LayoutFeatures:
     blocks = [block for block in found if np.isfinite(trial.signal[block.rows]).any()]
     if len(found) > len(blocks):
         missing = len(found) - len(blocks)
-        what = f"sensor {trial.identity.sensor}: {missing} placements without any signal"
+        many = "1 placement" if missing == 1 else f"{missing} placements"
+        what = f"sensor {trial.identity.sensor}: {many} without any signal"
         notices.append(_noted(trial, "placement-without-signal", what, count=missing))
     if not blocks:
         notices.append(
