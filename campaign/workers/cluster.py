@@ -106,7 +106,7 @@ def _client(address: str) -> Any:
         raise _stops("cluster-not-installed", what, "pip install 'campaign-report[cluster]'") from None
     try:
         return client(address, timeout=ANSWER_S, set_as_default=False)
-    # TypeError: an address that is none; AssertionError: on a busy machine its own thread did not start in time
+    # TypeError: an address that is none; AssertionError: on a busy machine its thread did not start in time
     except (OSError, ValueError, TypeError, AssertionError) as fault:
         what = f"no scheduler answers at {address} ({type(fault).__name__})"
         raise _stops("cluster-silent", what, "start one with 'dask scheduler', or mend the address") from None
