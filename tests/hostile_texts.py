@@ -44,7 +44,7 @@ TEMPLATES = {
 NAMES = {
     "climbs": "../../../climbed",
     "windows_climb": "..\\..\\climbed",
-    "absolute": "/tmp/climbed",
+    "absolute": "/climbed",
     "percent": "%00%2e%2e%2fclimbed",
     "proto": "__proto__",
     "constructor": "constructor",

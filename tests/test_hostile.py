@@ -36,7 +36,7 @@ from campaign.provenance.sealing import seal_campaign
 from campaign.recordings.register import refusal_of_id, shown
 from tests.hostile_campaign import hostile_ids, hostile_plan, note_of
 from tests.hostile_site import hostile_folder, hostile_site, hostile_space
-from tests.hostile_texts import FORMULAS, NUL, REFUSED, TEXTS, UNSEEN
+from tests.hostile_texts import FORMULAS, NAMES, NUL, REFUSED, TEXTS, UNSEEN
 from tests.pages.small_campaign import Sketch, write_campaign
 
 _ELEMENTS = """
@@ -264,7 +264,7 @@ def test_nothing_is_written_outside_the_output_folder() -> None:
     space = hostile_space()
     assert sorted(path.name for path in (space / "out").iterdir()) == ["site"]
     assert sorted(path.name for path in (space / "in").iterdir()) == ["campaign"]
-    assert not Path("/tmp/climbed").exists()
+    assert not Path(NAMES["absolute"]).exists()
     assert not list(space.rglob("*climbed.html*")) or all(
         path.is_relative_to(folder) for path in space.rglob("*climbed*.html")
     )
