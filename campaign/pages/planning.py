@@ -21,7 +21,7 @@ from campaign.analyses.planning_findings import modules_needed
 from campaign.analyses.results import CampaignResults
 from campaign.methods.campaign_design import spread_factors
 from campaign.pages import numbers, palette
-from campaign.pages.figures import Figure, Trace, axis, band, label, layout, level_line, line, points
+from campaign.pages.figures import Figure, Layout, Trace, axis, band, label, layout, level_line, line, points
 from campaign.pages.findings import KIND_WORDS
 from campaign.pages.page import Page
 from campaign.pages.tables import Column, Table
@@ -187,13 +187,7 @@ def half_width_figure(planning: Planning) -> Figure:
         "components’ own intervals put the first.",
         traces=tuple(traces),
         layout=layout(
-            axis(
-                "Modules a generation",
-                "",
-                low=1.5,
-                high=27.5,
-                ticks=[(m, str(m)) for m in (3, 4, 6, 8, 12, 16, 20)],
-            ),
+            _modules_axis(27.5),
             axis("Half-width of the difference", unit, low=0, high=_top(variants, factor)),
             annotations=notes,
             shapes=[level_line(planning.difference * factor)],
@@ -225,6 +219,15 @@ def _end_labels(variants: _Variants, column: str, factor: float) -> list[dict[st
         last = place
         notes.append(label(words, 20, place, colour=palette.GENERATION_STYLES[index].colour, size=11))
     return notes
+
+
+def _modules_axis(high: float) -> Layout:
+    """The axis of numbers of modules; room is left to its right for labels at the ends of lines."""
+    return axis("Modules a generation", "", low=1.5, high=high, ticks=[(m, str(m)) for m in _MODULES_NAMED])
+
+
+_MODULES_NAMED = (3, 4, 6, 8, 12, 16, 20)
+"""Numbers of modules that the axis names."""
 
 
 def _half_width_caption(planning: Planning) -> str:
@@ -273,13 +276,7 @@ def power_figure(planning: Planning) -> Figure:
         "finds the difference.",
         traces=tuple(traces),
         layout=layout(
-            axis(
-                "Modules a generation",
-                "",
-                low=1.5,
-                high=20.5,
-                ticks=[(m, str(m)) for m in (3, 4, 6, 8, 12, 16, 20)],
-            ),
+            _modules_axis(20.5),
             axis("Probability of finding it", "%", low=0, high=103),
             shapes=[level_line(WANTED_POWER * 100)],
         ),
