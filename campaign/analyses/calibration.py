@@ -234,12 +234,12 @@ def _record(
     file_hashes: Mapping[str, str],
 ) -> CalibrationRecord:
     """The calibration record of one line."""
-    files = tuple(sorted(set(map(str, used.table["trial"].to_numpy()[line.rows]))))
+    files = tuple(sorted(set(used.texts("trial", line.rows))))
     x = used.x[line.rows]
     low, high = float(x.min()), float(x.max())
     ends = sorted([line.intercept + line.slope * low, line.intercept + line.slope * high])
     rest, rest_uncertainty = (float(used.column(name, line.rows[:1])[0]) for name in REST)
-    dates = sorted({str(started)[:10] for started in used.table["started"].to_numpy()[line.rows] if started})
+    dates = sorted({started[:10] for started in used.texts("started", line.rows) if started})
     return CalibrationRecord(
         line.generation,
         line.module,

@@ -179,7 +179,7 @@ def record_conditions(used: UsedReadings, line: BranchLine, reference: Reference
     """Return the conditions that a calibration record holds in: range, approach, runs, climate, pressure."""
     x = used.x[line.rows] * reference.shown_factor
     approach = {"rising": "from below only", "falling": "from above only", "both": "from either side"}
-    mountings = len(set(used.table["session"].to_numpy()[line.rows]))
+    mountings = len(set(used.mounting[line.rows].tolist()))
     conditions = {
         "range": _span(x, reference.shown_unit),
         "approach": approach[line.branch],

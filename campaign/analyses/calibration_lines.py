@@ -215,39 +215,46 @@ def line_of_sensor(lines: tuple[BranchLine, ...]) -> dict[tuple[str, str, str], 
 def run_lines_frame(used: UsedReadings, lines: tuple[BranchLine, ...]) -> pd.DataFrame:
     """Return one row a run and branch; columns as in ``Calibration.run_lines``."""
     names = [*SENSOR_KEYS, "position", *RUN_KEYS[3:]]
-    first = np.unique(used.run, return_index=True)[1]
-    identity = {name: used.table[name].to_numpy()[first] for name in names}
-    returns = _zero_returns(used)
-    records = [
-        {
-            **{name: values[code] for name, values in identity.items()},
-            "branch": line.branch,
-            "intercept": line.run_lines.intercepts[place],
-            "slope": line.run_lines.slopes[place],
-            "residual_sd": _residual_sd(line.run_lines, place),
-            "readings": int(line.run_lines.counts[place]),
-            "x_low": float(used.x[line.rows[used.run[line.rows] == code]].min()),
-            "x_high": float(used.x[line.rows[used.run[line.rows] == code]].max()),
-            "zero_return": returns[code],
-            "zero_return_percent_fso": 100.0 * returns[code] / line.full_scale_output,
-        }
-        for line in lines
-        for place, code in enumerate(line.run_codes.tolist())
-    ]
     columns = [*names, "branch", "intercept", "slope", "residual_sd", "readings", "x_low", "x_high"]
-    return pd.DataFrame(records, columns=[*columns, "zero_return", "zero_return_percent_fso"])
+    if not lines:
+        return pd.DataFrame(columns=[*columns, "zero_return", "zero_return_percent_fso"])
+    first = np.unique(used.run, return_index=True)[1]
+    codes = np.concatenate([line.run_codes for line in lines])
+    counts = np.concatenate([line.run_lines.counts for line in lines])
+    runs = [line.runs for line in lines]
+    ends = np.hstack([_ends_of_runs(used.x[line.rows], used.run[line.rows]) for line in lines])
+    returns = _zero_returns(used)[codes]
+    table = pd.DataFrame({name: used.table[name].to_numpy()[first[codes]] for name in names})
+    table["branch"] = np.repeat([line.branch for line in lines], runs)
+    table["intercept"] = np.concatenate([line.run_lines.intercepts for line in lines])
+    table["slope"] = np.concatenate([line.run_lines.slopes for line in lines])
+    table["residual_sd"] = np.concatenate([_residual_sds(line.run_lines) for line in lines])
+    table["readings"] = counts
+    table["x_low"], table["x_high"] = ends
+    table["zero_return"] = returns
+    table["zero_return_percent_fso"] = 100.0 * returns / np.repeat([l.full_scale_output for l in lines], runs)
+    return table
 
 
-def _zero_returns(used: UsedReadings) -> list[float]:
+def _ends_of_runs(x: FloatArray, run: IntArray) -> FloatArray:
+    """Least and largest x of every run, in the order of their codes: shape (2, runs)."""
+    order = np.argsort(run, kind="stable")
+    first = np.flatnonzero(np.diff(run[order], prepend=-1))
+    return np.stack([np.minimum.reduceat(x[order], first), np.maximum.reduceat(x[order], first)])
+
+
+def _zero_returns(used: UsedReadings) -> FloatArray:
     """Zero return of every run, by its code."""
     order = np.lexsort((used.table["order"].to_numpy(), used.run))
     bounds = np.flatnonzero(np.diff(used.run[order])) + 1
-    return [zero_return(used.x[rows], used.signal[rows]) for rows in np.split(order, bounds)]
+    return np.array([zero_return(used.x[rows], used.signal[rows]) for rows in np.split(order, bounds)])
 
 
-def _residual_sd(lines: GroupLines, place: int) -> float:
-    degrees = int(lines.counts[place]) - 2
-    return float(np.sqrt(lines.residual_sums_of_squares[place] / degrees)) if degrees > 0 else float("nan")
+def _residual_sds(lines: GroupLines) -> FloatArray:
+    """Residual standard deviation of every run about its own line; NaN without degrees of freedom."""
+    degrees = lines.counts - 2
+    squares = lines.residual_sums_of_squares / np.where(degrees > 0, degrees, 1)
+    return np.where(degrees > 0, np.sqrt(squares), np.nan)
 
 
 def _branches(rows: IntArray, direction: IntArray) -> dict[str, IntArray]:

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping, Sequence
+from typing import Any
+
 import numpy as np
 import pandas as pd
 
@@ -30,20 +33,18 @@ def hysteresis_frame(
             continue
         stand = _backlash_in_signal(used, line, reference, description)
         parts.append(
-            pd.DataFrame(
-                {
-                    **dict(zip(SENSOR_KEYS, line.key, strict=True)),
-                    "nominal_level": line.cells.differences()[0],
-                    "difference": found.differences,
-                    "low": found.low,
-                    "high": found.high,
-                    "percent_fso": 100.0 * found.differences / line.full_scale_output,
-                    "runs": found.runs,
-                    "label": np.where(np.abs(found.differences) <= stand, NOT_FROM_STAND, ""),
-                }
-            )
+            {
+                **dict(zip(SENSOR_KEYS, line.key, strict=True)),
+                "nominal_level": line.cells.differences()[0],
+                "difference": found.differences,
+                "low": found.low,
+                "high": found.high,
+                "percent_fso": 100.0 * found.differences / line.full_scale_output,
+                "runs": found.runs,
+                "label": np.where(np.abs(found.differences) <= stand, NOT_FROM_STAND, ""),
+            }
         )
-    return pd.concat(parts, ignore_index=True) if parts else pd.DataFrame(columns=HYSTERESIS_COLUMNS)
+    return _joined(parts) if parts else pd.DataFrame(columns=HYSTERESIS_COLUMNS)
 
 
 def _backlash_in_signal(
@@ -68,16 +69,27 @@ def repeatability_frame(lines: tuple[BranchLine, ...]) -> pd.DataFrame:
         found = repeatability(cells.signal, cells.cell, cells.mounting)
         first = np.unique(cells.cell, return_index=True)[1]
         parts.append(
-            pd.DataFrame(
-                {
-                    **dict(zip(SENSOR_KEYS, line.key, strict=True)),
-                    "direction": np.array(DIRECTIONS, dtype=object)[cells.direction[first]],
-                    "nominal_level": cells.level[first],
-                    "runs": found.counts,
-                    "sd": found.standard_deviations,
-                    "range": found.ranges,
-                    "sd_percent_fso": 100.0 * found.standard_deviations / line.full_scale_output,
-                }
-            )
+            {
+                **dict(zip(SENSOR_KEYS, line.key, strict=True)),
+                "direction": np.array(DIRECTIONS, dtype=object)[cells.direction[first]],
+                "nominal_level": cells.level[first],
+                "runs": found.counts,
+                "sd": found.standard_deviations,
+                "range": found.ranges,
+                "sd_percent_fso": 100.0 * found.standard_deviations / line.full_scale_output,
+            }
         )
-    return pd.concat(parts, ignore_index=True) if parts else pd.DataFrame(columns=REPEATABILITY_COLUMNS)
+    return _joined(parts) if parts else pd.DataFrame(columns=REPEATABILITY_COLUMNS)
+
+
+def _joined(parts: Sequence[Mapping[str, Any]]) -> pd.DataFrame:
+    """One table of the columns of all parts: arrays of the part's length, or one value for all of it."""
+    lengths = [len(part["nominal_level"]) for part in parts]
+    return pd.DataFrame(
+        {
+            name: np.concatenate(
+                [np.broadcast_to(part[name], length) for part, length in zip(parts, lengths, strict=True)]
+            )
+            for name in parts[0]
+        }
+    )

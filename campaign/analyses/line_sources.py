@@ -131,6 +131,16 @@ def _median(values: FloatArray) -> float:
 
 def _temperature_variance(used: UsedReadings, line: BranchLine) -> float:
     values, run = used.column("temperature_c", line.rows), used.run[line.rows]
-    means = np.array([_median(values[run == code]) for code in line.run_codes])
-    known = means[np.isfinite(means)]
-    return float(np.var(known, ddof=1)) if len(known) > 1 else float("nan")
+    means = _medians_of_runs(values, run)
+    return float(np.var(means, ddof=1)) if len(means) > 1 else float("nan")
+
+
+def _medians_of_runs(values: FloatArray, run: npt.NDArray[np.int64]) -> FloatArray:
+    """Median of the known values of every run that has any, in the order of the codes of runs."""
+    known = np.isfinite(values)
+    values, run = values[known], run[known]
+    order = np.lexsort((values, run))
+    values, run = values[order], run[order]
+    first = np.flatnonzero(np.diff(run, prepend=-1))
+    counts = np.diff(first, append=len(run))
+    return np.asarray((values[first + (counts - 1) // 2] + values[first + counts // 2]) / 2.0)

@@ -61,7 +61,7 @@ def shared_covariance(
         elongation_mm=elongation,
         rest_length_mm=rest,
         direction=DIRECTION_SIGNS[used.direction[rows]],
-        session=pd.factorize(used.table["session"].to_numpy()[rows])[0].astype(np.int64),
+        session=pd.factorize(used.mounting[rows])[0].astype(np.int64),
         scale_relative=stated.scale_relative,
         zero_mm=stated.zero_mm,
         backlash_mm=stated.backlash_mm,

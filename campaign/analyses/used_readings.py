@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 import numpy.typing as npt
@@ -63,11 +64,29 @@ class UsedReadings:
 
     def column(self, name: str, rows: IntArray) -> FloatArray:
         """Values of a numeric column of the table at the places *rows*."""
-        return np.asarray(self.table[name].to_numpy(dtype=np.float64)[rows])
+        if name not in self._numbers:
+            self._numbers[name] = self.table[name].to_numpy(dtype=np.float64)
+        return np.asarray(self._numbers[name][rows])
+
+    def texts(self, name: str, rows: IntArray) -> list[str]:
+        """Texts of a column of the table at the places *rows*."""
+        if name not in self._texts:
+            self._texts[name] = self.table[name].to_numpy(dtype=object)
+        return [str(text) for text in self._texts[name][rows]]
 
     def text(self, name: str, row: int) -> str:
         """Text of a column of the table at one place."""
-        return str(self.table[name].iat[row])
+        return self.texts(name, np.array([row]))[0]
+
+    @cached_property
+    def _numbers(self) -> dict[str, FloatArray]:
+        """Numeric columns that were asked for: every line asks for the same ones."""
+        return {}
+
+    @cached_property
+    def _texts(self) -> dict[str, npt.NDArray[np.object_]]:
+        """Columns of texts that were asked for."""
+        return {}
 
 
 def used_readings(readings: Readings, sensors: pd.DataFrame) -> UsedReadings:
