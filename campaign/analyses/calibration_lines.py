@@ -221,7 +221,7 @@ def run_lines_frame(used: UsedReadings, lines: tuple[BranchLine, ...]) -> pd.Dat
     first = np.unique(used.run, return_index=True)[1]
     codes = np.concatenate([line.run_codes for line in lines])
     counts = np.concatenate([line.run_lines.counts for line in lines])
-    runs = [line.runs for line in lines]
+    runs, outputs = [line.runs for line in lines], [line.full_scale_output for line in lines]
     ends = np.hstack([_ends_of_runs(used.x[line.rows], used.run[line.rows]) for line in lines])
     returns = _zero_returns(used)[codes]
     table = pd.DataFrame({name: used.table[name].to_numpy()[first[codes]] for name in names})
@@ -232,7 +232,7 @@ def run_lines_frame(used: UsedReadings, lines: tuple[BranchLine, ...]) -> pd.Dat
     table["readings"] = counts
     table["x_low"], table["x_high"] = ends
     table["zero_return"] = returns
-    table["zero_return_percent_fso"] = 100.0 * returns / np.repeat([l.full_scale_output for l in lines], runs)
+    table["zero_return_percent_fso"] = 100.0 * returns / np.repeat(outputs, runs)
     return table
 
 

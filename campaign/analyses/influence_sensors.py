@@ -5,14 +5,16 @@ from __future__ import annotations
 import math
 from collections.abc import Hashable
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 import pandas as pd
-from scipy import stats
 
+from campaign.analyses.grouped_rows import Columns, at, columns_of, groups_by
 from campaign.analyses.sensor_figures import principal_lines
+from campaign.methods.calibration_line import t_quantile
 from campaign.methods.influence_model import (
     InfluenceFit,
     SweepSet,
@@ -28,6 +30,7 @@ if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration
 
 FloatArray = npt.NDArray[np.float64]
+IntArray = npt.NDArray[np.int64]
 SensorKey = tuple[str, str, str]
 
 FROM_STAIRCASES = "the sensor's staircases"
@@ -75,22 +78,22 @@ def sensor_fits(sweeps: pd.DataFrame, origin: float) -> dict[SensorKey, Influenc
     fits: dict[SensorKey, InfluenceFit] = {}
     for _, rows in sweeps.groupby(["generation", "influence_unit", "unit"], sort=True):
         keys, sets = [], []
-        for key, own in rows.groupby(SENSOR_KEYS, sort=True):
-            keys.append((str(key[0]), str(key[1]), str(key[2])))
-            sets.append(sweep_set(own, origin))
+        columns = columns_of(rows, SWEEP_SET_COLUMNS)
+        for key, places in groups_by(rows, SENSOR_KEYS):
+            keys.append((key[0], key[1], key[2]))
+            sets.append(sweep_set(at(columns, places), origin))
         fits |= dict(zip(keys, fit_influences(sets), strict=True))
     return fits
 
 
-def sweep_set(rows: pd.DataFrame, origin: float) -> SweepSet:
-    """Return the sweeps of one sensor, x counted from *origin*."""
-    return SweepSet(
-        rows["x"].to_numpy(float) - origin,
-        rows["slope"].to_numpy(float),
-        rows["slope_error"].to_numpy(float),
-        rows["slope_freedom"].to_numpy(float),
-        rows["run"].to_numpy(np.int64),
-    )
+SWEEP_SET_COLUMNS = ("x", "slope", "slope_error", "slope_freedom", "run")
+"""Columns of a table of sweeps that :func:`sweep_set` takes."""
+
+
+def sweep_set(rows: Columns, origin: float) -> SweepSet:
+    """Return the sweeps of one sensor, x counted from *origin*; *rows* holds :data:`SWEEP_SET_COLUMNS`."""
+    x, slope, error, freedom = (rows[name].astype(np.float64) for name in SWEEP_SET_COLUMNS[:-1])
+    return SweepSet(x - origin, slope, error, freedom, rows["run"].astype(np.int64))
 
 
 def signal_slopes(sweeps: pd.DataFrame, calibration: Calibration | None) -> dict[SensorKey, SignalSlope]:
@@ -101,10 +104,10 @@ def signal_slopes(sweeps: pd.DataFrame, calibration: Calibration | None) -> dict
             key = (str(row["generation"]), str(row["module"]), str(row["sensor"]))
             variance, freedom = float(row["var_slope"]), float(row["df"])
             known[key] = SignalSlope(float(row["slope"]), variance, freedom, FROM_STAIRCASES)
-    for names, rows in sweeps.groupby(SENSOR_KEYS, sort=True):
-        who = (str(names[0]), str(names[1]), str(names[2]))
+    for (generation, module, sensor), places in groups_by(sweeps, SENSOR_KEYS):
+        who = generation, module, sensor
         if who not in known or not math.isfinite(known[who].slope):
-            known[who] = _slope_of_levels(rows)
+            known[who] = _slope_of_levels(sweeps.iloc[places])
     return known
 
 
@@ -142,71 +145,91 @@ def coefficient_table(
     in_use
         Value of the influence in use, its unit.
     """
+    known = columns_of(sweeps, _ROW_COLUMNS)
+    of_sensors = groups_by(sweeps, SENSOR_KEYS)
+    named = sweeps.index.to_numpy()
+    signals = columns_of(points, ("number", "influence", "signal"))
+    of_points = _places_of_points(signals["number"], [named[places] for _, places in of_sensors])
     rows = [
         _row(
-            (str(key[0]), str(key[1]), str(key[2])),
-            own,
-            points[points["number"].isin(own.index)],
+            (key[0], key[1], key[2]),
+            at(known, places) | {"number": named[places]},
+            at(signals, own),
             fits,
             slopes,
             origin,
             in_use,
         )
-        for key, own in sweeps.groupby(SENSOR_KEYS, sort=True)
+        for (key, places), own in zip(of_sensors, of_points, strict=True)
     ]
     return pd.DataFrame(rows, columns=list(COEFFICIENT_COLUMNS))
 
 
+_ROW_COLUMNS = (
+    *("position", "unit", "influence_unit", "influence_low", "influence_high", "level", "loop"),
+    *SWEEP_SET_COLUMNS,
+)
+
+
+def _places_of_points(number: IntArray, sensors: list[IntArray]) -> list[IntArray]:
+    """Places of the points of every sensor, whose sweeps' numbers are given."""
+    owner = np.full(max((int(own.max()) for own in (number, *sensors) if len(own)), default=-1) + 1, -1)
+    for code, own in enumerate(sensors):
+        owner[own] = code
+    found = owner[number]
+    order = np.argsort(found, kind="stable")
+    bounds = np.searchsorted(found[order], np.arange(len(sensors) + 1))
+    return [order[first:last] for first, last in pairwise(bounds.tolist())]
+
+
 def _row(
     key: SensorKey,
-    sweeps: pd.DataFrame,
-    points: pd.DataFrame,
+    sweeps: Columns,
+    points: Columns,
     fits: dict[SensorKey, InfluenceFit],
     slopes: dict[SensorKey, SignalSlope],
     origin: float,
     in_use: float,
 ) -> dict[str, object]:
     fit, slope = fits[key], slopes[key]
-    x = sweeps["x"].to_numpy(float)
+    x = sweeps["x"].astype(np.float64)
     known = bool(np.isfinite(x).all())
     low, high = (float(x.min()), float(x.max())) if known else (math.nan, math.nan)
     row: dict[str, object] = dict(zip(SENSOR_KEYS, key, strict=True))
-    row |= {name: sweeps[name].iloc[0] for name in ("position", "unit", "influence_unit")}
+    row |= {name: sweeps[name][0] for name in ("position", "unit", "influence_unit")}
     row |= {"sweeps": fit.sweeps, "runs": fit.runs, "lengths": fit.lengths}
     row |= {"df": fit.degrees_of_freedom, "variance_source": fit.source, "x_low": low, "x_high": high}
+    reached = _is_reached(in_use, sweeps)
     row |= {
-        "influence_low": float(sweeps["influence_low"].min()),
-        "influence_high": float(sweeps["influence_high"].max()),
-        "zero_signal": _zero_signal(sweeps, origin),
+        "influence_low": float(np.nanmin(sweeps["influence_low"])),
+        "influence_high": float(np.nanmax(sweeps["influence_high"])),
+        "zero_signal": _zero_signal(x - origin, sweeps["level"].astype(np.float64)),
         "slope": slope.slope,
         "slope_source": slope.source,
         "in_use": in_use,
-        "label": "; ".join(_labels(fit, low, high, origin, in_use, sweeps)),
+        "label": "; ".join(_labels(fit, low, high, origin, reached)),
     }
     row |= _coefficients(fit)
-    row |= _as_x(fit, slope, low - origin, high - origin, in_use if _is_reached(in_use, sweeps) else math.nan)
+    row |= _as_x(fit, slope, low - origin, high - origin, in_use if reached else math.nan)
     row |= _compensation(sweeps, points, origin)
-    return row | _loop(sweeps["loop"].to_numpy(float), slope.slope)
+    return row | _loop(sweeps["loop"].astype(np.float64), slope.slope)
 
 
-def _is_reached(in_use: float, sweeps: pd.DataFrame) -> bool:
+def _is_reached(in_use: float, sweeps: Columns) -> bool:
     """Whether the value in use lies within the range that was swept, to a tenth."""
-    reach = sweeps[["influence_low", "influence_high"]].abs().to_numpy().max()
+    reach = max(np.abs(sweeps[name]).max() for name in ("influence_low", "influence_high"))
     return bool(abs(in_use) <= 1.1 * reach)
 
 
-def _labels(
-    fit: InfluenceFit, low: float, high: float, origin: float, in_use: float, sweeps: pd.DataFrame
-) -> list[str]:
+def _labels(fit: InfluenceFit, low: float, high: float, origin: float, reached: bool) -> list[str]:
     labels = [] if fit.has_change else [ONE_LENGTH]
     if fit.has_change and low - origin > 0.1 * (high - low):
         labels.append(EXTRAPOLATED)
-    return labels if _is_reached(in_use, sweeps) else [*labels, BEYOND]
+    return labels if reached else [*labels, BEYOND]
 
 
-def _zero_signal(sweeps: pd.DataFrame, origin: float) -> float:
+def _zero_signal(x: FloatArray, level: FloatArray) -> float:
     """Signal without the influence at the origin of x, from the levels; their mean with one length."""
-    x, level = sweeps["x"].to_numpy(float) - origin, sweeps["level"].to_numpy(float)
     if distinct_lengths(x) < 2:
         return float(level.mean())
     return float(np.polynomial.polynomial.polyfit(x, level, 1)[0])
@@ -216,7 +239,7 @@ def _reach(variance: float, freedom: float) -> float:
     """Half-width of the 95 % interval; NaN where it is not known."""
     if not (freedom > 0 and variance >= 0):
         return math.nan
-    return float(stats.t.ppf(0.975, freedom)) * math.sqrt(variance)
+    return t_quantile(0.975, freedom) * math.sqrt(variance)
 
 
 def _coefficients(fit: InfluenceFit) -> dict[str, object]:
@@ -253,13 +276,13 @@ def _as_x(fit: InfluenceFit, slope: SignalSlope, low: float, high: float, in_use
     return found
 
 
-def _compensation(sweeps: pd.DataFrame, points: pd.DataFrame, origin: float) -> dict[str, object]:
+def _compensation(sweeps: Columns, points: Columns, origin: float) -> dict[str, object]:
     """Residual SD about the sweeps' means without, and with what other sweeps give."""
     own = sweep_set(sweeps, origin)
     predicted, by = left_out_slopes(own.x, own.slope, own.run)
-    number = np.searchsorted(sweeps.index.to_numpy(), points["number"].to_numpy())
-    influence, signal = points["influence"].to_numpy(float), points["signal"].to_numpy(float)
-    before = spread_about_sweeps(influence, signal, number, np.zeros(len(sweeps)))
+    number = np.searchsorted(sweeps["number"], points["number"])
+    influence, signal = points["influence"].astype(np.float64), points["signal"].astype(np.float64)
+    before = spread_about_sweeps(influence, signal, number, np.zeros(len(own.x)))
     after = spread_about_sweeps(influence, signal, number, predicted)
     return {"residual_sd_before": before, "residual_sd_after": after, "left_out_by": by}
 

@@ -8,7 +8,7 @@ sensor is corrected by the others of its generation, by its module, or by its ow
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Hashable
+from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
@@ -16,7 +16,8 @@ import numpy.typing as npt
 import pandas as pd
 from scipy import stats
 
-from campaign.analyses.influence_sensors import SensorKey, SignalSlope, sweep_set
+from campaign.analyses.grouped_rows import at, columns_of, groups_by, places_by
+from campaign.analyses.influence_sensors import SWEEP_SET_COLUMNS, SensorKey, SignalSlope, sweep_set
 from campaign.methods.holm import holm_adjusted
 from campaign.methods.identifiability import label_of
 from campaign.methods.influence_model import (
@@ -377,18 +378,20 @@ def _serving(generation: str, rows: pd.DataFrame, points: pd.DataFrame) -> pd.Da
         "sensor": _from_own(rows),
     }
     parts = _points_of(rows, points)
-    made = [_remaining(generation, name, rows, parts, slopes) for name, slopes in predicted.items()]
+    made = [_remaining(generation, name, parts, slopes) for name, slopes in predicted.items()]
     table = pd.DataFrame([row for row in made if row is not None], columns=list(SERVING_COLUMNS))
     without = table.loc[table["correction"] == "none", "sd"]
     return table.assign(factor=table["sd"] / float(without.iloc[0])) if len(without) else table
 
 
 def _from_own(rows: pd.DataFrame) -> FloatArray:
-    predicted = pd.Series(np.nan, index=rows.index)
-    for _, own in rows.groupby(SENSOR_KEYS, sort=False):
-        sets = sweep_set(own, 0.0)
-        predicted[own.index] = left_out_slopes(sets.x, sets.slope, sets.run)[0]
-    return np.asarray(predicted, dtype=float)
+    """Slopes of every sensor's sweeps as its own other sweeps predict them."""
+    predicted = np.full(len(rows), np.nan)
+    columns = columns_of(rows, SWEEP_SET_COLUMNS)
+    for _, places in groups_by(rows, SENSOR_KEYS):
+        sets = sweep_set(at(columns, places), 0.0)
+        predicted[places] = left_out_slopes(sets.x, sets.slope, sets.run)[0]
+    return predicted
 
 
 Codes = dict[str, IntArray]
@@ -400,7 +403,7 @@ def _from_others(rows: pd.DataFrame, chosen: Callable[[Codes, dict[str, int]], B
     codes = {name: pd.factorize(rows[name])[0].astype(np.int64) for name in ("module", "position", "sensor")}
     x, effect, b = (rows[name].to_numpy(float) for name in ("x", "effect", "b"))
     predicted = np.full(len(rows), np.nan)
-    for own in rows.groupby(SENSOR_KEYS, sort=False).indices.values():
+    for _, own in groups_by(rows, SENSOR_KEYS):
         others = chosen(codes, {name: int(code[own[0]]) for name, code in codes.items()})
         if not others.any():
             continue
@@ -411,36 +414,67 @@ def _from_others(rows: pd.DataFrame, chosen: Callable[[Codes, dict[str, int]], B
     return predicted
 
 
-SensorPoints = dict[Hashable, pd.DataFrame]
+@dataclass(frozen=True)
+class _SensorPoints:
+    """The points of one sensor's sweeps.
+
+    Attributes
+    ----------
+    module, b
+        Its module, and the slope that turns its signals into x.
+    places
+        Shape (sweeps,): places of its sweeps among those of its generation.
+    sweep
+        Shape (points,): place among its sweeps of the one that each point is of.
+    influence, signal
+        Shape (points,).
+    """
+
+    module: str
+    b: float
+    places: IntArray
+    sweep: IntArray
+    influence: FloatArray
+    signal: FloatArray
+
+    def left_by(self, slopes: FloatArray) -> float:
+        """Return the SD as x that is left by *slopes*, (sweeps,); sweeps of which it is NaN are left out."""
+        known = np.isfinite(slopes)
+        chosen = known[self.sweep]
+        number = (np.cumsum(known) - 1)[self.sweep[chosen]]
+        left = spread_about_sweeps(self.influence[chosen], self.signal[chosen], number, slopes[known])
+        return left / self.b
 
 
-def _points_of(rows: pd.DataFrame, points: pd.DataFrame) -> SensorPoints:
+def _points_of(rows: pd.DataFrame, points: pd.DataFrame) -> list[_SensorPoints]:
     """The points of every sensor's sweeps, found once for all corrections."""
-    grouped = rows.groupby(SENSOR_KEYS, sort=True)
-    owner = grouped.ngroup()
-    known = points[points["number"].isin(rows.index)]
-    parts = [part for _, part in known.groupby(owner.loc[known["number"]].to_numpy(), sort=True)]
-    return dict(zip(grouped.indices, parts, strict=True))
+    of_sweeps = columns_of(rows, ("module", "b"))
+    number, values = points["number"].to_numpy(), columns_of(points, ("influence", "signal"))
+    place = rows.index.get_indexer(pd.Index(number))
+    sensor = np.append(np.asarray(rows.groupby(SENSOR_KEYS, sort=True).ngroup(), dtype=np.int64), -1)
+    of_points = places_by(sensor[place])
+    found = []
+    for (_, places), own in zip(groups_by(rows, SENSOR_KEYS), of_points, strict=True):
+        signals = at(values, own)
+        found.append(
+            _SensorPoints(
+                str(of_sweeps["module"][places[0]]),
+                float(of_sweeps["b"][places[0]]),
+                places,
+                np.searchsorted(places, place[own]),
+                signals["influence"].astype(np.float64),
+                signals["signal"].astype(np.float64),
+            )
+        )
+    return found
 
 
 def _remaining(
-    generation: str, correction: str, rows: pd.DataFrame, parts: SensorPoints, slopes: FloatArray
+    generation: str, correction: str, parts: list[_SensorPoints], slopes: FloatArray
 ) -> dict[str, object] | None:
     """SD of what is left over all sensors that the correction reaches, with limits by modules."""
-    known = rows.assign(predicted=slopes).dropna(subset=["predicted"])
-    squares = []
-    for key, own in known.groupby(SENSOR_KEYS, sort=True):
-        part = parts[key]
-        if own.index.size < part["number"].nunique():
-            part = part[part["number"].isin(own.index)]
-        number = np.searchsorted(own.index.to_numpy(), part["number"].to_numpy())
-        left = spread_about_sweeps(
-            part["influence"].to_numpy(float),
-            part["signal"].to_numpy(float),
-            number,
-            own["predicted"].to_numpy(float),
-        )
-        squares.append((str(own["module"].iloc[0]), (left / float(own["b"].iloc[0])) ** 2))
+    reached = [(part, slopes[part.places]) for part in parts]
+    squares = [(part.module, part.left_by(own) ** 2) for part, own in reached if np.isfinite(own).any()]
     if not squares:
         return None
     frame = pd.DataFrame(squares, columns=["module", "square"])

@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
+from campaign.analyses.grouped_rows import groups_by, rows_of_all
 from campaign.methods.influence_model import SweepLines, sweep_lines
 from campaign.recordings.recording import ELONGATION, LENGTH, STRAIN, ReferenceQuantity
 from campaign.trials.readings import SENSOR_KEYS
@@ -62,10 +64,10 @@ def gather_points(
         ``influence_unit``, the sweep's whole range and ``number``, which numbers the sweeps from 0; sorted by
         sensor, then trial.
     """
-    parts = [_with_identity(found) for found in features if len(found.points)]
-    if not parts:
+    held = [found for found in features if len(found.points)]
+    if not held:
         return pd.DataFrame(columns=[*IDENTITY, "x", "number"])
-    table = pd.concat(parts, ignore_index=True)
+    table = _with_identity(held)
     keys = [*SENSOR_KEYS, "session", "repetition", "trial", "sweep"]
     table = table.sort_values(keys, kind="stable", ignore_index=True)
     table["x"] = table[COLUMN_OF[reference.name]].astype(float)
@@ -75,23 +77,35 @@ def gather_points(
     return table
 
 
-def _with_identity(found: SweepFeatures) -> pd.DataFrame:
-    who = found.identity
-    sweep = found.points["sweep"]
-    return found.points.assign(
-        influence_low=sweep.map({n: float(curve[0].min()) for n, curve in found.curves.items()}),
-        influence_high=sweep.map({n: float(curve[0].max()) for n, curve in found.curves.items()}),
-        generation=who.generation,
-        module=who.module,
-        sensor=who.sensor,
-        position=who.position,
-        session=who.session,
-        repetition=who.repetition,
-        trial=who.file,
-        started=who.started,
-        unit=found.signal_unit,
-        influence_unit=found.unit,
-    )
+def _with_identity(held: Sequence[SweepFeatures]) -> pd.DataFrame:
+    """The points of all trials with whose they are and the range of their sweeps."""
+    who = [found.identity for found in held]
+    named: dict[str, Sequence[Any]] = {
+        "generation": [own.generation for own in who],
+        "module": [own.module for own in who],
+        "sensor": [own.sensor for own in who],
+        "position": [own.position for own in who],
+        "session": [own.session for own in who],
+        "repetition": [own.repetition for own in who],
+        "trial": [own.file for own in who],
+        "started": [own.started for own in who],
+        "unit": [found.signal_unit for found in held],
+        "influence_unit": [found.unit for found in held],
+    }
+    ends = [_ends_of_sweeps(found) for found in held]
+    table = rows_of_all([found.points for found in held], named)
+    table["influence_low"], table["influence_high"] = np.hstack(ends)
+    return table
+
+
+def _ends_of_sweeps(found: SweepFeatures) -> FloatArray:
+    """Least and largest influence of the sweep that each point is of, shape (2, points)."""
+    sweeps, place = np.unique(found.points["sweep"].to_numpy(), return_inverse=True)
+    curves = [found.curves.get(int(sweep), (_NO_CURVE,))[0] for sweep in sweeps]
+    return np.array([[curve.min() for curve in curves], [curve.max() for curve in curves]])[:, place]
+
+
+_NO_CURVE = np.array([np.nan])
 
 
 def sweep_table(points: pd.DataFrame) -> pd.DataFrame:
@@ -166,8 +180,9 @@ def time_labels(sweeps: pd.DataFrame, influence: str) -> dict[str, str]:
 def _one_order(sweeps: pd.DataFrame) -> bool:
     """Whether all runs with several lengths went through them in one and the same direction."""
     signs: set[float] = set()
-    for _, rows in sweeps.groupby([*SENSOR_KEYS, "run"], sort=False):
-        moves = np.diff(rows["x"].to_numpy(float))
+    x = sweeps["x"].to_numpy(float)
+    for _, places in groups_by(sweeps, [*SENSOR_KEYS, "run"], sort=False):
+        moves = np.diff(x[places])
         if len(moves) == 0 or not np.isfinite(moves).all():
             continue
         signs |= set(np.sign(moves).tolist())

@@ -5,12 +5,13 @@ from __future__ import annotations
 import math
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
+from campaign.analyses.grouped_rows import columns_of_all, rows_of_all
 from campaign.analyses.sensor_figures import principal_lines
 from campaign.recordings.recording import ELONGATION, LENGTH, STRAIN, ReferenceQuantity
 from campaign.trials.cyclic import CyclicFeatures
@@ -116,7 +117,7 @@ def loop_table(features: Sequence[CyclicFeatures], calibration: Calibration | No
     left_out = tuple(own.identity.file for own in features if _conversion(own, reference) is None)
     if not convertible:
         return None
-    rows = pd.concat([_rows_of(own, reference) for own in convertible], ignore_index=True)
+    rows = _rows_of(convertible, reference)
     order = rows.sort_values([*SENSOR_KEYS, "started", "session", "repetition", "trial"], kind="stable").index
     width = np.concatenate([own.width for own in convertible])[order]
     rows = rows.loc[order].reset_index(drop=True)
@@ -133,26 +134,29 @@ def _conversion(own: CyclicFeatures, wanted: ReferenceQuantity) -> tuple[float, 
     return into_reference(own.recorded, wanted, own.identity.rest_length_mm)
 
 
-def _rows_of(own: CyclicFeatures, reference: ReferenceQuantity) -> pd.DataFrame:
-    """The loops of one trial with its identity, lengths in *reference*."""
-    identity = own.identity
-    offset, factor = _conversion(own, reference) or (0.0, 1.0)
-    table = own.cycles[list(_OWN)].assign(
-        rate=own.cycles["rate"] * abs(factor),
-        **{name: offset + factor * own.cycles[name] for name in ("low", "high", "at")},
-    )
-    return table.assign(
-        generation=identity.generation,
-        batch=identity.batch,
-        module=identity.module,
-        sensor=identity.sensor,
-        position=identity.position,
-        session=identity.session,
-        repetition=identity.repetition,
-        trial=identity.file,
-        started=identity.started,
-        unit=own.unit,
-    )
+def _rows_of(features: Sequence[CyclicFeatures], reference: ReferenceQuantity) -> pd.DataFrame:
+    """The loops of all trials with whose they are, lengths in *reference*."""
+    who = [own.identity for own in features]
+    named: dict[str, Sequence[Any]] = {
+        "generation": [identity.generation for identity in who],
+        "batch": [identity.batch for identity in who],
+        "module": [identity.module for identity in who],
+        "sensor": [identity.sensor for identity in who],
+        "position": [identity.position for identity in who],
+        "session": [identity.session for identity in who],
+        "repetition": [identity.repetition for identity in who],
+        "trial": [identity.file for identity in who],
+        "started": [identity.started for identity in who],
+        "unit": [own.unit for own in features],
+    }
+    conversions = [_conversion(own, reference) or (0.0, 1.0) for own in features]
+    offset, factor = np.repeat(conversions, [len(own.cycles) for own in features], axis=0).T
+    recorded = columns_of_all([own.cycles for own in features], ("rate", "low", "high", "at"))
+    table = rows_of_all([own.cycles for own in features], named, _OWN)
+    table["rate"] = recorded["rate"] * np.abs(factor)
+    for name in ("low", "high", "at"):
+        table[name] = offset + factor * recorded[name]
+    return table
 
 
 def rate_levels(rates: FloatArray) -> FloatArray:

@@ -5,13 +5,15 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 import pandas as pd
-from scipy import stats
 
+from campaign.analyses.grouped_rows import Columns, at, columns_of, groups_by, places_by
 from campaign.analyses.loop_table import SENSOR_KEYS, LoopTable
+from campaign.methods.calibration_line import t_quantile
 from campaign.methods.loops import FRACTIONS, MID
 
 FloatArray = npt.NDArray[np.float64]
@@ -54,29 +56,70 @@ def sensor_widths(table: LoopTable) -> tuple[pd.DataFrame, pd.DataFrame]:
     """
     counted = table.rows["counted"].to_numpy(bool)
     rows, width = table.rows[counted], table.width[counted]
-    scatter = {str(g): _scatter(own, width[_places(rows, own)]) for g, own in rows.groupby("generation")}
+    generations = groups_by(rows, ["generation"])
+    scatter = {key[0]: _scatter(rows.iloc[places], width[places]) for key, places in generations}
+    courses = {own.key: own for own in _groups(table.rows, SENSOR_KEYS)}
     sensors: list[dict[str, object]] = []
-    curves: list[pd.DataFrame] = []
-    for key, own in rows.groupby(SENSOR_KEYS, sort=True):
-        found, curve = _one_sensor(own, width[_places(rows, own)], scatter[str(key[0])], table)
-        who = dict(zip(SENSOR_KEYS, key, strict=True))
-        sensors.append({**who, **found, **_conditioning_of(table, who)})
-        curves.append(pd.concat([pd.DataFrame([key] * len(curve), columns=SENSOR_KEYS), curve], axis=1))
+    curves: list[dict[str, FloatArray]] = []
+    groups = _groups(rows, SENSOR_KEYS)
+    for own in groups:
+        found, curve = _one_sensor(own, width[own.places], scatter[own.key[0]], table)
+        who = dict(zip(SENSOR_KEYS, own.key, strict=True))
+        sensors.append({**who, **found, **_conditioning_of(courses[own.key])})
+        curves.append(curve)
     columns = [*SENSOR_KEYS, "fraction", "strain", "width_percent_fso", "low", "high"]
-    frame = pd.DataFrame(sensors)
-    return frame, pd.concat(curves, ignore_index=True)[columns] if curves else pd.DataFrame(columns=columns)
+    if not curves:
+        return pd.DataFrame(sensors), pd.DataFrame(columns=columns)
+    whose = {
+        name: np.repeat([own.key[place] for own in groups], len(FRACTIONS))
+        for place, name in enumerate(SENSOR_KEYS)
+    }
+    joined = {name: np.concatenate([curve[name] for curve in curves]) for name in curves[0]}
+    return pd.DataFrame(sensors), pd.DataFrame({**whose, **joined})[columns]
 
 
-def _places(rows: pd.DataFrame, own: pd.DataFrame) -> IntArray:
-    return np.asarray(rows.index.get_indexer(own.index), dtype=np.int64)
+@dataclass(frozen=True)
+class _Loops:
+    """The loops of one sensor or run: its key, their places in the table, and the table's columns there."""
+
+    key: tuple[str, ...]
+    places: IntArray
+    columns: Columns
+
+    def __getitem__(self, name: str) -> Any:
+        return self.columns[name]
+
+    def where(self, chosen: npt.NDArray[np.bool_]) -> Columns:
+        """The columns of some of its loops."""
+        return {name: values[chosen] for name, values in self.columns.items()}
+
+
+def _groups(rows: pd.DataFrame, keys: list[str], *, sort: bool = True) -> list[_Loops]:
+    columns = columns_of(rows, [name for name in _TAKEN if name in rows])
+    return [_Loops(key, places, at(columns, places)) for key, places in groups_by(rows, keys, sort=sort)]
+
+
+_TAKEN = (
+    *("trial", "session", "repetition", "run", "cycle", "counted", "whole", "settled", "rate"),
+    *("low", "high", "degree", "degree_of_whole_signal", "largest_width", "full_scale_output", "slope"),
+    *("zero_signal", "peak_signal", "signal_range", "unit", "scale", "position"),
+)
+"""Columns of loops that are looked at sensor by sensor or run by run."""
+
+
+def _known_mean(values: FloatArray) -> float:
+    """Mean of what is known; NaN where nothing is."""
+    known = ~np.isnan(values)
+    return float(np.where(known, values, 0.0).sum() / known.sum()) if known.any() else math.nan
 
 
 def _scatter(rows: pd.DataFrame, width: FloatArray) -> Scatter:
     """Between runs where enough of them repeat, else between cycles over the usual number of them."""
-    runs, codes = _means_by(rows, width, _RUN)
-    named = pd.DataFrame(list(runs.index), columns=_RUN)
-    sensors: IntArray = np.asarray(named.groupby(SENSOR_KEYS, sort=False).ngroup(), dtype=np.int64)
-    means = np.stack(list(runs))
+    codes: IntArray = np.asarray(rows.groupby(_RUN, sort=False).ngroup(), dtype=np.int64)
+    runs = places_by(codes)
+    means = np.stack([_mean(width[places]) for places in runs])
+    first = rows.iloc[[places[0] for places in runs]]
+    sensors: IntArray = np.asarray(first.groupby(SENSOR_KEYS, sort=False).ngroup(), dtype=np.int64)
     between, degrees = _pooled(means, sensors)
     if degrees >= FEWEST_DEGREES and between > 0:
         return Scatter(between, degrees, BETWEEN_RUNS)
@@ -85,15 +128,6 @@ def _scatter(rows: pd.DataFrame, width: FloatArray) -> Scatter:
         return Scatter(math.nan, 0.0, UNKNOWN)
     usual = len(codes) / (int(codes.max()) + 1)
     return Scatter(within / usual, degrees, BETWEEN_CYCLES)
-
-
-def _means_by(rows: pd.DataFrame, width: FloatArray, keys: list[str]) -> tuple[pd.Series, IntArray]:
-    """Mean width curve of each group, and the group of every row."""
-    groups = rows.groupby(keys, sort=False)
-    codes: IntArray = np.asarray(groups.ngroup(), dtype=np.int64)
-    names = rows[keys].drop_duplicates().itertuples(index=False, name=None)
-    means = [_mean(width[codes == code]) for code in range(int(codes.max()) + 1)]
-    return pd.Series(means, index=pd.Index(list(names), tupleize_cols=False)), codes
 
 
 def _mean(values: FloatArray) -> FloatArray:
@@ -125,14 +159,14 @@ def _pooled(values: FloatArray, codes: IntArray) -> tuple[float, float]:
 
 
 def _one_sensor(
-    rows: pd.DataFrame, width: FloatArray, scatter: Scatter, table: LoopTable
-) -> tuple[dict[str, object], pd.DataFrame]:
-    runs = _means_by(rows, width, _RUN)[0]
-    curve = _mean(np.stack(list(runs)))
+    rows: _Loops, width: FloatArray, scatter: Scatter, table: LoopTable
+) -> tuple[dict[str, object], dict[str, FloatArray]]:
+    runs = places_by(pd.factorize(rows["trial"])[0].astype(np.int64))
+    curve = _mean(np.stack([_mean(width[places]) for places in runs]))
     error = math.sqrt(scatter.variance / len(runs)) if scatter.degrees_of_freedom > 0 else math.nan
     everywhere, here = _quantiles(scatter.degrees_of_freedom)
-    first = rows.iloc[0]
-    low, high = float(rows["low"].mean()), float(rows["high"].mean())
+    first = {name: values[0] for name, values in rows.columns.items()}
+    low, high = _known_mean(rows["low"]), _known_mean(rows["high"])
     places = low + FRACTIONS * (high - low)
     known = np.isfinite(curve)
     largest = int(np.argmax(np.where(known, np.abs(curve), -1.0)))
@@ -143,16 +177,16 @@ def _one_sensor(
         "width_percent_fso": magnitude,
         "low": limits[0] if math.isfinite(error) else math.nan,
         "high": limits[1],
-        "degree_of_hysteresis": float(rows["degree"].mean()),
+        "degree_of_hysteresis": _known_mean(rows["degree"]),
         "position": first["position"],
         "at_strain": float(places[largest]),
         "width_strain": magnitude * to_strain,
         "mid_width_percent_fso": float(curve[MID]),
         "mid_low": float(curve[MID]) - here * error,
         "mid_high": float(curve[MID]) + here * error,
-        "degree_of_whole_signal": float(rows["degree_of_whole_signal"].mean()),
+        "degree_of_whole_signal": _known_mean(rows["degree_of_whole_signal"]),
         "runs": len(runs),
-        "loops": len(rows),
+        "loops": len(width),
         "rate_per_s": table.rate,
         "full_scale_output": float(first["full_scale_output"]),
         "slope": float(first["slope"]),
@@ -164,7 +198,7 @@ def _one_sensor(
     }
     reach = everywhere * error
     frame = {"fraction": FRACTIONS, "strain": places, "width_percent_fso": curve}
-    return found, pd.DataFrame({**frame, "low": curve - reach, "high": curve + reach})
+    return found, {**frame, "low": curve - reach, "high": curve + reach}
 
 
 def _quantiles(degrees: float) -> tuple[float, float]:
@@ -172,21 +206,22 @@ def _quantiles(degrees: float) -> tuple[float, float]:
     if not degrees > 0:
         return math.nan, math.nan
     each = 0.5 + 0.5 * 0.95 ** (1.0 / len(FRACTIONS))
-    return float(stats.t.ppf(each, degrees)), float(stats.t.ppf(0.975, degrees))
+    return t_quantile(each, degrees), t_quantile(0.975, degrees)
 
 
-def _conditioning_of(table: LoopTable, who: dict[str, object]) -> dict[str, object]:
+def _conditioning_of(own: _Loops) -> dict[str, object]:
     """When the sensor's runs settle, and how much its first loop differs from the settled ones."""
-    rows = table.rows
-    own = rows[np.logical_and.reduce([rows[k] == v for k, v in who.items()])]
-    counted = own[own["counted"]]
-    runs = own[own["trial"].isin(counted["trial"])].groupby("trial")
-    firsts = [_settled_from(run) for _, run in runs]
-    first = own[own["run"] == own["run"].min()]
-    whole, settled = first[first["whole"]], first[first["settled"]]
-    usual = float(settled["signal_range"].mean()) if len(settled) else math.nan
+    trial, counted = own["trial"], own["counted"].astype(bool)
+    settled, first = own["settled"].astype(bool), own["run"] == own["run"].min()
+    firsts = [
+        _settled_from(own["cycle"][trial == name], settled[trial == name])
+        for name in dict.fromkeys(trial[counted])
+    ]
+    whole = own.where(first & own["whole"].astype(bool))
+    ranges = own["signal_range"][first & settled]
+    usual = _known_mean(ranges) if len(ranges) else math.nan
     softening = 100.0 * (_first(whole["signal_range"]) - usual) / usual
-    width = 100.0 * whole["largest_width"].abs() / whole["full_scale_output"]
+    width = 100.0 * np.abs(whole["largest_width"]) / whole["full_scale_output"]
     return {
         "settled_from_cycle": max(firsts) if all(map(math.isfinite, firsts)) else math.nan,
         "softening_percent": softening,
@@ -194,30 +229,31 @@ def _conditioning_of(table: LoopTable, who: dict[str, object]) -> dict[str, obje
     }
 
 
-def _settled_from(rows: pd.DataFrame) -> float:
-    settled = rows.loc[rows["settled"], "cycle"]
-    return float(settled.iloc[0]) if len(settled) else math.nan
+def _settled_from(cycle: IntArray, settled: npt.NDArray[np.bool_]) -> float:
+    return _first(cycle[settled])
 
 
 def runs_table(table: LoopTable) -> Iterator[dict[str, object]]:
     """Yield one row a cyclic trial: who, run, rate, cycles, settled from, first and settled figures."""
-    for key, own in table.rows.groupby(_RUN, sort=False):
-        whole, settled = own[own["whole"]], own[own["settled"]]
+    for own in _groups(table.rows, _RUN, sort=False):
+        chosen = own["settled"].astype(bool)
+        whole, settled = own.where(own["whole"].astype(bool)), own.where(chosen)
+        rates = own["rate"][~np.isnan(own["rate"])]
         yield {
-            **dict(zip(_RUN, key, strict=True)),
-            "session": own["session"].iloc[0],
-            "repetition": own["repetition"].iloc[0],
-            "run": int(own["run"].iloc[0]),
-            "rate_per_s": float(own["rate"].median()),
-            "cycles": len(own),
-            "settled_from_cycle": _settled_from(own),
+            **dict(zip(_RUN, own.key, strict=True)),
+            "session": own["session"][0],
+            "repetition": own["repetition"][0],
+            "run": int(own["run"][0]),
+            "rate_per_s": float(np.median(rates)) if len(rates) else math.nan,
+            "cycles": len(own.places),
+            "settled_from_cycle": _settled_from(own["cycle"], chosen),
             "first_zero_signal": _first(whole["zero_signal"]),
-            "settled_zero_signal": float(settled["zero_signal"].mean()) if len(settled) else math.nan,
+            "settled_zero_signal": _known_mean(settled["zero_signal"]),
             "first_peak_signal": _first(whole["peak_signal"]),
-            "settled_peak_signal": float(settled["peak_signal"].mean()) if len(settled) else math.nan,
-            "unit": own["unit"].iloc[0],
+            "settled_peak_signal": _known_mean(settled["peak_signal"]),
+            "unit": own["unit"][0],
         }
 
 
-def _first(values: pd.Series) -> float:
-    return float(values.iloc[0]) if len(values) else math.nan
+def _first(values: npt.NDArray[Any]) -> float:
+    return float(values[0]) if len(values) else math.nan
