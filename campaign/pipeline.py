@@ -310,6 +310,7 @@ def analyse(
             *layout_findings(layout, limits),
         ],
         reference=readings.reference,
+        scope=scope if calibration is not None else None,
     )
     analyses = (calibration, variance, residuals, effort, *others, influences, layout, joined, generations)
     notices = [notice for analysis in analyses if analysis is not None for notice in analysis.notices]

@@ -14,7 +14,7 @@ from typing import TYPE_CHECKING, Literal
 
 import numpy as np
 import pandas as pd
-from scipy import stats
+from scipy import special
 
 from campaign.analyses.limits import Limits
 from campaign.analyses.scope import Scope, describe_scope
@@ -23,7 +23,6 @@ from campaign.analyses.sensor_figures import (
     principal_lines,
     principal_records,
     principal_run_lines,
-    sensor_figures,
 )
 from campaign.methods.holm import holm_adjusted
 from campaign.recordings.description import Description
@@ -311,6 +310,7 @@ def collect_findings(
     put_back: Calibration | None = None,
     further: Iterable[Finding] = (),
     reference: ReferenceQuantity | None = None,
+    scope: Scope | None = None,
 ) -> Findings:
     """Choose what page 0 says.
 
@@ -328,13 +328,15 @@ def collect_findings(
         Findings of the other kinds of trial, most important first.
     reference
         What lengths are given in; that of the calibration unless given.
+    scope
+        What was measured, where that is known already.
 
     Returns
     -------
     Findings
         Only what the analyses support: a campaign without staircases has a scope and no findings.
     """
-    scope = describe_scope(description, intake, calibration, reference)
+    scope = scope or describe_scope(description, intake, calibration, reference)
     findings: list[Finding] = []
     if effort is not None:
         findings += _effort_findings(effort, limits)
@@ -343,7 +345,7 @@ def collect_findings(
     if variance is not None:
         findings += _spread_findings(variance)
     if calibration is not None:
-        findings += _line_findings(calibration, description, limits, put_back)
+        findings += _line_findings(calibration, limits, put_back)
     findings += further
     findings += _model_findings(effort, residuals)
     findings.sort(key=lambda finding: _FIRST.get(finding.kind, len(_FIRST)))
@@ -395,7 +397,9 @@ def _sum_up_one(generation: str, rows: pd.DataFrame, limit: float, put_back: flo
     mean = float(modules.mean())
     reach = math.nan
     if modules.size > 1:
-        reach = float(stats.t.ppf(0.975, modules.size - 1) * modules.std(ddof=1) / math.sqrt(modules.size))
+        reach = float(
+            special.stdtrit(modules.size - 1, 0.975) * modules.std(ddof=1) / math.sqrt(modules.size)
+        )
     worst = rows.iloc[int(rows["value"].to_numpy(float).argmax())]
     threshold = limit if math.isfinite(limit) else mean
     return SensorFigure(
@@ -533,11 +537,9 @@ def _limited(rows: pd.DataFrame) -> tuple[SpreadSource, ...]:
     return _as_sources(rows[(rows["level"] != "total") & rows["strain_sd"].isna() & rows["high"].notna()])
 
 
-def _line_findings(
-    calibration: Calibration, description: Description, limits: Limits, put_back: Calibration | None
-) -> list[Finding]:
+def _line_findings(calibration: Calibration, limits: Limits, put_back: Calibration | None) -> list[Finding]:
     findings = []
-    own = sensor_figures(calibration, description)
+    own = limits.figures
     for kind, column in (
         ("linearity", "linearity_least_squares_percent_fso"),
         ("repeatability", "repeatability_percent_fso"),

@@ -14,7 +14,6 @@ from itertools import combinations
 
 import numpy as np
 import pandas as pd
-from statsmodels.stats.multitest import multipletests
 
 from campaign.analyses.generation_figures import (
     FIGURES,
@@ -36,6 +35,7 @@ from campaign.analyses.generation_pairs import (
     margin_of,
     verdict_of,
 )
+from campaign.methods.holm import holm_adjusted
 from campaign.notices import Notice
 from campaign.recordings.description import Description
 
@@ -330,7 +330,7 @@ def holm(p_values: Sequence[float]) -> list[float]:
     known = np.isfinite(values)
     adjusted = np.full(values.shape, math.nan)
     if known.any():
-        adjusted[known] = multipletests(values[known], method="holm")[1]
+        adjusted[known] = holm_adjusted(values[known])
     return [float(p) for p in adjusted]
 
 

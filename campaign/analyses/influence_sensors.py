@@ -11,10 +11,10 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import numpy.typing as npt
 import pandas as pd
+from scipy import special
 
 from campaign.analyses.grouped_rows import Columns, at, columns_of, groups_by
 from campaign.analyses.sensor_figures import principal_lines
-from campaign.methods.calibration_line import t_quantile
 from campaign.methods.influence_model import (
     InfluenceFit,
     SweepSet,
@@ -239,7 +239,7 @@ def _reach(variance: float, freedom: float) -> float:
     """Half-width of the 95 % interval; NaN where it is not known."""
     if not (freedom > 0 and variance >= 0):
         return math.nan
-    return t_quantile(0.975, freedom) * math.sqrt(variance)
+    return float(special.stdtrit(freedom, 0.975)) * math.sqrt(variance)
 
 
 def _coefficients(fit: InfluenceFit) -> dict[str, object]:

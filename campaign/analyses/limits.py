@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pandas as pd
-from scipy import stats
+from scipy import special
 
 from campaign.analyses.sensor_figures import FIGURE_COLUMNS, sensor_figures
 from campaign.methods.conformity import (
@@ -244,7 +244,7 @@ def _judge_new(value: float, rows: pd.DataFrame) -> dict[str, object]:
     estimate = math.exp(centre)
     if prediction.groups == 1 or spread == 0:
         return _verdict(value, estimate, math.nan, math.nan, freedom, math.nan, ONE_MODULE)
-    reach = float(stats.t.ppf(0.975, freedom)) * spread
+    reach = float(special.stdtrit(freedom, 0.975)) * spread
     probability = conformity_of_estimate(centre, spread, freedom, math.log(value))
     low, high = math.exp(centre - reach), math.exp(centre + reach)
     return _verdict(value, estimate, low, high, freedom, probability, "")

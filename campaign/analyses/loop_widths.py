@@ -10,10 +10,10 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 import pandas as pd
+from scipy import special
 
 from campaign.analyses.grouped_rows import Columns, at, columns_of, groups_by, places_by
 from campaign.analyses.loop_table import SENSOR_KEYS, LoopTable
-from campaign.methods.calibration_line import t_quantile
 from campaign.methods.loops import FRACTIONS, MID
 
 FloatArray = npt.NDArray[np.float64]
@@ -206,7 +206,7 @@ def _quantiles(degrees: float) -> tuple[float, float]:
     if not degrees > 0:
         return math.nan, math.nan
     each = 0.5 + 0.5 * 0.95 ** (1.0 / len(FRACTIONS))
-    return t_quantile(each, degrees), t_quantile(0.975, degrees)
+    return float(special.stdtrit(degrees, each)), float(special.stdtrit(degrees, 0.975))
 
 
 def _conditioning_of(own: _Loops) -> dict[str, object]:

@@ -132,7 +132,7 @@ def describe_scope(
         generations=int(who["generation"].nunique()),
         modules=len(who.drop_duplicates(["generation", "module"])),
         sensors=len(who.drop_duplicates(["generation", "module", "sensor"])),
-        batches=len({b for b in who["batch"].astype(str) if b}),
+        batches=len({b for b in who["batch"].astype(str).unique() if b}),
         mountings=_counts(sessions, ["generation", "module"], "session"),
         runs=_run_counts(rows),
         first_day=description.first_day or (days[0] if days else ""),
@@ -193,7 +193,8 @@ def _run_counts(rows: pd.DataFrame) -> Span | None:
 
 def _set_aside(intake: Intake, used: pd.DataFrame) -> tuple[Exclusion, ...]:
     """Sensors that have recordings, no row among *used*, and no fate before testing."""
-    working = set(zip(used["module"], used["sensor"], strict=True)) | _dead_before_testing(intake)
+    present = used[["module", "sensor"]].drop_duplicates()
+    working = set(zip(present["module"], present["sensor"], strict=True)) | _dead_before_testing(intake)
     recorded = intake.trials.loc[intake.trials["sensor"].astype(str) != "", ["module", "sensor"]]
     pairs = sorted(set(zip(recorded["module"].astype(str), recorded["sensor"].astype(str), strict=True)))
     return tuple(Exclusion(m, s, _reason(intake, m, s)) for m, s in pairs if (m, s) not in working)

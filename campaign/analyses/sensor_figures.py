@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import pandas as pd
-from scipy import stats
+from scipy import special
 
 from campaign.methods.conformity import spread_interval
 from campaign.recordings.description import Description
@@ -96,7 +96,7 @@ def bend_figures(calibration: Calibration) -> pd.DataFrame:
     half_width = (lines["quadratic_high"] - lines["quadratic_low"]) / 2
     return lines[_SENSOR].assign(
         estimate=lines["quadratic"] * scale,
-        standard_uncertainty=half_width / stats.norm.ppf(0.975) * scale,
+        standard_uncertainty=half_width / special.ndtri(0.975) * scale,
         degrees_of_freedom=math.inf,
         kind="estimate",
     )
@@ -115,7 +115,7 @@ def hysteresis_figures(calibration: Calibration) -> pd.DataFrame:
     scale = (rows["percent_fso"] / rows["difference"]).abs()
     return rows[_SENSOR].assign(
         estimate=rows["percent_fso"].abs(),
-        standard_uncertainty=(rows["high"] - rows["low"]) / 2 / stats.norm.ppf(0.975) * scale,
+        standard_uncertainty=(rows["high"] - rows["low"]) / 2 / special.ndtri(0.975) * scale,
         degrees_of_freedom=math.inf,
         kind="estimate",
     )
@@ -237,10 +237,7 @@ def _interval(figure: dict[Hashable, Any]) -> tuple[float, float]:
     estimate, freedom = float(figure["estimate"]), float(figure["degrees_of_freedom"])
     if figure["kind"] == "spread":
         return spread_interval(estimate, freedom)
-    reach = (
-        float(stats.t.ppf(0.975, freedom)) * float(figure["standard_uncertainty"])
-        if freedom > 0
-        else math.nan
-    )
+    quantile = float(special.stdtrit(freedom, 0.975)) if freedom > 0 else math.nan
+    reach = quantile * float(figure["standard_uncertainty"])
     low = estimate - reach
     return (low if figure["figure"] == "bend" or math.isnan(low) else max(low, 0.0)), estimate + reach

@@ -11,7 +11,7 @@ from typing import Literal
 
 import numpy as np
 import numpy.typing as npt
-from scipy import stats
+from scipy import special
 
 FloatArray = npt.NDArray[np.float64]
 Verdict = Literal["met", "not met", "not decided"]
@@ -55,7 +55,7 @@ def conformity_of_estimate(
     """
     if not (math.isfinite(estimate) and standard_uncertainty > 0 and degrees_of_freedom > 0):
         return math.nan
-    return float(stats.t.cdf((limit - estimate) / standard_uncertainty, degrees_of_freedom))
+    return float(special.stdtr(degrees_of_freedom, (limit - estimate) / standard_uncertainty))
 
 
 def conformity_of_spread(spread: float, degrees_of_freedom: float, limit: float) -> float:
@@ -68,7 +68,7 @@ def conformity_of_spread(spread: float, degrees_of_freedom: float, limit: float)
     """
     if not (math.isfinite(spread) and spread >= 0 and degrees_of_freedom > 0 and limit > 0):
         return math.nan
-    return float(stats.chi2.sf(degrees_of_freedom * (spread / limit) ** 2, degrees_of_freedom))
+    return float(special.chdtrc(degrees_of_freedom, degrees_of_freedom * (spread / limit) ** 2))
 
 
 def spread_interval(spread: float, degrees_of_freedom: float, level: float = 0.95) -> tuple[float, float]:
@@ -78,7 +78,7 @@ def spread_interval(spread: float, degrees_of_freedom: float, level: float = 0.9
     """
     if not (math.isfinite(spread) and degrees_of_freedom > 0):
         return (math.nan, math.nan)
-    tails = stats.chi2.ppf([(1 + level) / 2, (1 - level) / 2], degrees_of_freedom)
+    tails = 2.0 * special.gammaincinv(degrees_of_freedom / 2.0, [(1 + level) / 2, (1 - level) / 2])
     low, high = spread * np.sqrt(degrees_of_freedom / tails)
     return float(low), float(high)
 

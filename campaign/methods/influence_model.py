@@ -14,7 +14,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
-from scipy import stats
+from scipy import special
 
 from campaign.methods.autocorrelation import stretch_means
 
@@ -208,7 +208,7 @@ def _drifts(
     found = stretch_means(residual, rest, counts)
     with np.errstate(divide="ignore", invalid="ignore"):
         ratio = np.abs(found.slopes / found.slope_standard_errors)
-    p = 2.0 * stats.t.sf(ratio, np.maximum(found.slope_degrees_of_freedom - 1.0, 1.0))
+    p = 2.0 * special.stdtr(np.maximum(found.slope_degrees_of_freedom - 1.0, 1.0), -ratio)
     return np.where(told, found.slopes, np.nan), np.where(told, p, np.nan), correlation
 
 
@@ -348,7 +348,7 @@ def _is_far(own: _Scatter, others: Sequence[_Scatter], rest: int, sensors: int) 
     pooled = sum(s.freedom * s.size for s in others) / rest
     if pooled <= 0:
         return own.size > 0
-    return bool(stats.f.sf(own.size / pooled, own.freedom, rest) < FAR_RISK / max(sensors, 1))
+    return bool(special.fdtrc(own.freedom, rest, own.size / pooled) < FAR_RISK / max(sensors, 1))
 
 
 def _within(sensor: SweepSet, columns: int) -> FloatArray:

@@ -9,7 +9,7 @@ decades about the start comes first, because a start far from the minimum may se
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from itertools import combinations_with_replacement, product
 
 import numpy as np
@@ -22,6 +22,8 @@ BoolArray = npt.NDArray[np.bool_]
 KEPT_STARTS = 2
 SEARCH_TOLERANCE = 1e-13
 RANK_TOLERANCE = 1e-12
+DEPENDENT = 1e-9
+"""Columns of unit length whose part of their own is shorter than this are solved for one by one."""
 
 
 @dataclass(frozen=True)
@@ -175,13 +177,23 @@ class _Problem:
     x: FloatArray
     y: FloatArray
     whiten: Whitening
+    _met: dict[bytes, tuple[FloatArray, FloatArray]] = field(default_factory=dict)
 
     def columns(self, logarithms: FloatArray) -> FloatArray:
         return self.whiten(self.model.basis(self.x, np.exp(logarithms)))
 
+    def projected(self, logarithms: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Columns and coefficients; kept for the last point, where the Jacobian is asked for next."""
+        key = logarithms.tobytes()
+        if key not in self._met:
+            basis = self.columns(logarithms)
+            self._met.clear()
+            self._met[key] = basis, solved(basis, self.y)
+        return self._met[key]
+
     def residual(self, logarithms: FloatArray) -> FloatArray:
-        basis = self.columns(logarithms)
-        return np.asarray(self.y - basis @ solved(basis, self.y))
+        basis, coefficients = self.projected(logarithms)
+        return np.asarray(self.y - basis @ coefficients)
 
     def slopes(self, logarithms: FloatArray, coefficients: FloatArray) -> FloatArray:
         """∂(curve)/∂ ln θ at kept coefficients, shape (n, q)."""
@@ -190,8 +202,8 @@ class _Problem:
         return self.whiten(np.ascontiguousarray(changes.T)) * theta
 
     def jacobian(self, logarithms: FloatArray) -> FloatArray:
-        basis = self.columns(logarithms)
-        slopes = self.slopes(logarithms, solved(basis, self.y))
+        basis, coefficients = self.projected(logarithms)
+        slopes = self.slopes(logarithms, coefficients)
         return -(slopes - basis @ solved(basis, slopes))
 
 
@@ -206,9 +218,27 @@ def solved(basis: FloatArray, y: FloatArray) -> FloatArray:
 def _scanned(problem: _Problem, scan: Sequence[FloatArray]) -> tuple[list[FloatArray], int]:
     """The best combinations of the grids, as ln θ, and how many were tried."""
     tried = [np.log(combination) for combination in _combinations(problem.model, scan)]
-    costs = np.array([float(np.sum(problem.residual(point) ** 2)) for point in tried])
-    order = np.argsort(costs, kind="stable")[:KEPT_STARTS]
+    order = np.argsort(_costs(problem, tried), kind="stable")[:KEPT_STARTS]
     return [tried[i] for i in order], len(tried)
+
+
+def _costs(problem: _Problem, points: Sequence[FloatArray]) -> FloatArray:
+    """Residual sums of squares at many points at once, as far as their columns are independent.
+
+    They only choose where to start, so the orthogonal projection does instead of the coefficients.
+    """
+    plain = [problem.model.basis(problem.x, np.exp(point)) for point in points]
+    whitened = problem.whiten(np.hstack(plain)).reshape(len(problem.y), len(points), -1)
+    columns = whitened.transpose(1, 0, 2)
+    length = np.sqrt(np.einsum("pnk,pnk->pk", columns, columns))
+    scaled = columns / np.where(length > 0, length, 1.0)[:, None, :]
+    orthogonal, triangular = np.linalg.qr(scaled)
+    along = orthogonal.transpose(0, 2, 1) @ problem.y
+    rest = problem.y - (orthogonal @ along[:, :, None])[:, :, 0]
+    costs = np.einsum("pn,pn->p", rest, rest)
+    for place in np.flatnonzero(np.abs(np.diagonal(triangular, axis1=1, axis2=2)).min(axis=1) < DEPENDENT):
+        costs[place] = float(np.sum(problem.residual(points[place]) ** 2))
+    return np.asarray(costs)
 
 
 def _combinations(model: SeparableModel, scan: Sequence[FloatArray]) -> list[FloatArray]:
@@ -240,8 +270,7 @@ def _searched(
 def _completed(
     problem: _Problem, logarithms: FloatArray, on_bound: BoolArray, evaluations: int, converged: bool
 ) -> SeparableFit:
-    basis = problem.columns(logarithms)
-    coefficients = solved(basis, problem.y)
+    basis, coefficients = problem.projected(logarithms)
     residuals = np.asarray(problem.y - basis @ coefficients)
     shape = np.exp(logarithms)
     squares = float(residuals @ residuals)

@@ -12,7 +12,7 @@ from dataclasses import dataclass
 from typing import Literal
 
 import numpy as np
-from scipy import stats
+from scipy import special
 
 from campaign.methods.monte_carlo import OutputDistribution, distribution_of
 
@@ -119,7 +119,7 @@ def welch_satterthwaite(contributions: Sequence[float] | np.ndarray, degrees_of_
 
 def coverage_factor(degrees_of_freedom: float, level: float = 0.95) -> float:
     """Return the two-sided quantile of Student's t, the normal one for infinite degrees of freedom."""
-    return float(stats.t.ppf((1.0 + level) / 2.0, degrees_of_freedom))
+    return float(special.stdtrit(degrees_of_freedom, (1.0 + level) / 2.0))
 
 
 def degrees_of_relative_uncertainty(relative: float) -> float:
