@@ -159,7 +159,7 @@ def _parser() -> argparse.ArgumentParser:
 
 
 def _report(options: argparse.Namespace) -> int:
-    from campaign.pipeline import brief, report
+    from campaign.kept_report import keeper_of, write_kept
     from campaign.recordings.description import DESCRIPTION_FILE
     from campaign.workers.workshop import open_workshop
 
@@ -174,8 +174,16 @@ def _report(options: argparse.Namespace) -> int:
         _progress_bar() as progress,
     ):
         if options.brief is not None:
+            from campaign.pipeline import brief
+
             return brief(options.folder, options.brief, progress, workshop)
-        return report(options.folder, options.into, options.fail_on_set_aside, progress, workshop)
+        keeper = keeper_of(options.folder, options.into, workshop)
+        status = write_kept(keeper, options.fail_on_set_aside)
+        if status is not None:
+            return status
+        from campaign.pipeline import report
+
+        return report(options.folder, options.into, options.fail_on_set_aside, progress, workshop, keeper)
 
 
 def _figures(options: argparse.Namespace) -> int:

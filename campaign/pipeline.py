@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import sys
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -38,12 +37,13 @@ from campaign.analyses.variance import analyse_variance
 from campaign.campaign_reading import CampaignRead, calibrate, read_campaign, silent
 from campaign.earlier_campaigns import NOT_JOINED, places_of_earlier, read_earlier
 from campaign.keeping.kept_site import MadeSite, SiteKeeper
+from campaign.kept_report import DONE, beside, keeper_of, write_kept, write_made
 from campaign.notices import Notice, sort_notices
 from campaign.pages.brief import brief_bytes, check_brief_place, write_brief
 from campaign.pages.notes import Notes, make_notes, read_note_files
 from campaign.pages.output import check_ours, write_folder
 from campaign.pages.publication import chosen_pages, publication_files
-from campaign.pages.render import pages_as_marked, templates_folder
+from campaign.pages.render import pages_as_marked
 from campaign.pages.site import build_site, site_frame, site_pages
 from campaign.provenance.manifest import with_manifests
 from campaign.recordings.inspection import ON_SITE, inspection_lines, print_lines
@@ -56,8 +56,6 @@ from campaign.trials.layout import LayoutFeatures
 from campaign.trials.sweeps import SweepFeatures
 from campaign.workers.workshop import Workshop
 
-DONE, SET_ASIDE = 0, 1
-
 
 def report(
     folder: Path,
@@ -65,8 +63,11 @@ def report(
     fail_on_set_aside: bool,
     progress: Progress | None = None,
     workshop: Workshop | None = None,
+    keeper: SiteKeeper | None = None,
 ) -> int:
     """Read the campaign in *folder*, analyse it, and write its site whole or not at all.
+
+    A site of the very same content is written as an earlier run made it.
 
     Parameters
     ----------
@@ -80,6 +81,9 @@ def report(
         Told what is being done and how far it is.
     workshop
         Who works, and what earlier runs left; this process alone, and nothing, where ``None``.
+    keeper
+        Who keeps the site, where it was seen already that none is kept of this content
+        (:func:`campaign.kept_report.write_kept`).
 
     Returns
     -------
@@ -91,20 +95,17 @@ def report(
     CampaignStops
         Where the campaign cannot be read or the output folder is not ours; nothing is written then.
     """
-    site = into if into is not None else beside(folder)
-    check_ours(site)
     workshop = workshop or Workshop()
-    keeper = SiteKeeper(workshop.store, folder, site, templates_folder())
-    made = keeper.find()
-    if made is None:
-        results, files = make_site(folder, site, progress, workshop)
-        said = print_lines(_what_was_read(results.intake, results.notices))
-        made = MadeSite(files, said, _anything_set_aside(results))
-        keeper.keep(made, results.intake.file_hashes, places_of_earlier(folder, results.description))
-    write_folder(made.files, site)
-    sys.stdout.write(made.said)
-    print(f"\n{len(made.files)} files written; open {site / 'index.html'}")
-    return SET_ASIDE if fail_on_set_aside and made.set_aside else DONE
+    if keeper is None:
+        keeper = keeper_of(folder, into, workshop)
+        status = write_kept(keeper, fail_on_set_aside)
+        if status is not None:
+            return status
+    results, files = make_site(folder, keeper.site, progress, workshop)
+    said = print_lines(_what_was_read(results.intake, results.notices))
+    made = MadeSite(files, said, _anything_set_aside(results))
+    keeper.keep(made, results.intake.file_hashes, places_of_earlier(folder, results.description))
+    return write_made(made, keeper.site, fail_on_set_aside)
 
 
 def _anything_set_aside(results: CampaignResults) -> bool:
@@ -208,12 +209,6 @@ def publish(
 
 def _what_was_read(intake: Intake, notices: tuple[Notice, ...]) -> list[str]:
     return inspection_lines(replace(intake, notices=notices), where=ON_SITE)
-
-
-def beside(folder: Path, word: str = "report") -> Path:
-    """Return where a report of *folder* is written unless said otherwise: FOLDER_report beside it."""
-    whole = folder.resolve()
-    return whole.with_name(f"{whole.name}_{word}")
 
 
 def analyse(

@@ -28,6 +28,7 @@ LADDER = (
     "earlier_campaigns",
     "campaign_reading",
     "rehearsal",
+    "kept_report",
     "provenance",
     "pages",
     "analyses",

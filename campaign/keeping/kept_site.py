@@ -81,6 +81,7 @@ class SiteKeeper:
     """
 
     def __init__(self, store: Store, folder: Path, site: Path, templates: Path) -> None:
+        self.site = site
         self._store = store
         self._folder = folder
         self._apart = tuple(p for p in _beside(site.resolve()) if p.is_relative_to(folder.resolve()))

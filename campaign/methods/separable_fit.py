@@ -236,7 +236,8 @@ def _costs(problem: _Problem, points: Sequence[FloatArray]) -> FloatArray:
     along = orthogonal.transpose(0, 2, 1) @ problem.y
     rest = problem.y - (orthogonal @ along[:, :, None])[:, :, 0]
     costs = np.einsum("pn,pn->p", rest, rest)
-    for place in np.flatnonzero(np.abs(np.diagonal(triangular, axis1=1, axis2=2)).min(axis=1) < DEPENDENT):
+    shortest = np.abs(np.diagonal(triangular, axis1=1, axis2=2)).min(axis=1)
+    for place in np.flatnonzero(shortest < DEPENDENT).tolist():
         costs[place] = float(np.sum(problem.residual(points[place]) ** 2))
     return np.asarray(costs)
 

@@ -25,10 +25,10 @@ from campaign.pages.render import (
     environment,
     pages_as_marked,
     placed_table,
-    templates_folder,
     without_indents,
 )
 from campaign.pages.static_figure import static_svg
+from campaign.pages.templates import templates_folder
 
 MARK = "A brief written by campaign report; writing it again replaces this file as a whole."
 """Stands near the top of every brief: a file without it is somebody's and is never overwritten."""

@@ -25,8 +25,8 @@ from campaign.pages.budget import conditions_in_words
 from campaign.pages.drift_figures import time_words
 from campaign.pages.formulas import rendered_formulas
 from campaign.pages.page import Page
-from campaign.pages.render import templates_folder
 from campaign.pages.tables import Column, Table
+from campaign.pages.templates import templates_folder
 
 PACKAGES = ("numpy", "scipy", "pandas", "statsmodels", "plotly", "jinja2", "latex2mathml")
 """Packages whose versions a reader needs in order to compute the same again."""

@@ -37,6 +37,7 @@ from campaign.pages.tables import (
     shown_cells,
     shown_marks,
 )
+from campaign.pages.templates import templates_folder
 from campaign.recordings.recording import STRAIN, ReferenceQuantity
 from campaign.workers.crew import Crew, ThisProcess
 from campaign.workers.sharing import Work, share_out
@@ -69,13 +70,6 @@ class PlacedTable:
     rows: list[tuple[tuple[str, str], list[Cell]]]
     further: list[tuple[tuple[str, str], list[Cell]]]
     csv: str
-
-
-def templates_folder() -> Path:
-    """Return where the templates are: inside the package if installed with it, else in the checkout."""
-    package = Path(__file__).resolve().parents[1]
-    inside = package / "site_templates"
-    return inside if inside.is_dir() else package.parent / "site_templates"
 
 
 def environment(further: Sequence[Path] = ()) -> Environment:

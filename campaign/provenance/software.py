@@ -23,7 +23,7 @@ from pathlib import Path
 
 from campaign import __version__
 from campaign.archive import archive_bytes
-from campaign.pages.render import templates_folder
+from campaign.pages.templates import templates_folder
 
 PACKAGE = Path(__file__).resolve().parents[1]
 DISTRIBUTION = "campaign-report"

@@ -20,8 +20,9 @@ from campaign.pages.method import (
     versions,
 )
 from campaign.pages.page import SiteFrame
-from campaign.pages.render import render_site, templates_folder
+from campaign.pages.render import render_site
 from campaign.pages.tables import Column, Table, shown_cells
+from campaign.pages.templates import templates_folder
 from campaign.pipeline import analyse, read_campaign
 from campaign.recordings.recording import STRAIN
 
