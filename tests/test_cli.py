@@ -465,3 +465,20 @@ def test_a_cache_that_is_no_cache_is_thrown_away_with_a_line_and_changes_nothing
         {p.relative_to(site): p.read_bytes() for p in site.rglob("*") if p.is_file()} for site in sites
     )
     assert first == second == third
+
+
+def test_a_report_of_which_nothing_changed_is_written_without_loading_what_makes_one(
+    folder: Path, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setenv("CAMPAIGN_CACHE", str(tmp_path / "cache"))
+    site = tmp_path / "site"
+    words = ["report", str(folder), "--into", str(site), "--workers", "1"]
+    told = "import sys; from campaign.cli import main; status = main(sys.argv[1:]); "
+    told += "print('campaign.pipeline' in sys.modules, 'scipy' in sys.modules); sys.exit(status)"
+    runs = [
+        subprocess.run([sys.executable, "-c", told, *words], capture_output=True, text=True, check=True)
+        for _ in range(2)
+    ]
+    said = [run.stdout.splitlines() for run in runs]
+    assert [lines[-1] for lines in said] == ["True True", "False False"]
+    assert said[0][:-1] == said[1][:-1]
