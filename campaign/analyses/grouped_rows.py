@@ -13,6 +13,8 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
+from campaign.trials.readings import one_a_table
+
 IntArray = npt.NDArray[np.int64]
 Columns = dict[str, npt.NDArray[Any]]
 """Columns of a table, or of some of its rows, by name."""
@@ -79,5 +81,5 @@ def rows_of_all(
     """
     counts = [len(table) for table in tables]
     columns = columns_of_all(tables, list(tables[0].columns if names is None else names))
-    columns |= {name: np.repeat(np.array(values), counts) for name, values in shared.items()}
+    columns |= {name: np.repeat(one_a_table(values), counts) for name, values in shared.items()}
     return pd.DataFrame(columns)

@@ -199,8 +199,10 @@ def _write_column(writer: _Writer, array: Any) -> Node:
     dtype = array.dtype
     if isinstance(dtype, pd.StringDtype):
         missing = "nan" if dtype.na_value is not pd.NA else "NA"
-        texts = [None if absent else text for text, absent in zip(array, array.isna())]
-        return ["ps", dtype.storage, missing, writer.nodes(texts)]
+        texts = array.to_numpy(object).tolist()
+        places: dict[str, int] = {}  # names of sensors and recordings stand in a table many times
+        codes = [places.setdefault(t, len(places)) if type(t) is str else -1 for t in texts]
+        return ["ps", dtype.storage, missing, writer.blob(np.array(codes, np.int32)), list(places)]
     if isinstance(dtype, pd.CategoricalDtype):
         codes, categories = writer.node(np.asarray(array.codes)), writer.node(dtype.categories)
         return ["pc", codes, categories, bool(dtype.ordered)]
@@ -325,7 +327,7 @@ def _read_mapping(reader: _Reader, node: Node) -> dict[object, object]:
 def _read_column(reader: _Reader, node: Node) -> Any:
     if node[0] == "ps":
         dtype = pd.StringDtype(node[1], na_value=np.nan if node[2] == "nan" else pd.NA)
-        return pd.array(reader.values(node[3]), dtype=dtype)
+        return pd.array(np.array([*node[4], None], dtype=object)[reader.blob(node[3])], dtype=dtype)
     if node[0] == "pc":
         codes, categories = reader.values(node[1:3])
         return pd.Categorical.from_codes(codes, categories, ordered=node[3])

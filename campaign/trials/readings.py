@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Collection, Sequence
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -161,10 +162,22 @@ def _joined(parts: Sequence[ReadingPart]) -> pd.DataFrame:
     for name in parts[0].columns:
         values = [part.columns[name] for part in parts]
         if any(isinstance(value, np.ndarray) for value in values):
-            whole[name] = np.concatenate([np.broadcast_to(v, n) for v, n in zip(values, counts)])  # type: ignore[call-overload]
+            joined = np.concatenate([np.broadcast_to(v, n) for v, n in zip(values, counts)])  # type: ignore[call-overload]
+            whole[name] = _few_texts(joined) if joined.dtype.kind == "U" else joined
         else:
-            whole[name] = np.repeat(np.array(values), counts)
+            whole[name] = np.repeat(one_a_table(values), counts)
     return pd.DataFrame(whole)
+
+
+def one_a_table(values: Sequence[object]) -> npt.NDArray[Any]:
+    """Return *values* as an array; of texts it holds the texts themselves, so that repeating copies none."""
+    return np.array(values, dtype=object if any(isinstance(value, str) for value in values) else None)
+
+
+def _few_texts(texts: npt.NDArray[np.str_]) -> npt.NDArray[np.object_]:
+    """The same texts, each made once however often it stands there."""
+    distinct, place = np.unique(texts, return_inverse=True)
+    return np.asarray(distinct.astype(object)[place])
 
 
 def _common_reference(table: pd.DataFrame) -> ReferenceQuantity:
