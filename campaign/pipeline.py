@@ -259,7 +259,9 @@ def analyse(
     readings = read.readings
     if not len(readings.table) and others:
         readings = replace(readings, reference=others[0].reference)
-    budget = analyse_budget(description, calibration, variance, hysteresis, drift, pressure, influences)
+    budget = analyse_budget(
+        description, calibration, variance, hysteresis, drift, pressure, influences, workshop
+    )
     registers = intake.modules, intake.sensors
     layout = analyse_layout(
         read.of_type(LayoutFeatures), calibration, variance, influences, description, registers, workshop

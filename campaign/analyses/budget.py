@@ -32,18 +32,20 @@ from campaign.analyses.budget_model import (
     UseConditions,
     budget_in_use,
     conditions_of_use,
-    worst_in_use,
+    worst_of,
 )
 from campaign.analyses.budget_new_sensors import new_sensor_parts
 from campaign.analyses.budget_sensors import fixed_parts, readout_step
 from campaign.analyses.line_sources import LineSources
 from campaign.analyses.sensor_figures import FIGURE_COLUMNS
+from campaign.analyses.shared_work import do_all
 from campaign.analyses.variance_fit import PLACES, GenerationFit, choose_places
 from campaign.methods.conformity import spread_interval
 from campaign.methods.monte_carlo import OutputDistribution
-from campaign.methods.uncertainty_budget import draw_budget
+from campaign.methods.uncertainty_budget import BudgetLine, draw_budget
 from campaign.recordings.description import Description
 from campaign.recordings.recording import ReferenceQuantity
+from campaign.workers.workshop import Workshop
 
 if TYPE_CHECKING:
     from campaign.analyses.calibration import Calibration
@@ -136,6 +138,7 @@ def analyse_budget(
     drift: Drift | None = None,
     pressure: Pressure | None = None,
     influences: Influences | None = None,
+    workshop: Workshop | None = None,
 ) -> Budget | None:
     """Make the budgets of a campaign.
 
@@ -147,6 +150,8 @@ def analyse_budget(
         Lines of the sensors and the nested fit of every generation.
     hysteresis, drift, pressure, influences
         What else was measured.
+    workshop
+        What earlier runs drew; nothing where ``None``.
 
     Returns
     -------
@@ -160,8 +165,9 @@ def analyse_budget(
     new = [s for fit in fits if fit.mean_slope and (s := maker.new_sensor(fit)) is not None]
     subjects = (*new, *maker.sensors())
     conditions, unit = conditions_of_use(description), calibration.reference.unit
-    every = [budget_in_use(s, place, conditions) for s in subjects for place in s.places]
-    worst = tuple(worst_in_use(subject, conditions) for subject in subjects)
+    by_subject = [[budget_in_use(s, place, conditions) for place in s.places] for s in subjects]
+    every = [budget for own in by_subject for budget in own]
+    worst = tuple(worst_of(own) for own in by_subject)
     generations = {subject.generation for subject in subjects}
     return Budget(
         calibration.reference,
@@ -169,7 +175,7 @@ def analyse_budget(
         conditions,
         worst,
         pd.DataFrame([row for one in every for row in _rows(one, unit)], columns=list(BUDGET_COLUMNS)),
-        _totals(every, worst, variance.seed if variance is not None else 0),
+        _totals(every, worst, variance.seed if variance is not None else 0, workshop or Workshop()),
         _figures(worst, calibration.reference),
         {_key(found.subject): found.unknown for found in worst if not found.subject.is_new},
         tuple(sorted(generations - {s.generation for s in new})),
@@ -401,15 +407,25 @@ def _of_lines(found: SourceInUse) -> dict[str, object]:
     }
 
 
-def _totals(every: list[BudgetInUse], worst: tuple[BudgetInUse, ...], seed: int) -> pd.DataFrame:
+def _totals(
+    every: list[BudgetInUse], worst: tuple[BudgetInUse, ...], seed: int, workshop: Workshop
+) -> pd.DataFrame:
     headline = {(_key(b.subject), b.place.name) for b in worst}
-    rows = []
-    for budget in every:
-        chosen = (_key(budget.subject), budget.place.name) in headline
-        share = non_normal_share(budget)
-        drawn = monte_carlo(budget, seed) if chosen and share > DOMINATES else None
-        rows.append(_total(budget, chosen, share, drawn))
+    chosen = [(_key(budget.subject), budget.place.name) in headline for budget in every]
+    shares = [non_normal_share(budget) for budget in every]
+    wanted = [own and share > DOMINATES for own, share in zip(chosen, shares, strict=True)]
+    tasks = [(budget.lines, seed) for budget, own in zip(every, wanted, strict=True) if own]
+    drawn = iter(do_all(_drawn, tasks, workshop, lambda _: False))
+    rows = [
+        _total(budget, own, share, next(drawn) if draws else None)
+        for budget, own, share, draws in zip(every, chosen, shares, wanted, strict=True)
+    ]
     return pd.DataFrame(rows, columns=list(TOTAL_COLUMNS))
+
+
+def _drawn(task: tuple[tuple[BudgetLine, ...], int]) -> tuple[OutputDistribution]:
+    lines, seed = task
+    return (draw_budget(lines, seed=seed % 2**63, trials=DRAWS),)
 
 
 def _total(

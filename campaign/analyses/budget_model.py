@@ -8,7 +8,7 @@ lines. The script of the budget page does the same (``site_templates/js/budget.j
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
 from campaign.methods.uncertainty_budget import BudgetLine, CombinedUncertainty, combine
@@ -292,7 +292,11 @@ def budget_in_use(subject: BudgetSubject, place: BudgetPlace, conditions: UseCon
 
 def worst_in_use(subject: BudgetSubject, conditions: UseConditions) -> BudgetInUse:
     """Return the budget at the place where U is largest."""
-    found = [budget_in_use(subject, place, conditions) for place in subject.places]
+    return worst_of([budget_in_use(subject, place, conditions) for place in subject.places])
+
+
+def worst_of(found: Sequence[BudgetInUse]) -> BudgetInUse:
+    """Return that one of a subject's budgets whose U is largest."""
     return max(found, key=lambda budget: budget.combined.expanded_uncertainty)
 
 

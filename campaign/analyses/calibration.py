@@ -234,7 +234,7 @@ def _record(
     file_hashes: Mapping[str, str],
 ) -> CalibrationRecord:
     """The calibration record of one line."""
-    files = tuple(sorted(set(used.texts("trial", line.rows))))
+    files = tuple(sorted(used.texts("trial", line.rows)))
     x = used.x[line.rows]
     low, high = float(x.min()), float(x.max())
     ends = sorted([line.intercept + line.slope * low, line.intercept + line.slope * high])
@@ -304,6 +304,13 @@ def _length_fields(line: LengthLine | None) -> dict[str, float]:
 def _without_line(used: UsedReadings, lines: tuple[BranchLine, ...]) -> tuple[Notice, ...]:
     """A notice for every sensor that has readings but no line."""
     have = {line.key for line in lines}
+    readings = used.table
+    if len(have) < readings.groupby(SENSOR_KEYS).ngroups:
+        return _notices_without_line(readings, have)
+    return ()
+
+
+def _notices_without_line(readings: pd.DataFrame, have: set[tuple[str, str, str]]) -> tuple[Notice, ...]:
     return tuple(
         Notice(
             "no-line",
@@ -315,6 +322,6 @@ def _without_line(used: UsedReadings, lines: tuple[BranchLine, ...]) -> tuple[No
             "no line is fitted to them",
             "measure it at more levels",
         )
-        for key, rows in used.table.groupby(SENSOR_KEYS, sort=True)
+        for key, rows in readings.groupby(SENSOR_KEYS, sort=True)
         if tuple(map(str, key)) not in have
     )

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import numpy as np
 import numpy.typing as npt
-import pandas as pd
 
 from campaign.analyses.used_readings import UsedReadings
 from campaign.methods.reference_uncertainty import covariance_of_line, shared_sources
@@ -61,7 +60,7 @@ def shared_covariance(
         elongation_mm=elongation,
         rest_length_mm=rest,
         direction=DIRECTION_SIGNS[used.direction[rows]],
-        session=pd.factorize(used.mounting[rows])[0].astype(np.int64),
+        session=used.mounting[rows],
         scale_relative=stated.scale_relative,
         zero_mm=stated.zero_mm,
         backlash_mm=stated.backlash_mm,

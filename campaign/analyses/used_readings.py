@@ -68,15 +68,18 @@ class UsedReadings:
             self._numbers[name] = self.table[name].to_numpy(dtype=np.float64)
         return np.asarray(self._numbers[name][rows])
 
-    def texts(self, name: str, rows: IntArray) -> list[str]:
-        """Texts of a column of the table at the places *rows*."""
-        if name not in self._texts:
-            self._texts[name] = self.table[name].to_numpy(dtype=object)
-        return [str(text) for text in self._texts[name][rows]]
+    def texts(self, name: str, rows: IntArray) -> set[str]:
+        """Return the different texts of a column of the table at the places *rows*."""
+        return set(map(str, set(self._column_of_texts(name)[rows].tolist())))
 
     def text(self, name: str, row: int) -> str:
         """Text of a column of the table at one place."""
-        return self.texts(name, np.array([row]))[0]
+        return str(self._column_of_texts(name)[row])
+
+    def _column_of_texts(self, name: str) -> npt.NDArray[np.object_]:
+        if name not in self._texts:
+            self._texts[name] = self.table[name].to_numpy(dtype=object)
+        return self._texts[name]
 
     @cached_property
     def _numbers(self) -> dict[str, FloatArray]:
