@@ -141,6 +141,16 @@ def test_tables_come_back_with_types_index_and_names(name: str) -> None:
     assert type(again.index) is type(TABLES[name].index)
 
 
+def test_texts_that_stand_in_a_table_many_times_are_kept_once() -> None:
+    table = pd.DataFrame({"trial": ["a long name of a recording.csv"] * 1000 + [None, ""]})
+    data = encode(table)
+    assert data.count(b"a long name") == 1
+    found = decode(data)
+    assert isinstance(found, pd.DataFrame)
+    pd.testing.assert_frame_equal(found, table)
+    assert len(set(map(id, found["trial"].to_numpy(object)[:1000]))) == 1
+
+
 def test_series_come_back_with_name_and_index() -> None:
     series = pd.Series(["a", "b"], index=pd.Index([4, 7], name="row"), name="letter")
     again = decode(encode(series))

@@ -113,3 +113,13 @@ def test_a_shape_on_its_bound_is_not_given_an_error():
     fit = fit_separable(exponentials(1, constant=True), x, 1.0 - x, [np.array([0.5])], low=[0.1], high=[1.0])
     assert fit.on_bound.all()
     assert np.isnan(fit.standard_errors[-1])
+
+
+def test_starts_whose_columns_are_not_told_apart_do_not_win():
+    x = np.linspace(1.0, 10.0, 30)
+    y = 2.0 + 3.0 * np.exp(-0.7 * x)
+    flat = [1e-15, 2e-15, 1e5, 2e5]  # a second constant, or nothing at all
+    scan = [np.array([*flat, 0.1])]
+    fit = fit_separable(exponentials(1, constant=True), x, y, scan, low=[1e-16], high=[1e6])
+    assert fit.shape == pytest.approx([0.7], rel=1e-6)
+    assert fit.coefficients == pytest.approx([2.0, 3.0], rel=1e-6)
