@@ -53,7 +53,8 @@ def groups_by(
     sort
         Whether groups come in the order of their keys; else in that of their first rows.
     """
-    codes = table.groupby(list(keys), sort=sort).ngroup().fillna(-1).to_numpy(np.int64)
+    numbers = table.groupby(list(keys), sort=sort).ngroup().fillna(-1)
+    codes = np.asarray(numbers, dtype=np.int64)
     places = places_by(codes)
     named = columns_of(table, keys)
     return [(tuple(str(named[key][own[0]]) for key in keys), own) for own in places]
