@@ -93,6 +93,8 @@ def in_proportion(files: Mapping[str, bytes], own: Mapping[str, bytes], ratio: f
     """
     grown = dict(files)
     for name, content in own.items():
+        if name == "tables/schema.json":
+            continue
         if name.startswith(("tables/", "records/")) or (name.startswith("data/") and name not in files):
             for turn in range(round(ratio)):
                 grown[f"{name}-{turn}"] = content[: round(len(content) * ratio / round(ratio))]

@@ -20,7 +20,12 @@ import orjson
 import pandas as pd
 
 from campaign.pages import numbers
-from campaign.pages.contract_columns import CONTRACT_COLUMNS, describe_column, unit_of_column
+from campaign.pages.contract_columns import (
+    CONTRACT_COLUMNS,
+    SAID_ELSEWHERE,
+    describe_column,
+    unit_of_column,
+)
 from campaign.recordings.intake_tables import spelled_paths
 from campaign.recordings.recording import ReferenceQuantity
 
@@ -156,15 +161,25 @@ def csv_bytes(frame: pd.DataFrame, name: str = "") -> bytes:
 
 def _fields_of(values: pd.Series[Any]) -> list[object]:
     """Fields of a column: nothing where a value is missing, infinity as a Table Schema spells it."""
-    fields: list[object] = values.tolist()
     held = values.to_numpy()
+    if held.dtype == np.dtype(float):
+        return _number_fields(held)
+    fields: list[object] = values.tolist()
     if held.dtype.kind in "biu":
         return fields
     for row in np.flatnonzero(pd.isna(held)).tolist():
         fields[row] = None
-    if held.dtype.kind == "f":
-        for row in np.flatnonzero(np.isinf(held)).tolist():
-            fields[row] = "INF" if held[row] > 0 else "-INF"
+    return fields
+
+
+def _number_fields(held: np.ndarray[Any, Any]) -> list[object]:
+    """Fields of doubles: the shortest text that leads back to the very same number."""
+    if not len(held):
+        return []
+    written = orjson.dumps(np.ascontiguousarray(held), option=orjson.OPT_SERIALIZE_NUMPY)
+    fields: list[object] = list(written.decode("ascii")[1:-1].split(","))
+    for row in np.flatnonzero(~np.isfinite(held)).tolist():
+        fields[row] = None if math.isnan(held[row]) else "INF" if held[row] > 0 else "-INF"
     return fields
 
 
@@ -174,11 +189,21 @@ def exported_frame(frame: pd.DataFrame, name: str = "") -> pd.DataFrame:
     missing = [column for column in contract if column not in frame]
     if missing:
         raise KeyError(f"table {name} lacks {', '.join(missing)}")
-    further = [c for c in frame.columns if c not in contract and not str(c).startswith("_")]
-    exported = spelled_paths(frame[[*contract, *further]])
+    exported = spelled_paths(frame[exported_columns(frame, name)])
     truths = [str(column) for column, kind in exported.dtypes.items() if kind == np.dtype(bool)]
     words = {column: exported[column].map({True: "true", False: "false"}) for column in truths}
     return exported.assign(**words) if words else exported
+
+
+def exported_columns(frame: pd.DataFrame, name: str = "") -> list[str]:
+    """Return the columns that table *name* exports of *frame*, in order.
+
+    Columns of :data:`SAID_ELSEWHERE` are left out where the column that leads to the same is there.
+    """
+    contract = contract_of(name, frame)
+    left_out = {column for column, by in SAID_ELSEWHERE.get(name, {}).items() if by in frame}
+    further = [c for c in map(str, frame.columns) if c not in contract and c not in left_out]
+    return [*contract, *(c for c in further if not c.startswith("_"))]
 
 
 def contract_of(name: str, frame: pd.DataFrame) -> list[str]:
