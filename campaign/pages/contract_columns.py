@@ -56,6 +56,11 @@ CONTRACT_COLUMNS: dict[str, tuple[str, ...]] = {
 }
 """Columns of each promised table, in order."""
 
+_KEYS_OF_READINGS = (
+    *("generation", "module", "position", "session", "repetition"),
+    *("direction", "x", "nominal_level", "time_s"),
+)
+
 SAID_ELSEWHERE: dict[str, dict[str, str]] = {
     "readings": {
         "x": "strain",
@@ -66,11 +71,7 @@ SAID_ELSEWHERE: dict[str, dict[str, str]] = {
         "rest_length_mm": "sensor",
         "rest_length_uncertainty_mm": "sensor",
     },
-    "residuals": dict.fromkeys(
-        ("generation", "module", "position", "session", "repetition", "direction")
-        + ("x", "nominal_level", "time_s"),
-        "order",
-    ),
+    "residuals": dict.fromkeys(_KEYS_OF_READINGS, "order"),
     "calibration_records": {"sha256": "files", "length_line": "branch"},
 }
 """Columns that the analyses hold and the files do not, by the column that leads to the same.
