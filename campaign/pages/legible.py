@@ -23,6 +23,8 @@ _UNSEEN_IN_JSON = re.compile(
 
 def legible(text: str) -> str:
     """Return *text* with what cannot be seen spelled out by its escape."""
+    if text.isascii() and text.isprintable():
+        return text
     return _UNSEEN.sub(_spelled, text)
 
 

@@ -336,7 +336,15 @@ def _page_html(
 def without_indents(page: str) -> str:
     """Return a page without indents and empty lines, but for what is set as it stands (``pre``)."""
     parts = re.split(r"(<pre\b.*?</pre>)", page, flags=re.DOTALL)
-    return "".join(part if part.startswith("<pre") else re.sub(r"\s*\n\s*", "\n", part) for part in parts)
+    return "".join(part if part.startswith("<pre") else _without_indents(part) for part in parts)
+
+
+def _without_indents(text: str) -> str:
+    first, *others = text.split("\n")
+    if not others:
+        return text
+    lines = [line for line in map(str.strip, others[:-1]) if line]
+    return "\n".join([first.rstrip(), *lines, others[-1].lstrip()])
 
 
 def _placed_figure(page: Page, index: int, figure: Figure) -> PlacedFigure:
