@@ -83,7 +83,7 @@ def _check_texts(figure: Figure) -> None:
 
 
 def _reached(traces: Iterable[Trace]) -> dict[str, list[float]]:
-    """Every place that traces reach along each axis."""
+    """The ends of what each trace reaches along each axis."""
     reached: dict[str, list[float]] = {}
     for trace in traces:
         for letter in ("x", "y"):
@@ -125,7 +125,10 @@ def _matching(key: str, layout: Layout) -> set[str]:
 
 
 def _extent(trace: Trace, letter: str) -> list[float]:
-    """Return every finite place that a trace reaches along x or y, error bars and bars' feet included."""
+    """Return the ends of what a trace reaches along x or y, error bars and bars' feet included.
+
+    They are the smallest and largest finite places, and the smallest above zero.
+    """
     if letter not in trace:
         return []
     centre = np.asarray(trace[letter], dtype=float)
@@ -136,9 +139,13 @@ def _extent(trace: Trace, letter: str) -> list[float]:
         parts += [centre + up, centre - np.asarray(error.get("arrayminus", up), dtype=float)]
     if trace["type"] == "bar":
         parts += _bar_extent(trace, letter, centre)
-    joined = np.concatenate(parts)
-    reached: list[float] = joined[np.isfinite(joined)].tolist()
-    return reached
+    joined = np.concatenate(parts) if len(parts) > 1 else centre
+    reached = joined[np.isfinite(joined)]
+    if not len(reached):
+        return []
+    above = reached[reached > 0]
+    ends = [float(reached.min()), float(reached.max())]
+    return [*ends, float(above.min())] if len(above) else ends
 
 
 def _bar_extent(trace: Trace, letter: str, centre: Any) -> list[Any]:
@@ -179,4 +186,7 @@ def _rounded_values(values: list[float], axis: Layout) -> list[float | None]:
     if axis.get("type") == "log":
         return [float(f"{v:.5g}") if math.isfinite(v) else None for v in array]
     low, high = axis["range"]
-    return [v if math.isfinite(v) else None for v in rounded(array, abs(high - low)).tolist()]
+    places = rounded(array, abs(high - low))
+    if np.isfinite(places).all():
+        return list(places.tolist())
+    return [v if math.isfinite(v) else None for v in places.tolist()]

@@ -134,15 +134,16 @@ class Fold:
 
 def _parted_sentences(sentences: Sequence[str]) -> tuple[str, list[str]] | None:
     """Return one sentence with gaps and each gap's words, or ``None`` where the sentences differ more."""
-    if not sentences or any(GAP in s or BETWEEN in s for s in sentences):
+    joined = "".join(sentences)
+    if not sentences or GAP in joined or BETWEEN in joined:
         return None
     rows = [_WORDS.split(sentence) for sentence in sentences]
-    if any(len(row) != len(rows[0]) for row in rows):
+    if len(set(map(len, rows))) > 1:
         return None
     with_gaps, words = "", []
     for place, column in enumerate(zip(*rows, strict=True)):
         first = column[0]
-        same = all(word == first for word in column)
+        same = column.count(first) == len(column)
         if place % 2 == 1 and not same:
             return None
         if same and not any(map(str.isdigit, first)):

@@ -32,8 +32,8 @@ from campaign.pages.static_figure import static_svg
 from campaign.pages.tables import (
     Cell,
     Table,
-    as_drawn,
     csv_bytes,
+    drawn_csv_bytes,
     in_reference,
     schema_bytes,
     shown_cells,
@@ -250,8 +250,7 @@ def _page_files(jinja: Environment, task: RenderingTask, page: Page) -> PageFile
     further = {f"data/{page.slug}.js": data_script(page, figures, rows)}
     for figure in page.figures:
         if figure.data is not None:
-            data = as_drawn(in_reference(figure.data, task.reference))
-            further[_figure_csv(page, figure)] = csv_bytes(data)
+            further[_figure_csv(page, figure)] = drawn_csv_bytes(in_reference(figure.data, task.reference))
     return PageFiles(page.slug, page.file, _page_html(jinja, task, page, figures, tables), further)
 
 

@@ -136,6 +136,8 @@ def _without_flat_points(x: Any, y: Any, reach: float) -> tuple[Any, Any]:
         along = step_x * chord_x + step_y * chord_y
         off = np.abs(step_x * chord_y - step_y * chord_x)
         flat = (off <= reach * np.sqrt(square)) & (along >= 0) & (along <= square)
+        if not flat.any():
+            break
         flat[(turn % 2) :: 2] = False
         if not flat.any():
             continue

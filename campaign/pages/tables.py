@@ -10,7 +10,7 @@ from __future__ import annotations
 import csv
 import math
 import re
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from io import StringIO
 from typing import Any, Literal
@@ -127,14 +127,20 @@ class Cell:
 
 def shown_cells(table: Table) -> list[list[Cell]]:
     """Return the cells of the rows that the page shows, row by row, numbers padded to align by the point."""
-    frame = table.frame if table.shown_rows is None else table.frame.head(table.shown_rows)
+    frame = _shown(table)
     columns = [_column_cells(frame, column) for column in table.columns]
     return [list(row) for row in zip(*columns, strict=True)]
 
 
+def _shown(table: Table) -> pd.DataFrame:
+    """Return the rows that the page shows."""
+    frame, most = table.frame, table.shown_rows
+    return frame if most is None or len(frame) <= most else frame.head(most)
+
+
 def shown_marks(table: Table) -> list[tuple[str, str]]:
     """Return the module and sensor of each shown row, empty where the table has no such columns."""
-    frame = table.frame if table.shown_rows is None else table.frame.head(table.shown_rows)
+    frame = _shown(table)
     columns = [_texts_of(frame[key]) if key in frame else [""] * len(frame) for key in table.mark]
     return list(zip(columns[0], columns[1], strict=True))
 
@@ -151,21 +157,49 @@ def csv_bytes(frame: pd.DataFrame, name: str = "") -> bytes:
     KeyError
         Where a column of the contract is missing.
     """
-    exported = exported_frame(frame, name)
+    columns = _checked_columns(frame, name)
+    return _written(columns, [_fields_of(column, frame[column]) for column in columns])
+
+
+def drawn_csv_bytes(frame: pd.DataFrame) -> bytes:
+    """Return the file of a figure: columns of numbers to :data:`DIGITS_OF_FIGURES` of their largest one.
+
+    Files of figures hold no more: what was measured has fewer digits, a picture shows four, and what was
+    computed stands in full precision in the tables.
+    """
+    columns = _checked_columns(frame, "")
+    return _written(columns, [_drawn_fields_of(column, frame[column]) for column in columns])
+
+
+def _written(columns: Sequence[str], fields: Sequence[Sequence[object]]) -> bytes:
     stream = StringIO(newline="")
     writer = csv.writer(stream, lineterminator="\n")
-    writer.writerow(exported.columns)
-    writer.writerows(zip(*(_fields_of(values) for _, values in exported.items()), strict=True))
+    writer.writerow(columns)
+    writer.writerows(zip(*fields, strict=True))
     return stream.getvalue().encode("utf-8")
 
 
-def _fields_of(values: pd.Series[Any]) -> list[object]:
-    """Fields of a column: nothing where a value is missing, infinity as a Table Schema spells it."""
+def _drawn_fields_of(column: str, values: pd.Series[Any]) -> list[object]:
+    if values.dtype != np.dtype(float):
+        return _fields_of(column, values)
+    held = values.to_numpy()
+    return _number_fields(np.round(held, _decimals_of_figures(held)))
+
+
+def _fields_of(column: str, values: pd.Series[Any]) -> list[object]:
+    """Fields of a column: nothing where a value is missing, infinity as a Table Schema spells it.
+
+    Truth values are true and false, and no file's name is spelled so that a spreadsheet runs it.
+    """
+    if column == "file":
+        values = spelled_paths(values.to_frame("file"))["file"]
     held = values.to_numpy()
     if held.dtype == np.dtype(float):
         return _number_fields(held)
     fields: list[object] = values.tolist()
-    if held.dtype.kind in "biu":
+    if held.dtype.kind == "b":
+        return ["true" if held else "false" for held in fields]
+    if held.dtype.kind in "iu":
         return fields
     for row in np.flatnonzero(pd.isna(held)).tolist():
         fields[row] = None
@@ -185,14 +219,17 @@ def _number_fields(held: np.ndarray[Any, Any]) -> list[object]:
 
 def exported_frame(frame: pd.DataFrame, name: str = "") -> pd.DataFrame:
     """Return what table *name* exports of *frame*, in order, truth values as true and false."""
-    contract = contract_of(name, frame)
-    missing = [column for column in contract if column not in frame]
-    if missing:
-        raise KeyError(f"table {name} lacks {', '.join(missing)}")
-    exported = spelled_paths(frame[exported_columns(frame, name)])
+    exported = spelled_paths(frame[_checked_columns(frame, name)])
     truths = [str(column) for column, kind in exported.dtypes.items() if kind == np.dtype(bool)]
     words = {column: exported[column].map({True: "true", False: "false"}) for column in truths}
     return exported.assign(**words) if words else exported
+
+
+def _checked_columns(frame: pd.DataFrame, name: str) -> list[str]:
+    missing = [column for column in contract_of(name, frame) if column not in frame]
+    if missing:
+        raise KeyError(f"table {name} lacks {', '.join(missing)}")
+    return exported_columns(frame, name)
 
 
 def exported_columns(frame: pd.DataFrame, name: str = "") -> list[str]:
@@ -202,8 +239,8 @@ def exported_columns(frame: pd.DataFrame, name: str = "") -> list[str]:
     """
     contract = contract_of(name, frame)
     left_out = {column for column, by in SAID_ELSEWHERE.get(name, {}).items() if by in frame}
-    further = [c for c in map(str, frame.columns) if c not in contract and c not in left_out]
-    return [*contract, *(c for c in further if not c.startswith("_"))]
+    apart = left_out.union(contract)
+    return [*contract, *(c for c in frame.columns if c not in apart and not str(c).startswith("_"))]
 
 
 def contract_of(name: str, frame: pd.DataFrame) -> list[str]:
@@ -230,17 +267,6 @@ def in_reference(frame: pd.DataFrame, reference: ReferenceQuantity) -> pd.DataFr
 
 DIGITS_OF_FIGURES = 7
 """Significant digits of numbers in the files of figures, of each column's largest number."""
-
-
-def as_drawn(frame: pd.DataFrame) -> pd.DataFrame:
-    """Return *frame* with every column of numbers rounded to :data:`DIGITS_OF_FIGURES` of its largest one.
-
-    Files of figures hold no more: what was measured has fewer digits, a picture shows four, and what was
-    computed stands in full precision in the tables.
-    """
-    numbers_of = {str(c): frame[c].to_numpy() for c, kind in frame.dtypes.items() if kind == np.dtype(float)}
-    rounded = {c: np.round(held, _decimals_of_figures(held)) for c, held in numbers_of.items()}
-    return frame.assign(**rounded) if rounded else frame
 
 
 def without_told_trial(frame: pd.DataFrame) -> pd.DataFrame:
