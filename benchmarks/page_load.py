@@ -95,6 +95,7 @@ def in_proportion(files: Mapping[str, bytes], own: Mapping[str, bytes], ratio: f
     for name, content in own.items():
         if name == "tables/schema.json":
             continue
+        grown.pop(name if name.startswith("tables/") else "", None)
         if name.startswith(("tables/", "records/")) or (name.startswith("data/") and name not in files):
             for turn in range(round(ratio)):
                 grown[f"{name}-{turn}"] = content[: round(len(content) * ratio / round(ratio))]

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 import re
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import replace
 from typing import Any
 
@@ -94,11 +94,11 @@ def _reached(traces: Iterable[Trace]) -> dict[str, list[float]]:
 def _with_range(key: str, layout: Layout, reached: Mapping[str, list[float]]) -> Layout:
     axis: Layout = layout[key]
     if "range" in axis:
-        return axis
+        return {**axis, "range": _rounded_ends(axis["range"])}
     group = _matching(key, layout)
     values = [v for axis_name in group for v in reached.get(axis_name, ())]
     logarithmic = axis.get("type") == "log"
-    ends = _fitted([math.log10(v) for v in values if v > 0] if logarithmic else values)
+    ends = _rounded_ends(_fitted([math.log10(v) for v in values if v > 0] if logarithmic else values))
     reverse = axis.get("autorange") == "reversed"
     kept = {k: v for k, v in axis.items() if k != "autorange"}
     return {**kept, "range": ends[::-1] if reverse else ends}
@@ -165,6 +165,15 @@ def _fitted(values: list[float]) -> list[float]:
         reach = abs(low) * 0.1 or 1.0
         return [low - reach, high + reach]
     return [low - 0.05 * (high - low), high + 0.05 * (high - low)]
+
+
+def _rounded_ends(ends: Sequence[float]) -> list[float]:
+    """Round the ends of an axis to a millionth of its length or so: far less than a picture shows."""
+    length = abs(ends[1] - ends[0])
+    if not (math.isfinite(length) and length > 0):
+        return list(ends)
+    decimals = 6 - math.floor(math.log10(length))
+    return [round(float(end), decimals) + 0.0 for end in ends]
 
 
 def _rounded_trace(trace: Trace, layout: Layout) -> Trace:

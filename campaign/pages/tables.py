@@ -265,7 +265,7 @@ def in_reference(frame: pd.DataFrame, reference: ReferenceQuantity) -> pd.DataFr
     return frame.drop(columns=taken).rename(columns=names)
 
 
-DIGITS_OF_FIGURES = 7
+DIGITS_OF_FIGURES = 6
 """Significant digits of numbers in the files of figures, of each column's largest number."""
 
 

@@ -118,12 +118,12 @@ def test_a_cell_says_what_it_sorts_by_only_where_its_text_does_not(
     assert sort_beside(text, value) == sort
 
 
-def test_files_of_figures_hold_seven_digits_of_each_column() -> None:
+def test_files_of_figures_hold_six_digits_of_each_column() -> None:
     frame = pd.DataFrame(
         {"a": [1 / 3, 1000 / 3, np.nan], "b": ["x", "y", "z"], "c": [1e-9 / 3, 0.0, -np.inf]}
     )
     written = drawn_csv_bytes(frame).decode()
-    assert written == "a,b,c\n0.3333,x,3.333333e-10\n333.3333,y,0.0\n,z,-INF\n"
+    assert written == "a,b,c\n0.333,x,3.33333e-10\n333.333,y,0.0\n,z,-INF\n"
     assert frame["a"][0] == 1 / 3
 
 
