@@ -8,7 +8,7 @@ from campaign.pages import palette
 
 FONT = "'Gill Sans Nova', 'Optima', Candara, 'Noto Sans', 'Source Sans 3', 'Segoe UI', system-ui, sans-serif"
 
-# Labels may stand over an edge, as in the static picture: looking whether one does costs a tenth of the drawing.
+# Labels may stand over an edge, as in the static picture: to look whether one does is a tenth of the drawing.
 # Exponents as 'e': the library sets raised figures in a style attribute, which the content policy forbids.
 _AXIS: dict[str, Any] = {
     "showline": True,

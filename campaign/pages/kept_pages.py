@@ -10,7 +10,7 @@ import hashlib
 import io
 import pickle
 import zlib
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -118,48 +118,46 @@ class _Writer(pickle.Pickler):
         self.fast = True
 
     def reducer_override(self, value: Any) -> Any:
-        kind = type(value)
-        if kind is np.ndarray:
-            held = value.ravel().tolist() if value.dtype.hasobject else value.tobytes()
-            return _array, (value.dtype.str, value.shape, held)
-        if kind is pd.DataFrame:
-            return _table, (value.index, value.columns, [_held(column) for _, column in value.items()])
-        if kind is pd.Series:
-            return _series, (value.index, value.name, _held(value))
-        if isinstance(value, pd.RangeIndex):
-            return _range, (value.name, value.start, value.stop, value.step)
-        if isinstance(value, pd.Index):
-            return _index, (tuple(value.names), value.tolist())
-        if kind in (set, frozenset):
-            return kind, (sorted(value, key=repr),)
-        return NotImplemented
+        named = _NAMED.get(type(value))
+        return NotImplemented if named is None else (_nothing, named(value))
 
 
-def _held(column: pd.Series[Any]) -> tuple[str, object]:
+def _nothing(*_: object) -> None:
+    """Stands where something would be made; what is hashed is never read."""
+
+
+def _array(array: np.ndarray[Any, Any]) -> tuple[object, ...]:
+    held = array.ravel().tolist() if array.dtype.hasobject else array.tobytes()
+    return "array", array.dtype.str, array.shape, held
+
+
+def _column(column: pd.Series[Any]) -> tuple[object, ...]:
     """Return the type of a column and its values."""
-    array = column.array
-    held = column.to_numpy() if isinstance(column.dtype, np.dtype) else array.tolist()
-    return str(column.dtype), held
+    if isinstance(column.dtype, np.dtype):
+        return _array(column.to_numpy())
+    return "column", str(column.dtype), column.array.tolist()
 
 
-def _array(*_: object) -> None:
-    """Names arrays in what is hashed; what is hashed is never read, so it makes nothing."""
+def _table(table: pd.DataFrame) -> tuple[object, ...]:
+    columns: list[object] = [_column(column) for _, column in table.items()]
+    return "table", table.index, table.columns, columns
 
 
-def _table(*_: object) -> None:
-    """Names tables, as above."""
+def _index(index: pd.Index[Any]) -> tuple[object, ...]:
+    return "index", str(index.dtype), tuple(index.names), index.tolist()
 
 
-def _series(*_: object) -> None:
-    """Names series, as above."""
-
-
-def _index(*_: object) -> None:
-    """Names indices, as above."""
-
-
-def _range(*_: object) -> None:
-    """Names indices that count, as above."""
+_NAMED: dict[type, Callable[[Any], tuple[object, ...]]] = {
+    np.ndarray: _array,
+    pd.DataFrame: _table,
+    pd.Series: lambda series: ("series", series.index, series.name, _column(series)),
+    pd.Index: _index,
+    pd.MultiIndex: lambda index: ("levels", tuple(index.names), index.tolist()),
+    pd.RangeIndex: lambda index: ("range", index.name, index.start, index.stop, index.step),
+    set: lambda values: ("set", sorted(values, key=repr)),
+    frozenset: lambda values: ("frozenset", sorted(values, key=repr)),
+}
+"""What is written by its values alone, and not as its library would."""
 
 
 def _contents(folders: Iterable[Path]) -> list[bytes]:
