@@ -194,7 +194,7 @@ def _fields_of(column: str, values: pd.Series[Any]) -> list[object]:
     if column == "file":
         values = spelled_paths(values.to_frame("file"))["file"]
     held = values.to_numpy()
-    if held.dtype == np.dtype(float):
+    if values.dtype == np.dtype(float):
         return _number_fields(held)
     fields: list[object] = values.tolist()
     if held.dtype.kind == "b":
