@@ -91,9 +91,11 @@ def in_proportion(files: Mapping[str, bytes], own: Mapping[str, bytes], ratio: f
 
     Copies of pages bring no rows, records and loops of their own: those of the demonstration stand in.
     """
-    grown = dict(files)
+    grown = {name: content for name, content in files.items() if not name.startswith("tables/")}
     for name, content in own.items():
-        if name.startswith(("tables/", "records/")) or (name.startswith("data/") and name not in files):
+        if name == "tables/schema.json":
+            grown[name] = content
+        elif name.startswith(("tables/", "records/")) or (name.startswith("data/") and name not in files):
             for turn in range(round(ratio)):
                 grown[f"{name}-{turn}"] = content[: round(len(content) * ratio / round(ratio))]
     return grown

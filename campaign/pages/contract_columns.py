@@ -56,6 +56,32 @@ CONTRACT_COLUMNS: dict[str, tuple[str, ...]] = {
 }
 """Columns of each promised table, in order."""
 
+_KEYS_OF_READINGS = (
+    *("generation", "module", "position", "session", "repetition"),
+    *("direction", "x", "nominal_level", "time_s"),
+)
+
+SAID_ELSEWHERE: dict[str, dict[str, str]] = {
+    "readings": {
+        "x": "strain",
+        "elongation_mm": "strain",
+        "largest_x_before": "order",
+        "sensor_level": "nominal_level",
+        "reference": "trial",
+        "rest_length_mm": "sensor",
+        "rest_length_uncertainty_mm": "sensor",
+    },
+    "residuals": dict.fromkeys(_KEYS_OF_READINGS, "order"),
+    "calibration_records": {"sha256": "files", "length_line": "branch"},
+}
+"""Columns that the analyses hold and the files do not, by the column that leads to the same.
+
+``x`` of a reading is its strain where there is one, its elongation is that times the rest length, the largest
+value before comes from the order of the readings; rest lengths stand in ``sensor_lines``, hashes of files in
+``recordings``, the line of the length in the record itself. A residual is of the reading with the same trial,
+sensor and order.
+"""
+
 _MEANINGS: dict[str, str] = {
     "file": "path from the campaign folder (./ before one that begins like a formula)",
     "sha256": "SHA-256 of the file's bytes, hexadecimal",

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 import re
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import replace
 from typing import Any
 
@@ -83,7 +83,7 @@ def _check_texts(figure: Figure) -> None:
 
 
 def _reached(traces: Iterable[Trace]) -> dict[str, list[float]]:
-    """Every place that traces reach along each axis."""
+    """The ends of what each trace reaches along each axis."""
     reached: dict[str, list[float]] = {}
     for trace in traces:
         for letter in ("x", "y"):
@@ -94,11 +94,11 @@ def _reached(traces: Iterable[Trace]) -> dict[str, list[float]]:
 def _with_range(key: str, layout: Layout, reached: Mapping[str, list[float]]) -> Layout:
     axis: Layout = layout[key]
     if "range" in axis:
-        return axis
+        return {**axis, "range": _rounded_ends(axis["range"])}
     group = _matching(key, layout)
     values = [v for axis_name in group for v in reached.get(axis_name, ())]
     logarithmic = axis.get("type") == "log"
-    ends = _fitted([math.log10(v) for v in values if v > 0] if logarithmic else values)
+    ends = _rounded_ends(_fitted([math.log10(v) for v in values if v > 0] if logarithmic else values))
     reverse = axis.get("autorange") == "reversed"
     kept = {k: v for k, v in axis.items() if k != "autorange"}
     return {**kept, "range": ends[::-1] if reverse else ends}
@@ -125,7 +125,10 @@ def _matching(key: str, layout: Layout) -> set[str]:
 
 
 def _extent(trace: Trace, letter: str) -> list[float]:
-    """Return every finite place that a trace reaches along x or y, error bars and bars' feet included."""
+    """Return the ends of what a trace reaches along x or y, error bars and bars' feet included.
+
+    They are the smallest and largest finite places, and the smallest above zero.
+    """
     if letter not in trace:
         return []
     centre = np.asarray(trace[letter], dtype=float)
@@ -136,9 +139,13 @@ def _extent(trace: Trace, letter: str) -> list[float]:
         parts += [centre + up, centre - np.asarray(error.get("arrayminus", up), dtype=float)]
     if trace["type"] == "bar":
         parts += _bar_extent(trace, letter, centre)
-    joined = np.concatenate(parts)
-    reached: list[float] = joined[np.isfinite(joined)].tolist()
-    return reached
+    joined = np.concatenate(parts) if len(parts) > 1 else centre
+    reached = joined[np.isfinite(joined)]
+    if not len(reached):
+        return []
+    above = reached[reached > 0]
+    ends = [float(reached.min()), float(reached.max())]
+    return [*ends, float(above.min())] if len(above) else ends
 
 
 def _bar_extent(trace: Trace, letter: str, centre: Any) -> list[Any]:
@@ -160,6 +167,15 @@ def _fitted(values: list[float]) -> list[float]:
     return [low - 0.05 * (high - low), high + 0.05 * (high - low)]
 
 
+def _rounded_ends(ends: Sequence[float]) -> list[float]:
+    """Round the ends of an axis to a millionth of its length or so: far less than a picture shows."""
+    length = abs(ends[1] - ends[0])
+    if not (math.isfinite(length) and length > 0):
+        return list(ends)
+    decimals = 6 - math.floor(math.log10(length))
+    return [round(float(end), decimals) + 0.0 for end in ends]
+
+
 def _rounded_trace(trace: Trace, layout: Layout) -> Trace:
     made = dict(trace)
     for letter in ("x", "y"):
@@ -179,4 +195,7 @@ def _rounded_values(values: list[float], axis: Layout) -> list[float | None]:
     if axis.get("type") == "log":
         return [float(f"{v:.5g}") if math.isfinite(v) else None for v in array]
     low, high = axis["range"]
-    return [v if math.isfinite(v) else None for v in rounded(array, abs(high - low)).tolist()]
+    places = rounded(array, abs(high - low))
+    if np.isfinite(places).all():
+        return list(places.tolist())
+    return [v if math.isfinite(v) else None for v in places.tolist()]

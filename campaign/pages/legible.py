@@ -15,14 +15,18 @@ _UNSEEN = re.compile(
     "[\x00-\x08\x0b\x0c\x0e-\x1f\x7f-\x84\x86-\x9f\u061c\u200b\u200e\u200f\u2028-\u202e\u2060-\u206f\ufeff"
     "\ud800-\udfff\ue000-\uf8ff\ufff9-\ufffb\ufffe\uffff\U000e0000-\U000e007f]"
 )
+_UNESCAPED_IN_JSON = re.compile(
+    "[\x7f-\x84\x86-\x9f\u061c\u200b\u200e\u200f\u2028-\u202e\u2060-\u206f\ufeff\ufff9-\ufffb\U000e0000-\U000e007f]"
+)
 _UNSEEN_IN_JSON = re.compile(
-    r"(?<!\\)((?:\\\\)*)\\(?=u00(?:0[0-8bce-f]|1[0-9a-f]))"
-    "|[\x7f-\x84\x86-\x9f\u061c\u200b\u200e\u200f\u2028-\u202e\u2060-\u206f\ufeff\ufff9-\ufffb\U000e0000-\U000e007f]"
+    r"(?<!\\)((?:\\\\)*)\\(?=u00(?:0[0-8bce-f]|1[0-9a-f]))|" + _UNESCAPED_IN_JSON.pattern
 )
 
 
 def legible(text: str) -> str:
     """Return *text* with what cannot be seen spelled out by its escape."""
+    if text.isascii() and text.isprintable():
+        return text
     return _UNSEEN.sub(_spelled, text)
 
 
@@ -33,7 +37,10 @@ def legible_value(value: object) -> object:
 
 def legible_json(content: bytes) -> bytes:
     """Return JSON whose texts are legible; places of gaps (private characters) stay."""
-    return _UNSEEN_IN_JSON.sub(_spelled_in_json, content.decode("utf-8")).encode("utf-8")
+    text = content.decode("utf-8")
+    if "\\u00" not in text and not _UNESCAPED_IN_JSON.search(text):
+        return content
+    return _UNSEEN_IN_JSON.sub(_spelled_in_json, text).encode("utf-8")
 
 
 def _spelled(found: re.Match[str]) -> str:

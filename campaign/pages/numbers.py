@@ -170,8 +170,24 @@ def _last_place(value: float, digits: int) -> int:
     """Return the power of ten of the last of *digits* significant digits, after rounding carried over."""
     if value == 0:
         return 0
-    place = Decimal(repr(abs(float(value)))).adjusted() - digits + 1
-    return _rounded(abs(value), place).adjusted() - digits + 1
+    size = abs(float(value))
+    if digits <= _CERTAIN_DIGITS and not _may_be_halfway(size):
+        return int(f"{size:.{digits - 1}e}".partition("e")[2]) - digits + 1
+    place = Decimal(repr(size)).adjusted() - digits + 1
+    return _rounded(size, place).adjusted() - digits + 1
+
+
+_CERTAIN_DIGITS = 9
+
+
+def _may_be_halfway(value: float) -> bool:
+    """Return whether the shortest decimal form of *value* may lie halfway between two rounded numbers.
+
+    Where it does not, the number itself lies on the same side of halfway (a decimal between the two would be
+    shorter, or nearer), and Python's own formatting of it gives the same digits.
+    """
+    text = repr(float(value))
+    return text[-1] == "5" or "e" in text or text.endswith("5.0")
 
 
 def _rounded(value: float, place: int) -> Decimal:
@@ -186,7 +202,7 @@ def _place_of_interval(estimate: float, low: float, high: float) -> int:
 
 def _shared_power(largest: float, place: int) -> int:
     """Return the power of ten to set apart: 0 for numbers that read well as they are."""
-    if largest == 0:
+    if largest == 0 or (place <= 3 and 1e-3 <= largest < 1e6):
         return 0
     exponent = Decimal(repr(float(largest))).adjusted()
     return exponent if exponent >= 6 or exponent < -3 or place > 3 else 0
@@ -195,6 +211,9 @@ def _shared_power(largest: float, place: int) -> int:
 def _at_place(value: float, place: int, power: int) -> str:
     if math.isinf(value):
         return "∞" if value > 0 else f"{MINUS}∞"
+    if not power and -_CERTAIN_DIGITS < place <= 0 and abs(value) < 1e4 and not _may_be_halfway(value):
+        text = f"{value:.{-place}f}"
+        return text if text[0] != "-" else f"{MINUS}{text[1:]}" if text.strip("-0.") else text[1:]
     number = _rounded(value, place).scaleb(-power, _EVERY_DIGIT)
     sign = MINUS if number < 0 else ""  # a zero that came from a small negative number has no sign
     return sign + _grouped(f"{abs(number):f}")

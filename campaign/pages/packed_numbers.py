@@ -43,8 +43,9 @@ def packed(values: Sequence[float | None]) -> str | None:
     if found is None:
         return None
     decimals, whole = found
-    steps = np.diff(whole, prepend=0)
-    signed = np.where(steps < 0, -2 * steps + 1, 2 * steps)
+    steps = whole.copy()
+    steps[1:] -= whole[:-1]
+    signed = 2 * np.abs(steps) + (steps < 0)
     texts = _letters_of(signed.tolist())
     if missing.any():
         own = iter(texts)

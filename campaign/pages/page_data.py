@@ -2,7 +2,8 @@
 
 ``assets/unfold.js`` puts everything back before any other script sees it, as :func:`unfolded` does.
 
-- What traces, axes and labels share (looks, units, ranges) stands once in ``shared``; ``"$"`` is its place.
+- What traces, axes, shapes and labels share (looks, units, ranges) stands once in ``shared``; ``"$"`` is its
+  place. A trace without a name has the empty one.
 - Numbers of points stand once in ``lists``, as short texts (:mod:`campaign.pages.packed_numbers`) where they
   are whole numbers of one decimal place; a trace holds the place of each of its lists.
 - Sentences and links stand once in ``texts``. The sentences of one trace that differ in some words only are
@@ -34,13 +35,27 @@ BETWEEN = "|"
 _PROTO, _PROTO_AS_KEY = b'"__proto__":', b'["__proto__"]:'
 _HEAD, _TAIL = b"window.campaignPage = ", b";\n"
 _OWN_OF_TRACE = frozenset(
-    {"x", "y", "name", "meta", "hovertext", "customdata", "text", "error_x", "error_y", "base"}
+    {
+        "x",
+        "y",
+        "xaxis",
+        "yaxis",
+        "name",
+        "meta",
+        "hovertext",
+        "customdata",
+        "text",
+        "error_x",
+        "error_y",
+        "base",
+    }
 )
 _NUMBERS_OF_TRACE = ("x", "y", "base")
 _BARS_OF_TRACE = ("error_x", "error_y")
 _OWN_OF_BARS = frozenset({"array", "arrayminus"})
 _OWN_OF_AXIS = frozenset({"domain", "anchor", "matches"})
 _OWN_OF_LABEL = frozenset({"text", "x", "y", "xref", "yref"})
+_OWN_OF_SHAPE = frozenset({"x0", "x1", "y0", "y1", "xref", "yref"})
 _WORDS = re.compile(r"([ \u202f:,;()\[\]]+)")
 
 
@@ -71,6 +86,8 @@ class Fold:
     def trace(self, trace: Trace) -> Trace:
         """Return a trace with its looks, numbers, sentences and links folded."""
         made = self._parted(trace, _OWN_OF_TRACE)
+        if made.get("name") == "":
+            del made["name"]
         for key in _NUMBERS_OF_TRACE:
             if isinstance(trace.get(key), list):
                 made[key] = self.numbers(trace[key])
@@ -99,13 +116,16 @@ class Fold:
         return {key: self.numbers(value) if key in _OWN_OF_BARS else value for key, value in made.items()}
 
     def layout(self, layout: Layout) -> Layout:
-        """Return a layout with its axes and labels folded."""
+        """Return a layout with its axes, shapes and labels folded."""
         made = {
             key: self._parted(value, _OWN_OF_AXIS) if key.startswith(("xaxis", "yaxis")) else value
             for key, value in layout.items()
         }
         labels = [_without_defaults(note) for note in layout.get("annotations", ())]
-        return {**made, "annotations": [self._parted(note, _OWN_OF_LABEL) for note in labels]}
+        made["annotations"] = [self._parted(note, _OWN_OF_LABEL) for note in labels]
+        if "shapes" in layout:
+            made["shapes"] = [self._parted(shape, _OWN_OF_SHAPE) for shape in layout["shapes"]]
+        return made
 
     def _parted(self, whole: Mapping[str, Any], own: frozenset[str]) -> dict[str, Any]:
         looks = {key: value for key, value in whole.items() if key not in own}
@@ -134,15 +154,16 @@ class Fold:
 
 def _parted_sentences(sentences: Sequence[str]) -> tuple[str, list[str]] | None:
     """Return one sentence with gaps and each gap's words, or ``None`` where the sentences differ more."""
-    if not sentences or any(GAP in s or BETWEEN in s for s in sentences):
+    joined = "".join(sentences)
+    if not sentences or GAP in joined or BETWEEN in joined:
         return None
     rows = [_WORDS.split(sentence) for sentence in sentences]
-    if any(len(row) != len(rows[0]) for row in rows):
+    if len(set(map(len, rows))) > 1:
         return None
     with_gaps, words = "", []
     for place, column in enumerate(zip(*rows, strict=True)):
         first = column[0]
-        same = all(word == first for word in column)
+        same = column.count(first) == len(column)
         if place % 2 == 1 and not same:
             return None
         if same and not any(map(str.isdigit, first)):
@@ -234,7 +255,9 @@ def unfolded(script: bytes) -> dict[str, Any]:
             key: _whole(value, page) if key.startswith(("xaxis", "yaxis")) else value
             for key, value in figure["layout"].items()
         }
-        layout["annotations"] = [_whole(note, page) for note in layout["annotations"]]
+        for key in ("annotations", "shapes"):
+            if key in layout:
+                layout[key] = [_whole(part, page) for part in layout[key]]
         figure["layout"] = layout
     return page
 
@@ -251,7 +274,7 @@ def unpacked_lists(content: Mapping[str, Any]) -> list[list[Any]]:
 
 
 def _unfolded_trace(trace: dict[str, Any], page: dict[str, Any]) -> dict[str, Any]:
-    made, texts, lists = _whole(trace, page), page["texts"], page["lists"]
+    made, texts, lists = {"name": "", **_whole(trace, page)}, page["texts"], page["lists"]
     for key in _NUMBERS_OF_TRACE:
         if isinstance(made.get(key), int):
             made[key] = lists[made[key]]

@@ -13,7 +13,7 @@ from campaign.pages.calculator import record_href
 from campaign.pages.citation import citation
 from campaign.pages.generations import earlier_files_table
 from campaign.pages.page import Page
-from campaign.pages.tables import Column, Table
+from campaign.pages.tables import Column, Table, exported_columns
 
 CAMPAIGN_CHECKSUMS = "provenance/campaign_files.sha256"
 SITE_CHECKSUMS = "provenance/site_files.sha256"
@@ -102,7 +102,7 @@ def records_table(results: CampaignResults) -> Table | None:
 
 
 def _download(table: Table) -> Download:
-    columns = [c for c in table.frame.columns if not str(c).startswith("_")]
+    columns = exported_columns(table.frame, table.name)
     return Download(table.file, table.caption, len(table.frame), len(columns))
 
 

@@ -18,11 +18,13 @@ import pandas as pd
 from jinja2 import Environment, FileSystemLoader, StrictUndefined
 from markupsafe import Markup
 
+from campaign.keeping.store import Store
 from campaign.pages import numbers, slugs
 from campaign.pages.assets import asset_files
 from campaign.pages.definitions import defined_in, definitions_of
 from campaign.pages.drawing import marked, ready
 from campaign.pages.figures import Figure
+from campaign.pages.kept_pages import KeptPages, PageFiles
 from campaign.pages.legible import legible_value
 from campaign.pages.page import REHEARSED, Page, SiteFrame
 from campaign.pages.page_data import data_script, folded_row
@@ -30,8 +32,8 @@ from campaign.pages.static_figure import static_svg
 from campaign.pages.tables import (
     Cell,
     Table,
-    as_drawn,
     csv_bytes,
+    drawn_csv_bytes,
     in_reference,
     schema_bytes,
     shown_cells,
@@ -121,6 +123,7 @@ def render_site(
     reference: ReferenceQuantity = STRAIN,
     own_pages: Iterable[Page] = (),
     crew: Crew | None = None,
+    store: Store | None = None,
 ) -> dict[str, bytes]:
     """Return every file of the site by its address, sorted.
 
@@ -144,6 +147,8 @@ def render_site(
         Pages of modules and sensors, which have no number and no table that is a file; taken a few at a time.
     crew
         Who renders *own_pages*; this process where ``None``. The files are the same.
+    store
+        Where those that an earlier run rendered are found, and others kept; ``None`` goes without.
 
     Raises
     ------
@@ -155,9 +160,7 @@ def render_site(
     pages = pages_as_marked(frame, pages)
     written |= table_files([*tables, *(t for page in pages for t in page.tables)], reference, frame.origin)
     whole = RenderingTask(tuple(pages), frame, _strip(pages), tuple(further_templates), reference)
-    made = list(render_pages(whole))
-    for some in share_out(RENDERING, _tasks(whole, own_pages), crew or ThisProcess()):
-        made += some
+    made = [*render_pages(whole), *_own_page_files(whole, own_pages, crew or ThisProcess(), store)]
     _check_slugs(page.slug for page in made)
     for page in made:
         written |= page.further
@@ -178,19 +181,6 @@ class RenderingTask:
     reference: ReferenceQuantity
 
 
-@dataclass(frozen=True)
-class PageFiles:
-    """What one page became: its text, and its data script and its figures' CSV files by address.
-
-    Links to anchors of a page that is told in parts are not led there yet.
-    """
-
-    slug: str
-    file: str
-    html: str
-    further: dict[str, bytes]
-
-
 def render_pages(task: RenderingTask) -> tuple[PageFiles, ...]:
     """Return the files of some pages, in order."""
     jinja = _kept_environment(task.further_templates)
@@ -206,14 +196,39 @@ RENDERING = Work(
 """How pages are shared out; those that kill a worker are rendered by this process after all."""
 
 
-def _tasks(whole: RenderingTask, pages: Iterable[Page]) -> Iterator[RenderingTask]:
-    """Put pages together, a few a task, as they are made: others render while this process makes the next."""
+def _own_page_files(
+    whole: RenderingTask, pages: Iterable[Page], crew: Crew, store: Store | None
+) -> list[PageFiles]:
+    """Return the files of pages of modules and sensors: those of an earlier run, and those that are made."""
+    shared = whole.frame, whole.strip, whole.reference
+    kept = KeptPages(store or Store(None), (templates_folder(), *whole.further_templates), shared)
+    made: list[PageFiles] = []
+    marked = (as_marked(whole.frame, page) for page in pages)
+    wanted = _not_yet_rendered(marked, kept, made)
+    for some in share_out(RENDERING, (replace(whole, pages=few) for few in _few_at_a_time(wanted)), crew):
+        for page in some:
+            kept.keep(page)
+        made += some
+    return made
+
+
+def _few_at_a_time(pages: Iterable[Page]) -> Iterator[tuple[Page, ...]]:
+    """Put pages together as they are made: others render while this process makes the next."""
     waiting = iter(pages)
     while some := tuple(islice(waiting, PAGES_A_TASK)):
-        some = tuple(pages_as_marked(whole.frame, some))
-        if any(table.source is None for page in some for table in page.tables):
+        yield some
+
+
+def _not_yet_rendered(pages: Iterable[Page], kept: KeptPages, made: list[PageFiles]) -> Iterator[Page]:
+    """Yield the pages that no earlier run rendered; the files of the others are added to *made*."""
+    for page in pages:
+        if any(table.source is None for table in page.tables):
             raise ValueError("pages of modules and sensors show parts of the site's tables only")
-        yield replace(whole, pages=some)
+        found = kept.find(page)
+        if found is None:
+            yield page
+        else:
+            made.append(found)
 
 
 def _strip(pages: Iterable[Page]) -> tuple[Page, ...]:
@@ -229,14 +244,18 @@ def _page_files(jinja: Environment, task: RenderingTask, page: Page) -> PageFile
     further = {f"data/{page.slug}.js": data_script(page, figures, rows)}
     for figure in page.figures:
         if figure.data is not None:
-            data = as_drawn(in_reference(figure.data, task.reference))
-            further[_figure_csv(page, figure)] = csv_bytes(data)
+            further[_figure_csv(page, figure)] = drawn_csv_bytes(in_reference(figure.data, task.reference))
     return PageFiles(page.slug, page.file, _page_html(jinja, task, page, figures, tables), further)
 
 
 def pages_as_marked(frame: SiteFrame, pages: Sequence[Page]) -> Sequence[Page]:
     """Return *pages*; those of a rehearsal say in every figure and caption that nothing was measured."""
-    return [_as_rehearsal(page) for page in pages] if frame.rehearsal else pages
+    return [as_marked(frame, page) for page in pages]
+
+
+def as_marked(frame: SiteFrame, page: Page) -> Page:
+    """Return *page*; one of a rehearsal says in every figure and caption that nothing was measured."""
+    return _as_rehearsal(page) if frame.rehearsal else page
 
 
 def _as_rehearsal(page: Page) -> Page:
@@ -310,7 +329,15 @@ def _page_html(
 def without_indents(page: str) -> str:
     """Return a page without indents and empty lines, but for what is set as it stands (``pre``)."""
     parts = re.split(r"(<pre\b.*?</pre>)", page, flags=re.DOTALL)
-    return "".join(part if part.startswith("<pre") else re.sub(r"\s*\n\s*", "\n", part) for part in parts)
+    return "".join(part if part.startswith("<pre") else _without_indents(part) for part in parts)
+
+
+def _without_indents(text: str) -> str:
+    first, *others = text.split("\n")
+    if not others:
+        return text
+    lines = [line for line in map(str.strip, others[:-1]) if line]
+    return "\n".join([first.rstrip(), *lines, others[-1].lstrip()])
 
 
 def _placed_figure(page: Page, index: int, figure: Figure) -> PlacedFigure:

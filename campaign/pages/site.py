@@ -90,6 +90,7 @@ def build_site(
         reference=results.readings.reference,
         own_pages=own_pages(results, mapped),
         crew=_crew_for(results, workshop),
+        store=workshop.store if workshop is not None else None,
     )
 
 

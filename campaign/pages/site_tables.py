@@ -29,7 +29,8 @@ CAPTIONS: dict[str, str] = {
     "precision": "Repeatability, intermediate precision and spread between sensors and modules.",
     "component_tests": "Tests of components, with Holm’s correction.",
     "fit_certificates": "Evidence of the optimisation of every fit.",
-    "residuals": "Conditional and marginal residuals of the nested model.",
+    "residuals": "Conditional and marginal residuals of the nested model; trial, sensor and order say of "
+    "which reading.",
     "calibration_effort": "Error against calibration effort, predicted and left out.",
     "budget": "Every source of every budget, at zero, mid and full scale.",
     "layout": "Every node of every placement: adjusted and known, with errors beside predicted ones.",

@@ -77,10 +77,16 @@ class Panel:
 
     def holds(self, x: Floats, y: Floats, room: float) -> bool:
         """Return whether all places (but those that are not numbers) lie within the panel and its *room*."""
-        return bool(
-            np.all(~(x < self.left - room) & ~(x > self.right + room))
-            and np.all(~(y < self.top - room) & ~(y > self.bottom + room))
+        return _lies_within(x, self.left - room, self.right + room) and _lies_within(
+            y, self.top - room, self.bottom + room
         )
+
+
+def _lies_within(places: Floats, low: float, high: float) -> bool:
+    """Return whether no place lies below *low* or above *high*; those that are not numbers do not count."""
+    if not places.size:
+        return True
+    return not (np.fmin.reduce(places) < low or np.fmax.reduce(places) > high)
 
 
 def static_svg(figure: Figure, width: int = WIDTH) -> str:

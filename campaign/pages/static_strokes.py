@@ -95,8 +95,8 @@ def markers(symbol: str, x: Floats, y: Floats, size: float) -> str:
     if symbol in CAPS:
         shape = _DOT
     first = f"M{across[0] + shape.begin[0]} {upright[0] + shape.begin[1]}{shape.path}"
-    right = np.diff(across) + (shape.begin[0] - shape.end[0])
-    down = np.diff(upright) + (shape.begin[1] - shape.end[1])
+    right = across[1:] - across[:-1] + (shape.begin[0] - shape.end[0])
+    down = upright[1:] - upright[:-1] + (shape.begin[1] - shape.end[1])
     pairs = zip(right.tolist(), down.tolist(), strict=True)
     return (first + "".join(f"m{dx} {dy}{shape.path}" for dx, dy in pairs)).replace(" -", "-")
 
@@ -117,12 +117,12 @@ def _runs(x: Floats, y: Floats) -> list[tuple[npt.NDArray[np.int64], npt.NDArray
 
 def _unbroken(x: npt.NDArray[np.int64], y: npt.NDArray[np.int64], shape: str, flat: float = _FLAT) -> str:
     if shape == "hv":
-        pairs = zip(np.diff(x).tolist(), np.diff(y).tolist(), strict=True)
+        pairs = zip((x[1:] - x[:-1]).tolist(), (y[1:] - y[:-1]).tolist(), strict=True)
         return f"M{x[0]} {y[0]}" + "".join(f"h{dx}v{dy}" for dx, dy in pairs)
     x, y = _without_flat_points(x, y, flat)
     if len(x) == 1:
         return f"M{x[0]} {y[0]}h0"
-    return f"M{x[0]} {y[0]}l" + steps(np.diff(x).tolist(), np.diff(y).tolist())
+    return f"M{x[0]} {y[0]}l" + steps((x[1:] - x[:-1]).tolist(), (y[1:] - y[:-1]).tolist())
 
 
 def _without_flat_points(x: Any, y: Any, reach: float) -> tuple[Any, Any]:
@@ -136,6 +136,8 @@ def _without_flat_points(x: Any, y: Any, reach: float) -> tuple[Any, Any]:
         along = step_x * chord_x + step_y * chord_y
         off = np.abs(step_x * chord_y - step_y * chord_x)
         flat = (off <= reach * np.sqrt(square)) & (along >= 0) & (along <= square)
+        if not flat.any():
+            break
         flat[(turn % 2) :: 2] = False
         if not flat.any():
             continue

@@ -10,7 +10,7 @@ from __future__ import annotations
 import csv
 import math
 import re
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from io import StringIO
 from typing import Any, Literal
@@ -20,7 +20,12 @@ import orjson
 import pandas as pd
 
 from campaign.pages import numbers
-from campaign.pages.contract_columns import CONTRACT_COLUMNS, describe_column, unit_of_column
+from campaign.pages.contract_columns import (
+    CONTRACT_COLUMNS,
+    SAID_ELSEWHERE,
+    describe_column,
+    unit_of_column,
+)
 from campaign.recordings.intake_tables import spelled_paths
 from campaign.recordings.recording import ReferenceQuantity
 
@@ -122,14 +127,20 @@ class Cell:
 
 def shown_cells(table: Table) -> list[list[Cell]]:
     """Return the cells of the rows that the page shows, row by row, numbers padded to align by the point."""
-    frame = table.frame if table.shown_rows is None else table.frame.head(table.shown_rows)
+    frame = _shown(table)
     columns = [_column_cells(frame, column) for column in table.columns]
     return [list(row) for row in zip(*columns, strict=True)]
 
 
+def _shown(table: Table) -> pd.DataFrame:
+    """Return the rows that the page shows."""
+    frame, most = table.frame, table.shown_rows
+    return frame if most is None or len(frame) <= most else frame.head(most)
+
+
 def shown_marks(table: Table) -> list[tuple[str, str]]:
     """Return the module and sensor of each shown row, empty where the table has no such columns."""
-    frame = table.frame if table.shown_rows is None else table.frame.head(table.shown_rows)
+    frame = _shown(table)
     columns = [_texts_of(frame[key]) if key in frame else [""] * len(frame) for key in table.mark]
     return list(zip(columns[0], columns[1], strict=True))
 
@@ -146,39 +157,90 @@ def csv_bytes(frame: pd.DataFrame, name: str = "") -> bytes:
     KeyError
         Where a column of the contract is missing.
     """
-    exported = exported_frame(frame, name)
+    columns = _checked_columns(frame, name)
+    return _written(columns, [_fields_of(column, frame[column]) for column in columns])
+
+
+def drawn_csv_bytes(frame: pd.DataFrame) -> bytes:
+    """Return the file of a figure: columns of numbers to :data:`DIGITS_OF_FIGURES` of their largest one.
+
+    Files of figures hold no more: what was measured has fewer digits, a picture shows four, and what was
+    computed stands in full precision in the tables.
+    """
+    columns = _checked_columns(frame, "")
+    return _written(columns, [_drawn_fields_of(column, frame[column]) for column in columns])
+
+
+def _written(columns: Sequence[str], fields: Sequence[Sequence[object]]) -> bytes:
     stream = StringIO(newline="")
     writer = csv.writer(stream, lineterminator="\n")
-    writer.writerow(exported.columns)
-    writer.writerows(zip(*(_fields_of(values) for _, values in exported.items()), strict=True))
+    writer.writerow(columns)
+    writer.writerows(zip(*fields, strict=True))
     return stream.getvalue().encode("utf-8")
 
 
-def _fields_of(values: pd.Series[Any]) -> list[object]:
-    """Fields of a column: nothing where a value is missing, infinity as a Table Schema spells it."""
-    fields: list[object] = values.tolist()
+def _drawn_fields_of(column: str, values: pd.Series[Any]) -> list[object]:
+    if values.dtype != np.dtype(float):
+        return _fields_of(column, values)
     held = values.to_numpy()
-    if held.dtype.kind in "biu":
+    return _number_fields(np.round(held, _decimals_of_figures(held)))
+
+
+def _fields_of(column: str, values: pd.Series[Any]) -> list[object]:
+    """Fields of a column: nothing where a value is missing, infinity as a Table Schema spells it.
+
+    Truth values are true and false, and no file's name is spelled so that a spreadsheet runs it.
+    """
+    if column == "file":
+        values = spelled_paths(values.to_frame("file"))["file"]
+    held = values.to_numpy()
+    if values.dtype == np.dtype(float):
+        return _number_fields(held)
+    fields: list[object] = values.tolist()
+    if held.dtype.kind == "b":
+        return ["true" if held else "false" for held in fields]
+    if held.dtype.kind in "iu":
         return fields
     for row in np.flatnonzero(pd.isna(held)).tolist():
         fields[row] = None
-    if held.dtype.kind == "f":
-        for row in np.flatnonzero(np.isinf(held)).tolist():
-            fields[row] = "INF" if held[row] > 0 else "-INF"
+    return fields
+
+
+def _number_fields(held: np.ndarray[Any, Any]) -> list[object]:
+    """Fields of doubles: the shortest text that leads back to the very same number."""
+    if not len(held):
+        return []
+    written = orjson.dumps(np.ascontiguousarray(held), option=orjson.OPT_SERIALIZE_NUMPY)
+    fields: list[object] = list(written.decode("ascii")[1:-1].split(","))
+    for row in np.flatnonzero(~np.isfinite(held)).tolist():
+        fields[row] = None if math.isnan(held[row]) else "INF" if held[row] > 0 else "-INF"
     return fields
 
 
 def exported_frame(frame: pd.DataFrame, name: str = "") -> pd.DataFrame:
     """Return what table *name* exports of *frame*, in order, truth values as true and false."""
-    contract = contract_of(name, frame)
-    missing = [column for column in contract if column not in frame]
-    if missing:
-        raise KeyError(f"table {name} lacks {', '.join(missing)}")
-    further = [c for c in frame.columns if c not in contract and not str(c).startswith("_")]
-    exported = spelled_paths(frame[[*contract, *further]])
+    exported = spelled_paths(frame[_checked_columns(frame, name)])
     truths = [str(column) for column, kind in exported.dtypes.items() if kind == np.dtype(bool)]
     words = {column: exported[column].map({True: "true", False: "false"}) for column in truths}
     return exported.assign(**words) if words else exported
+
+
+def _checked_columns(frame: pd.DataFrame, name: str) -> list[str]:
+    missing = [column for column in contract_of(name, frame) if column not in frame]
+    if missing:
+        raise KeyError(f"table {name} lacks {', '.join(missing)}")
+    return exported_columns(frame, name)
+
+
+def exported_columns(frame: pd.DataFrame, name: str = "") -> list[str]:
+    """Return the columns that table *name* exports of *frame*, in order.
+
+    Columns of :data:`SAID_ELSEWHERE` are left out where the column that leads to the same is there.
+    """
+    contract = contract_of(name, frame)
+    left_out = {column for column, by in SAID_ELSEWHERE.get(name, {}).items() if by in frame}
+    apart = left_out.union(contract)
+    return [*contract, *(c for c in frame.columns if c not in apart and not str(c).startswith("_"))]
 
 
 def contract_of(name: str, frame: pd.DataFrame) -> list[str]:
@@ -203,19 +265,8 @@ def in_reference(frame: pd.DataFrame, reference: ReferenceQuantity) -> pd.DataFr
     return frame.drop(columns=taken).rename(columns=names)
 
 
-DIGITS_OF_FIGURES = 7
+DIGITS_OF_FIGURES = 6
 """Significant digits of numbers in the files of figures, of each column's largest number."""
-
-
-def as_drawn(frame: pd.DataFrame) -> pd.DataFrame:
-    """Return *frame* with every column of numbers rounded to :data:`DIGITS_OF_FIGURES` of its largest one.
-
-    Files of figures hold no more: what was measured has fewer digits, a picture shows four, and what was
-    computed stands in full precision in the tables.
-    """
-    numbers_of = {str(c): frame[c].to_numpy() for c, kind in frame.dtypes.items() if kind == np.dtype(float)}
-    rounded = {c: np.round(held, _decimals_of_figures(held)) for c, held in numbers_of.items()}
-    return frame.assign(**rounded) if rounded else frame
 
 
 def without_told_trial(frame: pd.DataFrame) -> pd.DataFrame:

@@ -79,7 +79,10 @@ def _refit_all(readings: bytes, schema: bytes, certificates: bytes) -> tuple[Ref
 
 
 def readings_table(readings: bytes, schema: bytes) -> pd.DataFrame:
-    """Return ``readings.csv`` as the table that the analyses take, typed by its schema."""
+    """Return ``readings.csv`` as the table that the analyses take, typed by its schema.
+
+    The reference value stands there once: ``x`` is the strain where there is one.
+    """
     resources = {resource["name"]: resource for resource in json.loads(schema)["resources"]}
     table = pd.read_csv(io.BytesIO(readings), dtype=str, keep_default_na=False)
     for field in resources["readings"]["schema"]["fields"]:
@@ -89,7 +92,7 @@ def readings_table(readings: bytes, schema: bytes) -> pd.DataFrame:
             table[name] = numbers.astype(np.int64) if field["type"] == "integer" else numbers
         elif field["type"] == "boolean":
             table[name] = table[name] == "true"
-    return table
+    return table if "x" in table else table.assign(x=table["strain"])
 
 
 def _refit(model: VarianceModel, criterion: float) -> Refit:

@@ -78,15 +78,19 @@ window.campaign = window.campaign || {};
     return drawing;
   }
 
+  /* It is out of the page's layout until it is drawn: the library measures its texts elsewhere, one by one, and each
+     time the page would be laid out anew. */
   function makeLive(figure) {
     if (figure.live || figure.stays) return Promise.resolve();
     const live = document.createElement("div");
     live.className = "live";
     live.setAttribute("aria-hidden", "true");
+    live.hidden = true;
     figure.plot.append(live);
     figure.live = live;
     const made = drawn(figure, figure.wanted);
     const drawing = library.newPlot(live, made.data, made.layout, CONFIG).then(function () {
+      live.hidden = false;
       figure.plot.classList.add("is-live");
       figure.live.on("plotly_click", follow);
       figure.live.on("plotly_hover", (event) => live.classList.toggle("leads", Boolean(address(event.points[0]))));

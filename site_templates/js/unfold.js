@@ -1,4 +1,4 @@
-/* The page's data as every other script reads it: what traces, axes and labels share is put back into each,
+/* The page's data as every other script reads it: what traces, axes, shapes and labels share is put back into each,
    numbers are unpacked, sentences filled with their words, links with their addresses. pages/page_data.py folds them. */
 "use strict";
 
@@ -59,7 +59,7 @@
   }
 
   function trace(folded, shared, lists, texts) {
-    const made = whole(folded, shared);
+    const made = Object.assign({ name: "" }, whole(folded, shared));
     for (const key of ["x", "y", "base"]) if (typeof folded[key] === "number") made[key] = lists[folded[key]];
     for (const key of ["error_x", "error_y"]) if (folded[key]) made[key] = bars(folded[key], shared, lists);
     const points = (made.x || []).length;
@@ -87,7 +87,9 @@
       for (const key of Object.keys(figure.layout)) {
         if (/^[xy]axis\d*$/.test(key)) figure.layout[key] = whole(figure.layout[key], content.shared);
       }
-      figure.layout.annotations = figure.layout.annotations.map((note) => whole(note, content.shared));
+      for (const key of ["annotations", "shapes"]) {
+        if (figure.layout[key]) figure.layout[key] = figure.layout[key].map((part) => whole(part, content.shared));
+      }
     }
   };
 

@@ -51,10 +51,13 @@ def test_looks_axes_and_labels_come_back_and_stand_once() -> None:
         figures.line([0, 1, math.nan], [i, 1, 2], axes=figures.panel(i), module=title)
         for i, title in enumerate(titles)
     ]
-    figure = ready(Figure("toy", "c", "a", tuple(traces), layout))
+    lines = [figures.level_line(level) for level in (0.0, 1.0)]
+    figure = ready(Figure("toy", "c", "a", tuple(traces), {**layout, "shapes": lines}))
     script = data_script(Page("index", 0, "t", "toy.html"), {"toy": figure})
     back = unfolded(script)["figures"]["toy"]
-    assert script.count(b'"dash"') == len({str(t.get("xaxis")) for t in traces})
+    assert script.count(b'"dash"') == 2
+    assert back["layout"]["shapes"] == lines
+    assert b'"name"' not in script
     for written, trace in zip(figure.traces, back["traces"], strict=True):
         assert trace == {**written, "x": [0.0, 1.0, None]}
     for key in ("xaxis", "yaxis3"):

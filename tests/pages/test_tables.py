@@ -9,20 +9,23 @@ import math
 import numpy as np
 import pandas as pd
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 
 from campaign.pages.contract_columns import CONTRACT_COLUMNS
 from campaign.pages.tables import (
     Column,
     Table,
-    as_drawn,
     csv_bytes,
+    drawn_csv_bytes,
+    exported_columns,
     in_reference,
     schema_bytes,
     shown_cells,
     shown_marks,
     sort_beside,
 )
-from campaign.recordings.recording import ELONGATION, STRAIN
+from campaign.recordings.recording import ELONGATION, LENGTH, STRAIN
 
 
 def frame() -> pd.DataFrame:
@@ -115,14 +118,12 @@ def test_a_cell_says_what_it_sorts_by_only_where_its_text_does_not(
     assert sort_beside(text, value) == sort
 
 
-def test_files_of_figures_hold_seven_digits_of_each_column() -> None:
+def test_files_of_figures_hold_six_digits_of_each_column() -> None:
     frame = pd.DataFrame(
         {"a": [1 / 3, 1000 / 3, np.nan], "b": ["x", "y", "z"], "c": [1e-9 / 3, 0.0, -np.inf]}
     )
-    rounded = as_drawn(frame)
-    assert rounded["a"].tolist()[:2] == [0.3333, 333.3333]
-    assert rounded["c"].tolist() == [3.333333e-10, 0.0, -np.inf]
-    assert rounded["b"].tolist() == ["x", "y", "z"]
+    written = drawn_csv_bytes(frame).decode()
+    assert written == "a,b,c\n0.333,x,3.33333e-10\n333.333,y,0.0\n,z,-INF\n"
     assert frame["a"][0] == 1 / 3
 
 
@@ -171,3 +172,25 @@ def test_infinite_limits_are_spelled_as_a_table_schema_wants_them() -> None:
     assert csv_bytes(limits).decode().split() == ["low,high", "-INF,INF", f"0.1,{1 / 3!r}"]
     fields = json.loads(schema_bytes({"t": limits}))["resources"][0]["schema"]["fields"]
     assert [field["type"] for field in fields] == ["number", "number"]
+
+
+def test_the_files_leave_out_what_another_column_leads_to() -> None:
+    columns = [*CONTRACT_COLUMNS["readings"], "x", "elongation_mm", "rest_length_mm", "dwell_s"]
+    rows = pd.DataFrame({name: [1.0] for name in columns})
+    assert exported_columns(rows, "readings") == [*CONTRACT_COLUMNS["readings"], "dwell_s"]
+    in_millimetres = in_reference(rows, LENGTH)
+    assert "x" in exported_columns(in_millimetres, "readings")
+    residuals = pd.DataFrame(
+        {"module": ["M1"], "trial": ["a"], "sensor": ["AB"], "order": [1], "marginal": [0.5]}
+    )
+    assert csv_bytes(residuals, "residuals") == b"trial,sensor,order,marginal\na,AB,1,0.5\n"
+    assert list(residuals) == ["module", "trial", "sensor", "order", "marginal"]
+
+
+@given(st.lists(st.floats(), min_size=1))
+def test_every_number_of_a_file_comes_back_bit_by_bit(values: list[float]) -> None:
+    fields = csv_bytes(pd.DataFrame({"value": values, "row": range(len(values))})).decode().splitlines()[1:]
+    spelled = {"": "nan", "INF": "inf", "-INF": "-inf"}
+    back = [float(spelled.get(cell, cell)) for cell in (line.split(",")[0] for line in fields)]
+    np.testing.assert_array_equal(np.array(back), np.array(values))
+    assert np.array_equal(np.signbit(back), np.signbit(values) & ~np.isnan(values))
