@@ -30,7 +30,7 @@ from campaign.pages.layout_sections import module_shapes
 from campaign.pages.loop_sections import module_widths_figure
 from campaign.pages.module_share import ModuleShares
 from campaign.pages.page import Page
-from campaign.pages.rows import of_module, of_sensor
+from campaign.pages.rows import of_module, of_sensor, records_of
 from campaign.pages.sensor import FIGURE_ORDER
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
 from campaign.pages.sensor_parts import sensor_keys
@@ -173,7 +173,7 @@ def _trials_of(results: CampaignResults, module: str) -> list[dict[Hashable, Any
     rows = rows[rows["sensor"].astype(str) != ""].drop_duplicates(["file", "sensor"])
     return [
         {**row, "href": slugs.trial_href(module, str(row["sensor"]), str(row["file"]))}
-        for row in rows.sort_values(["sensor", "started", "file"], kind="stable").to_dict("records")
+        for row in records_of(rows.sort_values(["sensor", "started", "file"], kind="stable"))
     ]
 
 
@@ -186,7 +186,7 @@ def module_lines_figure(
     readings = _used_readings(results, str(lines["module"].iloc[0]))
     traces: list[Trace] = []
     labels: list[Layout] = []
-    for index, row in enumerate(lines.to_dict("records")):
+    for index, row in enumerate(records_of(lines)):
         style = palette.GENERATION_STYLES[index % len(palette.GENERATION_STYLES)]
         module, sensor = str(row["module"]), str(row["sensor"])
         ends = pd.Series([row["strain_low"], row["strain_high"]], dtype=float)
@@ -261,7 +261,7 @@ def module_merits_figure(results: CampaignResults, module: str) -> Figure | None
                 text=[
                     f"{module} {sensor}: {r['figure']} "
                     f"{numbers.interval(r['estimate'], r['low'], r['high'], '%FSO')}"
-                    for r in rows.to_dict("records")
+                    for r in records_of(rows)
                 ],
                 links=[slugs.sensor_href(module, str(sensor))] * len(rows),
                 module=module,
@@ -315,7 +315,7 @@ def module_effects_figure(results: CampaignResults, module: str, where: SensorAx
     unit = str(rows["unit"].iloc[0])
     text = [
         f"{module} {r['sensor']}: {numbers.interval(r['estimate'], r['low'], r['high'], unit)}"
-        for r in rows.to_dict("records")
+        for r in records_of(rows)
     ]
     ticks = [(where.places[key], key[2]) for key in where.places]
     return Figure(
@@ -346,7 +346,7 @@ def shared_trials(
     sections: list[SharedTrial] = []
     plots: list[Figure] = []
     first = wide.sort_values(["started", "file"], kind="stable").drop_duplicates("file")
-    for index, row in enumerate(first.to_dict("records"), 1):
+    for index, row in enumerate(records_of(first), 1):
         own = wide[wide["file"] == row["file"]]
         plot = None
         if str(row["kind"]) == "layout":

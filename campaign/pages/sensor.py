@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Hashable, Iterator, Mapping, Sequence
+from collections.abc import Hashable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -22,6 +22,7 @@ from campaign.pages.layout_sections import lengths_said
 from campaign.pages.loop_sections import sensor_loops
 from campaign.pages.module_share import ModuleShares
 from campaign.pages.page import Page
+from campaign.pages.rows import Row, records_of
 from campaign.pages.sensor_parts import SensorParts, gather_sensors
 from campaign.pages.sensor_plots import half_widths, moved_from_line, sensor_figures_of
 from campaign.pages.skin_map import SkinMap
@@ -250,15 +251,11 @@ def trial_sections(parts: SensorParts, together: Mapping[tuple[str, str], set[st
     return sections
 
 
-_OF_TRIAL = ("file", "kind", "started", "session", "repetition", "fate")
-
-
-def _trials_in_order(trials: pd.DataFrame) -> list[dict[str, Any]]:
+def _trials_in_order(trials: Iterable[Row]) -> list[Row]:
     """Return the first row of every file, by time and file, those without a time last."""
-    rows = zip(*(trials[key].tolist() for key in _OF_TRIAL), strict=True)
-    first: dict[str, dict[str, Any]] = {}
-    for row in rows:
-        first.setdefault(str(row[0]), dict(zip(_OF_TRIAL, row, strict=True)))
+    first: dict[str, Row] = {}
+    for row in trials:
+        first.setdefault(str(row["file"]), row)
     return sorted(
         first.values(), key=lambda t: (not _text(t["started"]), _text(t["started"]), str(t["file"]))
     )
@@ -266,7 +263,7 @@ def _trials_in_order(trials: pd.DataFrame) -> list[dict[str, Any]]:
 
 def _runs_by_trial(parts: SensorParts) -> dict[str, list[dict[Hashable, Any]]]:
     runs: dict[str, list[dict[Hashable, Any]]] = {}
-    for run in parts.runs.to_dict("records"):
+    for run in records_of(parts.runs):
         runs.setdefault(str(run["trial"]), []).append(run)
     return runs
 
