@@ -22,7 +22,7 @@ from campaign.pages.layout_sections import lengths_said
 from campaign.pages.loop_sections import sensor_loops
 from campaign.pages.module_share import ModuleShares
 from campaign.pages.page import Page
-from campaign.pages.rows import Row, records_of
+from campaign.pages.rows import Row
 from campaign.pages.sensor_parts import SensorParts, gather_sensors
 from campaign.pages.sensor_plots import half_widths, moved_from_line, sensor_figures_of
 from campaign.pages.skin_map import SkinMap
@@ -263,7 +263,7 @@ def _trials_in_order(trials: Iterable[Row]) -> list[Row]:
 
 def _runs_by_trial(parts: SensorParts) -> dict[str, list[dict[Hashable, Any]]]:
     runs: dict[str, list[dict[Hashable, Any]]] = {}
-    for run in records_of(parts.runs):
+    for run in parts.run_rows:
         runs.setdefault(str(run["trial"]), []).append(run)
     return runs
 

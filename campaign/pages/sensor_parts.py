@@ -67,8 +67,8 @@ class SensorParts:
         Calibration records of all branches, and the one that stands for it.
     readings
         Its readings as figures draw them, in the order of runs.
-    runs
-        Rows of its run lines of the branch that stands for it.
+    runs, run_rows
+        Its run lines of the branch that stands for it: the rows of the table, and the same as mappings.
     ordinary
         Its ordinary least-squares line, for comparison.
     merits
@@ -87,6 +87,7 @@ class SensorParts:
     records: tuple[CalibrationRecord, ...]
     readings: tuple[PlottedReading, ...]
     runs: pd.DataFrame
+    run_rows: tuple[Row, ...]
     ordinary: Row | None
     merits: tuple[Row, ...]
     limits: pd.DataFrame
@@ -164,8 +165,9 @@ def _parts(
         return of_sensor(tables[name], *pair) if name in tables else pd.DataFrame()
 
     line, ordinary, register = (next(iter(rows(name)), None) for name in ("lines", "ordinary", "register"))
-    runs = table("runs")
+    runs, run_rows = table("runs"), rows("runs")
     if line is not None:
+        run_rows = [run for run in run_rows if run["branch"] == line["branch"]]
         runs = runs[(runs["branch"] == line["branch"]).to_numpy(bool)]
     return SensorParts(
         *key,
@@ -174,6 +176,7 @@ def _parts(
         records=tuple(records),
         readings=tuple(plotted_readings(plotted.get(pair, ()), line, reference)),
         runs=runs,
+        run_rows=tuple(run_rows),
         ordinary=ordinary,
         merits=tuple(rows("merits")),
         limits=table("limits"),
@@ -247,7 +250,7 @@ def plotted_readings(
         level = nominal if math.isfinite(nominal) else x
         if level not in said:
             said[level] = numbers.significant(numbers.rounded_to(level, width) * factor, 3, shown_unit)
-        value = numbers.measured(signal, error, unit, missing=numbers.significant(signal, 5, unit))
+        value = numbers.measured(signal, error, unit, missing="") or numbers.significant(signal, 5, unit)
         yield PlottedReading(
             run=(str(session), int(repetition), str(trial)),
             order=int(order),
