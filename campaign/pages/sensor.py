@@ -20,7 +20,7 @@ from campaign.pages.drift import sensor_holds
 from campaign.pages.influence_sections import sensor_influences
 from campaign.pages.layout_sections import lengths_said
 from campaign.pages.loop_sections import sensor_loops
-from campaign.pages.module_share import ModuleShares
+from campaign.pages.module_share import AllModules, ModuleShare
 from campaign.pages.page import Page
 from campaign.pages.rows import Row
 from campaign.pages.sensor_parts import SensorParts, gather_sensors
@@ -83,25 +83,15 @@ class TrialSection:
     shared_with: tuple[str, ...]
 
 
-def sensor_pages(
-    results: CampaignResults, mapped: SkinMap, shares: ModuleShares | None = None
-) -> Iterator[Page]:
-    """Yield the page of every sensor that a trial names, neighbours linked in order.
-
-    *shares* are the results module by module, where they are parted already.
-    """
-    shares = shares or ModuleShares(results)
-    labels = {} if results.calibration is None else results.calibration.labels
+def sensor_pages(share: ModuleShare, common: AllModules) -> Iterator[Page]:
+    """Yield the page of every sensor of a module, neighbours linked in order."""
+    results = share.results
     together = _sensors_by_trial(results.intake.trials)
-    sensors = gather_sensors(results)
     laid = lengths_said(results)
-    links = [(f"{s.module} {s.sensor}", slugs.sensor_href(s.module, s.sensor)) for s in sensors]
-    for i, parts in enumerate(sensors):
-        yield replace(
-            _sensor_page(shares.of(parts.module), parts, mapped, labels, together, laid),
-            previous=links[i - 1] if i else None,
-            following=links[i + 1] if i + 1 < len(links) else None,
-        )
+    sensors = gather_sensors(results, share.keys)
+    for parts, (previous, following) in zip(sensors, share.sensor_neighbours, strict=True):
+        page = _sensor_page(results, parts, common.mapped, together, laid)
+        yield replace(page, previous=previous, following=following)
 
 
 def _sensors_by_trial(trials: pd.DataFrame) -> dict[tuple[str, str], set[str]]:
@@ -116,7 +106,6 @@ def _sensor_page(
     results: CampaignResults,
     parts: SensorParts,
     mapped: SkinMap,
-    labels: Mapping[str, str],
     together: Mapping[tuple[str, str], set[str]],
     laid: Mapping[tuple[str, str, str], str],
 ) -> Page:
@@ -156,7 +145,7 @@ def _sensor_page(
             },
             "register": register_facts(parts.register),
             "used": parts.used,
-            "labels": labels,
+            "labels": {} if results.calibration is None else results.calibration.labels,
             "ordinary": parts.ordinary,
         },
         figures=(*sensor_figures_of(parts), *outlines, *swept, *holds),

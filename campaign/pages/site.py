@@ -22,9 +22,9 @@ from campaign.pages.layout import layout_page
 from campaign.pages.layout_scripts import layout_scripts
 from campaign.pages.loop_figures import loop_scripts
 from campaign.pages.method import method_pages
-from campaign.pages.module import module_pages
-from campaign.pages.module_share import ModuleShares
+from campaign.pages.module_share import all_modules, module_shares
 from campaign.pages.notes import Notes
+from campaign.pages.own_pages import pages_of_module
 from campaign.pages.page import Page, SiteFrame
 from campaign.pages.planning import planning_page
 from campaign.pages.pressure import pressure_page
@@ -32,7 +32,6 @@ from campaign.pages.provenance import provenance_page
 from campaign.pages.recordings import recordings_page
 from campaign.pages.render import render_site
 from campaign.pages.residuals import residual_files, residuals_page
-from campaign.pages.sensor import sensor_pages
 from campaign.pages.sensor_parts import sensor_keys
 from campaign.pages.site_tables import site_tables
 from campaign.pages.skin_map import SkinMap
@@ -99,7 +98,8 @@ def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
     A page appears only for what was measured.
     """
     mapped = campaign_map(results)
-    pages = [*pages_of_campaign(results, mapped), *own_pages(results, mapped), *notes.pages]
+    own = sorted(own_pages(results, mapped), key=lambda page: bool(page.above))  # modules first
+    pages = [*pages_of_campaign(results, mapped), *own, *notes.pages]
     return [*pages, provenance_page(results, _all_tables(results, pages))]
 
 
@@ -123,10 +123,10 @@ def pages_of_campaign(results: CampaignResults, mapped: SkinMap) -> list[Page]:
 
 
 def own_pages(results: CampaignResults, mapped: SkinMap) -> Iterator[Page]:
-    """Yield the pages of modules, then those of sensors; none has a table that is a file of its own."""
-    shares = ModuleShares(results)
-    yield from module_pages(results, mapped, shares)
-    yield from sensor_pages(results, mapped, shares)
+    """Yield the page of every module and those of its sensors; none has a table that is a file of its own."""
+    common = all_modules(results, mapped)
+    for share in module_shares(results):
+        yield from pages_of_module(share, common)
 
 
 def _all_tables(results: CampaignResults, pages: Sequence[Page]) -> list[Table]:
