@@ -26,6 +26,12 @@ from campaign.recordings.intake import Intake
 MERITS_OF_MODULES = ("linearity", "hysteresis", "repeatability")
 """Figures of merit in %FSO that a module's page draws, in order."""
 
+READING_COLUMNS_SHOWN = (
+    *("module", "sensor", "session", "repetition", "trial", "order", "direction", "nominal_level", "x"),
+    *("signal", "unit", "standard_error", "used"),
+)
+"""Columns of readings that pages of modules and sensors are made from."""
+
 Link = tuple[str, str]
 """Text and address."""
 
@@ -132,7 +138,7 @@ def results_of_module(results: CampaignResults, module: str) -> CampaignResults:
     """
     changed: dict[str, Any] = {
         "intake": _own_intake(results.intake, module),
-        "readings": replace(results.readings, table=of_module(results.readings.table, module), notices=()),
+        "readings": replace(results.readings, table=_shown(results.readings.table, module), notices=()),
         "limits": _own_limits(results.limits, module),
         "variance": None if results.variance is None else _own_parts(results.variance, module, "effects"),
         "residuals": None,
@@ -174,8 +180,14 @@ def _own_limits(limits: Limits, module: str) -> Limits:
 
 
 def _own_calibration(calibration: Calibration, module: str) -> Calibration:
-    tables = "readings", "sensor_lines", "run_lines", "level_hysteresis", "ordinary_lines"
-    return _own_parts(calibration, module, *tables, "records")
+    tables = "sensor_lines", "run_lines", "level_hysteresis", "ordinary_lines"
+    own = _own_parts(calibration, module, *tables, "records")
+    return replace(own, readings=_shown(calibration.readings, module))
+
+
+def _shown(readings: pd.DataFrame, module: str) -> pd.DataFrame:
+    """Return the readings of *module* with the columns that its pages are made from."""
+    return of_module(readings, module)[[name for name in READING_COLUMNS_SHOWN if name in readings]]
 
 
 def _own_pressure(pressure: Pressure, module: str) -> Pressure:

@@ -2,12 +2,74 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass, replace
+
+from campaign.analyses.results import CampaignResults
 from campaign.pages.module import module_page
-from campaign.pages.module_share import AllModules, ModuleShare
+from campaign.pages.module_share import AllModules, ModuleShare, all_modules, module_shares
 from campaign.pages.page import Page
+from campaign.pages.render import PageFiles, RenderingTask, pages_as_marked, render_pages
 from campaign.pages.sensor import sensor_pages
+from campaign.pages.skin_map import SkinMap
+from campaign.workers.crew import Crew
+from campaign.workers.sharing import Work, share_out
+
+IN_HAND = 1000
+"""Modules in hand, a worker: all of them, so that this process can do its own part meanwhile."""
+
+
+@dataclass(frozen=True)
+class MakingTask:
+    """One module whose pages, and those of its sensors, are to be made and rendered by any process."""
+
+    share: ModuleShare
+    common: AllModules
+    rendering: RenderingTask
 
 
 def pages_of_module(share: ModuleShare, common: AllModules) -> tuple[Page, ...]:
     """Return the page of a module and those of its sensors."""
     return module_page(share, common), *sensor_pages(share, common)
+
+
+def make_and_render(task: MakingTask) -> tuple[PageFiles, ...]:
+    """Return the files of the pages of one module and its sensors."""
+    pages = pages_as_marked(task.rendering.frame, pages_of_module(task.share, task.common))
+    return render_pages(replace(task.rendering, pages=tuple(pages)))
+
+
+MAKING = Work(make_and_render, lambda task: [task], make_and_render)
+"""How modules are shared out; one that kills a worker is done by this process after all."""
+
+
+def files_of_modules(
+    results: CampaignResults,
+    mapped: SkinMap,
+    crew: Crew,
+    rendering: RenderingTask,
+    meanwhile: Callable[[], None],
+) -> Iterator[tuple[PageFiles, ...]]:
+    """Yield the files of the pages of every module and its sensors.
+
+    Parameters
+    ----------
+    results
+        What one run of the report found out.
+    mapped
+        The skin map.
+    crew
+        Who makes and renders them.
+    rendering
+        What all pages share, without pages.
+    meanwhile
+        What this process does, once, while others work.
+    """
+    common = all_modules(results, mapped)
+
+    def tasks() -> Iterator[MakingTask]:
+        for share in module_shares(results):
+            yield MakingTask(share, common, rendering)
+        meanwhile()
+
+    return share_out(MAKING, tasks(), crew, IN_HAND)

@@ -7,7 +7,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from functools import lru_cache, partial
 from itertools import islice
@@ -121,12 +121,13 @@ def render_site(
     frame: SiteFrame,
     pages: Sequence[Page],
     tables: Sequence[Table] = (),
-    files: Mapping[str, bytes] | None = None,
+    files: Mapping[str, bytes] | Callable[[], Mapping[str, bytes]] | None = None,
     plot_library: Path | None = None,
     further_templates: Sequence[Path] = (),
     reference: ReferenceQuantity = STRAIN,
     own_pages: Iterable[Page] = (),
     crew: Crew | None = None,
+    own_making: OwnMaking | None = None,
 ) -> dict[str, bytes]:
     """Return every file of the site by its address, sorted.
 
@@ -139,7 +140,7 @@ def render_site(
     tables
         Tables that are files of the site beside those that pages show.
     files
-        Further files by address (calibration records, pictures of notes).
+        Further files by address (calibration records, pictures of notes), or what makes them.
     plot_library
         A build of the plot library to use instead of the one that plotly carries.
     further_templates
@@ -150,6 +151,8 @@ def render_site(
         Pages of modules and sensors, which have no number and no table that is a file; taken a few at a time.
     crew
         Who renders *own_pages*; this process where ``None``. The files are the same.
+    own_making
+        Makes and renders the pages of modules and sensors instead, while this process renders the others.
 
     Raises
     ------
@@ -157,13 +160,24 @@ def render_site(
         Where two pages or two different tables would be one file.
     """
     _check_slugs(page.slug for page in pages)
-    written: dict[str, bytes] = dict(files or {})
+    written: dict[str, bytes] = {}
     pages = pages_as_marked(frame, pages)
-    written |= table_files([*tables, *(t for page in pages for t in page.tables)], reference, frame.origin)
     whole = RenderingTask(tuple(pages), frame, _strip(pages), tuple(further_templates), reference)
-    made = list(render_pages(whole))
-    for some in share_out(RENDERING, _tasks(whole, own_pages), crew or ThisProcess()):
-        made += some
+    made: list[PageFiles] = []
+
+    def others() -> None:
+        shown = (table for page in pages for table in page.tables)
+        written.update(files() if callable(files) else files or {})
+        written.update(table_files([*tables, *shown], reference, frame.origin))
+        made.extend(render_pages(whole))
+
+    if own_making is not None:
+        for some in own_making(replace(whole, pages=()), others):
+            made += some
+    else:
+        others()
+        for some in share_out(RENDERING, _tasks(whole, own_pages), crew or ThisProcess()):
+            made += some
     _check_slugs(page.slug for page in made)
     for page in made:
         written |= page.further
@@ -195,6 +209,10 @@ class PageFiles:
     file: str
     html: str
     further: dict[str, bytes]
+
+
+OwnMaking = Callable[[RenderingTask, Callable[[], None]], Iterable[tuple[PageFiles, ...]]]
+"""Given what all pages share, and what this process is to do meanwhile, once: the files of own pages."""
 
 
 def render_pages(task: RenderingTask) -> tuple[PageFiles, ...]:

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
+from functools import partial
 from pathlib import Path
 
 from campaign import __version__
@@ -24,7 +25,7 @@ from campaign.pages.loop_figures import loop_scripts
 from campaign.pages.method import method_pages
 from campaign.pages.module_share import all_modules, module_shares
 from campaign.pages.notes import Notes
-from campaign.pages.own_pages import pages_of_module
+from campaign.pages.own_pages import files_of_modules, pages_of_module
 from campaign.pages.page import Page, SiteFrame
 from campaign.pages.planning import planning_page
 from campaign.pages.pressure import pressure_page
@@ -41,7 +42,7 @@ from campaign.workers.crew import Crew, LocalProcesses, ThisProcess
 from campaign.workers.workshop import Workshop
 
 PAGES_WORTH_SHARING = 150
-"""From so many pages of modules and sensors on, other processes render them while this one makes them."""
+"""From so many pages of modules and sensors on, other processes make and render them."""
 
 
 def build_site(
@@ -72,24 +73,31 @@ def build_site(
     mapped = campaign_map(results)
     pages = [*pages_of_campaign(results, mapped), *notes.pages]
     pages.append(provenance_page(results, _all_tables(results, pages)))
-    records = results.calibration.records if results.calibration is not None else ()
+    crew = _crew_for(results, workshop)
+    shared = crew.hands > 1
     return render_site(
         site_frame(results),
         pages,
         site_tables(results, pages),
-        files={
-            **(notes.files or {}),
-            **record_files(records, site_frame(results).origin),
-            **residual_files(results),
-            **loop_scripts(results.hysteresis),
-            **budget_scripts(results.budget),
-            **layout_scripts(results.layout),
-        },
+        files=partial(_further_files, results, notes),
         plot_library=plot_library,
         reference=results.readings.reference,
         own_pages=own_pages(results, mapped),
-        crew=_crew_for(results, workshop),
+        own_making=partial(files_of_modules, results, mapped, crew) if shared else None,
     )
+
+
+def _further_files(results: CampaignResults, notes: Notes) -> dict[str, bytes]:
+    """Return the files that are neither pages nor tables, by address."""
+    records = results.calibration.records if results.calibration is not None else ()
+    return {
+        **(notes.files or {}),
+        **record_files(records, site_frame(results).origin),
+        **residual_files(results),
+        **loop_scripts(results.hysteresis),
+        **budget_scripts(results.budget),
+        **layout_scripts(results.layout),
+    }
 
 
 def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
