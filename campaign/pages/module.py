@@ -6,6 +6,7 @@ from collections.abc import Hashable, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
+import numpy as np
 import pandas as pd
 
 from campaign.analyses.results import CampaignResults
@@ -162,12 +163,12 @@ def module_lines_figure(
     for index, row in enumerate(records_of(lines)):
         style = palette.GENERATION_STYLES[index % len(palette.GENERATION_STYLES)]
         module, sensor = str(row["module"]), str(row["sensor"])
-        ends = pd.Series([row["strain_low"], row["strain_high"]], dtype=float)
+        ends = np.array([row["strain_low"], row["strain_high"]], dtype=float)
         fitted = row["intercept"] + row["slope"] * ends
         traces.append(
             line(ends * factor, fitted, colour=style.colour, dash=style.dash, module=module, sensor=sensor)
         )
-        own = readings[readings["sensor"] == sensor].iloc[:300]
+        own = of_sensor(readings, module, sensor).iloc[:300]
         traces.append(
             points(
                 own["x"] * factor,
@@ -177,14 +178,14 @@ def module_lines_figure(
                 open_marker=True,
                 text=[
                     f"{module} {sensor}, run {r}, reading {o}"
-                    for r, o in zip(own["repetition"], own["order"], strict=True)
+                    for r, o in zip(own["repetition"].tolist(), own["order"].tolist(), strict=True)
                 ],
-                links=[slugs.trial_href(module, sensor, str(t)) for t in own["trial"]],
+                links=[slugs.trial_href(module, sensor, str(t)) for t in own["trial"].tolist()],
                 module=module,
                 sensor=sensor,
             )
         )
-        labels.append(label(sensor, float(ends.iloc[1]) * factor, float(fitted.iloc[1]), colour=style.colour))
+        labels.append(label(sensor, float(ends[1]) * factor, float(fitted[1]), colour=style.colour))
     return Figure(
         name="lines",
         caption=f"The lines of {numbers.count(len(lines), 'sensor')} of {lines['module'].iloc[0]} with the "

@@ -96,7 +96,7 @@ def all_modules(results: CampaignResults, mapped: SkinMap) -> AllModules:
     placements = () if results.layout is None else results.layout.placements
     figures = results.limits.figures
     figures = figures[figures["figure"].isin(MERITS_OF_MODULES)].dropna(subset=["estimate"])
-    medians = figures.groupby("figure")["estimate"].median() if len(figures) else {}
+    medians = figures.groupby("figure")["estimate"].median()
     return AllModules(
         mapped,
         () if lines is None else sensor_axis(lines).generations,
