@@ -31,7 +31,7 @@ from campaign.pages.layout_sections import module_shapes
 from campaign.pages.loop_sections import module_widths_figure
 from campaign.pages.module_share import MERITS_OF_MODULES, AllModules, ModuleShare
 from campaign.pages.page import Page
-from campaign.pages.rows import of_module, of_sensor, records_of
+from campaign.pages.rows import of_module, of_sensor, records_of, records_of_sensor
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
 from campaign.pages.tables import Column, Table
 from campaign.pages.variance import TERM_WORDS, TERMS, in_shown_units
@@ -105,15 +105,14 @@ def _lines_of(results: CampaignResults, module: str) -> pd.DataFrame:
 
 def _state(results: CampaignResults, module: str, sensor: str) -> str:
     """One of: used, set aside, not analysed."""
-    trials = of_module(results.intake.trials, module)
-    own = trials[trials["sensor"].astype(str) == sensor]
     table = results.readings.table
     if len(table) and bool(of_sensor(table, module, sensor)["used"].any()):
         return "used"
-    used = own[own["fate"] == "used"]
-    if used.empty:
+    trials = records_of_sensor(results.intake.trials, module, sensor)
+    kinds = {trial["kind"] for trial in trials if trial["fate"] == "used"}
+    if not kinds:
         return "set aside"
-    return "used" if used["kind"].isin(ANALYSED).any() else "not analysed"
+    return "used" if kinds & set(ANALYSED) else "not analysed"
 
 
 def _batch_of(results: CampaignResults, module: str) -> str:
@@ -217,23 +216,23 @@ def module_merits_figure(results: CampaignResults, module: str, common: AllModul
         return None
     order = [name for name in MERITS_OF_MODULES if name in set(own["figure"])]
     sensors = sorted(own["sensor"].unique())
+    edge = 3 * common.largest_merit
     traces: list[Trace] = []
     for index, sensor in enumerate(sensors):
-        rows = own[own["sensor"] == sensor]
-        edge = 3 * common.largest_merit
+        rows = records_of_sensor(own, module, str(sensor))
         style = palette.GENERATION_STYLES[index % len(palette.GENERATION_STYLES)]
         shift = (index - (len(sensors) - 1) / 2) * min(0.13, 0.75 / len(sensors))
         traces.append(
             intervals(
-                rows["estimate"],
-                rows["low"],
-                rows["high"].clip(upper=edge),
-                [order.index(str(f)) + shift for f in rows["figure"]],
+                [row["estimate"] for row in rows],
+                [row["low"] for row in rows],
+                [min(row["high"], edge) for row in rows],
+                [order.index(str(row["figure"])) + shift for row in rows],
                 style=style,
                 text=[
                     f"{module} {sensor}: {r['figure']} "
                     f"{numbers.interval(r['estimate'], r['low'], r['high'], '%FSO')}"
-                    for r in records_of(rows)
+                    for r in rows
                 ],
                 links=[slugs.sensor_href(module, str(sensor))] * len(rows),
                 module=module,

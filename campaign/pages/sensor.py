@@ -11,7 +11,6 @@ import pandas as pd
 
 from campaign.analyses.calibration import CalibrationRecord
 from campaign.analyses.findings import AVERAGED
-from campaign.analyses.limits import CONDITIONS, ONE_MODULE, TOO_FEW, UNKNOWN
 from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers, slugs
 from campaign.pages.budget import sensor_budget
@@ -297,7 +296,7 @@ def _limits_table(parts: SensorParts) -> list[Table]:
         Table(
             name="sensor_limits",
             caption="The campaign’s limits, judged with the uncertainty of each figure.",
-            frame=limits_as_shown(parts.limits, parts.reference),
+            frame=parts.limits,
             columns=(
                 Column("_limit", "Limit", kind="text"),
                 Column("_value", "At most", digits=3),
@@ -309,27 +308,3 @@ def _limits_table(parts: SensorParts) -> list[Table]:
             source="limits",
         )
     ]
-
-
-_REASONS: Mapping[str, str] = {
-    CONDITIONS: ": it would hold, but a source of its budget is not known",
-    UNKNOWN: ": its uncertainty is not known",
-    TOO_FEW: ": too few sensors",
-    ONE_MODULE: ": one module says nothing of the next",
-}
-
-
-def limits_as_shown(rows: pd.DataFrame, reference: ReferenceQuantity) -> pd.DataFrame:
-    """Return verdicts with hidden columns in shown units: strain errors in per cent, others as they are."""
-    limits = [str(limit) for limit in rows["limit"].tolist()]
-    in_reference = np.array([limit == "strain_error" for limit in limits], dtype=bool)
-    factor = np.where(in_reference, reference.shown_factor, 1.0)
-    scaled = {f"_{key}": rows[key].to_numpy(float) * factor for key in ("value", "estimate", "low", "high")}
-    verdicts = zip(rows["verdict"].tolist(), rows["reason"].tolist(), strict=True)
-    units = zip(rows["unit"].tolist(), in_reference.tolist(), strict=True)
-    return rows.assign(
-        **scaled,
-        _verdict=[f"{verdict}{_REASONS.get(reason, '')}" for verdict, reason in verdicts],
-        _limit=[limit.replace("_", " ") for limit in limits],
-        _unit=[reference.shown_unit if shown else unit for unit, shown in units],
-    )

@@ -7,9 +7,11 @@ from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
+import numpy as np
 import pandas as pd
 
 from campaign.analyses.calibration import CalibrationRecord
+from campaign.analyses.limits import CONDITIONS, ONE_MODULE, TOO_FEW, UNKNOWN
 from campaign.analyses.results import CampaignResults
 from campaign.analyses.sensor_figures import principal_lines, principal_records
 from campaign.pages import numbers, slugs
@@ -74,7 +76,7 @@ class SensorParts:
     merits
         Figures of merit with their intervals.
     limits, levels, trials
-        Its verdicts, its level differences in %FSO, its trials.
+        Its verdicts as shown (:func:`limits_as_shown`), its level differences in %FSO, its trials.
     register
         Its row of the register of sensors.
     """
@@ -135,18 +137,28 @@ def _tables_of(results: CampaignResults) -> dict[str, pd.DataFrame]:
     """Return the tables that sensors have rows in; those of lines are there where there is a calibration."""
     found = {
         "merits": results.limits.figures.dropna(subset=["estimate"]),
-        "limits": results.limits.of_sensors(),
+        "limits": limits_as_shown(results.limits.of_sensors(), results.readings.reference),
         "trials": results.intake.trials,
         "register": results.intake.sensors,
     }
     if (calibration := results.calibration) is not None:
+        lines = principal_lines(calibration.sensor_lines)
         found |= {
-            "lines": principal_lines(calibration.sensor_lines),
-            "runs": calibration.run_lines,
+            "lines": lines,
+            "runs": _principal_runs(calibration.run_lines, lines),
             "ordinary": calibration.ordinary_lines,
             "levels": hysteresis_in_percent(calibration),
         }
     return {name: frame for name, frame in found.items() if {"module", "sensor"} <= set(frame.columns)}
+
+
+def _principal_runs(runs: pd.DataFrame, lines: pd.DataFrame) -> pd.DataFrame:
+    """Return the run lines of the branch that stands for each sensor, and all of sensors without a line."""
+    named = (lines[name].tolist() for name in ("module", "sensor", "branch"))
+    branches = {(module, sensor): branch for module, sensor, branch in zip(*named, strict=True)}
+    own = zip(*(runs[name].tolist() for name in ("module", "sensor", "branch")), strict=True)
+    kept = [branches.get((module, sensor), branch) == branch for module, sensor, branch in own]
+    return runs[np.array(kept, dtype=bool)]
 
 
 def _parts(
@@ -165,18 +177,14 @@ def _parts(
         return of_sensor(tables[name], *pair) if name in tables else pd.DataFrame()
 
     line, ordinary, register = (next(iter(rows(name)), None) for name in ("lines", "ordinary", "register"))
-    runs, run_rows = table("runs"), rows("runs")
-    if line is not None:
-        run_rows = [run for run in run_rows if run["branch"] == line["branch"]]
-        runs = runs[(runs["branch"] == line["branch"]).to_numpy(bool)]
     return SensorParts(
         *key,
         reference=reference,
         line=line,
         records=tuple(records),
         readings=tuple(plotted_readings(plotted.get(pair, ()), line, reference)),
-        runs=runs,
-        run_rows=tuple(run_rows),
+        runs=table("runs"),
+        run_rows=tuple(rows("runs")),
         ordinary=ordinary,
         merits=tuple(rows("merits")),
         limits=table("limits"),
@@ -268,3 +276,27 @@ def _departure(line: Row | None, x: float, signal: float) -> float:
     if line is None or not line["slope"]:
         return math.nan
     return float((signal - line["intercept"] - line["slope"] * x) / line["slope"])
+
+
+_REASONS: Mapping[str, str] = {
+    CONDITIONS: ": it would hold, but a source of its budget is not known",
+    UNKNOWN: ": its uncertainty is not known",
+    TOO_FEW: ": too few sensors",
+    ONE_MODULE: ": one module says nothing of the next",
+}
+
+
+def limits_as_shown(rows: pd.DataFrame, reference: ReferenceQuantity) -> pd.DataFrame:
+    """Return verdicts with hidden columns in shown units: strain errors in per cent, others as they are."""
+    limits = [str(limit) for limit in rows["limit"].tolist()]
+    in_reference = np.array([limit == "strain_error" for limit in limits], dtype=bool)
+    factor = np.where(in_reference, reference.shown_factor, 1.0)
+    scaled = {f"_{key}": rows[key].to_numpy(float) * factor for key in ("value", "estimate", "low", "high")}
+    verdicts = zip(rows["verdict"].tolist(), rows["reason"].tolist(), strict=True)
+    units = zip(rows["unit"].tolist(), in_reference.tolist(), strict=True)
+    return rows.assign(
+        **scaled,
+        _verdict=[f"{verdict}{_REASONS.get(reason, '')}" for verdict, reason in verdicts],
+        _limit=[limit.replace("_", " ") for limit in limits],
+        _unit=[reference.shown_unit if shown else unit for unit, shown in units],
+    )
