@@ -14,8 +14,10 @@ import pandas as pd
 
 from campaign.analyses.calibration import Calibration
 from campaign.analyses.limits import Limits
+from campaign.analyses.loop_rates import RateDependence
 from campaign.analyses.pressure import Pressure
 from campaign.analyses.results import CampaignResults
+from campaign.analyses.variance import Variance
 from campaign.pages import slugs
 from campaign.pages.rows import of_module
 from campaign.pages.sensor_axis import sensor_axis
@@ -89,6 +91,11 @@ class ModuleShare:
     keys: tuple[tuple[str, str, str], ...]
     sensor_neighbours: tuple[tuple[Link | None, Link | None], ...]
 
+    @property
+    def page_slug(self) -> str:
+        """Name of the module's page."""
+        return slugs.module_slug(self.module)
+
 
 def all_modules(results: CampaignResults, mapped: SkinMap) -> AllModules:
     """Return what the pages of every module and sensor share."""
@@ -101,9 +108,14 @@ def all_modules(results: CampaignResults, mapped: SkinMap) -> AllModules:
         mapped,
         () if lines is None else sensor_axis(lines).generations,
         tuple(sorted({placement.generation for placement in placements})),
-        {str(name): float(value) for name, value in medians.items()},
-        float(figures["estimate"].max()) if len(figures) else 0.0,
+        {str(name): _told(float(value)) for name, value in medians.items()},
+        _told(float(figures["estimate"].max())) if len(figures) else 0.0,
     )
+
+
+def _told(value: float) -> float:
+    """Return *value* to eight digits: what lies below is of no page, and tells equal shares apart."""
+    return float(f"{value:.8g}")
 
 
 def module_shares(results: CampaignResults) -> Iterator[ModuleShare]:
@@ -140,7 +152,8 @@ def results_of_module(results: CampaignResults, module: str) -> CampaignResults:
         "intake": _own_intake(results.intake, module),
         "readings": replace(results.readings, table=_shown(results.readings.table, module), notices=()),
         "limits": _own_limits(results.limits, module),
-        "variance": None if results.variance is None else _own_parts(results.variance, module, "effects"),
+        "variance": None if results.variance is None else _own_variance(results.variance, module),
+        "findings": replace(results.findings, findings=()),
         "residuals": None,
         "calibration_effort": None,
         "generations": None,
@@ -153,7 +166,7 @@ def results_of_module(results: CampaignResults, module: str) -> CampaignResults:
         changed["calibration"] = _own_calibration(results.calibration, module)
     if (loops := results.hysteresis) is not None:
         own = _own_parts(loops, module, "loops", "sensors", "outlines")
-        changed["hysteresis"] = replace(own, rates=_own_parts(loops.rates, module, "sensors"))
+        changed["hysteresis"] = replace(own, rates=_own_rates(loops.rates, module))
     if results.drift is not None:
         changed["drift"] = replace(_own_parts(results.drift, module, "holds", "curves"), zero=None)
     if results.pressure is not None:
@@ -168,6 +181,25 @@ def results_of_module(results: CampaignResults, module: str) -> CampaignResults:
     if results.layout is not None:
         changed["layout"] = _own_parts(results.layout, module, "placements", "edges")
     return replace(results, **changed)
+
+
+def _own_rates(rates: RateDependence, module: str) -> RateDependence:
+    """Return the delays of the sensors of *module*, to six digits: a fit of all sensors ends no closer."""
+    own = _own_parts(rates, module, "sensors")
+    names = [name for name in ("module", "sensor", *_DELAYS) if name in own.sensors]
+    shown = own.sensors[names]
+    digits = {
+        name: [float(f"{value:.6g}") for value in shown[name].tolist()] for name in _DELAYS if name in shown
+    }
+    return replace(own, sensors=shown.assign(**digits))
+
+
+_DELAYS = ("delay_s", "delay_low_s", "delay_high_s")
+
+
+def _own_variance(variance: Variance, module: str) -> Variance:
+    own = _own_parts(variance, module, "effects")
+    return replace(own, noise={}, settling={}, covariates={}, seed=0)
 
 
 def _own_intake(intake: Intake, module: str) -> Intake:

@@ -6,14 +6,16 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
 
 from campaign.analyses.results import CampaignResults
+from campaign.pages.kept_modules import KeptModules
+from campaign.pages.kept_pages import PageFiles
 from campaign.pages.module import module_page
 from campaign.pages.module_share import AllModules, ModuleShare, all_modules, module_shares
 from campaign.pages.page import Page
-from campaign.pages.render import PageFiles, RenderingTask, pages_as_marked, render_pages
+from campaign.pages.render import RenderingTask, pages_as_marked, render_pages, templates_folder
 from campaign.pages.sensor import sensor_pages
 from campaign.pages.skin_map import SkinMap
-from campaign.workers.crew import Crew
 from campaign.workers.sharing import Work, share_out
+from campaign.workers.workshop import Workshop
 
 IN_HAND = 1000
 """Modules in hand, a worker: all of them, so that this process can do its own part meanwhile."""
@@ -46,7 +48,7 @@ MAKING = Work(make_and_render, lambda task: [task], make_and_render)
 def files_of_modules(
     results: CampaignResults,
     mapped: SkinMap,
-    crew: Crew,
+    workshop: Workshop,
     rendering: RenderingTask,
     meanwhile: Callable[[], None],
 ) -> Iterator[tuple[PageFiles, ...]]:
@@ -58,18 +60,28 @@ def files_of_modules(
         What one run of the report found out.
     mapped
         The skin map.
-    crew
-        Who makes and renders them.
+    workshop
+        Who makes and renders them, and where those of an earlier run are found.
     rendering
         What all pages share, without pages.
     meanwhile
         What this process does, once, while others work.
     """
     common = all_modules(results, mapped)
+    templates = (templates_folder(), *rendering.further_templates)
+    kept = KeptModules(workshop.store, templates, (common, rendering))
+    found: list[tuple[PageFiles, ...]] = []
 
     def tasks() -> Iterator[MakingTask]:
         for share in module_shares(results):
-            yield MakingTask(share, common, rendering)
+            known = kept.find(share)
+            if known is None:
+                yield MakingTask(share, common, rendering)
+            else:
+                found.append(known)
         meanwhile()
 
-    return share_out(MAKING, tasks(), crew, IN_HAND)
+    for made in share_out(MAKING, tasks(), workshop.crew, IN_HAND):
+        kept.keep(made)
+        yield made
+    yield from found

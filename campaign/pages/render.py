@@ -23,6 +23,7 @@ from campaign.pages.assets import asset_files
 from campaign.pages.definitions import defined_in, definitions_of
 from campaign.pages.drawing import marked, ready
 from campaign.pages.figures import Figure
+from campaign.pages.kept_pages import PageFiles
 from campaign.pages.legible import legible_value
 from campaign.pages.page import REHEARSED, Page, SiteFrame
 from campaign.pages.page_data import data_script, folded_row
@@ -196,19 +197,6 @@ class RenderingTask:
     strip: tuple[Page, ...]
     further_templates: tuple[Path, ...]
     reference: ReferenceQuantity
-
-
-@dataclass(frozen=True)
-class PageFiles:
-    """What one page became: its text, and its data script and its figures' CSV files by address.
-
-    Links to anchors of a page that is told in parts are not led there yet.
-    """
-
-    slug: str
-    file: str
-    html: str
-    further: dict[str, bytes]
 
 
 OwnMaking = Callable[[RenderingTask, Callable[[], None]], Iterable[tuple[PageFiles, ...]]]

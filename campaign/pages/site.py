@@ -38,11 +38,15 @@ from campaign.pages.site_tables import site_tables
 from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Table
 from campaign.pages.variance import variance_page
-from campaign.workers.crew import Crew, LocalProcesses, ThisProcess
+from campaign.workers.crew import LocalProcesses
 from campaign.workers.workshop import Workshop
 
-PAGES_WORTH_SHARING = 150
-"""From so many pages of modules and sensors on, other processes make and render them."""
+PAGES_WORTH_SHARING = 100
+"""From so many pages of modules and sensors on, other processes make and render them.
+
+A worker takes some 1.9 s of a core before its first page, and a page some 0.06 s: two workers are even with one
+process at about 60 pages.
+"""
 
 
 def build_site(
@@ -73,8 +77,7 @@ def build_site(
     mapped = campaign_map(results)
     pages = [*pages_of_campaign(results, mapped), *notes.pages]
     pages.append(provenance_page(results, _all_tables(results, pages)))
-    crew = _crew_for(results, workshop)
-    shared = crew.hands > 1
+    shared = workshop is not None and _worth_sharing(results, workshop)
     return render_site(
         site_frame(results),
         pages,
@@ -83,7 +86,7 @@ def build_site(
         plot_library=plot_library,
         reference=results.readings.reference,
         own_pages=own_pages(results, mapped),
-        own_making=partial(files_of_modules, results, mapped, crew) if shared else None,
+        own_making=partial(files_of_modules, results, mapped, workshop) if shared else None,
     )
 
 
@@ -141,12 +144,10 @@ def _all_tables(results: CampaignResults, pages: Sequence[Page]) -> list[Table]:
     return [*(table for page in pages for table in page.tables), *site_tables(results, pages)]
 
 
-def _crew_for(results: CampaignResults, workshop: Workshop | None) -> Crew:
-    if workshop is None or not isinstance(workshop.crew, LocalProcesses):
-        return ThisProcess()
+def _worth_sharing(results: CampaignResults, workshop: Workshop) -> bool:
     keys = sensor_keys(results)
     pages = len(keys) + len({module for _, module, _ in keys})
-    return workshop.crew if pages >= PAGES_WORTH_SHARING else ThisProcess()
+    return isinstance(workshop.crew, LocalProcesses) and pages >= PAGES_WORTH_SHARING
 
 
 def site_frame(results: CampaignResults) -> SiteFrame:

@@ -5,19 +5,23 @@ from __future__ import annotations
 import pickle
 from dataclasses import replace
 from operator import attrgetter
+from pathlib import Path
 
 import pandas as pd
 import pytest
 
 from campaign.analyses.results import CampaignResults
-from campaign.pages import site
+from campaign.keeping.store import open_store
+from campaign.pages import own_pages, site
 from campaign.pages.campaign_map import campaign_map
+from campaign.pages.kept_pages import PageFiles
 from campaign.pages.module_share import all_modules, module_shares, results_of_module
-from campaign.pages.own_pages import MakingTask, make_and_render, pages_of_module
+from campaign.pages.own_pages import MakingTask, files_of_modules, make_and_render, pages_of_module
 from campaign.pages.page import Page, SiteFrame
 from campaign.pages.render import PAGES_A_TASK, RenderingTask, render_pages, render_site
 from campaign.pages.site import build_site, site_frame
 from campaign.workers.crew import Crew, LocalProcesses
+from campaign.workers.sharing import Work
 from campaign.workers.workshop import Workshop
 from tests.pages.toy import TEMPLATES, toy_page
 
@@ -109,3 +113,41 @@ def test_other_processes_make_the_same_site(
     monkeypatch.setattr(site, "PAGES_WORTH_SHARING", 1)
     with LocalProcesses(2) as crew:
         assert build_site(results, workshop=Workshop(crew)) == alone
+
+
+def test_modules_of_an_earlier_run_are_found_and_a_changed_one_is_made_anew(
+    small_campaign_pages: tuple[CampaignResults, list[Page]],
+    tmp_path: Path,
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    results, _ = small_campaign_pages
+    done: list[str] = []
+
+    def counted(task: MakingTask) -> tuple[PageFiles, ...]:
+        done.append(task.share.module)
+        return make_and_render(task)
+
+    work = Work(counted, lambda task: [task], counted)
+    monkeypatch.setattr(own_pages, "MAKING", work)
+    rendering = RenderingTask((), site_frame(results), (), (), results.readings.reference)
+    mapped = campaign_map(results)
+    meanwhile: list[str] = []
+
+    def pages_with(of: CampaignResults) -> list[PageFiles]:
+        with open_store(tmp_path / "kept") as store:
+            made = files_of_modules(
+                of, mapped, Workshop(store=store), rendering, lambda: meanwhile.append("done")
+            )
+            return sorted((page for some in made for page in some), key=attrgetter("slug"))
+
+    first = pages_with(results)
+    modules = sorted(set(results.intake.trials["module"]))
+    assert done == modules
+    assert pages_with(results) == first
+    assert done == modules
+    trials = results.intake.trials
+    later = trials["started"].where(trials["module"] != modules[0], "2031-01-01T00:00:00")
+    changed = replace(results, intake=replace(results.intake, trials=trials.assign(started=later)))
+    assert pages_with(changed) != first
+    assert done == [*modules, modules[0]]
+    assert meanwhile == ["done"] * 3
