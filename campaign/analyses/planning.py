@@ -390,7 +390,8 @@ def power_grid() -> list[list[float]]:
 
     Noncentralities run from 0 to :data:`LIVE_NONCENTRALITY` in steps of :data:`LIVE_STEP`.
     """
-    noncentralities = np.arange(round(LIVE_NONCENTRALITY / LIVE_STEP) + 1) * LIVE_STEP
+    places = range(round(LIVE_NONCENTRALITY / LIVE_STEP) + 1)
+    noncentralities = np.array([place * LIVE_STEP for place in places], dtype=np.float64)
     return [
         powers_at(noncentralities, freedom_of_difference(modules)).tolist()
         for modules in range(2, LIVE_MODULES + 1)

@@ -44,8 +44,8 @@ from campaign.workers.workshop import Workshop
 PAGES_WORTH_SHARING = 100
 """From so many pages of modules and sensors on, other processes make and render them.
 
-A worker takes some 1.9 s of a core before its first page, and a page some 0.06 s: two workers are even with one
-process at about 60 pages.
+A worker takes some 1.9 s of a core before its first page, and a page some 0.06 s: two workers are even with
+one process at about 60 pages.
 """
 
 
@@ -77,7 +77,9 @@ def build_site(
     mapped = campaign_map(results)
     pages = [*pages_of_campaign(results, mapped), *notes.pages]
     pages.append(provenance_page(results, _all_tables(results, pages)))
-    shared = workshop is not None and _worth_sharing(results, workshop)
+    making = None
+    if workshop is not None and _worth_sharing(results, workshop):
+        making = partial(files_of_modules, results, mapped, workshop)
     return render_site(
         site_frame(results),
         pages,
@@ -86,7 +88,7 @@ def build_site(
         plot_library=plot_library,
         reference=results.readings.reference,
         own_pages=own_pages(results, mapped),
-        own_making=partial(files_of_modules, results, mapped, workshop) if shared else None,
+        own_making=making,
     )
 
 

@@ -91,7 +91,7 @@ def test_a_share_alone_is_enough_and_says_nothing_of_other_modules(
     results, pages = small_campaign_pages
     common = all_modules(results, campaign_map(results))
     rendering = RenderingTask((), site_frame(results), (), (), results.readings.reference)
-    made = []
+    made: list[PageFiles] = []
     for share in module_shares(results):
         handed_over = pickle.loads(pickle.dumps(share))
         found = make_and_render(MakingTask(handed_over, common, rendering))
