@@ -380,11 +380,15 @@ def level_hysteresis_figure(calibration: Calibration, where: SensorAxis) -> Figu
     )
 
 
-def hysteresis_in_percent(calibration: Calibration) -> pd.DataFrame:
-    """Return the level differences with their limits in per cent of full-scale output too (low, high)."""
+def hysteresis_in_percent(calibration: Calibration, lines: pd.DataFrame | None = None) -> pd.DataFrame:
+    """Return the level differences with their limits in per cent of full-scale output too (low, high).
+
+    *lines* are the lines that stand for the sensors, where they are known already.
+    """
     levels = calibration.level_hysteresis.dropna(subset=["difference"])
     keys = ["generation", "module", "sensor"]
-    outputs = principal_lines(calibration.sensor_lines)[[*keys, "full_scale_output"]]
+    lines = principal_lines(calibration.sensor_lines) if lines is None else lines
+    outputs = lines[[*keys, "full_scale_output"]]
     levels = levels.merge(outputs, on=keys)
     scale = 100 / levels["full_scale_output"]
     return levels.assign(low=levels["low"] * scale, high=levels["high"] * scale)

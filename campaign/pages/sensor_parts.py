@@ -147,7 +147,7 @@ def _tables_of(results: CampaignResults) -> dict[str, pd.DataFrame]:
             "lines": lines,
             "runs": _principal_runs(calibration.run_lines, lines),
             "ordinary": calibration.ordinary_lines,
-            "levels": hysteresis_in_percent(calibration),
+            "levels": hysteresis_in_percent(calibration, lines),
         }
     return {name: frame for name, frame in found.items() if {"module", "sensor"} <= set(frame.columns)}
 
