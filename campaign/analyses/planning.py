@@ -6,6 +6,7 @@ import math
 from collections.abc import Iterator, Sequence
 from dataclasses import astuple, dataclass, fields
 
+import numpy as np
 import pandas as pd
 
 from campaign.analyses.scope import Scope
@@ -22,8 +23,8 @@ from campaign.methods.campaign_design import (
     freedom_of_difference,
     half_width_of_difference,
     optimal_allocation,
-    power_at,
     power_of_difference,
+    powers_at,
     spread_factors,
     variance_of_mean,
     weights_of_mean,
@@ -389,9 +390,10 @@ def power_grid() -> list[list[float]]:
 
     Noncentralities run from 0 to :data:`LIVE_NONCENTRALITY` in steps of :data:`LIVE_STEP`.
     """
-    number = round(LIVE_NONCENTRALITY / LIVE_STEP) + 1
+    places = range(round(LIVE_NONCENTRALITY / LIVE_STEP) + 1)
+    noncentralities = np.array([place * LIVE_STEP for place in places], dtype=np.float64)
     return [
-        [power_at(place * LIVE_STEP, freedom_of_difference(modules)) for place in range(number)]
+        powers_at(noncentralities, freedom_of_difference(modules)).tolist()
         for modules in range(2, LIVE_MODULES + 1)
     ]
 

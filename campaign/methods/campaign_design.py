@@ -128,12 +128,16 @@ def power_of_difference(difference: float, variance: float, freedom: float) -> f
 
 def power_at(noncentrality: float, freedom: float) -> float:
     """Return the power of a two-sided t test at 5 % for a noncentrality of at least 0."""
+    return float(powers_at(np.array([noncentrality]), freedom)[0])
+
+
+def powers_at(noncentralities: npt.NDArray[np.float64], freedom: float) -> npt.NDArray[np.float64]:
+    """Return the power of a two-sided t test at 5 % for noncentralities of at least 0."""
     critical = float(stats.t.ppf((1 + LEVEL) / 2, freedom))
-    if noncentrality == 0:
-        return 1 - LEVEL
-    upper = float(stats.nct.sf(critical, freedom, noncentrality))
-    lower = float(stats.nct.cdf(-critical, freedom, noncentrality))
-    return min(1.0, upper + (lower if math.isfinite(lower) else 0.0))
+    upper = stats.nct.sf(critical, freedom, noncentralities)
+    lower = stats.nct.cdf(-critical, freedom, noncentralities)
+    found = np.minimum(1.0, upper + np.where(np.isfinite(lower), lower, 0.0))
+    return np.where(noncentralities == 0, 1 - LEVEL, found)
 
 
 def spread_factors(modules: int) -> tuple[float, float]:

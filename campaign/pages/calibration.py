@@ -29,6 +29,7 @@ from campaign.pages.figures import (
     small_multiples,
 )
 from campaign.pages.page import Page
+from campaign.pages.rows import records_of
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
 from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import ReferenceQuantity
@@ -149,7 +150,7 @@ def _module_lines(
     axes: str,
     reference: ReferenceQuantity,
 ) -> Iterable[Trace]:
-    for row in lines.to_dict("records"):
+    for row in records_of(lines):
         style = where.style(str(row["generation"]))
         module, sensor = str(row["module"]), str(row["sensor"])
         ends = np.array([row["strain_low"], row["strain_high"]])
@@ -195,7 +196,7 @@ def _end_labels(lines: pd.DataFrame, axes: str, reference: ReferenceQuantity) ->
     """Sensors' ids at the ends of their lines, dropped where two would overlap."""
     ends = sorted(
         (float(r["intercept"] + r["slope"] * r["strain_high"]), float(r["strain_high"]), str(r["sensor"]))
-        for r in lines.to_dict("records")
+        for r in records_of(lines)
     )
     reach = (ends[-1][0] - ends[0][0]) or 1.0
     made: list[Layout] = []
@@ -244,7 +245,7 @@ def merits_figure(results: CampaignResults, where: SensorAxis) -> Figure | None:
     for index, name in enumerate(shown):
         rows = figures[figures["figure"] == name].dropna(subset=["estimate"])
         rows = _clipped_for_drawing(rows)
-        sentences = [merit_sentence(name, row) for row in rows.to_dict("records")]
+        sentences = [merit_sentence(name, row) for row in records_of(rows)]
         traces += interval_traces(rows, where, sentences, axes=panel(index))
         limit = results.description.limits.get(name)
         if limit is not None:
@@ -328,7 +329,7 @@ def bend_figure(results: CampaignResults, where: SensorAxis) -> Figure | None:
         "chord at mid "
         "range, in per cent of full-scale output, with an upright at zero.",
         traces=tuple(
-            interval_traces(clipped, where, [merit_sentence("bend", r) for r in clipped.to_dict("records")])
+            interval_traces(clipped, where, [merit_sentence("bend", r) for r in records_of(clipped)])
         ),
         layout=layout(
             axis("Bend at mid range", "%FSO"),
@@ -379,11 +380,15 @@ def level_hysteresis_figure(calibration: Calibration, where: SensorAxis) -> Figu
     )
 
 
-def hysteresis_in_percent(calibration: Calibration) -> pd.DataFrame:
-    """Return the level differences with their limits in per cent of full-scale output too (low, high)."""
+def hysteresis_in_percent(calibration: Calibration, lines: pd.DataFrame | None = None) -> pd.DataFrame:
+    """Return the level differences with their limits in per cent of full-scale output too (low, high).
+
+    *lines* are the lines that stand for the sensors, where they are known already.
+    """
     levels = calibration.level_hysteresis.dropna(subset=["difference"])
     keys = ["generation", "module", "sensor"]
-    outputs = principal_lines(calibration.sensor_lines)[[*keys, "full_scale_output"]]
+    lines = principal_lines(calibration.sensor_lines) if lines is None else lines
+    outputs = lines[[*keys, "full_scale_output"]]
     levels = levels.merge(outputs, on=keys)
     scale = 100 / levels["full_scale_output"]
     return levels.assign(low=levels["low"] * scale, high=levels["high"] * scale)
@@ -512,7 +517,7 @@ def _exponents(lines: pd.DataFrame, where: SensorAxis) -> Figure:
             "stretch_exponent_high": "high",
         }
     ).assign(unit="")
-    sentences = [merit_sentence("stretch exponent", row) for row in rows.to_dict("records")]
+    sentences = [merit_sentence("stretch exponent", row) for row in records_of(rows)]
     far = float(rows[["estimate", "high"]].max().max())
     laws = [law for law in LAWS if law[0] <= max(far * 1.2, 1.0)]
     return Figure(

@@ -10,6 +10,7 @@ import pandas as pd
 from campaign.analyses.layout_signals import geometry_of
 from campaign.analyses.loop_table import BY_LINE
 from campaign.analyses.results import CampaignResults
+from campaign.pages.rows import records_of
 from campaign.pages.sensor_parts import sensor_keys
 from campaign.pages.skin_map import MapFigure, MapSensor, Point, SkinMap, skin_map
 from campaign.recordings.description import Geometry
@@ -54,11 +55,11 @@ def map_sensors(results: CampaignResults) -> list[MapSensor]:
     A sensor is set aside on the map where no trial of it is used; it has a page where a trial names it.
     """
     intake = results.intake
-    modules = {str(row["module"]): row for row in intake.modules.to_dict("records")}
+    modules = {str(row["module"]): row for row in records_of(intake.modules)}
     used = {(i.module, i.sensor) for i in intake.used_identities}
     paged = {(named, sensor) for _, named, sensor in sensor_keys(results)}
     made = []
-    for row in intake.sensors.to_dict("records"):
+    for row in records_of(intake.sensors):
         module, sensor = str(row["module"]), str(row["sensor"])
         details = modules.get(module, {})
         named = str(details.get("geometry", "") or "")

@@ -26,7 +26,7 @@ from campaign.pages.drift_figures import (
 )
 from campaign.pages.figures import Figure
 from campaign.pages.page import Page
-from campaign.pages.rows import of_sensor
+from campaign.pages.rows import of_sensor, records_of
 from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import ReferenceQuantity
 from campaign.trials.hold import STEADY_K
@@ -53,7 +53,7 @@ def drift_page(results: CampaignResults) -> Page | None:
             "by_signal": bool((drift.holds["percent_of"] == OF_SIGNAL).any()),
             "only_by_signal": bool((drift.holds["percent_of"] == OF_SIGNAL).all()) and len(drift.holds) > 0,
             "percent": _unit_of(drift),
-            "means": drift.means.to_dict("records"),
+            "means": records_of(drift.means),
             "slopes": _model_rows(drift, "slope"),
             "spans": {} if drift.zero is None else drift.zero.days,
             "mountings": [*_model_rows(drift, "mounting"), *_model_rows(drift, "session")],
@@ -110,7 +110,7 @@ def _model_rows(drift: Drift, term: str) -> list[dict[Hashable, Any]]:
     if drift.zero is None:
         return []
     model = drift.zero.model
-    return model[model["term"] == term].to_dict("records")
+    return records_of(model[model["term"] == term])
 
 
 def _moved(drift: Drift) -> list[dict[Hashable, Any]]:
@@ -118,7 +118,7 @@ def _moved(drift: Drift) -> list[dict[Hashable, Any]]:
     rows = drift.holds[drift.holds["temperature"] == "not steady"]
     return [
         {**row, "href": slugs.trial_href(str(row["module"]), str(row["sensor"]), str(row["trial"]))}
-        for row in rows.head(5).to_dict("records")
+        for row in records_of(rows.head(5))
     ]
 
 
@@ -217,7 +217,7 @@ def _shown_holds(holds: pd.DataFrame) -> pd.DataFrame:
         strain=frame["strain"].round(4) + 0.0,
         _place=[PLACE_WORDS[str(p)] for p in frame["place"]],
         _lasts=[time_words(float(v)) for v in frame["duration_s"]],
-        _settles=[_settling(row) for row in frame.to_dict("records")],
+        _settles=[_settling(row) for row in records_of(frame)],
     )
 
 

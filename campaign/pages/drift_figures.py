@@ -27,6 +27,7 @@ from campaign.pages.figures import (
     points,
     small_multiples,
 )
+from campaign.pages.rows import records_of
 from campaign.pages.sensor_axis import interval_traces, sensor_axis
 from campaign.pages.thinning import thinned
 from campaign.recordings.recording import ReferenceQuantity
@@ -353,7 +354,7 @@ def decades_figure(drift: Drift) -> Figure | None:
     unit = percent_unit(str(rows["percent_of"].iloc[0]))
     text = [
         f"{r['module']} {r['sensor']}: {numbers.interval(r['estimate'], r['low'], r['high'], unit)} a decade"
-        for r in rows.to_dict("records")
+        for r in records_of(rows)
     ]
     told = int(((rows["low"] > 0) | (rows["high"] < 0)).sum())
     return Figure(
@@ -425,7 +426,7 @@ def _zero_traces(rows: pd.DataFrame, generations: tuple[str, ...], words: str) -
             f"{module} {sensor}, {words} {numbers.significant(r['_place'], 2)}"
             f"{', mounting ' + str(r['session']) if r['session'] else ''}: "
             f"{numbers.interval(r['departure_percent_fso'], r['departure_low'], r['departure_high'], '%FSO')}"
-            for r in own.to_dict("records")
+            for r in records_of(own)
         ]
         yield points(
             own["_place"],
@@ -445,7 +446,7 @@ def _zero_caption(drift: Drift) -> str:
     slopes = rows[rows["term"] == "slope"]
     if slopes.empty:
         return "The zero of every sensor, session by session."
-    told = [r for r in slopes.to_dict("records") if r["low"] > 0 or r["high"] < 0]
+    told = [r for r in records_of(slopes) if r["low"] > 0 or r["high"] < 0]
     if not told:
         return "No slope of the zero in time can be told from none; what moves it is mounting and run."
     return (

@@ -364,7 +364,11 @@ def line_point_count(figure: Figure) -> int:
 
 
 def _floats(values: Iterable[float]) -> list[float]:
-    made: list[float] = np.asarray(list(values), dtype=float).tolist()
+    if isinstance(values, pd.Series):
+        values = values.to_numpy(float, na_value=np.nan)
+    made: list[float] = np.asarray(
+        values if isinstance(values, np.ndarray) else list(values), dtype=float
+    ).tolist()
     return made
 
 

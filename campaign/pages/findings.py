@@ -11,7 +11,7 @@ from campaign.pages.calibration_effort import effort_sentence
 from campaign.pages.component_words import level_words
 from campaign.pages.generation_words import comparison_sentence, figure_words
 from campaign.pages.page import Page
-from campaign.pages.sensor import limits_as_shown
+from campaign.pages.sensor_parts import limits_as_shown
 from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
 from campaign.recordings.recording import ReferenceQuantity

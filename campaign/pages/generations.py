@@ -38,6 +38,7 @@ from campaign.pages.generation_words import (
     verdict_words,
 )
 from campaign.pages.page import Page
+from campaign.pages.rows import records_of
 from campaign.pages.tables import Column, Table
 
 SHOWN = ("better", "worse", "larger", "smaller", "equivalent")
@@ -206,7 +207,7 @@ def _marks(
     rows: pd.DataFrame, heights: list[float], factor: float, compared: Generations, x: Layout
 ) -> Iterator[Trace]:
     ends = [10**e for e in x["range"]] if x.get("type") == "log" else list(x["range"])
-    for row, height in zip(rows.to_dict("records"), heights, strict=True):
+    for row, height in zip(records_of(rows), heights, strict=True):
         estimate, low, high = (float(row[key]) * factor for key in ("difference_or_ratio", "low", "high"))
         estimate = max(estimate, ends[0])  # a ratio of zero has no place on its axis but the end
         low = max(low, ends[0]) if not math.isnan(low) else low
@@ -337,7 +338,7 @@ def _panel_title(name: str, frame: pd.DataFrame) -> str:
 def generations_table(compared: Generations) -> Table:
     """Return every comparison as a table."""
     table = compared.table
-    rows = table.to_dict("records")
+    rows = records_of(table)
     factors = [shown_unit(str(row["unit"])) for row in rows]
     frame = table.assign(
         _figure=[capitalised(figure_words(str(row["figure"]))) for row in rows],

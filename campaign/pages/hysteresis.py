@@ -40,6 +40,7 @@ from campaign.pages.loop_figures import (
     sensors_drawn,
 )
 from campaign.pages.page import Page
+from campaign.pages.rows import records_of
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
 from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
@@ -89,8 +90,8 @@ def hysteresis_page(results: CampaignResults) -> Page | None:
             "settling": settling_words(found) if found is not None else None,
             "rate_words": rate_words,
             "compared_rate": "" if found is None else rate_words(found.rate_per_s, found.reference),
-            "means": [] if found is None else found.means.to_dict("records"),
-            "delays": [] if found is None else found.rates.delays.to_dict("records"),
+            "means": [] if found is None else records_of(found.means),
+            "delays": [] if found is None else records_of(found.rates.delays),
             "component_words": COMPONENT_WORDS,
             "survivors": () if endurance is None else lasting(endurance),
             "map": mapped,
@@ -209,7 +210,7 @@ def widths_figure(found: Hysteresis, where: SensorAxis) -> Figure:
     text = [
         f"{r['module']} {r['sensor']}: {numbers.interval(r['estimate'], r['low'], r['high'], unit)}, "
         f"widest at {numbers.significant(r['at_strain'] * reference.shown_factor, 2, reference.shown_unit)}"
-        for r in rows.to_dict("records")
+        for r in records_of(rows)
     ]
     worst = rows.iloc[int(rows["estimate"].to_numpy(float).argmax())]
     told = int((rows["low"] > 0).sum())
@@ -435,11 +436,11 @@ def components_figure(found: Hysteresis) -> Figure | None:
                 text=[
                     f"{generation}, {COMPONENT_WORDS[r['called']]}: "
                     f"{numbers.interval(r['sd_percent_fso'], r['low'], r['high'], unit)} ({r['label']})"
-                    for r in part.to_dict("records")
+                    for r in records_of(part)
                 ],
             )
         )
-    words = {str(r["component"]): COMPONENT_WORDS[str(r["called"])] for r in own.to_dict("records")}
+    words = {str(r["component"]): COMPONENT_WORDS[str(r["called"])] for r in records_of(own)}
     largest = own.iloc[int(own["sd_percent_fso"].to_numpy(float).argmax())]
     return Figure(
         name="components",

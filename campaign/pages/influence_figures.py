@@ -11,6 +11,7 @@ import pandas as pd
 from campaign.analyses.influences import InfluenceResult, Influences
 from campaign.pages import numbers, palette, slugs
 from campaign.pages.figures import Figure, Layout, axis, layout, level_line
+from campaign.pages.rows import records_of
 from campaign.pages.sensor_axis import interval_traces, sensor_axis
 from campaign.pages.tables import Column, Table
 
@@ -52,7 +53,7 @@ def _figure(influences: Influences, result: InfluenceResult) -> Figure | None:
     if shown.empty:
         return None
     where = sensor_axis(shown)
-    words = [_sentence(row, unit, factor) for row in shown.to_dict("records")]
+    words = [_sentence(row, unit, factor) for row in records_of(shown)]
     ends = shown["estimate"].agg(["min", "max"]) * factor
     between = numbers.span(float(ends["min"]), float(ends["max"]), unit, digits=2)
     return Figure(

@@ -13,7 +13,7 @@ from campaign.pages import numbers
 from campaign.pages.figures import Figure
 from campaign.pages.influence_figures import INFLUENCE_WORDS
 from campaign.pages.pressure import per_unit, sensitivity_figure, sensor_sweeps_figure
-from campaign.pages.rows import of_module, of_sensor
+from campaign.pages.rows import of_module, records_of_sensor
 from campaign.pages.sensor_axis import sensor_axis
 
 
@@ -44,16 +44,14 @@ def sensor_influences(
     figures: list[Figure] = []
     answer = labels = ""
     pressure = results.pressure
-    if pressure is not None and len(rows := of_sensor(pressure.table, module, sensor)):
-        row = rows.iloc[0].to_dict()
+    if pressure is not None and (rows := records_of_sensor(pressure.table, module, sensor)):
+        row = rows[0]
         lines += _pressure_lines(row, results)
         figures.append(sensor_sweeps_figure(pressure, module, sensor))
         answer, labels = str(row["one_correction"]), str(row["label"])
     if results.influences is not None:
-        lines += [
-            _line(row, results)
-            for row in of_sensor(results.influences.table, module, sensor).to_dict("records")
-        ]
+        own = records_of_sensor(results.influences.table, module, sensor)
+        lines += [_line(row, results) for row in own]
     if not lines:
         return None, []
     return SensorInfluences(tuple(lines), figures[0].name if figures else "", answer, labels), figures

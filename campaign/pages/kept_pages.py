@@ -59,8 +59,7 @@ class KeptPages:
         self._shared = None
         self._keys: dict[str, str] = {}
         if digest is not None:
-            parts: list[str | bytes] = ["page", program_digest(), versions_of(PAGE_LIBRARIES), digest]
-            self._shared = digest_of([*parts, *_contents(templates)])
+            self._shared = digest_of(["page", digest, *what_renders(templates)])
 
     def find(self, page: Page) -> PageFiles | None:
         """Return what an earlier run made of the very same page, or ``None``."""
@@ -71,15 +70,13 @@ class KeptPages:
         found = self._store.get(key)
         if found is None:
             self._keys[page.slug] = key
-        return _unpacked(found)
+        return unpacked(found)
 
     def keep(self, made: PageFiles) -> None:
         """Keep what a page became that was looked for and not found."""
         key = self._keys.pop(made.slug, None)
         if key is not None:
-            packed = {name: zlib.compress(data, _QUICK) for name, data in made.further.items()}
-            text = zlib.compress(made.html.encode(), _QUICK)
-            self._store.put(key, [made.slug, made.file, text, packed])
+            self._store.put(key, packed(made))
 
 
 def digest_of_value(value: object) -> bytes | None:
@@ -160,6 +157,11 @@ _NAMED: dict[type, Callable[[Any], tuple[object, ...]]] = {
 """What is written by its values alone, and not as its library would."""
 
 
+def what_renders(templates: Iterable[Path]) -> list[str | bytes]:
+    """Return what tells the program, its libraries and the templates that pages are rendered by."""
+    return [program_digest(), versions_of(PAGE_LIBRARIES), *_contents(templates)]
+
+
 def _contents(folders: Iterable[Path]) -> list[bytes]:
     files = [(folder, path) for folder in folders for path in sorted(folder.rglob("*")) if path.is_file()]
     return [
@@ -167,9 +169,16 @@ def _contents(folders: Iterable[Path]) -> list[bytes]:
     ]
 
 
-def _unpacked(found: object) -> PageFiles | None:
+def packed(made: PageFiles) -> list[object]:
+    """Return what a page became as values that the store writes."""
+    further = {name: zlib.compress(data, _QUICK) for name, data in made.further.items()}
+    return [made.slug, made.file, zlib.compress(made.html.encode(), _QUICK), further]
+
+
+def unpacked(found: object) -> PageFiles | None:
+    """Return what :func:`packed` was given; ``None`` for anything else."""
     if not (isinstance(found, list) and len(found) == 4):
         return None
-    slug, file, text, packed = found
-    further = {name: zlib.decompress(data) for name, data in packed.items()}
+    slug, file, text, held = found
+    further = {name: zlib.decompress(data) for name, data in held.items()}
     return PageFiles(slug, file, zlib.decompress(text).decode(), further)

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 
 from campaign.analyses.layout_results import GENERATION_LINE, OWN_LINE
 from campaign.analyses.layout_tables import length_table
@@ -14,11 +14,15 @@ from campaign.pages.layout_shapes import small_shapes
 LINE_SAID: Mapping[str, str] = {OWN_LINE: "by its own line", GENERATION_LINE: "by the generation’s line"}
 
 
-def module_shapes(results: CampaignResults, module: str, trial: str, name: str) -> Figure | None:
-    """Return the placements of one layout trial of a module, ``None`` where none could be read."""
+def module_shapes(
+    results: CampaignResults, module: str, trial: str, name: str, generations: Sequence[str]
+) -> Figure | None:
+    """Return the placements of one layout trial of a module, ``None`` where none could be read.
+
+    *generations* are those with rebuilt shapes, in the order of their colours.
+    """
     if results.layout is None:
         return None
-    generations = sorted({own.generation for own in results.layout.placements})
     own = [p for p in results.layout.of_line(OWN_LINE) if (p.module, p.trial) == (module, trial)]
     return small_shapes(own, generations, name)
 

@@ -15,6 +15,7 @@ from campaign.pages import numbers, palette, slugs
 from campaign.pages.drawing import ready
 from campaign.pages.figures import Figure, Trace, axis, layout, line, plain
 from campaign.pages.page_data import Fold, script_value
+from campaign.pages.rows import records_of_sensor
 from campaign.pages.tables import without_told_trial
 from campaign.recordings.recording import ReferenceQuantity
 
@@ -105,9 +106,8 @@ def loops_figure(
     if not curves:
         return None
     reference = hysteresis.reference
-    rows = hysteresis.sensors
-    own = rows[(rows["module"] == module) & (rows["sensor"] == sensor)]
-    unit = str(own["unit"].iloc[0]) if len(own) else ""
+    own = records_of_sensor(hysteresis.sensors, module, sensor)
+    unit = str(own[0]["unit"]) if own else ""
     return Figure(
         name="loops",
         caption=caption,
@@ -129,10 +129,9 @@ def departures(hysteresis: Hysteresis, curves: Sequence[SensorCurve]) -> list[Se
     The line has the slope that the sensor's widths are turned into strain by, and passes through the middle
     of all points of *curves*: narrow loops open, and nothing but a straight line is taken off.
     """
-    rows = hysteresis.sensors
-    own = rows[(rows["module"] == curves[0].module) & (rows["sensor"] == curves[0].sensor)]
-    if len(own):
-        slope, whole = float(own["slope"].iloc[0]), float(own["full_scale_output"].iloc[0])
+    own = records_of_sensor(hysteresis.sensors, curves[0].module, curves[0].sensor)
+    if own:
+        slope, whole = float(own[0]["slope"]), float(own[0]["full_scale_output"])
     else:  # loops that are drawn and count nowhere: their own line, their own range
         x, signal = (np.concatenate([getattr(c, name) for c in curves]) for name in ("x", "signal"))
         slope, whole = float(np.polyfit(x, signal, 1)[0]), float(np.ptp(signal))
@@ -182,23 +181,14 @@ def _with_departures(hysteresis: Hysteresis, curves: Sequence[SensorCurve]) -> p
 
 def outline_table(curves: Sequence[SensorCurve]) -> pd.DataFrame:
     """Return the points of outlines as rows: what is drawn, thinned with the extremes of both axes kept."""
-    parts = [
-        pd.DataFrame(
-            {
-                "module": c.module,
-                "sensor": c.sensor,
-                "repetition": c.repetition,
-                "trial": c.trial,
-                "rate_per_s": c.rate_per_s,
-                "cycle": c.cycle,
-                "settled": c.settled,
-                "strain": c.x,
-                "signal": c.signal,
-            }
-        )
-        for c in curves
-    ]
-    return pd.concat(parts, ignore_index=True)
+    points = [len(c.x) for c in curves]
+    told = pd.DataFrame({name: [getattr(c, name) for c in curves] for name in _TOLD_OF_CURVE})
+    rows = told.loc[np.repeat(np.arange(len(curves)), points)].reset_index(drop=True)
+    strain, signal = (np.concatenate([getattr(c, name) for c in curves]) for name in ("x", "signal"))
+    return rows.assign(strain=strain, signal=signal)
+
+
+_TOLD_OF_CURVE = ("module", "sensor", "repetition", "trial", "rate_per_s", "cycle", "settled")
 
 
 def loop_script_address(module: str, sensor: str) -> str:

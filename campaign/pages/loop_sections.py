@@ -6,14 +6,12 @@ from collections.abc import Hashable
 from dataclasses import dataclass, replace
 from typing import Any
 
-import pandas as pd
-
 from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers
 from campaign.pages.figures import Figure
 from campaign.pages.hysteresis import width_unit, widths_figure
 from campaign.pages.loop_figures import loops_figure, rate_words
-from campaign.pages.rows import of_module, of_sensor
+from campaign.pages.rows import of_module, records_of_sensor
 from campaign.pages.sensor_axis import sensor_axis
 
 
@@ -43,10 +41,10 @@ def sensor_loops(
     """Return the section of one sensor with its figures; ``None`` where neither loops nor endurance are."""
     lasted = _endurance_words(results, module, sensor)
     found = results.hysteresis
-    rows = of_sensor(found.sensors, module, sensor) if found is not None else pd.DataFrame()
-    if found is None or rows.empty:
+    rows = records_of_sensor(found.sensors, module, sensor) if found is not None else []
+    if found is None or not rows:
         return (SensorLoops(endurance=lasted), []) if lasted else (None, [])
-    row = rows.to_dict("records")[0]
+    row = rows[0]
     unit = width_unit(found)
     width = numbers.interval(row["width_percent_fso"], row["low"], row["high"], unit)
     drawn = loops_figure(
@@ -87,10 +85,10 @@ def module_widths_figure(results: CampaignResults, module: str) -> Figure | None
 def _delay_words(results: CampaignResults, module: str, sensor: str) -> str:
     """The delay with its interval; empty where one rate was run."""
     found = results.hysteresis
-    rows = of_sensor(found.rates.sensors, module, sensor) if found is not None else pd.DataFrame()
-    if rows.empty:
+    rows = records_of_sensor(found.rates.sensors, module, sensor) if found is not None else []
+    if not rows:
         return ""
-    row = rows.to_dict("records")[0]
+    row = rows[0]
     delay, low, high = (float(row[key]) * 1e3 for key in ("delay_s", "delay_low_s", "delay_high_s"))
     return numbers.interval(delay, low, high, "ms")
 
@@ -99,8 +97,8 @@ def _endurance_words(results: CampaignResults, module: str, sensor: str) -> tupl
     """One sentence a trial of thousands of cycles."""
     if results.endurance is None:
         return ()
-    rows = of_sensor(results.endurance.sensors, module, sensor)
-    return tuple(_lasting_words(row) for row in rows.to_dict("records"))
+    rows = records_of_sensor(results.endurance.sensors, module, sensor)
+    return tuple(_lasting_words(row) for row in rows)
 
 
 def _lasting_words(row: dict[Hashable, Any]) -> str:

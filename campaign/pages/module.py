@@ -2,10 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Hashable, Iterator, Sequence
+from collections.abc import Hashable, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
+import numpy as np
 import pandas as pd
 
 from campaign.analyses.results import CampaignResults
@@ -28,13 +29,10 @@ from campaign.pages.figures import (
 from campaign.pages.influence_sections import module_pressure_figure
 from campaign.pages.layout_sections import module_shapes
 from campaign.pages.loop_sections import module_widths_figure
-from campaign.pages.module_share import ModuleShares
+from campaign.pages.module_share import MERITS_OF_MODULES, AllModules, ModuleShare
 from campaign.pages.page import Page
-from campaign.pages.rows import of_module, of_sensor
-from campaign.pages.sensor import FIGURE_ORDER
+from campaign.pages.rows import of_module, of_sensor, records_of, records_of_sensor
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
-from campaign.pages.sensor_parts import sensor_keys
-from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Column, Table
 from campaign.pages.variance import TERM_WORDS, TERMS, in_shown_units
 from campaign.recordings.recording import ReferenceQuantity
@@ -57,69 +55,45 @@ class SharedTrial:
     figure: str
 
 
-def module_pages(
-    results: CampaignResults, mapped: SkinMap, shares: ModuleShares | None = None
-) -> Iterator[Page]:
-    """Yield the page of every module that a trial names, neighbours linked in order.
-
-    *shares* are the results module by module, where they are parted already.
-    """
-    shares = shares or ModuleShares(results)
-    named = sensor_keys(results)
-    keys = sorted({(generation, module) for generation, module, _ in named})
-    links = [(module, slugs.module_href(module)) for _, module in keys]
-    for i, (generation, module) in enumerate(keys):
-        sensors = [sensor for _, m, sensor in named if m == module]
-        yield replace(
-            _module_page(results, shares.of(module), mapped, generation, module, sensors),
-            previous=links[i - 1] if i else None,
-            following=links[i + 1] if i + 1 < len(links) else None,
-        )
-
-
-def _module_page(
-    results: CampaignResults,
-    own: CampaignResults,
-    mapped: SkinMap,
-    generation: str,
-    module: str,
-    sensors: Sequence[str],
-) -> Page:
-    lines = _lines_of(results, module)
-    shared, plots = shared_trials(own, module, lines)
+def module_page(share: ModuleShare, common: AllModules) -> Page:
+    """Return the page of a module, its neighbours linked."""
+    own, module = share.results, share.module
+    lines = _lines_of(own, module)
+    shared, plots = shared_trials(own, module, lines, common.placed_generations)
     figures: list[Figure | None] = []
-    if results.calibration is not None and len(lines):
-        reference = results.calibration.reference
-        generations = sensor_axis(results.calibration.sensor_lines).generations
-        where = replace(sensor_axis(lines), generations=generations)
+    if own.calibration is not None and len(lines):
+        where = replace(sensor_axis(lines), generations=common.generations)
         figures = [
-            module_lines_figure(own, lines, reference),
-            module_merits_figure(results, module),
+            module_lines_figure(own, lines, own.calibration.reference),
+            module_merits_figure(own, module, common),
             module_effects_figure(own, module, where),
         ]
-    figures += [module_widths_figure(results, module), module_pressure_figure(results, module)]
+    figures += [module_widths_figure(own, module), module_pressure_figure(own, module)]
     return Page(
         slug=slugs.module_slug(module),
         number=None,
         title=module,
         template="module.html",
         context={
-            "generation": generation,
+            "generation": share.generation,
             "module": module,
-            "map": mapped,
+            "map": common.mapped,
             "sensors": [
-                (sensor, slugs.sensor_href(module, sensor), _state(own, module, sensor)) for sensor in sensors
+                (sensor, slugs.sensor_href(module, sensor), _state(own, module, sensor))
+                for sensor in share.sensors
             ],
-            "register": _register_of(results, module),
+            "register": _register_of(own, module),
             "batch": _batch_of(own, module),
             "mountings": _mountings_of(own, module),
             "shared": shared,
             "trials": _trials_of(own, module),
-            "reference": results.readings.reference,
+            "reference": own.readings.reference,
         },
         figures=(*(figure for figure in figures if figure is not None), *plots),
-        tables=tuple(_tables(results, module, lines)),
+        tables=tuple(_tables(own, module, lines)),
         description=f"Lines, figures of merit, effects and trials of module {module}.",
+        previous=share.neighbours[0],
+        following=share.neighbours[1],
     )
 
 
@@ -131,15 +105,14 @@ def _lines_of(results: CampaignResults, module: str) -> pd.DataFrame:
 
 def _state(results: CampaignResults, module: str, sensor: str) -> str:
     """One of: used, set aside, not analysed."""
-    trials = of_module(results.intake.trials, module)
-    own = trials[trials["sensor"].astype(str) == sensor]
     table = results.readings.table
     if len(table) and bool(of_sensor(table, module, sensor)["used"].any()):
         return "used"
-    used = own[own["fate"] == "used"]
-    if used.empty:
+    trials = records_of_sensor(results.intake.trials, module, sensor)
+    kinds = {trial["kind"] for trial in trials if trial["fate"] == "used"}
+    if not kinds:
         return "set aside"
-    return "used" if used["kind"].isin(ANALYSED).any() else "not analysed"
+    return "used" if kinds & set(ANALYSED) else "not analysed"
 
 
 def _batch_of(results: CampaignResults, module: str) -> str:
@@ -173,7 +146,7 @@ def _trials_of(results: CampaignResults, module: str) -> list[dict[Hashable, Any
     rows = rows[rows["sensor"].astype(str) != ""].drop_duplicates(["file", "sensor"])
     return [
         {**row, "href": slugs.trial_href(module, str(row["sensor"]), str(row["file"]))}
-        for row in rows.sort_values(["sensor", "started", "file"], kind="stable").to_dict("records")
+        for row in records_of(rows.sort_values(["sensor", "started", "file"], kind="stable"))
     ]
 
 
@@ -186,15 +159,15 @@ def module_lines_figure(
     readings = _used_readings(results, str(lines["module"].iloc[0]))
     traces: list[Trace] = []
     labels: list[Layout] = []
-    for index, row in enumerate(lines.to_dict("records")):
+    for index, row in enumerate(records_of(lines)):
         style = palette.GENERATION_STYLES[index % len(palette.GENERATION_STYLES)]
         module, sensor = str(row["module"]), str(row["sensor"])
-        ends = pd.Series([row["strain_low"], row["strain_high"]], dtype=float)
+        ends = np.array([row["strain_low"], row["strain_high"]], dtype=float)
         fitted = row["intercept"] + row["slope"] * ends
         traces.append(
             line(ends * factor, fitted, colour=style.colour, dash=style.dash, module=module, sensor=sensor)
         )
-        own = readings[readings["sensor"] == sensor].iloc[:300]
+        own = of_sensor(readings, module, sensor).iloc[:300]
         traces.append(
             points(
                 own["x"] * factor,
@@ -204,14 +177,14 @@ def module_lines_figure(
                 open_marker=True,
                 text=[
                     f"{module} {sensor}, run {r}, reading {o}"
-                    for r, o in zip(own["repetition"], own["order"], strict=True)
+                    for r, o in zip(own["repetition"].tolist(), own["order"].tolist(), strict=True)
                 ],
-                links=[slugs.trial_href(module, sensor, str(t)) for t in own["trial"]],
+                links=[slugs.trial_href(module, sensor, str(t)) for t in own["trial"].tolist()],
                 module=module,
                 sensor=sensor,
             )
         )
-        labels.append(label(sensor, float(ends.iloc[1]) * factor, float(fitted.iloc[1]), colour=style.colour))
+        labels.append(label(sensor, float(ends[1]) * factor, float(fitted[1]), colour=style.colour))
     return Figure(
         name="lines",
         caption=f"The lines of {numbers.count(len(lines), 'sensor')} of {lines['module'].iloc[0]} with the "
@@ -235,33 +208,31 @@ def _used_readings(results: CampaignResults, module: str) -> pd.DataFrame:
     return rows[rows["used"]]
 
 
-def module_merits_figure(results: CampaignResults, module: str) -> Figure | None:
+def module_merits_figure(results: CampaignResults, module: str, common: AllModules) -> Figure | None:
     """Return the figures of merit in %FSO of the module's sensors among all the campaign's sensors."""
-    names = [n for n in FIGURE_ORDER if n not in ("bend", "strain_error")]
-    figures = results.limits.figures
-    figures = figures[figures["figure"].isin(names)].dropna(subset=["estimate"])
-    own = of_module(figures, module)
+    figures = of_module(results.limits.figures, module)
+    own = figures[figures["figure"].isin(MERITS_OF_MODULES)].dropna(subset=["estimate"])
     if own.empty:
         return None
-    order = [n for n in names if n in set(own["figure"])]
+    order = [name for name in MERITS_OF_MODULES if name in set(own["figure"])]
     sensors = sorted(own["sensor"].unique())
+    edge = 3 * common.largest_merit
     traces: list[Trace] = []
     for index, sensor in enumerate(sensors):
-        rows = own[own["sensor"] == sensor]
-        edge = 3 * float(figures["estimate"].max())
+        rows = records_of_sensor(own, module, str(sensor))
         style = palette.GENERATION_STYLES[index % len(palette.GENERATION_STYLES)]
         shift = (index - (len(sensors) - 1) / 2) * min(0.13, 0.75 / len(sensors))
         traces.append(
             intervals(
-                rows["estimate"],
-                rows["low"],
-                rows["high"].clip(upper=edge),
-                [order.index(str(f)) + shift for f in rows["figure"]],
+                [row["estimate"] for row in rows],
+                [row["low"] for row in rows],
+                [min(row["high"], edge) for row in rows],
+                [order.index(str(row["figure"])) + shift for row in rows],
                 style=style,
                 text=[
                     f"{module} {sensor}: {r['figure']} "
                     f"{numbers.interval(r['estimate'], r['low'], r['high'], '%FSO')}"
-                    for r in rows.to_dict("records")
+                    for r in rows
                 ],
                 links=[slugs.sensor_href(module, str(sensor))] * len(rows),
                 module=module,
@@ -269,7 +240,7 @@ def module_merits_figure(results: CampaignResults, module: str) -> Figure | None
             )
         )
     for index, name in enumerate(order):
-        middle = float(figures.loc[figures["figure"] == name, "estimate"].median())
+        middle = common.typical_merits[name]
         traces.append(line([middle, middle], [index - 0.45, index + 0.45], colour=palette.SOFT, dash="dot"))
     worst = own.iloc[int(own["estimate"].to_numpy(float).argmax())]
     return Figure(
@@ -315,7 +286,7 @@ def module_effects_figure(results: CampaignResults, module: str, where: SensorAx
     unit = str(rows["unit"].iloc[0])
     text = [
         f"{module} {r['sensor']}: {numbers.interval(r['estimate'], r['low'], r['high'], unit)}"
-        for r in rows.to_dict("records")
+        for r in records_of(rows)
     ]
     ticks = [(where.places[key], key[2]) for key in where.places]
     return Figure(
@@ -336,9 +307,12 @@ def module_effects_figure(results: CampaignResults, module: str, where: SensorAx
 
 
 def shared_trials(
-    results: CampaignResults, module: str, lines: pd.DataFrame
+    results: CampaignResults, module: str, lines: pd.DataFrame, placed: Sequence[str]
 ) -> tuple[list[SharedTrial], list[Figure]]:
-    """Return the trials that carried several of the module's sensors, and their little plots."""
+    """Return the trials that carried several of the module's sensors, and their little plots.
+
+    *placed* are the generations with rebuilt shapes, in the order of their colours.
+    """
     trials = of_module(results.intake.trials, module)
     trials = trials[trials["sensor"].astype(str) != ""]
     counts = trials.groupby("file")["sensor"].nunique()
@@ -346,11 +320,11 @@ def shared_trials(
     sections: list[SharedTrial] = []
     plots: list[Figure] = []
     first = wide.sort_values(["started", "file"], kind="stable").drop_duplicates("file")
-    for index, row in enumerate(first.to_dict("records"), 1):
+    for index, row in enumerate(records_of(first), 1):
         own = wide[wide["file"] == row["file"]]
         plot = None
         if str(row["kind"]) == "layout":
-            plot = module_shapes(results, module, str(row["file"]), f"trial-{index}")
+            plot = module_shapes(results, module, str(row["file"]), f"trial-{index}", placed)
         elif index <= _MOST_TRIAL_PLOTS and len(lines):
             plot = shared_trial_plot(results, module, str(row["file"]), lines, index)
         if plot is not None:

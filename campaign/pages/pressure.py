@@ -29,7 +29,7 @@ from campaign.pages.figures import (
 )
 from campaign.pages.influence_figures import axis_with_zero, influence_figures, influence_tables
 from campaign.pages.page import Page
-from campaign.pages.rows import of_sensor
+from campaign.pages.rows import of_sensor, records_of, records_of_sensor
 from campaign.pages.sensor_axis import SensorAxis, interval_traces, sensor_axis
 from campaign.pages.tables import Column, Table, without_told_trial
 from campaign.recordings.recording import FloatArray, ReferenceQuantity
@@ -253,12 +253,12 @@ def sensor_sweeps_figure(
     pressure: Pressure, module: str, sensor: str, name: str = "pressure-sweeps"
 ) -> Figure:
     """Return the signal of one sensor against pressure, all sweeps, with their lines."""
-    rows = of_sensor(pressure.sweeps, module, sensor)
-    unit = str(rows["unit"].iloc[0])
+    rows = records_of_sensor(pressure.sweeps, module, sensor)
+    unit = str(rows[0]["unit"])
     traces: list[Trace] = []
-    lengths = sorted(set(rows["x"].round(4).dropna()))
+    lengths = sorted({round(float(row["x"]), 4) for row in rows if not math.isnan(row["x"])})
     most = max(12, MOST_POINTS // len(rows))
-    for row in rows.to_dict("records"):
+    for row in rows:
         step = lengths.index(round(float(row["x"]), 4)) if math.isfinite(row["x"]) else 0
         style = palette.GENERATION_STYLES[step % len(palette.GENERATION_STYLES)]
         key = (str(row["trial"]), sensor, int(row["repetition"]), int(row["sweep"]))
@@ -315,8 +315,7 @@ def _sweep_words(row: Mapping[Hashable, Any], reference: ReferenceQuantity, unit
 
 
 def _sensor_caption(pressure: Pressure, module: str, sensor: str) -> str:
-    rows = pressure.table
-    row = rows[(rows["module"] == module) & (rows["sensor"] == sensor)].iloc[0]
+    row = records_of_sensor(pressure.table, module, sensor)[0]
     slope = numbers.interval(row["per_kpa"], row["low"], row["high"], f"{row['unit']}/kPa")
     change = f"{numbers.count(int(row['sweeps']), 'sweep')} at {numbers.count(int(row['lengths']), 'length')}"
     return f"{module} {sensor}: {slope} in {change}."
@@ -340,7 +339,7 @@ def sensitivity_figure(
         }
     )
     unit = per_unit(reference)
-    words = [_error_sentence(row, unit, reference.shown_factor) for row in shown.to_dict("records")]
+    words = [_error_sentence(row, unit, reference.shown_factor) for row in records_of(shown)]
     spread = [float(v) * reference.shown_factor for v in (known["strain_error_per_kpa"].agg(["min", "max"]))]
     return Figure(
         name="sensitivity",
@@ -372,7 +371,7 @@ def _coefficients_figure(pressure: Pressure, where: SensorAxis, table: pd.DataFr
     if known.empty:
         return None
     unit = f"{pressure.unit}/kPa"
-    words = [_error_sentence(row, unit, 1.0) for row in known.to_dict("records")]
+    words = [_error_sentence(row, unit, 1.0) for row in records_of(known)]
     return Figure(
         name="sensitivity",
         caption=f"What a kilopascal adds to the signals of {numbers.count(len(known), 'sensor')}.",
@@ -413,7 +412,7 @@ def corrections_figure(pressure: Pressure) -> Figure | None:
                 heights,
                 style=palette.generation_style(generation, tuple(generations)),
                 name=generation,
-                text=[_remaining_sentence(row, reference) for row in rows.to_dict("records")],
+                text=[_remaining_sentence(row, reference) for row in records_of(rows)],
             )
         )
     ticks = [(float(i), CORRECTION_WORDS[name]) for i, name in enumerate(names)]
@@ -476,7 +475,7 @@ def compensation_figure(pressure: Pressure, where: SensorAxis) -> Figure | None:
                     style=style,
                     open_marker=hollow,
                     size=6,
-                    text=[_compensation_sentence(row, reference) for row in rows.to_dict("records")],
+                    text=[_compensation_sentence(row, reference) for row in records_of(rows)],
                     links=[
                         slugs.sensor_href(str(m), str(s))
                         for m, s in zip(rows["module"], rows["sensor"], strict=True)
@@ -523,9 +522,7 @@ def hysteresis_figure(pressure: Pressure, where: SensorAxis) -> Figure | None:
     shown = known.drop(columns=["low", "high"]).rename(
         columns={"strain_loop": "estimate", "strain_loop_low": "low", "strain_loop_high": "high"}
     )
-    words = [
-        _error_sentence(row, reference.shown_unit, reference.shown_factor) for row in shown.to_dict("records")
-    ]
+    words = [_error_sentence(row, reference.shown_unit, reference.shown_factor) for row in records_of(shown)]
     apart = int(((shown["low"] > 0) | (shown["high"] < 0)).sum())
     most = float(shown["estimate"].abs().max())
     largest = numbers.significant(most * reference.shown_factor, 2, reference.shown_unit)
@@ -648,10 +645,7 @@ def compensated_table(pressure: Pressure) -> Table:
     """Return trials of other kinds that log pressure, without and with their sensor's correction."""
     reference, frame = pressure.reference, pressure.compensated
     factor, unit = reference.shown_factor, reference.shown_unit
-    links = [
-        slugs.trial_href(str(r["module"]), str(r["sensor"]), str(r["trial"]))
-        for r in frame.to_dict("records")
-    ]
+    links = [slugs.trial_href(str(r["module"]), str(r["sensor"]), str(r["trial"])) for r in records_of(frame)]
     return Table(
         name="pressure_compensated",
         caption="Other trials that log pressure, as recorded and corrected.",

@@ -7,7 +7,7 @@
 from __future__ import annotations
 
 import re
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from functools import lru_cache, partial
 from itertools import islice
@@ -117,13 +117,14 @@ def render_site(
     frame: SiteFrame,
     pages: Sequence[Page],
     tables: Sequence[Table] = (),
-    files: Mapping[str, bytes] | None = None,
+    files: Mapping[str, bytes] | Callable[[], Mapping[str, bytes]] | None = None,
     plot_library: Path | None = None,
     further_templates: Sequence[Path] = (),
     reference: ReferenceQuantity = STRAIN,
     own_pages: Iterable[Page] = (),
     crew: Crew | None = None,
     store: Store | None = None,
+    own_making: OwnMaking | None = None,
 ) -> dict[str, bytes]:
     """Return every file of the site by its address, sorted.
 
@@ -136,7 +137,7 @@ def render_site(
     tables
         Tables that are files of the site beside those that pages show.
     files
-        Further files by address (calibration records, pictures of notes).
+        Further files by address (calibration records, pictures of notes), or what makes them.
     plot_library
         A build of the plot library to use instead of the one that plotly carries.
     further_templates
@@ -149,6 +150,8 @@ def render_site(
         Who renders *own_pages*; this process where ``None``. The files are the same.
     store
         Where those that an earlier run rendered are found, and others kept; ``None`` goes without.
+    own_making
+        Makes and renders the pages of modules and sensors instead, while this process renders the others.
 
     Raises
     ------
@@ -156,11 +159,23 @@ def render_site(
         Where two pages or two different tables would be one file.
     """
     _check_slugs(page.slug for page in pages)
-    written: dict[str, bytes] = dict(files or {})
+    written: dict[str, bytes] = {}
     pages = pages_as_marked(frame, pages)
-    written |= table_files([*tables, *(t for page in pages for t in page.tables)], reference, frame.origin)
     whole = RenderingTask(tuple(pages), frame, _strip(pages), tuple(further_templates), reference)
-    made = [*render_pages(whole), *_own_page_files(whole, own_pages, crew or ThisProcess(), store)]
+    made: list[PageFiles] = []
+
+    def others() -> None:
+        shown = (table for page in pages for table in page.tables)
+        written.update(files() if callable(files) else files or {})
+        written.update(table_files([*tables, *shown], reference, frame.origin))
+        made.extend(render_pages(whole))
+
+    if own_making is not None:
+        for some in own_making(replace(whole, pages=()), others):
+            made += some
+    else:
+        others()
+        made += _own_page_files(whole, own_pages, crew or ThisProcess(), store)
     _check_slugs(page.slug for page in made)
     for page in made:
         written |= page.further
@@ -179,6 +194,10 @@ class RenderingTask:
     strip: tuple[Page, ...]
     further_templates: tuple[Path, ...]
     reference: ReferenceQuantity
+
+
+OwnMaking = Callable[[RenderingTask, Callable[[], None]], Iterable[tuple[PageFiles, ...]]]
+"""Given what all pages share, and what this process is to do meanwhile, once: the files of own pages."""
 
 
 def render_pages(task: RenderingTask) -> tuple[PageFiles, ...]:

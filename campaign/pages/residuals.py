@@ -27,6 +27,7 @@ from campaign.pages.figures import (
 )
 from campaign.pages.page import Page
 from campaign.pages.page_data import Fold, script_value
+from campaign.pages.rows import records_of
 from campaign.pages.sensor_axis import SensorAxis, sensor_axis
 from campaign.pages.tables import Column, Table
 from campaign.pages.thinning import rounded
@@ -105,12 +106,14 @@ def residual_files(results: CampaignResults) -> dict[str, bytes]:
     where, reference = sensor_axis(rows), results.calibration.reference
     files = {}
     for module, own in rows.groupby("module", sort=True):
-        by_level = _marks(own, "x", where, reference, reference.shown_factor)
-        by_order = _marks(own, "order", where, reference)
+        by_level = [_rounded(trace) for trace in _marks(own, "x", where, reference, reference.shown_factor)]
+        by_order = [part["order"].astype(float).tolist() for _, part in own.groupby(_MARKED_BY, sort=True)]
         fold = Fold()
-        traces = [fold.trace(_rounded(trace)) for trace in by_level]
-        places = {"against-level": by_level, "against-order": by_order}
-        x = {name: [fold.numbers(_rounded(trace)["x"]) for trace in drawn] for name, drawn in places.items()}
+        traces = [fold.trace(trace) for trace in by_level]
+        x = {
+            "against-level": [fold.numbers(trace["x"]) for trace in by_level],
+            "against-order": [fold.numbers(_rounded_values(orders)) for orders in by_order],
+        }
         content = script_value(
             {"traces": traces, "shared": fold.shared, "lists": fold.lists, "texts": fold.texts, "x": x}
         )
@@ -141,7 +144,7 @@ def _autocorrelation(residuals: Residuals) -> list[dict[str, object]]:
             "error": float(row["standard_error"]),
             "distinct": abs(row["autocorrelation"]) > 2 * row["standard_error"],
         }
-        for row in table.to_dict("records")
+        for row in records_of(table)
     ]
 
 
@@ -153,26 +156,33 @@ def _largest(rows: pd.DataFrame) -> pd.DataFrame:
 def residual_sentences(rows: pd.DataFrame, reference: ReferenceQuantity) -> list[str]:
     """Return one sentence a residual: whose it is, where it lies and how large it is."""
     factor, unit = reference.shown_factor, reference.shown_unit
+    places = shown_places(rows)
+    at = {place: numbers.significant(place * factor, 3, unit) for place in set(places)}
+    columns = (rows[name].tolist() for name in (*_OF_READING, VALUE))
     return [
-        f"{r['module']} {r['sensor']}, run {r['repetition']}, reading {r['order']}, {r['direction']} at "
-        f"{numbers.significant(place * factor, 3, unit)}: {numbers.significant(r[VALUE] * factor, 2, unit)}"
-        for r, place in zip(rows.to_dict("records"), shown_places(rows), strict=True)
+        f"{module} {sensor}, run {repetition}, reading {order}, {direction} at {at[place]}: "
+        f"{numbers.significant(value * factor, 2, unit)}"
+        for module, sensor, repetition, order, direction, value, place in zip(*columns, places, strict=True)
     ]
+
+
+_OF_READING = ("module", "sensor", "repetition", "order", "direction")
 
 
 def shown_places(rows: pd.DataFrame) -> list[float]:
     """Return where each reading was taken: its nominal level, else what was recorded, noise rounded off."""
     width = float(rows["x"].max() - rows["x"].min())
-    places = rows["nominal_level"].fillna(rows["x"])
-    return [numbers.rounded_to(float(place), width) for place in places]
+    places = rows["nominal_level"].fillna(rows["x"]).tolist()
+    shown = {place: numbers.rounded_to(float(place), width) for place in set(places)}
+    return [shown[place] for place in places]
 
 
 def residual_links(rows: pd.DataFrame) -> list[str]:
     """Return the address of each residual's trial."""
-    return [
-        slugs.trial_href(str(m), str(s), str(t))
-        for m, s, t in zip(rows["module"], rows["sensor"], rows["trial"], strict=True)
-    ]
+    columns = ([str(value) for value in rows[name].tolist()] for name in ("module", "sensor", "trial"))
+    trials = list(zip(*columns, strict=True))
+    links = {trial: slugs.trial_href(*trial) for trial in set(trials)}
+    return [links[trial] for trial in trials]
 
 
 def _marks(
@@ -189,8 +199,11 @@ def _marks(
             links=residual_links(rows),
             module=str(module),
         )
-        for (generation, module), rows in drawn.groupby(["generation", "module"], sort=True)
+        for (generation, module), rows in drawn.groupby(_MARKED_BY, sort=True)
     ]
+
+
+_MARKED_BY = ["generation", "module"]
 
 
 def _bands(rows: pd.DataFrame, by: str, reference: ReferenceQuantity, x_factor: float = 1.0) -> list[Trace]:

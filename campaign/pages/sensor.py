@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Hashable, Iterator, Mapping, Sequence
+from collections.abc import Hashable, Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
 
@@ -11,7 +11,6 @@ import pandas as pd
 
 from campaign.analyses.calibration import CalibrationRecord
 from campaign.analyses.findings import AVERAGED
-from campaign.analyses.limits import CONDITIONS, ONE_MODULE, TOO_FEW, UNKNOWN
 from campaign.analyses.results import CampaignResults
 from campaign.pages import numbers, slugs
 from campaign.pages.budget import sensor_budget
@@ -20,8 +19,9 @@ from campaign.pages.drift import sensor_holds
 from campaign.pages.influence_sections import sensor_influences
 from campaign.pages.layout_sections import lengths_said
 from campaign.pages.loop_sections import sensor_loops
-from campaign.pages.module_share import ModuleShares
+from campaign.pages.module_share import AllModules, ModuleShare
 from campaign.pages.page import Page
+from campaign.pages.rows import Row
 from campaign.pages.sensor_parts import SensorParts, gather_sensors
 from campaign.pages.sensor_plots import half_widths, moved_from_line, sensor_figures_of
 from campaign.pages.skin_map import SkinMap
@@ -82,25 +82,15 @@ class TrialSection:
     shared_with: tuple[str, ...]
 
 
-def sensor_pages(
-    results: CampaignResults, mapped: SkinMap, shares: ModuleShares | None = None
-) -> Iterator[Page]:
-    """Yield the page of every sensor that a trial names, neighbours linked in order.
-
-    *shares* are the results module by module, where they are parted already.
-    """
-    shares = shares or ModuleShares(results)
-    labels = {} if results.calibration is None else results.calibration.labels
+def sensor_pages(share: ModuleShare, common: AllModules) -> Iterator[Page]:
+    """Yield the page of every sensor of a module, neighbours linked in order."""
+    results = share.results
     together = _sensors_by_trial(results.intake.trials)
-    sensors = gather_sensors(results)
     laid = lengths_said(results)
-    links = [(f"{s.module} {s.sensor}", slugs.sensor_href(s.module, s.sensor)) for s in sensors]
-    for i, parts in enumerate(sensors):
-        yield replace(
-            _sensor_page(shares.of(parts.module), parts, mapped, labels, together, laid),
-            previous=links[i - 1] if i else None,
-            following=links[i + 1] if i + 1 < len(links) else None,
-        )
+    sensors = gather_sensors(results, share.keys)
+    for parts, (previous, following) in zip(sensors, share.sensor_neighbours, strict=True):
+        page = _sensor_page(results, parts, common.mapped, together, laid)
+        yield replace(page, previous=previous, following=following)
 
 
 def _sensors_by_trial(trials: pd.DataFrame) -> dict[tuple[str, str], set[str]]:
@@ -115,7 +105,6 @@ def _sensor_page(
     results: CampaignResults,
     parts: SensorParts,
     mapped: SkinMap,
-    labels: Mapping[str, str],
     together: Mapping[tuple[str, str], set[str]],
     laid: Mapping[tuple[str, str, str], str],
 ) -> Page:
@@ -155,7 +144,7 @@ def _sensor_page(
             },
             "register": register_facts(parts.register),
             "used": parts.used,
-            "labels": labels,
+            "labels": {} if results.calibration is None else results.calibration.labels,
             "ordinary": parts.ordinary,
         },
         figures=(*sensor_figures_of(parts), *outlines, *swept, *holds),
@@ -250,15 +239,11 @@ def trial_sections(parts: SensorParts, together: Mapping[tuple[str, str], set[st
     return sections
 
 
-_OF_TRIAL = ("file", "kind", "started", "session", "repetition", "fate")
-
-
-def _trials_in_order(trials: pd.DataFrame) -> list[dict[str, Any]]:
+def _trials_in_order(trials: Iterable[Row]) -> list[Row]:
     """Return the first row of every file, by time and file, those without a time last."""
-    rows = zip(*(trials[key].tolist() for key in _OF_TRIAL), strict=True)
-    first: dict[str, dict[str, Any]] = {}
-    for row in rows:
-        first.setdefault(str(row[0]), dict(zip(_OF_TRIAL, row, strict=True)))
+    first: dict[str, Row] = {}
+    for row in trials:
+        first.setdefault(str(row["file"]), row)
     return sorted(
         first.values(), key=lambda t: (not _text(t["started"]), _text(t["started"]), str(t["file"]))
     )
@@ -266,7 +251,7 @@ def _trials_in_order(trials: pd.DataFrame) -> list[dict[str, Any]]:
 
 def _runs_by_trial(parts: SensorParts) -> dict[str, list[dict[Hashable, Any]]]:
     runs: dict[str, list[dict[Hashable, Any]]] = {}
-    for run in parts.runs.to_dict("records"):
+    for run in parts.run_rows:
         runs.setdefault(str(run["trial"]), []).append(run)
     return runs
 
@@ -311,7 +296,7 @@ def _limits_table(parts: SensorParts) -> list[Table]:
         Table(
             name="sensor_limits",
             caption="The campaign’s limits, judged with the uncertainty of each figure.",
-            frame=limits_as_shown(parts.limits, parts.reference),
+            frame=parts.limits,
             columns=(
                 Column("_limit", "Limit", kind="text"),
                 Column("_value", "At most", digits=3),
@@ -323,27 +308,3 @@ def _limits_table(parts: SensorParts) -> list[Table]:
             source="limits",
         )
     ]
-
-
-_REASONS: Mapping[str, str] = {
-    CONDITIONS: ": it would hold, but a source of its budget is not known",
-    UNKNOWN: ": its uncertainty is not known",
-    TOO_FEW: ": too few sensors",
-    ONE_MODULE: ": one module says nothing of the next",
-}
-
-
-def limits_as_shown(rows: pd.DataFrame, reference: ReferenceQuantity) -> pd.DataFrame:
-    """Return verdicts with hidden columns in shown units: strain errors in per cent, others as they are."""
-    limits = [str(limit) for limit in rows["limit"].tolist()]
-    in_reference = np.array([limit == "strain_error" for limit in limits], dtype=bool)
-    factor = np.where(in_reference, reference.shown_factor, 1.0)
-    scaled = {f"_{key}": rows[key].to_numpy(float) * factor for key in ("value", "estimate", "low", "high")}
-    verdicts = zip(rows["verdict"].tolist(), rows["reason"].tolist(), strict=True)
-    units = zip(rows["unit"].tolist(), in_reference.tolist(), strict=True)
-    return rows.assign(
-        **scaled,
-        _verdict=[f"{verdict}{_REASONS.get(reason, '')}" for verdict, reason in verdicts],
-        _limit=[limit.replace("_", " ") for limit in limits],
-        _unit=[reference.shown_unit if shown else unit for unit, shown in units],
-    )

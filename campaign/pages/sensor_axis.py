@@ -39,7 +39,7 @@ class SensorAxis:
 
     def heights(self, rows: pd.DataFrame) -> list[float]:
         """Return the height of each row's sensor."""
-        return [self.places[key] for key in rows[_SENSOR].itertuples(index=False, name=None)]
+        return [self.places[key] for key in _keys(rows)]
 
     def axis(self) -> Layout:
         """Return the y axis: one tick a module, the first on top; of one module, one tick a sensor."""
@@ -58,7 +58,7 @@ class SensorAxis:
 
 def sensor_axis(rows: pd.DataFrame) -> SensorAxis:
     """Return the axis for the sensors in *rows* (columns generation, module, sensor), sorted."""
-    sensors = sorted(set(rows[_SENSOR].astype(str).itertuples(index=False, name=None)))
+    sensors = sorted(set(_keys(rows)))
     modules = tuple(sorted({(g, m) for g, m, _ in sensors}))
     places: dict[tuple[str, str, str], float] = {}
     for height, module in enumerate(modules):
@@ -69,6 +69,11 @@ def sensor_axis(rows: pd.DataFrame) -> SensorAxis:
     return SensorAxis(tuple(sorted({g for g, _ in modules})), modules, places)
 
 
+def _keys(rows: pd.DataFrame) -> list[tuple[str, str, str]]:
+    columns = ([str(value) for value in rows[name].tolist()] for name in _SENSOR)
+    return [(generation, module, sensor) for generation, module, sensor in zip(*columns, strict=True)]
+
+
 def _title(words: str, ticks: Sequence[tuple[float, str]]) -> str:
     """Return the axis title; none where long names would run into it."""
     return words if max((len(name) for _, name in ticks), default=0) <= 5 else ""
@@ -76,7 +81,8 @@ def _title(words: str, ticks: Sequence[tuple[float, str]]) -> str:
 
 def sensor_links(rows: pd.DataFrame) -> list[str]:
     """Return the address of each row's sensor page."""
-    return [slugs.sensor_href(str(m), str(s)) for m, s in zip(rows["module"], rows["sensor"], strict=True)]
+    names = zip(rows["module"].tolist(), rows["sensor"].tolist(), strict=True)
+    return [slugs.sensor_href(str(module), str(sensor)) for module, sensor in names]
 
 
 def interval_traces(

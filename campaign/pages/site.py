@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
+from functools import partial
 from pathlib import Path
 
 from campaign import __version__
@@ -22,9 +23,9 @@ from campaign.pages.layout import layout_page
 from campaign.pages.layout_scripts import layout_scripts
 from campaign.pages.loop_figures import loop_scripts
 from campaign.pages.method import method_pages
-from campaign.pages.module import module_pages
-from campaign.pages.module_share import ModuleShares
+from campaign.pages.module_share import all_modules, module_shares
 from campaign.pages.notes import Notes
+from campaign.pages.own_pages import files_of_modules, pages_of_module
 from campaign.pages.page import Page, SiteFrame
 from campaign.pages.planning import planning_page
 from campaign.pages.pressure import pressure_page
@@ -32,17 +33,20 @@ from campaign.pages.provenance import provenance_page
 from campaign.pages.recordings import recordings_page
 from campaign.pages.render import render_site
 from campaign.pages.residuals import residual_files, residuals_page
-from campaign.pages.sensor import sensor_pages
 from campaign.pages.sensor_parts import sensor_keys
 from campaign.pages.site_tables import site_tables
 from campaign.pages.skin_map import SkinMap
 from campaign.pages.tables import Table
 from campaign.pages.variance import variance_page
-from campaign.workers.crew import Crew, LocalProcesses, ThisProcess
+from campaign.workers.crew import LocalProcesses
 from campaign.workers.workshop import Workshop
 
-PAGES_WORTH_SHARING = 150
-"""From so many pages of modules and sensors on, other processes render them while this one makes them."""
+PAGES_WORTH_SHARING = 100
+"""From so many pages of modules and sensors on, other processes make and render them.
+
+A worker takes some 1.9 s of a core before its first page, and a page some 0.06 s: two workers are even with
+one process at about 60 pages.
+"""
 
 
 def build_site(
@@ -73,25 +77,33 @@ def build_site(
     mapped = campaign_map(results)
     pages = [*pages_of_campaign(results, mapped), *notes.pages]
     pages.append(provenance_page(results, _all_tables(results, pages)))
-    records = results.calibration.records if results.calibration is not None else ()
+    making = None
+    if workshop is not None and _worth_sharing(results, workshop):
+        making = partial(files_of_modules, results, mapped, workshop)
     return render_site(
         site_frame(results),
         pages,
         site_tables(results, pages),
-        files={
-            **(notes.files or {}),
-            **record_files(records, site_frame(results).origin),
-            **residual_files(results),
-            **loop_scripts(results.hysteresis),
-            **budget_scripts(results.budget),
-            **layout_scripts(results.layout),
-        },
+        files=partial(_further_files, results, notes),
         plot_library=plot_library,
         reference=results.readings.reference,
         own_pages=own_pages(results, mapped),
-        crew=_crew_for(results, workshop),
         store=workshop.store if workshop is not None else None,
+        own_making=making,
     )
+
+
+def _further_files(results: CampaignResults, notes: Notes) -> dict[str, bytes]:
+    """Return the files that are neither pages nor tables, by address."""
+    records = results.calibration.records if results.calibration is not None else ()
+    return {
+        **(notes.files or {}),
+        **record_files(records, site_frame(results).origin),
+        **residual_files(results),
+        **loop_scripts(results.hysteresis),
+        **budget_scripts(results.budget),
+        **layout_scripts(results.layout),
+    }
 
 
 def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
@@ -100,7 +112,8 @@ def site_pages(results: CampaignResults, notes: Notes) -> list[Page]:
     A page appears only for what was measured.
     """
     mapped = campaign_map(results)
-    pages = [*pages_of_campaign(results, mapped), *own_pages(results, mapped), *notes.pages]
+    own = sorted(own_pages(results, mapped), key=lambda page: bool(page.above))  # modules first
+    pages = [*pages_of_campaign(results, mapped), *own, *notes.pages]
     return [*pages, provenance_page(results, _all_tables(results, pages))]
 
 
@@ -124,22 +137,20 @@ def pages_of_campaign(results: CampaignResults, mapped: SkinMap) -> list[Page]:
 
 
 def own_pages(results: CampaignResults, mapped: SkinMap) -> Iterator[Page]:
-    """Yield the pages of modules, then those of sensors; none has a table that is a file of its own."""
-    shares = ModuleShares(results)
-    yield from module_pages(results, mapped, shares)
-    yield from sensor_pages(results, mapped, shares)
+    """Yield the page of every module and those of its sensors; none has a table that is a file of its own."""
+    common = all_modules(results, mapped)
+    for share in module_shares(results):
+        yield from pages_of_module(share, common)
 
 
 def _all_tables(results: CampaignResults, pages: Sequence[Page]) -> list[Table]:
     return [*(table for page in pages for table in page.tables), *site_tables(results, pages)]
 
 
-def _crew_for(results: CampaignResults, workshop: Workshop | None) -> Crew:
-    if workshop is None or not isinstance(workshop.crew, LocalProcesses):
-        return ThisProcess()
+def _worth_sharing(results: CampaignResults, workshop: Workshop) -> bool:
     keys = sensor_keys(results)
     pages = len(keys) + len({module for _, module, _ in keys})
-    return workshop.crew if pages >= PAGES_WORTH_SHARING else ThisProcess()
+    return isinstance(workshop.crew, LocalProcesses) and pages >= PAGES_WORTH_SHARING
 
 
 def site_frame(results: CampaignResults) -> SiteFrame:

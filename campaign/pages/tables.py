@@ -274,7 +274,8 @@ def without_told_trial(frame: pd.DataFrame) -> pd.DataFrame:
 
     The tables of loops and of sweeps hold the trial of every repetition.
     """
-    told = len(frame) and frame.groupby("repetition")["trial"].nunique().max() == 1
+    runs = set(zip(frame["repetition"].tolist(), frame["trial"].tolist(), strict=True))
+    told = len(runs) and len(runs) == len({repetition for repetition, _ in runs})
     return frame.drop(columns="trial") if told else frame
 
 

@@ -27,6 +27,7 @@ from campaign.pages.figures import (
     small_multiples,
 )
 from campaign.pages.page import Page
+from campaign.pages.rows import records_of
 from campaign.pages.tables import Column, Table
 from campaign.pages.variance_tables import planned_tables, tables_beside_components
 from campaign.recordings.recording import ReferenceQuantity
@@ -104,7 +105,7 @@ def variance_page(results: CampaignResults) -> Page | None:
 def _zero_noise(variance: Variance) -> list[dict[Hashable, Any]]:
     """The noise of the zero signals in strain, generation by generation."""
     noise = variance.ratio_zero_noise
-    return noise[noise["generation"].isin(generations_of(noise))].to_dict("records")
+    return records_of(noise[noise["generation"].isin(generations_of(noise))])
 
 
 def generations_of(frame: pd.DataFrame) -> tuple[str, ...]:
@@ -203,7 +204,7 @@ def _component_traces(
             text=[_component_sentence(r, factor, unit)] * 2,
             axes=axes,
         )
-        for r in limits_only.to_dict("records")
+        for r in records_of(limits_only)
     ]
     dots = intervals(
         stated["strain_sd"] * factor,
@@ -211,7 +212,7 @@ def _component_traces(
         stated["_high"] * factor,
         stated["_height"],
         style=style,
-        text=[_component_sentence(r, factor, unit) for r in stated.to_dict("records")],
+        text=[_component_sentence(r, factor, unit) for r in records_of(stated)],
         axes=axes,
     )
     return [*made, dots]
@@ -555,7 +556,7 @@ def _side_by_side(table: pd.DataFrame, factor: float) -> pd.DataFrame:
     several = table["generation"].nunique() > 1
     for (generation, level), rows in table.groupby(["generation", "level"], sort=False):
         shown = rows[rows["place"] == "mid"] if generation == "all" and several else rows
-        by_place = {str(r["place"]): r for r in shown.to_dict("records")}
+        by_place = {str(r["place"]): r for r in records_of(shown)}
         middle = by_place.get("mid", next(iter(by_place.values())))
         sds = {place: _unbroken(sd_words(row, factor)) for place, row in by_place.items()}
         made.append(

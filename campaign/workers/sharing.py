@@ -52,7 +52,9 @@ class Work(Generic[T, R]):
     given_up: Callable[[T], tuple[R, ...]]
 
 
-def share_out(work: Work[T, R], tasks: Iterable[T], crew: Crew) -> Iterator[tuple[R, ...]]:
+def share_out(
+    work: Work[T, R], tasks: Iterable[T], crew: Crew, in_hand: int = IN_HAND
+) -> Iterator[tuple[R, ...]]:
     """Do all tasks and yield their results in the order of the tasks.
 
     Parameters
@@ -60,30 +62,33 @@ def share_out(work: Work[T, R], tasks: Iterable[T], crew: Crew) -> Iterator[tupl
     work
         What is to be done.
     tasks
-        Taken one at a time, when there is a hand for it: at most :data:`IN_HAND` times ``crew.hands`` are
-        begun and not yet handed on.
+        Taken one at a time, when there is a hand for it: at most *in_hand* times ``crew.hands`` are begun and
+        not yet handed on.
     crew
         Who does it.
+    in_hand
+        Tasks in hand, a worker; many where this process has something else to do meanwhile.
 
     Yields
     ------
     tuple
         The results of one task.
     """
-    return _Sharing(work, crew).results(tasks)
+    return _Sharing(work, crew, in_hand).results(tasks)
 
 
 @dataclass
 class _Sharing(Generic[T, R]):
     work: Work[T, R]
     crew: Crew
+    most: int
     in_hand: deque[tuple[T, Future[tuple[R, ...]]]] = field(default_factory=deque)
     unexplained: int = 0
 
     def results(self, tasks: Iterable[T]) -> Iterator[tuple[R, ...]]:
         for task in tasks:
             self.in_hand.append((task, self._begin(task)))
-            if len(self.in_hand) >= IN_HAND * self.crew.hands or self.crew.hands == 1:
+            if len(self.in_hand) >= self.most * self.crew.hands or self.crew.hands == 1:
                 yield self._next()
         while self.in_hand:
             yield self._next()

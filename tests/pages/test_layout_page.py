@@ -299,12 +299,12 @@ def test_the_page_keeps_its_budget(site: dict[str, bytes]) -> None:
 def test_a_module_shows_its_placements_and_a_sensor_how_its_lengths_were_off(slipped: Layout) -> None:
     results = results_of(slipped)
     trial = slipped.of_line(OWN_LINE)[0].trial
-    figure = module_shapes(results, "M01", trial, "trial-1")  # type: ignore[arg-type]
+    figure = module_shapes(results, "M01", trial, "trial-1", ["G1"])  # type: ignore[arg-type]
     assert figure is not None
     assert figure.name == "trial-1"
     assert "4 placements; furthest off is 2" in figure.caption.replace("\u00a0", " ")
     go.Figure(data=list(figure.traces), layout=figure.layout)
-    assert module_shapes(results, "M01", "another.csv", "trial-1") is None  # type: ignore[arg-type]
+    assert module_shapes(results, "M01", "another.csv", "trial-1", ["G1"]) is None  # type: ignore[arg-type]
     said = lengths_said(results)[("M01", "AC", trial)]  # type: ignore[arg-type]
     assert said.startswith("Read less known length, root mean square over 4\u00a0placements: by its own line")
     assert "by the generation’s line" in said
