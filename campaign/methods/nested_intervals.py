@@ -17,8 +17,9 @@ import numpy as np
 from scipy import optimize, stats
 
 from campaign.methods.batched_minimiser import IntArray, Objective, inverse_curvature, minimise_many
-from campaign.methods.nested_criterion import Factors, eliminate, gradient_of, value_of
+from campaign.methods.nested_criterion import eliminate, gradient_of, value_of
 from campaign.methods.nested_design import FloatArray
+from campaign.methods.nested_factors import Factors
 from campaign.methods.nested_fit import NestedModelFit
 from campaign.methods.nested_parameters import Layout, replicates_at_once
 
