@@ -27,7 +27,11 @@ RESIDUAL = "residual"
 """Name under which the residual SD is asked for."""
 
 _PRECISION = 2e-3
-"""How near the profile's root must come to the quantile's before a last Newton step ends the search."""
+"""How near the profile's root must come to the quantile's before a last step ends the search."""
+
+_ROUGHLY, _EXACTLY = 3e-3, 1e-6
+"""How far above its minimum the criterion may be at the first length, and at all others; what is left is
+estimated and taken off."""
 
 
 @dataclass(frozen=True)
@@ -248,30 +252,32 @@ class _Profiles:
 
     def objective(self, length: FloatArray, which: IntArray) -> Objective:
         """The criterion of the conditions `which` at the given lengths, for the minimiser."""
-        return lambda vectors, some: self.evaluate(vectors, length[some], which[some])[:2]
+        return lambda vectors, some: self.evaluate(vectors, length[some], which[some])
 
     def evaluate(
         self, vectors: FloatArray, length: FloatArray, which: IntArray
-    ) -> tuple[FloatArray, FloatArray, FloatArray]:
-        """Criterion (k,), gradient (n + 1, k) and derivative with respect to the length (k,)."""
+    ) -> tuple[FloatArray, FloatArray]:
+        """Criterion (k,); gradient and, as its last row, derivative with respect to the length (n + 2, k)."""
         chunk = replicates_at_once(self.fit.compression)
         parts = []
         for k in range(0, len(which), chunk):
             here = slice(k, k + chunk)
             state = self._scaled(vectors[:, here], length[here], which[here])
             value, outer, outer_sigma = self._criterion(state.factors, state.sigma)
-            parts.append((value, *self._to_free(vectors[:, here], which[here], state, outer, outer_sigma)))
-        values, gradients, slopes = zip(*parts, strict=True)
-        return np.concatenate(values), np.hstack(gradients), np.concatenate(slopes)
+            parts.append((value, self._to_free(vectors[:, here], which[here], state, outer, outer_sigma)))
+        values, gradients = zip(*parts, strict=True)
+        return np.concatenate(values), np.hstack(gradients)
 
     def free_gradient(self, vectors: FloatArray) -> FloatArray:
         """Gradient (n + 1, R) without any condition."""
-        columns = []
-        for vector in vectors.T:
-            sigma = np.exp(vector[-1:])
-            _, outer, outer_sigma = self._criterion(self.layout.factors(vector[:-1, None]), sigma)
-            columns.append(np.append(self.layout.vector(outer)[:, 0], outer_sigma * sigma))
-        return np.array(columns).T
+        chunk = replicates_at_once(self.fit.compression)
+        parts = []
+        for k in range(0, vectors.shape[1], chunk):
+            here = vectors[:, k : k + chunk]
+            sigma = np.exp(here[-1])
+            _, outer, outer_sigma = self._criterion(self.layout.factors(here[:-1]), sigma)
+            parts.append(np.vstack([self.layout.vector(outer), outer_sigma * sigma]))
+        return np.hstack(parts)
 
     def _scaled(self, vectors: FloatArray, length: FloatArray, which: IntArray) -> _Scaled:
         """Scale what the factors have along the directions so that the set has the given length."""
@@ -301,8 +307,8 @@ class _Profiles:
 
     def _to_free(
         self, vectors: FloatArray, which: IntArray, state: _Scaled, outer: Factors, outer_sigma: FloatArray
-    ) -> tuple[FloatArray, FloatArray]:
-        """Gradient with respect to free vectors, and to the length, from that to scaled factors."""
+    ) -> FloatArray:
+        """Gradient with respect to free vectors and, last, to the length, from that to scaled factors."""
         sigma = np.exp(vectors[-1])
         residual = self.top.residual[which]
         tops = [v[:, which] for v in self.top.directions]
@@ -319,8 +325,7 @@ class _Profiles:
         own = outer_sigma * np.where(residual > 0.0, state.scale, 1.0)
         own = own - residual * pull * state.scale / state.top**2 * sigma
         own = own + self.low.residual[which] * pull * state.scale / state.low**2 * sigma
-        gradient = np.vstack([self.layout.vector(inner), own * sigma])
-        return gradient, pull * state.low / state.top
+        return np.vstack([self.layout.vector(inner), own * sigma, pull * state.low / state.top])
 
 
 def _square(direction: FloatArray) -> FloatArray:
@@ -335,7 +340,8 @@ class _Limit:
 
     `inside` and `outside` are lengths whose profile lies below and above the cutoff; `outside` is NaN as long
     as none is known. `first` is the estimate or, where that is zero, a small length. `vector` and `inverse`
-    are the last minimum and the inverse second derivative there.
+    are the last minimum and the inverse second derivative there. `seen` is (root of the profile, its slope
+    over log length, log length) where it was looked at last.
     """
 
     member: int
@@ -350,6 +356,12 @@ class _Limit:
     outside: float = float("nan")
     limit: float = float("nan")
     looks: int = 0
+    seen: tuple[float, float, float] | None = None
+
+    @property
+    def roughly(self) -> bool:
+        """Whether a rough minimum will do: the first length is a guess, and says where to look next."""
+        return self.looks == 0 and self.length > 0.0
 
     @property
     def done(self) -> bool:
@@ -419,14 +431,13 @@ def _limits(profiles: _Profiles, cutoff: float, least: float) -> list[tuple[_Lim
             profiles.objective(length, which),
             np.column_stack([limit.vector for limit in running]),
             np.stack([limit.inverse for limit in running], axis=2),
-            tolerance=3e-5,
+            tolerance=np.where([limit.roughly for limit in running], _ROUGHLY, _EXACTLY),
             longest=longest,
         )
-        value, _, slope = profiles.evaluate(minima.x, length, which)
+        rise, slope = minima.value - minima.promise - least, minima.gradient[-1]
         for k, limit in enumerate(running):
             limit.vector, limit.inverse = minima.x[:, k], minima.inverse[:, :, k]
-            limit.looks += 1
-            root = float(np.sqrt(max(value[k] - least, 0.0)))
+            root = float(np.sqrt(max(rise[k], 0.0)))
             _advance(limit, root, float(slope[k]) / (2.0 * max(root, 1e-9)), cutoff)
 
 
@@ -481,9 +492,13 @@ def _length_gradient(profiles: _Profiles, start: FloatArray, m: int) -> FloatArr
 
 def _advance(limit: _Limit, root: float, slope: float, cutoff: float) -> None:
     """Take in the root of the profile at the current length and its slope; choose the next, or end."""
-    length = limit.length
+    length, roughly = limit.length, limit.roughly
+    limit.looks += 1
     if length == 0.0 and root <= cutoff:
         limit.limit = 0.0
+        return
+    if roughly and abs(root - cutoff) < 15.0 * _PRECISION:
+        limit.length = _where_straight(length, root, slope, cutoff)
         return
     if root <= cutoff:
         limit.inside = length
@@ -492,16 +507,49 @@ def _advance(limit: _Limit, root: float, slope: float, cutoff: float) -> None:
     if root <= cutoff and not limit.upper and length < 1e-6 * limit.estimate:
         limit.limit = 0.0
         return
-    step = _newton(length, root, slope, cutoff)
+    straight = _where_straight(length, root, slope, cutoff)
+    step = _where_curved(limit, root, slope, cutoff, straight)
     if _has_levelled_off(limit, root, slope, cutoff):
         limit.limit = np.inf
         return
-    if abs(root - cutoff) < _PRECISION and not np.isnan(step):
+    if not np.isnan(step) and _is_near(abs(root - cutoff), step, straight):
         limit.limit = step
     elif limit.looks > 40:
         limit.limit = np.inf if np.isnan(limit.outside) and limit.upper else length
     else:
         limit.length = _kept_between(limit, step)
+
+
+def _is_near(short: float, curved: float, straight: float) -> bool:
+    """Whether a last step ends the search: it is very short, or short and all but straight."""
+    return short < _PRECISION or (short < 5.0 * _PRECISION and 1.0 - 5e-5 < curved / straight < 1.0 + 5e-5)
+
+
+def _where_curved(limit: _Limit, root: float, slope: float, cutoff: float, straight: float) -> float:
+    """Length at which the root would reach the cutoff.
+
+    Log length is taken as the cubic of the root that has its values and slopes at this and the last length;
+    as `straight` where the cubic would bend far or there was no last length.
+    """
+    last, limit.seen = limit.seen, None
+    if np.isnan(straight):
+        return straight
+    limit.seen = here = (root, slope * limit.length, float(np.log(limit.length)))
+    if last is None or abs(root - last[0]) < 1e-4 or here[1] * last[1] <= 0.0:
+        return straight
+    width = root - last[0]
+    chord, first, second = (here[2] - last[2]) / width, 1.0 / last[1], 1.0 / here[1]
+    t = (cutoff - root) / width
+    away = t * second + t**2 * (2.0 * second + first - 3.0 * chord) + t**3 * (first + second - 2.0 * chord)
+    linear = t * second
+    return float(limit.length * np.exp(away * width)) if 0.5 < away / linear < 2.0 else straight
+
+
+def _where_straight(length: float, root: float, slope: float, cutoff: float) -> float:
+    """Length at which the root would reach the cutoff, were it straight over log length."""
+    if length == 0.0 or slope == 0.0 or root < 1e-6:
+        return float("nan")
+    return float(length * np.exp(np.clip((cutoff - root) / (slope * length), -30.0, 30.0)))
 
 
 def _has_levelled_off(limit: _Limit, root: float, slope: float, cutoff: float) -> bool:
@@ -513,13 +561,6 @@ def _has_levelled_off(limit: _Limit, root: float, slope: float, cutoff: float) -
     far = limit.upper and np.isnan(limit.outside) and limit.length > 30.0 * limit.first
     rise = slope * limit.length
     return bool(far and cutoff - root > 3.0 * rise and rise <= 0.3 * root)
-
-
-def _newton(length: float, root: float, slope: float, cutoff: float) -> float:
-    """Length at which the root would reach the cutoff, were it straight over log length."""
-    if length == 0.0 or slope == 0.0 or root < 1e-6:
-        return float("nan")
-    return float(length * np.exp(np.clip((cutoff - root) / (slope * length), -30.0, 30.0)))
 
 
 def _kept_between(limit: _Limit, wanted: float) -> float:
