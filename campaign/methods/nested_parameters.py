@@ -121,5 +121,5 @@ def replicates_at_once(compression: Compression) -> int:
     slots = [compression.products.shape[0], *(step.parent_slots for step in compression.steps[:-1])]
     sizes = [m * m * step.units for m, step in zip(slots, compression.steps, strict=True)]
     if compression.many_slots is not None:
-        sizes[0] = 0
+        sizes[0] = compression.many_slots.innermost.columns.size
     return max(1, _AT_ONCE // int(max(sizes)))
