@@ -11,7 +11,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator
 from dataclasses import dataclass, replace
-from typing import TYPE_CHECKING, cast
+from typing import TYPE_CHECKING
 
 import numpy as np
 import numpy.typing as npt
@@ -24,7 +24,6 @@ from campaign.analyses.variance import Variance
 from campaign.analyses.variance_fit import GenerationFit
 from campaign.methods.cell_sums import CellSums, lines_without, squares_of_errors, stacked, sums_of_cells
 from campaign.methods.identifiability import Units, code_units
-from campaign.methods.nested_compression import Compression
 from campaign.methods.nested_simulation import simulate_deviations
 from campaign.notices import Notice
 from campaign.recordings.description import Description
@@ -196,8 +195,7 @@ def analyse_calibration_effort(
         An empty table with a notice where nothing was fitted.
     """
     del calibration, description
-    nothing = cast(Compression, None)  # made of the model, which is there
-    bare = tuple(replace(fit, fit=replace(fit.fit, compression=nothing)) for fit in variance.by_generation)
+    bare = tuple(replace(fit, fit=replace(fit.fit, compressed=None)) for fit in variance.by_generation)
     return keep(_effort, (bare, variance.seed), workshop or Workshop())
 
 

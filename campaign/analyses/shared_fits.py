@@ -1,7 +1,7 @@
 """Nested fits shared out to workers, and taken from an earlier run where the same was fitted before.
 
-What is handed over and kept is a fit without its data: the model it belongs to is here already, and
-compressing that anew costs little beside the search. So a fit is the same, to the last bit, whoever made it
+What is handed over and kept is a fit without its data: the model it belongs to is here already, and is
+compressed anew where something asks for that. So a fit is the same, to the last bit, whoever made it
 and when.
 """
 
@@ -17,7 +17,6 @@ from campaign.analyses.fit_checks import FitChecks, check_fit
 from campaign.analyses.shared_work import do_all
 from campaign.analyses.variance_fit import GenerationFit, fit_generation
 from campaign.analyses.variance_model import VarianceModel
-from campaign.methods.nested_compression import Compression, compress
 from campaign.methods.nested_design import NestedModel
 from campaign.workers.workshop import Workshop
 
@@ -95,11 +94,9 @@ def _bare(task: FitTask) -> FitTask:
 
 
 def _without_data(fit: GenerationFit) -> GenerationFit:
-    bare = replace(fit.fit, model=cast(NestedModel, None), compression=cast(Compression, None))
+    bare = replace(fit.fit, model=cast(NestedModel, None), compressed=None)
     return replace(fit, model=cast(VarianceModel, None), fit=bare)
 
 
 def _with_data(fit: GenerationFit, model: VarianceModel) -> GenerationFit:
-    return replace(
-        fit, model=model, fit=replace(fit.fit, model=model.model, compression=compress(model.model))
-    )
+    return replace(fit, model=model, fit=replace(fit.fit, model=model.model))

@@ -15,7 +15,15 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
-from campaign.methods.identifiability import Component, DesignCounts, Units, code_units, count_design, ladder
+from campaign.methods.identifiability import (
+    Component,
+    DesignCounts,
+    Units,
+    code_units,
+    count_design,
+    distinct_rows,
+    ladder,
+)
 from campaign.methods.nested_model import NestedModel, RandomTerm
 
 FloatArray = npt.NDArray[np.float64]
@@ -190,9 +198,9 @@ def _terms(units: Units, components: tuple[Component, ...], z: FloatArray) -> It
 
 def _within(outer: IntArray, inner: IntArray) -> IntArray:
     """Number the units of *inner* from 0 within each unit of *outer*."""
-    pairs, inverse = np.unique(np.column_stack([outer, inner]), axis=0, return_inverse=True)
+    pairs, own = distinct_rows(outer, inner)
     first = np.searchsorted(pairs[:, 0], pairs[:, 0])
-    return np.asarray((np.arange(len(pairs)) - first)[inverse.ravel()], dtype=np.int64)
+    return np.asarray((np.arange(len(pairs)) - first)[own], dtype=np.int64)
 
 
 def has_both_branches(readings: pd.DataFrame) -> bool:
@@ -226,7 +234,7 @@ def levels_are_common(readings: pd.DataFrame, units: Units) -> bool:
     """Return whether every reading has a nominal level, and every level half of its generation's sensors."""
     if readings["nominal_level"].isna().any() or readings["nominal_level"].nunique() > MOST_LEVELS:
         return False
-    cells = np.unique(np.column_stack([units.generation, units.level, units.sensor]), axis=0)
+    cells = distinct_rows(units.generation, units.level, units.sensor)[0]
     _, visitors = np.unique(cells[:, :2], axis=0, return_counts=True)
     generation = np.unique(cells[:, :2], axis=0)[:, 0]
     sensors = np.bincount(np.unique(cells[:, [0, 2]], axis=0)[:, 0])
@@ -265,7 +273,7 @@ def _polynomials(readings: pd.DataFrame, units: Units, z: FloatArray) -> _Column
 
 
 def _levels_a_run(units: Units, rows: npt.NDArray[np.bool_]) -> IntArray:
-    pairs = np.unique(np.column_stack([units.run[rows], units.level[rows]]), axis=0)
+    pairs = distinct_rows(units.run[rows], units.level[rows])[0]
     return np.asarray(np.unique(pairs[:, 0], return_counts=True)[1], dtype=np.int64)
 
 
@@ -303,9 +311,7 @@ def _covariate_columns(readings: pd.DataFrame, names: tuple[str, ...]) -> _Colum
 
 def _departure(units: Units, z: FloatArray) -> _Columns:
     """A scaled column for the distance from the level, where the stand did not stop exactly there."""
-    cells = np.unique(
-        np.column_stack([units.generation, units.level, units.direction]), axis=0, return_inverse=True
-    )[1].ravel()
+    cells = distinct_rows(units.generation, units.level, units.direction)[1]
     away = z - (np.bincount(cells, z) / np.bincount(cells))[cells]
     if np.abs(away).max() > 1e-6:
         yield "distance from the level", "departure", away / np.abs(away).max()

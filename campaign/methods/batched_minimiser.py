@@ -16,7 +16,10 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 
 Objective = Callable[[FloatArray, IntArray], tuple[FloatArray, FloatArray]]
-"""(x (n, k), numbers of the k problems) → values (k,), gradients (n, k)."""
+"""(x (n, k), numbers of the k problems) → values (k,), gradients (n, k).
+
+Gradients may have further rows, which are not looked at: they stand in the result where a problem ended.
+"""
 
 
 @dataclass(frozen=True)
@@ -29,6 +32,10 @@ class Minima:
         (n, R).
     value
         (R,).
+    gradient
+        (n, R), and what further rows the objective gave.
+    promise
+        (R,) by how much one further step would lower the value, were the function a parabola.
     inverse
         (n, n, R) approximate inverse second derivatives, for a warm start.
     converged
@@ -39,6 +46,8 @@ class Minima:
 
     x: FloatArray
     value: FloatArray
+    gradient: FloatArray
+    promise: FloatArray
     inverse: FloatArray
     converged: NDArray[np.bool_]
     evaluations: int
@@ -49,7 +58,7 @@ def minimise_many(
     start: FloatArray,
     inverse: FloatArray,
     *,
-    tolerance: float,
+    tolerance: float | FloatArray,
     iterations: int = 200,
     longest: FloatArray | None = None,
 ) -> Minima:
@@ -64,7 +73,7 @@ def minimise_many(
     inverse
         (n, n, R) positive definite first guesses of the inverse second derivative.
     tolerance
-        A problem ends when half of −gradient · step is below this.
+        A problem ends when half of −gradient · step is below this; one number, or (R,).
     iterations
         Most evaluations of any problem.
     longest
@@ -75,33 +84,37 @@ def minimise_many(
     Nocedal & Wright (2006), Numerical Optimization, chapters 3 and 6.
     """
     x, inverse = start.copy(), inverse.copy()
+    n = len(x)
+    below = np.broadcast_to(np.asarray(tolerance), x.shape[1:])
     everyone = np.arange(x.shape[1])
     value, gradient = objective(x, everyone)
     count = x.shape[1]
-    direction = -np.einsum("ijr,jr->ir", inverse, gradient)
+    direction = -np.einsum("ijr,jr->ir", inverse, gradient[:n])
     length = _first_length(direction, longest)
     running = everyone
     converged = np.zeros(x.shape[1], dtype=bool)
     for _ in range(iterations):
-        promise = -(gradient[:, running] * direction[:, running]).sum(axis=0)
-        finished = promise / 2.0 < tolerance
+        promise = -(gradient[:n, running] * direction[:, running]).sum(axis=0)
+        finished = promise / 2.0 < below[running]
         converged[running[finished]] = True
-        running = running[~finished & (length[running] > 1e-8)]
+        going = ~finished & (length[running] > 1e-8)
+        running = running[going]
         if not len(running):
             break
         there = x[:, running] + length[running] * direction[:, running]
         new_value, new_gradient = objective(there, running)
         count += len(running)
-        slope = (gradient[:, running] * direction[:, running]).sum(axis=0)
+        slope = -promise[going]
         good = new_value <= value[running] + 1e-4 * length[running] * slope + 1e-12 * np.abs(value[running])
         moved, stuck = running[good], running[~good]
         length[stuck] *= _shorter(length[stuck], value[stuck], slope[~good], new_value[~good])
-        change = new_gradient[:, good] - gradient[:, moved]
+        change = new_gradient[:n, good] - gradient[:n, moved]
         inverse[:, :, moved] = _updated(inverse[:, :, moved], there[:, good] - x[:, moved], change)
         x[:, moved], value[moved], gradient[:, moved] = there[:, good], new_value[good], new_gradient[:, good]
-        direction[:, moved] = -np.einsum("ijr,jr->ir", inverse[:, :, moved], gradient[:, moved])
+        direction[:, moved] = -np.einsum("ijr,jr->ir", inverse[:, :, moved], gradient[:n, moved])
         length[moved] = _first_length(direction[:, moved], longest)
-    return Minima(x, value, inverse, converged, count)
+    promise = -(gradient[:n] * direction).sum(axis=0) / 2.0
+    return Minima(x, value, gradient, promise, inverse, converged, count)
 
 
 def _first_length(direction: FloatArray, longest: FloatArray | None) -> FloatArray:

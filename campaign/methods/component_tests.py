@@ -18,9 +18,9 @@ from typing import Literal
 
 import numpy as np
 import numpy.typing as npt
-from scipy import stats
+from scipy import sparse, stats
 
-from campaign.methods.identifiability import Units
+from campaign.methods.identifiability import Units, distinct_rows
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
@@ -113,7 +113,7 @@ def tabulate_runs(units: Units, z: FloatArray, *, line: bool) -> RunTable:
     counts = np.diff(np.append(starts, len(run)))
     inverse = np.linalg.pinv(gram, hermitian=True)[np.repeat(np.arange(len(starts)), counts)]
     names = ("generation", "batch", "module", "sensor", "session", "mounting", "shared_run", "place")
-    cell = np.unique(np.column_stack([units.level, units.direction]), axis=0, return_inverse=True)[1].ravel()
+    cell = distinct_rows(units.level, units.direction)[1]
     return RunTable(
         order=order,
         starts=starts,
@@ -137,19 +137,20 @@ def _all_alike(cell: IntArray, starts: IntArray, counts: IntArray) -> bool:
 def run_lines(table: RunTable, response: FloatArray) -> FloatArray:
     """Return the lines of all runs, (runs, d, replicates), of *response*, (readings, replicates)."""
     ordered = response[table.order]
-    return np.stack(
-        [
-            np.add.reduceat(table.weights[:, k, None] * ordered, table.starts)
-            for k in range(table.design.shape[1])
-        ],
-        axis=1,
-    )
+    if response.shape[1] < _MANY:
+        lines = [np.add.reduceat(column[:, None] * ordered, table.starts) for column in table.weights.T]
+    else:
+        run = table.run
+        lines = [_added_up(ordered, run, len(table.starts), column) for column in table.weights.T]
+    return np.stack(lines, axis=1)
 
 
 def rest_of_runs(table: RunTable, response: FloatArray, lines: FloatArray) -> FloatArray:
     """Return what is left of the sorted readings after their runs' lines, shape (readings, replicates)."""
-    fitted = np.einsum("nd,ndr->nr", table.design, lines[table.run])
-    return np.asarray(response[table.order] - fitted)
+    rest, run = response[table.order], table.run
+    for k, column in enumerate(table.design.T):
+        rest -= column[:, np.newaxis] * lines[run, k]
+    return np.asarray(rest)
 
 
 @dataclass(frozen=True)
@@ -235,16 +236,29 @@ def _test(
     name: str, table: RunTable, strata: Strata, response: FloatArray, draw: Draw
 ) -> ComponentTest | None:
     exact = _is_exact(name, table, strata)
-    drawn = np.zeros((len(response), 0)) if exact else draw(name, REPLICATES)
-    statistics, freedom = _statistic(name, table, strata, np.hstack([response, drawn]))
-    if freedom is None or not np.isfinite(statistics).all():
+    observed, freedom = _statistic(name, table, strata, response)
+    if freedom is None or not np.isfinite(observed).all():
         return None
-    statistic = float(statistics[0])
+    statistic = float(observed[0])
     if exact:
         return ComponentTest(name, "exact F", statistic, float(stats.f.sf(statistic, *freedom)), freedom)
-    larger = int(np.sum(statistics[1:] >= statistic * (1 - 1e-12)))
+    drawn = _drawn_statistics(name, table, strata, draw(name, REPLICATES))
+    if not np.isfinite(drawn).all():
+        return None
+    larger = int(np.sum(drawn >= statistic * (1 - 1e-12)))
     shown = (0.0, 0.0) if _shares_runs(name, strata) else freedom
     return ComponentTest(name, "parametric bootstrap", statistic, (1 + larger) / (1 + REPLICATES), shown)
+
+
+_AT_ONCE = 2_000_000
+"""Drawn readings to look at at once."""
+
+
+def _drawn_statistics(name: str, table: RunTable, strata: Strata, drawn: FloatArray) -> FloatArray:
+    """The statistic of every drawn campaign, of some together."""
+    step = max(_AT_ONCE // len(drawn), _MANY)
+    parts = [drawn[:, first : first + step] for first in range(0, drawn.shape[1], step)]
+    return np.concatenate([_statistic(name, table, strata, part)[0] for part in parts])
 
 
 def _shares_runs(name: str, strata: Strata) -> bool:
@@ -262,7 +276,7 @@ def _is_exact(name: str, table: RunTable, strata: Strata) -> bool:
     runs_a_sensor = np.bincount(units["sensor"])
     same = len(np.unique(runs_a_sensor[runs_a_sensor > 0])) == 1
     if name == "batch":
-        sensors = np.unique(np.column_stack([units["module"], units["sensor"]]), axis=0)[:, 0]
+        sensors = distinct_rows(units["module"], units["sensor"])[0][:, 0]
         same &= len(np.unique(np.bincount(sensors)[np.unique(sensors)])) == 1
     if name == "run":
         same &= len(np.unique(np.bincount(units["shared_run"]))) == 1
@@ -465,6 +479,22 @@ def group_means(values: FloatArray, code: IntArray) -> FloatArray:
 
 def group_sums(values: FloatArray, code: IntArray) -> FloatArray:
     """Return the sums of the rows of every group, sorted by code, shape (groups, …)."""
-    order = np.argsort(code, kind="stable")
-    starts = np.flatnonzero(np.r_[True, np.diff(code[order]) != 0])
-    return np.asarray(np.add.reduceat(values[order], starts, axis=0))
+    if values[0].size < _MANY:
+        order = np.argsort(code, kind="stable")
+        starts = np.flatnonzero(np.r_[True, np.diff(code[order]) != 0])
+        return np.asarray(np.add.reduceat(values[order], starts, axis=0))
+    names, own = np.unique(code, return_inverse=True)
+    return _added_up(values, own.ravel(), len(names))
+
+
+_MANY = 8
+"""Columns from which a matrix that adds up rows is faster."""
+
+
+def _added_up(
+    values: FloatArray, code: IntArray, groups: int, weights: FloatArray | None = None
+) -> FloatArray:
+    """Sums of the weighted rows of groups 0, 1, …, shape (groups, …)."""
+    ones = np.ones(len(code)) if weights is None else weights
+    added = sparse.csr_array((ones, (code, np.arange(len(code)))), shape=(groups, len(code)))
+    return np.asarray(added @ values.reshape(len(values), -1)).reshape(groups, *values.shape[1:])

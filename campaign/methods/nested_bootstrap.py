@@ -14,11 +14,11 @@ from campaign.methods.analysis_of_variance import nested_analysis_of_variance
 from campaign.methods.batched_algebra import semidefinite_cholesky
 from campaign.methods.batched_minimiser import IntArray, Objective, inverse_curvature, minimise_many
 from campaign.methods.nested_compression import Compression
-from campaign.methods.nested_criterion import Gradient, is_thin
+from campaign.methods.nested_criterion import Gradient
 from campaign.methods.nested_design import BoolArray, FloatArray
 from campaign.methods.nested_fit import NestedModelFit, basis_constant, fit_nested_model
+from campaign.methods.nested_many_slots import innermost_of
 from campaign.methods.nested_parameters import Layout, evaluate, replicates_at_once
-from campaign.methods.nested_transfer import hand_over
 
 _CONE_TOLERANCE = 1e-4
 
@@ -189,10 +189,8 @@ class _Refits:
         self.compression, self.layout, self.restricted = compression, layout, restricted
         units = compression.steps[0].units if compression.steps else 1
         self.products = products.reshape(*products.shape[:2], -1, units)
-        self.handed = None
-        if is_thin(compression):
-            handed = hand_over(compression.steps[0], products, self.products.shape[2])
-            self.handed = handed.reshape(*handed.shape[:2], self.products.shape[2], -1)
+        ready = compression.many_slots
+        self.innermost = None if ready is None else innermost_of(compression.steps[0], products)
         self.evaluations = 0
 
     def objective(self, vectors: FloatArray, which: IntArray) -> tuple[FloatArray, FloatArray]:
@@ -202,16 +200,13 @@ class _Refits:
 
     def _evaluate(self, vectors: FloatArray, which: IntArray) -> tuple[FloatArray, FloatArray, Gradient]:
         products = self.products[:, :, which].reshape(*self.products.shape[:2], -1)
-        handed = None
-        if self.handed is not None:
-            handed = self.handed[:, :, which].reshape(*self.handed.shape[:2], -1)
         value, gradient, cones = evaluate(
             self.compression,
             self.layout,
             vectors,
             restricted=self.restricted,
             products=products,
-            handed=handed,
+            innermost=None if self.innermost is None else self.innermost.of(which),
         )
         self.evaluations += len(which)
         return value.criterion, gradient, cones

@@ -22,7 +22,8 @@ from campaign.methods.nested_design import (
     ScaledColumns,
     scale_columns,
 )
-from campaign.methods.nested_transfer import Block, Step, Transfer, hand_over, seated
+from campaign.methods.nested_many_slots import ManySlots, has_many_slots, many_slots
+from campaign.methods.nested_transfer import Block, Step, Transfer
 
 
 @dataclass(frozen=True)
@@ -83,20 +84,11 @@ class Compression:
     fixed: int
 
     @cached_property
-    def handed(self) -> FloatArray:
-        """Cross-products of the innermost units as they are, added up in the slots of their parents."""
-        return hand_over(self.steps[0], self.products, 1)
-
-    @cached_property
-    def seated(self) -> FloatArray:
-        """Random columns of the innermost units in the seats of their parents, (1, D, parents, seats, m')."""
-        return self.seated_of(self.products)
-
-    def seated_of(self, products: FloatArray) -> FloatArray:
-        """Return the same of other products (m, m, R · units): (R, D, parents, seats, m')."""
-        step = self.steps[0]
-        replicates = products.shape[2] // step.units
-        return seated(step, products[:, step.random], replicates)
+    def many_slots(self) -> ManySlots | None:
+        """The model made ready for the elimination of units with many slots; None where they have few."""
+        if not has_many_slots(self.steps, len(self.products)):
+            return None
+        return many_slots(self.steps, self.products)
 
     @cached_property
     def total(self) -> float:

@@ -16,20 +16,22 @@ certificate.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import cast
 
 import numpy as np
 
-from campaign.methods.batched_algebra import inverse_cholesky, product, product_transposed, transposed_product
+from campaign.methods.batched_algebra import product, product_transposed, transposed_product
 from campaign.methods.nested_compression import Compression
 from campaign.methods.nested_design import BoolArray, FloatArray
-from campaign.methods.nested_transfer import Step, hand_over, in_seats, take_back
-
-Factors = list[FloatArray]
-"""For each random effect its relative factor θ (d, d, R), R replicates of the whole model."""
-
-
-_THIN = 8
-"""Slots from which the innermost level is kept thin: units hand over columns, not whole matrices."""
+from campaign.methods.nested_factors import Factors, half_of
+from campaign.methods.nested_many_slots import (
+    Innermost,
+    ManySlotsLevel,
+    cones_of_many_slots,
+    eliminate_many_slots,
+    innermost_of,
+)
+from campaign.methods.nested_transfer import Step, hand_over, take_back
 
 
 @dataclass(frozen=True)
@@ -41,15 +43,15 @@ class Elimination:
     before
         Cross-products (m, m, B) before; B = R · units, units running fastest.
     after
-        The same after; None at a thin level, where they are not formed.
+        The same after.
     half
         T (D, D, B): T T' = F (I + F'CF)⁻¹ F'.
     scaled
-        Y (m, D, B); at a thin level its columns in the seats of their parents, (R, D, parents, seats, m').
+        Y (m, D, B).
     """
 
     before: FloatArray
-    after: FloatArray | None
+    after: FloatArray
     half: FloatArray
     scaled: FloatArray
 
@@ -62,15 +64,18 @@ class Eliminated:
     ----------
     levels
         One elimination a level, innermost first.
+    innermost
+        What the innermost units gave, where they have many slots.
     root
         (p + 1, p + 1, R): X'V⁻¹X with X'V⁻¹y and y'V⁻¹y, V in units of σ².
     log_determinant
         (R,) log|V|.
     """
 
-    levels: tuple[Elimination, ...]
+    levels: tuple[Elimination | ManySlotsLevel, ...]
     root: FloatArray
     log_determinant: FloatArray
+    innermost: Innermost | None = None
 
 
 @dataclass(frozen=True)
@@ -115,7 +120,7 @@ class Gradient:
 
 
 def eliminate(
-    compression: Compression, products: FloatArray, factors: Factors, handed: FloatArray | None = None
+    compression: Compression, products: FloatArray, factors: Factors, innermost: Innermost | None = None
 ) -> Eliminated:
     """Eliminate all random effects, level by level from the innermost.
 
@@ -127,118 +132,36 @@ def eliminate(
         (m, m, R · units) cross-products of the innermost units, or of one replicate (m, m, units) for all.
     factors
         θ (d, d, R) of each random effect.
-    handed
-        (m', m', R · parents) the products added up in the parents' slots, where `products` are not the
-        model's own and the innermost level is thin; None: they are added up here.
+    innermost
+        What :func:`~campaign.methods.nested_many_slots.innermost_of` makes of `products`, where these are not
+        the model's own and units have many slots; None: it is made here.
     """
+    ready = compression.many_slots
+    if ready is not None:
+        own = products is compression.products
+        used = innermost or (ready.innermost if own else innermost_of(compression.steps[0], products))
+        found, root, logs = eliminate_many_slots(ready, used, factors)
+        return Eliminated(found, root, logs, used)
     replicates = factors[0].shape[2] if factors else products.shape[2]
     steps = compression.steps
     current = products
     levels = []
     log_determinant = np.zeros(replicates)
     for depth, step in enumerate(steps):
-        if depth == 0 and is_thin(compression):
-            whole = compression.handed if products is compression.products else handed
-            if whole is None:
-                whole = hand_over(step, products, products.shape[2] // step.units)
-            level, logs, current = _eliminate_thin(compression, products, whole, factors, replicates)
-        else:
-            if depth == 0 and current.shape[2] != replicates * step.units:
-                current = np.tile(current, (1, 1, replicates))
-            level, logs = _eliminate_level(step, current, factors, replicates)
-            current = hand_over(step, _formed(level), replicates)
+        if depth == 0 and current.shape[2] != replicates * step.units:
+            current = np.tile(current, (1, 1, replicates))
+        level, logs = _eliminate_level(step, current, factors, replicates)
+        current = hand_over(step, level.after, replicates)
         log_determinant += logs
         levels.append(level)
     return Eliminated(tuple(levels), current, log_determinant)
-
-
-def is_thin(compression: Compression) -> bool:
-    """Whether the innermost units hand over columns: many slots, few random columns, parents of like size."""
-    if not compression.steps:
-        return False
-    step, slots = compression.steps[0], compression.products.shape[0]
-    return (
-        slots >= _THIN
-        and 2 * len(step.random) < slots
-        and step.seats * step.parent_units <= 3 * step.units
-        and step.seats * len(step.random) <= 2 * step.parent_slots
-    )
-
-
-def _formed(level: Elimination) -> FloatArray:
-    if level.after is None:
-        raise ValueError("a thin level has no cross-products after its elimination")
-    return level.after
-
-
-def _eliminate_thin(
-    compression: Compression, products: FloatArray, whole: FloatArray, factors: Factors, replicates: int
-) -> tuple[Elimination, FloatArray, FloatArray]:
-    """Eliminate the innermost level and hand it over as whole − Y Y', Y in the parents' slots.
-
-    Only the half T changes from evaluation to evaluation: Y is a sum of the units' columns, seated once.
-    """
-    step = compression.steps[0]
-    half, logs = _half(step, _thin_corner(step, products, replicates), factors, replicates)
-    scaled = _mixed(_thin_columns(compression, products), in_seats(step, half, replicates))
-    lost = sum(np.matmul(part.transpose(0, 1, 3, 2), part) for part in scaled.swapaxes(0, 1))
-    current = _repeated(whole, step.parent_units, replicates) - np.moveaxis(
-        np.reshape(lost, (-1, step.parent_slots, step.parent_slots)), 0, 2
-    )
-    return Elimination(products, None, half, scaled), logs, np.ascontiguousarray(current)
-
-
-def _thin_corner(step: Step, products: FloatArray, replicates: int) -> FloatArray:
-    """Cross-products of the random slots of every unit, (D, D, R · units)."""
-    return _repeated(products[np.ix_(step.random, step.random)], step.units, replicates)
-
-
-def _thin_columns(compression: Compression, products: FloatArray) -> FloatArray:
-    """Random columns of every unit in the seats of its parent, (1 or R, D, parents, seats, m')."""
-    return compression.seated if products is compression.products else compression.seated_of(products)
-
-
-def _mixed(columns: FloatArray, weights: FloatArray) -> FloatArray:
-    """Σⱼ columnsⱼ weightsⱼₖ for every k, as `columns`; weights (R, D, D, parents, seats, 1)."""
-    size = columns.shape[1]
-    out = np.empty((len(weights), size, *columns.shape[2:]))
-    for k in range(size):
-        np.multiply(columns[:, 0], weights[:, 0, k], out=out[:, k])
-        for j in range(1, size):
-            out[:, k] += columns[:, j] * weights[:, j, k]
-    return out
-
-
-def _repeated(stack: FloatArray, units: int, replicates: int) -> FloatArray:
-    return stack if stack.shape[2] == units * replicates else np.tile(stack, (1, 1, replicates))
-
-
-def _level_factor(step: Step, factors: Factors, replicates: int) -> FloatArray:
-    """Block-diagonal factor of all random columns of a level, (D, D, 1 or R · units)."""
-    size = len(step.random)
-    out = np.zeros((size, size, replicates))
-    for block in step.blocks:
-        for copy in range(block.copies):
-            at = slice(block.start + copy * block.size, block.start + (copy + 1) * block.size)
-            out[at, at] = factors[block.term]
-    return out if replicates == 1 else np.repeat(out, step.units, axis=2)
-
-
-def _half(step: Step, corner: FloatArray, factors: Factors, replicates: int) -> tuple[FloatArray, FloatArray]:
-    """T (D, D, B) of a level whose random slots have cross-products `corner`, and its log|V| (R,)."""
-    factor = _level_factor(step, factors, replicates)
-    inner = transposed_product(factor, product(corner, factor))
-    for k in range(len(inner)):
-        inner[k, k] += 1.0
-    upper, logs = inverse_cholesky(inner)
-    return product(factor, upper), logs.reshape(replicates, -1).sum(axis=1)
 
 
 def _eliminate_level(
     step: Step, products: FloatArray, factors: Factors, replicates: int
 ) -> tuple[Elimination, FloatArray]:
     columns = products[:, step.random]
-    half, logs = _half(step, columns[step.random], factors, replicates)
+    half, logs = half_of(step, columns[step.random], factors, replicates)
     scaled = product(columns, half)
     return Elimination(products, products - product_transposed(scaled, scaled), half, scaled), logs
 
@@ -320,38 +243,34 @@ def gradient_of(
     if restricted:
         adjoint[:p, :p] += value.unscaled_covariance.transpose(1, 2, 0)
     out = Gradient(*([np.zeros_like(f) for f in factors] for _ in range(3)))
+    if compression.many_slots is not None and eliminated.innermost is not None:
+        levels = cast(tuple[ManySlotsLevel, ...], eliminated.levels)
+        for found in cones_of_many_slots(compression.many_slots, eliminated.innermost, levels, adjoint):
+            _add_cones(*found, out, replicates)
+    else:
+        _add_all_cones(
+            compression, cast(tuple[Elimination, ...], eliminated.levels), adjoint, out, replicates
+        )
+    for theta, cone, mine in zip(factors, out.cones, out.factors, strict=True):
+        mine[:] = 2.0 * product(cone, theta)
+    return out
+
+
+def _add_all_cones(
+    compression: Compression,
+    levels: tuple[Elimination, ...],
+    adjoint: FloatArray,
+    out: Gradient,
+    replicates: int,
+) -> None:
     for depth in reversed(range(len(compression.steps))):
-        step, level = compression.steps[depth], eliminated.levels[depth]
-        if level.after is None:
-            _add_thin_cones(compression, level, adjoint, out, replicates)
-            break
+        step, level = compression.steps[depth], levels[depth]
         adjoint = take_back(step, adjoint, len(level.after), replicates)
         columns = level.after[:, step.random]
         lost = transposed_product(columns, product(adjoint, columns))
         _add_cones(step, columns[step.random], lost, out, replicates)
         if depth:
             adjoint = _before_level(step, level, adjoint)
-    for theta, cone, mine in zip(factors, out.cones, out.factors, strict=True):
-        mine[:] = 2.0 * product(cone, theta)
-    return out
-
-
-def _add_thin_cones(
-    compression: Compression, level: Elimination, adjoint: FloatArray, out: Gradient, replicates: int
-) -> None:
-    """The cones of the innermost level where its units are kept thin; `adjoint` is that of their parents."""
-    step = compression.steps[0]
-    corner = _thin_corner(step, level.before, replicates)
-    own = product(corner, level.half)
-    after = _thin_columns(compression, level.before) - _mixed(
-        level.scaled, in_seats(step, own.transpose(1, 0, 2), replicates)
-    )
-    slots, size = step.parent_slots, len(step.random)
-    shape = (replicates, 1, step.parent_units, slots, slots)
-    pulled = np.matmul(after, np.moveaxis(adjoint, 2, 0).reshape(shape))
-    flat = (replicates, size, -1)
-    lost = np.matmul(after.reshape(flat), pulled.reshape(flat).transpose(0, 2, 1)).transpose(1, 2, 0)
-    _add_cones(step, corner - product_transposed(own, own), lost, out, replicates)
 
 
 def _add_cones(step: Step, determinant: FloatArray, lost: FloatArray, out: Gradient, replicates: int) -> None:

@@ -16,6 +16,7 @@ from campaign.methods.batched_algebra import product, product_transposed
 from campaign.methods.nested_criterion import Elimination, eliminate, value_of
 from campaign.methods.nested_design import FloatArray, IntArray
 from campaign.methods.nested_fit import NestedModelFit
+from campaign.methods.nested_many_slots import ManySlotsLevel
 from campaign.methods.nested_transfer import Step
 
 
@@ -100,7 +101,9 @@ def _handed_down(step: Step, parent: _Known, slots: int) -> _Known:
     return _Known(mean, covariance)
 
 
-def _effects_of_level(step: Step, level: Elimination, outer: _Known) -> tuple[_Known, FloatArray, FloatArray]:
+def _effects_of_level(
+    step: Step, level: Elimination | ManySlotsLevel, outer: _Known
+) -> tuple[_Known, FloatArray, FloatArray]:
     """What is then known of the slots, the level's effects (D, B) and their error covariances (D, D, B)."""
     gain = product(product_transposed(level.half, level.half), level.before[step.random])
     slots = gain[:, :-1]

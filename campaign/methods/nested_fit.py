@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field
+from functools import cached_property
 
 import numpy as np
 
@@ -52,8 +53,10 @@ class NestedModelFit:
         The certificate and the gradient hold.
     method
         'REML', 'ML', or 'type 1 analysis of variance' where no search converged and the moments stand in.
-    compression, vector
-        The compressed model and the parameters, for the methods that go on from here.
+    vector
+        The parameters, for the methods that go on from here.
+    compressed
+        The compressed model; None: it is made of the model where it is asked for.
     """
 
     model: NestedModel
@@ -72,8 +75,13 @@ class NestedModelFit:
     singular: bool
     converged: bool
     method: str
-    compression: Compression = field(repr=False)
     vector: FloatArray = field(repr=False)
+    compressed: Compression | None = field(repr=False)
+
+    @cached_property
+    def compression(self) -> Compression:
+        """The compressed model."""
+        return compress(self.model) if self.compressed is None else self.compressed
 
     @property
     def layout(self) -> Layout:
@@ -171,8 +179,8 @@ def _fit(
         singular=bool((vector[layout.diagonal()] == 0.0).any()),
         converged=optimum.converged,
         method=method,
-        compression=compression,
         vector=vector,
+        compressed=compression,
     )
 
 

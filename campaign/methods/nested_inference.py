@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
 
 import numpy as np
 
-from campaign.methods.nested_criterion import eliminate, value_of
 from campaign.methods.nested_design import FloatArray
 from campaign.methods.nested_fit import NestedModelFit, covariances_of
-from campaign.methods.nested_parameters import evaluate
+from campaign.methods.nested_parameters import evaluate, replicates_at_once
 
 
 def satterthwaite(
@@ -59,8 +59,9 @@ def satterthwaite_each(
     degrees = fit.compression.rows - (fit.compression.fixed if fit.restricted else 0)
     free = [n for n in range(len(fit.vector)) if not _in_zero_column(fit, n)]
     places, widths = _star(fit, free)
-    variances = _variances(fit, places, requests)
-    hessian = _curvature(fit, places, widths, free) if free else None
+    star = _looked_at(fit, places)
+    variances = _variances(fit, places, star, requests)
+    hessian = _curvature(star, widths, free) if free else None
     found = []
     for row in variances:
         variance = float(row[0])
@@ -96,24 +97,20 @@ def component_covariance(fit: NestedModelFit) -> tuple[tuple[str, ...], FloatArr
     """
     free = [n for n in range(len(fit.vector)) if not _in_zero_column(fit, n)]
     places, widths = _star(fit, free)
-    value = value_of(
-        fit.compression,
-        eliminate(fit.compression, fit.compression.products, fit.layout.factors(places)),
-        restricted=fit.restricted,
-    )
+    star = _looked_at(fit, places)
     degrees = fit.compression.rows - (fit.compression.fixed if fit.restricted else 0)
     elements = np.column_stack(
         [
             _component_elements(
                 covariances_of(fit.compression, place, float(square) / degrees), square / degrees
             )
-            for place, square in zip(places.T, value.residual_square, strict=True)
+            for place, square in zip(places.T, star.residual_square, strict=True)
         ]
     )
     covariance = 2.0 / degrees * np.outer(elements[:, 0], elements[:, 0])
     if free:
         slopes = (elements[:, 1::2] - elements[:, 2::2]) / (2.0 * widths)
-        covariance += 2.0 * slopes @ _inverse(_curvature(fit, places, widths, free)) @ slopes.T
+        covariance += 2.0 * slopes @ _inverse(_curvature(star, widths, free)) @ slopes.T
     return _component_names(fit), elements[:, 0], covariance
 
 
@@ -142,10 +139,44 @@ def _inverse(hessian: FloatArray) -> FloatArray:
     return np.asarray(scaled / values[kept] @ scaled.T)
 
 
-def _curvature(fit: NestedModelFit, places: FloatArray, widths: FloatArray, free: list[int]) -> FloatArray:
+@dataclass(frozen=True)
+class _Star:
+    """The criterion around the estimate, R places.
+
+    Attributes
+    ----------
+    residual_square
+        (R,).
+    unscaled_covariance
+        (R, p, p) of the fixed part in scaled columns.
+    gradients
+        (n, R).
+    """
+
+    residual_square: FloatArray
+    unscaled_covariance: FloatArray
+    gradients: FloatArray
+
+
+def _looked_at(fit: NestedModelFit, places: FloatArray) -> _Star:
+    """Look at the criterion at every place, some places together."""
+    chunk = replicates_at_once(fit.compression)
+    values, gradients = [], []
+    for k in range(0, places.shape[1], chunk):
+        here = places[:, k : k + chunk]
+        value, gradient, _ = evaluate(fit.compression, fit.layout, here, restricted=fit.restricted)
+        values.append(value)
+        gradients.append(gradient)
+    return _Star(
+        np.concatenate([value.residual_square for value in values]),
+        np.concatenate([value.unscaled_covariance for value in values]),
+        np.hstack(gradients),
+    )
+
+
+def _curvature(star: _Star, widths: FloatArray, free: list[int]) -> FloatArray:
     """Second derivatives of the profiled criterion from gradients on the star, (free, free)."""
-    _, gradients, _ = evaluate(fit.compression, fit.layout, places[:, 1:], restricted=fit.restricted)
-    hessian = (gradients[free, 0::2] - gradients[free, 1::2]) / (2.0 * widths)
+    hessian = (star.gradients[free, 1::2] - star.gradients[free, 2::2]) / (2.0 * widths)
     return np.asarray((hessian + hessian.T) / 2.0)
 
 
@@ -182,17 +213,15 @@ def _star(fit: NestedModelFit, free: list[int]) -> tuple[FloatArray, FloatArray]
 def _variances(
     fit: NestedModelFit,
     places: FloatArray,
+    star: _Star,
     requests: Sequence[tuple[FloatArray, Mapping[str, FloatArray]]],
 ) -> FloatArray:
     """V of each request along the profile at each place, (requests, R)."""
     compression = fit.compression
     factors = fit.layout.factors(places)
-    value = value_of(
-        compression, eliminate(compression, compression.products, factors), restricted=fit.restricted
-    )
     contrasts = np.array([contrast for contrast, _ in requests], dtype=float)
     weights = np.linalg.solve(compression.columns.fixed_basis.T, contrasts.T).T
-    relative = np.einsum("ki,rij,kj->kr", weights, value.unscaled_covariance, weights, optimize=True)
+    relative = (np.matmul(weights, star.unscaled_covariance) * weights).sum(axis=2).T.copy()
     for k, (_, extra) in enumerate(requests):
         for number, direction in _scaled_directions(fit, extra).items():
             if number < 0:
@@ -200,7 +229,7 @@ def _variances(
             else:
                 relative[k] += (np.einsum("i,ikr->kr", direction, factors[number]) ** 2).sum(axis=0)
     degrees = compression.rows - (compression.fixed if fit.restricted else 0)
-    return np.asarray(value.residual_square / degrees * relative)
+    return np.asarray(star.residual_square / degrees * relative)
 
 
 def _quadratic(hessian: FloatArray, slope: FloatArray) -> float:

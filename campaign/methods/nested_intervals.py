@@ -17,16 +17,19 @@ import numpy as np
 from scipy import optimize, stats
 
 from campaign.methods.batched_minimiser import IntArray, Objective, inverse_curvature, minimise_many
-from campaign.methods.nested_criterion import Factors, eliminate, gradient_of, value_of
+from campaign.methods.nested_criterion import eliminate, gradient_of, value_of
 from campaign.methods.nested_design import FloatArray
+from campaign.methods.nested_factors import Factors
 from campaign.methods.nested_fit import NestedModelFit
+from campaign.methods.nested_limits import Limit, advance
 from campaign.methods.nested_parameters import Layout, replicates_at_once
 
 RESIDUAL = "residual"
 """Name under which the residual SD is asked for."""
 
-_PRECISION = 2e-3
-"""How near the profile's root must come to the quantile's before a last Newton step ends the search."""
+_ROUGHLY, _EXACTLY = 3e-3, 1e-6
+"""How far above its minimum the criterion may be at the first length, and at all others; what is left is
+estimated and taken off."""
 
 
 @dataclass(frozen=True)
@@ -247,30 +250,32 @@ class _Profiles:
 
     def objective(self, length: FloatArray, which: IntArray) -> Objective:
         """The criterion of the conditions `which` at the given lengths, for the minimiser."""
-        return lambda vectors, some: self.evaluate(vectors, length[some], which[some])[:2]
+        return lambda vectors, some: self.evaluate(vectors, length[some], which[some])
 
     def evaluate(
         self, vectors: FloatArray, length: FloatArray, which: IntArray
-    ) -> tuple[FloatArray, FloatArray, FloatArray]:
-        """Criterion (k,), gradient (n + 1, k) and derivative with respect to the length (k,)."""
+    ) -> tuple[FloatArray, FloatArray]:
+        """Criterion (k,); gradient and, as its last row, derivative with respect to the length (n + 2, k)."""
         chunk = replicates_at_once(self.fit.compression)
         parts = []
         for k in range(0, len(which), chunk):
             here = slice(k, k + chunk)
             state = self._scaled(vectors[:, here], length[here], which[here])
             value, outer, outer_sigma = self._criterion(state.factors, state.sigma)
-            parts.append((value, *self._to_free(vectors[:, here], which[here], state, outer, outer_sigma)))
-        values, gradients, slopes = zip(*parts, strict=True)
-        return np.concatenate(values), np.hstack(gradients), np.concatenate(slopes)
+            parts.append((value, self._to_free(vectors[:, here], which[here], state, outer, outer_sigma)))
+        values, gradients = zip(*parts, strict=True)
+        return np.concatenate(values), np.hstack(gradients)
 
     def free_gradient(self, vectors: FloatArray) -> FloatArray:
         """Gradient (n + 1, R) without any condition."""
-        columns = []
-        for vector in vectors.T:
-            sigma = np.exp(vector[-1:])
-            _, outer, outer_sigma = self._criterion(self.layout.factors(vector[:-1, None]), sigma)
-            columns.append(np.append(self.layout.vector(outer)[:, 0], outer_sigma * sigma))
-        return np.array(columns).T
+        chunk = replicates_at_once(self.fit.compression)
+        parts = []
+        for k in range(0, vectors.shape[1], chunk):
+            here = vectors[:, k : k + chunk]
+            sigma = np.exp(here[-1])
+            _, outer, outer_sigma = self._criterion(self.layout.factors(here[:-1]), sigma)
+            parts.append(np.vstack([self.layout.vector(outer), outer_sigma * sigma]))
+        return np.hstack(parts)
 
     def _scaled(self, vectors: FloatArray, length: FloatArray, which: IntArray) -> _Scaled:
         """Scale what the factors have along the directions so that the set has the given length."""
@@ -300,8 +305,8 @@ class _Profiles:
 
     def _to_free(
         self, vectors: FloatArray, which: IntArray, state: _Scaled, outer: Factors, outer_sigma: FloatArray
-    ) -> tuple[FloatArray, FloatArray]:
-        """Gradient with respect to free vectors, and to the length, from that to scaled factors."""
+    ) -> FloatArray:
+        """Gradient with respect to free vectors and, last, to the length, from that to scaled factors."""
         sigma = np.exp(vectors[-1])
         residual = self.top.residual[which]
         tops = [v[:, which] for v in self.top.directions]
@@ -318,41 +323,13 @@ class _Profiles:
         own = outer_sigma * np.where(residual > 0.0, state.scale, 1.0)
         own = own - residual * pull * state.scale / state.top**2 * sigma
         own = own + self.low.residual[which] * pull * state.scale / state.low**2 * sigma
-        gradient = np.vstack([self.layout.vector(inner), own * sigma])
-        return gradient, pull * state.low / state.top
+        return np.vstack([self.layout.vector(inner), own * sigma, pull * state.low / state.top])
 
 
 def _square(direction: FloatArray) -> FloatArray:
     """|v|² of each condition (k,), one where there is no direction."""
     square = (direction**2).sum(axis=0)
     return np.asarray(np.where(square > 0.0, square, 1.0))
-
-
-@dataclass
-class _Limit:
-    """One limit while it is sought.
-
-    `inside` and `outside` are lengths whose profile lies below and above the cutoff; `outside` is NaN as long
-    as none is known. `first` is the estimate or, where that is zero, a small length. `vector` and `inverse`
-    are the last minimum and the inverse second derivative there.
-    """
-
-    member: int
-    upper: bool
-    estimate: float
-    inside: float
-    length: float
-    vector: FloatArray
-    inverse: FloatArray
-    zero_possible: bool
-    first: float
-    outside: float = float("nan")
-    limit: float = float("nan")
-    looks: int = 0
-
-    @property
-    def done(self) -> bool:
-        return not np.isnan(self.limit)
 
 
 def _profile(fit: NestedModelFit, targets: Sequence[_Target], level: float) -> list[Interval]:
@@ -403,7 +380,7 @@ def _residual_interval(fit: NestedModelFit, level: float) -> Interval:
     return Interval(sigma, sigma * float(np.exp(low / 2.0)), sigma * float(np.exp(high / 2.0)))
 
 
-def _limits(profiles: _Profiles, cutoff: float, least: float) -> list[tuple[_Limit, _Limit]]:
+def _limits(profiles: _Profiles, cutoff: float, least: float) -> list[tuple[Limit, Limit]]:
     """Both limits of every target, in units of σ̂ (ratios: none)."""
     pairs = _first_limits(profiles, cutoff)
     everyone = [limit for pair in pairs for limit in pair]
@@ -418,18 +395,17 @@ def _limits(profiles: _Profiles, cutoff: float, least: float) -> list[tuple[_Lim
             profiles.objective(length, which),
             np.column_stack([limit.vector for limit in running]),
             np.stack([limit.inverse for limit in running], axis=2),
-            tolerance=3e-5,
+            tolerance=np.where([limit.roughly for limit in running], _ROUGHLY, _EXACTLY),
             longest=longest,
         )
-        value, _, slope = profiles.evaluate(minima.x, length, which)
+        rise, slope = minima.value - minima.promise - least, minima.gradient[-1]
         for k, limit in enumerate(running):
             limit.vector, limit.inverse = minima.x[:, k], minima.inverse[:, :, k]
-            limit.looks += 1
-            root = float(np.sqrt(max(value[k] - least, 0.0)))
-            _advance(limit, root, float(slope[k]) / (2.0 * max(root, 1e-9)), cutoff)
+            root = float(np.sqrt(max(rise[k], 0.0)))
+            advance(limit, root, float(slope[k]) / (2.0 * max(root, 1e-9)), cutoff)
 
 
-def _first_limits(profiles: _Profiles, cutoff: float) -> list[tuple[_Limit, _Limit]]:
+def _first_limits(profiles: _Profiles, cutoff: float) -> list[tuple[Limit, Limit]]:
     """Where each limit is looked for first: where a parabola through the estimate would have it."""
     start = profiles.lifted_start()
     hessian = _hessian(profiles, start)
@@ -452,7 +428,7 @@ def _first_limits(profiles: _Profiles, cutoff: float) -> list[tuple[_Limit, _Lim
         pair = []
         for upper, length in ((False, down), (True, up)):
             moved = start + response / spread * float(np.clip(length - lifted, -0.5 * base, 0.5 * base))
-            pair.append(_Limit(m, upper, estimate, estimate, length, moved, tangent, for_zero, base))
+            pair.append(Limit(m, upper, estimate, estimate, length, moved, tangent, for_zero, base))
         if estimate == 0.0:
             pair[0].limit = 0.0
         pairs.append((pair[0], pair[1]))
@@ -476,67 +452,3 @@ def _length_gradient(profiles: _Profiles, start: FloatArray, m: int) -> FloatArr
     ends = np.hstack([start[:, None] + np.diag(widths), start[:, None] - np.diag(widths)])
     lengths = profiles.length_of(ends, np.full(ends.shape[1], m))
     return np.asarray((lengths[: len(start)] - lengths[len(start) :]) / (2.0 * widths))
-
-
-def _advance(limit: _Limit, root: float, slope: float, cutoff: float) -> None:
-    """Take in the root of the profile at the current length and its slope; choose the next, or end."""
-    length = limit.length
-    if length == 0.0 and root <= cutoff:
-        limit.limit = 0.0
-        return
-    if root <= cutoff:
-        limit.inside = length
-    else:
-        limit.outside = length
-    if root <= cutoff and not limit.upper and length < 1e-6 * limit.estimate:
-        limit.limit = 0.0
-        return
-    step = _newton(length, root, slope, cutoff)
-    if _has_levelled_off(limit, root, slope, cutoff):
-        limit.limit = np.inf
-        return
-    if abs(root - cutoff) < _PRECISION and not np.isnan(step):
-        limit.limit = step
-    elif limit.looks > 40:
-        limit.limit = np.inf if np.isnan(limit.outside) and limit.upper else length
-    else:
-        limit.length = _kept_between(limit, step)
-
-
-def _has_levelled_off(limit: _Limit, root: float, slope: float, cutoff: float) -> bool:
-    """Whether an upper limit lies beyond all lengths: far out, and the profile hardly rises any more.
-
-    From an estimate of zero the root begins to rise with a power of the length: only where it rises by far
-    less than in proportion has it levelled off.
-    """
-    far = limit.upper and np.isnan(limit.outside) and limit.length > 30.0 * limit.first
-    rise = slope * limit.length
-    return bool(far and cutoff - root > 3.0 * rise and rise <= 0.3 * root)
-
-
-def _newton(length: float, root: float, slope: float, cutoff: float) -> float:
-    """Length at which the root would reach the cutoff, were it straight over log length."""
-    if length == 0.0 or slope == 0.0 or root < 1e-6:
-        return float("nan")
-    return float(length * np.exp(np.clip((cutoff - root) / (slope * length), -30.0, 30.0)))
-
-
-def _kept_between(limit: _Limit, wanted: float) -> float:
-    """The wanted length if it makes progress within what is known, else one that does."""
-    inside, outside = limit.inside, limit.outside
-    if np.isnan(outside):
-        return _further(limit, wanted)
-    low, high = min(inside, outside), max(inside, outside)
-    if low < wanted < high and limit.looks < 12:
-        return wanted
-    return (low + high) / 2.0 if low == 0.0 else float(np.sqrt(low * high))
-
-
-def _further(limit: _Limit, wanted: float) -> float:
-    """The wanted length, not too far from the last one; zero where a lower limit goes there."""
-    length = limit.length
-    if limit.upper:
-        return min(wanted, 4.0 * length) if wanted > length else 2.0 * length
-    if not wanted < length:
-        wanted = 0.5 * length
-    return 0.0 if wanted < 0.3 * limit.estimate and limit.zero_possible else max(wanted, 0.25 * length)

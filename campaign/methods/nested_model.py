@@ -9,12 +9,16 @@ each nominal level). This module is the door; the steps have a module each:
     nested_design         the model as stated, its check, well-scaled columns
     nested_compression    rows become cross-products per innermost unit
     nested_transfer       how the slots of a unit become those of its parent
+    nested_routes         the same for units of many slots, all kinds of units together
+    nested_factors        the factor of a level and what its elimination leaves
+    nested_many_slots     elimination of units of many slots, and backwards
     nested_criterion      the criterion by elimination from inside outwards, and its gradient backwards
     nested_start          analysis-of-variance moments
     nested_optimiser      L-BFGS-B, Newton polish, certificate on the cone
     nested_fit            the fit as a value
     nested_effects        predicted effects and residuals
     nested_intervals      profile intervals of SDs, totals, ratios and shares
+    nested_limits         where to look next for a limit of a profile
     nested_bootstrap      refits of drawn responses, tests of a component
     nested_inference      Satterthwaite's degrees of freedom
     nested_certificate    the same model in statsmodels

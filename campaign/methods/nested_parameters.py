@@ -8,16 +8,10 @@ import numpy as np
 
 from campaign.methods.batched_algebra import semidefinite_cholesky
 from campaign.methods.nested_compression import Compression
-from campaign.methods.nested_criterion import (
-    Factors,
-    Gradient,
-    Value,
-    eliminate,
-    gradient_of,
-    is_thin,
-    value_of,
-)
+from campaign.methods.nested_criterion import Gradient, Value, eliminate, gradient_of, value_of
 from campaign.methods.nested_design import FloatArray
+from campaign.methods.nested_factors import Factors
+from campaign.methods.nested_many_slots import Innermost
 
 
 @dataclass(frozen=True)
@@ -86,7 +80,7 @@ def evaluate(
     *,
     restricted: bool,
     products: FloatArray | None = None,
-    handed: FloatArray | None = None,
+    innermost: Innermost | None = None,
 ) -> tuple[Value, FloatArray, Gradient]:
     """Criterion with σ² profiled out and its gradient.
 
@@ -100,7 +94,7 @@ def evaluate(
         REML or maximum likelihood.
     products
         Cross-products of the replicates; None: those of the data.
-    handed
+    innermost
         As in :func:`campaign.methods.nested_criterion.eliminate`.
 
     Returns
@@ -110,7 +104,7 @@ def evaluate(
     """
     factors = layout.factors(vectors)
     used = compression.products if products is None else products
-    eliminated = eliminate(compression, used, factors, handed)
+    eliminated = eliminate(compression, used, factors, innermost)
     value = value_of(compression, eliminated, restricted=restricted)
     gradient = gradient_of(compression, eliminated, value, factors, restricted=restricted)
     return value, layout.vector(gradient.factors), gradient
@@ -126,6 +120,6 @@ def replicates_at_once(compression: Compression) -> int:
         return 1000
     slots = [compression.products.shape[0], *(step.parent_slots for step in compression.steps[:-1])]
     sizes = [m * m * step.units for m, step in zip(slots, compression.steps, strict=True)]
-    if is_thin(compression):
-        sizes[0] //= slots[0] // len(compression.steps[0].random)
+    if compression.many_slots is not None:
+        sizes[0] = compression.many_slots.innermost.columns.size
     return max(1, _AT_ONCE // int(max(sizes)))

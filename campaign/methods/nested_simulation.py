@@ -41,36 +41,46 @@ def simulate_deviations(
         Shape (readings, replicates): deviations from the fixed part.
     """
     count = len(model.response)
-    total = np.sqrt(residual_variance) * generator.standard_normal((count, replicates))
+    total = generator.standard_normal((count, replicates))
+    total *= np.sqrt(residual_variance)
     for term in model.terms:
         if term.name in covariances:
-            total += _effects_of(model, term, covariances[term.name], replicates, generator)
+            _add_effects(total, unit_codes(model, term), term.columns, covariances[term.name], generator)
     return np.asarray(total)
 
 
 def unit_codes(model: NestedModel, term: RandomTerm) -> IntArray:
     """Number the independent effects of *term* (unit of its level, copy) from 0, shape (readings,)."""
-    codes = dict(model.levels)[term.level]
+    codes = np.unique(dict(model.levels)[term.level], return_inverse=True)[1].ravel()
     if term.copies is not None:
-        codes = np.unique(np.column_stack([codes, term.copies]), axis=0, return_inverse=True)[1].ravel()
-    return np.unique(codes, return_inverse=True)[1].astype(np.int64)
+        copies = np.unique(term.copies, return_inverse=True)[1].ravel()
+        codes = np.unique(codes * (int(copies.max()) + 1) + copies, return_inverse=True)[1].ravel()
+    return codes.astype(np.int64)
 
 
-def _effects_of(
-    model: NestedModel,
-    term: RandomTerm,
+_AT_ONCE = 100_000
+"""Numbers to work on at once: what is added up then stays in the cache, and little memory is taken."""
+
+
+def _add_effects(
+    total: FloatArray,
+    codes: IntArray,
+    columns: FloatArray,
     covariance: FloatArray,
-    replicates: int,
     generator: np.random.Generator,
-) -> FloatArray:
-    codes = unit_codes(model, term)
-    root = symmetric_root(covariance)
+) -> None:
+    """Draw the effects of a term and add them to *total*, some readings at a time."""
+    root, replicates = symmetric_root(covariance), total.shape[1]
     drawn = generator.standard_normal((int(codes.max()) + 1, len(root), replicates))
     effects = np.einsum("jk,ukr->ujr", root, drawn)
-    out = term.columns[:, :1] * effects[codes, 0]
-    for k in range(1, len(root)):
-        out += term.columns[:, k : k + 1] * effects[codes, k]
-    return np.asarray(out)
+    step = max(_AT_ONCE // max(replicates, 1), 1)
+    for first in range(0, len(total), step):
+        rows = slice(first, first + step)
+        mine, own = columns[rows], codes[rows]
+        added = mine[:, :1] * effects[own, 0]
+        for k in range(1, len(root)):
+            added += mine[:, k : k + 1] * effects[own, k]
+        total[rows] += added
 
 
 def symmetric_root(covariance: FloatArray) -> FloatArray:

@@ -95,12 +95,18 @@ class Step:
     parent_slots: int
 
     @cached_property
-    def seat(self) -> IntArray:
-        """Place of each unit among its parent's, parents one after another with `seats` places each."""
+    def parent_of_unit(self) -> IntArray:
+        """Parent of each unit, ascending."""
         parent = np.zeros(self.units, dtype=np.int64)
         for transfer in self.transfers:
             children = np.arange(self.units) if transfer.children is None else transfer.children
             parent[children] = transfer.parent_of_child
+        return parent
+
+    @cached_property
+    def seat(self) -> IntArray:
+        """Place of each unit among its parent's, parents one after another with `seats` places each."""
+        parent = self.parent_of_unit
         begins = np.searchsorted(parent, np.arange(self.parent_units))
         return np.asarray(parent * self.seats + np.arange(self.units) - begins[parent])
 
@@ -215,43 +221,3 @@ def _without_doubles(given: FloatArray, transfer: Transfer) -> tuple[IntArray, F
     for k, same in doubles:
         total[:, same] += total[:, k]
     return transfer.source[first], total[np.ix_(first, first)]
-
-
-def seated(step: Step, columns: FloatArray, replicates: int) -> FloatArray:
-    """A few columns of every unit side by side in the slots of their parent.
-
-    Parameters
-    ----------
-    step
-        The level.
-    columns
-        (m, d, R · units).
-    replicates
-        R.
-
-    Returns
-    -------
-    FloatArray
-        (R, d, parents, seats, m'); the seats of a parent that has fewer units are zero.
-    """
-    d = columns.shape[1]
-    split = columns.reshape(len(columns), d, replicates, step.units)
-    out = np.zeros((step.parent_slots, d, replicates, step.parent_units * step.seats))
-    for transfer in step.transfers:
-        given = split if transfer.children is None else split[..., transfer.children]
-        given = given[transfer.source]
-        if transfer.scale is not None:
-            given = given * transfer.scale[:, None, None, :]
-        placed = np.zeros((len(given), d, replicates, out.shape[3]))
-        placed[..., step.seat if transfer.children is None else step.seat[transfer.children]] = given
-        out[transfer.target] += placed
-    parted = out.reshape(step.parent_slots, d, replicates, step.parent_units, step.seats)
-    return np.ascontiguousarray(parted.transpose(2, 1, 3, 4, 0))
-
-
-def in_seats(step: Step, weights: FloatArray, replicates: int) -> FloatArray:
-    """Weights (j, k, R · units) of units in their seats, (R, j, k, parents, seats, 1); zero in empty ones."""
-    split = weights.reshape(*weights.shape[:2], replicates, step.units)
-    out = np.zeros((replicates, *weights.shape[:2], step.parent_units * step.seats))
-    out[..., step.seat] = split.transpose(2, 0, 1, 3)
-    return out.reshape(*out.shape[:3], step.parent_units, step.seats, 1)

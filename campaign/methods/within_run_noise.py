@@ -15,14 +15,18 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 import pandas as pd
+from scipy import sparse
 
-from campaign.methods.component_tests import RunTable, group_means, group_sums, rest_of_runs, run_lines
+from campaign.methods.component_tests import RunTable
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
 
 DRAWS = 499
 """Draws of even noise."""
+
+_AT_ONCE = 1000
+"""Readings to look at at once, with all draws."""
 
 SIGNIFICANCE = 0.002
 """A figure counts where no draw is as large, if the effect is large as well."""
@@ -91,14 +95,11 @@ def check_noise(
     generator
         Source of the even noise that the figures are compared with.
     """
-    even = generator.standard_normal((len(response), DRAWS))
-    noise, scale = _noise(table, np.column_stack([response, even]))
-    squares = (noise / scale) ** 2
-    level_sds = np.sqrt(group_means_once(squares, table.level))
-    sensor_sds = np.sqrt(group_means_once(squares, table.units["sensor"][table.run]))
+    sums = _all_sums(table, order_in_run[table.order], response, generator)
+    level_sds, sensor_sds = (np.sqrt(part) for part in (sums.by_level, sums.by_sensor))
     level_p, level_ratio, level_excess = _compared(_spans(level_sds))
     sensor_p, sensor_ratio, sensor_excess = _compared(_spans(sensor_sds))
-    lag = _lag_one(table, order_in_run[table.order], noise)
+    lag = sums.products / np.where(sums.power > 0, sums.power, 1.0)
     lag = lag - lag[1:].mean()
     codes, counts = np.unique(table.level, return_counts=True)
     return NoiseCheck(
@@ -115,11 +116,6 @@ def check_noise(
     )
 
 
-def group_means_once(values: FloatArray, code: IntArray) -> FloatArray:
-    """Return the mean of every group, sorted by code, shape (groups, columns)."""
-    return group_sums(values, code) / np.unique(code, return_counts=True)[1][:, np.newaxis]
-
-
 def _spans(sds: FloatArray) -> FloatArray:
     """Largest over smallest SD of each column; 1 where some group has no noise at all."""
     smallest = sds.min(axis=0)
@@ -134,24 +130,102 @@ def _compared(figures: FloatArray) -> tuple[float, float, float]:
     return p, first, first / middle if middle > 0 else 1.0
 
 
-def _noise(table: RunTable, response: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """What is left of runs after their lines and the sensors' cell means, and what that shrinks it by."""
-    rest = rest_of_runs(table, response, run_lines(table, response))
-    cell = table.units["sensor"][table.run] * (int(table.cell.max()) + 1) + table.cell
-    repeats = np.unique(cell, return_inverse=True, return_counts=True)
-    count = repeats[2][repeats[1].ravel()].astype(float)
+@dataclass
+class _Sums:
+    """Sums over the noise of the readings and of every draw.
+
+    Attributes
+    ----------
+    by_level, by_sensor
+        (groups, 1 + draws) mean squares.
+    power, products
+        (1 + draws,) sums of squares and of products of neighbours.
+    """
+
+    by_level: FloatArray
+    by_sensor: FloatArray
+    power: FloatArray
+    products: FloatArray
+
+
+def _all_sums(
+    table: RunTable, order_in_run: IntArray, response: FloatArray, generator: np.random.Generator
+) -> _Sums:
+    """Draw even noise and add up, some whole sensors at a time: what is drawn is never there as a whole."""
+    sensor = table.units["sensor"][table.run]
+    names = np.unique(sensor, return_inverse=True)[1].ravel()
+    levels = np.unique(table.level, return_inverse=True)[1].ravel()
+    cell = np.unique(sensor * (int(table.cell.max()) + 1) + table.cell, return_inverse=True)[1].ravel()
+    count = np.bincount(cell).astype(float)[cell]
     repeated = float(np.median(count)) > 1
-    centred = rest - group_means(rest, cell) if repeated else rest
     leverage = np.einsum("nd,nd->n", table.design, table.weights)
     kept = (1 - np.clip(leverage, 0, 1)) * (np.maximum(count - 1, 0) / count if repeated else 1.0)
-    return centred, np.sqrt(np.maximum(kept, 1e-9))[:, np.newaxis]
+    scale = np.sqrt(np.maximum(kept, 1e-9))
+    sums = _Sums(
+        np.zeros((int(levels.max()) + 1, 1 + DRAWS)),
+        np.zeros((int(names.max()) + 1, 1 + DRAWS)),
+        np.zeros(1 + DRAWS),
+        np.zeros(1 + DRAWS),
+    )
+    for first, last in _parts(table.order, names):
+        values = np.empty((last - first, 1 + DRAWS))
+        values[:, 0] = response[first:last]
+        values[:, 1:] = generator.standard_normal((last - first, DRAWS))
+        rows = np.flatnonzero((table.order >= first) & (table.order < last))
+        noise = _noise(table, rows, values[table.order[rows] - first], cell[rows] if repeated else None)
+        _add_neighbours(sums, table.run[rows], order_in_run[rows], noise)
+        noise /= scale[rows, np.newaxis]
+        np.square(noise, out=noise)
+        sums.by_level += _added(levels[rows], len(sums.by_level)) @ noise
+        sums.by_sensor += _added(names[rows], len(sums.by_sensor)) @ noise
+    sums.by_level /= np.bincount(levels)[:, np.newaxis]
+    sums.by_sensor /= np.bincount(names)[:, np.newaxis]
+    return sums
 
 
-def _lag_one(table: RunTable, order_in_run: IntArray, noise: FloatArray) -> FloatArray:
-    """Pooled lag-1 autocorrelation within runs, Σ eᵢ eᵢ₊₁ / Σ eᵢ², of each column."""
-    rows = np.lexsort((order_in_run, table.run))
-    run, values = table.run[rows], noise[rows]
-    near = (run[1:] == run[:-1])[:, np.newaxis]
-    power = np.sum(values**2, axis=0)
-    products = np.sum(values[1:] * values[:-1] * near, axis=0)
-    return np.asarray(products / np.where(power > 0, power, 1.0))
+def _parts(order: IntArray, sensor: IntArray) -> list[tuple[int, int]]:
+    """First and last + 1 of stretches of readings that hold whole sensors, of some :data:`_AT_ONCE`."""
+    last = np.full(int(sensor.max()) + 1, -1, dtype=np.int64)
+    np.maximum.at(last, sensor, order)
+    reach = np.empty(len(order), dtype=np.int64)
+    reach[order] = last[sensor]
+    ends = np.flatnonzero(np.maximum.accumulate(reach) == np.arange(len(order))) + 1
+    parts, first = [], 0
+    for end in ends.tolist():
+        if end - first >= _AT_ONCE or end == len(order):
+            parts.append((first, end))
+            first = end
+    return parts
+
+
+def _noise(table: RunTable, rows: IntArray, values: FloatArray, cell: IntArray | None) -> FloatArray:
+    """What is left of whole runs after their lines and, where given, the means of the sensors' cells.
+
+    `values` are those of the sorted readings *rows*; they are written over.
+    """
+    run = np.unique(table.run[rows], return_inverse=True)[1].ravel()
+    runs = int(run.max()) + 1
+    lines = [_added(run, runs, column) @ values for column in table.weights[rows].T]
+    for column, line in zip(table.design[rows].T, lines, strict=True):
+        values -= column[:, np.newaxis] * line[run]
+    if cell is None:
+        return values
+    own = np.unique(cell, return_inverse=True)[1].ravel()
+    count = np.bincount(own)
+    means = _added(own, len(count)) @ values / count[:, np.newaxis]
+    values -= means[own]
+    return values
+
+
+def _added(code: IntArray, groups: int, weights: FloatArray | None = None) -> sparse.csr_array:
+    """The matrix that adds up the rows of every group."""
+    ones = np.ones(len(code)) if weights is None else weights
+    return sparse.csr_array((ones, (code, np.arange(len(code)))), shape=(groups, len(code)))
+
+
+def _add_neighbours(sums: _Sums, run: IntArray, order_in_run: IntArray, noise: FloatArray) -> None:
+    """Add Σ eᵢ² and Σ eᵢ eᵢ₊₁ within runs, in the order in which readings were made."""
+    rows = np.lexsort((order_in_run, run))
+    near = np.flatnonzero(run[rows[1:]] == run[rows[:-1]])
+    sums.power += np.einsum("nk,nk->k", noise, noise)
+    sums.products += np.einsum("nk,nk->k", noise[rows[near + 1]], noise[rows[near]])

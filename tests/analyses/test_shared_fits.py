@@ -32,7 +32,7 @@ def tasks(simulated) -> list[FitTask]:
 
 
 def without_compression(fit: GenerationFit) -> GenerationFit:
-    return replace(fit, fit=replace(fit.fit, compression=None))
+    return replace(fit, fit=replace(fit.fit, compressed=None))
 
 
 def as_bytes(outcomes: list[Outcome]) -> list[bytes]:

@@ -45,6 +45,20 @@ def test_steps_are_no_longer_than_allowed():
     assert seen[-1] == pytest.approx(10.0)
 
 
+def test_each_ends_at_its_own_tolerance_and_further_rows_come_back():
+    def quartic(x, which):
+        rows = np.vstack([4.0 * (x - 1.0) ** 3, 10.0 + which])
+        return ((x - 1.0) ** 4)[0], rows
+
+    start, steep = np.full((1, 2), 3.0), np.full((1, 1, 2), 0.02)
+    found = minimise_many(quartic, start, steep, tolerance=np.array([1e-1, 1e-9]))
+    assert found.converged.all()
+    assert 1e-1 > found.promise[0] > 1e-9 > found.promise[1]
+    assert abs(found.x[0, 1] - 1.0) < 0.1 * abs(found.x[0, 0] - 1.0)
+    assert found.gradient[0] == pytest.approx(4.0 * (found.x[0] - 1.0) ** 3)
+    assert found.gradient[1].tolist() == [10.0, 11.0]
+
+
 def test_inverse_curvature_is_positive_definite():
     hessian = np.array([[4.0, 1.0], [1.0, 3.0]])
     stack = np.stack([hessian, np.diag([1.0, -2.0])], axis=2)

@@ -12,6 +12,7 @@ from campaign.methods.identifiability import (
     Component,
     code_units,
     count_design,
+    distinct_rows,
     label_of,
     ladder,
     two_way_rank,
@@ -195,3 +196,13 @@ def test_order_and_names_of_units_do_not_matter(seed: int, keep: float) -> None:
     assert {n: c.degrees_of_freedom for n, c in first.items()} == {
         n: c.degrees_of_freedom for n, c in second.items()
     }
+
+
+@settings(max_examples=50, deadline=None, derandomize=True)
+@given(st.lists(st.tuples(*[st.integers(0, 5)] * 3), min_size=1, max_size=40))
+def test_distinct_rows_are_those_that_numpy_finds(rows: list[tuple[int, int, int]]) -> None:
+    table = np.array(rows, dtype=np.int64)
+    found, own = distinct_rows(*table.T)
+    theirs, inverse = np.unique(table, axis=0, return_inverse=True)
+    assert (found == theirs).all()
+    assert (own == inverse.ravel()).all()

@@ -8,7 +8,6 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from campaign.methods.nested_compression import compress
-from campaign.methods.nested_criterion import is_thin
 from campaign.methods.nested_model import (
     NestedModel,
     RandomTerm,
@@ -18,7 +17,9 @@ from campaign.methods.nested_model import (
     marginal_residuals,
     profile_interval,
     random_effects,
+    refit,
     satterthwaite,
+    simulate_responses,
     statsmodels_log_likelihood,
 )
 from campaign.methods.nested_parameters import evaluate, layout_of
@@ -378,9 +379,53 @@ def test_criterion_and_gradient_with_level_means(nested, dense, missing, shared)
     runs = RandomTerm("shared run", "module", model.terms[0].columns, (table["run"] % 3).to_numpy())
     model = replace(model, terms=(*model.terms, by_level, *((runs,) if shared else ())))
     compression = compress(model)
-    assert is_thin(compression)  # units with many slots hand over columns instead of matrices
+    assert compression.many_slots is not None  # eliminated units first, without kinds of units
     vector = np.random.default_rng(1).uniform(-0.6, 1.2, len(layout_of(compression).places))
     check_against_definition(model, vector, dense)
+
+
+@pytest.mark.parametrize("shared", [False, True])
+@pytest.mark.parametrize("missing", [0.0, 0.2])
+def test_criterion_and_gradient_where_sensors_are_at_positions(nested, dense, missing, shared):
+    # a line a position, coded to sum to zero: at its module a sensor's line is that of one position or, at
+    # the last one, of all others turned round; and the noise of the stand differs from run to run
+    table = nested.invented(seed=16, modules=3, sensors=4, runs=2, readings=8, missing=missing)
+    place, level = table["sensor"] % 4, (table["x"] * 7).round().astype(int)
+    fixed = {f"level {k}": level == k for k in range(8)}
+    for k in range(3):
+        fixed[f"place {k}"] = 1.0 * (place == k) - (place == 3)
+        fixed[f"place {k}, x"] = fixed[f"place {k}"] * table["x"]
+    fixed["warmth"] = np.random.default_rng(2).standard_normal(table["run"].max() + 1)[table["run"]]
+    lines = [(n, n, [1.0, table["x"]]) for n in ("module", "sensor", "run")]
+    model = nested.model(table, "y", fixed, ["module", "sensor", "run"], lines)
+    by_level = RandomTerm("by level", "sensor", np.ones((len(table), 1)), level.to_numpy())
+    runs = RandomTerm("shared run", "module", model.terms[0].columns, (table["run"] % 2).to_numpy())
+    model = replace(model, terms=(*model.terms, by_level, *((runs,) if shared else ())))
+    compression = compress(model)
+    assert compression.many_slots is not None
+    vector = np.random.default_rng(1).uniform(-0.6, 1.2, len(layout_of(compression).places))
+    check_against_definition(model, vector, dense)
+    here = np.column_stack([vector, 0.5 * vector, 0.0 * vector])
+    together = evaluate(compression, layout_of(compression), here, restricted=True)[1]
+    for k in range(3):
+        alone = evaluate(compression, layout_of(compression), here[:, [k]], restricted=True)[1]
+        assert together[:, [k]] == pytest.approx(alone, rel=1e-9, abs=1e-9)
+
+
+def test_refits_of_a_model_with_many_slots_are_fits(nested):
+    table = nested.invented(seed=17, modules=4, sensors=3, runs=2, readings=8)
+    level = (table["x"] * 7).round().astype(int)
+    fixed = {f"level {k}": level == k for k in range(8)}
+    lines = [(n, n, [1.0, table["x"]]) for n in ("module", "sensor", "run")]
+    model = nested.model(table, "y", fixed, ["module", "sensor", "run"], lines)
+    fit = fit_nested_model(model)
+    assert fit.compression.many_slots is not None
+    responses = simulate_responses(fit, 3, seed=4)
+    found = refit(fit, responses)
+    for k in range(3):
+        alone = fit_nested_model(replace(model, response=responses[:, k]))
+        assert found.criterion[k] == pytest.approx(alone.criterion, abs=1e-5)
+        assert found.coefficients[k] == pytest.approx(alone.coefficients, rel=1e-3, abs=1e-4)
 
 
 @settings(max_examples=25, deadline=None, derandomize=True)

@@ -5,6 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
+from campaign.methods import within_run_noise
 from campaign.methods.component_tests import tabulate_runs
 from campaign.methods.identifiability import code_units
 from campaign.methods.within_run_noise import NoiseCheck, check_noise
@@ -47,3 +48,14 @@ def test_units_do_not_matter() -> None:
     assert scaled.level_ratio == pytest.approx(plain.level_ratio)
     assert scaled.autocorrelation == pytest.approx(plain.autocorrelation)
     assert scaled.by_level["sd"].to_numpy() == pytest.approx(1000 * plain.by_level["sd"].to_numpy())
+
+
+def test_noise_looked_at_in_parts_is_the_noise_looked_at_whole(monkeypatch: pytest.MonkeyPatch) -> None:
+    whole = check(4)
+    monkeypatch.setattr(within_run_noise, "_AT_ONCE", 1)
+    parts = check(4)
+    assert parts.level_p == whole.level_p
+    assert parts.sensor_p == whole.sensor_p
+    assert parts.sensor_ratio == pytest.approx(whole.sensor_ratio, rel=1e-12)
+    assert parts.autocorrelation == pytest.approx(whole.autocorrelation, rel=1e-9)
+    assert parts.by_level["sd"].to_numpy() == pytest.approx(whole.by_level["sd"].to_numpy(), rel=1e-12)
