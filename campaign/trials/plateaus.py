@@ -5,6 +5,8 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
+from campaign.methods.medians import middle_value
+
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
 BoolArray = npt.NDArray[np.bool_]
@@ -72,13 +74,6 @@ def expand(starts: IntArray, stops: IntArray) -> tuple[IntArray, IntArray]:
     owner = np.repeat(np.arange(len(starts)), lengths)
     shifts = np.repeat(starts - (np.cumsum(lengths) - lengths), lengths)
     return np.arange(len(owner)) + shifts, owner
-
-
-def middle_value(values: FloatArray) -> float:
-    """Return the median of *values*, shape (values,), finite and at least one; their order is lost."""
-    low, high = (len(values) - 1) // 2, len(values) // 2
-    values.partition([low, high] if low < high else low)
-    return float((values[low] + values[high]) / 2.0)
 
 
 def _reference_noise(reference: FloatArray, span: float) -> float:

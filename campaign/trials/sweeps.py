@@ -16,9 +16,10 @@ import numpy as np
 import numpy.typing as npt
 import pandas as pd
 
+from campaign.methods.medians import middle_value
 from campaign.notices import Notice
 from campaign.recordings.recording import Trial, TrialIdentity
-from campaign.trials.plateaus import find_plateaus, middle_value
+from campaign.trials.plateaus import find_plateaus
 from campaign.trials.sweep_points import (
     Series,
     SweepRows,
