@@ -137,9 +137,11 @@ def _pooled_correlation(residuals: FloatArray, counts: IntArray, removed: int) -
     every = (_whole_median(counts) // 2 if len(counts) else 0) + 1
     if every < 2 or not np.any(residuals):
         return np.ones(1)
-    lags = FEW_LAGS
+    sums, lags = np.zeros(0), FEW_LAGS
+    apart = _apart(residuals, counts)
     while lags < min(every, MANY_LAGS + 1):
-        found = _positive_sequence(_few_lagged_sums(residuals, counts, lags), counts, removed, whole=False)
+        sums = np.append(sums, _few_lagged_sums(apart, len(sums), lags))
+        found = _positive_sequence(sums, counts, removed, whole=False)
         if found is not None:
             return found
         lags *= 2
@@ -174,13 +176,18 @@ def _positive_sequence(sums: FloatArray, counts: IntArray, removed: int, *, whol
     return np.asarray(kept / kept[0])
 
 
-def _few_lagged_sums(residuals: FloatArray, counts: IntArray, lags: int) -> FloatArray:
-    """Σ over stretches of Σ_t r_t r_(t+k), for k from 0 to *lags* − 1, with zeros between the stretches."""
-    gaps = np.repeat(np.arange(len(counts)) * (lags - 1), counts)
-    apart = np.zeros(len(residuals) + len(counts) * (lags - 1))
-    apart[np.arange(len(residuals)) + gaps] = residuals
-    length = len(apart) - (lags - 1)
-    return np.array([np.einsum("i,i->", apart[:length], apart[k : k + length]) for k in range(lags)])
+def _apart(residuals: FloatArray, counts: IntArray) -> FloatArray:
+    """The stretches one after another with zeros between them, and after the last."""
+    gap = MANY_LAGS - 1
+    apart = np.zeros(len(residuals) + len(counts) * gap)
+    apart[np.arange(len(residuals)) + np.repeat(np.arange(len(counts)) * gap, counts)] = residuals
+    return apart
+
+
+def _few_lagged_sums(apart: FloatArray, first: int, end: int) -> list[float]:
+    """Σ over stretches of Σ_t r_t r_(t+k), for k from *first* to *end* − 1, at most :data:`MANY_LAGS`."""
+    length = len(apart) - (MANY_LAGS - 1)
+    return [np.einsum("i,i->", apart[:length], apart[k : k + length]) for k in range(first, end)]
 
 
 def _whole_median(counts: IntArray) -> int:
