@@ -128,7 +128,7 @@ def _prepared(item: RecordingBytes, description: Description, careful: bool) -> 
     if not layout.readable:
         return _outcome(item, sha256, notices)
     body, ending = _body(text.data, layout)
-    if not body.strip():
+    if not body or body.isspace():
         empty = Remark("no-rows", layout.header_line, None, words="below the header")
         return _outcome(item, sha256, (*notices, *gather_remarks([empty])))
     plan = plan_of_file(layout, description.columns, item.file)

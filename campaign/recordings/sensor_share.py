@@ -245,6 +245,8 @@ def _build(
 
 
 def _is_ordered(time: FloatArray) -> bool:
+    if np.all(time[1:] >= time[:-1]):
+        return True
     finite = time[np.isfinite(time)]
     return bool(np.all(np.diff(finite) >= 0))
 
