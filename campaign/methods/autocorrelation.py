@@ -78,9 +78,10 @@ def stretch_means(
     """
     firsts = np.cumsum(counts) - counts
     changes = _changes(values, firsts)
-    means = np.where(changes == 0, values[firsts], np.add.reduceat(values, firsts) / counts)
-    residuals = values - np.repeat(means, counts)
-    times_centred = times - np.repeat(np.add.reduceat(times, firsts) / counts, counts)
+    codes = np.repeat(np.arange(len(counts)), counts)
+    means = np.bincount(codes, values) / counts  # summed one by one: seeds are taken from these means
+    residuals = values - means[codes]
+    times_centred = times - (np.bincount(codes, times) / counts)[codes]
     squares = np.asarray(np.add.reduceat(residuals**2, firsts), dtype=np.float64)
 
     factors = _variance_factors(_pooled_correlation(residuals, counts, removed=1), counts)

@@ -299,13 +299,13 @@ def _largest_before(levels: FloatArray) -> IntArray:
 
 def _stretch_mean(values: FloatArray, counts: IntArray) -> FloatArray:
     """Mean of the finite values of consecutive stretches of so many values; NaN where there are none."""
-    firsts = np.cumsum(counts) - counts
-    sums = np.add.reduceat(values, firsts)
+    stretch = np.repeat(np.arange(len(counts)), counts)
+    sums = np.bincount(stretch, values)  # one by one: seeds are taken from these means
     if np.isfinite(sums).all():
         return np.asarray(sums / counts)
     finite = np.isfinite(values)
-    held = np.add.reduceat(finite, firsts, dtype=np.int64)
-    sums = np.add.reduceat(np.where(finite, values, 0.0), firsts)
+    held = np.bincount(stretch, finite)
+    sums = np.bincount(stretch, np.where(finite, values, 0.0))
     return np.asarray(np.divide(sums, held, out=np.full(len(counts), np.nan), where=held > 0))
 
 

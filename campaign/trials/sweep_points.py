@@ -102,7 +102,7 @@ def rows_of_sweep(values: FloatArray, time_s: Series, rows: IntArray, *, ordered
     timed = np.full((2, len(counts)), np.nan)
     if clock is not None:
         moments = clock[chosen]
-        timed[0] = np.add.reduceat(moments, firsts) / counts
+        timed[0] = means_over(clock, chosen, counts)
         timed[1] = np.maximum.reduceat(moments, firsts) - np.minimum.reduceat(moments, firsts)
     number = int(legs.max(initial=0)) + 1
     return SweepRows(rows, chosen, counts, leg, branch, timed[0], timed[1], number, _pause(clock, rows))
@@ -110,7 +110,8 @@ def rows_of_sweep(values: FloatArray, time_s: Series, rows: IntArray, *, ordered
 
 def means_over(series: FloatArray, chosen: IntArray, counts: IntArray) -> FloatArray:
     """Return the means of a series over the rows of each point; NaN where one of them has no value."""
-    return np.asarray(np.add.reduceat(series.take(chosen), np.cumsum(counts) - counts) / counts)
+    point = np.repeat(np.arange(len(counts)), counts)
+    return np.asarray(np.bincount(point, series.take(chosen), minlength=len(counts)) / counts)
 
 
 def _means(values: FloatArray, starts: IntArray, counts: IntArray) -> FloatArray:

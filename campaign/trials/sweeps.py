@@ -310,14 +310,10 @@ def _trace(trial: Trial, values: FloatArray) -> Trace:
 
 def _block_means(series: FloatArray) -> FloatArray:
     blocks = min(TRACE_POINTS, len(series))
-    firsts = -(-np.arange(blocks) * len(series) // blocks)
-    counts = np.diff(firsts, append=len(series))
-    sums = np.add.reduceat(series, firsts)
-    if np.isfinite(sums).all():
-        return np.asarray(sums / counts)
+    code = np.arange(len(series)) * blocks // len(series)
     known = np.isfinite(series)
-    counts = np.add.reduceat(known, firsts, dtype=np.int64)
-    sums = np.add.reduceat(np.where(known, series, 0.0), firsts)
+    counts = np.bincount(code[known], minlength=blocks)
+    sums = np.bincount(code[known], series[known], minlength=blocks)
     return np.asarray(np.divide(sums, counts, out=np.full(blocks, np.nan), where=counts > 0))
 
 
