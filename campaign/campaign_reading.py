@@ -75,7 +75,7 @@ def read_campaign(
         Where the folder cannot be read or no trial can be used.
     """
     intake, features = run_intake(
-        folder, reduce_trial, output, progress, keep_put_back=True, workshop=workshop, as_bytes=True
+        folder, reduce_trial, output, progress, keep_put_back=True, workshop=workshop
     )
     staircases = {key: found for key, found in features.items() if isinstance(found, StaircaseFeatures)}
     reduced = {key: found for key, found in features.items() if found is not None and key not in staircases}

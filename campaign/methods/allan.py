@@ -14,7 +14,7 @@ from typing import Literal
 
 import numpy as np
 import numpy.typing as npt
-from scipy import stats
+from scipy import special
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
@@ -135,7 +135,7 @@ def overlapping_allan_deviation(
     freedom = np.array(
         [equivalent_degrees_of_freedom(int(a), int(m), int(c)) for a, m, c in zip(exponents, m_kept, counts)]
     )
-    tails = [stats.chi2.ppf(q, freedom) for q in ((1 + level) / 2, (1 - level) / 2)]
+    tails = [2.0 * special.gammaincinv(freedom / 2.0, q) for q in ((1 + level) / 2, (1 - level) / 2)]
     low, high = (deviations * np.sqrt(freedom / tail) for tail in tails)
     return AllanDeviation(
         m_kept,

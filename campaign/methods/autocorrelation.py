@@ -21,6 +21,12 @@ SHORT_STRETCH = 8
 
 FIXED_POINT_STEPS = 30
 
+FEW_LAGS = 8
+"""Lags that are summed one by one first; twice as many each time these do not hold the whole sequence."""
+
+MANY_LAGS = 64
+"""Beyond so many lags all are taken at once, by the Fourier transform."""
+
 
 @dataclass(frozen=True)
 class StretchMeans:
@@ -70,30 +76,32 @@ def stretch_means(
         The effective count of a stretch is never more than the number of times its value changed, plus one: a
         slow instrument that is logged fast repeats its last value, and a repeated value is one observation.
     """
+    firsts = np.cumsum(counts) - counts
+    changes = _changes(values, firsts)
     codes = np.repeat(np.arange(len(counts)), counts)
-    means = np.bincount(codes, values) / counts
+    means = np.bincount(codes, values) / counts  # summed one by one: seeds are taken from these means
     residuals = values - means[codes]
     times_centred = times - (np.bincount(codes, times) / counts)[codes]
-    squares = np.asarray(np.bincount(codes, residuals**2), dtype=np.float64)
+    squares = np.asarray(np.add.reduceat(residuals**2, firsts), dtype=np.float64)
 
     factors = _variance_factors(_pooled_correlation(residuals, counts, removed=1), counts)
     factors = np.clip(factors, 1.0, counts.astype(float))
-    updates = np.asarray(1.0 + np.bincount(codes, _changes(values, codes), minlength=len(counts)))
-    effective: FloatArray = np.asarray(np.minimum(counts / factors, updates), dtype=np.float64)
+    effective: FloatArray = np.asarray(np.minimum(counts / factors, 1.0 + changes), dtype=np.float64)
     variances = _own_variances(squares, counts, effective)
     floor = resolution / np.sqrt(12.0)
     errors = np.maximum(np.sqrt(variances / effective), floor)
 
-    slopes, slope_errors, degrees = _slopes(residuals, times_centred, codes, counts)
+    slopes, slope_errors, degrees = _slopes(residuals, times_centred, firsts, counts)
     longest_time = float(np.max(factors, initial=1.0))
     return StretchMeans(means, errors, effective, slopes, slope_errors, degrees, longest_time)
 
 
-def _changes(values: FloatArray, codes: IntArray) -> FloatArray:
-    """1 where a sample differs from the one before it in the same stretch, else 0."""
-    changed = np.zeros(len(values))
-    changed[1:] = (values[1:] != values[:-1]) & (codes[1:] == codes[:-1])
-    return changed
+def _changes(values: FloatArray, firsts: IntArray) -> IntArray:
+    """How many samples of each stretch differ from the one before them in it."""
+    changed = np.empty(len(values), dtype=bool)
+    np.not_equal(values[1:], values[:-1], out=changed[1:])
+    changed[firsts] = False
+    return np.add.reduceat(changed, firsts, dtype=np.int64)
 
 
 def _own_variances(squares: FloatArray, counts: IntArray, effective: FloatArray) -> FloatArray:
@@ -105,17 +113,17 @@ def _own_variances(squares: FloatArray, counts: IntArray, effective: FloatArray)
 
 
 def _slopes(
-    residuals: FloatArray, times: FloatArray, codes: IntArray, counts: IntArray
+    residuals: FloatArray, times: FloatArray, firsts: IntArray, counts: IntArray
 ) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Least-squares slopes, standard errors by the autocorrelation about the lines, degrees of freedom."""
-    spread = np.bincount(codes, times**2)
+    spread = np.add.reduceat(times**2, firsts)
     usable = (spread > 0) & (counts >= 3)
     nan = np.full(len(counts), np.nan)
-    slopes = np.divide(np.bincount(codes, times * residuals), spread, out=nan.copy(), where=usable)
-    about_line = residuals - np.nan_to_num(slopes)[codes] * times
+    slopes = np.divide(np.add.reduceat(times * residuals, firsts), spread, out=nan.copy(), where=usable)
+    about_line = residuals - np.repeat(np.nan_to_num(slopes), counts) * times
     correlation = _pooled_correlation(about_line, counts, removed=2)
     factors = np.clip(_variance_factors(correlation, counts), 1.0, counts.astype(float))
-    variance = np.bincount(codes, about_line**2) / np.maximum(counts - 2.0 * factors, 1.0)
+    variance = np.add.reduceat(about_line**2, firsts) / np.maximum(counts - 2.0 * factors, 1.0)
     errors = np.sqrt(np.divide(variance * factors, spread, out=nan.copy(), where=usable))
     return slopes, errors, np.maximum(counts / factors - 2.0, 1.0)
 
@@ -127,16 +135,35 @@ def _pooled_correlation(residuals: FloatArray, counts: IntArray, removed: int) -
     every autocovariance by about the variance of the mean, which is put back by fixed-point iteration. About
     lines the lags are those of the uncorrected sequence: what is put back would lengthen it without end.
     """
-    longest = int(counts.max(initial=0))
-    last_lag = _whole_median(counts) // 2 if len(counts) else 0
-    if last_lag < 1 or not np.any(residuals):
+    every = (_whole_median(counts) // 2 if len(counts) else 0) + 1
+    if every < 2 or not np.any(residuals):
         return np.ones(1)
-    sums = _lagged_sums(residuals, counts, longest)[: last_lag + 1]
-    pairs_each = np.maximum(counts[:, None] - np.arange(last_lag + 1)[None, :], 0).astype(float)
+    sums, lags = np.zeros(0), FEW_LAGS
+    apart = _apart(residuals, counts)
+    while lags < min(every, MANY_LAGS + 1):
+        sums = np.append(sums, _few_lagged_sums(apart, len(sums), lags))
+        found = _positive_sequence(sums, counts, removed, whole=False)
+        if found is not None:
+            return found
+        lags *= 2
+    sums = _lagged_sums(residuals, counts)[:every]
+    found = _positive_sequence(sums, counts, removed, whole=True)
+    assert found is not None
+    return found
+
+
+def _positive_sequence(sums: FloatArray, counts: IntArray, removed: int, *, whole: bool) -> FloatArray | None:
+    """Autocorrelations of the initial positive sequence; ``None`` where it may go on beyond the lags given.
+
+    *sums* are those of the lags from 0 on, and *whole* says that there are no more.
+    """
+    pairs_each = np.maximum(counts[:, None] - np.arange(len(sums))[None, :], 0).astype(float)
     pairs = pairs_each.sum(axis=0)
     shares = pairs_each[:, 1:] / counts[:, None]
     kept = _initial_positive(sums / pairs)
     for _ in range(FIXED_POINT_STEPS):
+        if len(kept) == len(sums) and not whole:
+            return None
         factors = 1.0 + 2.0 * shares[:, : len(kept) - 1] @ (kept[1:] / kept[0])
         of_means = kept[0] * np.minimum(np.maximum(factors / counts, 0.0), 1.0)
         corrected = (sums + removed * (of_means @ pairs_each)) / pairs
@@ -145,7 +172,23 @@ def _pooled_correlation(residuals: FloatArray, counts: IntArray, removed: int) -
         kept = after
         if close:
             break
+    if len(kept) == len(sums) and not whole:
+        return None
     return np.asarray(kept / kept[0])
+
+
+def _apart(residuals: FloatArray, counts: IntArray) -> FloatArray:
+    """The stretches one after another with zeros between them, and after the last."""
+    gap = MANY_LAGS - 1
+    apart = np.zeros(len(residuals) + len(counts) * gap)
+    apart[np.arange(len(residuals)) + np.repeat(np.arange(len(counts)) * gap, counts)] = residuals
+    return apart
+
+
+def _few_lagged_sums(apart: FloatArray, first: int, end: int) -> list[float]:
+    """Σ over stretches of Σ_t r_t r_(t+k), for k from *first* to *end* − 1, at most :data:`MANY_LAGS`."""
+    length = len(apart) - (MANY_LAGS - 1)
+    return [np.einsum("i,i->", apart[:length], apart[k : k + length]) for k in range(first, end)]
 
 
 def _whole_median(counts: IntArray) -> int:
@@ -154,8 +197,9 @@ def _whole_median(counts: IntArray) -> int:
     return int(ordered[(len(counts) - 1) // 2] + ordered[len(counts) // 2]) // 2
 
 
-def _lagged_sums(residuals: FloatArray, counts: IntArray, longest: int) -> FloatArray:
-    """Σ over stretches of Σ_t r_t r_(t+k), for k from 0, by the Fourier transform of padded rows."""
+def _lagged_sums(residuals: FloatArray, counts: IntArray) -> FloatArray:
+    """The same for every k, by the Fourier transform of padded rows."""
+    longest = int(counts.max())
     rows = np.zeros((len(counts), longest))
     rows[np.arange(longest)[None, :] < counts[:, None]] = residuals
     size = 1 << (2 * longest - 1).bit_length()

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 import numpy.typing as npt
-from scipy import stats
+from scipy import special
 
 FloatArray = npt.NDArray[np.float64]
 
@@ -48,9 +48,9 @@ def settled_from(series: FloatArray, scale: float, change: float = STATED_CHANGE
     noise = cycle_noise(values)
     degrees = max(len(values) // 2 - 1, 1)
     last = len(values) - FEWEST_AFTER
-    multiple = float(stats.t.ppf(1.0 - RISK, degrees))
-    moving = [np.any(_exceeds(values[n : n + WINDOW], noise, multiple, change)) for n in range(last + 1)]
-    after = int(np.flatnonzero(moving)[-1]) + 1 if any(moving) else 0
+    multiple = float(special.stdtrit(degrees, 1.0 - RISK))
+    moving = _moving(values, noise, multiple, change)[: last + 1]
+    after = int(np.flatnonzero(moving)[-1]) + 1 if moving.any() else 0
     return int(known[after]) if after <= last else None
 
 
@@ -62,10 +62,24 @@ def cycle_noise(values: FloatArray) -> FloatArray:
     return np.asarray(np.sqrt(np.mean(second**2, axis=0) / 6.0))
 
 
-def _exceeds(window: FloatArray, noise: FloatArray, multiple: float, change: float) -> npt.NDArray[np.bool_]:
-    """Whether the slope of each column is above *change* by more than a multiple of its standard error."""
-    place = np.arange(len(window)) - (len(window) - 1) / 2.0
+def _moving(values: FloatArray, noise: FloatArray, multiple: float, change: float) -> npt.NDArray[np.bool_]:
+    """Whether any figure moves from each cycle on, over the cycles of its window (shape (cycles,))."""
+    moving = np.zeros(len(values), dtype=bool)
+    for length in range(FEWEST_AFTER, min(WINDOW, len(values)) + 1):
+        windows = np.lib.stride_tricks.sliding_window_view(values, length, axis=0)
+        own = slice(None) if length == WINDOW else slice(len(windows) - 1, None)  # fewer only at the end
+        moving[: len(windows)][own] = _exceeds(windows[own], noise, multiple, change).any(axis=1)
+    return moving
+
+
+def _exceeds(windows: FloatArray, noise: FloatArray, multiple: float, change: float) -> npt.NDArray[np.bool_]:
+    """Whether a figure's slope is above *change* by more than a multiple of its standard error.
+
+    *windows* has shape (windows, figures, cycles), the result (windows, figures).
+    """
+    length = windows.shape[-1]
+    place = np.arange(length) - (length - 1) / 2.0
     square = float(np.sum(place**2))
-    slope = np.abs(place @ window) / square
+    slope = np.abs(windows @ place) / square
     error = noise / np.sqrt(square)
     return np.asarray(slope - multiple * error > change)

@@ -11,7 +11,7 @@ from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
-from scipy import stats
+from scipy import special
 
 from campaign.methods.autocorrelation import stretch_means
 
@@ -49,7 +49,7 @@ class DriftSlope:
 
     def interval(self, level: float = 0.95) -> tuple[float, float]:
         """Return the interval of the slope by Student's t."""
-        reach = float(stats.t.ppf((1 + level) / 2, self.degrees_of_freedom)) * self.standard_error
+        reach = float(special.stdtrit(self.degrees_of_freedom, (1 + level) / 2)) * self.standard_error
         return self.slope - reach, self.slope + reach
 
     @property

@@ -13,7 +13,8 @@ from typing import Any
 
 import numpy as np
 import numpy.typing as npt
-from scipy import ndimage
+
+from campaign.methods.medians import middle_value
 
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
@@ -56,6 +57,8 @@ class Cycles:
         Smallest move that counted as a reversal, in units of the reference.
     noise
         Standard deviation of the reference's noise, in its units.
+    reference
+        Shape (samples,): the run's reference without spikes.
     """
 
     starts: IntArray
@@ -63,6 +66,7 @@ class Cycles:
     stops: IntArray
     threshold: float
     noise: float
+    reference: FloatArray
 
     @property
     def count(self) -> int:
@@ -122,12 +126,13 @@ def reference_noise(reference: FloatArray) -> float:
     From second differences, which a steady ramp does not enter; where the reference is logged so coarsely
     that its own curvature shows in them, from third differences, if those say less.
     """
-    found = [
-        float(np.median(np.abs(np.diff(reference, n=order))) / 0.6745 / np.sqrt(weight))
-        for order, weight in ((2, 6.0), (3, 20.0))
-        if len(reference) > order
-    ]
-    return min(found, default=0.0)
+    if len(reference) <= 2:
+        return 0.0
+    second = np.diff(reference, n=2)
+    found = middle_value(np.abs(second)) / 0.6745 / float(np.sqrt(6.0))
+    if len(reference) > 3:
+        found = min(found, middle_value(np.abs(np.diff(second))) / 0.6745 / float(np.sqrt(20.0)))
+    return found
 
 
 def find_cycles(reference: FloatArray) -> Cycles:
@@ -150,29 +155,31 @@ def find_cycles(reference: FloatArray) -> Cycles:
     noise = reference_noise(reference)
     threshold = max(SMALLEST_TURN * span, min(NOISE_MULTIPLE * noise, 0.5 * span))
     if len(reference) < 5 or span == 0.0:
-        return Cycles(none, none, none, threshold, noise)
-    reference = without_spikes(reference)
+        return Cycles(none, none, none, threshold, noise, reference)
+    reference = _without_spikes(reference, noise, span)
     turns = find_reversals(reference, threshold)
     turns = turns[1:] if len(turns) > 1 and reference[turns[0]] > reference[turns[1]] else turns
     whole = (len(turns) - 1) // 2
     if whole < 1:
-        return Cycles(none, none, none, threshold, noise)
+        return Cycles(none, none, none, threshold, noise, reference)
     lower, tops = turns[0 : 2 * whole + 1 : 2], turns[1 : 2 * whole : 2]
-    return Cycles(lower[:-1], tops, lower[1:], threshold, noise)
+    return Cycles(lower[:-1], tops, lower[1:], threshold, noise, reference)
 
 
-def without_spikes(reference: FloatArray) -> FloatArray:
+def _without_spikes(reference: FloatArray, noise: float, span: float) -> FloatArray:
     """Return *reference* with single samples that leap out and back replaced by the median of three.
 
     A leap is more than :data:`SPIKE` times the steps on either side of it, and more than noise: the turn of
     a fast wave is none.
     """
-    if len(reference) < 5:
-        return reference
+    least = max(NOISE_MULTIPLE * noise, 0.02 * span)
     step = np.abs(np.diff(reference, prepend=reference[0], append=reference[-1]))
+    if not (step > least).any():  # a sample is no further from the median of three than the larger step
+        return reference
     around = np.maximum(np.roll(step[:-1], 1), np.roll(step[1:], -1))
-    median = ndimage.median_filter(reference, size=3, mode="nearest")
-    least = max(NOISE_MULTIPLE * reference_noise(reference), 0.02 * float(np.ptp(reference)))
+    beside = np.concatenate([reference[:1], reference, reference[-1:]])
+    low, high = np.minimum(beside[:-2], beside[2:]), np.maximum(beside[:-2], beside[2:])
+    median = np.minimum(np.maximum(reference, low), high)
     return np.where(np.abs(reference - median) > SPIKE * around + least, median, reference)
 
 
@@ -228,15 +235,11 @@ def _smallest_moves(moves: FloatArray, threshold: float) -> BoolArray:
     return np.asarray(small & ((np.arange(len(moves)) - first) % 2 == 0))
 
 
-def measure_loops(
-    reference: FloatArray, signal: FloatArray, cycles: Cycles, time_s: FloatArray | None = None
-) -> Loops:
+def measure_loops(signal: FloatArray, cycles: Cycles, time_s: FloatArray | None = None) -> Loops:
     """Measure every cycle of a run.
 
     Parameters
     ----------
-    reference
-        Shape (samples,), finite.
     signal
         Shape (samples,); samples without a signal (NaN) are passed over.
     cycles
@@ -250,7 +253,7 @@ def measure_loops(
     stretchable sensors with the signal's change from its unstretched value. A branch is averaged in
     :data:`BINS` equal steps of length (the mean of a straight branch lies on it), then interpolated.
     """
-    reference = without_spikes(reference)
+    reference = cycles.reference
     ends = np.concatenate([cycles.starts, cycles.tops]), np.concatenate([cycles.tops, cycles.stops])
     branches = _branches(reference, signal, time_s, *ends, cycles.noise)
     count = cycles.count

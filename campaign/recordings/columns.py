@@ -245,7 +245,12 @@ def plan_columns(layout: Layout, rules: Sequence[ColumnRule], file: str) -> Tabl
     file
         Path from the campaign folder, for ``files =`` of the rules.
     """
-    return _Planner(layout, rules_of_file(rules, file)).plan()
+    return plan_of_rules(layout, rules_of_file(rules, file))
+
+
+def plan_of_rules(layout: Layout, rules: Sequence[tuple[int, ColumnRule]]) -> TablePlan:
+    """The same by the rules that serve the file, from :func:`rules_of_file`."""
+    return _Planner(layout, rules).plan()
 
 
 class _Planner:

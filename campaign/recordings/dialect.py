@@ -46,6 +46,28 @@ class UnclosedQuote(Exception):  # noqa: N818 - a finding about the file, not an
 
 
 @dataclass(frozen=True)
+class TableHead:
+    """What the layout of a table of plain numbers depends on.
+
+    Attributes
+    ----------
+    header
+        The line of names as it stands.
+    row_separator, fields
+        How the rows are cut, and into how many fields.
+    separator, decimal, by_position
+        What the description says of all this.
+    """
+
+    header: str
+    row_separator: str
+    fields: int
+    separator: str | None
+    decimal: str | None
+    by_position: bool
+
+
+@dataclass(frozen=True)
 class Layout:
     """Where the table of a file stands and how its lines are cut into fields.
 
@@ -73,6 +95,8 @@ class Layout:
         Fields of the first rows as they stand.
     notices
         Remarks, without a file name; one of weight ``"set aside"`` ends the reading of the file.
+    head
+        Where the layout follows from the head of the table alone, this; the sample then is plain numbers.
     """
 
     separator: str
@@ -87,6 +111,7 @@ class Layout:
     preamble: dict[str, str]
     sample: tuple[tuple[str, ...], ...] = ()
     notices: tuple[Notice, ...] = ()
+    head: TableHead | None = None
 
     @property
     def readable(self) -> bool:
@@ -217,7 +242,7 @@ def _looked_over(text: bytes, description: Description) -> tuple[list[str], list
         pinned = (description.header_row or 0) - 1
         if 0 <= pinned < len(lines):
             lines[pinned] = _uncommented(lines[pinned])
-        of_table = (i for i in range(max(pinned, 0), len(lines)) if _is_of_table(lines[i]))
+        of_table = (i for i in range(max(pinned, 0), len(lines)) if is_of_table(lines[i]))
         table = list(islice(of_table, most))
         guess = _best_guess([lines[i] for i in table], description.separator)
         if len(text) <= size or sum(row.is_row for row in guess.rows) >= ENOUGH_ROWS:
@@ -225,7 +250,8 @@ def _looked_over(text: bytes, description: Description) -> tuple[list[str], list
     return lines, table, guess
 
 
-def _is_of_table(line: str) -> bool:
+def is_of_table(line: str) -> bool:
+    """Return whether a line is neither blank nor a comment."""
     text = line.lstrip()
     return bool(text) and not text.startswith(_COMMENT)
 
@@ -434,6 +460,12 @@ def _with_preamble(layout: Layout, lines: Sequence[str], end: int) -> Layout:
         note = noted("preamble", bare[0] + 1, None, f"{what}: '{shown(lines[bare[0]])}'", "kept as preamble")
         notices.append(replace(note, count=len(bare)))
     return replace(layout, preamble=preamble, notices=(*layout.notices, *notices))
+
+
+def read_preamble(layout: Layout, lines: Sequence[str]) -> dict[str, str] | None:
+    """Return what the comment *lines* before a table say; ``None`` where there is something to remark on."""
+    found = _with_preamble(replace(layout, notices=()), lines, len(lines))
+    return found.preamble if not found.notices else None
 
 
 def _key_and_value(line: str, separator: str) -> tuple[str, str]:

@@ -54,8 +54,8 @@ def pass_gate(body: bytes, layout: Layout) -> Gated:
     if not body or not _has_gate(layout):
         return _all_careful(count_line_feeds(body))
     body = _unquoted(body, layout)
-    if _is_plain_throughout(body, layout):
-        lines = np.arange(count_line_feeds(body), dtype=np.int64)
+    if number := _plain_throughout(body, layout):
+        lines = np.arange(number, dtype=np.int64)
         return Gated(_normalised(body, layout), lines, lines[:0])
     mask, lengths = _plain_mask(body, layout)
     if 2 * np.count_nonzero(mask) < len(mask):
@@ -93,17 +93,20 @@ def _numeric(layout: Layout) -> bytes:
     return _NUMERIC + layout.decimal.encode()
 
 
-def _is_plain_throughout(body: bytes, layout: Layout) -> bool:
-    """Whether nothing but separators and line feeds is left when the characters of numbers are taken away."""
+def _plain_throughout(body: bytes, layout: Layout) -> int:
+    """Return the number of lines where all are plain; 0 where one is not.
+
+    Nothing but separators and line feeds is left then when the characters of numbers are taken away.
+    """
     separator = layout.separator.encode()
     ends = layout.fields - (0 if layout.trailing_separator else 1)
     left = body.translate(None, _numeric(layout))
     lines = len(left) // (ends + 1)
     if left != (separator * ends + b"\n") * lines:
-        return False
+        return 0
     if layout.trailing_separator and body.count(separator + b"\n") != lines:
-        return False
-    return _fields_fit(body, layout)
+        return 0
+    return lines if _fields_fit(body, layout) else 0
 
 
 def _fields_fit(body: bytes, layout: Layout) -> bool:

@@ -135,7 +135,6 @@ def run_intake(
     *,
     keep_put_back: bool = False,
     workshop: Workshop | None = None,
-    as_bytes: bool = False,
 ) -> tuple[Intake, dict[TrialKey, T]]:
     """Read a campaign folder once, reducing each trial while its recording is in memory.
 
@@ -154,8 +153,6 @@ def run_intake(
         ``Intake.put_back``, never in ``Intake.used``.
     workshop
         Who reads, and where results of earlier runs are; this process alone where ``None``.
-    as_bytes
-        See :func:`campaign.recordings.shared_reading.take_recordings`.
 
     Returns
     -------
@@ -172,7 +169,7 @@ def run_intake(
     results: dict[TrialKey, T] = {}
     read: list[ReadFile] = []
     for taken in take_recordings(
-        survey.recordings, rules, reduce, workshop or Workshop(), progress or _silent, as_bytes=as_bytes
+        survey.recordings, rules, reduce, workshop or Workshop(), progress or _silent
     ):
         read.append(taken.read)
         results |= cast(dict[TrialKey, T], taken.features)

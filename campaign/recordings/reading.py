@@ -14,12 +14,13 @@ import numpy as np
 import numpy.typing as npt
 
 from campaign.notices import Notice
-from campaign.recordings.columns import ColumnPlan, TablePlan, plan_columns, rules_of_file
+from campaign.recordings.columns import ColumnPlan, TablePlan, rules_of_file
 from campaign.recordings.description import Description
-from campaign.recordings.dialect import Layout, find_layout
+from campaign.recordings.dialect import Layout
 from campaign.recordings.encoding import plain_text
 from campaign.recordings.fast_reader import PlainTable, read_plain
 from campaign.recordings.gate import Gated, count_line_feeds, pass_gate
+from campaign.recordings.layout_in_common import layout_of_file, plan_of_file
 from campaign.recordings.line_parser import NEIGHBOURS, Ending, NumberedLine, ParsedLines, parse_lines
 from campaign.recordings.recording import Channel, Recording
 from campaign.recordings.remarks import Remark, gather_remarks
@@ -122,15 +123,15 @@ def _prepared(item: RecordingBytes, description: Description, careful: bool) -> 
         return _outcome(item, sha256, text.notices)
     rules = rules_of_file(description.columns, item.file)
     by_position = any(rule.position is not None for _, rule in rules)
-    layout = find_layout(text.data, description, by_position=by_position)
+    layout = layout_of_file(text.data, description, by_position=by_position)
     notices = (*text.notices, *layout.notices)
     if not layout.readable:
         return _outcome(item, sha256, notices)
     body, ending = _body(text.data, layout)
-    if not body.strip():
+    if not body or body.isspace():
         empty = Remark("no-rows", layout.header_line, None, words="below the header")
         return _outcome(item, sha256, (*notices, *gather_remarks([empty])))
-    plan = plan_columns(layout, description.columns, item.file)
+    plan = plan_of_file(layout, description.columns, item.file)
     notices = (*notices, *plan.notices)
     if not plan.readable:
         return _outcome(item, sha256, notices, plan)

@@ -61,14 +61,17 @@ class ReadingTask:
         From :func:`campaign.recordings.steering.steering_rules`.
     reduce
         Makes of a trial what is kept of it; a function of a module where another process does the task.
-    as_bytes
-        Whether results are handed over as bytes that can be kept.
+    with_bytes
+        Whether results are handed over with their bytes, which can be kept.
+    bytes_alone
+        Whether they are handed over as bytes and no more: from another process.
     """
 
     recordings: tuple[ListedRecording, ...]
     rules: NamingRules
     reduce: Callable[[Trial], object]
-    as_bytes: bool = False
+    with_bytes: bool = False
+    bytes_alone: bool = False
 
 
 @dataclass(frozen=True)
@@ -101,12 +104,15 @@ class StepResult:
     sha256
         Of the bytes; empty where the file was not opened.
     taken
-        What is kept, as a value or as its bytes; ``None`` where the content was known.
+        What is kept; ``None`` where the content was known, or where it is handed over as its bytes.
+    data
+        Its bytes; empty where they are not wanted or cannot be had.
     """
 
     file: str
     sha256: str
-    taken: Taken | bytes | None
+    taken: Taken | None
+    data: bytes = b""
 
 
 def read_task(task: ReadingTask) -> tuple[StepResult, ...]:
@@ -117,7 +123,7 @@ def read_task(task: ReadingTask) -> tuple[StepResult, ...]:
         data, fault = open_recording(recording.file)
         if data is None:
             read = _unread(recording.file, fault)
-            results[read.file] = StepResult(read.file, "", _handed_over(Taken(read, {}, ""), task))
+            results[read.file] = _handed_over(Taken(read, {}, ""), task)
             continue
         sha256 = hashlib.sha256(data).hexdigest()
         if sha256 in recording.known:
@@ -164,7 +170,7 @@ def _read(items: list[RecordingBytes], task: ReadingTask) -> Iterator[StepResult
         except Exception as fault:
             yield _failed(item, fault)
         else:
-            yield StepResult(item.file, outcome.sha256, _handed_over(taken, task))
+            yield _handed_over(taken, task)
 
 
 def _taken(outcome: ReadOutcome, task: ReadingTask, registers: Callable[[str], str]) -> Taken:
@@ -181,12 +187,16 @@ def module_of(file: ReadFile) -> str:
     return file.identification.values.get("module", "") if file.identification is not None else ""
 
 
-def _handed_over(taken: Taken, task: ReadingTask) -> Taken | bytes:
-    """Return bytes where they are wanted and can be had."""
+def _handed_over(taken: Taken, task: ReadingTask) -> StepResult:
+    """Return a result, with its bytes or as bytes where that is wanted and can be had."""
+    file, sha256 = taken.read.file, taken.read.sha256
+    if not (task.with_bytes or task.bytes_alone):
+        return StepResult(file, sha256, taken)
     try:
-        return encode(taken) if task.as_bytes else taken
+        data = encode(taken)
     except NotKept:
-        return taken
+        return StepResult(file, sha256, taken)
+    return StepResult(file, sha256, None if task.bytes_alone else taken, data)
 
 
 def _failed(item: RecordingBytes, fault: Exception) -> StepResult:

@@ -2,12 +2,15 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable, Hashable
 from dataclasses import dataclass, field
+from typing import TypeVar, cast
 
 import numpy as np
 import numpy.typing as npt
 
 FloatArray = npt.NDArray[np.float64]
+R = TypeVar("R")
 
 
 @dataclass(frozen=True)
@@ -144,7 +147,8 @@ class Trial:
     Every array has shape (rows,), float64, NaN where missing; ``None`` where not recorded. ``reference`` says
     in which of ``length_mm``, ``elongation_mm`` or ``strain`` the stand's value was recorded; the others are
     derived from the rest length where it is known. ``placement`` numbers the placements of a layout trial;
-    ``nodes`` holds the recorded positions of all nodes of the file, (rows, 2) in mm by name.
+    ``nodes`` holds the recorded positions of all nodes of the file, (rows, 2) in mm by name. ``shared`` is
+    for :meth:`once_a_file` alone.
     """
 
     identity: TrialIdentity
@@ -167,8 +171,20 @@ class Trial:
     time_is_ordered: bool = True
     signal_resolution: float = float("nan")
     reference: str = "length"
+    shared: dict[Hashable, tuple[object, object]] = field(default_factory=dict, repr=False, compare=False)
 
     @property
     def file(self) -> str:
         """Path of the recording from the campaign folder."""
         return self.identity.file
+
+    def once_a_file(self, what: Hashable, columns: tuple[FloatArray | None, ...], find: Callable[[], R]) -> R:
+        """Return what *find* gives, found once for all trials of a file that have the same columns.
+
+        Sensors of a wide file share the columns that name no sensor: what comes of those alone need not be
+        found again for each. Columns are the same where they are one object; they are never altered.
+        """
+        key = (what, *map(id, columns))
+        if key not in self.shared:
+            self.shared[key] = (columns, find())
+        return cast(R, self.shared[key][1])

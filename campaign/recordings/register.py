@@ -14,6 +14,7 @@ import unicodedata
 from collections import Counter, defaultdict
 from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, field
+from functools import lru_cache
 from pathlib import Path
 
 from campaign.notices import Notice, Weight
@@ -482,7 +483,13 @@ def rest_length_mm(row: RegisterRow | None, column: str = "rest_length") -> floa
     text = row.get(column) if row is not None else ""
     if not text:
         return float("nan")
-    value = parse_quantity(text if text[-1].isalpha() else f"{text} mm", ("length",)).value
+    value = _parsed_mm(text if text[-1].isalpha() else f"{text} mm")
     if value < 0 or (value == 0 and column == "rest_length"):
         raise UnitError(f"'{text}' is not a positive length")
     return value
+
+
+@lru_cache(maxsize=1024)
+def _parsed_mm(text: str) -> float:
+    """The same few texts are asked for by every recording of a sensor."""
+    return parse_quantity(text, ("length",)).value

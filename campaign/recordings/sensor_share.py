@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator, Sequence
+from collections.abc import Hashable, Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -80,11 +80,12 @@ def trials_of_recording(recording: Recording, identification: Identification, ru
         return Shares((), {}, (_aside(recording.file, "no-signal", "no column is a signal"),))
     notices = _check_nodes(recording)
     trials: list[Trial] = []
+    shared: dict[Hashable, tuple[object, object]] = {}
     refused: dict[TrialKey, tuple[str, ...]] = {}
     for signal in signals:
         identity, remarks = _identity(recording, signal, identification, rules)
         if identity is not None:
-            made, more = _build(recording, signal, identity, rules)
+            made, more = _build(recording, signal, identity, rules, shared)
             remarks += more
             trials += made
             reasons = tuple(notice.code for notice in remarks if notice.weight == "set aside")
@@ -201,7 +202,11 @@ def _known_length(row: RegisterRow | None, column: str) -> float:
 
 
 def _build(
-    recording: Recording, signal: Channel, identity: TrialIdentity, rules: NamingRules
+    recording: Recording,
+    signal: Channel,
+    identity: TrialIdentity,
+    rules: NamingRules,
+    shared: dict[Hashable, tuple[object, object]],
 ) -> tuple[list[Trial], list[Notice]]:
     """Build the trial of one signal column; several where it is split at restarts."""
     of_trial = _Columns(recording.channels, identity.sensor, signal.repetition)
@@ -224,6 +229,7 @@ def _build(
         nodes=of_trial.nodes(),
         line_numbers=recording.line_numbers,
         time_is_ordered=time is None or _is_ordered(time),
+        shared=shared,
         signal_resolution=resolution.resolution if resolution.unit == signal.unit else float("nan"),
         reference=recorded or "length",
         **_derived(recorded, reference, identity.rest_length_mm),
@@ -239,6 +245,8 @@ def _build(
 
 
 def _is_ordered(time: FloatArray) -> bool:
+    if np.all(time[1:] >= time[:-1]):
+        return True
     finite = time[np.isfinite(time)]
     return bool(np.all(np.diff(finite) >= 0))
 

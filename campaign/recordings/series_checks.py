@@ -52,7 +52,7 @@ def without_sentinels(
     """
     remarks: list[Remark] = []
     absent = _declared_missing(column, raw)
-    if absent.any():
+    if absent is not None and absent.any():
         remarks.append(
             _at_first(absent, lines, "missing-token", column.position, f"{raw[np.argmax(absent)]:g}")
         )
@@ -61,8 +61,8 @@ def without_sentinels(
         return raw, tuple(remarks)
     values = column.unit.scale.of_array(raw)
     low, high = column.unit.family.plausible
-    beyond = (values < low) | (values > high)
-    if beyond.any():
+    if len(values) and (np.fmin.reduce(values) < low or np.fmax.reduce(values) > high):
+        beyond = (values < low) | (values > high)
         text = f"{raw[np.argmax(beyond)]:g} {column.unit.spelling}"
         remarks.append(_at_first(beyond, lines, "sentinel", column.position, text))
         values, raw = np.where(beyond, np.nan, values), np.where(beyond, np.nan, raw)
@@ -70,13 +70,15 @@ def without_sentinels(
     return values, tuple(remarks)
 
 
-def _declared_missing(column: ColumnPlan, raw: FloatArray) -> npt.NDArray[np.bool_]:
-    absent = np.zeros(raw.shape, np.bool_)
+def _declared_missing(column: ColumnPlan, raw: FloatArray) -> npt.NDArray[np.bool_] | None:
+    """Where a value stands that is declared to be none; ``None`` where only words are declared."""
+    absent = None
     for word in column.missing:
         try:
-            absent |= raw == float(word)
+            found = raw == float(word)
         except ValueError:
             continue
+        absent = found if absent is None else absent | found
     return absent
 
 
@@ -105,10 +107,11 @@ def _suspects(column: ColumnPlan, raw: FloatArray, lines: LineNumbers) -> list[R
 def check_clock(column: ColumnPlan, time: FloatArray, raw: FloatArray, lines: LineNumbers) -> list[Remark]:
     """Remark on a time that runs backwards, and on a header in milliseconds over seconds since 1970."""
     kept = ~np.isnan(time)
-    steps, at = np.diff(time[kept]), lines[kept][1:]
     remarks = []
-    back = steps < 0
+    in_order = np.all(time[1:] >= time[:-1])  # NaN is not
+    back = np.diff(time[kept]) < 0 if not in_order else np.zeros(0, dtype=bool)
     if back.any():
+        at = lines[kept][1:]
         first = int(np.argmax(back))
         text = f"{time[kept][first]:.10g} s, then {time[kept][first + 1]:.10g} s"
         remarks.append(_at_first(back, at, "time-order", column.position, words=text))

@@ -51,10 +51,11 @@ def take_recordings(
     reduce: Callable[[Trial], object],
     workshop: Workshop,
     progress: Progress,
-    *,
-    as_bytes: bool,
 ) -> Iterator[Taken]:
     """Take every recording through the step.
+
+    From another process, and from an earlier run, results come as bytes, which give the same values to the
+    last bit (:mod:`campaign.keeping.value_codec`).
 
     Parameters
     ----------
@@ -68,16 +69,13 @@ def take_recordings(
         Who reads, and what is known already.
     progress
         Told how many bytes are read.
-    as_bytes
-        Whether results go through their bytes, so that they are the same to the last bit whether they come
-        from here, from another process or from an earlier run.
 
     Yields
     ------
     Taken
         One a recording, in the order of *files*.
     """
-    return _SharedReading(files, rules, reduce, workshop, progress, as_bytes).all()
+    return _SharedReading(files, rules, reduce, workshop, progress).all()
 
 
 @dataclass
@@ -87,7 +85,6 @@ class _SharedReading:
     reduce: Callable[[Trial], object]
     workshop: Workshop
     progress: Progress
-    as_bytes: bool
     keys: dict[str, str] = field(default_factory=dict)
     known: dict[str, dict[str, Taken]] = field(default_factory=dict)
     modules: dict[str, str] = field(default_factory=dict)
@@ -121,14 +118,14 @@ class _SharedReading:
         )
 
     def _tasks(self, crew: Crew, total: int) -> Iterator[ReadingTask]:
-        several = crew.hands > 1
+        others = crew.hands > 1 or crew.apart
         size = BATCH_BYTES
-        if several:
+        if crew.hands > 1:
             size = min(size, max(SMALLEST_BATCH_BYTES, total // (BATCHES_A_WORKER * crew.hands)))
         for batch in batches(self.files, size):
             listed = tuple(self._listed(batch))
             rules = steering_rules(self.rules, [file.file for file in batch])
-            yield ReadingTask(listed, rules, self.reduce, self.as_bytes or several)
+            yield ReadingTask(listed, rules, self.reduce, with_bytes=bool(self.keys), bytes_alone=others)
 
     def _listed(self, batch: Iterable[SurveyedFile]) -> Iterator[ListedRecording]:
         """List recordings with the contents that are known of them, whose results are looked up here."""
@@ -153,15 +150,13 @@ class _SharedReading:
     def _settled(self, result: StepResult, crew: Crew) -> Taken:
         """Return what is kept of a recording, and keep it for the next run."""
         known = self.known.pop(result.file)
-        if result.taken is None:
+        if result.taken is None and not result.data:
             return known[result.sha256]
-        if isinstance(result.taken, Taken):
-            return result.taken
-        if not result.sha256 and crew.apart:
+        if result.data and not result.sha256 and crew.apart:
             return self._opened_here(result.file)
-        if self.keys and result.sha256:
-            self.workshop.store.put_bytes(self.keys[result.file], result.taken, result.sha256)
-        return cast(Taken, decode(result.taken))
+        if self.keys and result.data and result.sha256:
+            self.workshop.store.put_bytes(self.keys[result.file], result.data, result.sha256)
+        return result.taken or cast(Taken, decode(result.data))
 
     def _opened_here(self, name: str) -> Taken:
         """Read here what a worker on another machine could not open."""

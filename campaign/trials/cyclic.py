@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -10,6 +12,7 @@ import pandas as pd
 
 from campaign.methods.conditioning import settled_from
 from campaign.methods.loops import FRACTIONS, MID, Cycles, Loops, find_cycles, measure_loops, thin_cycles
+from campaign.methods.medians import middle_value
 from campaign.notices import Notice
 from campaign.recordings.recording import FloatArray, Trial, TrialIdentity
 from campaign.trials.features import recorded_reference
@@ -17,6 +20,7 @@ from campaign.trials.logged_pressure import LoggedPressure, logged_pressure
 
 IntArray = npt.NDArray[np.int64]
 BoolArray = npt.NDArray[np.bool_]
+Columns = dict[str, npt.NDArray[Any]]
 
 FEW_CYCLES = 3
 """With fewer whole cycles nothing can be said about settling."""
@@ -83,8 +87,8 @@ class CyclicFeatures:
         Whose trial it is, and the unit of its signal.
     recorded
         Quantity of the reference as recorded: ``length``, ``elongation`` (mm) or ``strain`` (mm/mm).
-    cycles
-        One row a cycle, columns of :data:`CYCLE_COLUMNS`.
+    columns
+        By the names of :data:`CYCLE_COLUMNS`, an array of shape (cycles,) each.
     width
         Shape (cycles, places): signed width at the fractions of the range of
         :data:`campaign.methods.loops.FRACTIONS`.
@@ -99,22 +103,27 @@ class CyclicFeatures:
     identity: TrialIdentity
     unit: str
     recorded: str
-    cycles: pd.DataFrame
+    columns: Columns
     width: FloatArray
     curves: tuple[LoopCurve, ...]
     notices: tuple[Notice, ...]
     logged: LoggedPressure | None = None
 
+    @cached_property
+    def cycles(self) -> pd.DataFrame:
+        """The columns as a table: made where it is wanted, since that costs as much as finding them."""
+        return pd.DataFrame(self.columns)
+
     @property
     def settled_from_cycle(self) -> float:
         """Number of the first settled cycle; NaN where the trial does not settle."""
-        settled = self.cycles.loc[self.cycles["settled"], "cycle"]
-        return float(settled.iloc[0]) if len(settled) else float("nan")
+        settled = self.columns["cycle"][self.columns["settled"]]
+        return float(settled[0]) if len(settled) else float("nan")
 
     @property
     def temperature_is_known(self) -> bool:
         """Whether temperature was recorded."""
-        return bool(self.cycles["temperature_c"].notna().any())
+        return not np.isnan(self.columns["temperature_c"]).all()
 
 
 def features_of_cyclic(trial: Trial) -> CyclicFeatures:
@@ -138,7 +147,7 @@ def features_of_cyclic(trial: Trial) -> CyclicFeatures:
         remedy = "a cyclic trial goes up and comes back; say another kind for other runs"
         return _no_loops(trial, name, "no-cycles", what, remedy)
     time = _times(trial, rows)
-    loops = measure_loops(x, signal, cycles, time)
+    loops = measure_loops(signal, cycles, time)
     table = _cycle_table(trial, rows, cycles, loops)
     notices = (
         *_cycle_notices(trial, table, loops),
@@ -159,30 +168,28 @@ def _times(trial: Trial, rows: IntArray) -> FloatArray | None:
     return trial.time_s[rows]
 
 
-def _cycle_table(trial: Trial, rows: IntArray, cycles: Cycles, loops: Loops) -> pd.DataFrame:
-    """One row a cycle."""
+def _cycle_table(trial: Trial, rows: IntArray, cycles: Cycles, loops: Loops) -> Columns:
+    """What is kept of every cycle."""
     whole = _are_whole(loops)
-    return pd.DataFrame(
-        {
-            "cycle": _numbers(trial, rows, cycles),
-            "low": loops.low,
-            "high": loops.high,
-            "mid_width": loops.width[:, MID],
-            "largest_width": loops.largest_width,
-            "at": loops.at,
-            "area": loops.area,
-            "degree": loops.degree,
-            "degree_of_whole_signal": loops.degree_of_whole_signal,
-            "zero_signal": loops.zero_signal,
-            "peak_signal": loops.peak_signal,
-            "signal_range": loops.signal_range,
-            "rate": 2.0 / (1.0 / loops.loading_rate + 1.0 / loops.unloading_rate),
-            "whole": whole,
-            "settled": _are_settled(loops, whole),
-            "temperature_c": _means(trial.temperature_c, rows, cycles),
-            "pressure_kpa": _means(trial.pressure_kpa, rows, cycles),
-        }
-    )
+    return {
+        "cycle": _numbers(trial, rows, cycles),
+        "low": loops.low,
+        "high": loops.high,
+        "mid_width": loops.width[:, MID],
+        "largest_width": loops.largest_width,
+        "at": loops.at,
+        "area": loops.area,
+        "degree": loops.degree,
+        "degree_of_whole_signal": loops.degree_of_whole_signal,
+        "zero_signal": loops.zero_signal,
+        "peak_signal": loops.peak_signal,
+        "signal_range": loops.signal_range,
+        "rate": 2.0 / (1.0 / loops.loading_rate + 1.0 / loops.unloading_rate),
+        "whole": whole,
+        "settled": _are_settled(loops, whole),
+        "temperature_c": _means(trial.temperature_c, rows, cycles),
+        "pressure_kpa": _means(trial.pressure_kpa, rows, cycles),
+    }
 
 
 def _are_whole(loops: Loops) -> BoolArray:
@@ -230,7 +237,7 @@ def _means(values: FloatArray | None, rows: IntArray, cycles: Cycles) -> FloatAr
     return np.asarray(np.divide(total, number, out=np.full(cycles.count, np.nan), where=number > 0))
 
 
-def _curves(x: FloatArray, signal: FloatArray, cycles: Cycles, table: pd.DataFrame) -> tuple[LoopCurve, ...]:
+def _curves(x: FloatArray, signal: FloatArray, cycles: Cycles, table: Columns) -> tuple[LoopCurve, ...]:
     """Outlines of the cycles that are drawn."""
     settled = np.flatnonzero(table["settled"])
     chosen = (
@@ -238,7 +245,7 @@ def _curves(x: FloatArray, signal: FloatArray, cycles: Cycles, table: pd.DataFra
     )
     places = np.array(sorted(chosen), dtype=np.int64)
     kept = thin_cycles(x, signal, cycles.starts[places], cycles.stops[places])
-    numbers = table["cycle"].to_numpy()
+    numbers = table["cycle"]
     return tuple(
         LoopCurve(int(numbers[place]), x[own], signal[own]) for place, own in zip(places, kept, strict=True)
     )
@@ -255,16 +262,17 @@ def _note(trial: Trial, code: str, what: str, done: str, remedy: str = "", count
 def _no_loops(trial: Trial, recorded: str, code: str, what: str, remedy: str = "") -> CyclicFeatures:
     """No cycles, and the notice that says why."""
     notice = Notice(code, "noted", trial.file, None, None, what, "no loops are taken from it", remedy)
-    table = pd.DataFrame({name: pd.Series(dtype=float) for name in CYCLE_COLUMNS})
-    table = table.astype({"whole": bool, "settled": bool})
+    of_type = {"whole": np.bool_, "settled": np.bool_}
+    table: Columns = {name: np.zeros(0, of_type.get(name, np.float64)) for name in CYCLE_COLUMNS}
     width = np.empty((0, len(FRACTIONS)))
     return CyclicFeatures(trial.identity, trial.signal_unit, recorded, table, width, (), (notice,))
 
 
-def _cycle_notices(trial: Trial, table: pd.DataFrame, loops: Loops) -> tuple[Notice, ...]:
+def _cycle_notices(trial: Trial, table: Columns, loops: Loops) -> tuple[Notice, ...]:
     """Too few cycles, not settled, unequal amplitudes, holes, rates that change."""
-    whole = int(table["whole"].sum())
-    cut = len(table) - whole
+    cycles = len(table["whole"])
+    whole = int(np.count_nonzero(table["whole"]))
+    cut = cycles - whole
     found: list[Notice] = []
     if whole < FEW_CYCLES:
         what = f"{whole} whole cycles" if whole != 1 else "1 whole cycle"
@@ -275,9 +283,9 @@ def _cycle_notices(trial: Trial, table: pd.DataFrame, loops: Loops) -> tuple[Not
         done = "no cycle counts as settled; the last three stand for it"
         found.append(_note(trial, "loops-not-settled", what, done, "run more cycles before measuring"))
     if cut:
-        what = f"{cut} of {len(table)} cycles are smaller than the others, or lack samples"
+        what = f"{cut} of {cycles} cycles are smaller than the others, or lack samples"
         found.append(_note(trial, "cycles-unequal", what, "kept in the table, in no settled figure", "", cut))
-    holes = int(np.sum(loops.hole[table["whole"].to_numpy()] > 0.15))
+    holes = int(np.sum(loops.hole[table["whole"]] > 0.15))
     if holes:
         what = f"{holes} cycles have holes in the samples of a branch"
         done = "no width is taken across a hole"
@@ -285,9 +293,10 @@ def _cycle_notices(trial: Trial, table: pd.DataFrame, loops: Loops) -> tuple[Not
     return (*found, *_rate_notice(trial, table))
 
 
-def _rate_notice(trial: Trial, table: pd.DataFrame) -> tuple[Notice, ...]:
+def _rate_notice(trial: Trial, table: Columns) -> tuple[Notice, ...]:
     """Rates of whole cycles that are not one rate; several steady rates in one trial are told as well."""
-    rates = table.loc[table["whole"], "rate"].dropna().to_numpy(float)
+    rates = table["rate"][table["whole"]]
+    rates = rates[~np.isnan(rates)]
     if len(rates) == 0:
         what, done = "no usable time is recorded", "loops are taken, at an unknown rate"
         return (_note(trial, "rate-unknown", what, done, "log the time"),)
@@ -307,7 +316,8 @@ def _sample_notices(
     found: list[Notice] = []
     if time is not None:
         steps = np.diff(time[inside])
-        usual = float(np.median(steps)) if len(steps) else 0.0
+        uneven = len(steps) > 0 and steps.max() > LONG_GAP * steps.min()  # else none is long
+        usual = middle_value(steps.copy()) if uneven else 0.0
         gaps = int(np.sum(steps > LONG_GAP * usual)) if usual > 0 else 0
         if gaps:
             longest = f"the longest {float(steps.max()):.3g} s at samples of {usual:.3g} s"
@@ -328,26 +338,31 @@ def _clipped(x: FloatArray, signal: FloatArray) -> int:
     """Samples in long stretches at an end of the signal's range during which the reference moves on."""
     known = np.isfinite(signal)
     own, place = signal[known], x[known]
-    if len(own) < 2 or len(np.unique(own[:5000])) < 20:
+    if len(own) < 2:
+        return 0
+    ends = [
+        there for end in (own.min(), own.max()) if np.count_nonzero(there := own == end) >= FEWEST_CLIPPED
+    ]
+    if not ends or len(np.unique(own[:5000])) < 20:
         return 0
     total = 0
     span = float(np.ptp(place))
-    for end in (own.min(), own.max()):
-        edges = np.diff(np.concatenate([[0], (own == end).astype(np.int8), [0]]))
+    for there in ends:
+        edges = np.diff(np.concatenate([[0], there.astype(np.int8), [0]]))
         for start, stop in zip(np.flatnonzero(edges == 1), np.flatnonzero(edges == -1)):
             if stop - start >= FEWEST_CLIPPED and np.ptp(place[start:stop]) > 0.02 * span:
                 total += int(stop - start)
     return total if total > CLIPPED_SHARE * len(own) else 0
 
 
-def _zero_notice(trial: Trial, recorded: str, table: pd.DataFrame) -> tuple[Notice, ...]:
+def _zero_notice(trial: Trial, recorded: str, table: Columns) -> tuple[Notice, ...]:
     """Cycles that turn well above zero strain (where it is known), or at different lengths."""
-    own = table[table["whole"]]
-    if own.empty:
+    low, high = (table[name][table["whole"]] for name in ("low", "high"))
+    if not len(low):
         return ()
-    amplitude = float((own["high"] - own["low"]).median())
+    amplitude = float(np.median(high - low))
     zero = trial.identity.rest_length_mm if recorded == "length" else 0.0
-    off = float(own["low"].median()) - zero
+    off = float(np.median(low)) - zero
     if np.isfinite(off) and abs(off) > OFF_ZERO_SHARE * amplitude:
         what = f"the cycles turn {off / amplitude:.0%} of their amplitude away from zero"
         done = "zero signals are those at the lower turn"

@@ -11,7 +11,8 @@ from collections.abc import Callable
 import numpy as np
 
 from campaign.recordings.recording import Trial
-from campaign.trials.sweeps import STEP, Influence, Series, SweepFeatures, features_of_sweeps
+from campaign.trials.sweep_points import Series
+from campaign.trials.sweeps import STEP, Influence, SweepFeatures, features_of_sweeps
 
 
 def features_of_thermal(trial: Trial) -> SweepFeatures:

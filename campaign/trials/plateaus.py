@@ -5,6 +5,8 @@ from __future__ import annotations
 import numpy as np
 import numpy.typing as npt
 
+from campaign.methods.medians import middle_value
+
 FloatArray = npt.NDArray[np.float64]
 IntArray = npt.NDArray[np.int64]
 BoolArray = npt.NDArray[np.bool_]
@@ -52,7 +54,7 @@ def find_plateaus(reference: FloatArray) -> tuple[IntArray, IntArray]:
     """
     none = np.empty(0, dtype=np.int64)
     span = float(np.ptp(reference)) if len(reference) else 0.0
-    noise = _reference_noise(reference)
+    noise = _reference_noise(reference, span)
     if len(reference) < 2 * SHORTEST_PLATEAU or span <= 8.0 * noise:
         return none, none
     band = max(4.0 * noise, SMALLEST_BAND * span)
@@ -70,35 +72,38 @@ def expand(starts: IntArray, stops: IntArray) -> tuple[IntArray, IntArray]:
     """Return the whole numbers of half-open intervals, one after another, and the interval of each."""
     lengths = stops - starts
     owner = np.repeat(np.arange(len(starts)), lengths)
-    offsets = np.arange(int(lengths.sum())) - np.repeat(np.cumsum(lengths) - lengths, lengths)
-    return starts[owner] + offsets, owner
+    shifts = np.repeat(starts - (np.cumsum(lengths) - lengths), lengths)
+    return np.arange(len(owner)) + shifts, owner
 
 
-def _reference_noise(reference: FloatArray) -> float:
+def _reference_noise(reference: FloatArray, span: float) -> float:
     """Standard deviation of the reference noise: robust, from second differences, or of its rounding."""
     if len(reference) < 4:
         return 0.0
-    second = np.diff(reference, n=2)
-    noise = float(np.median(np.abs(second)) / (0.6745 * np.sqrt(6.0)))
-    moves = np.abs(np.diff(reference))
-    smallest = float(moves[moves > 1e-9 * np.ptp(reference)].min(initial=np.inf))
-    rounding = smallest / np.sqrt(12.0) if smallest <= LARGEST_ROUNDING * np.ptp(reference) else 0.0
-    return max(noise, rounding if np.mean(moves == 0.0) > 0.1 else 0.0)
+    moves = reference[1:] - reference[:-1]
+    noise = float(middle_value(np.abs(moves[1:] - moves[:-1])) / (0.6745 * np.sqrt(6.0)))
+    if (len(moves) - np.count_nonzero(moves)) / len(moves) <= 0.1:
+        return noise
+    np.abs(moves, out=moves)
+    smallest = float(moves.min(initial=np.inf, where=moves > 1e-9 * span))
+    return max(noise, smallest / np.sqrt(12.0) if smallest <= LARGEST_ROUNDING * span else 0.0)
 
 
 def _rests(reference: FloatArray, noise: float, span: float) -> tuple[IntArray, IntArray]:
     """Stretches without motion, at the finest averaging that tells motion from noise; none if none does."""
-    sums = np.concatenate([[0.0], np.cumsum(reference - reference.mean())])
+    sums = np.zeros(len(reference) + 1)
+    np.cumsum(reference - reference.mean(), out=sums[1:])
     width = 1
     while width <= max(len(reference) // 20, 1):
         motion = _motion(sums, width)
         noise_left = noise * np.sqrt(2.0 / width)
         still = max(4.0 * noise_left, MOTION_SHARE * span)
-        moving = motion[motion > still]
-        if len(moving) and _lower_quartile_exceeds(moving, 1.5 * still):
-            return _stretches(motion <= still)
+        moving = motion > still
+        if _lower_quartile_exceeds(motion, moving, 1.5 * still):
+            return _stretches(~moving)
         width *= 2
-    return _stretches(np.zeros(len(reference), dtype=bool))
+    none = np.empty(0, dtype=np.int64)
+    return none, none
 
 
 def _motion(sums: FloatArray, width: int) -> FloatArray:
@@ -107,33 +112,41 @@ def _motion(sums: FloatArray, width: int) -> FloatArray:
     ``sums`` has shape (samples + 1,): sums of the samples before each place.
     """
     samples = len(sums) - 1
+    means = sums[width:] - sums[:-width]
+    means /= width
     difference = np.empty(samples)
-    difference[: samples - width + 1] = (sums[width:] - sums[:-width]) / width
+    difference[: samples - width + 1] = means
     difference[samples - width + 1 :] = (sums[-1] - sums[samples - width + 1 : -1]) / np.arange(
         width - 1, 0, -1
     )
-    difference[width:] -= (sums[width:-1] - sums[: -width - 1]) / width
+    difference[width:] -= means[:-1]
     difference[1:width] -= sums[1:width] / np.arange(1, width)
     np.abs(difference, out=difference)
     difference[0] = difference[1]
     return difference
 
 
-def _lower_quartile_exceeds(values: FloatArray, limit: float) -> bool:
-    """Whether the lower quartile lies above *limit*: by counting, where the count settles it."""
-    below = int(np.count_nonzero(values <= limit))
-    first = (len(values) - 1) // 4
+def _lower_quartile_exceeds(values: FloatArray, chosen: BoolArray, limit: float) -> bool:
+    """Whether the lower quartile of the *chosen* lies above *limit*: by counting, where the count settles it.
+
+    All that lie above the limit are among the chosen; where nothing is chosen it does not.
+    """
+    number = int(np.count_nonzero(chosen))
+    below = number - int(np.count_nonzero(values > limit))
+    first = (number - 1) // 4
     if below <= first:
-        return True
-    if below >= min(first + 2, len(values)):
+        return number > 0
+    if below >= min(first + 2, number):
         return False
-    return bool(np.quantile(values, 0.25) > limit)
+    return bool(np.quantile(values[chosen], 0.25) > limit)
 
 
 def _stretches(mask: BoolArray) -> tuple[IntArray, IntArray]:
     """Starts and ends (one past the last) of the stretches where *mask* holds."""
-    edges = np.diff(np.concatenate([[0], mask.astype(np.int8), [0]]))
-    return np.flatnonzero(edges == 1), np.flatnonzero(edges == -1)
+    edges = np.flatnonzero(mask[1:] != mask[:-1]) + 1
+    starts, stops = np.append(0, edges), np.append(edges, len(mask))
+    first = 0 if mask[0] else 1
+    return starts[first::2], stops[first::2]
 
 
 def _typical_length(lengths: IntArray) -> int:
@@ -153,17 +166,29 @@ def _long_enough(starts: IntArray, stops: IntArray) -> tuple[IntArray, IntArray]
 
 def _medians(values: FloatArray, starts: IntArray, stops: IntArray) -> FloatArray:
     """Median of the values of each stretch."""
-    places, owner = expand(starts, stops)
     lengths = stops - starts
     longest = int(lengths.max())
-    if longest * len(starts) <= PADDING * len(places):
-        rows = np.full((len(starts), longest), np.inf)
-        rows[np.arange(longest) < lengths[:, None]] = values[places]
-        rows.sort(axis=1)
-        ordered, first = rows.ravel(), np.arange(len(starts)) * longest
-    else:
-        ordered = values[places][np.lexsort([values[places], owner])]
-        first = np.cumsum(lengths) - lengths
+    if longest * len(starts) > PADDING * int(lengths.sum()):
+        return _medians_by_sorting(values, starts, stops)
+    # as many values below each stretch as above it: all medians then stand in the middle of their rows
+    before = (longest - lengths) // 2
+    place = np.arange(longest) - before[:, None]
+    rows = values.take(place + starts[:, None], mode="clip")
+    rows[place < 0] = -np.inf
+    rows[place >= lengths[:, None]] = np.inf
+    low, high = (longest - 1) // 2, longest // 2
+    if (lengths != longest).any():
+        low -= longest % 2
+    rows.partition(sorted({low, high}), axis=1)
+    own = np.arange(len(starts)), before + (lengths - 1) // 2, before + lengths // 2
+    return np.asarray((rows[own[0], own[1]] + rows[own[0], own[2]]) / 2.0)
+
+
+def _medians_by_sorting(values: FloatArray, starts: IntArray, stops: IntArray) -> FloatArray:
+    places, owner = expand(starts, stops)
+    ordered = values[places][np.lexsort([values[places], owner])]
+    lengths = stops - starts
+    first = np.cumsum(lengths) - lengths
     return np.asarray((ordered[first + (lengths - 1) // 2] + ordered[first + lengths // 2]) / 2.0)
 
 

@@ -3,7 +3,8 @@
 from __future__ import annotations
 
 from campaign.recordings.recording import Trial
-from campaign.trials.sweeps import Influence, Series, SweepFeatures, features_of_sweeps
+from campaign.trials.sweep_points import Series
+from campaign.trials.sweeps import Influence, SweepFeatures, features_of_sweeps
 
 
 def features_of_pressure(trial: Trial) -> SweepFeatures:

@@ -117,7 +117,7 @@ def _readings_of_table(trial: Trial, reference: FloatArray) -> StaircaseFeatures
     given = trial.direction[kept] if trial.direction is not None else np.full(len(kept), np.nan)
     timed = trial.time_s is not None and trial.time_is_ordered
     times = trial.time_s[kept] - trial.time_s[kept[0]] if timed and trial.time_s is not None else np.nan
-    columns = _means_of_channels(trial, kept, np.arange(len(kept)))
+    columns = _means_of_channels(trial, kept, np.ones(len(kept), dtype=np.int64))
     columns |= {
         "direction": _given_directions(levels, given),
         "signal": trial.signal[kept],
@@ -177,14 +177,15 @@ def _readings_of_log(trial: Trial, reference: FloatArray) -> StaircaseFeatures:
     if len(counts) < 2:
         return _nothing(trial, "too-few-readings", f"{len(counts)} plateaus with a signal", notices)
     times, timed = _times(trial, len(reference))
-    means = stretch_means(trial.signal[averaged], times[averaged], counts, resolution=_resolution_of(trial))
+    means = stretch_means(
+        trial.signal.take(averaged), times.take(averaged), counts, resolution=_resolution_of(trial)
+    )
     settled = _settled(means)
     notices += _settled_notice(trial, settled)
     begun, ended = times[rows[starts[plateau]]], times[rows[stops[plateau] - 1]]
-    stretch = np.repeat(np.arange(len(counts)), counts)
-    middle = _stretch_mean(times[averaged], stretch)
-    columns = _means_of_channels(trial, averaged, stretch)
-    levels = _stretch_mean(reference[averaged], stretch)
+    middle = _stretch_mean(times.take(averaged), counts)
+    columns = _means_of_channels(trial, averaged, counts)
+    levels = _stretch_mean(reference.take(averaged), counts)
     unknown = np.full(len(counts), np.nan)
     columns |= {
         "direction": plateau_directions(levels),
@@ -228,9 +229,12 @@ def _averaged_rows(
     lengths = stops - starts
     first = starts + np.ceil(lengths * SETTLING_SHARE).astype(np.int64)
     last = stops - (lengths >= 2 * SHORTEST_PLATEAU)
-    places, plateau = expand(first, np.maximum(last, first + 1))
-    chosen = rows[places]
-    finite = np.isfinite(trial.signal[chosen])
+    last = np.maximum(last, first + 1)
+    places, plateau = expand(first, last)
+    chosen = rows.take(places)
+    finite = np.isfinite(trial.signal.take(chosen))
+    if finite.all():
+        return chosen, last - first, np.arange(len(starts))
     counts = np.bincount(plateau[finite], minlength=len(starts)).astype(np.int64)
     return chosen[finite], counts[counts > 0], np.flatnonzero(counts)
 
@@ -293,21 +297,21 @@ def _largest_before(levels: FloatArray) -> IntArray:
     return np.concatenate([[0], places[:-1]]).astype(np.int64)
 
 
-def _stretch_mean(values: FloatArray, stretch: IntArray) -> FloatArray:
-    """Mean of the finite values of each stretch, by the stretch of each value; NaN where there are none."""
-    stretches = int(stretch[-1]) + 1
+def _stretch_mean(values: FloatArray, counts: IntArray) -> FloatArray:
+    """Mean of the finite values of consecutive stretches of so many values; NaN where there are none."""
+    stretch = np.repeat(np.arange(len(counts)), counts)
+    sums = np.bincount(stretch, values)  # one by one: seeds are taken from these means
+    if np.isfinite(sums).all():
+        return np.asarray(sums / counts)
     finite = np.isfinite(values)
-    if finite.all():
-        return np.asarray(np.bincount(stretch, values) / np.bincount(stretch))
-    values, stretch = values[finite], stretch[finite]
-    held = np.bincount(stretch, minlength=stretches)
-    sums = np.bincount(stretch, values, minlength=stretches)
-    return np.asarray(np.divide(sums, held, out=np.full(stretches, np.nan), where=held > 0))
+    held = np.bincount(stretch, finite)
+    sums = np.bincount(stretch, np.where(finite, values, 0.0))
+    return np.asarray(np.divide(sums, held, out=np.full(len(counts), np.nan), where=held > 0))
 
 
-def _means_of_channels(trial: Trial, rows: IntArray, stretch: IntArray) -> dict[str, object]:
-    """Means over the averaged rows of every channel that a reading keeps."""
-    unknown = np.full(int(stretch[-1]) + 1, np.nan)
+def _means_of_channels(trial: Trial, rows: IntArray, counts: IntArray) -> dict[str, object]:
+    """Means over the averaged rows of every channel that a reading keeps, *counts* rows a reading."""
+    unknown = np.full(len(counts), np.nan)
     channels = {
         "strain": trial.strain,
         "elongation_mm": trial.elongation_mm,
@@ -317,7 +321,7 @@ def _means_of_channels(trial: Trial, rows: IntArray, stretch: IntArray) -> dict[
         "pressure_kpa": trial.pressure_kpa,
     }
     return {
-        name: _stretch_mean(values[rows], stretch) if values is not None else unknown.copy()
+        name: _stretch_mean(values.take(rows), counts) if values is not None else unknown.copy()
         for name, values in channels.items()
     }
 

@@ -145,7 +145,7 @@ class Elsewhere(ThisProcess):
 
 
 def test_what_a_worker_elsewhere_cannot_open_is_read_here(folder: Path) -> None:
-    found = run_intake(folder, largest, workshop=Workshop(Elsewhere()), as_bytes=True)
+    found = run_intake(folder, largest, workshop=Workshop(Elsewhere()))
     assert same(found, run_intake(folder, largest))
 
 
@@ -154,7 +154,7 @@ def test_what_a_worker_elsewhere_cannot_open_is_read_here(folder: Path) -> None:
 
 def kept(folder: Path, file: Path, reduce: Reduction = largest) -> tuple[Intake, Results]:
     with Store(file) as store:
-        return run_intake(folder, reduce, workshop=Workshop(store=store), as_bytes=True)
+        return run_intake(folder, reduce, workshop=Workshop(store=store))
 
 
 def change(folder: Path, file: str, old: str, new: str) -> None:
@@ -263,7 +263,7 @@ def test_what_could_not_be_read_is_tried_again(
     assert [n.code for n in intake.notices if n.weight == "set aside"] == ["vanished"] * 2
     monkeypatch.undo()
     with Store(store) as keeping:
-        run_intake(folder, fail_on_m03, workshop=Workshop(store=keeping), as_bytes=True)
+        run_intake(folder, fail_on_m03, workshop=Workshop(store=keeping))
     assert same(kept(folder, store), run_intake(folder, largest))
 
 
@@ -282,7 +282,7 @@ def test_processes_use_what_is_known(folder: Path, tmp_path: Path, processes: Wo
     expected = kept(folder, store)
     change(folder, name("M02", 2), "60.0,", "60.5,")
     with Store(store) as keeping:
-        found = run_intake(folder, largest, workshop=replace(processes, store=keeping), as_bytes=True)
+        found = run_intake(folder, largest, workshop=replace(processes, store=keeping))
     assert same(found, run_intake(folder, largest))
     assert not same(found, expected)
 
