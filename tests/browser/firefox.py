@@ -1,9 +1,9 @@
-"""A site in Firefox, from disk: ``python -m tests.browser.firefox SITE`` opens every kind of page and says what it finds.
+"""A site in Firefox, from disk: ``python -m tests.browser.firefox SITE`` opens every kind of page.
 
 Not a test that runs by itself, because the machines that test have Chromium alone. It speaks the W3C protocol
-WebDriver BiDi (draft, sections 'session', 'browsingContext', 'script', 'log', 'network'), which Firefox answers
-without a driver, over the connection that selenium brings along. For each page: how many figures came to
-life, how wide the page is, what the console said, and every address asked for outside the site.
+WebDriver BiDi (draft, sections 'session', 'browsingContext', 'script', 'log', 'network'), which Firefox
+answers without a driver, over the connection that selenium brings along. For each page: how many figures came
+to life, how wide the page is, what the console said, and every address asked for outside the site.
 """
 
 from __future__ import annotations
@@ -30,7 +30,8 @@ LIVE = """
   for (const figure of figures) {
     figure.scrollIntoView();
     const end = Date.now() + 20000;
-    while (figure.dataset.state !== "live" && Date.now() < end) await new Promise((then) => setTimeout(then, 50));
+    while (figure.dataset.state !== "live" && Date.now() < end)
+      await new Promise((then) => setTimeout(then, 50));
   }
   const live = figures.filter((f) => f.dataset.state === "live" && f.querySelector(".live svg"));
   return JSON.stringify([figures.length, live.length, document.documentElement.scrollWidth, innerWidth]);
