@@ -173,7 +173,12 @@ def seal_campaign(folder: Path, results: CampaignResults, site: Mapping[str, byt
     files = {f"{name}/{path}": content for path, content in bagged.items()}
     check_names(files)
     from_the_lab = _folder_names(files, name)
-    told = [*metadata.notices, *places.notices, *earlier_not_followed(results), *names_not_for_windows(from_the_lab)]
+    told = [
+        *metadata.notices,
+        *places.notices,
+        *earlier_not_followed(results),
+        *names_not_for_windows(from_the_lab),
+    ]
     return Sealed(files, sort_notices(told))
 
 

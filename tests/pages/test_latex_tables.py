@@ -11,11 +11,10 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from campaign.analyses.results import CampaignResults
 from campaign.pages.latex_tables import LONG_FROM, MOST_ROWS, escaped, latex_table
-from campaign.pages.notes import Notes
-from campaign.pages.site import site_pages
+from campaign.pages.page import Page
 from campaign.pages.tables import Column, Table
-from tests.pages.small_campaign import Sketch, small_results
 
 COMMAND = re.compile(r"\\[A-Za-z]+(?:\{\}|\{0\})?|\\[\\{}$&#_%,]")
 """Every command that an escaped text may hold."""
@@ -156,15 +155,11 @@ def test_a_table_of_too_many_columns_says_that_it_is_too_wide() -> None:
     assert "% Wider than a page of article" in latex_table(Table("t", "T.", frame, columns))
 
 
-@pytest.fixture(scope="module")
-def tables(tmp_path_factory: pytest.TempPathFactory) -> list[Table]:
-    """Every table of a small campaign's pages."""
-    results = small_results(tmp_path_factory.mktemp("latex") / "c", Sketch(modules=2, runs=2))
-    return [table for page in site_pages(results, Notes()) for table in page.tables]
-
-
-def test_every_table_of_a_site_is_whole_latex_of_letters_that_any_engine_knows(tables: list[Table]) -> None:
+def test_every_table_of_a_site_is_whole_latex_of_letters_that_any_engine_knows(
+    small_campaign_pages: tuple[CampaignResults, list[Page]],
+) -> None:
     """What compiling them with pdfTeX showed (DEVELOPERS.md), kept without TeX."""
+    tables = [table for page in small_campaign_pages[1] for table in page.tables]
     assert len(tables) > 30
     for table in tables:
         text = latex_table(table)
