@@ -142,6 +142,39 @@ def _not_packed(name: str, wrong: str) -> Notice:
     return Notice("name-not-portable", "stops", name, None, None, what, "nothing is sealed", remedy)
 
 
+def names_not_for_windows(names: Iterable[str]) -> list[Notice]:
+    """Return a notice for each of *names* that Windows cannot unpack as it is; elsewhere it can be.
+
+    Those are names with one of ``: * ? " < > |``, with a part that ends in a full stop or a space, or that is
+    kept for a device (``CON``, ``NUL``, ``COM1`` and the like, whatever the ending), and names that differ
+    from another in capitals alone (learn.microsoft.com, 'Naming Files, Paths, and Namespaces'; from memory).
+    """
+    listed = sorted(names)
+    alike = Counter(name.casefold() for name in listed)
+    wrong = ((name, _wrong_on_windows(name, alike[name.casefold()] > 1)) for name in listed)
+    return [_hard_to_unpack(name, why) for name, why in wrong if why]
+
+
+def _wrong_on_windows(name: str, is_doubled: bool) -> str:
+    parts = name.split("/")
+    if bad := sorted(set(name) & set(':*?"<>|')):
+        return f"holds {' '.join(bad)}"
+    if any(part.endswith((".", " ")) for part in parts):
+        return "ends in a full stop or a space, or one of its folders does"
+    if any(_DEVICES.fullmatch(part.split(".")[0].rstrip()) for part in parts):
+        return "is kept for a device"
+    return "differs from another name in capitals alone" if is_doubled else ""
+
+
+_DEVICES = re.compile(r"(?i)con|prn|aux|nul|(?:com|lpt)[1-9¹²³]")
+
+
+def _hard_to_unpack(name: str, why: str) -> Notice:
+    what = f"the name {_spelled(name)} {why}: Windows cannot unpack the file under it"
+    remedy = "rename the file where it lies and seal again, or unpack the archive on another system"
+    return Notice("name-not-for-windows", "noted", name, None, None, what, "it is sealed as it is", remedy)
+
+
 def _write_all(files: Mapping[str, Content], stream: IO[bytes]) -> None:
     with zipfile.ZipFile(stream, "w") as archive:
         archive.comment = _COMMENT + b"0" * _DIGEST_LENGTH

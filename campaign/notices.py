@@ -158,6 +158,7 @@ NOTICE_CODES: dict[str, str] = {
     "archive-too-large": "an archive would unpack to more than is reasonable",
     "archive-damaged": "the bytes of a member of an archive are damaged",
     "name-not-portable": "a file's name cannot be unpacked everywhere; the campaign is not sealed",
+    "name-not-for-windows": "a file's name cannot be unpacked on Windows; it is sealed as it is",
     "archive-place": "no archive is written into its own campaign, nor over a file that is none",
     "archive-unknown": "what is to be verified is neither a sealed archive nor a site",
     "changed-while-sealed": "a file changed between its reading and its sealing; nothing is sealed",

@@ -20,6 +20,7 @@ from campaign import archive
 from campaign.archive import (
     campaign_in,
     hash_in_comment_holds,
+    names_not_for_windows,
     sha512_of,
     unpack_archive,
     unpack_what_is_whole,
@@ -311,3 +312,26 @@ def test_a_label_that_leads_elsewhere_is_refused(tmp_path: Path, place: str) -> 
     (tmp_path / "bag-info.txt").write_text(f"Campaign-Folder: {place}\n", encoding="utf-8")
     with pytest.raises(CampaignStops, match="no place inside"):
         campaign_in(tmp_path)
+
+
+@pytest.mark.parametrize(
+    ("name", "why"),
+    [
+        ("trials/12:30.csv", "holds :"),
+        ('a<b>|"*?.txt', 'holds " * < > ? |'),
+        ("notes/ends in a stop.", "ends in a full stop"),
+        ("a folder /x.csv", "ends in a full stop or a space"),
+        ("CON/x.csv", "kept for a device"),
+        ("trials/nul.csv", "kept for a device"),
+        ("com1.tar.gz", "kept for a device"),
+    ],
+)
+def test_names_that_windows_cannot_unpack_are_told(name: str, why: str) -> None:
+    (told,) = names_not_for_windows(["trials/fine.csv", "contents.csv", "comet.txt", "名前 ü.bin", name])
+    assert (told.code, told.weight, told.file) == ("name-not-for-windows", "noted", name)
+    assert why in told.what
+
+
+def test_names_that_differ_in_capitals_alone_are_told() -> None:
+    told = names_not_for_windows(["A.csv", "a.csv", "b.csv"])
+    assert [n.file for n in told] == ["A.csv", "a.csv"]

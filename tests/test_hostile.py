@@ -22,6 +22,7 @@ import pytest
 import yaml
 
 from campaign.cli import main
+from campaign.notices import CampaignStops
 from campaign.pages.brief import brief_bytes
 from campaign.pages.drawing import ready
 from campaign.pages.latex_tables import latex_table
@@ -32,11 +33,14 @@ from campaign.pages.page_data import script_value, unfolded
 from campaign.pages.print_figure import print_svg
 from campaign.pages.render import render_site
 from campaign.pages.site import site_frame, site_pages
+from campaign.pipeline import make_site
 from campaign.provenance.sealing import seal_campaign
 from campaign.recordings.register import refusal_of_id, shown
+from campaign.rehearsal import rehearsal_files
+from campaign.simulation import write_campaign as write_folder_of_campaign
 from tests.hostile_campaign import hostile_ids, hostile_plan, note_of
 from tests.hostile_site import hostile_folder, hostile_site, hostile_space
-from tests.hostile_texts import FORMULAS, NAMES, NUL, REFUSED, TEXTS, UNSEEN
+from tests.hostile_texts import FORMULAS, MARKUP, NAMES, NUL, REFUSED, TEXTS, UNSEEN
 from tests.pages.small_campaign import Sketch, write_campaign
 
 _ELEMENTS = """
@@ -374,6 +378,66 @@ def test_nothing_that_is_printed_can_command_a_terminal(
     assert not re.search("[\x00-\x08\x0b-\x1f\x7f\u202a-\u202e]", said.replace("\r", ""))
     page = (tmp_path / "site" / "recordings.html").read_text(encoding="utf-8")
     assert UNSEEN_CHARACTER.findall(page) == []
+
+
+# ---------------------------------------------------------------- plans
+
+
+HOSTILE_PLAN = """format = 1
+[campaign]
+title = {0}
+description = {0}
+[plan]
+generations = [{0}, "new"]
+modules = 3
+sensors = 3
+repetitions = 2
+levels = 3
+[plan.components]
+module = "1 %"
+sensor = "1.5 %"
+repetition = "0.3 %"
+residual = "0.2 %"
+[plan.generation.{0}.components]
+sensor = "0.8 %"
+[geometry.{0}]
+nodes = {{ {1} = [0, 0], B = [80, 0], C = [30, 60] }}
+"""
+
+
+def hostile_rehearsal(text: str, node: str = "A") -> dict[str, bytes] | str:
+    """Every file of the rehearsal of a plan that is full of *text*, or the words with which it stops."""
+    spelled = [json.dumps(words, ensure_ascii=False).replace("\x7f", "\\u007f") for words in (text, node)]
+    try:
+        return rehearsal_files(HOSTILE_PLAN.format(*spelled).encode("utf-8"), "plan.toml")
+    except CampaignStops as stop:
+        return " ".join(f"{notice.what} {notice.remedy}" for notice in stop.notices)
+
+
+def test_a_plan_full_of_any_text_stops_or_gives_files_within_the_folder() -> None:
+    texts = {**TEXTS, "nul": NUL, "deep": "/../../../../climbed", "drive": "C:\\climbed"}
+    made = [hostile_rehearsal(text, node) for text in texts.values() for node in ("A", text)]
+    rehearsed = [files for files in made if not isinstance(files, str)]
+    assert len(rehearsed) > 20
+    for files in rehearsed:
+        for path in files:
+            assert re.fullmatch(r"(?:trials/M\d\d/)?[\w.-]+", path), path
+    for said in made:
+        if isinstance(said, str):
+            assert re.search("file names|cannot be seen|formula|no TOML", said), said
+
+
+def test_a_hostile_plan_is_reported_as_text(tmp_path: Path) -> None:
+    text = MARKUP["closes_script"]
+    files = hostile_rehearsal(text)
+    assert not isinstance(files, str), files
+    write_folder_of_campaign(files, tmp_path / "c")
+    _, site = make_site(tmp_path / "c")
+    shown_pages = {name: content for name, content in site.items() if name.endswith(".html")}
+    assert len(shown_pages) > 20
+    for name, page in shown_pages.items():
+        assert list(faults_of(page, site)) == [], name
+    assert text in "".join(parsed(site["generations.html"]).text)
 
 
 # ---------------------------------------------------------------- legible texts

@@ -37,6 +37,9 @@ PARTS: Mapping[str, tuple[tuple[str, ...], str]] = {
 }
 """Parts of a bar from the left, the sources in each, and its colour; in grey they differ in lightness."""
 
+_LINE = 15
+"""Height of a line of the key, in pixels."""
+
 _SMALLEST = 0.004
 """A part that holds less of the variance is not drawn."""
 
@@ -58,8 +61,8 @@ def new_sensor_figure(found: Sequence[BudgetInUse], reference: ReferenceQuantity
         _across(found, reference),
         axis("", ticks=ticks, low=-0.5, high=len(names) - 0.4, reverse=True),
         barmode="overlay",
-        margin={"l": 150},
-        annotations=_names_of_parts(traces),
+        margin={"l": 150, "t": 28 + _key_height(traces)},
+        annotations=_key_of_parts(traces, left=-140),
     )
     return Figure(
         name="budget-new",
@@ -69,7 +72,7 @@ def new_sensor_figure(found: Sequence[BudgetInUse], reference: ReferenceQuantity
         layout=made,
         table="budget",
         note=_HOW_TO_READ,
-        height=150 + 56 * len(names),
+        height=150 + _key_height(traces) + 56 * len(names),
     )
 
 
@@ -87,8 +90,15 @@ def sensor_figure(found: Sequence[BudgetInUse], reference: ReferenceQuantity, *,
         most = max(most, len(own))
         traces += _parted(own, reference, panel(index), width=0.8)
     upright = axis("Sensors, largest first", low=-0.7, high=most - 0.3, reverse=True, showticklabels=False)
+    key = _key_height(traces)
     made = small_multiples(
-        generations, _across(found, reference), upright, columns=min(len(generations), 3), barmode="overlay"
+        generations,
+        _across(found, reference),
+        upright,
+        columns=min(len(generations), 3),
+        barmode="overlay",
+        margin={"t": 28 + key},
+        annotations=_key_of_parts(traces, above=22),
     )
     largest = max(found, key=lambda one: one.combined.expanded_uncertainty)
     return Figure(
@@ -100,7 +110,7 @@ def sensor_figure(found: Sequence[BudgetInUse], reference: ReferenceQuantity, *,
         layout=made,
         table="budget",
         note=_HOW_TO_READ if first else "Parts as in the figure above.",
-        height=min(620, 120 + max(8, 60 // most) * most),
+        height=key + min(620, 120 + max(8, 60 // most) * most),
     )
 
 
@@ -151,15 +161,29 @@ def _parted(
     return traces
 
 
-def _names_of_parts(traces: Sequence[Trace]) -> list[Layout]:
-    """Labels under the parts of the lowest bar that are wide enough to carry one."""
-    lowest = max(max(trace["y"]) for trace in traces)
-    whole = max(b + x for t in traces for b, x in zip(t["base"], t["x"], strict=True))
+def _key_height(traces: Sequence[Trace]) -> int:
+    """Pixels that the key takes above the panels."""
+    return 8 + _LINE * len(_parts_drawn(traces))
+
+
+def _parts_drawn(traces: Sequence[Trace]) -> list[str]:
+    """Names of the parts that any bar has, in the order in which they stand in it."""
+    drawn = {str(trace["name"]) for trace in traces}
+    return [words for words in PARTS if words in drawn]
+
+
+def _key_of_parts(traces: Sequence[Trace], left: int = 0, above: int = 4) -> list[Layout]:
+    """Return a line a part above the first panel: a square in its colour, and its name.
+
+    The first line stands highest; *left* and *above* are pixels from the panel's upper left corner.
+    """
+    names = _parts_drawn(traces)
     made = []
-    for trace in traces:
-        for y, start, length in zip(trace["y"], trace["base"], trace["x"], strict=True):
-            if y == lowest and length > 0.02 * whole * len(trace["name"]):
-                made.append(label(trace["name"], start + length / 2, y + 0.42, anchor="center", shift=(0, 0)))
+    for place, words in enumerate(names):
+        height = above + _LINE * (len(names) - place) - _LINE // 2
+        colour = PARTS[words][1]
+        made.append(label("■", 0, 1, colour=colour, shift=(left, height), paper=True))
+        made.append(label(words, 0, 1, shift=(left + 16, height), size=11, paper=True))
     return made
 
 

@@ -5,6 +5,10 @@ Later versions may append columns, never rename or reorder these.
 
 from __future__ import annotations
 
+import re
+
+from campaign.pages.column_meanings import MEANINGS, UNITS
+
 CONTRACT_COLUMNS: dict[str, tuple[str, ...]] = {
     name: tuple(columns.split())
     for name, columns in {
@@ -254,7 +258,7 @@ _MEANINGS: dict[str, str] = {
     "duration_s": "from the end of the ramp to the last sample",
     "form": "form of slow change with the least AICc",
     "forms_shown": "forms within two units of the best",
-    "percent_fso_per_decade": "slope against the decadic logarithm of time",
+    "percent_fso_per_decade": "slope against the decadic logarithm of time; of loops, of rate",
     "per_decade_from_ramp_start": "the same with time zero at the beginning of the ramp",
     "change_1min_percent_fso": "signal 1 min after the end of the ramp less the first settled one",
     "change_10min_percent_fso": "signal after 10 min less the first settled one",
@@ -428,12 +432,23 @@ _UNIT_ENDINGS: tuple[tuple[str, str], ...] = (
 
 
 def describe_column(name: str) -> str:
-    """Return what a column means, empty where its name says it."""
-    return _MEANINGS.get(name, "")
+    """Return what a column means, empty where nothing is known of it."""
+    known = _MEANINGS.get(name) or MEANINGS.get(name)
+    return known or next((said for q in ("elongation", "length") if (said := _in_millimetres(name, q))), "")
+
+
+def _in_millimetres(name: str, quantity: str) -> str:
+    """What a column of a campaign in millimetres means: its strain column's words, of the other quantity."""
+    strain = name.removesuffix("_mm").replace(quantity, "strain")
+    said = _MEANINGS.get(strain) or MEANINGS.get(strain, "")
+    return said.replace("strain", quantity) if name.endswith("_mm") and quantity in name else ""
 
 
 def unit_of_column(name: str) -> str:
     """Return the unit that a column's name carries, empty where a ``unit`` column or none applies."""
+    whose = name if name in UNITS else re.sub(r"_(?:low|high)$", "", name)
+    if whose in UNITS:
+        return UNITS[whose]
     for ending, unit in _UNIT_ENDINGS:
         if name.endswith(ending):
             return unit

@@ -114,7 +114,7 @@ def _decades(smallest: float) -> list[tuple[float, str]]:
     return [
         (10.0**e, plain.get(e, "10" + str(e).translate(superscripts)))
         for e in exponents
-        if len(exponents) < 6 or e >= -3 or e % 2 == 0
+        if len(exponents) < 6 or e % 2 == 0
     ]
 
 
@@ -176,7 +176,7 @@ def map_figure(maps: Sequence[AmplificationMap]) -> Figure | None:
     stretch = [value for found in known for value in _map_rows(found)["stretch"]]
     made = small_multiples(
         [found.geometry for found in known],
-        axis("Shear: shift along x per y", "mm/mm", low=-1.25 * shear - 0.02, high=1.25 * shear + 0.02),
+        axis("Shear, x per y", "mm/mm", low=-1.25 * shear - 0.02, high=1.25 * shear + 0.02),
         axis("Stretch along x", "mm/mm", low=min(stretch) - 0.03, high=max(stretch) + 0.03),
         columns=2,
     )

@@ -198,7 +198,7 @@ def _names(own: Placement, rebuilt: FloatArray, axes: str) -> list[Trace]:
     number = {name: k for k, name in enumerate(own.nodes)}
     doubted = [edge for edge in own.edges if edge.sensor in _doubted(own)]
     ends = [rebuilt[[number[edge.first], number[edge.second]]] for edge in doubted]
-    edges = [pair.mean(axis=0) + np.array((0.0, _BESIDE * size)) for pair in ends]
+    edges = [pair.mean(axis=0) + np.array((-0.2 * size, _BESIDE * size)) for pair in ends]
     places = np.array([*nodes, *edges])
     names = [*(own.nodes[k] for k in solved), *(f"{edge.sensor} suspected" for edge in doubted)]
     seen = np.isfinite(places).all(axis=1)

@@ -133,7 +133,8 @@ def _share(axis: Layout) -> float:
 
 
 def _is_panel_title(note: Layout) -> bool:
-    return str(note.get("xref", "")).endswith("domain") and (note["x"], note["y"]) == (0, 1)
+    at_the_corner = str(note.get("xref", "")).endswith("domain") and (note["x"], note["y"]) == (0, 1)
+    return at_the_corner and "align" in note
 
 
 def _is_above(note: Layout) -> bool:

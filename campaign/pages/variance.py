@@ -312,11 +312,13 @@ def shares_figure(variance: Variance) -> Figure | None:
 
 
 def _share_label(words: str, share: float, start: float, height: float) -> Layout:
+    """Begin at the part, or end at it where that lies in the right half: a narrow page has room there."""
+    begins = start < 0.5
     return label(
         f"{words} {numbers.percent(share)}",
-        (start + share / 2) * 100,
+        (start if begins else start + share) * 100,
         height,
-        anchor="center",
+        anchor="left" if begins else "right",
         shift=(0, 0),
         size=11,
         colour=palette.INK,

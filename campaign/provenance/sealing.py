@@ -34,6 +34,7 @@ from campaign.archive import (
     check_names,
     chunks_of,
     hash_in_comment_holds,
+    names_not_for_windows,
     write_archive,
 )
 from campaign.notices import CampaignStops, Notice, sort_notices
@@ -171,7 +172,40 @@ def seal_campaign(folder: Path, results: CampaignResults, site: Mapping[str, byt
     bagged = bag_files(payload, _bag_info(metadata, places, software), beside)
     files = {f"{name}/{path}": content for path, content in bagged.items()}
     check_names(files)
-    return Sealed(files, sort_notices([*metadata.notices, *places.notices]))
+    from_the_lab = _folder_names(files, name)
+    told = [
+        *metadata.notices,
+        *places.notices,
+        *earlier_not_followed(results),
+        *names_not_for_windows(from_the_lab),
+    ]
+    return Sealed(files, sort_notices(told))
+
+
+def _folder_names(files: Iterable[str], name: str) -> list[str]:
+    """Names of the files that come from campaigns' folders, from the folder of all campaigns."""
+    start = f"{name}/{PAYLOAD}{_CAMPAIGNS}/"
+    return [path.removeprefix(start) for path in files if path.startswith(start)]
+
+
+def earlier_not_followed(results: CampaignResults) -> list[Notice]:
+    """Return a notice for each earlier campaign that names others: they are neither compared nor sealed."""
+    remedy = "name them in this campaign's description as well, and they are compared and sealed"
+    done = "the archive does not hold those"
+    return [
+        Notice(
+            "earlier-not-sealed",
+            "noted",
+            DESCRIPTION_FILE,
+            None,
+            None,
+            f"the earlier campaign '{one.where}' names earlier campaigns of its own",
+            done,
+            remedy,
+        )
+        for one in results.earlier
+        if one.names_others
+    ]
 
 
 def write_sealed(sealed: Sealed, into: Path) -> None:

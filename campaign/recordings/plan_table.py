@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from itertools import combinations, pairwise
@@ -17,6 +18,7 @@ from campaign.recordings.planned_design import (
     PlannedLine,
     PlannedPlace,
 )
+from campaign.recordings.register import refusal_of_id, shown
 from campaign.recordings.toml_tables import CheckedTable, FaultList, suggestion
 from campaign.units import UnitError, parse_quantity
 
@@ -134,6 +136,10 @@ def _read_names(table: CheckedTable) -> tuple[str, ...]:
         if len(names) == 0 or len(set(names)) < len(names) or not all(name.strip() for name in names):
             what = "names are missing, empty or repeated"
             table.fault("wrong-value", "generations", what, 'write generations = ["first", "second"]')
+        for name in names:
+            if refused := refusal_of_id(name):
+                remedy = "name generations by letters, digits and hyphens"
+                table.fault("wrong-value", "generations", f"'{shown(name)}' {refused}", remedy)
     else:
         number = table.whole_number("generations")
         if value is None:
@@ -227,6 +233,9 @@ def _read_places(
     return _joined_places(table, sensors, name, geometry, edges) or plain, name
 
 
+_IN_FILE_NAMES = re.compile(r"[^\W_](?:[^\W_]|-){0,11}")
+
+
 def _read_edges(table: CheckedTable) -> tuple[tuple[str, str], ...]:
     value = table.take("edges")
     if value is None:
@@ -252,6 +261,11 @@ def _joined_places(
     if unknown:
         what = f"[geometry.{name}] has no node '{unknown[0]}'"
         table.fault("wrong-value", "edges", what, suggestion(unknown[0], tuple(geometry.nodes)))
+        return ()
+    if wrong := [node for edge in edges for node in edge if not _IN_FILE_NAMES.fullmatch(node)]:
+        what = f"[geometry.{shown(name)}] has a node '{shown(wrong[0])}', which would be part of file names"
+        remedy = "name nodes by letters, digits and hyphens, at most twelve"
+        table.fault("wrong-value", "edges", what, remedy)
         return ()
     if sensors is not None and len(edges) != sensors:
         what = (

@@ -47,9 +47,19 @@ window.campaign = window.campaign || {};
     return Object.keys(figure.spec.layout).filter((key) => key.startsWith("xaxis")).length;
   }
 
+  /* Panels side by side are kept so wide that their titles do not meet; the figure scrolls where a page is narrower. */
+  function leastWidth(figure) {
+    if (panelCount(figure) < 2) return 0;
+    const layout = figure.spec.layout;
+    const across = Object.keys(layout).filter((key) => key.startsWith("xaxis"));
+    const columns = new Set(across.map((key) => (layout[key].domain || [0])[0])).size;
+    const titles = (layout.annotations || []).filter((note) => note.align);
+    const longest = Math.max(0, ...titles.flatMap((note) => note.text.split("<br>").map((line) => line.length)));
+    return Math.max(544, Math.min(840, 88 + columns * (7.2 * longest + 10)));
+  }
+
   function width(figure) {
-    const least = panelCount(figure) > 1 ? 544 : 0;
-    return Math.max(figure.plot.clientWidth, least);
+    return Math.max(figure.plot.clientWidth, leastWidth(figure));
   }
 
   function markedTraces(traces) {

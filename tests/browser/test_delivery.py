@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import re
 import zipfile
 from pathlib import Path
@@ -36,19 +37,61 @@ def make_all_live(browser: Chrome) -> int:
     return len(figures)
 
 
-@pytest.mark.parametrize(("width", "scheme"), [(390, "dark"), (1440, "light")])
-def test_axe_finds_nothing_once_all_figures_live(
-    browser: Chrome, site: Path, width: int, scheme: str
-) -> None:
-    emulate(browser, prefers_color_scheme=scheme)
+CONTRAST = {"type": "rule", "values": ["color-contrast", "link-in-text-block"]}
+"""Rules that a scheme changes; the others depend on the page's width at most."""
+WIDTHS, SCHEMES = (1440, 390), ("light", "dark")
+
+
+def seen_as(browser: Chrome, width: int, scheme: str, media: str = "") -> None:
+    """Show the open page at a width, in a scheme, on the screen or on paper."""
+    features = [{"name": "prefers-color-scheme", "value": scheme}]
+    browser.execute_cdp_cmd("Emulation.setEmulatedMedia", {"media": media, "features": features})
     size = {"width": width, "height": 1000, "deviceScaleFactor": 1, "mobile": width < 500}
     browser.execute_cdp_cmd("Emulation.setDeviceMetricsOverride", size)
+
+
+def redrawn(browser: Chrome) -> None:
+    """Wait until figures have been drawn again after a change of width or scheme."""
+    wanted = "getComputedStyle(document.documentElement).getPropertyValue('--c-0072b2').trim() || '#0072b2'"
+    script = f"""return [...document.querySelectorAll('.live')].every(l => !l.data ||
+        JSON.stringify(l.data).indexOf('#0072b2') < 0 || {wanted} === '#0072b2')"""
+    wait_for(lambda: browser.execute_script(script), "figures in the colours of the scheme")
+
+
+def test_axe_finds_nothing_on_live_pages_in_both_schemes(browser: Chrome, site: Path) -> None:
+    """Every kind of page by every rule, and by contrast in the other scheme; the widths take turns."""
     found = {}
-    for name in kinds(site):
+    for turn, name in enumerate(kinds(site)):
+        width, scheme, other = WIDTHS[turn % 2], SCHEMES[turn // 2 % 2], SCHEMES[1 - turn // 2 % 2]
+        seen_as(browser, width, scheme)
         browser.get(address(site / name))
         make_all_live(browser)
         if violations := axe_violations(browser):
-            found[name] = violations
+            found[f"{name} {width} {scheme}"] = violations
+        seen_as(browser, width, other)
+        redrawn(browser)
+        if violations := axe_violations(browser, runOnly=CONTRAST):
+            found[f"{name} {width} {other}"] = violations
+    assert found == {}
+
+
+def test_axe_finds_nothing_without_scripts_at_the_other_width_and_on_paper(
+    browser: Chrome, site: Path
+) -> None:
+    found = {}
+    for turn, name in enumerate(kinds(site)):
+        width, scheme = WIDTHS[1 - turn % 2], SCHEMES[turn // 2 % 2]
+        browser.execute_cdp_cmd("Emulation.setScriptExecutionDisabled", {"value": True})
+        seen_as(browser, width, scheme)
+        browser.get(address(site / name))
+        browser.execute_cdp_cmd("Emulation.setScriptExecutionDisabled", {"value": False})
+        assert browser.find_elements(By.CSS_SELECTOR, ".tools button") == []
+        if violations := axe_violations(browser):
+            found[f"{name} {width} {scheme}"] = violations
+        for what, media in (("the other scheme", ""), ("paper", "print")):
+            seen_as(browser, width, SCHEMES[1 - turn // 2 % 2], media)
+            if violations := axe_violations(browser, runOnly=CONTRAST):
+                found[f"{name} {width} {what}"] = violations
     assert found == {}
 
 
@@ -161,3 +204,64 @@ def test_pages_load_classic_scripts_beside_them_and_nothing_else(site: Path) -> 
             target = re.search(r'(?:src|href)="([^"]*)"', tag)
             assert target is not None
             assert target[1] == "data:," or (site / target[1]).is_file(), (path.name, tag)
+
+
+def test_every_column_of_every_table_has_a_meaning(site: Path) -> None:
+    package = json.loads((site / "tables" / "schema.json").read_text("utf-8"))
+    fields = [(r["name"], field) for r in package["resources"] for field in r["schema"]["fields"]]
+    assert len(fields) > 800
+    assert [(table, field["name"]) for table, field in fields if not field.get("description")] == []
+
+
+UNIT_OF_ENDING = {
+    "_percent_fso": "%FSO",
+    "_mm": "mm",
+    "_mm2": "mm²",
+    "_kpa": "kPa",
+    "_per_s": "1/s",
+    "_range_k": "K",
+    "_time_s": "s",
+    "_per_decade": "%FSO per decade",
+}
+
+
+def test_a_column_whose_name_ends_in_a_unit_has_that_unit(site: Path) -> None:
+    package = json.loads((site / "tables" / "schema.json").read_text("utf-8"))
+    fields = [field for r in package["resources"] for field in r["schema"]["fields"]]
+    units = {f["name"]: f.get("unit", "") for f in fields if f["name"] not in SIGNALS_OWN_UNIT}
+    for ending, unit in UNIT_OF_ENDING.items():
+        named = {name: found for name, found in units.items() if name.endswith(ending)}
+        assert named, ending
+        assert {name: found for name, found in named.items() if found != unit} == {}
+
+
+SIGNALS_OWN_UNIT = {"drift_per_s", "per_kpa", "strain_error_per_kpa"}
+"""Columns per second and per kilopascal whose unit has that of the signal, or strain, before it."""
+
+
+def test_a_tall_figure_and_its_caption_share_a_sheet_and_heads_repeat(browser: Chrome, site: Path) -> None:
+    browser.get(address(site / "calibration.html"))
+    make_all_live(browser)
+    seen_as(browser, 700, "light", "print")
+    heights = browser.execute_script(
+        "return [...document.querySelectorAll('.plot > svg')].map(s => s.getBoundingClientRect().height)"
+    )
+    assert 0 < max(heights) <= 205 / 25.4 * 96 + 1
+    buttons = browser.find_elements(By.CSS_SELECTOR, "th button")
+    assert {button.value_of_css_property("display") for button in buttons} == {"contents"}
+
+
+def test_titles_of_panels_do_not_meet_on_a_telephone(browser: Chrome, site: Path) -> None:
+    seen_as(browser, 390, "light")
+    browser.get(address(site / "calibration.html"))
+    make_all_live(browser)
+    titles = browser.execute_script(
+        """return [...document.querySelectorAll('.live .annotation-text')].map(e => {
+             const box = e.getBoundingClientRect();
+             return [box.left, box.right, box.top + scrollY, e.textContent];
+           })"""
+    )
+    assert len(titles) > 14
+    for left, right, top, words in titles:
+        beside = [t for t in titles if t[0] > left and abs(t[2] - top) < 2 and t[0] < right]
+        assert beside == [], words

@@ -11,7 +11,9 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from campaign.analyses.results import CampaignResults
 from campaign.pages.latex_tables import LONG_FROM, MOST_ROWS, escaped, latex_table
+from campaign.pages.page import Page
 from campaign.pages.tables import Column, Table
 
 COMMAND = re.compile(r"\\[A-Za-z]+(?:\{\}|\{0\})?|\\[\\{}$&#_%,]")
@@ -45,6 +47,7 @@ def test_a_table_has_its_rules_heads_with_units_and_rounded_rows() -> None:
         r"\centering",
         r"\caption{Lines of 100 \% of sensors.}",
         r"\label{tab:toy-lines}",
+        r"\scriptsize\setlength{\tabcolsep}{3pt}",
         r"\begin{tabular}{lrr}",
         r"\toprule",
         r"Module & Slope (pF per \%) & Slope \\",
@@ -113,3 +116,63 @@ def test_a_cell_that_begins_with_a_bracket_is_no_argument_of_the_row_before() ->
     text = latex_table(Table("b", "B.", frame, (Column("x", "x", kind="text"),)))
     assert "{}[1, 2] \\\\" in text
     assert "{}* \\\\" in text
+
+
+def cells_of(row: str) -> list[str]:
+    return re.split(r"(?<!\\)&", row.removesuffix(r" \\"))
+
+
+def test_heads_are_broken_to_the_width_of_their_columns_and_units_have_a_line() -> None:
+    frame = pd.DataFrame({"p": [0.01, 0.2], "module": ["M1", "M2"]})
+    columns = (Column("p", "Probability that it is kept", "%"), Column("module", "Module", kind="text"))
+    lines = latex_table(Table("t", "T.", frame, columns)).splitlines()
+    heads = [cells_of(line) for line in lines[lines.index(r"\toprule") + 1 : lines.index(r"\midrule")]]
+    assert [head[0].strip() for head in heads] == ["Probability", "that it", "is kept", r"(\%)"]
+    assert [head[1].strip() for head in heads] == ["", "", "", "Module"]
+
+
+def test_long_texts_become_paragraphs_and_letters_smaller_until_the_table_fits() -> None:
+    words = "a sentence that goes on for longer than any column of a table should be " * 2
+    frame = pd.DataFrame({"what": [words] * 3, "done": [words] * 3, "n": [1, 2, 3]})
+    columns = (
+        Column("what", "What was found", kind="text"),
+        Column("done", "What was done", kind="text"),
+        Column("n", "n", kind="integer"),
+    )
+    text = latex_table(Table("t", "T.", frame, columns))
+    widths = [float(w) for w in re.findall(r">\{\\raggedright\\arraybackslash\}p\{([\d.]+)em\}", text)]
+    assert len(widths) == 2
+    # 345 pt of scriptsize letters (7 pt): fifty em, less what the third column and the spaces take
+    assert sum(widths) < 345 / 7 - 4
+    assert r"\usepackage{array}" in text
+    assert r"\scriptsize" in text
+    assert "Wider than a page" not in text
+
+
+def test_a_table_of_too_many_columns_says_that_it_is_too_wide() -> None:
+    frame = pd.DataFrame({f"c{k}": [123.456] for k in range(24)})
+    columns = tuple(Column(f"c{k}", f"Column {k}", digits=6) for k in range(24))
+    assert "% Wider than a page of article" in latex_table(Table("t", "T.", frame, columns))
+
+
+def test_every_table_of_a_site_is_whole_latex_of_letters_that_any_engine_knows(
+    small_campaign_pages: tuple[CampaignResults, list[Page]],
+) -> None:
+    """What compiling them with pdfTeX showed (DEVELOPERS.md), kept without TeX."""
+    tables = [table for page in small_campaign_pages[1] for table in page.tables]
+    assert len(tables) > 30
+    for table in tables:
+        text = latex_table(table)
+        assert text.isascii(), (table.name, sorted(set(re.findall(r"[^\x00-\x7f]", text))))
+        columns = re.search(r"\\begin\{(?:tabular|longtable)\}\{(.*)\}$", text, re.MULTILINE)
+        assert columns is not None
+        kinds = re.sub(r">\{\\raggedright\\arraybackslash\}p\{[\d.]+em\}", "l", columns[1])
+        assert re.fullmatch(r"[lr]+", kinds)
+        rows = [line for line in text.splitlines() if line.endswith(r" \\")]
+        assert {len(cells_of(row)) for row in rows} == {len(kinds)}, table.name
+        body = re.sub(r"\\[\\{}$&#_%]", "", re.sub(r"(?m)^%.*$", "", text))
+        assert body.count("{") == body.count("}")
+        assert body.count("$") % 2 == 0
+        opened = re.findall(r"\\(begin|end)\{(\w+)\}", body)
+        assert [n for w, n in opened if w == "begin"] == [n for w, n in opened if w == "end"][::-1]
+        assert text.count(r"\begingroup") == text.count(r"\endgroup") == text.count(r"\begin{longtable}")

@@ -33,6 +33,19 @@ def test_marks_of_generations_stand_out_in_both_schemes(style: palette.Generatio
     assert palette.contrast(palette.DARK[style.colour], palette.DARK[ground]) >= MARK
 
 
+def test_text_and_marks_stand_out_on_paper() -> None:
+    """Print has the light colours on white (css/print.css); the dark scheme is for screens alone."""
+    white = "#ffffff"
+    for colour in (palette.INK, palette.SOFT, palette.LINK, palette.ATTENTION):
+        assert palette.contrast(colour, white) >= TEXT
+    for style in palette.GENERATION_STYLES:
+        assert palette.contrast(style.colour, white) >= MARK
+    assert palette.contrast(palette.RAMP[-1], white) >= MARK
+    assert colours_css().count("prefers-color-scheme") == colours_css().count(
+        "@media screen and (prefers-color-scheme: dark)"
+    )
+
+
 def test_generations_differ_by_shape_and_dash_too() -> None:
     assert len({style.symbol for style in palette.GENERATION_STYLES}) == len(palette.GENERATION_STYLES)
     assert len({style.dash for style in palette.GENERATION_STYLES}) == len(palette.GENERATION_STYLES)

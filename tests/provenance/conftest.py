@@ -43,6 +43,7 @@ def write_whole_campaign(home: Path) -> Path:
         "protocol.md": b"# Protocol\n",
         "notes/stand.md": "# The stand\n\nPictures of 名前.\n".encode(),
         "photos/名前 ü.bin": bytes(range(256)),
+        "protocol 12:30 | really?.txt": b"A name that one system in three does not take.\n",
     }.items():
         (folder / name).parent.mkdir(exist_ok=True)
         (folder / name).write_bytes(content)

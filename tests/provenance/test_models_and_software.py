@@ -109,6 +109,38 @@ def test_the_design_table_alone_gives_the_sealed_criterion(unpacked: Path) -> No
         np.testing.assert_allclose(fit.coefficient_covariance, stored, rtol=1e-4, atol=1e-7)
 
 
+FORMULA = re.compile(
+    r"lmer\(y ~ 0 \+ (?P<means>f\d+(?: \+ f\d+)*)"
+    r"\n     \+ (?P<bars>\((?:1|1 \+ z|0 \+ \w+) \| \w+\)(?: \+ \((?:1|1 \+ z|0 \+ \w+) \| \w+\))*),"
+    r"\n     data = design, REML = TRUE\)"
+)
+"""A call of lme4 as MODEL.md writes it. DEVELOPERS.md says how such calls were run in R."""
+
+
+def test_every_call_of_lme4_is_whole_and_names_columns_that_are_there(unpacked: Path) -> None:
+    data = unpacked / "data"
+    text = (data / "MODEL.md").read_text("utf-8")
+    sections = [part for part in text.split("\n## ") if "```r\n" in part]
+    assert len(sections) >= 2
+    for section in sections:
+        place = re.search(r"Files: `model/(.+)/`", section)
+        call = re.search(r"```r\n(.*?)\n```", section, re.DOTALL)
+        assert place is not None
+        assert call is not None
+        formula = FORMULA.fullmatch(call[1])
+        assert formula is not None, call[1]
+        design = design_of(data / "model" / place[1])
+        means = formula["means"].split(" + ")
+        assert means == [name for name in design if re.fullmatch(r"f\d+", name)]
+        for bar, unit in re.findall(r"\(([^|]+) \| (\w+)\)", formula["bars"]):
+            assert unit in design
+            assert set(bar.split(" + ")) - {"0", "1"} <= set(design.columns)
+            # as many units as rows would leave nothing to tell the effect from the residual
+            assert 1 < design[unit].nunique() < len(design)
+        assert np.linalg.matrix_rank(design[means].to_numpy(float)) == len(means)
+        assert np.isfinite(design.select_dtypes("number").to_numpy()).all()
+
+
 def test_design_rows_are_rows_of_the_table_of_readings(unpacked: Path) -> None:
     data = unpacked / "data"
     design = design_of(next((data / "model").glob("*-signal")))

@@ -12,6 +12,7 @@ import sys
 import warnings
 import zipfile
 from pathlib import Path
+from types import SimpleNamespace
 from urllib.parse import unquote
 
 import bagit
@@ -26,7 +27,7 @@ from campaign.cli import main
 from campaign.notices import CampaignStops
 from campaign.provenance.bag import bag_files, check_bag, manifest_text, read_info, read_manifest
 from campaign.provenance.ro_crate import described_paths
-from campaign.provenance.sealing import Sealed, places_of_campaigns, write_sealed
+from campaign.provenance.sealing import Sealed, earlier_not_followed, places_of_campaigns, write_sealed
 from tests.provenance.conftest import write_whole_campaign
 
 CFF_SCHEMA = Path(__file__).parents[1] / "reference" / "citation_file_format" / "schema.json"
@@ -71,6 +72,9 @@ def test_the_archive_is_the_same_to_the_byte_sealed_elsewhere_by_its_own_wheel(
         command, cwd=tmp_path, env=environment, check=True, capture_output=True, text=True, umask=0o077
     )
     assert sha512_of(again) in done.stdout
+    # its own folder lies as deep as the farthest climb to an earlier campaign
+    assert "name-not-for-windows (1)" in done.stdout
+    assert "up/this_campaign/protocol 12:30 | really?.txt" in done.stdout
     with zipfile.ZipFile(sealed) as one, zipfile.ZipFile(again) as other:
         assert [i.filename for i in one.infolist()] == [i.filename for i in other.infolist()]
         assert [n for n in one.namelist() if one.read(n) != other.read(n)] == []
@@ -334,6 +338,17 @@ def test_earlier_campaigns_that_are_missing_are_noted_and_absolute_names_stop(tm
     for named in ("/data/2024", "C:\\data", "..\\2024", "C:/data"):
         with pytest.raises(CampaignStops, match="means nothing on another machine"):
             places_of_campaigns(tmp_path, ({"folder": named},))
+
+
+def test_earlier_campaigns_of_an_earlier_campaign_are_told_of() -> None:
+    earlier = [
+        SimpleNamespace(where="../one", names_others=True),
+        SimpleNamespace(where="b", names_others=False),
+    ]
+    (told,) = earlier_not_followed(SimpleNamespace(earlier=earlier))  # type: ignore[arg-type]
+    assert (told.code, told.weight) == ("earlier-not-sealed", "noted")
+    assert "'../one' names earlier campaigns of its own" in told.what
+    assert told.done == "the archive does not hold those"
 
 
 def test_a_bag_is_checked_by_its_own_rules(tmp_path: Path) -> None:
