@@ -11,9 +11,10 @@ from campaign.pages.kept_pages import PageFiles
 from campaign.pages.module import module_page
 from campaign.pages.module_share import AllModules, ModuleShare, all_modules, module_shares
 from campaign.pages.page import Page
-from campaign.pages.render import RenderingTask, pages_as_marked, render_pages, templates_folder
+from campaign.pages.render import RenderingTask, pages_as_marked, render_pages
 from campaign.pages.sensor import sensor_pages
 from campaign.pages.skin_map import SkinMap
+from campaign.pages.templates import templates_folder
 from campaign.workers.sharing import Work, share_out
 from campaign.workers.workshop import Workshop
 
