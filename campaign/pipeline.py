@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
+from functools import cache, partial
 from pathlib import Path
 
 from campaign.analyses.budget import analyse_budget
@@ -13,7 +14,7 @@ from campaign.analyses.calibration_effort import analyse_calibration_effort
 from campaign.analyses.drift import Drift, analyse_drift
 from campaign.analyses.drift_findings import drift_findings
 from campaign.analyses.earlier import Joined, sources_of
-from campaign.analyses.endurance import analyse_endurance
+from campaign.analyses.endurance import Endurance, analyse_endurance
 from campaign.analyses.findings import collect_findings
 from campaign.analyses.generation_design import confounded_between, confounded_within, order_of_generations
 from campaign.analyses.generation_figures import Comparable, comparable_figures
@@ -21,7 +22,7 @@ from campaign.analyses.generation_findings import generation_findings
 from campaign.analyses.generations import Generations, compare_generations
 from campaign.analyses.hysteresis import Hysteresis, analyse_hysteresis
 from campaign.analyses.influence_findings import influence_findings
-from campaign.analyses.influences import analyse_influences
+from campaign.analyses.influences import Influences, analyse_influences
 from campaign.analyses.layout import analyse_layout
 from campaign.analyses.layout_findings import layout_findings
 from campaign.analyses.limits import judge_limits
@@ -54,6 +55,7 @@ from campaign.trials.endurance import EnduranceFeatures
 from campaign.trials.hold import HoldFeatures
 from campaign.trials.layout import LayoutFeatures
 from campaign.trials.sweeps import SweepFeatures
+from campaign.workers.crew import ThisProcess
 from campaign.workers.workshop import Workshop
 
 
@@ -239,22 +241,15 @@ def analyse(
         if read.readings_with_put_back is not None:
             put_back = calibrate(read.readings_with_put_back, intake, workshop)
         tell("analyses", 1, 4)
-        variance = analyse_variance(calibration, description, workshop)
+    without_spread = cache(partial(_without_spread, read, calibration, put_back, workshop or Workshop()))
+    if calibration is not None:
+        variance = analyse_variance(calibration, description, workshop, meanwhile=without_spread)
         tell("analyses", 2, 4)
         residuals = analyse_residuals(calibration, variance)
         effort = analyse_calibration_effort(calibration, variance, description, workshop)
         tell("analyses", 3, 4)
     rehearsal = compare_with_plan(description, variance)
-    hysteresis = analyse_hysteresis(read.of_type(CyclicFeatures), calibration)
-    endurance = analyse_endurance(read.of_type(EnduranceFeatures).values())
-    drift = analyse_drift(read.of_type(HoldFeatures), calibration, description, workshop)
-    sweeps = read.of_type(SweepFeatures)
-    cycled, laid_out = read.of_type(CyclicFeatures).values(), read.of_type(LayoutFeatures).values()
-    logged = [(f.identity, f.logged) for f in cycled if f.logged is not None]
-    logged += [(f.identity, f.logged) for f in laid_out if f.logged is not None]
-    pressure = analyse_pressure(sweeps, calibration, description, logged)
-    influences = analyse_influences(sweeps, calibration, description)
-    back = analyse_put_back(read, put_back or calibration, workshop)
+    hysteresis, drift, pressure, influences, endurance, back = without_spread()
     others = [found for found in (hysteresis, drift, pressure) if found is not None]
     readings = read.readings
     if not len(readings.table) and others:
@@ -334,6 +329,25 @@ def analyse(
         planning=planning,
         earlier=joined.campaigns,
         rehearsal=rehearsal,
+    )
+
+
+def _without_spread(
+    read: CampaignRead, calibration: Calibration | None, put_back: Calibration | None, workshop: Workshop
+) -> tuple[Hysteresis | None, Drift | None, Pressure | None, Influences | None, Endurance | None, PutBack]:
+    """Run the analyses that need no fit of the nested model: this process does them while others fit it."""
+    description, alone = read.intake.description, replace(workshop, crew=ThisProcess())
+    sweeps = read.of_type(SweepFeatures)
+    cycled, laid_out = read.of_type(CyclicFeatures).values(), read.of_type(LayoutFeatures).values()
+    logged = [(f.identity, f.logged) for f in cycled if f.logged is not None]
+    logged += [(f.identity, f.logged) for f in laid_out if f.logged is not None]
+    return (
+        analyse_hysteresis(read.of_type(CyclicFeatures), calibration),
+        analyse_drift(read.of_type(HoldFeatures), calibration, description, alone),
+        analyse_pressure(sweeps, calibration, description, logged),
+        analyse_influences(sweeps, calibration, description),
+        analyse_endurance(read.of_type(EnduranceFeatures).values()),
+        analyse_put_back(read, put_back or calibration, alone),
     )
 
 

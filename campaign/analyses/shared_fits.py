@@ -7,7 +7,7 @@ and when.
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Mapping, Sequence
 from dataclasses import dataclass, replace
 from typing import cast
 
@@ -60,9 +60,14 @@ Outcome = CheckedFit | str
 """A fit, or why there is none."""
 
 
-def fit_all(tasks: Sequence[FitTask], workshop: Workshop) -> list[Outcome]:
-    """Fit every task and return its outcome, in order."""
-    outcomes = do_all(fit_task, [_bare(task) for task in tasks], workshop, _are_worth_sharing)
+def fit_all(
+    tasks: Sequence[FitTask], workshop: Workshop, meanwhile: Callable[[], object] | None = None
+) -> list[Outcome]:
+    """Fit every task and return its outcome, in order.
+
+    *meanwhile* is what this process does, once, while others fit (:func:`.shared_work.do_all`).
+    """
+    outcomes = do_all(fit_task, [_bare(task) for task in tasks], workshop, _are_worth_sharing, meanwhile)
     return [
         outcome if isinstance(outcome, str) else replace(outcome, fit=_with_data(outcome.fit, task.model))
         for task, outcome in zip(tasks, outcomes, strict=True)

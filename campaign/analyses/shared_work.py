@@ -2,17 +2,20 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from typing import TypeVar, cast
 
 from campaign.keeping.program import digest_of, program_digest
 from campaign.keeping.value_codec import encode
 from campaign.workers.crew import LocalProcesses, ThisProcess
-from campaign.workers.sharing import Work, share_out
+from campaign.workers.sharing import IN_HAND, Work, share_out
 from campaign.workers.workshop import Workshop
 
 T = TypeVar("T")
 R = TypeVar("R")
+
+ALL_IN_HAND = 1000
+"""Tasks in hand, a worker, where this process does something else meanwhile: all of them."""
 
 
 def do_all(
@@ -20,6 +23,7 @@ def do_all(
     tasks: Sequence[T],
     workshop: Workshop,
     worth: Callable[[list[T]], bool],
+    meanwhile: Callable[[], object] | None = None,
 ) -> list[R]:
     """Return the result of every task, in order.
 
@@ -35,6 +39,8 @@ def do_all(
     worth
         Whether sharing out the tasks that nobody has done yet is faster than doing them here. Processes of
         this machine may share them; a cluster reads only.
+    meanwhile
+        What this process does, once, while others work: after all tasks are handed over.
     """
     keys = [_key(function, task) for task in tasks] if workshop.store.is_open else []
     kept = workshop.store.get_many(keys)
@@ -42,13 +48,21 @@ def do_all(
     wanted = [task for task, found in zip(tasks, known, strict=True) if found is None]
     shared = isinstance(workshop.crew, LocalProcesses) and worth(wanted)
     work: Work[T, R] = Work(function, lambda task: (task,), function)
-    made = iter([result for (result,) in share_out(work, wanted, workshop.crew if shared else ThisProcess())])
+    crew = workshop.crew if shared else ThisProcess()
+    tasks_in_hand = IN_HAND if meanwhile is None else ALL_IN_HAND
+    given = _given(wanted, meanwhile or (lambda: None))
+    made = iter([result for (result,) in share_out(work, given, crew, tasks_in_hand)])
     results = [cast(R, found) if found is not None else next(made) for found in known]
     if keys:
         for key, found, result in zip(keys, known, results, strict=True):
             if found is None:
                 workshop.store.put(key, result)
     return results
+
+
+def _given(tasks: Sequence[T], then: Callable[[], object]) -> Iterator[T]:
+    yield from tasks
+    then()
 
 
 def keep(function: Callable[[T], tuple[R]], task: T, workshop: Workshop) -> R:

@@ -8,7 +8,7 @@ once pooled, on the signal and on its ratio to the session's zero signal.
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
@@ -144,7 +144,10 @@ def _single(fits: tuple[GenerationFit, ...]) -> tuple[GenerationFit, ...]:
 
 
 def analyse_variance(
-    calibration: Calibration, description: Description, workshop: Workshop | None = None
+    calibration: Calibration,
+    description: Description,
+    workshop: Workshop | None = None,
+    meanwhile: Callable[[], object] | None = None,
 ) -> Variance:
     """Fit the nested model to the used readings of a campaign.
 
@@ -156,13 +159,15 @@ def analyse_variance(
         The rated range.
     workshop
         Who fits, and what earlier runs fitted; this process alone where ``None``.
+    meanwhile
+        What this process does while others fit; not done where there is nothing to fit.
 
     Returns
     -------
     Variance
         Empty tables with a notice where nothing can be fitted.
     """
-    return variance_of_readings(calibration.readings, calibration.reference, description, workshop)
+    return variance_of_readings(calibration.readings, calibration.reference, description, workshop, meanwhile)
 
 
 def variance_of_readings(
@@ -170,6 +175,7 @@ def variance_of_readings(
     reference: ReferenceQuantity,
     description: Description,
     workshop: Workshop | None = None,
+    meanwhile: Callable[[], object] | None = None,
 ) -> Variance:
     """Fit the nested model to the used rows of a table of readings.
 
@@ -183,6 +189,8 @@ def variance_of_readings(
         The rated range.
     workshop
         Who fits, and what earlier runs fitted; this process alone where ``None``.
+    meanwhile
+        What this process does while others fit; not done where there is nothing to fit.
     """
     notices: list[Notice] = []
     kept, settling = fitted_readings(readings, notices)
@@ -193,7 +201,7 @@ def variance_of_readings(
     of_ratios: list[Notice] = []
     others = ratio_models(kept, places, of_ratios)
     units = str(kept["unit"].iloc[0]), reference.unit
-    outcomes = _outcomes(models, others, places, units, workshop or Workshop())
+    outcomes = _outcomes(models, others, places, units, workshop or Workshop(), meanwhile)
     found = tuple(_fits_of(models, outcomes[: len(models)], SIGNAL, notices))
     if not found:
         return replace(_nothing(reference, notices), identifiability=frames.identifiability(models, ()))
@@ -315,6 +323,7 @@ def _outcomes(
     places: dict[str, float],
     units: tuple[str, str],
     workshop: Workshop,
+    meanwhile: Callable[[], object] | None,
 ) -> list[Outcome | None]:
     """Fit all models together; ``None`` for those that tell no component from another."""
     both = [*((model, SIGNAL) for model in models), *((model, "ratio") for model in ratio_models)]
@@ -323,7 +332,7 @@ def _outcomes(
         for model, what in both
         if model.terms
     ]
-    fitted = iter(fit_all(tasks, workshop))
+    fitted = iter(fit_all(tasks, workshop, meanwhile))
     return [next(fitted) if model.terms else None for model, _ in both]
 
 

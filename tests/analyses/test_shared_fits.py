@@ -99,3 +99,13 @@ def test_kept_fits_of_holds_are_those_that_were_made(tmp_path: Path) -> None:
     assert again is not None
     assert again.best.name == "logarithmic"
     assert fits_from_bare(bare_fits(None)) is None
+
+
+def test_what_is_done_meanwhile_is_done_once_and_changes_nothing(tasks: list[FitTask], tmp_path: Path) -> None:
+    alone = as_bytes(fit_all(tasks, Workshop()))
+    done: list[str] = []
+    with open_store(tmp_path / "kept.sqlite") as store:
+        assert as_bytes(fit_all(tasks, Workshop(store=store), lambda: done.append("fresh"))) == alone
+        assert as_bytes(fit_all(tasks, Workshop(store=store), lambda: done.append("kept"))) == alone
+        assert fit_all([], Workshop(store=store), lambda: done.append("nothing to fit")) == []
+    assert done == ["fresh", "kept", "nothing to fit"]
