@@ -136,7 +136,7 @@ def _pooled_correlation(residuals: FloatArray, counts: IntArray, removed: int) -
     lines the lags are those of the uncorrected sequence: what is put back would lengthen it without end.
     """
     every = (_whole_median(counts) // 2 if len(counts) else 0) + 1
-    if every < 2 or not np.any(residuals):
+    if every < 2 or not np.any(residuals * residuals):  # none, or too small to be squared
         return np.ones(1)
     sums, lags = np.zeros(0), FEW_LAGS
     apart = _apart(residuals, counts)

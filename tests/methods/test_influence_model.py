@@ -6,7 +6,7 @@ import math
 
 import numpy as np
 import pytest
-from hypothesis import given, settings
+from hypothesis import example, given, settings
 from hypothesis import strategies as st
 from scipy import stats
 
@@ -47,6 +47,7 @@ def up_and_down(points=12, top=20.0):
 
 
 @given(COEFFICIENT, COEFFICIENT, COEFFICIENT, COEFFICIENT)
+@example(0.0, 1.0, 2.4e-220, 0.0)  # what is left of the samples is too small to be squared
 @settings(deadline=None)
 def test_without_noise_the_model_is_found_exactly(a, b, c, d):
     lengths = np.array([0.0, 0.1, 0.3, 0.4])
