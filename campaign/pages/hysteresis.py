@@ -156,8 +156,8 @@ def widest_figure(found: Hysteresis) -> Figure | None:
         sensor,
         "Loops of one sensor at a time, as recorded; the widest of the campaign is drawn first, "
         f"that of {module} {sensor}.",
-        note="The first cycle of each run stands out; the first settled one and the last follow, paler to "
-        f"deeper.{more} Outlines are thinned with the extremes of both axes kept.",
+        note="The first cycle of each run stands out; the first settled one and the last follow, fainter "
+        f"to stronger.{more} Outlines are thinned with the extremes of both axes kept.",
     )
 
 

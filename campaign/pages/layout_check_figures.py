@@ -185,13 +185,13 @@ def map_figure(maps: Sequence[AmplificationMap]) -> Figure | None:
         name="amplification",
         caption=f"Node SD per SD of a length, root mean square over the nodes: {', '.join(parts)} over all "
         "shapes that the calibrated range reaches.",
-        alternative="Squares in a grid of stretch against shear, the deeper the more the geometry amplifies "
-        "errors of lengths; the smallest and the largest value stand beside theirs.",
+        alternative="Squares in a grid of stretch against shear, standing out the more the geometry "
+        "amplifies errors of lengths; the smallest and the largest value stand beside theirs.",
         traces=tuple(traces),
         layout=made,
         data=pd.concat([_map_rows(found) for found in known], ignore_index=True),
-        note="After best rigid fit, lengths independent with equal SD. Deeper: more. Empty: a length would "
-        "leave the calibrated range.",
+        note="After best rigid fit, lengths independent with equal SD. The more a square stands out, the "
+        "larger. Empty: a length would leave the calibrated range.",
         height=150 + 270 * -(-len(known) // 2),
     )
 

@@ -66,7 +66,10 @@ def sensor_loops(
     return section, [drawn] if drawn is not None else []
 
 
-_NOTE = "The first cycle of each run stands out; the first settled one and the last follow, paler to deeper."
+_NOTE = (
+    "The first cycle of each run stands out; the first settled one and the last follow, fainter to "
+    "stronger."
+)
 
 
 def module_widths_figure(results: CampaignResults, module: str) -> Figure | None:
