@@ -32,7 +32,8 @@ FORMULAS: dict[str, str] = {
     "lack_of_fit": r"F=\frac{\text{MS}(\text{level})}{\text{MS}(\text{level}\times\text{run})}",
     "quadratic": r"y=a+b\,x+q\,(x-\bar x)^2+e",
     "repeatability": r"s_r^2=\frac{\sum_{k}\sum_{r}(y_{kr}-\bar y_{k})^2}{\sum_{k}(R_k-1)}",
-    "hysteresis": r"h_k=\overline{y^{\text{rising}}_k-y^{\text{falling}}_k},\qquad "
+    "hysteresis": r"h_k=\frac{1}{R_k}\sum_{r}\left(y^{\text{rising}}_{kr}-y^{\text{falling}}_{kr}\right),"
+    r"\qquad "
     r"h_k\pm c\,u(h_k)\quad\text{for all levels}\ k\ \text{together}",
     "inverse": r"\hat x=\frac{y-a}{b}",
     "inverse_limits": r"(y-a-b\,x)^2=t^2\left[V_a+2xV_{ab}+x^2V_b+\left(v_0+2xc+x^2v_1\right)"
