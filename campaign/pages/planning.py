@@ -172,7 +172,7 @@ def half_width_figure(planning: Planning) -> Figure:
     for (words, _, rows), style in zip(variants, palette.GENERATION_STYLES, strict=False):
         text = [
             f"{numbers.count(int(m), 'module')} a generation, {words}: "
-            f"± {numbers.significant(w * factor, 2, unit)}"
+            f"±{numbers.significant(w * factor, 2, unit)}"
             for m, w in zip(rows["modules"], rows["difference_half_width"], strict=True)
         ]
         values = rows["difference_half_width"] * factor
@@ -237,7 +237,7 @@ def _half_width_caption(planning: Planning) -> str:
     width = numbers.significant(present.half_width * reference.shown_factor, 2, reference.shown_unit)
     return (
         f"A design like this one ({numbers.count(present.design.modules, 'module')} a generation) tells two "
-        f"generations apart to ± {width} (95 %); more modules narrow it fastest."
+        f"generations apart to ±{width} (95 %); more modules narrow it fastest."
     )
 
 

@@ -112,7 +112,7 @@
     const d = found.design;
     const width = digits(found.width * data.factor, 2) + NARROW + data.unit;
     return d.modules + " modules a generation, " + d.sensors + " sensors each, " + d.sessions + " × " +
-      d.repetitions + " runs: ±" + NARROW + width + " for " + digits(found.cost, 3);
+      d.repetitions + " runs: ±" + width + " for " + digits(found.cost, 3);
   }
 
   function prices() {
@@ -130,12 +130,12 @@
     const difference = number("difference", 0) / data.factor;
     const widths = [value.estimate, value.low, value.high].map((v) => halfWidth(data, v, design.modules) * data.factor);
     const ends = Number.isFinite(widths[1]) && Number.isFinite(widths[2]);
-    say("half-width", "±" + NARROW + digits(widths[0], 2) + NARROW + data.unit +
-      (ends ? " (±" + NARROW + digits(widths[1], 2) + " to ±" + NARROW + digits(widths[2], 2) + " as components go)" : ""));
+    say("half-width", "±" + digits(widths[0], 2) + NARROW + data.unit +
+      (ends ? " (±" + digits(widths[1], 2) + " to ±" + digits(widths[2], 2) + " as components go)" : ""));
     const powers = [value.estimate, value.high, value.low].map((v) => power(data, difference, v, design.modules));
     say("power", share(powers[0]) + (ends ? " (" + share(powers[1]) + " to " + share(powers[2]) + " as components go)" : ""));
     const factors = data.sd_factors[design.modules - 2];
-    say("sd", "×" + NARROW + digits(factors[0], 2) + " to ×" + NARROW + digits(factors[1], 2));
+    say("sd", "×" + digits(factors[0], 2) + " to ×" + digits(factors[1], 2));
     const costs = prices();
     if (costs === null) {
       for (const name of ["cost", "cheapest", "best"]) say(name, "state all three costs");
