@@ -134,6 +134,6 @@ def _verdict_figures(results: CampaignResults) -> list[MapFigure]:
         own = rows[rows["limit"] == limit]
         names = zip(own["module"].astype(str), own["sensor"].astype(str), strict=True)
         verdicts = dict(zip(names, own["verdict"].astype(str), strict=True))
-        words = f"verdict on {limit.replace('_', ' ')}"
+        words = f"verdict on {limit.replace('_1h', '_in_1_h').replace('_', ' ')}"
         made.append(MapFigure(f"verdict_{limit}", words, "", {}, verdicts))
     return made

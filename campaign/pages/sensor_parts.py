@@ -297,6 +297,6 @@ def limits_as_shown(rows: pd.DataFrame, reference: ReferenceQuantity) -> pd.Data
     return rows.assign(
         **scaled,
         _verdict=[f"{verdict}{_REASONS.get(reason, '')}" for verdict, reason in verdicts],
-        _limit=[limit.replace("_", " ") for limit in limits],
+        _limit=[limit.replace("_1h", "_in_1\u00a0h").replace("_", " ") for limit in limits],
         _unit=[reference.shown_unit if shown else unit for unit, shown in units],
     )
