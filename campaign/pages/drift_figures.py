@@ -294,7 +294,8 @@ def _hold_caption(curve: HoldCurve, reference: ReferenceQuantity) -> str:
 def _held_words(curve: HoldCurve, with_samples: bool) -> str:
     """Say which samples a hold's file holds."""
     if not with_samples:
-        return f"the CSV holds every stretch; all {curve.recorded_samples:,} samples stand in the recording"
+        recorded = numbers.whole(curve.recorded_samples)
+        return f"the CSV holds every stretch; all {recorded} samples stand in the recording"
     return f"the CSV holds {_samples_words(curve)}"
 
 
@@ -302,8 +303,8 @@ def _samples_words(curve: HoldCurve) -> str:
     if len(curve.samples) == curve.recorded_samples:
         return "every sample"
     return (
-        f"{len(curve.samples):,} of {curve.recorded_samples:,} samples: the first ones, and the lowest and "
-        "highest of every short stretch after them"
+        f"{numbers.whole(len(curve.samples))} of {numbers.whole(curve.recorded_samples)} samples: the first "
+        "ones, and the lowest and highest of every short stretch after them"
     )
 
 
