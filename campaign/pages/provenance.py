@@ -50,7 +50,7 @@ def provenance_page(results: CampaignResults, tables: Sequence[Table]) -> Page:
             "campaign_checksums": CAMPAIGN_CHECKSUMS,
             "site_checksums": SITE_CHECKSUMS,
         },
-        tables=(files, *((records,) if records else ()), *((earlier,) if earlier else ())),
+        tables=(*((records,) if records else ()), files, *((earlier,) if earlier else ())),
         description="Files and their hashes, downloads, how to cite and how to verify.",
     )
 
