@@ -297,7 +297,7 @@ def module_figures(compared: Generations, earlier: Iterable[EarlierCampaign] = (
                     axes=panel(index),
                 )
             )
-    ticks = [(float(i), name) for i, name in enumerate(compared.names)]
+    ticks = [(float(i), _two_lines(name)) for i, name in enumerate(compared.names)]
     made = small_multiples(
         [_panel_title(name, frame) for name in several],
         axis("", ticks=ticks, low=-0.6, high=len(compared.names) - 0.4, tickangle=0),
@@ -326,6 +326,12 @@ def _drawn_modules(compared: Generations, earlier: Iterable[EarlierCampaign]) ->
     frame = compared.modules
     unlike = frame["figure"].isin(conditional) & frame["generation"].isin(other_range)
     return frame[frame["generation"].isin(compared.names) & ~unlike]
+
+
+def _two_lines(name: str) -> str:
+    """A generation's name in two lines where it can be parted: neighbours on a narrow axis touch otherwise."""
+    first, hyphen, rest = name.partition("-")
+    return f"{first}-\n{rest}" if hyphen else name.replace(" ", "\n", 1)
 
 
 def _panel_title(name: str, frame: pd.DataFrame) -> str:
