@@ -161,7 +161,7 @@ def influence_tables(influences: Influences | None) -> list[Table]:
                 ),
             ),
             note="In per cent: of the zero signal per kelvin for temperature; for strain across, cross-axis "
-            "sensitivity. Intervals are from: "
+            "sensitivity. Variance of sweeps: "
             f"{', '.join(sorted(set(frame['variance_source'].astype(str))))}.",
         )
     ]
