@@ -57,15 +57,20 @@ def sensor_influences(
     return SensorInfluences(tuple(lines), figures[0].name if figures else "", answer, labels), figures
 
 
-def module_pressure_figure(results: CampaignResults, module: str) -> Figure | None:
-    """Return what a kilopascal does to the sensors of one module; ``None`` where it was not measured."""
+def module_pressure_figure(
+    results: CampaignResults, module: str, generations: tuple[str, ...]
+) -> Figure | None:
+    """Return what a kilopascal does to the sensors of one module; ``None`` where it was not measured.
+
+    *generations* are all of the campaign, in the order of their colours.
+    """
     pressure = results.pressure
     if pressure is None:
         return None
     table = of_module(pressure.table, module)
     if table.empty:
         return None
-    made = sensitivity_figure(pressure, sensor_axis(table), table)
+    made = sensitivity_figure(pressure, sensor_axis(table).in_colours_of(generations), table)
     return replace(made, name="pressure") if made is not None else None
 
 

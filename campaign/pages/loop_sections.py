@@ -72,8 +72,13 @@ _NOTE = (
 )
 
 
-def module_widths_figure(results: CampaignResults, module: str) -> Figure | None:
-    """Return the settled widths of the sensors of one module; ``None`` where no loop was measured."""
+def module_widths_figure(
+    results: CampaignResults, module: str, generations: tuple[str, ...]
+) -> Figure | None:
+    """Return the settled widths of the sensors of one module; ``None`` where no loop was measured.
+
+    *generations* are all of the campaign, in the order of their colours.
+    """
     found = results.hysteresis
     if found is None:
         return None
@@ -81,7 +86,7 @@ def module_widths_figure(results: CampaignResults, module: str) -> Figure | None
     if rows.empty:
         return None
     own = replace(found, sensors=rows)
-    figure = widths_figure(own, sensor_axis(rows))
+    figure = widths_figure(own, sensor_axis(rows).in_colours_of(generations))
     return replace(figure, name="loops", table=None, data=rows)
 
 

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Hashable, Sequence
 from dataclasses import dataclass, replace
 from typing import Any
@@ -68,7 +69,10 @@ def module_page(share: ModuleShare, common: AllModules) -> Page:
             module_merits_figure(own, module, common),
             module_effects_figure(own, module, where),
         ]
-    figures += [module_widths_figure(own, module), module_pressure_figure(own, module)]
+    figures += [
+        module_widths_figure(own, module, common.generations),
+        module_pressure_figure(own, module, common.generations),
+    ]
     return Page(
         slug=slugs.module_slug(module),
         number=None,
@@ -185,6 +189,7 @@ def module_lines_figure(
             )
         )
         labels.append(label(sensor, float(ends[1]) * factor, float(fitted[1]), colour=style.colour))
+    span = float(readings["signal"].max() - readings["signal"].min())
     return Figure(
         name="lines",
         caption=f"The lines of {numbers.count(len(lines), 'sensor')} of {lines['module'].iloc[0]} with the "
@@ -194,13 +199,22 @@ def module_lines_figure(
         layout=layout(
             axis(x_title(reference), reference.shown_unit),
             axis("Signal", unit),
-            annotations=labels,
+            annotations=_apart(labels, 0.05 * span),
             margin={"r": 56},
         ),
         table="readings",
         note="Every point leads to its trial.",
         height=400,
     )
+
+
+def _apart(labels: Sequence[Layout], spacing: float) -> list[Layout]:
+    """Return the labels in order of height, moved up where they would cover each other."""
+    made: list[Layout] = []
+    for one in sorted(labels, key=lambda each: float(each["y"])):
+        lowest = made[-1]["y"] + spacing if made else -math.inf
+        made.append({**one, "y": max(one["y"], lowest)})
+    return made
 
 
 def _used_readings(results: CampaignResults, module: str) -> pd.DataFrame:

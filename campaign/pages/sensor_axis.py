@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import pandas as pd
 
@@ -54,6 +54,11 @@ class SensorAxis:
     def style(self, generation: str) -> palette.GenerationStyle:
         """Return the marks of *generation*."""
         return palette.generation_style(generation, self.generations)
+
+    def in_colours_of(self, generations: tuple[str, ...]) -> SensorAxis:
+        """Return the axis with the colours of all *generations*, where they hold those of the axis."""
+        known = set(self.generations) <= set(generations)
+        return replace(self, generations=generations) if known else self
 
 
 def sensor_axis(rows: pd.DataFrame) -> SensorAxis:
