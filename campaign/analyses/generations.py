@@ -380,8 +380,8 @@ def _mismatch_notices(refused: Iterable[tuple[str, str, str, str]]) -> Iterator[
 
 
 def _spoken(figure: str) -> str:
-    """A figure in words: ``SD sensor by level``, ``drift 1h``."""
-    words = figure.replace("_", " ")
+    """A figure in words: ``SD sensor by level``, ``drift in 1 h``."""
+    words = figure.replace("_1h", "_in_1_h").replace("_", " ")
     return f"SD {words[3:]}" if words.startswith("sd ") else words
 
 
