@@ -532,7 +532,7 @@ def _rates_table(found: Hysteresis) -> Table:
             Column("sensor", "Sensor", kind="text"),
             Column(
                 "strain_at_rest",
-                "Width at rate zero",
+                "Width at rate zero, as " + reference.name,
                 unit,
                 factor=factor,
                 interval=("strain_at_rest_low", "strain_at_rest_high"),
