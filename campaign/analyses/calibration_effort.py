@@ -22,7 +22,14 @@ from campaign.analyses.run_settling import number_runs
 from campaign.analyses.shared_work import keep
 from campaign.analyses.variance import Variance
 from campaign.analyses.variance_fit import GenerationFit
-from campaign.methods.cell_sums import CellSums, lines_without, squares_of_errors, stacked, sums_of_cells
+from campaign.methods.cell_sums import (
+    CellSums,
+    lines_without,
+    side_by_side,
+    squares_of_errors,
+    stacked,
+    sums_of_cells,
+)
 from campaign.methods.identifiability import Units, code_units
 from campaign.methods.nested_simulation import simulate_deviations
 from campaign.notices import Notice
@@ -38,6 +45,9 @@ BoolArray = npt.NDArray[np.bool_]
 
 DRAWN = 400
 """Campaigns drawn from the fitted model."""
+
+CAMPAIGNS_AT_ONCE = 50
+"""Campaigns whose errors are worked out together: what is in memory goes with them."""
 
 FAMILY_LEVEL = 0.05
 """Probability that any effort of a sound model is said to disagree (Bonferroni, a generation)."""
@@ -162,12 +172,11 @@ class Trials:
         """Whether every run has a zero reading, and x varies."""
         return bool(np.isfinite(self.zero_x).all()) and self.variance_of_x > 0
 
-    def drawn_fewer(self, campaigns: int) -> Trials:
-        """Return the observed campaign and the first of those drawn, *campaigns* together."""
-        sums = {
-            key: getattr(self, key).of_first(campaigns) for key in ("made", "read", "zeros", "zeros_read")
-        }
-        return replace(self, zero_signal=self.zero_signal[:, :campaigns], **sums)
+    def of_campaigns(self, which: slice) -> Trials:
+        """Return some of the campaigns: the first is the observed one, then those drawn."""
+        keys = ("made", "read", "zeros", "zeros_read")
+        sums = {key: getattr(self, key).of_campaigns(which) for key in keys}
+        return replace(self, zero_signal=self.zero_signal[:, which], **sums)
 
 
 def analyse_calibration_effort(
@@ -284,10 +293,12 @@ def _trials(
         own, here = np.unique(cell[rows], return_inverse=True)
         signals = _signals(fit, centre, generator)
         for mask, parts in zip(masks, sums, strict=True):
-            parts.append(sums_of_cells(here.ravel(), len(own), centred[rows], signals, mask[rows]))
+            of_both = (sums_of_cells(here.ravel(), len(own), centred[rows], s, mask[rows]) for s in signals)
+            parts.append(side_by_side(*of_both))
         known = own[zero_row[first[own]] >= 0]
-        zero_signal[known] = signals[zero_row[first[known]] - rows.start]
-    made, read, zeros, zeros_read = (stacked(parts) for parts in sums)
+        zero_signal[known] = np.hstack([part[zero_row[first[known]] - rows.start] for part in signals])
+        del signals
+    made, read, zeros, zeros_read = (stacked(sums.pop(0)) for _ in masks)
     return Trials(
         codes={name: code[first] for name, code in codes.items()},
         generation=readings["generation"].to_numpy(object)[first],
@@ -313,19 +324,15 @@ def _finest(codes: list[IntArray]) -> tuple[IntArray, IntArray]:
     return np.sort(order), rank[cell]
 
 
-def _signals(fit: GenerationFit, centre: float, generator: np.random.Generator) -> FloatArray:
-    """Signals as observed, then those of campaigns drawn from the fit, less *centre*, side by side."""
-    observed = fit.model.readings["signal"].to_numpy(float)[:, np.newaxis]
-    return np.hstack([observed, _drawn_signals(fit, generator)]) - centre
-
-
-def _drawn_signals(fit: GenerationFit, generator: np.random.Generator) -> FloatArray:
-    """Signals of campaigns drawn from the fit, shape (readings, drawn)."""
-    mean = fit.model.response - fit.marginal
-    deviations = simulate_deviations(
-        fit.model.model, fit.fit.covariances, fit.residual_variance, DRAWN, generator
-    )
-    return np.asarray(mean[:, np.newaxis] + deviations)
+def _signals(
+    fit: GenerationFit, centre: float, generator: np.random.Generator
+) -> tuple[FloatArray, FloatArray]:
+    """Signals as observed and those of campaigns drawn from the fit, less *centre*, (readings, campaigns)."""
+    observed = fit.model.readings["signal"].to_numpy(float)[:, np.newaxis] - centre
+    drawn = simulate_deviations(fit.model.model, fit.fit.covariances, fit.residual_variance, DRAWN, generator)
+    drawn += (fit.model.response - fit.marginal)[:, np.newaxis]
+    drawn -= centre
+    return observed, drawn
 
 
 def _zero_rows(readings: pd.DataFrame, units: Units, zero: float) -> IntArray:
@@ -392,8 +399,17 @@ def _squared_errors(effort: Effort, by: str, trials: Trials) -> tuple[FloatArray
     """Readings that a procedure reads in every run, and their sums of squared errors, (runs, 1 + drawn).
 
     The line is made without the run's unit of *by*; NaN where nothing remains to make a line from. Zero
-    readings that a procedure takes anew are not read by it.
+    readings that a procedure takes anew are not read by it. Some campaigns are worked out at a time.
     """
+    squares = np.empty(trials.read.y.shape)
+    for start in range(0, squares.shape[1], CAMPAIGNS_AT_ONCE):
+        some = slice(start, start + CAMPAIGNS_AT_ONCE)
+        squares[:, some] = _squares_of_campaigns(effort, by, trials.of_campaigns(some))
+    counted = trials.read.n - trials.zeros_read.n if effort.rezero else trials.read.n
+    return counted, squares
+
+
+def _squares_of_campaigns(effort: Effort, by: str, trials: Trials) -> FloatArray:
     made, read = trials.made, trials.read
     if effort.rezero:
         made, read = made.without(trials.zeros), read.without(trials.zeros_read)
@@ -403,8 +419,8 @@ def _squared_errors(effort: Effort, by: str, trials: Trials) -> tuple[FloatArray
     group, left_out = trials.codes[effort.line_of], trials.codes[by]
     intercept, slope = lines_without(made, group, left_out, trials.variance_of_x)
     if effort.rezero == "additive":
-        return read.n, squares_of_errors(read, trials.zero_signal, slope, trials.zero_x)
-    return read.n, squares_of_errors(read, intercept, slope)
+        return squares_of_errors(read, trials.zero_signal, slope, trials.zero_x)
+    return squares_of_errors(read, intercept, slope)
 
 
 def _summary(errors: tuple[FloatArray, FloatArray] | None, rows: BoolArray) -> dict[str, float]:
@@ -469,7 +485,7 @@ def _disagreements(table: pd.DataFrame) -> Iterator[Notice]:
 
 def _left_out_rows(efforts: tuple[Effort, ...], trials: Trials) -> Iterator[dict[str, object]]:
     """Observed and predicted SD for everything that can be left out."""
-    fewer = trials.drawn_fewer(1 + DRAWN // 4)
+    fewer = trials.of_campaigns(slice(1 + DRAWN // 4))
     for effort in efforts:
         for by in _LEFT_OUT[effort.line_of]:
             if effort.rezero or not _is_possible(effort, by, trials):

@@ -42,10 +42,10 @@ class CellSums:
         """Return the sums with the readings of *other* taken away."""
         return CellSums(*(mine - theirs for mine, theirs in zip(self._parts, other._parts, strict=True)))
 
-    def of_first(self, campaigns: int) -> CellSums:
-        """Return the sums of the first so many campaigns."""
-        first = (part[:, :campaigns] for part in (self.y, self.xy, self.yy))
-        return CellSums(self.n, self.x, self.xx, *first)
+    def of_campaigns(self, which: slice) -> CellSums:
+        """Return the sums of some of the campaigns."""
+        some = (part[:, which] for part in (self.y, self.xy, self.yy))
+        return CellSums(self.n, self.x, self.xx, *some)
 
     def rescaled(self, zero: FloatArray, unit: FloatArray) -> CellSums:
         """Return the sums for (y − zero)/unit, both (cells, campaigns)."""
@@ -58,6 +58,10 @@ class CellSums:
     @property
     def _parts(self) -> tuple[FloatArray, ...]:
         return self.n, self.x, self.xx, self.y, self.xy, self.yy
+
+
+_AT_ONCE = 1_000_000
+"""Values that are added up together: so much is copied at a time."""
 
 
 def sums_of_cells(cell: IntArray, cells: int, x: FloatArray, y: FloatArray, rows: BoolArray) -> CellSums:
@@ -80,20 +84,32 @@ def sums_of_cells(cell: IntArray, cells: int, x: FloatArray, y: FloatArray, rows
     shape = (cells, len(which))
     added = sparse.csr_array((np.ones(len(which)), (own, at)), shape=shape)
     weighted = sparse.csr_array((here, (own, at)), shape=shape)
-    values = y[which]
+    sums = [np.empty((cells, y.shape[1])) for _ in range(3)]
+    step = max(_AT_ONCE // max(len(which), 1), 1)
+    for start in range(0, y.shape[1], step):
+        some = slice(start, start + step)
+        values = y[which, some]
+        for total, product in zip(sums, (added @ values, weighted @ values, added @ values**2), strict=True):
+            total[:, some] = product
     return CellSums(
         n=np.bincount(own, minlength=cells).astype(float),
         x=np.bincount(own, here, minlength=cells).astype(float),
         xx=np.bincount(own, here**2, minlength=cells).astype(float),
-        y=np.asarray(added @ values),
-        xy=np.asarray(weighted @ values),
-        yy=np.asarray(added @ values**2),
+        y=sums[0],
+        xy=sums[1],
+        yy=sums[2],
     )
 
 
 def stacked(parts: Sequence[CellSums]) -> CellSums:
     """Return the sums of several sets of cells one after another."""
     return CellSums(*(np.concatenate(same) for same in zip(*(part._parts for part in parts), strict=True)))
+
+
+def side_by_side(first: CellSums, second: CellSums) -> CellSums:
+    """Return the sums of two sets of campaigns of the same cells and the same x."""
+    both = zip((first.y, first.xy, first.yy), (second.y, second.xy, second.yy), strict=True)
+    return CellSums(first.n, first.x, first.xx, *(np.hstack(parts) for parts in both))
 
 
 def lines_without(
