@@ -284,8 +284,10 @@ def _trials(
     centred, centre = x - x.mean(), float(readings["signal"].mean())
     zero_x = np.where(zero_row >= 0, centred[zero_row], np.nan)[first]
     is_zero = zero_row == np.arange(len(x))
-    masks = (np.ones_like(inside), inside, is_zero, inside & is_zero)
-    sums: list[list[CellSums]] = [[], [], [], []]
+    masks = [np.ones_like(inside), is_zero]
+    if not inside.all():
+        masks += [inside, inside & is_zero]
+    sums: list[list[CellSums]] = [[] for _ in masks]
     zero_signal = np.full((len(first), 1 + DRAWN), np.nan)
     start = 0
     for fit in fits:
@@ -298,7 +300,8 @@ def _trials(
         known = own[zero_row[first[own]] >= 0]
         zero_signal[known] = np.hstack([part[zero_row[first[known]] - rows.start] for part in signals])
         del signals
-    made, read, zeros, zeros_read = (stacked(sums.pop(0)) for _ in masks)
+    whole = [stacked(sums.pop(0)) for _ in masks]
+    made, zeros, read, zeros_read = whole if len(whole) == 4 else whole * 2
     return Trials(
         codes={name: code[first] for name, code in codes.items()},
         generation=readings["generation"].to_numpy(object)[first],

@@ -90,7 +90,7 @@ def sums_of_cells(cell: IntArray, cells: int, x: FloatArray, y: FloatArray, rows
         some = slice(start, start + step)
         values = y[which, some]
         for total, product in zip(sums, (added @ values, weighted @ values, added @ values**2), strict=True):
-            total[:, some] = product
+            total[:, some] = np.asarray(product)
     return CellSums(
         n=np.bincount(own, minlength=cells).astype(float),
         x=np.bincount(own, here, minlength=cells).astype(float),
