@@ -404,8 +404,9 @@ def _squared_errors(effort: Effort, by: str, trials: Trials) -> tuple[FloatArray
     The line is made without the run's unit of *by*; NaN where nothing remains to make a line from. Zero
     readings that a procedure takes anew are not read by it. Some campaigns are worked out at a time.
     """
-    squares = np.empty(trials.read.y.shape)
-    for start in range(0, squares.shape[1], CAMPAIGNS_AT_ONCE):
+    runs, campaigns = trials.zero_signal.shape
+    squares = np.empty((runs, campaigns))
+    for start in range(0, campaigns, CAMPAIGNS_AT_ONCE):
         some = slice(start, start + CAMPAIGNS_AT_ONCE)
         squares[:, some] = _squares_of_campaigns(effort, by, trials.of_campaigns(some))
     counted = trials.read.n - trials.zeros_read.n if effort.rezero else trials.read.n
