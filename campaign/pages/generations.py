@@ -329,7 +329,7 @@ def _drawn_modules(compared: Generations, earlier: Iterable[EarlierCampaign]) ->
 
 
 def _two_lines(name: str) -> str:
-    """A generation's name in two lines where it can be parted: neighbours on a narrow axis touch otherwise."""
+    """A generation's name in two lines where it can be parted: on a narrow axis neighbours would touch."""
     first, hyphen, rest = name.partition("-")
     return f"{first}-\n{rest}" if hyphen else name.replace(" ", "\n", 1)
 

@@ -67,8 +67,7 @@ def sensor_loops(
 
 
 _NOTE = (
-    "The first cycle of each run stands out; the first settled one and the last follow, fainter to "
-    "stronger."
+    "The first cycle of each run stands out; the first settled one and the last follow, fainter to stronger."
 )
 
 
