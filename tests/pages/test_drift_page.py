@@ -101,7 +101,7 @@ def test_a_hold_of_which_samples_are_left_out_says_how_many(results):
     longer = replace(curve, recorded_samples=3_000_000)
     thinned = ready(hold_figure(longer, results.drift.reference, "hold"))
     assert "the CSV holds every sample" in whole.note
-    assert f"holds {SAMPLES - 220:,} of 3,000,000 samples" in thinned.note
+    assert f"holds {SAMPLES - 220:,} of 3,000,000 samples".replace(",", "\u202f") in thinned.note
 
 
 def test_page_and_sensor_page_say_what_was_found(site, results):
