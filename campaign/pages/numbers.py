@@ -147,6 +147,8 @@ def percent(fraction: float, digits: int = 2, *, missing: str = NOT_IDENTIFIABLE
     if 99.95 <= value < 100:
         return _with_unit("> 99.9", "%")
     place = max(_last_place(value, digits), -digits) if abs(value) < 99.95 else 0
+    if 99.5 <= value < 99.95:
+        place = min(place, -1)
     return _with_unit(_at_place(value, place, 0), "%")
 
 

@@ -124,4 +124,5 @@ def test_columns_of_numbers_align_by_their_points() -> None:
 def test_nearly_none_and_nearly_all_are_not_none_and_all() -> None:
     assert numbers.percent(1e-7) == "< 0.01\u202f%"
     assert numbers.percent(0.99996) == "> 99.9\u202f%"
+    assert numbers.percent(0.9971) == "99.7\u202f%"
     assert numbers.percent(1.0) == "100\u202f%"
