@@ -101,7 +101,9 @@ def test_kept_fits_of_holds_are_those_that_were_made(tmp_path: Path) -> None:
     assert fits_from_bare(bare_fits(None)) is None
 
 
-def test_what_is_done_meanwhile_is_done_once_and_changes_nothing(tasks: list[FitTask], tmp_path: Path) -> None:
+def test_what_is_done_meanwhile_is_done_once_and_changes_nothing(
+    tasks: list[FitTask], tmp_path: Path
+) -> None:
     alone = as_bytes(fit_all(tasks, Workshop()))
     done: list[str] = []
     with open_store(tmp_path / "kept.sqlite") as store:
