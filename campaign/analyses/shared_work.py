@@ -2,20 +2,17 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Sequence
 from typing import TypeVar, cast
 
 from campaign.keeping.program import digest_of, program_digest
 from campaign.keeping.value_codec import encode
 from campaign.workers.crew import LocalProcesses, ThisProcess
-from campaign.workers.sharing import IN_HAND, Work, share_out
+from campaign.workers.sharing import Work, share_out
 from campaign.workers.workshop import Workshop
 
 T = TypeVar("T")
 R = TypeVar("R")
-
-ALL_IN_HAND = 1000
-"""Tasks in hand, a worker, where this process does something else meanwhile: all of them."""
 
 
 def do_all(
@@ -49,20 +46,13 @@ def do_all(
     shared = isinstance(workshop.crew, LocalProcesses) and worth(wanted)
     work: Work[T, R] = Work(function, lambda task: (task,), function)
     crew = workshop.crew if shared else ThisProcess()
-    tasks_in_hand = IN_HAND if meanwhile is None else ALL_IN_HAND
-    given = _given(wanted, meanwhile or (lambda: None))
-    made = iter([result for (result,) in share_out(work, given, crew, tasks_in_hand)])
+    made = iter([result for (result,) in share_out(work, wanted, crew, meanwhile)])
     results = [cast(R, found) if found is not None else next(made) for found in known]
     if keys:
         for key, found, result in zip(keys, known, results, strict=True):
             if found is None:
                 workshop.store.put(key, result)
     return results
-
-
-def _given(tasks: Sequence[T], then: Callable[[], object]) -> Iterator[T]:
-    yield from tasks
-    then()
 
 
 def keep(function: Callable[[T], tuple[R]], task: T, workshop: Workshop) -> R:

@@ -18,9 +18,6 @@ from campaign.pages.templates import templates_folder
 from campaign.workers.sharing import Work, share_out
 from campaign.workers.workshop import Workshop
 
-IN_HAND = 1000
-"""Modules in hand, a worker: all of them, so that this process can do its own part meanwhile."""
-
 
 @dataclass(frozen=True)
 class MakingTask:
@@ -80,9 +77,8 @@ def files_of_modules(
                 yield MakingTask(share, common, rendering)
             else:
                 found.append(known)
-        meanwhile()
 
-    for made in share_out(MAKING, tasks(), workshop.crew, IN_HAND):
+    for made in share_out(MAKING, tasks(), workshop.crew, meanwhile):
         kept.keep(made)
         yield made
     yield from found

@@ -8,6 +8,7 @@ harm.
 
 from __future__ import annotations
 
+import math
 from collections import deque
 from collections.abc import Callable, Iterable, Iterator
 from concurrent.futures import Future
@@ -53,7 +54,7 @@ class Work(Generic[T, R]):
 
 
 def share_out(
-    work: Work[T, R], tasks: Iterable[T], crew: Crew, in_hand: int = IN_HAND
+    work: Work[T, R], tasks: Iterable[T], crew: Crew, meanwhile: Callable[[], object] | None = None
 ) -> Iterator[tuple[R, ...]]:
     """Do all tasks and yield their results in the order of the tasks.
 
@@ -62,33 +63,40 @@ def share_out(
     work
         What is to be done.
     tasks
-        Taken one at a time, when there is a hand for it: at most *in_hand* times ``crew.hands`` are begun and
-        not yet handed on.
+        Taken one at a time, when there is a hand for it: at most :data:`IN_HAND` times ``crew.hands`` are
+        begun and not yet handed on; all of them at once where this process has something else to do.
     crew
         Who does it.
-    in_hand
-        Tasks in hand, a worker; many where this process has something else to do meanwhile.
+    meanwhile
+        What this process does, once, when all tasks are handed over.
 
     Yields
     ------
     tuple
         The results of one task.
     """
-    return _Sharing(work, crew, in_hand).results(tasks)
+    if meanwhile is None:
+        return _Sharing(work, crew, IN_HAND * crew.hands).results(tasks)
+    return _Sharing(work, crew, math.inf).results(_then(tasks, meanwhile))
+
+
+def _then(tasks: Iterable[T], meanwhile: Callable[[], object]) -> Iterator[T]:
+    yield from tasks
+    meanwhile()
 
 
 @dataclass
 class _Sharing(Generic[T, R]):
     work: Work[T, R]
     crew: Crew
-    most: int
+    most: float
     in_hand: deque[tuple[T, Future[tuple[R, ...]]]] = field(default_factory=deque)
     unexplained: int = 0
 
     def results(self, tasks: Iterable[T]) -> Iterator[tuple[R, ...]]:
         for task in tasks:
             self.in_hand.append((task, self._begin(task)))
-            if len(self.in_hand) >= self.most * self.crew.hands or self.crew.hands == 1:
+            if len(self.in_hand) >= self.most or self.crew.hands == 1:
                 yield self._next()
         while self.in_hand:
             yield self._next()
