@@ -1,6 +1,6 @@
-"""Pages as an earlier run rendered them, where everything that the rendering sees is the same.
+"""Pages as an earlier run made them, where everything that they are made from is the same.
 
-A page is told by a digest of itself, of what all pages share, of the templates, of the program and of its
+They are told by a digest of that, of what all pages share, of the templates, of the program and of its
 libraries. The digest is taken of the values alone: equal pages have equal digests, however they came about.
 """
 
@@ -10,7 +10,7 @@ import hashlib
 import io
 import pickle
 import zlib
-from collections.abc import Callable, Iterable
+from collections.abc import Callable, Iterable, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -21,7 +21,6 @@ import pandas as pd
 from campaign.keeping.kept_site import PAGE_LIBRARIES
 from campaign.keeping.program import digest_of, program_digest, versions_of
 from campaign.keeping.store import Store
-from campaign.pages.page import Page
 
 _QUICK = 1
 """Level of compression."""
@@ -41,7 +40,10 @@ class PageFiles:
 
 
 class KeptPages:
-    """Finds and keeps what pages became.
+    """Finds and keeps what pages became, by all that they are made from.
+
+    That may be one page that is to be rendered, or the share of a module of which its page and those of its
+    sensors are made (:mod:`campaign.pages.module_share`): what is the same then need not be made either.
 
     Parameters
     ----------
@@ -50,33 +52,33 @@ class KeptPages:
     templates
         Folders of templates.
     shared
-        What the rendering of every page sees besides the page.
+        What the making and the rendering of all of them see besides.
     """
 
     def __init__(self, store: Store, templates: Iterable[Path], shared: object) -> None:
         digest = digest_of_value(shared) if store.is_open else None
         self._store = store
-        self._shared = None
+        self._shared: str | None = None
         self._keys: dict[str, str] = {}
         if digest is not None:
-            self._shared = digest_of(["page", digest, *what_renders(templates)])
+            self._shared = digest_of(["pages", digest, *_what_renders(templates)])
 
-    def find(self, page: Page) -> PageFiles | None:
-        """Return what an earlier run made of the very same page, or ``None``."""
-        digest = digest_of_value(page) if self._shared is not None else None
+    def find(self, slug: str, source: object) -> tuple[PageFiles, ...] | None:
+        """Return what an earlier run made of the very same *source*, or ``None``; *slug* names its first page."""
+        digest = digest_of_value(source) if self._shared is not None else None
         if self._shared is None or digest is None:
             return None
         key = digest_of([self._shared, digest])
-        found = self._store.get(key)
+        found = _unpacked(self._store.get(key))
         if found is None:
-            self._keys[page.slug] = key
-        return unpacked(found)
+            self._keys[slug] = key
+        return found
 
-    def keep(self, made: PageFiles) -> None:
-        """Keep what a page became that was looked for and not found."""
-        key = self._keys.pop(made.slug, None)
+    def keep(self, made: Sequence[PageFiles]) -> None:
+        """Keep what a source became that was looked for and not found."""
+        key = self._keys.pop(made[0].slug, None) if made else None
         if key is not None:
-            self._store.put(key, packed(made))
+            self._store.put(key, [_packed(page) for page in made])
 
 
 def digest_of_value(value: object) -> bytes | None:
@@ -157,7 +159,7 @@ _NAMED: dict[type, Callable[[Any], tuple[object, ...]]] = {
 """What is written by its values alone, and not as its library would."""
 
 
-def what_renders(templates: Iterable[Path]) -> list[str | bytes]:
+def _what_renders(templates: Iterable[Path]) -> list[str | bytes]:
     """Return what tells the program, its libraries and the templates that pages are rendered by."""
     return [program_digest(), versions_of(PAGE_LIBRARIES), *_contents(templates)]
 
@@ -169,16 +171,23 @@ def _contents(folders: Iterable[Path]) -> list[bytes]:
     ]
 
 
-def packed(made: PageFiles) -> list[object]:
-    """Return what a page became as values that the store writes."""
+def _packed(made: PageFiles) -> list[object]:
     further = {name: zlib.compress(data, _QUICK) for name, data in made.further.items()}
     return [made.slug, made.file, zlib.compress(made.html.encode(), _QUICK), further]
 
 
-def unpacked(found: object) -> PageFiles | None:
-    """Return what :func:`packed` was given; ``None`` for anything else."""
-    if not (isinstance(found, list) and len(found) == 4):
+def _unpacked(found: object) -> tuple[PageFiles, ...] | None:
+    """Return the pages that were kept; ``None`` for anything else."""
+    if not (isinstance(found, list) and found):
         return None
-    slug, file, text, held = found
-    further = {name: zlib.decompress(data) for name, data in held.items()}
-    return PageFiles(slug, file, zlib.decompress(text).decode(), further)
+    if not all(isinstance(page, list) and len(page) == 4 for page in found):
+        return None
+    return tuple(
+        PageFiles(
+            slug,
+            file,
+            zlib.decompress(text).decode(),
+            {name: zlib.decompress(data) for name, data in further.items()},
+        )
+        for slug, file, text, further in found
+    )

@@ -6,8 +6,7 @@ from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
 
 from campaign.analyses.results import CampaignResults
-from campaign.pages.kept_modules import KeptModules
-from campaign.pages.kept_pages import PageFiles
+from campaign.pages.kept_pages import KeptPages, PageFiles
 from campaign.pages.module import module_page
 from campaign.pages.module_share import AllModules, ModuleShare, all_modules, module_shares
 from campaign.pages.page import Page
@@ -67,12 +66,12 @@ def files_of_modules(
     """
     common = all_modules(results, mapped)
     templates = (templates_folder(), *rendering.further_templates)
-    kept = KeptModules(workshop.store, templates, (common, rendering))
+    kept = KeptPages(workshop.store, templates, (common, rendering))
     found: list[tuple[PageFiles, ...]] = []
 
     def tasks() -> Iterator[MakingTask]:
         for share in module_shares(results):
-            known = kept.find(share)
+            known = kept.find(share.page_slug, share)
             if known is None:
                 yield MakingTask(share, common, rendering)
             else:

@@ -226,7 +226,7 @@ def _own_page_files(
     wanted = _not_yet_rendered(marked, kept, made)
     for some in share_out(RENDERING, (replace(whole, pages=few) for few in _few_at_a_time(wanted)), crew):
         for page in some:
-            kept.keep(page)
+            kept.keep([page])
         made += some
     return made
 
@@ -243,11 +243,11 @@ def _not_yet_rendered(pages: Iterable[Page], kept: KeptPages, made: list[PageFil
     for page in pages:
         if any(table.source is None for table in page.tables):
             raise ValueError("pages of modules and sensors show parts of the site's tables only")
-        found = kept.find(page)
+        found = kept.find(page.slug, page)
         if found is None:
             yield page
         else:
-            made.append(found)
+            made.extend(found)
 
 
 def _strip(pages: Iterable[Page]) -> tuple[Page, ...]:
