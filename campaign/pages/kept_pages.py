@@ -64,7 +64,7 @@ class KeptPages:
             self._shared = digest_of(["pages", digest, *_what_renders(templates)])
 
     def find(self, slug: str, source: object) -> tuple[PageFiles, ...] | None:
-        """Return what an earlier run made of the very same *source*, or ``None``; *slug* names its first page."""
+        """Return what an earlier run made of the very same *source*, or ``None``; *slug*: its first page."""
         digest = digest_of_value(source) if self._shared is not None else None
         if self._shared is None or digest is None:
             return None
@@ -85,7 +85,9 @@ def digest_of_value(value: object) -> bytes | None:
     """Return a digest of a value and of all that it holds, ``None`` where it holds what has no name.
 
     Equal values have equal digests whether or not parts of them are one object, and however the memory of
-    their arrays and tables is laid out. The bytes that are hashed are never read back.
+    their arrays and tables is laid out; but sets are taken in the order that they have in this process (the
+    writer of the standard library asks nobody about them), so that what holds one may be made anew though it
+    is equal, and is never found wrongly. The bytes that are hashed are never read back.
     """
     said = _Said()
     try:
@@ -153,8 +155,6 @@ _NAMED: dict[type, Callable[[Any], tuple[object, ...]]] = {
     pd.Index: _index,
     pd.MultiIndex: lambda index: ("levels", tuple(index.names), index.tolist()),
     pd.RangeIndex: lambda index: ("range", index.name, index.start, index.stop, index.step),
-    set: lambda values: ("set", sorted(values, key=repr)),
-    frozenset: lambda values: ("frozenset", sorted(values, key=repr)),
 }
 """What is written by its values alone, and not as its library would."""
 

@@ -118,7 +118,7 @@ def test_a_page_that_holds_what_has_no_name_is_rendered_every_time(
 def test_a_value_that_went_through_bytes_has_the_digest_that_it_had() -> None:
     shared = np.arange(4.0)
     table = pd.DataFrame({"a": [1.0, np.nan], "b": ["x", None], "c": [True, False]}, index=[3, 5])
-    value = {"one": shared, "two": shared, "table": table, "row": table["a"], "set": {"b", "a", "c"}}
+    value = {"one": shared, "two": shared, "table": table, "row": table["a"]}
     assert digest_of_value(decode(encode(value))) == digest_of_value(value)
     split = pd.concat([table[["a"]], table[["b"]], table[["c"]]], axis=1)
     assert digest_of_value(split) == digest_of_value(table)
